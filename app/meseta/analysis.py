@@ -1,0 +1,515 @@
+"""Analysis: runs the steps of a Recipe over a TraceSet and recomputes only what a change touches.
+
+One table of steps (:data:`STEPS`) says everything: what each step needs, which settings it may see, how one block of
+traces is worked, and how the blocks are put together in trace order.  A result's key is the hash of the traces, the
+step's version, the settings it may see and the keys of what it needs; so an edit leaves every other key alone, undo is
+a cache hit, and any number of threads gives the same bits.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import threading
+from collections import OrderedDict
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+from meseta import histograms, intake, peaks, segmentation, selection
+from meseta.errors import CallError, nearest
+from meseta.histograms import (
+    ConductanceHistogram,
+    CorrelationHistogram,
+    CountMatrix,
+    DisplacementHistogram,
+)
+from meseta.intake import Alignment
+from meseta.peaks import PeakTable
+from meseta.recipe import Recipe, Section
+from meseta.segmentation import NoiseModel, PlateauTable, TraceMeasures
+from meseta.selection import Decisions, Selection
+from meseta.traces import TraceSet
+from meseta.work import Work
+
+__all__ = [
+    "STEPS",
+    "Analysis",
+    "Step",
+    "conductance_histogram",
+    "correlation_histogram",
+    "displacement_histogram",
+    "find_plateaus",
+    "fit_peaks",
+    "phases_of",
+]
+
+
+class SettingsView:
+    """The part of a recipe that a step declared, and nothing else."""
+
+    def __init__(self, recipe: Recipe, names: Sequence[str]) -> None:
+        self._recipe, self._names = recipe, frozenset(names)
+
+    def __getattr__(self, name: str) -> Any:
+        if name in self._names:
+            return getattr(self._recipe, name)
+        fields = [entry.partition(".")[2] for entry in self._names if entry.startswith(f"{name}.")]
+        if not fields:
+            raise AttributeError(f"this step did not declare the settings section '{name}'")
+        return _FieldView(getattr(self._recipe, name), frozenset(fields))
+
+
+class _FieldView:
+    def __init__(self, section: Section, fields: frozenset[str]) -> None:
+        self._section, self._fields = section, fields
+
+    def __getattr__(self, name: str) -> Any:
+        if name not in self._fields:
+            raise AttributeError(f"this step did not declare the setting '{name}'")
+        return getattr(self._section, name)
+
+
+Inputs = Mapping[str, Any]
+Block = Callable[[TraceSet, SettingsView, Inputs], Any]
+Combine = Callable[[Iterator[Any], TraceSet, SettingsView, Inputs, Work], Any]
+
+
+@dataclass(frozen=True)
+class Step:
+    """One step of the analysis.
+
+    Attributes
+    ----------
+    name, title : str
+        Key, and name as users read it ("finding plateaus").
+    version : int
+        Raised when the method changes, so that kept results are not mistaken for new ones.
+    needs : tuple of str
+        Steps whose results it takes; ``"decisions"`` stands for the decisions by hand.
+    settings : tuple of str
+        ``section`` or ``section.field`` that it may see.
+    combine : callable
+        Puts the blocks' results together, in trace order; does the whole work where ``block`` is None.
+    block : callable, optional
+        Pure function of one block of traces.
+    channels : tuple of str
+        Channels that ``block`` reads.
+    """
+
+    name: str
+    title: str
+    version: int
+    needs: tuple[str, ...]
+    settings: tuple[str, ...]
+    combine: Combine
+    block: Block | None = None
+    channels: tuple[str, ...] = ("conductance",)
+
+
+# -- adapters: from the table of steps to the functions of the rooms ------------------------------------------------
+
+
+def phases_of(direction: str) -> tuple[str, ...]:
+    """Return the phases in which traces of this direction are analysed."""
+    return ("push",) if direction == "closing" else ("pull",)
+
+
+def _noise_block(traces: TraceSet, settings: SettingsView, _: Inputs) -> Any:
+    return segmentation.noise_block(traces, settings.noise, phases_of(settings.histogram.direction))
+
+
+def _noise(parts: Iterator[Any], _: TraceSet, settings: SettingsView, __: Inputs, ___: Work) -> NoiseModel:
+    return segmentation.noise_model(list(parts), settings.noise)
+
+
+def _alignment_block(traces: TraceSet, settings: SettingsView, _: Inputs) -> Alignment:
+    return intake.align(traces, settings.alignment, phases_of(settings.histogram.direction))
+
+
+def _alignment(parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work) -> Alignment:
+    return Alignment.joined(list(parts))
+
+
+def _plateaus_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> PlateauTable:
+    return segmentation.find_plateaus(
+        traces, settings.plateaus, inputs["noise"], inputs["alignment"], phases_of(settings.histogram.direction)
+    )
+
+
+def _plateaus(parts: Iterator[Any], traces: TraceSet, _: SettingsView, __: Inputs, work: Work) -> PlateauTable:
+    firsts = [first for first, _ in traces.blocks(work)]
+    return PlateauTable.joined(list(parts), firsts)
+
+
+def _measures_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> TraceMeasures:
+    return segmentation.measure_traces(
+        traces, settings.lengths, inputs["noise"], inputs["alignment"], phases_of(settings.histogram.direction)
+    )
+
+
+def _measures(parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work) -> TraceMeasures:
+    return TraceMeasures.concatenate(list(parts))
+
+
+def _selection(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, __: Work) -> Selection:
+    return selection.select(
+        traces,
+        settings.selection,
+        inputs["measures"],
+        inputs["plateaus"],
+        inputs["decisions"],
+        settings.histogram.direction,
+    )
+
+
+def _counts_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> CountMatrix:
+    return histograms.count_traces(
+        traces,
+        settings.histogram,
+        inputs["noise"],
+        inputs["alignment"],
+        phases_of(settings.histogram.direction),
+    )
+
+
+def _counts(parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work) -> CountMatrix:
+    return CountMatrix.joined(list(parts))
+
+
+def _resampling(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
+    return histograms.resample(
+        inputs["counts"], inputs["selection"].kept, traces.table, settings.histogram, settings.resampling, work
+    )
+
+
+def _histogram(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> Any:
+    return histograms.conductance_histogram(
+        inputs["counts"], inputs["selection"].kept, settings.histogram, inputs["resampling"]
+    )
+
+
+def _displacement_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> Any:
+    return histograms.displacement_counts(
+        traces,
+        settings.displacement_histogram,
+        settings.histogram,
+        inputs["noise"],
+        inputs["alignment"],
+        inputs["selection"].kept,
+        phases_of(settings.histogram.direction),
+    )
+
+
+def _displacement(parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work) -> Any:
+    return DisplacementHistogram.summed(parts)
+
+
+def _correlation(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
+    return histograms.correlation_histogram(
+        inputs["counts"],
+        inputs["selection"].kept,
+        settings.correlation,
+        inputs["noise"],
+        settings.resampling.seed,
+        work,
+    )
+
+
+def _peaks(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
+    return peaks.fit_histogram(
+        inputs["histogram"],
+        settings.peaks,
+        inputs["resampling"],
+        inputs["counts"],
+        inputs["plateaus"].take(inputs["selection"].kept[inputs["plateaus"].trace]),
+        work,
+    )
+
+
+_PHASE = "histogram.direction"
+_GRID = (
+    "histogram.axis",
+    "histogram.bins_per_decade",
+    "histogram.bin_width_g0",
+    "histogram.low_g0",
+    "histogram.high_g0",
+    "histogram.region",
+    "histogram.floor_tail_second",
+    _PHASE,
+)
+
+STEPS: Mapping[str, Step] = {
+    step.name: step
+    for step in (
+        Step("noise", "learning the noise", 1, (), ("noise", _PHASE), _noise, _noise_block),
+        Step("alignment", "finding the rupture", 1, (), ("alignment", _PHASE), _alignment, _alignment_block),
+        Step(
+            "plateaus", "finding plateaus", 1, ("noise", "alignment"), ("plateaus", _PHASE), _plateaus, _plateaus_block
+        ),
+        Step(
+            "measures", "measuring traces", 1, ("noise", "alignment"), ("lengths", _PHASE), _measures, _measures_block
+        ),
+        Step(
+            "selection", "selecting traces", 1, ("measures", "plateaus", "decisions"), ("selection", _PHASE), _selection
+        ),
+        Step("counts", "counting samples", 1, ("noise", "alignment"), _GRID, _counts, _counts_block),
+        Step("resampling", "resampling", 1, ("counts", "selection"), ("resampling", "histogram"), _resampling),
+        Step(
+            "histogram", "building the histogram", 1, ("counts", "selection", "resampling"), ("histogram",), _histogram
+        ),
+        Step(
+            "displacement_histogram",
+            "building the 2D histogram",
+            1,
+            ("noise", "alignment", "selection"),
+            ("displacement_histogram", *_GRID),
+            _displacement,
+            _displacement_block,
+        ),
+        Step(
+            "correlation_histogram",
+            "correlating",
+            1,
+            ("counts", "selection", "noise"),
+            ("correlation", "resampling.seed"),
+            _correlation,
+        ),
+        Step(
+            "peaks",
+            "fitting peaks",
+            1,
+            ("histogram", "resampling", "counts", "plateaus", "selection"),
+            ("peaks",),
+            _peaks,
+        ),
+    )
+}
+"""Every step, in an order in which each comes after what it needs."""
+
+
+# -- results kept -----------------------------------------------------------------------------------------------------
+
+
+class _Store:
+    """Results by key, a few a step; shared by all analyses made from one another."""
+
+    def __init__(self, kept_a_step: int = 8) -> None:
+        self._kept, self._lock = kept_a_step, threading.Lock()
+        self._results: dict[str, OrderedDict[str, Any]] = {}
+
+    def get(self, step: str, key: str) -> Any:
+        with self._lock:
+            results = self._results.get(step, OrderedDict())
+            if key in results:
+                results.move_to_end(key)
+            return results.get(key)
+
+    def put(self, step: str, key: str, result: Any) -> None:
+        with self._lock:
+            results = self._results.setdefault(step, OrderedDict())
+            results[key] = result
+            while len(results) > self._kept:
+                results.popitem(last=False)
+
+
+@dataclass(frozen=True)
+class Analysis:
+    """The steps of a recipe over a set of traces.  Immutable; results are computed when asked for, once.
+
+    Parameters
+    ----------
+    traces : TraceSet
+    recipe : Recipe
+    decisions : Decisions
+        What was decided by hand.
+    """
+
+    traces: TraceSet
+    recipe: Recipe = field(default_factory=Recipe)
+    decisions: Decisions = field(default_factory=Decisions)
+    _store: _Store = field(default_factory=_Store, repr=False, compare=False)
+
+    def with_recipe(self, recipe: Recipe) -> Analysis:
+        """Return the analysis with another recipe; results whose settings did not change are kept."""
+        return Analysis(self.traces, recipe, self.decisions, self._store)
+
+    def with_decisions(self, decisions: Decisions) -> Analysis:
+        """Return the analysis with other decisions by hand."""
+        return Analysis(self.traces, self.recipe, decisions, self._store)
+
+    def with_traces(self, traces: TraceSet) -> Analysis:
+        """Return the analysis over other traces (a corrected calibration, more files)."""
+        return Analysis(traces, self.recipe, self.decisions, self._store)
+
+    def key(self, name: str) -> str:
+        """Return the key of a step's result: equal keys mean equal results."""
+        if name == "decisions":
+            return self.decisions.key()
+        step = _step(name)
+        parts = [self.traces.key, name, str(step.version), self.recipe.key(step.settings)]
+        parts += [self.key(needed) for needed in step.needs]
+        return hashlib.sha256("\n".join(parts).encode()).hexdigest()
+
+    def ready(self, name: str) -> bool:
+        """Return whether a step's result is at hand."""
+        return self._store.get(name, self.key(name)) is not None
+
+    def result(self, name: str, work: Work | None = None) -> Any:
+        """Return the result of a step, computing it and what it needs if they are not at hand.
+
+        Parameters
+        ----------
+        name : str
+            A name in :data:`STEPS`.
+        work : Work, optional
+            Threads, progress, cancel.
+
+        Raises
+        ------
+        CallError
+            Where there is no such step.
+        Cancelled
+            Where the user stopped the work.
+        """
+        if name == "decisions":
+            return self.decisions
+        step, key, work = _step(name), self.key(name), work or Work()
+        found = self._store.get(name, key)
+        if found is not None:
+            return found
+        inputs = {needed: self.result(needed, work) for needed in step.needs}
+        work.check()
+        view = SettingsView(self.recipe, step.settings)
+        result = step.combine(self._parts(step, view, inputs, work), self.traces, view, inputs, work)
+        self._store.put(name, key, result)
+        return result
+
+    def _parts(self, step: Step, view: SettingsView, inputs: Inputs, work: Work) -> Iterator[Any]:
+        if step.block is None:
+            return iter(())
+        block, source = step.block, self.traces.only(*step.channels)
+        spans = source.blocks(work)
+
+        def one(span: tuple[int, int]) -> Any:
+            return block(source.block(*span), view, _sliced(inputs, *span))
+
+        return work.each(one, spans, step.title, sizes=[last - first for first, last in spans])
+
+    def preview(self, name: str, trace: int, work: Work | None = None) -> Any:
+        """Return a step's result for one trace alone, by the same ``block`` function that does all traces.
+
+        What the step needs of the whole recording (the noise model, say) is taken as it stands or computed.
+        """
+        step, work = _step(name), work or Work()
+        if step.block is None:
+            raise CallError(f"'{step.title}' looks at all traces together", "preview", "ask for its result")
+        inputs: dict[str, Any] = {}
+        for needed in step.needs:
+            per_trace = needed in STEPS and STEPS[needed].block is not None and needed != "noise"
+            inputs[needed] = (
+                self.preview(needed, trace, work)
+                if per_trace and not self.ready(needed)
+                else _sliced({needed: self.result(needed, work)}, trace, trace + 1)[needed]
+            )
+        view = SettingsView(self.recipe, step.settings)
+        one = self.traces.only(*step.channels).block(trace, trace + 1)
+        return step.combine(iter([step.block(one, view, inputs)]), one, view, inputs, work.quiet())
+
+    # Typed shorthands for the results that users ask for by name.
+
+    def noise(self, work: Work | None = None) -> NoiseModel:
+        """Return the noise model of the recording."""
+        result: NoiseModel = self.result("noise", work)
+        return result
+
+    def plateaus(self, work: Work | None = None) -> PlateauTable:
+        """Return the plateaus of all traces."""
+        result: PlateauTable = self.result("plateaus", work)
+        return result
+
+    def selection(self, work: Work | None = None) -> Selection:
+        """Return which traces take part, and why others do not."""
+        result: Selection = self.result("selection", work)
+        return result
+
+    def histogram(self, work: Work | None = None) -> ConductanceHistogram:
+        """Return the 1D conductance histogram of the selected traces."""
+        result: ConductanceHistogram = self.result("histogram", work)
+        return result
+
+
+def _step(name: str) -> Step:
+    try:
+        return STEPS[name]
+    except KeyError:
+        raise CallError(f"there is no step '{name}'", "analysis", nearest(name, STEPS)) from None
+
+
+def _sliced(inputs: Inputs, first: int, last: int) -> dict[str, Any]:
+    """Return the inputs with those that have one row a trace cut to a block."""
+    return {name: value.block(first, last) if hasattr(value, "block") else value for name, value in inputs.items()}
+
+
+# -- the functions of a notebook ------------------------------------------------------------------------------------
+
+
+def find_plateaus(traces: TraceSet, recipe: Recipe | None = None, work: Work | None = None) -> PlateauTable:
+    """Find the plateaus of every trace.
+
+    Returns
+    -------
+    PlateauTable
+        The columns of ``plateaus.csv`` as arrays; see there for units.
+
+    Notes
+    -----
+    Exact penalised change points (Maidstone et al., Stat. Comput. 27, 519 (2017), doi 10.1007/s11222-016-9636-3) in a
+    variance-stabilised variable; see :mod:`meseta.segmentation`.
+    """
+    return Analysis(traces, recipe or Recipe()).plateaus(work)
+
+
+def conductance_histogram(
+    traces: TraceSet, recipe: Recipe | None = None, work: Work | None = None
+) -> ConductanceHistogram:
+    """Build the 1D conductance histogram of the selected traces, with ``edges_g0``, ``counts`` and ``density``."""
+    return Analysis(traces, recipe or Recipe()).histogram(work)
+
+
+def displacement_histogram(
+    traces: TraceSet, recipe: Recipe | None = None, work: Work | None = None
+) -> DisplacementHistogram:
+    """Build the 2D conductance-displacement histogram of the selected, aligned traces."""
+    result: DisplacementHistogram = Analysis(traces, recipe or Recipe()).result("displacement_histogram", work)
+    return result
+
+
+def correlation_histogram(
+    traces: TraceSet, recipe: Recipe | None = None, work: Work | None = None
+) -> CorrelationHistogram:
+    """Build the 2D correlation histogram (Makk et al., ACS Nano 6, 3411 (2012)) of the selected traces."""
+    result: CorrelationHistogram = Analysis(traces, recipe or Recipe()).result("correlation_histogram", work)
+    return result
+
+
+def fit_peaks(
+    histogram: ConductanceHistogram | TraceSet, recipe: Recipe | None = None, work: Work | None = None
+) -> PeakTable:
+    """Fit the peaks of a histogram.
+
+    Parameters
+    ----------
+    histogram : ConductanceHistogram or TraceSet
+        From traces, intervals come from resampling traces; a bare histogram does not know its traces, so its intervals
+        are NaN and ``status`` says so.
+
+    Returns
+    -------
+    PeakTable
+        The columns of ``peaks.csv`` as arrays.
+    """
+    recipe = recipe or Recipe()
+    if isinstance(histogram, TraceSet):
+        fit: peaks.PeakFit = Analysis(histogram, recipe).result("peaks", work)
+        return fit.table
+    return peaks.fit_histogram(histogram, recipe.peaks, None, None, None, work or Work()).table

@@ -1,0 +1,255 @@
+"""What histograms hand on: the grid, the count matrix, and the distributions made of it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.tables import Table
+
+__all__ = [
+    "EXCLUDED",
+    "ConductanceHistogram",
+    "CorrelationHistogram",
+    "CountMatrix",
+    "DisplacementHistogram",
+    "Grid",
+    "HistogramTable",
+    "Resampling",
+]
+
+Floats = npt.NDArray[np.float64]
+Integers = npt.NDArray[np.int64]
+
+EXCLUDED: Final = ("under", "over", "non_positive", "saturated", "untrusted", "nan", "outside")
+"""Columns of ``CountMatrix.excluded``: every sample of the phase is in a bin or in exactly one of these.
+
+"outside" are samples of the phase outside the chosen region; "non_positive" (G <= 0) only on a logarithmic axis.
+"""
+
+
+@dataclass(frozen=True)
+class Grid:
+    """The conductance axis: half-open bins on float64 edges; the top edge counts as over.
+
+    Attributes
+    ----------
+    edges_g0 : (bins + 1,) float64, G0
+    axis : str
+        "linear" or "logarithmic".
+    """
+
+    edges_g0: Floats
+    axis: str
+
+    @property
+    def bins(self) -> int:
+        """Number of bins."""
+        return len(self.edges_g0) - 1
+
+    @property
+    def u_edges(self) -> Floats:
+        """(bins + 1,) edges on the axis as drawn: log10 G or G."""
+        return np.log10(self.edges_g0) if self.axis == "logarithmic" else self.edges_g0
+
+    @property
+    def widths(self) -> Floats:
+        """(bins,) widths on the axis as drawn: decades or G0."""
+        return np.diff(self.u_edges)
+
+    @property
+    def centres_g0(self) -> Floats:
+        """(bins,) middle of each bin on the axis as drawn, as a conductance in G0."""
+        middle = (self.u_edges[1:] + self.u_edges[:-1]) / 2
+        return 10**middle if self.axis == "logarithmic" else middle
+
+
+@dataclass(frozen=True)
+class CountMatrix:
+    """Samples of every trace in every fine bin: the source of all 1D results.
+
+    Attributes
+    ----------
+    grid : Grid
+        The fine (stored) grid.
+    counts : (traces, bins) uint16 or uint32
+    excluded : (traces, len(EXCLUDED)) int64
+        Samples of the phase that are in no bin, by reason.
+    nm_a_sample : (traces,) float64
+        Mean displacement a sample of the phase in nm (positive); NaN where the drive is not in nm.
+    used : (traces,) bool
+        Traces that have samples in the chosen phase (direction).
+    merge : int
+        How many fine bins make one bin of the histogram.
+    """
+
+    grid: Grid
+    counts: npt.NDArray[np.unsignedinteger]
+    excluded: Integers
+    nm_a_sample: Floats
+    used: npt.NDArray[np.bool_]
+    merge: int = 1
+
+
+@dataclass(frozen=True)
+class Resampling:
+    """Resampled data sets: how often each trace was drawn in each replicate, and why so.
+
+    Attributes
+    ----------
+    scheme : str
+        In words ("moving blocks of 12 traces", "specimens, then blocks of 12 traces", "traces").
+    rows : (kept,) int64
+        Traces that take part.
+    weights : (replicates, kept) uint16
+        Draws of each trace in each replicate.
+    block_traces : int
+        Block length in traces; 1 means independent traces.
+    effective_traces : float
+        Number of independent traces that the kept ones are worth.
+    reason : str
+        Why they are worth fewer ("memory of about 12 traces along the record").
+    counts : (replicates, bins) float64
+        Histogram counts (exact integers) of every replicate on the histogram's grid.
+    """
+
+    scheme: str
+    rows: Integers
+    weights: npt.NDArray[np.uint16]
+    block_traces: int
+    effective_traces: float
+    reason: str
+    counts: Floats
+
+
+@dataclass(frozen=True)
+class ConductanceHistogram:
+    """A 1D conductance histogram over the selected traces.
+
+    Attributes
+    ----------
+    grid : Grid
+    counts : (bins,) int64
+        Samples in each bin.
+    traces : int
+        Traces that take part, also those without a sample in range.
+    traces_in_bin : (bins,) int64
+        Traces that reach each bin; below ``weak_traces`` a bin is weak.
+    density, density_low, density_high : (bins,) float64
+        Normalised histogram and its pointwise 95 % band (NaN where not resampled).
+    density_unit : str
+        "nm / trace / decade" and the like.
+    excluded : dict of str to int
+        Samples in no bin, by reason (:data:`EXCLUDED`).
+    scheme : str
+        Which resampling made the band; empty where none.
+    scale : (bins,) float64
+        density = counts * scale on average; used by fits to go from counts to density.
+    """
+
+    grid: Grid
+    counts: Integers
+    traces: int
+    traces_in_bin: Integers
+    density: Floats
+    density_low: Floats
+    density_high: Floats
+    density_unit: str
+    excluded: dict[str, int]
+    scheme: str
+    scale: Floats
+    weak_traces: int = 20
+
+    @property
+    def edges_g0(self) -> Floats:
+        """(bins + 1,) float64, bin edges in G0."""
+        return self.grid.edges_g0
+
+    @property
+    def counts_per_trace(self) -> Floats:
+        """(bins,) float64, counts divided by the number of traces."""
+        return self.counts / max(self.traces, 1)
+
+    def table(self) -> HistogramTable:
+        """Return the columns of ``histogram.csv``."""
+        return HistogramTable(
+            g_low_g0=self.edges_g0[:-1],
+            g_high_g0=self.edges_g0[1:],
+            counts=self.counts,
+            counts_per_trace=self.counts_per_trace,
+            density=self.density,
+            density_low=self.density_low,
+            density_high=self.density_high,
+            density_unit=np.full(self.grid.bins, self.density_unit),
+            traces_in_bin=self.traces_in_bin,
+            weak=self.traces_in_bin < self.weak_traces,
+            resampling=np.full(self.grid.bins, self.scheme),
+        )
+
+
+@dataclass(frozen=True)
+class HistogramTable(Table):
+    """The columns of ``histogram.csv``."""
+
+    g_low_g0: Floats
+    g_high_g0: Floats
+    counts: Integers
+    counts_per_trace: Floats
+    density: Floats
+    density_low: Floats
+    density_high: Floats
+    density_unit: npt.NDArray[np.str_]
+    traces_in_bin: Integers
+    weak: npt.NDArray[np.bool_]
+    resampling: npt.NDArray[np.str_]
+
+
+@dataclass(frozen=True)
+class DisplacementHistogram:
+    """A 2D conductance-displacement histogram over the selected, aligned traces.
+
+    Attributes
+    ----------
+    grid : Grid
+        Conductance axis.
+    drive_edges : (columns + 1,) float64
+        Displacement from the zero, in ``drive_unit``.
+    counts : (columns, bins) int64
+    traces : int
+        Selected traces that are aligned; ``not_aligned`` are left out.
+    density : (columns, bins) float64
+        counts / (traces x width x width): per trace per drive unit per decade (or per G0).
+    """
+
+    grid: Grid
+    drive_edges: Floats
+    drive_unit: str
+    counts: Integers
+    traces: int
+    not_aligned: int
+    density: Floats
+    density_unit: str
+
+
+@dataclass(frozen=True)
+class CorrelationHistogram:
+    """A 2D correlation histogram: Pearson correlation over traces between the counts of two bins.
+
+    Attributes
+    ----------
+    grid : Grid
+    correlation : (bins, bins) float64
+        NaN where a bin has no variance.
+    traces : int
+    threshold : float
+        Absolute correlation that the largest chance value exceeds with probability 0.05 (permutation, maximum
+        statistic); NaN where not computed.
+    """
+
+    grid: Grid
+    correlation: Floats
+    traces: int
+    threshold: float

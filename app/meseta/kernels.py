@@ -1,0 +1,107 @@
+"""The one decorator of all compiled kernels, their cache, and the list that set-up compiles.
+
+A cached kernel that calls a kernel of another file keeps the old callee after an edit.  So the cache folder is
+named by a hash over every source file that holds kernels: after any edit all of them are compiled anew.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import importlib
+import os
+import tempfile
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any, TypeVar
+
+__all__ = ["KERNEL_MODULES", "compile_all", "kernel", "warm_up"]
+
+KERNEL_MODULES = (
+    "meseta.simulate.kernels",
+    "meseta.intake.kernels",
+    "meseta.segmentation.kernels",
+    "meseta.histograms.kernels",
+    "meseta.peaks.kernels",
+)
+"""Every module that holds compiled kernels; each registers a warm-up with :func:`warm_up`."""
+
+Function = TypeVar("Function", bound=Callable[..., Any])
+_warm_ups: list[Callable[[], None]] = []
+
+
+def _source_hash() -> str:
+    """Return a hash over the sources of all kernels and the numba version."""
+    import numba
+
+    digest = hashlib.sha256(numba.__version__.encode())
+    root = Path(__file__).parent
+    for module in KERNEL_MODULES:
+        path = root.joinpath(*module.split(".")[1:]).with_suffix(".py")
+        if path.exists():
+            digest.update(path.read_bytes())
+    return digest.hexdigest()[:16]
+
+
+def _cache_folder() -> str:
+    """Return a writable cache folder: the user's, else a temporary one."""
+    import platformdirs
+
+    name = f"kernels-{_source_hash()}"
+    for base in (platformdirs.user_cache_path("meseta"), Path(tempfile.gettempdir()) / f"meseta-{_user()}"):
+        folder = base / name
+        try:
+            folder.mkdir(parents=True, exist_ok=True, mode=0o700)
+            with tempfile.TemporaryFile(dir=folder):
+                return str(folder)
+        except OSError:
+            continue
+    return tempfile.mkdtemp(prefix="meseta-kernels-")
+
+
+def _user() -> str:
+    return str(os.getuid()) if hasattr(os, "getuid") else os.environ.get("USERNAME", "user")
+
+
+_configured = False
+
+
+def _configure() -> None:
+    global _configured  # set once, at the first kernel of the process
+    if not _configured:
+        import numba
+
+        if not os.environ.get("NUMBA_CACHE_DIR"):
+            numba.config.CACHE_DIR = _cache_folder()
+        _configured = True
+
+
+def kernel(function: Function) -> Function:
+    """Compile ``function`` on first use, cached on disk, without the interpreter lock.
+
+    No ``fastmath`` (results must not depend on the compiler's mood) and no ``parallel`` (threads come from
+    :class:`meseta.work.Work`; numba's own layers abort when two Python threads use them).
+    """
+    import numba
+
+    _configure()
+    compiled: Function = numba.njit(nogil=True, cache=True, error_model="numpy")(function)
+    return compiled
+
+
+def warm_up(function: Callable[[], None]) -> Callable[[], None]:
+    """Register a function that calls the kernels of its module on tiny arrays of the types used in earnest."""
+    _warm_ups.append(function)
+    return function
+
+
+def compile_all(report: Callable[[int, int], None] | None = None) -> int:
+    """Compile (or load from the cache) every kernel; return the number of modules done."""
+    for module in KERNEL_MODULES:
+        importlib.import_module(module)
+    for done, function in enumerate(_warm_ups):
+        if report:
+            report(done, len(_warm_ups))
+        function()
+    if report:
+        report(len(_warm_ups), len(_warm_ups))
+    return len(_warm_ups)

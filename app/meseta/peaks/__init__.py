@@ -1,0 +1,5 @@
+"""Line shapes, peak fits, series resistance, decay constant."""
+
+from meseta.peaks.results import PeakFit, PeakTable
+
+__all__ = ["PeakFit", "PeakTable"]

@@ -1,0 +1,99 @@
+"""Sections ``[histogram]``, ``[displacement_histogram]``, ``[correlation]``, ``[temporal]`` and ``[lengths]``."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+from meseta.recipe.fields import Section, setting
+
+__all__ = [
+    "CorrelationSettings",
+    "DisplacementHistogramSettings",
+    "HistogramSettings",
+    "LengthSettings",
+    "TemporalSettings",
+]
+
+
+class HistogramSettings(Section):
+    """The conductance histogram and the count matrix behind it."""
+
+    axis: Literal["linear", "logarithmic"] = setting(
+        "logarithmic", "Conductance axis", "Bins of equal width in G or in log10 G."
+    )
+    bins_per_decade: int = setting(
+        50,
+        "Bins per decade",
+        "Of the logarithmic axis. Bins finer than two steps of the converter give combs.",
+        ge=1,
+        le=1000,
+    )
+    bin_width_g0: float = setting(0.01, "Bin width", "Of the linear axis.", unit="G0", gt=0, le=10)
+    low_g0: float | None = setting(
+        None,
+        "Lowest conductance",
+        "Lower end of the axis.",
+        unit="G0",
+        unset="3 robust sigma below the floor (linear), a tenth of the floor's sigma (logarithmic)",
+    )
+    high_g0: float = setting(10.0, "Highest conductance", "Upper end of the axis.", unit="G0", gt=0)
+    direction: Literal["opening", "closing"] = setting(
+        "opening", "Direction", "Opening (pull) or closing (push) traces; they are never mixed."
+    )
+    region: Literal["phase", "after_zero", "before_zero"] = setting(
+        "phase",
+        "Region",
+        "'phase': all samples of the pull; 'after_zero': from the zero of displacement until "
+        "shortly inside the floor (molecules); 'before_zero': up to the zero (metals).",
+    )
+    floor_tail_second: float = setting(
+        0.005,
+        "Tail inside the floor",
+        "With 'after_zero': time for which samples at the floor still count.",
+        unit="s",
+        ge=0,
+    )
+    normalisation: Literal["nm_per_trace", "counts_per_trace", "counts", "probability"] = setting(
+        "nm_per_trace",
+        "Normalisation",
+        "Density of the histogram: length in nm (counts where the displacement is "
+        "unknown) per trace, counts per trace, counts or share, each per decade or per G0.",
+    )
+    weak_traces: int = setting(20, "Weak below", "Bins reached by fewer traces are shown as weak.", unit="traces", ge=0)
+
+
+class DisplacementHistogramSettings(Section):
+    """The 2D conductance-displacement histogram."""
+
+    low_nm: float = setting(-0.5, "From", "Lower end of the displacement axis, zero at the rupture.", unit="nm")
+    high_nm: float = setting(2.0, "To", "Upper end of the displacement axis.", unit="nm")
+    bins: int = setting(250, "Displacement bins", "Number of bins of the displacement axis.", ge=2, le=4000)
+    bins_per_decade: int = setting(50, "Bins per decade", "Of the conductance axis.", ge=1, le=400)
+
+
+class CorrelationSettings(Section):
+    """The 2D correlation histogram."""
+
+    bins_per_decade: int = setting(25, "Bins per decade", "Finer bins show only neighbours.", ge=1, le=200)
+    low_g0: float | None = setting(None, "Lowest conductance", "", unit="G0", gt=0, unset="6 sigma above the floor")
+    high_g0: float = setting(10.0, "Highest conductance", "", unit="G0", gt=0)
+    permutations: int = setting(
+        200, "Permutations", "For the significance of correlations; 0 leaves it out.", ge=0, le=20000
+    )
+
+
+class TemporalSettings(Section):
+    """The temporal histogram."""
+
+    traces_a_column: int = setting(
+        20, "Traces a column", "Consecutive traces summed in one column.", unit="traces", ge=1
+    )
+
+
+class LengthSettings(Section):
+    """Length histograms."""
+
+    low_g0: float = setting(0.5, "Window from", "Lower conductance of the window.", unit="G0", gt=0)
+    high_g0: float = setting(1.2, "Window to", "Upper conductance of the window.", unit="G0", gt=0)
+    bin_width_nm: float = setting(0.02, "Bin width", "", unit="nm", gt=0)
+    high_nm: float = setting(2.0, "Longest", "Upper end of the length axis.", unit="nm", gt=0)
