@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["ALIGNMENT_STATUS", "Alignment"]
+from meseta.recipe.alignment import AlignmentSettings
+from meseta.traces import TraceSet
+
+__all__ = ["ALIGNMENT_STATUS", "Alignment", "align"]
 
 ALIGNMENT_STATUS: Final = ("aligned", "never reaches the level", "ends above the level", "no samples in this phase")
 
@@ -38,3 +42,83 @@ class Alignment:
         """Return the rows of traces ``first`` to ``last``."""
         rows = slice(first, last)
         return Alignment(self.zero_drive[rows], self.zero_sample[rows], self.status[rows], self.level_g0)
+
+    @classmethod
+    def joined(cls, parts: Sequence[Alignment]) -> Alignment:
+        """Return the rows of several blocks, one after the other."""
+        if not parts:
+            return cls(np.empty(0), np.empty(0, np.int64), np.empty(0, np.uint8), float("nan"))
+        return cls(
+            np.concatenate([part.zero_drive for part in parts]),
+            np.concatenate([part.zero_sample for part in parts]),
+            np.concatenate([part.status for part in parts]),
+            parts[0].level_g0,
+        )
+
+    @property
+    def aligned(self) -> npt.NDArray[np.bool_]:
+        """(traces,) bool, True where the trace has a zero."""
+        found: npt.NDArray[np.bool_] = self.status == ALIGNMENT_STATUS.index("aligned")
+        return found
+
+
+def align(traces: TraceSet, settings: AlignmentSettings, phases: Sequence[str]) -> Alignment:
+    """Find the zero of displacement of every trace.
+
+    The zero lies at the last (or first) sample t at or above the level after which ``stay_samples`` finite samples
+    lie below, moved on towards the next sample in log G: ``z = z(t) + dz (ln g(t) - ln g_a) / (ln g(t) -
+    ln g(t+1))``; not moved where g(t+1) is not above zero or not finite (common practice, no source).  Push phases are
+    walked backwards in time, so that opening and closing have the same definition.
+
+    Parameters
+    ----------
+    traces : TraceSet
+    settings : AlignmentSettings
+    phases : sequence of str
+        Kinds of phase that are looked at.
+
+    Returns
+    -------
+    Alignment
+
+    Notes
+    -----
+    NaN samples are passed over: they count neither as above nor as below.
+    """
+    from meseta.intake.kernels import find_crossings
+
+    start, stop = traces.phase_range(phases)
+    count, backwards = traces.traces, tuple(phases) == ("push",)
+    sample, fraction, status = np.empty(count, np.int64), np.empty(count), np.empty(count, np.uint8)
+    values = np.ascontiguousarray(traces.conductance, np.float32)
+    find_crossings(
+        values,
+        np.ascontiguousarray(traces.offsets),
+        start,
+        stop,
+        backwards,
+        settings.zero_at_g0,
+        settings.crossing == "first",
+        settings.stay_samples,
+        sample,
+        fraction,
+        status,
+    )
+    zero = _drive_at(traces, sample, fraction, -1 if backwards else 1)
+    return Alignment(zero, sample, status, settings.zero_at_g0)
+
+
+def _drive_at(
+    traces: TraceSet, sample: npt.NDArray[np.int64], fraction: npt.NDArray[np.float64], step: int
+) -> npt.NDArray[np.float64]:
+    """Return the drive of each trace ``fraction`` of the way from ``sample`` to its neighbour; NaN without one."""
+    drive, found = traces.drive, sample >= 0
+    zero = np.full(traces.traces, np.nan)
+    if drive.relative is None:
+        zero[found] = (drive.start + drive.step * (sample + step * fraction))[found]
+        return zero
+    relative = drive.relative.read(int(traces.offsets[0]), int(traces.offsets[-1]))
+    place = traces.offsets[:-1][found] + sample[found]
+    here, after = relative[place].astype(np.float64), relative[place + step].astype(np.float64)
+    zero[found] = drive.start[found] + here + (after - here) * fraction[found]
+    return zero

@@ -1,0 +1,96 @@
+"""Compiled kernels of the intake room."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.kernels import kernel, warm_up
+
+__all__ = ["find_crossings"]
+
+ALIGNED, NEVER_REACHES, ENDS_ABOVE, NO_SAMPLES = 0, 1, 2, 3
+
+
+@kernel
+def _stays_below(values: npt.NDArray[np.float32], at: int, end: int, step: int, level: float, stay: int) -> bool:
+    """Return whether the next ``stay`` finite samples after ``at`` (in direction ``step``) all lie below."""
+    seen = 0
+    index = at + step
+    while index != end and seen < stay:
+        value = values[index]
+        if value >= level:
+            return False
+        if not math.isnan(value):
+            seen += 1
+        index += step
+    return seen == stay
+
+
+@kernel
+def _crossing(
+    values: npt.NDArray[np.float32], begin: int, end: int, step: int, level: float, first: bool, stay: int
+) -> tuple[int, int]:
+    """Return (sample, status) of the crossing in one trace, walked from ``begin`` to ``end`` (exclusive)."""
+    if begin == end:
+        return -1, NO_SAMPLES
+    last = -1
+    index = begin
+    while index != end:
+        if values[index] >= level:
+            last = index
+            if first and _stays_below(values, index, end, step, level, stay):
+                return index, ALIGNED
+        index += step
+    if last < 0:
+        return -1, NEVER_REACHES
+    if not first and _stays_below(values, last, end, step, level, stay):
+        return last, ALIGNED
+    return -1, ENDS_ABOVE
+
+
+@kernel
+def find_crossings(
+    values: npt.NDArray[np.float32],
+    offsets: npt.NDArray[np.int64],
+    start: npt.NDArray[np.int64],
+    stop: npt.NDArray[np.int64],
+    backwards: bool,
+    level: float,
+    first: bool,
+    stay: int,
+    sample: npt.NDArray[np.int64],
+    fraction: npt.NDArray[np.float64],
+    status: npt.NDArray[np.uint8],
+) -> None:
+    """Find in every trace the sample before the fall through ``level`` and the way to the next, in log G.
+
+    ``backwards`` walks each trace from its end (closing traces).  ``fraction`` is the share of the step to the next
+    sample in walking direction at which log G crosses the level; 0 where the next value is not above zero.
+    """
+    for trace in range(len(start)):
+        base = offsets[trace]
+        begin, end, step = base + start[trace], base + stop[trace], 1
+        if backwards and end > begin:
+            begin, end, step = end - 1, begin - 1, -1
+        found, state = _crossing(values, begin, end, step, level, first, stay)
+        status[trace] = state
+        sample[trace] = found - base if state == ALIGNED else -1
+        fraction[trace] = 0.0
+        if state == ALIGNED:
+            here, after = np.float64(values[found]), np.float64(values[found + step])
+            if after > 0.0:
+                fraction[trace] = (math.log(here) - math.log(level)) / (math.log(here) - math.log(after))
+
+
+@warm_up
+def _compile() -> None:
+    values = np.array([2.0, 1.0, 0.1, 0.1, 0.1], np.float32)
+    bounds = np.array([0, 5], np.int64)
+    sample, fraction, status = np.empty(1, np.int64), np.empty(1), np.empty(1, np.uint8)
+    for _ in ("writable", "read-only"):
+        find_crossings(values, bounds, bounds[:1], bounds[1:], False, 0.5, False, 3, sample, fraction, status)
+        values = values.copy()
+        values.flags.writeable = False
