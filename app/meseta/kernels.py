@@ -105,3 +105,23 @@ def compile_all(report: Callable[[int, int], None] | None = None) -> int:
     if report:
         report(len(_warm_ups), len(_warm_ups))
     return len(_warm_ups)
+
+
+def _main() -> None:
+    """Compile every kernel with progress on the terminal; called once by set-up."""
+    from tqdm import tqdm
+
+    with tqdm(total=len(KERNEL_MODULES), desc="compiling", unit="module", leave=False) as bar:
+
+        def report(done: int, total: int) -> None:
+            bar.total = total
+            bar.update(done - bar.n)
+
+        compile_all(report)
+
+
+if __name__ == "__main__":
+    # Run as a script this file is a second module "__main__"; the registry is the one of the imported module.
+    from meseta import kernels
+
+    kernels._main()
