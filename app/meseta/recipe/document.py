@@ -163,7 +163,9 @@ class Recipe(BaseModel):
         for name in names:
             section, _, field = name.partition(".")
             values = getattr(self, section).model_dump(mode="json")
-            chosen[name] = values[field] if field else values
+            # a derived property (the stored grid of a histogram) may stand for the settings it is made of
+            derived = field not in values
+            chosen[name] = values if not field else getattr(getattr(self, section), field) if derived else values[field]
         return hashlib.sha256(json.dumps(chosen, sort_keys=True).encode()).hexdigest()
 
 
