@@ -2,67 +2,24 @@
 
 from __future__ import annotations
 
-import hashlib
-import json
-from collections.abc import Mapping
-from dataclasses import asdict, dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
 
+from meseta.selection.decisions import Decisions, Event, Group, RemovedRange, Verdict
 from meseta.tables import Table
 
-__all__ = ["Decisions", "Event", "Group", "Selection", "SelectionTable", "Verdict"]
-
-
-@dataclass(frozen=True)
-class Verdict:
-    """A decision by hand on one trace: keep or reject it whatever the rules say, and why."""
-
-    keep: bool
-    reason: str = ""
-
-
-@dataclass(frozen=True)
-class Group:
-    """A named set of traces, by identity, with its colour (``#rrggbb``) and symbol."""
-
-    members: frozenset[str]
-    colour: str = ""
-    symbol: str = ""
-
-
-@dataclass(frozen=True)
-class Event:
-    """Something that happened during the record: before which trace (identity), and what."""
-
-    identity: str
-    text: str
-
-
-@dataclass(frozen=True)
-class Decisions:
-    """All that was decided by hand, by the identity of traces (text form)."""
-
-    verdicts: Mapping[str, Verdict] = field(default_factory=dict)
-    groups: Mapping[str, Group] = field(default_factory=dict)
-    events: tuple[Event, ...] = ()
-    removed_sources: frozenset[str] = frozenset()
-
-    def key(self) -> str:
-        """Return a hash of the content."""
-        plain = {
-            "verdicts": {name: asdict(verdict) for name, verdict in sorted(self.verdicts.items())},
-            "groups": {name: [sorted(group.members)] for name, group in sorted(self.groups.items())},
-            "events": [asdict(event) for event in self.events],
-            "removed": sorted(self.removed_sources),
-        }
-        return hashlib.sha256(json.dumps(plain, sort_keys=True).encode()).hexdigest()
+__all__ = ["Decisions", "Event", "Group", "RemovedRange", "Selection", "SelectionTable", "Verdict"]
 
 
 @dataclass(frozen=True)
 class SelectionTable(Table):
-    """What each rule took: alone, and in sequence."""
+    """What each rule took: alone, and in sequence.
+
+    ``dropped_alone`` counts the traces that the rule would drop if it were the only one, ``dropped_in_sequence`` those
+    that no rule before it had dropped, ``left`` those that are left after it.  No rule drops a trace kept by hand.
+    """
 
     rule: npt.NDArray[np.str_]
     dropped_alone: npt.NDArray[np.int64]

@@ -1,0 +1,115 @@
+"""What rules are asked of: the traces, what was measured on them, and what was decided by hand."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.segmentation import PlateauTable, TraceMeasures
+from meseta.selection.decisions import Decisions
+from meseta.traces import PHASE_KINDS, TraceSet
+
+__all__ = ["Facts"]
+
+Floats = npt.NDArray[np.float64]
+Truths = npt.NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Facts:
+    """Traces with their measures, plateaus and decisions; one value a trace for every question.
+
+    Numbers are NaN where a quantity could not be measured.
+    """
+
+    traces: TraceSet
+    measures: TraceMeasures
+    plateaus: PlateauTable
+    decisions: Decisions
+
+    @cached_property
+    def row_of(self) -> dict[str, int]:
+        """Row of every trace by its identity."""
+        return {identity: row for row, identity in enumerate(self.traces.identities())}
+
+    def in_nm(self, values: Floats) -> Floats:
+        """Return drive values where the drive is a displacement in nm, else NaN."""
+        return values if self.traces.drive.is_displacement else np.full(len(values), np.nan)
+
+    def rows(self, identities: Iterable[str]) -> npt.NDArray[np.int64]:
+        """Return the rows of the traces among ``identities`` that are here, sorted."""
+        found = (self.row_of[identity] for identity in identities if identity in self.row_of)
+        return np.array(sorted(found), np.int64)
+
+    def members(self, group: str) -> Truths:
+        """Return which traces belong to a group."""
+        inside = np.zeros(self.traces.traces, np.bool_)
+        if group in self.decisions.groups:
+            inside[self.rows(self.decisions.groups[group].members)] = True
+        return inside
+
+    def chosen_plateaus(self, bounds_g0: tuple[float, float], kind: str) -> Truths:
+        """Return which plateaus have their conductance in a half-open window and are of a kind ("" for any)."""
+        level = self.plateaus.level_g0
+        chosen: Truths = (level >= bounds_g0[0]) & (level < bounds_g0[1])
+        return chosen & (self.plateaus.kind == kind) if kind else chosen
+
+    def count_plateaus(self, chosen: Truths) -> Floats:
+        """Return the number of chosen plateaus in each trace."""
+        return np.bincount(self.plateaus.trace[chosen], minlength=self.traces.traces).astype(np.float64)
+
+    def longest_plateau(self, chosen: Truths) -> Floats:
+        """Return the length of the longest chosen plateau in drive units; 0 where the trace has none."""
+        longest = np.zeros(self.traces.traces)
+        np.maximum.at(longest, self.plateaus.trace[chosen], self.plateaus.length_drive[chosen])
+        return longest
+
+    def of_last_plateau(self, values: Floats) -> Floats:
+        """Return a plateau column for the last plateau of each trace; NaN where there is none."""
+        result = np.full(self.traces.traces, np.nan)
+        last = self.plateaus.number == 1
+        result[self.plateaus.trace[last]] = values[last]
+        return result
+
+    def has_phase(self, kind: str) -> Truths:
+        """Return which traces have a phase of this kind."""
+        has = np.zeros(self.traces.traces, np.bool_)
+        has[self.traces.phases.trace[self.traces.phases.kind == PHASE_KINDS.index(kind)]] = True
+        return has
+
+    def since_event(self, text: str) -> Floats:
+        """Return the row of the last event with this text at or before each trace; NaN before the first."""
+        rows = self.rows(event.identity for event in self.decisions.events if event.text == text)
+        place = np.searchsorted(rows, np.arange(self.traces.traces), side="right")
+        return np.concatenate([[np.nan], rows.astype(np.float64)])[place]
+
+    def traces_since(self, text: str) -> Floats:
+        """Return the number of traces since the last event with this text; NaN before the first."""
+        return np.arange(self.traces.traces) - self.since_event(text)
+
+    def seconds_since(self, text: str) -> Floats:
+        """Return the seconds since the last event with this text; NaN before it or where times are unknown."""
+        row, time = self.since_event(text), np.asarray(self.traces.table["time_second"], np.float64)
+        known = ~np.isnan(row)
+        result = np.full(self.traces.traces, np.nan)
+        result[known] = time[known] - time[row[known].astype(np.int64)]
+        return result
+
+    def hours(self) -> Floats:
+        """Return the hours since the first trace of the record."""
+        time = np.asarray(self.traces.table["time_second"], np.float64)
+        known = time[~np.isnan(time)]
+        return (time - known.min()) / 3600 if len(known) else time
+
+    def place(self) -> Floats:
+        """Return the place in the record: 0 for the first trace, 1 for the last."""
+        return np.arange(self.traces.traces) / max(self.traces.traces - 1, 1)
+
+    def file(self) -> npt.NDArray[np.str_]:
+        """Return the name of the recording that each trace comes from."""
+        names = np.array([source.name for source in self.traces.sources] or [""])
+        return names[self.traces.table["source"]]
