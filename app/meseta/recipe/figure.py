@@ -15,10 +15,30 @@ class FigureSettings(Section):
     width_mm: float = setting(
         178.0, "Width", "Single column 85 to 90 mm, double 170 to 180 mm.", unit="mm", ge=40, le=400
     )
-    text_point: float = setting(7.5, "Text size", "", unit="pt", ge=5, le=20)
+    text_point: float = setting(
+        7.5,
+        "Text size",
+        "Of all text in the figure; journals ask for 6 to 8 pt in the final width.",
+        unit="pt",
+        ge=5,
+        le=20,
+    )
     colour_map: Literal["meseta", "viridis", "cividis", "magma", "grey"] = setting(
-        "meseta", "Colour map", "Perceptually even, zero is the paper."
+        "meseta",
+        "Colour map",
+        "Of 2D histograms. All are perceptually even; a cell without a sample is the paper.",
     )
     colour_scale: Literal["linear", "square_root", "logarithmic"] = setting(
-        "square_root", "Colour scale", "Of the 2D histogram."
+        "square_root",
+        "Colour scale",
+        "Of the 2D histogram: 'square_root' shows weak features without hiding strong ones; 'linear' is proportional.",
     )
+    count_axis: Literal["linear", "logarithmic"] = setting(
+        "linear",
+        "Count axis",
+        "Of the 1D histogram. On a linear axis a feature far above the fitted peaks is cut and its height written.",
+    )
+    components: bool = setting(
+        True, "Single peaks", "Draw each fitted peak and the background on its own, besides the whole fit."
+    )
+    guides: bool = setting(True, "G0 guides", "Hairlines at whole multiples of G0.")
