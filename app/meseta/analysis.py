@@ -15,6 +15,8 @@ from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
+import numpy as np
+
 from meseta import histograms, intake, peaks, segmentation, selection
 from meseta.errors import CallError, nearest
 from meseta.histograms import (
@@ -172,8 +174,12 @@ def _counts_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> C
     )
 
 
-def _counts(parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work) -> CountMatrix:
+def _fine_counts(parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work) -> CountMatrix:
     return CountMatrix.joined(list(parts))
+
+
+def _counts(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> CountMatrix:
+    return histograms.with_bins(inputs["fine_counts"], settings.histogram, inputs["noise"])
 
 
 def _resampling(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
@@ -188,20 +194,40 @@ def _histogram(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: I
     )
 
 
-def _displacement_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> Any:
+def _displacement_counts(traces: TraceSet, settings: SettingsView, inputs: Inputs, kept: Any) -> DisplacementHistogram:
     return histograms.displacement_counts(
         traces,
         settings.displacement_histogram,
         settings.histogram,
         inputs["noise"],
         inputs["alignment"],
-        inputs["selection"].kept,
+        kept,
         phases_of(settings.histogram.direction),
     )
 
 
-def _displacement(parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work) -> Any:
+def _displacement_all_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> DisplacementHistogram:
+    return _displacement_counts(traces, settings, inputs, np.ones(traces.traces, bool))
+
+
+def _displacement_all(
+    parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work
+) -> DisplacementHistogram:
     return DisplacementHistogram.summed(parts)
+
+
+def _displacement(
+    _: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, work: Work
+) -> DisplacementHistogram:
+    """Count the smaller of the selection and its complement, and take the rest from the whole."""
+
+    def count(span: tuple[int, int], chosen: Any) -> DisplacementHistogram:
+        block = traces.only("conductance").block(*span)
+        return _displacement_counts(block, settings, _sliced(inputs, *span), chosen[span[0] : span[1]])
+
+    return histograms.displacement_of_selection(
+        inputs["displacement_all"], inputs["selection"].kept, count, traces.blocks(work), work
+    )
 
 
 def _correlation(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
@@ -227,16 +253,15 @@ def _peaks(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Input
 
 
 _PHASE = "histogram.direction"
-_GRID = (
+_AXIS = (
     "histogram.axis",
-    "histogram.bins_per_decade",
-    "histogram.bin_width_g0",
+    "histogram.stored_bins_per_decade",
+    "histogram.stored_bin_width_g0",
     "histogram.low_g0",
     "histogram.high_g0",
-    "histogram.region",
-    "histogram.floor_tail_second",
-    _PHASE,
 )
+_STORED = (*_AXIS, "histogram.region", "histogram.floor_tail_second", _PHASE)
+_BINS = (*_AXIS, "histogram.bins_per_decade", "histogram.bin_width_g0")
 
 STEPS: Mapping[str, Step] = {
     step.name: step
@@ -252,19 +277,28 @@ STEPS: Mapping[str, Step] = {
         Step(
             "selection", "selecting traces", 1, ("measures", "plateaus", "decisions"), ("selection", _PHASE), _selection
         ),
-        Step("counts", "counting samples", 1, ("noise", "alignment"), _GRID, _counts, _counts_block),
+        Step("fine_counts", "counting samples", 1, ("noise", "alignment"), _STORED, _fine_counts, _counts_block),
+        Step("counts", "choosing bins", 1, ("fine_counts", "noise"), _BINS, _counts),
         Step("resampling", "resampling", 1, ("counts", "selection"), ("resampling", "histogram"), _resampling),
         Step(
             "histogram", "building the histogram", 1, ("counts", "selection", "resampling"), ("histogram",), _histogram
         ),
         Step(
-            "displacement_histogram",
+            "displacement_all",
             "building the 2D histogram",
             1,
-            ("noise", "alignment", "selection"),
-            ("displacement_histogram", *_GRID),
+            ("noise", "alignment"),
+            ("displacement_histogram", *_STORED),
+            _displacement_all,
+            _displacement_all_block,
+        ),
+        Step(
+            "displacement_histogram",
+            "selecting in the 2D histogram",
+            1,
+            ("noise", "alignment", "selection", "displacement_all"),
+            ("displacement_histogram", *_STORED),
             _displacement,
-            _displacement_block,
         ),
         Step(
             "correlation_histogram",

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Final
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, replace
+from typing import Any, Final
 
 import numpy as np
 import numpy.typing as npt
@@ -24,10 +25,11 @@ __all__ = [
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
 
-EXCLUDED: Final = ("under", "over", "non_positive", "saturated", "untrusted", "nan", "outside")
+EXCLUDED: Final = ("under", "over", "non_positive", "saturated", "untrusted", "nan", "outside", "floor")
 """Columns of ``CountMatrix.excluded``: every sample of the phase is in a bin or in exactly one of these.
 
-"outside" are samples of the phase outside the chosen region; "non_positive" (G <= 0) only on a logarithmic axis.
+"outside" are samples of the phase outside the chosen region; "floor" those after the trace has settled in the floor,
+where the region ends there; "non_positive" (G <= 0) only on a logarithmic axis.
 """
 
 
@@ -84,6 +86,9 @@ class CountMatrix:
         Traces that have samples in the chosen phase (direction).
     merge : int
         How many fine bins make one bin of the histogram.
+    first, last : int
+        Fine bins that the histogram shows: ``first`` to ``last`` (exclusive); ``last`` 0 means all.  The stored grid is
+        longer, so that another end of the axis needs no new count.
     """
 
     grid: Grid
@@ -92,6 +97,53 @@ class CountMatrix:
     nm_a_sample: Floats
     used: npt.NDArray[np.bool_]
     merge: int = 1
+    first: int = 0
+    last: int = 0
+
+    @classmethod
+    def joined(cls, parts: Sequence[CountMatrix]) -> CountMatrix:
+        """Return the matrices of consecutive blocks of traces as one, in the widest integer type among them."""
+        head = parts[0]
+        kind = max((part.counts.dtype for part in parts), key=lambda dtype: dtype.itemsize)
+        counts = np.empty((sum(len(part.counts) for part in parts), head.grid.bins), kind)
+        at = 0
+        for part in parts:
+            counts[at : at + len(part.counts)] = part.counts
+            at += len(part.counts)
+        return replace(
+            head,
+            counts=counts,
+            excluded=np.concatenate([part.excluded for part in parts]),
+            nm_a_sample=np.concatenate([part.nm_a_sample for part in parts]),
+            used=np.concatenate([part.used for part in parts]),
+        )
+
+    @property
+    def shown(self) -> Grid:
+        """The histogram's grid: fine bins ``first`` to ``last``, ``merge`` by ``merge``."""
+        stop = self.last or self.grid.bins
+        return Grid(self.grid.edges_g0[self.first : stop + 1 : self.merge], self.grid.axis)
+
+    def shown_counts(self, fine: npt.NDArray[Any]) -> npt.NDArray[Any]:
+        """Return fine counts ``(..., fine bins)`` summed exactly to the histogram's bins ``(..., bins)``."""
+        stop = self.last or self.grid.bins
+        bins = (stop - self.first) // self.merge
+        part = fine[..., self.first : self.first + bins * self.merge]
+        return part.reshape(*part.shape[:-1], bins, self.merge).sum(-1)
+
+    def block(self, first: int, last: int) -> CountMatrix:
+        """Return the rows of traces ``first`` to ``last``."""
+        return self.take(slice(first, last))
+
+    def take(self, rows: slice | npt.NDArray[Any]) -> CountMatrix:
+        """Return the chosen rows (slice, indices or mask)."""
+        return replace(
+            self,
+            counts=self.counts[rows],
+            excluded=self.excluded[rows],
+            nm_a_sample=self.nm_a_sample[rows],
+            used=self.used[rows],
+        )
 
 
 @dataclass(frozen=True)
@@ -114,6 +166,12 @@ class Resampling:
         Why they are worth fewer ("memory of about 12 traces along the record").
     counts : (replicates, bins) float64
         Histogram counts (exact integers) of every replicate on the histogram's grid.
+    widen : float
+        Factor for every deviation of a replicate's result from the estimate, before quantiles are taken: resampling few
+        blocks or specimens shows too small a spread, and few degrees of freedom call for t quantiles.
+        :meth:`interval` applies it.
+    degrees : float
+        Degrees of freedom behind ``widen``.
     """
 
     scheme: str
@@ -123,6 +181,36 @@ class Resampling:
     effective_traces: float
     reason: str
     counts: Floats
+    widen: float = 1.0
+    degrees: float = np.inf
+
+    def interval(
+        self, estimate: npt.ArrayLike, replicates: npt.ArrayLike, level: float = 0.95
+    ) -> tuple[Floats, Floats]:
+        """Return the interval of a result, from its values in the replicates.
+
+        Parameters
+        ----------
+        estimate : (...) array_like
+            The result of the traces as they are.
+        replicates : (replicates, ...) array_like
+            The result of each replicate; NaN where it failed (left out).
+        level : float
+            Nominal coverage.
+
+        Returns
+        -------
+        low, high : (...) float64
+            Percentiles of ``estimate + widen * (replicate - estimate)``; NaN where fewer than 20 replicates are
+            finite.
+        """
+        centre, values = np.asarray(estimate, np.float64), np.asarray(replicates, np.float64)
+        spread = centre + self.widen * (values - centre)
+        enough = np.isfinite(spread).sum(0) >= 20
+        with np.errstate(invalid="ignore"):
+            usable = np.where(enough, np.where(np.isfinite(spread), spread, np.nan), 0.0)
+        low, high = np.nanquantile(usable, [(1 - level) / 2, (1 + level) / 2], axis=0)
+        return np.where(enough, low, np.nan), np.where(enough, high, np.nan)
 
 
 @dataclass(frozen=True)
@@ -232,6 +320,24 @@ class DisplacementHistogram:
     not_aligned: int
     density: Floats
     density_unit: str
+
+    @classmethod
+    def summed(cls, parts: Iterable[DisplacementHistogram]) -> DisplacementHistogram:
+        """Return the sum of the histograms of several blocks of traces on the same axes."""
+        head, counts, traces, lost = None, None, 0, 0
+        for part in parts:
+            head = part if head is None else head
+            counts = part.counts.copy() if counts is None else np.add(counts, part.counts, out=counts)
+            traces, lost = traces + part.traces, lost + part.not_aligned
+        if head is None or counts is None:
+            raise ValueError("a sum of no histograms")
+        return head.with_counts(counts, traces, lost)
+
+    def with_counts(self, counts: Integers, traces: int, not_aligned: int) -> DisplacementHistogram:
+        """Return a histogram on the same axes with other counts."""
+        area = np.diff(self.drive_edges)[:, None] * self.grid.widths
+        density = counts / (max(traces, 1) * area)
+        return replace(self, counts=counts, traces=traces, not_aligned=not_aligned, density=density)
 
 
 @dataclass(frozen=True)

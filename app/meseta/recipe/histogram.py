@@ -15,6 +15,10 @@ __all__ = [
 ]
 
 
+_STORED_PER_DECADE = 200
+_STORED_WIDTH_G0 = 0.004
+
+
 class HistogramSettings(Section):
     """The conductance histogram and the count matrix behind it."""
 
@@ -61,6 +65,25 @@ class HistogramSettings(Section):
     )
     weak_traces: int = setting(20, "Weak below", "Bins reached by fewer traces are shown as weak.", unit="traces", ge=0)
 
+    @property
+    def stored_bins_per_decade(self) -> int:
+        """Bins per decade of the count matrix: the multiple of ``bins_per_decade`` nearest above 200 or 200 itself.
+
+        Coarser histograms are exact sums of these, so that another width below 200 does not count anew.
+        """
+        return self.bins_per_decade * -(-_STORED_PER_DECADE // self.bins_per_decade)
+
+    @property
+    def stored_bin_width_g0(self) -> float:
+        """Bin width of the count matrix on a linear axis: ``bin_width_g0`` halved, at most 6 times, above 0.004 G0.
+
+        Halving is exact in binary numbers, so that the coarse edges are fine edges to the last bit.
+        """
+        width = self.bin_width_g0
+        while width / 2 > _STORED_WIDTH_G0 and width * 64 > self.bin_width_g0:
+            width /= 2
+        return width
+
 
 class DisplacementHistogramSettings(Section):
     """The 2D conductance-displacement histogram."""
@@ -68,15 +91,19 @@ class DisplacementHistogramSettings(Section):
     low_nm: float = setting(-0.5, "From", "Lower end of the displacement axis, zero at the rupture.", unit="nm")
     high_nm: float = setting(2.0, "To", "Upper end of the displacement axis.", unit="nm")
     bins: int = setting(250, "Displacement bins", "Number of bins of the displacement axis.", ge=2, le=4000)
-    bins_per_decade: int = setting(50, "Bins per decade", "Of the conductance axis.", ge=1, le=400)
+    bins_per_decade: int = setting(50, "Bins per decade", "Of the logarithmic conductance axis.", ge=1, le=400)
+    bin_width_g0: float = setting(0.02, "Bin width", "Of the linear conductance axis.", unit="G0", gt=0, le=10)
 
 
 class CorrelationSettings(Section):
     """The 2D correlation histogram."""
 
     bins_per_decade: int = setting(25, "Bins per decade", "Finer bins show only neighbours.", ge=1, le=200)
-    low_g0: float | None = setting(None, "Lowest conductance", "", unit="G0", gt=0, unset="6 sigma above the floor")
-    high_g0: float = setting(10.0, "Highest conductance", "", unit="G0", gt=0)
+    bin_width_g0: float = setting(0.04, "Bin width", "Of the linear axis.", unit="G0", gt=0, le=10)
+    low_g0: float | None = setting(
+        None, "Lowest conductance", "Lower end of the axis.", unit="G0", gt=0, unset="6 sigma above the floor"
+    )
+    high_g0: float = setting(10.0, "Highest conductance", "Upper end of the axis.", unit="G0", gt=0)
     permutations: int = setting(
         200, "Permutations", "For the significance of correlations; 0 leaves it out.", ge=0, le=20000
     )

@@ -1,0 +1,117 @@
+"""The 2D conductance-displacement histogram."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.histograms import kernels
+from meseta.histograms.counting import saturation_level
+from meseta.histograms.grids import anchored_grid, axis_range
+from meseta.histograms.lookup import lookup_of
+from meseta.histograms.region import region_of
+from meseta.histograms.results import DisplacementHistogram, Grid
+from meseta.intake.alignment import Alignment
+from meseta.recipe.histogram import DisplacementHistogramSettings, HistogramSettings
+from meseta.segmentation.results import NoiseModel
+from meseta.traces import TraceSet
+from meseta.work import Work
+
+__all__ = ["displacement_counts", "displacement_of_selection"]
+
+
+def displacement_counts(
+    traces: TraceSet,
+    frame: DisplacementHistogramSettings,
+    settings: HistogramSettings,
+    noise: NoiseModel,
+    alignment: Alignment,
+    kept: npt.NDArray[np.bool_],
+    phases: Sequence[str],
+) -> DisplacementHistogram:
+    """Count the samples of the kept, aligned traces of a block by displacement and conductance.
+
+    Parameters
+    ----------
+    traces : TraceSet
+        A block of traces in memory.
+    frame : DisplacementHistogramSettings
+        ``[displacement_histogram]``.
+    settings : HistogramSettings
+        Axis, range and region of ``[histogram]``.
+    noise, alignment
+        Of the same traces.
+    kept : (traces,) bool
+        Traces that take part; those without a zero of displacement are left out and counted.
+    phases : sequence of str
+
+    Returns
+    -------
+    DisplacementHistogram
+        Half-open bins on float64 edges on both axes.
+    """
+    grid = displacement_grid(frame, settings, noise)
+    edges = np.linspace(frame.low_nm, frame.high_nm, frame.bins + 1)
+    region = region_of(traces, settings, noise, alignment, phases)
+    used = np.asarray(kept, bool) & (region.phase_end > region.phase_begin)
+    rows = np.flatnonzero(used & np.isfinite(alignment.zero_drive)).astype(np.int64)
+    lookup = lookup_of(grid, saturation_level(noise))
+    counts = np.zeros((frame.bins, grid.bins), np.uint32)
+    drive = traces.drive
+    quality = np.empty(0, np.uint8) if traces.quality is None else traces.quality.read(0, traces.samples)
+    relative = np.empty(0, np.float32) if drive.relative is None else drive.relative.read(0, traces.samples)
+    kernels.count_grid(
+        np.ascontiguousarray(traces.conductance), np.ascontiguousarray(quality), rows, region.begin, region.end,
+        traces.offsets[:-1], np.ascontiguousarray(drive.start), np.ascontiguousarray(drive.step),
+        np.ascontiguousarray(relative), alignment.zero_drive, edges,
+        lookup.table, lookup.thresholds, lookup.column, counts,
+    )  # fmt: skip
+    empty = np.empty((0, 0))
+    unit = f"counts / trace / {drive.unit} / {'decade' if grid.axis == 'logarithmic' else 'G0'}"
+    frame_only = DisplacementHistogram(grid, edges, drive.unit, counts.astype(np.int64), 0, 0, empty, unit)
+    return frame_only.with_counts(frame_only.counts, len(rows), int(used.sum()) - len(rows))
+
+
+def displacement_grid(frame: DisplacementHistogramSettings, settings: HistogramSettings, noise: NoiseModel) -> Grid:
+    """Return the conductance axis of the 2D histogram: the range of the 1D one, in its own bins."""
+    low, high = axis_range(settings, noise)
+    return anchored_grid(settings.axis, low, high, frame.bins_per_decade, frame.bin_width_g0)
+
+
+def displacement_of_selection(
+    everything: DisplacementHistogram,
+    kept: npt.NDArray[np.bool_],
+    count: Callable[[tuple[int, int], npt.NDArray[np.bool_]], DisplacementHistogram],
+    spans: Sequence[tuple[int, int]],
+    work: Work,
+) -> DisplacementHistogram:
+    """Return the exact 2D histogram of a selection, counting only the smaller of it and its complement.
+
+    Parameters
+    ----------
+    everything : DisplacementHistogram
+        Of all traces.
+    kept : (traces,) bool
+    count : callable
+        Counts the chosen traces of one span of traces; ``chosen`` covers all traces.
+    spans : sequence of (int, int)
+        Blocks of traces; those without a chosen trace are not read.
+    work : Work
+    """
+    if kept.all():
+        return everything
+    few = bool(2 * kept.sum() <= len(kept))
+    chosen = kept if few else ~kept
+    needed = [span for span in spans if chosen[span[0] : span[1]].any()]
+    if not needed:
+        return everything.with_counts(np.zeros_like(everything.counts), 0, 0)
+    sizes = [last - first for first, last in needed]
+    parts = work.each(lambda span: count(span, chosen), needed, "selecting in the 2D histogram", sizes=sizes)
+    part = DisplacementHistogram.summed(parts)
+    if few:
+        return part
+    return everything.with_counts(
+        everything.counts - part.counts, everything.traces - part.traces, everything.not_aligned - part.not_aligned
+    )

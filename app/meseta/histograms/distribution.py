@@ -1,0 +1,159 @@
+"""The 1D conductance histogram, normalised, with its pointwise band."""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.histograms.results import EXCLUDED, ConductanceHistogram, CountMatrix, Resampling
+from meseta.recipe.histogram import HistogramSettings
+
+__all__ = ["conductance_histogram"]
+
+Floats = npt.NDArray[np.float64]
+_EQUAL_STEPS = 1e-6
+
+
+def conductance_histogram(
+    counts: CountMatrix,
+    kept: npt.NDArray[np.bool_],
+    settings: HistogramSettings,
+    resampling: Resampling | None,
+) -> ConductanceHistogram:
+    """Build the 1D histogram of the kept traces.
+
+    Parameters
+    ----------
+    counts : CountMatrix
+    kept : (traces,) bool
+    settings : HistogramSettings
+        Normalisation of ``[histogram]``.
+    resampling : Resampling, optional
+        Of the same kept traces; without it the band is NaN.
+
+    Returns
+    -------
+    ConductanceHistogram
+
+    Notes
+    -----
+    H_k = n_k / (R w_k) with R the traces that take part and w_k the bin's width in decades or G0; weighted by length
+    every sample counts its displacement, so that neither sampling rate nor speed enters.
+    """
+    rows = np.flatnonzero(kept & counts.used)
+    fine = _column_sums(counts.counts, rows)
+    total = counts.shown_counts(fine)
+    excluded = _excluded(counts, rows, fine)
+    grid, traces = counts.shown, len(rows)
+    weight = _weight(counts, rows, settings.normalisation)
+    weighted = _weighted(counts, rows, weight, total)
+    norm, unit = _norm(settings.normalisation, weight, traces, weighted.sum(), grid.axis)
+    density = weighted * norm / grid.widths
+    low, high = _band(counts, rows, weight, resampling, density, norm, settings.normalisation)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        scale = np.where(total > 0, density / total, _flat_scale(weight) * norm / grid.widths)
+    return ConductanceHistogram(
+        grid=grid,
+        counts=total,
+        traces=traces,
+        traces_in_bin=_traces_in_bin(counts, rows),
+        density=density,
+        density_low=low,
+        density_high=high,
+        density_unit=unit,
+        excluded=excluded,
+        scheme=resampling.scheme if resampling is not None else "",
+        scale=scale,
+        weak_traces=settings.weak_traces,
+    )
+
+
+def _column_sums(counts: npt.NDArray[np.unsignedinteger], rows: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:
+    """Return exact sums over the chosen rows."""
+    if len(rows) == len(counts):
+        result: npt.NDArray[np.int64] = counts.sum(0, dtype=np.int64)
+        return result
+    mask = np.zeros(len(counts), bool)
+    mask[rows] = True
+    total: npt.NDArray[np.int64] = counts.sum(0, dtype=np.int64, where=mask[:, None])
+    return total
+
+
+def _excluded(counts: CountMatrix, rows: npt.NDArray[np.int64], fine: npt.NDArray[np.int64]) -> dict[str, int]:
+    """Return what is in no bin of the histogram, by reason: stored bins beyond its ends are under or over."""
+    sums = dict(zip(EXCLUDED, (int(n) for n in counts.excluded[rows].sum(0)), strict=True))
+    sums["under"] += int(fine[: counts.first].sum())
+    sums["over"] += int(fine[counts.last or counts.grid.bins :].sum())
+    return sums
+
+
+def _weight(counts: CountMatrix, rows: npt.NDArray[np.int64], normalisation: str) -> Floats | None:
+    """Return the length of one sample of each row in nm; None where samples are counted."""
+    if normalisation != "nm_per_trace" or len(rows) == 0:
+        return None
+    length = counts.nm_a_sample[rows]
+    return length if np.isfinite(length).all() else None
+
+
+def _flat_scale(weight: Floats | None) -> float:
+    return 1.0 if weight is None else float(weight.mean())
+
+
+def _is_flat(weight: Floats | None) -> bool:
+    return weight is None or float(np.ptp(weight)) <= _EQUAL_STEPS * float(weight.mean())
+
+
+def _weighted(
+    counts: CountMatrix, rows: npt.NDArray[np.int64], weight: Floats | None, total: npt.NDArray[np.int64]
+) -> Floats:
+    """Return the counts of each bin, each sample with its weight."""
+    if weight is None or _is_flat(weight):
+        return total * _flat_scale(weight)
+    summed: Floats = (weight @ counts.counts[rows]).astype(np.float64)
+    return counts.shown_counts(summed)
+
+
+def _norm(normalisation: str, weight: Floats | None, traces: int, total: float, axis: str) -> tuple[float, str]:
+    per = "decade" if axis == "logarithmic" else "G0"
+    if normalisation == "counts":
+        return 1.0, f"counts / {per}"
+    if normalisation == "probability":
+        return (1 / total if total > 0 else np.nan), f"1 / {per}"
+    return 1 / max(traces, 1), f"{'counts' if weight is None else 'nm'} / trace / {per}"
+
+
+def _band(
+    counts: CountMatrix,
+    rows: npt.NDArray[np.int64],
+    weight: Floats | None,
+    resampling: Resampling | None,
+    density: Floats,
+    norm: float,
+    normalisation: str,
+) -> tuple[Floats, Floats]:
+    """Return the pointwise band of the density."""
+    if resampling is None or len(rows) == 0:
+        return np.full_like(density, np.nan), np.full_like(density, np.nan)
+    widths = counts.shown.widths
+    if weight is None or _is_flat(weight):
+        replicate = resampling.counts * _flat_scale(weight)
+    else:
+        replicate = counts.shown_counts((resampling.weights * weight) @ counts.counts[rows].astype(np.float64))
+    if normalisation == "probability":
+        replicate = replicate / np.maximum(replicate.sum(1, keepdims=True), np.finfo(float).tiny)
+        norm = 1.0
+    elif normalisation != "counts":
+        drawn = resampling.weights.sum(1, dtype=np.int64)[:, None]
+        replicate = replicate * (len(rows) / np.maximum(drawn, 1))
+    low, high = resampling.interval(density, replicate * norm / widths)
+    return np.maximum(low, 0.0), high
+
+
+def _traces_in_bin(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:
+    stop = counts.last or counts.grid.bins
+    bins = (stop - counts.first) // counts.merge
+    total = np.zeros(bins, np.int64)
+    for start in range(0, len(rows), 1024):
+        part = counts.counts[rows[start : start + 1024], counts.first : counts.first + bins * counts.merge]
+        total += (part.reshape(len(part), bins, counts.merge).max(-1) > 0).sum(0)
+    return total

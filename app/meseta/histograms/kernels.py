@@ -1,0 +1,196 @@
+"""Compiled kernels of the histograms: counting samples in bins without a logarithm or a division a sample.
+
+A bin is found from the top 17 bits of the float32 sample (sign, exponent, 8 bits of mantissa): a table gives the
+first candidate, comparisons with the exact edges do the rest.  A float32 sample is never rounded: the edges, given as
+float64, are replaced by the smallest float32 that is not below them, which changes no comparison.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.kernels import kernel, warm_up
+
+__all__ = ["count_flagged_rows", "count_grid", "count_rows", "fold_rows", "settle_region"]
+
+SHIFT = 15
+"""Bits of a float32 that the table leaves out."""
+
+
+@kernel
+def count_rows(
+    values: npt.NDArray[np.float32],
+    begin: npt.NDArray[np.int64],
+    end: npt.NDArray[np.int64],
+    table: npt.NDArray[np.uint16],
+    thresholds: npt.NDArray[np.float32],
+    most_compares: int,
+    column: npt.NDArray[np.int64],
+    counts: npt.NDArray[np.unsignedinteger],
+    special: npt.NDArray[np.int64],
+) -> None:
+    """Count samples ``begin[r]`` to ``end[r]`` of every row into ``counts[r]`` and, outside the bins, ``special[r]``.
+
+    ``column`` says where each interval between thresholds belongs: bins from 0, specials from ``counts.shape[1]`` on.
+    """
+    bits = values.view(np.uint32)
+    places = len(thresholds)
+    # four tallies, so that runs of equal samples do not wait for each other's store
+    tally = np.zeros((4, places), np.uint32)
+    for row in range(len(begin)):
+        first, last = begin[row], end[row]
+        tally[:] = 0
+        if most_compares <= 1:
+            whole = first + (last - first) // 4 * 4
+            for at in range(first, whole, 4):
+                for lane in range(4):
+                    place = np.int64(table[bits[at + lane] >> 15])
+                    place += values[at + lane] >= thresholds[place]
+                    tally[lane, place] += 1
+            for at in range(whole, last):
+                place = np.int64(table[bits[at] >> 15])
+                place += values[at] >= thresholds[place]
+                tally[0, place] += 1
+        else:
+            for at in range(first, last):
+                place = np.int64(table[bits[at] >> 15])
+                while values[at] >= thresholds[place]:
+                    place += 1
+                tally[at & 3, place] += 1
+        fold_rows(tally, column, counts[row], special[row])
+
+
+@kernel
+def count_flagged_rows(
+    values: npt.NDArray[np.float32],
+    quality: npt.NDArray[np.uint8],
+    begin: npt.NDArray[np.int64],
+    end: npt.NDArray[np.int64],
+    table: npt.NDArray[np.uint16],
+    thresholds: npt.NDArray[np.float32],
+    column: npt.NDArray[np.int64],
+    counts: npt.NDArray[np.unsignedinteger],
+    special: npt.NDArray[np.int64],
+    saturated_column: int,
+    untrusted_column: int,
+) -> None:
+    """Count like :func:`count_rows`; samples with quality bit 1 are saturated, with any other bit untrusted."""
+    bits = values.view(np.uint32)
+    tally = np.zeros((4, len(thresholds)), np.uint32)
+    for row in range(len(begin)):
+        tally[:] = 0
+        for at in range(begin[row], end[row]):
+            if quality[at] != 0:
+                special[row, saturated_column if quality[at] & 1 else untrusted_column] += 1
+                continue
+            place = np.int64(table[bits[at] >> 15])
+            while values[at] >= thresholds[place]:
+                place += 1
+            tally[at & 3, place] += 1
+        fold_rows(tally, column, counts[row], special[row])
+
+
+@kernel
+def fold_rows(
+    tally: npt.NDArray[np.uint32],
+    column: npt.NDArray[np.int64],
+    counts: npt.NDArray[np.unsignedinteger],
+    special: npt.NDArray[np.int64],
+) -> None:
+    """Add the tallies of the intervals to the bins and specials that they belong to."""
+    bins = len(counts)
+    for place in range(tally.shape[1]):
+        number = tally[0, place] + tally[1, place] + tally[2, place] + tally[3, place]
+        if number:
+            if column[place] < bins:
+                counts[column[place]] += counts.dtype.type(number)
+            else:
+                special[column[place] - bins] += number
+
+
+@kernel
+def settle_region(
+    values: npt.NDArray[np.float32],
+    begin: npt.NDArray[np.int64],
+    end: npt.NDArray[np.int64],
+    below: npt.NDArray[np.float32],
+    stay: npt.NDArray[np.int64],
+    settled: npt.NDArray[np.int64],
+) -> None:
+    """Find where each row has first stayed below ``below[row]`` for ``stay[row]`` samples on end; else its end."""
+    for row in range(len(begin)):
+        run = 0
+        settled[row] = end[row]
+        for at in range(begin[row], end[row]):
+            run = run + 1 if values[at] < below[row] else 0
+            if run > stay[row]:
+                settled[row] = at
+                break
+
+
+@kernel
+def count_grid(
+    values: npt.NDArray[np.float32],
+    quality: npt.NDArray[np.uint8],
+    rows: npt.NDArray[np.int64],
+    begin: npt.NDArray[np.int64],
+    end: npt.NDArray[np.int64],
+    origin: npt.NDArray[np.int64],
+    start: npt.NDArray[np.float64],
+    step: npt.NDArray[np.float64],
+    relative: npt.NDArray[np.float32],
+    zero: npt.NDArray[np.float64],
+    drive_edges: npt.NDArray[np.float64],
+    table: npt.NDArray[np.uint16],
+    thresholds: npt.NDArray[np.float32],
+    column: npt.NDArray[np.int64],
+    counts: npt.NDArray[np.uint32],
+) -> None:
+    """Count samples of the chosen rows into (drive column, bin).
+
+    The drive of sample ``at`` is ``start + step * (at - origin)``, or ``start + relative[at]`` where that is given;
+    its column is the half-open interval of ``drive_edges`` that holds ``drive - zero``.
+    """
+    bits = values.view(np.uint32)
+    columns, bins = counts.shape
+    low, width = drive_edges[0], (drive_edges[-1] - drive_edges[0]) / columns
+    explicit, flagged = len(relative) > 0, len(quality) > 0
+    for row in rows:
+        at = begin[row]
+        while at < end[row]:
+            drive = start[row] + (relative[at] if explicit else step[row] * (at - origin[row]))
+            shifted = drive - zero[row]
+            place = int(min(max((shifted - low) / width, 0.0), columns - 1.0))
+            while place > 0 and shifted < drive_edges[place]:
+                place -= 1
+            while place < columns - 1 and shifted >= drive_edges[place + 1]:
+                place += 1
+            inside = shifted >= drive_edges[0] and shifted < drive_edges[columns]
+            if inside and not (flagged and quality[at] != 0):
+                bin_place = np.int64(table[bits[at] >> 15])
+                while values[at] >= thresholds[bin_place]:
+                    bin_place += 1
+                if column[bin_place] < bins:
+                    counts[place, column[bin_place]] += 1
+            at += 1
+
+
+@warm_up
+def _warm_up() -> None:
+    values = np.array([0.1, 1.0, 2.0, 0.5, 0.2], np.float32)
+    begin, end = np.array([0], np.int64), np.array([5], np.int64)
+    table, thresholds = np.zeros(1 << 17, np.uint16), np.array([0.3, np.nan], np.float32)
+    column, special = np.array([0, 1], np.int64), np.zeros((1, 4), np.int64)
+    for kind in (np.uint16, np.uint32):
+        counts = np.zeros((1, 1), kind)
+        count_rows(values, begin, end, table, thresholds, 1, column, counts, special)
+        count_flagged_rows(values, np.zeros(5, np.uint8), begin, end, table, thresholds, column, counts, special, 0, 1)
+    settle_region(values, begin, end, values[:1], end, np.zeros(1, np.int64))
+    unit = np.ones(1)
+    edges = np.array([0.0, 1.0])
+    for quality in (np.zeros(0, np.uint8), np.zeros(5, np.uint8)):
+        count_grid(
+            values, quality, begin, begin, end, begin, unit, unit, values[:0], unit, edges, table, thresholds, column,
+            np.zeros((1, 1), np.uint32),
+        )  # fmt: skip
