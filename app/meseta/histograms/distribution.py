@@ -108,7 +108,8 @@ def _weighted(
 ) -> Floats:
     """Return the counts of each bin, each sample with its weight."""
     if weight is None or _is_flat(weight):
-        return total * _flat_scale(weight)
+        flat: Floats = total.astype(np.float64) * _flat_scale(weight)
+        return flat
     summed: Floats = (weight @ counts.counts[rows]).astype(np.float64)
     return counts.shown_counts(summed)
 
