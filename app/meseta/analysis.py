@@ -249,6 +249,8 @@ def _peaks(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Input
         inputs["counts"],
         inputs["plateaus"].take(inputs["selection"].kept[inputs["plateaus"].trace]),
         work,
+        floor_g0=inputs["noise"].floor_g0,
+        floor_sigma_g0=inputs["noise"].floor_sigma_g0,
     )
 
 
@@ -312,7 +314,7 @@ STEPS: Mapping[str, Step] = {
             "peaks",
             "fitting peaks",
             1,
-            ("histogram", "resampling", "counts", "plateaus", "selection"),
+            ("histogram", "resampling", "counts", "plateaus", "selection", "noise"),
             ("peaks",),
             _peaks,
         ),

@@ -20,11 +20,16 @@ Texts = npt.NDArray[np.str_]
 class PeakTable(Table):
     """The columns of ``peaks.csv``: one row a peak, sorted by conductance.
 
-    Intervals are 95 %; ``resampling`` says which resampling made them.  ``position_systematic_g0`` is the half spread of
-    the position over defensible choices of bin width, range and background.  ``fwhm`` is in decades on a logarithmic
+    Intervals are 95 %; ``resampling`` says which resampling made them.  ``position_systematic_g0`` is the half spread
+    of the position over defensible choices of bin width, range and background.  ``fwhm`` is in decades on a logarithmic
     axis and in G0 on a linear one (``axis`` says which); ``area_per_trace`` and ``height`` in the unit of the
     histogram's density times its axis, and in its density (``area_unit``, ``height_unit``).  ``status`` is "ok" or what
-    is doubtful.
+    is doubtful.  Where no peak can be fitted there is one row of NaN whose status says why.
+
+    ``mode_g0`` is the highest point of the histogram near the peak, background and all, and ``plateau_median_g0`` the
+    median conductance of the ``plateaus`` found there: three numbers that are often quoted for one another.
+    ``assigned`` is the nearest multiple of G0 or value named by the user, ``channels_at_least`` the smallest number of
+    channels that can carry the position (0 where there is no position).
     """
 
     peak: Texts
@@ -54,6 +59,8 @@ class PeakTable(Table):
     mode_g0: Floats
     plateau_median_g0: Floats
     plateaus: npt.NDArray[np.int64]
+    assigned: Texts
+    channels_at_least: npt.NDArray[np.int64]
 
 
 @dataclass(frozen=True)

@@ -15,7 +15,8 @@ class PeakStart(BaseModel):
     """A peak that the user asks for: a name, and where to begin.
 
     ``position_g0`` and ``width`` (sigma; decades on a logarithmic, G0 on a linear axis) are starting values;
-    ``fixed`` holds the position.
+    ``fixed`` holds the position, ``fixed_width`` the width, ``low_g0`` and ``high_g0`` bound the position, ``multiple``
+    says which multiple a tied peak is (1, 2, 3 ... in their order where none says so).
     """
 
     model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
@@ -26,6 +27,8 @@ class PeakStart(BaseModel):
     low_g0: float | None = None
     high_g0: float | None = None
     fixed: bool = False
+    fixed_width: bool = False
+    multiple: float | None = None
 
 
 class PeakSettings(Section):
@@ -39,8 +42,24 @@ class PeakSettings(Section):
     shape: Literal["gaussian", "lorentzian", "pseudo_voigt", "skewed_gaussian"] = setting(
         "gaussian", "Line shape", "Shape of every peak on the axis of the fit."
     )
-    background: Literal["none", "constant", "linear", "exponential", "power_law"] = setting(
-        "exponential", "Background", "Smooth part under the peaks, on the axis of the fit."
+    background: Literal["none", "constant", "linear", "exponential", "power_law", "tunnelling", "template"] = setting(
+        "exponential",
+        "Background",
+        "Smooth part under the peaks, on the axis of the fit; 'tunnelling': the traces without a plateau, scaled; "
+        "'template': a given shape (a blank recording), scaled.",
+    )
+    tie: Literal["none", "multiples", "ladder"] = setting(
+        "none",
+        "Tie positions",
+        "'multiples': all peaks are multiples of one conductance; 'ladder': the same behind one series resistance.",
+    )
+    equal_relative_widths: bool = setting(
+        False, "Equal relative widths", "All peaks are equally wide relative to their position."
+    )
+    intervals: Literal["percentile", "bca"] = setting(
+        "percentile",
+        "Intervals",
+        "From the resampled fits: percentiles, or bias-corrected and accelerated ones over up to 200 groups of traces.",
     )
     peaks: list[PeakStart] = setting(
         None, "Peaks", "Peaks to fit, with starting values; empty: proposed from the histogram.", factory=list

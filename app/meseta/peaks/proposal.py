@@ -1,0 +1,93 @@
+"""How many peaks to fit: as many as foretell traces that were left out of the fit.
+
+Samples of one trace come in whole plateaus, so counts scatter far more than Poisson counts, and criteria that take them
+as independent (AIC, BIC) always ask for more peaks.  Whole blocks of traces are left out instead.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.peaks.fitting import fit_model
+from meseta.peaks.model import Model
+
+__all__ = ["block_counts", "held_out_gain", "number_of_peaks"]
+
+Floats = npt.NDArray[np.float64]
+
+_FOLDS = 10
+
+
+def block_counts(counts: npt.NDArray[np.unsignedinteger], rows: npt.NDArray[np.int64], folds: int = _FOLDS) -> Floats:
+    """Return the summed counts of ``folds`` blocks of consecutive traces.
+
+    Parameters
+    ----------
+    counts : (traces, bins) unsigned
+    rows : (kept,) int64
+        Traces that take part, in order.
+
+    Returns
+    -------
+    (folds, bins) float64
+    """
+    parts = [part for part in np.array_split(rows, folds) if len(part)]
+    sums = []
+    for part in parts:
+        whole = part[-1] - part[0] + 1 == len(part)
+        chosen = counts[part[0] : part[-1] + 1] if whole else counts[part]
+        sums.append(chosen.sum(axis=0, dtype=np.int64))
+    return np.array(sums, float).reshape(len(parts), counts.shape[1])
+
+
+def held_out_gain(blocks: Floats, smaller: Model, larger: Model) -> tuple[float, float]:
+    """Return by how much the larger model foretells left-out blocks better: mean Poisson deviance, standard error.
+
+    Each block is left out in turn; both models are fitted to the rest and judged on the block.
+    """
+    total = blocks.sum(axis=0)
+    gains = []
+    start_small = fit_model(smaller, total).inner
+    start_large = fit_model(larger, total).inner
+    for block in blocks:
+        rest = total - block
+        share = block.sum() / max(rest.sum(), 1.0)
+        small = fit_model(smaller, rest, start=start_small)
+        large = fit_model(larger, rest, start=start_large)
+        gains.append(
+            _deviance(block, share * smaller.curves(small.inner).total)
+            - _deviance(block, share * larger.curves(large.inner).total)
+        )
+    values = np.array(gains)
+    error = float(values.std(ddof=1) / np.sqrt(len(values))) if len(values) > 1 else np.inf
+    return float(values.mean()), error
+
+
+def _deviance(counts: Floats, expected: Floats) -> float:
+    mu = np.maximum(expected, 1e-9 * max(float(counts.mean()), 1e-300))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        terms = np.where(counts > 0, counts * np.log(counts / mu), 0.0)
+    return float(2.0 * (mu - counts + terms).sum())
+
+
+def number_of_peaks(blocks: Floats, models: Sequence[Model], errors: float = 1.0) -> int:
+    """Return how many peaks of a nested series of models the held-out blocks support.
+
+    Parameters
+    ----------
+    blocks : (folds, bins) float64
+        Counts of blocks of traces over the bins of the models.
+    models : sequence of Model
+        With 0, 1, 2 ... peaks, each with one more than the one before.
+    errors : float
+        Standard errors by which a further peak has to be better.
+    """
+    chosen = 0
+    for number in range(1, len(models)):
+        gain, error = held_out_gain(blocks, models[chosen], models[number])
+        if gain > errors * error:
+            chosen = number
+    return chosen

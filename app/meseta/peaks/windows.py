@@ -1,0 +1,176 @@
+"""Which stretch of the axis each group of peaks is fitted on."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.histograms.results import ConductanceHistogram, Grid
+from meseta.peaks.candidates import Candidate
+from meseta.recipe.peaks import PeakSettings, PeakStart
+
+__all__ = ["Start", "Window", "rebinned", "starts_of", "to_axis", "usable_range", "windows_of"]
+
+Floats = npt.NDArray[np.float64]
+
+_REACH = 4.0
+_FLOOR_SIGMAS = 6.0
+
+
+@dataclass(frozen=True)
+class Start:
+    """One peak to fit: starting values on the axis, and what the user said about it."""
+
+    position_u: float
+    width_u: float
+    name: str = ""
+    low_u: float = -np.inf
+    high_u: float = np.inf
+    fixed: bool = False
+    fixed_width: bool = False
+    multiple: float | None = None
+
+
+@dataclass(frozen=True)
+class Window:
+    """A stretch of bins, and the peaks fitted on it.
+
+    Attributes
+    ----------
+    first, last : int
+        Half-open range of bins.
+    starts : tuple of Start
+        Sorted by position.
+    """
+
+    first: int
+    last: int
+    starts: tuple[Start, ...]
+
+
+def to_axis(conductance_g0: float, logarithmic: bool) -> float:
+    """Return a conductance on the axis: log10 G, or G itself."""
+    return float(np.log10(conductance_g0)) if logarithmic else float(conductance_g0)
+
+
+def usable_range(
+    histogram: ConductanceHistogram, floor_g0: float | None, floor_sigma_g0: float | None
+) -> tuple[float, float]:
+    """Return the range of the axis in which a peak may lie: from clear above the floor to the upper end.
+
+    The floor is a peak of the histogram too, and no conductance of a contact.  Where its mean and spread are not given,
+    it is looked for at the lower end of a logarithmic axis.
+    """
+    grid = histogram.grid
+    u, logarithmic = grid.u_edges, grid.axis == "logarithmic"
+    low = float(u[0])
+    if floor_g0 is not None and floor_sigma_g0 is not None and np.isfinite([floor_g0, floor_sigma_g0]).all():
+        top = floor_g0 + _FLOOR_SIGMAS * floor_sigma_g0
+        if top > 0 or not logarithmic:
+            low = max(low, to_axis(top, logarithmic))
+    elif logarithmic:
+        low = max(low, _floor_edge(u, histogram.counts.astype(float)))
+    return low, float(u[-1])
+
+
+def _floor_edge(u: Floats, counts: Floats) -> float:
+    """Return the upper end of a floor peak at the lower end of the axis, or the lowest edge where there is none.
+
+    A floor peak is the highest of all, lies in the lower half of what was counted, and ends in a fall of more than a
+    factor of ten within one decade.
+    """
+    from scipy.ndimage import gaussian_filter1d
+
+    seen = np.flatnonzero(counts)
+    if len(seen) < 8:
+        return float(u[0])
+    step = float(u[1] - u[0])
+    smooth = gaussian_filter1d(counts, max(0.05 / step, 1.0))
+    top = int(np.argmax(smooth))
+    decade = round(1.0 / step)
+    after = smooth[top : top + decade]
+    if top > seen[0] + 0.5 * (seen[-1] - seen[0]) or after.min() > 0.1 * smooth[top]:
+        return float(u[0])
+    falling = np.diff(np.log(np.maximum(smooth[top:], 1e-12 * smooth[top])))
+    steep = falling < 0.25 * falling.min()
+    ends = np.flatnonzero(~steep & (np.arange(len(steep)) > np.argmin(falling)))
+    return float(u[top + (int(ends[0]) if len(ends) else len(falling))])
+
+
+def starts_of(settings: PeakSettings, found: Sequence[Candidate], grid: Grid) -> list[Start]:
+    """Return the peaks that the user asks for, or those that were found."""
+    if settings.peaks:
+        return sorted((_asked(peak, grid) for peak in settings.peaks), key=lambda start: start.position_u)
+    return [Start(candidate.position_u, candidate.width_u) for candidate in found]
+
+
+def _asked(peak: PeakStart, grid: Grid) -> Start:
+    logarithmic = grid.axis == "logarithmic"
+    position = to_axis(peak.position_g0, logarithmic)
+    default = 0.15 if logarithmic else 0.1 * max(peak.position_g0, 0.02 * grid.edges_g0[-1])
+    return Start(
+        position,
+        default if peak.width is None else peak.width,
+        peak.name,
+        -np.inf if peak.low_g0 is None else to_axis(peak.low_g0, logarithmic),
+        np.inf if peak.high_g0 is None else to_axis(peak.high_g0, logarithmic),
+        peak.fixed,
+        peak.fixed_width,
+        peak.multiple,
+    )
+
+
+def windows_of(
+    starts: Sequence[Start],
+    grid: Grid,
+    usable: tuple[float, float],
+    settings: PeakSettings,
+    others: Sequence[Candidate] = (),
+) -> list[Window]:
+    """Return the stretches on which the peaks are fitted, each with its own background.
+
+    Peaks whose surroundings (4 widths to either side) overlap share a stretch.  A stretch ends half-way to a peak that
+    is not fitted, at the ends of the usable range, and where the user says.
+    """
+    if not starts:
+        return []
+    logarithmic = grid.axis == "logarithmic"
+    low = usable[0] if settings.fit_low_g0 is None else to_axis(settings.fit_low_g0, logarithmic)
+    high = usable[1] if settings.fit_high_g0 is None else to_axis(settings.fit_high_g0, logarithmic)
+    together = settings.fit_low_g0 is not None or settings.fit_high_g0 is not None or settings.tie != "none"
+    groups: list[list[Start]] = [[starts[0]]]
+    for start in starts[1:]:
+        last = groups[-1][-1]
+        if together or start.position_u - last.position_u < _REACH * (start.width_u + last.width_u):
+            groups[-1].append(start)
+        else:
+            groups.append([start])
+    windows = []
+    for group in groups:
+        bottom = low if settings.fit_low_g0 is not None else max(low, group[0].position_u - _REACH * group[0].width_u)
+        top = high if settings.fit_high_g0 is not None else min(high, group[-1].position_u + _REACH * group[-1].width_u)
+        for other in others:
+            if other.position_u < group[0].position_u and settings.fit_low_g0 is None:
+                bottom = max(bottom, (other.position_u + group[0].position_u) / 2)
+            if other.position_u > group[-1].position_u and settings.fit_high_g0 is None:
+                top = min(top, (other.position_u + group[-1].position_u) / 2)
+        windows.append(Window(*_bins(grid, bottom, top), tuple(group)))
+    return windows
+
+
+def _bins(grid: Grid, bottom: float, top: float) -> tuple[int, int]:
+    """Return the half-open range of whole bins inside [bottom, top]; a little rounding is forgiven."""
+    u = grid.u_edges
+    slack = 1e-6 * (u[1] - u[0])
+    first = int(np.searchsorted(u, bottom - slack, side="left"))
+    last = int(np.searchsorted(u, top + slack, side="right")) - 1
+    return min(first, grid.bins), max(min(last, grid.bins), min(first, grid.bins))
+
+
+def rebinned(values: Floats, merge: int) -> Floats:
+    """Return sums of ``merge`` neighbouring bins along the last axis; a rest at the upper end is left out."""
+    bins = values.shape[-1] // merge
+    return values[..., : bins * merge].reshape(*values.shape[:-1], bins, merge).sum(axis=-1)
