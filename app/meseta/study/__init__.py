@@ -1,1 +1,6 @@
-"""Room of the house; see DEVELOPERS.md."""
+"""The study file: recordings, traces, recipe, decisions and history in one HDF5 file that survives anything."""
+
+from meseta.study.reading import read
+from meseta.study.study import Study, is_study, write_study
+
+__all__ = ["Study", "is_study", "read", "write_study"]
