@@ -1,0 +1,199 @@
+"""What a file says of itself: constants under canonical names, user columns, file-name templates, sidecars, tables.
+
+A constant keeps the unit in which people wrote it until here: "bias_mV = 100", "Bias: 100 mV" and ``bias`` = 0.1 all
+become ``bias_volt`` = 0.1; where no unit is stated the canonical one is taken, and a doubt says so.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Iterable, Mapping
+from typing import Any, Final
+
+import numpy as np
+
+from meseta.errors import InputError
+from meseta.intake.roles import split_unit
+from meseta.intake.units import is_unit, parse_unit, unit_factor
+
+__all__ = ["CONSTANTS", "canonical", "canonical_entry", "plain_value"]
+
+Plain = str | int | float | bool
+
+CONSTANTS: Final = {
+    # canonical name: (unit of its value, names it goes by)
+    "bias_volt": ("V", "bias bias_voltage v_bias vbias u_bias junction_bias applied_bias bias_potential"),
+    "bias_offset_volt": ("V", "bias_offset"),
+    "gain_volt_per_ampere": (
+        "V/A",
+        "gain amplifier_gain transimpedance transimpedance_gain current_gain preamp_gain preamplifier_gain iv_gain "
+        "linear_gain low_gain",
+    ),
+    "high_gain_volt_per_ampere": ("V/A", "high_gain second_gain gain_2 gain2 gain_high high_amplifier_gain"),
+    "offset_volt": ("V", "offset amplifier_offset output_offset zero_offset"),
+    "high_gain_offset_volt": ("V", "high_gain_offset second_offset"),
+    "volt_per_decade": ("V/dec", "log_slope decade_slope volts_per_decade"),
+    "reference_ampere": ("A", "reference_current reference i_ref iref log_reference current_reference"),
+    "full_scale_volt": ("V", "full_scale adc_range input_range amplifier_full_scale fullscale"),
+    "series_resistance_ohm": ("ohm", "series_resistance series_resistor r_series rs protective_resistor"),
+    "nm_per_volt": ("nm/V", "piezo_constant piezo_calibration piezo_sensitivity displacement_per_volt piezo_factor"),
+    "nm_per_second": (
+        "nm/s",
+        "speed stretching_speed pulling_speed stretch_speed stretching_rate pulling_rate velocity opening_speed",
+    ),
+    "nm_per_sample": ("nm", "displacement_step step_size displacement_per_sample dz"),
+    "sampling_hertz": (
+        "Hz",
+        "sampling_rate sample_rate sampling_frequency samplerate fs sampling acquisition_rate samples_per_second",
+    ),
+    "sample_interval_second": (
+        "s",
+        "dt delta_t sample_interval sampling_interval time_step wf_increment sample_period time_increment",
+    ),
+    "temperature_kelvin": ("K", "temperature"),
+}
+"""Constants that calibration knows, the unit of their values, and other names for them."""
+
+LARGEST_BIAS_VOLT: Final = 5.0
+"""A bias without a unit that is larger than this was not meant in volts (common practice, no source)."""
+
+_WORDS: Final = {
+    "amplifier": "amplifier amplifier_type amplifier_kind amplifier_law",
+    "pull_is": "pull_is pull_direction pulling_is opening_is",
+    "direction": "direction trace_direction",
+    "specimen": "specimen device chip tip junction_id device_id",
+    "session": "session measuring_session run_id",
+}
+_CANONICAL: Final = {alias: name for name, (_, aliases) in CONSTANTS.items() for alias in (name, *aliases.split())} | {
+    alias: name for name, aliases in _WORDS.items() for alias in aliases.split()
+}
+_DIRECTIONS: Final = {
+    "opening": "opening", "open": "opening", "pull": "opening", "break": "opening", "breaking": "opening",
+    "retract": "opening", "stretching": "opening", "closing": "closing", "close": "closing", "push": "closing",
+    "making": "closing", "make": "closing", "approach": "closing",
+}  # fmt: skip
+_AMPLIFIERS: Final = {
+    "linear": "linear", "lin": "linear", "logarithmic": "logarithmic", "log": "logarithmic", "none": "none",
+}  # fmt: skip
+
+
+def plain_value(value: Any) -> Plain | None:
+    """Return an attribute's value as a plain one; None where it is no single plain value."""
+    array = np.asarray(value)
+    if array.size != 1 or array.dtype.kind not in "biufSUO":
+        return None
+    item = array.reshape(-1)[0]
+    if isinstance(item, bytes):
+        return item.decode("utf-8", "replace")
+    if isinstance(item, np.generic):
+        item = item.item()
+    return item if isinstance(item, str | int | float | bool) else None
+
+
+def _key(name: str) -> str:
+    spaced = re.sub(r"(?<=[a-z])(?=[A-Z])", "_", name.strip())
+    return re.sub(r"[^0-9a-z]+", "_", spaced.lower()).strip("_")
+
+
+def _constant_of(name: str) -> tuple[str, str]:
+    """Return (canonical name, unit stated in the name) of a constant; ("", "") where it is none."""
+    if _key(name) in _CANONICAL:
+        return _CANONICAL[_key(name)], ""
+    stem, unit = split_unit(name)
+    if stem and _key(stem) in _CANONICAL:
+        return _CANONICAL[_key(stem)], unit
+    words = [word for word in re.split(r"[_\s]+", name.strip()) if word]
+    for count in range(1, len(words)):
+        head, tail = _key("_".join(words[:-count])), "_".join(words[-count:])
+        unit = tail.replace("_per_", "/")
+        if head in _CANONICAL and is_unit(unit):
+            return _CANONICAL[head], unit
+    unit = name.strip().replace("_per_", "/").replace("volt", "V").replace("decade", "dec")
+    if is_unit(unit):
+        dimension = parse_unit(unit).dimension
+        for canonical_name in ("volt_per_decade", "nm_per_volt", "nm_per_second"):
+            if dimension == parse_unit(CONSTANTS[canonical_name][0]).dimension:
+                return canonical_name, unit
+    return "", ""
+
+
+def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plain, str]:
+    """Return (canonical name, value in its unit, doubt) of one entry; what is unknown keeps name and value.
+
+    Raises
+    ------
+    InputError
+        Where a constant has a value or unit that cannot be understood.
+    """
+    constant, unit = _constant_of(name)
+    if not constant:
+        return name, value, ""
+    if constant not in CONSTANTS:
+        return constant, _word(constant, value), ""
+    number, stated = _number_and_unit(value)
+    if number is None:
+        if constant in ("gain_volt_per_ampere", "offset_volt", "nm_per_second"):
+            return name, value, ""
+        raise InputError(f"'{value}' is not a number with a known unit", f"{where} {name}".strip(), "correct the file")
+    unit = stated or unit
+    wanted = CONSTANTS[constant][0]
+    if constant == "gain_volt_per_ampere" and unit and parse_unit(unit, where).dimension in ("A/V", "ohm"):
+        factor = parse_unit(unit, where).factor
+        return constant, (1.0 / (number * factor) if "A/V" in parse_unit(unit).dimension else number * factor), ""
+    if unit:
+        return constant, _exact(number * unit_factor(unit, wanted, f"{where} {name}".strip())), ""
+    if _key(name) == constant or not math.isfinite(number):
+        return constant, float(number), ""
+    if constant in ("bias_volt", "bias_offset_volt") and abs(number) > LARGEST_BIAS_VOLT:
+        return name, value, f"'{name}' is {number:g} without a unit: not used, as it cannot be volts"
+    return constant, float(number), f"the unit of '{name}' is not stated: {number:g} is taken as {wanted}"
+
+
+def _exact(number: float) -> float:
+    """Return a converted constant without the last-digit noise of the conversion (100 mV is 0.1 V)."""
+    return float(f"{number:.15g}")
+
+
+def _word(name: str, value: Plain) -> Plain:
+    text = str(value).strip()
+    if name == "direction":
+        return _DIRECTIONS.get(text.lower(), text)
+    if name == "amplifier":
+        return _AMPLIFIERS.get(text.lower(), text)
+    return text.lower() if name == "pull_is" else text
+
+
+def _number_and_unit(value: Plain) -> tuple[float | None, str]:
+    if isinstance(value, bool):
+        return None, ""
+    if isinstance(value, int | float):
+        return float(value), ""
+    match = re.fullmatch(r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(\S.*)?", value.replace(",", "."))
+    if match is None or (match[2] and not is_unit(match[2].strip())):
+        return None, ""
+    return float(match[1]), (match[2] or "").strip()
+
+
+def canonical(
+    entries: Mapping[str, Any] | Iterable[tuple[str, Any]], where: str = ""
+) -> tuple[dict[str, Plain], list[str]]:
+    """Return entries under canonical names, as plain values, with the doubts about them.
+
+    Entries that are no single plain value are left out; a value stated under its canonical name wins over others.
+    """
+    found: dict[str, Plain] = {}
+    doubts = []
+    pairs = list(entries.items() if isinstance(entries, Mapping) else entries)
+    for name, raw in sorted(pairs, key=lambda pair: _key(str(pair[0])) in CONSTANTS):
+        value = plain_value(raw)
+        if value is None or value == "":
+            continue
+        key, converted, doubt = canonical_entry(str(name), value, where)
+        found[key] = converted
+        if doubt:
+            doubts.append(doubt)
+    interval = found.get("sample_interval_second")
+    if isinstance(interval, float) and interval > 0 and "sampling_hertz" not in found:
+        found["sampling_hertz"] = _exact(1.0 / interval)
+    return found, doubts

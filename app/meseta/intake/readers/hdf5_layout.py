@@ -1,0 +1,421 @@
+"""How traces stand in an HDF5 file: rows or columns of a 2D array, flat with offsets, one dataset or group a trace."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from typing import Any, Final
+
+import numpy as np
+import numpy.typing as npt
+from natsort import natsorted
+
+from meseta.intake.metadata import plain_value
+from meseta.intake.readers.hdf5_tree import (
+    ColumnSamples,
+    Node,
+    OneColumnSamples,
+    RowSamples,
+    VectorSamples,
+)
+from meseta.intake.roles import DRIVE_ROLES, guess_role, stem_of
+from meseta.traces import Samples
+
+__all__ = ["Leaf", "Sheet", "leaves_of", "numbered_sheet", "sheet_of"]
+
+_CUTS: Final = {
+    "offsets": "offsets offset trace_offsets starts start trace_starts trace_start boundaries bounds begin begins "
+    "first_sample index_start record_start",
+    "lengths": "lengths length trace_lengths counts n_samples samples sizes size npts",
+}
+_COLUMN_NAMES: Final = ("columns", "channels", "names", "channel_names", "column_names", "fields", "labels")
+_CHANNEL_STEMS: Final = frozenset(
+    {
+        "ch",
+        "chan",
+        "channel",
+        "channels",
+        "ai",
+        "adc",
+        "input",
+        "col",
+        "column",
+        "analog",
+        "var",
+        "signal",
+        "amp",
+        "gain",
+    }
+)
+
+
+@dataclass(frozen=True)
+class Leaf:
+    """One channel-like thing of the file: a dataset, or a field of a compound one."""
+
+    name: str
+    parent: str
+    shape: tuple[int, ...]
+    dtype: np.dtype[Any]
+    attributes: Mapping[str, Any]
+    node: Node
+    samples: Samples
+
+    @property
+    def is_vector(self) -> bool:
+        """Return whether it has one dimension (or others of size 1)."""
+        return sum(n > 1 for n in self.shape) <= 1
+
+    @property
+    def length(self) -> int:
+        """Number of samples."""
+        return int(np.prod(self.shape))
+
+
+@dataclass(frozen=True)
+class Sheet:
+    """Channels cut into pieces in one way.
+
+    Attributes
+    ----------
+    channels : list of (name, samples, dtype, attributes, shared, context)
+    offsets : (pieces + 1,) int64
+    names : list of str
+        Dataset path of each piece.
+    starts : (pieces,) int64
+        First sample of each piece in its dataset.
+    table : mapping of str to (pieces,) array
+    """
+
+    layout: str
+    channels: list[tuple[str, Samples, np.dtype[Any], Mapping[str, Any], bool, str]]
+    offsets: npt.NDArray[np.int64]
+    names: list[str]
+    starts: npt.NDArray[np.int64]
+    table: dict[str, npt.NDArray[Any]] = field(default_factory=dict)
+    doubts: tuple[str, ...] = ()
+
+
+def leaves_of(node: Node) -> Iterator[Leaf]:
+    """Yield the channel-like parts of a dataset."""
+    if node.dtype.names is None:
+        yield Leaf(node.leaf, node.parent, node.shape, node.dtype, node.attributes, node, VectorSamples(node.dataset))
+        return
+    if len(node.shape) != 1:
+        return
+    for name in node.dtype.names:
+        dtype = node.dtype[name]
+        if dtype.kind in "biuf" and dtype.shape == ():
+            samples = VectorSamples(node.dataset, name)
+            yield Leaf(name, node.path, node.shape, dtype, _field_attributes(node, name), node, samples)
+
+
+def _field_attributes(node: Node, name: str) -> dict[str, Any]:
+    """Return the attributes that concern one field: "unit_current", "current_unit", "current.unit"."""
+    found = {}
+    for key, value in node.attributes.items():
+        lowered = str(key).lower()
+        for rest in (lowered.removeprefix(f"{name.lower()}_"), lowered.removesuffix(f"_{name.lower()}")):
+            if rest != lowered:
+                found[rest] = value
+        if lowered.startswith(f"{name.lower()}."):
+            found[lowered.partition(".")[2]] = value
+    return found
+
+
+# -- numbered datasets: one dataset a trace ---------------------------------------------------------------------------
+
+
+def numbered_sheet(parent: str, leaves: Sequence[Leaf]) -> Sheet | None:
+    """Return the sheet of a group whose datasets are numbered traces; None where they are not.
+
+    Several numbered sets ("G_001", "z_001") are channels of the same traces where their numbers agree.
+    """
+    sets: dict[str, dict[str, Leaf]] = {}
+    for leaf in leaves:
+        if leaf.is_vector and leaf.length > 1:
+            sets.setdefault(stem_of(leaf.name), {})[leaf.name.rsplit(".", 1)[0]] = leaf
+    chosen = {stem: found for stem, found in sets.items() if _are_traces(stem, found)}
+    if not chosen:
+        return None
+    context = parent.rpartition("/")[2]
+    columns = {
+        (context if stem.isdigit() or not stem else stem): [found[name] for name in natsorted(found)]
+        for stem, found in chosen.items()
+    }
+    return joined_leaves("one dataset a trace", columns, context)
+
+
+def _are_traces(stem: str, found: Mapping[str, Leaf]) -> bool:
+    if len(found) < 2 or stem in _CHANNEL_STEMS:
+        return False
+    if stem.isdigit():
+        return True
+    numbers = [name for name in found if name[-1:].isdigit() or name.endswith(")")]
+    exact = {guess_role(name).role for name in found}
+    return len(numbers) == len(found) and not (len(exact) == len(found) > 1)
+
+
+def joined_leaves(layout: str, columns: Mapping[str, Sequence[Leaf]], context: str) -> Sheet | None:
+    """Return a sheet whose pieces are datasets: column name -> one leaf a piece."""
+    count = max(len(leaves) for leaves in columns.values())
+    main = next(leaves for leaves in columns.values() if len(leaves) == count)
+    lengths = np.array([leaf.length for leaf in main], np.int64)
+    doubts, channels = [], []
+    offsets = np.concatenate([[0], np.cumsum(lengths)]).astype(np.int64)
+    for name, leaves in columns.items():
+        if len(leaves) != count or [leaf.length for leaf in leaves] != lengths.tolist():
+            doubts.append(f"'{name}' does not go with the other datasets and was left out")
+            continue
+        samples, attributes = _parts(leaves, offsets)
+        channels.append((name, samples, leaves[0].dtype, attributes, False, context))
+    table = _differing([leaf.attributes for leaf in main])
+    names = [f"{leaf.parent}/{leaf.name}" for leaf in main]
+    return Sheet(layout, channels, offsets, names, np.zeros(count, np.int64), table, tuple(doubts))
+
+
+@dataclass(frozen=True)
+class _Converted:
+    """A part whose own scale and offset differ from its neighbours'."""
+
+    part: Samples
+    scale: float
+    offset: float
+
+    def __len__(self) -> int:
+        return len(self.part)
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        return self.part.read(start, stop).astype(np.float64) * self.scale + self.offset
+
+
+def _parts(leaves: Sequence[Leaf], offsets: npt.NDArray[np.int64]) -> tuple[Samples, Mapping[str, Any]]:
+    """Return samples of several datasets end to end, and the attributes that hold for all of them."""
+    from meseta.intake.readers.contents import conversion, conversion_names
+    from meseta.intake.readers.hdf5_tree import PartSamples
+
+    if len(leaves) == 1:
+        return leaves[0].samples, leaves[0].attributes
+    conversions = [conversion(leaf.attributes, leaf.dtype.kind in "iu") for leaf in leaves]
+    attributes = dict(leaves[0].attributes)
+    parts: list[Samples] = [leaf.samples for leaf in leaves]
+    if len(set(conversions)) > 1:
+        parts = [_Converted(part, *one) for part, one in zip(parts, conversions, strict=True)]
+        attributes = {key: value for key, value in attributes.items() if str(key).lower() not in conversion_names()}
+    return PartSamples(tuple(parts), offsets), attributes
+
+
+def _differing(rows: Sequence[Mapping[str, Any]]) -> dict[str, npt.NDArray[Any]]:
+    """Return the attributes that differ from piece to piece, as columns under their own names."""
+    from meseta.intake.readers.contents import columns_of, conversion_names
+
+    if not any(rows):
+        return {}
+    plain = [{str(k): v for k, raw in row.items() if (v := plain_value(raw)) is not None} for row in rows]
+    skipped = conversion_names() | {"unit", "units", "role"}
+    columns = columns_of([{k: v for k, v in row.items() if k.lower() not in skipped} for row in plain])
+    return {name: column for name, column in columns.items() if len(np.unique(column)) > 1}
+
+
+# -- one group --------------------------------------------------------------------------------------------------------
+
+
+def sheet_of(parent: str, leaves: Sequence[Leaf], layout: str) -> Sheet | None:
+    """Return the sheet of the datasets of one group that are not numbered traces; None where nothing is understood."""
+    matrices = [leaf for leaf in leaves if len(leaf.shape) == 2 and not leaf.is_vector]
+    vectors = [leaf for leaf in leaves if leaf.is_vector and leaf.length > 1]
+    named = next((leaf for leaf in matrices if _column_names(leaf)), None)
+    if named is not None:
+        return _multichannel(named)
+    if matrices:
+        return _matrix(matrices, vectors, layout)
+    if not vectors:
+        return None
+    cut = _cut_points(vectors)
+    return _ragged(vectors, *cut) if cut else _record(parent, vectors)
+
+
+def _column_names(leaf: Leaf) -> list[str]:
+    for key, value in leaf.attributes.items():
+        array = np.asarray(value)
+        if str(key).lower() in _COLUMN_NAMES:
+            words = array.reshape(-1).tolist() if array.size > 1 else str(plain_value(value) or "").split(",")
+            names = [
+                word.decode("utf-8", "replace") if isinstance(word, bytes) else str(word).strip() for word in words
+            ]
+            if len(names) in leaf.shape and len(names) > 1:
+                return names
+    return []
+
+
+def _multichannel(leaf: Leaf) -> Sheet:
+    names = _column_names(leaf)
+    axis = 1 if len(names) == leaf.shape[1] else 0
+    units = _column_units(leaf, len(names))
+    channels: list[tuple[str, Samples, np.dtype[Any], Mapping[str, Any], bool, str]] = [
+        (name, OneColumnSamples(leaf.node.dataset, place, axis), leaf.dtype, {"unit": unit} if unit else {}, False, "")
+        for place, (name, unit) in enumerate(zip(names, units, strict=True))
+    ]
+    length = leaf.shape[1 - axis]
+    layout = f"{len(names)} named {'columns' if axis else 'rows'} of one 2D dataset"
+    return Sheet(layout, channels, np.array([0, length], np.int64), [leaf.node.path], np.zeros(1, np.int64))
+
+
+def _column_units(leaf: Leaf, count: int) -> list[str]:
+    for key, value in leaf.attributes.items():
+        if str(key).lower() in ("units", "unit"):
+            array = np.asarray(value)
+            words = array.reshape(-1).tolist() if array.size > 1 else str(plain_value(value) or "").split(",")
+            if len(words) == count:
+                return [word.decode() if isinstance(word, bytes) else str(word).strip() for word in words]
+    return [""] * count
+
+
+def _matrix(matrices: Sequence[Leaf], vectors: Sequence[Leaf], layout: str) -> Sheet:
+    main = max(matrices, key=lambda leaf: (_is_signal(leaf), leaf.length))
+    rows, doubt = _rows_are_traces(main, vectors, layout)
+    pieces, n = main.shape if rows else main.shape[::-1]
+    doubts = [doubt] if doubt else []
+    channels: list[tuple[str, Samples, np.dtype[Any], Mapping[str, Any], bool, str]] = []
+    for leaf in matrices:
+        if leaf.shape == main.shape:
+            kind = RowSamples if rows else ColumnSamples
+            context = leaf.parent.rpartition("/")[2]
+            channels.append((leaf.name, kind(leaf.node.dataset), leaf.dtype, leaf.attributes, False, context))
+        else:
+            doubts.append(f"'{leaf.name}' has another shape than '{main.name}' and was left out")
+    table = {}
+    for leaf in vectors:
+        if leaf.length == n and (n != pieces or guess_role(leaf.name).role in DRIVE_ROLES):
+            channels.append((leaf.name, leaf.samples, leaf.dtype, leaf.attributes, True, ""))
+        elif leaf.length == pieces:
+            table[leaf.name] = np.asarray(leaf.samples.read(0, pieces))
+        else:
+            doubts.append(f"'{leaf.name}' goes with neither traces nor samples and was left out")
+    offsets = np.arange(pieces + 1, dtype=np.int64) * n
+    way = "rows" if rows else "columns"
+    names, starts = [main.node.path] * pieces, offsets[:-1].copy()
+    return Sheet(f"2D dataset, traces in {way}", channels, offsets, names, starts, table, tuple(doubts))
+
+
+def _is_signal(leaf: Leaf) -> bool:
+    unit = str(plain_value(leaf.attributes.get("unit", leaf.attributes.get("units", ""))) or "")
+    try:
+        return guess_role(leaf.name, unit).role in (
+            "conductance",
+            "log_conductance",
+            "current",
+            "amplifier",
+            "resistance",
+        )
+    except Exception:  # noqa: BLE001  an unknown unit is reported where the channel is made
+        return False
+
+
+def _rows_are_traces(leaf: Leaf, vectors: Sequence[Leaf], layout: str) -> tuple[bool, str]:
+    """Return whether each row is a trace, and a doubt: told, by a fitting axis, else by which way is smooth."""
+    if layout in ("rows", "columns"):
+        return layout == "rows", ""
+    fits = {leaf.shape.index(v.length) for v in vectors if v.length in leaf.shape and leaf.shape[0] != leaf.shape[1]
+            and guess_role(v.name).role in DRIVE_ROLES}  # fmt: skip
+    if len(fits) == 1:
+        return fits == {1}, ""
+    along, across = _roughness(leaf)
+    rows = along <= across
+    if not max(along, across) > 1.5 * min(along, across):
+        return rows, (
+            f"'{leaf.name}': it is not clear whether traces are its rows or its columns; "
+            f"{'rows' if rows else 'columns'} taken (set intake.layout)"
+        )
+    return rows, ""
+
+
+def _roughness(leaf: Leaf) -> tuple[float, float]:
+    """Return the mean step between neighbours along the rows and along the columns of a corner of a 2D dataset."""
+    block = np.asarray(leaf.node.dataset[:256, :256], np.float64)
+    finite = np.abs(block[np.isfinite(block)])
+    unit = float(np.median(finite)) if finite.size else 0.0
+    shaped = np.arcsinh(block / unit) if unit > 0 else block
+    steps = [np.abs(np.diff(shaped, axis=axis)) for axis in (1, 0)]
+    along, across = (float(np.nanmean(step)) if np.isfinite(step).any() else 0.0 for step in steps)
+    return along, across
+
+
+def _cut_points(vectors: Sequence[Leaf]) -> tuple[Leaf, npt.NDArray[np.int64]] | None:
+    """Return the dataset of offsets or lengths, and the offsets it means for the longest channel; None without one."""
+    longest = max(leaf.length for leaf in vectors)
+    for kind, names in _CUTS.items():
+        for leaf in vectors:
+            if leaf.name.lower() not in names.split() or leaf.length > 50_000_000:
+                continue
+            values = np.asarray(leaf.samples.read(0, leaf.length))
+            if not np.all(np.isfinite(values)) or not np.all(values == np.round(values)):
+                continue
+            numbers = values.astype(np.int64)
+            offsets = np.concatenate([[0], np.cumsum(numbers)]) if kind == "lengths" else numbers
+            if kind == "offsets" and offsets[-1] < longest:
+                offsets = np.concatenate([offsets, [longest]])
+            if offsets[0] == 0 and offsets[-1] == longest and np.all(np.diff(offsets) >= 0):
+                return leaf, offsets.astype(np.int64)
+    return None
+
+
+def _ragged(vectors: Sequence[Leaf], cut: Leaf, offsets: npt.NDArray[np.int64]) -> Sheet:
+    pieces, doubts, channels, table = len(offsets) - 1, [], [], {}
+    for leaf in vectors:
+        if leaf is cut:
+            continue
+        if leaf.length == offsets[-1]:
+            channels.append(
+                (leaf.name, leaf.samples, leaf.dtype, leaf.attributes, False, leaf.parent.rpartition("/")[2])
+            )
+        elif leaf.length == pieces:
+            table[leaf.name] = np.asarray(leaf.samples.read(0, pieces))
+        elif leaf.name.lower() not in " ".join(_CUTS.values()).split():
+            doubts.append(f"'{leaf.name}' goes with neither traces nor samples and was left out")
+    names = [f"{channels[0][0]}"] * pieces if channels else [""] * pieces
+    layout = f"flat, cut by '{cut.name}'"
+    return Sheet(layout, channels, offsets, names, offsets[:-1].copy(), table, tuple(doubts))
+
+
+def _record(parent: str, vectors: Sequence[Leaf]) -> Sheet:
+    """Return channels of equal length side by side: a continuous recording, or one trace."""
+    sizes = [leaf.length for leaf in vectors]
+    length = max(set(sizes), key=lambda size: (sizes.count(size) * size, size))
+    context = parent.rpartition("/")[2]
+    channels = [(v.name, v.samples, v.dtype, v.attributes, False, context) for v in vectors if v.length == length]
+    doubts = tuple(
+        f"'{v.name}' has {v.length} samples, not {length}, and was left out" for v in vectors if v.length != length
+    )
+    names = [parent or "/"]
+    return Sheet(
+        "channels side by side", channels, np.array([0, length], np.int64), names, np.zeros(1, np.int64), {}, doubts
+    )
+
+
+def joined_sheets(sheets: Sequence[Sheet], layout: str) -> Sheet:
+    """Return the pieces of several groups with the same channels, one group after the other."""
+    from meseta.intake.readers.hdf5_tree import PartSamples
+
+    totals = np.concatenate([[0], np.cumsum([sheet.offsets[-1] for sheet in sheets])]).astype(np.int64)
+    offsets = np.concatenate([[0], *(sheet.offsets[1:] + base for sheet, base in zip(sheets, totals, strict=False))])
+    by_name = [{channel[0]: channel for channel in sheet.channels} for sheet in sheets]
+    channels = []
+    for name, _, dtype, attributes, shared, context in sheets[0].channels:
+        if shared:
+            channels.append(by_name[0][name])
+            continue
+        samples = PartSamples(tuple(group[name][1] for group in by_name), totals)
+        channels.append((name, samples, dtype, attributes, False, context))
+    names = [name for sheet in sheets for name in sheet.names]
+    starts = np.concatenate([sheet.starts for sheet in sheets])
+    doubts = tuple(dict.fromkeys(doubt for sheet in sheets for doubt in sheet.doubts))
+    return replace(
+        sheets[0], layout=layout, channels=channels, offsets=offsets.astype(np.int64), names=names, starts=starts,
+        table=_joined_tables(sheets), doubts=doubts,
+    )  # fmt: skip
+
+
+def _joined_tables(sheets: Sequence[Sheet]) -> dict[str, npt.NDArray[Any]]:
+    names = set(sheets[0].table).intersection(*(sheet.table for sheet in sheets))
+    return {name: np.concatenate([sheet.table[name] for sheet in sheets]) for name in sorted(names)}

@@ -1,0 +1,290 @@
+"""The datasets of an HDF5 file, walked without ever leaving the file.
+
+External links, virtual datasets and datasets with external storage are refused and named; nothing outside the named
+file is ever opened.  Link loops are met by remembering the address of every object.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any, Final
+
+import h5py
+import numpy as np
+import numpy.typing as npt
+
+from meseta.errors import InputError
+
+__all__ = ["ColumnSamples", "Node", "PartSamples", "RowSamples", "Tree", "VectorSamples", "open_file", "walk"]
+
+BOMB_RATIO: Final = 2000
+BOMB_BYTE: Final = 64 << 20
+CACHED_BYTE: Final = 256 << 20
+
+
+@dataclass(frozen=True)
+class Node:
+    """A numeric dataset: its path, shape and type, its attributes as plain values, and the dataset itself."""
+
+    path: str
+    dataset: Any
+    shape: tuple[int, ...]
+    dtype: np.dtype[Any]
+    attributes: Mapping[str, Any]
+
+    @property
+    def parent(self) -> str:
+        """Path of the group that it lies in."""
+        return self.path.rpartition("/")[0]
+
+    @property
+    def leaf(self) -> str:
+        """Its own name."""
+        return self.path.rpartition("/")[2]
+
+
+@dataclass
+class Tree:
+    """All that was found in a file: numeric datasets, attributes of groups, single values, and what was refused."""
+
+    nodes: list[Node] = field(default_factory=list)
+    attributes: dict[str, dict[str, Any]] = field(default_factory=dict)
+    values: dict[str, Any] = field(default_factory=dict)
+    texts: dict[str, npt.NDArray[Any]] = field(default_factory=dict)
+    refused: list[str] = field(default_factory=list)
+
+
+def open_file(path: Path) -> Any:
+    """Open an HDF5 file for reading.
+
+    Raises
+    ------
+    InputError
+        Where the file is damaged, truncated or not readable.
+    """
+    import hdf5plugin  # noqa: F401  registers the common compression filters
+
+    try:
+        return h5py.File(path, "r", locking=False)
+    except OSError as error:
+        text = str(error)
+        if "truncated" in text:
+            raise InputError("is truncated", str(path), "copy the file again from its origin") from error
+        raise InputError("is damaged or not an HDF5 file", str(path), "copy the file again from its origin") from error
+
+
+def walk(file: Any, path: Path) -> Tree:
+    """Return what lies in an open file."""
+    tree, seen = Tree(), set()
+    size = path.stat().st_size
+    stack: list[tuple[str, Any]] = [("", file)]
+    while stack:
+        name, group = stack.pop()
+        address = _address(group)
+        if address in seen:
+            continue
+        seen.add(address)
+        tree.attributes[name] = _attributes(group)
+        groups = []
+        for child_name, child in _children(group, name, tree):
+            if isinstance(child, h5py.Dataset):
+                if _address(child) not in seen:
+                    seen.add(_address(child))
+                    _add_dataset(tree, child_name, child, size)
+            elif isinstance(child, h5py.Group):
+                groups.append((child_name, child))
+        stack.extend(reversed(groups))
+    return tree
+
+
+def _address(item: Any) -> tuple[int, int]:
+    info = h5py.h5o.get_info(item.id)
+    return int(info.fileno), int(info.addr)
+
+
+def _children(group: Any, name: str, tree: Tree) -> Iterator[tuple[str, Any]]:
+    """Yield the members that hard links lead to; soft links lead to them a second time, external ones outside."""
+    for key in group:
+        link = group.get(key, getlink=True)
+        full = f"{name}/{key}"
+        if isinstance(link, h5py.ExternalLink):
+            tree.refused.append(f"{full} leads to another file and was not followed")
+        elif isinstance(link, h5py.HardLink):
+            try:
+                yield full, group[key]
+            except (KeyError, OSError, RuntimeError, ValueError, TypeError):
+                tree.refused.append(f"{full} is damaged and was not read")
+
+
+def _attributes(item: Any) -> dict[str, Any]:
+    if h5py.h5a.get_num_attrs(item.id) == 0:
+        return {}
+    found = {}
+    for name in item.attrs:
+        try:
+            found[str(name)] = item.attrs[name]
+        except (OSError, TypeError, ValueError, KeyError, RuntimeError):
+            continue  # an attribute of a type that has no plain value says nothing of the samples
+    return found
+
+
+def _add_dataset(tree: Tree, name: str, dataset: Any, file_byte: int) -> None:
+    try:
+        shape, dtype = dataset.shape, dataset.dtype
+        outside = dataset.is_virtual or dataset.external
+    except (OSError, TypeError, ValueError, RuntimeError):
+        tree.refused.append(f"{name} has a type that cannot be read")
+        return
+    if outside:
+        tree.refused.append(f"{name} keeps its samples in another file and was not read")
+        return
+    if shape is None or 0 in shape:
+        return
+    fault = _size_fault(dataset, shape, dtype, file_byte)
+    if fault:
+        tree.refused.append(f"{name} {fault}")
+        return
+    count = int(np.prod(shape))
+    if dtype.kind in "biuf" and count == 1:
+        tree.values[name] = dataset[()].reshape(-1)[0] if shape else dataset[()]
+    elif dtype.kind in "biuf" or dtype.names:
+        tree.nodes.append(Node(name, dataset, tuple(int(n) for n in shape), dtype, _attributes(dataset)))
+    elif h5py.check_string_dtype(dtype) is not None and count <= 1_000_000:
+        text = np.asarray(dataset.asstr(errors="replace")[()]).astype(np.str_)
+        if count == 1:
+            tree.values[name] = str(text.reshape(-1)[0])
+        else:
+            tree.texts[name] = text.reshape(-1)
+    else:
+        tree.refused.append(f"{name} holds objects, which are not read")
+
+
+def _size_fault(dataset: Any, shape: tuple[int, ...], dtype: np.dtype[Any], file_byte: int) -> str:
+    """Return what is wrong where a dataset claims more than the file can hold; empty where nothing is."""
+    claimed, stored = int(np.prod(shape, dtype=object)) * dtype.itemsize, int(dataset.id.get_storage_size())
+    if dtype.kind not in "biuf" and not dtype.names:
+        return ""
+    if stored == 0 and dataset.id.get_create_plist().get_layout() != h5py.h5d.COMPACT:
+        return "was declared but never written"
+    if stored > file_byte:
+        return "claims more samples than the file holds"
+    packed = dataset.chunks is not None
+    if not packed and claimed > file_byte:
+        return "claims more samples than the file holds"
+    if claimed > BOMB_BYTE and claimed > BOMB_RATIO * stored:
+        return f"unpacks to {claimed // max(stored, 1)} times its size and was not read"
+    return ""
+
+
+# -- samples ----------------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class VectorSamples:
+    """A dataset read flat: one dimension, or two of which one is 1; ``field`` picks a column of a compound type."""
+
+    dataset: Any
+    field: str = ""
+
+    def __len__(self) -> int:
+        return int(np.prod(self.dataset.shape))
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        source = self.dataset.fields(self.field) if self.field else self.dataset
+        shape = self.dataset.shape
+        if len(shape) == 1:
+            return _read(self.dataset, lambda: source[start:stop])
+        if shape[0] == 1:
+            return _read(self.dataset, lambda: source[0, start:stop])
+        return _read(self.dataset, lambda: source[start:stop, 0])
+
+
+@dataclass(frozen=True)
+class RowSamples:
+    """A 2D dataset whose rows stand end to end; ``at`` picks one place of a third, last axis."""
+
+    dataset: Any
+
+    def __len__(self) -> int:
+        return int(np.prod(self.dataset.shape))
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        n = self.dataset.shape[1]
+        first, last = start // n, -(-stop // n)
+        block = _read(self.dataset, lambda: self.dataset[first:last])
+        return block.reshape(-1)[start - first * n : stop - first * n]
+
+
+@dataclass
+class ColumnSamples:
+    """A 2D dataset whose columns stand end to end; a small one is turned once and kept."""
+
+    dataset: Any
+    _turned: npt.NDArray[Any] | None = None
+
+    def __len__(self) -> int:
+        return int(np.prod(self.dataset.shape))
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        n = self.dataset.shape[0]
+        if self._turned is None and len(self) * self.dataset.dtype.itemsize <= CACHED_BYTE and stop > start:
+            self._turned = np.ascontiguousarray(_read(self.dataset, lambda: self.dataset[()]).T).reshape(-1)
+        if self._turned is not None:
+            return self._turned[start:stop]
+        first, last = start // n, -(-stop // n)
+        block = _read(self.dataset, lambda: self.dataset[:, first:last])
+        return np.ascontiguousarray(block.T).reshape(-1)[start - first * n : stop - first * n]
+
+
+@dataclass(frozen=True)
+class OneColumnSamples:
+    """One column (or row) of a 2D dataset."""
+
+    dataset: Any
+    place: int
+    axis: int
+
+    def __len__(self) -> int:
+        return int(self.dataset.shape[1 - self.axis])
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        if self.axis == 1:
+            return _read(self.dataset, lambda: self.dataset[start:stop, self.place])
+        return _read(self.dataset, lambda: self.dataset[self.place, start:stop])
+
+
+@dataclass(frozen=True)
+class PartSamples:
+    """Several samples, end to end."""
+
+    parts: tuple[Any, ...]
+    offsets: npt.NDArray[np.int64]
+
+    def __len__(self) -> int:
+        return int(self.offsets[-1])
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        first = int(np.searchsorted(self.offsets, start, side="right")) - 1
+        found = []
+        for part in range(max(first, 0), len(self.parts)):
+            begin, end = int(self.offsets[part]), int(self.offsets[part + 1])
+            if begin >= stop:
+                break
+            found.append(self.parts[part].read(max(start - begin, 0), min(stop, end) - begin))
+        return np.concatenate(found) if found else self.parts[0].read(0, 0)
+
+
+def _read(dataset: Any, action: Any) -> npt.NDArray[Any]:
+    try:
+        values: npt.NDArray[Any] = action()
+        return values
+    except (OSError, RuntimeError, ValueError) as error:
+        name = f"{dataset.file.filename}, {dataset.name}" if dataset else "HDF5 file"
+        raise InputError("cannot be read: the file is damaged or truncated", name, "copy the file again") from error

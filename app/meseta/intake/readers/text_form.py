@@ -1,0 +1,203 @@
+"""The form of a text file: encoding, delimiter, decimal sign, headings, units row, and where the numbers begin."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Final
+
+from meseta.intake.roles import guess_role
+from meseta.intake.units import is_unit
+
+__all__ = ["TextForm", "decode_head", "find_form"]
+
+_COMMENT: Final = re.compile(r"^\s*(#|%|//|!|\"#|;(?=\s*[A-Za-z]))+\s?")
+_NUMBER: Final = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([eEdD][-+]?\d+)?$|[-+]?(nan|inf|infinity)$|n/?a$|$", re.IGNORECASE)
+_ENTRY: Final = re.compile(r"^([^:=\t]{1,60}?)\s*(?::|=|\t)\s*(\S.*)$")
+HEAD_LINES: Final = 400
+
+
+@dataclass(frozen=True)
+class TextForm:
+    """How a text file is written.
+
+    Attributes
+    ----------
+    delimiter : str
+        One character; " " stands for any run of blanks.
+    decimal : str
+        "." or ",".
+    skip_lines : int
+        Lines before the numbers.
+    names : tuple of str
+        Headings of the columns; empty where there are none.
+    units : tuple of str
+        Units row; empty strings where a column has none.
+    columns : int
+    entries : tuple of (str, str)
+        "key: value" lines before the numbers.
+    heading : str
+        The heading line itself, which may come again before each trace.
+    comment : str
+        The comment sign, where there are comments.
+    doubts : tuple of str
+    """
+
+    delimiter: str
+    decimal: str
+    skip_lines: int
+    names: tuple[str, ...]
+    units: tuple[str, ...]
+    columns: int
+    entries: tuple[tuple[str, str], ...] = ()
+    heading: str = ""
+    comment: str = ""
+    doubts: tuple[str, ...] = ()
+
+
+def decode_head(data: bytes) -> str:
+    """Return the name of the encoding of a text: by its mark, by the zeros of UTF-16, by being valid UTF-8."""
+    if data.startswith(b"\xef\xbb\xbf"):
+        return "utf-8-sig"
+    if data.startswith((b"\xff\xfe", b"\xfe\xff")):
+        return "utf-16"
+    sample = data[:2000]
+    if len(sample) > 3 and sample.count(0) > len(sample) // 3:
+        return "utf-16-le" if sample[1::2].count(0) > sample[0::2].count(0) else "utf-16-be"
+    try:
+        data[: len(data) - len(data) % 4096 or len(data)].decode("utf-8")
+    except UnicodeDecodeError as error:
+        if error.start < len(data) - 4:
+            return "latin-1"
+    return "utf-8"
+
+
+def _cells(line: str, delimiter: str) -> list[str]:
+    if delimiter == " ":
+        return [cell.strip("\"'") for cell in line.split()]
+    cells = [cell.strip().strip("\"'").strip() for cell in line.split(delimiter)]
+    return cells[:-1] if len(cells) > 1 and not cells[-1] else cells
+
+
+def _is_numeric(line: str, delimiter: str, decimal: str) -> int:
+    """Return the number of cells of a line of numbers; 0 where it is none."""
+    cells = _cells(line, delimiter)
+    if not any(cells):
+        return 0
+    if decimal == ",":
+        if any("." in cell for cell in cells):
+            return 0
+        cells = [cell.replace(",", ".") for cell in cells]
+    return len(cells) if all(_NUMBER.match(cell) for cell in cells) else 0
+
+
+def find_form(text: str) -> TextForm | None:
+    """Return the form of a text from its beginning; None where it holds no rows of numbers."""
+    lines = text.splitlines()[:HEAD_LINES]
+    best: tuple[tuple[int, ...], str, str, int, int] | None = None
+    for delimiter, decimal in (("\t", "."), (";", "."), (",", "."), (" ", "."), ("\t", ","), (";", ","), (" ", ",")):
+        start, count, cells = _numeric_run(lines, delimiter, decimal)
+        if not count:
+            continue
+        score = (min(count, 20), cells, decimal == ".", delimiter in "\t;,")
+        if best is None or score > best[0]:
+            best = (score, delimiter, decimal, start, cells)
+    if best is None:
+        return None
+    _, delimiter, decimal, start, cells = best
+    doubts: list[str] = []
+    if delimiter == "," and cells == 2 and _looks_like_decimal_comma(lines[start : start + 200]):
+        delimiter, decimal, cells = ";", ",", 1
+        doubts.append("one column with decimal commas, not two columns of whole numbers")
+    return _with_headings(lines, delimiter, decimal, start, cells, doubts)
+
+
+def _numeric_run(lines: Sequence[str], delimiter: str, decimal: str) -> tuple[int, int, int]:
+    """Return (first line, lines, cells a line) of the first long run of lines with equally many numbers."""
+    best = (0, 0, 0)
+    start, count, cells = 0, 0, 0
+    for number, line in enumerate(lines):
+        found = 0 if not line.strip() or _COMMENT.match(line) else _is_numeric(line, delimiter, decimal)
+        if found and found == cells:
+            count += 1
+        elif not line.strip() and count:
+            continue
+        else:
+            start, count, cells = number, int(found > 0), found
+        if count > best[1] and (best[2] != cells or best[1] == 0 or start == best[0]):
+            best = (start, count, cells)
+    return best
+
+
+def _looks_like_decimal_comma(lines: Sequence[str]) -> bool:
+    parts = [line.strip().split(",") for line in lines if line.count(",") == 1]
+    if not parts or not all(part.lstrip("-+").isdigit() for pair in parts for part in pair):
+        return False
+    return any(pair[1].startswith("0") and len(pair[1]) > 1 for pair in parts)
+
+
+def _with_headings(
+    lines: Sequence[str], delimiter: str, decimal: str, start: int, cells: int, doubts: list[str]
+) -> TextForm:
+    before = [line for line in lines[:start] if line.strip()]
+    names: list[str] = []
+    units: list[str] = []
+    heading, comment = "", ""
+    for line in reversed(before):
+        match = _COMMENT.match(line)
+        row = _cells(line[match.end() :] if match else line, delimiter)
+        if match:
+            comment = comment or match[1].strip('"')
+        if len(row) != cells or names:
+            if not match and not names and len(row) != cells:
+                continue
+            break
+        if not units and _is_units_row(row) and len(before) > 1 and not names:
+            units = [cell.strip("[]()") if cell not in ("-", "") else "" for cell in row]
+            continue
+        if match and not _is_heading(row, line[match.end() :]):
+            continue
+        names, heading = row, line
+        break
+    first_numbers = _cells(lines[start], delimiter)
+    if not names and len(first_numbers) > 2 and first_numbers == [str(n) for n in range(len(first_numbers))]:
+        names, heading, start = [f"trace_{n}" for n in range(len(first_numbers))], lines[start], start + 1
+    if not names and units:
+        names, units = units, []
+    entries = _entries(before, heading, delimiter)
+    shape = (tuple(names), tuple(units) or ("",) * cells, cells)
+    return TextForm(delimiter, decimal, start, *shape, entries, heading, comment, tuple(doubts))
+
+
+def _is_units_row(row: Sequence[str]) -> bool:
+    filled = [cell for cell in row if cell not in ("", "-")]
+    return bool(filled) and all(is_unit(cell) for cell in filled)
+
+
+def _is_heading(row: Sequence[str], text: str) -> bool:
+    """Return whether a comment line is the heading of the columns and not a remark."""
+    if _ENTRY.match(text.strip()) and len(row) == 1 and guess_role(row[0].split(":")[0]).role == "other":
+        return False
+    try:
+        return any(guess_role(cell).role != "other" for cell in row) or len(row) > 1
+    except Exception:  # noqa: BLE001  a remark may hold anything, also a word that looks like a bad unit
+        return False
+
+
+def _entries(before: Sequence[str], heading: str, delimiter: str) -> tuple[tuple[str, str], ...]:
+    """Return the "key: value" lines before the numbers, with or without a comment sign."""
+    found = []
+    for line in before:
+        if line == heading:
+            continue
+        match = _COMMENT.match(line)
+        text = (line[match.end() :] if match else line).strip().strip('"')
+        entry = _ENTRY.match(text)
+        if entry:
+            found.append((entry[1].strip(), entry[2].strip().strip(delimiter).strip().strip('"')))
+        elif delimiter in ",;" and text.count(delimiter) in (1, 2):
+            cells = _cells(text, delimiter)
+            if len(cells) >= 2 and cells[0] and cells[1]:
+                found.append((cells[0], " ".join(cells[1:3]).strip()))
+    return tuple(found)

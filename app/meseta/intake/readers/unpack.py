@@ -1,0 +1,89 @@
+"""The bytes of a file, unpacked where it is gzip, xz, bzip2 or a zip with one member, within limits."""
+
+from __future__ import annotations
+
+import bz2
+import gzip
+import io
+import lzma
+import zipfile
+import zlib
+from pathlib import Path
+from typing import IO, Final
+
+from meseta.errors import InputError
+
+__all__ = ["PACKED", "peek_bytes", "read_bytes"]
+
+BOMB_RATIO: Final = 500
+BOMB_BYTE: Final = 64 << 20
+LARGEST_BYTE: Final = 8 << 30
+PACKED: Final = {b"\x1f\x8b": "gzip", b"\xfd7zXZ\x00": "xz", b"BZh": "bzip2", b"PK\x03\x04": "zip"}
+
+
+def packing(head: bytes) -> str:
+    """Return the name of the packing by its signature; empty where the file is not packed."""
+    return next((name for mark, name in PACKED.items() if head.startswith(mark)), "")
+
+
+def _opened(path: Path, kind: str) -> IO[bytes]:
+    if kind == "gzip":
+        return gzip.open(path, "rb")
+    if kind == "xz":
+        return lzma.open(path, "rb")
+    if kind == "bzip2":
+        return bz2.open(path, "rb")
+    archive = zipfile.ZipFile(path)
+    members = [info for info in archive.infolist() if not info.is_dir() and not info.filename.startswith("__MACOSX")]
+    if len(members) != 1:
+        raise InputError(f"holds {len(members)} files", str(path), "unpack it and give the folder")
+    if members[0].flag_bits & 1:
+        raise InputError("is locked with a password", str(path), "unpack it first")
+    return archive.open(members[0])
+
+
+def peek_bytes(path: Path, count: int) -> bytes:
+    """Return the first bytes of a file, unpacked.
+
+    Raises
+    ------
+    InputError
+        Where the file cannot be read or unpacked.
+    """
+    with path.open("rb") as file:
+        head = file.read(count)
+    kind = packing(head)
+    if not kind:
+        return head
+    try:
+        with _opened(path, kind) as stream:
+            return stream.read(count)
+    except (OSError, EOFError, lzma.LZMAError, zlib.error, zipfile.BadZipFile, NotImplementedError) as error:
+        raise InputError(f"is damaged {kind} ({error})", str(path), "pack the file again") from error
+
+
+def read_bytes(path: Path) -> bytes:
+    """Return all bytes of a file, unpacked; a file that unpacks beyond reason is refused.
+
+    Raises
+    ------
+    InputError
+        Where the file cannot be read or unpacked, or is a compression bomb.
+    """
+    data = path.read_bytes()
+    kind = packing(data[:8])
+    if not kind:
+        return data
+    limit = min(LARGEST_BYTE, max(BOMB_BYTE, BOMB_RATIO * len(data)))
+    unpacked = io.BytesIO()
+    try:
+        with _opened(path, kind) as stream:
+            while block := stream.read(1 << 22):
+                unpacked.write(block)
+                if unpacked.tell() > limit:
+                    raise InputError(
+                        f"unpacks to more than {limit >> 20} MB", str(path), "unpack it yourself if it is meant to"
+                    )
+    except (OSError, EOFError, lzma.LZMAError, zlib.error, zipfile.BadZipFile, NotImplementedError) as error:
+        raise InputError(f"is damaged {kind} ({error})", str(path), "pack the file again") from error
+    return unpacked.getvalue()

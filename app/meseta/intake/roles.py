@@ -1,0 +1,254 @@
+"""What a channel is: its role and unit, from its name, its attributes, a unit row, or the recipe."""
+
+from __future__ import annotations
+
+import fnmatch
+import re
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Final
+
+from meseta.errors import InputError
+from meseta.intake.recording import RawChannel
+from meseta.intake.units import is_unit, parse_unit
+from meseta.recipe.intake import ROLES, ChannelRole
+
+__all__ = ["DRIVE_ROLES", "Guess", "guess_role", "settle_roles", "split_unit", "stem_of"]
+
+SIGNAL_ROLES: Final = ("conductance", "log_conductance", "current", "amplifier", "amplifier_high_gain", "resistance")
+DRIVE_ROLES: Final = ("displacement", "piezo", "time")
+_DIMENSION: Final = {
+    "conductance": "S", "log_conductance": "dec", "current": "A", "voltage": "V", "amplifier": "V",
+    "amplifier_high_gain": "V", "resistance": "ohm", "displacement": "m", "piezo": "V", "time": "s", "bias": "V",
+}  # fmt: skip
+_NUMBERS: Final = ("trace_number", "phase", "range_code")
+_ROLE_OF_DIMENSION: Final = {
+    "S": "conductance", "dec": "log_conductance", "A": "current", "V": "voltage", "ohm": "resistance",
+    "m": "displacement", "s": "time",
+}  # fmt: skip
+_NAMES: Final = {
+    "conductance": "conductance cond g gg0 g_g0 conductances junction_conductance",
+    "log_conductance": "logg log_g log10g log10_g lg_g lgg log_conductance log10_conductance logconductance log_cond "
+    "log10_g_g0 log_g_g0 log10gg0",
+    "current": "current i curr currents junction_current tunnel_current tunneling_current tunnelling_current isd ids",
+    "amplifier": "amplifier amp amplifier_volts amp_volts amplifier_output amp_out amplifier_voltage amp_voltage "
+    "preamp preamplifier preamp_out output iv_out iv_converter log_amp logamp log_amplifier amplifier_1 amp1 low_gain "
+    "amplifier_low_gain amp_low",
+    "amplifier_high_gain": "amplifier_high_gain amp_high amp_high_gain high_gain amplifier_2 amp2 amplifier_high",
+    "resistance": "resistance r resistances",
+    "displacement": "displacement distance z extension stretch elongation position gap dz displacements distances "
+    "electrode_separation separation x_displacement",
+    "piezo": "piezo piezo_volts piezo_voltage piezo_v pzt z_piezo piezo_z drive ramp piezo_drive piezo_monitor vpiezo "
+    "v_piezo u_piezo",
+    "time": "time t times timestamp_s elapsed",
+    "bias": "bias vbias v_bias bias_voltage ubias u_bias bias_v applied_bias",
+    "voltage": "voltage v u volt volts",
+    "range_code": "range range_code gain_code gain_range range_index",
+    "trace_number": "trace trace_number trace_no trace_id tracenumber traceid trace_index curve curve_number curve_id "
+    "cycle cycle_number trace_nr",
+    "phase": "phase segment_kind motion",
+}  # fmt: skip
+_ROLE_OF_NAME: Final = {name: role for role, names in _NAMES.items() for name in names.split()}
+_LOWER_UNITS: Final = {
+    "v": "V", "mv": "mV", "a": "A", "na": "nA", "ua": "uA", "pa": "pA", "ma": "mA", "g0": "G0", "ohm": "ohm",
+    "hz": "Hz", "khz": "kHz", "k": "K", "ns": "nS", "us": "uS",
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Guess:
+    """A proposal for one channel: role and unit, on what ground, how sure, and what is doubtful."""
+
+    role: str
+    unit: str
+    ground: str
+    confidence: float
+    doubts: tuple[str, ...] = ()
+
+
+def _tokens(name: str) -> list[str]:
+    spaced = re.sub(r"([a-z0-9])([A-Z][a-z])", r"\1_\2", name.rsplit("/", 1)[-1])
+    return [token for token in re.split(r"[^0-9A-Za-zµμΩΩÅ%²₀]+", spaced) if token]
+
+
+def stem_of(name: str) -> str:
+    """Return a name without its trailing number: "trace_12" and "G (12)" are numbers 12 of "trace" and "g"."""
+    tokens = _tokens(split_unit(name)[0] or name)
+    while len(tokens) > 1 and tokens[-1].isdigit():
+        tokens.pop()
+    joined = "_".join(tokens).lower()
+    return re.sub(r"(?<=[a-z_])\d+$", "", joined).rstrip("_") or joined
+
+
+def split_unit(name: str, role_unit: str = "") -> tuple[str, str]:
+    """Split a heading into name and unit: "Current (nA)", "current_nA", "I / nA", "z [Å]", "current, nA".
+
+    Parameters
+    ----------
+    name : str
+    role_unit : str
+        Dimension that the unit should have, which settles the case of "s" and "S".
+
+    Returns
+    -------
+    (str, str)
+        Name and unit; the unit is empty where none stands there.
+    """
+    text = name.strip()
+    if _whole_unit(text):
+        return "", text
+    match = re.fullmatch(r"(.*?)\s*[\[({<]\s*(.+?)\s*[\])}>]\s*", text) or re.fullmatch(r"(.+?)\s*[/,;:]\s*(\S+)", text)
+    if match and is_unit(match[2]):
+        return match[1].strip(), match[2]
+    parts = [part for part in re.split(r"[_\s]+", text) if part]
+    for count in (3, 2, 1):
+        if len(parts) > count:
+            unit = _unit_of_words(parts[-count:], role_unit)
+            if unit:
+                return "_".join(parts[:-count]), unit
+    return text, ""
+
+
+def _whole_unit(text: str) -> bool:
+    """Return whether a whole heading is a unit that says what it heads ("nA", "G/G0", "log10(G/G0)")."""
+    plain = text.strip()
+    return is_unit(plain) and (len(plain) > 1 or plain in "Ω%") and not plain.isdigit()
+
+
+def _unit_of_words(words: Sequence[str], dimension: str) -> str:
+    joined = "/".join(words) if len(words) == 2 and "per" not in words else "_".join(words)
+    if len(words) == 3 and words[1] != "per":
+        return ""
+    joined = joined.replace("_per_", "/")
+    if joined.isdigit():
+        return ""
+    candidates = [joined, _LOWER_UNITS.get(joined.lower(), ""), joined.upper() if len(joined) == 1 else ""]
+    found = [text for text in candidates if text and is_unit(text)]
+    fitting = [text for text in found if dimension and parse_unit(text).dimension == dimension]
+    return (fitting or found or [""])[0]
+
+
+def _named_role(name: str) -> str:
+    joined = "_".join(_tokens(name)).lower()
+    for candidate in (joined, stem_of(name)):
+        if candidate in _ROLE_OF_NAME:
+            return _ROLE_OF_NAME[candidate]
+    words = joined.split("_")
+    for size in (3, 2, 1):
+        for at in range(len(words) - size + 1):
+            part = "_".join(words[at : at + size])
+            if len(part) > 2 and part in _ROLE_OF_NAME:
+                return _ROLE_OF_NAME[part]
+    return ""
+
+
+def guess_role(name: str, unit: str = "", role: str = "", unit_ground: str = "attribute") -> Guess:
+    """Propose role and unit of a channel.
+
+    Parameters
+    ----------
+    name : str
+        Name or heading, possibly with a unit in it.
+    unit : str
+        Unit stated beside it (an attribute, a unit row); empty where none is.
+    role : str
+        Role stated beside it; empty where none is.
+    unit_ground : str
+        Where the unit is stated.
+    """
+    whole = _named_role(name) if not _whole_unit(name.strip()) else ""
+    stem, in_name = split_unit(name, _DIMENSION.get(whole, ""))
+    found = role if role in ROLES else (_named_role(stem) if stem else "") or whole
+    if found in _DIMENSION and in_name:
+        in_name = split_unit(name, _DIMENSION[found])[1]
+    stated, ground = (unit, unit_ground) if unit.strip() else (in_name, "name")
+    if stated and not is_unit(stated):
+        if not found:
+            return Guess("other", stated, ground, 0.5)
+        raise InputError(
+            f"'{stated}' is not a known unit", f"channel '{name}'", "give role and unit under intake.channels"
+        )
+    if not stated:
+        return Guess(found or "other", "", "name" if found else "", 0.6 if found else 0.0)
+    dimension = parse_unit(stated).dimension
+    by_unit = _ROLE_OF_DIMENSION.get(dimension, "other")
+    if not found:
+        return Guess("other" if dimension == "V" and stem else by_unit, stated, ground, 0.7)
+    if found in _NUMBERS and by_unit != "other":
+        return Guess(by_unit, stated, ground, 0.8)
+    return _fitted(found, stated, dimension, by_unit, "attribute" if role else ground)
+
+
+def _fitted(role: str, unit: str, dimension: str, by_unit: str, ground: str) -> Guess:
+    """Return the guess where name and unit both say something; the unit wins, as it changes numbers."""
+    wanted = _DIMENSION.get(role)
+    if wanted is None or dimension == wanted or (role == "conductance" and dimension == "1"):
+        return Guess(role, unit, ground, 0.95)
+    if role == "piezo" and dimension == "m":
+        return Guess("displacement", unit, ground, 0.9)
+    if role == "current" and dimension == "V":
+        return Guess("amplifier", unit, ground, 0.8, (f"called a current but in {unit}: taken as amplifier volts",))
+    if role == "displacement" and dimension == "V":
+        return Guess("piezo", unit, ground, 0.8, (f"called a displacement but in {unit}: taken as piezo volts",))
+    return Guess(by_unit, unit, ground, 0.6, (f"named like {role}, but its unit {unit} says {by_unit}",))
+
+
+def settle_roles(channels: Sequence[RawChannel], named: Mapping[str, ChannelRole]) -> tuple[RawChannel, ...]:
+    """Return the channels with what the recipe says of them, and with the ambiguous ones settled by the company.
+
+    Parameters
+    ----------
+    channels : sequence of RawChannel
+    named : mapping
+        ``intake.channels`` of the recipe: name, last part of a path, heading without its number, or a pattern with
+        ``*`` -> role and unit.
+    """
+    return _settled_voltage([_as_told(channel, named) for channel in channels])
+
+
+def _as_told(channel: RawChannel, named: Mapping[str, ChannelRole]) -> RawChannel:
+    told = _find_told(channel.name, named)
+    if told is None:
+        return channel
+    unit = told.unit or channel.unit
+    if unit and told.role in _DIMENSION:
+        parse_unit(unit, f"intake.channels, '{channel.name}'")
+    scale, offset = channel.scale, channel.offset
+    if told.scale != 1.0 or told.offset != 0.0:
+        scale, offset = told.scale, told.offset
+    return replace(
+        channel, role=told.role, unit=unit, scale=scale, offset=offset, ground="recipe", confidence=1.0, doubts=()
+    )
+
+
+def _find_told(name: str, named: Mapping[str, ChannelRole]) -> ChannelRole | None:
+    if not named:
+        return None
+    last = name.rsplit("/", 1)[-1]
+    lowered = {key.lower(): value for key, value in named.items()}
+    for candidate in (name, name.strip("/"), last, split_unit(last)[0], stem_of(name)):
+        if candidate.lower() in lowered:
+            return lowered[candidate.lower()]
+    for pattern, value in named.items():
+        if any(sign in pattern for sign in "*?") and (fnmatch.fnmatch(name, pattern) or fnmatch.fnmatch(last, pattern)):
+            return value
+    return None
+
+
+def _settled_voltage(channels: list[RawChannel]) -> tuple[RawChannel, ...]:
+    """Settle what plain volts are: the bias beside a current, amplifier volts where nothing else was measured."""
+    roles = {channel.role for channel in channels}
+    settled = []
+    for channel in channels:
+        if channel.role == "voltage" and channel.ground != "recipe":
+            if "current" in roles and "bias" not in roles:
+                channel = replace(
+                    channel, role="bias", doubts=(*channel.doubts, "volts beside a current: taken as the bias")
+                )
+            elif not roles & set(SIGNAL_ROLES):
+                channel = replace(
+                    channel, role="amplifier", doubts=(*channel.doubts, "the only volts: taken as amplifier volts")
+                )
+            roles.add(channel.role)
+        settled.append(channel)
+    return tuple(settled)
