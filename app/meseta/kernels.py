@@ -19,7 +19,10 @@ __all__ = ["KERNEL_MODULES", "compile_all", "kernel", "warm_up"]
 KERNEL_MODULES = (
     "meseta.simulate.kernels",
     "meseta.intake.kernels",
+    "meseta.segmentation.noise_kernels",
     "meseta.segmentation.kernels",
+    "meseta.segmentation.finder_kernels",
+    "meseta.segmentation.measure_kernels",
     "meseta.histograms.kernels",
     "meseta.peaks.kernels",
 )

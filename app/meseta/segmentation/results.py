@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Any, Final
 
 import numpy as np
@@ -44,6 +44,8 @@ class NoiseModel:
         Median slope of the tunnelling decay in decades per drive unit (negative); NaN where none was seen.
     stated : tuple of str
         Names of the quantities that the recipe stated instead of the recording.
+    white_g0 : (k,) float64
+        Part of ``sigma_g0`` that is independent from sample to sample, at ``level_g0``.
     """
 
     floor_g0: float
@@ -57,6 +59,7 @@ class NoiseModel:
     saturation_g0: float
     tunnelling_slope: float
     stated: tuple[str, ...] = ()
+    white_g0: Floats = field(default_factory=lambda: np.empty(0))
 
     def sigma(self, conductance_g0: npt.ArrayLike) -> Floats:
         """Return the standard deviation of a single sample at the given conductance, in G0."""

@@ -1,0 +1,213 @@
+"""The plateau finder: exact change points in a variance-stabilised variable, joined to straight stretches, classified."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.intake.alignment import Alignment
+from meseta.recipe.plateaus import PlateauSettings
+from meseta.segmentation import finder_kernels as kernels
+from meseta.segmentation.noise import phase_bounds, runs_backward, trusted_samples
+from meseta.segmentation.results import NoiseModel, PlateauTable
+from meseta.traces import TraceSet
+
+__all__ = ["Stabiliser", "find_plateaus"]
+
+Floats = npt.NDArray[np.float64]
+Integers = npt.NDArray[np.int64]
+
+CHANGE_COST: Final = 3.0
+"""Cost of a change over ln n and the long-run variance: the modified information criterion of Zhang and Siegmund,
+Biometrics 63, 22 (2007), without its length term."""
+LINE_COST: Final = 4.0
+"""The same for a straight line, which has one more parameter."""
+METAL_FROM_G0: Final = 0.1
+CENSORED: Final = np.array(["", "ramp", "floor", "saturation"])
+
+
+@dataclass(frozen=True)
+class Stabiliser:
+    """The variance-stabilised variable y(g) of a noise model: dy/dg = 1 / long-run sigma(g), odd in g.
+
+    Where the noise is a constant plus a share of g this is the asinh of g over the floor's sigma (up to factors); in
+    general it is integrated from the noise model.  g = conductance - floor, so negative readings stay.
+
+    Attributes
+    ----------
+    table : (k,) float64
+        y on even steps of asinh(g / sigma).
+    shares : (k,) float64
+        Variance of a single sample over the long-run variance.
+    pitch : float
+        Step of asinh(g / sigma).
+    """
+
+    table: Floats
+    shares: Floats
+    pitch: float
+
+    @classmethod
+    def of(cls, noise: NoiseModel, points: int = 1024) -> Stabiliser:
+        """Return the variable for a noise model."""
+        top = np.arcsinh(1e3 * max(float(noise.level_g0[-1]), noise.floor_sigma_g0) / noise.floor_sigma_g0)
+        at, pitch = np.linspace(0.0, top, points, retstep=True)
+        g = np.sinh(at) * noise.floor_sigma_g0
+        slope = np.sqrt(g**2 + noise.floor_sigma_g0**2) / noise.long_run(g)
+        table = np.concatenate([[0.0], np.cumsum(0.5 * (slope[1:] + slope[:-1]) * pitch)])
+        return cls(table, (noise.sigma(g) / noise.long_run(g)) ** 2, float(pitch))
+
+
+def find_plateaus(
+    traces: TraceSet, settings: PlateauSettings, noise: NoiseModel, alignment: Alignment, phases: Sequence[str]
+) -> PlateauTable:
+    """Find the plateaus of a block of traces.
+
+    Parameters
+    ----------
+    traces : TraceSet
+        In memory; trace numbers in the result count from 0 in this block.
+    settings : PlateauSettings
+    noise : NoiseModel
+        Of the whole recording.
+    alignment : Alignment
+        Of these traces; gives the zero of the displacement columns.
+    phases : sequence of str
+        Phases to search.
+    """
+    starts, stops = phase_bounds(traces, phases)
+    backward = runs_backward(phases)
+    steps = _steps(traces, starts, stops)
+    rows = _search(traces, settings, noise, starts, stops, backward, steps)
+    return _table(traces, rows, starts, stops, backward, steps, alignment)
+
+
+def _steps(traces: TraceSet, starts: Integers, stops: Integers) -> Floats:
+    """Return the mean drive a sample of each trace's range."""
+    drive = traces.drive_values(0, traces.traces)
+    some = stops - starts > 1
+    steps = np.zeros(len(starts))
+    steps[some] = (drive[stops[some] - 1] - drive[starts[some]]) / (stops - starts - 1)[some]
+    return steps
+
+
+def _search(
+    traces: TraceSet,
+    settings: PlateauSettings,
+    noise: NoiseModel,
+    starts: Integers,
+    stops: Integers,
+    backward: bool,
+    steps: Floats,
+) -> Floats:
+    """Return the rows of :func:`meseta.segmentation.finder_kernels.find`."""
+    stabiliser = Stabiliser.of(noise)
+    in_nm = traces.drive.is_displacement
+    shortest = (settings.minimum_length_nm,) * 2 if settings.minimum_length_nm is not None else (0.05, 0.1)
+    shortest = shortest if in_nm else (0.0, 0.0)
+    factor = 2.0 ** (5.0 - settings.sensitivity)
+    low = settings.low_g0 if settings.low_g0 is not None else noise.floor_g0 + 6.0 * noise.floor_sigma_g0
+    rows: Floats = kernels.find(
+        np.ascontiguousarray(traces.conductance),
+        trusted_samples(traces),
+        starts,
+        stops,
+        backward,
+        steps,
+        noise.floor_g0,
+        noise.floor_sigma_g0,
+        float(noise.long_run_g0[0]),
+        stabiliser.table,
+        stabiliser.shares,
+        stabiliser.pitch,
+        CHANGE_COST * factor,
+        LINE_COST * factor,
+        low,
+        np.inf if settings.high_g0 is None else settings.high_g0,
+        noise.saturation_g0,
+        settings.slope_fraction * _tunnelling(noise, in_nm, steps),
+        settings.join_decades,
+        max(settings.minimum_samples, int(np.ceil(settings.minimum_rise_times * noise.rise_samples))),
+        *shortest,
+        METAL_FROM_G0,
+        int(np.ceil(noise.rise_samples)),
+        max(64, 8 * traces.traces),
+    )
+    return rows
+
+
+def _tunnelling(noise: NoiseModel, in_nm: bool, steps: Floats) -> float:
+    """Return the size of the tunnelling slope in decades per drive unit.
+
+    Where none was seen: 10 decades per nm (common practice, no source), or a decade in 30 samples where the drive is
+    not calibrated.
+    """
+    if np.isfinite(noise.tunnelling_slope):
+        return abs(noise.tunnelling_slope)
+    size = np.abs(steps[steps != 0])
+    return 10.0 if in_nm or not len(size) else float(1.0 / (30.0 * np.median(size)))
+
+
+def _table(
+    traces: TraceSet,
+    rows: Floats,
+    starts: Integers,
+    stops: Integers,
+    backward: bool,
+    steps: Floats,
+    alignment: Alignment,
+) -> PlateauTable:
+    """Return the plateau table of the kernel's rows."""
+    trace, first, last = (rows[:, k].astype(np.int64) for k in range(3))
+    length = (stops - starts)[trace]
+    if backward:
+        first, last = length - last, length - first
+    within = (starts - traces.offsets[:-1])[trace]
+    start, stop = first + within, last + within
+    order = np.lexsort((start, trace))
+    rows, trace, start, stop = rows[order], trace[order], start[order], stop[order]
+    drive = traces.drive_values(0, traces.traces)
+    base = traces.offsets[:-1][trace]
+    begin, end = drive[base + start], drive[base + stop - 1] + steps[trace]
+    aligned = np.isfinite(alignment.zero_drive[trace])
+    zero = np.where(aligned, alignment.zero_drive[trace], traces.drive.start[trace])
+    in_nm = traces.drive.is_displacement
+    nothing = np.full(len(trace), np.nan)
+    size = np.abs(steps[trace])
+    with np.errstate(divide="ignore", invalid="ignore"):
+        slope = rows[:, 4] / size
+    return PlateauTable(
+        trace=trace,
+        start=start,
+        stop=stop,
+        displacement_start_nm=begin - zero if in_nm else nothing,
+        displacement_stop_nm=end - zero if in_nm else nothing,
+        length_nm=np.abs(end - begin) if in_nm else nothing,
+        level_g0=rows[:, 3],
+        slope_decades_per_nm=slope if in_nm else nothing,
+        noise_decades=rows[:, 5],
+        kind=np.where(rows[:, 3] >= METAL_FROM_G0, "metal", "molecule"),
+        censored=CENSORED[rows[:, 9].astype(int)],
+        length_drive=np.abs(end - begin),
+        drive_unit=np.full(len(trace), traces.drive.unit),
+        aligned=aligned,
+        level_sigma_g0=nothing,
+        effective_samples=rows[:, 6],
+        jump_before_decades=rows[:, 7],
+        jump_after_decades=rows[:, 8],
+        number=_numbers(trace),
+        score=rows[:, 11],
+        telegraph=rows[:, 10] > 0,
+    )
+
+
+def _numbers(trace: Integers) -> Integers:
+    """Return the number of each plateau in its trace, counted from the last one."""
+    if not len(trace):
+        return np.empty(0, np.int64)
+    last = np.searchsorted(trace, trace, side="right")
+    return (last - np.arange(len(trace))).astype(np.int64)

@@ -1,0 +1,279 @@
+"""The noise model of a recording, learnt from all of its traces.
+
+Every trace contributes robust spreads at many conductances; lower quartiles over all traces leave out windows that hold
+a jump.  White noise shows in second differences, filtered and 1/f noise in second differences of block means, mains
+pickup and drift in the spread of the floor itself.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.recipe.noise import NoiseSettings
+from meseta.segmentation import noise_kernels as kernels
+from meseta.segmentation.results import NoiseModel
+from meseta.traces import PHASE_KINDS, Quality, TraceSet
+
+__all__ = ["NoiseStatistics", "noise_block", "noise_model", "phase_bounds", "runs_backward", "trusted_samples"]
+
+Floats = npt.NDArray[np.float64]
+Integers = npt.NDArray[np.int64]
+
+QUARTILE_OF: Final = (0.7902, 0.8515, 0.3186, 0.3186)
+"""Lower quartile of each spread for white noise of unit variance: means over 14 second differences and over 16
+samples about a line (computed by simulation, 400,000 windows), and the normal quartile for single differences."""
+CLEAR_OF_CONTACT_G0: Final = 1e-2
+"""Tunnelling is measured below this conductance; nearer to contact the decay is faster (Krans et al., 1993)."""
+FEWEST_WINDOWS: Final = 30
+ROUNDING: Final = 2.0**-23
+"""Relative rounding of float32: no recording knows its conductance better."""
+
+
+@dataclass(frozen=True)
+class NoiseStatistics:
+    """What one block of traces says of the noise.
+
+    Attributes
+    ----------
+    spread_place, spread_count : four (k,) int64 arrays each
+        Occupied cells of the (level, spread) grids: white, sample, block means of 4 and of 16.
+    rows : (traces, 7) float64
+        Floor mean, floor sigma, floor samples, converter step, highest reading, its repeats, fall time of each trace.
+    slope_level : (m,) int64
+        Crossing level at the lower end of an interval of half a decade.
+    slope : (m,) float64
+        Drive per interval, as decades per drive unit (negative).
+    slope_samples : (m,) int64
+        Samples that the trace spends in the interval.
+    """
+
+    spread_place: tuple[Integers, ...]
+    spread_count: tuple[Integers, ...]
+    rows: Floats
+    slope_level: Integers
+    slope: Floats
+    slope_samples: Integers
+
+
+def phase_bounds(traces: TraceSet, phases: Sequence[str]) -> tuple[Integers, Integers]:
+    """Return the sample range of each trace's phase, counted in the whole block."""
+    start, stop = traces.phase_range(phases)
+    return traces.offsets[:-1] + start, traces.offsets[:-1] + stop
+
+
+def runs_backward(phases: Sequence[str]) -> bool:
+    """Return whether the contact closes in these phases, so that traces are read from their end."""
+    return all(phase in ("push", "approach") for phase in phases) and set(phases) <= set(PHASE_KINDS)
+
+
+def trusted_samples(traces: TraceSet) -> npt.NDArray[np.bool_]:
+    """Return which samples of the block are trusted; an empty array where all are."""
+    if traces.quality is None:
+        return np.empty(0, np.bool_)
+    bad = Quality.SLEWING | Quality.SEAM | Quality.UNTRUSTED | Quality.SATURATED
+    return (traces.quality.read(0, traces.samples) & bad) == 0
+
+
+def noise_block(traces: TraceSet, settings: NoiseSettings, phases: Sequence[str]) -> NoiseStatistics:
+    """Return what a block of traces says of the noise.
+
+    Parameters
+    ----------
+    traces : TraceSet
+        In memory.  Windows that hold a NaN or an untrusted sample are left out.
+    settings : NoiseSettings
+        Not used here; statistics are the same whatever is stated.
+    phases : sequence of str
+        Phases to look at.
+    """
+    starts, stops = phase_bounds(traces, phases)
+    grids = [np.zeros((kernels.LEVEL_BINS, kernels.SPREAD_BINS), np.int64) for _ in range(4)]
+    rows = np.empty((traces.traces, 7))
+    last = np.empty((traces.traces, kernels.CROSSING_LEVELS), np.int64)
+    conductance = np.ascontiguousarray(traces.conductance)
+    backward = runs_backward(phases)
+    kernels.gather(conductance, trusted_samples(traces), starts, stops, backward, *grids, rows, last)
+    places = tuple(np.flatnonzero(grid) for grid in grids)
+    level, slope, samples = _slopes(traces, starts, stops, last, backward)
+    counts = tuple(grid.ravel()[place] for grid, place in zip(grids, places, strict=True))
+    return NoiseStatistics(places, counts, rows, level, slope, samples)
+
+
+def _slopes(
+    traces: TraceSet, starts: Integers, stops: Integers, last: Integers, backward: bool
+) -> tuple[Integers, Floats, Integers]:
+    """Return level, slope and samples of every half decade that a trace crosses for the last time."""
+    trace, level = np.nonzero((last[:, 1:] >= 0) & (last[:, :-1] > last[:, 1:]))
+    lower, upper = last[trace, level], last[trace, level + 1]
+    if backward:
+        lower, upper = (stops - starts)[trace] - 1 - lower, (stops - starts)[trace] - 1 - upper
+    drive = traces.drive_values(0, traces.traces)
+    distance = np.abs(drive[starts[trace] + lower] - drive[starts[trace] + upper])
+    seen = distance > 0
+    slope = -1.0 / kernels.CROSSING_PER_DECADE / distance[seen]
+    return level[seen], slope, np.abs(lower - upper)[seen]
+
+
+def noise_model(statistics: Sequence[NoiseStatistics], settings: NoiseSettings) -> NoiseModel:
+    """Return the noise model that all blocks together support.
+
+    Parameters
+    ----------
+    statistics : sequence of NoiseStatistics
+        Of all blocks, in order.
+    settings : NoiseSettings
+        What the recipe states instead of the recording.
+
+    Returns
+    -------
+    NoiseModel
+        Where no trace reaches a floor, ``floor_g0`` is 0 and ``floor_sigma_g0`` the noise of the lowest readings.
+    """
+    rows = np.concatenate([part.rows for part in statistics]) if statistics else np.empty((0, 7))
+    high = _typical_high(rows)
+    floor, sigma, members = _floor(rows, high)
+    step = _converter_step(rows)
+    sigma = max(sigma, step / np.sqrt(12), high * ROUNDING)
+    floor = floor if settings.floor_g0 is None else settings.floor_g0
+    sigma = sigma if settings.floor_sigma_g0 is None else settings.floor_sigma_g0
+    level, white, sample, long_run = _table(statistics, floor, sigma, step, high)
+    if settings.relative_noise is not None:
+        sample = np.hypot(sigma, settings.relative_noise * level)
+        long_run = sample * np.maximum(long_run / np.maximum(sample, white), 1.0)
+    rise = _rise(rows) if settings.rise_samples is None else settings.rise_samples
+    saturation = _saturation(rows, sample / level) if settings.saturation_g0 is None else settings.saturation_g0
+    slope = _tunnelling_slope(statistics, floor + 10 * sigma, CLEAR_OF_CONTACT_G0 * min(1.0, high), rise)
+    stated = tuple(info.name for info in settings.fields() if getattr(settings, info.name) is not None)
+    return NoiseModel(floor, sigma, members, level, sample, long_run, rise, step, saturation, slope, stated, white)
+
+
+def _typical_high(rows: Floats) -> float:
+    """Return the median over traces of the highest reading; 1 where there is none."""
+    highs = rows[np.isfinite(rows[:, 4]) & (rows[:, 4] > 0), 4]
+    return float(np.median(highs)) if len(highs) else 1.0
+
+
+def _floor(rows: Floats, high: float) -> tuple[float, float, int]:
+    """Return mean, standard deviation and number of traces of the floor.
+
+    The lowest level of each trace is a candidate.  Those that agree with one another within their own noise, at the
+    lower end of all candidates, are the floor; a level that is a sizeable share of the highest readings is none.
+    """
+    usable = np.isfinite(rows[:, 0]) & (rows[:, 2] > 0)
+    means, sigmas = rows[usable, 0], rows[usable, 1]
+    if not len(means):
+        return 0.0, high * ROUNDING, 0
+    order = np.argsort(means, kind="stable")
+    quarter = order[: len(order) // 4 + 1]
+    level, spread = float(np.median(means[quarter])), float(np.median(sigmas[quarter]))
+    members = np.ones(len(means), bool)
+    for _ in range(4):
+        members = np.abs(means - level) <= 4 * max(spread, high * ROUNDING)
+        if not members.any():
+            break
+        level = float(np.median(means[members]))
+        between = 1.4826 * float(np.median(np.abs(means[members] - level)))
+        spread = float(np.hypot(np.median(sigmas[members]), between))
+    shown = int(members.sum())
+    if shown < max(1, len(means) // 100) or level > 0.05 * high:
+        return 0.0, max(float(np.min(sigmas)), high * ROUNDING), 0
+    return level, spread, shown
+
+
+def _converter_step(rows: Floats) -> float:
+    """Return the converter step near the floor, where at least half of the traces show one; else 0."""
+    steps = rows[np.isfinite(rows[:, 0]) & (rows[:, 2] > 0), 3]
+    shown = steps[steps > 0]
+    return float(np.median(shown)) if len(shown) * 2 > len(steps) else 0.0
+
+
+def _rise(rows: Floats) -> float:
+    """Return the rise time in samples: the lower quartile of the largest falls (a contact may be slower, never faster)."""
+    falls = rows[np.isfinite(rows[:, 6]), 6]
+    return max(1.0, float(np.quantile(falls, 0.25))) if len(falls) else 1.0
+
+
+def _saturation(rows: Floats, relative: Floats) -> float:
+    """Return the reading at which the traces pile up, or infinity.
+
+    The highest readings of many traces agree to one part in 1,000 and repeat, although the signal is noisy.
+    """
+    highs, repeats = rows[:, 4], rows[:, 5]
+    finite = np.isfinite(highs) & (highs > 0)
+    if not finite.any() or float(np.median(relative)) < 1e-5:
+        return np.inf
+    top = float(np.quantile(highs[finite], 0.9))
+    piled = finite & (np.abs(highs - top) <= 1e-3 * top) & (repeats >= 8)
+    return float(np.median(highs[piled])) if piled.sum() >= max(2, 0.2 * finite.sum()) else np.inf
+
+
+def _tunnelling_slope(statistics: Sequence[NoiseStatistics], low: float, high: float, rise: float) -> float:
+    """Return the median slope over all half decades between the bounds that were not crossed by a jump; NaN if few."""
+    slope = np.concatenate([part.slope for part in statistics] or [np.empty(0)])
+    level = np.concatenate([part.slope_level for part in statistics] or [np.empty(0, np.int64)])
+    samples = np.concatenate([part.slope_samples for part in statistics] or [np.empty(0, np.int64)])
+    lower = 10.0 ** (kernels.CROSSING_LOWEST + level / kernels.CROSSING_PER_DECADE)
+    upper = lower * 10.0 ** (1 / kernels.CROSSING_PER_DECADE)
+    slow = (lower >= low) & (upper <= high * 1.0001) & (samples > max(2.0, 1.5 * rise))
+    return float(np.median(slope[slow])) if slow.sum() >= 3 else float("nan")
+
+
+def _quartiles(statistics: Sequence[NoiseStatistics], which: int) -> tuple[Floats, Integers, Integers]:
+    """Return one pooled (level, spread) grid."""
+    grid = np.zeros(kernels.LEVEL_BINS * kernels.SPREAD_BINS, np.int64)
+    for part in statistics:
+        grid[part.spread_place[which]] += part.spread_count[which]
+    table = grid.reshape(kernels.LEVEL_BINS, kernels.SPREAD_BINS)
+    edges = 10.0 ** (kernels.SPREAD_LOWEST + np.arange(kernels.SPREAD_BINS) / kernels.SPREAD_PER_DECADE)
+    return edges, table.sum(axis=1), np.cumsum(table, axis=1)
+
+
+def _at_levels(statistics: Sequence[NoiseStatistics], which: int, groups: Sequence[Integers]) -> Floats:
+    """Return the spread (lower quartile, made one sigma) in each group of level bins; NaN where few windows."""
+    edges, counts, cumulated = _quartiles(statistics, which)
+    found = np.full(len(groups), np.nan)
+    for row, group in enumerate(groups):
+        total = counts[group].sum()
+        if total < FEWEST_WINDOWS:
+            continue
+        together = cumulated[group].sum(axis=0)
+        place = int(np.searchsorted(together, total / 4))
+        before = together[place - 1] if place else 0
+        share = (total / 4 - before) / max(together[place] - before, 1)
+        width = 10.0 ** (1 / kernels.SPREAD_PER_DECADE)
+        found[row] = 0.0 if place == 0 else edges[place] * width**share / QUARTILE_OF[which]
+    return found
+
+
+def _table(
+    statistics: Sequence[NoiseStatistics], floor: float, sigma: float, step: float, high: float
+) -> tuple[Floats, Floats, Floats, Floats]:
+    """Return level above the floor, white, single-sample and long-run spread, from the floor to above all readings."""
+    edges = 10.0 ** (kernels.LEVEL_LOWEST + np.arange(kernels.LEVEL_BINS + 1) / kernels.LEVEL_PER_DECADE)
+    centres = np.sqrt(edges[:-1] * edges[1:])
+    at_floor = np.flatnonzero(centres < abs(floor) + 2.5 * sigma)
+    rows = np.flatnonzero((centres - floor > 3 * sigma) & (centres < 1e3 * high))
+    groups = [at_floor, *([row] for row in rows)]
+    white, sample, short, long = (_at_levels(statistics, which, groups) for which in range(4))
+    level = np.concatenate([[sigma], centres[rows] - floor])
+    least = np.maximum(step / np.sqrt(12), level * 4 * ROUNDING)
+    white = np.maximum(_filled(white, level, sigma), least)
+    sample = np.maximum(np.maximum(_filled(sample, level, sigma), white), least)
+    sample[0] = max(sample[0], 0.5 * sigma)
+    long_run = np.fmax(np.fmax(sample, _filled(short, level, sigma)), _filled(long, level, sigma))
+    return level, white, sample, long_run
+
+
+def _filled(values: Floats, level: Floats, sigma: float) -> Floats:
+    """Fill levels that no trace visits: interpolated as a share of the level, the nearest share beyond."""
+    known = np.isfinite(values)
+    if not known.any():
+        return np.hypot(sigma, 0.01 * level)
+    share = np.interp(np.log(level), np.log(level[known]), (values / level)[known])
+    result: Floats = np.where(known, values, share * level)
+    return result
