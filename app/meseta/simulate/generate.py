@@ -51,8 +51,8 @@ def simulate(
     Returns
     -------
     Simulation
-        Conductance in G0 as the calibrated set-up would show it: with noise, filter and converter steps, and through the
-        series resistor if there is one (``truth.level_g0`` is the junction's own).
+        Conductance in G0 as the calibrated set-up would show it: with noise, filter and converter steps, and through
+        the series resistor if there is one (``truth.level_g0`` is the junction's own).
 
     Raises
     ------
@@ -113,9 +113,8 @@ def truth_rows(
     rho = amplifier_of(settings).rho
     shown = level / (1 + rho * level)
     real = (kind != NOTHING) & (stop - start >= _SHORTEST_TRUE) & (shown < 0.98 * settings.full_scale_g0)
-    trace, place = np.nonzero(real)
     return TruthTable(
-        trace=trace.astype(np.int64) + first_trace,
+        trace=np.nonzero(real)[0].astype(np.int64) + first_trace,
         start=start[real],
         stop=stop[real],
         kind=np.where(kind[real] == METAL, "metal", "molecule"),

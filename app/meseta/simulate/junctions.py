@@ -5,8 +5,8 @@ Sources (only what they support is claimed; every other number is our own choice
 
 - Peaks of room-temperature gold at multiples of G0 only: Gai et al., Phys. Rev. B 53, 1042 (1996).  Scattering near the
   contact shifts them down like a resistor in series: Bakker et al., Phys. Rev. B 65, 235416.
-- Last plateaus lengthen atom by atom, peaks 0.25 to 0.26 nm apart: Untiedt et al., cond-mat/0202349; chains of four atoms and
-  more: Yanson et al., Nature 395, 783 (1998).
+- Last plateaus lengthen atom by atom, peaks 0.25 to 0.26 nm apart: Untiedt et al., cond-mat/0202349; chains of four
+  atoms and more: Yanson et al., Nature 395, 783 (1998).
 - Tunnelling G ~ exp(-2 kappa d): one decade per 0.1005 nm at a barrier of 5 eV (textbook).
 - Molecular conductance is log-normal with a width of a third to half a decade, by common practice; so are the lengths
   and slopes of the plateaus.

@@ -87,7 +87,7 @@ def pink_filter(sections: int) -> tuple[Floats, Floats, float]:
 
 @kernel
 def pink_noise(white: Floats32, warm: int, poles: Floats, zeros: Floats, gain: float, pink: Floats32) -> None:
-    """Filter one row of white noise into pink noise; the first ``warm`` samples only bring the filter into its stride."""
+    """Filter one row of white noise into pink noise; the first ``warm`` samples only set its state."""
     state = np.zeros(len(poles))
     for i in range(len(white)):
         value = gain * white[i]
@@ -256,7 +256,6 @@ def true_ranges(
     The search begins at the piece's first sample; after its last one the reading may stay for at most ``lag`` samples.
     A plateau that the reading never comes to gets an empty range.
     """
-    ten = math.log(10.0)
     for t in range(stop.shape[0]):
         begin, taken = 0, 0
         for p in range(stop.shape[1]):

@@ -12,7 +12,7 @@ import numpy.typing as npt
 from meseta.tables import Table
 from meseta.traces import TraceSet
 
-__all__ = ["LABELS", "RawChannel", "RawSimulation", "RawTruthTable", "Simulation", "TruthTable"]
+__all__ = ["LABELS", "RawSimulation", "RawTruthTable", "RecordedVolts", "Simulation", "TruthTable"]
 
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
@@ -76,7 +76,7 @@ class Simulation:
 
 
 @dataclass(frozen=True)
-class RawChannel:
+class RecordedVolts:
     """One recorded channel: integers of the converter; volts = stored * scale + offset."""
 
     name: str
@@ -97,7 +97,7 @@ class RawSimulation:
 
     Attributes
     ----------
-    channels : tuple of RawChannel
+    channels : tuple of RecordedVolts
         Piezo, amplifier, and the second amplifier where there is one.
     opening_start, opening_stop : (openings,) int64
         Raw samples of each pull.
@@ -108,13 +108,13 @@ class RawSimulation:
         As in :class:`Simulation`.
     """
 
-    channels: tuple[RawChannel, ...]
+    channels: tuple[RecordedVolts, ...]
     opening_start: Integers
     opening_stop: Integers
     truth: RawTruthTable
     labels: npt.NDArray[np.str_]
     parameters: Mapping[str, Any]
 
-    def channel(self, role: str) -> RawChannel:
+    def channel(self, role: str) -> RecordedVolts:
         """Return the channel with this role."""
         return next(channel for channel in self.channels if channel.role == role)

@@ -113,7 +113,7 @@ class SimulationSettings:
 
     staircase: int = _setting(8, "Highest contact", "G0", "Openings begin at about this conductance.", low=1, high=40)
     scattering_ohm: float = _setting(
-        250.0,
+        200.0,
         "Scattering near the contact",
         "ohm",
         "Shifts the peaks below multiples of G0, as a resistor would.",
@@ -126,7 +126,7 @@ class SimulationSettings:
     tunnelling_spread: float = _setting(
         0.08, "Spread of the tunnelling slope", "", "Relative standard deviation between traces.", low=0, high=0.3
     )
-    snap_back_nm: float = _setting(0.30, "Snap-back", "nm", "Mean gap right after the contact has broken.", low=0)
+    snap_back_nm: float = _setting(0.38, "Snap-back", "nm", "Mean gap right after the contact has broken.", low=0)
     snap_back_spread_nm: float = _setting(0.08, "Spread of the snap-back", "nm", low=0)
 
     yield_share: float = _setting(0.4, "Yield", "", "Share of traces with a molecule.", low=0, high=1)
@@ -185,6 +185,9 @@ class SimulationSettings:
         None, "Converter step near the floor", "G0", "0.4 of the noise at the floor where it is not given.", low=0
     )
 
+    rupture_nm: float = _setting(
+        1.8, "Place of the rupture", "nm", "Raw recordings: mean displacement of the pull at the rupture.", above=0
+    )
     nm_per_volt: float = _setting(2.0, "Displacement per piezo volt", "nm/V", "Raw recordings.", above=0)
     pull_is: Literal["rising", "falling"] = _setting("rising", "Pulling is", "", "Raw recordings.")
     push_speedup: float = _setting(4.0, "Pushing is faster by", "", "Raw recordings.", low=1, high=50)
