@@ -14,6 +14,7 @@ Sources (only what they support is claimed; every other number is our own choice
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from statistics import NormalDist
@@ -230,15 +231,38 @@ def kind_of(name: str) -> Kind:
 
 
 def populations(kind: Kind, settings: SimulationSettings) -> list[dict[str, Any]]:
-    """Return the true population peaks of a kind: name, position, spread and the axis on which they are symmetric."""
+    """Return the true population peaks of a kind.
+
+    ``position_g0`` is the centre; the peak of a histogram with a linear or logarithmic axis stands at
+    ``position_linear_axis_g0`` or ``position_logarithmic_axis_g0``, as the axes differ by the Jacobian: for a normal
+    population (mu + sqrt(mu² + 4 sigma²))/2 on the logarithmic axis, for a log-normal one 10^(m - s² ln 10) on the
+    linear axis (definitions of the two distributions).
+    """
     peaks: list[dict[str, Any]] = []
     if kind.metallic:
         for atoms in range(1, min(settings.staircase, 4) + 1):
             centre, spread = float(metal_centre_g0(atoms, settings)), float(metal_spread_g0(atoms))
-            peaks.append({"name": f"{atoms} atoms", "position_g0": centre, "sigma_g0": spread, "axis": "linear"})
-    centres = {"first": settings.molecule_log10_g0, "molecule": settings.molecule_log10_g0}
+            peaks.append(
+                {
+                    "name": "1 atom" if atoms == 1 else f"{atoms} atoms",
+                    "shape": "normal",
+                    "position_g0": centre,
+                    "sigma_g0": spread,
+                    "position_linear_axis_g0": centre,
+                    "position_logarithmic_axis_g0": (centre + (centre**2 + 4 * spread**2) ** 0.5) / 2,
+                }
+            )
+    centres = {"second": settings.second_log10_g0}
     for name in kind.bridges:
-        log10 = centres.get(name, settings.second_log10_g0)
-        width = settings.molecule_width_decades
-        peaks.append({"name": name, "position_g0": 10**log10, "sigma_decades": width, "axis": "logarithmic"})
+        log10, width = centres.get(name, settings.molecule_log10_g0), settings.molecule_width_decades
+        peaks.append(
+            {
+                "name": name,
+                "shape": "log-normal",
+                "position_g0": 10**log10,
+                "sigma_decades": width,
+                "position_linear_axis_g0": 10 ** (log10 - width**2 * math.log(10)),
+                "position_logarithmic_axis_g0": 10**log10,
+            }
+        )
     return peaks

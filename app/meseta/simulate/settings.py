@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field, fields, replace
 from typing import Any, Final, Literal, get_args
 
@@ -234,6 +234,25 @@ class SimulationSettings:
                 raise CallError(f"there is no simulation setting '{name}'", "simulate", nearest(name, known))
         return replace(self, **values)
 
+    def with_words(self, words: Sequence[str]) -> SimulationSettings:
+        """Return the settings with ``name=value`` words applied, as a command line gives them.
+
+        Raises
+        ------
+        CallError
+            Where a word has no "=", a name is unknown, or a value is no number or out of range.
+        """
+        described = {info.name: info for info in self.describe()}
+        values: dict[str, Any] = {}
+        for word in words:
+            name, equals, text = (part.strip() for part in word.partition("="))
+            if not equals:
+                raise CallError(f"'{word}' is not a setting", "simulate", "write name=value")
+            if name not in described:
+                raise CallError(f"there is no simulation setting '{name}'", "simulate", nearest(name, described))
+            values[name] = _parsed(text, described[name])
+        return self.with_values(**values)
+
     @property
     def levels(self) -> NoiseLevels:
         """The noise preset with what was given instead of it."""
@@ -257,6 +276,19 @@ class SimulationSettings:
         if self.amplifier == "logarithmic":
             return self.reference_ampere * 10 ** (self.full_scale_volt / self.volt_per_decade) / self.ampere_per_g0
         return self.full_scale_volt / self.gain_volt_per_ampere / self.ampere_per_g0
+
+
+def _parsed(text: str, info: SettingInfo) -> Any:
+    """Return the value that a word stands for."""
+    if info.kind == "choice":
+        return text
+    if info.optional and text.lower() in ("none", ""):
+        return None
+    try:
+        return int(text) if info.kind == "integer" else float(text)
+    except ValueError:
+        wanted = "a whole number" if info.kind == "integer" else "a number"
+        raise CallError(f"'{text}' is not {wanted}", info.name, f"give {wanted}") from None
 
 
 def _check(name: str, value: Any, limits: Any) -> None:
