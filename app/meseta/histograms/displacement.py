@@ -10,8 +10,8 @@ import numpy.typing as npt
 from meseta.histograms import kernels
 from meseta.histograms.counting import saturation_level
 from meseta.histograms.grids import anchored_grid, axis_range
-from meseta.histograms.lookup import lookup_of
-from meseta.histograms.region import region_of
+from meseta.histograms.lookup import Lookup, lookup_of
+from meseta.histograms.region import Region, region_of
 from meseta.histograms.results import DisplacementHistogram, Grid
 from meseta.intake.alignment import Alignment
 from meseta.recipe.histogram import DisplacementHistogramSettings, HistogramSettings
@@ -58,20 +58,43 @@ def displacement_counts(
     used = np.asarray(kept, bool) & (region.phase_end > region.phase_begin)
     rows = np.flatnonzero(used & np.isfinite(alignment.zero_drive)).astype(np.int64)
     lookup = lookup_of(grid, saturation_level(noise))
-    counts = np.zeros((frame.bins, grid.bins), np.uint32)
-    drive = traces.drive
-    quality = np.empty(0, np.uint8) if traces.quality is None else traces.quality.read(0, traces.samples)
-    relative = np.empty(0, np.float32) if drive.relative is None else drive.relative.read(0, traces.samples)
-    kernels.count_grid(
-        np.ascontiguousarray(traces.conductance), np.ascontiguousarray(quality), rows, region.begin, region.end,
-        traces.offsets[:-1], np.ascontiguousarray(drive.start), np.ascontiguousarray(drive.step),
-        np.ascontiguousarray(relative), alignment.zero_drive, edges,
-        lookup.table, lookup.thresholds, lookup.column, counts,
-    )  # fmt: skip
+    counts = _count(traces, rows, region, alignment.zero_drive, edges, lookup, grid.bins)
     empty = np.empty((0, 0))
-    unit = f"counts / trace / {drive.unit} / {'decade' if grid.axis == 'logarithmic' else 'G0'}"
-    frame_only = DisplacementHistogram(grid, edges, drive.unit, counts.astype(np.int64), 0, 0, empty, unit)
+    unit = f"counts / trace / {traces.drive.unit} / {'decade' if grid.axis == 'logarithmic' else 'G0'}"
+    frame_only = DisplacementHistogram(grid, edges, traces.drive.unit, counts, 0, 0, empty, unit)
     return frame_only.with_counts(frame_only.counts, len(rows), int(used.sum()) - len(rows))
+
+
+def _count(
+    traces: TraceSet,
+    rows: npt.NDArray[np.int64],
+    region: Region,
+    zero: npt.NDArray[np.float64],
+    edges: npt.NDArray[np.float64],
+    lookup: Lookup,
+    bins: int,
+) -> npt.NDArray[np.int64]:
+    """Return the (columns, bins) counts of the chosen rows."""
+    drive, origin = traces.drive, traces.offsets[:-1]
+    values = np.ascontiguousarray(traces.conductance)
+    start, step = np.ascontiguousarray(drive.start), np.ascontiguousarray(drive.step)
+    tally = np.zeros((2, len(edges) - 1, len(lookup.column)), np.uint32)
+    if drive.relative is None and traces.quality is None and (step[rows] != 0).all():
+        kernels.count_stepped_grid(
+            values, rows, region.begin, region.end, origin, start, step, zero, edges,
+            lookup.table, lookup.thresholds, lookup.most_compares, tally,
+        )  # fmt: skip
+    else:
+        quality = np.empty(0, np.uint8) if traces.quality is None else traces.quality.read(0, traces.samples)
+        relative = np.empty(0, np.float32) if drive.relative is None else drive.relative.read(0, traces.samples)
+        kernels.count_explicit_grid(
+            values, np.ascontiguousarray(quality), rows, region.begin, region.end, origin, start, step,
+            np.ascontiguousarray(relative), zero, edges, lookup.table, lookup.thresholds, tally,
+        )  # fmt: skip
+    counts = np.zeros((len(edges) - 1, bins), np.int64)
+    inside = np.flatnonzero(lookup.column < bins)  # no two intervals are the same bin
+    counts[:, lookup.column[inside]] = tally[0, :, inside].T.astype(np.int64) + tally[1, :, inside].T
+    return counts
 
 
 def displacement_grid(frame: DisplacementHistogramSettings, settings: HistogramSettings, noise: NoiseModel) -> Grid:

@@ -12,10 +12,19 @@ import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
-__all__ = ["count_flagged_rows", "count_grid", "count_rows", "fold_rows", "settle_region"]
+__all__ = [
+    "count_explicit_grid",
+    "count_flagged_rows",
+    "count_rows",
+    "count_stepped_grid",
+    "first_at_or_past",
+    "fold_rows",
+    "place_of",
+    "settle_region",
+]
 
-SHIFT = 15
-"""Bits of a float32 that the table leaves out."""
+GROUP = 16
+"""Drive columns worked together: their tallies fit the second cache."""
 
 
 @kernel
@@ -130,7 +139,103 @@ def settle_region(
 
 
 @kernel
-def count_grid(
+def first_at_or_past(bound: float, start: float, step: float, zero: float, last: int) -> int:
+    """Return the first sample, at most ``last``, whose drive is at or past a bound in the direction of its steps.
+
+    Rising drives are past at ``drive - zero >= bound``, falling ones at ``drive - zero < bound``.  The quotient only
+    proposes the sample; the drive, computed as everywhere, decides.
+    """
+    guess = (bound + zero - start) / step
+    at = 0 if not guess > 0.0 else (last if guess > last else int(guess))
+    if step > 0.0:
+        while at > 0 and (start + step * (at - 1)) - zero >= bound:
+            at -= 1
+        while at < last and (start + step * at) - zero < bound:
+            at += 1
+    else:
+        while at > 0 and (start + step * (at - 1)) - zero < bound:
+            at -= 1
+        while at < last and (start + step * at) - zero >= bound:
+            at += 1
+    return at
+
+
+@kernel
+def place_of(shifted: float, edges: npt.NDArray[np.float64]) -> int:
+    """Return the half-open interval of nearly equally spaced edges that holds a value inside them."""
+    columns = len(edges) - 1
+    place = int(min(max((shifted - edges[0]) / (edges[columns] - edges[0]) * columns, 0.0), columns - 1.0))
+    while place > 0 and shifted < edges[place]:
+        place -= 1
+    while place < columns - 1 and shifted >= edges[place + 1]:
+        place += 1
+    return place
+
+
+@kernel
+def count_stepped_grid(
+    values: npt.NDArray[np.float32],
+    rows: npt.NDArray[np.int64],
+    begin: npt.NDArray[np.int64],
+    end: npt.NDArray[np.int64],
+    origin: npt.NDArray[np.int64],
+    start: npt.NDArray[np.float64],
+    step: npt.NDArray[np.float64],
+    zero: npt.NDArray[np.float64],
+    drive_edges: npt.NDArray[np.float64],
+    table: npt.NDArray[np.uint16],
+    thresholds: npt.NDArray[np.float32],
+    most_compares: int,
+    tally: npt.NDArray[np.uint32],
+) -> None:
+    """Count trusted samples of the chosen rows into (2, drive column, interval), for a drive of equal steps.
+
+    The drive of sample ``at`` is ``start + step * (at - origin)``; its column is the half-open interval of
+    ``drive_edges`` that holds ``drive - zero``.  A few columns are worked at a time over all rows, so that their
+    tallies stay in the cache.
+    """
+    bits = values.view(np.uint32)
+    columns = len(drive_edges) - 1
+    reached = np.zeros(len(rows), np.int64)
+    for chosen in range(len(rows)):
+        row = rows[chosen]
+        bound = drive_edges[0] if step[row] > 0.0 else drive_edges[columns]
+        after = first_at_or_past(bound, start[row], step[row], zero[row], end[row] - origin[row])
+        reached[chosen] = max(begin[row] - origin[row], after)
+    for group in range(0, columns, GROUP):
+        for chosen in range(len(rows)):
+            row = rows[chosen]
+            rising, last, first = step[row] > 0.0, end[row] - origin[row], reached[chosen]
+            for turn in range(group, min(group + GROUP, columns)):
+                if first >= last:
+                    break
+                # rising drives pass the edges upwards, falling ones downwards
+                column = turn if rising else columns - 1 - turn
+                bound = drive_edges[column + 1 if rising else column]
+                stop = max(first, first_at_or_past(bound, start[row], step[row], zero[row], last))
+                even, odd = tally[0, column], tally[1, column]
+                at, until = origin[row] + first, origin[row] + stop
+                if most_compares <= 1:
+                    while at + 1 < until:
+                        place = np.int64(table[bits[at] >> 15])
+                        other = np.int64(table[bits[at + 1] >> 15])
+                        place += values[at] >= thresholds[place]
+                        other += values[at + 1] >= thresholds[other]
+                        even[place] += 1
+                        odd[other] += 1
+                        at += 2
+                while at < until:
+                    place = np.int64(table[bits[at] >> 15])
+                    while values[at] >= thresholds[place]:
+                        place += 1
+                    even[place] += 1
+                    at += 1
+                first = stop
+            reached[chosen] = first
+
+
+@kernel
+def count_explicit_grid(
     values: npt.NDArray[np.float32],
     quality: npt.NDArray[np.uint8],
     rows: npt.NDArray[np.int64],
@@ -144,36 +249,23 @@ def count_grid(
     drive_edges: npt.NDArray[np.float64],
     table: npt.NDArray[np.uint16],
     thresholds: npt.NDArray[np.float32],
-    column: npt.NDArray[np.int64],
-    counts: npt.NDArray[np.uint32],
+    tally: npt.NDArray[np.uint32],
 ) -> None:
-    """Count samples of the chosen rows into (drive column, bin).
-
-    The drive of sample ``at`` is ``start + step * (at - origin)``, or ``start + relative[at]`` where that is given;
-    its column is the half-open interval of ``drive_edges`` that holds ``drive - zero``.
-    """
+    """Count like :func:`count_stepped_grid`, sample by sample: explicit drive, or samples with quality flags."""
     bits = values.view(np.uint32)
-    columns, bins = counts.shape
-    low, width = drive_edges[0], (drive_edges[-1] - drive_edges[0]) / columns
+    columns = len(drive_edges) - 1
     explicit, flagged = len(relative) > 0, len(quality) > 0
     for row in rows:
-        at = begin[row]
-        while at < end[row]:
-            drive = start[row] + (relative[at] if explicit else step[row] * (at - origin[row]))
+        for at in range(begin[row], end[row]):
+            if flagged and quality[at] != 0:
+                continue
+            drive = start[row] + (np.float64(relative[at]) if explicit else step[row] * (at - origin[row]))
             shifted = drive - zero[row]
-            place = int(min(max((shifted - low) / width, 0.0), columns - 1.0))
-            while place > 0 and shifted < drive_edges[place]:
-                place -= 1
-            while place < columns - 1 and shifted >= drive_edges[place + 1]:
-                place += 1
-            inside = shifted >= drive_edges[0] and shifted < drive_edges[columns]
-            if inside and not (flagged and quality[at] != 0):
-                bin_place = np.int64(table[bits[at] >> 15])
-                while values[at] >= thresholds[bin_place]:
-                    bin_place += 1
-                if column[bin_place] < bins:
-                    counts[place, column[bin_place]] += 1
-            at += 1
+            if shifted >= drive_edges[0] and shifted < drive_edges[columns]:
+                place = np.int64(table[bits[at] >> 15])
+                while values[at] >= thresholds[place]:
+                    place += 1
+                tally[at & 1, place_of(shifted, drive_edges), place] += 1
 
 
 @warm_up
@@ -189,8 +281,9 @@ def _warm_up() -> None:
     settle_region(values, begin, end, values[:1], end, np.zeros(1, np.int64))
     unit = np.ones(1)
     edges = np.array([0.0, 1.0])
+    tally = np.zeros((2, 1, 2), np.uint32)
+    count_stepped_grid(values, begin, begin, end, begin, unit, unit, unit, edges, table, thresholds, 1, tally)
     for quality in (np.zeros(0, np.uint8), np.zeros(5, np.uint8)):
-        count_grid(
-            values, quality, begin, begin, end, begin, unit, unit, values[:0], unit, edges, table, thresholds, column,
-            np.zeros((1, 1), np.uint32),
-        )  # fmt: skip
+        count_explicit_grid(
+            values, quality, begin, begin, end, begin, unit, unit, values, unit, edges, table, thresholds, tally
+        )

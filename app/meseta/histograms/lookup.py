@@ -12,6 +12,8 @@ from meseta.histograms.results import EXCLUDED, Grid
 __all__ = ["Lookup", "float32_not_below", "lookup_of"]
 
 _CELLS = 1 << 17
+_INFINITE = 0xFF
+"""Exponent of infinities and NaN."""
 _SMALLEST = np.float32(1.401298464324817e-45)
 
 
@@ -75,13 +77,21 @@ def lookup_of(grid: Grid, saturation_g0: float = np.inf) -> Lookup:
 
 
 def _table(cuts: npt.NDArray[np.float32], regular: int) -> tuple[npt.NDArray[np.uint16], int]:
-    cells = np.arange(_CELLS, dtype=np.uint32) << 15
-    near = cells.view(np.float32)
-    far = (cells | 0x7FFF).view(np.float32)
-    negative = cells >> 31 == 1
-    smallest, largest = np.where(negative, far, near), np.where(negative, near, far)
-    first = np.searchsorted(cuts, smallest, side="right")
-    last = np.searchsorted(cuts, largest, side="right")
-    finite = (cells >> 23) & 0xFF != 0xFF
-    table = np.where(finite, first, np.where(negative, regular + 2, regular)).astype(np.uint16)
-    return table, max(1, int((last - first)[finite].max()))
+    """Return, for every cell, the number of cuts not above its smallest value, and the most cuts within a cell.
+
+    Positive cells ascend with their number, negative ones descend.
+    """
+    half = _CELLS // 2
+    bits = cuts.view(np.uint32)
+    cell = np.where(cuts == 0, 0, bits >> 15).astype(np.int64)
+    at_edge = (bits & 0x7FFF == np.where(cuts < 0, 0x7FFF, 0)) | (cuts == 0)
+    steps, within = np.zeros(_CELLS, np.int32), np.zeros(_CELLS, np.int32)
+    np.add.at(steps, cell, 1)
+    np.add.at(within, cell[~at_edge], 1)
+    table = np.empty(_CELLS, np.uint16)
+    fallen = np.cumsum(steps[half:][::-1], dtype=np.int32)[::-1]
+    table[half:] = fallen - within[half:]
+    table[:half] = fallen[0] + np.cumsum(steps[:half], dtype=np.int32) - within[:half]
+    table[_INFINITE << 8 : half] = regular
+    table[half + (_INFINITE << 8) :] = regular + 2
+    return table, max(1, int(within.max()))
