@@ -79,9 +79,9 @@ class Decisions:
         plain = {
             "verdicts": {name: asdict(verdict) for name, verdict in sorted(self.verdicts.items())},
             "groups": {name: sorted(group.members) for name, group in sorted(self.groups.items())},
-            "events": [asdict(event) for event in self.events],
+            "events": sorted([event.identity, event.text] for event in self.events),
             "removed": sorted(self.removed_sources),
-            "ranges": [asdict(part) for part in self.removed_ranges],
+            "ranges": sorted(json.dumps(asdict(part)) for part in self.removed_ranges),
         }
         return hashlib.sha256(json.dumps(plain, sort_keys=True).encode()).hexdigest()
 

@@ -19,7 +19,7 @@ from typing import BinaryIO, Final, Self
 
 from meseta.errors import StudyError
 
-__all__ = ["PAGE", "PagedFile", "log_of", "sync_folder", "whole_log"]
+__all__ = ["PAGE", "PagedFile", "log_of", "room_remedy", "sync_folder", "whole_log"]
 
 PAGE: Final = 4096
 _MAGIC: Final = b"meseta redo 1\n"
@@ -177,7 +177,7 @@ class PagedFile:
     def check(self) -> None:
         """Raise the fault of an earlier write, if there was one (HDF5 is never told, or it could not close)."""
         if self.fault is not None:
-            raise StudyError(f"cannot be written ({self.fault.strerror})", str(self.path), _room(self.fault))
+            raise StudyError(f"cannot be written ({self.fault.strerror})", str(self.path), room_remedy(self.fault))
 
     def commit(self) -> None:
         """Make all changes take effect and durable.
@@ -330,7 +330,8 @@ def _overlay(view: memoryview, start: int, at: int, data: memoryview) -> None:
         view[low - start : high - start] = data[low - at : high - at]
 
 
-def _room(error: OSError) -> str:
+def room_remedy(error: OSError) -> str:
+    """Return what to do about a fault of writing."""
     import errno
 
     full = error.errno in (errno.ENOSPC, errno.EFBIG, errno.EDQUOT)

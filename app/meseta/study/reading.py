@@ -8,7 +8,8 @@ from pathlib import Path
 from meseta import intake
 from meseta.errors import CallError
 from meseta.recipe import Recipe
-from meseta.study.study import Study, is_study
+from meseta.study.files import is_study
+from meseta.study.study import Study
 from meseta.traces import TraceSet
 from meseta.work import Work
 

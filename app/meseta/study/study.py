@@ -2,137 +2,111 @@
 
 from __future__ import annotations
 
-import json
-import os
-import uuid
-from collections.abc import Iterator
-from contextlib import contextmanager
+import threading
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from types import TracebackType
 from typing import Self
 
-import h5py
-
-from meseta import __version__
 from meseta.analysis import Analysis
-from meseta.errors import OutputError, StudyError
+from meseta.errors import CallError, StudyError
+from meseta.intake.recording import Recording
 from meseta.recipe import Recipe
-from meseta.selection import Decisions
+from meseta.selection import Decisions, RemovedRange
 from meseta.study.chunks import BlockFile
-from meseta.study.columns import json_text, write_text
-from meseta.study.content import read_traces, write_traces
-from meseta.study.pages import PagedFile, sync_folder, whole_log
-from meseta.study.strict import read_attribute, read_text, reading
+from meseta.study.files import changing, is_study, upgrade
+from meseta.study.history import Entry, History
+from meseta.study.journal import Journal, read_journal
+from meseta.study.loading import load, write_content
+from meseta.study.lock import Lock
+from meseta.study.parts import FROM_RAW, write_decisions, write_history, write_recipe, write_versions
+from meseta.study.state import State, difference, words
 from meseta.traces import TraceSet
 from meseta.work import Work
 
-__all__ = ["FORMAT", "SCHEMA", "Study", "is_study", "write_study"]
-
-FORMAT = "meseta study"
-SCHEMA = 1
-_LIBRARY = ("v110", "v110")  # metadata with checksums, readable by HDF5 1.10 and later
+__all__ = ["Study", "write_study"]
 
 
-def is_study(path: str | Path) -> bool:
-    """Return whether a file is a study of any version."""
-    try:
-        with Path(path).open("rb") as file:
-            if file.read(8) != b"\x89HDF\r\n\x1a\n":
-                return False
-        with h5py.File(path, "r") as root:
-            return str(root.attrs.get("format", "")) == FORMAT
-    except (OSError, RuntimeError, ValueError):
-        return False
+def write_study(
+    path: str | Path,
+    analysis: Analysis,
+    work: Work | None = None,
+    recordings: Sequence[Recording] = (),
+) -> None:
+    """Write a new study with the traces, recipe and decisions of an analysis; whole or not at all.
 
-
-def write_study(path: str | Path, analysis: Analysis, work: Work | None = None) -> None:
-    """Write a new study with the traces, recipe and decisions of an analysis; whole or not at all."""
-    work = work or Work()
-    with _new_file(Path(path)) as root:
-        write_traces(root, analysis.traces, work)
-        write_text(root, "recipe", analysis.recipe.text())
-        write_text(root, "decisions", json_text(analysis.decisions.plain()))
-
-
-@contextmanager
-def _new_file(path: Path) -> Iterator[h5py.File]:
-    """Give an empty study under a temporary name, which takes its place if the block succeeds."""
-    partial = path.with_name(f".{path.name}-{os.getpid()}-unfinished")
-    try:
-        partial.touch()
-    except OSError as error:
-        raise OutputError(f"cannot be made ({error.strerror})", str(path), "choose another place") from error
-    try:
-        with PagedFile(partial, writable=True, fresh=True) as paged:
-            root = h5py.File(paged, "w", libver=_LIBRARY)
-            try:
-                root.attrs["format"] = FORMAT
-                root.attrs["schema"] = SCHEMA
-                root.attrs["written_by"] = __version__
-                root.attrs["id"] = uuid.uuid4().hex
-                yield root
-                paged.check()
-            except BaseException:
-                paged.abandon()
-                raise
-            finally:
-                root.close()
-            paged.commit()
-        partial.replace(path)
-        sync_folder(path.parent)
-    except BaseException:
-        partial.unlink(missing_ok=True)
-        raise
+    Parameters
+    ----------
+    path : str or Path
+        A file of that name is replaced.
+    analysis : Analysis
+    work : Work, optional
+    recordings : sequence of Recording
+        Open recordings to keep as recorded, in the order of ``analysis.traces.sources``; those left out are linked.
+    """
+    state = State(analysis.recipe, analysis.decisions)
+    history = History.begun("study made")
+    write_content(Path(path), analysis.traces, state, history, recordings, work or Work())
 
 
 class Study:
-    """A study file, open.  Use as a context manager, or :meth:`close` it."""
+    """A study file, open.  A context manager; :meth:`close` saves nothing by itself, the journal keeps every change.
 
-    def __init__(self, path: Path, read_only: bool) -> None:
-        self.path, self.read_only = path, read_only
-        self._file = BlockFile(path)
-        with PagedFile(path, writable=False) as paged:
-            log = whole_log(path)
-            if log is not None:
-                paged.apply(log)
-            self._load(paged)
+    Attributes
+    ----------
+    path : Path
+    read_only : bool
+        Whether changes are refused; ``why_read_only`` says why.
+    recovered : tuple of Entry
+        Changes that an earlier session made and did not save; they are in force, and :meth:`discard_recovered` takes
+        them back.
+    damage : tuple of str
+        What was found damaged on opening, part by part; the rest is usable.
+    """
 
-    def _load(self, paged: PagedFile) -> None:
-        where = str(self.path)
-        root = reading("the table of contents", where, lambda: h5py.File(paged, "r"))
-        with root:
-            self.schema = int(reading("the schema version", where, lambda: read_attribute(root, "schema")))
-            if self.schema > SCHEMA:
-                raise StudyError(
-                    f"was written by a newer Meseta (schema {self.schema}, this one knows up to {SCHEMA})",
-                    where,
-                    "update Meseta",
-                )
-            text = reading("the recipe", where, lambda: read_text(root, "recipe"))
-            self.recipe = Recipe.parse(text, f"{where}: recipe")
-            plain = reading("the decisions", where, lambda: json.loads(read_text(root, "decisions")))
-            self.decisions = Decisions.parse(plain)
-            self._traces = reading("the traces", where, lambda: read_traces(root, self._file))
+    def __init__(self, path: Path, read_only: bool = False, take_over: bool = False) -> None:
+        self.path = path
+        self.why_read_only = "opened for reading" if read_only else ""
+        self._guard = threading.RLock()
+        self._lock = None if read_only else self._locked(take_over)
+        try:
+            self.backup = None if self.read_only else upgrade(path)
+            self._open()
+        except BaseException:
+            self.close()
+            raise
+
+    # -- opening and closing ------------------------------------------------------------------------------------
 
     @classmethod
-    def open(cls, path: str | Path, read_only: bool = False) -> Study:
+    def open(cls, path: str | Path, read_only: bool = False, take_over: bool = False) -> Study:
         """Open a study.
+
+        Parameters
+        ----------
+        path : str or Path
+        read_only : bool
+            Change nothing, take no lock.
+        take_over : bool
+            Ignore the lock of another machine that is known to be gone.
 
         Raises
         ------
         StudyError
-            Where it is none, is damaged, or was written by a newer version.
+            Where it is none, is damaged beyond use, or was written by a newer version.
         """
         path = Path(path)
         if not path.exists():
             raise StudyError("does not exist", str(path), "check the path")
         if not is_study(path):
             raise StudyError("is not a Meseta study", str(path), "make one with `meseta gather` or `meseta run`")
-        return cls(path, read_only)
+        return cls(path, read_only, take_over)
 
     @classmethod
     def create(cls, path: str | Path, analysis: Analysis, work: Work | None = None) -> Study:
-        """Write a new study and open it."""
+        """Write a new study from an analysis and open it; refuses to replace a file."""
+        if Path(path).exists():
+            raise CallError("exists already", str(path), "open it, or choose another name")
         write_study(path, analysis, work)
         return cls.open(path)
 
@@ -144,13 +118,247 @@ class Study:
     ) -> None:
         self.close()
 
+    @property
+    def read_only(self) -> bool:
+        """Whether changes are refused."""
+        return bool(self.why_read_only)
+
     def close(self) -> None:
-        """Let go of the file."""
+        """Let go of the study.  What was not saved stays in the journal and is offered on the next opening."""
+        with self._guard:
+            if self._lock is not None:
+                self._lock.release()
+            self.why_read_only = self.why_read_only or "closed"
+
+    def _locked(self, take_over: bool) -> Lock | None:
+        try:
+            lock = Lock(self.path, take_over)
+        except OSError as error:
+            self.why_read_only = f"the folder cannot be written to ({error.strerror})"
+            return None
+        if lock.holder is not None:
+            self.why_read_only = f"held by {lock.holder}"
+            return None
+        return lock
+
+    def _open(self) -> None:
+        self._blocks = BlockFile(self.path)
+        content = load(self.path, self._blocks)
+        self._content, self.damage = content, content.damage
+        self._saved_entries = len(content.history.entries)
+        self._saved, self._history = content.state, content.history
+        self._state = content.state
+        self._journal = Journal(self.path, content.identity)
+        self._derived: dict[str, TraceSet] = {} if content.traces is None else {content.recipe_key: content.traces}
+        if content.damage and not self.read_only:
+            self.why_read_only = "the file is damaged"
+            if self._lock is not None:
+                self._lock.release()
+        self.recovered = self._recover()
+
+    def _recover(self) -> tuple[Entry, ...]:
+        """Apply the entries that the journal has beyond the saved ones."""
+        found = read_journal(self.path, self._content.identity)
+        damage = ["the journal of another study lies beside it"] if found.foreign else []
+        damage += [f"the journal: {found.damage}"] if found.damage else []
+        fresh = [entry for entry in found.entries if entry.number >= self._saved_entries]
+        applied: list[Entry] = []
+        for entry in fresh:
+            try:
+                history = self._history.with_entry(entry)
+            except ValueError as error:
+                damage.append(f"the journal: {error}")
+                break
+            self._state = (
+                self._history.moved(self._state, entry.state) if not entry.edits else _with(self._state, entry)
+            )
+            self._history = history
+            applied.append(entry)
+        self.damage = (*self.damage, *damage)
+        if not self.read_only:
+            self._tidy_journal(bool(damage), found.whole_byte, applied)
+        return tuple(applied)
+
+    def _tidy_journal(self, damaged: bool, whole_byte: int, applied: Sequence[Entry]) -> None:
+        path = self._journal.path
+        if not path.exists():
+            return
+        if damaged:
+            self._journal.set_aside()
+            if applied:
+                self._journal.append(applied)
+        elif path.stat().st_size != whole_byte:
+            self._journal.cut(whole_byte)
+
+    # -- what it holds --------------------------------------------------------------------------------------------
+
+    @property
+    def recipe(self) -> Recipe:
+        """The recipe in force."""
+        self._need("the recipe")
+        return self._state.recipe
+
+    @property
+    def decisions(self) -> Decisions:
+        """What was decided by hand."""
+        self._need("the decisions", "the journal")
+        return self._state.decisions
+
+    @property
+    def history(self) -> History:
+        """Every entry."""
+        self._need("the history")
+        return self._history
+
+    @property
+    def versions(self) -> Mapping[str, str]:
+        """Versions of Meseta and of the libraries with which the study was saved last."""
+        return self._content.versions
+
+    def _need(self, *parts: str) -> None:
+        """Raise the damage of a part before anybody takes what is left of it for the whole."""
+        for statement in self.damage:
+            if statement.startswith(parts):
+                raise StudyError(statement, str(self.path), "use a copy of the study")
 
     def traces(self, work: Work | None = None) -> TraceSet:
-        """Return the traces."""
-        return self._traces
+        """Return the traces; their samples stay in the file and are read block by block."""
+        key = self.recipe.key(FROM_RAW)
+        if key in self._derived:
+            return self._derived[key]
+        self._need("the traces")
+        raise StudyError("the traces were made with other settings", str(self.path), "")
 
     def analysis(self, recipe: Recipe | None = None, work: Work | None = None) -> Analysis:
         """Return the analysis of this study, by its own recipe or another one."""
         return Analysis(self.traces(work), recipe or self.recipe, self.decisions)
+
+    # -- changes --------------------------------------------------------------------------------------------------
+
+    def change(
+        self, *, recipe: Recipe | None = None, decisions: Decisions | None = None, text: str = ""
+    ) -> Entry | None:
+        """Put another recipe or other decisions in force, as one entry of the history.
+
+        The entry is durable in the journal before this returns.
+
+        Parameters
+        ----------
+        recipe : Recipe, optional
+        decisions : Decisions, optional
+        text : str
+            What was done, in the user's words; made from the change where empty.
+
+        Returns
+        -------
+        Entry or None
+            None where nothing changes.
+
+        Raises
+        ------
+        StudyError
+            Where the study cannot be changed, or the change could not be kept (nothing has changed then).
+        """
+        with self._guard:
+            after = State(recipe or self.recipe, decisions or self.decisions)
+            edits = difference(self._state, after)
+            if not edits:
+                return None
+            kind, said = words(edits)
+            return self._enter(self._history.change(kind, text or said, edits), after)
+
+    def keep(self, identities: Iterable[str], reason: str = "") -> Entry | None:
+        """Keep traces whatever the rules say."""
+        return self.change(decisions=self.decisions.with_verdict(identities, True, reason))
+
+    def reject(self, identities: Iterable[str], reason: str = "") -> Entry | None:
+        """Reject traces whatever the rules say."""
+        return self.change(decisions=self.decisions.with_verdict(identities, False, reason))
+
+    def remove(self, *parts: str | RemovedRange) -> Entry | None:
+        """Take recordings (by SHA-256) or ranges out of the study, in one action; :meth:`restore` brings them back."""
+        return self.change(decisions=self.decisions.with_removed(*parts))
+
+    def restore(self, *parts: str | RemovedRange) -> Entry | None:
+        """Bring removed recordings or ranges back."""
+        return self.change(decisions=self.decisions.with_restored(*parts))
+
+    def undo(self) -> Entry | None:
+        """Go back to the state before; None where there is none."""
+        target = self.history.undone()
+        return None if target is None else self._move("undo", target)
+
+    def redo(self) -> Entry | None:
+        """Go forward to the state that was left last; None where there is none."""
+        target = self.history.redone()
+        return None if target is None else self._move("redo", target)
+
+    def return_to(self, target: str | int) -> Entry | None:
+        """Go to a named state, or to the state after an entry."""
+        return self._move("return", self.history.find(target))
+
+    def name(self, name: str) -> Entry:
+        """Name the present state."""
+        return self._enter(self.history.mark("name", name), self._state)
+
+    def note(self, text: str) -> Entry:
+        """Write a note into the history."""
+        return self._enter(self.history.mark("note", text), self._state)
+
+    def discard_recovered(self) -> Entry | None:
+        """Return to the state of the last save, leaving what was recovered in the history."""
+        if not self.recovered:
+            return None
+        return self._move("return", self.recovered[0].parent)
+
+    def _move(self, kind: str, target: int) -> Entry | None:
+        with self._guard:
+            if target == self._history.state:
+                return None
+            shown = target if kind != "undo" else self._history.state
+            entry = self._history.move(kind, f"#{shown} {self._history.entries[shown].text}", target)
+            return self._enter(entry, self._history.moved(self._state, target))
+
+    def _enter(self, entry: Entry, after: State) -> Entry:
+        with self._guard:
+            self._need_writable()
+            history = self._history.with_entry(entry)
+            self._journal.append([entry])
+            self._history, self._state = history, after
+            return entry
+
+    def _need_writable(self) -> None:
+        if self.read_only:
+            raise StudyError(
+                f"cannot be changed: {self.why_read_only}", str(self.path), "see who holds it, or use a copy"
+            )
+
+    # -- saving ---------------------------------------------------------------------------------------------------
+
+    def save(self) -> None:
+        """Write recipe, decisions and history into the file, all or nothing; quick whatever the size.
+
+        Raises
+        ------
+        StudyError
+            Where there is no room: the last saved state and the journal are whole then.
+        """
+        with self._guard:
+            self._need_writable()
+            if len(self._history.entries) == self._saved_entries:
+                return
+            with changing(self.path) as root:
+                if self._state.recipe != self._saved.recipe:
+                    write_recipe(root, self._state.recipe)
+                if self._state.decisions != self._saved.decisions:
+                    write_decisions(root, self._state.decisions)
+                write_history(root, self._history)
+                write_versions(root)
+            self._saved, self._saved_entries = self._state, len(self._history.entries)
+            self._journal.clear()
+
+
+def _with(state: State, entry: Entry) -> State:
+    from meseta.study.state import applied
+
+    return applied(state, entry.edits)
