@@ -1,0 +1,229 @@
+"""The one runner of work off the window's thread: request in, response out, the newest wins.
+
+A request is a plain function of a :class:`~meseta.work.Work` that has captured every input when it was made; it
+touches no widget and no live model.  Its response comes back to the window's thread by a signal, with the request's
+number.  A newer request on the same channel cancels the older one and the older response is dropped on arrival.
+"""
+
+from __future__ import annotations
+
+import itertools
+import threading
+from collections.abc import Callable
+from concurrent.futures import Future, ThreadPoolExecutor
+from dataclasses import dataclass, field
+from typing import Any
+
+from PySide6.QtCore import QObject, QTimer, Signal
+
+from meseta.errors import Cancelled, MesetaError, WorkError
+from meseta.work import Progress, Work
+
+__all__ = ["Channel", "JobRunner", "Request", "Response"]
+
+Task = Callable[[Work, Callable[[Any], None]], Any]
+"""Takes the work and a function that hands over partial responses; returns the response."""
+
+SHOW_AFTER_MS = 300
+"""Work that ends sooner than this is never shown: a flickering progress bar says nothing."""
+
+
+@dataclass(frozen=True)
+class Channel:
+    """A kind of work of which only the newest request counts.
+
+    Attributes
+    ----------
+    name : str
+        Key of the channel.
+    quick : bool
+        Quick work (a trace to draw) has a thread of its own and never waits behind long work.
+    shown : bool
+        Whether progress stands in the status line.
+    """
+
+    name: str
+    quick: bool = False
+    shown: bool = True
+
+
+@dataclass(frozen=True)
+class Request:
+    """One piece of work: its number, what it is for the reader, and whom to tell."""
+
+    number: int
+    channel: Channel
+    label: str
+    task: Task
+    done: Callable[[Any], None]
+    failed: Callable[[MesetaError], None]
+    part: Callable[[Any], None]
+    cancel: threading.Event = field(default_factory=threading.Event)
+
+
+@dataclass(frozen=True)
+class Response:
+    """What came of a request: a result, a part of one, or an error in words."""
+
+    request: Request
+    result: Any = None
+    error: MesetaError | None = None
+    final: bool = True
+
+
+def _ignored(_: Any) -> None:
+    """Take a part that nobody asked for."""
+
+
+class JobRunner(QObject):
+    """Runs requests on a few threads (two quick, one long) and brings responses back to the window's thread."""
+
+    progressed = Signal(object)
+    """A :class:`~meseta.work.Progress` of the longest-running shown request, or None when nothing runs."""
+    failed = Signal(object)
+    """A :class:`~meseta.errors.MesetaError` that no one else took."""
+    idle = Signal()
+    """Nothing runs and nothing waits."""
+    _arrived = Signal(object)
+
+    def __init__(self, parent: QObject | None = None) -> None:
+        super().__init__(parent)
+        self._pools = {
+            quick: ThreadPoolExecutor(2 if quick else 1, thread_name_prefix="meseta-quick" if quick else "meseta-long")
+            for quick in (True, False)
+        }
+        self._numbers = itertools.count(1)
+        self._running: dict[int, tuple[Request, Future[None]]] = {}
+        self._newest: dict[str, int] = {}
+        self._progress: dict[int, Progress] = {}
+        self._shown_any = False
+        self._closed = False
+        self._arrived.connect(self._take)
+        self._clock = QTimer(self)
+        self._clock.setInterval(SHOW_AFTER_MS)
+        self._clock.timeout.connect(self._show_progress)
+
+    # -- asking ---------------------------------------------------------------------------------------------------
+
+    def submit(
+        self,
+        channel: Channel,
+        label: str,
+        task: Task,
+        done: Callable[[Any], None],
+        failed: Callable[[MesetaError], None] | None = None,
+        part: Callable[[Any], None] = _ignored,
+    ) -> int:
+        """Start a piece of work; an older request on the same channel is cancelled.
+
+        Returns
+        -------
+        int
+            Number of the request; 0 where the runner is closed.
+        """
+        if self._closed:
+            return 0
+        self.cancel(channel)
+        request = Request(next(self._numbers), channel, label, task, done, failed or self.failed.emit, part)
+        self._newest[channel.name] = request.number
+        self._running[request.number] = (request, self._pools[channel.quick].submit(self._run, request))
+        if not self._clock.isActive():
+            self._clock.start()
+        return request.number
+
+    def cancel(self, channel: Channel | None = None) -> None:
+        """Ask the work of a channel (or all work) to stop; its responses are dropped."""
+        for request, future in list(self._running.values()):
+            if channel is None or request.channel.name == channel.name:
+                request.cancel.set()
+                self._newest.pop(request.channel.name, None)
+                if future.cancel():
+                    self._forget(request)
+
+    @property
+    def busy(self) -> bool:
+        """Whether anything runs or waits."""
+        return bool(self._running)
+
+    def runs(self, channel: Channel) -> bool:
+        """Return whether the newest request of a channel is still under way."""
+        return channel.name in self._newest
+
+    def close(self) -> None:
+        """Cancel everything, wait for the threads, and take no more requests."""
+        self._closed = True
+        self._clock.stop()
+        self.cancel()
+        for pool in self._pools.values():
+            pool.shutdown(wait=True, cancel_futures=True)
+        self._running.clear()
+        self._newest.clear()
+
+    # -- on the worker's thread -----------------------------------------------------------------------------------
+
+    def _run(self, request: Request) -> None:
+        def report(progress: Progress) -> None:
+            self._progress[request.number] = progress
+
+        def part(result: Any) -> None:
+            self._arrived.emit(Response(request, result, final=False))
+
+        work = Work(report=report, cancel=request.cancel)
+        try:
+            work.check()
+            response = Response(request, request.task(work, part))
+        except MesetaError as error:
+            response = Response(request, error=error)
+        except Exception as error:  # noqa: BLE001 - a defect in a worker must become one visible message
+            response = Response(request, error=_defect(error, request.label))
+        self._arrived.emit(response)
+
+    # -- back on the window's thread ------------------------------------------------------------------------------
+
+    def _take(self, response: Response) -> None:
+        request = response.request
+        newest = self._newest.get(request.channel.name) == request.number
+        if response.final:
+            self._forget(request)
+            if newest:
+                del self._newest[request.channel.name]
+        if newest and not self._closed:
+            self._hand_over(response)
+        if not self._running:
+            self._rest()
+
+    def _hand_over(self, response: Response) -> None:
+        if response.error is None:
+            (response.request.done if response.final else response.request.part)(response.result)
+        elif not isinstance(response.error, Cancelled):
+            response.request.failed(response.error)
+
+    def _forget(self, request: Request) -> None:
+        self._running.pop(request.number, None)
+        self._progress.pop(request.number, None)
+
+    def _rest(self) -> None:
+        self._clock.stop()
+        self._clock.setInterval(SHOW_AFTER_MS)
+        if self._shown_any:
+            self._shown_any = False
+            self.progressed.emit(None)
+        self.idle.emit()
+
+    def _show_progress(self) -> None:
+        shown = [request for request, _ in self._running.values() if request.channel.shown]
+        if not shown:
+            return
+        self._clock.setInterval(100)
+        request = shown[0]
+        self._shown_any = True
+        self.progressed.emit(self._progress.get(request.number, Progress(request.label, 0, 0)))
+
+
+def _defect(error: Exception, label: str) -> WorkError:
+    """Return an unforeseen error as words a user can pass on."""
+    return WorkError(
+        f"a fault in Meseta stopped this work ({type(error).__name__}: {error})",
+        label,
+        "please report it with what you were doing; your data are unchanged",
+    )

@@ -1,0 +1,386 @@
+"""The main window: docks, menus, tool bar and status line, built from the tables of views and actions."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Any
+
+import numpy.typing as npt
+from PySide6.QtCore import QByteArray, QSettings, QSize, Qt, QTimer
+from PySide6.QtGui import QAction, QActionGroup, QCloseEvent, QDragEnterEvent, QDropEvent, QKeySequence
+from PySide6.QtWidgets import QDockWidget, QMainWindow, QMenu, QSizePolicy, QToolBar, QWidget
+
+from meseta.errors import MesetaError
+from meseta.recipe import Recipe
+from meseta.window.actions import ACTIONS, MENUS, ActionSpec
+from meseta.window.centre import Centre
+from meseta.window.commands import Commands
+from meseta.window.help import HelpBrowser
+from meseta.window.jobs import JobRunner
+from meseta.window.keeper import Keeper
+from meseta.window.recent import RecentFiles
+from meseta.window.session import Session
+from meseta.window.status import StatusLine
+from meseta.window.theme import Theme, ThemeKeeper
+from meseta.window.views import VIEWS, View
+
+__all__ = ["MainWindow"]
+
+LAYOUT_VERSION = 3
+"""Raised when docks are added or renamed, so that an older arrangement is not forced upon them."""
+
+_AREAS = {
+    "left": Qt.DockWidgetArea.LeftDockWidgetArea,
+    "right": Qt.DockWidgetArea.RightDockWidgetArea,
+    "below": Qt.DockWidgetArea.BottomDockWidgetArea,
+}
+
+
+class MainWindow(QMainWindow):
+    """The window.  It holds the session and lends its views what :class:`~meseta.window.frame.Frame` promises."""
+
+    def __init__(self, themes: ThemeKeeper, settings: QSettings, recovery: Path, recipe: Recipe | None = None) -> None:
+        super().__init__()
+        self.themes, self.settings = themes, settings
+        self.jobs = JobRunner(self)
+        self.session = Session(self.jobs, recipe, self)
+        self.keeper = Keeper(self.session, recovery)
+        self.recent = RecentFiles(settings)
+        self.commands = Commands(self, recovery)
+        self.actions_by_key: dict[str, QAction] = {}
+        self.docks: dict[str, QDockWidget] = {}
+        self.widgets: dict[str, QWidget] = {}
+        self.centre = Centre()
+        self.status = StatusLine(self.session)
+        self.help: HelpBrowser | None = None
+        self._first_state = QByteArray()
+        self._build()
+        self._connect()
+        self._remember()
+
+    # -- building -------------------------------------------------------------------------------------------------------
+
+    def _build(self) -> None:
+        self.setObjectName("meseta")
+        self.setAcceptDrops(True)
+        self.setDockNestingEnabled(True)
+        self.setCentralWidget(self.centre)
+        self.setStatusBar(self.status)
+        self.setCorner(Qt.Corner.BottomLeftCorner, Qt.DockWidgetArea.LeftDockWidgetArea)
+        self.setCorner(Qt.Corner.BottomRightCorner, Qt.DockWidgetArea.RightDockWidgetArea)
+        self.setTabPosition(Qt.DockWidgetArea.AllDockWidgetAreas, _tabs_on_top())
+        self._make_actions()
+        for view in VIEWS:
+            self._add_view(view)
+        self._tab_docks()
+        self._make_menus()
+        self._make_bar()
+        self._title()
+
+    def _make_actions(self) -> None:
+        for spec in ACTIONS:
+            action = QAction(spec.text, self)
+            action.setShortcuts([QKeySequence(keys) for keys in spec.keys])
+            action.setProperty("menu", spec.menu)
+            action.setToolTip(_tip(spec))
+            action.setStatusTip("")
+            action.triggered.connect(lambda _=False, key=spec.key: self.run_action(key))
+            self.actions_by_key[spec.key] = action
+            self.addAction(action)
+
+    def _add_view(self, view: View) -> None:
+        widget = view.make(self)
+        self.widgets[view.name] = widget
+        if view.area == "spine":
+            self.centre.spine.add(view, widget)  # type: ignore[arg-type]
+            toggle = QAction(view.title, self)
+            toggle.setCheckable(True)
+            toggle.setChecked(view.shown)
+            toggle.toggled.connect(lambda shown, name=view.name: self.centre.spine.set_shown(name, shown))
+        else:
+            dock = QDockWidget(view.title, self)
+            dock.setObjectName(view.name)
+            dock.setWidget(widget)
+            dock.setAccessibleName(view.title)
+            if view.area == "below":
+                dock.setTitleBarWidget(_nothing())
+            self.addDockWidget(_AREAS[view.area], dock)
+            dock.setVisible(view.shown)
+            self.docks[view.name] = dock
+            toggle = dock.toggleViewAction()
+            if view.steps:
+                dock.visibilityChanged.connect(
+                    lambda shown, one=view: self.session.pipeline.want(one.name, one.steps if shown else ())
+                )
+        toggle.setProperty("view", view.name)
+        toggle.setProperty("menu", "Views")
+        self.actions_by_key[f"view_{view.name}"] = toggle
+        self.addAction(toggle)
+
+    def _tab_docks(self) -> None:
+        """Lay the tables of the right side over one another; conditions and groups stand below them."""
+        right = [view.name for view in VIEWS if view.area == "right" and view.name not in ("conditions", "groups")]
+        for before, after in zip(right, right[1:], strict=False):
+            self.tabifyDockWidget(self.docks[before], self.docks[after])
+        if right:
+            self.docks[right[0]].raise_()
+        if "conditions" in self.docks and right:
+            self.splitDockWidget(self.docks[right[0]], self.docks["conditions"], Qt.Orientation.Vertical)
+            self.splitDockWidget(self.docks["conditions"], self.docks["groups"], Qt.Orientation.Vertical)
+
+    def _size_docks(self) -> None:
+        wide = max(self.width(), 1000)
+        docks = self.docks
+        self.resizeDocks(
+            [docks["steps"], docks["peaks"]], [232, min(max(wide // 5, 280), 420)], Qt.Orientation.Horizontal
+        )
+        self.resizeDocks([docks["strip"]], [max(self.height() // 5, 130)], Qt.Orientation.Vertical)
+        self.resizeDocks(
+            [docks["peaks"], docks["conditions"], docks["groups"]], [300, 200, 130], Qt.Orientation.Vertical
+        )
+
+    def _make_menus(self) -> None:
+        for name in MENUS:
+            menu = self.menuBar().addMenu(name)
+            for spec in (one for one in ACTIONS if one.menu == name):
+                if spec.line_before:
+                    menu.addSeparator()
+                menu.addAction(self.actions_by_key[spec.key])
+                if spec.key == "open_sample":
+                    self.recent_menu = menu.addMenu("Open again")
+            if name == "Look":
+                self._add_view_menu(menu)
+        self.recent_menu.aboutToShow.connect(self._fill_recent)
+
+    def _add_view_menu(self, menu: QMenu) -> None:
+        menu.addSeparator()
+        for number, view in enumerate(VIEWS, 1):
+            action = self.actions_by_key[f"view_{view.name}"]
+            if number <= 9:
+                action.setShortcut(QKeySequence(f"Ctrl+{number}"))
+            menu.addAction(action)
+        menu.addSeparator()
+        appearances = menu.addMenu("Appearance")
+        group = QActionGroup(self)
+        for appearance, text in (("system", "As the system"), ("light", "Light"), ("dark", "Dark")):
+            action = appearances.addAction(text)
+            action.setCheckable(True)
+            action.setChecked(self.themes.appearance == appearance)
+            action.triggered.connect(lambda _=False, one=appearance: self._choose_appearance(one))
+            group.addAction(action)
+
+    def _make_bar(self) -> None:
+        bar = QToolBar("Tools", self)
+        bar.setObjectName("tools")
+        bar.setMovable(False)
+        bar.setToolButtonStyle(Qt.ToolButtonStyle.ToolButtonTextOnly)
+        menu = ""
+        for spec in ACTIONS:
+            if not spec.bar:
+                continue
+            if menu and menu != spec.menu:
+                bar.addSeparator()
+            menu = spec.menu
+            bar.addAction(self.actions_by_key[spec.key])
+            button = bar.widgetForAction(self.actions_by_key[spec.key])
+            button.setText(spec.bar)
+            self.actions_by_key[spec.key].setIconText(spec.bar)
+            button.setAccessibleName(spec.text)
+        stretch = QWidget()
+        stretch.setSizePolicy(QSizePolicy.Policy.Expanding, QSizePolicy.Policy.Preferred)
+        bar.addWidget(stretch)
+        find = self.actions_by_key["find_action"]
+        find.setIconText("Find an action")
+        bar.addAction(find)
+        self.addToolBar(bar)
+
+    def _connect(self) -> None:
+        session = self.session
+        for signal in (session.traces_changed, session.undo.indexChanged, session.undo.cleanChanged):
+            signal.connect(self._refresh_actions)
+        session.document_changed.connect(lambda _: self._refresh_actions())
+        session.subset_changed.connect(lambda _: self._refresh_actions())
+        session.traces_changed.connect(self._traces_changed)
+        session.saved_changed.connect(lambda _: self._title())
+        session.problem.connect(self.status.complain)
+        session.result_changed.connect(lambda name: self.status.complain(None) if name == "peaks" else None)
+        self.jobs.failed.connect(self.status.complain)
+        self.keeper.failed.connect(self.status.complain)
+        self.centre.first.chosen.connect(self.run_action)
+        self._refresh_actions()
+
+    # -- remembering ----------------------------------------------------------------------------------------------------
+
+    def _remember(self) -> None:
+        """Take the place and arrangement of last time, if they belong to this arrangement of docks."""
+        self.resize(1360, 860)
+        geometry, state = self.settings.value("window/geometry"), self.settings.value("window/state")
+        self._restored = False
+        if isinstance(geometry, QByteArray):
+            self.restoreGeometry(geometry)
+        if isinstance(state, QByteArray):
+            self._restored = self.restoreState(state, LAYOUT_VERSION)
+        for name, panel in self.centre.spine.panels.items():
+            shown = self.settings.value(f"window/shown/{name}", True, bool)
+            self.actions_by_key[f"view_{name}"].setChecked(bool(shown))
+            panel.setVisible(bool(shown))
+        self.centre.spine.show_one_scale()
+        if not self._restored:
+            self._size_docks()
+        self._first_state = QByteArray() if self._restored else self.saveState(LAYOUT_VERSION)
+
+    def _keep_arrangement(self) -> None:
+        self.settings.setValue("window/geometry", self.saveGeometry())
+        self.settings.setValue("window/state", self.saveState(LAYOUT_VERSION))
+        for name, panel in self.centre.spine.panels.items():
+            self.settings.setValue(f"window/shown/{name}", not panel.isHidden())
+        self.settings.sync()
+
+    def arrange_as_first(self) -> None:
+        """Put every dock back where it stood at first."""
+        for view in VIEWS:
+            if view.area != "spine":
+                dock = self.docks[view.name]
+                dock.setFloating(False)
+                self.addDockWidget(_AREAS[view.area], dock)
+                dock.setVisible(view.shown)
+            else:
+                self.actions_by_key[f"view_{view.name}"].setChecked(view.shown)
+        self._tab_docks()
+        self._size_docks()
+
+    def _choose_appearance(self, appearance: str) -> None:
+        self.themes.choose(appearance)  # type: ignore[arg-type]
+        self.settings.setValue("appearance", appearance)
+
+    # -- what views may ask (Frame) -----------------------------------------------------------------------------------
+
+    @property
+    def theme(self) -> Theme:
+        """The colours in use."""
+        return self.themes.theme
+
+    def say(self, text: str) -> None:
+        """Show a passing remark in the status line."""
+        self.status.showMessage(text, 5000)
+
+    def show_help(self, page: str) -> None:
+        """Open a page of the built-in help."""
+        if self.help is None:
+            self.help = HelpBrowser(self)
+        self.help.open_page(page)
+
+    def run_action(self, name: str) -> None:
+        """Run one of the window's actions by its key."""
+        function: Callable[[], None] = getattr(self.commands, f"do_{name}")
+        try:
+            function()
+        except MesetaError as error:
+            self.status.complain(error)
+
+    def decide(self, rows: list[int], keep: bool | None) -> None:
+        """Keep or reject traces by hand, or leave them to the rules (None)."""
+        self.commands.decide(rows, keep)
+
+    def look_at(self, conductance_g0: float) -> None:
+        """Bring a conductance into view."""
+        self.commands.look_at(conductance_g0)
+
+    def reset_view(self) -> None:
+        """Show the whole of both axes."""
+        self.commands.do_whole()
+
+    def export_columns(self, name: str, columns: Mapping[str, npt.NDArray[Any]]) -> None:
+        """Ask where, and write columns as CSV off the window's thread."""
+        self.commands.export_columns(name, columns)
+
+    # -- following the session ----------------------------------------------------------------------------------------
+
+    def _traces_changed(self) -> None:
+        if self.session.traces is None:
+            self.centre.show_first()
+        else:
+            self.centre.show_spine()
+        self._title()
+
+    def _title(self) -> None:
+        session = self.session
+        if session.traces is None:
+            self.setWindowTitle("Meseta")
+            return
+        mark = "" if session.undo.isClean() else "*"
+        self.setWindowTitle(f"{session.name}{mark} — Meseta")
+
+    def _refresh_actions(self, *_: Any) -> None:
+        session = self.session
+        open_ = session.traces is not None
+        usable = {
+            "always": True,
+            "open": open_,
+            "conditions": open_ and bool(session.document.conditions.conditions),
+            "subset": open_ and session.subset is not None,
+        }
+        for spec in ACTIONS:
+            self.actions_by_key[spec.key].setEnabled(usable.get(spec.when, True))
+        undo, redo = self.actions_by_key["undo"], self.actions_by_key["redo"]
+        undo.setEnabled(session.undo.canUndo())
+        redo.setEnabled(session.undo.canRedo())
+        undo.setText(f"Undo: {session.undo.undoText()}" if session.undo.canUndo() else "Undo")
+        redo.setText(f"Redo: {session.undo.redoText()}" if session.undo.canRedo() else "Redo")
+
+    def _fill_recent(self) -> None:
+        self.recent_menu.clear()
+        for paths in self.recent.entries():
+            self.recent_menu.addAction(RecentFiles.title(paths), lambda paths=paths: self.commands.open_paths(paths))
+        if self.recent_menu.isEmpty():
+            self.recent_menu.addAction("nothing opened yet").setEnabled(False)
+
+    # -- files dropped, closing ---------------------------------------------------------------------------------------
+
+    def dragEnterEvent(self, event: QDragEnterEvent) -> None:  # noqa: N802 - Qt's name
+        """Take files and folders."""
+        if any(url.isLocalFile() for url in event.mimeData().urls()):
+            event.acceptProposedAction()
+
+    def dropEvent(self, event: QDropEvent) -> None:  # noqa: N802 - Qt's name
+        """Open what was dropped."""
+        paths = [url.toLocalFile() for url in event.mimeData().urls() if url.isLocalFile()]
+        event.acceptProposedAction()
+        QTimer.singleShot(0, self, lambda: self.commands.open_paths(paths))
+
+    def closeEvent(self, event: QCloseEvent) -> None:  # noqa: N802 - Qt's name
+        """Ask about what is not saved, then stop all work and leave."""
+        if not self.commands.may_leave():
+            event.ignore()
+            return
+        self._keep_arrangement()
+        self.shut_down(forget=True)
+        event.accept()
+
+    def shut_down(self, *, forget: bool) -> None:
+        """Stop all work and wait for it."""
+        self.jobs.close()
+        self.keeper.close(forget=forget)
+
+    def sizeHint(self) -> QSize:  # noqa: N802 - Qt's name
+        """Ask for a comfortable size."""
+        return QSize(1360, 860)
+
+
+def _tip(spec: ActionSpec) -> str:
+    keys = f" ({QKeySequence(spec.keys[0]).toString(QKeySequence.SequenceFormat.NativeText)})" if spec.keys else ""
+    return f"{spec.help or spec.text.rstrip(' …')}{keys}"
+
+
+def _nothing() -> QWidget:
+    """Return an empty title bar: the panel has a heading of its own."""
+    widget = QWidget()
+    widget.setFixedHeight(0)
+    return widget
+
+
+def _tabs_on_top() -> Any:
+    from PySide6.QtWidgets import QTabWidget
+
+    return QTabWidget.TabPosition.North
