@@ -88,7 +88,7 @@ def select(
         Where a rule cannot be understood; points at the word and proposes the nearest known one.
     """
     facts = Facts(traces, measures, plateaus, decisions)
-    drops = [_other_direction(traces, direction), *_removed(traces, decisions)]
+    drops = [_other_direction(traces, direction), *_damaged(traces), *_removed(traces, decisions)]
     rejected, kept_by_hand = _verdicts(facts)
     if rejected is not None:
         drops.append(rejected)
@@ -102,6 +102,13 @@ def _other_direction(traces: TraceSet, direction: str) -> _Drop:
     has = np.asarray(traces.table["direction"])
     names = np.char.add(has.astype(np.str_), " trace") if len(has) else has
     return _Drop(f"direction is {direction}", has != direction, names)
+
+
+def _damaged(traces: TraceSet) -> list[_Drop]:
+    """Return the traces of which a study has lost samples."""
+    damaged = np.asarray(traces.table.get("damaged", False), np.bool_)
+    title = "samples damaged in the study file"
+    return [_Drop(title, damaged, title)] if damaged.any() else []
 
 
 def _removed(traces: TraceSet, decisions: Decisions) -> list[_Drop]:

@@ -22,7 +22,7 @@ import numpy.typing as npt
 from meseta.errors import StudyError
 from meseta.study.columns import write_array
 from meseta.study.strict import dataset, filters, read_array, read_attribute
-from meseta.traces import Samples
+from meseta.traces import Quality, Samples
 
 __all__ = ["CHUNK_SAMPLES", "BlockFile", "ChunkSamples", "read_samples", "write_samples"]
 
@@ -68,7 +68,8 @@ class BlockFile:
 class ChunkSamples:
     """Samples of one channel behind a study file (see :class:`meseta.traces.Samples`).
 
-    Every chunk is checked against its checksum when it is first read.
+    Every chunk is checked against its checksum when it is first read.  Chunks in ``lost`` are known to be damaged:
+    their samples read as NaN, in a quality channel as not trusted.
     """
 
     file: BlockFile
@@ -78,7 +79,8 @@ class ChunkSamples:
     chunk: int
     places: npt.NDArray[np.int64]
     checksums: npt.NDArray[np.uint32]
-    _checked: npt.NDArray[np.bool_] = field(repr=False)
+    checked: npt.NDArray[np.bool_] = field(repr=False)
+    lost: frozenset[int] = frozenset()
 
     def __len__(self) -> int:
         return self.length
@@ -98,7 +100,9 @@ class ChunkSamples:
             low, high = number * self.chunk, min((number + 1) * self.chunk, self.length)
             begin, end = max(start, low), min(stop, high)
             into = out[begin - start : end - start]
-            if self._checked[number]:
+            if number in self.lost:
+                into[:] = np.nan if self.dtype.kind == "f" else Quality.UNTRUSTED
+            elif self.checked[number]:
                 self._bytes(number, begin - low, into)
             elif len(into) == high - low:
                 self._whole(number, into)
@@ -133,7 +137,7 @@ class ChunkSamples:
                 str(self.file.path),
                 "the other traces stay usable; import these recordings again",
             )
-        self._checked[number] = True
+        self.checked[number] = True
         return into
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import glob
 import os
 import uuid
 from collections.abc import Iterator
@@ -19,7 +20,18 @@ from meseta.study.migration import migrate
 from meseta.study.pages import PagedFile, log_of, room_remedy, sync_folder, whole_log
 from meseta.study.strict import read_attribute, reading
 
-__all__ = ["FORMAT", "SCHEMA", "changing", "is_study", "looking", "making"]
+__all__ = [
+    "FORMAT",
+    "SCHEMA",
+    "changing",
+    "clear_unfinished",
+    "is_study",
+    "looking",
+    "making",
+    "rewritten_of",
+    "swap",
+    "upgrade",
+]
 
 FORMAT: Final = "meseta study"
 SCHEMA: Final = 2
@@ -125,6 +137,29 @@ def upgrade(path: Path) -> Path | None:
     with changing(path) as root:
         migrate(root, schema, SCHEMA)
     return backup
+
+
+def rewritten_of(path: Path) -> Path:
+    """Return where a study that is written anew lies before it takes the place of the old one."""
+    return path.with_name(f".{path.name}-rewritten")
+
+
+def swap(beside: Path, path: Path) -> None:
+    """Put a finished file in the place of another one."""
+    try:
+        beside.replace(path)
+    except OSError as error:
+        beside.unlink(missing_ok=True)
+        raise StudyError(f"cannot be replaced ({error.strerror})", str(path), "close it elsewhere") from error
+    sync_folder(path.parent)
+
+
+def clear_unfinished(path: Path) -> None:
+    """Remove what killed processes left half written; only the holder of the lock may."""
+    rewritten = rewritten_of(path).name
+    for pattern in (f".{path.name}-*unfinished", f".{rewritten}-*unfinished", rewritten):
+        for left in path.parent.glob(glob.escape(pattern).replace("[*]", "*")):
+            left.unlink(missing_ok=True)
 
 
 def _backup(path: Path, schema: int) -> Path:

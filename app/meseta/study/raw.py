@@ -137,13 +137,13 @@ def _about(recording: Recording) -> dict[str, Any]:
     }
 
 
-def read_recordings(root: h5py.Group, sources: Sequence[Source]) -> dict[int, Recording]:
-    """Return the recordings that were copied, by the row of their source; readable while the file is open."""
+def read_recordings(root: h5py.Group, sources: Sequence[Source]) -> list[Recording]:
+    """Return the recordings that were copied, in the order of the sources; readable while the file is open."""
     found: dict[int, Recording] = {}
     if "raw" in root:
         for name in names(group(root, "raw")):
             found.update(_read_bundle(group(group(root, "raw"), name), sources))
-    return found
+    return [found[row] for row in sorted(found)]
 
 
 def _read_bundle(home: h5py.Group, sources: Sequence[Source]) -> dict[int, Recording]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import threading
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
@@ -14,13 +15,15 @@ from meseta.intake.recording import Recording
 from meseta.recipe import Recipe
 from meseta.selection import Decisions, RemovedRange
 from meseta.study.chunks import BlockFile
-from meseta.study.files import changing, is_study, upgrade
+from meseta.study.damage import find_losses, without_lost
+from meseta.study.files import changing, clear_unfinished, is_study, looking, rewritten_of, swap, upgrade
 from meseta.study.history import Entry, History
 from meseta.study.journal import Journal, read_journal
 from meseta.study.loading import load, write_content
 from meseta.study.lock import Lock
 from meseta.study.parts import FROM_RAW, write_decisions, write_history, write_recipe, write_versions
-from meseta.study.state import State, difference, words
+from meseta.study.raw import read_recordings
+from meseta.study.state import State, applied, difference, words
 from meseta.traces import TraceSet
 from meseta.work import Work
 
@@ -70,6 +73,8 @@ class Study:
         self._guard = threading.RLock()
         self._lock = None if read_only else self._locked(take_over)
         try:
+            if not self.read_only:
+                clear_unfinished(path)
             self.backup = None if self.read_only else upgrade(path)
             self._open()
         except BaseException:
@@ -162,31 +167,30 @@ class Study:
         damage = ["the journal of another study lies beside it"] if found.foreign else []
         damage += [f"the journal: {found.damage}"] if found.damage else []
         fresh = [entry for entry in found.entries if entry.number >= self._saved_entries]
-        applied: list[Entry] = []
+        replayed: list[Entry] = []
         for entry in fresh:
             try:
                 history = self._history.with_entry(entry)
             except ValueError as error:
                 damage.append(f"the journal: {error}")
                 break
-            self._state = (
-                self._history.moved(self._state, entry.state) if not entry.edits else _with(self._state, entry)
-            )
+            changed = applied(self._state, entry.edits)
+            self._state = changed if entry.edits else self._history.moved(self._state, entry.state)
             self._history = history
-            applied.append(entry)
+            replayed.append(entry)
         self.damage = (*self.damage, *damage)
         if not self.read_only:
-            self._tidy_journal(bool(damage), found.whole_byte, applied)
-        return tuple(applied)
+            self._tidy_journal(bool(damage), found.whole_byte, replayed)
+        return tuple(replayed)
 
-    def _tidy_journal(self, damaged: bool, whole_byte: int, applied: Sequence[Entry]) -> None:
+    def _tidy_journal(self, damaged: bool, whole_byte: int, replayed: Sequence[Entry]) -> None:
         path = self._journal.path
         if not path.exists():
             return
         if damaged:
             self._journal.set_aside()
-            if applied:
-                self._journal.append(applied)
+            if replayed:
+                self._journal.append(replayed)
         elif path.stat().st_size != whole_byte:
             self._journal.cut(whole_byte)
 
@@ -230,8 +234,19 @@ class Study:
         raise StudyError("the traces were made with other settings", str(self.path), "")
 
     def analysis(self, recipe: Recipe | None = None, work: Work | None = None) -> Analysis:
-        """Return the analysis of this study, by its own recipe or another one."""
-        return Analysis(self.traces(work), recipe or self.recipe, self.decisions)
+        """Return the analysis of this study, by its own recipe or another one.
+
+        Every sample is checked first: traces that have damaged ones are named in ``traces.notes["damage"]`` and left
+        out by the selection.
+        """
+        work = work or Work()
+        traces = self.traces(work)
+        return Analysis(without_lost(traces, find_losses(traces, work)), recipe or self.recipe, self.decisions)
+
+    def check(self, work: Work | None = None) -> list[str]:
+        """Read everything, and return what is damaged, in words; empty where all is whole."""
+        losses = find_losses(self.traces(work), work or Work())
+        return [*self.damage, *(str(loss) for loss in losses)]
 
     # -- changes --------------------------------------------------------------------------------------------------
 
@@ -354,11 +369,31 @@ class Study:
                     write_decisions(root, self._state.decisions)
                 write_history(root, self._history)
                 write_versions(root)
-            self._saved, self._saved_entries = self._state, len(self._history.entries)
-            self._journal.clear()
+            self._are_saved()
 
+    def _are_saved(self) -> None:
+        self._saved, self._saved_entries = self._state, len(self._history.entries)
+        self._journal.clear()
 
-def _with(state: State, entry: Entry) -> State:
-    from meseta.study.state import applied
+    def rewrite(self, work: Work | None = None, traces: TraceSet | None = None) -> None:
+        """Write the whole study anew and swap it in: room that saves left behind is given back.
 
-    return applied(state, entry.edits)
+        Parameters
+        ----------
+        work : Work, optional
+        traces : TraceSet, optional
+            Traces to put in the place of the present ones (made with other settings).
+        """
+        with self._guard:
+            self._need_writable()
+            work = work or Work()
+            chosen = self.traces(work) if traces is None else traces
+            beside = rewritten_of(self.path)
+            with looking(self.path) as root:
+                recordings = read_recordings(root, self._content.sources)
+                write_content(beside, chosen, self._state, self._history, recordings, work, self._content.identity)
+            if os.name == "nt":
+                self._blocks.close()  # there an open file cannot be replaced; traces handed out before end here
+            swap(beside, self.path)
+            self._are_saved()
+            self._open()
