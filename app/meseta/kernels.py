@@ -1,7 +1,8 @@
 """The one decorator of all compiled kernels, their cache, and the list that set-up compiles.
 
-A cached kernel that calls a kernel of another file keeps the old callee after an edit.  So the cache folder is
-named by a hash over every source file that holds kernels: after any edit all of them are compiled anew.
+A cached kernel that calls a kernel of another file keeps the old callee after an edit.  So a room's kernels call only
+kernels of their own room, and the room's cache folder is named by a hash over all its files that hold kernels: after any
+edit all kernels of that room are compiled anew.
 """
 
 from __future__ import annotations
@@ -11,6 +12,7 @@ import importlib
 import os
 import tempfile
 from collections.abc import Callable
+from functools import cache
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -21,6 +23,7 @@ KERNEL_MODULES = (
     "meseta.intake.kernels",
     "meseta.segmentation.noise_kernels",
     "meseta.segmentation.kernels",
+    "meseta.segmentation.stretch_kernels",
     "meseta.segmentation.finder_kernels",
     "meseta.segmentation.measure_kernels",
     "meseta.histograms.kernels",
@@ -32,26 +35,26 @@ Function = TypeVar("Function", bound=Callable[..., Any])
 _warm_ups: list[Callable[[], None]] = []
 
 
-def _source_hash() -> str:
-    """Return a hash over the sources of all kernels and the numba version."""
+def _source_hash(room: str) -> str:
+    """Return a hash over the sources of a room's kernels and the numba version."""
     import numba
 
     digest = hashlib.sha256(numba.__version__.encode())
     root = Path(__file__).parent
     for module in KERNEL_MODULES:
-        path = root.joinpath(*module.split(".")[1:]).with_suffix(".py")
-        if path.exists():
-            digest.update(path.read_bytes())
+        if module.split(".")[1] == room:
+            digest.update(root.joinpath(*module.split(".")[1:]).with_suffix(".py").read_bytes())
     return digest.hexdigest()[:16]
 
 
-def _cache_folder() -> str:
-    """Return a writable cache folder: the user's, else a temporary one."""
+@cache
+def _cache_folder(room: str) -> str:
+    """Return a writable cache folder for a room's kernels: the user's, else a temporary one."""
     import platformdirs
 
-    name = f"kernels-{_source_hash()}"
+    name = f"{room}-{_source_hash(room)}"
     for base in (platformdirs.user_cache_path("meseta"), Path(tempfile.gettempdir()) / f"meseta-{_user()}"):
-        folder = base / name
+        folder = base / "kernels" / name
         try:
             folder.mkdir(parents=True, exist_ok=True, mode=0o700)
             with tempfile.TemporaryFile(dir=folder):
@@ -65,19 +68,6 @@ def _user() -> str:
     return str(os.getuid()) if hasattr(os, "getuid") else os.environ.get("USERNAME", "user")
 
 
-_configured = False
-
-
-def _configure() -> None:
-    global _configured  # set once, at the first kernel of the process
-    if not _configured:
-        import numba
-
-        if not os.environ.get("NUMBA_CACHE_DIR"):
-            numba.config.CACHE_DIR = _cache_folder()
-        _configured = True
-
-
 def kernel(function: Function) -> Function:
     """Compile ``function`` on first use, cached on disk, without the interpreter lock.
 
@@ -86,7 +76,8 @@ def kernel(function: Function) -> Function:
     """
     import numba
 
-    _configure()
+    if not os.environ.get("NUMBA_CACHE_DIR"):
+        numba.config.CACHE_DIR = _cache_folder(function.__module__.split(".")[1])
     compiled: Function = numba.njit(nogil=True, cache=True, error_model="numpy")(function)
     return compiled
 

@@ -49,3 +49,15 @@ def test_kernels_have_one_home_a_room_and_all_compile():
     listed = {APP.joinpath(*module.split(".")).with_suffix(".py") for module in kernels.KERNEL_MODULES}
     assert homes - {APP / "meseta" / "kernels.py"} <= listed
     assert kernels.compile_all() >= 1
+
+
+def test_kernels_call_only_kernels_of_their_own_room():
+    # The cache of a room is renewed when one of its kernel files changes, and only then.
+    from meseta.kernels import KERNEL_MODULES
+
+    for module in KERNEL_MODULES:
+        path = APP.joinpath(*module.split(".")).with_suffix(".py")
+        room = module.split(".")[1]
+        for line in path.read_text(encoding="utf-8").splitlines():
+            if line.startswith(("from meseta.", "import meseta.")) and "meseta.kernels" not in line:
+                assert line.split()[1].split(".")[1] == room, f"{path}: {line}"

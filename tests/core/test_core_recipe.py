@@ -71,8 +71,13 @@ def test_a_setting_without_value_is_a_call_error():
 
 def test_settings_take_toml_values_and_bare_words():
     recipe = Recipe().with_settings(
-        ["histogram.axis=linear", "calibration.bias_volt=0.1", 'intake.channels={ch0={role="current",unit="nA"}}',
-         "calibration.amplifier=none", "plateaus.low_g0=1e-5"]
+        [
+            "histogram.axis=linear",
+            "calibration.bias_volt=0.1",
+            'intake.channels={ch0={role="current",unit="nA"}}',
+            "calibration.amplifier=none",
+            "plateaus.low_g0=1e-5",
+        ]
     )
     assert recipe.histogram.axis == "linear"
     assert recipe.calibration.bias_volt == 0.1
