@@ -391,4 +391,3 @@ def recipe(preset: str | None, settings: tuple[str, ...], as_json: bool) -> None
     """Print a complete recipe with a comment for every setting."""
     made = _recipe(None, preset, settings)
     _tell(as_json, made.model_dump(mode="json"), [made.text(comments=True).rstrip()])
-

@@ -1,8 +1,8 @@
 """The one decorator of all compiled kernels, their cache, and the list that set-up compiles.
 
 A cached kernel that calls a kernel of another file keeps the old callee after an edit.  So a room's kernels call only
-kernels of their own room, and the room's cache folder is named by a hash over all its files that hold kernels: after any
-edit all kernels of that room are compiled anew.
+kernels of their own room, and the room's cache folder is named by a hash over all its files that hold kernels: after
+any edit all kernels of that room are compiled anew.
 """
 
 from __future__ import annotations
@@ -14,7 +14,7 @@ import tempfile
 from collections.abc import Callable
 from functools import cache
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, TypeVar, cast
 
 __all__ = ["KERNEL_MODULES", "compile_all", "kernel", "warm_up"]
 
@@ -77,9 +77,9 @@ def kernel(function: Function) -> Function:
     import numba
 
     if not os.environ.get("NUMBA_CACHE_DIR"):
-        numba.config.CACHE_DIR = _cache_folder(function.__module__.split(".")[1])
-    compiled: Function = numba.njit(nogil=True, cache=True, error_model="numpy")(function)
-    return compiled
+        numba.config.CACHE_DIR = _cache_folder(function.__module__.split(".")[1])  # type: ignore[attr-defined]
+    compiled: Any = numba.njit(nogil=True, cache=True, error_model="numpy")(function)
+    return cast(Function, compiled)
 
 
 def warm_up(function: Callable[[], None]) -> Callable[[], None]:

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import threading
+from itertools import pairwise
 
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+
 from meseta.errors import Cancelled, InputError, MesetaError, RecipeError, nearest
 from meseta.work import Work, blocks_of
 
@@ -43,7 +45,7 @@ def test_results_come_in_order_on_any_number_of_threads(threads):
     assert results == [item * item for item in range(40)]
     assert told[0].done == 0
     assert told[-1].done == told[-1].total == 80
-    assert all(earlier.done <= later.done for earlier, later in zip(told, told[1:], strict=False))
+    assert all(earlier.done <= later.done for earlier, later in pairwise(told))
 
 
 @pytest.mark.parametrize("threads", [1, 3])

@@ -1,4 +1,4 @@
-"""Constants and elementary formulas against tests/reference/reference_values.json (CODATA 2022, computed, published)."""
+"""Constants and elementary formulas against tests/reference/reference_values.json (CODATA 2022, computed)."""
 
 from __future__ import annotations
 
@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+
 from meseta import quantities as q
 
 REFERENCE = {

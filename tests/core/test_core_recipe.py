@@ -7,14 +7,35 @@ import tomllib
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+
 from meseta import Recipe
 from meseta.errors import CallError, RecipeError
 
-STABLE = """calibration.bias_volt calibration.amplifier calibration.gain_volt_per_ampere calibration.offset_volt
-calibration.volt_per_decade calibration.reference_ampere calibration.series_resistance_ohm calibration.full_scale_volt
-calibration.nm_per_volt calibration.nm_per_second calibration.sampling_hertz cutting.pull_is intake.channels
-alignment.zero_at_g0 plateaus.sensitivity histogram.axis histogram.bins_per_decade histogram.bin_width_g0
-histogram.low_g0 histogram.high_g0 histogram.direction resampling.replicates resampling.seed""".split()
+STABLE = [
+    "calibration.bias_volt",
+    "calibration.amplifier",
+    "calibration.gain_volt_per_ampere",
+    "calibration.offset_volt",
+    "calibration.volt_per_decade",
+    "calibration.reference_ampere",
+    "calibration.series_resistance_ohm",
+    "calibration.full_scale_volt",
+    "calibration.nm_per_volt",
+    "calibration.nm_per_second",
+    "calibration.sampling_hertz",
+    "cutting.pull_is",
+    "intake.channels",
+    "alignment.zero_at_g0",
+    "plateaus.sensitivity",
+    "histogram.axis",
+    "histogram.bins_per_decade",
+    "histogram.bin_width_g0",
+    "histogram.low_g0",
+    "histogram.high_g0",
+    "histogram.direction",
+    "resampling.replicates",
+    "resampling.seed",
+]
 
 
 @pytest.mark.parametrize("name", STABLE)

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+
 from meseta import TraceSet
 from meseta.errors import CallError
 from meseta.traces import TraceIdentity
