@@ -249,8 +249,7 @@ def _peaks(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Input
         inputs["counts"],
         inputs["plateaus"].take(inputs["selection"].kept[inputs["plateaus"].trace]),
         work,
-        floor_g0=inputs["noise"].floor_g0,
-        floor_sigma_g0=inputs["noise"].floor_sigma_g0,
+        floor=peaks.Floor.of(inputs["noise"]),
     )
 
 

@@ -2,5 +2,6 @@
 
 from meseta.peaks.fit import fit_histogram
 from meseta.peaks.results import PeakFit, PeakTable
+from meseta.peaks.windows import Floor
 
-__all__ = ["PeakFit", "PeakTable", "fit_histogram"]
+__all__ = ["Floor", "PeakFit", "PeakTable", "fit_histogram"]

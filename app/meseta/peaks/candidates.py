@@ -17,6 +17,7 @@ __all__ = ["Candidate", "find_candidates"]
 Floats = npt.NDArray[np.float64]
 
 _FINEST = {"logarithmic": 0.025, "linear": 0.05}
+_SUB_QUANTUM, _SUB_QUANTUM_SCALE = -0.4, 0.045
 _LEAST_CURVATURE = 0.06
 _LEAST_SIGNIFICANCE = 5.0
 _SCALE_STEP = 2**0.5
@@ -76,25 +77,56 @@ def find_candidates(
     if len(u) < 8 or not data.any():
         return []
     step = float(u[1] - u[0])
+    scales = _scales(u, step, logarithmic)
+    layers = [_curvature(data, np.asarray(traces_in_bin, float), replicates, scale / step) for scale in scales]
     found: list[Candidate] = []
-    for scale in _scales(u, step, logarithmic):
-        curvature, error = _curvature(data, np.asarray(traces_in_bin, float), replicates, scale / step)
-        for at in _tops(curvature):
-            good = curvature[at] >= _LEAST_CURVATURE and curvature[at] >= _LEAST_SIGNIFICANCE * error[at]
-            if good and usable[0] + 0.5 * scale <= u[at] <= usable[1] - 0.5 * scale:
-                width = scale * np.sqrt(max(1.0 / curvature[at] - 1.0, 0.25))
-                width = min(width, 2.0 * scale)
-                if all(abs(u[at] - other.position_u) > 1.2 * max(scale, other.width_u) for other in found):
-                    z = curvature[at] / max(error[at], 1e-300)
-                    found.append(Candidate(float(u[at]), float(width), float(curvature[at]), float(z), 0.0))
+    for level, scale in enumerate(scales):
+        curvature, error = layers[level]
+        for at in _hilltops(curvature, error):
+            inside = usable[0] + 0.5 * scale <= u[at] <= usable[1] - 0.5 * scale
+            if logarithmic and u[at] < _SUB_QUANTUM and scale < _SUB_QUANTUM_SCALE:
+                continue  # below one quantum nothing is that narrow but steps of the converter and jumps
+            width = _width(np.array([layer[0][at] for layer in layers]), scales, level)
+            if inside and all(abs(u[at] - other.position_u) > max(scale, other.width_u) for other in found):
+                z = curvature[at] / max(error[at], 1e-300)
+                found.append(Candidate(float(u[at]), width, float(curvature[at]), float(z), 0.0))
     return _with_share(sorted(found, key=lambda candidate: candidate.position_u), u, data)
+
+
+def _hilltops(curvature: Floats, error: Floats) -> npt.NDArray[np.int64]:
+    """Return the highest point of every stretch of positive curvature that is large and no chance.
+
+    Two tops that no stretch of non-positive curvature parts are one peak with noise on it.
+    """
+    hill = curvature > 0
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], hill, [False]]).astype(np.int8)))
+    tops = [first + int(np.argmax(curvature[first:last])) for first, last in edges.reshape(-1, 2)]
+    good = [
+        at
+        for at in tops
+        if 0 < at < len(curvature) - 1
+        and curvature[at] >= _LEAST_CURVATURE
+        and curvature[at] >= _LEAST_SIGNIFICANCE * error[at]
+    ]
+    return np.array(good, np.int64)
+
+
+def _width(profile: Floats, scales: Floats, level: int) -> float:
+    """Return the width of a peak from how its curvature grows with the scale.
+
+    A lone Gaussian has s²/(w² + s²), so that curvature / sqrt(s) is highest at s = sqrt(3) w.
+    """
+    response = profile[level:] / np.sqrt(scales[level:])
+    falls = np.flatnonzero(np.diff(response) < 0)
+    best = level + (int(falls[0]) if len(falls) else len(response) - 1)
+    return float(max(scales[best] / np.sqrt(3.0), scales[level] / 2.0))
 
 
 def _scales(u: Floats, step: float, logarithmic: bool) -> Floats:
     span = float(u[-1] - u[0])
     finest = _FINEST["logarithmic"] if logarithmic else _FINEST["linear"] * span / 5.0
     finest = max(2.0 * step, finest)
-    coarsest = min(span / 6.0, 0.6) if logarithmic else span / 8.0
+    coarsest = min(span / 6.0, 0.5) if logarithmic else span / 8.0
     number = max(int(np.log(max(coarsest / finest, 1.0)) / np.log(_SCALE_STEP)) + 1, 1)
     return np.asarray(finest * _SCALE_STEP ** np.arange(number), np.float64)
 
@@ -123,11 +155,6 @@ def _curvature(
     # var(s² d'' / d): second derivative of a Gaussian kernel, contributions of 2 (counts a trace) each.
     independent = np.maximum(reach, 0.5) * 2.0 * scale_bins * np.sqrt(np.pi) / 0.75
     return hill, np.where(smooth > 0, np.sqrt(2.0 / independent), np.inf)
-
-
-def _tops(values: Floats) -> npt.NDArray[np.int64]:
-    inner = values[1:-1]
-    return np.flatnonzero((inner > values[:-2]) & (inner >= values[2:])) + 1
 
 
 def _with_share(found: list[Candidate], u: Floats, data: Floats) -> list[Candidate]:

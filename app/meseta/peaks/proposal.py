@@ -6,15 +6,13 @@ as independent (AIC, BIC) always ask for more peaks.  Whole blocks of traces are
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
 import numpy as np
 import numpy.typing as npt
 
 from meseta.peaks.fitting import fit_model
 from meseta.peaks.model import Model
 
-__all__ = ["block_counts", "held_out_gain", "number_of_peaks"]
+__all__ = ["block_counts", "held_out_gain"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -71,23 +69,3 @@ def _deviance(counts: Floats, expected: Floats) -> float:
     with np.errstate(divide="ignore", invalid="ignore"):
         terms = np.where(counts > 0, counts * np.log(counts / mu), 0.0)
     return float(2.0 * (mu - counts + terms).sum())
-
-
-def number_of_peaks(blocks: Floats, models: Sequence[Model], errors: float = 1.0) -> int:
-    """Return how many peaks of a nested series of models the held-out blocks support.
-
-    Parameters
-    ----------
-    blocks : (folds, bins) float64
-        Counts of blocks of traces over the bins of the models.
-    models : sequence of Model
-        With 0, 1, 2 ... peaks, each with one more than the one before.
-    errors : float
-        Standard errors by which a further peak has to be better.
-    """
-    chosen = 0
-    for number in range(1, len(models)):
-        gain, error = held_out_gain(blocks, models[chosen], models[number])
-        if gain > errors * error:
-            chosen = number
-    return chosen

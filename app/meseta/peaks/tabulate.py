@@ -103,7 +103,7 @@ def _rows(
     plateaus: PlateauTable | None,
 ) -> list[_Row]:
     fitted, model = part.fitted, part.fitted.model
-    replicates, factor = part.replicates, float(getattr(resampling, "factor", 1.0))
+    replicates, factor = part.replicates, 1.0 if resampling is None else resampling.widen
     counts = histogram.counts[part.window.first : part.window.last].astype(float)
     verdicts = fit_verdicts(fitted, counts)
     intervals = [_interval(fitted, replicates, column, factor) for column in range(3)]
@@ -227,11 +227,11 @@ def _mode(histogram: ConductanceHistogram, logarithmic: bool, near: tuple[float,
     u = np.log10(np.maximum(edges, 1e-300)) if logarithmic else edges
     middle, density = (u[1:] + u[:-1]) / 2, histogram.counts / np.diff(u)
     smooth = gaussian_filter1d(density, max((near[1] - near[0]) / 8 / float(np.median(np.diff(u))), 0.5))
-    inside = np.flatnonzero((middle >= near[0]) & (middle <= near[1]))
-    if len(inside) < 3:
+    inside = np.flatnonzero((u[1:] >= near[0]) & (u[:-1] <= near[1]))
+    if not len(inside):
         return float("nan")
     top = int(inside[np.argmax(smooth[inside])])
-    if top in (inside[0], inside[-1]) or not 0 < top < len(middle) - 1:
+    if not 0 < top < len(middle) - 1 or smooth[top] < max(smooth[top - 1], smooth[top + 1]):
         return float("nan")
     left, here, right = smooth[top - 1 : top + 2]
     bend = left - 2 * here + right

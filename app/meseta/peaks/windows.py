@@ -7,17 +7,32 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
+from scipy.ndimage import gaussian_filter1d
 
 from meseta.histograms.results import ConductanceHistogram, Grid
 from meseta.peaks.candidates import Candidate
 from meseta.recipe.peaks import PeakSettings, PeakStart
+from meseta.segmentation.results import NoiseModel
 
-__all__ = ["Start", "Window", "rebinned", "starts_of", "to_axis", "usable_range", "windows_of"]
+__all__ = ["Floor", "Start", "Window", "rebinned", "starts_of", "to_axis", "usable_range", "windows_of"]
 
 Floats = npt.NDArray[np.float64]
 
 _REACH = 4.0
 _FLOOR_SIGMAS = 6.0
+
+
+@dataclass(frozen=True)
+class Floor:
+    """Reading with the contact open, in G0: mean and standard deviation of a sample."""
+
+    mean_g0: float
+    sigma_g0: float
+
+    @classmethod
+    def of(cls, noise: NoiseModel) -> Floor | None:
+        """Return the floor of a noise model; None where no trace was shown to reach it."""
+        return cls(noise.floor_g0, noise.floor_sigma_g0) if noise.floor_traces else None
 
 
 @dataclass(frozen=True)
@@ -56,19 +71,17 @@ def to_axis(conductance_g0: float, logarithmic: bool) -> float:
     return float(np.log10(conductance_g0)) if logarithmic else float(conductance_g0)
 
 
-def usable_range(
-    histogram: ConductanceHistogram, floor_g0: float | None, floor_sigma_g0: float | None
-) -> tuple[float, float]:
+def usable_range(histogram: ConductanceHistogram, floor: Floor | None) -> tuple[float, float]:
     """Return the range of the axis in which a peak may lie: from clear above the floor to the upper end.
 
-    The floor is a peak of the histogram too, and no conductance of a contact.  Where its mean and spread are not given,
-    it is looked for at the lower end of a logarithmic axis.
+    The floor is a peak of the histogram too, and no conductance of a contact.  Where it is not given, it is looked for
+    at the lower end of a logarithmic axis.
     """
     grid = histogram.grid
     u, logarithmic = grid.u_edges, grid.axis == "logarithmic"
     low = float(u[0])
-    if floor_g0 is not None and floor_sigma_g0 is not None and np.isfinite([floor_g0, floor_sigma_g0]).all():
-        top = floor_g0 + _FLOOR_SIGMAS * floor_sigma_g0
+    if floor is not None and np.isfinite([floor.mean_g0, floor.sigma_g0]).all():
+        top = floor.mean_g0 + _FLOOR_SIGMAS * floor.sigma_g0
         if top > 0 or not logarithmic:
             low = max(low, to_axis(top, logarithmic))
     elif logarithmic:
@@ -79,32 +92,30 @@ def usable_range(
 def _floor_edge(u: Floats, counts: Floats) -> float:
     """Return the upper end of a floor peak at the lower end of the axis, or the lowest edge where there is none.
 
-    A floor peak is the highest of all, lies in the lower half of what was counted, and ends in a fall of more than a
-    factor of ten within one decade.
+    A floor peak is the highest point of the lower half of what was counted, and is followed by a steep fall (a factor
+    of ten within a decade); it ends where the fall gives way.
     """
-    from scipy.ndimage import gaussian_filter1d
-
-    seen = np.flatnonzero(counts)
-    if len(seen) < 8:
-        return float(u[0])
     step = float(u[1] - u[0])
-    smooth = gaussian_filter1d(counts, max(0.05 / step, 1.0))
-    top = int(np.argmax(smooth))
-    decade = round(1.0 / step)
-    after = smooth[top : top + decade]
-    if top > seen[0] + 0.5 * (seen[-1] - seen[0]) or after.min() > 0.1 * smooth[top]:
+    seen = np.flatnonzero(counts)
+    if len(seen) < 8 or step >= 0.2:
         return float(u[0])
-    falling = np.diff(np.log(np.maximum(smooth[top:], 1e-12 * smooth[top])))
-    steep = falling < 0.25 * falling.min()
-    ends = np.flatnonzero(~steep & (np.arange(len(steep)) > np.argmin(falling)))
-    return float(u[top + (int(ends[0]) if len(ends) else len(falling))])
+    smooth = gaussian_filter1d(counts, max(0.1 / step, 1.0))
+    half = seen[0] + (seen[-1] - seen[0]) // 2 + 1
+    top = int(np.argmax(smooth[:half]))
+    decade, pause = round(1.0 / step), max(round(0.15 / step), 1)
+    fall = np.log10(np.maximum(smooth[top:], 1e-9 * smooth[top]) / smooth[top])
+    if fall[: decade + 1].min() > -1.0:
+        return float(u[0])
+    slope = np.gradient(fall, step)
+    steepest = int(np.argmin(slope[: decade + 1]))
+    gentle = np.convolve((slope[steepest:] > -0.7).astype(float), np.ones(pause), "valid") >= pause
+    ends = np.flatnonzero(gentle)
+    return float(u[top + steepest + int(ends[0])]) if len(ends) else float(u[0])
 
 
-def starts_of(settings: PeakSettings, found: Sequence[Candidate], grid: Grid) -> list[Start]:
-    """Return the peaks that the user asks for, or those that were found."""
-    if settings.peaks:
-        return sorted((_asked(peak, grid) for peak in settings.peaks), key=lambda start: start.position_u)
-    return [Start(candidate.position_u, candidate.width_u) for candidate in found]
+def starts_of(settings: PeakSettings, grid: Grid) -> list[Start]:
+    """Return the peaks that the user asks for, sorted by position."""
+    return sorted((_asked(peak, grid) for peak in settings.peaks), key=lambda start: start.position_u)
 
 
 def _asked(peak: PeakStart, grid: Grid) -> Start:
@@ -153,6 +164,8 @@ def windows_of(
         bottom = low if settings.fit_low_g0 is not None else max(low, group[0].position_u - _REACH * group[0].width_u)
         top = high if settings.fit_high_g0 is not None else min(high, group[-1].position_u + _REACH * group[-1].width_u)
         for other in others:
+            if any(abs(other.position_u - s.position_u) < 1.5 * (s.width_u + other.width_u) for s in group):
+                continue
             if other.position_u < group[0].position_u and settings.fit_low_g0 is None:
                 bottom = max(bottom, (other.position_u + group[0].position_u) / 2)
             if other.position_u > group[-1].position_u and settings.fit_high_g0 is None:

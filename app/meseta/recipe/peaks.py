@@ -64,7 +64,7 @@ class PeakSettings(Section):
     peaks: list[PeakStart] = setting(
         None, "Peaks", "Peaks to fit, with starting values; empty: proposed from the histogram.", factory=list
     )
-    most: int = setting(4, "Most peaks", "Largest number of peaks that is proposed.", ge=1, le=20)
+    most: int = setting(4, "Most peaks", "Largest number of peaks that is proposed above 0.4 G0, and below.", ge=1, le=20)
     fit_low_g0: float | None = setting(
         None,
         "Fit from",

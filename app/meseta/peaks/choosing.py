@@ -1,0 +1,200 @@
+"""Which peaks are fitted, and on which stretch of the axis: asked for by the user, or proposed."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.histograms.results import ConductanceHistogram, CountMatrix, Resampling
+from meseta.peaks.candidates import Candidate, find_candidates
+from meseta.peaks.fitting import Fitted, fit_model
+from meseta.peaks.model import WIDTH_TO_FWHM, Model
+from meseta.peaks.modelling import model_of
+from meseta.peaks.proposal import block_counts, held_out_gain
+from meseta.peaks.windows import Start, Window, rebinned, starts_of, to_axis, windows_of
+from meseta.recipe.peaks import PeakSettings
+
+__all__ = ["Chooser"]
+
+Floats = npt.NDArray[np.float64]
+
+_FEWEST_BINS = 8
+_LEAST_SHARE = 0.03
+_LEAST_HEIGHT = 0.2
+_SUB_QUANTUM_G0 = 0.4
+_SUB_QUANTUM_FWHM = 0.1
+_ROUNDS = 4
+
+
+@dataclass(frozen=True)
+class Chooser:
+    """What is known when peaks are chosen.
+
+    Attributes
+    ----------
+    usable : (float, float)
+        Range of the axis in which a peak may lie.
+    template : (bins,) float64
+        Shape of a template background; empty where there is none.
+    """
+
+    histogram: ConductanceHistogram
+    settings: PeakSettings
+    resampling: Resampling | None
+    counts: CountMatrix | None
+    usable: tuple[float, float]
+    template: Floats
+
+    def data(self, window: Window) -> Floats:
+        """Return the counts of a window."""
+        return self.histogram.counts[window.first : window.last].astype(float)
+
+    def model(self, window: Window) -> Model:
+        """Return the model of a window with the settings' shape, background and ties."""
+        return self.varied(window, window.first, window.last, 1, self.settings.background)
+
+    def varied(self, window: Window, first: int, last: int, merge: int, background: str) -> Model:
+        """Return the model of a window over another range of bins, merged, with another background."""
+        grid, settings = self.histogram.grid, self.settings
+        return model_of(grid, settings, window.starts, (first, last), merge, background, self.template)
+
+    def windows(self) -> tuple[list[Window], str]:
+        """Return where to fit what, or why nothing can be fitted."""
+        grid = self.histogram.grid
+        if grid.bins < _FEWEST_BINS:
+            return [], f"no fit: {grid.bins} bins are too few"
+        if not self.histogram.counts.any():
+            return [], "no fit: the histogram is empty"
+        if self.settings.peaks:
+            windows = self._settled(starts_of(self.settings, grid), [])
+        else:
+            windows = self._proposed(self._found())
+            if not windows:
+                return [], "no peak found"
+        good = [window for window in windows if self._fittable(window)]
+        return good, "" if good else f"no fit: fewer than {_FEWEST_BINS} bins with counts in the range of the fit"
+
+    def _fittable(self, window: Window) -> bool:
+        return window.last - window.first >= _FEWEST_BINS and bool(self.data(window).any())
+
+    def _found(self) -> list[Candidate]:
+        """Return the places that look like peaks, the most distinct first."""
+        u, settings = self.histogram.grid.u_edges, self.settings
+        logarithmic = self.histogram.grid.axis == "logarithmic"
+        low, high = self.usable
+        if settings.fit_low_g0 is not None:
+            low = max(low, to_axis(settings.fit_low_g0, logarithmic))
+        if settings.fit_high_g0 is not None:
+            high = min(high, to_axis(settings.fit_high_g0, logarithmic))
+        found = find_candidates(
+            (u[1:] + u[:-1]) / 2,
+            self.histogram.counts,
+            self.histogram.traces_in_bin,
+            None if self.resampling is None else self.resampling.counts,
+            (low, high),
+            logarithmic,
+        )
+        return sorted((place for place in found if place.share >= _LEAST_SHARE), key=lambda place: -place.curvature)
+
+    def _proposed(self, found: Sequence[Candidate]) -> list[Window]:
+        """Return windows with those of the found peaks that left-out traces support, one after the other."""
+        blocks = self._blocks()
+        chosen: list[Start] = []
+        windows: list[Window] = []
+        for place in found:
+            new = Start(place.position_u, place.width_u)
+            if sum(self._below_quantum(start) == self._below_quantum(new) for start in chosen) >= self.settings.most:
+                continue
+            trial = sorted([*chosen, new], key=lambda start: start.position_u)
+            settled = self._settled(trial, found)
+            window = next((w for w in settled if any(_same(start, new) for start in w.starts)), None)
+            if window is not None and self._supported(window, new, blocks):
+                chosen, windows = trial, settled
+        return windows
+
+    def _below_quantum(self, start: Start) -> bool:
+        """Return whether a peak is a molecular one by its place; each side has its own largest number of peaks."""
+        return start.position_u < to_axis(_SUB_QUANTUM_G0, self.histogram.grid.axis == "logarithmic")
+
+    def _settled(self, starts: Sequence[Start], found: Sequence[Candidate]) -> list[Window]:
+        """Return windows round the peaks as fitted: fit, move the windows, fit again, until they stand still."""
+        grid, settings = self.histogram.grid, self.settings
+        windows = windows_of(starts, grid, self.usable, settings, found)
+        for _ in range(_ROUNDS):
+            moved: list[Start] = []
+            for window in windows:
+                moved += self._moved(window) if self._fittable(window) else window.starts
+            again = windows_of(sorted(moved, key=lambda s: s.position_u), grid, self.usable, settings, found)
+            again = [replace(w, starts=tuple(_origin(s, starts) for s in w.starts)) for w in again]
+            if [(w.first, w.last) for w in again] == [(w.first, w.last) for w in windows]:
+                break
+            windows = again
+        return windows
+
+    def _moved(self, window: Window) -> list[Start]:
+        """Return the starts of a window moved to where the fit puts them, if that is near."""
+        fitted = fit_model(self.model(window), self.data(window))
+        same_axis = fitted.model.logarithmic == (self.histogram.grid.axis == "logarithmic")
+        if not fitted.converged or not same_axis:
+            return list(window.starts)
+        moved = []
+        for start, (_, position, width, _) in zip(window.starts, fitted.peaks, strict=True):
+            near = abs(position - start.position_u) < 3.0 * start.width_u
+            sane = 0.3 * start.width_u < width < 4.0 * start.width_u
+            moved.append(replace(start, position_u=float(position), width_u=float(width)) if near and sane else start)
+        return moved
+
+    def _supported(self, window: Window, new: Start, blocks: Floats | None) -> bool:
+        """Return whether a further peak stands out, and foretells traces left out of the fit better than none."""
+        if not self._fittable(window):
+            return False
+        settings = self.settings.model_copy(update={"tie": "none", "equal_relative_widths": False})
+        number = next(at for at, start in enumerate(window.starts) if _same(start, new))
+        bins = (window.first, window.last)
+        background = settings.background
+        larger = model_of(self.histogram.grid, settings, window.starts, bins, 1, background, self.template)
+        fitted = fit_model(larger, self.data(window))
+        if not self._stands_out(fitted, number):
+            return False
+        if blocks is None:
+            return True
+        others = tuple(start for start in window.starts if not _same(start, new))
+        smaller = model_of(self.histogram.grid, settings, others, bins, 1, background, self.template)
+        gain, error = held_out_gain(blocks[:, window.first : window.last], smaller, larger)
+        return gain > error
+
+    def _stands_out(self, fitted: Fitted, number: int) -> bool:
+        """Return whether a fitted peak is one: inside its range, narrower than it, no ripple on what is beneath."""
+        _, position, width, _ = fitted.peaks[number]
+        low, high = fitted.model.range_u
+        if not fitted.converged or not low < position < high or width * WIDTH_TO_FWHM > 0.8 * (high - low):
+            return False
+        curves = fitted.model.curves(fitted.inner)
+        at = int(np.argmin(np.abs((fitted.model.low + fitted.model.high) / 2 - position)))
+        own = curves.components[number][at]
+        if own < _LEAST_HEIGHT * (curves.total[at] - own):
+            return False
+        narrow = fitted.model.logarithmic and position < np.log10(_SUB_QUANTUM_G0)
+        return not (narrow and width * WIDTH_TO_FWHM < _SUB_QUANTUM_FWHM)
+
+    def _blocks(self) -> Floats | None:
+        """Return the counts of blocks of consecutive traces on the histogram's bins, if traces are known."""
+        if self.counts is None:
+            return None
+        rows = np.flatnonzero(self.counts.used) if self.resampling is None else self.resampling.rows
+        if len(rows) < 20:
+            return None
+        blocks = rebinned(block_counts(self.counts.counts, rows), self.counts.merge)
+        return blocks if blocks.shape[1] == self.histogram.grid.bins else None
+
+
+def _same(start: Start, other: Start) -> bool:
+    return start.position_u == other.position_u
+
+
+def _origin(moved: Start, starts: Sequence[Start]) -> Start:
+    """Return the start that a moved one came from, so that every round begins where the first began."""
+    return min(starts, key=lambda start: abs(start.position_u - moved.position_u))

@@ -1,0 +1,114 @@
+"""From starting values on the axis to the model that is fitted."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.errors import CallError
+from meseta.histograms.results import ConductanceHistogram, CountMatrix, Grid
+from meseta.peaks.model import Model
+from meseta.peaks.windows import Start, rebinned
+from meseta.recipe.peaks import PeakSettings
+from meseta.segmentation.results import PlateauTable
+
+__all__ = ["background_template", "is_logarithmic", "model_of"]
+
+Floats = npt.NDArray[np.float64]
+
+
+def model_of(
+    grid: Grid,
+    settings: PeakSettings,
+    starts: tuple[Start, ...],
+    bins: tuple[int, int],
+    merge: int,
+    background: str,
+    template: Floats,
+) -> Model:
+    """Return the model of some peaks over a range of bins of a grid."""
+    first, last = bins
+    last -= (last - first) % merge
+    logarithmic = is_logarithmic(grid, settings)
+    edges_g0 = grid.edges_g0[first : last + 1 : merge]
+    edges = np.log10(edges_g0) if logarithmic else edges_g0
+    placed = [_on_axis(start, grid, logarithmic) for start in starts]
+    position, width = np.array([s.position_u for s in placed]), np.array([s.width_u for s in placed])
+    span, step = float(edges[-1] - edges[0]), float(np.diff(edges).min())
+    numbers = np.array([start.multiple or rank + 1.0 for rank, start in enumerate(starts)])
+    return Model(
+        shape=settings.shape,
+        background="template" if background == "tunnelling" else background,
+        low=np.ascontiguousarray(edges[:-1]),
+        high=np.ascontiguousarray(edges[1:]),
+        logarithmic=logarithmic,
+        position_u=position,
+        width_u=np.clip(width, 0.5 * step, span),
+        position_low=np.maximum(np.array([s.low_u for s in placed]), edges[0] - width),
+        position_high=np.minimum(np.array([s.high_u for s in placed]), edges[-1] + width),
+        width_low=np.full(len(placed), 0.3 * step),
+        width_high=np.full(len(placed), span),
+        fixed_position=np.array([s.fixed for s in placed], bool),
+        fixed_width=np.array([s.fixed_width for s in placed], bool),
+        position_tie=settings.tie,
+        equal_relative_widths=settings.equal_relative_widths,
+        multiples=numbers,
+        template=rebinned(template[first:last], merge) if len(template) else template,
+    )
+
+
+def is_logarithmic(grid: Grid, settings: PeakSettings) -> bool:
+    """Return whether the axis of the fit is logarithmic."""
+    return (grid.axis if settings.axis == "as_histogram" else settings.axis) == "logarithmic"
+
+
+def _on_axis(start: Start, grid: Grid, logarithmic: bool) -> Start:
+    """Return a start on the axis of the fit, where that is not the axis of the histogram."""
+    if logarithmic == (grid.axis == "logarithmic"):
+        return start
+    if logarithmic:
+        position = np.log10(start.position_u)
+        low, high = (np.log10(max(bound, 1e-300)) if bound > 0 else -np.inf for bound in (start.low_u, start.high_u))
+        width = start.width_u / start.position_u / np.log(10)
+    else:
+        position, low, high = (10.0**value for value in (start.position_u, start.low_u, start.high_u))
+        width = start.width_u * position * np.log(10)
+    return replace(start, position_u=float(position), width_u=float(width), low_u=float(low), high_u=float(high))
+
+
+def background_template(
+    histogram: ConductanceHistogram,
+    settings: PeakSettings,
+    counts: CountMatrix | None,
+    plateaus: PlateauTable | None,
+    template: npt.ArrayLike | None,
+) -> Floats:
+    """Return the shape of a template background, an empty array where none is wanted."""
+    if settings.background == "template":
+        if template is None or np.shape(template) != histogram.counts.shape:
+            raise CallError(
+                "the background 'template' needs a shape on the histogram's bins",
+                "peaks.background",
+                "give the counts of a blank recording, or choose another background",
+            )
+        return np.ascontiguousarray(template, float)
+    if settings.background != "tunnelling":
+        return np.empty(0)
+    if template is not None:
+        return np.ascontiguousarray(template, float)
+    if counts is None or plateaus is None:
+        raise CallError(
+            "the background 'tunnelling' is made of the traces without a plateau, and a histogram alone has none",
+            "peaks.background",
+            "fit from the traces, or choose another background",
+        )
+    bare = counts.used.copy()
+    bare[plateaus.trace[plateaus.kind == "molecule"]] = False
+    shape: Floats = rebinned(counts.counts[bare].sum(axis=0, dtype=np.int64).astype(float), counts.merge)
+    if not shape.any() or len(shape) != len(histogram.counts):
+        raise CallError(
+            "no trace is without a plateau", "peaks.background", "choose another background than 'tunnelling'"
+        )
+    return shape
