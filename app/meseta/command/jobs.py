@@ -1,0 +1,204 @@
+"""The commands of the main job: window, peek, run, gather, recipe."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+
+from meseta.command.frame import (
+    RecipeChoice,
+    bad_plain,
+    json_option,
+    list_bad,
+    open_analysis,
+    recipe_from,
+    recipe_options,
+    strict_option,
+    tell,
+    working,
+)
+from meseta.command.printed import result_lines
+from meseta.errors import CallError, Cancelled, InputError, MesetaError
+from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.run import RunResult
+
+__all__ = ["gather", "peek", "recipe", "run", "run_one", "window"]
+
+
+@click.command()
+@click.argument("files", nargs=-1, type=click.Path())
+@recipe_options
+@json_option
+def window(
+    files: tuple[str, ...] = (),
+    recipe_path: str | None = None,
+    preset: str | None = None,
+    settings: tuple[str, ...] = (),
+    as_json: bool = False,
+) -> None:
+    """Open the window, on a study or on recordings."""
+    recipe = recipe_from(recipe_path, preset, settings) if recipe_path or preset or settings else None
+    try:
+        from meseta.window import open_window
+    except ImportError as error:
+        raise CallError(
+            f"the window cannot be opened ({error})",
+            "",
+            "install Qt's system libraries as the README says; all other commands work without",
+        ) from error
+    code = open_window([str(path) for path in files], recipe)
+    tell(as_json, {"exit": code}, [])
+    if code:
+        raise click.exceptions.Exit(code)
+
+
+@click.command()
+@click.argument("files", nargs=-1, required=True, type=click.Path())
+@recipe_options
+@strict_option
+@json_option
+def peek(
+    files: tuple[str, ...],
+    recipe_path: str | None,
+    preset: str | None,
+    settings: tuple[str, ...],
+    strict: bool,
+    as_json: bool,
+) -> None:
+    """Check files: what was recognised, what would be assumed and why, what is odd."""
+    from meseta import study
+
+    recipe = recipe_from(recipe_path, preset, settings)
+    with working() as work:
+        checks, bad = study.describe(files, recipe, work)
+    list_bad(bad, strict)
+    lines = [line for check in checks for line in check.lines()]
+    tell(as_json, {"files": [check.as_dict() for check in checks], "bad_files": bad_plain(bad)}, lines)
+
+
+@click.command()
+@click.argument("files", nargs=-1, required=True, type=click.Path())
+@click.option("--out", "folder", required=True, type=click.Path(path_type=Path), help="Folder for the result.")
+@click.option("--each", is_flag=True, help="Every file or folder is a recording of its own, in DIR/name/.")
+@recipe_options
+@strict_option
+@json_option
+def run(
+    files: tuple[str, ...],
+    folder: Path,
+    each: bool,
+    recipe_path: str | None,
+    preset: str | None,
+    settings: tuple[str, ...],
+    strict: bool,
+    as_json: bool,
+) -> None:
+    """Do the whole job: tables, figures, report and study of recordings or of a study."""
+    from meseta.run import check_output
+
+    with working() as work:
+        if not each:
+            check_output(folder)
+            outcome = run_one(files, folder, (recipe_path, preset, settings), strict, work)
+            tell(as_json, outcome.summary | {"out": str(folder)}, result_lines(outcome.summary, outcome.folder))
+            return
+        summaries, bad = _run_each(files, folder, (recipe_path, preset, settings), strict, work)
+    lines = [line for one in summaries for line in result_lines(one.summary, one.folder)]
+    answer = {
+        "out": str(folder),
+        "recordings": {one.folder.name: one.summary for one in summaries},
+        "bad_files": bad_plain(bad),
+    }
+    tell(as_json, answer, lines)
+
+
+def run_one(files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bool, work: Work) -> RunResult:
+    """Do the whole job on one recording or study; errors after work began have exit code 1."""
+    from meseta.run import run_analysis
+
+    analysis, bad = open_analysis(files, choice, strict, work)
+    title = Path(files[0]).stem if len(files) == 1 else f"{len(files)} recordings"
+    try:
+        return run_analysis(analysis, folder, work, bad, title)
+    except MesetaError as error:
+        raise _later(error) from error
+
+
+def _later(error: MesetaError) -> MesetaError:
+    """Return an error of work that had begun: exit code 1, unless the user stopped it."""
+    if error.exit_code == 2:
+        error.exit_code = 1
+    return error
+
+
+def _run_each(
+    files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bool, work: Work
+) -> tuple[list[RunResult], list[MesetaError]]:
+    from meseta import intake
+
+    done: list[RunResult] = []
+    bad: list[MesetaError] = []
+    for path in intake.expand(files):
+        name = _free_name(Path(path).name.split(".")[0] or "recording", {one.folder.name for one in done})
+        try:
+            done.append(run_one([str(path)], folder / name, choice, strict, work))
+        except Cancelled:
+            raise
+        except MesetaError as error:
+            bad.append(error)
+    list_bad(bad, strict)
+    if not done:
+        raise InputError("none of the recordings could be analysed", str(folder), "see the lines above")
+    return done, bad
+
+
+def _free_name(name: str, taken: set[str]) -> str:
+    number, free = 2, name
+    while free in taken:
+        free, number = f"{name}-{number}", number + 1
+    return free
+
+
+@click.command()
+@click.argument("files", nargs=-1, type=click.Path())
+@click.option("--into", "study_path", required=True, type=click.Path(path_type=Path), help="Study to add to.")
+@click.option("--follow", is_flag=True, help="Keep taking in new files until interrupted.")
+@recipe_options
+@strict_option
+@json_option
+def gather(
+    files: tuple[str, ...],
+    study_path: Path,
+    follow: bool,
+    recipe_path: str | None,
+    preset: str | None,
+    settings: tuple[str, ...],
+    strict: bool,
+    as_json: bool,
+) -> None:
+    """Add recordings to a study without analysing them."""
+    from meseta import study
+
+    if not files:
+        raise CallError("no files were given", "gather", "name files or a folder")
+    recipe = recipe_from(recipe_path, preset, settings) if recipe_path or preset or settings else None
+    with working() as work:
+        answer, bad = study.gather(files, study_path, recipe, work, follow)
+    list_bad(bad, strict)
+    lines = [f"{answer['recordings_added']} recordings added to {study_path}, {answer['traces']} traces in all"]
+    tell(as_json, answer | {"bad_files": bad_plain(bad)}, lines)
+
+
+@click.command()
+@click.option("--preset", help="A preset: metal or molecule.")
+@click.option("--set", "settings", multiple=True, metavar="SECTION.FIELD=VALUE", help="Change one setting.")
+@json_option
+def recipe(preset: str | None, settings: tuple[str, ...], as_json: bool) -> None:
+    """Print a complete recipe with a comment for every setting."""
+    made = recipe_from(None, preset, settings)
+    tell(as_json, made.model_dump(mode="json"), [made.text(comments=True).rstrip()])
