@@ -31,6 +31,7 @@ from meseta.recipe.peaks import PeakSettings
 from meseta.recipe.plateaus import PlateauSettings
 from meseta.recipe.resampling import ResamplingSettings
 from meseta.recipe.selection import SelectionSettings
+from meseta.recipe.study import StudySettings
 from meseta.resources import resource
 
 __all__ = ["Recipe"]
@@ -61,6 +62,7 @@ class Recipe(BaseModel):
     resampling: ResamplingSettings = Field(default_factory=ResamplingSettings, title="Intervals")
     peaks: PeakSettings = Field(default_factory=PeakSettings, title="Peaks")
     figure: FigureSettings = Field(default_factory=FigureSettings, title="Figure")
+    study: StudySettings = Field(default_factory=StudySettings, title="Study file")
 
     # -- in ---------------------------------------------------------------------------------------------------
 

@@ -24,7 +24,7 @@ from meseta.study.columns import write_array
 from meseta.study.strict import dataset, filters, read_array, read_attribute
 from meseta.traces import Quality, Samples
 
-__all__ = ["CHUNK_SAMPLES", "BlockFile", "ChunkSamples", "read_samples", "write_samples"]
+__all__ = ["CHUNK_SAMPLES", "BlockFile", "ChunkSamples", "SampleRow", "read_samples"]
 
 CHUNK_SAMPLES: Final = 262_144
 """Samples a chunk: 1 MiB of float32."""
@@ -141,42 +141,81 @@ class ChunkSamples:
         return into
 
 
-def write_samples(
-    parent: h5py.Group,
-    name: str,
-    samples: Samples,
-    dtype: npt.DTypeLike,
-    unit: str = "",
-    wrote: Callable[[int], None] = lambda _: None,
-) -> None:
-    """Write samples as an unfiltered chunked dataset, and ``<name>_checksums`` beside it.
+class SampleRow:
+    """Writes samples as an unfiltered chunked dataset, and ``<name>_checksums`` beside it; can go on with one.
 
-    ``wrote`` is called with the number of samples written, chunk by chunk.
+    Parameters
+    ----------
+    parent : h5py.Group
+    name : str
+    dtype : dtype
+    unit : str
+    expected : int
+        Number of samples to come, by which the size of the chunks is chosen.
+    written : ChunkSamples, optional
+        What the dataset holds already.
     """
-    kind = np.dtype(dtype).newbyteorder("<")
-    chunk = min(max(1 << (len(samples) - 1).bit_length(), 4096), CHUNK_SAMPLES)  # a small study stays small
-    made = parent.create_dataset(name, shape=(len(samples),), maxshape=(None,), chunks=(chunk,), dtype=kind)
-    made.attrs["unit"] = unit
-    checksums = _append(made, samples, 0, len(samples), chunk, wrote)
-    write_array(parent, f"{name}_checksums", np.array(checksums, np.uint32))
 
+    def __init__(
+        self,
+        parent: h5py.Group,
+        name: str,
+        dtype: npt.DTypeLike,
+        unit: str,
+        expected: int,
+        written: ChunkSamples | None = None,
+    ) -> None:
+        self.parent, self.name = parent, name
+        if written is None:
+            # a small study stays small
+            chunk = min(max(1 << max(expected - 1, 0).bit_length(), 4096), CHUNK_SAMPLES)
+            kind = np.dtype(dtype).newbyteorder("<")
+            self._made = parent.create_dataset(name, shape=(0,), maxshape=(None,), chunks=(chunk,), dtype=kind)
+            self._made.attrs["unit"] = unit
+            self.length, self._checksums = 0, list[int]()
+        else:
+            self._made, chunk = parent[name], written.chunk
+            self.length = len(written)
+            self._checksums = written.checksums[: self.length // chunk].tolist()
+        self._chunk, self._dtype = chunk, self._made.dtype
+        self._part = np.zeros(chunk, self._dtype)
+        whole = self.length // chunk * chunk
+        if written is not None:
+            self._part[: self.length - whole] = written.read(whole, self.length)
 
-def _append(
-    made: h5py.Dataset, samples: Samples, first: int, last: int, chunk: int, wrote: Callable[[int], None]
-) -> list[int]:
-    checksums = []
-    for start in range(first, last, chunk):
-        stop = min(start + chunk, last)
-        block = np.ascontiguousarray(samples.read(start, stop), made.dtype)
-        checksums.append(zlib.crc32(block.view(np.uint8).data))
-        padded = block if len(block) == chunk else np.concatenate([block, np.zeros(chunk - len(block), made.dtype)])
-        made.id.write_direct_chunk((start,), padded.tobytes())
-        wrote(stop - start)
-    return checksums
+    def append(self, samples: Samples, wrote: Callable[[int], None] = lambda _: None) -> None:
+        """Add samples; ``wrote`` is called with the number of samples written, chunk by chunk."""
+        done = 0
+        while done < len(samples):
+            filled = self.length % self._chunk
+            count = min(self._chunk - filled, len(samples) - done)
+            self._part[filled : filled + count] = samples.read(done, done + count)
+            self.length += count
+            done += count
+            if filled + count == self._chunk:
+                self._flush(self._chunk)
+            wrote(count)
+
+    def finish(self) -> None:
+        """Write the last, partly filled chunk and the checksums."""
+        filled = self.length % self._chunk
+        if filled:
+            self._flush(filled)
+        self._made.resize((self.length,))
+        write_array(self.parent, f"{self.name}_checksums", np.array(self._checksums, np.uint32))
+
+    def _flush(self, filled: int) -> None:
+        """Write the present chunk; its checksum is that of the samples, without what fills it up."""
+        self._part[filled:] = 0
+        first = (self.length - 1) // self._chunk * self._chunk
+        self._checksums.append(zlib.crc32(self._part[:filled].view(np.uint8).data))
+        if self._made.shape[0] < first + self._chunk:
+            self._made.resize((first + self._chunk,))
+        self._made.id.write_direct_chunk((first,), self._part.tobytes())
 
 
 def read_samples(parent: h5py.Group, name: str, file: BlockFile) -> tuple[ChunkSamples, str]:
-    """Return the samples of a dataset that :func:`write_samples` wrote, and their unit."""
+    """Return the samples of a dataset that :class:`SampleRow` wrote, and their unit."""
     found = dataset(parent, name)
     if found.ndim != 1 or found.chunks is None or filters(found) or found.dtype.kind not in "fiu":
         raise ValueError(f"'{name}' is not a row of unfiltered chunks")

@@ -1,4 +1,4 @@
-"""A TraceSet in the study file: group ``/traces`` and table ``/sources``."""
+"""Traces and the list of recordings, read from the study file; see :mod:`meseta.study.growing` for writing."""
 
 from __future__ import annotations
 
@@ -9,15 +9,14 @@ from typing import Any
 import h5py
 import numpy as np
 
-from meseta.study.chunks import BlockFile, read_samples, write_samples
-from meseta.study.columns import json_text, write_array, write_columns, write_text
+from meseta.study.chunks import BlockFile, read_samples
+from meseta.study.columns import write_array
 from meseta.study.strict import group, names, read_array, read_attribute, read_text
 from meseta.traces import Channel, Drive, PhaseTable, Source, TraceSet
-from meseta.work import Work
 
-__all__ = ["read_sources", "read_traces", "write_sources", "write_traces"]
+__all__ = ["PHASES", "read_sources", "read_traces", "write_sources"]
 
-_PHASES = ("trace", "start", "stop", "kind")
+PHASES = ("trace", "start", "stop", "kind")
 _SOURCES = ("sha256", "name", "size_byte", "reader", "layout")
 _NUMBERS = ("size_byte",)
 
@@ -44,40 +43,6 @@ def read_sources(root: h5py.Group) -> tuple[tuple[Source, ...], tuple[str, ...]]
     return sources, kept
 
 
-def write_traces(root: h5py.Group, traces: TraceSet, recipe_key: str, work: Work) -> None:
-    """Write ``/traces``, block by block; ``recipe_key`` says by which settings they were made."""
-    home = root.create_group("traces")
-    home.attrs["key"] = traces.key
-    home.attrs["recipe_key"] = recipe_key
-    home.attrs["drive_unit"] = traces.drive.unit
-    write_array(home, "offsets", traces.offsets)
-    write_array(home, "drive_start", traces.drive.start, traces.drive.unit)
-    write_array(home, "drive_step", traces.drive.step, traces.drive.unit)
-    write_text(home, "notes", json_text(traces.notes))
-    write_columns(home.create_group("phases"), {name: getattr(traces.phases, name) for name in _PHASES})
-    write_columns(home.create_group("table"), traces.table)
-    _write_channels(home, traces, work)
-
-
-def _write_channels(home: h5py.Group, traces: TraceSet, work: Work) -> None:
-    relative, quality = traces.drive.relative, traces.quality
-    total = traces.samples * (len(traces.channels) + (relative is not None) + (quality is not None))
-    done = 0
-
-    def wrote(samples: int) -> None:
-        nonlocal done
-        done += samples
-        work.tell("writing the study", done, total, "samples")
-
-    channels = home.create_group("channels")
-    for name, channel in traces.channels.items():
-        write_samples(channels, name, channel.samples, np.float32, channel.unit, wrote)
-    if relative is not None:
-        write_samples(home, "drive_relative", relative, np.float32, traces.drive.unit, wrote)
-    if quality is not None:
-        write_samples(home, "quality", quality, np.uint8, "", wrote)
-
-
 def read_traces(root: h5py.Group, file: BlockFile, sources: tuple[Source, ...]) -> tuple[TraceSet, str]:
     """Return the traces of a study and the key of the settings that made them.
 
@@ -95,7 +60,7 @@ def read_traces(root: h5py.Group, file: BlockFile, sources: tuple[Source, ...]) 
             if not name.endswith("_checksums")
         },
         drive=Drive(read_array(home, "drive_start"), read_array(home, "drive_step"), unit, relative),
-        phases=PhaseTable(*(read_array(phases, name) for name in _PHASES)),
+        phases=PhaseTable(*(read_array(phases, name) for name in PHASES)),
         table={name: read_array(table, name) for name in names(table)},
         sources=sources,
         key=str(read_attribute(home, "key")),

@@ -10,13 +10,12 @@ from typing import TypeVar
 import h5py
 
 from meseta.errors import MesetaError
-from meseta.intake.recording import Recording
 from meseta.study.chunks import BlockFile
-from meseta.study.content import read_sources, read_traces, write_sources, write_traces
+from meseta.study.content import read_sources, read_traces, write_sources
 from meseta.study.files import looking, making
+from meseta.study.growing import TraceWriter
 from meseta.study.history import History
 from meseta.study.parts import (
-    FROM_RAW,
     read_decisions,
     read_history,
     read_recipe,
@@ -26,13 +25,12 @@ from meseta.study.parts import (
     write_recipe,
     write_versions,
 )
-from meseta.study.raw import write_recordings
 from meseta.study.state import State
 from meseta.study.strict import names, read_attribute, reading
 from meseta.traces import Source, TraceSet
 from meseta.work import Work
 
-__all__ = ["Content", "load", "write_content"]
+__all__ = ["Content", "Fill", "load", "write_content", "write_whole_traces"]
 
 Part = TypeVar("Part")
 _KNOWN = frozenset(
@@ -114,26 +112,26 @@ def _traces(root: h5py.Group, blocks: BlockFile, sources: tuple[Source, ...]) ->
     return read_traces(root, blocks, sources)
 
 
-def write_content(
-    path: Path,
-    traces: TraceSet,
-    state: State,
-    history: History,
-    recordings: Sequence[Recording],
-    work: Work,
-    identity: str = "",
-) -> None:
-    """Write a whole study; a file of that name is replaced once everything is written."""
-    copied = {one.source.sha256 for one in recordings}
+Fill = Callable[[h5py.File], tuple[TraceSet, Sequence[str]]]
+
+
+def write_content(path: Path, state: State, history: Callable[[], History], fill: Fill, identity: str = "") -> None:
+    """Write a whole study; a file of that name is replaced once everything is written.
+
+    ``fill`` writes ``/traces`` and ``/raw``; it returns the traces with their sources, and how each of these is kept.
+    ``history`` is asked for after that.
+    """
     with making(path, identity) as root:
-        kept = [
-            "copied" if one.sha256 in copied else "linked" if one.name != "memory" else "none" for one in traces.sources
-        ]
+        traces, kept = fill(root)
         write_sources(root, traces.sources, kept)
         write_recipe(root, state.recipe)
         write_decisions(root, state.decisions)
-        write_history(root, history)
+        write_history(root, history())
         write_versions(root)
-        if recordings:
-            write_recordings(root, recordings, traces.sources, work)
-        write_traces(root, traces, state.recipe.key(FROM_RAW), work)
+
+
+def write_whole_traces(root: h5py.Group, traces: TraceSet, recipe_key: str, work: Work) -> None:
+    """Write ``/traces`` with one set of traces."""
+    writer = TraceWriter(root, work, traces.samples)
+    writer.append(traces)
+    writer.finish(traces.key, recipe_key)

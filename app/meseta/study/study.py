@@ -2,81 +2,65 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
-import threading
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from types import TracebackType
 from typing import Self
 
+import h5py
+
 from meseta.analysis import Analysis
-from meseta.errors import CallError, StudyError
-from meseta.intake.recording import Recording
+from meseta.errors import StudyError
+from meseta.intake.files import FoundFile
+from meseta.intake.reading import traces_from
 from meseta.recipe import Recipe
-from meseta.selection import Decisions, RemovedRange
 from meseta.study.chunks import BlockFile
+from meseta.study.content import write_sources
 from meseta.study.damage import find_losses, without_lost
 from meseta.study.files import changing, clear_unfinished, is_study, looking, rewritten_of, swap, upgrade
-from meseta.study.history import Entry, History
-from meseta.study.journal import Journal, read_journal
-from meseta.study.loading import load, write_content
+from meseta.study.gathering import Added, take_in
+from meseta.study.growing import TraceWriter
+from meseta.study.loading import Content, load, write_content, write_whole_traces
 from meseta.study.lock import Lock
-from meseta.study.parts import FROM_RAW, write_decisions, write_history, write_recipe, write_versions
-from meseta.study.raw import read_recordings
-from meseta.study.state import State, applied, difference, words
-from meseta.traces import TraceSet
+from meseta.study.notebook import Notebook
+from meseta.study.parts import FROM_RAW, versions, write_decisions, write_history, write_recipe, write_versions
+from meseta.study.raw import read_recordings, write_recordings
+from meseta.study.recordings import derived_key, opened_recordings, write_derived
+from meseta.study.state import State
+from meseta.traces import Source, TraceSet
 from meseta.work import Work
 
-__all__ = ["Study", "write_study"]
+__all__ = ["Study"]
+
+Folders = str | Path | Sequence[str | Path]
 
 
-def write_study(
-    path: str | Path,
-    analysis: Analysis,
-    work: Work | None = None,
-    recordings: Sequence[Recording] = (),
-) -> None:
-    """Write a new study with the traces, recipe and decisions of an analysis; whole or not at all.
-
-    Parameters
-    ----------
-    path : str or Path
-        A file of that name is replaced.
-    analysis : Analysis
-    work : Work, optional
-    recordings : sequence of Recording
-        Open recordings to keep as recorded, in the order of ``analysis.traces.sources``; those left out are linked.
-    """
-    state = State(analysis.recipe, analysis.decisions)
-    history = History.begun("study made")
-    write_content(Path(path), analysis.traces, state, history, recordings, work or Work())
+class _NothingNewError(Exception):
+    """Nothing of what was to be added is new; forgets what was begun."""
 
 
-class Study:
-    """A study file, open.  A context manager; :meth:`close` saves nothing by itself, the journal keeps every change.
+class Study(Notebook):
+    """A study file, open.  A context manager.
 
-    Attributes
-    ----------
-    path : Path
-    read_only : bool
-        Whether changes are refused; ``why_read_only`` says why.
-    recovered : tuple of Entry
-        Changes that an earlier session made and did not save; they are in force, and :meth:`discard_recovered` takes
-        them back.
-    damage : tuple of str
-        What was found damaged on opening, part by part; the rest is usable.
+    Every change is durable in the journal at once; :meth:`save` writes it into the file, :meth:`close` does not.
     """
 
-    def __init__(self, path: Path, read_only: bool = False, take_over: bool = False) -> None:
-        self.path = path
+    def __init__(
+        self, path: Path, read_only: bool = False, take_over: bool = False, folders: Sequence[Path] = ()
+    ) -> None:
+        super().__init__()
+        self.path, self._folders = path, list(folders)
         self.why_read_only = "opened for reading" if read_only else ""
-        self._guard = threading.RLock()
         self._lock = None if read_only else self._locked(take_over)
+        self.backup: Path | None = None
+        """Where the copy of a study of an older schema is, where this opening migrated it."""
         try:
             if not self.read_only:
                 clear_unfinished(path)
-            self.backup = None if self.read_only else upgrade(path)
-            self._open()
+                self.backup = upgrade(path)
+            self._load()
         except BaseException:
             self.close()
             raise
@@ -84,7 +68,7 @@ class Study:
     # -- opening and closing ------------------------------------------------------------------------------------
 
     @classmethod
-    def open(cls, path: str | Path, read_only: bool = False, take_over: bool = False) -> Study:
+    def open(cls, path: str | Path, read_only: bool = False, take_over: bool = False, folders: Folders = ()) -> Study:
         """Open a study.
 
         Parameters
@@ -94,6 +78,8 @@ class Study:
             Change nothing, take no lock.
         take_over : bool
             Ignore the lock of another machine that is known to be gone.
+        folders : str, Path or several
+            Where linked recordings lie; no other place is looked at.
 
         Raises
         ------
@@ -105,15 +91,34 @@ class Study:
             raise StudyError("does not exist", str(path), "check the path")
         if not is_study(path):
             raise StudyError("is not a Meseta study", str(path), "make one with `meseta gather` or `meseta run`")
-        return cls(path, read_only, take_over)
+        given = [folders] if isinstance(folders, str | Path) else folders
+        return cls(path, read_only, take_over, [Path(folder) for folder in given])
 
     @classmethod
-    def create(cls, path: str | Path, analysis: Analysis, work: Work | None = None) -> Study:
-        """Write a new study from an analysis and open it; refuses to replace a file."""
-        if Path(path).exists():
-            raise CallError("exists already", str(path), "open it, or choose another name")
-        write_study(path, analysis, work)
-        return cls.open(path)
+    def create(cls, path: str | Path, files: Folders, recipe: Recipe | None = None, work: Work | None = None) -> Study:
+        """Make a new study of recordings, and open it; refuses to replace a file.
+
+        Parameters
+        ----------
+        path : str or Path
+        files : str, Path or several
+            Recordings, folders, patterns.
+        recipe : Recipe, optional
+            What is known of the files, and all other settings.
+        work : Work, optional
+
+        Raises
+        ------
+        CallError
+            Where the file exists.
+        InputError
+            Where no recording can be read.
+        """
+        from meseta.study.following import create_study, folders_of
+
+        named = [files] if isinstance(files, str | Path) else list(files)
+        create_study(path, named, recipe, work)
+        return cls.open(path, folders=folders_of(named))
 
     def __enter__(self) -> Self:
         return self
@@ -122,11 +127,6 @@ class Study:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         self.close()
-
-    @property
-    def read_only(self) -> bool:
-        """Whether changes are refused."""
-        return bool(self.why_read_only)
 
     def close(self) -> None:
         """Let go of the study.  What was not saved stays in the journal and is offered on the next opening."""
@@ -144,94 +144,86 @@ class Study:
         if lock.holder is not None:
             self.why_read_only = f"held by {lock.holder}"
             return None
+        if not os.access(self.path, os.W_OK):
+            lock.release()
+            self.why_read_only = "the file may not be written to"
+            return None
         return lock
 
-    def _open(self) -> None:
+    def _load(self) -> None:
         self._blocks = BlockFile(self.path)
-        content = load(self.path, self._blocks)
-        self._content, self.damage = content, content.damage
-        self._saved_entries = len(content.history.entries)
-        self._saved, self._history = content.state, content.history
-        self._state = content.state
-        self._journal = Journal(self.path, content.identity)
+        self._content: Content = load(self.path, self._blocks)
+        content, self.damage = self._content, self._content.damage
+        self._saved, self._saved_entries = content.state, len(content.history.entries)
         self._derived: dict[str, TraceSet] = {} if content.traces is None else {content.recipe_key: content.traces}
         if content.damage and not self.read_only:
             self.why_read_only = "the file is damaged"
             if self._lock is not None:
                 self._lock.release()
-        self.recovered = self._recover()
-
-    def _recover(self) -> tuple[Entry, ...]:
-        """Apply the entries that the journal has beyond the saved ones."""
-        found = read_journal(self.path, self._content.identity)
-        damage = ["the journal of another study lies beside it"] if found.foreign else []
-        damage += [f"the journal: {found.damage}"] if found.damage else []
-        fresh = [entry for entry in found.entries if entry.number >= self._saved_entries]
-        replayed: list[Entry] = []
-        for entry in fresh:
-            try:
-                history = self._history.with_entry(entry)
-            except ValueError as error:
-                damage.append(f"the journal: {error}")
-                break
-            changed = applied(self._state, entry.edits)
-            self._state = changed if entry.edits else self._history.moved(self._state, entry.state)
-            self._history = history
-            replayed.append(entry)
-        self.damage = (*self.damage, *damage)
-        if not self.read_only:
-            self._tidy_journal(bool(damage), found.whole_byte, replayed)
-        return tuple(replayed)
-
-    def _tidy_journal(self, damaged: bool, whole_byte: int, replayed: Sequence[Entry]) -> None:
-        path = self._journal.path
-        if not path.exists():
-            return
-        if damaged:
-            self._journal.set_aside()
-            if replayed:
-                self._journal.append(replayed)
-        elif path.stat().st_size != whole_byte:
-            self._journal.cut(whole_byte)
+        self._begin(content.identity, content.state, content.history)
 
     # -- what it holds --------------------------------------------------------------------------------------------
 
     @property
-    def recipe(self) -> Recipe:
-        """The recipe in force."""
-        self._need("the recipe")
-        return self._state.recipe
+    def sources(self) -> Mapping[Source, str]:
+        """The recordings, and whether each is "copied", "linked" or not kept ("none")."""
+        self._need("the list of recordings")
+        return dict(zip(self._content.sources, self._content.kept, strict=True))
 
     @property
-    def decisions(self) -> Decisions:
-        """What was decided by hand."""
-        self._need("the decisions", "the journal")
-        return self._state.decisions
+    def unknown(self) -> tuple[str, ...]:
+        """Names in the file that this version does not know."""
+        return self._content.unknown
 
-    @property
-    def history(self) -> History:
-        """Every entry."""
-        self._need("the history")
-        return self._history
+    def version_differences(self) -> list[str]:
+        """Return, in words, which versions differ from those with which the study was saved last."""
+        then, now = self._content.versions, versions()
+        names = sorted({*then, *now})
+        return [
+            f"{name} {then.get(name, 'unknown')} then, {now.get(name, 'unknown')} now"
+            for name in names
+            if then.get(name) != now.get(name)
+        ]
 
-    @property
-    def versions(self) -> Mapping[str, str]:
-        """Versions of Meseta and of the libraries with which the study was saved last."""
-        return self._content.versions
+    def point_to(self, folder: str | Path) -> None:
+        """Say where linked recordings lie; they are recognised by name and checksum."""
+        self._folders.append(Path(folder))
 
-    def _need(self, *parts: str) -> None:
-        """Raise the damage of a part before anybody takes what is left of it for the whole."""
-        for statement in self.damage:
-            if statement.startswith(parts):
-                raise StudyError(statement, str(self.path), "use a copy of the study")
+    def traces(self, work: Work | None = None, recipe: Recipe | None = None) -> TraceSet:
+        """Return the traces; their samples stay in the file and are read block by block.
 
-    def traces(self, work: Work | None = None) -> TraceSet:
-        """Return the traces; their samples stay in the file and are read block by block."""
-        key = self.recipe.key(FROM_RAW)
-        if key in self._derived:
+        Where calibration or cutting have changed since, they are made of the recordings anew; by the study's own
+        recipe they then take the place of the old ones in the file.
+
+        Parameters
+        ----------
+        work : Work, optional
+        recipe : Recipe, optional
+            Another recipe than the study's own; such traces are kept in memory only.
+
+        Raises
+        ------
+        StudyError
+            Where a linked recording is needed and not found: say where with :meth:`point_to`.
+        """
+        with self._guard:
+            wanted = recipe or self.recipe
+            key = wanted.key(FROM_RAW)
+            if key not in self._derived:
+                if not self.read_only and wanted == self.recipe:
+                    self.rewrite(work)
+                else:
+                    self._derived[key] = self._derive(wanted, work or Work())
             return self._derived[key]
-        self._need("the traces")
-        raise StudyError("the traces were made with other settings", str(self.path), "")
+
+    def _derive(self, recipe: Recipe, work: Work) -> TraceSet:
+        self._need("the list of recordings")
+        content = self._content
+        with (
+            looking(self.path) as root,
+            opened_recordings(root, content.sources, content.kept, self._folders, recipe) as recordings,
+        ):
+            return traces_from(recordings, recipe, work)
 
     def analysis(self, recipe: Recipe | None = None, work: Work | None = None) -> Analysis:
         """Return the analysis of this study, by its own recipe or another one.
@@ -240,113 +232,31 @@ class Study:
         out by the selection.
         """
         work = work or Work()
-        traces = self.traces(work)
+        traces = self.traces(work, recipe)
         return Analysis(without_lost(traces, find_losses(traces, work)), recipe or self.recipe, self.decisions)
 
     def check(self, work: Work | None = None) -> list[str]:
         """Read everything, and return what is damaged, in words; empty where all is whole."""
-        losses = find_losses(self.traces(work), work or Work())
-        return [*self.damage, *(str(loss) for loss in losses)]
+        found = [*self.damage]
+        if self._content.traces is not None:
+            found += [str(loss) for loss in find_losses(self._content.traces, work or Work())]
+        return found + self._check_recordings(work or Work())
 
-    # -- changes --------------------------------------------------------------------------------------------------
-
-    def change(
-        self, *, recipe: Recipe | None = None, decisions: Decisions | None = None, text: str = ""
-    ) -> Entry | None:
-        """Put another recipe or other decisions in force, as one entry of the history.
-
-        The entry is durable in the journal before this returns.
-
-        Parameters
-        ----------
-        recipe : Recipe, optional
-        decisions : Decisions, optional
-        text : str
-            What was done, in the user's words; made from the change where empty.
-
-        Returns
-        -------
-        Entry or None
-            None where nothing changes.
-
-        Raises
-        ------
-        StudyError
-            Where the study cannot be changed, or the change could not be kept (nothing has changed then).
-        """
-        with self._guard:
-            after = State(recipe or self.recipe, decisions or self.decisions)
-            edits = difference(self._state, after)
-            if not edits:
-                return None
-            kind, said = words(edits)
-            return self._enter(self._history.change(kind, text or said, edits), after)
-
-    def keep(self, identities: Iterable[str], reason: str = "") -> Entry | None:
-        """Keep traces whatever the rules say."""
-        return self.change(decisions=self.decisions.with_verdict(identities, True, reason))
-
-    def reject(self, identities: Iterable[str], reason: str = "") -> Entry | None:
-        """Reject traces whatever the rules say."""
-        return self.change(decisions=self.decisions.with_verdict(identities, False, reason))
-
-    def remove(self, *parts: str | RemovedRange) -> Entry | None:
-        """Take recordings (by SHA-256) or ranges out of the study, in one action; :meth:`restore` brings them back."""
-        return self.change(decisions=self.decisions.with_removed(*parts))
-
-    def restore(self, *parts: str | RemovedRange) -> Entry | None:
-        """Bring removed recordings or ranges back."""
-        return self.change(decisions=self.decisions.with_restored(*parts))
-
-    def undo(self) -> Entry | None:
-        """Go back to the state before; None where there is none."""
-        target = self.history.undone()
-        return None if target is None else self._move("undo", target)
-
-    def redo(self) -> Entry | None:
-        """Go forward to the state that was left last; None where there is none."""
-        target = self.history.redone()
-        return None if target is None else self._move("redo", target)
-
-    def return_to(self, target: str | int) -> Entry | None:
-        """Go to a named state, or to the state after an entry."""
-        return self._move("return", self.history.find(target))
-
-    def name(self, name: str) -> Entry:
-        """Name the present state."""
-        return self._enter(self.history.mark("name", name), self._state)
-
-    def note(self, text: str) -> Entry:
-        """Write a note into the history."""
-        return self._enter(self.history.mark("note", text), self._state)
-
-    def discard_recovered(self) -> Entry | None:
-        """Return to the state of the last save, leaving what was recovered in the history."""
-        if not self.recovered:
-            return None
-        return self._move("return", self.recovered[0].parent)
-
-    def _move(self, kind: str, target: int) -> Entry | None:
-        with self._guard:
-            if target == self._history.state:
-                return None
-            shown = target if kind != "undo" else self._history.state
-            entry = self._history.move(kind, f"#{shown} {self._history.entries[shown].text}", target)
-            return self._enter(entry, self._history.moved(self._state, target))
-
-    def _enter(self, entry: Entry, after: State) -> Entry:
-        with self._guard:
-            self._need_writable()
-            history = self._history.with_entry(entry)
-            self._journal.append([entry])
-            self._history, self._state = history, after
-            return entry
-
-    def _need_writable(self) -> None:
-        if self.read_only:
-            raise StudyError(
-                f"cannot be changed: {self.why_read_only}", str(self.path), "see who holds it, or use a copy"
-            )
+    def _check_recordings(self, work: Work) -> list[str]:
+        found = []
+        with looking(self.path) as root:
+            try:
+                recordings = read_recordings(root, self._content.sources)
+            except (OSError, RuntimeError, ValueError, KeyError) as error:
+                return [f"the copied recordings are damaged ({error})"]
+            for recording in recordings:
+                work.check()
+                for channel in recording.channels:
+                    try:
+                        channel.samples.read(0, len(channel.samples))
+                    except (OSError, RuntimeError, ValueError) as error:
+                        found.append(f"recording '{recording.source.name}', '{channel.name}': damaged ({error})")
+        return found
 
     # -- saving ---------------------------------------------------------------------------------------------------
 
@@ -363,37 +273,95 @@ class Study:
             if len(self._history.entries) == self._saved_entries:
                 return
             with changing(self.path) as root:
-                if self._state.recipe != self._saved.recipe:
-                    write_recipe(root, self._state.recipe)
-                if self._state.decisions != self._saved.decisions:
-                    write_decisions(root, self._state.decisions)
-                write_history(root, self._history)
-                write_versions(root)
+                self._write_state(root)
             self._are_saved()
+
+    def _write_state(self, root: h5py.File) -> None:
+        if self._state.recipe != self._saved.recipe:
+            write_recipe(root, self._state.recipe)
+        if self._state.decisions != self._saved.decisions:
+            write_decisions(root, self._state.decisions)
+        write_history(root, self._history)
+        write_versions(root)
 
     def _are_saved(self) -> None:
         self._saved, self._saved_entries = self._state, len(self._history.entries)
         self._journal.clear()
 
-    def rewrite(self, work: Work | None = None, traces: TraceSet | None = None) -> None:
-        """Write the whole study anew and swap it in: room that saves left behind is given back.
+    def rewrite(self, work: Work | None = None) -> None:
+        """Write the whole study anew and swap it in: room that earlier saves left behind is given back.
 
-        Parameters
-        ----------
-        work : Work, optional
-        traces : TraceSet, optional
-            Traces to put in the place of the present ones (made with other settings).
+        Traces are made of the recordings anew where calibration or cutting have changed.
+        """
+        with self._guard:
+            self._need_writable()
+            work, beside, content, state = work or Work(), rewritten_of(self.path), self._content, self._state
+            key = state.recipe.key(FROM_RAW)
+            with looking(self.path) as old:
+
+                def fill(root: h5py.File) -> tuple[TraceSet, Sequence[str]]:
+                    copied = read_recordings(old, content.sources)
+                    if copied:
+                        write_recordings(root, copied, content.sources, work)
+                    if key in self._derived:
+                        write_whole_traces(root, self._derived[key], key, work)
+                        return self._derived[key], content.kept
+                    return self._write_derived(old, root, state, work), content.kept
+
+                write_content(beside, state, lambda: self._history, fill, content.identity)
+            self._swap(beside)
+
+    def _write_derived(self, old: h5py.File, root: h5py.File, state: State, work: Work) -> TraceSet:
+        content, recipe = self._content, state.recipe
+        with opened_recordings(old, content.sources, content.kept, self._folders, recipe) as recordings:
+            writer = TraceWriter(root, work, sum(one.samples for one in recordings))
+            write_derived(writer, recordings, recipe, work)
+        return writer.finish(derived_key(content.sources, recipe), recipe.key(FROM_RAW))
+
+    def _swap(self, beside: Path) -> None:
+        if os.name == "nt":
+            self._blocks.close()  # there an open file cannot be replaced; traces handed out before end here
+        swap(beside, self.path)
+        self._are_saved()
+        self._load()
+
+    def add(self, files: Sequence[FoundFile], work: Work | None = None) -> Added:
+        """Take in recordings that the study does not have yet, as one entry of the history, saved at once.
+
+        Returns
+        -------
+        Added
+            What was added, what was there already, and files that could not be read.
+
+        Raises
+        ------
+        StudyError
+            Where the study cannot be changed or written; it is then as it was.
         """
         with self._guard:
             self._need_writable()
             work = work or Work()
-            chosen = self.traces(work) if traces is None else traces
-            beside = rewritten_of(self.path)
-            with looking(self.path) as root:
-                recordings = read_recordings(root, self._content.sources)
-                write_content(beside, chosen, self._state, self._history, recordings, work, self._content.identity)
-            if os.name == "nt":
-                self._blocks.close()  # there an open file cannot be replaced; traces handed out before end here
-            swap(beside, self.path)
-            self._are_saved()
-            self._open()
+            present, content, added = self.traces(work), self._content, Added()
+            history = self._history
+            with contextlib.suppress(_NothingNewError), changing(self.path) as root:
+                writer = TraceWriter(root, work, 0, present)
+                known = {source.sha256 for source in content.sources}
+                added = take_in(root, writer, files, self.recipe, known, content.sources, work)
+                if not added.sources:
+                    raise _NothingNewError
+                sources = (*content.sources, *added.sources)
+                writer.finish(derived_key(sources, self.recipe), self.recipe.key(FROM_RAW))
+                write_sources(root, sources, (*content.kept, *added.kept))
+                history = history.with_entry(history.change("import", added.text(), added.edits()))
+                write_history(root, history)
+                write_recipe(root, self._state.recipe)
+                write_decisions(root, self._state.decisions)
+                write_versions(root)
+            if added.sources:
+                self._history = history
+                self._are_saved()
+                self._load()
+                if self.recipe.calibration.offset_from_floor:  # it looks at all recordings together
+                    self._derived.clear()
+                    self.rewrite(work)
+            return added
