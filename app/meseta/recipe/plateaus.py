@@ -51,9 +51,19 @@ class PlateauSettings(Section):
         le=1,
     )
     join_decades: float = setting(
-        0.05,
+        0.15,
         "Join within",
-        "Neighbouring stretches whose conductance differs by less are one plateau.",
+        "Neighbouring stretches below 0.1 G0 whose conductance differs by less are one plateau; above, stretches are "
+        "joined where the step between them is within their noise.",
+        unit="decades",
+        ge=0,
+        le=1,
+    )
+    switch_decades: float = setting(
+        0.35,
+        "Switching within",
+        "A signal that leaves its level by less and comes back is one plateau with telegraph noise "
+        "(above 0.1 G0: by less than 0.3 G0).",
         unit="decades",
         ge=0,
         le=1,

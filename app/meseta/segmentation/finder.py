@@ -1,9 +1,8 @@
-"""The plateau finder: exact change points in a variance-stabilised variable, joined to straight stretches, classified."""
+"""The plateau finder: change points in a variance-stabilised variable, joined to straight stretches, classified."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -14,9 +13,10 @@ from meseta.recipe.plateaus import PlateauSettings
 from meseta.segmentation import finder_kernels as kernels
 from meseta.segmentation.noise import phase_bounds, runs_backward, trusted_samples
 from meseta.segmentation.results import NoiseModel, PlateauTable
+from meseta.segmentation.scale import scale_of
 from meseta.traces import TraceSet
 
-__all__ = ["Stabiliser", "find_plateaus"]
+__all__ = ["find_plateaus"]
 
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
@@ -26,40 +26,12 @@ CHANGE_COST: Final = 3.0
 Biometrics 63, 22 (2007), without its length term."""
 LINE_COST: Final = 4.0
 """The same for a straight line, which has one more parameter."""
+SHORTEST_NM: Final = (0.01, 0.02)
+"""Shortest plateau above and below :data:`METAL_FROM_G0` where the recipe states none."""
 METAL_FROM_G0: Final = 0.1
+METAL_SWITCH_G0: Final = 0.3
+"""A metallic contact that switches by less is one plateau: less than a conductance channel opens or closes."""
 CENSORED: Final = np.array(["", "ramp", "floor", "saturation"])
-
-
-@dataclass(frozen=True)
-class Stabiliser:
-    """The variance-stabilised variable y(g) of a noise model: dy/dg = 1 / long-run sigma(g), odd in g.
-
-    Where the noise is a constant plus a share of g this is the asinh of g over the floor's sigma (up to factors); in
-    general it is integrated from the noise model.  g = conductance - floor, so negative readings stay.
-
-    Attributes
-    ----------
-    table : (k,) float64
-        y on even steps of asinh(g / sigma).
-    shares : (k,) float64
-        Variance of a single sample over the long-run variance.
-    pitch : float
-        Step of asinh(g / sigma).
-    """
-
-    table: Floats
-    shares: Floats
-    pitch: float
-
-    @classmethod
-    def of(cls, noise: NoiseModel, points: int = 1024) -> Stabiliser:
-        """Return the variable for a noise model."""
-        top = np.arcsinh(1e3 * max(float(noise.level_g0[-1]), noise.floor_sigma_g0) / noise.floor_sigma_g0)
-        at, pitch = np.linspace(0.0, top, points, retstep=True)
-        g = np.sinh(at) * noise.floor_sigma_g0
-        slope = np.sqrt(g**2 + noise.floor_sigma_g0**2) / noise.long_run(g)
-        table = np.concatenate([[0.0], np.cumsum(0.5 * (slope[1:] + slope[:-1]) * pitch)])
-        return cls(table, (noise.sigma(g) / noise.long_run(g)) ** 2, float(pitch))
 
 
 def find_plateaus(
@@ -105,12 +77,6 @@ def _search(
     steps: Floats,
 ) -> Floats:
     """Return the rows of :func:`meseta.segmentation.finder_kernels.find`."""
-    stabiliser = Stabiliser.of(noise)
-    in_nm = traces.drive.is_displacement
-    shortest = (settings.minimum_length_nm,) * 2 if settings.minimum_length_nm is not None else (0.05, 0.1)
-    shortest = shortest if in_nm else (0.0, 0.0)
-    factor = 2.0 ** (5.0 - settings.sensitivity)
-    low = settings.low_g0 if settings.low_g0 is not None else noise.floor_g0 + 6.0 * noise.floor_sigma_g0
     rows: Floats = kernels.find(
         np.ascontiguousarray(traces.conductance),
         trusted_samples(traces),
@@ -118,26 +84,37 @@ def _search(
         stops,
         backward,
         steps,
-        noise.floor_g0,
-        noise.floor_sigma_g0,
-        float(noise.long_run_g0[0]),
-        stabiliser.table,
-        stabiliser.shares,
-        stabiliser.pitch,
-        CHANGE_COST * factor,
-        LINE_COST * factor,
-        low,
-        np.inf if settings.high_g0 is None else settings.high_g0,
-        noise.saturation_g0,
-        settings.slope_fraction * _tunnelling(noise, in_nm, steps),
-        settings.join_decades,
-        max(settings.minimum_samples, int(np.ceil(settings.minimum_rise_times * noise.rise_samples))),
-        *shortest,
-        METAL_FROM_G0,
-        int(np.ceil(noise.rise_samples)),
+        scale_of(noise),
+        _rules(settings, noise, traces.drive.is_displacement, steps),
         max(64, 8 * traces.traces),
     )
     return rows
+
+
+def _rules(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, steps: Floats) -> kernels.Rules:
+    """Return the settings in the units of the kernels."""
+    stated = settings.minimum_length_nm
+    metal, molecule = SHORTEST_NM if stated is None else (stated, stated)
+    factor = 2.0 ** (5.0 - settings.sensitivity)
+    low = 6.0 * noise.floor_sigma_g0 if settings.low_g0 is None else settings.low_g0 - noise.floor_g0
+    tunnelling = _tunnelling(noise, in_nm, steps)
+    return kernels.Rules(
+        change_cost=CHANGE_COST * factor,
+        line_cost=LINE_COST * factor,
+        low=low,
+        high=np.inf if settings.high_g0 is None else settings.high_g0 - noise.floor_g0,
+        saturation=0.99 * (noise.saturation_g0 - noise.floor_g0),
+        bound=settings.slope_fraction * tunnelling,
+        tunnelling=tunnelling,
+        join=settings.join_decades,
+        switch=settings.switch_decades,
+        metal_from=METAL_FROM_G0,
+        metal_switch=METAL_SWITCH_G0,
+        shortest_samples=max(settings.minimum_samples, int(np.ceil(settings.minimum_rise_times * noise.rise_samples))),
+        shortest_metal=metal if in_nm else 0.0,
+        shortest_molecule=molecule if in_nm else 0.0,
+        trim=int(np.ceil(noise.rise_samples)),
+    )
 
 
 def _tunnelling(noise: NoiseModel, in_nm: bool, steps: Floats) -> float:

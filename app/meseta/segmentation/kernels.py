@@ -5,14 +5,18 @@ from __future__ import annotations
 import math
 
 import numpy as np
+import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
-__all__ = ["partition", "partition_lines", "stabilise"]
+__all__ = ["merge_moments", "partition", "partition_lines"]
+
+Floats = npt.NDArray[np.float64]
+Integers = npt.NDArray[np.int64]
 
 
 @kernel
-def partition(values, weights, penalty, minimum):  # type: ignore[no-untyped-def]
+def partition(values: Floats, weights: Floats, penalty: float, minimum: int) -> tuple[Integers, float]:
     """Return the optimal partition into constant segments and its cost.
 
     Functional pruning (Maidstone et al. 2017).  The cost of "last change at s, mean mu" differs between two s by a
@@ -120,7 +124,7 @@ def partition(values, weights, penalty, minimum):  # type: ignore[no-untyped-def
 
 
 @kernel
-def _ends(came_from):  # type: ignore[no-untyped-def]
+def _ends(came_from: Integers) -> Integers:
     """Return the segment ends that a table of predecessors leads back through."""
     t, count = len(came_from) - 1, 0
     while t > 0:
@@ -134,7 +138,7 @@ def _ends(came_from):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _line_cost(moments, share):  # type: ignore[no-untyped-def]
+def _line_cost(moments: Floats, share: float) -> float:
     """Return minus twice the log-likelihood of a line with free variance, never below the model's variance.
 
     ``moments``: weight, mean x, mean y, Sxx, Sxy, Syy.  ``share`` is the variance of a single sample under the model,
@@ -150,7 +154,7 @@ def _line_cost(moments, share):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _merge(a, b):  # type: ignore[no-untyped-def]
+def merge_moments(a: Floats, b: Floats) -> None:
     """Add the moments ``b`` of a later stretch to ``a`` (pairwise update, stable for any length)."""
     weight = a[0] + b[0]
     if b[0] <= 0.0:
@@ -168,7 +172,7 @@ def _merge(a, b):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _moments(values, weights, begin, end, out):  # type: ignore[no-untyped-def]
+def _moments(values: Floats, weights: Floats, begin: int, end: int, out: Floats) -> None:
     """Fill the moments of samples ``begin`` to ``end``; x is the sample number."""
     out[:] = 0.0
     weight, x, y = 0.0, 0.0, 0.0
@@ -189,7 +193,9 @@ def _moments(values, weights, begin, end, out):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def partition_lines(values, weights, candidates, share, penalty):  # type: ignore[no-untyped-def]
+def partition_lines(
+    values: Floats, weights: Floats, candidates: Integers, share: Floats, penalty: float
+) -> tuple[Integers, Floats]:
     """Return the optimal partition into straight lines with ends on a grid of candidates, and the lines' moments.
 
     Optimal partitioning with pruning (Killick, Fearnhead and Eckley 2012, constant 0: splitting a segment never costs
@@ -232,7 +238,7 @@ def partition_lines(values, weights, candidates, share, penalty):  # type: ignor
         count += 1
         best, choice = np.inf, 0
         for q in range(count):
-            _merge(grown[q], pieces[t - 1])
+            merge_moments(grown[q], pieces[t - 1])
             worth[q] += share[t - 1] * pieces[t - 1, 0]
             mean_share = worth[q] / grown[q, 0] if grown[q, 0] > 0.0 else 1.0
             costs[q] = entry[alive[q]] + _line_cost(grown[q], mean_share)
@@ -255,28 +261,9 @@ def partition_lines(values, weights, candidates, share, penalty):  # type: ignor
         chosen[j] = candidates[steps[j] - 1]
         moments[j] = pieces[begin]
         for q in range(begin + 1, steps[j]):
-            _merge(moments[j], pieces[q])
+            merge_moments(moments[j], pieces[q])
         begin = steps[j]
     return chosen, moments
-
-
-@kernel
-def stabilise(conductance, floor, sigma, table, pitch, out):  # type: ignore[no-untyped-def]
-    """Fill ``out`` with the variance-stabilised variable; NaN stays NaN.
-
-    The variable is odd in g = conductance - floor and tabulated on even steps ``pitch`` of asinh(g/sigma).
-    """
-    last = len(table) - 1
-    for i in range(len(conductance)):
-        g = (conductance[i] - floor) / sigma
-        size = abs(g)
-        place = math.log(size + math.sqrt(size * size + 1.0)) / pitch
-        if not math.isfinite(place):
-            out[i] = np.nan
-            continue
-        k = min(int(place), last - 1)
-        y = table[k] + (place - k) * (table[k + 1] - table[k])
-        out[i] = y if g >= 0.0 else -y
 
 
 @warm_up
@@ -285,4 +272,3 @@ def _warm_up() -> None:
     ends, _ = partition(values, np.empty(0), 0.1, 1)
     partition(values, np.ones(4), 0.1, 1)
     partition_lines(values, np.ones(4), ends, np.ones(len(ends)), 0.1)
-    stabilise(values.astype(np.float32), 0.0, 1.0, np.array([0.0, 1.0, 2.0]), 1.0, np.empty(4))

@@ -5,10 +5,14 @@ from __future__ import annotations
 import math
 
 import numpy as np
+import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
 __all__ = ["COLUMNS", "measure"]
+
+Floats = npt.NDArray[np.float64]
+Integers = npt.NDArray[np.int64]
 
 BLOCK = 16
 COLUMNS = 8
@@ -16,7 +20,7 @@ FEWEST_FOR_SLOPE = 8
 
 
 @kernel
-def _extremes(g, zero):  # type: ignore[no-untyped-def]
+def _extremes(g: Floats, zero: int) -> tuple[float, float]:
     """Return the 99th percentile up to the rupture (of all samples without one) and the first percentile of all."""
     finite = g[np.isfinite(g)]
     if len(finite) == 0:
@@ -29,7 +33,7 @@ def _extremes(g, zero):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _last_crossing(g, drive, level):  # type: ignore[no-untyped-def]
+def _last_crossing(g: Floats, drive: Floats, level: float) -> float:
     """Return the interpolated drive at which g is at or above the level for the last time; NaN where it never falls."""
     last = -1
     for i in range(len(g) - 1, -1, -1):
@@ -48,8 +52,8 @@ def _last_crossing(g, drive, level):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _reforms(g, level):  # type: ignore[no-untyped-def]
-    """Return whether the contact opens (a tenth of the level for 8 samples) and closes again (3 samples at the level)."""
+def _reforms(g: Floats, level: float) -> bool:
+    """Return whether the contact opens (8 samples below a tenth of the level) and closes again (3 samples at it)."""
     low, high, opened = 0, 0, False
     for value in g:
         low = low + 1 if value < 0.1 * level else 0
@@ -61,7 +65,7 @@ def _reforms(g, level):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _slope_between(g, drive, begin, low, high):  # type: ignore[no-untyped-def]
+def _slope_between(g: Floats, drive: Floats, begin: int, low: float, high: float) -> float:
     """Return the slope of log10 g against drive from the first sample below ``high`` to the first below ``low``."""
     count, x, y, xx, xy = 0, 0.0, 0.0, 0.0, 0.0
     for i in range(begin, len(g)):
@@ -78,7 +82,7 @@ def _slope_between(g, drive, begin, low, high):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _at_floor(g, begin, floor, sigma, restless):  # type: ignore[no-untyped-def]
+def _at_floor(g: Floats, begin: int, floor: float, sigma: float, restless: float) -> tuple[int, float]:
     """Return the number of blocks at the floor after ``begin`` and the standard deviation of their samples."""
     blocks, count, total, square = 0, 0, 0.0, 0.0
     for start in range(begin, len(g) - BLOCK + 1, BLOCK):
@@ -97,22 +101,22 @@ def _at_floor(g, begin, floor, sigma, restless):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def measure(  # type: ignore[no-untyped-def]
-    conductance,
-    drive,
-    starts,
-    stops,
-    backward,
-    zeros,
-    level,
-    floor,
-    sigma,
-    restless,
-    low,
-    high,
-    clear,
-    saturation,
-):
+def measure(
+    conductance: npt.NDArray[np.float32],
+    drive: Floats,
+    starts: Integers,
+    stops: Integers,
+    backward: bool,
+    zeros: Integers,
+    level: float,
+    floor: float,
+    sigma: float,
+    restless: float,
+    low: float,
+    high: float,
+    clear: float,
+    saturation: float,
+) -> Floats:
     """Measure a block of traces.
 
     Returns

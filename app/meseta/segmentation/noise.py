@@ -92,12 +92,12 @@ def noise_block(traces: TraceSet, settings: NoiseSettings, phases: Sequence[str]
         Phases to look at.
     """
     starts, stops = phase_bounds(traces, phases)
-    grids = [np.zeros((kernels.LEVEL_BINS, kernels.SPREAD_BINS), np.int64) for _ in range(4)]
+    grids = np.zeros((4, kernels.LEVEL_BINS, kernels.SPREAD_BINS), np.int64)
     rows = np.empty((traces.traces, 7))
     last = np.empty((traces.traces, kernels.CROSSING_LEVELS), np.int64)
     conductance = np.ascontiguousarray(traces.conductance)
     backward = runs_backward(phases)
-    kernels.gather(conductance, trusted_samples(traces), starts, stops, backward, *grids, rows, last)
+    kernels.gather(conductance, trusted_samples(traces), starts, stops, backward, grids, rows, last)
     places = tuple(np.flatnonzero(grid) for grid in grids)
     level, slope, samples = _slopes(traces, starts, stops, last, backward)
     counts = tuple(grid.ravel()[place] for grid, place in zip(grids, places, strict=True))
@@ -193,7 +193,7 @@ def _converter_step(rows: Floats) -> float:
 
 
 def _rise(rows: Floats) -> float:
-    """Return the rise time in samples: the lower quartile of the largest falls (a contact may be slower, never faster)."""
+    """Return the rise time in samples: the lower quartile of the largest falls, as a contact may only be slower."""
     falls = rows[np.isfinite(rows[:, 6]), 6]
     return max(1.0, float(np.quantile(falls, 0.25))) if len(falls) else 1.0
 
@@ -207,9 +207,9 @@ def _saturation(rows: Floats, relative: Floats) -> float:
     finite = np.isfinite(highs) & (highs > 0)
     if not finite.any() or float(np.median(relative)) < 1e-5:
         return np.inf
-    top = float(np.quantile(highs[finite], 0.9))
+    top = float(np.max(highs[finite]))
     piled = finite & (np.abs(highs - top) <= 1e-3 * top) & (repeats >= 8)
-    return float(np.median(highs[piled])) if piled.sum() >= max(2, 0.2 * finite.sum()) else np.inf
+    return float(np.median(highs[piled])) if piled.sum() >= max(2, 0.01 * finite.sum()) else np.inf
 
 
 def _tunnelling_slope(statistics: Sequence[NoiseStatistics], low: float, high: float, rise: float) -> float:
@@ -223,30 +223,44 @@ def _tunnelling_slope(statistics: Sequence[NoiseStatistics], low: float, high: f
     return float(np.median(slope[slow])) if slow.sum() >= 3 else float("nan")
 
 
-def _quartiles(statistics: Sequence[NoiseStatistics], which: int) -> tuple[Floats, Integers, Integers]:
+def _pooled(statistics: Sequence[NoiseStatistics], which: int) -> Integers:
     """Return one pooled (level, spread) grid."""
     grid = np.zeros(kernels.LEVEL_BINS * kernels.SPREAD_BINS, np.int64)
     for part in statistics:
         grid[part.spread_place[which]] += part.spread_count[which]
-    table = grid.reshape(kernels.LEVEL_BINS, kernels.SPREAD_BINS)
-    edges = 10.0 ** (kernels.SPREAD_LOWEST + np.arange(kernels.SPREAD_BINS) / kernels.SPREAD_PER_DECADE)
-    return edges, table.sum(axis=1), np.cumsum(table, axis=1)
+    return grid.reshape(kernels.LEVEL_BINS, kernels.SPREAD_BINS)
 
 
-def _at_levels(statistics: Sequence[NoiseStatistics], which: int, groups: Sequence[Integers]) -> Floats:
-    """Return the spread (lower quartile, made one sigma) in each group of level bins; NaN where few windows."""
-    edges, counts, cumulated = _quartiles(statistics, which)
-    found = np.full(len(groups), np.nan)
-    for row, group in enumerate(groups):
-        total = counts[group].sum()
-        if total < FEWEST_WINDOWS:
-            continue
-        together = cumulated[group].sum(axis=0)
-        place = int(np.searchsorted(together, total / 4))
-        before = together[place - 1] if place else 0
-        share = (total / 4 - before) / max(together[place] - before, 1)
-        width = 10.0 ** (1 / kernels.SPREAD_PER_DECADE)
-        found[row] = 0.0 if place == 0 else edges[place] * width**share / QUARTILE_OF[which]
+def _quartile(counts: Integers, which: int) -> float:
+    """Return the lower quartile of a row of spread counts, made one sigma."""
+    cumulated = np.cumsum(counts)
+    quarter = cumulated[-1] / 4
+    place = int(np.searchsorted(cumulated, quarter))
+    if place == 0:
+        return 0.0
+    share = (quarter - cumulated[place - 1]) / max(int(counts[place]), 1)
+    return float(10.0 ** (kernels.SPREAD_LOWEST + (place + share) / kernels.SPREAD_PER_DECADE) / QUARTILE_OF[which])
+
+
+def _at_levels(statistics: Sequence[NoiseStatistics], which: int, at_floor: Integers, rows: Integers) -> Floats:
+    """Return the spread at the floor and at each level bin; NaN where few windows.
+
+    A level that few windows visit (between plateaus, in the jumps) is pooled with its neighbours, spreads taken as a
+    share of the level, until it holds a hundredth of all windows above the floor.
+    """
+    grid = _pooled(statistics, which)
+    shift = kernels.SPREAD_PER_DECADE // kernels.LEVEL_PER_DECADE
+    enough = max(FEWEST_WINDOWS, grid[rows].sum() // 100)
+    found = np.full(len(rows) + 1, np.nan)
+    if grid[at_floor].sum() >= FEWEST_WINDOWS:
+        found[0] = _quartile(grid[at_floor].sum(axis=0), which)
+    for place, row in enumerate(rows):
+        for reach in range(9):
+            near = rows[max(place - reach, 0) : place + reach + 1]
+            counts = np.sum([np.roll(grid[other], shift * (row - other)) for other in near], axis=0)
+            if counts.sum() >= enough:
+                found[place + 1] = _quartile(counts, which)
+                break
     return found
 
 
@@ -258,8 +272,7 @@ def _table(
     centres = np.sqrt(edges[:-1] * edges[1:])
     at_floor = np.flatnonzero(centres < abs(floor) + 2.5 * sigma)
     rows = np.flatnonzero((centres - floor > 3 * sigma) & (centres < 1e3 * high))
-    groups = [at_floor, *([row] for row in rows)]
-    white, sample, short, long = (_at_levels(statistics, which, groups) for which in range(4))
+    white, sample, short, long = (_at_levels(statistics, which, at_floor, rows) for which in range(4))
     level = np.concatenate([[sigma], centres[rows] - floor])
     least = np.maximum(step / np.sqrt(12), level * 4 * ROUNDING)
     white = np.maximum(_filled(white, level, sigma), least)

@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
+import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
@@ -24,6 +25,10 @@ __all__ = [
     "gather",
 ]
 
+Floats = npt.NDArray[np.float64]
+Integers = npt.NDArray[np.int64]
+Truths = npt.NDArray[np.bool_]
+
 LEVEL_LOWEST, LEVEL_PER_DECADE, LEVEL_BINS = -24, 4, 128
 SPREAD_LOWEST, SPREAD_PER_DECADE, SPREAD_BINS = -30, 24, 912
 CROSSING_LOWEST, CROSSING_PER_DECADE, CROSSING_LEVELS = -24, 2, 64
@@ -32,22 +37,22 @@ FLOOR_WINDOW = 32
 
 
 @kernel
-def _count(level, spread, histogram):  # type: ignore[no-untyped-def]
+def _count(level: float, spread: float, histogram: Integers) -> None:
     """Count one spread at one level on the logarithmic grids."""
     if not (level > 0.0):
         return
-    row = int(math.floor((math.log10(level) - LEVEL_LOWEST) * LEVEL_PER_DECADE))
+    row = math.floor((math.log10(level) - LEVEL_LOWEST) * LEVEL_PER_DECADE)
     if row < 0 or row >= LEVEL_BINS:
         return
     column = 0
     if spread > 0.0:
-        column = int(math.floor((math.log10(spread) - SPREAD_LOWEST) * SPREAD_PER_DECADE))
+        column = math.floor((math.log10(spread) - SPREAD_LOWEST) * SPREAD_PER_DECADE)
         column = min(max(column, 1), SPREAD_BINS - 1)
     histogram[row, column] += 1
 
 
 @kernel
-def _window_spreads(g, white, sample):  # type: ignore[no-untyped-def]
+def _window_spreads(g: Floats, white: Integers, sample: Integers) -> None:
     """Count, window by window, the spread of second differences and the spread about a straight line."""
     middle = (WINDOW - 1) / 2.0
     span = WINDOW * (WINDOW * WINDOW - 1) / 12.0
@@ -69,7 +74,7 @@ def _window_spreads(g, white, sample):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _block_spread(g, size, histogram):  # type: ignore[no-untyped-def]
+def _block_spread(g: Floats, size: int, histogram: Integers) -> None:
     """Count the long-run spread that second differences of block means show.
 
     Where the three means lie clear of zero the difference is taken in ln G, which is blind to exponential decay.
@@ -90,7 +95,7 @@ def _block_spread(g, size, histogram):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _floor_of(g):  # type: ignore[no-untyped-def]
+def _floor_of(g: Floats) -> tuple[float, float, int, float]:
     """Return mean, standard deviation, number of samples and converter step of the lowest level that a trace holds."""
     windows = len(g) // FLOOR_WINDOW
     means, spreads, kept = np.empty(windows), np.empty(windows), 0
@@ -118,7 +123,7 @@ def _floor_of(g):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _about(g, level, spread):  # type: ignore[no-untyped-def]
+def _about(g: Floats, level: float, spread: float) -> tuple[float, float, int, float]:
     """Return mean, standard deviation, number and step of the samples in windows that lie about a level."""
     count, total, square, taken = 0, 0.0, 0.0, 0
     values = np.empty(256)
@@ -144,7 +149,7 @@ def _about(g, level, spread):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _step_of(values):  # type: ignore[no-untyped-def]
+def _step_of(values: Floats) -> float:
     """Return the converter step that sorted samples show, or 0: few distinct values, evenly spaced."""
     span = values[-1] - values[0]
     distances, found = np.empty(len(values)), 0
@@ -159,7 +164,7 @@ def _step_of(values):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _top_of(g):  # type: ignore[no-untyped-def]
+def _top_of(g: Floats) -> tuple[float, int]:
     """Return the highest reading of a trace and how many samples repeat it to within one part in 10,000."""
     high = -np.inf
     for value in g:
@@ -173,7 +178,7 @@ def _top_of(g):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _crossings(g, last):  # type: ignore[no-untyped-def]
+def _crossings(g: Floats, last: Integers) -> None:
     """Find the last sample at which the mean of four neighbours is at or above each level of the grid."""
     last[:] = -1
     next_level = 0
@@ -189,7 +194,7 @@ def _crossings(g, last):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _rise_of(g):  # type: ignore[no-untyped-def]
+def _rise_of(g: Floats) -> float:
     """Return the samples from 90 to 10 % of the largest fall of a trace between two steady stretches, or NaN."""
     windows = len(g) // WINDOW
     if windows < 3:
@@ -215,7 +220,7 @@ def _rise_of(g):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _fall_time(g, high, low):  # type: ignore[no-untyped-def]
+def _fall_time(g: Floats, high: float, low: float) -> float:
     """Return the interpolated time in samples from the last 90 % to the first 10 % of a fall."""
     upper, lower = low + 0.9 * (high - low), low + 0.1 * (high - low)
     first = -1
@@ -236,7 +241,16 @@ def _fall_time(g, high, low):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def gather(conductance, trusted, starts, stops, backward, white, sample, short, long, rows, last):  # type: ignore[no-untyped-def]
+def gather(
+    conductance: npt.NDArray[np.float32],
+    trusted: Truths,
+    starts: Integers,
+    stops: Integers,
+    backward: bool,
+    grids: Integers,
+    rows: Floats,
+    last: Integers,
+) -> None:
     """Gather the statistics of a block of traces.
 
     Parameters
@@ -247,7 +261,7 @@ def gather(conductance, trusted, starts, stops, backward, white, sample, short, 
         Ranges in ``conductance``.
     backward : bool
         True where time runs from open to closed.
-    white, sample, short, long : (LEVEL_BINS, SPREAD_BINS) int64
+    grids : (4, LEVEL_BINS, SPREAD_BINS) int64
         Added to: second differences, spread about a line, block means over 4 and 16 samples.
     rows : (traces, 7) float64
         Filled: floor mean, floor sigma, floor samples, converter step, highest reading, its repeats, fall time.
@@ -262,9 +276,9 @@ def gather(conductance, trusted, starts, stops, backward, white, sample, short, 
                     g[i] = np.nan
         if backward:
             g = g[::-1].copy()
-        _window_spreads(g, white, sample)
-        _block_spread(g, 4, short)
-        _block_spread(g, 16, long)
+        _window_spreads(g, grids[0], grids[1])
+        _block_spread(g, 4, grids[2])
+        _block_spread(g, 16, grids[3])
         mean, sigma, count, step = _floor_of(g)
         high, repeats = _top_of(g)
         rows[t, 0], rows[t, 1], rows[t, 2], rows[t, 3] = mean, sigma, count, step
@@ -274,8 +288,8 @@ def gather(conductance, trusted, starts, stops, backward, white, sample, short, 
 
 @warm_up
 def _warm_up() -> None:
-    histograms = [np.zeros((LEVEL_BINS, SPREAD_BINS), np.int64) for _ in range(4)]
+    grids = np.zeros((4, LEVEL_BINS, SPREAD_BINS), np.int64)
     g = np.linspace(1, 0, 128).astype(np.float32)
     bounds = np.array([0], np.int64), np.array([128], np.int64)
     for trusted in (np.ones(128, np.bool_), np.empty(0, np.bool_)):
-        gather(g, trusted, *bounds, False, *histograms, np.empty((1, 7)), np.empty((1, CROSSING_LEVELS), np.int64))
+        gather(g, trusted, *bounds, False, grids, np.empty((1, 7)), np.empty((1, CROSSING_LEVELS), np.int64))
