@@ -1,7 +1,30 @@
 """Line shapes, peak fits, series resistance, decay constant."""
 
+from meseta.peaks.decay import Decay, DecayPoints, decay
 from meseta.peaks.fit import fit_histogram
+from meseta.peaks.formation import Formation, formation_probability
+from meseta.peaks.meaning import assignment, channels_at_least
+from meseta.peaks.points import read_points
+from meseta.peaks.published import PublishedValue, published
+from meseta.peaks.resistance import SeriesResistance, series_resistance
 from meseta.peaks.results import PeakFit, PeakTable
 from meseta.peaks.windows import Floor
 
-__all__ = ["Floor", "PeakFit", "PeakTable", "fit_histogram"]
+__all__ = [
+    "Decay",
+    "DecayPoints",
+    "Floor",
+    "Formation",
+    "PeakFit",
+    "PeakTable",
+    "PublishedValue",
+    "SeriesResistance",
+    "assignment",
+    "channels_at_least",
+    "decay",
+    "fit_histogram",
+    "formation_probability",
+    "published",
+    "read_points",
+    "series_resistance",
+]
