@@ -211,14 +211,18 @@ class Evaluator:
         return str(measure.arguments[0].value)
 
     def _asked(self, quantity: Quantity, measure: Measure) -> Asked:
-        bounds, text, word = Asked().bounds, "", ""
+        bounds, place, text, word = Asked().bounds, Asked().place, "", ""
         given: set[str] = set()
         for argument in measure.arguments:
             kind = _argument_kind(argument)
+            if kind == "span" and kind in given:
+                kind = "place"
             if kind not in quantity.takes or kind in given:
                 raise self._error(f"'{quantity.name}' does not take this", argument, _takes(quantity))
             given.add(kind)
-            if isinstance(argument, Span):
+            if isinstance(argument, Span) and kind == "place":
+                place = argument.bounds
+            elif isinstance(argument, Span):
                 bounds = argument.bounds
             elif isinstance(argument, Word):
                 word = self._word(quantity, argument)
@@ -226,7 +230,7 @@ class Evaluator:
                 text = self._known_text(quantity, argument)
         if quantity.needs and quantity.needs not in given:
             raise self._error(f"'{quantity.name}' needs something in parentheses", measure, _takes(quantity))
-        return Asked(bounds, text, word)
+        return Asked(bounds, place, text, word)
 
     def _word(self, quantity: Quantity, word: Word) -> str:
         if word.name not in quantity.words:

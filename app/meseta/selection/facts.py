@@ -52,10 +52,19 @@ class Facts:
             inside[self.rows(self.decisions.groups[group].members)] = True
         return inside
 
-    def chosen_plateaus(self, bounds_g0: tuple[float, float], kind: str) -> Truths:
-        """Return which plateaus have their conductance in a half-open window and are of a kind ("" for any)."""
+    def chosen_plateaus(
+        self, bounds_g0: tuple[float, float], kind: str, place: tuple[float, float] = (float("-inf"), float("inf"))
+    ) -> Truths:
+        """Return which plateaus have their conductance in a half-open window and are of a kind ("" for any).
+
+        ``place`` is a half-open window of displacement in nm, counted from the zero, for the middle of the plateau; a
+        plateau whose trace has no zero, or whose drive is not in nm, lies in none.
+        """
         level = self.plateaus.level_g0
         chosen: Truths = (level >= bounds_g0[0]) & (level < bounds_g0[1])
+        if place != (float("-inf"), float("inf")):
+            middle = (self.plateaus.displacement_start_nm + self.plateaus.displacement_stop_nm) / 2
+            chosen = chosen & (middle >= place[0]) & (middle < place[1]) & self.plateaus.aligned
         return chosen & (self.plateaus.kind == kind) if kind else chosen
 
     def count_plateaus(self, chosen: Truths) -> Floats:

@@ -23,6 +23,7 @@ class Asked:
     """The arguments of a quantity, sorted by what they are."""
 
     bounds: tuple[float, float] = EVERYTHING
+    place: tuple[float, float] = EVERYTHING
     text: str = ""
     word: str = ""
 
@@ -46,7 +47,8 @@ class Quantity:
     find : callable
         (Facts, Asked) -> (traces,) array.
     takes : frozenset of str
-        Allowed arguments: "span", "word", "text".
+        Allowed arguments: "span" (a conductance window), "place" (a second span: the displacement of the plateau's
+        middle, from the zero), "word", "text".
     needs : str
         The argument that must be there ("text", "word" or "").
     words : tuple of str
@@ -81,14 +83,14 @@ def _text(name: str, title: str) -> Quantity:
 
 
 def _plateau_count(facts: Facts, asked: Asked) -> npt.NDArray[Any]:
-    return facts.count_plateaus(facts.chosen_plateaus(asked.bounds, asked.word))
+    return facts.count_plateaus(facts.chosen_plateaus(asked.bounds, asked.word, asked.place))
 
 
 def _plateau_longest(facts: Facts, asked: Asked) -> npt.NDArray[Any]:
-    return facts.longest_plateau(facts.chosen_plateaus(asked.bounds, asked.word))
+    return facts.longest_plateau(facts.chosen_plateaus(asked.bounds, asked.word, asked.place))
 
 
-_WINDOW: Final = frozenset({"span", "word"})
+_WINDOW: Final = frozenset({"span", "place", "word"})
 
 _ALL = (
     # what was measured on the trace
