@@ -55,19 +55,17 @@ def reduced(x: npt.ArrayLike, g0: npt.ArrayLike, points: int) -> Curve:
     size = -(-2 * len(g0) // max(points, 4))
     if size <= 2:
         return Curve(x, g0)
-    whole = len(g0) // size * size
-    folded = g0[:whole].reshape(-1, size)
-    filled_low = np.where(np.isnan(folded), np.inf, folded).min(axis=1)
-    filled_high = np.where(np.isnan(folded), -np.inf, folded).max(axis=1)
-    empty = filled_low > filled_high
-    falling = folded[:, 0] >= folded[:, -1]
-    pairs = np.where(falling[:, None], np.stack([filled_high, filled_low], 1), np.stack([filled_low, filled_high], 1))
-    pairs[empty] = np.nan
-    places = np.stack([x[:whole:size], x[size - 1 : whole : size]], 1)
-    return Curve(
-        np.concatenate([places.ravel(), x[whole:]]),
-        np.concatenate([pairs.ravel(), g0[whole:]]),
-    )
+    bins = -(-len(g0) // size)
+    folded = np.full(bins * size, np.nan)
+    folded[: len(g0)] = g0
+    folded = folded.reshape(bins, size)
+    low = np.where(np.isnan(folded), np.inf, folded).min(axis=1)
+    high = np.where(np.isnan(folded), -np.inf, folded).max(axis=1)
+    stop = np.minimum(np.arange(size, bins * size + 1, size), len(g0)) - 1
+    falling = folded[:, 0] >= g0[stop]
+    pairs = np.where(falling[:, None], np.stack([high, low], 1), np.stack([low, high], 1))
+    pairs[low > high] = np.nan
+    return Curve(np.stack([x[::size], x[stop]], 1).ravel(), pairs.ravel())
 
 
 def gapped(curves: list[Curve]) -> Curve:

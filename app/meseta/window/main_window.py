@@ -19,6 +19,7 @@ from meseta.window.commands import Commands
 from meseta.window.help import HelpBrowser
 from meseta.window.jobs import JobRunner
 from meseta.window.keeper import Keeper
+from meseta.window.plots.panel import PlotPanel
 from meseta.window.recent import RecentFiles
 from meseta.window.session import Session
 from meseta.window.status import StatusLine
@@ -103,8 +104,8 @@ class MainWindow(QMainWindow):
             dock.setObjectName(view.name)
             dock.setWidget(widget)
             dock.setAccessibleName(view.title)
-            if view.area == "below":
-                dock.setTitleBarWidget(_nothing())
+            if isinstance(widget, PlotPanel):
+                dock.setTitleBarWidget(widget.header)
             self.addDockWidget(_AREAS[view.area], dock)
             dock.setVisible(view.shown)
             self.docks[view.name] = dock
@@ -121,19 +122,17 @@ class MainWindow(QMainWindow):
     def _tab_docks(self) -> None:
         """Lay the tables of the right side over one another; conditions and groups stand below them."""
         right = [view.name for view in VIEWS if view.area == "right" and view.name not in ("conditions", "groups")]
+        self.splitDockWidget(self.docks[right[0]], self.docks["conditions"], Qt.Orientation.Vertical)
+        self.splitDockWidget(self.docks["conditions"], self.docks["groups"], Qt.Orientation.Vertical)
         for before, after in zip(right, right[1:], strict=False):
             self.tabifyDockWidget(self.docks[before], self.docks[after])
-        if right:
-            self.docks[right[0]].raise_()
-        if "conditions" in self.docks and right:
-            self.splitDockWidget(self.docks[right[0]], self.docks["conditions"], Qt.Orientation.Vertical)
-            self.splitDockWidget(self.docks["conditions"], self.docks["groups"], Qt.Orientation.Vertical)
+        self.docks[right[0]].raise_()
 
     def _size_docks(self) -> None:
         wide = max(self.width(), 1000)
         docks = self.docks
         self.resizeDocks(
-            [docks["steps"], docks["peaks"]], [232, min(max(wide // 5, 280), 420)], Qt.Orientation.Horizontal
+            [docks["steps"], docks["peaks"]], [264, min(max(wide // 5, 252), 420)], Qt.Orientation.Horizontal
         )
         self.resizeDocks([docks["strip"]], [max(self.height() // 5, 130)], Qt.Orientation.Vertical)
         self.resizeDocks(
@@ -371,13 +370,6 @@ class MainWindow(QMainWindow):
 def _tip(spec: ActionSpec) -> str:
     keys = f" ({QKeySequence(spec.keys[0]).toString(QKeySequence.SequenceFormat.NativeText)})" if spec.keys else ""
     return f"{spec.help or spec.text.rstrip(' …')}{keys}"
-
-
-def _nothing() -> QWidget:
-    """Return an empty title bar: the panel has a heading of its own."""
-    widget = QWidget()
-    widget.setFixedHeight(0)
-    return widget
 
 
 def _tabs_on_top() -> Any:

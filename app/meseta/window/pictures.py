@@ -29,6 +29,7 @@ __all__ = [
     "scaled_image",
     "strip_picture",
     "trace_picture",
+    "usual_top",
 ]
 
 Floats = npt.NDArray[np.float64]
@@ -229,6 +230,12 @@ def _halved(columns: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
     pairs = len(columns) // 2 * 2
     halved = (columns[0:pairs:2] + columns[1:pairs:2]) / 2
     return np.concatenate([halved, columns[pairs:]]) if pairs < len(columns) else halved
+
+
+def usual_top(density: npt.NDArray[np.floating]) -> float:
+    """Return a density that only one filled cell in 50 exceeds: the last colour stands for it and above."""
+    positive = density[density > 0]
+    return float(np.quantile(positive, 0.98)) if positive.size else 0.0
 
 
 def scaled_image(density: npt.NDArray[np.floating], scale: str, top: float | None = None) -> npt.NDArray[np.uint8]:

@@ -141,14 +141,19 @@ class Pipeline(QObject):
             if names:
                 self.refresh()
 
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Steps that are computed: those of the frame, then those that visible views ask for."""
+        extra = dict.fromkeys(name for names in self._wanted.values() for name in names if name not in ORDER)
+        return ORDER + tuple(extra)
+
     def refresh(self) -> None:
         """Bring all shown results up to date."""
         session = self._session
         analysis = session.analysis
         if analysis is None:
             return
-        extra = tuple(dict.fromkeys(name for names in self._wanted.values() for name in names if name not in ORDER))
-        names = ORDER + extra
+        names = self.names
         known = {name: shown.key for name, shown in session.shown.items() if not shown.provisional}
         session.errors.clear()
 

@@ -151,7 +151,7 @@ class Session(QObject):
         self._rows: dict[str, int] = {}
         self._rows_key = ""
         self.pipeline = Pipeline(self, jobs)
-        self.undo.cleanChanged.connect(lambda clean: self.saved_changed.emit(bool(clean)))
+        self.undo.cleanChanged.connect(self.saved_changed)
 
     # -- what is open -----------------------------------------------------------------------------------------------
 
@@ -368,7 +368,7 @@ class Session(QObject):
         current = shown is not None and not shown.provisional and shown.key == self.analysis.key(name)
         if current:
             return "current"
-        if self.jobs.runs(RESULTS):
+        if self.jobs.runs(RESULTS) and name in self.pipeline.names:
             return "working"
         return "none" if shown is None else "out of date"
 

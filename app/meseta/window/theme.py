@@ -157,6 +157,7 @@ QStatusBar {{ border-top: 1px solid {hairline}; }}
 QStatusBar::item {{ border: 0; }}
 QDockWidget {{ titlebar-close-icon: none; titlebar-normal-icon: none; font-weight: bold; }}
 QDockWidget::title {{ background: {ground}; padding: 4px 8px; text-align: left; }}
+QTabBar {{ qproperty-drawBase: 0; }}
 QTabBar::tab {{ background: {ground}; color: {quiet}; padding: 4px 8px; border: 0; border-bottom: 2px solid transparent; }}
 QTabBar::tab:selected {{ color: {ink}; border-bottom: 2px solid {selected}; }}
 QTabBar::tab:hover {{ color: {ink}; }}

@@ -121,7 +121,7 @@ class ChoiceEditor(Editor):
         self.combo = _StillCombo()
         self._values: list[Any] = ([None] if info.optional else []) + list(info.choices)
         self.combo.addItems(["not set" if v is None else str(v).replace("_", " ") for v in self._values])
-        self.combo.setMinimumContentsLength(8)
+        self.combo.setMinimumContentsLength(6)
         self.combo.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
         self.combo.currentIndexChanged.connect(lambda index: self.propose(self._values[index]))
         self.widget = self.combo
@@ -222,7 +222,7 @@ def _entries(value: Any) -> list[Any]:
 
 
 def _number_text(value: float) -> str:
-    return str(value) if isinstance(value, int) else f"{value:.10g}"
+    return str(value) if isinstance(value, int) else f"{value:.6g}"
 
 
 _EDITORS: dict[str, type[Editor]] = {
@@ -239,6 +239,7 @@ _EDITORS: dict[str, type[Editor]] = {
 def make_editor(info: FieldInfo, propose: Propose, complain: Callable[[str], None]) -> Editor:
     """Return the editor for a setting."""
     editor = _EDITORS[info.kind](info, propose, complain)
+    editor.widget.setMinimumWidth(72)
     editor.widget.setAccessibleName(info.title)
     editor.widget.setAccessibleDescription(info.help)
     return editor

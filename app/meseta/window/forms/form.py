@@ -5,7 +5,16 @@ from __future__ import annotations
 from typing import Any
 
 from PySide6.QtCore import Qt
-from PySide6.QtWidgets import QGridLayout, QHBoxLayout, QLabel, QPushButton, QToolButton, QVBoxLayout, QWidget
+from PySide6.QtWidgets import (
+    QGridLayout,
+    QHBoxLayout,
+    QLabel,
+    QPushButton,
+    QSizePolicy,
+    QToolButton,
+    QVBoxLayout,
+    QWidget,
+)
 
 from meseta import typeset
 from meseta.errors import MesetaError
@@ -24,6 +33,8 @@ class _Row:
         self._form, self.info = form, info
         self.title = QLabel(info.title)
         self.title.setWordWrap(True)
+        self.title.setMinimumWidth(40)
+        self.title.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Preferred)
         self.unit = QLabel(typeset.unit_text(info.unit))
         self.unit.setProperty("tone", "quiet")
         self.wrong = QLabel("")
@@ -96,10 +107,9 @@ class SectionForm(QWidget):
         line = 0
         for row in self.rows:
             line = self._place(grid, line, row)
-        grid.setColumnStretch(0, 5)
-        grid.setColumnStretch(1, 4)
+        grid.setColumnStretch(0, 1)
         column = QVBoxLayout(self)
-        column.setContentsMargins(12, 4, 4, 8)
+        column.setContentsMargins(12, 4, 0, 8)
         column.setSpacing(8)
         column.addLayout(grid)
         column.addLayout(self._buttons(help_page))
@@ -109,13 +119,14 @@ class SectionForm(QWidget):
     @staticmethod
     def _place(grid: QGridLayout, line: int, row: _Row) -> int:
         top = Qt.AlignmentFlag.AlignVCenter
-        if row.info.kind in ("list", "table"):
+        if row.info.kind not in ("number", "integer", "truth"):
             grid.addWidget(row.title, line, 0, 1, 3)
             grid.addWidget(row.reset, line, 3)
             grid.addWidget(row.editor.widget, line + 1, 0, 1, 4)
             grid.addWidget(row.wrong, line + 2, 0, 1, 4)
             return line + 3
         grid.addWidget(row.title, line, 0, top)
+        row.editor.widget.setFixedWidth(76)
         grid.addWidget(row.editor.widget, line, 1)
         grid.addWidget(row.unit, line, 2)
         grid.addWidget(row.reset, line, 3)

@@ -11,9 +11,10 @@ import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QPointF, QRectF, Qt, QTimer
 from PySide6.QtGui import QContextMenuEvent, QGuiApplication, QResizeEvent
-from PySide6.QtWidgets import QFileDialog, QHBoxLayout, QLabel, QMenu, QSizePolicy, QVBoxLayout, QWidget
+from PySide6.QtWidgets import QFileDialog, QHBoxLayout, QLabel, QMenu, QVBoxLayout, QWidget
 
 from meseta import typeset
+from meseta.window.elided import Elided
 from meseta.window.frame import Frame
 from meseta.window.plots.gestures import GestureBox
 from meseta.window.plots.ticks import ConductanceAxis
@@ -24,8 +25,9 @@ __all__ = ["PlotData", "PlotPanel", "SpinePanel"]
 
 GUIDES_LOGARITHMIC = (1, 2, 3)
 GUIDES_LINEAR = tuple(range(1, 11))
-BOTTOM_PIXELS = 44
-TOP_PIXELS = 6
+BOTTOM_PIXELS = 38
+TOP_PIXELS = 4
+HEADER_PIXELS = 28
 
 
 @dataclass(frozen=True)
@@ -54,8 +56,8 @@ class PlotPanel(QWidget):
         self.left, self.bottom = left, bottom
         self.plot = pg.PlotWidget(viewBox=self.box, axisItems={"left": left, "bottom": bottom}, background=None)
         self._prepare_plot()
-        self.heading = QLabel(self.title)
-        self.heading.setProperty("tone", "title")
+        self.header = QWidget()
+        self.heading = Elided(self.title, "title")
         self.state = QLabel("")
         self.state.setProperty("tone", "doubtful")
         self.corner = QHBoxLayout()
@@ -79,17 +81,16 @@ class PlotPanel(QWidget):
         self.plot.scene().sigMouseMoved.connect(self._mouse_moved)
 
     def _lay_out(self) -> None:
-        top = QHBoxLayout()
-        top.setContentsMargins(12, 8, 8, 0)
+        self.header.setProperty("role", "panel")
+        self.header.setAttribute(Qt.WidgetAttribute.WA_StyledBackground, True)
+        self.header.setFixedHeight(max(HEADER_PIXELS, self.fontMetrics().height() + 10))
+        top = QHBoxLayout(self.header)
+        top.setContentsMargins(12, 4, 8, 0)
         top.setSpacing(8)
-        top.addWidget(self.heading)
+        top.addWidget(self.heading, 1)
         top.addWidget(self.state)
-        top.addStretch(1)
-        self.corner.setSpacing(8)
+        self.corner.setSpacing(4)
         top.addLayout(self.corner)
-        self.heading.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Preferred)
-        self.heading.setMinimumWidth(40)
-        top.setStretch(0, 10)
         self.empty.setAlignment(Qt.AlignmentFlag.AlignCenter)
         self.empty.setWordWrap(True)
         self.empty.setProperty("tone", "quiet")
@@ -98,7 +99,7 @@ class PlotPanel(QWidget):
         column = QVBoxLayout(self)
         column.setContentsMargins(0, 0, 0, 0)
         column.setSpacing(0)
-        column.addLayout(top)
+        column.addWidget(self.header)
         column.addWidget(self.plot, 1)
 
     # -- to be said by subclasses -------------------------------------------------------------------------------------
@@ -109,6 +110,7 @@ class PlotPanel(QWidget):
 
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""
+        self.plot.setBackground(theme.palette.panel)
         self.left.wear(theme)
         self.bottom.wear(theme)
 
@@ -136,9 +138,7 @@ class PlotPanel(QWidget):
 
     def say_heading(self, text: str) -> None:
         """Write the heading."""
-        if text != self.heading.text():
-            self.heading.setText(text)
-            self.heading.setToolTip(text)
+        self.heading.say(text)
 
     def resizeEvent(self, event: QResizeEvent) -> None:  # noqa: N802 - Qt's name
         """Keep the words in the middle."""
@@ -246,9 +246,7 @@ class SpinePanel(PlotPanel):
     def show_scale(self, shown: bool) -> None:
         """Show the tick labels (the leftmost panel) or ticks alone (the others)."""
         self.conductance.setStyle(showValues=shown)
-        self.conductance.showLabel(shown)
-        if shown:
-            self.conductance.say(f"conductance G / {typeset.G0}")
+        self.conductance.show_name(shown)
         self.conductance.setWidth(64 if shown else 8)
 
     def _make_guides(self) -> None:

@@ -13,7 +13,7 @@ from meseta.window.theme import Theme
 
 __all__ = ["ScaleBar"]
 
-BAR_WIDTH, BAR_HEIGHT = 72, 8
+BAR_WIDTH, BAR_HEIGHT = 36, 8
 
 
 class ScaleBar(QWidget):
@@ -34,7 +34,7 @@ class ScaleBar(QWidget):
         self._image = QImage(self._table.data, 256, 1, 1024, QImage.Format.Format_RGBA8888)
         self._top, self._theme = typeset.number(top, 2), theme
         words = {"square_root": "square-root scale", "logarithmic": "logarithmic scale", "linear": "linear scale"}
-        text = f"colour: 0 to {self._top} {unit}, {words.get(division, division)}"
+        text = f"colour: 0 to {self._top} {unit} and above, {words.get(division, division)}"
         self.setToolTip(text)
         self.setAccessibleName(text)
         self._division = {"square_root": "√", "logarithmic": "log", "linear": ""}.get(division, "")

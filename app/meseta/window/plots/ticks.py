@@ -19,21 +19,31 @@ class _Axis(pg.AxisItem):
     def __init__(self, orientation: str, text: str = "") -> None:
         super().__init__(orientation, maxTickLength=-4)
         self.enableAutoSIPrefix(False)
-        self._text = text
+        self._text, self._named = text, True
         self.setStyle(autoExpandTextSpace=False, autoReduceTextSpace=False, hideOverlappingLabels=True)
 
     def say(self, text: str) -> None:
         """Write what the axis shows, with its unit."""
         if text != self._text or self.labelText != text:
             self._text = text
-            self.setLabel(text)
+            self._write_label()
+
+    def show_name(self, shown: bool) -> None:
+        """Show or hide what the axis shows."""
+        self._named = shown
+        self._write_label()
+
+    def _write_label(self, **style: str) -> None:
+        self.setLabel(self._text, **style)
+        self.showLabel(self._named and bool(self._text))
+        self.resizeEvent()  # pyqtgraph leaves a changed label where the old one was centred
 
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""
         self.setPen(theme.pen("hairline"))
         self.setTextPen(theme.pen("quiet"))
         if self._text:
-            self.setLabel(self._text, color=theme.palette.quiet)
+            self._write_label(color=theme.palette.quiet)
 
     # A wheel or drag on the axis belongs to the view's own gestures.
     def mouseDragEvent(self, event: Any) -> None:  # noqa: N802 - pyqtgraph's name

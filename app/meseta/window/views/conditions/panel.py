@@ -130,8 +130,8 @@ class ConditionsPanel(QWidget):
     def _buttons(self) -> QHBoxLayout:
         self.add = QPushButton("Add …")
         self.rule, self.group, self.clear = (
-            QPushButton("Make a rule"),
-            QPushButton("Make a group"),
+            QPushButton("To rule"),
+            QPushButton("To group"),
             QPushButton("Clear"),
         )
         self.add.setToolTip("Add a condition by typing its numbers")

@@ -9,7 +9,7 @@ from PySide6.QtCore import QRectF
 from meseta import typeset
 from meseta.histograms import DisplacementHistogram
 from meseta.window.frame import Frame
-from meseta.window.pictures import scaled_image
+from meseta.window.pictures import scaled_image, usual_top
 from meseta.window.plots.drawing import WindowTool
 from meseta.window.plots.panel import DrivePanel, PlotData
 from meseta.window.plots.scale import ScaleBar
@@ -96,11 +96,12 @@ class DisplacementPanel(DrivePanel):
         if part is not None:
             self._set(self.over, part, theme.over_lookup)
         self.over.setVisible(part is not None)
-        top = float(np.nanmax(whole.density)) if whole.density.size else 0.0
+        top = usual_top(whole.density)
         self.scale.show_scale(lookup, top, settings.colour_scale, whole.density_unit, theme)
 
     def _set(self, item: pg.ImageItem, histogram: DisplacementHistogram, lookup: np.ndarray) -> None:
-        image = scaled_image(histogram.density, self.session.document.recipe.figure.colour_scale)
+        scale = self.session.document.recipe.figure.colour_scale
+        image = scaled_image(histogram.density, scale, usual_top(histogram.density))
         item.setImage(image, autoLevels=False, levels=(0, 255), lut=lookup)
         x, u = histogram.drive_edges, histogram.grid.u_edges
         item.setRect(QRectF(float(x[0]), float(u[0]), float(x[-1] - x[0]), float(u[-1] - u[0])))
@@ -120,7 +121,7 @@ class DisplacementPanel(DrivePanel):
         else:
             self.say_empty("")
         if self._whole is not None:
-            self.say_heading(f"2D histogram, {typeset.integer(self._whole.traces)} traces")
+            self.heading.setToolTip(f"{typeset.integer(self._whole.traces)} traces")
 
     def data(self) -> PlotData | None:
         """Return the counts, one row a bin."""

@@ -5,4 +5,4 @@ from meseta.window.views.histogram.panel import HistogramPanel
 
 __all__ = ["VIEW"]
 
-VIEW = View("histogram", "Conductance histogram", "spine", HistogramPanel, help_page="histogram", stretch=9)
+VIEW = View("histogram", "Conductance histogram", "spine", HistogramPanel, help_page="histogram", stretch=11)

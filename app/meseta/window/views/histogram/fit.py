@@ -30,6 +30,7 @@ class FitLayer:
         for item in (self.model, self.background, self.components):
             panel.box.addItem(item, ignoreBounds=True)
         self.handles: list[pg.TargetItem] = []
+        self.labels: list[pg.TextItem] = []
         self._fit: PeakFit | None = None
         self._pointer_u = 0.0
         self._placing = False
@@ -43,8 +44,14 @@ class FitLayer:
         for handle in self.handles:
             handle.setPen(theme.wide_pen("fit", 1.5))
             handle.setBrush(pg.mkBrush(theme.colour("panel")))
-            if handle.label() is not None:
-                handle.label().setColor(theme.palette.fit)
+        for label in self.labels:
+            self._wear_label(label)
+
+    def _wear_label(self, label: pg.TextItem) -> None:
+        theme = self._panel.frame.theme
+        label.setColor(theme.palette.fit)
+        label.fill = pg.mkBrush(theme.colour("panel", 190))
+        label.update()
 
     def clear(self) -> None:
         """Show no fit."""
@@ -77,17 +84,49 @@ class FitLayer:
     def _arrange_handles(self, rows: list[int]) -> None:
         while len(self.handles) > len(rows):
             self._panel.box.removeItem(self.handles.pop())
+            self._panel.box.removeItem(self.labels.pop())
         while len(self.handles) < len(rows):
             self.handles.append(self._new_handle(len(self.handles)))
+            label = pg.TextItem("")
+            label.setZValue(29)
+            self._wear_label(label)
+            self._panel.box.addItem(label, ignoreBounds=True)
+            self.labels.append(label)
         self._placing = True
         try:
             for row in rows:
                 self._place(row)
         finally:
             self._placing = False
+        self.place_labels()
+
+    def place_labels(self) -> None:
+        """Write the positions beside the handles, on the side with room, none upon another."""
+        (left, right), (low, high) = self._panel.box.viewRange()
+        room = 18.0 * self._panel.box.viewPixelSize()[1]
+        below = -np.inf
+        for handle, label in sorted(zip(self.handles, self.labels, strict=True), key=lambda pair: pair[0].pos().y()):
+            x, u = float(handle.pos().x()), float(handle.pos().y())
+            label.setVisible(low <= u <= high)
+            if not low <= u <= high:
+                continue
+            height = max(u, below + room)
+            below = height
+            pixel = self._panel.box.viewPixelSize()[0]
+            shift, width = 8.0 * pixel, label.boundingRect().width() * pixel
+            if x + shift + width <= right:
+                label.setAnchor((0.0, 0.5))
+                label.setPos(x + shift, height)
+            elif x - shift - width >= left:
+                label.setAnchor((1.0, 0.5))
+                label.setPos(x - shift, height)
+            else:  # no room on either side: above the handle, at the right edge
+                below = max(u + room, below)
+                label.setAnchor((1.0, 0.5))
+                label.setPos(right, below)
 
     def _new_handle(self, row: int) -> pg.TargetItem:
-        handle = pg.TargetItem((0, 0), size=9, symbol="d", movable=True, label="", labelOpts={"offset": (8, 0)})
+        handle = pg.TargetItem((0, 0), size=9, symbol="d", movable=True)
         handle.setZValue(30)
         handle.setToolTip("Drag along the conductance axis to begin the fit elsewhere")
         handle.sigPositionChanged.connect(lambda _, row=row: self._dragged(row))
@@ -106,7 +145,7 @@ class FitLayer:
             position, float(table.position_low_g0[row]), float(table.position_high_g0[row]), "G0"
         )
         doubt = str(table.status[row])
-        handle.setLabel(text if doubt == "ok" else f"{text}  ?", {"offset": (8, 0), "color": theme.palette.fit})
+        self.labels[row].setText(text if doubt == "ok" else f"{text} (doubtful)")
         handle.setPen(theme.wide_pen("fit", 1.5))
         handle.setBrush(pg.mkBrush(theme.colour("panel")))
         handle.setToolTip(f"{table.peak[row]}: {text}; {doubt}. Drag to begin the fit elsewhere.")
@@ -126,8 +165,8 @@ class FitLayer:
         self._placing = True
         try:
             handle.setPos(self._height_at(u), u)
-            if handle.label() is not None:
-                handle.label().setText(f"start at {typeset.conductance(self._g0(u), 3)}")
+            self.labels[row].setText(f"start at {typeset.conductance(self._g0(u), 3)}")
+            self.place_labels()
         finally:
             self._placing = False
 

@@ -10,7 +10,8 @@ import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QPointF
 from PySide6.QtGui import QPolygonF
-from PySide6.QtWidgets import QComboBox, QGraphicsPolygonItem
+from PySide6.QtGui import QAction, QActionGroup
+from PySide6.QtWidgets import QGraphicsPolygonItem, QMenu, QToolButton
 
 from meseta import typeset
 from meseta.histograms import ConductanceHistogram
@@ -45,14 +46,15 @@ class HistogramPanel(SpinePanel):
         self.box.addItem(self.band, ignoreBounds=True)
         for item in (self.whole, self.weak, self.part):
             self.box.addItem(item, ignoreBounds=True)
+        self.beyond = pg.TextItem("", anchor=(1, 1))
+        self.beyond.setZValue(35)
+        self.box.addItem(self.beyond, ignoreBounds=True)
+        self.beyond.hide()
         self.fit = FitLayer(self)
         self.tool = WindowTool(self, across=False)
-        self.scale = QComboBox()
-        self.scale.addItems([f"scale: {name}" for name in SCALES])
-        self.scale.setAccessibleName("Scale of the density axis")
-        self.scale.setToolTip("What the density axis is scaled to")
-        self.scale.currentIndexChanged.connect(self._draw)
-        self.corner.addWidget(self.scale)
+        self.scale = SCALES[0]
+        self.scale_button = self._scale_button()
+        self.corner.addWidget(self.scale_button)
         session = self.session
         session.result_changed.connect(self._result_changed)
         session.states_changed.connect(self._say)
@@ -63,6 +65,32 @@ class HistogramPanel(SpinePanel):
         self.wear(frame.theme)
         self._draw()
 
+    # -- scale ----------------------------------------------------------------------------------------------------------
+
+    def _scale_button(self) -> QToolButton:
+        button, menu = QToolButton(), QMenu(self)
+        group = QActionGroup(self)
+        for name in SCALES:
+            action = QAction(f"scale {name}", menu)
+            action.setCheckable(True)
+            action.setChecked(name == self.scale)
+            action.triggered.connect(lambda _=False, one=name: self.scale_to(one))
+            group.addAction(action)
+            menu.addAction(action)
+        button.setMenu(menu)
+        button.setPopupMode(QToolButton.ToolButtonPopupMode.InstantPopup)
+        button.setAutoRaise(True)
+        button.setText(self.scale)
+        button.setAccessibleName("Scale of the density axis")
+        button.setToolTip("What the density axis is scaled to: the peaks in view, what is selected, or decades")
+        return button
+
+    def scale_to(self, scale: str) -> None:
+        """Scale the density axis to another part of the histogram, or by decades."""
+        self.scale = scale
+        self.scale_button.setText(scale)
+        self._draw()
+
     # -- looks ----------------------------------------------------------------------------------------------------------
 
     def wear(self, theme: Theme) -> None:
@@ -71,6 +99,7 @@ class HistogramPanel(SpinePanel):
         self._pens()
         self.tool.wear(theme)
         self.fit.wear(theme)
+        self.beyond.setColor(theme.palette.quiet)
 
     def _pens(self) -> None:
         theme = self.frame.theme
@@ -85,7 +114,7 @@ class HistogramPanel(SpinePanel):
     @property
     def logarithmic(self) -> bool:
         """Whether the density axis is logarithmic."""
-        return SCALES[self.scale.currentIndex()] == "logarithmic"
+        return self.scale == "logarithmic"
 
     @property
     def histogram(self) -> ConductanceHistogram | None:
@@ -158,8 +187,11 @@ class HistogramPanel(SpinePanel):
         centres = (histogram.grid.u_edges[:-1] + histogram.grid.u_edges[1:]) / 2
         span, subset = self.session.span, self.session.subset
         inside = (centres >= span.low) & (centres <= span.high)
+        above_floor = inside & (histogram.grid.centres_g0 > self._floor_end())
+        inside = above_floor if above_floor.any() else inside
+        inside = _past_the_decay(histogram.density, inside)
         density = histogram.density
-        if SCALES[self.scale.currentIndex()] == "selected":
+        if self.scale == "selected":
             chosen = inside & self._selected_bins(histogram)
             if chosen.any():
                 inside = chosen
@@ -171,6 +203,13 @@ class HistogramPanel(SpinePanel):
                     )
         top = float(np.nanmax(density[inside], initial=0.0)) if inside.any() else 0.0
         return top if top > 0 else float(np.nanmax(histogram.density, initial=0.0))
+
+    def _floor_end(self) -> float:
+        """Return the conductance below which samples are noise: they shall not set the scale."""
+        noise = self.session.result("noise")
+        if noise is None or not noise.floor_traces:
+            return 0.0
+        return float(abs(noise.floor_g0) + 6 * noise.floor_sigma_g0)
 
     def _selected_bins(self, histogram: ConductanceHistogram) -> npt.NDArray[np.bool_]:
         """Return the bins inside a condition's window, or else inside the range of the fit."""
@@ -188,11 +227,31 @@ class HistogramPanel(SpinePanel):
         top = self._top()
         if top <= 0:
             return
+        self._say_beyond(top)
         if self.logarithmic:
             high = float(np.log10(top))
             self.box.setXRange(high - DECADES_SHOWN, high + 0.15, padding=0)
         else:
             self.box.setXRange(-0.02 * top, 1.12 * top, padding=0)
+        self.fit.place_labels()
+
+    def _say_beyond(self, top: float) -> None:
+        """Mark where the curve runs beyond the scale, with how far."""
+        histogram = self.histogram
+        peak = 0.0
+        if histogram is not None:
+            centres = (histogram.grid.u_edges[:-1] + histogram.grid.u_edges[1:]) / 2
+            seen = np.where(
+                (centres >= self.session.span.low) & (centres <= self.session.span.high), histogram.density, 0
+            )
+            place = int(np.nanargmax(seen))
+            peak, height = float(seen[place]), float(centres[place])
+        shown = peak > 1.2 * top > 0
+        self.beyond.setVisible(shown)
+        if shown:
+            self.beyond.setText(f"to {typeset.number(peak, 2)} ▸")
+            right = float(np.log10(top)) + 0.15 if self.logarithmic else 1.12 * top
+            self.beyond.setPos(right, height)
 
     def _say(self) -> None:
         session = self.session
@@ -235,6 +294,25 @@ def _curve(z: int) -> pg.PlotCurveItem:
 def _steps(density: Floats, edges: Floats) -> tuple[Floats, Floats]:
     """Return a histogram as a stepped line on its side."""
     return np.repeat(density, 2), np.repeat(edges, 2)[1:-1]
+
+
+def _past_the_decay(density: Floats, inside: npt.NDArray[np.bool_]) -> npt.NDArray[np.bool_]:
+    """Return the bins in view without the decay at their lower end, where the floor or tunnelling runs out.
+
+    The decay ends where groups of bins begin to rise again; where they never do, all bins stay.
+    """
+    places = np.flatnonzero(inside)
+    size = max(len(places) // 60, 1)
+    groups = len(places) // size
+    if groups < 4:
+        return inside
+    coarse = np.nan_to_num(density[places[: groups * size]]).reshape(groups, size).mean(axis=1)
+    rising = np.flatnonzero(np.diff(coarse) > 0)
+    if not len(rising) or rising[0] == 0:
+        return inside
+    result = inside.copy()
+    result[places[: rising[0] * size]] = False
+    return result
 
 
 def _with_neighbours(density: Floats, weak: npt.NDArray[np.bool_]) -> Floats:

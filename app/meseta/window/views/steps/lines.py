@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 
@@ -167,6 +168,12 @@ def _figure(session: Session) -> str:
     return f"{settings.width_mm:g} mm wide, {settings.text_point:g} pt"
 
 
+def _study(session: Session) -> str:
+    if not session.study_path:
+        return "not saved yet"
+    return Path(session.study_path).name
+
+
 _WRITERS: dict[str, Callable[[Session], str]] = {
     "intake": _files,
     "calibration": _calibration,
@@ -183,4 +190,5 @@ _WRITERS: dict[str, Callable[[Session], str]] = {
     "resampling": _resampling,
     "peaks": _peaks,
     "figure": _figure,
+    "study": _study,
 }

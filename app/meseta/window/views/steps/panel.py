@@ -8,6 +8,7 @@ from PySide6.QtWidgets import QLabel, QScrollArea, QSizePolicy, QVBoxLayout, QWi
 
 from meseta import typeset
 from meseta.recipe import Recipe
+from meseta.window.elided import Elided
 from meseta.window.forms import SectionForm
 from meseta.window.frame import Frame
 from meseta.window.session import Change
@@ -27,8 +28,7 @@ class _Head(QWidget):
 
     def __init__(self, title: str) -> None:
         super().__init__()
-        self.title, self.line = QLabel(title), _Elided()
-        self.title.setProperty("tone", "title")
+        self.title, self.line = Elided(title, "title"), Elided()
         self.state, self.theme, self.open = "none", None, False
         column = QVBoxLayout(self)
         column.setContentsMargins(12, 3, 4, 3)
@@ -79,40 +79,6 @@ class _Head(QWidget):
             super().keyPressEvent(event)
 
 
-class _Elided(QLabel):
-    """A quiet line that is cut with dots where it does not fit, and says all of it as a tool tip."""
-
-    def __init__(self) -> None:
-        super().__init__("")
-        self._full = ""
-        self.setProperty("tone", "quiet")
-        self.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
-
-    def say(self, text: str, tone: str) -> None:
-        """Show a text in a tone."""
-        if text != self._full:
-            self._full = text
-            self.setText(text)
-            self.setToolTip(text)
-            self.update()
-        if self.property("tone") != tone:
-            self.setProperty("tone", tone)
-            self.style().unpolish(self)
-            self.style().polish(self)
-
-    def paintEvent(self, event: QPaintEvent) -> None:  # noqa: N802 - Qt's name
-        """Paint as much as fits."""
-        painter = QPainter(self)
-        painter.setPen(self.palette().color(self.foregroundRole()))
-        text = self.fontMetrics().elidedText(self._full, Qt.TextElideMode.ElideRight, self.width())
-        painter.drawText(self.rect(), Qt.AlignmentFlag.AlignVCenter, text)
-        painter.end()
-
-    def minimumSizeHint(self) -> QSize:  # noqa: N802 - Qt's name
-        """Ask for height only."""
-        return QSize(20, super().minimumSizeHint().height())
-
-
 class _Card(QWidget):
     """One step: its head, and its form once it was opened."""
 
@@ -145,7 +111,7 @@ class StepsPanel(QWidget):
     def __init__(self, frame: Frame) -> None:
         super().__init__()
         self.frame = frame
-        self.heading, self.under = QLabel("Meseta"), _Elided()
+        self.heading, self.under = QLabel("Meseta"), Elided()
         font = self.heading.font()
         font.setBold(True)
         font.setPointSizeF(font.pointSizeF() * 1.25)
@@ -169,7 +135,7 @@ class StepsPanel(QWidget):
     def _lay_out(self) -> None:
         inside = QWidget()
         column = QVBoxLayout(inside)
-        column.setContentsMargins(8, 8, 8, 8)
+        column.setContentsMargins(8, 4, 8, 8)
         column.setSpacing(2)
         column.addWidget(self.heading)
         column.addWidget(self.under)
@@ -185,11 +151,11 @@ class StepsPanel(QWidget):
         outer = QVBoxLayout(self)
         outer.setContentsMargins(0, 0, 0, 0)
         outer.addWidget(self.area)
-        self.setMinimumWidth(208)
+        self.setMinimumWidth(248)
 
     def sizeHint(self) -> QSize:  # noqa: N802 - Qt's name
         """Ask for a narrow column."""
-        return QSize(232, 600)
+        return QSize(264, 600)
 
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""

@@ -17,7 +17,7 @@ from meseta.histograms import CountMatrix
 from meseta.window.conditions import Condition
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
-from meseta.window.pictures import StripPicture, scaled_image, strip_picture
+from meseta.window.pictures import StripPicture, scaled_image, strip_picture, usual_top
 from meseta.window.plots.gestures import Drag
 from meseta.window.plots.panel import PlotData, PlotPanel
 from meseta.window.plots.ticks import ConductanceAxis, PlainAxis
@@ -146,7 +146,7 @@ class StripPanel(PlotPanel):
         lookup = theme.lookup(settings.colour_map).copy()
         lookup[0, :3] = theme.lookup("grey")[0, :3]
         columns = picture.levels[level]
-        image = scaled_image(columns, settings.colour_scale, _typical_top(columns))
+        image = scaled_image(columns, settings.colour_scale, usual_top(columns[:: max(len(columns) // 500, 1)]))
         self.image.setImage(image, autoLevels=False, levels=(0, 255), lut=lookup)
         width = len(columns) * 2**level
         self.image.setRect(QRectF(0, picture.u_low, width, picture.u_high - picture.u_low))
@@ -289,10 +289,3 @@ class StripPanel(PlotPanel):
                 "counts_per_trace": columns.ravel().astype(np.float64),
             },
         )
-
-
-def _typical_top(columns: npt.NDArray[np.float32]) -> float:
-    """Return a count that few cells exceed, so that the floor does not set the scale."""
-    sample = columns[:: max(len(columns) // 500, 1)]
-    positive = sample[sample > 0]
-    return float(np.quantile(positive, 0.98)) if len(positive) else 1.0

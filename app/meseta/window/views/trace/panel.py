@@ -31,6 +31,7 @@ class TracePanel(DrivePanel):
     object_name = "trace"
 
     def __init__(self, frame: Frame) -> None:
+        self._overlay_picture: OverlayPicture | None = None
         super().__init__(frame, PlainAxis("bottom", "displacement (nm)"))
         self.overlay = _curve(1)
         self.curve = _curve(10)
@@ -39,7 +40,6 @@ class TracePanel(DrivePanel):
         self.labels: list[pg.TextItem] = []
         for item in (self.overlay, self.curve, self.levels, self.caps):
             self.box.addItem(item, ignoreBounds=True)
-        self._overlay_picture: OverlayPicture | None = None
         self.tool = WindowTool(self, across=True)
         session = self.session
         session.picture_changed.connect(self._show)
@@ -47,6 +47,8 @@ class TracePanel(DrivePanel):
         session.traces_changed.connect(self._traces_changed)
         session.document_changed.connect(self._document_changed)
         session.current_changed.connect(self._current_changed)
+        session.drive_span_changed.connect(self._redraw)
+        session.span_changed.connect(self._redraw)
         self.wear(frame.theme)
         self._traces_changed()
 
@@ -56,12 +58,23 @@ class TracePanel(DrivePanel):
         """Take the colours of a theme."""
         super().wear(theme)
         self.curve.setPen(theme.pen("ink"))
-        self.overlay.setPen(theme.pen("selected", alpha=70))
+        self._pen_overlay()
         self.levels.setPen(theme.wide_pen("selected", 3.0))
         self.caps.setPen(theme.wide_pen("selected", 2.0))
         for label in self.labels:
-            label.setColor(theme.palette.selected)
+            self._wear_label(label)
         self.tool.wear(theme)
+
+    def _pen_overlay(self) -> None:
+        """Draw the overlay the fainter the more traces it holds, so that the current one stands out."""
+        drawn = 1 if self._overlay_picture is None else max(self._overlay_picture.drawn, 1)
+        self.overlay.setPen(self.frame.theme.pen("selected", alpha=int(min(max(5000 / drawn, 22), 120))))
+
+    def _wear_label(self, label: pg.TextItem) -> None:
+        theme = self.frame.theme
+        label.setColor(theme.palette.selected)
+        label.fill = pg.mkBrush(theme.colour("panel", 190))
+        label.update()
 
     # -- what is drawn --------------------------------------------------------------------------------------------------
 
@@ -90,6 +103,11 @@ class TracePanel(DrivePanel):
         traces = self.session.traces
         if traces is not None:
             self.say_heading(f"Trace {typeset.integer(trace)}")
+
+    def _redraw(self, _: object) -> None:
+        """Place labels and caps anew: they depend on what is in view."""
+        if self.session.picture is not None:
+            self._show_plateaus(self.session.picture)
 
     def _document_changed(self, change: Change) -> None:
         if change.before.recipe.histogram.axis != change.after.recipe.histogram.axis:
@@ -121,8 +139,10 @@ class TracePanel(DrivePanel):
         ends_x = np.concatenate([picture.x_start, picture.x_stop])
         ends_u = np.concatenate([left, right])
         self.caps.setData(*_strokes(ends_x, ends_u - cap, ends_x, ends_u + cap), connect="finite")
-        middle = heights(level, axis, low)
-        self._label((picture.x_start + picture.x_stop) / 2, middle, [typeset.conductance(g, 2) for g in level])
+        first, last = self.session.drive_span
+        seen_start, seen_stop = np.clip(picture.x_start, first, last), np.clip(picture.x_stop, first, last)
+        middle = np.where(seen_stop > seen_start, heights(level, axis, low), np.nan)
+        self._label((seen_start * 3 + seen_stop) / 4, middle, [typeset.conductance(g, 2) for g in level])
 
     def _label(self, x: npt.ArrayLike, u: npt.ArrayLike, texts: list[str]) -> None:
         """Write the numbers of the longest plateaus where they do not lie upon one another."""
@@ -131,12 +151,15 @@ class TracePanel(DrivePanel):
         taken: list[float] = []
         shown = []
         for index in np.argsort(-us):
+            if np.isnan(us[index]):
+                continue
             if len(taken) < LABELS_AT_MOST and all(abs(us[index] - other) > room for other in taken):
                 taken.append(us[index])
                 shown.append(int(index))
         while len(self.labels) < len(shown):
-            label = pg.TextItem("", color=self.frame.theme.palette.selected, anchor=(0, 1))
+            label = pg.TextItem("", anchor=(0, 1))
             label.setZValue(30)
+            self._wear_label(label)
             self.labels.append(label)
             self.box.addItem(label, ignoreBounds=True)
         for place, label in enumerate(self.labels):
@@ -151,6 +174,7 @@ class TracePanel(DrivePanel):
         if overlay is None:
             self.overlay.setData([], [])
             return
+        self._pen_overlay()
         heights_u = overlay.curve.on(self.session.axis, self._lowest())
         self.overlay.setData(overlay.curve.x, heights_u, connect="finite")
         if overlay.drawn < overlay.asked:
