@@ -166,9 +166,16 @@ def trace_columns(analysis: Analysis, work: Work | None = None) -> dict[str, npt
 
 
 def run_analysis(
-    analysis: Analysis, folder: Path, work: Work, bad_files: Sequence[MesetaError] = (), title: str = ""
+    analysis: Analysis,
+    folder: Path,
+    work: Work,
+    bad_files: Sequence[MesetaError] = (),
+    title: str = "",
+    files: Sequence[str | Path] = (),
 ) -> RunResult:
     """Do every step, and fill ``folder`` with the result, whole or not at all.
+
+    ``files`` is what the traces were read from, so that the study of the result can keep the recordings.
 
     Raises
     ------
@@ -199,7 +206,7 @@ def run_analysis(
         )
         analysis.recipe.save(partial / "recipe.toml")
         work.tell("writing the result", 1, 4, "parts")
-        study.write_study(partial / "study.h5", analysis, work.quiet())
+        study.write_study(partial / "study.h5", analysis, work.quiet(), files, "study made by a run")
         work.tell("writing the result", 2, 4, "parts")
         figure = figures.result_figure(histogram, displacement, fit, analysis.recipe.figure, title)
         for suffix in ("pdf", "svg", "png"):

@@ -124,7 +124,7 @@ def run_one(files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bo
     analysis, bad = open_analysis(files, choice, strict, work)
     title = Path(files[0]).stem if len(files) == 1 else f"{len(files)} recordings"
     try:
-        return run_analysis(analysis, folder, work, bad, title)
+        return run_analysis(analysis, folder, work, bad, title, files)
     except MesetaError as error:
         raise _later(error) from error
 

@@ -61,7 +61,7 @@ def read_traces(root: h5py.Group, file: BlockFile, sources: tuple[Source, ...]) 
         },
         drive=Drive(read_array(home, "drive_start"), read_array(home, "drive_step"), unit, relative),
         phases=PhaseTable(*(read_array(phases, name) for name in PHASES)),
-        table={name: read_array(table, name) for name in names(table)},
+        table={name: read_array(table, name) for name in _ordered(table)},
         sources=sources,
         key=str(read_attribute(home, "key")),
         quality=read_samples(home, "quality", file)[0] if "quality" in home else None,
@@ -69,6 +69,13 @@ def read_traces(root: h5py.Group, file: BlockFile, sources: tuple[Source, ...]) 
     )
     _check(traces)
     return traces, str(read_attribute(home, "recipe_key"))
+
+
+def _ordered(table: h5py.Group) -> list[str]:
+    """Return the names of a table's columns in their order; a study of schema 1 does not tell it."""
+    order = json.loads(str(read_attribute(table, "order"))) if "order" in table.attrs else []
+    there = names(table)
+    return [name for name in order if name in there] + [name for name in there if name not in order]
 
 
 def _check(traces: TraceSet) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from typing import Any
@@ -156,6 +157,7 @@ class TraceWriter:
                 del home[name]
         write_columns(home.create_group("phases"), {name: getattr(traces.phases, name) for name in PHASES})
         write_columns(home.create_group("table"), traces.table)
+        home["table"].attrs["order"] = json.dumps(list(traces.table))
         return traces
 
 
