@@ -179,6 +179,7 @@ def _without_samples(traces: TraceSet) -> TraceSet:
 
 def _joined(first: TraceSet, second: TraceSet) -> TraceSet:
     """Return the tables of two sets of traces, one behind the other."""
+    first, second = _without_lone_measures(first, second), _without_lone_measures(second, first)
     rows = first.traces
     phases = second.phases
     moved = PhaseTable(phases.trace + rows, phases.start, phases.stop, phases.kind)
@@ -199,6 +200,17 @@ def _joined(first: TraceSet, second: TraceSet) -> TraceSet:
         sources=(*first.sources, *second.sources),
         notes=_joined_notes(first.notes, second.notes),
     )
+
+
+def _without_lone_measures(traces: TraceSet, other: TraceSet) -> TraceSet:
+    """Return traces without the columns of plug-in measures that the others lack; they are measured anew when asked."""
+    ours, theirs = traces.notes.get("measures", []), other.notes.get("measures", [])
+    lone = [one for one in ours if one not in theirs]
+    if not lone:
+        return traces
+    gone = {one["name"] for one in lone}
+    notes = {**traces.notes, "measures": [one for one in ours if one in theirs]}
+    return replace(traces, table={name: one for name, one in traces.table.items() if name not in gone}, notes=notes)
 
 
 def _joined_tables(first: Table, second: Table, rows: int, more: int) -> dict[str, npt.NDArray[Any]]:

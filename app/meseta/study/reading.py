@@ -13,6 +13,7 @@ from meseta.analysis import Analysis
 from meseta.errors import CallError, InputError
 from meseta.intake import Recording, find_files, open_recording
 from meseta.recipe import Recipe
+from meseta.selection import with_measures
 from meseta.study.files import is_study, looking
 from meseta.study.history import History
 from meseta.study.loading import write_content, write_whole_traces
@@ -52,7 +53,8 @@ def read(paths: Paths, recipe: Recipe | None = None, work: Work | None = None) -
     named = _listed(paths)
     study = _only_study(named)
     if study is None:
-        return intake.read(named, recipe or Recipe(), work or Work())
+        recipe, work = recipe or Recipe(), work or Work()
+        return with_measures(intake.read(named, recipe, work), recipe.selection.measures, work)
     with Study.open(study, read_only=True) as opened:
         return opened.analysis(recipe, work).traces
 

@@ -16,6 +16,7 @@ from meseta.errors import StudyError
 from meseta.intake.files import FoundFile
 from meseta.intake.reading import traces_from
 from meseta.recipe import Recipe
+from meseta.selection import with_measures
 from meseta.study.chunks import BlockFile
 from meseta.study.content import write_sources
 from meseta.study.damage import find_losses, without_lost
@@ -232,8 +233,10 @@ class Study(Notebook):
         out by the selection.
         """
         work = work or Work()
+        recipe = recipe or self.recipe
         traces = self.traces(work, recipe)
-        return Analysis(without_lost(traces, find_losses(traces, work)), recipe or self.recipe, self.decisions)
+        traces = without_lost(traces, find_losses(traces, work))
+        return Analysis(with_measures(traces, recipe.selection.measures, work), recipe, self.decisions)
 
     def check(self, work: Work | None = None) -> list[str]:
         """Read everything, and return what is damaged, in words; empty where all is whole."""
