@@ -85,7 +85,7 @@ def metal_centre_g0(atoms: npt.ArrayLike, settings: SimulationSettings) -> Float
 
 def metal_spread_g0(atoms: npt.ArrayLike) -> Floats:
     """Return the standard deviation of such contacts; thicker contacts have more arrangements (our choice)."""
-    return 0.025 * np.asarray(atoms, float) ** 1.3
+    return 0.045 * np.asarray(atoms, float) ** 1.1
 
 
 def _staircase(draw: Draw, shift_decades: Floats) -> Staircase:

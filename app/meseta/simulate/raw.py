@@ -173,7 +173,7 @@ def _thinning(
     traces = len(before)
     shares = rng.dirichlet(np.full(_THICK, 2.0), traces)
     stop = cycle.hold + np.rint(np.cumsum(shares, axis=1) * before[:, None]).astype(np.int64)
-    fall = np.linspace(1.0, 0.0, _THICK + 1)[:-1] + 0.25 / _THICK * rng.uniform(-1, 1, (traces, _THICK))
+    fall = -np.sort(-rng.random((traces, _THICK)), axis=1)
     top = np.log10(top_g0)[:, None]
     level = top + np.maximum(np.log10(_CLOSED_G0) - top, 0.3) * fall + 0.02
     first = _constant(np.full((traces, 1), cycle.hold), level[:, :1], settings, NOTHING)

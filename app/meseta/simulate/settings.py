@@ -126,7 +126,7 @@ class SimulationSettings:
     tunnelling_spread: float = _setting(
         0.08, "Spread of the tunnelling slope", "", "Relative standard deviation between traces.", low=0, high=0.3
     )
-    snap_back_nm: float = _setting(0.38, "Snap-back", "nm", "Mean gap right after the contact has broken.", low=0)
+    snap_back_nm: float = _setting(0.45, "Snap-back", "nm", "Mean gap right after the contact has broken.", low=0)
     snap_back_spread_nm: float = _setting(0.08, "Spread of the snap-back", "nm", low=0)
 
     yield_share: float = _setting(0.4, "Yield", "", "Share of traces with a molecule.", low=0, high=1)
