@@ -2,11 +2,10 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 import numpy.typing as npt
 
+from meseta.histograms import kernels
 from meseta.histograms.grids import histogram_grid
 from meseta.histograms.results import CorrelationHistogram, CountMatrix
 from meseta.recipe.histogram import CorrelationSettings
@@ -60,8 +59,7 @@ def correlation_counts(
     high = min(settings.high_g0, counts.shown.edges_g0[-1])
     first, last, merge = histogram_grid(counts.grid, low, high, settings.bins_per_decade, settings.bin_width_g0)
     rows = np.flatnonzero(kept & counts.used)
-    chosen = counts.take(rows)
-    return replace(chosen, first=first, last=last, merge=merge)
+    return counts.take(rows).trimmed(first, last, merge)
 
 
 def correlation_histogram(
@@ -83,5 +81,6 @@ def correlation_histogram(
     Makk et al., ACS Nano 6, 3411 (2012).
     """
     chosen = correlation_counts(counts, kept, settings, noise)
-    values = chosen.shown_counts(chosen.counts)
+    values = np.empty((len(chosen.counts), chosen.shown.bins))
+    kernels.merge_rows(chosen.counts, np.arange(len(chosen.counts)), chosen.merge, values)
     return CorrelationHistogram(chosen.shown, correlation_of(values), len(values), np.nan)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import replace
 
 import numpy as np
 import numpy.typing as npt
@@ -97,7 +96,9 @@ def count_ranges(
 
 
 def with_bins(counts: CountMatrix, settings: HistogramSettings, noise: NoiseModel) -> CountMatrix:
-    """Return the same counts with the histogram's bins chosen: nothing is counted anew.
+    """Return the same counts on the fine bins within the histogram's ends, and how many make one of its bins.
+
+    Nothing is counted anew; stored bins beyond the ends become under or over.
 
     Raises
     ------
@@ -106,4 +107,4 @@ def with_bins(counts: CountMatrix, settings: HistogramSettings, noise: NoiseMode
     """
     low, high = axis_range(settings, noise)
     first, last, merge = histogram_grid(counts.grid, low, high, settings.bins_per_decade, settings.bin_width_g0)
-    return replace(counts, first=first, last=last, merge=merge)
+    return counts.trimmed(first, last, merge)

@@ -5,10 +5,11 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
+from meseta.histograms import kernels
 from meseta.histograms.results import EXCLUDED, ConductanceHistogram, CountMatrix, Resampling
 from meseta.recipe.histogram import HistogramSettings
 
-__all__ = ["conductance_histogram"]
+__all__ = ["conductance_histogram", "summed"]
 
 Floats = npt.NDArray[np.float64]
 _EQUAL_STEPS = 1e-6
@@ -41,9 +42,9 @@ def conductance_histogram(
     every sample counts its displacement, so that neither sampling rate nor speed enters.
     """
     rows = np.flatnonzero(kept & counts.used)
-    fine = _column_sums(counts.counts, rows)
+    fine, reached = summed(counts, rows)
     total = counts.shown_counts(fine)
-    excluded = _excluded(counts, rows, fine)
+    excluded = dict(zip(EXCLUDED, (int(n) for n in counts.excluded[rows].sum(0)), strict=True))
     grid, traces = counts.shown, len(rows)
     weight = _weight(counts, rows, settings.normalisation)
     weighted = _weighted(counts, rows, weight, total)
@@ -56,7 +57,7 @@ def conductance_histogram(
         grid=grid,
         counts=total,
         traces=traces,
-        traces_in_bin=_traces_in_bin(counts, rows),
+        traces_in_bin=reached,
         density=density,
         density_low=low,
         density_high=high,
@@ -68,23 +69,12 @@ def conductance_histogram(
     )
 
 
-def _column_sums(counts: npt.NDArray[np.unsignedinteger], rows: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:
-    """Return exact sums over the chosen rows."""
-    if len(rows) == len(counts):
-        result: npt.NDArray[np.int64] = counts.sum(0, dtype=np.int64)
-        return result
-    mask = np.zeros(len(counts), bool)
-    mask[rows] = True
-    total: npt.NDArray[np.int64] = counts.sum(0, dtype=np.int64, where=mask[:, None])
-    return total
-
-
-def _excluded(counts: CountMatrix, rows: npt.NDArray[np.int64], fine: npt.NDArray[np.int64]) -> dict[str, int]:
-    """Return what is in no bin of the histogram, by reason: stored bins beyond its ends are under or over."""
-    sums = dict(zip(EXCLUDED, (int(n) for n in counts.excluded[rows].sum(0)), strict=True))
-    sums["under"] += int(fine[: counts.first].sum())
-    sums["over"] += int(fine[counts.last or counts.grid.bins :].sum())
-    return sums
+def summed(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.int64]]:
+    """Return the sums of the chosen rows in fine bins, and how many of them reach each bin of the histogram."""
+    fine = np.zeros(counts.grid.bins, np.int64)
+    reached = np.zeros(counts.shown.bins, np.int64)
+    kernels.sum_rows(counts.counts, rows, counts.merge, fine, reached)
+    return fine, reached
 
 
 def _weight(counts: CountMatrix, rows: npt.NDArray[np.int64], normalisation: str) -> Floats | None:
@@ -148,13 +138,3 @@ def _band(
         replicate = replicate * (len(rows) / np.maximum(drawn, 1))
     low, high = resampling.interval(density, replicate * norm / widths)
     return np.maximum(low, 0.0), high
-
-
-def _traces_in_bin(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:
-    stop = counts.last or counts.grid.bins
-    bins = (stop - counts.first) // counts.merge
-    total = np.zeros(bins, np.int64)
-    for start in range(0, len(rows), 1024):
-        part = counts.counts[rows[start : start + 1024], counts.first : counts.first + bins * counts.merge]
-        total += (part.reshape(len(part), bins, counts.merge).max(-1) > 0).sum(0)
-    return total

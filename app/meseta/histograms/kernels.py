@@ -17,10 +17,13 @@ __all__ = [
     "count_flagged_rows",
     "count_rows",
     "count_stepped_grid",
+    "draw_blocks",
     "first_at_or_past",
     "fold_rows",
+    "merge_rows",
     "place_of",
     "settle_region",
+    "sum_rows",
 ]
 
 GROUP = 16
@@ -116,6 +119,49 @@ def fold_rows(
                 counts[column[place]] += counts.dtype.type(number)
             else:
                 special[column[place] - bins] += number
+
+
+@kernel
+def sum_rows(
+    counts: npt.NDArray[np.unsignedinteger],
+    rows: npt.NDArray[np.int64],
+    merge: int,
+    total: npt.NDArray[np.int64],
+    reached: npt.NDArray[np.int64],
+) -> None:
+    """Add the chosen rows to ``total`` (fine bins); ``reached`` counts the rows that have any in each ``merge`` bins."""
+    for row in rows:
+        line = counts[row]
+        for place in range(len(total)):
+            total[place] += line[place]
+        if merge == 4:
+            for coarse in range(len(reached)):
+                at = 4 * coarse
+                reached[coarse] += (line[at] | line[at + 1] | line[at + 2] | line[at + 3]) != 0
+        else:
+            for coarse in range(len(reached)):
+                some = line[coarse * merge]
+                for place in range(coarse * merge + 1, coarse * merge + merge):
+                    some |= line[place]
+                reached[coarse] += some != 0
+
+
+@kernel
+def merge_rows(
+    counts: npt.NDArray[np.unsignedinteger],
+    rows: npt.NDArray[np.int64],
+    merge: int,
+    merged: npt.NDArray[np.floating],
+) -> None:
+    """Write the chosen rows, ``merge`` fine bins summed to one, as floating-point numbers (exact below 2**24)."""
+    bins = merged.shape[1]
+    for place in range(len(rows)):
+        line = counts[rows[place]]
+        for coarse in range(bins):
+            total = np.int64(0)
+            for at in range(coarse * merge, min(coarse * merge + merge, len(line))):
+                total += line[at]
+            merged[place, coarse] = total
 
 
 @kernel
@@ -268,6 +314,25 @@ def count_explicit_grid(
                 tally[at & 1, place_of(shifted, drive_edges), place] += 1
 
 
+@kernel
+def draw_blocks(
+    starts: npt.NDArray[np.int64],
+    lengths: npt.NDArray[np.int64],
+    rows: npt.NDArray[np.int64],
+    weights: npt.NDArray[np.uint16],
+) -> None:
+    """Count how often each of ``rows`` lies in the blocks of a replicate; blocks run on from the end to the begin."""
+    traces = len(rows)
+    for replicate in range(len(starts)):
+        for block in range(len(lengths)):
+            at = starts[replicate, block]
+            for _ in range(lengths[block]):
+                weights[replicate, rows[at]] += 1
+                at += 1
+                if at == traces:
+                    at = 0
+
+
 @warm_up
 def _warm_up() -> None:
     values = np.array([0.1, 1.0, 2.0, 0.5, 0.2], np.float32)
@@ -278,6 +343,7 @@ def _warm_up() -> None:
         counts = np.zeros((1, 1), kind)
         count_rows(values, begin, end, table, thresholds, 1, column, counts, special)
         count_flagged_rows(values, np.zeros(5, np.uint8), begin, end, table, thresholds, column, counts, special, 0, 1)
+    draw_blocks(np.zeros((1, 1), np.int64), end, np.arange(5), np.zeros((1, 5), np.uint16))
     settle_region(values, begin, end, values[:1], end, np.zeros(1, np.int64))
     unit = np.ones(1)
     edges = np.array([0.0, 1.0])

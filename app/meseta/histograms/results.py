@@ -86,9 +86,6 @@ class CountMatrix:
         Traces that have samples in the chosen phase (direction).
     merge : int
         How many fine bins make one bin of the histogram.
-    first, last : int
-        Fine bins that the histogram shows: ``first`` to ``last`` (exclusive); ``last`` 0 means all.  The stored grid is
-        longer, so that another end of the axis needs no new count.
     """
 
     grid: Grid
@@ -97,8 +94,6 @@ class CountMatrix:
     nm_a_sample: Floats
     used: npt.NDArray[np.bool_]
     merge: int = 1
-    first: int = 0
-    last: int = 0
 
     @classmethod
     def joined(cls, parts: Sequence[CountMatrix]) -> CountMatrix:
@@ -120,16 +115,21 @@ class CountMatrix:
 
     @property
     def shown(self) -> Grid:
-        """The histogram's grid: fine bins ``first`` to ``last``, ``merge`` by ``merge``."""
-        stop = self.last or self.grid.bins
-        return Grid(self.grid.edges_g0[self.first : stop + 1 : self.merge], self.grid.axis)
+        """The histogram's grid: fine bins, ``merge`` by ``merge``."""
+        return Grid(self.grid.edges_g0[:: self.merge], self.grid.axis)
 
     def shown_counts(self, fine: npt.NDArray[Any]) -> npt.NDArray[Any]:
         """Return fine counts ``(..., fine bins)`` summed exactly to the histogram's bins ``(..., bins)``."""
-        stop = self.last or self.grid.bins
-        bins = (stop - self.first) // self.merge
-        part = fine[..., self.first : self.first + bins * self.merge]
-        return part.reshape(*part.shape[:-1], bins, self.merge).sum(-1)
+        bins = self.grid.bins // self.merge
+        return fine[..., : bins * self.merge].reshape(*fine.shape[:-1], bins, self.merge).sum(-1)
+
+    def trimmed(self, first: int, last: int, merge: int) -> CountMatrix:
+        """Return the matrix with fine bins ``first`` to ``last`` only ; what they leave out is under or over."""
+        excluded = self.excluded.copy()
+        excluded[:, EXCLUDED.index("under")] += self.counts[:, :first].sum(1, dtype=np.int64)
+        excluded[:, EXCLUDED.index("over")] += self.counts[:, last:].sum(1, dtype=np.int64)
+        grid = Grid(self.grid.edges_g0[first : last + 1], self.grid.axis)
+        return replace(self, grid=grid, counts=self.counts[:, first:last], excluded=excluded, merge=merge)
 
     def block(self, first: int, last: int) -> CountMatrix:
         """Return the rows of traces ``first`` to ``last``."""
@@ -172,6 +172,10 @@ class Resampling:
         :meth:`interval` applies it.
     degrees : float
         Degrees of freedom behind ``widen``.
+    specimens : int
+        Specimens (or sessions) that were drawn as wholes; 0 where blocks or traces were drawn.
+    held_fixed : str
+        What is the same in every replicate, and therefore not in the intervals.
     """
 
     scheme: str
@@ -183,6 +187,14 @@ class Resampling:
     counts: Floats
     widen: float = 1.0
     degrees: float = np.inf
+    specimens: int = 0
+    held_fixed: str = ""
+
+    def to_halve_error(self) -> str:
+        """Say how much more would have to be measured for half the statistical error."""
+        if self.specimens:
+            return f"{3 * self.specimens:,} more specimens; more traces of these {self.specimens} would not"
+        return f"{3 * len(self.rows):,} more traces like these"
 
     def interval(
         self, estimate: npt.ArrayLike, replicates: npt.ArrayLike, level: float = 0.95
