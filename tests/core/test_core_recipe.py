@@ -57,6 +57,7 @@ def test_every_setting_has_title_and_help_in_the_commented_recipe():
         for info in section.fields():
             assert info.title
             assert info.title in text, f"{name}.{info.name}"
+    assert max(len(line) for line in text.splitlines() if line.startswith("#")) <= 120
 
 
 def test_the_commented_recipe_names_unit_and_range():

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import textwrap
 import tomllib
 from collections.abc import Iterable, Mapping
 from pathlib import Path
@@ -197,7 +198,8 @@ def _value(text: str) -> Any:
 def _write(table: Any, info: FieldInfo, value: Any, comments: bool) -> None:
     if comments:
         table.add(tomlkit.nl())
-        table.add(tomlkit.comment(_sentence(info)))
+        for line in textwrap.wrap(_sentence(info), 96, break_long_words=False):
+            table.add(tomlkit.comment(line))
     if value is None:
         table.add(tomlkit.comment(f"{info.name} is not set: {info.unset or 'not used'}"))
         return
