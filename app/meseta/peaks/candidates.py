@@ -84,6 +84,8 @@ def find_candidates(
         curvature, error = layers[level]
         for at in _hilltops(curvature, error):
             inside = usable[0] + 0.5 * scale <= u[at] <= usable[1] - 0.5 * scale
+            if _cut(data, at, scale / step):
+                continue
             if logarithmic and u[at] < _SUB_QUANTUM and scale < _SUB_QUANTUM_SCALE:
                 continue  # below one quantum nothing is that narrow but steps of the converter and jumps
             width = _width(np.array([layer[0][at] for layer in layers]), scales, level)
@@ -91,6 +93,16 @@ def find_candidates(
                 z = curvature[at] / max(error[at], 1e-300)
                 found.append(Candidate(float(u[at]), width, float(curvature[at]), float(z), 0.0))
     return _with_share(sorted(found, key=lambda candidate: candidate.position_u), u, data)
+
+
+def _cut(data: Floats, at: int, scale_bins: float) -> bool:
+    """Return whether the data end so near, and so high, that the end itself looks like a slope of a hill."""
+    reach = int(np.ceil(2.0 * scale_bins))
+    few = max(int(scale_bins / 2), 1)
+    here = data[max(at - few, 0) : at + few + 1].mean()
+    return (at < reach and data[:few].mean() > 0.2 * here) or (
+        len(data) - 1 - at < reach and data[-few:].mean() > 0.2 * here
+    )
 
 
 def _hilltops(curvature: Floats, error: Floats) -> npt.NDArray[np.int64]:
@@ -159,7 +171,7 @@ def _curvature(
 
 def _with_share(found: list[Candidate], u: Floats, data: Floats) -> list[Candidate]:
     inside = [float(data[np.abs(u - c.position_u) <= c.width_u].sum()) for c in found]
-    most = max(inside, default=1.0)
+    most = max([*inside, 1.0])
     return [
         Candidate(c.position_u, c.width_u, c.curvature, c.significance, part / most)
         for c, part in zip(found, inside, strict=True)

@@ -77,6 +77,11 @@ class Chooser:
         good = [window for window in windows if self._fittable(window)]
         return good, "" if good else f"no fit: fewer than {_FEWEST_BINS} bins with counts in the range of the fit"
 
+    def without(self, windows: Sequence[Window], left_out: Sequence[Start]) -> list[Window]:
+        """Return windows round the peaks that remain when some are left out."""
+        rest = [start for window in windows for start in window.starts if start not in left_out]
+        return [window for window in self._settled(rest, []) if self._fittable(window)] if rest else []
+
     def _fittable(self, window: Window) -> bool:
         return window.last - window.first >= _FEWEST_BINS and bool(self.data(window).any())
 

@@ -17,15 +17,16 @@ from meseta.peaks.model import WIDTH_TO_FWHM
 from meseta.peaks.results import PeakFit, PeakTable
 from meseta.peaks.systematic import half_spread
 from meseta.peaks.verdicts import FEW_TRACES, fit_verdicts
-from meseta.peaks.windows import Window
+from meseta.peaks.windows import Start, Window
 from meseta.quantities import G0_SIEMENS, R0_OHM
 from meseta.recipe.peaks import PeakSettings
 from meseta.segmentation.results import PlateauTable
 
-__all__ = ["FittedWindow", "empty_fit", "tabulate"]
+__all__ = ["FittedWindow", "empty_fit", "tabulate", "weak_peaks"]
 
 Floats = npt.NDArray[np.float64]
 
+_POOR = 0.06
 _NO_TRACES = "no interval: a histogram alone does not know its traces"
 
 
@@ -76,6 +77,17 @@ def tabulate(
     score = sum(part.fitted.score for part in parts)
     freedom = sum(part.fitted.degrees_of_freedom for part in parts)
     return PeakFit(table, *_curves(histogram, parts, order), systematic=systematic, goodness=score / freedom)
+
+
+def weak_peaks(part: FittedWindow) -> list[Start]:
+    """Return the peaks whose area is below three standard errors: not to be proposed."""
+    interval = _interval(part.fitted, part.replicates, 0, 1.0)
+    area = part.fitted.peaks[:, 0]
+    return [
+        start
+        for peak, start in enumerate(part.window.starts)
+        if not area[peak] > 3.0 * _area_sigma(part.fitted, peak, interval)
+    ]
 
 
 def empty_fit(histogram: ConductanceHistogram, settings: PeakSettings, reason: str) -> PeakFit:
@@ -170,8 +182,11 @@ def _sample_verdicts(
     reach = histogram.traces_in_bin[part.window.first : part.window.last][inside]
     if len(reach) and reach.max() < histogram.weak_traces:
         said.append(f"weak: reached by {int(reach.max())} traces")
-    elif intervals[0].sigma[peak] > area / 3.0:
+    elif _area_sigma(fitted, peak, intervals[0]) > area / 3.0:
         said.append("weak: area below three standard errors")
+    misfit = _misfit(part, peak, histogram, resampling)
+    if misfit > _POOR:
+        said.append(f"shape fits poorly: residuals up to {100 * misfit:.0f} % of its height")
     if resampling is None or part.replicates is None:
         said.append(_NO_TRACES)
     else:
@@ -181,6 +196,36 @@ def _sample_verdicts(
     if histogram.traces < FEW_TRACES:
         said.append(f"fewer than {FEW_TRACES} traces")
     return said
+
+
+def _misfit(part: FittedWindow, peak: int, histogram: ConductanceHistogram, resampling: Resampling | None) -> float:
+    """Return the largest smoothed residual under a peak, as a share of its height, less what chance explains."""
+    model, (_, position, width, _) = part.fitted.model, part.fitted.peaks[peak]
+    curves = model.curves(part.fitted.inner)
+    step = model.high - model.low
+    near = np.abs((model.low + model.high) / 2 - position) < WIDTH_TO_FWHM * width
+    height = (curves.components[peak] / step).max()
+    if not near.any() or not height > 0:
+        return 0.0
+    blur = max(0.5 * width / float(np.median(step)), 0.5)
+    inside = slice(part.window.first, part.window.last)
+    rest = gaussian_filter1d((histogram.counts[inside] - curves.total) / step, blur, mode="nearest")
+    chance = np.zeros(len(rest))
+    if resampling is not None:
+        drawn = gaussian_filter1d(resampling.counts[:100, inside] / step, blur, mode="nearest")
+        chance = 2.0 * drawn.std(axis=0)
+    return float(np.maximum(np.abs(rest) - chance, 0.0)[near].max() / height)
+
+
+def _area_sigma(fitted: Fitted, peak: int, interval: Interval) -> float:
+    """Return the standard error of an area: from the refits, else from the counts with their over-dispersion."""
+    if np.isfinite(interval.sigma[peak]):
+        return float(interval.sigma[peak])
+    place = np.flatnonzero(fitted.free == 4 * peak)
+    if not len(place):
+        return 0.0
+    variance = fitted.covariance[place[0], place[0]]
+    return float(np.sqrt(variance * max(fitted.score / fitted.degrees_of_freedom, 1.0)))
 
 
 def _g0(u: Floats, logarithmic: bool) -> Floats:

@@ -92,8 +92,9 @@ def usable_range(histogram: ConductanceHistogram, floor: Floor | None) -> tuple[
 def _floor_edge(u: Floats, counts: Floats) -> float:
     """Return the upper end of a floor peak at the lower end of the axis, or the lowest edge where there is none.
 
-    A floor peak is the highest point of the lower half of what was counted, and is followed by a steep fall (a factor
-    of ten within a decade); it ends where the fall gives way.
+    A floor peak is the highest point of the lower half of what was counted, and is followed by a fall (a factor of ten
+    within a decade) that is much steeper than its top, other than that of an exponential background; it ends where the
+    fall gives way.
     """
     step = float(u[1] - u[0])
     seen = np.flatnonzero(counts)
@@ -108,6 +109,8 @@ def _floor_edge(u: Floats, counts: Floats) -> float:
         return float(u[0])
     slope = np.gradient(fall, step)
     steepest = int(np.argmin(slope[: decade + 1]))
+    if slope[: pause + 1].mean() < 0.5 * slope[steepest]:
+        return float(u[0])
     gentle = np.convolve((slope[steepest:] > -0.7).astype(float), np.ones(pause), "valid") >= pause
     ends = np.flatnonzero(gentle)
     return float(u[top + steepest + int(ends[0])]) if len(ends) else float(u[0])
