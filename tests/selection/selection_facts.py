@@ -41,6 +41,9 @@ def some_plateaus():
         "level_g0": [1.0, 1e-4, 1e-4, 1.0, 2e-4, 1e-3, 1e-5],
         "length_drive": [0.3, 0.5, 0.1, 0.2, 0.4, 0.6, 0.7],
         "length_nm": [0.3, 0.5, 0.1, 0.2, 0.4, 0.6, 0.7],
+        "aligned": [True] * 7,
+        "displacement_start_nm": [-0.3, 0.0, 0.0, -0.2, 0.2, 0.4, 0.0],
+        "displacement_stop_nm": [0.0, 0.2, 0.1, 0.0, 0.4, 0.6, 0.1],
         "kind": ["metal", "molecule", "molecule", "metal", "molecule", "molecule", "molecule"],
     }
     count = len(rows["trace"])

@@ -98,8 +98,8 @@ def test_any_text_is_a_rule_or_a_recipe_error(text):
         assert parse_rule(rule_text(rule)) == rule
 
 
-_MARKS = ['and', 'or', 'not', 'off', 'in', 'contains', '(', ')', '[', ']', '..', '<', '>=', '==', ',', '1e-5', '3', '"a"', ':', 'molecule']
-_WORDS = [*sorted(QUANTITIES), *_MARKS]
+_MARKS = ["and", "or", "not", "off", "in", "contains", "(", ")", "[", "]", "..", "<", ">=", "==", ",", "1e-5", ":"]
+_WORDS = [*sorted(QUANTITIES), *_MARKS, "3", "molecule", "'a'"]
 
 
 @settings(deadline=None, max_examples=400)
