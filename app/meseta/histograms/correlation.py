@@ -15,6 +15,9 @@ from meseta.work import Work
 __all__ = ["correlation_counts", "correlation_histogram", "correlation_of"]
 
 Floats = npt.NDArray[np.float64]
+_CHUNK = 2048
+_EXACT_FLOAT32 = 1 << 23
+"""Half of where float32 stops to be exact, because the test itself is rounded."""
 _ABOVE_FLOOR_SIGMA = 6.0
 
 
@@ -24,7 +27,7 @@ def correlation_of(counts: npt.NDArray[np.number]) -> Floats:
     Parameters
     ----------
     counts : (traces, bins) array
-        Integers below 2**26, so that the sums of products are exact in float64.
+        Integers; sums of products are exact below 2**53.
 
     Returns
     -------
@@ -35,18 +38,36 @@ def correlation_of(counts: npt.NDArray[np.number]) -> Floats:
     -----
     C_ij = <dN_i dN_j> / sqrt(<dN_i^2><dN_j^2>), Makk et al., ACS Nano 6, 3411 (2012).
     """
-    values = np.asarray(counts, np.float64)
+    values = np.asarray(counts)
     traces = len(values)
-    total = values.sum(0)
-    covariance = traces * (values.T @ values) - np.outer(total, total)
+    total = values.sum(0, dtype=np.float64)
+    covariance = traces * products(values)
+    covariance -= np.outer(total, total)
     scale = np.sqrt(np.diag(covariance))
     with np.errstate(invalid="ignore", divide="ignore"):
-        result: Floats = covariance / scale / scale[:, None]
+        result: Floats = covariance / np.outer(scale, scale)
     varies = scale > 0
-    result[~varies] = np.nan
-    result[:, ~varies] = np.nan
-    result[varies, varies] = 1.0
+    np.fill_diagonal(result, np.where(varies, 1.0, np.nan))
     return np.clip(result, -1.0, 1.0, out=result)
+
+
+def products(values: npt.NDArray[np.number]) -> Floats:
+    """Return the sums over traces of the products of every two columns, exact for integers.
+
+    A chunk of traces whose sums of squares stay below 2**24 is multiplied in float32, where all its partial sums are
+    exact (by Cauchy and Schwarz no product's sum is larger); any other in float64.
+    """
+    bins = values.shape[1]
+    total = np.zeros((bins, bins))
+    for first in range(0, len(values), _CHUNK):
+        chunk = values[first : first + _CHUNK]
+        part = np.asarray(chunk, np.float32)
+        if np.einsum("ij,ij->j", part, part).max(initial=0.0) < _EXACT_FLOAT32:
+            total += part.T @ part
+        else:
+            exact = chunk.astype(np.float64)
+            total += exact.T @ exact
+    return total
 
 
 def correlation_counts(
