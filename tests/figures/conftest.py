@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import fields
+
 import numpy as np
 import pytest
 
@@ -43,7 +45,7 @@ def make_table(grid, positions, sigmas, areas, names=None, status=None, relative
     position = np.asarray(positions, float)
     low, high = position * (1 - relative), position * (1 + relative)
     text = lambda value: np.full(rows, value)  # noqa: E731
-    return PeakTable(
+    known = dict(
         peak=np.array(names or [str(row + 1) for row in range(rows)], np.str_),
         axis=text(grid.axis),
         shape=text("gaussian"),
@@ -72,6 +74,10 @@ def make_table(grid, positions, sigmas, areas, names=None, status=None, relative
         plateau_median_g0=position * 0.99,
         plateaus=np.full(rows, 420),
     )
+    for field in fields(PeakTable):
+        blank = np.full(rows, "") if "Texts" in str(field.type) else np.full(rows, np.nan)
+        known.setdefault(field.name, blank)
+    return PeakTable(**known)
 
 
 def make_fit(histogram, positions, sigmas, areas, fit_low, fit_high, background, **table):

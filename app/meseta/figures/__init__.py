@@ -3,7 +3,22 @@
 The only room that knows matplotlib, and never its pyplot.
 """
 
+from meseta.figures.checks import correlation_figure, noise_figure, record_figure
+from meseta.figures.methods import methods_statement
 from meseta.figures.page import save_figure, save_pages, svg_text
+from meseta.figures.report import report
 from meseta.figures.result import result_figure
+from meseta.figures.summary import summary
 
-__all__ = ["result_figure", "save_figure", "save_pages", "svg_text"]
+__all__ = [
+    "correlation_figure",
+    "methods_statement",
+    "noise_figure",
+    "record_figure",
+    "report",
+    "result_figure",
+    "save_figure",
+    "save_pages",
+    "summary",
+    "svg_text",
+]

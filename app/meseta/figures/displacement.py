@@ -40,7 +40,11 @@ def colour_norm(filled: npt.NDArray[np.float64], scale: str) -> Normalize:
 
 
 def draw_displacement(
-    axes: Axes, bar: Axes, histogram: DisplacementHistogram, scale: ConductanceScale, settings: FigureSettings
+    axes: Axes,
+    bar: Axes,
+    histogram: DisplacementHistogram,
+    scale: ConductanceScale,
+    settings: FigureSettings,
 ) -> None:
     """Draw the 2D histogram on ``axes`` and its colour bar, with unit and normalisation, on ``bar``."""
     edges = histogram.drive_edges
@@ -71,7 +75,7 @@ def draw_displacement(
         axes.axvline(0, color=colours.LIGHT.hairline, linewidth=0.4, zorder=0.6)
     count = f"{typeset.integer(histogram.traces)} aligned traces"
     axes.text(0.985, 0.98, count, transform=axes.transAxes, ha="right", va="top", color=colours.LIGHT.quiet)
-    _bar(bar, Colorbar(bar, image, orientation="horizontal"), norm, histogram.density_unit, settings.colour_scale)
+    _bar(Colorbar(bar, image, orientation="horizontal"), norm, histogram.density_unit, settings.colour_scale)
 
 
 def _nothing(histogram: DisplacementHistogram) -> str:
@@ -88,8 +92,9 @@ def _closest(axes: Axes, scale: ConductanceScale) -> float:
     return float(4 * axes.figure.dpi / 72 / box.height * (scale.high - scale.low))
 
 
-def _bar(axes: Axes, bar: Colorbar, norm: Normalize, unit: str, scale: str) -> None:
+def _bar(bar: Colorbar, norm: Normalize, unit: str, scale: str) -> None:
     """Put few round ticks above the bar, and what it counts above them."""
+    axes = bar.ax
     bar.outline.set_linewidth(0.3)
     axes.xaxis.set_ticks_position("top")
     axes.xaxis.set_label_position("top")
@@ -98,8 +103,8 @@ def _bar(axes: Axes, bar: Colorbar, norm: Normalize, unit: str, scale: str) -> N
     axes.xaxis.set_major_formatter(FixedFormatter([_bar_text(tick, scale) for tick in ticks]))
     axes.xaxis.set_minor_locator(NullLocator())
     axes.tick_params(length=1.6, pad=1)
-    note = {"linear": "", "square_root": ", square-root scale", "logarithmic": ", logarithmic scale"}[scale]
-    axes.set_xlabel(f"{per(unit)}{note}", labelpad=1.5)
+    note = {"linear": "", "square_root": "square-root scale", "logarithmic": "logarithmic scale"}[scale]
+    axes.set_xlabel(", ".join(part for part in (per(unit), note) if part), labelpad=1.5, loc="right")
 
 
 def _bar_ticks(norm: Normalize, scale: str) -> list[float]:

@@ -49,7 +49,9 @@ def draw_distribution(
     scale.decorate(axes.yaxis, labelled)
     if labelled:
         axes.set_ylabel(scale.label)
-    axes.set_xlabel(_quantity(histogram.density_unit))
+    label = axes.set_xlabel(_quantity(histogram.density_unit))
+    if label.get_window_extent().width > 0.98 * axes.get_window_extent().width:
+        label.set_text(per(histogram.density_unit))
     if not np.any(histogram.counts):
         plain_ticks(axes.xaxis, 0, 1, labelled=False)
         say(axes, _nothing(histogram))
@@ -125,7 +127,7 @@ def _ends(histogram: ConductanceHistogram, fit: PeakFit, logarithmic: bool) -> t
     known = histogram.density[np.isfinite(histogram.density)]
     whole = float(known.max())
     if logarithmic:
-        return float(known[known > 0].min()) / 2, whole * 3
+        return float(known[known > 0].min()) / 2, whole * 1.5
     lowest = min(0.0, float(known.min()))
     if not len(fit.table) or not np.any(np.isfinite(fit.observed)):
         return lowest, whole
@@ -152,7 +154,15 @@ def _make_room(
     axes: Axes, histogram: ConductanceHistogram, labels: PeakLabels, low: float, high: float, logarithmic: bool
 ) -> None:
     """Widen the density axis until no label lies on the curve beside it."""
-    if not labels.texts or logarithmic:
+    if not labels.texts:
+        return
+    if logarithmic:
+        _limits(
+            axes,
+            low,
+            high * (high / low) ** (1 / max(min(map(labels.left_edge, range(len(labels.texts)))), 0.3) - 1),
+            True,
+        )
         return
     edges, wanted = histogram.grid.u_edges, high * 1.04
     for number in range(len(labels.texts)):

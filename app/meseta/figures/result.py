@@ -1,4 +1,4 @@
-"""The result figure: 2D histogram and 1D histogram with fitted peaks, side by side on one conductance axis."""
+"""The result figure: 2D histogram and 1D histogram with fitted peaks, on one conductance axis."""
 
 from __future__ import annotations
 
@@ -19,22 +19,49 @@ from meseta.recipe.figure import FigureSettings
 
 __all__ = ["result_figure"]
 
-_SHAPE: Final = 0.46
-"""Height of the figure over its width, within bounds in millimetres."""
-_LOWEST_MM, _HIGHEST_MM = 62.0, 110.0
+_NARROW: Final = 16.0
+"""A page of fewer millimetres a point of text has its panels below one another."""
+_LINE: Final = 0.42
+"""Height of a line of text, in millimetres a point."""
+
+Box = tuple[float, float, float, float]
+"""Left, bottom, width, height in millimetres."""
 
 
 @dataclass(frozen=True)
-class _Frame:
-    """The page in millimetres, from which axes are placed."""
+class _Layout:
+    """Where everything stands on the page, in millimetres."""
 
-    figure: Figure
-    width: float
     height: float
+    plane: Box
+    side: Box
+    bar: Box
 
-    def axes(self, left: float, bottom: float, width: float, height: float) -> Axes:
-        box = (left / self.width, bottom / self.height, width / self.width, height / self.height)
-        return self.figure.add_axes(box)
+    @classmethod
+    def beside(cls, width: float, point: float, title: bool, shared: bool) -> _Layout:
+        """Place both panels side by side; the right one has no tick text of its own where the axis is shared."""
+        left, bottom, right = 1.55 * point, 1.35 * point, 0.35 * point
+        top = (1.6 + 0.6 * title) * point
+        gap = 0.8 * point if shared else left
+        room, panel = width - left - right - gap, min(max(0.46 * width, 62.0), 110.0) - bottom - top
+        first = 0.56 * room
+        plane = (left, bottom, first, panel)
+        side = (left + first + gap, bottom, room - first, panel)
+        return cls(bottom + panel + top, plane, side, _bar_above(plane, point))
+
+    @classmethod
+    def stacked(cls, width: float, point: float, title: bool) -> _Layout:
+        """Place the panels below one another, for a single column."""
+        left, bottom, right = 1.55 * point, 1.35 * point, 0.35 * point
+        top, between, panel = (1.6 + 0.6 * title) * point, 1.25 * point, 0.6 * width
+        side = (left, bottom, width - left - right, panel)
+        plane = (left, 2 * bottom + panel + between, width - left - right, panel)
+        return cls(2 * (bottom + panel) + between + top, plane, side, _bar_above(plane, point))
+
+
+def _bar_above(plane: Box, point: float) -> Box:
+    left, bottom, width, height = plane
+    return (left + 0.42 * width, bottom + height + _LINE * point, 0.58 * width, 0.13 * point)
 
 
 def result_figure(
@@ -64,37 +91,38 @@ def result_figure(
         Not known to pyplot; write it with :func:`~meseta.figures.save_figure`.  A result without traces, without
         aligned traces or without peaks says so in words.
     """
+    scale, other = ConductanceScale.of(histogram.grid), ConductanceScale.of(displacement_histogram.grid)
+    same, point = scale.logarithmic == other.logarithmic, settings.text_point
+    narrow = settings.width_mm < _NARROW * point
     with page_style(settings):
-        point = settings.text_point
-        height = min(max(_SHAPE * settings.width_mm, _LOWEST_MM), _HIGHEST_MM)
-        frame = _Frame(new_figure(settings, height), settings.width_mm, height)
-        left, bottom, right = 1.55 * point, 1.35 * point, 0.35 * point
-        top = 1.3 * point + (0.65 * point if title else 0)
-        scale = ConductanceScale.of(histogram.grid)
-        other = ConductanceScale.of(displacement_histogram.grid)
-        shared = scale.logarithmic == other.logarithmic
-        gap = 0.8 * point if shared else left
-        room = settings.width_mm - left - right - gap
-        first, panel = 0.56 * room, height - bottom - top
-        plane = frame.axes(left, bottom, first, panel)
-        side = frame.axes(left + first + gap, bottom, room - first, panel)
-        bar = frame.axes(left + 0.42 * first, height - top + 0.42 * point, 0.58 * first, 0.13 * point)
-        draw_displacement(plane, bar, displacement_histogram, scale if shared else other, settings)
-        draw_distribution(side, histogram, peak_fit, scale, settings, labelled=not shared)
-        if side.get_legend_handles_labels()[0]:
-            place = (1.0, 1 + 0.42 * point / panel)
-            side.legend(loc="lower right", bbox_to_anchor=place, ncols=4, borderaxespad=0)
-        _letters(frame, (left, left + first + gap), height - top + 0.42 * point)
-        if title:
-            frame.figure.text(
-                0.3 * left / frame.width, 1 - 0.35 * point / height, title, va="top", color=colours.LIGHT.quiet
-            )
-        frame.figure.draw_without_rendering()
-    return frame.figure
-
-
-def _letters(frame: _Frame, places_mm: tuple[float, float], height_mm: float) -> None:
-    for letter, place in zip("ab", places_mm, strict=True):
-        frame.figure.text(
-            place / frame.width, height_mm / frame.height, letter, family=[HEAVY_FACE, "DejaVu Sans"], va="bottom"
+        width = settings.width_mm
+        layout = (
+            _Layout.stacked(width, point, bool(title)) if narrow else _Layout.beside(width, point, bool(title), same)
         )
+        figure = new_figure(settings, layout.height)
+        plane, side, bar = (_axes(figure, box, width, layout.height) for box in (layout.plane, layout.side, layout.bar))
+        draw_displacement(plane, bar, displacement_histogram, scale if same else other, settings)
+        draw_distribution(side, histogram, peak_fit, scale, settings, labelled=narrow or not same)
+        _key(side, 1 + _LINE * point / layout.side[3])
+        for letter, (left, bottom, _, high) in zip("ab", (layout.plane, layout.side), strict=True):
+            place = (left / width, (bottom + high + _LINE * point) / layout.height)
+            figure.text(*place, letter, family=[HEAVY_FACE, "DejaVu Sans"], va="bottom")
+        if title:
+            place = (0.4 * point / width, 1 - 0.35 * point / layout.height)
+            figure.text(*place, title, va="top", color=colours.LIGHT.quiet)
+        figure.draw_without_rendering()
+    return figure
+
+
+def _axes(figure: Figure, box: Box, width: float, height: float) -> Axes:
+    return figure.add_axes((box[0] / width, box[1] / height, box[2] / width, box[3] / height))
+
+
+def _key(axes: Axes, height: float) -> None:
+    """Put the key above the axes, in one row if that fits, else in two."""
+    if not axes.get_legend_handles_labels()[0]:
+        return
+    for columns in (5, 2):
+        key = axes.legend(loc="lower right", bbox_to_anchor=(1.0, height), ncols=columns, borderaxespad=0)
+        if key.get_window_extent().width < 0.94 * axes.get_window_extent().width:
+            return

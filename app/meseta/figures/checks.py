@@ -1,0 +1,184 @@
+"""Figures by which a result is judged: noise model, record (temporal histogram), 2D correlation histogram."""
+
+from __future__ import annotations
+
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+from matplotlib.axes import Axes
+from matplotlib.colorbar import Colorbar
+from matplotlib.colors import ListedColormap, Normalize
+from matplotlib.figure import Figure
+
+from meseta import colours, typeset
+from meseta.figures.displacement import colour_map, colour_norm
+from meseta.figures.page import new_figure, page_style
+from meseta.figures.scale import ConductanceScale, plain_ticks
+from meseta.figures.words import say
+from meseta.histograms import CorrelationHistogram, CountMatrix
+from meseta.recipe.figure import FigureSettings
+from meseta.segmentation import NoiseModel
+from meseta.selection import Selection
+
+__all__ = ["correlation_figure", "noise_figure", "record_figure"]
+
+Floats = npt.NDArray[np.float64]
+_MOST_COLUMNS: Final = 1500
+_LINE: Final = 0.42
+
+
+def noise_figure(noise: NoiseModel, settings: FigureSettings) -> Figure:
+    """Draw the noise of a single sample and the long-run noise against conductance, both logarithmic."""
+    with page_style(settings):
+        figure, axes = _single(settings, 0.6 * settings.width_mm, 0.38)
+        level = noise.level_g0
+        axes.set_xlabel(f"Conductance ({typeset.G0})")
+        axes.set_ylabel(f"Noise, 1 σ ({typeset.G0})")
+        if not len(level) or not np.all(level > 0):
+            say(axes, "no noise model")
+            return figure
+        u = np.log10(level)
+        axes.plot(u, np.log10(noise.sigma_g0), color=colours.LIGHT.selected, label="single sample")
+        axes.plot(u, np.log10(noise.long_run_g0), color=colours.LIGHT.every, linestyle="--", label="long-run, a sample")
+        low, high = np.floor(u.min()), np.ceil(u.max())
+        ConductanceScale(True, float(low), float(max(high, low + 1))).decorate(axes.xaxis)
+        both = np.log10(np.concatenate([noise.sigma_g0, noise.long_run_g0]))
+        bottom, top = float(np.floor(both.min())), float(np.ceil(both.max()))
+        ConductanceScale(True, bottom, max(top, bottom + 1)).decorate(axes.yaxis)
+        if noise.floor_traces and noise.floor_sigma_g0 > 0:
+            axes.axhline(np.log10(noise.floor_sigma_g0), color=colours.LIGHT.hairline, linewidth=0.5, zorder=0.5)
+            text = "floor, 1 σ"
+            axes.annotate(text, (high, np.log10(noise.floor_sigma_g0)), (-2, 2), "data", "offset points", ha="right")
+        axes.legend(loc="lower right", bbox_to_anchor=(1, 1.01), ncols=2, borderaxespad=0)
+        figure.draw_without_rendering()
+    return figure
+
+
+def record_figure(counts: CountMatrix, selection: Selection, traces_a_column: int, settings: FigureSettings) -> Figure:
+    """Draw the temporal histogram: consecutive traces from left to right, one column a block of traces.
+
+    Parameters
+    ----------
+    counts : CountMatrix
+    selection : Selection
+        Only traces that take part are drawn; they keep their place in the record.
+    traces_a_column : int
+        Traces summed in one column; more where the record would have more columns than paper.
+    settings : FigureSettings
+    """
+    scale = ConductanceScale.of(counts.grid)
+    with page_style(settings):
+        figure, axes = _single(settings, settings.width_mm, 0.24)
+        scale.decorate(axes.yaxis)
+        axes.set_ylabel(scale.label)
+        axes.set_xlabel("Trace")
+        traces = len(counts.counts)
+        plain_ticks(axes.xaxis, 0, max(traces, 1), most=9)
+        axes.set_xlim(0, max(traces, 1))
+        if not traces or not np.any(selection.kept):
+            say(axes, "no trace takes part")
+            return figure
+        column = max(traces_a_column, -(-traces // _MOST_COLUMNS))
+        image, kept = _columns(counts, selection.kept, column)
+        density = image / np.maximum(kept, 1)[:, None]
+        if not np.any(image):
+            say(axes, "no sample lies in this range")
+            return figure
+        edges = counts.grid.u_edges
+        axes.imshow(
+            np.ma.masked_where(image == 0, density).T,
+            extent=(0, len(kept) * column, edges[0], edges[-1]),
+            cmap=colour_map(settings.colour_map),
+            norm=colour_norm(density[image > 0], settings.colour_scale),
+            zorder=0.5,
+        )
+        axes.set_xlim(0, traces)
+        axes.set_ylim(scale.low, scale.high)
+        note = f"{typeset.integer(column)} traces a column" if column > 1 else "one trace a column"
+        axes.set_title(f"Samples a trace, {note}", loc="right", color=colours.LIGHT.quiet, pad=3)
+        figure.draw_without_rendering()
+    return figure
+
+
+def _columns(counts: CountMatrix, kept: npt.NDArray[np.bool_], column: int) -> tuple[Floats, npt.NDArray[np.int64]]:
+    """Return the counts of kept traces summed over ``column`` traces, and how many each column has."""
+    starts = np.arange(0, len(kept), column)
+    merge = max(counts.merge, 1)
+    bins = counts.grid.bins // merge * merge
+    image = np.stack(
+        [
+            counts.counts[start : start + column][kept[start : start + column]].sum(axis=0, dtype=np.float64)
+            for start in starts
+        ]
+    )
+    coarse = image[:, :bins].reshape(len(starts), -1, merge).sum(axis=2)
+    return coarse, np.add.reduceat(kept.astype(np.int64), starts)
+
+
+def correlation_figure(correlation: CorrelationHistogram, settings: FigureSettings) -> Figure:
+    """Draw the 2D correlation histogram on a diverging scale that is symmetric about zero.
+
+    Chance values of the largest correlation are marked on the colour bar where they were computed.
+    """
+    scale = ConductanceScale.of(correlation.grid)
+    with page_style(settings):
+        side = 0.42 * settings.width_mm
+        point = settings.text_point
+        left, bottom, top = 1.55 * point, 1.35 * point, 0.5 * point
+        width, height = left + side + 2.2 * point, bottom + side + top
+        figure = new_figure(settings, height, width)
+        axes = figure.add_axes((left / width, bottom / height, side / width, side / height))
+        bar = figure.add_axes(
+            ((left + side + 0.3 * point) / width, bottom / height, 0.13 * point / width, side / height)
+        )
+        scale.decorate(axes.xaxis)
+        scale.decorate(axes.yaxis)
+        axes.set_xlabel(scale.label)
+        axes.set_ylabel(scale.label)
+        values = correlation.correlation
+        off = values[~np.eye(len(values), dtype=bool)]
+        known = np.abs(off[np.isfinite(off)])
+        if not known.size:
+            bar.set_visible(False)
+            say(axes, "no two bins vary over the traces")
+            return figure
+        _draw_correlation(axes, bar, correlation, scale, float(np.percentile(known, 99.5)))
+        figure.draw_without_rendering()
+    return figure
+
+
+def _draw_correlation(
+    axes: Axes, bar: Axes, correlation: CorrelationHistogram, scale: ConductanceScale, end: float
+) -> None:
+    end = max(end, 1.2 * correlation.threshold if np.isfinite(correlation.threshold) else 0.0, 1e-6)
+    map_ = ListedColormap(colours.diverging(), name="meseta-diverging")
+    map_.set_bad(colours.LIGHT.ground)
+    edges = correlation.grid.u_edges
+    image = axes.imshow(
+        np.ma.masked_invalid(correlation.correlation),
+        extent=(edges[0], edges[-1], edges[0], edges[-1]),
+        cmap=map_,
+        norm=Normalize(-end, end, clip=True),
+        zorder=0.5,
+    )
+    axes.set_xlim(scale.low, scale.high)
+    axes.set_ylim(scale.low, scale.high)
+    drawn = Colorbar(bar, image)
+    drawn.outline.set_linewidth(0.3)
+    drawn.set_label(f"Correlation over {typeset.integer(correlation.traces)} traces")
+    plain_ticks(bar.yaxis, -end, end, most=5)
+    if np.isfinite(correlation.threshold):
+        for sign in (-1, 1):
+            bar.axhline(sign * correlation.threshold, color=colours.LIGHT.ink, linewidth=0.6)
+
+
+def _single(settings: FigureSettings, width_mm: float, shape: float) -> tuple[Figure, Axes]:
+    """Return a page with one pair of axes; ``shape`` is the height of the axes over the page's width."""
+    point = settings.text_point
+    left, bottom, right, top = 1.55 * point, 1.35 * point, 0.35 * point, 0.75 * point
+    panel = shape * width_mm
+    height = bottom + panel + top
+    figure = new_figure(settings, height, width_mm)
+    box = (left / width_mm, bottom / height, (width_mm - left - right) / width_mm, panel / height)
+    return figure, figure.add_axes(box)
