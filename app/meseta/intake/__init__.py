@@ -1,5 +1,21 @@
 """Files -> TraceSet: readers, calibration, cutting, alignment."""
 
 from meseta.intake.alignment import ALIGNMENT_STATUS, Alignment, align
+from meseta.intake.files import expand, find_files
+from meseta.intake.opening import OpenContext, open_recording
+from meseta.intake.reading import read, traces_from
+from meseta.intake.recording import RawChannel, Recording
 
-__all__ = ["ALIGNMENT_STATUS", "Alignment", "align"]
+__all__ = [
+    "ALIGNMENT_STATUS",
+    "Alignment",
+    "OpenContext",
+    "RawChannel",
+    "Recording",
+    "align",
+    "expand",
+    "find_files",
+    "open_recording",
+    "read",
+    "traces_from",
+]

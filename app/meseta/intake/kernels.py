@@ -9,7 +9,7 @@ import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
-__all__ = ["find_crossings"]
+__all__ = ["find_crossings", "find_turns", "power_of_ten"]
 
 ALIGNED, NEVER_REACHES, ENDS_ABOVE, NO_SAMPLES = 0, 1, 2, 3
 
@@ -85,6 +85,47 @@ def find_crossings(
                 fraction[trace] = (math.log(here) - math.log(level)) / (math.log(here) - math.log(after))
 
 
+@kernel
+def find_turns(
+    values: npt.NDArray[np.float64], base: int, threshold: float, state: npt.NDArray[np.float64]
+) -> list[int]:
+    """Return the turning points of a drive signal: extremes between swings of at least ``threshold``.
+
+    Called block after block; ``state`` (direction, low, its sample, high, its sample, samples seen) carries over.  NaN
+    samples are passed over.  The extreme of the last swing is left in ``state``.
+    """
+    turns = [0]
+    turns.pop()
+    for index in range(len(values)):
+        value = values[index]
+        if math.isnan(value):
+            continue
+        at = float(base + index)
+        if state[5] == 0.0:
+            state[1], state[2], state[3], state[4] = value, at, value, at
+        state[5] += 1.0
+        if value > state[3]:
+            state[3], state[4] = value, at
+        if value < state[1]:
+            state[1], state[2] = value, at
+        if state[0] <= 0.0 and value - state[1] >= threshold:
+            turns.append(int(state[2]))
+            state[0], state[3], state[4] = 1.0, value, at
+        elif state[0] >= 0.0 and state[3] - value >= threshold:
+            turns.append(int(state[4]))
+            state[0], state[1], state[2] = -1.0, value, at
+    return turns
+
+
+@kernel
+def power_of_ten(exponents: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:
+    """Return 10**x; in a kernel so that every machine gives the same bits."""
+    result = np.empty_like(exponents)
+    for index in range(len(exponents)):
+        result[index] = math.pow(10.0, exponents[index])
+    return result
+
+
 @warm_up
 def _compile() -> None:
     values = np.array([2.0, 1.0, 0.1, 0.1, 0.1], np.float32)
@@ -94,3 +135,5 @@ def _compile() -> None:
         find_crossings(values, bounds, bounds[:1], bounds[1:], False, 0.5, False, 3, sample, fraction, status)
         values = values.copy()
         values.flags.writeable = False
+    find_turns(np.array([0.0, 1.0, 0.0]), 0, 0.5, np.zeros(6))
+    power_of_ten(np.array([0.0, -1.0]))

@@ -61,12 +61,13 @@ class CalibrationSettings(Section):
         unset=_RECORDING,
         gt=0,
     )
-    series_resistance_ohm: float = setting(
-        0.0,
+    series_resistance_ohm: float | None = setting(
+        None,
         "Series resistance",
         "Known resistance in series with the junction, removed from every sample. A fitted "
         "one is never fed back by itself.",
         unit="ohm",
+        unset="taken from the recording where it states it, else zero",
         ge=0,
     )
     high_gain_volt_per_ampere: float | None = setting(

@@ -94,8 +94,7 @@ def _numbers(body: bytes, form: TextForm, path: Path) -> tuple[Columns, list[int
     lines_before = form.skip_lines
     blocks = _blocks(body, form)
     if len(blocks) == 1:
-        columns = _split_at_nan_rows(_parsed(blocks[0], form, path, lines_before))
-        return columns
+        return _split_at_nan_rows(_parsed(blocks[0], form, path, lines_before))
     parts, lengths = [], []
     for block in blocks:
         part = _parsed(block, form, path, lines_before)

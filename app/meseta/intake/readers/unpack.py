@@ -9,7 +9,7 @@ import lzma
 import zipfile
 import zlib
 from pathlib import Path
-from typing import IO, Final
+from typing import IO, Any, Final
 
 from meseta.errors import InputError
 
@@ -26,7 +26,7 @@ def packing(head: bytes) -> str:
     return next((name for mark, name in PACKED.items() if head.startswith(mark)), "")
 
 
-def _opened(path: Path, kind: str) -> IO[bytes]:
+def _opened(path: Path, kind: str) -> IO[bytes] | Any:
     if kind == "gzip":
         return gzip.open(path, "rb")
     if kind == "xz":

@@ -1,0 +1,199 @@
+"""From recordings to a TraceSet: roles, calibration, cutting and drive of each, then all end to end."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass, field, replace
+from functools import partial
+from typing import Any, Final
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.intake.calibrate import Calibration, calibration_of, plain_constants
+from meseta.intake.cutting import PULL, PUSH, Cut, cut
+from meseta.intake.drive import DriveAxis, drive_of, sample_interval
+from meseta.intake.recording import RawChannel, Recording
+from meseta.intake.roles import settle_roles
+from meseta.recipe import Recipe
+from meseta.work import Work, blocks_of
+
+__all__ = ["Part", "plan_of", "prepared"]
+
+LINEAR_TOLERANCE: Final = 1.2e-7
+"""Steps are equal where no value is off by more than the rounding of float32."""
+CARRIED: Final = ("other", "voltage", "bias", "range_code", "phase")
+ENDS: Final = 16
+RISE_FACTOR: Final = 10.0
+
+
+@dataclass
+class Part:
+    """The traces of one recording: ranges, calibration, drive axis, and, once loaded, their samples."""
+
+    recording: Recording
+    calibration: Calibration
+    axis: DriveAxis
+    cut: Cut
+    interval_second: float
+    interval_from: str
+    extras: tuple[RawChannel, ...]
+    offsets: npt.NDArray[np.int64]
+    start: npt.NDArray[np.int64]
+    stop: npt.NDArray[np.int64]
+    conductance: npt.NDArray[np.float32] = field(default_factory=lambda: np.empty(0, np.float32))
+    quality: npt.NDArray[np.uint8] | None = None
+    drive_start: npt.NDArray[np.float64] = field(default_factory=lambda: np.empty(0))
+    drive_step: npt.NDArray[np.float64] = field(default_factory=lambda: np.empty(0))
+    relative: npt.NDArray[np.float32] | None = None
+    carried: dict[str, npt.NDArray[np.float32]] = field(default_factory=dict)
+
+    @property
+    def traces(self) -> int:
+        """Number of traces."""
+        return len(self.start)
+
+    def spans(self, first: int, last: int) -> Iterator[tuple[int, int]]:
+        """Yield flat raw ranges that hold traces ``first`` to ``last``, joined where they touch."""
+        begin = int(self.start[first])
+        for row in range(first, last):
+            if row + 1 == last or self.start[row + 1] != self.stop[row]:
+                yield begin, int(self.stop[row])
+                begin = int(self.start[row + 1]) if row + 1 < last else 0
+
+    def gathered(self, read: Callable[[int, int], npt.NDArray[Any]], first: int, last: int) -> npt.NDArray[Any]:
+        """Return what ``read`` gives for traces ``first`` to ``last``, end to end."""
+        parts = [read(start, stop) for start, stop in self.spans(first, last)]
+        return parts[0] if len(parts) == 1 else np.concatenate(parts)
+
+    def load(self, work: Work) -> Part:
+        """Read and calibrate all samples into memory; returns itself."""
+        total = int(self.offsets[-1])
+        self.conductance = np.empty(total, np.float32)
+        self.carried = {channel.name: np.empty(total, np.float32) for channel in self.extras}
+        self.quality = np.zeros(total, np.uint8)
+        self.drive_start, self.drive_step = np.zeros(self.traces), np.full(self.traces, self.axis.factor)
+        if self.axis.channel is not None:
+            self.relative = np.empty(total, np.float32)
+        spans = blocks_of(self.offsets, min(work.block_samples, 2_000_000))
+        sizes = [last - first for first, last in spans]
+        linear = True
+        for straight in work.each(self._load_block, spans, "reading traces", sizes=sizes):
+            linear = linear and straight
+        if linear:
+            self.relative = None
+        if not self.quality.any():
+            self.quality = None
+        return self
+
+    def _load_block(self, span: tuple[int, int]) -> bool:
+        """Fill the arrays for traces ``first`` to ``last``; return whether their drive steps are equal."""
+        first, last = span
+        lo, hi = int(self.offsets[first]), int(self.offsets[last])
+        at, bits = lo, self.quality
+        for start, stop in self.spans(first, last):
+            found = self.calibration.apply(self.recording, start, stop)
+            end = at + stop - start
+            self.conductance[at:end] = found.conductance
+            if found.quality is not None and bits is not None:
+                bits[at:end] = found.quality
+            at = end
+        for channel in self.extras:
+            read = partial(self.recording.values, channel)
+            self.carried[channel.name][lo:hi] = self.gathered(read, first, last)
+        return True if self.axis.channel is None else self._load_drive(first, last)
+
+    def _load_drive(self, first: int, last: int) -> bool:
+        assert self.relative is not None
+        values = self.gathered(lambda a, b: self.axis.values(self.recording, a, b), first, last)
+        offsets = self.offsets[first : last + 1] - self.offsets[first]
+        begin, lengths = values[np.minimum(offsets[:-1], max(len(values) - 1, 0))], np.diff(offsets)
+        ending = values[np.maximum(offsets[1:] - 1, 0)]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            step = np.where(lengths > 1, (ending - begin) / np.maximum(lengths - 1, 1), 0.0)
+        relative = values - np.repeat(begin, lengths)
+        self.relative[int(self.offsets[first]) : int(self.offsets[last])] = relative
+        self.drive_start[first:last], self.drive_step[first:last] = begin, step
+        index = np.arange(len(values)) - np.repeat(offsets[:-1], lengths)
+        off = np.abs(relative - np.repeat(step, lengths) * index)
+        bound = LINEAR_TOLERANCE * float(np.max(np.abs(values), initial=0.0))
+        return bool(np.all(off <= bound))
+
+    def settle_directions(self) -> None:
+        """Give every trace without a stated direction one: closing where its conductance rises from end to end."""
+        unknown = [row for row, direction in enumerate(self.cut.direction) if not direction]
+        if unknown:
+            rising = _rises(self.conductance, self.offsets, np.array(unknown, np.int64))
+            for row, closing in zip(unknown, rising, strict=True):
+                self.cut.direction[row] = "closing" if closing else "opening"
+        has_phase = {phase[0] for phase in self.cut.phases}
+        for row in range(self.traces):
+            if row not in has_phase:
+                kind = PUSH if self.cut.direction[row] == "closing" else PULL
+                self.cut.phases.append((row, 0, int(self.offsets[row + 1] - self.offsets[row]), kind))
+        self.cut.phases.sort()
+
+    def notes(self) -> dict[str, Any]:
+        """Return what there is to say of this recording, in plain values."""
+        said = [*self.recording.doubts, *self.calibration.doubts, *self.axis.doubts, *self.cut.notes]
+        said += [f"'{c.name}': {doubt}" for c in self.recording.channels for doubt in c.doubts]
+        return {
+            "calibration": plain_constants(self.calibration),
+            "conductance_from": self.calibration.kind,
+            "drive": self.axis.said,
+            "doubts": list(dict.fromkeys(said)),
+        }
+
+
+def _rises(
+    values: npt.NDArray[np.float32], offsets: npt.NDArray[np.int64], rows: npt.NDArray[np.int64]
+) -> npt.NDArray[np.bool_]:
+    """Return for each row whether its conductance ends much higher than it begins."""
+    lengths = offsets[rows + 1] - offsets[rows]
+    reach = np.minimum(lengths, ENDS)
+    place = np.arange(ENDS)
+    usable = place < reach[:, None]
+    safe = np.minimum(place, np.maximum(reach - 1, 0)[:, None])
+    last = max(len(values) - 1, 0)
+    if len(values) == 0:
+        return np.zeros(len(rows), bool)
+    early = np.where(usable, np.abs(values[np.minimum(offsets[rows][:, None] + safe, last)]), np.nan)
+    late = np.where(usable, np.abs(values[np.clip(offsets[rows + 1][:, None] - 1 - safe, 0, last)]), np.nan)
+    enough = np.isfinite(early).any(axis=1) & np.isfinite(late).any(axis=1)
+    result = np.zeros(len(rows), bool)
+    if enough.any():
+        result[enough] = np.nanmedian(late[enough], axis=1) > RISE_FACTOR * np.nanmedian(early[enough], axis=1)
+    return result
+
+
+def prepared(recording: Recording, recipe: Recipe) -> Recording:
+    """Return the recording with what the recipe says of its channels."""
+    return recording.with_channels(settle_roles(recording.channels, recipe.intake.channels))
+
+
+def plan_of(recording: Recording, recipe: Recipe) -> Part:
+    """Return the traces of one recording, not yet loaded.
+
+    Raises
+    ------
+    InputError
+        Where its channels do not give conductance.
+    """
+    recording = prepared(recording, recipe)
+    calibration = calibration_of(recording, recipe.calibration)
+    pieces = cut(recording, recipe.cutting, calibration)
+    axis = drive_of(recording, recipe.calibration, pieces.pull_sign)
+    interval, origin = sample_interval(recording, recipe.calibration)
+    start, stop = np.array(pieces.start, np.int64), np.array(pieces.stop, np.int64)
+    offsets = np.concatenate([[0], np.cumsum(stop - start)]).astype(np.int64)
+    used = {calibration.channel.name, *(c.name for c in (axis.channel, calibration.second) if c is not None)}
+    extras = tuple(c for c in recording.channels if c.role in CARRIED and not c.shared and c.name not in used)
+    return Part(recording, calibration, axis, pieces, interval, origin, _distinct(extras), offsets, start, stop)
+
+
+def _distinct(extras: Sequence[RawChannel]) -> tuple[RawChannel, ...]:
+    """Return the carried channels with names that no channel of our own has."""
+    return tuple(
+        replace(channel, name=f"recorded {channel.name}") if channel.name in ("conductance", "quality") else channel
+        for channel in extras
+    )

@@ -1,0 +1,89 @@
+"""Opening a file: content decides the reader; checksum, metadata from names, sidecars and tables are added."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Final
+
+from meseta.errors import InputError, MesetaError
+from meseta.intake.readers.contents import Contents
+from meseta.intake.readers.unpack import peek_bytes
+from meseta.intake.recording import Recording
+from meseta.intake.registry import find_reader
+from meseta.recipe import Recipe
+from meseta.traces import Source
+
+__all__ = ["OpenContext", "open_recording", "sha256_of"]
+
+HEAD_BYTE: Final = 1 << 18
+
+
+@dataclass(frozen=True)
+class OpenContext:
+    """What is the same for all files of a batch: the metadata table by file name."""
+
+    table: Mapping[str, Mapping[str, str | int | float | bool]] = field(default_factory=dict)
+
+
+def sha256_of(path: Path) -> str:
+    """Return the SHA-256 of a file's bytes in hexadecimal."""
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
+
+
+def open_recording(
+    path: str | Path, recipe: Recipe | None = None, name: str = "", context: OpenContext | None = None
+) -> Recording:
+    """Open a file as a recording; samples are read lazily where the format allows it.
+
+    Parameters
+    ----------
+    path : str or Path
+    recipe : Recipe, optional
+        Its ``intake`` section is used.
+    name : str
+        Name relative to the folder that was given; the file's own name where empty.
+    context : OpenContext, optional
+        Of the batch that the file belongs to.
+
+    Raises
+    ------
+    InputError
+        Where the file is missing, not readable, damaged, or of no known layout.
+    """
+    path, recipe = Path(path), recipe or Recipe()
+    try:
+        size = path.stat().st_size
+        if size == 0:
+            raise InputError("is empty", str(path), "check how it was written")
+        reader = find_reader(peek_bytes(path, HEAD_BYTE), path, recipe.intake.reader)
+        contents = reader.open(path, recipe.intake)
+        digest = sha256_of(path)
+    except MesetaError:
+        raise
+    except PermissionError as error:
+        raise InputError("may not be read", str(path), "check its permissions") from error
+    except FileNotFoundError as error:
+        raise InputError("does not exist", str(path), "check the path") from error
+    except (OSError, EOFError) as error:
+        raise InputError(f"cannot be read ({error})", str(path), "check the file and the disk") from error
+    except MemoryError as error:
+        raise InputError("is too large for the memory", str(path), "cut it into smaller files") from error
+    return _recording(contents, Source(digest, name or path.name, size, reader.name, contents.layout))
+
+
+def _recording(contents: Contents, source: Source) -> Recording:
+    return Recording(
+        source=source,
+        channels=contents.channels,
+        offsets=contents.offsets,
+        record_start=contents.record_start,
+        dataset=contents.dataset,
+        metadata=contents.metadata,
+        table=contents.table,
+        doubts=contents.doubts,
+        close=contents.close,
+    )

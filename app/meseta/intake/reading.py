@@ -1,0 +1,117 @@
+"""Files -> TraceSet."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from pathlib import Path
+from typing import Any
+
+from meseta.errors import InputError, MesetaError
+from meseta.intake.assembly import Part, plan_of
+from meseta.intake.files import FoundFile, find_files
+from meseta.intake.joining import joined
+from meseta.intake.opening import OpenContext, open_recording
+from meseta.intake.recording import Recording
+from meseta.recipe import Recipe
+from meseta.traces import TraceSet
+from meseta.work import Work
+
+__all__ = ["read", "traces_from"]
+
+
+def read(
+    paths: str | Path | Iterable[str | Path],
+    recipe: Recipe | None = None,
+    work: Work | None = None,
+    *,
+    strict: bool = False,
+) -> TraceSet:
+    """Read recordings into a TraceSet: open, calibrate, cut, and put end to end.
+
+    Parameters
+    ----------
+    paths : str, Path, or several
+        A file, a folder, a pattern, or several of them.
+    recipe : Recipe, optional
+        Its ``intake``, ``calibration`` and ``cutting`` sections are used.
+    work : Work, optional
+    strict : bool
+        Raise for the first bad file instead of taking in the good ones.
+
+    Returns
+    -------
+    TraceSet
+        ``notes["bad_files"]`` lists what could not be read (what, where, remedy), ``notes["assumptions"]`` what was
+        assumed, ``notes["incomplete"]`` what was kept apart, ``notes["passed_over"]`` files that are no recordings.
+
+    Raises
+    ------
+    InputError
+        Where nothing can be read.
+    """
+    recipe, work = recipe or Recipe(), work or Work()
+    files, passed = find_files(paths)
+    context = OpenContext()
+    parts: list[Part] = []
+    bad: list[MesetaError] = []
+    one_file = len(files) == 1
+
+    def take(file: FoundFile) -> Part | MesetaError:
+        try:
+            with open_recording(file.path, recipe, file.name, context) as recording:
+                return _loaded(recording, recipe, work if one_file else _alone(work))
+        except InputError as error:
+            return error
+
+    for found in work.each(take, files, "reading files", unit="files") if not one_file else map(take, files):
+        if isinstance(found, Part):
+            parts.append(found)
+        elif strict or one_file:
+            raise found
+        else:
+            bad.append(found)
+    parts = [part for part in parts if part.traces]
+    if not parts:
+        raise _nothing(bad, files)
+    return joined(parts, recipe, {"bad_files": [_plain(error) for error in bad], "passed_over": passed})
+
+
+def traces_from(recordings: Sequence[Recording], recipe: Recipe | None = None, work: Work | None = None) -> TraceSet:
+    """Return the traces of recordings that are open: calibrated, cut, and put end to end.
+
+    Raises
+    ------
+    InputError
+        Where a recording's channels do not give conductance, or no trace is found.
+    """
+    recipe, work = recipe or Recipe(), work or Work()
+    parts = [_loaded(recording, recipe, work) for recording in recordings]
+    parts = [part for part in parts if part.traces]
+    if not parts:
+        raise InputError("no traces were found", "recordings", "check the cutting settings")
+    return joined(parts, recipe, {"bad_files": [], "passed_over": []})
+
+
+def _alone(work: Work) -> Work:
+    """Return work for one of many files: on the calling thread, without reports of its own."""
+    return Work(threads=1, block_samples=work.block_samples, cancel=work.cancel)
+
+
+def _loaded(recording: Recording, recipe: Recipe, work: Work) -> Part:
+    part = plan_of(recording, recipe)
+    if not part.traces:
+        raise InputError("holds no traces", recording.source.name, "check the cutting settings")
+    part.load(work)
+    part.settle_directions()
+    return part
+
+
+def _plain(error: MesetaError) -> dict[str, Any]:
+    return {"what": error.what, "where": error.where, "remedy": error.remedy}
+
+
+def _nothing(bad: Sequence[MesetaError], files: Sequence[FoundFile]) -> MesetaError:
+    if len(bad) == 1 or (bad and len({error.what for error in bad}) == 1):
+        return bad[0]
+    first = f"; the first: {bad[0]}" if bad else ""
+    return InputError(f"none of {len(files)} files can be read{first}", "", "see `meseta peek` on one of them")
