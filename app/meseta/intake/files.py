@@ -18,11 +18,12 @@ __all__ = ["FoundFile", "expand", "find_files"]
 _ASIDE: Final = frozenset(
     {"readme", "license", "licence", "notes", "changelog", "copying", "authors", "thumbs", "desktop"}
 )
-_ASIDE_ENDINGS: Final = (
-    ".md .rst .toml .ini .cfg .yaml .yml .json .xml .html .htm .pdf .png .jpg .jpeg .svg .tif .tiff .gif .py .m .ipynb "
-    ".r .doc .docx .xls .xlsx .ppt .pptx .odt .ods .log .tmp .part .lock .bak .exe .dll .so .tex .bib .sha256 .md5 "
-    ".tdms_index"
-).split(" ")
+_ASIDE_ENDINGS: Final = frozenset({
+    ".md", ".rst", ".toml", ".ini", ".cfg", ".yaml", ".yml", ".json", ".xml", ".html", ".htm", ".pdf", ".png",
+    ".jpg", ".jpeg", ".svg", ".tif", ".tiff", ".gif", ".py", ".m", ".ipynb", ".r", ".doc", ".docx", ".xls", ".xlsx",
+    ".ppt", ".pptx", ".odt", ".ods", ".log", ".tmp", ".part", ".lock", ".bak", ".exe", ".dll", ".so", ".tex",
+    ".bib", ".sha256", ".md5", ".tdms_index",
+})  # fmt: skip
 PathLike = str | Path
 
 

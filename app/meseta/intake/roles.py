@@ -72,11 +72,10 @@ def _tokens(name: str) -> list[str]:
 
 
 def stem_of(name: str) -> str:
-    """Return a name without its trailing number: "trace_12" and "G (12)" are numbers 12 of "trace" and "g"."""
+    """Return a name without its number: "trace_12" and "trace_12_G" are numbers 12 of "trace" and "trace_g"."""
     tokens = _tokens(split_unit(name)[0] or name)
-    while len(tokens) > 1 and tokens[-1].isdigit():
-        tokens.pop()
-    joined = "_".join(tokens).lower()
+    words = [token for token in tokens if not token.isdigit()] or tokens[:1]
+    joined = "_".join(words).lower()
     return re.sub(r"(?<=[a-z_])\d+$", "", joined).rstrip("_") or joined
 
 

@@ -68,7 +68,8 @@ def _understood(tree: Tree, path: Path, settings: IntakeSettings) -> Contents:
     channels, constants, channel_doubts = _channels(sheet, path)
     metadata, more = _metadata(tree, parents, path)
     rows = _piece_rows(tree, parents, sheet, path)
-    table = {**_canonical_table(sheet.table, path), **columns_of(rows)}
+    texts = {name.rpartition("/")[2]: text for name, text in tree.texts.items() if len(text) == len(sheet.names)}
+    table = {**_canonical_table({**texts, **sheet.table}, path), **columns_of(rows)}
     return Contents(
         layout=f"{sheet.layout}, {len(sheet.names)} piece{'s' if len(sheet.names) > 1 else ''}",
         channels=channels,
