@@ -179,7 +179,7 @@ def test_no_traces_and_no_rules():
     selection = chosen([])
     assert selection.kept.sum() == 7 and selection.steps.left.tolist() == [7]
     empty = some_traces().take(np.empty(0, int))
-    none = select(empty, SelectionSettings(rules=["rupture_found"]), some_measures().take([]), some_plateaus().take([]),
+    none = select(empty, SelectionSettings(rules=["rupture_found"]), some_measures().take(np.empty(0, int)), some_plateaus().take(np.empty(0, int)),
                   Decisions(), "opening")  # fmt: skip
     assert len(none.kept) == 0
 
