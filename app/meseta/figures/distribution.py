@@ -7,6 +7,7 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 from matplotlib.axes import Axes
+from matplotlib.text import Text
 from matplotlib.ticker import FixedFormatter, FixedLocator, NullFormatter
 
 from meseta import colours, typeset
@@ -22,6 +23,8 @@ __all__ = ["draw_distribution"]
 Floats = npt.NDArray[np.float64]
 _CUT_FROM: Final = 4.0
 """The axis is cut where the histogram rises to more than this many times its height in the range of the fit."""
+_TOGETHER: Final = 0.06
+"""Cut places closer than this share of the conductance axis are told together."""
 _BAND: Final = "#a9cdcf"
 _BACKGROUND: Final = colours.LIGHT.quiet
 
@@ -66,10 +69,13 @@ def draw_distribution(
     _limits(axes, lowest, highest, logarithmic)
     labels = PeakLabels.on(axes, fit.table, [float(place) for place in scale.u(fit.table.position_g0)])
     _make_room(axes, histogram, labels, lowest, highest, logarithmic)
+    cut = _cut_notes(axes, histogram)
+    labels.part([text for text, _ in cut])
     labels.leaders(axes, _heights(fit, scale, labels))
-    _say_cut(axes, histogram, lowest)
-    if not len(fit.table):
-        axes.text(0.98, 0.02, "no peak was fitted", transform=axes.transAxes, ha="right", color=colours.LIGHT.doubtful)
+    if not np.any(np.isfinite(fit.table.position_g0)):
+        why = next((str(text) for text in fit.table.status if str(text) != "ok"), "")
+        words = f"no peak was fitted{':' if why else ''}\n{why}".strip()
+        axes.text(0.98, 0.02, words, transform=axes.transAxes, ha="right", color=colours.LIGHT.doubtful)
 
 
 def _quantity(unit: str) -> str:
@@ -100,7 +106,7 @@ def _curve(axes: Axes, histogram: ConductanceHistogram) -> None:
     weak = histogram.traces_in_bin < histogram.weak_traces
     _staircase(axes, edges, np.where(weak, np.nan, histogram.density), colours.LIGHT.selected, "-", count)
     if np.any(weak & (histogram.counts > 0)):
-        label = f"under {histogram.weak_traces} traces"
+        label = f"< {histogram.weak_traces} traces"
         _staircase(axes, edges, np.where(weak, histogram.density, np.nan), colours.LIGHT.every, "-", label)
 
 
@@ -129,9 +135,9 @@ def _ends(histogram: ConductanceHistogram, fit: PeakFit, logarithmic: bool) -> t
     if logarithmic:
         return float(known[known > 0].min()) / 2, whole * 1.5
     lowest = min(0.0, float(known.min()))
-    if not len(fit.table) or not np.any(np.isfinite(fit.observed)):
+    if not np.any(np.isfinite(fit.table.position_g0)) or not np.any(np.isfinite(fit.observed)):
         return lowest, whole
-    fitted = float(np.nanmax([np.nanmax(fit.observed), np.nanmax(fit.model)]))
+    fitted = float(np.nanmax(fit.observed))
     return lowest, fitted * 1.6 if whole > _CUT_FROM * fitted > 0 else max(whole, fitted)
 
 
@@ -181,27 +187,28 @@ def _heights(fit: PeakFit, scale: ConductanceScale, labels: PeakLabels) -> list[
     return [float(np.interp(place, places, fit.model)) for place in labels.peak_u]
 
 
-def _say_cut(axes: Axes, histogram: ConductanceHistogram, low: float) -> None:
-    """Where the curve leaves the axis on the right, mark the place and write how far it goes."""
-    end = axes.get_xlim()[1]
-    beyond = np.flatnonzero(histogram.density > end)
+def _cut_notes(axes: Axes, histogram: ConductanceHistogram) -> list[tuple[Text, float]]:
+    """Where the curve leaves the axis on the right, mark the place and write how far it goes.
+
+    Places closer than a line of text are told together.  Returns the notes and their wanted places in u.
+    """
+    beyond = np.flatnonzero(histogram.density > axes.get_xlim()[1])
     if not beyond.size:
-        return
-    edges = histogram.grid.u_edges
-    for run in np.split(beyond, np.flatnonzero(np.diff(beyond) > 1) + 1):
+        return []
+    u = (histogram.grid.u_edges[1:] + histogram.grid.u_edges[:-1]) / 2
+    close = _TOGETHER * abs(np.subtract(*axes.get_ylim()))
+    notes = []
+    for run in np.split(beyond, np.flatnonzero(np.diff(u[beyond]) > close) + 1):
         top = run[np.argmax(histogram.density[run])]
-        place = (edges[top] + edges[top + 1]) / 2
-        mark = axes.plot([1.0], [place], ">", transform=axes.get_yaxis_transform(), zorder=6)[0]
+        mark = axes.plot([1.0], [u[top]], ">", transform=axes.get_yaxis_transform(), zorder=6)[0]
         mark.set(markersize=2.6, color=colours.LIGHT.selected, clip_on=False)
-        axes.annotate(
-            f"to {typeset.number(float(histogram.density[top]), 2)}",
-            (1.0, place),
-            xycoords=axes.get_yaxis_transform(),
-            xytext=(-4, 0),
-            textcoords="offset points",
-            ha="right",
-            va="center",
-            color=colours.LIGHT.selected,
-            bbox={"boxstyle": "square,pad=0.12", "facecolor": colours.LIGHT.panel, "edgecolor": "none"},
-            zorder=5,
-        )
+        words = f"to {typeset.number(float(histogram.density[top]), 2)}"
+        notes.append((_note(axes, words, float(u[top])), float(u[top])))
+    return notes
+
+
+def _note(axes: Axes, words: str, place: float) -> Text:
+    text = axes.text(0.98, place, words, transform=axes.get_yaxis_transform(), ha="right", va="center", zorder=5)
+    text.set_color(colours.LIGHT.selected)
+    text.set_bbox({"boxstyle": "square,pad=0.1", "facecolor": colours.LIGHT.panel, "edgecolor": "none"})
+    return text

@@ -97,21 +97,25 @@ class PeakLabels:
                 texts.append(text)
                 shown.append(place)
         labels = cls(texts, shown)
-        labels._part()
+        labels.part()
         return labels
 
-    def _part(self) -> None:
-        """Move the labels in y until none lies on another."""
-        if not self.texts:
+    def part(self, others: Sequence[Text] = ()) -> None:
+        """Move the labels, and other texts of the same column, in y until none lies on another."""
+        wanted = [
+            *zip(self.peak_u, self.texts, strict=True),
+            *((float(text.get_position()[1]), text) for text in others),
+        ]
+        if not wanted:
             return
-        axes = self.texts[0].axes
+        wanted.sort(key=lambda pair: pair[0])
+        axes = wanted[0][1].axes
         assert axes is not None
-        boxes = [text.get_window_extent() for text in self.texts]
         gap = _GAP_POINT * axes.figure.dpi / 72
         low, high = axes.transAxes.transform([(0, 0), (0, 1)])[:, 1]
-        wanted = axes.transData.transform([(0, place) for place in self.peak_u])[:, 1]
-        places = spread(list(wanted), [box.height + gap for box in boxes], float(low), float(high))
-        for text, place in zip(self.texts, places, strict=True):
+        middle = axes.transData.transform([(0, place) for place, _ in wanted])[:, 1]
+        sizes = [text.get_window_extent().height + gap for _, text in wanted]
+        for (_, text), place in zip(wanted, spread(list(middle), sizes, float(low), float(high)), strict=True):
             text.set_y(float(axes.transData.inverted().transform((0, place))[1]))
 
     def left_edge(self, number: int) -> float:

@@ -14,6 +14,7 @@ import numpy as np
 from meseta import __version__, typeset
 from meseta.analysis import Analysis
 from meseta.figures.stated import Stated
+from meseta.recipe import Recipe
 from meseta.work import Work
 
 __all__ = ["METHOD_SOURCES", "methods_paragraphs", "methods_statement"]
@@ -64,9 +65,17 @@ def methods_paragraphs(analysis: Analysis, work: Work | None = None) -> list[tup
     ]
     paragraphs = []
     for title, sections, write in steps:
-        sentences = write(stated, analysis, work) + [stated.rest(section) for section in sections]
+        sentences = write(stated, analysis, work)
+        for section in sections:
+            heading = Recipe.model_fields[section].title or section
+            several = len(sections) > 1 and section not in ("intake", "cutting")
+            sentences.append(stated.rest(section, _lower_first(heading) if several else ""))
         paragraphs.append((title, " ".join(sentence for sentence in sentences if sentence)))
     return paragraphs
+
+
+def _lower_first(text: str) -> str:
+    return text if text[:2].isupper() or text[:1].isdigit() else text[:1].lower() + text[1:]
 
 
 def _count(number: int, noun: str) -> str:
@@ -245,7 +254,8 @@ def _peaks(stated: Stated, analysis: Analysis, work: Work) -> list[str]:
     axis = ", ".join(sorted({str(name) for name in fit.table.axis})) or stated("peaks.axis")
     shape = _SHAPES[stated.value("peaks.shape")]
     background = stated.value("peaks.background")
-    ground = "without a background" if background == "none" else f"on a {stated('peaks.background')} background"
+    article = "an" if background[0] in "aeiou" else "a"
+    ground = "without a background" if background == "none" else f"on {article} {stated('peaks.background')} background"
     stated.names |= {"peaks.axis", "peaks.fit_low_g0", "peaks.fit_high_g0"}
     asked = stated.value("peaks.peaks")
     number = (

@@ -19,7 +19,7 @@ def value_text(value: Any, info: FieldInfo) -> str:
     if isinstance(value, int):
         return _with_unit(typeset.integer(value), info.unit)
     if isinstance(value, float):
-        digits = max(len(f"{value:.6g}".replace(".", "").replace("-", "").strip("0").split("e")[0]), 1)
+        digits = max(len(f"{value:.4g}".split("e")[0].replace(".", "").replace("-", "").strip("0")), 1)
         return _with_unit(typeset.number(value, digits), info.unit)
     if isinstance(value, dict):
         return "; ".join(f"{name}: {_plain(entry)}" for name, entry in value.items()) or "none"
@@ -66,7 +66,7 @@ class Stated:
         section, field = name.split(".")
         return next(info for info in getattr(self.recipe, section).fields() if info.name == field)
 
-    def rest(self, section: str) -> str:
+    def rest(self, section: str, title: str = "") -> str:
         """Return one sentence that states the settings of a section that are not yet stated; "" where none is left.
 
         Settings that are not set (taken from the recording, or unused) and empty lists are left to the table of all
@@ -78,4 +78,4 @@ class Stated:
             value = getattr(getattr(self.recipe, section), info.name)
             if name not in self.names and value not in (None, [], {}, ()):
                 parts.append(f"{info.title[:1].lower()}{info.title[1:]} {self(name)}")
-        return f"Other settings: {'; '.join(parts)}." if parts else ""
+        return f"Other settings{f' of the {title}' if title else ''}: {'; '.join(parts)}." if parts else ""
