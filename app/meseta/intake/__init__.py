@@ -1,6 +1,7 @@
 """Files -> TraceSet: readers, calibration, cutting, alignment."""
 
 from meseta.intake.alignment import ALIGNMENT_STATUS, Alignment, align
+from meseta.intake.description import Description, describe
 from meseta.intake.files import expand, find_files
 from meseta.intake.opening import OpenContext, open_recording
 from meseta.intake.reading import read, traces_from
@@ -9,10 +10,12 @@ from meseta.intake.recording import RawChannel, Recording
 __all__ = [
     "ALIGNMENT_STATUS",
     "Alignment",
+    "Description",
     "OpenContext",
     "RawChannel",
     "Recording",
     "align",
+    "describe",
     "expand",
     "find_files",
     "open_recording",

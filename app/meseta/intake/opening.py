@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Final
 
@@ -72,7 +72,13 @@ def open_recording(
         raise InputError(f"cannot be read ({error})", str(path), "check the file and the disk") from error
     except MemoryError as error:
         raise InputError("is too large for the memory", str(path), "cut it into smaller files") from error
-    return _recording(contents, Source(digest, name or path.name, size, reader.name, contents.layout))
+    from meseta.intake.context import beside
+
+    recording = _recording(contents, Source(digest, name or path.name, size, reader.name, contents.layout))
+    found, doubts = beside(path, recording.source.name, recipe.intake, context or OpenContext())
+    if not found and not doubts:
+        return recording
+    return replace(recording, metadata={**contents.metadata, **found}, doubts=(*contents.doubts, *doubts))
 
 
 def _recording(contents: Contents, source: Source) -> Recording:

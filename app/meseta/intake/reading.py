@@ -8,9 +8,10 @@ from typing import Any
 
 from meseta.errors import InputError, MesetaError
 from meseta.intake.assembly import Part, plan_of
+from meseta.intake.context import batch_context
 from meseta.intake.files import FoundFile, find_files
 from meseta.intake.joining import joined
-from meseta.intake.opening import OpenContext, open_recording
+from meseta.intake.opening import open_recording
 from meseta.intake.recording import Recording
 from meseta.recipe import Recipe
 from meseta.traces import TraceSet
@@ -51,7 +52,7 @@ def read(
     """
     recipe, work = recipe or Recipe(), work or Work()
     files, passed = find_files(paths)
-    context = OpenContext()
+    context = batch_context(recipe.intake)
     parts: list[Part] = []
     bad: list[MesetaError] = []
     one_file = len(files) == 1
