@@ -22,13 +22,12 @@ def example(folder: Path, as_json: bool) -> None:
     """Do the main job on the bundled recording."""
     from meseta.command.jobs import run_one
     from meseta.command.printed import result_lines
-    from meseta.resources import resource, sample
+    from meseta.resources import sample
     from meseta.run import check_output
 
     with working() as work:
         check_output(folder)
-        choice = (str(resource("recipes", "example.toml")), None, ())
-        outcome = run_one([str(sample("night_raw.h5"))], folder, choice, False, work)
+        outcome = run_one([str(sample("night_raw.h5"))], folder, (None, None, ()), False, work)
     tell(as_json, outcome.summary | {"out": str(folder)}, result_lines(outcome.summary, outcome.folder))
 
 
