@@ -95,7 +95,16 @@ def _staircase(draw: Draw, shift_decades: Floats) -> Staircase:
     length = _metal_lengths(draw, atoms)
     steepness = draw.rng.standard_normal(level.shape)
     slope = np.where(atoms == 1, -0.05 + 0.05 * steepness, -np.abs(0.25 + 0.15 * steepness))
-    return Staircase(level, length, slope)
+    return Staircase(level, length, _gentle(slope, level, length))
+
+
+def _gentle(slope: Floats, level: Floats, length: Floats) -> Floats:
+    """Return slopes so gentle that no plateau runs past its neighbours: every rearrangement is a fall."""
+    gaps = np.log10(level[:, :-1] / level[:, 1:])
+    wide = np.full((len(level), 1), np.inf)
+    nearest_gap = np.minimum(np.concatenate([wide, gaps], axis=1), np.concatenate([gaps, wide], axis=1))
+    steepest = 2 * np.minimum(0.4 * nearest_gap, 0.05) / np.maximum(length, 0.01)
+    return np.clip(slope, -steepest, steepest)
 
 
 def _metal_levels(draw: Draw, atoms: npt.NDArray[np.int64]) -> Floats:
