@@ -30,7 +30,7 @@ from meseta.errors import OutputError
 from meseta.recipe.figure import FigureSettings
 from meseta.resources import resource
 
-__all__ = ["FACE", "HEAVY_FACE", "new_figure", "page_style", "save_figure", "save_pages", "svg_text"]
+__all__ = ["FACE", "HEAVY_FACE", "face_style", "new_figure", "page_style", "save_figure", "save_pages", "svg_text"]
 
 FACE: Final = "Roboto"
 """The face of all figures; it lies in the resources (Apache License 2.0) and has real super- and subscripts."""
@@ -111,16 +111,27 @@ def save_pages(figures: Sequence[Figure], path: str | Path) -> None:
 
 
 def svg_text(figure: Figure, prefix: str = "") -> str:
-    """Return a figure as an ``<svg>`` element to stand inside an HTML page.
+    """Return a figure as an ``<svg>`` element to stand inside an HTML page, without its face (:func:`face_style`).
 
     ``prefix`` goes before every identifier in it, so that several figures on one page do not mix.
     """
-    text = _svg_bytes([figure]).decode()
+    text = _drawn_svg(figure)
     text = text[text.index("<svg") :]
     if prefix:
         text = re.sub(r'\bid="', f'id="{prefix}-', text)
         text = re.sub(r'(xlink:href="#|url\(#)', rf"\1{prefix}-", text)
     return text
+
+
+def face_style(svg: str) -> str:
+    """Return CSS rules that embed the faces used in SVG text, with no more characters than it uses."""
+    texts = re.findall(r"<text[^>]*>(.*?)</text>", svg, flags=re.DOTALL)
+    characters = sorted(set(html.unescape(re.sub(r"<[^>]+>", "", "".join(texts)))) | set("0123456789"))
+    return "".join(
+        f"@font-face{{font-family:'{face}';src:url(data:font/ttf;base64,{_subset(name, characters)})}}"
+        for face, name in _FILES.items()
+        if f"'{face}'" in svg
+    )
 
 
 def _write(path: Path, content: bytes) -> None:
@@ -155,24 +166,17 @@ def _png_bytes(figures: Sequence[Figure]) -> bytes:
 
 
 def _svg_bytes(figures: Sequence[Figure]) -> bytes:
+    svg = _drawn_svg(figures[0])
+    return svg.replace("<defs>", f'<defs>\n  <style type="text/css">{face_style(svg)}</style>', 1).encode()
+
+
+def _drawn_svg(figure: Figure) -> str:
+    """Return the SVG file of a figure with live text; where the face is not at hand a similar one stands in."""
     buffer = io.BytesIO()
     about = {"Creator": _CREATOR, "Date": None, "Format": None, "Type": None}
     with _file_parameters():
-        FigureCanvasSVG(figures[0]).print_figure(buffer, format="svg", dpi=_DPI, metadata=about)
-    return _with_face(buffer.getvalue().decode()).encode()
-
-
-def _with_face(svg: str) -> str:
-    """Return the SVG with the face embedded (only the characters it uses), so that it looks the same everywhere."""
-    texts = re.findall(r"<text[^>]*>(.*?)</text>", svg, flags=re.DOTALL)
-    characters = sorted(set(html.unescape(re.sub(r"<[^>]+>", "", "".join(texts)))) | set("0123456789"))
-    rules = [
-        f"@font-face{{font-family:'{face}';src:url(data:font/ttf;base64,{_subset(name, characters)})}}"
-        for face, name in _FILES.items()
-        if f"'{face}'" in svg
-    ]
-    svg = re.sub(rf"('{FACE}(?: Medium)?')[^;\"]*", rf"\1, {_SVG_FALLBACK}", svg)
-    return svg.replace("<defs>", f'<defs>\n  <style type="text/css">{"".join(rules)}</style>', 1)
+        FigureCanvasSVG(figure).print_figure(buffer, format="svg", dpi=_DPI, metadata=about)
+    return re.sub(rf"('{FACE}(?: Medium)?')[^;\"]*", rf"\1, {_SVG_FALLBACK}", buffer.getvalue().decode())
 
 
 def _subset(name: str, characters: Sequence[str]) -> str:

@@ -12,7 +12,7 @@ from meseta.analysis import Analysis
 from meseta.figures import rows
 from meseta.figures.checks import correlation_figure, noise_figure, record_figure
 from meseta.figures.methods import METHOD_SOURCES, methods_paragraphs
-from meseta.figures.page import svg_text
+from meseta.figures.page import face_style, svg_text
 from meseta.figures.result import result_figure
 from meseta.resources import resource
 from meseta.work import Work
@@ -39,6 +39,7 @@ def report(analysis: Analysis, summary: Mapping[str, Any], title: str = "", work
         HTML with inline SVG, no link to anything outside, every text escaped.
     """
     work = work or Work()
+    figures = _figures(analysis, title, work)
     pages = Environment(
         loader=FileSystemLoader(resource("figures")),
         autoescape=True,
@@ -49,7 +50,8 @@ def report(analysis: Analysis, summary: Mapping[str, Any], title: str = "", work
     return pages.get_template("report.html.jinja").render(
         title=title or "Result",
         summary=summary,
-        figures=_figures(analysis, title, work),
+        figures=figures,
+        face=face_style("".join(figures.values())),
         tables=_tables(analysis, summary, work),
         methods=methods_paragraphs(analysis, work),
         sources=METHOD_SOURCES,
