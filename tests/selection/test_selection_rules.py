@@ -178,10 +178,10 @@ def test_a_group_that_nobody_made_yet_has_no_members():
 def test_no_traces_and_no_rules():
     selection = chosen([])
     assert selection.kept.sum() == 7 and selection.steps.left.tolist() == [7]
-    empty = some_traces().take(np.empty(0, int))
-    none = select(empty, SelectionSettings(rules=["rupture_found"]), some_measures().take(np.empty(0, int)), some_plateaus().take(np.empty(0, int)),
-                  Decisions(), "opening")  # fmt: skip
-    assert len(none.kept) == 0
+    none = np.empty(0, int)
+    settings, plateaus = SelectionSettings(rules=["rupture_found"]), some_plateaus().take(none)
+    empty = select(some_traces().take(none), settings, some_measures().take(none), plateaus, Decisions(), "opening")
+    assert len(empty.kept) == 0 and len(empty.reason) == 0
 
 
 def test_inputs_are_not_written_to():
