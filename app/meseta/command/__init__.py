@@ -83,5 +83,6 @@ for _command in (
     jobs.recipe,
     tools.example,
     tools.simulate,
+    tools.decay,
 ):
     cli.add_command(_command)

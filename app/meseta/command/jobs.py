@@ -20,7 +20,7 @@ from meseta.command.frame import (
     tell,
     working,
 )
-from meseta.command.printed import result_lines
+from meseta.command.printed import result_lines, study_answer, study_lines
 from meseta.errors import CallError, Cancelled, InputError, MesetaError
 from meseta.work import Work
 
@@ -71,14 +71,18 @@ def peek(
     as_json: bool,
 ) -> None:
     """Check files: what was recognised, what would be assumed and why, what is odd."""
-    from meseta import study
+    from meseta import intake, study
 
     recipe = recipe_from(recipe_path, preset, settings)
+    studies = [path for path in files if study.is_study(path)]
+    others = [path for path in files if path not in studies]
     with working() as work:
-        checks, bad = study.describe(files, recipe, work)
+        checks, bad = intake.describe(others, recipe, work) if others else ([], [])
+        answers = [study_answer(path, work) for path in studies] + [check.as_dict() for check in checks]
     list_bad(bad, strict)
-    lines = [line for check in checks for line in check.lines()]
-    tell(as_json, {"files": [check.as_dict() for check in checks], "bad_files": bad_plain(bad)}, lines)
+    lines = [line for answer in answers[: len(studies)] for line in study_lines(answer)]
+    lines += [line for check in checks for line in check.lines()]
+    tell(as_json, {"files": answers, "bad_files": bad_plain(bad)}, lines)
 
 
 @click.command()

@@ -4,11 +4,15 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from meseta import typeset
+from meseta.work import Work
 
-__all__ = ["result_lines"]
+if TYPE_CHECKING:
+    from meseta.peaks import Decay
+
+__all__ = ["decay_lines", "result_lines", "study_answer", "study_lines"]
 
 _HEADINGS = ("peak", "position", "95 % interval", "systematic", "fit on", "status")
 
@@ -54,3 +58,56 @@ def _peak_row(peak: dict[str, Any]) -> tuple[str, ...]:
 
 def _number(value: float | None) -> float:
     return math.nan if value is None else float(value)
+
+
+def study_answer(path: str, work: Work) -> dict[str, Any]:
+    """Return what a study holds, as plain values; every block of it is checked."""
+    from meseta.study import Study
+
+    with Study.open(path, read_only=True) as study:
+        traces = study.traces(work)
+        return {
+            "file": str(path),
+            "reader": "study",
+            "recordings": [
+                {"name": source.name, "sha256": source.sha256, "kept": kept} for source, kept in study.sources.items()
+            ],
+            "traces": traces.traces,
+            "samples": traces.samples,
+            "channels": {name: channel.unit for name, channel in traces.channels.items()},
+            "drive_unit": traces.drive.unit,
+            "damage": study.check(work),
+            "version_differences": study.version_differences(),
+            "history": [entry.text for entry in study.history.entries],
+        }
+
+
+def study_lines(answer: dict[str, Any]) -> list[str]:
+    """Return what a study holds, for people."""
+    lines = [
+        answer["file"],
+        f"  study of {answer['traces']} traces, {answer['samples']} samples, drive in {answer['drive_unit']}",
+    ]
+    lines += [f"  channel {name} in {unit}" for name, unit in answer["channels"].items()]
+    lines += [f"  recording {one['name']} ({one['kept']})" for one in answer["recordings"]]
+    lines += [f"  history: {text}" for text in answer["history"]]
+    lines += [f"  ? made with another version: {text}" for text in answer["version_differences"]]
+    return (
+        lines
+        + [f"  damaged: {text}" for text in answer["damage"] or ()]
+        + ([] if answer["damage"] else ["  every block is whole"])
+    )
+
+
+def decay_lines(result: Decay) -> list[str]:
+    """Return decay constant and conductance at zero length, with both kinds of error."""
+    unit = result.points.length_unit
+    stated = f"{result.beta_sigma:.4g} from the stated errors, " if result.absolute else ""
+    lines = [
+        f"decay constant {result.beta:.6g} per {unit}; error {stated}{result.beta_sigma_scaled:.4g} from the scatter; "
+        f"95 % {result.beta_low:.4g} to {result.beta_high:.4g}",
+        f"conductance at zero length {typeset.conductance(result.contact_g0)}; 95 % "
+        f"{typeset.interval(result.contact_low_g0, result.contact_high_g0, 'G0')}",
+        f"{len(result.points.length)} points, chi-square {result.chi_square:.4g} for {result.freedom} degrees of freedom",
+    ]
+    return lines + [f"caution: {note}" for note in result.notes]

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import asdict
+import math
+from dataclasses import asdict, fields
 from pathlib import Path
 from typing import Any
 
@@ -10,7 +11,7 @@ import click
 
 from meseta.command.frame import json_option, tell, working
 
-__all__ = ["example", "simulate"]
+__all__ = ["decay", "example", "simulate"]
 
 
 @click.command()
@@ -86,3 +87,32 @@ def _list_settings(context: click.Context) -> Any:
         choices = f" [{' | '.join(info.choices)}]" if info.choices else ""
         click.echo(f"{info.name} = {info.default}: {info.title}{unit}{choices}. {info.help}".rstrip())
     context.exit()
+
+
+@click.command()
+@click.argument("points", type=click.Path())
+@click.option("--length-unit", default="", help="What a length counts: nm, angstrom, carbon, ring ...")
+@click.option("--out", "figure_path", type=click.Path(path_type=Path), help="Draw the fit: .pdf, .svg or .png.")
+@json_option
+def decay(points: str, length_unit: str, figure_path: Path | None, as_json: bool) -> None:
+    """Fit the decay constant of a length series.
+
+    POINTS is a CSV file with columns length, conductance_g0 and optional length_error, conductance_error_g0, label.
+    """
+    from meseta import peaks
+    from meseta.command.printed import decay_lines
+
+    result = peaks.decay(peaks.read_points(points, length_unit))
+    if figure_path is not None:
+        from meseta.figures import decay_figure, save_figure
+        from meseta.recipe import Recipe
+
+        save_figure(decay_figure(result, Recipe().figure), figure_path)
+    names = [field.name for field in fields(result) if field.name not in ("points", "line", "notes")]
+    answer = {name: _finite(getattr(result, name)) for name in names}
+    tell(as_json, answer | {"length_unit": result.points.length_unit, "notes": list(result.notes)}, decay_lines(result))
+
+
+def _finite(value: float) -> float | None:
+    """Return a number that JSON can hold; None where there is none."""
+    return value if math.isfinite(value) else None
