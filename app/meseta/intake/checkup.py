@@ -16,6 +16,7 @@ import numpy.typing as npt
 from meseta.intake.assembly import Part
 from meseta.quantities import G0_SIEMENS, johnson_current_rms
 from meseta.recipe.alignment import AlignmentSettings
+from meseta.traces import Quality
 
 __all__ = ["Finding", "check_up"]
 
@@ -55,7 +56,7 @@ def check_up(part: Part, alignment: AlignmentSettings) -> tuple[tuple[Finding, .
     rows = np.flatnonzero(np.array(part.cut.direction) == "opening")
     chosen = rows[np.linspace(0, len(rows) - 1, min(len(rows), 200)).astype(int)] if len(rows) else rows
     spans = _pulls(part, chosen)
-    values = [part.conductance[a:b].astype(np.float64) for a, b in spans if b > a]
+    values = [_trusted(part, a, b) for a, b in spans if b > a]
     if sum(len(one) for one in values) < LEAST_SAMPLES:
         return (), None
     pooled = np.concatenate(values)
@@ -63,6 +64,14 @@ def check_up(part: Part, alignment: AlignmentSettings) -> tuple[tuple[Finding, .
     found += [_slope(part, spans), _both_ways(part)]
     zero, finding = _zero_level(pooled, values, alignment.zero_at_g0)
     return tuple(one for one in (*found, finding) if one is not None), zero
+
+
+def _trusted(part: Part, start: int, stop: int) -> Floats:
+    """Return the conductance of a range with NaN where the amplifier was saturated."""
+    values = part.conductance[start:stop].astype(np.float64)
+    if part.quality is not None:
+        values[part.quality[start:stop] & Quality.SATURATED > 0] = np.nan
+    return values
 
 
 def _pulls(part: Part, rows: npt.NDArray[np.int64]) -> list[tuple[int, int]]:

@@ -10,7 +10,7 @@ from typing import Final
 
 from meseta.errors import InputError, MesetaError
 from meseta.intake.readers.contents import Contents
-from meseta.intake.readers.unpack import peek_bytes
+from meseta.intake.readers.unpack import is_packed, peek_bytes
 from meseta.intake.recording import Recording
 from meseta.intake.registry import find_reader
 from meseta.recipe import Recipe
@@ -60,6 +60,8 @@ def open_recording(
         if size == 0:
             raise InputError("is empty", str(path), "check how it was written")
         reader = find_reader(peek_bytes(path, HEAD_BYTE), path, recipe.intake.reader)
+        if reader.name not in ("text", "NumPy") and is_packed(path):
+            raise InputError(f"is a packed {reader.name} file", str(path), "unpack it first")
         contents = reader.open(path, recipe.intake)
         digest = sha256_of(path)
     except MesetaError:

@@ -19,7 +19,12 @@ __all__ = ["find_reader", "readers"]
 
 _READERS: Final = (
     "meseta.intake.readers.hdf5:Hdf5Reader",
+    "meseta.intake.readers.numpy_files:NumpyReader",
+    "meseta.intake.readers.mat:MatReader",
+    "meseta.intake.readers.tdms:TdmsReader",
+    "meseta.intake.readers.igor:IgorReader",
     "meseta.intake.readers.text:TextReader",
+    "meseta.intake.readers.binary:BinaryReader",
 )
 
 

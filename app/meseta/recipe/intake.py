@@ -78,6 +78,21 @@ class IntakeSettings(Section):
         "CSV with one row a file: column 'file', any other columns.",
         unset="no table",
     )
+    binary_type: Literal["int16", "int32", "uint16", "float32", "float64"] | None = setting(
+        None, "Binary: numbers", "Type of the numbers in a file without a header.", unset="no headerless file is read"
+    )
+    binary_order: Literal["little", "big"] = setting(
+        "little", "Binary: byte order", "'little' for files written on common computers."
+    )
+    binary_header_byte: int = setting(
+        0, "Binary: header", "Bytes before the numbers; they are passed over.", unit="bytes", ge=0
+    )
+    binary_channels: list[str] = setting(
+        None,
+        "Binary: channels",
+        "Names of the channels that take turns from number to number; what they are is said under Channels.",
+        factory=list,
+    )
     specimen: str | None = setting(
         None, "Specimen", "Device, tip or chip of all files.", unset="taken from metadata, else unknown"
     )

@@ -26,7 +26,7 @@ from meseta.intake.readers.hdf5_tree import Tree, open_file, walk
 from meseta.intake.recording import RawChannel
 from meseta.recipe.intake import IntakeSettings
 
-__all__ = ["Hdf5Reader"]
+__all__ = ["Hdf5Reader", "understood"]
 
 _SIGNATURE: Final = b"\x89HDF\r\n\x1a\n"
 
@@ -44,7 +44,7 @@ class Hdf5Reader:
         """Return the content of the file; samples are read from it block by block."""
         file = open_file(path)
         try:
-            return replace(_understood(walk(file, path), path, settings), close=file.close)
+            return replace(understood(walk(file, path), path, settings), close=file.close)
         except (OSError, RuntimeError) as error:
             file.close()
             raise InputError(
@@ -55,7 +55,14 @@ class Hdf5Reader:
             raise
 
 
-def _understood(tree: Tree, path: Path, settings: IntakeSettings) -> Contents:
+def understood(tree: Tree, path: Path, settings: IntakeSettings) -> Contents:
+    """Return how traces stand in a tree of named arrays, whatever the file that they came from.
+
+    Raises
+    ------
+    InputError
+        Where it holds no samples.
+    """
     leaves = [leaf for node in tree.nodes for leaf in leaves_of(node)]
     by_parent: dict[str, list[Leaf]] = {}
     for leaf in leaves:

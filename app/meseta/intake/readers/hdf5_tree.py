@@ -193,7 +193,7 @@ class VectorSamples:
 
     def read(self, start: int, stop: int) -> npt.NDArray[Any]:
         """Return samples ``start`` to ``stop``."""
-        source = self.dataset.fields(self.field) if self.field else self.dataset
+        source = _field(self.dataset, self.field) if self.field else self.dataset
         shape = self.dataset.shape
         if len(shape) == 1:
             return _read(self.dataset, lambda: source[start:stop])
@@ -281,10 +281,15 @@ class PartSamples:
         return np.concatenate(found) if found else self.parts[0].read(0, 0)
 
 
+def _field(dataset: Any, name: str) -> Any:
+    """Return one field of a compound dataset (of HDF5, or an array in memory)."""
+    return dataset[name] if isinstance(dataset, np.ndarray) else dataset.fields(name)
+
+
 def _read(dataset: Any, action: Any) -> npt.NDArray[Any]:
     try:
         values: npt.NDArray[Any] = action()
         return values
     except (OSError, RuntimeError, ValueError) as error:
-        name = f"{dataset.file.filename}, {dataset.name}" if dataset else "HDF5 file"
+        name = f"{dataset.file.filename}, {dataset.name}" if isinstance(dataset, h5py.Dataset) and dataset else "file"
         raise InputError("cannot be read: the file is damaged or truncated", name, "copy the file again") from error

@@ -13,7 +13,7 @@ from typing import IO, Any, Final
 
 from meseta.errors import InputError
 
-__all__ = ["PACKED", "peek_bytes", "read_bytes"]
+__all__ = ["PACKED", "is_packed", "peek_bytes", "read_bytes"]
 
 BOMB_RATIO: Final = 500
 BOMB_BYTE: Final = 64 << 20
@@ -24,6 +24,12 @@ PACKED: Final = {b"\x1f\x8b": "gzip", b"\xfd7zXZ\x00": "xz", b"BZh": "bzip2", b"
 def packing(head: bytes) -> str:
     """Return the name of the packing by its signature; empty where the file is not packed."""
     return next((name for mark, name in PACKED.items() if head.startswith(mark)), "")
+
+
+def is_packed(path: Path) -> bool:
+    """Return whether a file is packed."""
+    with path.open("rb") as file:
+        return bool(packing(file.read(8)))
 
 
 def _opened(path: Path, kind: str) -> IO[bytes] | Any:
@@ -42,6 +48,15 @@ def _opened(path: Path, kind: str) -> IO[bytes] | Any:
     return archive.open(members[0])
 
 
+def _first_member(path: Path) -> Any:
+    """Return the first file of a zip, which tells what kind of files it holds."""
+    archive = zipfile.ZipFile(path)
+    members = [info for info in archive.infolist() if not info.is_dir()]
+    if not members or members[0].flag_bits & 1:
+        raise InputError("is an empty or locked zip", str(path), "unpack it first")
+    return archive.open(members[0])
+
+
 def peek_bytes(path: Path, count: int) -> bytes:
     """Return the first bytes of a file, unpacked.
 
@@ -56,8 +71,8 @@ def peek_bytes(path: Path, count: int) -> bytes:
     if not kind:
         return head
     try:
-        with _opened(path, kind) as stream:
-            return stream.read(count)
+        with _first_member(path) if kind == "zip" else _opened(path, kind) as stream:
+            return bytes(stream.read(count))
     except (OSError, EOFError, lzma.LZMAError, zlib.error, zipfile.BadZipFile, NotImplementedError) as error:
         raise InputError(f"is damaged {kind} ({error})", str(path), "pack the file again") from error
 
