@@ -1,4 +1,4 @@
-"""The compiled fit against certified regressions: NIST Statistical Reference Datasets (StRD), www.itl.nist.gov/div898/strd.
+"""The compiled fit against certified regressions: NIST Statistical Reference Datasets, www.itl.nist.gov/div898/strd.
 
 The data are points, the fit integrates over bins; bins of a thousandth of the spacing make the two equal to 1e-9.
 """

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import iminuit.cost
 import numpy as np
 import pytest
@@ -78,8 +80,7 @@ def test_bin_integrals_equal_numerical_integrals(shape, background):
         return 500 * density(shape, u, 1.3, 0.3, 0.35) + smooth(background, u, edges, 40.0, 1.4)
 
     expected = [
-        integrate.quad(whole, a, b, points=[1.3] if a < 1.3 < b else None, epsabs=1e-11)[0]
-        for a, b in zip(edges[:-1], edges[1:], strict=True)
+        integrate.quad(whole, a, b, points=[1.3] if a < 1.3 < b else None, epsabs=1e-11)[0] for a, b in pairwise(edges)
     ]
     np.testing.assert_allclose(model.curves(inner).total, expected, rtol=1e-9, atol=1e-10)
 

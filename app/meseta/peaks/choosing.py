@@ -77,9 +77,9 @@ class Chooser:
         good = [window for window in windows if self._fittable(window)]
         return good, "" if good else f"no fit: fewer than {_FEWEST_BINS} bins with counts in the range of the fit"
 
-    def without(self, windows: Sequence[Window], left_out: Sequence[Start]) -> list[Window]:
-        """Return windows round the peaks that remain when some are left out."""
-        rest = [start for window in windows for start in window.starts if start not in left_out]
+    def without(self, windows: Sequence[Window], left_out: Start) -> list[Window]:
+        """Return windows round the peaks that remain when one is left out."""
+        rest = [start for window in windows for start in window.starts if start != left_out]
         return [window for window in self._settled(rest, []) if self._fittable(window)] if rest else []
 
     def _fittable(self, window: Window) -> bool:
@@ -109,15 +109,19 @@ class Chooser:
         blocks = self._blocks()
         chosen: list[Start] = []
         windows: list[Window] = []
+        standing = list(found)
         for place in found:
             new = Start(place.position_u, place.width_u)
             if sum(self._below_quantum(start) == self._below_quantum(new) for start in chosen) >= self.settings.most:
                 continue
             trial = sorted([*chosen, new], key=lambda start: start.position_u)
-            settled = self._settled(trial, found)
+            settled = self._settled(trial, standing)
             window = next((w for w in settled if any(_same(start, new) for start in w.starts)), None)
             if window is not None and self._supported(window, new, blocks):
                 chosen, windows = trial, settled
+            else:
+                standing.remove(place)  # what is no peak keeps no room
+                windows = self._settled(chosen, standing) if chosen else []
         return windows
 
     def _below_quantum(self, start: Start) -> bool:
@@ -157,12 +161,11 @@ class Chooser:
         if not self._fittable(window):
             return False
         settings = self.settings.model_copy(update={"tie": "none", "equal_relative_widths": False})
-        number = next(at for at, start in enumerate(window.starts) if _same(start, new))
         bins = (window.first, window.last)
         background = settings.background
         larger = model_of(self.histogram.grid, settings, window.starts, bins, 1, background, self.template)
         fitted = fit_model(larger, self.data(window))
-        if not self._stands_out(fitted, number):
+        if not all(self._stands_out(fitted, number) for number in range(len(window.starts))):
             return False
         if blocks is None:
             return True
@@ -176,6 +179,8 @@ class Chooser:
         _, position, width, _ = fitted.peaks[number]
         low, high = fitted.model.range_u
         if not fitted.converged or not low < position < high or width * WIDTH_TO_FWHM > 0.8 * (high - low):
+            return False
+        if abs(position - fitted.model.position_u[number]) > 2.0 * max(width, fitted.model.width_u[number]):
             return False
         curves = fitted.model.curves(fitted.inner)
         at = int(np.argmin(np.abs((fitted.model.low + fitted.model.high) / 2 - position)))

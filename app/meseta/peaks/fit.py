@@ -11,7 +11,7 @@ from meseta.peaks.fitting import fit_model, refit
 from meseta.peaks.modelling import background_template
 from meseta.peaks.results import PeakFit
 from meseta.peaks.systematic import systematic_shifts
-from meseta.peaks.tabulate import FittedWindow, empty_fit, tabulate, weak_peaks
+from meseta.peaks.tabulate import FittedWindow, empty_fit, tabulate, weakest_peak
 from meseta.peaks.windows import Floor, Window, usable_range
 from meseta.recipe.peaks import PeakSettings
 from meseta.segmentation.results import PlateauTable
@@ -71,7 +71,7 @@ def fit_histogram(
     if not windows:
         return empty_fit(histogram, settings, reason)
     parts = [_fitted(chooser, window, work) for window in windows]
-    while not settings.peaks and (weak := [start for part in parts for start in weak_peaks(part)]):
+    while not settings.peaks and (weak := weakest_peak(parts)) is not None:
         windows = chooser.without(windows, weak)
         if not windows:
             return empty_fit(histogram, settings, "no peak found")

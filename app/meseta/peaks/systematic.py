@@ -18,6 +18,7 @@ __all__ = ["half_spread", "systematic_shifts"]
 Floats = npt.NDArray[np.float64]
 ModelMaker = Callable[[Window, int, int, int, str], Model]
 
+_MUCH_WORSE = 2.0
 _SMOOTH = ("constant", "linear", "exponential", "power_law")
 
 
@@ -38,7 +39,8 @@ def systematic_shifts(
     Returns
     -------
     tuple of (str, (peaks,) float64)
-        NaN where the changed fit failed.
+        NaN where the changed fit failed, or another background fits much worse (deviance more than doubled): that
+        choice could not be defended.
     """
     first, last = window.first, window.last
     bins, background = last - first, fitted.model.background
@@ -76,7 +78,8 @@ def _moved(
     counts = histogram.counts[first:last].astype(float)
     data = rebinned(counts, merge)[: len(changed.low)]
     other = fit_model(changed, data)
-    if not other.converged:
+    worse = other.score / other.degrees_of_freedom > _MUCH_WORSE * fitted.score / fitted.degrees_of_freedom
+    if not other.converged or (background != fitted.model.background and worse):
         return np.full(fitted.model.peaks, np.nan)
     moved: Floats = other.peaks[:, 1] - fitted.peaks[:, 1]
     return moved

@@ -22,7 +22,7 @@ from meseta.quantities import G0_SIEMENS, R0_OHM
 from meseta.recipe.peaks import PeakSettings
 from meseta.segmentation.results import PlateauTable
 
-__all__ = ["FittedWindow", "empty_fit", "tabulate", "weak_peaks"]
+__all__ = ["FittedWindow", "empty_fit", "tabulate", "weakest_peak"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -79,15 +79,16 @@ def tabulate(
     return PeakFit(table, *_curves(histogram, parts, order), systematic=systematic, goodness=score / freedom)
 
 
-def weak_peaks(part: FittedWindow) -> list[Start]:
-    """Return the peaks whose area is below three standard errors: not to be proposed."""
-    interval = _interval(part.fitted, part.replicates, 0, 1.0)
-    area = part.fitted.peaks[:, 0]
-    return [
-        start
-        for peak, start in enumerate(part.window.starts)
-        if not area[peak] > 3.0 * _area_sigma(part.fitted, peak, interval)
-    ]
+def weakest_peak(parts: Sequence[FittedWindow]) -> Start | None:
+    """Return the peak with the smallest area in standard errors, if that is below three: not to be proposed."""
+    strength = {}
+    for part in parts:
+        interval = _interval(part.fitted, part.replicates, 0, 1.0)
+        for peak, start in enumerate(part.window.starts):
+            area, sigma = part.fitted.peaks[peak, 0], _area_sigma(part.fitted, peak, interval)
+            strength[start] = area / sigma if sigma > 0 else float("inf") if area > 0 else 0.0
+    weakest = min(strength, key=lambda start: strength[start])
+    return weakest if strength[weakest] < 3.0 else None
 
 
 def empty_fit(histogram: ConductanceHistogram, settings: PeakSettings, reason: str) -> PeakFit:

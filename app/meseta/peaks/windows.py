@@ -92,17 +92,16 @@ def usable_range(histogram: ConductanceHistogram, floor: Floor | None) -> tuple[
 def _floor_edge(u: Floats, counts: Floats) -> float:
     """Return the upper end of a floor peak at the lower end of the axis, or the lowest edge where there is none.
 
-    A floor peak is the highest point of the lower half of what was counted, and is followed by a fall (a factor of ten
-    within a decade) that is much steeper than its top, other than that of an exponential background; it ends where the
-    fall gives way.
+    A floor peak is the highest point of the lowest 1.3 decades of what was counted, and is followed by a fall (a factor
+    of ten within a decade) that is much steeper than its top, other than that of an exponential background; it ends
+    where the fall gives way.
     """
     step = float(u[1] - u[0])
     seen = np.flatnonzero(counts)
     if len(seen) < 8 or step >= 0.2:
         return float(u[0])
     smooth = gaussian_filter1d(counts, max(0.1 / step, 1.0))
-    half = seen[0] + (seen[-1] - seen[0]) // 2 + 1
-    top = int(np.argmax(smooth[:half]))
+    top = int(np.argmax(smooth[: seen[0] + round(1.3 / step)]))
     decade, pause = round(1.0 / step), max(round(0.15 / step), 1)
     fall = np.log10(np.maximum(smooth[top:], 1e-9 * smooth[top]) / smooth[top])
     if fall[: decade + 1].min() > -1.0:
