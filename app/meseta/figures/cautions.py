@@ -10,6 +10,7 @@ import numpy as np
 from meseta import typeset
 from meseta.analysis import Analysis
 from meseta.errors import MesetaError
+from meseta.histograms import bin_notes
 from meseta.work import Work
 
 __all__ = ["cautions"]
@@ -88,11 +89,8 @@ def _samples(analysis: Analysis, work: Work) -> Iterator[str]:
             yield f"{typeset.percent(number, everything)} of the samples {text}."
     if not counted:
         yield "No sample lies in the range of the histogram."
-    elif histogram.grid.axis == "linear" and noise.converter_step_g0 > float(histogram.grid.widths[0]) / 2:
-        yield (
-            f"Bins are narrower than two steps of the converter ({typeset.conductance(noise.converter_step_g0)}); the "
-            "histogram may show combs."
-        )
+    for note in bin_notes(histogram.grid, noise):
+        yield f"{note[:1].upper()}{note[1:]}."
 
 
 def _peaks(analysis: Analysis, work: Work) -> Iterator[str]:

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import Final
-
 import numpy as np
 import numpy.typing as npt
 from matplotlib.axes import Axes
@@ -16,16 +14,13 @@ from meseta.figures.displacement import colour_map, colour_norm
 from meseta.figures.page import new_figure, page_style
 from meseta.figures.scale import ConductanceScale, plain_ticks
 from meseta.figures.words import say
-from meseta.histograms import CorrelationHistogram, CountMatrix
+from meseta.histograms import CorrelationHistogram, TemporalHistogram
 from meseta.recipe.figure import FigureSettings
 from meseta.segmentation import NoiseModel
-from meseta.selection import Selection
 
 __all__ = ["correlation_figure", "noise_figure", "record_figure"]
 
 Floats = npt.NDArray[np.float64]
-_MOST_COLUMNS: Final = 1500
-_LINE: Final = 0.42
 
 
 def noise_figure(noise: NoiseModel, settings: FigureSettings) -> Figure:
@@ -55,65 +50,35 @@ def noise_figure(noise: NoiseModel, settings: FigureSettings) -> Figure:
     return figure
 
 
-def record_figure(counts: CountMatrix, selection: Selection, traces_a_column: int, settings: FigureSettings) -> Figure:
-    """Draw the temporal histogram: consecutive traces from left to right, one column a block of traces.
-
-    Parameters
-    ----------
-    counts : CountMatrix
-    selection : Selection
-        Only traces that take part are drawn; they keep their place in the record.
-    traces_a_column : int
-        Traces summed in one column; more where the record would have more columns than paper.
-    settings : FigureSettings
-    """
-    scale = ConductanceScale.of(counts.grid)
+def record_figure(record: TemporalHistogram, settings: FigureSettings) -> Figure:
+    """Draw the temporal histogram: consecutive traces from left to right, samples a kept trace as colour."""
+    scale = ConductanceScale.of(record.grid)
     with page_style(settings):
         figure, axes = _single(settings, settings.width_mm, 0.24)
         scale.decorate(axes.yaxis)
         axes.set_ylabel(scale.label)
         axes.set_xlabel("Trace")
-        traces = len(counts.counts)
-        plain_ticks(axes.xaxis, 0, max(traces, 1), most=9)
-        axes.set_xlim(0, max(traces, 1))
-        if not traces or not np.any(selection.kept):
-            say(axes, "no trace takes part")
+        end = max(len(record.traces) * record.traces_a_column, 1)
+        plain_ticks(axes.xaxis, 0, end, most=9)
+        axes.set_xlim(0, end)
+        if not np.any(record.counts):
+            say(axes, "no sample lies in this range" if np.any(record.traces) else "no trace takes part")
             return figure
-        column = max(traces_a_column, -(-traces // _MOST_COLUMNS))
-        image, kept = _columns(counts, selection.kept, column)
-        density = image / np.maximum(kept, 1)[:, None]
-        if not np.any(image):
-            say(axes, "no sample lies in this range")
-            return figure
-        edges = counts.grid.u_edges
+        density, edges = record.counts_per_trace, record.grid.u_edges
         axes.imshow(
-            np.ma.masked_where(image == 0, density).T,
-            extent=(0, len(kept) * column, edges[0], edges[-1]),
+            np.ma.masked_where(record.counts == 0, density).T,
+            extent=(0, end, edges[0], edges[-1]),
             cmap=colour_map(settings.colour_map),
-            norm=colour_norm(density[image > 0], settings.colour_scale),
+            norm=colour_norm(density[record.counts > 0], settings.colour_scale),
             zorder=0.5,
         )
-        axes.set_xlim(0, traces)
+        axes.set_xlim(0, end)
         axes.set_ylim(scale.low, scale.high)
+        column = record.traces_a_column
         note = f"{typeset.integer(column)} traces a column" if column > 1 else "one trace a column"
         axes.set_title(f"Samples a trace, {note}", loc="right", color=colours.LIGHT.quiet, pad=3)
         figure.draw_without_rendering()
     return figure
-
-
-def _columns(counts: CountMatrix, kept: npt.NDArray[np.bool_], column: int) -> tuple[Floats, npt.NDArray[np.int64]]:
-    """Return the counts of kept traces summed over ``column`` traces, and how many each column has."""
-    starts = np.arange(0, len(kept), column)
-    merge = max(counts.merge, 1)
-    bins = counts.grid.bins // merge * merge
-    image = np.stack(
-        [
-            counts.counts[start : start + column][kept[start : start + column]].sum(axis=0, dtype=np.float64)
-            for start in starts
-        ]
-    )
-    coarse = image[:, :bins].reshape(len(starts), -1, merge).sum(axis=2)
-    return coarse, np.add.reduceat(kept.astype(np.int64), starts)
 
 
 def correlation_figure(correlation: CorrelationHistogram, settings: FigureSettings) -> Figure:

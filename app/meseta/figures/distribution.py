@@ -103,9 +103,9 @@ def _curve(axes: Axes, histogram: ConductanceHistogram) -> None:
     if np.any(np.isfinite(low)):
         axes.fill_betweenx(places, low, high, color=_BAND, linewidth=0, zorder=1, label="95 % band")
     count = f"{typeset.integer(histogram.traces)} traces"
-    weak = histogram.traces_in_bin < histogram.weak_traces
+    weak = (histogram.traces_in_bin < histogram.weak_traces) & (histogram.counts > 0)
     _staircase(axes, edges, np.where(weak, np.nan, histogram.density), colours.LIGHT.selected, "-", count)
-    if np.any(weak & (histogram.counts > 0)):
+    if np.any(weak):
         label = f"< {histogram.weak_traces} traces"
         _staircase(axes, edges, np.where(weak, histogram.density, np.nan), colours.LIGHT.every, "-", label)
 

@@ -14,10 +14,14 @@ from meseta.figures.checks import correlation_figure, noise_figure, record_figur
 from meseta.figures.methods import METHOD_SOURCES, methods_paragraphs
 from meseta.figures.page import face_style, svg_text
 from meseta.figures.result import result_figure
+from meseta.histograms import TemporalHistogram, temporal_histogram
+from meseta.recipe.histogram import TemporalSettings
 from meseta.resources import resource
 from meseta.work import Work
 
 __all__ = ["report"]
+
+_MOST_COLUMNS = 1500
 
 
 def report(analysis: Analysis, summary: Mapping[str, Any], title: str = "", work: Work | None = None) -> str:
@@ -71,16 +75,19 @@ def _figures(analysis: Analysis, title: str, work: Work) -> dict[str, str]:
             settings,
             title,
         ),
-        "record": record_figure(
-            analysis.result("counts", work),
-            analysis.selection(work),
-            analysis.recipe.temporal.traces_a_column,
-            settings,
-        ),
+        "record": record_figure(_record(analysis, work), settings),
         "correlation": correlation_figure(analysis.result("correlation_histogram", work), settings),
         "noise": noise_figure(analysis.noise(work), settings),
     }
     return {name: svg_text(figure, name) for name, figure in made.items()}
+
+
+def _record(analysis: Analysis, work: Work) -> TemporalHistogram:
+    """Return the temporal histogram, with wider columns where there would be more of them than the paper shows."""
+    asked = analysis.recipe.temporal.traces_a_column
+    column = max(asked, -(-analysis.traces.traces // _MOST_COLUMNS))
+    settings = TemporalSettings(traces_a_column=column)
+    return temporal_histogram(analysis.result("counts", work), analysis.selection(work).kept, settings)
 
 
 def _tables(analysis: Analysis, summary: Mapping[str, Any], work: Work) -> dict[str, Any]:
