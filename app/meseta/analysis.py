@@ -12,7 +12,7 @@ import hashlib
 import threading
 from collections import OrderedDict
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -189,9 +189,10 @@ def _resampling(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inpu
 
 
 def _histogram(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> Any:
-    return histograms.conductance_histogram(
+    result = histograms.conductance_histogram(
         inputs["counts"], inputs["selection"].kept, settings.histogram, inputs["resampling"]
     )
+    return replace(result, notes=histograms.bin_notes(result.grid, inputs["noise"]))
 
 
 def _displacement_counts(traces: TraceSet, settings: SettingsView, inputs: Inputs, kept: Any) -> DisplacementHistogram:
@@ -241,6 +242,35 @@ def _correlation(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inp
     )
 
 
+def _temporal(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> Any:
+    return histograms.temporal_histogram(inputs["counts"], inputs["selection"].kept, settings.temporal)
+
+
+def _record_memory(_: Iterator[Any], __: TraceSet, ___: SettingsView, inputs: Inputs, ____: Work) -> Any:
+    return histograms.record_memory(inputs["counts"], inputs["selection"].kept)
+
+
+def _drift(_: Iterator[Any], __: TraceSet, ___: SettingsView, inputs: Inputs, ____: Work) -> Any:
+    noise = inputs["noise"]
+    return histograms.drift_of(inputs["counts"], inputs["selection"].kept, noise.floor_g0 + 6 * noise.floor_sigma_g0)
+
+
+def _length_histograms(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, __: Work) -> Any:
+    return histograms.plateau_lengths(
+        inputs["plateaus"], inputs["measures"], inputs["selection"].kept, traces.drive.unit, settings.lengths
+    )
+
+
+def _plateau_histogram(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> Any:
+    return histograms.plateau_histogram(
+        inputs["plateaus"],
+        inputs["counts"].shown,
+        inputs["resampling"],
+        settings.histogram.plateaus_by_length,
+        settings.histogram.weak_traces,
+    )
+
+
 def _peaks(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
     return peaks.fit_histogram(
         inputs["histogram"],
@@ -282,7 +312,12 @@ STEPS: Mapping[str, Step] = {
         Step("counts", "choosing bins", 1, ("fine_counts", "noise"), _BINS, _counts),
         Step("resampling", "resampling", 1, ("counts", "selection"), ("resampling", "histogram"), _resampling),
         Step(
-            "histogram", "building the histogram", 1, ("counts", "selection", "resampling"), ("histogram",), _histogram
+            "histogram",
+            "building the histogram",
+            1,
+            ("counts", "selection", "resampling", "noise"),
+            ("histogram",),
+            _histogram,
         ),
         Step(
             "displacement_all",
@@ -308,6 +343,25 @@ STEPS: Mapping[str, Step] = {
             ("counts", "selection", "noise"),
             ("correlation", "resampling.seed"),
             _correlation,
+        ),
+        Step("temporal_histogram", "following the record", 1, ("counts", "selection"), ("temporal",), _temporal),
+        Step("record_memory", "looking for memory", 1, ("counts", "selection"), (), _record_memory),
+        Step("drift", "looking for drift", 1, ("counts", "selection", "noise"), (), _drift),
+        Step(
+            "length_histograms",
+            "measuring lengths",
+            1,
+            ("plateaus", "measures", "selection"),
+            ("lengths",),
+            _length_histograms,
+        ),
+        Step(
+            "plateau_histogram",
+            "counting plateaus",
+            1,
+            ("plateaus", "counts", "resampling"),
+            ("histogram.plateaus_by_length", "histogram.weak_traces"),
+            _plateau_histogram,
         ),
         Step(
             "peaks",

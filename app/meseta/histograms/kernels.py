@@ -21,6 +21,7 @@ __all__ = [
     "first_at_or_past",
     "fold_rows",
     "merge_rows",
+    "permute_within",
     "place_of",
     "settle_region",
     "sum_rows",
@@ -129,7 +130,7 @@ def sum_rows(
     total: npt.NDArray[np.int64],
     reached: npt.NDArray[np.int64],
 ) -> None:
-    """Add the chosen rows to ``total`` (fine bins); ``reached`` counts the rows that have any in each ``merge`` bins."""
+    """Add the chosen rows to ``total``; ``reached`` counts the rows that have any in each ``merge`` bins."""
     for row in rows:
         line = counts[row]
         for place in range(len(total)):
@@ -162,6 +163,31 @@ def merge_rows(
             for at in range(coarse * merge, min(coarse * merge + merge, len(line))):
                 total += line[at]
             merged[place, coarse] = total
+
+
+@kernel
+def permute_within(
+    values: npt.NDArray[np.float32], block: int, seed: npt.NDArray[np.uint64], permuted: npt.NDArray[np.float32]
+) -> None:
+    """Permute every column within blocks of rows, each column on its own; ``seed`` has one number a column.
+
+    Fisher and Yates' shuffle, with the splitmix64 generator (Steele, Lea and Flood, OOPSLA 2014).
+    """
+    rows = len(values)
+    for column in range(values.shape[1]):
+        state = seed[column]
+        for row in range(rows):
+            permuted[row, column] = values[row, column]
+        for first in range(0, rows, block):
+            last = min(first + block, rows)
+            for row in range(last - 1, first, -1):
+                state += np.uint64(0x9E3779B97F4A7C15)
+                mixed = state
+                mixed = (mixed ^ (mixed >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+                mixed = (mixed ^ (mixed >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+                mixed = mixed ^ (mixed >> np.uint64(31))
+                other = first + int((mixed >> np.uint64(32)) * np.uint64(row - first + 1) >> np.uint64(32))
+                permuted[row, column], permuted[other, column] = permuted[other, column], permuted[row, column]
 
 
 @kernel
@@ -344,6 +370,8 @@ def _warm_up() -> None:
         count_rows(values, begin, end, table, thresholds, 1, column, counts, special)
         count_flagged_rows(values, np.zeros(5, np.uint8), begin, end, table, thresholds, column, counts, special, 0, 1)
     draw_blocks(np.zeros((1, 1), np.int64), end, np.arange(5), np.zeros((1, 5), np.uint16))
+    square = np.asfortranarray(np.ones((2, 2), np.float32))
+    permute_within(square, 2, np.ones(2, np.uint64), np.asfortranarray(square.copy()))
     settle_region(values, begin, end, values[:1], end, np.zeros(1, np.int64))
     unit = np.ones(1)
     edges = np.array([0.0, 1.0])

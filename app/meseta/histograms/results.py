@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Any, Final
 
 import numpy as np
 import numpy.typing as npt
 
+from meseta.histograms.plottable import PlottableAxis, PlottableHistogram
 from meseta.tables import Table
 
 __all__ = [
@@ -20,10 +21,12 @@ __all__ = [
     "Grid",
     "HistogramTable",
     "Resampling",
+    "Ridge",
 ]
 
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
+_NORMAL = 1.959963984540054
 
 EXCLUDED: Final = ("under", "over", "non_positive", "saturated", "untrusted", "nan", "outside", "floor")
 """Columns of ``CountMatrix.excluded``: every sample of the phase is in a bin or in exactly one of these.
@@ -248,6 +251,10 @@ class ConductanceHistogram:
         Which resampling made the band; empty where none.
     scale : (bins,) float64
         density = counts * scale on average; used by fits to go from counts to density.
+    weak_traces : int
+        Bins that fewer traces reach are weak.
+    notes : tuple of str
+        What a reader should know of the bins (finer than the converter's steps, say).
     """
 
     grid: Grid
@@ -262,6 +269,7 @@ class ConductanceHistogram:
     scheme: str
     scale: Floats
     weak_traces: int = 20
+    notes: tuple[str, ...] = ()
 
     @property
     def edges_g0(self) -> Floats:
@@ -272,6 +280,13 @@ class ConductanceHistogram:
     def counts_per_trace(self) -> Floats:
         """(bins,) float64, counts divided by the number of traces."""
         return self.counts / max(self.traces, 1)
+
+    def plottable(self) -> PlottableHistogram:
+        """Return the density as a histogram in the plottable-histogram protocol (UHI); variances from the band."""
+        known = np.isfinite(self.density_high).all()
+        sigma = (self.density_high - self.density_low) / (2 * _NORMAL)
+        axis = PlottableAxis(self.edges_g0, "G / G0")
+        return PlottableHistogram((axis,), self.density, sigma**2 if known else None, self.counts.astype(float))
 
     def table(self) -> HistogramTable:
         """Return the columns of ``histogram.csv``."""
@@ -305,6 +320,24 @@ class HistogramTable(Table):
     traces_in_bin: Integers
     weak: npt.NDArray[np.bool_]
     resampling: npt.NDArray[np.str_]
+
+
+@dataclass(frozen=True)
+class Ridge:
+    """Median conductance against displacement, with the range of the middle 68.27 %.
+
+    Attributes
+    ----------
+    drive : (columns,) float64
+        Middle of each column.
+    median_g0, low_g0, high_g0 : (columns,) float64
+        NaN where a column has too few counts.
+    """
+
+    drive: Floats
+    median_g0: Floats
+    low_g0: Floats
+    high_g0: Floats
 
 
 @dataclass(frozen=True)
@@ -345,6 +378,35 @@ class DisplacementHistogram:
             raise ValueError("a sum of no histograms")
         return head.with_counts(counts, traces, lost)
 
+    def profile(self, column: int) -> Floats:
+        """Return the distribution of conductance in one column, (bins,) per decade (or G0); NaN where it is empty."""
+        total = self.counts[column].sum()
+        with np.errstate(invalid="ignore"):
+            result: Floats = (
+                self.counts[column] / (total * self.grid.widths) if total else np.full(self.grid.bins, np.nan)
+            )
+        return result
+
+    def ridge(self, least_counts: int = 20) -> Ridge:
+        """Return the median conductance of every column with the range that holds the middle 68.27 %.
+
+        Interpolated within bins on the axis as drawn; NaN for columns of fewer than ``least_counts`` counts.
+        """
+        total = self.counts.sum(1)
+        below = np.concatenate([np.zeros((len(total), 1)), np.cumsum(self.counts, 1)], 1)
+        found = np.full((3, len(total)), np.nan)
+        for column in np.flatnonzero(total >= max(least_counts, 1)):
+            shares = total[column] * np.array([0.1586552539, 0.5, 0.8413447461])
+            rising = np.concatenate([[True], np.diff(below[column]) > 0])
+            found[:, column] = np.interp(shares, below[column][rising], self.grid.u_edges[rising])
+        values = 10**found if self.grid.axis == "logarithmic" else found
+        return Ridge((self.drive_edges[1:] + self.drive_edges[:-1]) / 2, values[1], values[0], values[2])
+
+    def plottable(self) -> PlottableHistogram:
+        """Return the density as a histogram in the plottable-histogram protocol (UHI)."""
+        axes = (PlottableAxis(self.drive_edges, self.drive_unit), PlottableAxis(self.grid.edges_g0, "G / G0"))
+        return PlottableHistogram(axes, self.density, None, self.counts.astype(float))
+
     def with_counts(self, counts: Integers, traces: int, not_aligned: int) -> DisplacementHistogram:
         """Return a histogram on the same axes with other counts."""
         area = np.diff(self.drive_edges)[:, None] * self.grid.widths
@@ -365,9 +427,26 @@ class CorrelationHistogram:
     threshold : float
         Absolute correlation that the largest chance value exceeds with probability 0.05 (permutation, maximum
         statistic); NaN where not computed.
+    weak : (bins,) bool
+        Bins that fewer than 20 traces reach: they take no part in the threshold and are never significant.
+    permutations : int
+    block_traces : int
+        Traces within which counts were permuted.
     """
 
     grid: Grid
     correlation: Floats
     traces: int
     threshold: float
+    weak: npt.NDArray[np.bool_] = field(default_factory=lambda: np.zeros(0, bool))
+    permutations: int = 0
+    block_traces: int = 0
+
+    @property
+    def significant(self) -> npt.NDArray[np.bool_]:
+        """(bins, bins) where the correlation of two different bins exceeds what chance makes anywhere in the map."""
+        strong = np.abs(np.nan_to_num(self.correlation)) > self.threshold
+        if len(self.weak):
+            strong &= ~(self.weak | self.weak[:, None])
+        np.fill_diagonal(strong, False)
+        return strong

@@ -65,6 +65,12 @@ class HistogramSettings(Section):
     )
     weak_traces: int = setting(20, "Weak below", "Bins reached by fewer traces are shown as weak.", unit="traces", ge=0)
 
+    plateaus_by_length: bool = setting(
+        False,
+        "Plateaus by length",
+        "Plateau histogram: every plateau weighs its length instead of one vote.",
+    )
+
     @property
     def stored_bins_per_decade(self) -> int:
         """Bins per decade of the count matrix: the multiple of ``bins_per_decade`` nearest above 200 or 200 itself.
