@@ -1,5 +1,7 @@
 """Small traces, studies and recordings for the tests of the study file."""
 
+from itertools import pairwise
+
 import h5py
 import numpy as np
 
@@ -25,7 +27,7 @@ def rich_traces(count=40, seed=2):
     samples = int(offsets[-1])
     conductance = rng.lognormal(-3, 2, samples).astype(np.float32)
     conductance[rng.integers(0, samples, 50)] = np.nan
-    base = TraceSet.from_arrays([conductance[a:b] for a, b in zip(offsets, offsets[1:], strict=False)], step_nm=0.01)
+    base = TraceSet.from_arrays([conductance[a:b] for a, b in pairwise(offsets)], step_nm=0.01)
     return TraceSet(
         offsets=offsets,
         channels={"conductance": Channel.of(conductance, "G0"), "force": Channel.of(rng.random(samples), "nN")},
@@ -86,7 +88,7 @@ def assert_same_traces(first, second):
 
 
 def write_recording(path, seed=1, traces=4, samples=600, gain=1e6):
-    """Write a recording as a laboratory might: amplifier volts as integers, one row a trace, constants as attributes."""
+    """Write amplifier volts as integers, one row a trace, with the constants of the laboratory as attributes."""
     rng = np.random.default_rng(seed)
     conductance = 10 ** (0.8 - np.linspace(0, 4, samples)) * (1 + 0.02 * rng.standard_normal((traces, samples)))
     volts = conductance * 7.748091729e-5 * 0.1 * gain

@@ -207,7 +207,7 @@ def test_a_journal_cut_anywhere_gives_what_was_whole(tmp_path):
             assert study.recovered[-1].text == "rejected by hand: after"
 
 
-@settings(deadline=None, max_examples=60, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@settings(deadline=None, max_examples=25, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(st.data())
 def test_a_flipped_bit_in_the_journal_never_passes_silently(tmp_path, data):
     _some_unsaved(tmp_path / "s.h5")

@@ -210,5 +210,7 @@ class Notebook:
             self._journal.set_aside()
             if replayed:
                 self._journal.append(replayed)
+        elif not replayed:
+            self._journal.clear()
         elif path.stat().st_size != whole_byte:
             self._journal.cut(whole_byte)

@@ -185,22 +185,33 @@ class PagedFile:
         Raises
         ------
         StudyError
-            Where there is no room; the file is then as it was.
+            Where there is no room; the file is then as it was.  Where the log is durable but could not be applied: the
+            changes have happened, and the next opening applies it.
         """
         self.check()
+        log: Log | None = None
         try:
             self._file.truncate(max(self._size, self._committed))
             os.fsync(self._file.fileno())
             if self._pages:
                 log = self._log()
                 self._write_log(log)
-                self._apply(log)
         except OSError as error:
             self.fault = error
             self.abandon()
             self.check()
-        self._committed = self._size
+        self._committed = self._size  # from here on nothing may be taken back
         self._pages.clear()
+        try:
+            if log is not None:
+                self._apply(log)
+        except OSError as error:
+            self._discarding = True
+            raise StudyError(
+                f"the changes are kept, but not yet in place ({error.strerror})",
+                str(self.path),
+                "open the study again to finish",
+            ) from error
 
     def abandon(self) -> None:
         """Forget all changes since the last commit; what HDF5 still writes on closing goes nowhere."""
