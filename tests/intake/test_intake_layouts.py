@@ -151,7 +151,8 @@ def hdf5_group_a_trace(folder: Path) -> Path:
     with h5py.File(folder / "groups.h5", "w") as file:
         for trace in range(TRACES):
             group = file.create_group(f"run/junction {trace + 1}")
-            group.create_dataset("log10(G/G0)", data=np.log10(np.maximum(G[trace], 1e-30).astype(float)))
+            logs = np.log10(np.maximum(G[trace], 1e-30).astype(float))
+            group.create_dataset("log10_conductance", data=logs).attrs["unit"] = "log10(G/G0)"
             group.create_dataset("distance (pm)", data=Z * 1000)
     return folder / "groups.h5"
 

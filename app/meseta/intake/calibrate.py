@@ -286,6 +286,9 @@ class _Finder:
         self, kind: str, channel: RawChannel, needs: Sequence[str], second: RawChannel | None = None
     ) -> Calibration:
         """Return the calibration with all constants found, or raise for those that are missing."""
+        for one in (channel, second):
+            if one is not None and one.unit:
+                parse_unit(one.unit, f"{self._recording.source.name}, '{one.name}'")
         bias_channel = None if self._settings.bias_volt is not None else self._recording.channel("bias")
         constants, missing = {}, []
         for name in needs:

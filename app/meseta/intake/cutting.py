@@ -19,6 +19,7 @@ from meseta.traces import PHASE_KINDS
 __all__ = ["Cut", "cut"]
 
 SHORTEST_RAMP: Final = 10
+EDGE_SAMPLES: Final = 3
 EDGE_FRACTION: Final = 0.8
 """A ramp at the edge of the record that is shorter than this share of the usual one was cut off by it."""
 PULL, HOLD, PUSH, SWEEP = (PHASE_KINDS.index(kind) for kind in ("pull", "hold", "push", "sweep"))
@@ -179,9 +180,9 @@ def _incomplete(ramps: Ramps, ramp: int, usual: float, smallest: float, samples:
         return "the ramp is much smaller than the usual one"
     if ramps.end[ramp] - ramps.begin[ramp] < SHORTEST_RAMP:
         return "the drive jumps back within a few samples"
-    if ramps.begin[ramp] <= 1 and size < EDGE_FRACTION * usual:
+    if ramps.begin[ramp] <= EDGE_SAMPLES and size < EDGE_FRACTION * usual:
         return "the record begins within the ramp"
-    if ramps.end[ramp] >= samples - 1 and size < EDGE_FRACTION * usual:
+    if ramps.end[ramp] >= samples - EDGE_SAMPLES and size < EDGE_FRACTION * usual:
         return "the record ends within the ramp"
     return ""
 

@@ -8,7 +8,6 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Final
 
-from meseta.errors import InputError
 from meseta.intake.recording import RawChannel
 from meseta.intake.units import is_unit, parse_unit
 from meseta.recipe.intake import ROLES, ChannelRole
@@ -21,6 +20,9 @@ _DIMENSION: Final = {
     "conductance": "S", "log_conductance": "dec", "current": "A", "voltage": "V", "amplifier": "V",
     "amplifier_high_gain": "V", "resistance": "ohm", "displacement": "m", "piezo": "V", "time": "s", "bias": "V",
 }  # fmt: skip
+_REMARKS: Final = frozenset(
+    {"raw", "smoothed", "filtered", "measured", "calculated", "abs", "mean", "corrected", "t", "x"}
+)
 _NUMBERS: Final = ("trace_number", "phase", "range_code")
 _ROLE_OF_DIMENSION: Final = {
     "S": "conductance", "dec": "log_conductance", "A": "current", "V": "voltage", "ohm": "resistance",
@@ -161,12 +163,10 @@ def guess_role(name: str, unit: str = "", role: str = "", unit_ground: str = "at
     if found in _DIMENSION and in_name:
         in_name = split_unit(name, _DIMENSION[found])[1]
     stated, ground = (unit, unit_ground) if unit.strip() else (in_name, "name")
+    if not stated and found in _DIMENSION:
+        stated, ground = _unknown_unit(name), "name"
     if stated and not is_unit(stated):
-        if not found:
-            return Guess("other", stated, ground, 0.5)
-        raise InputError(
-            f"'{stated}' is not a known unit", f"channel '{name}'", "give role and unit under intake.channels"
-        )
+        return Guess(found or "other", stated, ground, 0.5, (f"'{stated}' is not a known unit",))
     if not stated:
         return Guess(found or "other", "", "name" if found else "", 0.6 if found else 0.0)
     dimension = parse_unit(stated).dimension
@@ -176,6 +176,12 @@ def guess_role(name: str, unit: str = "", role: str = "", unit_ground: str = "at
     if found in _NUMBERS and by_unit != "other":
         return Guess(by_unit, stated, ground, 0.8)
     return _fitted(found, stated, dimension, by_unit, "attribute" if role else ground)
+
+
+def _unknown_unit(name: str) -> str:
+    """Return what stands in brackets where a unit should: one word that is no remark."""
+    match = re.fullmatch(r".*?[\[(]\s*([^\s\])]{1,12})\s*[\])]\s*", name)
+    return match[1] if match and match[1].lower() not in _REMARKS and not match[1].isdigit() else ""
 
 
 def _fitted(role: str, unit: str, dimension: str, by_unit: str, ground: str) -> Guess:

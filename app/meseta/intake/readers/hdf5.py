@@ -117,10 +117,7 @@ def _weight(sheets: Sequence[Sheet]) -> tuple[int, int]:
 
 def _says_something(channel: tuple[Any, ...]) -> bool:
     name, samples, dtype, attributes, _, context = channel
-    try:
-        return make_channel(name, samples, dtype, attributes, context=context).role != "other"
-    except InputError:
-        return True
+    return make_channel(name, samples, dtype, attributes, context=context).role != "other"
 
 
 def _numbered(numbered: Mapping[str, Sheet], by_parent: Mapping[str, Sequence[Leaf]]) -> tuple[Sheet | None, list[str]]:

@@ -18,7 +18,7 @@ from meseta.intake.readers.hdf5_tree import (
     RowSamples,
     VectorSamples,
 )
-from meseta.intake.roles import DRIVE_ROLES, guess_role, stem_of
+from meseta.intake.roles import DRIVE_ROLES, SIGNAL_ROLES, guess_role, stem_of
 from meseta.traces import Samples
 
 __all__ = ["Leaf", "Sheet", "leaves_of", "numbered_sheet", "sheet_of"]
@@ -134,22 +134,27 @@ def numbered_sheet(parent: str, leaves: Sequence[Leaf]) -> Sheet | None:
     sets: dict[str, dict[str, Leaf]] = {}
     for leaf in leaves:
         if leaf.is_vector and leaf.length > 1:
-            sets.setdefault(stem_of(leaf.name), {})[leaf.name.rsplit(".", 1)[0]] = leaf
+            stem = "" if leaf.name.isdigit() else stem_of(leaf.name)
+            sets.setdefault(stem, {})[leaf.name] = leaf
     chosen = {stem: found for stem, found in sets.items() if _are_traces(stem, found)}
     if not chosen:
         return None
     context = parent.rpartition("/")[2]
-    columns = {
-        (context if stem.isdigit() or not stem else stem): [found[name] for name in natsorted(found)]
-        for stem, found in chosen.items()
-    }
+    columns = {_best_name(stem, context): [found[name] for name in natsorted(found)] for stem, found in chosen.items()}
     return joined_leaves("one dataset a trace", columns, context)
+
+
+def _best_name(stem: str, context: str) -> str:
+    """Return what says more of numbered datasets: their own name, or that of the group they lie in."""
+    if not stem or (guess_role(context).role in SIGNAL_ROLES and guess_role(stem).role not in SIGNAL_ROLES):
+        return context
+    return stem
 
 
 def _are_traces(stem: str, found: Mapping[str, Leaf]) -> bool:
     if len(found) < 2 or stem in _CHANNEL_STEMS:
         return False
-    if stem.isdigit():
+    if not stem:
         return True
     numbers = [name for name in found if name[-1:].isdigit() or name.endswith(")")]
     exact = {guess_role(name).role for name in found}

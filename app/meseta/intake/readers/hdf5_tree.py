@@ -19,7 +19,7 @@ from meseta.errors import InputError
 
 __all__ = ["ColumnSamples", "Node", "PartSamples", "RowSamples", "Tree", "VectorSamples", "open_file", "walk"]
 
-BOMB_RATIO: Final = 2000
+BOMB_RATIO: Final = 500
 BOMB_BYTE: Final = 64 << 20
 CACHED_BYTE: Final = 256 << 20
 

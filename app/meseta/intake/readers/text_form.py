@@ -179,10 +179,7 @@ def _is_heading(row: Sequence[str], text: str) -> bool:
     """Return whether a comment line is the heading of the columns and not a remark."""
     if _ENTRY.match(text.strip()) and len(row) == 1 and guess_role(row[0].split(":")[0]).role == "other":
         return False
-    try:
-        return any(guess_role(cell).role != "other" for cell in row) or len(row) > 1
-    except Exception:  # noqa: BLE001  a remark may hold anything, also a word that looks like a bad unit
-        return False
+    return any(guess_role(cell).role != "other" for cell in row) or len(row) > 1
 
 
 def _entries(before: Sequence[str], heading: str, delimiter: str) -> tuple[tuple[str, str], ...]:

@@ -1,0 +1,231 @@
+"""Bad files: one clear error with file and place; good files of a batch are taken in; nothing outside is opened."""
+
+from __future__ import annotations
+
+import gzip
+import io
+import os
+import pickle
+import tracemalloc
+import zipfile
+from pathlib import Path
+
+import h5py
+import nptdms
+import numpy as np
+import pytest
+import scipy.io
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
+
+from meseta import intake
+from meseta.errors import InputError, MesetaError
+from meseta.recipe import Recipe
+
+GOOD = "displacement_nm,conductance_G0\n" + "".join(f"{0.01 * n:.2f},{2.0 / (n + 1):.6g}\n" for n in range(60))
+
+
+def error_of(path, recipe: Recipe | None = None) -> InputError:
+    with pytest.raises(InputError) as raised:
+        intake.read(path, recipe)
+    assert raised.value.exit_code == 2
+    assert "\n" not in str(raised.value)
+    return raised.value
+
+
+def written(folder: Path, name: str, content: str | bytes) -> Path:
+    path = folder / name
+    path.write_bytes(content.encode() if isinstance(content, str) else content)
+    return path
+
+
+@pytest.mark.parametrize(
+    ("name", "content", "word"),
+    [
+        ("a.csv", "", "empty"),
+        ("a.csv", "\n\n  \n", "no rows of numbers"),
+        ("a.csv", "displacement_nm,conductance_G0\n", "no rows of numbers"),
+        ("a.h5", GOOD.replace("0", "x").replace("1", "y").replace("2", "z"), "not an HDF5 file"),
+        ("a.h5", b"\x89HDF\r\n\x1a\n" + b"\x00" * 100, "damaged"),
+        ("a.bin", bytes(range(256)) * 20, "binary"),
+        ("a.csv", GOOD + "0.61,abc\n", "'abc' is not a number"),
+        ("a.csv", GOOD + "0.61,1,2\n", "3 cells where 2"),
+        ("a.csv", GOOD[:200].encode() + b"\x00\x00" + GOOD[200:].encode(), "NUL"),
+        ("a.csv", "displacement_nm,something\n0,1\n1,2\n", "no channel"),
+        ("a.csv", "displacement (nm),conductance (parsec)\n0,1\n1,2\n", "parsec"),
+        ("a.npy", b"\x93NUMPY\x01\x00", "damaged"),
+        ("a.tdms", b"TDSm" + b"\xff" * 60, "no samples"),
+        ("a.mat", b"M" * 124 + b"\x00\x01IM" + b"\xff" * 64, "damaged"),
+        ("a.csv.gz", gzip.compress(GOOD.encode())[:-30], "damaged"),
+    ],
+)
+def test_each_fault_has_its_words(tmp_path, name, content, word):
+    error = error_of(written(tmp_path, name, content))
+    assert word in str(error)
+    assert name in error.where
+
+
+def test_a_bad_cell_is_named_with_its_line(tmp_path):
+    error = error_of(written(tmp_path, "a.csv", "# bias_mV: 100\n" + GOOD.replace("0.30,", "0.30,x")))
+    assert ", line 33" in error.where
+
+
+def test_missing_files_empty_folders_and_patterns(tmp_path):
+    written(tmp_path, "trace_1.csv", GOOD)
+    assert "trace_1.csv" in error_of(tmp_path / "trace_l.csv").remedy
+    assert "no file matches" in error_of(str(tmp_path / "*.h5")).what
+    (tmp_path / "empty").mkdir()
+    assert "no recordings" in error_of(tmp_path / "empty").what
+
+
+def test_good_files_of_a_batch_are_taken_in_and_bad_ones_listed(tmp_path):
+    for n in (1, 2, 10):
+        written(tmp_path, f"t {n} ä.csv", GOOD)
+    written(tmp_path, "t 3.csv", GOOD + "1,x\n")
+    written(tmp_path, "t 4.csv", b"\x00\x01")
+    written(tmp_path, "README.md", "1 2 3\n")
+    written(tmp_path, ".hidden.csv", GOOD)
+    traces = intake.read(tmp_path)
+    assert [source.name for source in traces.sources] == ["t 1 ä.csv", "t 2 ä.csv", "t 10 ä.csv"]
+    bad = traces.notes["bad_files"]
+    assert [Path(one["where"].split(",")[0]).name for one in bad] == ["t 3.csv", "t 4.csv"]
+    assert all(set(one) == {"what", "where", "remedy"} for one in bad)
+    assert traces.notes["passed_over"] == ["README.md"]
+    with pytest.raises(InputError):
+        intake.read(tmp_path, strict=True)
+
+
+def test_a_file_without_permission(tmp_path, monkeypatch):
+    path = written(tmp_path, "a.csv", GOOD)
+
+    def refuse(*_, **__):
+        raise PermissionError(13, "Permission denied", str(path))
+
+    monkeypatch.setattr(Path, "open", refuse)
+    assert "may not be read" in error_of(path).what
+
+
+def test_nothing_outside_the_file_is_opened(tmp_path):
+    secret = tmp_path / "other.h5"
+    with h5py.File(secret, "w") as file:
+        file["conductance_G0"] = np.linspace(2, 1, 50)
+    raw = tmp_path / "raw.bin"
+    np.linspace(2, 1, 50).tofile(raw)
+    with h5py.File(tmp_path / "linked.h5", "w") as file:
+        file["conductance_G0"] = h5py.ExternalLink(str(secret), "conductance_G0")
+    with h5py.File(tmp_path / "virtual.h5", "w") as file:
+        layout = h5py.VirtualLayout((50,), "f8")
+        layout[:] = h5py.VirtualSource(str(secret), "conductance_G0", (50,))
+        file.create_virtual_dataset("conductance_G0", layout)
+    with h5py.File(tmp_path / "stored.h5", "w") as file:
+        file.create_dataset("conductance_G0", (50,), "f8", external=[(str(raw), 0, 400)])
+    for name, word in (("linked.h5", "another file"), ("virtual.h5", "another file"), ("stored.h5", "another file")):
+        assert word in error_of(tmp_path / name).what
+
+
+def test_link_loops_and_soft_links_are_walked_once(tmp_path):
+    path = tmp_path / "loop.h5"
+    with h5py.File(path, "w") as file:
+        group = file.create_group("a")
+        group["conductance_G0"] = np.linspace(2, 1, 50)
+        group["again"] = file["/"]
+        group["soft"] = h5py.SoftLink("/a/conductance_G0")
+    assert intake.read(path).traces == 1
+
+
+def test_claims_beyond_the_file_and_bombs_are_refused(tmp_path):
+    path = tmp_path / "claims.h5"
+    with h5py.File(path, "w") as file:
+        file.create_dataset("conductance_G0", (10**10,), "f8")
+    assert "never written" in error_of(path).what
+    with h5py.File(path, "w") as file:
+        file.create_dataset("conductance_G0", data=np.zeros(20_000_000), chunks=(2_000_000,), compression=9)
+    assert "times its size" in error_of(path).what
+    bomb = written(tmp_path, "bomb.csv.gz", gzip.compress(b"conductance_G0\n" + b"1\n" * 60_000_000))
+    tracemalloc.start()
+    assert "unpacks to more than" in error_of(bomb).what
+    assert tracemalloc.get_traced_memory()[1] < 400 << 20
+    tracemalloc.stop()
+
+
+class Trap:
+    def __reduce__(self):
+        return (os.mkdir, ("should-never-exist",))
+
+
+def test_pickles_are_never_loaded(tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    np.save(tmp_path / "a.npy", np.array([Trap(), 1], object), allow_pickle=True)
+    assert "never read" in error_of(tmp_path / "a.npy").what
+    with zipfile.ZipFile(tmp_path / "b.npz", "w") as archive:
+        archive.writestr("conductance.npy", pickle.dumps(Trap()))
+    error_of(tmp_path / "b.npz")
+    assert not (tmp_path / "should-never-exist").exists()
+
+
+def test_odd_but_readable_traces_pass(tmp_path):
+    path = tmp_path / "odd.h5"
+    rows = {
+        "t1": [np.nan] * 8,
+        "t2": [1.0],
+        "t3": [np.inf, -np.inf, 1, 1, 1, 0.1, 0.1, 0.1, 0.1],
+        "t4": [0.5] * 9,
+        "t5": np.linspace(2, 1, 30),
+    }
+    with h5py.File(path, "w") as file:
+        for name, values in rows.items():
+            file.create_dataset(f"conductance_G0/{name}", data=np.asarray(values, float))
+    traces = intake.read(path)
+    assert traces.traces == 4  # a single value is no samples of a channel
+    assert traces.samples == 8 + 9 + 9 + 30
+
+
+def test_a_long_line_without_numbers_is_refused_quickly(tmp_path):
+    error_of(written(tmp_path, "line.csv", b"a" * 5_000_000))
+
+
+# -- mutation: every reader, bounded ----------------------------------------------------------------------------------
+
+
+def _originals() -> dict[str, bytes]:
+    values, drive = np.linspace(2, 1, 64).astype(np.float32), np.linspace(0, 1, 64)
+    found = {"a.csv": GOOD.encode()}
+    stream = io.BytesIO()
+    with h5py.File(stream, "w") as file:
+        file.create_dataset("conductance_G0", data=np.stack([values] * 4), chunks=(2, 64), compression="gzip")
+        file["displacement_nm"] = drive
+        file.attrs["bias_mV"] = 100.0
+    found["a.h5"] = stream.getvalue()
+    stream = io.BytesIO()
+    np.savez(stream, conductance_G0=np.stack([values] * 4), displacement_nm=drive)
+    found["a.npz"] = stream.getvalue()
+    for packed in (False, True):
+        stream = io.BytesIO()
+        scipy.io.savemat(stream, {"conductance_G0": values, "s": {"bias_mV": 100.0}}, do_compression=packed)
+        found[f"a{packed}.mat"] = stream.getvalue()
+    stream = io.BytesIO()
+    with nptdms.TdmsWriter(stream) as writer:
+        writer.write_segment([nptdms.ChannelObject("g", "conductance_G0", values, {"unit_string": "G0"})])
+    found["a.tdms"] = stream.getvalue()
+    found["a.csv.gz"] = gzip.compress(GOOD.encode())
+    return found
+
+
+ORIGINALS = _originals()
+
+
+@pytest.mark.parametrize("name", sorted(ORIGINALS))
+@settings(deadline=None, max_examples=40, suppress_health_check=[HealthCheck.function_scoped_fixture], derandomize=True)
+@given(data=st.data())
+def test_mutants_are_read_or_refused_but_nothing_else(tmp_path, name, data):
+    """Any change of bytes gives traces or one of our errors; never a crash, never a foreign error."""
+    content = bytearray(ORIGINALS[name])
+    for _ in range(data.draw(st.integers(1, 6))):
+        place = data.draw(st.integers(0, len(content) - 1))
+        content[place] = data.draw(st.sampled_from([0, 1, 10, 32, 44, 127, 128, 255]))
+    cut = data.draw(st.one_of(st.none(), st.integers(1, len(content))))
+    path = written(tmp_path, name, bytes(content[:cut]))
+    try:
+        assert intake.read(path).traces > 0
+    except MesetaError as error:
+        assert str(error)
