@@ -14,6 +14,9 @@ __all__ = ["merge_moments", "partition", "partition_lines"]
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
 
+NOISIEST = 4.0
+"""A stretch may be this much noisier (in variance) than the recording is on average at its conductance."""
+
 
 @kernel
 def partition(values: Floats, weights: Floats, penalty: float, minimum: int) -> tuple[Integers, float]:
@@ -139,7 +142,7 @@ def _ends(came_from: Integers) -> Integers:
 
 @kernel
 def _line_cost(moments: Floats, share: float) -> float:
-    """Return minus twice the log-likelihood of a line with free variance, never below the model's variance.
+    """Return minus twice the log-likelihood of a line whose variance may exceed the model's up to ``NOISIEST`` times.
 
     ``moments``: weight, mean x, mean y, Sxx, Sxy, Syy.  ``share`` is the variance of a single sample under the model,
     in units of the long-run variance, and so the number of independent samples that one sample is worth.
@@ -150,7 +153,8 @@ def _line_cost(moments: Floats, share: float) -> float:
     expected = share * moments[0]
     if rest <= expected or expected <= 0.0:
         return max(rest, 0.0)
-    return expected * (1.0 + math.log(rest / expected))
+    excess = min(rest / expected, NOISIEST)
+    return expected * math.log(excess) + rest / excess
 
 
 @kernel

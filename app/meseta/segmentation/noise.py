@@ -41,7 +41,7 @@ class NoiseStatistics:
     Attributes
     ----------
     spread_place, spread_count : four (k,) int64 arrays each
-        Occupied cells of the (level, spread) grids: white, sample, block means of 4 and of 16.
+        Occupied cells of the (level, spread) grids: white, sample, block means of 4 and of 8.
     rows : (traces, 7) float64
         Floor mean, floor sigma, floor samples, converter step, highest reading, its repeats, fall time of each trace.
     slope_level : (m,) int64

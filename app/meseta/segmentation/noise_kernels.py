@@ -262,7 +262,7 @@ def gather(
     backward : bool
         True where time runs from open to closed.
     grids : (4, LEVEL_BINS, SPREAD_BINS) int64
-        Added to: second differences, spread about a line, block means over 4 and 16 samples.
+        Added to: second differences, spread about a line, block means over 4 and 8 samples.
     rows : (traces, 7) float64
         Filled: floor mean, floor sigma, floor samples, converter step, highest reading, its repeats, fall time.
     last : (traces, CROSSING_LEVELS) int64
@@ -278,7 +278,7 @@ def gather(
             g = g[::-1].copy()
         _window_spreads(g, grids[0], grids[1])
         _block_spread(g, 4, grids[2])
-        _block_spread(g, 16, grids[3])
+        _block_spread(g, 8, grids[3])
         mean, sigma, count, step = _floor_of(g)
         high, repeats = _top_of(g)
         rows[t, 0], rows[t, 1], rows[t, 2], rows[t, 3] = mean, sigma, count, step

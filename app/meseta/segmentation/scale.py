@@ -28,5 +28,5 @@ def scale_of(noise: NoiseModel, points: int = 1024) -> Scale:
     g = np.sinh(at) * sigma
     slope = np.sqrt(g**2 + sigma**2) / noise.long_run(g)
     table = np.concatenate([[0.0], np.cumsum(0.5 * (slope[1:] + slope[:-1]) * pitch)])
-    shares = (noise.sigma(g) / noise.long_run(g)) ** 2
+    shares = np.minimum((noise.sigma(g) / noise.long_run(g)) ** 2 + 0.1, 1.0)
     return Scale(noise.floor_g0, sigma, float(noise.long_run_g0[0]), float(pitch), table, shares)
