@@ -1,126 +1,23 @@
-"""Made-up results with the shape of real ones: a metal on a linear axis, a molecule on a logarithmic one."""
+"""Made-up results: a metal on a linear axis, a molecule on a logarithmic one, and a small simulated recording."""
 
 from __future__ import annotations
 
-from dataclasses import fields
-
 import numpy as np
 import pytest
+from figure_fakes import bell, make_displacement, make_fit, make_grid, make_histogram
 
-from meseta.histograms import ConductanceHistogram, DisplacementHistogram, Grid
-from meseta.peaks import PeakFit, PeakTable
-
-
-def _bell(u, centre, sigma):
-    return np.exp(-0.5 * ((u - centre) / sigma) ** 2) / (sigma * np.sqrt(2 * np.pi))
-
-
-def _grid(axis, low, high, width):
-    u = np.arange(round((high - low) / width) + 1) * width + low
-    return Grid(10**u if axis == "logarithmic" else u, axis)
-
-
-def make_histogram(grid, density, traces, unit, rng):
-    scale = np.full(grid.bins, 0.0005)
-    counts = rng.poisson(np.maximum(density / scale, 0)).astype(np.int64)
-    seen = counts * scale
-    error = np.sqrt(np.maximum(counts, 1)) * 2.5 * scale
-    return ConductanceHistogram(
-        grid=grid,
-        counts=counts,
-        traces=traces,
-        traces_in_bin=np.minimum(counts, traces),
-        density=seen,
-        density_low=np.maximum(seen - 2 * error, 0),
-        density_high=seen + 2 * error,
-        density_unit=unit,
-        excluded={"under": 12, "over": 40, "non_positive": 3, "saturated": 0, "untrusted": 0, "nan": 0, "outside": 7},
-        scheme="moving blocks of 12 traces",
-        scale=scale,
-    )
-
-
-def make_table(grid, positions, sigmas, areas, names=None, status=None, relative=0.01):
-    rows = len(positions)
-    position = np.asarray(positions, float)
-    low, high = position * (1 - relative), position * (1 + relative)
-    text = lambda value: np.full(rows, value)  # noqa: E731
-    known = dict(
-        peak=np.array(names or [str(row + 1) for row in range(rows)], np.str_),
-        axis=text(grid.axis),
-        shape=text("gaussian"),
-        background=text("linear"),
-        fit_low_g0=np.full(rows, grid.edges_g0[0]),
-        fit_high_g0=np.full(rows, grid.edges_g0[-1]),
-        traces=np.full(rows, 1388),
-        position_g0=position,
-        position_low_g0=low,
-        position_high_g0=high,
-        position_systematic_g0=position * 0.004,
-        position_siemens=position * 7.748091729863649e-05,
-        position_ohm=1 / np.maximum(position, 1e-300) / 7.748091729863649e-05,
-        fwhm=np.asarray(sigmas, float) * 2.3548,
-        fwhm_low=np.asarray(sigmas, float) * 2.2,
-        fwhm_high=np.asarray(sigmas, float) * 2.5,
-        area_per_trace=np.asarray(areas, float),
-        area_low=np.asarray(areas, float) * 0.9,
-        area_high=np.asarray(areas, float) * 1.1,
-        height=np.asarray(areas, float) / (np.asarray(sigmas, float) * np.sqrt(2 * np.pi)),
-        status=np.array(status or ["ok"] * rows, np.str_),
-        resampling=text("moving blocks of 12 traces"),
-        area_unit=text("nm / trace"),
-        height_unit=text("nm / trace / decade"),
-        mode_g0=position * 1.01,
-        plateau_median_g0=position * 0.99,
-        plateaus=np.full(rows, 420),
-    )
-    for field in fields(PeakTable):
-        blank = np.full(rows, "") if "Texts" in str(field.type) else np.full(rows, np.nan)
-        known.setdefault(field.name, blank)
-    return PeakTable(**known)
-
-
-def make_fit(histogram, positions, sigmas, areas, fit_low, fit_high, background, **table):
-    u_edges = histogram.grid.u_edges
-    log = histogram.grid.axis == "logarithmic"
-    inside = np.flatnonzero((u_edges[:-1] >= fit_low - 1e-9) & (u_edges[1:] <= fit_high + 1e-9))
-    grid = Grid(histogram.grid.edges_g0[inside[0] : inside[-1] + 2], histogram.grid.axis)
-    centre = (grid.u_edges[1:] + grid.u_edges[:-1]) / 2
-    places = np.log10(positions) if log else np.asarray(positions, float)
-    components = np.array([a * _bell(centre, p, s) for p, s, a in zip(places, sigmas, areas, strict=True)])
-    smooth = background(centre)
-    return PeakFit(
-        table=make_table(grid, positions, sigmas, areas, **table),
-        grid=grid,
-        model=components.sum(axis=0) + smooth,
-        background=smooth,
-        components=components,
-        observed=histogram.density[inside],
-        systematic=(
-            ("bin width x 2", np.asarray(positions) * 0.002),
-            ("fit range - 10 %", np.asarray(positions) * -0.004),
-        ),
-        goodness=3.2,
-    )
-
-
-def make_displacement(grid, low, high, columns, density_at, rng, traces=1380):
-    edges = np.linspace(low, high, columns + 1)
-    z = (edges[1:] + edges[:-1]) / 2
-    u = (grid.u_edges[1:] + grid.u_edges[:-1]) / 2
-    counts = rng.poisson(np.maximum(density_at(z[:, None], u[None, :]), 0)).astype(np.int64)
-    width = np.diff(edges)[:, None] * grid.widths[None, :]
-    unit = "counts / trace / nm / decade" if grid.axis == "logarithmic" else "counts / trace / nm / G0"
-    return DisplacementHistogram(grid, edges, "nm", counts, traces, 8, counts / (traces * width), unit)
+from meseta.analysis import Analysis
+from meseta.recipe import Recipe
+from meseta.simulate import SimulationSettings, simulate
 
 
 @pytest.fixture
 def molecule():
     """Histogram, 2D histogram and fit of a molecule whose floor dwarfs its peak."""
     rng = np.random.default_rng(3)
-    grid = _grid("logarithmic", -7, 0, 0.02)
+    grid = make_grid("logarithmic", -7, 0, 0.02)
     u = (grid.u_edges[1:] + grid.u_edges[:-1]) / 2
-    density = 0.25 * _bell(u, -3.4, 0.25) + 0.02 * np.exp(-0.5 * (u + 3.5)) + 3 * _bell(u, -6.2, 0.2)
+    density = 0.25 * bell(u, -3.4, 0.25) + 0.02 * np.exp(-0.5 * (u + 3.5)) + 3 * bell(u, -6.2, 0.2)
     histogram = make_histogram(grid, density, 1388, "nm / trace / decade", rng)
     fit = make_fit(
         histogram, [4.0e-4], [0.25], [0.25], -5.0, -2.0, lambda c: 0.02 * np.exp(-0.5 * (c + 3.5)), relative=0.05
@@ -144,9 +41,9 @@ def molecule():
 def metal():
     """Histogram, 2D histogram and fit of three peaks of a metal."""
     rng = np.random.default_rng(4)
-    grid = _grid("linear", 0.0, 5.0, 0.01)
+    grid = make_grid("linear", 0.0, 5.0, 0.01)
     u = (grid.u_edges[1:] + grid.u_edges[:-1]) / 2
-    density = 0.25 * _bell(u, 0.97, 0.07) + 0.18 * _bell(u, 1.85, 0.16) + 0.14 * _bell(u, 2.75, 0.22) + 0.08 * (u > 0.2)
+    density = 0.25 * bell(u, 0.97, 0.07) + 0.18 * bell(u, 1.85, 0.16) + 0.14 * bell(u, 2.75, 0.22) + 0.08 * (u > 0.2)
     histogram = make_histogram(grid, density, 9812, "nm / trace / G0", rng)
     fit = make_fit(
         histogram, [0.97, 1.85, 2.75], [0.07, 0.16, 0.22], [0.25, 0.18, 0.14], 0.5, 3.5, lambda c: np.full_like(c, 0.08)
@@ -166,3 +63,11 @@ def metal():
         rng,
     )
     return histogram, plane, fit
+
+
+@pytest.fixture(scope="session")
+def analysis():
+    """A small simulated recording of molecular junctions, worked through."""
+    traces = simulate("molecule", 80, 5, SimulationSettings(samples=1200)).traces
+    recipe = Recipe.preset("molecule").with_values("resampling", replicates=60)
+    return Analysis(traces, recipe.with_values("correlation", permutations=20))

@@ -117,8 +117,7 @@ def _draw_correlation(
     axes: Axes, bar: Axes, correlation: CorrelationHistogram, scale: ConductanceScale, end: float
 ) -> None:
     end = max(end, 1.2 * correlation.threshold if np.isfinite(correlation.threshold) else 0.0, 1e-6)
-    map_ = ListedColormap(colours.diverging(), name="meseta-diverging")
-    map_.set_bad(colours.LIGHT.ground)
+    map_ = ListedColormap(colours.diverging(), name="meseta-diverging").with_extremes(bad=colours.LIGHT.ground)
     edges = correlation.grid.u_edges
     image = axes.imshow(
         np.ma.masked_invalid(correlation.correlation),

@@ -23,9 +23,7 @@ _TOP_SHARE = 99.9
 
 def colour_map(name: str) -> ListedColormap:
     """Return the named ramp; masked cells are the paper."""
-    map_ = ListedColormap(colours.ramp(name), name=f"meseta-{name}")
-    map_.set_bad(colours.LIGHT.panel)
-    return map_
+    return ListedColormap(colours.ramp(name), name=f"meseta-{name}").with_extremes(bad=colours.LIGHT.panel)
 
 
 def colour_norm(filled: npt.NDArray[np.float64], scale: str) -> Normalize:

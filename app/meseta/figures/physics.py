@@ -23,6 +23,7 @@ __all__ = ["analyses_figure", "decay_figure"]
 Floats = npt.NDArray[np.float64]
 _SINGLE_COLUMN_MM: Final = 88.0
 _BAND: Final = "#f3ddd1"
+_NAME: Final = colours.LIGHT.quiet
 
 
 def decay_figure(decay: Decay, settings: FigureSettings) -> Figure:
@@ -60,8 +61,10 @@ def decay_figure(decay: Decay, settings: FigureSettings) -> Figure:
 def _decay_words(decay: Decay) -> str:
     unit = decay.points.length_unit
     beta = typeset.value_with_uncertainty(decay.beta, decay.beta_low, decay.beta_high)
-    contact = typeset.value_with_uncertainty(decay.contact_g0, decay.contact_low_g0, decay.contact_high_g0, "G0")
-    return f"β = {beta} per {unit or 'unit of length'}\nat zero length {contact}\n95 % in brackets"
+    low, high = decay.contact_low_g0, decay.contact_high_g0
+    contact = typeset.conductance(decay.contact_g0, 2)
+    interval = f"\n(95 %: {typeset.interval(low, high, 'G0', 2)})" if np.isfinite(low) and np.isfinite(high) else ""
+    return f"β = {beta} per {unit or 'unit of length'}\nat zero length {contact}{interval}"
 
 
 def _points(axes: Axes, length: Floats, conductance: Floats, error_x: Floats, error_g0: Floats) -> None:
@@ -79,11 +82,12 @@ def _points(axes: Axes, length: Floats, conductance: Floats, error_x: Floats, er
 
 
 def _names(axes: Axes, length: Floats, conductance: Floats, labels: Sequence[str] | npt.NDArray[np.str_]) -> None:
+    late = float(length.min()) + 0.75 * float(np.ptp(length))
     for x, value, name in zip(length, conductance, labels, strict=True):
+        side = "right" if x > late else "left"
+        shift = (-4, -9) if x > late else (4, 3)
         if str(name):
-            axes.annotate(
-                str(name), (x, np.log10(value)), (4, 3), textcoords="offset points", color=colours.LIGHT.quiet
-            )
+            axes.annotate(str(name), (x, np.log10(value)), shift, textcoords="offset points", ha=side, color=_NAME)
 
 
 def analyses_figure(

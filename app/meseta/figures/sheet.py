@@ -88,7 +88,7 @@ def _page(
 ) -> Figure:
     width, point = settings.width_mm, settings.text_point
     figure = new_figure(settings, _PAGE_MM)
-    left, bottom, top, gap = 1.6 * point, 1.7 * point, 0.7 * point, 0.45 * point
+    left, bottom, top, gap = 2.1 * point, 1.7 * point, 0.7 * point, 0.45 * point
     wide = (width - left - 0.4 * point - (_COLUMNS - 1) * gap) / _COLUMNS
     high = (_PAGE_MM - bottom - top - (_ROWS - 1) * 1.2 * point) / _ROWS
     for number, row in enumerate(rows):
