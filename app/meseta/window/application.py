@@ -85,7 +85,7 @@ def open_window(paths: list[str], recipe: Recipe | None = None) -> int:
     prepare(window)
     window.commands.offer_recovery()
     if paths:
-        QTimer.singleShot(0, window, lambda: window.commands.open_paths(paths, recipe))
+        QTimer.singleShot(0, window, lambda: window.commands.check_paths(paths, recipe))
     return int(application.exec())
 
 

@@ -102,12 +102,20 @@ class Centre(QStackedWidget):
     def __init__(self) -> None:
         super().__init__()
         self.first, self.spine = FirstPage(), Spine()
+        self.check: QWidget | None = None
         self.addWidget(self.first)
         self.addWidget(self.spine)
 
     def show_first(self) -> None:
         """Show what to do first."""
         self.setCurrentWidget(self.first)
+
+    def show_check(self, check: QWidget) -> None:
+        """Show the file check."""
+        if self.check is None:
+            self.check = check
+            self.addWidget(check)
+        self.setCurrentWidget(check)
 
     def show_spine(self) -> None:
         """Show the plots."""

@@ -17,6 +17,7 @@ from meseta.errors import InputError, MesetaError
 from meseta.recipe import Recipe
 from meseta.resources import sample
 from meseta.selection import Decisions, Event
+from meseta.window.filecheck import FileCheck
 from meseta.window.finder import ActionFinder, keys_page
 from meseta.window.groups import with_new_group
 from meseta.window.jobs import Channel
@@ -32,6 +33,12 @@ OPEN = Channel("open")
 SAVE = Channel("save")
 EXPORT = Channel("export")
 
+SAMPLES = {
+    "night_raw.h5": "A night in V-17: one continuous recording of 520 openings",
+    "evening_blank_raw.h5": "The evening before: the bare solvent, no molecule",
+    "bench_check": "A check of the bench: 20 openings of the metal, one CSV file each",
+}
+
 
 class Commands(QObject):
     """The actions of the window."""
@@ -41,6 +48,7 @@ class Commands(QObject):
         self._window, self._session, self._recovery = window, window.session, recovery
         self._growing = False
         self._off: tuple[bool, ...] = ()
+        self._check: FileCheck | None = None
 
     # -- files ----------------------------------------------------------------------------------------------------------
 
@@ -48,35 +56,64 @@ class Commands(QObject):
         """Ask for files and open them."""
         paths, _ = QFileDialog.getOpenFileNames(self._window, "Open recordings or a study")
         if paths:
-            self.open_paths(paths)
+            self.check_paths(paths)
 
     def do_open_folder(self) -> None:
         """Ask for a folder and open it."""
         path = QFileDialog.getExistingDirectory(self._window, "Open a folder of recordings")
         if path:
-            self.open_paths([path])
+            self.check_paths([path])
 
     def do_open_sample(self) -> None:
         """Open the bundled recordings."""
         folder = sample()
-        files = sorted(
-            path for path in folder.iterdir() if path.is_dir() or path.suffix in (".h5", ".hdf5", ".tdms", ".csv")
-        )
-        if not files:
+        names = [name for name in SAMPLES if (folder / name).exists()]
+        if not names:
             raise InputError("the bundled recordings are missing", str(folder), "install Meseta again")
-        if len(files) == 1:
-            self.open_paths([str(files[0])])
-            return
-        names = [path.name for path in files]
-        name, given = QInputDialog.getItem(self._window, "Bundled recordings", "Which one?", names, 0, False)
+        words = [SAMPLES[name] for name in names]
+        chosen, given = QInputDialog.getItem(self._window, "Bundled recordings", "Which one?", words, 0, False)
         if given:
-            self.open_paths([str(folder / name)])
+            self.check_paths([str(folder / names[words.index(chosen)])])
 
-    def open_paths(self, paths: list[str], recipe: Recipe | None = None) -> None:
-        """Open files off the window's thread; what is read first is shown while reading goes on."""
+    def check_paths(self, paths: list[str], recipe: Recipe | None = None) -> None:
+        """Show what files were taken for before they are read; a study is opened at once."""
         if not paths or not self.may_leave():
             return
         chosen = recipe or self._session.document.recipe
+
+        def task(_: Any, __: Callable[[Any], None]) -> bool:
+            from meseta.study import is_study
+
+            return len(paths) == 1 and Path(paths[0]).is_file() and is_study(paths[0])
+
+        def done(study: bool) -> None:
+            if study:
+                self._read(paths, chosen)
+            else:
+                self._file_check().check(paths, chosen)
+                self._window.centre.show_check(self._file_check())
+
+        self._window.jobs.submit(OPEN, "looking at the files", task, done, self._not_opened)
+
+    def _file_check(self) -> FileCheck:
+        if self._check is None:
+            self._check = FileCheck(self._window)
+            self._check.accepted.connect(self._read)
+            self._check.left.connect(self._leave_check)
+        return self._check
+
+    def _leave_check(self) -> None:
+        if self._session.traces is None:
+            self._window.centre.show_first()
+        else:
+            self._window.centre.show_spine()
+
+    def open_paths(self, paths: list[str], recipe: Recipe | None = None) -> None:
+        """Open files off the window's thread; what is read first is shown while reading goes on."""
+        if paths and self.may_leave():
+            self._read(paths, recipe or self._session.document.recipe)
+
+    def _read(self, paths: list[str], chosen: Recipe) -> None:
         self._growing = False
 
         def task(work: Any, part: Callable[[Any], None]) -> Opened:

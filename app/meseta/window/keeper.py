@@ -29,6 +29,7 @@ class Keeper(QObject):
         self._study: Any = None
         self._paths: tuple[str, ...] = ()
         self._kept: Document | None = None
+        self._closed = False
         self._later = QTimer(self)
         self._later.setSingleShot(True)
         self._later.setInterval(1000)
@@ -105,6 +106,9 @@ class Keeper(QObject):
 
     def close(self, *, forget: bool) -> None:
         """Write what is due, let go of the study, and end the thread."""
+        if self._closed:
+            return
+        self._closed = True
         if self._later.isActive() and not forget:
             self._write_recovery()
         self._let_go()

@@ -331,7 +331,7 @@ class MainWindow(QMainWindow):
     def _fill_recent(self) -> None:
         self.recent_menu.clear()
         for paths in self.recent.entries():
-            self.recent_menu.addAction(RecentFiles.title(paths), lambda paths=paths: self.commands.open_paths(paths))
+            self.recent_menu.addAction(RecentFiles.title(paths), lambda paths=paths: self.commands.check_paths(paths))
         if self.recent_menu.isEmpty():
             self.recent_menu.addAction("nothing opened yet").setEnabled(False)
 
@@ -346,7 +346,7 @@ class MainWindow(QMainWindow):
         """Open what was dropped."""
         paths = [url.toLocalFile() for url in event.mimeData().urls() if url.isLocalFile()]
         event.acceptProposedAction()
-        QTimer.singleShot(0, self, lambda: self.commands.open_paths(paths))
+        QTimer.singleShot(0, self, lambda: self.commands.check_paths(paths))
 
     def closeEvent(self, event: QCloseEvent) -> None:  # noqa: N802 - Qt's name
         """Ask about what is not saved, then stop all work and leave."""
