@@ -1,6 +1,9 @@
 """Small traces, studies and recordings for the tests of the study file."""
 
+import tempfile
+from functools import cache
 from itertools import pairwise
+from pathlib import Path
 
 import h5py
 import numpy as np
@@ -59,10 +62,25 @@ def some_decisions(traces):
     )
 
 
-def some_study(path, traces=None):
-    traces = traces or plain_traces()
+@cache
+def _study_bytes():
+    with tempfile.TemporaryDirectory() as folder:
+        _write_study(Path(folder) / "s.h5")
+        return (Path(folder) / "s.h5").read_bytes()
+
+
+def _write_study(path):
+    traces = plain_traces()
     recipe = Recipe.preset("molecule").with_settings(['selection.rules=["rupture_found"]'])
     write_study(path, Analysis(traces, recipe, some_decisions(traces)))
+
+
+def some_study(path, fresh=False):
+    """Make a study and open it; a fresh one has its own identity."""
+    if fresh:
+        _write_study(path)
+    else:
+        path.write_bytes(_study_bytes())
     return Study.open(path)
 
 
@@ -88,14 +106,16 @@ def assert_same_traces(first, second):
 
 
 def write_recording(path, seed=1, traces=4, samples=600, gain=1e6):
-    """Write amplifier volts as integers, one row a trace, with the constants of the laboratory as attributes."""
+    """Write amplifier volts as integers, one group a trace, with the constants of the laboratory as attributes."""
     rng = np.random.default_rng(seed)
     conductance = 10 ** (0.8 - np.linspace(0, 4, samples)) * (1 + 0.02 * rng.standard_normal((traces, samples)))
     volts = conductance * 7.748091729e-5 * 0.1 * gain
     with h5py.File(path, "w") as file:
-        made = file.create_dataset("amplifier", data=np.clip(np.rint(volts / 1e-3), -32768, 32767).astype(np.int16))
-        made.attrs["unit"] = "V"
-        made.attrs["scale"] = 1e-3
+        for number, row in enumerate(volts):
+            stored = np.clip(np.rint(row / 1e-3), -32768, 32767).astype(np.int16)
+            made = file.create_dataset(f"trace_{number:03d}/amplifier", data=stored)
+            made.attrs["unit"] = "V"
+            made.attrs["scale"] = 1e-3
         file.attrs["bias_volt"] = 0.1
         file.attrs["gain_volt_per_ampere"] = gain
         file.attrs["nm_per_sample"] = 0.01

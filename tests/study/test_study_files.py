@@ -221,7 +221,7 @@ def test_a_journal_line_that_does_not_fit_is_refused_whole(tmp_path):
 
 
 def test_a_new_study_on_a_full_disk_leaves_nothing_behind(tmp_path):
-    told = _with_file_limit(30_000, lambda: some_study(tmp_path / "s.h5"))
+    told = _with_file_limit(30_000, lambda: some_study(tmp_path / "s.h5", fresh=True))
     assert told.startswith("StudyError") and "free some room" in told
     assert list(tmp_path.iterdir()) == []
 

@@ -240,7 +240,7 @@ def test_a_damaged_journal_is_set_aside_not_lost(tmp_path):
 
 def test_the_journal_of_another_study_is_not_applied(tmp_path):
     _some_unsaved(tmp_path / "s.h5")
-    some_study(tmp_path / "other.h5").close()
+    some_study(tmp_path / "other.h5", fresh=True).close()
     (tmp_path / "s.h5.journal").rename(tmp_path / "other.h5.journal")
     study = Study.open(tmp_path / "other.h5")
     assert study.recovered == () and "another study" in study.damage[0]

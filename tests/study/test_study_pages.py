@@ -112,7 +112,7 @@ def test_a_log_of_another_file_is_not_applied(tmp_path):
     path = tmp_path / "s.h5"
     _, _, log, _ = _torn_save(path)
     path.unlink()
-    some_study(path).close()
+    some_study(path, fresh=True).close()
     bytes_before = path.read_bytes()
     log_of(path).write_bytes(log)
     assert whole_log(path) is None

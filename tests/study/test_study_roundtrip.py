@@ -65,7 +65,7 @@ def test_any_hdf5_tool_can_read_it(tmp_path):
 
 
 def test_two_studies_of_the_same_have_their_own_identity_and_write_over_nothing(tmp_path):
-    first, second = some_study(tmp_path / "a.h5"), some_study(tmp_path / "b.h5")
+    first, second = some_study(tmp_path / "a.h5"), some_study(tmp_path / "b.h5", fresh=True)
     assert first._content.identity != second._content.identity
     with pytest.raises(CallError, match="exists already"):
         Study.create(tmp_path / "a.h5", [tmp_path / "b.h5"])

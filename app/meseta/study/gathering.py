@@ -146,11 +146,11 @@ def _write_traces(
     quiet = work.quiet()
     try:
         traces, good = traces_from(batch, recipe, quiet), list(batch)
+        writer.append(traces)
     except InputError as error:
         if len(batch) == 1:
             added.bad.append(error)
             return []
         return [one for single in batch for one in _write_traces([single], writer, recipe, added, work)]
-    writer.append(traces)
     added.traces += traces.traces
     return good

@@ -11,7 +11,7 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 
-from meseta.errors import StudyError
+from meseta.errors import InputError, StudyError
 from meseta.study.chunks import ChunkSamples, SampleRow
 from meseta.study.columns import json_text, write_array, write_columns, write_text
 from meseta.study.content import PHASES
@@ -91,12 +91,12 @@ class TraceWriter:
 
         Raises
         ------
-        StudyError
-            Where their drive is in another unit.
+        InputError
+            Where their drive is in another unit; nothing is written then.
         """
         before = self._ends
         if before is not None and before.drive.unit != traces.drive.unit:
-            raise StudyError(
+            raise InputError(
                 f"the drive of new traces is in {traces.drive.unit}, that of the study in {before.drive.unit}",
                 traces.sources[0].name if traces.sources else "",
                 "give calibration.nm_per_volt or calibration.nm_per_second, or gather them into another study",
