@@ -156,19 +156,23 @@ def _bridge(draw: Draw, centre: Floats, mean_length_nm: Floats, label: npt.NDArr
     )
 
 
-def _gap(draw: Draw) -> tuple[Floats, Floats]:
-    """Return the gap after the rupture in nm and the tunnelling slope in decades per nm."""
+def _gap(draw: Draw, bridge: Bridge) -> tuple[Floats, Floats]:
+    """Return the gap after the rupture in nm and the tunnelling slope in decades per nm.
+
+    Where a molecule is caught the gap is wider: it has to fit in.
+    """
     settings, rng = draw.settings, draw.rng
     relative = 1 + settings.tunnelling_spread * rng.standard_normal(draw.traces)
     slope = settings.tunnelling_decades_per_nm * np.maximum(relative, 0.3)
     gap = settings.snap_back_nm + settings.snap_back_spread_nm * rng.standard_normal(draw.traces)
-    return np.maximum(gap, 0.05), slope
+    return np.maximum(gap, 0.05) + settings.bridge_gap_nm * (bridge.length_nm > 0), slope
 
 
 def metal(draw: Draw) -> Junctions:
     """Return a necking contact of a noble metal that jumps, breaks, snaps back and tunnels."""
     staircase = _staircase(draw, draw.record.shift_decades)
-    return Junctions(staircase, _no_bridge(draw.traces), *_gap(draw))
+    bridge = _no_bridge(draw.traces)
+    return Junctions(staircase, bridge, *_gap(draw, bridge))
 
 
 def molecule(draw: Draw) -> Junctions:
@@ -178,7 +182,7 @@ def molecule(draw: Draw) -> Junctions:
     bridge = _bridge(
         draw, settings.molecule_log10_g0 * ones, settings.molecule_length_nm * ones, np.zeros(draw.traces, np.uint8)
     )
-    return Junctions(staircase, bridge, *_gap(draw))
+    return Junctions(staircase, bridge, *_gap(draw, bridge))
 
 
 def mixture(draw: Draw) -> Junctions:
@@ -189,21 +193,24 @@ def mixture(draw: Draw) -> Junctions:
     centre = np.where(second, settings.second_log10_g0, settings.molecule_log10_g0)
     length = np.where(second, settings.second_length_nm, settings.molecule_length_nm)
     label = np.where(second, LABELS.index("second"), LABELS.index("first")).astype(np.uint8)
-    return Junctions(staircase, _bridge(draw, centre, length, label), *_gap(draw))
+    bridge = _bridge(draw, centre, length, label)
+    return Junctions(staircase, bridge, *_gap(draw, bridge))
 
 
 def blank(draw: Draw) -> Junctions:
     """Return what is recorded without molecules: metallic contacts that break and tunnel."""
     staircase = _staircase(draw, np.zeros(draw.traces))
-    return Junctions(staircase, _no_bridge(draw.traces), *_gap(draw))
+    bridge = _no_bridge(draw.traces)
+    return Junctions(staircase, bridge, *_gap(draw, bridge))
 
 
 def tunnelling(draw: Draw) -> Junctions:
     """Return a touch without a neck: from 1 to 5 G0 straight into the tunnelling decay, no plateau at all."""
     empty = np.zeros((draw.traces, 1))
-    _, slope = _gap(draw)
+    bridge = _no_bridge(draw.traces)
+    _, slope = _gap(draw, bridge)
     start = np.exp(draw.rng.uniform(np.log(1.0), np.log(5.0), draw.traces))
-    return Junctions(Staircase(empty + 1.0, empty, empty), _no_bridge(draw.traces), -np.log10(start) / slope, slope)
+    return Junctions(Staircase(empty + 1.0, empty, empty), bridge, -np.log10(start) / slope, slope)
 
 
 @dataclass(frozen=True)

@@ -128,6 +128,9 @@ class SimulationSettings:
     )
     snap_back_nm: float = _setting(0.45, "Snap-back", "nm", "Mean gap right after the contact has broken.", low=0)
     snap_back_spread_nm: float = _setting(0.08, "Spread of the snap-back", "nm", low=0)
+    bridge_gap_nm: float = _setting(
+        0.15, "Wider gap of a bridge", "nm", "Added to the gap where a molecule fits in.", low=0
+    )
 
     yield_share: float = _setting(0.4, "Yield", "", "Share of traces with a molecule.", low=0, high=1)
     molecule_log10_g0: float = _setting(
