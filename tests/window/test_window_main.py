@@ -24,7 +24,7 @@ def panel(window, name):
     return window.widgets[name]
 
 
-# -- results --------------------------------------------------------------------------------------------------------------
+# -- results ---------------------------------------------------------------------------------------------------------
 
 
 def test_what_is_shown_is_what_the_engine_computes(window, mixture):
@@ -72,7 +72,7 @@ def test_out_of_date_results_stay_visible_and_marked(window, settle):
     assert np.array_equal(session.result("plateaus").level_g0, expected.level_g0)
 
 
-# -- walking --------------------------------------------------------------------------------------------------------------
+# -- walking ---------------------------------------------------------------------------------------------------------
 
 
 def test_arrow_keys_walk_through_traces_and_draw_them(window, settle, mixture):
@@ -126,7 +126,7 @@ def test_reject_by_key_undo_and_redo_with_names(window, settle):
     assert session.kept.all()
 
 
-# -- conditions -----------------------------------------------------------------------------------------------------------
+# -- conditions ------------------------------------------------------------------------------------------------------
 
 
 def test_a_window_drawn_on_the_histogram_picks_traces_everywhere(window, settle):
@@ -151,7 +151,9 @@ def test_a_window_drawn_on_the_histogram_picks_traces_everywhere(window, settle)
     assert np.array_equal(x, np.repeat(own.density, 2))
     assert panel(window, "trace")._overlay_picture.asked == expected.sum()
     assert panel(window, "displacement").over.isVisible()
-    assert panel(window, "displacement").data().columns["counts"].sum() == panel(window, "displacement")._part.counts.sum()
+    assert (
+        panel(window, "displacement").data().columns["counts"].sum() == panel(window, "displacement")._part.counts.sum()
+    )
     assert panel(window, "strip").selected_ribbon.isVisible()
     assert panel(window, "conditions").picked.text().startswith(f"{expected.sum()} of 60 traces")
 
@@ -187,7 +189,10 @@ def test_conditions_become_a_rule_whose_result_equals_theirs(window, settle):
     assert np.array_equal(session.kept, mask)
     assert not session.document.conditions.active  # switched off, not thrown away
     rules = panel(window, "rules").table.model.data_columns
-    assert rules["left"][-1] == mask.sum() and session.result("selection").steps.dropped_in_sequence.sum() == 60 - mask.sum()
+    assert (
+        rules["left"][-1] == mask.sum()
+        and session.result("selection").steps.dropped_in_sequence.sum() == 60 - mask.sum()
+    )
     again = Analysis(session.traces, Recipe.parse(session.document.recipe.text()))
     assert np.array_equal(session.result("histogram").counts, again.histogram().counts)
 
@@ -210,7 +215,9 @@ def test_groups_have_a_symbol_and_come_back_as_a_condition(window, settle):
 
 def test_conditions_are_switched_and_combined_by_their_panel(window, settle):
     session, conditions = window.session, panel(window, "conditions")
-    session.change_conditions("two", ConditionSet((Condition("plateau", 1e-4, 1e-3), Condition("range", first=0, last=19))))
+    session.change_conditions(
+        "two", ConditionSet((Condition("plateau", 1e-4, 1e-3), Condition("range", first=0, last=19)))
+    )
     settle(window)
     both = session.subset.mask.copy()
     conditions.joined.setCurrentIndex(1)
@@ -240,7 +247,7 @@ def test_a_rule_that_is_not_understood_is_explained_beside_the_conditions(window
     assert window.session.subset is None
 
 
-# -- axes -----------------------------------------------------------------------------------------------------------------
+# -- axes ------------------------------------------------------------------------------------------------------------
 
 
 def test_one_switch_changes_all_plots_to_the_linear_axis(window, settle):
@@ -287,7 +294,10 @@ def test_hover_reads_the_same_height_everywhere(window):
     lines = [panel(window, name).hover_line for name in ("trace", "displacement", "histogram")]
     assert all(line.isVisible() for line in lines)
     assert len({line.value() for line in lines}) == 1
-    assert window.status.pointer.text() == readout(Hover(lines[0].value(), 0.42), "logarithmic") or "nm" in window.status.pointer.text()
+    assert (
+        window.status.pointer.text() == readout(Hover(lines[0].value(), 0.42), "logarithmic")
+        or "nm" in window.status.pointer.text()
+    )
 
 
 def test_the_readout_speaks_g0_siemens_ohm_and_nm():
@@ -297,7 +307,7 @@ def test_the_readout_speaks_g0_siemens_ohm_and_nm():
     assert text.split("    ") == [f"3.40{s}×{s}10⁻⁴{s}G₀", f"26.3{s}nS", f"38.0{s}MΩ", f"0.420{s}nm"]
 
 
-# -- strip, peaks, tables -------------------------------------------------------------------------------------------------
+# -- strip, peaks, tables --------------------------------------------------------------------------------------------
 
 
 def test_a_click_on_the_strip_goes_to_that_trace(window):
@@ -359,7 +369,7 @@ def test_copied_plot_data_read_back(window):
     assert [int(line.split("\t")[column]) for line in lines[1:]] == window.session.result("histogram").counts.tolist()
 
 
-# -- files ----------------------------------------------------------------------------------------------------------------
+# -- files -----------------------------------------------------------------------------------------------------------
 
 
 def test_a_study_is_saved_and_opened_exactly_where_it_was(window, make, settle, tmp_path, qtbot):
@@ -395,7 +405,9 @@ def test_a_dropped_file_is_opened(make, settle, tmp_path, mixture):
     data = QMimeData()
     data.setUrls([QUrl.fromLocalFile(str(path))])
     centre = QPointF(600, 400)
-    event = QDropEvent(centre, Qt.DropAction.CopyAction, data, Qt.MouseButton.LeftButton, Qt.KeyboardModifier.NoModifier)
+    event = QDropEvent(
+        centre, Qt.DropAction.CopyAction, data, Qt.MouseButton.LeftButton, Qt.KeyboardModifier.NoModifier
+    )
     window.dropEvent(event)
     QApplication.processEvents()
     settle(window)
@@ -448,7 +460,7 @@ def test_an_interrupted_session_is_taken_up_again(make, settle, tmp_path, place,
     assert np.flatnonzero(~again.session.kept).tolist() == [7]
 
 
-# -- the frame ------------------------------------------------------------------------------------------------------------
+# -- the frame -------------------------------------------------------------------------------------------------------
 
 
 def test_the_first_page_says_what_to_do(make):
@@ -522,7 +534,8 @@ def test_widgets_that_take_the_focus_have_names(window):
         and widget.isVisible()
         and not (widget.accessibleName() or getattr(widget, "text", str)())
         and "qt_" not in widget.objectName()
-        and type(widget).__name__ not in ("QTableCornerButton", "CornerButton", "QToolButton", "QAbstractButton", "QLineEditIconButton")
+        and type(widget).__name__
+        not in ("QTableCornerButton", "CornerButton", "QToolButton", "QAbstractButton", "QLineEditIconButton")
     ]
     assert [(type(w).__name__, w.objectName()) for w in nameless] == []
 

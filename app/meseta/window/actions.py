@@ -1,4 +1,4 @@
-"""Every action of the window in one table: name, menu, keys, when it can be used.  Menus, sheet and search come from it."""
+"""Every action of the window in one table: name, menu, keys, when it can be used."""
 
 from __future__ import annotations
 

@@ -50,7 +50,7 @@ class Commands(QObject):
         self._off: tuple[bool, ...] = ()
         self._check: FileCheck | None = None
 
-    # -- files ----------------------------------------------------------------------------------------------------------
+    # -- files -------------------------------------------------------------------------------------------------------
 
     def do_open(self) -> None:
         """Ask for files and open them."""
@@ -282,7 +282,7 @@ class Commands(QObject):
 
         self._window.jobs.submit(OPEN, "reading files", task, done, self._not_opened)
 
-    # -- editing --------------------------------------------------------------------------------------------------------
+    # -- editing -----------------------------------------------------------------------------------------------------
 
     def do_undo(self) -> None:
         """Take the last change back."""
@@ -308,7 +308,7 @@ class Commands(QObject):
         self._session.pipeline.refresh_trace()
         self._session.pipeline.refresh_subset()
 
-    # -- traces -----------------------------------------------------------------------------------------------------------
+    # -- traces ------------------------------------------------------------------------------------------------------
 
     def do_next(self) -> None:
         """Go to the next trace."""
@@ -396,7 +396,7 @@ class Commands(QObject):
             event = Event(session.traces.identity(session.current).text(), text.strip())
             session.change_decisions(f"mark the event {text.strip()}", session.document.decisions.with_event(event))
 
-    # -- conditions -----------------------------------------------------------------------------------------------------
+    # -- conditions --------------------------------------------------------------------------------------------------
 
     def do_make_rule(self) -> None:
         """Add the conditions to the rules of the selection."""
@@ -455,7 +455,7 @@ class Commands(QObject):
         if self._session.subset is not None:
             self.decide(np.flatnonzero(self._session.subset.mask).tolist(), False)
 
-    # -- looking --------------------------------------------------------------------------------------------------------
+    # -- looking -----------------------------------------------------------------------------------------------------
 
     def do_axis(self) -> None:
         """Switch between the linear and the logarithmic conductance axis."""
@@ -496,14 +496,14 @@ class Commands(QObject):
         """Bring a conductance into the middle of the view."""
         session = self._session
         u = float(np.log10(conductance_g0)) if session.axis == "logarithmic" and conductance_g0 > 0 else conductance_g0
-        half = min((session.span.high - session.span.low) / 2, 1.0 if session.axis == "logarithmic" else 1.0)
+        half = min((session.span.high - session.span.low) / 2, 1.0)
         session.set_span(Span(u - half, u + half))
 
     def do_arrange(self) -> None:
         """Arrange the window as at first."""
         self._window.arrange_as_first()
 
-    # -- help -----------------------------------------------------------------------------------------------------------
+    # -- help --------------------------------------------------------------------------------------------------------
 
     def do_help(self) -> None:
         """Show the help."""

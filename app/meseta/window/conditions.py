@@ -24,8 +24,8 @@ class Condition:
     Attributes
     ----------
     kind : str
-        "plateau" (a plateau whose conductance lies in the window), "passes" (the same, with the
-        plateau's middle in a window of displacement), "range" (traces of a stretch of the record), "rule" (text of the rule language).
+        "plateau" (a plateau whose conductance lies in the window), "passes" (the same, with the plateau's middle in a
+        window of displacement), "range" (traces of a stretch of the record), "rule" (text of the rule language).
     low_g0, high_g0 : float
         Conductance window.
     low_drive, high_drive : float

@@ -29,7 +29,7 @@ class Elided(QLabel):
             self.style().unpolish(self)
             self.style().polish(self)
 
-    def paintEvent(self, event: QPaintEvent) -> None:  # noqa: N802 - Qt's name
+    def paintEvent(self, event: QPaintEvent) -> None:
         """Paint as much as fits."""
         painter = QPainter(self)
         painter.setPen(self.palette().color(self.foregroundRole()))
@@ -37,10 +37,10 @@ class Elided(QLabel):
         painter.drawText(self.rect(), Qt.AlignmentFlag.AlignVCenter | Qt.AlignmentFlag.AlignLeft, text)
         painter.end()
 
-    def minimumSizeHint(self) -> QSize:  # noqa: N802 - Qt's name
+    def minimumSizeHint(self) -> QSize:
         """Ask for height only."""
         return QSize(16, self.fontMetrics().height())
 
-    def sizeHint(self) -> QSize:  # noqa: N802 - Qt's name
+    def sizeHint(self) -> QSize:
         """Ask for the width of the text."""
         return QSize(self.fontMetrics().horizontalAdvance(self.text()) + 2, self.fontMetrics().height())

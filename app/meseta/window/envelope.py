@@ -19,15 +19,15 @@ class Curve:
         self.x, self.g0 = x, g0
 
     def on(self, axis: str, lowest_u: float) -> Floats:
-        """Return the curve's height on the axis as drawn: G, or log10 G with readings at or below zero at the bottom."""
+        """Return the height on the axis as drawn: G, or log10 G with readings at or below zero at the bottom."""
         return heights(self.g0, axis, lowest_u)
 
 
 def heights(g0: npt.ArrayLike, axis: str, lowest_u: float) -> Floats:
     """Return conductances on the axis as drawn.
 
-    On the logarithmic axis a reading at or below zero has no place; it is drawn at ``lowest_u``, below the view, so that
-    a trace at the floor reads as noise and not as a gap.  NaN stays NaN.
+    On the logarithmic axis a reading at or below zero has no place; it is drawn at ``lowest_u``, below the
+    view, so that a trace at the floor reads as noise and not as a gap.  NaN stays NaN.
     """
     values = np.asarray(g0, np.float64)
     if axis != "logarithmic":
@@ -56,9 +56,8 @@ def reduced(x: npt.ArrayLike, g0: npt.ArrayLike, points: int) -> Curve:
     if size <= 2:
         return Curve(x, g0)
     bins = -(-len(g0) // size)
-    folded = np.full(bins * size, np.nan)
-    folded[: len(g0)] = g0
-    folded = folded.reshape(bins, size)
+    folded: npt.NDArray[np.float64] = np.full((bins, size), np.nan)
+    folded.ravel()[: len(g0)] = g0
     low = np.where(np.isnan(folded), np.inf, folded).min(axis=1)
     high = np.where(np.isnan(folded), -np.inf, folded).max(axis=1)
     stop = np.minimum(np.arange(size, bins * size + 1, size), len(g0)) - 1

@@ -53,7 +53,7 @@ class ActionFinder(QDialog):
                 self.list.setCurrentRow(row)
                 break
 
-    def eventFilter(self, watched: QObject, event: QEvent) -> bool:  # noqa: N802 - Qt's name
+    def eventFilter(self, watched: QObject, event: QEvent) -> bool:
         """Let the arrow keys walk the list while one types."""
         if event.type() == QEvent.Type.KeyPress:
             key: Any = event

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
@@ -60,7 +61,7 @@ class MainWindow(QMainWindow):
         self._connect()
         self._remember()
 
-    # -- building -------------------------------------------------------------------------------------------------------
+    # -- building ----------------------------------------------------------------------------------------------------
 
     def _build(self) -> None:
         self.setObjectName("meseta")
@@ -124,7 +125,7 @@ class MainWindow(QMainWindow):
         right = [view.name for view in VIEWS if view.area == "right" and view.name not in ("conditions", "groups")]
         self.splitDockWidget(self.docks[right[0]], self.docks["conditions"], Qt.Orientation.Vertical)
         self.splitDockWidget(self.docks["conditions"], self.docks["groups"], Qt.Orientation.Vertical)
-        for before, after in zip(right, right[1:], strict=False):
+        for before, after in pairwise(right):
             self.tabifyDockWidget(self.docks[before], self.docks[after])
         self.docks[right[0]].raise_()
 
@@ -182,10 +183,8 @@ class MainWindow(QMainWindow):
                 bar.addSeparator()
             menu = spec.menu
             bar.addAction(self.actions_by_key[spec.key])
-            button = bar.widgetForAction(self.actions_by_key[spec.key])
-            button.setText(spec.bar)
             self.actions_by_key[spec.key].setIconText(spec.bar)
-            button.setAccessibleName(spec.text)
+            bar.widgetForAction(self.actions_by_key[spec.key]).setAccessibleName(spec.text)
         stretch = QWidget()
         stretch.setSizePolicy(QSizePolicy.Policy.Expanding, QSizePolicy.Policy.Preferred)
         bar.addWidget(stretch)
@@ -209,7 +208,7 @@ class MainWindow(QMainWindow):
         self.centre.first.chosen.connect(self.run_action)
         self._refresh_actions()
 
-    # -- remembering ----------------------------------------------------------------------------------------------------
+    # -- remembering -------------------------------------------------------------------------------------------------
 
     def _remember(self) -> None:
         """Take the place and arrangement of last time, if they belong to this arrangement of docks."""
@@ -253,7 +252,7 @@ class MainWindow(QMainWindow):
         self.themes.choose(appearance)  # type: ignore[arg-type]
         self.settings.setValue("appearance", appearance)
 
-    # -- what views may ask (Frame) -----------------------------------------------------------------------------------
+    # -- what views may ask (Frame) ----------------------------------------------------------------------------------
 
     @property
     def theme(self) -> Theme:
@@ -294,7 +293,7 @@ class MainWindow(QMainWindow):
         """Ask where, and write columns as CSV off the window's thread."""
         self.commands.export_columns(name, columns)
 
-    # -- following the session ----------------------------------------------------------------------------------------
+    # -- following the session ---------------------------------------------------------------------------------------
 
     def _traces_changed(self) -> None:
         if self.session.traces is None:
@@ -331,24 +330,25 @@ class MainWindow(QMainWindow):
     def _fill_recent(self) -> None:
         self.recent_menu.clear()
         for paths in self.recent.entries():
-            self.recent_menu.addAction(RecentFiles.title(paths), lambda paths=paths: self.commands.check_paths(paths))
+            again = self.recent_menu.addAction(RecentFiles.title(paths))
+            again.triggered.connect(lambda _=False, one=paths: self.commands.check_paths(one))
         if self.recent_menu.isEmpty():
             self.recent_menu.addAction("nothing opened yet").setEnabled(False)
 
-    # -- files dropped, closing ---------------------------------------------------------------------------------------
+    # -- files dropped, closing --------------------------------------------------------------------------------------
 
-    def dragEnterEvent(self, event: QDragEnterEvent) -> None:  # noqa: N802 - Qt's name
+    def dragEnterEvent(self, event: QDragEnterEvent) -> None:
         """Take files and folders."""
         if any(url.isLocalFile() for url in event.mimeData().urls()):
             event.acceptProposedAction()
 
-    def dropEvent(self, event: QDropEvent) -> None:  # noqa: N802 - Qt's name
+    def dropEvent(self, event: QDropEvent) -> None:
         """Open what was dropped."""
         paths = [url.toLocalFile() for url in event.mimeData().urls() if url.isLocalFile()]
         event.acceptProposedAction()
         QTimer.singleShot(0, self, lambda: self.commands.check_paths(paths))
 
-    def closeEvent(self, event: QCloseEvent) -> None:  # noqa: N802 - Qt's name
+    def closeEvent(self, event: QCloseEvent) -> None:
         """Ask about what is not saved, then stop all work and leave."""
         if not self.commands.may_leave():
             event.ignore()
@@ -362,7 +362,7 @@ class MainWindow(QMainWindow):
         self.jobs.close()
         self.keeper.close(forget=forget)
 
-    def sizeHint(self) -> QSize:  # noqa: N802 - Qt's name
+    def sizeHint(self) -> QSize:
         """Ask for a comfortable size."""
         return QSize(1360, 860)
 

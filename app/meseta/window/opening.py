@@ -126,7 +126,7 @@ def write_columns(path: str, columns: Mapping[str, npt.NDArray[Any]], _: Work) -
     return path
 
 
-# -- a session that was not saved ---------------------------------------------------------------------------------------
+# -- a session that was not saved ------------------------------------------------------------------------------------
 
 
 @dataclass(frozen=True)

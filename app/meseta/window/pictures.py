@@ -156,7 +156,7 @@ def displacement_histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], w
     source = analysis.traces.only("conductance")
     spans = source.blocks(work)
 
-    def one(span: tuple[int, int]) -> object:
+    def one(span: tuple[int, int]) -> DisplacementHistogram:
         first, last = span
         return histograms.displacement_counts(
             source.block(first, last),
@@ -228,7 +228,7 @@ def strip_picture(counts: CountMatrix, work: Work) -> StripPicture:
 def _halved(columns: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
     """Return the means of neighbouring columns; a last odd one stands alone."""
     pairs = len(columns) // 2 * 2
-    halved = (columns[0:pairs:2] + columns[1:pairs:2]) / 2
+    halved: npt.NDArray[np.float32] = (columns[0:pairs:2] + columns[1:pairs:2]) / np.float32(2)
     return np.concatenate([halved, columns[pairs:]]) if pairs < len(columns) else halved
 
 

@@ -104,7 +104,7 @@ class _ChangeCommand(QUndoCommand):
         """Return one number for all changes of the same thing; -1 for those that never merge."""
         return hash(self._same) % 2_000_000_000 if self._same else -1
 
-    def mergeWith(self, other: QUndoCommand) -> bool:  # noqa: N802 - Qt's name
+    def mergeWith(self, other: QUndoCommand) -> bool:
         """Take a later change of the same thing into this one."""
         if not isinstance(other, _ChangeCommand) or other._same != self._same:
             return False
@@ -287,7 +287,7 @@ class Session(QObject):
         if change.conditions or change.recipe or change.decisions:
             self.pipeline.refresh_subset()
 
-    # -- looking ------------------------------------------------------------------------------------------------------
+    # -- looking -----------------------------------------------------------------------------------------------------
 
     def go_to(self, trace: int) -> None:
         """Make another trace the current one; numbers beyond the ends stop there."""
@@ -309,7 +309,7 @@ class Session(QObject):
         rows = np.flatnonzero(among)
         if not len(rows):
             return
-        place = np.searchsorted(rows, self.current, side="right" if by > 0 else "left")
+        place = int(np.searchsorted(rows, self.current, side="right" if by > 0 else "left"))
         self.go_to(int(rows[min(max(place + (by - 1 if by > 0 else by), 0), len(rows) - 1)]))
 
     def set_span(self, span: Span) -> None:
@@ -351,7 +351,7 @@ class Session(QObject):
         """Tell where the pointer is, or that it left the plots."""
         self.hover_moved.emit(hover)
 
-    # -- results ------------------------------------------------------------------------------------------------------
+    # -- results -----------------------------------------------------------------------------------------------------
 
     def result(self, name: str) -> Any:
         """Return a result as last shown, whether current or not; None where there is none."""

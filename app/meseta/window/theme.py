@@ -13,7 +13,7 @@ from PySide6.QtCore import QObject, Qt, Signal
 from PySide6.QtGui import QColor, QFont, QFontDatabase, QGuiApplication, QPalette, QPen
 from PySide6.QtWidgets import QApplication
 
-from meseta.colours import DARK, LIGHT, Palette, ramp
+from meseta.colours import DARK, LIGHT, Palette, ramp, rgb_of_hex
 
 __all__ = ["Appearance", "Theme", "ThemeKeeper", "fixed_digits"]
 
@@ -51,15 +51,15 @@ class Theme:
     @cached_property
     def grey_lookup(self) -> npt.NDArray[np.uint8]:
         """(256, 4) from the paper to the colour of all traces, for what is not selected."""
-        paper, grey = (np.array(QColor(c).getRgb()[:3], float) for c in (self.palette.panel, self.palette.every))
+        paper, grey = rgb_of_hex(self.palette.panel), rgb_of_hex(self.palette.every)
         share = np.linspace(0, 1, 256)[:, None]
-        return _table((paper * (1 - share) + grey * share) / 255)
+        return _table(paper * (1 - share) + grey * share)
 
     @cached_property
     def over_lookup(self) -> npt.NDArray[np.uint8]:
         """(256, 4) of the selected colour from clear to full, to lie over something else."""
         table = np.empty((256, 4), np.uint8)
-        table[:, :3] = QColor(self.palette.selected).getRgb()[:3]
+        table[:, :3] = np.round(rgb_of_hex(self.palette.selected) * 255)
         table[:, 3] = np.linspace(0, 255, 256).astype(np.uint8)
         return table
 
@@ -158,7 +158,8 @@ QStatusBar::item {{ border: 0; }}
 QDockWidget {{ titlebar-close-icon: none; titlebar-normal-icon: none; font-weight: bold; }}
 QDockWidget::title {{ background: {ground}; padding: 4px 8px; text-align: left; }}
 QTabBar {{ qproperty-drawBase: 0; }}
-QTabBar::tab {{ background: {ground}; color: {quiet}; padding: 4px 8px; border: 0; border-bottom: 2px solid transparent; }}
+QTabBar::tab {{ background: {ground}; color: {quiet}; padding: 4px 8px; border: 0;
+  border-bottom: 2px solid transparent; }}
 QTabBar::tab:selected {{ color: {ink}; border-bottom: 2px solid {selected}; }}
 QTabBar::tab:hover {{ color: {ink}; }}
 QTabWidget::pane {{ border: 0; }}
@@ -166,7 +167,8 @@ QScrollArea {{ border: 0; background: {ground}; }}
 QTableView {{ background: {panel}; color: {ink}; border: 1px solid {hairline}; gridline-color: {hairline};
   selection-background-color: {selected}; selection-color: {panel}; alternate-background-color: {panel}; }}
 QHeaderView {{ background: {panel}; }}
-QHeaderView::section {{ background: {panel}; color: {quiet}; border: 0; border-bottom: 1px solid {hairline}; padding: 4px 8px; }}
+QHeaderView::section {{ background: {panel}; color: {quiet}; border: 0;
+  border-bottom: 1px solid {hairline}; padding: 4px 8px; }}
 QTableCornerButton::section {{ background: {panel}; border: 0; }}
 QLineEdit, QComboBox, QAbstractSpinBox, QPlainTextEdit, QTextBrowser, QListView {{ background: {panel}; color: {ink};
   border: 1px solid {hairline}; border-radius: 2px; padding: 2px 4px; selection-background-color: {selected};
@@ -175,7 +177,8 @@ QLineEdit:focus, QComboBox:focus, QAbstractSpinBox:focus, QPlainTextEdit:focus, 
 QTextBrowser:focus {{ border-color: {selected}; }}
 QLineEdit[wrong="true"] {{ border: 1px solid {fit}; }}
 QComboBox::drop-down {{ border: 0; width: 16px; }}
-QPushButton {{ background: {panel}; color: {ink}; border: 1px solid {hairline}; border-radius: 3px; padding: 4px 12px; }}
+QPushButton {{ background: {panel}; color: {ink}; border: 1px solid {hairline}; border-radius: 3px;
+  padding: 4px 12px; }}
 QPushButton:hover {{ border-color: {quiet}; }}
 QPushButton:focus {{ border-color: {selected}; }}
 QPushButton:default {{ border-color: {selected}; color: {selected}; }}

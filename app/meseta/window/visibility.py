@@ -28,7 +28,7 @@ class Lazy(QObject):
         if self._widget.isVisible() and not self._timer.isActive():
             self._timer.start()
 
-    def eventFilter(self, watched: QObject, event: QEvent) -> bool:  # noqa: N802 - Qt's name
+    def eventFilter(self, watched: QObject, event: QEvent) -> bool:
         """Catch up when the widget appears."""
         if event.type() == QEvent.Type.Show and self._due:
             self._timer.start()

@@ -10,6 +10,7 @@ from PySide6.QtWidgets import QComboBox, QGridLayout, QLabel, QLineEdit, QWidget
 from meseta.intake import Description
 from meseta.recipe.intake import ROLES
 from meseta.window.elided import Elided
+from meseta.window.layouts import emptied
 from meseta.window.session import Session
 
 __all__ = ["ChannelTable"]
@@ -35,11 +36,7 @@ class ChannelTable(QWidget):
         if description.channels == self._shown:
             return
         self._shown = description.channels
-        while self._grid.count():
-            item = self._grid.takeAt(0)
-            if item is not None and item.widget() is not None:
-                item.widget().hide()
-                item.widget().deleteLater()
+        emptied(self._grid)
         self.roles, self.units = {}, {}
         for column, title in enumerate(("channel", "is", "unit", "because")):
             label = QLabel(title)

@@ -1,4 +1,4 @@
-"""A draft of the recipe while files are checked: the forms write into it, nothing else changes before it is accepted."""
+"""A draft of the recipe while files are checked: the forms write into it, nothing else changes."""
 
 from __future__ import annotations
 

@@ -23,6 +23,7 @@ from meseta.window.filecheck.preview import CheckPicture, check_picture
 from meseta.window.forms import SectionForm
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
+from meseta.window.layouts import emptied
 from meseta.window.plots.gestures import GestureBox
 from meseta.window.plots.ticks import ConductanceAxis, PlainAxis
 from meseta.window.theme import Theme
@@ -66,7 +67,7 @@ class FileCheck(QWidget):
         frame.themes.changed.connect(self.wear)
         self.wear(frame.theme)
 
-    # -- building -------------------------------------------------------------------------------------------------------
+    # -- building ----------------------------------------------------------------------------------------------------
 
     def _lay_out(self) -> None:
         font = self.title.font()
@@ -142,7 +143,7 @@ class FileCheck(QWidget):
         meaning, dashed = kinds[place % len(kinds)]
         return theme.pen(meaning, dashed=dashed)
 
-    # -- looking --------------------------------------------------------------------------------------------------------
+    # -- looking -----------------------------------------------------------------------------------------------------
 
     def check(self, paths: list[str], recipe: Recipe) -> None:
         """Look at files with a recipe to begin with."""
@@ -185,18 +186,15 @@ class FileCheck(QWidget):
         first = picture.described[0]
         more = f" and {typeset.integer(picture.files - 1)} more" if picture.files > 1 else ""
         self.title.setText(f"{first.file}{more}")
-        traces = f"{typeset.integer(first.openings)} opening and {typeset.integer(first.traces - first.openings)} closing traces"
+        closings = typeset.integer(first.traces - first.openings)
+        traces = f"{typeset.integer(first.openings)} opening and {closings} closing traces"
         found = f"{first.reader}: {first.layout}. {typeset.integer(first.samples)} samples, {traces}."
         source = f" Conductance from {first.conductance_from}; {first.drive}." if first.conductance_from else ""
         self.summary.setText(found + source)
         self.channels.show_channels(first)
 
     def _say_doubts(self, sentences: list[str]) -> None:
-        while self.doubts.count():
-            item = self.doubts.takeAt(0)
-            if item is not None and item.widget() is not None:
-                item.widget().hide()
-                item.widget().deleteLater()
+        emptied(self.doubts)
         for sentence in sentences:
             label = QLabel(f"? {sentence}")
             label.setWordWrap(True)

@@ -1,4 +1,4 @@
-"""What the file check shows, made off the window's thread: descriptions, a piece of every channel, calibrated traces."""
+"""What the file check shows, made off the window's thread: descriptions, raw channels, calibrated traces."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""One editor for each kind of setting.  An editor holds no value of its own: it shows the recipe's and proposes others."""
+"""One editor for each kind of setting.  It holds no value of its own: it shows the recipe's and proposes others."""
 
 from __future__ import annotations
 
@@ -86,7 +86,7 @@ class NumberEditor(Editor):
             if value != round(value):
                 self._complain(f"'{text}' is not a whole number")
                 return
-            value = int(round(value))
+            value = round(value)
         self.propose(value)
 
 
@@ -108,7 +108,7 @@ class TruthEditor(Editor):
 class _StillCombo(QComboBox):
     """A list of choices that a passing wheel does not change."""
 
-    def wheelEvent(self, event: QWheelEvent) -> None:  # noqa: N802 - Qt's name
+    def wheelEvent(self, event: QWheelEvent) -> None:
         """Leave the wheel to the scroll area."""
         event.ignore()
 
@@ -211,7 +211,7 @@ class _Lines(QPlainTextEdit):
         super().__init__()
         self._finished = finished
 
-    def focusOutEvent(self, event: Any) -> None:  # noqa: N802 - Qt's name
+    def focusOutEvent(self, event: Any) -> None:
         """Propose the text when the user goes elsewhere."""
         super().focusOutEvent(event)
         self._finished()

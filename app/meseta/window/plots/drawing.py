@@ -41,7 +41,7 @@ class WindowTool:
             band.setPen(theme.pen("selected"))
             band.setBrush(pg.mkBrush(theme.colour("selected", 26)))
 
-    # -- drawing ----------------------------------------------------------------------------------------------------------
+    # -- drawing -----------------------------------------------------------------------------------------------------
 
     def _drawn(self, drag: Drag) -> None:
         session = self._panel.session
@@ -75,7 +75,7 @@ class WindowTool:
     def _g0(self, u: float) -> float:
         return float(10.0**u) if self._panel.session.axis == "logarithmic" else float(u)
 
-    # -- showing ----------------------------------------------------------------------------------------------------------
+    # -- showing -----------------------------------------------------------------------------------------------------
 
     def show_conditions(self) -> None:
         """Draw a band for every condition that is switched on and has a conductance window."""

@@ -44,7 +44,7 @@ class GestureBox(pg.ViewBox):
     def _plot_point(self, scene: QPointF) -> QPointF:
         return self.mapSceneToView(scene)
 
-    def mouseDragEvent(self, event: Any, axis: int | None = None) -> None:  # noqa: N802 - pyqtgraph's name
+    def mouseDragEvent(self, event: Any, axis: int | None = None) -> None:
         """Draw a window or move the view."""
         event.accept()
         start, now = self._plot_point(event.buttonDownScenePos()), self._plot_point(event.scenePos())
@@ -55,7 +55,7 @@ class GestureBox(pg.ViewBox):
             before = self._plot_point(event.lastScenePos())
             self.moved.emit(before.x() - now.x(), before.y() - now.y())
 
-    def mouseClickEvent(self, event: Any) -> None:  # noqa: N802 - pyqtgraph's name
+    def mouseClickEvent(self, event: Any) -> None:
         """Tell of clicks with the left button; double clicks reset the view."""
         if event.button() != Qt.MouseButton.LeftButton:
             event.ignore()
@@ -67,7 +67,7 @@ class GestureBox(pg.ViewBox):
         point = self._plot_point(event.scenePos())
         self.clicked.emit(point.x(), point.y())
 
-    def wheelEvent(self, event: Any, axis: int | None = None) -> None:  # noqa: N802 - pyqtgraph's name
+    def wheelEvent(self, event: Any, axis: int | None = None) -> None:
         """Zoom the conductance axis, or the other one with Ctrl or over its own scale."""
         event.accept()
         factor = 0.999 ** event.delta()

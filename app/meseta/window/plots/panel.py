@@ -102,7 +102,7 @@ class PlotPanel(QWidget):
         column.addWidget(self.header)
         column.addWidget(self.plot, 1)
 
-    # -- to be said by subclasses -------------------------------------------------------------------------------------
+    # -- to be said by subclasses ------------------------------------------------------------------------------------
 
     def data(self) -> PlotData | None:
         """Return the numbers behind the plot; None where there are none."""
@@ -122,7 +122,7 @@ class PlotPanel(QWidget):
         """Return further entries of the context menu."""
         return []
 
-    # -- words ----------------------------------------------------------------------------------------------------------
+    # -- words -------------------------------------------------------------------------------------------------------
 
     def say_empty(self, text: str) -> None:
         """Show what to do next in place of a picture; an empty text shows the picture."""
@@ -140,7 +140,7 @@ class PlotPanel(QWidget):
         """Write the heading."""
         self.heading.say(text)
 
-    def resizeEvent(self, event: QResizeEvent) -> None:  # noqa: N802 - Qt's name
+    def resizeEvent(self, event: QResizeEvent) -> None:
         """Keep the words in the middle."""
         super().resizeEvent(event)
         self._place_empty()
@@ -149,7 +149,7 @@ class PlotPanel(QWidget):
         width, height = self.plot.width(), self.plot.height()
         self.empty.setGeometry(24, 0, max(width - 48, 40), max(height - BOTTOM_PIXELS, 40))
 
-    # -- mouse and menu -------------------------------------------------------------------------------------------------
+    # -- mouse and menu ----------------------------------------------------------------------------------------------
 
     def _mouse_moved(self, place: QPointF) -> None:
         if not self.box.sceneBoundingRect().contains(place):
@@ -157,12 +157,12 @@ class PlotPanel(QWidget):
         point = self.box.mapSceneToView(place)
         self.session.hover(self.hover_at(point.x(), point.y()))
 
-    def leaveEvent(self, event: Any) -> None:  # noqa: N802 - Qt's name
+    def leaveEvent(self, event: Any) -> None:
         """Take the hover line away."""
         super().leaveEvent(event)
         self.session.hover(None)
 
-    def contextMenuEvent(self, event: QContextMenuEvent) -> None:  # noqa: N802 - Qt's name
+    def contextMenuEvent(self, event: QContextMenuEvent) -> None:
         """Offer the data, the picture and the help."""
         menu = self.context_menu()
         menu.popup(event.globalPos())

@@ -43,14 +43,14 @@ class ScaleBar(QWidget):
         self.show()
         self.update()
 
-    def sizeHint(self) -> QSize:  # noqa: N802 - Qt's name
+    def sizeHint(self) -> QSize:
         """Return the size of bar and numbers."""
         metrics = self.fontMetrics()
         width = metrics.horizontalAdvance(f"0{self._top}") + BAR_WIDTH + 12
         width += metrics.horizontalAdvance(f" {self._division}") if self._top else 0
         return QSize(width, metrics.height())
 
-    def paintEvent(self, event: QPaintEvent) -> None:  # noqa: N802 - Qt's name
+    def paintEvent(self, event: QPaintEvent) -> None:
         """Paint zero, the ramp, the top and the division."""
         if self._image is None or self._theme is None:
             return

@@ -46,7 +46,7 @@ class _Axis(pg.AxisItem):
             self._write_label(color=theme.palette.quiet)
 
     # A wheel or drag on the axis belongs to the view's own gestures.
-    def mouseDragEvent(self, event: Any) -> None:  # noqa: N802 - pyqtgraph's name
+    def mouseDragEvent(self, event: Any) -> None:
         """Leave dragging to the plot."""
         event.ignore()
 
@@ -66,7 +66,7 @@ class ConductanceAxis(_Axis):
             self.picture = None
             self.update()
 
-    def tickValues(self, minVal: float, maxVal: float, size: float) -> list[tuple[float, list[float]]]:  # noqa: N802, N803
+    def tickValues(self, minVal: float, maxVal: float, size: float) -> list[tuple[float, list[float]]]:
         """Return the places of ticks, coarse ones first."""
         if not self.logarithmic or maxVal - minVal < 0.4:
             return _plain_ticks(minVal, maxVal, size, 28.0)
@@ -80,7 +80,7 @@ class ConductanceAxis(_Axis):
             (0.1, [u for u in minor if minVal <= u <= maxVal]),
         ]
 
-    def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:  # noqa: N802
+    def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:
         """Return the text of ticks: a power of ten a decade, nothing between."""
         if not self.logarithmic:
             return _plain_texts(values, spacing)
@@ -99,7 +99,7 @@ class LogCountAxis(_Axis):
         super().__init__(orientation, text)
         self.logarithmic = False
 
-    def tickValues(self, minVal: float, maxVal: float, size: float) -> list[tuple[float, list[float]]]:  # noqa: N802, N803
+    def tickValues(self, minVal: float, maxVal: float, size: float) -> list[tuple[float, list[float]]]:
         """Return the places of ticks."""
         if not self.logarithmic:
             return _plain_ticks(minVal, maxVal, size, 56.0)
@@ -107,7 +107,7 @@ class LogCountAxis(_Axis):
         decades = [float(u) for u in range(int(np.ceil(minVal)), int(np.floor(maxVal)) + 1) if u % step == 0]
         return [(1.0, decades)]
 
-    def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:  # noqa: N802
+    def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:
         """Return the text of ticks."""
         if self.logarithmic:
             return [typeset.power_of_ten(round(value)) for value in values]
@@ -121,11 +121,11 @@ class PlainAxis(_Axis):
         super().__init__(orientation, text)
         self._whole = whole
 
-    def tickValues(self, minVal: float, maxVal: float, size: float) -> list[tuple[float, list[float]]]:  # noqa: N802, N803
+    def tickValues(self, minVal: float, maxVal: float, size: float) -> list[tuple[float, list[float]]]:
         """Return the places of ticks."""
         return _plain_ticks(minVal, maxVal, size, 64.0, whole=self._whole)
 
-    def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:  # noqa: N802
+    def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:
         """Return the text of ticks."""
         if self._whole:
             return [typeset.integer(round(value)) for value in values]

@@ -61,7 +61,7 @@ class ColumnModel(QAbstractTableModel):
         self._mask: npt.NDArray[np.bool_] | None = None
         self._sorted_by, self._descending = "", False
 
-    # -- content ----------------------------------------------------------------------------------------------------------
+    # -- content -----------------------------------------------------------------------------------------------------
 
     def set_columns(self, data: Mapping[str, npt.NDArray[Any]]) -> None:
         """Show other data, in the same order of sorting."""
@@ -105,13 +105,13 @@ class ColumnModel(QAbstractTableModel):
         found = np.flatnonzero(self.order == row)
         return int(found[0]) if len(found) else -1
 
-    # -- Qt's questions ---------------------------------------------------------------------------------------------------
+    # -- Qt's questions ----------------------------------------------------------------------------------------------
 
-    def rowCount(self, parent: Index = QModelIndex()) -> int:  # noqa: N802, B008 - Qt's name and form
+    def rowCount(self, parent: Index = QModelIndex()) -> int:  # noqa: B008 - Qt's name and form
         """Return the number of rows shown."""
         return 0 if parent.isValid() else len(self.order)
 
-    def columnCount(self, parent: Index = QModelIndex()) -> int:  # noqa: N802, B008 - Qt's name and form
+    def columnCount(self, parent: Index = QModelIndex()) -> int:  # noqa: B008 - Qt's name and form
         """Return the number of columns."""
         return 0 if parent.isValid() else len(self.columns)
 
@@ -129,7 +129,7 @@ class ColumnModel(QAbstractTableModel):
             return int(side | Qt.AlignmentFlag.AlignVCenter)
         return None
 
-    def headerData(self, section: int, orientation: Qt.Orientation, role: int = Qt.ItemDataRole.DisplayRole) -> Any:  # noqa: N802
+    def headerData(self, section: int, orientation: Qt.Orientation, role: int = Qt.ItemDataRole.DisplayRole) -> Any:
         """Return the title of a column."""
         if orientation != Qt.Orientation.Horizontal:
             return None

@@ -107,7 +107,7 @@ class TablePanel(QWidget):
         self.filter.setVisible(filtered)
         self._say()
 
-    # -- content ------------------------------------------------------------------------------------------------------
+    # -- content -----------------------------------------------------------------------------------------------------
 
     def show_columns(self, data: Mapping[str, npt.NDArray[Any]]) -> None:
         """Show other data under the same filter and order."""
@@ -152,7 +152,7 @@ class TablePanel(QWidget):
             typeset.integer(rows) if shown == rows else f"{typeset.integer(shown)} of {typeset.integer(rows)}"
         )
 
-    # -- doing --------------------------------------------------------------------------------------------------------
+    # -- doing -------------------------------------------------------------------------------------------------------
 
     def chosen_rows(self) -> list[int]:
         """Return the rows of the data that are selected."""

@@ -49,7 +49,7 @@ class GroupsPanel(QWidget):
         frame.session.document_changed.connect(self._document_changed)
         self.refresh()
 
-    def sizeHint(self) -> QSize:  # noqa: N802 - Qt's name
+    def sizeHint(self) -> QSize:
         """Ask for a modest part of the right side."""
         return QSize(300, 140)
 

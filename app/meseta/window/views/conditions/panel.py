@@ -25,6 +25,7 @@ from meseta import typeset
 from meseta.errors import MesetaError
 from meseta.window.conditions import Condition, ConditionSet
 from meseta.window.frame import Frame
+from meseta.window.layouts import emptied
 from meseta.window.pictures import SubsetPicture
 from meseta.window.session import Change
 from meseta.window.views.conditions.editor import ConditionEditor
@@ -102,7 +103,7 @@ class ConditionsPanel(QWidget):
         session.condition_problem.connect(self._show_problem)
         self.refresh()
 
-    def sizeHint(self) -> QSize:  # noqa: N802 - Qt's name
+    def sizeHint(self) -> QSize:
         """Ask for a modest part of the right side."""
         return QSize(300, 220)
 
@@ -149,7 +150,7 @@ class ConditionsPanel(QWidget):
         buttons.addStretch(1)
         return buttons
 
-    # -- showing ------------------------------------------------------------------------------------------------------
+    # -- showing -----------------------------------------------------------------------------------------------------
 
     @property
     def conditions(self) -> ConditionSet:
@@ -162,11 +163,7 @@ class ConditionsPanel(QWidget):
 
     def refresh(self) -> None:
         """Write the sentences again."""
-        while self.lines.count():
-            item = self.lines.takeAt(0)
-            if item is not None and item.widget() is not None:
-                item.widget().hide()
-                item.widget().deleteLater()
+        emptied(self.lines)
         shown = self.conditions
         for index, condition in enumerate(shown.conditions):
             self.lines.addWidget(_Line(self, index, condition))
@@ -197,7 +194,7 @@ class ConditionsPanel(QWidget):
         self.picked.setText("")
         self.wrong.setText(f"{error.what}. {error.remedy}".strip())
 
-    # -- changing -----------------------------------------------------------------------------------------------------
+    # -- changing ----------------------------------------------------------------------------------------------------
 
     def _change(self, text: str, conditions: ConditionSet) -> None:
         self.frame.session.change_conditions(text, conditions)

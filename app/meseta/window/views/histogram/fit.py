@@ -79,7 +79,7 @@ class FitLayer:
                 item.setData([], [])
         self._arrange_handles(list(range(len(fit.table))))
 
-    # -- handles --------------------------------------------------------------------------------------------------------
+    # -- handles -----------------------------------------------------------------------------------------------------
 
     def _arrange_handles(self, rows: list[int]) -> None:
         while len(self.handles) > len(rows):
@@ -176,7 +176,7 @@ class FitLayer:
             starts[row] = starts[row].model_copy(update={"position_g0": self._g0(float(self.handles[row].pos().y()))})
             self._write(f"move {self._fit.table.peak[row] or 'peak'}", starts)
 
-    # -- starting values ------------------------------------------------------------------------------------------------
+    # -- starting values ---------------------------------------------------------------------------------------------
 
     def starts(self) -> list[PeakStart]:
         """Return the starting values in use: those of the recipe, else the fitted peaks."""

@@ -9,8 +9,7 @@ import numpy as np
 import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QPointF
-from PySide6.QtGui import QPolygonF
-from PySide6.QtGui import QAction, QActionGroup
+from PySide6.QtGui import QAction, QActionGroup, QPolygonF
 from PySide6.QtWidgets import QGraphicsPolygonItem, QMenu, QToolButton
 
 from meseta import typeset
@@ -65,7 +64,7 @@ class HistogramPanel(SpinePanel):
         self.wear(frame.theme)
         self._draw()
 
-    # -- scale ----------------------------------------------------------------------------------------------------------
+    # -- scale -------------------------------------------------------------------------------------------------------
 
     def _scale_button(self) -> QToolButton:
         button, menu = QToolButton(), QMenu(self)
@@ -91,7 +90,7 @@ class HistogramPanel(SpinePanel):
         self.scale_button.setText(scale)
         self._draw()
 
-    # -- looks ----------------------------------------------------------------------------------------------------------
+    # -- looks -------------------------------------------------------------------------------------------------------
 
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""
@@ -122,7 +121,7 @@ class HistogramPanel(SpinePanel):
         shown: ConductanceHistogram | None = self.session.result("histogram")
         return shown if shown is not None and shown.grid.axis == self.session.axis else None
 
-    # -- drawing ----------------------------------------------------------------------------------------------------------
+    # -- drawing -----------------------------------------------------------------------------------------------------
 
     def _result_changed(self, name: str) -> None:
         if name in ("histogram", "peaks"):
@@ -270,7 +269,7 @@ class HistogramPanel(SpinePanel):
         words = {"out of date": "out of date", "working": "provisional" if shown else ""}
         self.say_state(words.get(state, "") if shown is not None else "")
 
-    # -- the numbers behind it ------------------------------------------------------------------------------------------
+    # -- the numbers behind it ---------------------------------------------------------------------------------------
 
     def data(self) -> PlotData | None:
         """Return the columns of ``histogram.csv``."""

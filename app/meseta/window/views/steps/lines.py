@@ -88,7 +88,8 @@ def _samples(count: int) -> str:
 def _alignment(session: Session) -> str:
     alignment = session.result("alignment")
     aligned = int(np.count_nonzero(np.isfinite(alignment.zero_drive)))
-    return f"{typeset.integer(aligned)} of {typeset.integer(len(alignment.zero_drive))} cross {typeset.conductance(alignment.level_g0, 2)}"
+    of = typeset.integer(len(alignment.zero_drive))
+    return f"{typeset.integer(aligned)} of {of} cross {typeset.conductance(alignment.level_g0, 2)}"
 
 
 def _noise(session: Session) -> str:

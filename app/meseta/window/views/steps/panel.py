@@ -29,7 +29,8 @@ class _Head(QWidget):
     def __init__(self, title: str) -> None:
         super().__init__()
         self.title, self.line = Elided(title, "title"), Elided()
-        self.state, self.theme, self.open = "none", None, False
+        self.state, self.open = "none", False
+        self.theme: Theme | None = None
         column = QVBoxLayout(self)
         column.setContentsMargins(12, 3, 4, 3)
         column.setSpacing(0)
@@ -48,11 +49,11 @@ class _Head(QWidget):
             self.state = state
             self.update()
 
-    def paintEvent(self, event: QPaintEvent) -> None:  # noqa: N802 - Qt's name
+    def paintEvent(self, event: QPaintEvent) -> None:
         """Paint the edge, and the paper behind an open step."""
         if self.theme is None:
             return
-        theme: Theme = self.theme
+        theme = self.theme
         painter = QPainter(self)
         if self.open or self.hasFocus():
             painter.fillRect(self.rect(), theme.colour("panel"))
@@ -62,12 +63,12 @@ class _Head(QWidget):
             painter.drawRect(self.rect().adjusted(0, 0, -1, -1))
         painter.end()
 
-    def mouseReleaseEvent(self, event: QMouseEvent) -> None:  # noqa: N802 - Qt's name
+    def mouseReleaseEvent(self, event: QMouseEvent) -> None:
         """Open or close the step."""
         if event.button() == Qt.MouseButton.LeftButton and self.rect().contains(event.position().toPoint()):
             self.pressed.emit()
 
-    def keyPressEvent(self, event: QKeyEvent) -> None:  # noqa: N802 - Qt's name
+    def keyPressEvent(self, event: QKeyEvent) -> None:
         """Open or close the step with Enter or Space; go to the next or the one before with the arrows."""
         if event.key() in (Qt.Key.Key_Return, Qt.Key.Key_Enter, Qt.Key.Key_Space):
             self.pressed.emit()
@@ -88,17 +89,17 @@ class _Card(QWidget):
         self.head = _Head(title)
         self.head.pressed.connect(lambda: panel.toggle(self.section))
         self.form: SectionForm | None = None
-        column = QVBoxLayout(self)
-        column.setContentsMargins(0, 0, 0, 0)
-        column.setSpacing(0)
-        column.addWidget(self.head)
+        self._column = QVBoxLayout(self)
+        self._column.setContentsMargins(0, 0, 0, 0)
+        self._column.setSpacing(0)
+        self._column.addWidget(self.head)
 
     def set_open(self, open_: bool) -> None:
         """Show or hide the form."""
         if open_ and self.form is None:
             settings = type(getattr(self._panel.frame.session.document.recipe, self.section))
             self.form = SectionForm(self._panel.frame, self.section, settings, self.section)
-            self.layout().addWidget(self.form)
+            self._column.addWidget(self.form)
         if self.form is not None:
             self.form.setVisible(open_)
         self.head.open = open_
@@ -153,7 +154,7 @@ class StepsPanel(QWidget):
         outer.addWidget(self.area)
         self.setMinimumWidth(248)
 
-    def sizeHint(self) -> QSize:  # noqa: N802 - Qt's name
+    def sizeHint(self) -> QSize:
         """Ask for a narrow column."""
         return QSize(264, 600)
 

@@ -1,4 +1,4 @@
-"""The whole recording, one column a trace (or a few): where am I, does it drift, what happened when, what is selected."""
+"""The whole recording, one column a trace: where am I, does it drift, what happened when, what is selected."""
 
 from __future__ import annotations
 
@@ -87,7 +87,7 @@ class StripPanel(PlotPanel):
         self._draw()
         self._draw_ribbons()
 
-    # -- what is shown --------------------------------------------------------------------------------------------------
+    # -- what is shown -----------------------------------------------------------------------------------------------
 
     def _traces_changed(self) -> None:
         traces = self.session.traces
@@ -132,7 +132,7 @@ class StripPanel(PlotPanel):
         self.conductance.set_logarithmic(picture is None or picture.axis == "logarithmic")
         self.box.setYRange(low, high + 2 * RIBBON * (high - low), padding=0)
 
-    # -- drawing --------------------------------------------------------------------------------------------------------
+    # -- drawing -----------------------------------------------------------------------------------------------------
 
     def _draw(self) -> None:
         picture = self._picture
@@ -213,7 +213,7 @@ class StripPanel(PlotPanel):
                 item.setPen(theme.pen("selected"))
                 item.setBrush(pg.mkBrush(theme.colour("selected", 40)))
 
-    # -- gestures -------------------------------------------------------------------------------------------------------
+    # -- gestures ----------------------------------------------------------------------------------------------------
 
     def show_all(self) -> None:
         """Show the whole record."""

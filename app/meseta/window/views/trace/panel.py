@@ -52,7 +52,7 @@ class TracePanel(DrivePanel):
         self.wear(frame.theme)
         self._traces_changed()
 
-    # -- looks ----------------------------------------------------------------------------------------------------------
+    # -- looks -------------------------------------------------------------------------------------------------------
 
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""
@@ -76,7 +76,7 @@ class TracePanel(DrivePanel):
         label.fill = pg.mkBrush(theme.colour("panel", 190))
         label.update()
 
-    # -- what is drawn --------------------------------------------------------------------------------------------------
+    # -- what is drawn -----------------------------------------------------------------------------------------------
 
     def _lowest(self) -> float:
         """Return a height just below the view, where readings at or below zero are drawn."""
@@ -180,7 +180,7 @@ class TracePanel(DrivePanel):
         if overlay.drawn < overlay.asked:
             self.overlay.setToolTip(f"{overlay.drawn} of {overlay.asked} traces drawn")
 
-    # -- the numbers behind it ------------------------------------------------------------------------------------------
+    # -- the numbers behind it ---------------------------------------------------------------------------------------
 
     def data(self) -> PlotData | None:
         """Return the current trace as drawn."""
