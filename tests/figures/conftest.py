@@ -68,6 +68,6 @@ def metal():
 @pytest.fixture(scope="session")
 def analysis():
     """A small simulated recording of molecular junctions, worked through."""
-    traces = simulate("molecule", 80, 5, SimulationSettings(samples=1200)).traces
+    traces = simulate("molecule", 160, 5, SimulationSettings(samples=1500, yield_share=0.8)).traces
     recipe = Recipe.preset("molecule").with_values("resampling", replicates=60)
     return Analysis(traces, recipe.with_values("correlation", permutations=20))

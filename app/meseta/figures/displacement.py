@@ -6,7 +6,7 @@ import numpy as np
 import numpy.typing as npt
 from matplotlib.axes import Axes
 from matplotlib.colorbar import Colorbar
-from matplotlib.colors import ListedColormap, LogNorm, Normalize, PowerNorm
+from matplotlib.colors import Colormap, ListedColormap, LogNorm, Normalize, PowerNorm
 from matplotlib.ticker import FixedFormatter, FixedLocator, NullLocator
 
 from meseta import colours, typeset
@@ -21,7 +21,7 @@ _TOP_SHARE = 99.9
 """Percentile of the cells with samples at which the colour scale ends; what lies above has the last colour."""
 
 
-def colour_map(name: str) -> ListedColormap:
+def colour_map(name: str) -> Colormap:
     """Return the named ramp; masked cells are the paper."""
     return ListedColormap(colours.ramp(name), name=f"meseta-{name}").with_extremes(bad=colours.LIGHT.panel)
 

@@ -268,7 +268,7 @@ def _peaks(stated: Stated, analysis: Analysis, work: Work) -> list[str]:
         "integrals; every replicate was fitted again.",
         number,
     ]
-    if len(fit.table):
+    if np.any(np.isfinite(fit.table.fit_low_g0)):
         low, high = float(np.nanmin(fit.table.fit_low_g0)), float(np.nanmax(fit.table.fit_high_g0))
         sentences.append(f"The fit spans {typeset.interval(low, high, 'G0')}.")
     if fit.systematic:
