@@ -194,7 +194,9 @@ def bench_correlation(matrix: CountMatrix) -> None:
 
     best = in_turn({"ours": lambda: correlation_of(values), "peer": peer})
     share = best["ours"] / best["peer"]
-    print(f"correlation 800 x 800: {best['ours']:.3f} s against corrcoef {best['peer']:.3f} s, {share:.2f} of it (asked: 0.6)")
+    print(
+        f"correlation 800 x 800: {best['ours']:.3f} s against corrcoef {best['peer']:.3f} s, {share:.2f} of it (asked: 0.6)"
+    )
 
 
 def bench_bootstrap(matrix: CountMatrix) -> None:
@@ -215,7 +217,9 @@ def bench_bootstrap(matrix: CountMatrix) -> None:
     assert np.array_equal(result.counts, weights @ values)
     best = in_turn({"ours": ours, "peer": lambda: weights @ values}, rounds=4)
     share = best["ours"] / best["peer"]
-    print(f"1,000 bootstrap replicates {values.shape}: {best['ours']:.3f} s, {share:.2f} of one matrix product (asked: 1.3)")
+    print(
+        f"1,000 bootstrap replicates {values.shape}: {best['ours']:.3f} s, {share:.2f} of one matrix product (asked: 1.3)"
+    )
 
 
 def main(number: int) -> None:

@@ -106,7 +106,9 @@ class Coverage:
     effective: float
 
 
-def outcomes(scenario: Scenario, experiments: int, replicates: int, seed: int) -> Iterator[tuple[np.ndarray, bool, float, Resampling]]:
+def outcomes(
+    scenario: Scenario, experiments: int, replicates: int, seed: int
+) -> Iterator[tuple[np.ndarray, bool, float, Resampling]]:
     recipe = Recipe().with_values("resampling", replicates=replicates)
     truth = expected_counts(scenario)
     true_density = truth * 0.001 / GRID.widths

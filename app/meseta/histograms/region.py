@@ -18,7 +18,7 @@ __all__ = ["Region", "nm_a_sample", "region_of"]
 
 Integers = npt.NDArray[np.int64]
 
-_FLOOR_SIGMA = 3.0
+_FLOOR_SIGMA = 4.0
 _UNTIMED_TAIL = 50
 """Samples of tail where the sample interval is not known."""
 
@@ -58,7 +58,7 @@ def region_of(
     """Return the samples of each trace that take part.
 
     "phase": all samples of the phase.  "before_zero": up to the zero of displacement.  "after_zero": from the zero
-    until the trace has stayed within 3 sigma of the floor for ``floor_tail_second`` (50 samples where the sample
+    until the trace has stayed within 4 sigma of the floor for ``floor_tail_second`` (50 samples where the sample
     interval is unknown); a trace without a zero has no such region.
     """
     origin = traces.offsets[:-1]

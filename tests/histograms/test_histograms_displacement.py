@@ -1,0 +1,139 @@
+"""The 2D conductance-displacement histogram: equal to boost-histogram, exact under a selection, ridge and profiles."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import boost_histogram as bh
+import numpy as np
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from small_recordings import aligned_at, explicit_drive, log_uniform, noise_model, recording
+
+from meseta.histograms import DisplacementHistogram, Grid, displacement_counts, displacement_of_selection, kernels
+from meseta.recipe import Recipe
+from meseta.traces import TraceSet
+from meseta.work import Work
+
+ZERO = 0.3
+
+
+def counted(traces: TraceSet, recipe: Recipe, kept: np.ndarray | None = None, zero=None) -> DisplacementHistogram:
+    kept = np.ones(traces.traces, bool) if kept is None else kept
+    zero = aligned_at(ZERO, 150, traces.traces) if zero is None else zero
+    phases = ("push",) if recipe.histogram.direction == "closing" else ("pull",)
+    return displacement_counts(
+        traces, recipe.displacement_histogram, recipe.histogram, noise_model(), zero, kept, phases
+    )
+
+
+def by_boost(traces: TraceSet, found: DisplacementHistogram, zero: float, rows: np.ndarray) -> np.ndarray:
+    plane = bh.Histogram(
+        bh.axis.Variable(found.drive_edges), bh.axis.Variable(found.grid.edges_g0), storage=bh.storage.Int64()
+    )
+    for row in np.flatnonzero(rows):
+        plane.fill(traces.trace_drive(row) - zero, traces.trace_conductance(row).astype(np.float64))
+    return plane.values()
+
+
+def frame(**changes) -> Recipe:
+    return Recipe().with_values("displacement_histogram", **{"bins": 37, "low_nm": -0.2, "high_nm": 0.5, **changes})
+
+
+@pytest.mark.parametrize("axis", ["logarithmic", "linear"])
+@pytest.mark.parametrize("kind", ["steps", "falling steps", "explicit", "flagged"])
+def test_equal_to_boost_histogram_cell_for_cell(axis: str, kind: str) -> None:
+    values = log_uniform(15, 400, 11)
+    recipe = frame().with_values("histogram", axis=axis)
+    quality = np.random.default_rng(0).choice([0, 0, 1, 8], values.shape) if kind == "flagged" else None
+    traces = recording(values, -0.002 if kind == "falling steps" else 0.002, quality)
+    if kind == "explicit":
+        wander = np.cumsum(np.random.default_rng(3).normal(0.002, 0.004, values.shape), 1)
+        traces = explicit_drive(traces, wander - wander[:, :1])
+    zero = -ZERO if kind == "falling steps" else ZERO
+    found = counted(traces, recipe, zero=aligned_at(zero, 150, 15))
+    if kind == "flagged":
+        traces = replace(recording(np.where(quality > 0, np.nan, values).astype(np.float32)), quality=None)
+    assert found.counts.sum() > 1000
+    assert np.array_equal(found.counts, by_boost(traces, found, zero, np.ones(15, bool)))
+
+
+@given(
+    start=st.floats(-1, 1),
+    step=st.sampled_from([0.1, 0.02, -0.02, 1e-3, -7e-4, 0.35]),
+    zero=st.floats(-0.5, 0.5),
+    columns=st.integers(1, 60),
+)
+def test_steps_that_fall_on_edges(start: float, step: float, zero: float, columns: int) -> None:
+    """The quick search for the samples of a column decides as the drive itself, computed as everywhere."""
+    samples = 200
+    edges = np.linspace(-0.3, 0.9, columns + 1)
+    values = np.full(samples, 0.5, np.float32)
+    one = np.zeros(1, np.int64)
+    tally = np.zeros((2, columns, 2), np.uint32)
+    kernels.count_stepped_grid(
+        values, one, one, np.array([samples]), one, np.array([start]), np.array([step]), np.array([zero]), edges,
+        np.zeros(1 << 17, np.uint16), np.array([np.nan, np.nan], np.float32), 1, tally,
+    )  # fmt: skip
+    drive = (start + step * np.arange(samples)) - zero
+    plain = np.searchsorted(edges, drive, side="right") - 1
+    inside = (plain >= 0) & (plain < columns)
+    assert np.array_equal(tally.sum((0, 2)), np.bincount(plain[inside], minlength=columns))
+
+
+def test_traces_without_a_zero_are_left_out_and_counted() -> None:
+    traces = recording(log_uniform(10, 200, 2))
+    zero = aligned_at(np.where(np.arange(10) < 3, np.nan, ZERO), 100, 10)
+    found = counted(traces, frame(), zero=zero)
+    assert (found.traces, found.not_aligned) == (7, 3)
+    assert np.array_equal(found.counts, by_boost(traces, found, ZERO, np.arange(10) >= 3))
+
+
+@pytest.mark.parametrize("share", [0.0, 0.2, 0.5, 0.9, 1.0])
+def test_a_selection_is_exact_and_counts_only_the_smaller_side(share: float) -> None:
+    traces, recipe = recording(log_uniform(20, 300, 5)), frame()
+    kept = np.arange(20) < round(20 * share)
+    spans, touched = [(0, 8), (8, 20)], []
+    zero = aligned_at(np.where(np.arange(20) % 6 == 0, np.nan, ZERO), 100, 20)
+
+    def count(span: tuple[int, int], chosen: np.ndarray) -> DisplacementHistogram:
+        touched.append(int(chosen[slice(*span)].sum()))
+        return counted(traces.block(*span), recipe, chosen[slice(*span)], zero.block(*span))
+
+    whole = counted(traces, recipe, zero=zero)
+    found = displacement_of_selection(whole, kept, count, spans, Work(threads=1))
+    direct = counted(traces, recipe, kept, zero)
+    assert np.array_equal(found.counts, direct.counts)
+    assert (found.traces, found.not_aligned) == (direct.traces, direct.not_aligned)
+    assert np.allclose(found.density, direct.density)
+    assert sum(touched) <= 10
+
+
+def test_density_integrates_to_samples_per_trace() -> None:
+    traces = recording(np.full((4, 350), 0.5, np.float32))
+    found = counted(traces, frame())
+    area = np.diff(found.drive_edges)[:, None] * found.grid.widths
+    assert (found.density * area).sum() == pytest.approx(found.counts.sum() / 4, rel=1e-12)
+    assert found.density_unit == "counts / trace / nm / decade"
+
+
+def test_ridge_follows_a_known_decay_and_profiles_are_distributions() -> None:
+    """Traces that fall by 2 decades/nm with a log-normal scatter of 0.1 decade: median and spread are known."""
+    random = np.random.default_rng(9)
+    drive = np.arange(350) * 0.002
+    values = 10 ** (-2 * drive + 0.1 * random.standard_normal((400, 350)))
+    found = counted(recording(values.astype(np.float32)), frame(bins=20))
+    ridge = found.ridge()
+    full = (ridge.drive > -0.19) & (ridge.drive < 0.39)
+    line = -2 * (ridge.drive + ZERO)
+    assert np.abs(np.log10(ridge.median_g0) - line)[full].max() < 0.01
+    spread = np.log10(ridge.high_g0 / ridge.low_g0)[full] / 2
+    # the decay within a column of 0.035 nm (0.07 decade, uniform) adds to the scatter
+    assert spread == pytest.approx(np.full(full.sum(), np.hypot(0.1, 0.07 / np.sqrt(12))), rel=0.06)
+    profile = found.profile(int(np.flatnonzero(full)[0]))
+    assert (profile * found.grid.widths).sum() == pytest.approx(1.0, rel=1e-12)
+    assert np.isnan(DisplacementHistogram(
+        Grid(found.grid.edges_g0, "logarithmic"), found.drive_edges, "nm", found.counts * 0, 0, 0, found.density, ""
+    ).profile(0)).all()  # fmt: skip
+    assert [len(axis) for axis in found.plottable().axes] == list(found.counts.shape)
