@@ -39,6 +39,7 @@ __all__ = [
     "Step",
     "conductance_histogram",
     "correlation_histogram",
+    "defensible_analyses",
     "displacement_histogram",
     "find_plateaus",
     "fit_peaks",
@@ -602,3 +603,26 @@ def fit_peaks(
         fit: peaks.PeakFit = Analysis(histogram, recipe).result("peaks", work)
         return fit.table
     return peaks.fit_histogram(histogram, recipe.peaks, None, None, None, work or Work()).table
+
+
+def defensible_analyses(analysis: Analysis, work: Work | None = None) -> peaks.DefensibleAnalyses:
+    """Fit the peaks of an analysis under all combinations of choices that could be defended as well.
+
+    To line shape, background, fit range and bin width come other histograms: all traces instead of the selected ones,
+    another zero of displacement, another region.  Returns one row a peak and analysis, the chosen one marked.
+    """
+    recipe = analysis.recipe
+    others = {"as chosen": recipe}
+    if recipe.selection.rules:
+        others["no selection"] = recipe.with_values("selection", rules=[])
+    if recipe.histogram.region == "phase":
+        others["from the rupture on"] = recipe.with_values("histogram", region="after_zero")
+        others["up to the rupture"] = recipe.with_values("histogram", region="before_zero")
+    else:
+        others["whole phase"] = recipe.with_values("histogram", region="phase")
+        for factor in (0.6, 1.4):
+            level = recipe.alignment.zero_at_g0 * factor
+            others[f"zero at {level:.2g} G0"] = recipe.with_values("alignment", zero_at_g0=level)
+    made = {name: analysis.with_recipe(other).histogram(work) for name, other in others.items()}
+    fit: peaks.PeakFit = analysis.result("peaks", work)
+    return peaks.defensible_analyses(made, fit.table, recipe.peaks, work)

@@ -106,7 +106,7 @@ class Chooser:
 
     def _proposed(self, found: Sequence[Candidate]) -> list[Window]:
         """Return windows with those of the found peaks that left-out traces support, one after the other."""
-        blocks = self._blocks()
+        blocks = self.blocks()
         chosen: list[Start] = []
         windows: list[Window] = []
         standing = list(found)
@@ -190,14 +190,14 @@ class Chooser:
         narrow = fitted.model.logarithmic and position < np.log10(_SUB_QUANTUM_G0)
         return not (narrow and width * WIDTH_TO_FWHM < _SUB_QUANTUM_FWHM)
 
-    def _blocks(self) -> Floats | None:
+    def blocks(self, number: int = 10) -> Floats | None:
         """Return the counts of blocks of consecutive traces on the histogram's bins, if traces are known."""
         if self.counts is None:
             return None
         rows = np.flatnonzero(self.counts.used) if self.resampling is None else self.resampling.rows
         if len(rows) < 20:
             return None
-        blocks = rebinned(block_counts(self.counts.counts, rows), self.counts.merge)
+        blocks = rebinned(block_counts(self.counts.counts, rows, number), self.counts.merge)
         return blocks if blocks.shape[1] == self.histogram.grid.bins else None
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import numpy.typing as npt
+from scipy.ndimage import gaussian_filter1d
 
 from meseta.histograms.results import ConductanceHistogram, CountMatrix, Resampling
 from meseta.peaks.choosing import Chooser
@@ -20,6 +21,8 @@ from meseta.work import Work
 __all__ = ["fit_histogram"]
 
 Floats = npt.NDArray[np.float64]
+
+_BCA_GROUPS = 200
 
 
 def fit_histogram(
@@ -82,9 +85,28 @@ def fit_histogram(
 def _fitted(chooser: Chooser, window: Window, work: Work) -> FittedWindow:
     """Return the fit of one stretch, its refits and its shifts."""
     work.check()
-    fitted = fit_model(chooser.model(window), chooser.data(window))
+    weights = _weights(chooser, window)
+    fitted = fit_model(chooser.model(window), chooser.data(window), weights)
     inside = slice(window.first, window.last)
-    replicates = None if chooser.resampling is None else refit(fitted, chooser.resampling.counts[:, inside], work)
-    return FittedWindow(
-        window, fitted, replicates, systematic_shifts(fitted, chooser.varied, window, chooser.histogram)
-    )
+    drawn = chooser.resampling
+    replicates = None if drawn is None else refit(fitted, drawn.counts[:, inside], work, weights)
+    left_out = None
+    if chooser.settings.intervals == "bca" and (groups := chooser.blocks(_BCA_GROUPS)) is not None:
+        left_out = refit(fitted, (groups.sum(axis=0) - groups)[:, inside], work, weights)
+    shifts = systematic_shifts(fitted, chooser.varied, window, chooser.histogram)
+    return FittedWindow(window, fitted, replicates, left_out, shifts)
+
+
+def _weights(chooser: Chooser, window: Window) -> Floats | None:
+    """Return the weights of least squares; None for the likelihood.
+
+    Variances are smoothed over a few bins: where they follow each bin's own chance, low bins weigh too much.
+    """
+    if chooser.settings.method == "likelihood":
+        return None
+    if chooser.resampling is None:
+        variance = chooser.histogram.counts.astype(float)
+    else:
+        variance = chooser.resampling.counts.var(axis=0)
+    smooth = gaussian_filter1d(variance, 3.0, mode="nearest")[window.first : window.last]
+    return 1.0 / np.maximum(smooth, 1e-3 * max(float(smooth.max()), 1e-300))

@@ -11,7 +11,7 @@ from scipy.ndimage import gaussian_filter1d
 
 from meseta.histograms.results import ConductanceHistogram, Grid, Resampling
 from meseta.peaks.fitting import Fitted, Refitted
-from meseta.peaks.intervals import Interval, percentile_interval
+from meseta.peaks.intervals import Interval, bca_interval, percentile_interval
 from meseta.peaks.meaning import assignment, channels_at_least
 from meseta.peaks.model import WIDTH_TO_FWHM
 from meseta.peaks.results import PeakFit, PeakTable
@@ -32,11 +32,12 @@ _NO_TRACES = "no interval: a histogram alone does not know its traces"
 
 @dataclass(frozen=True)
 class FittedWindow:
-    """One stretch of the axis with its fit, refits and shifts."""
+    """One stretch of the axis with its fit, refits of resampled and of left-out traces, and shifts."""
 
     window: Window
     fitted: Fitted
     replicates: Refitted | None
+    left_out: Refitted | None
     shifts: tuple[tuple[str, Floats], ...]
 
 
@@ -83,7 +84,7 @@ def weakest_peak(parts: Sequence[FittedWindow]) -> Start | None:
     """Return the peak with the smallest area in standard errors, if that is below three: not to be proposed."""
     strength = {}
     for part in parts:
-        interval = _interval(part.fitted, part.replicates, 0, 1.0)
+        interval = _interval(part, 0, 1.0)
         for peak, start in enumerate(part.window.starts):
             area, sigma = part.fitted.peaks[peak, 0], _area_sigma(part.fitted, peak, interval)
             strength[start] = area / sigma if sigma > 0 else float("inf") if area > 0 else 0.0
@@ -116,10 +117,10 @@ def _rows(
     plateaus: PlateauTable | None,
 ) -> list[_Row]:
     fitted, model = part.fitted, part.fitted.model
-    replicates, factor = part.replicates, 1.0 if resampling is None else resampling.widen
+    factor = 1.0 if resampling is None else resampling.widen
     counts = histogram.counts[part.window.first : part.window.last].astype(float)
     verdicts = fit_verdicts(fitted, counts)
-    intervals = [_interval(fitted, replicates, column, factor) for column in range(3)]
+    intervals = [_interval(part, column, factor) for column in range(3)]
     spread = half_spread(part.shifts, model.peaks)
     area_scale = _area_scale(histogram, part)
     rows = []
@@ -158,11 +159,17 @@ def _rows(
     return rows
 
 
-def _interval(fitted: Fitted, replicates: Refitted | None, column: int, factor: float) -> Interval:
+def _interval(part: FittedWindow, column: int, factor: float) -> Interval:
+    """Return the interval of area (0), position (1) or width (2) of every peak."""
+    fitted, replicates = part.fitted, part.replicates
     if replicates is None or not fitted.converged:
         nothing = np.full(fitted.model.peaks, np.nan)
         return Interval(nothing, nothing, nothing)
-    interval = percentile_interval(fitted.peaks[:, column], replicates.peaks[:, :, column], factor)
+    estimate, drawn = fitted.peaks[:, column], replicates.peaks[:, :, column]
+    if part.left_out is None:
+        interval = percentile_interval(estimate, drawn, factor)
+    else:
+        interval = bca_interval(estimate, drawn, part.left_out.peaks[:, :, column], factor)
     if column in (0, 2):  # an area and a width are never negative, however far the factor stretches
         return Interval(np.maximum(interval.low, 0.0), interval.high, interval.sigma)
     return interval

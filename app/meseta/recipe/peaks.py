@@ -48,6 +48,12 @@ class PeakSettings(Section):
         "Smooth part under the peaks, on the axis of the fit; 'tunnelling': the traces without a plateau, scaled; "
         "'template': a given shape (a blank recording), scaled.",
     )
+    method: Literal["likelihood", "least_squares"] = setting(
+        "likelihood",
+        "Method",
+        "'likelihood': extended binned Poisson likelihood; 'least_squares': weighted by the variance of the resampled "
+        "histograms.",
+    )
     tie: Literal["none", "multiples", "ladder"] = setting(
         "none",
         "Tie positions",
@@ -59,12 +65,14 @@ class PeakSettings(Section):
     intervals: Literal["percentile", "bca"] = setting(
         "percentile",
         "Intervals",
-        "From the resampled fits: percentiles, or bias-corrected and accelerated ones over up to 200 groups of traces.",
+        "From the resampled fits: percentiles, or bias-corrected and accelerated ones over 200 groups of traces.",
     )
     peaks: list[PeakStart] = setting(
         None, "Peaks", "Peaks to fit, with starting values; empty: proposed from the histogram.", factory=list
     )
-    most: int = setting(4, "Most peaks", "Largest number of peaks that is proposed above 0.4 G0, and below.", ge=1, le=20)
+    most: int = setting(
+        4, "Most peaks", "Largest number of peaks that is proposed above 0.4 G0, and below.", ge=1, le=20
+    )
     fit_low_g0: float | None = setting(
         None,
         "Fit from",
