@@ -3,7 +3,7 @@
     python tests/benchmarks/bench_peaks.py
 
 The same resampled histograms are refitted by ``scipy.optimize.least_squares`` on the signed deviance residuals (the
-same minimum) with the same start; a sample of them, scaled up.  Best of several rounds, taken in turns; the answers must
+same minimum) with the same start; a sample of them, scaled up.  Best of several rounds in turns; the answers must
 agree.
 """
 
