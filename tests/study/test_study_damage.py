@@ -40,6 +40,8 @@ def _fails_or_equals(path, traces):
             assert expected is None or value == expected
     if not any(statement.startswith(("the traces", "the list", "the recipe")) for statement in study.damage):
         held = study.traces()
+        assert (held.key, held.notes, held.drive.unit) == (traces.key, traces.notes, traces.drive.unit)
+        assert held.channels["conductance"].unit == "G0" and held.identities() == traces.identities()
         lost = _lost_samples(study)
         samples = held.channels["conductance"].samples
         for start in range(0, held.samples, 400):

@@ -20,7 +20,7 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import StudyError
-from meseta.study.columns import write_array
+from meseta.study.columns import write_array, write_attribute
 from meseta.study.strict import dataset, filters, read_array, read_attribute
 from meseta.traces import Quality, Samples
 
@@ -171,7 +171,7 @@ class SampleRow:
             chunk = min(max(1 << max(expected - 1, 0).bit_length(), 4096), CHUNK_SAMPLES)
             kind = np.dtype(dtype).newbyteorder("<")
             self._made = parent.create_dataset(name, shape=(0,), maxshape=(None,), chunks=(chunk,), dtype=kind)
-            self._made.attrs["unit"] = unit
+            write_attribute(self._made, "unit", unit)
             self.length, self._checksums = 0, list[int]()
         else:
             self._made, chunk = parent[name], written.chunk

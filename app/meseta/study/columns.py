@@ -10,13 +10,16 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["json_text", "write_array", "write_columns", "write_text"]
+__all__ = ["json_text", "write_array", "write_attribute", "write_columns", "write_text"]
 
 _ROWS = 16_384
 
 
-def write_array(parent: h5py.Group, name: str, values: npt.ArrayLike, unit: str = "") -> h5py.Dataset:
-    """Write a column of numbers, truths or texts in checksummed chunks; replaces one of that name."""
+def write_array(parent: h5py.Group, name: str, values: npt.ArrayLike, unit: str = "", chunk: int = 0) -> h5py.Dataset:
+    """Write a column of numbers, truths or texts in checksummed chunks; replaces one of that name.
+
+    A column that is to grow needs its ``chunk`` stated.
+    """
     array = np.asarray(values)
     if array.dtype.kind in "UOTM":
         array = np.char.encode(array.astype(np.str_), "utf-8")
@@ -32,15 +35,24 @@ def write_array(parent: h5py.Group, name: str, values: npt.ArrayLike, unit: str 
         name,
         shape=array.shape,
         dtype=kind,
-        chunks=tuple(max(min(size, _ROWS), 1) for size in array.shape) or None,
+        chunks=tuple(chunk or max(min(size, _ROWS), 1) for size in array.shape) or None,
         maxshape=tuple(None for _ in array.shape) or None,
         **({"compression": "gzip", "compression_opts": 4, "shuffle": True, "fletcher32": True} if array.ndim else {}),
     )
     if array.size:
         made[...] = array
     if unit:
-        made.attrs["unit"] = unit
+        write_attribute(made, "unit", unit)
     return made
+
+
+def write_attribute(item: h5py.Group | h5py.Dataset, name: str, value: str | int) -> None:
+    """Write an attribute; a text at its fixed length, so that it lies within a block that HDF5 checksums."""
+    if isinstance(value, str):
+        body = value.encode()
+        item.attrs.create(name, np.array(body, h5py.string_dtype("utf-8", max(len(body), 1))))
+    else:
+        item.attrs[name] = value
 
 
 def write_columns(parent: h5py.Group, columns: Mapping[str, npt.ArrayLike]) -> None:

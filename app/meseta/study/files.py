@@ -16,6 +16,7 @@ import h5py
 
 from meseta import __version__
 from meseta.errors import OutputError, StudyError
+from meseta.study.columns import write_attribute
 from meseta.study.migration import migrate
 from meseta.study.pages import PagedFile, log_of, room_remedy, sync_folder, whole_log
 from meseta.study.strict import read_attribute, reading
@@ -54,7 +55,7 @@ def is_study(path: str | Path) -> bool:
 def _is_marked(path: Path) -> bool:
     try:
         with h5py.File(path, "r", locking=False) as root:
-            return str(root.attrs.get("format", "")) == FORMAT
+            return str(read_attribute(root, "format")) == FORMAT
     except (OSError, RuntimeError, ValueError, KeyError):
         return False
 
@@ -78,11 +79,11 @@ def making(path: Path, identity: str = "") -> Iterator[h5py.File]:
     try:
         with PagedFile(partial, writable=True, fresh=True) as paged:
             with _hdf5(paged, "w") as root:
-                root.attrs["format"] = FORMAT
-                root.attrs["schema"] = SCHEMA
-                root.attrs["id"] = identity or uuid.uuid4().hex
-                root.attrs["made"] = datetime.now(UTC).isoformat(timespec="seconds")
-                root.attrs["written_by"] = __version__
+                write_attribute(root, "format", FORMAT)
+                write_attribute(root, "schema", SCHEMA)
+                write_attribute(root, "id", identity or uuid.uuid4().hex)
+                write_attribute(root, "made", datetime.now(UTC).isoformat(timespec="seconds"))
+                write_attribute(root, "written_by", __version__)
                 yield root
             paged.commit()
         partial.replace(path)
@@ -100,7 +101,7 @@ def changing(path: Path) -> Iterator[h5py.File]:
     try:
         with PagedFile(path, writable=True) as paged:
             with _hdf5(paged, "r+") as root:
-                root.attrs["written_by"] = __version__
+                write_attribute(root, "written_by", __version__)
                 yield root
             paged.commit()
     except OSError as error:

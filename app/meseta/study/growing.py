@@ -13,7 +13,7 @@ import numpy.typing as npt
 
 from meseta.errors import InputError, StudyError
 from meseta.study.chunks import ChunkSamples, SampleRow
-from meseta.study.columns import json_text, write_array, write_columns, write_text
+from meseta.study.columns import json_text, write_array, write_attribute, write_columns, write_text
 from meseta.study.content import PHASES
 from meseta.traces import PhaseTable, Samples, TraceSet
 from meseta.work import Work
@@ -144,9 +144,9 @@ class TraceWriter:
         for row in self._rows.values():
             row.finish()
         home, traces = self._home, self._ends
-        home.attrs["key"] = key
-        home.attrs["recipe_key"] = recipe_key
-        home.attrs["drive_unit"] = traces.drive.unit
+        write_attribute(home, "key", key)
+        write_attribute(home, "recipe_key", recipe_key)
+        write_attribute(home, "drive_unit", traces.drive.unit)
         write_array(home, "offsets", traces.offsets)
         write_array(home, "drive_start", traces.drive.start, traces.drive.unit)
         step = traces.drive.step if "drive_relative" not in self._rows else np.full(traces.traces, np.nan)
@@ -157,7 +157,7 @@ class TraceWriter:
                 del home[name]
         write_columns(home.create_group("phases"), {name: getattr(traces.phases, name) for name in PHASES})
         write_columns(home.create_group("table"), traces.table)
-        home["table"].attrs["order"] = json.dumps(list(traces.table))
+        write_attribute(home["table"], "order", json.dumps(list(traces.table)))
         return traces
 
 

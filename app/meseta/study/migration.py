@@ -8,7 +8,7 @@ from collections.abc import Callable, Mapping
 import h5py
 import numpy as np
 
-from meseta.study.columns import write_array, write_text
+from meseta.study.columns import write_array, write_attribute, write_text
 from meseta.study.strict import group, read_array, read_text
 
 __all__ = ["migrate"]
@@ -33,11 +33,11 @@ def _tables_for_decisions(root: h5py.Group) -> None:
     write_decisions(root, decisions)
     write_history(root, History.begun("study of schema 1"))
     write_text(root, "versions", json.dumps({"meseta": str(root.attrs["written_by"])}))
-    root.attrs["made"] = ""
+    write_attribute(root, "made", "")
     sources = group(root, "sources")
     write_array(sources, "raw", np.full(len(read_array(sources, "name")), "none"))
     recipe = Recipe.parse(read_text(root, "recipe"))
-    group(root, "traces").attrs["recipe_key"] = recipe.key(FROM_RAW)
+    write_attribute(group(root, "traces"), "recipe_key", recipe.key(FROM_RAW))
 
 
 _STEPS: Mapping[int, Callable[[h5py.Group], None]] = {1: _tables_for_decisions}

@@ -34,6 +34,7 @@ __all__ = [
 FROM_RAW: Final = ("intake", "calibration", "cutting")
 """Sections of the recipe that decide how traces are made of recordings."""
 
+_EDITS_CHUNK: Final = 65_536
 _LIBRARIES = ("numpy", "scipy", "numba", "h5py", "pyarrow")
 _HEADS: Final = ("number", "when", "version", "kind", "text", "parent", "state")
 
@@ -170,7 +171,7 @@ def write_history(root: h5py.Group, history: History) -> None:
     write_array(home, "edits_stop", stops.astype(np.int64))
     body = np.frombuffer(b"".join(edits), np.uint8)
     if "edits" not in home:
-        write_array(home, "edits", body)
+        write_array(home, "edits", body, chunk=_EDITS_CHUNK)
         return
     kept = home["edits"].shape[0]
     home["edits"].resize((len(body),))

@@ -16,7 +16,7 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.intake.recording import RawChannel, Recording
-from meseta.study.columns import json_text, write_array, write_text
+from meseta.study.columns import json_text, write_array, write_attribute, write_text
 from meseta.study.strict import dataset, group, names, read_array, read_text
 from meseta.traces import Source
 from meseta.work import Work
@@ -109,7 +109,7 @@ def _write_bundle(home: h5py.Group, rows: Sequence[int], bundle: Sequence[Record
             shuffle=True,
             fletcher32=True,
         )
-        made.attrs["name"] = channel.name
+        write_attribute(made, "name", channel.name)
         write_array(channels, f"{number:03d}_stop", stops.astype(np.int64))
         for stop, part in zip(stops, parts, strict=True):
             _copy(made, int(stop) - len(part), part, work)
