@@ -485,10 +485,10 @@ def test_docks_come_back_where_they_were_and_can_be_arranged_as_first(make, sett
 
 def test_only_the_leftmost_visible_plot_shows_the_scale(window):
     window.actions_by_key["view_trace"].setChecked(False)
-    assert panel(window, "displacement").conductance.width() > 40
-    assert panel(window, "histogram").conductance.width() < 20
+    assert panel(window, "displacement").conductance.maximumWidth() > 40
+    assert panel(window, "histogram").conductance.maximumWidth() < 20
     window.actions_by_key["view_trace"].setChecked(True)
-    assert panel(window, "displacement").conductance.width() < 20
+    assert panel(window, "displacement").conductance.maximumWidth() < 20
 
 
 def test_an_action_is_found_by_a_word_and_run(window):
