@@ -10,11 +10,12 @@ from typing import Any, Final
 import numpy as np
 import numpy.typing as npt
 
+from meseta.errors import InputError
 from meseta.intake.calibrate import Calibration, calibration_of, plain_constants
 from meseta.intake.cutting import PULL, PUSH, Cut, cut
 from meseta.intake.drive import DriveAxis, drive_of, sample_interval
 from meseta.intake.recording import RawChannel, Recording
-from meseta.intake.roles import settle_roles
+from meseta.intake.roles import settle_roles, unmatched
 from meseta.recipe import Recipe
 from meseta.work import Work, blocks_of
 
@@ -73,20 +74,44 @@ class Part:
         self.carried = {channel.name: np.empty(total, np.float32) for channel in self.extras}
         self.quality = np.zeros(total, np.uint8)
         self.drive_start, self.drive_step = np.zeros(self.traces), np.full(self.traces, self.axis.factor)
-        if self.axis.channel is not None:
+        shared = self.axis.channel is not None and self.axis.channel.shared and self._is_uncut()
+        if shared:
+            self._share_drive()
+        elif self.axis.channel is not None:
             self.relative = np.empty(total, np.float32)
         spans = blocks_of(self.offsets, min(work.block_samples, 2_000_000))
         sizes = [last - first for first, last in spans]
         linear = True
-        for straight in work.each(self._load_block, spans, "reading traces", sizes=sizes):
+        for straight in work.each(
+            partial(self._load_block, with_drive=not shared), spans, "reading traces", sizes=sizes
+        ):
             linear = linear and straight
-        if linear:
+        if linear and not shared:
             self.relative = None
         if not self.quality.any():
             self.quality = None
         return self
 
-    def _load_block(self, span: tuple[int, int]) -> bool:
+    def _is_uncut(self) -> bool:
+        """Return whether every piece is one trace."""
+        return np.array_equal(self.start, self.recording.offsets[:-1]) and np.array_equal(
+            self.stop, self.recording.offsets[1:]
+        )
+
+    def _share_drive(self) -> None:
+        """Take one axis for all traces, each as long as it is."""
+        longest = int(np.max(np.diff(self.offsets)))
+        piece = int(np.argmax(np.diff(self.offsets)))
+        begin = int(self.recording.offsets[piece])
+        values = self.axis.values(self.recording, begin, begin + longest)
+        step = (values[-1] - values[0]) / max(longest - 1, 1)
+        relative = values - values[0]
+        self.drive_start[:], self.drive_step[:] = values[0], step
+        bound = LINEAR_TOLERANCE * float(np.max(np.abs(values)))
+        if not np.all(np.abs(relative - step * np.arange(longest)) <= bound):
+            self.relative = np.concatenate([relative[:n] for n in np.diff(self.offsets)]).astype(np.float32)
+
+    def _load_block(self, span: tuple[int, int], with_drive: bool) -> bool:
         """Fill the arrays for traces ``first`` to ``last``; return whether their drive steps are equal."""
         first, last = span
         lo, hi = int(self.offsets[first]), int(self.offsets[last])
@@ -101,7 +126,7 @@ class Part:
         for channel in self.extras:
             read = partial(self.recording.values, channel)
             self.carried[channel.name][lo:hi] = self.gathered(read, first, last)
-        return True if self.axis.channel is None else self._load_drive(first, last)
+        return self._load_drive(first, last) if with_drive and self.axis.channel is not None else True
 
     def _load_drive(self, first: int, last: int) -> bool:
         assert self.relative is not None
@@ -162,13 +187,36 @@ def _rises(
     enough = np.isfinite(early).any(axis=1) & np.isfinite(late).any(axis=1)
     result = np.zeros(len(rows), bool)
     if enough.any():
-        result[enough] = np.nanmedian(late[enough], axis=1) > RISE_FACTOR * np.nanmedian(early[enough], axis=1)
+        result[enough] = _row_medians(late[enough]) > RISE_FACTOR * _row_medians(early[enough])
     return result
 
 
+def _row_medians(values: npt.NDArray[Any]) -> npt.NDArray[Any]:
+    """Return the (lower) median of the finite values of each row; every row has one."""
+    ordered = np.sort(values, axis=1)  # NaN last
+    middle = (np.isfinite(values).sum(axis=1) - 1) // 2
+    picked: npt.NDArray[Any] = np.take_along_axis(ordered, middle[:, None], 1)[:, 0]
+    return picked
+
+
 def prepared(recording: Recording, recipe: Recipe) -> Recording:
-    """Return the recording with what the recipe says of its channels."""
-    return recording.with_channels(settle_roles(recording.channels, recipe.intake.channels))
+    """Return the recording with what the recipe says of its channels.
+
+    Raises
+    ------
+    InputError
+        Where the recipe names a channel that the recording does not have: the layout is another one.
+    """
+    channels = settle_roles(recording.channels, recipe.intake.channels)
+    strangers = unmatched(recording.channels, recipe.intake.channels)
+    if strangers:
+        there = ", ".join(f"'{channel.name}'" for channel in recording.channels[:8])
+        raise InputError(
+            f"does not fit the channels of the recipe: it has no '{strangers[0]}', but {there}",
+            recording.source.name,
+            "correct intake.channels, or read files of another layout apart",
+        )
+    return recording.with_channels(channels)
 
 
 def plan_of(recording: Recording, recipe: Recipe) -> Part:

@@ -18,7 +18,7 @@ from meseta.traces import Source
 
 __all__ = ["OpenContext", "open_recording", "sha256_of"]
 
-HEAD_BYTE: Final = 1 << 18
+HEAD_BYTE: Final = 1 << 16
 
 
 @dataclass(frozen=True)

@@ -45,10 +45,17 @@ class Ramps:
 
 def signal_scale(read: Read, samples: int) -> tuple[float, float]:
     """Return (range, noise) of a signal from probes spread over it."""
+    if samples <= PROBES * PROBE_SAMPLES:
+        return _scale_of([read(0, samples)])
     starts = np.unique(np.linspace(0, max(samples - PROBE_SAMPLES, 0), PROBES).astype(np.int64))
     probes = [read(int(start), min(int(start) + PROBE_SAMPLES, samples)) for start in starts]
     thinned = [read(int(at), int(at) + 1) for at in np.linspace(0, samples - 1, 512).astype(np.int64)]
-    values = np.concatenate([*probes, *thinned])
+    return _scale_of([*probes, *thinned])
+
+
+def _scale_of(probes: list[Floats]) -> tuple[float, float]:
+    """Return (range, noise) of pieces of a signal."""
+    values = np.concatenate(probes)
     values = values[np.isfinite(values)]
     if len(values) == 0:
         return 0.0, 0.0

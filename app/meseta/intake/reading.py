@@ -10,6 +10,7 @@ from meseta.errors import InputError, MesetaError
 from meseta.intake.assembly import Part, plan_of
 from meseta.intake.context import batch_context
 from meseta.intake.files import FoundFile, find_files
+from meseta.intake.floor import remove_floor_offset
 from meseta.intake.joining import joined
 from meseta.intake.opening import open_recording
 from meseta.intake.recording import Recording
@@ -74,7 +75,7 @@ def read(
     parts = [part for part in parts if part.traces]
     if not parts:
         raise _nothing(bad, files)
-    return joined(parts, recipe, {"bad_files": [_plain(error) for error in bad], "passed_over": passed})
+    return _joined(parts, recipe, {"bad_files": [_plain(error) for error in bad], "passed_over": passed})
 
 
 def traces_from(recordings: Sequence[Recording], recipe: Recipe | None = None, work: Work | None = None) -> TraceSet:
@@ -90,7 +91,14 @@ def traces_from(recordings: Sequence[Recording], recipe: Recipe | None = None, w
     parts = [part for part in parts if part.traces]
     if not parts:
         raise InputError("no traces were found", "recordings", "check the cutting settings")
-    return joined(parts, recipe, {"bad_files": [], "passed_over": []})
+    return _joined(parts, recipe, {"bad_files": [], "passed_over": []})
+
+
+def _joined(parts: Sequence[Part], recipe: Recipe, notes: dict[str, Any]) -> TraceSet:
+    """Return loaded parts end to end, with the offset removed that all of them together show."""
+    if recipe.calibration.offset_from_floor:
+        notes = {**notes, "floor_offset": remove_floor_offset(parts)}
+    return joined(parts, recipe, notes)
 
 
 def _alone(work: Work) -> Work:

@@ -6,13 +6,14 @@ import fnmatch
 import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from functools import lru_cache
 from typing import Final
 
 from meseta.intake.recording import RawChannel
 from meseta.intake.units import is_unit, parse_unit
 from meseta.recipe.intake import ROLES, ChannelRole
 
-__all__ = ["DRIVE_ROLES", "Guess", "guess_role", "settle_roles", "split_unit", "stem_of"]
+__all__ = ["DRIVE_ROLES", "Guess", "guess_role", "settle_roles", "split_unit", "stem_of", "unmatched"]
 
 SIGNAL_ROLES: Final = ("conductance", "log_conductance", "current", "amplifier", "amplifier_high_gain", "resistance")
 DRIVE_ROLES: Final = ("displacement", "piezo", "time")
@@ -73,6 +74,7 @@ def _tokens(name: str) -> list[str]:
     return [token for token in re.split(r"[^0-9A-Za-zµμΩΩÅ%²₀]+", spaced) if token]
 
 
+@lru_cache(maxsize=4096)
 def stem_of(name: str) -> str:
     """Return a name without its number: "trace_12" and "trace_12_G" are numbers 12 of "trace" and "trace_g"."""
     tokens = _tokens(split_unit(name)[0] or name)
@@ -143,6 +145,7 @@ def _named_role(name: str) -> str:
     return ""
 
 
+@lru_cache(maxsize=4096)
 def guess_role(name: str, unit: str = "", role: str = "", unit_ground: str = "attribute") -> Guess:
     """Propose role and unit of a channel.
 
@@ -211,6 +214,17 @@ def settle_roles(channels: Sequence[RawChannel], named: Mapping[str, ChannelRole
     return _settled_voltage([_as_told(channel, named) for channel in channels])
 
 
+def unmatched(channels: Sequence[RawChannel], named: Mapping[str, ChannelRole]) -> list[str]:
+    """Return the names of ``intake.channels`` that no channel answers to (patterns and "ignore" may match nothing)."""
+    missing = []
+    for name, role in named.items():
+        if role.role == "ignore" or any(sign in name for sign in "*?"):
+            continue
+        if not any(_find_told(channel.name, {name: role}) for channel in channels):
+            missing.append(name)
+    return missing
+
+
 def _as_told(channel: RawChannel, named: Mapping[str, ChannelRole]) -> RawChannel:
     told = _find_told(channel.name, named)
     if told is None:
@@ -231,7 +245,8 @@ def _find_told(name: str, named: Mapping[str, ChannelRole]) -> ChannelRole | Non
         return None
     last = name.rsplit("/", 1)[-1]
     lowered = {key.lower(): value for key, value in named.items()}
-    for candidate in (name, name.strip("/"), last, split_unit(last)[0], stem_of(name)):
+    bare = [last.removeprefix("column ")] if last.startswith("column ") else []
+    for candidate in (name, name.strip("/"), last, *bare, split_unit(last)[0], stem_of(name)):
         if candidate.lower() in lowered:
             return lowered[candidate.lower()]
     for pattern, value in named.items():

@@ -9,6 +9,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Final
 
 from meseta.errors import InputError, nearest
@@ -109,6 +110,7 @@ def _quotient(text: str) -> Unit | None:
     return Unit(text, f"{above.dimension}/{below.dimension}", above.factor / below.factor)
 
 
+@lru_cache(maxsize=4096)
 def _parsed(text: str) -> Unit | None:
     plain = _plain(text)
     return _simple(plain) or _quotient(plain)

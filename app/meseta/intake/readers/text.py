@@ -23,7 +23,7 @@ from meseta.traces import ArraySamples
 
 __all__ = ["TextReader"]
 
-HEAD_BYTE: Final = 1 << 18
+HEAD_BYTE: Final = 1 << 16
 MANY_THREADS_BYTE: Final = 8 << 20
 _NULLS: Final = ["", "nan", "NaN", "NAN", "NA", "N/A", "n/a", "null", "-", "--", "#N/A", "1.#QNAN", "-nan"]
 Columns = list[npt.NDArray[np.float64]]
@@ -35,13 +35,8 @@ class TextReader:
     name = "text"
 
     def sniff(self, head: bytes, path: Path) -> bool:
-        """Return whether the first bytes are text that holds rows of numbers."""
-        if not head:
-            return False
-        encoding = decode_head(head)
-        if encoding in ("utf-8", "latin-1") and b"\x00" in head:
-            return False
-        return find_form(_text(head[:HEAD_BYTE], encoding)) is not None
+        """Return whether the first bytes are text; whether it holds rows of numbers shows when it is opened."""
+        return bool(head) and (decode_head(head).startswith("utf-16") or b"\x00" not in head)
 
     def open(self, path: Path, settings: IntakeSettings) -> Contents:
         """Read the whole table."""

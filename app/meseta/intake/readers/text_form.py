@@ -16,6 +16,9 @@ _COMMENT: Final = re.compile(r"^\s*(#|%|//|!|\"#|;(?=\s*[A-Za-z]))+\s?")
 _NUMBER: Final = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([eEdD][-+]?\d+)?$|[-+]?(nan|inf|infinity)$|n/?a$|$", re.IGNORECASE)
 _ENTRY: Final = re.compile(r"^([^:=\t]{1,60}?)\s*(?::|=|\t)\s*(\S.*)$")
 HEAD_LINES: Final = 400
+ENOUGH_LINES: Final = 12
+"""So many lines of equally many numbers are the table."""
+PROBE_CHARACTERS: Final = 8192
 
 
 @dataclass(frozen=True)
@@ -96,11 +99,11 @@ def find_form(text: str) -> TextForm | None:
     """Return the form of a text from its beginning; None where it holds no rows of numbers."""
     lines = text.splitlines()[:HEAD_LINES]
     best: tuple[tuple[int, ...], str, str, int, int] | None = None
-    for delimiter, decimal in (("\t", "."), (";", "."), (",", "."), (" ", "."), ("\t", ","), (";", ","), (" ", ",")):
+    for delimiter, decimal in _candidates(text[:PROBE_CHARACTERS]):
         start, count, cells = _numeric_run(lines, delimiter, decimal)
         if not count:
             continue
-        score = (min(count, 20), cells, decimal == ".", delimiter in "\t;,")
+        score = (count, cells, decimal == ".", delimiter in "\t;,")
         if best is None or score > best[0]:
             best = (score, delimiter, decimal, start, cells)
     if best is None:
@@ -111,6 +114,17 @@ def find_form(text: str) -> TextForm | None:
         delimiter, decimal, cells = ";", ",", 1
         doubts.append("one column with decimal commas, not two columns of whole numbers")
     return _with_headings(lines, delimiter, decimal, start, cells, doubts)
+
+
+def _candidates(text: str) -> list[tuple[str, str]]:
+    """Return the pairs of delimiter and decimal sign that a text can be written with."""
+    found = [(sign, ".") for sign in "\t;," if sign in text]
+    blanks = " " in text or not found
+    if blanks:
+        found.append((" ", "."))
+    if "," in text:
+        found += [(sign, ",") for sign in "\t;" if sign in text] + ([(" ", ",")] if blanks else [])
+    return found
 
 
 def _numeric_run(lines: Sequence[str], delimiter: str, decimal: str) -> tuple[int, int, int]:
@@ -125,6 +139,8 @@ def _numeric_run(lines: Sequence[str], delimiter: str, decimal: str) -> tuple[in
             continue
         else:
             start, count, cells = number, int(found > 0), found
+        if count >= ENOUGH_LINES:
+            return start, count, cells
         if count > best[1] and (best[2] != cells or best[1] == 0 or start == best[0]):
             best = (start, count, cells)
     return best

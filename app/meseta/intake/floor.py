@@ -1,0 +1,139 @@
+"""Offset from the floor: what the amplifier reads with the contact open, pooled and running over the record.
+
+Only traces shown to reach the floor take part: their last stretch must agree with that of the other traces, so that a
+plateau that ends a trace is never taken for an offset.  A per-trace offset is never used: it would erase such plateaus.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any, Final
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.intake.assembly import Part
+from meseta.quantities import G0_SIEMENS
+
+__all__ = ["remove_floor_offset", "running_offset"]
+
+Floats = npt.NDArray[np.float64]
+TAIL_SHARE: Final = 0.1
+LEAST_TAIL: Final = 10
+LEAST_TRACES: Final = 5
+WINDOW_TRACES: Final = 101
+AGREEMENT_SIGMAS: Final = 4.0
+MAD_TO_SIGMA: Final = 1.482602218505602
+SHOWN: Final = 200
+
+
+def running_offset(tails: Floats, noise: Floats) -> tuple[Floats, npt.NDArray[np.bool_]]:
+    """Return the offset at every trace, and which traces were shown to reach the floor.
+
+    Parameters
+    ----------
+    tails : (traces,) float64
+        Median of the last stretch of each trace; NaN where it has none.
+    noise : (traces,) float64
+        Standard error of that median.
+
+    Returns
+    -------
+    offset : (traces,) float64
+        Running median over :data:`WINDOW_TRACES` of the traces that reach the floor, carried between them; NaN
+        everywhere where fewer than :data:`LEAST_TRACES` do.
+    reaches : (traces,) bool
+    """
+    finite = np.isfinite(tails)
+    nowhere = np.full(len(tails), np.nan), np.zeros(len(tails), bool)
+    if finite.sum() < LEAST_TRACES:
+        return nowhere
+    # The floor is where most tails agree: the shortest stretch that holds a third of them.
+    ordered = np.sort(tails[finite])
+    held = max(len(ordered) // 3, LEAST_TRACES - 1)
+    widths = ordered[held:] - ordered[: len(ordered) - held]
+    place = int(np.argmin(widths))
+    inside = ordered[place : place + held + 1]
+    centre = float(np.median(inside))
+    spread = max(MAD_TO_SIGMA * float(np.median(np.abs(inside - centre))), float(np.nanmedian(noise)))
+    reaches = finite & (np.abs(tails - centre) <= AGREEMENT_SIGMAS * max(spread, float(widths[place])))
+    rows = np.flatnonzero(reaches)
+    if len(rows) < LEAST_TRACES:
+        return nowhere
+    half = WINDOW_TRACES // 2
+    running = np.array([np.median(tails[rows[max(0, n - half) : n + half + 1]]) for n in range(len(rows))])
+    return np.interp(np.arange(len(tails)), rows, running), reaches
+
+
+def remove_floor_offset(parts: Sequence[Part]) -> dict[str, Any]:
+    """Subtract the running offset from loaded parts, before the series resistance; return what was done, for notes."""
+    usable = [part for part in parts if part.calibration.kind in ("linear", "current", "conductance")]
+    tails, noise, bias = (np.concatenate(column) for column in zip(*map(_tails, usable), strict=True)) if usable else (
+        np.empty(0), np.empty(0), np.empty(0)
+    )  # fmt: skip
+    offset, reaches = running_offset(tails * bias, noise * np.abs(bias))
+    if not np.isfinite(offset).any():
+        return {"removed": False, "why": f"fewer than {LEAST_TRACES} traces are shown to reach the floor"}
+    first = 0
+    for part in usable:
+        rows = slice(first, first + part.traces)
+        _subtract(part, offset[rows] / bias[rows])
+        first += part.traces
+    shown = np.unique(np.linspace(0, len(offset) - 1, min(len(offset), SHOWN)).astype(int))
+    unit = "G0" if np.all(bias == 1.0) else "G0 V"
+    return {
+        "removed": True,
+        "traces_at_floor": int(reaches.sum()),
+        "traces": len(offset),
+        "at_trace": shown.tolist(),
+        "offset": [float(value) for value in offset[shown]],
+        "unit": unit,
+        "offset_ampere_median": float(np.median(offset) * G0_SIEMENS) if unit == "G0 V" else None,
+    }
+
+
+def _tails(part: Part) -> tuple[Floats, Floats, Floats]:
+    """Return (median, its standard error, bias) of the last stretch of each opening, as measured."""
+    measured = _as_measured(part, part.conductance)
+    median, error = np.full(part.traces, np.nan), np.full(part.traces, np.nan)
+    stops = {row: stop for row, _, stop, kind in part.cut.phases if kind == 1}
+    for row, stop in stops.items():
+        begin = int(part.offsets[row])
+        tail = (
+            measured[begin + stop - max(int(stop * TAIL_SHARE), LEAST_TAIL) : begin + stop] if stop > LEAST_TAIL else []
+        )
+        tail = np.asarray(tail, np.float64)
+        tail = tail[np.isfinite(tail)]
+        if len(tail) >= LEAST_TAIL:
+            median[row] = np.median(tail)
+            error[row] = MAD_TO_SIGMA * np.median(np.abs(tail - median[row])) / np.sqrt(len(tail))
+    known = part.calibration.constants.get("bias_volt")
+    if known is None:
+        return median, error, np.ones(part.traces)
+    pieces = np.array(part.cut.piece, np.int64)
+    bias = np.broadcast_to(np.asarray(known[0], np.float64), (part.recording.pieces,))[pieces]
+    return median, error, bias
+
+
+def _resistance(part: Part) -> Floats:
+    value = np.asarray(part.calibration.constant("series_resistance_ohm"), np.float64)
+    pieces = np.array(part.cut.piece, np.int64)
+    spread = np.broadcast_to(value, (part.recording.pieces,))[pieces]
+    return np.repeat(spread, np.diff(part.offsets)) * G0_SIEMENS
+
+
+def _as_measured(part: Part, contact: npt.NDArray[Any]) -> Floats:
+    """Return the conductance as it was measured, with the series resistance put back."""
+    values = contact.astype(np.float64)
+    if not np.any(part.calibration.constant("series_resistance_ohm")):
+        return values
+    return values / (1.0 + _resistance(part) * values)
+
+
+def _subtract(part: Part, offset_g0: Floats) -> None:
+    measured = _as_measured(part, part.conductance) - np.repeat(offset_g0, np.diff(part.offsets))
+    if np.any(part.calibration.constant("series_resistance_ohm")):
+        rest = 1.0 - _resistance(part) * measured
+        with np.errstate(divide="ignore", invalid="ignore"):
+            measured = np.where(rest > 0, measured / rest, np.nan)
+    part.conductance = measured.astype(np.float32)
