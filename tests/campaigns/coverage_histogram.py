@@ -1,4 +1,7 @@
-"""Coverage of the histogram's intervals in simulated experiments: ``python tests/campaigns/coverage_histogram.py [2000]``."""
+"""Coverage of the histogram's intervals in simulated experiments.
+
+Run with ``python tests/campaigns/coverage_histogram.py [experiments]``.
+"""
 
 from __future__ import annotations
 
