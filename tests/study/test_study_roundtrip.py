@@ -44,6 +44,22 @@ def test_results_have_the_same_keys(tmp_path):
     ]
 
 
+def test_computed_tables_are_kept_with_their_keys(tmp_path):
+    analysis = Analysis(plain_traces(), Recipe(), some_decisions(plain_traces()))
+    plateaus, selection = analysis.plateaus(Work(threads=1)), analysis.selection(Work(threads=1))
+    write_study(tmp_path / "s.h5", analysis)
+    with Study.open(tmp_path / "s.h5") as study:
+        results = study.results()
+        assert set(results) == {"plateaus", "measures", "selection"}  # what was not computed is not there
+        for name, column in plateaus.columns().items():
+            kept = results["plateaus"].columns[name]
+            assert np.array_equal(kept, column, equal_nan=column.dtype.kind == "f")
+        assert results["selection"].columns["reason"].tolist() == selection.reason.tolist()
+        assert results["plateaus"].key == study.analysis().key("plateaus")
+        other = study.recipe.with_settings(["plateaus.minimum_length_nm=0.33"])
+        assert results["plateaus"].key != study.analysis(other).key("plateaus")
+
+
 def test_traces_outlive_the_study_and_are_read_only(tmp_path):
     with some_study(tmp_path / "s.h5") as study:
         traces = study.traces()
@@ -57,9 +73,9 @@ def test_traces_outlive_the_study_and_are_read_only(tmp_path):
 def test_any_hdf5_tool_can_read_it(tmp_path):
     some_study(tmp_path / "s.h5").close()
     with h5py.File(tmp_path / "s.h5", "r") as root:
-        assert root.attrs["format"] == "meseta study"
+        assert root.attrs["format"].decode() == "meseta study"
         assert np.array_equal(root["traces/channels/conductance"][:], plain_traces().conductance)
-        assert root["traces/channels/conductance"].attrs["unit"] == "G0"
+        assert root["traces/channels/conductance"].attrs["unit"].decode() == "G0"
         assert root["decisions/identity"].asstr()[0].endswith("|opening")
         assert "[plateaus]" in root["recipe"].asstr()[0]
 

@@ -17,6 +17,7 @@ from meseta.selection import with_measures
 from meseta.study.files import is_study, looking
 from meseta.study.history import History
 from meseta.study.loading import write_content, write_whole_traces
+from meseta.study.outcomes import write_outcomes
 from meseta.study.parts import FROM_RAW
 from meseta.study.raw import read_recordings, write_recordings
 from meseta.study.state import State, difference, words
@@ -99,6 +100,7 @@ def write_study(
             if recordings:
                 write_recordings(root, recordings, traces.sources, work)
         write_whole_traces(root, traces, analysis.recipe.key(FROM_RAW), work)
+        write_outcomes(root, analysis)
         copied = {one.source.sha256 for one in recordings}
         return traces, [_kept(source, copied) for source in traces.sources]
 

@@ -26,10 +26,12 @@ from meseta.study.growing import TraceWriter
 from meseta.study.loading import Content, load, write_content, write_whole_traces
 from meseta.study.lock import Lock
 from meseta.study.notebook import Notebook
+from meseta.study.outcomes import Outcome, read_outcomes
 from meseta.study.parts import FROM_RAW, versions, write_decisions, write_history, write_recipe, write_versions
 from meseta.study.raw import read_recordings, write_recordings
 from meseta.study.recordings import derived_key, opened_recordings, write_derived
 from meseta.study.state import State
+from meseta.study.strict import reading
 from meseta.traces import Source, TraceSet
 from meseta.work import Work
 
@@ -175,6 +177,11 @@ class Study(Notebook):
     def unknown(self) -> tuple[str, ...]:
         """Names in the file that this version does not know."""
         return self._content.unknown
+
+    def results(self) -> dict[str, Outcome]:
+        """Return the tables of the steps that were computed when the study was written, each with its key."""
+        with looking(self.path) as root:
+            return reading("the results", str(self.path), lambda: read_outcomes(root))
 
     def version_differences(self) -> list[str]:
         """Return, in words, which versions differ from those with which the study was saved last."""
