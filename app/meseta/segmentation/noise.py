@@ -30,6 +30,8 @@ samples about a line (computed by simulation, 400,000 windows), and the normal q
 CLEAR_OF_CONTACT_G0: Final = 1e-2
 """Tunnelling is measured below this conductance; nearer to contact the decay is faster (Krans et al., 1993)."""
 FEWEST_WINDOWS: Final = 30
+GROWTH: Final = 1.2
+"""Ratio of long-run spreads over blocks of 8 and 4 samples that tells 1/f noise (1.41) from white noise (1)."""
 ROUNDING: Final = 2.0**-23
 """Relative rounding of float32: no recording knows its conductance better."""
 
@@ -138,10 +140,10 @@ def noise_model(statistics: Sequence[NoiseStatistics], settings: NoiseSettings) 
     high = _typical_high(rows)
     floor, sigma, members = _floor(rows, high)
     step = _converter_step(rows)
-    sigma = max(sigma, step / np.sqrt(12), high * ROUNDING)
+    sigma = max(sigma, step / np.sqrt(12), abs(floor) * ROUNDING) or high * ROUNDING
     floor = floor if settings.floor_g0 is None else settings.floor_g0
     sigma = sigma if settings.floor_sigma_g0 is None else settings.floor_sigma_g0
-    level, white, sample, long_run = _table(statistics, floor, sigma, step, high)
+    level, white, sample, long_run, growing = _table(statistics, floor, sigma, step, high)
     if settings.relative_noise is not None:
         sample = np.hypot(sigma, settings.relative_noise * level)
         long_run = sample * np.maximum(long_run / np.maximum(sample, white), 1.0)
@@ -149,7 +151,9 @@ def noise_model(statistics: Sequence[NoiseStatistics], settings: NoiseSettings) 
     saturation = _saturation(rows, sample / level) if settings.saturation_g0 is None else settings.saturation_g0
     slope = _tunnelling_slope(statistics, floor + 10 * sigma, CLEAR_OF_CONTACT_G0 * min(1.0, high), rise)
     stated = tuple(info.name for info in settings.fields() if getattr(settings, info.name) is not None)
-    return NoiseModel(floor, sigma, members, level, sample, long_run, rise, step, saturation, slope, stated, white)
+    return NoiseModel(
+        floor, sigma, members, level, sample, long_run, rise, step, saturation, slope, stated, white, growing
+    )
 
 
 def _typical_high(rows: Floats) -> float:
@@ -173,7 +177,7 @@ def _floor(rows: Floats, high: float) -> tuple[float, float, int]:
     level, spread = float(np.median(means[quarter])), float(np.median(sigmas[quarter]))
     members = np.ones(len(means), bool)
     for _ in range(4):
-        members = np.abs(means - level) <= 4 * max(spread, high * ROUNDING)
+        members = np.abs(means - level) <= 4 * (spread or high * ROUNDING)
         if not members.any():
             break
         level = float(np.median(means[members]))
@@ -181,7 +185,7 @@ def _floor(rows: Floats, high: float) -> tuple[float, float, int]:
         spread = float(np.hypot(np.median(sigmas[members]), between))
     shown = int(members.sum())
     if shown < max(1, len(means) // 100) or level > 0.05 * high:
-        return 0.0, max(float(np.min(sigmas)), high * ROUNDING), 0
+        return 0.0, float(np.min(sigmas)) or high * ROUNDING, 0
     return level, spread, shown
 
 
@@ -266,8 +270,8 @@ def _at_levels(statistics: Sequence[NoiseStatistics], which: int, at_floor: Inte
 
 def _table(
     statistics: Sequence[NoiseStatistics], floor: float, sigma: float, step: float, high: float
-) -> tuple[Floats, Floats, Floats, Floats]:
-    """Return level above the floor, white, single-sample and long-run spread, from the floor to above all readings."""
+) -> tuple[Floats, Floats, Floats, Floats, npt.NDArray[np.bool_]]:
+    """Return level above the floor, white, single-sample and long-run spread, and where the last one still grows."""
     edges = 10.0 ** (kernels.LEVEL_LOWEST + np.arange(kernels.LEVEL_BINS + 1) / kernels.LEVEL_PER_DECADE)
     centres = np.sqrt(edges[:-1] * edges[1:])
     at_floor = np.flatnonzero(centres < abs(floor) + 2.5 * sigma)
@@ -278,8 +282,9 @@ def _table(
     white = np.maximum(_filled(white, level, sigma), least)
     sample = np.maximum(np.maximum(_filled(sample, level, sigma), white), least)
     sample[0] = max(sample[0], 0.5 * sigma)
-    long_run = np.fmax(np.fmax(sample, _filled(short, level, sigma)), _filled(long, level, sigma))
-    return level, white, sample, long_run
+    short, long = _filled(short, level, sigma), _filled(long, level, sigma)
+    growing = (long > GROWTH * short) & (long > GROWTH * sample)
+    return level, white, sample, np.maximum(np.maximum(sample, short), long), growing
 
 
 def _filled(values: Floats, level: Floats, sigma: float) -> Floats:

@@ -195,7 +195,7 @@ def _crossings(g: Floats, last: Integers) -> None:
 
 @kernel
 def _rise_of(g: Floats) -> float:
-    """Return the samples from 90 to 10 % of the largest fall of a trace between two steady stretches, or NaN."""
+    """Return the samples from 90 to 10 % of the largest fall of a trace to below 0.3 of what it was, or NaN."""
     windows = len(g) // WINDOW
     if windows < 3:
         return np.nan
@@ -208,9 +208,9 @@ def _rise_of(g: Floats) -> float:
     best, place = 0.0, -1
     for w in range(windows - 2):
         fall = means[w] - means[w + 2]
-        if fall > best:
+        if fall > best and means[w + 2] <= 0.3 * means[w]:
             best, place = fall, w
-    if place < 0 or means[place + 2] > 0.3 * means[place]:
+    if place < 0:
         return np.nan
     begin, end = place * WINDOW, min((place + 8) * WINDOW, len(g))
     high, low = means[place], means[place + 2]

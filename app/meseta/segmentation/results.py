@@ -46,6 +46,8 @@ class NoiseModel:
         Names of the quantities that the recipe stated instead of the recording.
     white_g0 : (k,) float64
         Part of ``sigma_g0`` that is independent from sample to sample, at ``level_g0``.
+    growing : (k,) bool
+        Where the long-run noise still grows with the length it is taken over (1/f): no standard error is then stated.
     """
 
     floor_g0: float
@@ -60,6 +62,7 @@ class NoiseModel:
     tunnelling_slope: float
     stated: tuple[str, ...] = ()
     white_g0: Floats = field(default_factory=lambda: np.empty(0))
+    growing: npt.NDArray[np.bool_] = field(default_factory=lambda: np.empty(0, np.bool_))
 
     def sigma(self, conductance_g0: npt.ArrayLike) -> Floats:
         """Return the standard deviation of a single sample at the given conductance, in G0."""
@@ -84,8 +87,9 @@ class PlateauTable(Table):
     are in the drive's unit; the ``_nm`` columns are NaN where the drive is not in nm.  ``displacement_*`` counts from
     the zero of displacement where the trace has one, else from the trace's start (``aligned`` tells).
 
-    ``level_g0`` is the plateau conductance (mean current over the inner samples), ``level_sigma_g0`` its standard
-    error (NaN where the long-run variance is not finite), ``slope_decades_per_nm`` a least-squares slope of log10 G,
+    ``level_g0`` is the plateau conductance (mean current over the inner samples, less the floor's), ``level_sigma_g0``
+    its standard error (NaN where the long-run variance is not finite),
+    ``slope_decades_per_nm`` a least-squares slope of log10 G,
     ``noise_decades`` the robust spread of log10 G about that slope, ``kind`` one of :data:`PLATEAU_KINDS`,
     ``censored`` "" or what cut the plateau ("ramp", "floor", "saturation"), ``number`` counts plateaus in the trace
     from the last one (1 = last), ``score`` lies in 0..1, ``jump_before_decades``/``jump_after_decades`` are NaN at the
