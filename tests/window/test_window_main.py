@@ -545,3 +545,17 @@ def test_pixels_and_numbers_agree(window):
     spot = place_of(one, 0.0, -3.0)
     back = one.box.mapSceneToView(one.plot.mapToScene(spot))
     assert abs(back.y() + 3.0) <= one.box.viewPixelSize()[1]
+
+
+def test_a_further_view_is_computed_only_while_it_is_seen(window, settle):
+    session = window.session
+    assert session.result("correlation_histogram") is None
+    window.docks["correlation"].show()
+    window.docks["correlation"].raise_()
+    settle(window)
+    shown = session.result("correlation_histogram")
+    alone = Analysis(session.traces, session.document.recipe).result("correlation_histogram")
+    assert np.array_equal(shown.correlation, alone.correlation, equal_nan=True)
+    assert panel(window, "correlation").data().columns["correlation"].size == shown.grid.bins**2
+    window.docks["correlation"].hide()
+    assert "correlation_histogram" not in session.pipeline.names

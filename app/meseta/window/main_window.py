@@ -29,7 +29,7 @@ from meseta.window.views import VIEWS, View
 
 __all__ = ["MainWindow"]
 
-LAYOUT_VERSION = 3
+LAYOUT_VERSION = 4
 """Raised when docks are added or renamed, so that an older arrangement is not forced upon them."""
 
 _AREAS = {

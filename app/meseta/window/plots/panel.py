@@ -71,7 +71,7 @@ class PlotPanel(QWidget):
         item.hideButtons()
         item.setMenuEnabled(False)
         item.setContentsMargins(0, TOP_PIXELS, 0, 0)
-        item.layout.setContentsMargins(0, TOP_PIXELS, 8, 0)
+        item.layout.setContentsMargins(0, TOP_PIXELS, 8, 3)
         self.bottom.setHeight(BOTTOM_PIXELS)
         self.plot.setContextMenuPolicy(Qt.ContextMenuPolicy.NoContextMenu)
         self.plot.setFocusPolicy(Qt.FocusPolicy.StrongFocus)

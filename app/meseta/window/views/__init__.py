@@ -6,6 +6,7 @@ To add a view, write a folder with a widget and a ``VIEW``, and name it in :data
 from __future__ import annotations
 
 from meseta.window.views.conditions import VIEWS as CONDITIONS
+from meseta.window.views.correlation import VIEW as CORRELATION
 from meseta.window.views.declaration import View
 from meseta.window.views.displacement import VIEW as DISPLACEMENT
 from meseta.window.views.histogram import VIEW as HISTOGRAM
@@ -16,5 +17,5 @@ from meseta.window.views.trace import VIEW as TRACE
 
 __all__ = ["VIEWS", "View"]
 
-VIEWS: tuple[View, ...] = (TRACE, DISPLACEMENT, HISTOGRAM, STRIP, STEPS, *TABLES, *CONDITIONS)
+VIEWS: tuple[View, ...] = (TRACE, DISPLACEMENT, HISTOGRAM, STRIP, STEPS, *TABLES, *CONDITIONS, CORRELATION)
 """All views, in the order in which menus name them."""
