@@ -32,10 +32,10 @@ class PlateauSettings(Section):
         "Shorter stretches are not counted as plateaus.",
         unit="nm",
         ge=0,
-        unset="0.05 nm for conductances above 0.1 G0, 0.1 nm below",
+        unset="0.01 nm for conductances above 0.1 G0, 0.02 nm below",
     )
     minimum_samples: int = setting(
-        5, "Fewest samples", "Shortest plateau in samples, whatever its length.", unit="samples", ge=2
+        8, "Fewest samples", "Shortest plateau in samples, whatever its length.", unit="samples", ge=2
     )
     minimum_rise_times: float = setting(
         5.0,
@@ -78,4 +78,19 @@ class PlateauSettings(Section):
     )
     high_g0: float | None = setting(
         None, "Highest plateau", "Plateaus above are not looked for.", unit="G0", gt=0, unset="no upper limit"
+    )
+    smoothing_samples: int = setting(
+        9,
+        "Smoothing",
+        "'derivative': samples over which the slope is taken; at least two rise times.",
+        unit="samples",
+        ge=3,
+        le=1001,
+    )
+    levels_g0: list[float] = setting(
+        None,
+        "Levels",
+        "'levels': conductances that bound the windows; a plateau is a long stay between two neighbours.",
+        unit="G0",
+        factory=lambda: [1e-5, 1e-4, 1e-3, 1e-2, 0.5, 1.5, 2.5, 3.5],
     )

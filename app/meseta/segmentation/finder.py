@@ -11,6 +11,7 @@ import numpy.typing as npt
 from meseta.intake.alignment import Alignment
 from meseta.recipe.plateaus import PlateauSettings
 from meseta.segmentation import finder_kernels as kernels
+from meseta.segmentation.detectors import derivative_rows, level_rows
 from meseta.segmentation.noise import phase_bounds, runs_backward, trusted_samples
 from meseta.segmentation.results import NoiseModel, PlateauTable
 from meseta.segmentation.scale import scale_of
@@ -55,7 +56,7 @@ def find_plateaus(
     backward = runs_backward(phases)
     steps = _steps(traces, starts, stops)
     rows = _search(traces, settings, noise, starts, stops, backward, steps)
-    return _table(traces, rows, starts, stops, backward, steps, alignment)
+    return _table(traces, rows, starts, stops, backward, steps, alignment, noise)
 
 
 def _steps(traces: TraceSet, starts: Integers, stops: Integers) -> Floats:
@@ -77,18 +78,32 @@ def _search(
     steps: Floats,
 ) -> Floats:
     """Return the rows of :func:`meseta.segmentation.finder_kernels.find`."""
-    rows: Floats = kernels.find(
-        np.ascontiguousarray(traces.conductance),
-        trusted_samples(traces),
-        starts,
-        stops,
-        backward,
-        steps,
-        scale_of(noise),
-        _rules(settings, noise, traces.drive.is_displacement, steps),
-        max(64, 8 * traces.traces),
-    )
-    return rows
+    rules = _rules(settings, noise, traces.drive.is_displacement, steps)
+    conductance, trusted = np.ascontiguousarray(traces.conductance), trusted_samples(traces)
+    if settings.method == "change_points":
+        room = max(64, 8 * traces.traces)
+        rows: Floats = kernels.find(conductance, trusted, starts, stops, backward, steps, scale_of(noise), rules, room)
+        return rows
+    pieces = [_above_floor(conductance, trusted, *span, backward, noise) for span in zip(starts, stops, strict=True)]
+    if settings.method == "derivative":
+        smoothing = max(settings.smoothing_samples, int(np.ceil(2 * noise.rise_samples)))
+        return derivative_rows(pieces, steps, rules, noise, smoothing)
+    return level_rows(pieces, steps, rules, np.asarray(settings.levels_g0))
+
+
+def _above_floor(
+    conductance: npt.NDArray[np.float32],
+    trusted: npt.NDArray[np.bool_],
+    start: int,
+    stop: int,
+    backward: bool,
+    noise: NoiseModel,
+) -> Floats:
+    """Return one trace's conductance above the floor from the closed end, NaN where it is not trusted."""
+    g = conductance[start:stop].astype(np.float64) - noise.floor_g0
+    if len(trusted):
+        g[~trusted[start:stop]] = np.nan
+    return g[::-1] if backward else g
 
 
 def _rules(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, steps: Floats) -> kernels.Rules:
@@ -137,6 +152,7 @@ def _table(
     backward: bool,
     steps: Floats,
     alignment: Alignment,
+    noise: NoiseModel,
 ) -> PlateauTable:
     """Return the plateau table of the kernel's rows."""
     trace, first, last = (rows[:, k].astype(np.int64) for k in range(3))
@@ -172,7 +188,7 @@ def _table(
         length_drive=np.abs(end - begin),
         drive_unit=np.full(len(trace), traces.drive.unit),
         aligned=aligned,
-        level_sigma_g0=nothing,
+        level_sigma_g0=_standard_error(noise, rows[:, 3], stop - start),
         effective_samples=rows[:, 6],
         jump_before_decades=rows[:, 7],
         jump_after_decades=rows[:, 8],
@@ -180,6 +196,15 @@ def _table(
         score=rows[:, 11],
         telegraph=rows[:, 10] > 0,
     )
+
+
+def _standard_error(noise: NoiseModel, level: Floats, samples: Integers) -> Floats:
+    """Return the standard error of a mean; NaN where the noise grows with the length it is taken over."""
+    error = noise.long_run(level) / np.sqrt(np.maximum(samples, 1))
+    if len(noise.growing):
+        place = np.abs(np.log(np.maximum(level, noise.level_g0[0]))[:, None] - np.log(noise.level_g0)).argmin(axis=1)
+        error[noise.growing[place]] = np.nan
+    return error
 
 
 def _numbers(trace: Integers) -> Integers:

@@ -124,7 +124,8 @@ def _group_end(
     """Return the last stretch of the plateau that begins with stretch ``first``, and whether it switches.
 
     Two neighbours are one plateau where the step between them is small (below the join limit for molecules, within
-    the noise for metals), or where the signal goes away by a step between close levels and comes back.
+    two standard deviations of the noise, long-run or about the lines, for metals), or where the signal goes away by a
+    step between close levels and comes back.
     """
     last, switches = first, False
     gap = 2 * rules.trim + 2
@@ -135,7 +136,9 @@ def _group_end(
         level = restored(moments[last, 2], scale)
         metal = level >= rules.metal_from
         noise = max(_spread(moments[last], scale), _spread(moments[b], scale))
-        limit = 2.0 * noise if metal else max(rules.join, 2.0 * noise)
+        centre = moments[last, 2]
+        wander = decades_between(centre - 1.0, centre + 1.0, scale)
+        limit = max(wander, 2.0 * noise, 0.0 if metal else rules.join)
         here = _edge(moments[last], ends[last] - 0.5, ends[last] - begins[last])
         away = decades_between(here, _edge(moments[b], begins[b] - 0.5, ends[b] - begins[b]), scale)
         if abs(away) <= limit:
@@ -204,6 +207,7 @@ def _describe(
     lead = min(rules.trim, (end - begin) // 4)
     level = _level(g, begin + lead, end - lead, weights)
     above = level - scale.floor
+    ending = restored(_line_at(moments[last], end - 1.0), scale)
     shortest = rules.shortest_metal if above >= rules.metal_from else rules.shortest_molecule
     if end - begin < rules.shortest_samples or (end - begin) * step < shortest:
         return False
@@ -214,7 +218,7 @@ def _describe(
     margin = rules.tunnelling * length - abs(drop)
     if abs(drop) > rules.bound * length or not margin >= SURE * error:
         return False
-    row[1], row[2], row[3] = begin, end, level
+    row[1], row[2], row[3] = begin, end, above
     row[4], row[5] = _log_slope(g, begin + lead, end - lead, weights)
     row[6] = whole[0] * share_at(whole[2], scale)
     row[7], row[8] = np.nan, np.nan
@@ -225,6 +229,8 @@ def _describe(
     row[9] = 0.0
     if end >= len(g):
         row[9] = 1.0
+    elif last + 1 < len(ends) and kinds[last + 1] == FLOOR and ending < 1.5 * rules.low:
+        row[9] = 2.0
     if first > 0 and kinds[first - 1] == SATURATED:
         row[9] = 3.0
     proof = (margin / error) ** 2 if error > 0.0 else np.inf
@@ -249,8 +255,8 @@ def find(
     Returns
     -------
     (plateaus, COLUMNS) float64
-        trace, start, stop (within the range, from the closed end), level, slope (decades a sample), noise (decades),
-        independent samples, jump before, jump after (decades), censoring code, telegraph, score.
+        trace, start, stop (within the range, from the closed end), level above the floor, slope (decades a sample),
+        noise (decades), independent samples, jump before, jump after (decades), censoring code, telegraph, score.
     """
     out = np.empty((room, COLUMNS))
     found = 0
