@@ -205,7 +205,12 @@ def _displacement_counts(traces: TraceSet, settings: SettingsView, inputs: Input
         inputs["alignment"],
         kept,
         phases_of(settings.histogram.direction),
+        inputs["displacement_edges"],
     )
+
+
+def _displacement_edges(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, __: Work) -> Any:
+    return histograms.displacement_edges(traces, settings.displacement_histogram, inputs["alignment"])
 
 
 def _displacement_all_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> DisplacementHistogram:
@@ -289,11 +294,11 @@ _AXIS = (
     "histogram.axis",
     "histogram.stored_bins_per_decade",
     "histogram.stored_bin_width_g0",
-    "histogram.low_g0",
-    "histogram.high_g0",
+    "histogram.stored_low_g0",
+    "histogram.stored_high_g0",
 )
 _STORED = (*_AXIS, "histogram.region", "histogram.floor_tail_second", _PHASE)
-_BINS = (*_AXIS, "histogram.bins_per_decade", "histogram.bin_width_g0")
+_BINS = (*_AXIS, "histogram.low_g0", "histogram.high_g0", "histogram.bins_per_decade", "histogram.bin_width_g0")
 
 STEPS: Mapping[str, Step] = {
     step.name: step
@@ -321,11 +326,19 @@ STEPS: Mapping[str, Step] = {
             _histogram,
         ),
         Step(
+            "displacement_edges",
+            "choosing the displacement axis",
+            1,
+            ("alignment",),
+            ("displacement_histogram",),
+            _displacement_edges,
+        ),
+        Step(
             "displacement_all",
             "building the 2D histogram",
             1,
-            ("noise", "alignment"),
-            ("displacement_histogram", *_STORED),
+            ("noise", "alignment", "displacement_edges"),
+            ("displacement_histogram", *_STORED, "histogram.low_g0", "histogram.high_g0"),
             _displacement_all,
             _displacement_all_block,
         ),
@@ -333,8 +346,8 @@ STEPS: Mapping[str, Step] = {
             "displacement_histogram",
             "selecting in the 2D histogram",
             1,
-            ("noise", "alignment", "selection", "displacement_all"),
-            ("displacement_histogram", *_STORED),
+            ("noise", "alignment", "selection", "displacement_edges", "displacement_all"),
+            ("displacement_histogram", *_STORED, "histogram.low_g0", "histogram.high_g0"),
             _displacement,
         ),
         Step(

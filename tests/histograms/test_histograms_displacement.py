@@ -11,7 +11,14 @@ from hypothesis import given
 from hypothesis import strategies as st
 from small_recordings import aligned_at, explicit_drive, log_uniform, noise_model, recording
 
-from meseta.histograms import DisplacementHistogram, Grid, displacement_counts, displacement_of_selection, kernels
+from meseta.histograms import (
+    DisplacementHistogram,
+    Grid,
+    displacement_counts,
+    displacement_edges,
+    displacement_of_selection,
+    kernels,
+)
 from meseta.recipe import Recipe
 from meseta.traces import TraceSet
 from meseta.work import Work
@@ -137,3 +144,15 @@ def test_ridge_follows_a_known_decay_and_profiles_are_distributions() -> None:
         Grid(found.grid.edges_g0, "logarithmic"), found.drive_edges, "nm", found.counts * 0, 0, 0, found.density, ""
     ).profile(0)).all()  # fmt: skip
     assert [len(axis) for axis in found.plottable().axes] == list(found.counts.shape)
+
+
+def test_a_drive_in_its_own_unit_gets_an_axis_that_fits() -> None:
+    """Traces of 400 steps with the zero at step 100: nine of ten end 299 steps later."""
+    values = log_uniform(30, 400, 4)
+    traces = TraceSet.from_arrays(values)
+    edges = displacement_edges(traces, frame().displacement_histogram, aligned_at(100.0, 100, 30))
+    assert (edges[0], edges[-1]) == pytest.approx((-299 / 4, 299.0))
+    in_nm = displacement_edges(recording(values), frame().displacement_histogram, aligned_at(0.2, 100, 30))
+    assert (in_nm[0], in_nm[-1]) == (-0.2, 0.5)
+    explicit = replace(traces, drive=explicit_drive(traces, np.tile(np.arange(400.0), (30, 1))).drive)
+    assert np.allclose(displacement_edges(explicit, frame().displacement_histogram, aligned_at(100.0, 100, 30)), edges)

@@ -89,6 +89,9 @@ def test_coarser_bins_are_exact_sums_and_count_nothing_anew() -> None:
     again = analysis.with_recipe(coarse_recipe)
     assert analysis.key("fine_counts") == again.key("fine_counts")
     assert analysis.key("counts") != again.key("counts")
+    moved = analysis.with_recipe(fine_recipe.with_values("histogram", low_g0=3e-7, high_g0=4.0))
+    assert analysis.key("fine_counts") == moved.key("fine_counts")
+    assert analysis.key("counts") != moved.key("counts")
     assert analysis.key("fine_counts") != analysis.with_recipe(
         fine_recipe.with_values("histogram", region="after_zero")
     ).key("fine_counts")

@@ -5,7 +5,7 @@ from meseta.histograms.comparison import Difference, Yield, difference, hits_in_
 from meseta.histograms.conditional import ConditionalHistogram, conditional_histogram, passes_more_than_usual
 from meseta.histograms.correlation import correlation_histogram
 from meseta.histograms.counting import count_traces, with_bins
-from meseta.histograms.displacement import displacement_counts, displacement_of_selection
+from meseta.histograms.displacement import displacement_counts, displacement_edges, displacement_of_selection
 from meseta.histograms.distribution import conductance_histogram
 from meseta.histograms.lengths import LengthHistogram, Spacing, Survival, plateau_lengths, spacing_of
 from meseta.histograms.plateaus import plateau_histogram
@@ -57,6 +57,7 @@ __all__ = [
     "count_traces",
     "difference",
     "displacement_counts",
+    "displacement_edges",
     "displacement_of_selection",
     "drift_of",
     "hits_in_window",

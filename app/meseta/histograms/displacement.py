@@ -19,7 +19,7 @@ from meseta.segmentation.results import NoiseModel
 from meseta.traces import TraceSet
 from meseta.work import Work
 
-__all__ = ["displacement_counts", "displacement_of_selection"]
+__all__ = ["displacement_counts", "displacement_edges", "displacement_of_selection"]
 
 
 def displacement_counts(
@@ -30,6 +30,7 @@ def displacement_counts(
     alignment: Alignment,
     kept: npt.NDArray[np.bool_],
     phases: Sequence[str],
+    edges: npt.NDArray[np.float64] | None = None,
 ) -> DisplacementHistogram:
     """Count the samples of the kept, aligned traces of a block by displacement and conductance.
 
@@ -46,6 +47,8 @@ def displacement_counts(
     kept : (traces,) bool
         Traces that take part; those without a zero of displacement are left out and counted.
     phases : sequence of str
+    edges : (columns + 1,) float64, optional
+        Of the displacement axis, from :func:`displacement_edges`; ``frame`` in the drive's unit where not given.
 
     Returns
     -------
@@ -53,7 +56,8 @@ def displacement_counts(
         Half-open bins on float64 edges on both axes.
     """
     grid = displacement_grid(frame, settings, noise)
-    edges = np.linspace(frame.low_nm, frame.high_nm, frame.bins + 1)
+    if edges is None:
+        edges = np.linspace(frame.low_nm, frame.high_nm, frame.bins + 1)
     region = region_of(traces, settings, noise, alignment, phases)
     used = np.asarray(kept, bool) & (region.phase_end > region.phase_begin)
     rows = np.flatnonzero(used & np.isfinite(alignment.zero_drive)).astype(np.int64)
@@ -97,9 +101,38 @@ def _count(
     return counts
 
 
+def displacement_edges(
+    traces: TraceSet, frame: DisplacementHistogramSettings, alignment: Alignment
+) -> npt.NDArray[np.float64]:
+    """Return the edges of the displacement axis.
+
+    The recipe's where the drive is in nm.  A drive in its own unit has no such scale: the axis then runs to where nine
+    of ten aligned traces end, and a quarter of that to the other side of the zero (from at most 200 traces).
+    """
+    rows = np.flatnonzero(np.isfinite(alignment.zero_drive))
+    if traces.drive.is_displacement or len(rows) == 0:
+        return np.linspace(frame.low_nm, frame.high_nm, frame.bins + 1)
+    rows = rows[np.linspace(0, len(rows) - 1, min(200, len(rows))).astype(np.int64)]
+    ends = np.array([_drive_ends(traces, int(row)) for row in rows]) - alignment.zero_drive[rows, None]
+    high = float(np.quantile(ends.max(1), 0.9))
+    if not high > 0:
+        return np.linspace(float(ends.min()), 0.0, frame.bins + 1)
+    low = max(float(np.quantile(ends.min(1), 0.1)), -high / 4)
+    return np.linspace(min(low, 0.0), high, frame.bins + 1)
+
+
+def _drive_ends(traces: TraceSet, row: int) -> tuple[float, float]:
+    """Return the drive at the first and the last sample of a trace."""
+    begin, end = int(traces.offsets[row]), int(traces.offsets[row + 1])
+    start = float(traces.drive.start[row])
+    if traces.drive.relative is not None:
+        return start, start + float(traces.drive.relative.read(end - 1, end)[0])
+    return start, start + float(traces.drive.step[row]) * (end - begin - 1)
+
+
 def displacement_grid(frame: DisplacementHistogramSettings, settings: HistogramSettings, noise: NoiseModel) -> Grid:
     """Return the conductance axis of the 2D histogram: the range of the 1D one, in its own bins."""
-    low, high = axis_range(settings, noise)
+    low, high = axis_range(settings.axis, settings.low_g0, settings.high_g0, noise)
     return anchored_grid(settings.axis, low, high, frame.bins_per_decade, frame.bin_width_g0)
 
 

@@ -55,7 +55,7 @@ def linear_edges(first: int, last: int, width_g0: float) -> npt.NDArray[np.float
     return np.arange(first, last + 1, dtype=np.float64) * width_g0
 
 
-def axis_range(settings: HistogramSettings, noise: NoiseModel) -> tuple[float, float]:
+def axis_range(axis: str, low_g0: float | None, high_g0: float, noise: NoiseModel) -> tuple[float, float]:
     """Return the ends of the conductance axis in G0.
 
     Where the recipe sets no lower end it follows from the floor: 3 sigma below it on a linear axis, a tenth of its
@@ -66,10 +66,10 @@ def axis_range(settings: HistogramSettings, noise: NoiseModel) -> tuple[float, f
     RecipeError
         Where the ends leave no room for bins.
     """
-    high, low = settings.high_g0, settings.low_g0
+    high, low = high_g0, low_g0
     sigma = noise.floor_sigma_g0 if math.isfinite(noise.floor_sigma_g0) and noise.floor_sigma_g0 > 0 else high * 1e-7
     floor = noise.floor_g0 if math.isfinite(noise.floor_g0) else 0.0
-    if settings.axis == "logarithmic":
+    if axis == "logarithmic":
         low = sigma / 10 if low is None else low
         if low <= 0:
             raise RecipeError(
@@ -94,7 +94,7 @@ def stored_grid(settings: HistogramSettings, noise: NoiseModel) -> Grid:
     RecipeError
         Where the bins would be too many to be meant.
     """
-    low, high = axis_range(settings, noise)
+    low, high = axis_range(settings.axis, settings.stored_low_g0, settings.stored_high_g0, noise)
     if settings.axis == "logarithmic":
         per_decade = settings.stored_bins_per_decade
         first, last = _whole(math.log10(low), math.log10(high))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Literal
 
 from meseta.recipe.fields import Section, setting
@@ -70,6 +71,18 @@ class HistogramSettings(Section):
         "Plateaus by length",
         "Plateau histogram: every plateau weighs its length instead of one vote.",
     )
+
+    @property
+    def stored_low_g0(self) -> float | None:
+        """Lower end of the count matrix: the decade around ``low_g0`` on a logarithmic axis, so that it may move."""
+        if self.axis == "logarithmic" and self.low_g0 is not None and self.low_g0 > 0:
+            return float(f"1e{math.floor(math.log10(self.low_g0) + 1e-9)}")
+        return self.low_g0
+
+    @property
+    def stored_high_g0(self) -> float:
+        """Upper end of the count matrix: the decade around ``high_g0`` on a logarithmic axis."""
+        return float(f"1e{math.ceil(math.log10(self.high_g0) - 1e-9)}") if self.axis == "logarithmic" else self.high_g0
 
     @property
     def stored_bins_per_decade(self) -> int:
