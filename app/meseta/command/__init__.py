@@ -82,6 +82,8 @@ for _command in (
     jobs.gather,
     jobs.recipe,
     tools.example,
+    tools.expect,
+    tools.sheet,
     tools.simulate,
     tools.decay,
 ):

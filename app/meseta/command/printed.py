@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import fields
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -11,8 +12,9 @@ from meseta.work import Work
 
 if TYPE_CHECKING:
     from meseta.peaks import Decay
+    from meseta.segmentation import Expectation
 
-__all__ = ["decay_lines", "result_lines", "study_answer", "study_lines"]
+__all__ = ["decay_lines", "expectation_answer", "expectation_lines", "result_lines", "study_answer", "study_lines"]
 
 _HEADINGS = ("peak", "position", "95 % interval", "systematic", "fit on", "status")
 
@@ -108,6 +110,49 @@ def decay_lines(result: Decay) -> list[str]:
         f"95 % {result.beta_low:.4g} to {result.beta_high:.4g}",
         f"conductance at zero length {typeset.conductance(result.contact_g0)}; 95 % "
         f"{typeset.interval(result.contact_low_g0, result.contact_high_g0, 'G0')}",
-        f"{len(result.points.length)} points, chi-square {result.chi_square:.4g} for {result.freedom} degrees of freedom",
+        f"{len(result.points.length)} points, chi-square {result.chi_square:.4g}, degrees of freedom {result.freedom}",
     ]
     return lines + [f"caution: {note}" for note in result.notes]
+
+
+def expectation_answer(found: Expectation) -> dict[str, Any]:
+    """Return what the plateau finder does as plain values; None where nothing can be told."""
+    answer = {}
+    for field in fields(found):
+        value = getattr(found, field.name)
+        answer[field.name] = _plain(value.tolist() if hasattr(value, "tolist") else value)
+    return answer
+
+
+def _plain(value: Any) -> Any:
+    if isinstance(value, list):
+        return [_plain(entry) for entry in value]
+    return None if isinstance(value, float) and not math.isfinite(value) else value
+
+
+def expectation_lines(found: Expectation) -> list[str]:
+    """Return what the plateau finder does on such traces: a table of efficiencies, then false plateaus and limits."""
+    unit = found.drive_unit
+    what = "traces stated to be blank" if found.blank else "traces without a plateau below 0.1 G0"
+    lines = [f"plateaus planted into {typeset.integer(found.traces)} {what}; share found:"]
+    heads = [typeset.quantity(float(length), unit) for length in found.length]
+    rows = [["conductance", *heads]]
+    for level, shares in zip(found.conductance_g0, found.efficiency, strict=True):
+        rows.append([typeset.conductance(float(level)), *(_share(float(share)) for share in shares)])
+    rows.append(["found above", *(_limit(float(limit)) for limit in found.limit_g0)])
+    widths = [max(len(row[column]) for row in rows) for column in range(len(rows[0]))]
+    lines += ["  ".join(cell.rjust(width) for cell, width in zip(row, widths, strict=True)) for row in rows]
+    bound = "" if found.blank else " (an upper bound: these traces are not known to be blank)"
+    lines.append(
+        f"false plateaus a trace: {found.false_a_trace:.3g}; 95 % {found.false_low:.3g} to "
+        f"{found.false_high:.3g}{bound}"
+    )
+    return lines
+
+
+def _share(value: float) -> str:
+    return f"{100 * value:.0f} %" if math.isfinite(value) else typeset.MISSING
+
+
+def _limit(value_g0: float) -> str:
+    return typeset.conductance(value_g0, 2) if math.isfinite(value_g0) else typeset.MISSING

@@ -3,15 +3,16 @@
 from __future__ import annotations
 
 import math
-from dataclasses import asdict, fields
+from dataclasses import asdict, fields, replace
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import click
 
-from meseta.command.frame import json_option, tell, working
+from meseta.command.frame import json_option, open_analysis, recipe_options, tell, working
+from meseta.errors import CallError
 
-__all__ = ["decay", "example", "simulate"]
+__all__ = ["decay", "example", "expect", "sheet", "simulate"]
 
 
 @click.command()
@@ -30,6 +31,107 @@ def example(folder: Path, as_json: bool) -> None:
         check_output(folder)
         outcome = run_one([str(sample("night_raw.h5"))], folder, (None, None, ()), False, work)
     tell(as_json, outcome.summary | {"out": str(folder)}, result_lines(outcome.summary, outcome.folder))
+
+
+@click.command()
+@click.argument("study_path", metavar="STUDY", type=click.Path())
+@click.option("--blank", is_flag=True, help="The traces are known to hold no molecule: use all of them.")
+@click.option(
+    "--slope", "slope_decades", default=0.0, show_default=True, help="Slope of the planted plateaus in decades per nm."
+)
+@click.option(
+    "--plateaus-each",
+    default=200,
+    show_default=True,
+    type=click.IntRange(1),
+    help="Plateaus planted for each conductance and length.",
+)
+@click.option("--seed", default=0, show_default=True, type=click.IntRange(0), help="Of the random choice of traces.")
+@recipe_options
+@json_option
+def expect(
+    study_path: str,
+    blank: bool,
+    slope_decades: float,
+    plateaus_each: int,
+    seed: int,
+    recipe_path: str | None,
+    preset: str | None,
+    settings: tuple[str, ...],
+    as_json: bool,
+) -> None:
+    """Say what the plateau finder does on traces like these: efficiency, false plateaus, bias, limits."""
+    from meseta import segmentation
+    from meseta.analysis import phases_of
+    from meseta.command.printed import expectation_answer, expectation_lines
+
+    with working() as work:
+        analysis, _ = open_analysis([study_path], (recipe_path, preset, settings), False, work)
+        found = segmentation.expect(
+            analysis.traces,
+            analysis.recipe.plateaus,
+            analysis.noise(work),
+            analysis.result("alignment", work),
+            phases_of(analysis.recipe.histogram.direction),
+            slope_decades=slope_decades,
+            each=plateaus_each,
+            blank=blank,
+            seed=seed,
+            work=work,
+        )
+    tell(as_json, expectation_answer(found), expectation_lines(found))
+
+
+@click.command()
+@click.argument("study_path", metavar="STUDY", type=click.Path())
+@click.option("--out", "sheet_path", required=True, type=click.Path(path_type=Path), help="A .pdf file.")
+@click.option(
+    "--by",
+    type=click.Choice(["random", "group", "doubt"]),
+    default="random",
+    show_default=True,
+    help="Which traces: at random, of one group, or the least certain first.",
+)
+@click.option("--group", default="", help="Name of the group, with --by group.")
+@click.option("--traces", "count", default=48, show_default=True, type=click.IntRange(1), help="Most traces to draw.")
+@click.option("--seed", default=0, show_default=True, type=click.IntRange(0), help="Of the random choice.")
+@recipe_options
+@json_option
+def sheet(
+    study_path: str,
+    sheet_path: Path,
+    by: Literal["random", "group", "doubt"],
+    group: str,
+    count: int,
+    seed: int,
+    recipe_path: str | None,
+    preset: str | None,
+    settings: tuple[str, ...],
+    as_json: bool,
+) -> None:
+    """Print a contact sheet of traces with their plateaus."""
+    import numpy as np
+
+    from meseta import segmentation
+    from meseta.figures import contact_sheet, save_pages
+
+    if sheet_path.suffix.lower() != ".pdf":
+        raise CallError(f"'{sheet_path.name}' does not end in .pdf", "--out", "a contact sheet is a PDF file")
+    with working() as work:
+        analysis, _ = open_analysis([study_path], (recipe_path, preset, settings), False, work)
+        plateaus, groups = analysis.plateaus(work), analysis.selection(work).group
+        direction = analysis.traces.table["direction"] == analysis.recipe.histogram.direction
+        candidates = np.flatnonzero(direction)
+        mine = plateaus.take(direction[plateaus.trace])
+        renumbered = replace(mine, trace=np.searchsorted(candidates, mine.trace))
+        chosen = segmentation.choose_traces(
+            renumbered, len(candidates), count, by, group=groups[candidates], name=group, seed=seed
+        )
+        rows = candidates[chosen]
+        pages = contact_sheet(analysis.traces, plateaus, rows, analysis.recipe.figure)
+        save_pages(pages, sheet_path)
+    answer = {"out": str(sheet_path), "traces": rows.tolist(), "pages": len(pages)}
+    tell(as_json, answer, [f"{len(rows)} traces on {len(pages)} pages: {sheet_path}"])
 
 
 @click.command()
