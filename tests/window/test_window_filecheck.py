@@ -96,3 +96,17 @@ def test_files_that_are_none_are_explained_on_the_page(make, settle, tmp_path):
     page = window.commands._check
     assert not page.accept_button.isEnabled()
     assert page.doubts.count() >= 1
+
+
+def test_enter_reads_the_files_once_they_can_be_read(make, settle, folder):
+    from meseta.recipe import Recipe
+
+    window = make()
+    window.commands.check_paths([str(folder)], Recipe().with_values("calibration", bias_volt=0.1))
+    settle(window)
+    page = window.commands._check
+    window.activateWindow()
+    assert page.focusWidget() is page.accept_button
+    QTest.keyClick(page.accept_button, Qt.Key.Key_Return)
+    settle(window)
+    assert window.session.traces.traces == 3

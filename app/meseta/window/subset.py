@@ -5,31 +5,29 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from meseta import selection
 from meseta.analysis import Analysis
-from meseta.recipe.selection import SelectionSettings
-from meseta.selection import Decisions
+from meseta.selection import Decisions, parse_rules
+from meseta.selection.evaluation import Evaluator
+from meseta.selection.facts import Facts
 from meseta.work import Work
 
 __all__ = ["mask_of"]
 
 
 def mask_of(analysis: Analysis, rule: str, work: Work) -> npt.NDArray[np.bool_]:
-    """Return (traces,) bool of the traces that meet a rule, decisions by hand left aside.
+    """Return (traces,) bool of the traces of the analysed direction that meet a rule, verdicts by hand left aside.
 
     Raises
     ------
     RecipeError
         Where the rule is not understood.
     """
-    settings = SelectionSettings(rules=[rule])
-    found = selection.select(
+    facts = Facts(
         analysis.traces,
-        settings,
         analysis.result("measures", work),
         analysis.result("plateaus", work),
-        Decisions(groups=analysis.decisions.groups),
-        analysis.recipe.histogram.direction,
+        Decisions(groups=analysis.decisions.groups, events=analysis.decisions.events),
     )
-    kept: npt.NDArray[np.bool_] = found.kept
-    return kept
+    ((text, parsed),) = parse_rules([rule])
+    met: npt.NDArray[np.bool_] = Evaluator(facts, text).verdicts(parsed.condition).true
+    return met & (analysis.traces.table["direction"] == analysis.recipe.histogram.direction)

@@ -124,7 +124,8 @@ class FileCheck(QWidget):
         row.addStretch(1)
         row.addWidget(self.leave_button)
         row.addWidget(self.accept_button)
-        self.accept_button.setDefault(True)
+        for button in (self.accept_button, self.leave_button):
+            button.setAutoDefault(True)
         return row
 
     def wear(self, theme: Theme) -> None:
@@ -172,7 +173,7 @@ class FileCheck(QWidget):
         self.accept_button.setEnabled(False)
 
     def _show(self, picture: CheckPicture) -> None:
-        self.picture = picture
+        first_look, self.picture = self.picture is None, picture
         if not picture.described:
             self.title.setText("These files are not recognised")
             self.summary.setText("Choose a reader or a layout below, or leave.")
@@ -181,6 +182,8 @@ class FileCheck(QWidget):
         self._say_doubts(picture.sentences())
         self.accept_button.setEnabled(picture.readable)
         self._draw(picture)
+        if first_look:
+            (self.accept_button if picture.readable else self.leave_button).setFocus()
 
     def _say_recognised(self, picture: CheckPicture) -> None:
         first = picture.described[0]
@@ -241,7 +244,7 @@ def _plot(left: pg.AxisItem) -> pg.PlotWidget:
     item = plot.getPlotItem()
     item.hideButtons()
     item.setMenuEnabled(False)
-    item.layout.setContentsMargins(0, 4, 8, 0)
+    item.layout.setContentsMargins(0, 4, 8, 3)
     left.setWidth(64)
     bottom.setHeight(38)
     plot.setMinimumSize(160, 90)
