@@ -15,7 +15,7 @@ EXAMPLE = np.array([0.02, -0.01, 0.03, 0, 1.01, 0.98, 1.02, 1, 1.03, 0.49, 0.52,
 
 
 def dynamic_programme(y, penalty, weights, minimum):
-    """The plain recursion F(t) = min over s of F(s) + C(s, t) + penalty (Killick et al. 2012, equation of section 7)."""
+    """The plain recursion F(t) = min over s of F(s) + C(s, t) + penalty (Killick et al. 2012)."""
     n = len(y)
     best = np.full(n + 1, np.inf)
     best[0] = -penalty

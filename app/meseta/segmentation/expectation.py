@@ -1,8 +1,8 @@
 """What the plateau finder does on traces like these: plateaus of known make are planted, and looked for.
 
 A planted plateau is a conductance in parallel with what the trace shows anyway, so noise of the floor, pickup, leakage
-and the tunnelling beneath it are the recording's own; only its relative noise and
-the rise of the amplifier come from the noise model.
+and the tunnelling beneath it are the recording's own; only its relative noise
+and the rise of the amplifier come from the noise model.
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ from typing import Final
 
 import numpy as np
 import numpy.typing as npt
+from scipy.ndimage import uniform_filter1d
 from scipy.signal import lfilter
 
 from meseta.errors import CallError
@@ -32,6 +33,8 @@ Integers = npt.NDArray[np.int64]
 LEVEL_WITHIN_DECADES: Final = 0.1
 OVERLAP: Final = 0.5
 NORMAL_95: Final = 1.959963984540054
+SMOOTHING: Final = 9
+"""Samples of the running mean in which the place of a plateau is looked for."""
 DETECTED: Final = 0.9
 """Efficiency at which a plateau counts as detectable."""
 
@@ -227,9 +230,10 @@ def plant(
 
 def _place(g: Floats, level: float, sigma: float) -> tuple[int, int]:
     """Return the sample at which the trace falls below the level, and below a twentieth of it or the floor."""
-    above = np.flatnonzero(g >= level)
+    smooth = uniform_filter1d(np.where(np.isfinite(g), g, 0.0), SMOOTHING)
+    above = np.flatnonzero(smooth >= level)
     first = int(above[-1]) + 1 if len(above) else len(g)
-    away = np.flatnonzero(g[first:] < max(0.05 * level, sigma))
+    away = np.flatnonzero(smooth[first:] < max(0.05 * level, sigma))
     return first, first + int(away[0]) if len(away) else len(g)
 
 

@@ -250,11 +250,14 @@ def _at_levels(statistics: Sequence[NoiseStatistics], which: int, at_floor: Inte
     """Return the spread at the floor and at each level bin; NaN where few windows.
 
     A level that few windows visit (between plateaus, in the jumps) is pooled with its neighbours, spreads taken as a
-    share of the level, until it holds a hundredth of all windows above the floor.
+    share of the level, until it holds a twentieth of all windows above the floor.  Windows without any spread are those
+    of a saturated amplifier and are left out, unless most windows are such (a recording without noise).
     """
     grid = _pooled(statistics, which)
+    silent = grid[:, 0].copy() if 2 * grid[rows, 0].sum() > grid[rows].sum() else np.zeros(len(grid), np.int64)
+    grid[rows, 0] = 0
     shift = kernels.SPREAD_PER_DECADE // kernels.LEVEL_PER_DECADE
-    enough = max(FEWEST_WINDOWS, grid[rows].sum() // 100)
+    enough = max(FEWEST_WINDOWS, grid[rows].sum() // 20)
     found = np.full(len(rows) + 1, np.nan)
     if grid[at_floor].sum() >= FEWEST_WINDOWS:
         found[0] = _quartile(grid[at_floor].sum(axis=0), which)
@@ -262,6 +265,7 @@ def _at_levels(statistics: Sequence[NoiseStatistics], which: int, at_floor: Inte
         for reach in range(9):
             near = rows[max(place - reach, 0) : place + reach + 1]
             counts = np.sum([np.roll(grid[other], shift * (row - other)) for other in near], axis=0)
+            counts[0] = silent[near].sum()
             if counts.sum() >= enough:
                 found[place + 1] = _quartile(counts, which)
                 break
@@ -279,12 +283,18 @@ def _table(
     white, sample, short, long = (_at_levels(statistics, which, at_floor, rows) for which in range(4))
     level = np.concatenate([[sigma], centres[rows] - floor])
     least = np.maximum(step / np.sqrt(12), level * 4 * ROUNDING)
-    white = np.maximum(_filled(white, level, sigma), least)
-    sample = np.maximum(np.maximum(_filled(sample, level, sigma), white), least)
+    # The noise of the floor is there at every conductance.
+    white, sample, short, long = (_raised(_filled(part, level, sigma), least) for part in (white, sample, short, long))
+    sample = np.maximum(sample, white)
     sample[0] = max(sample[0], 0.5 * sigma)
-    short, long = _filled(short, level, sigma), _filled(long, level, sigma)
     growing = (long > GROWTH * short) & (long > GROWTH * sample)
     return level, white, sample, np.maximum(np.maximum(sample, short), long), growing
+
+
+def _raised(values: Floats, least: Floats) -> Floats:
+    """Return the values, none below the first (the floor) or below what the converter and the format resolve."""
+    raised: Floats = np.maximum(np.maximum(values, values[0]), least)
+    return raised
 
 
 def _filled(values: Floats, level: Floats, sigma: float) -> Floats:
