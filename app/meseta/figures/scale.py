@@ -97,7 +97,7 @@ def plain_ticks(axis: Axis, low: float, high: float, labelled: bool = True, most
     ticks = ticks[(ticks >= low - slack) & (ticks <= high + slack)]
     step = ticks[1] - ticks[0] if len(ticks) > 1 else abs(high - low)
     decimals = max(0, -int(np.floor(np.log10(step) + 1e-9))) if step > 0 else 0
-    if decimals and abs(step * 10**decimals - round(step * 10**decimals)) > 1e-6:
+    if step > 0 and abs(step * 10**decimals - round(step * 10**decimals)) > 1e-6:
         decimals += 1
     clean = [0.0 if abs(tick) < abs(step) / 1e6 else float(tick) for tick in ticks]
     axis.set_major_locator(FixedLocator(ticks.tolist()))
