@@ -43,7 +43,7 @@ def written(folder: Path, name: str, content: str | bytes) -> Path:
     ("name", "content", "word"),
     [
         ("a.csv", "", "empty"),
-        ("a.csv", "\n\n  \n", "no rows of numbers"),
+        ("a.csv", "\n\n  \n", "empty"),
         ("a.csv", "displacement_nm,conductance_G0\n", "no rows of numbers"),
         ("a.h5", GOOD.replace("0", "x").replace("1", "y").replace("2", "z"), "not an HDF5 file"),
         ("a.h5", b"\x89HDF\r\n\x1a\n" + b"\x00" * 100, "damaged"),

@@ -72,7 +72,11 @@ class Part:
         total = int(self.offsets[-1])
         self.conductance = np.empty(total, np.float32)
         self.carried = {channel.name: np.empty(total, np.float32) for channel in self.extras}
-        self.quality = np.zeros(total, np.uint8)
+        self.quality = (
+            np.zeros(total, np.uint8)
+            if "full_scale_volt" in self.calibration.constants or (self.calibration.second is not None)
+            else None
+        )
         self.drive_start, self.drive_step = np.zeros(self.traces), np.full(self.traces, self.axis.factor)
         shared = self.axis.channel is not None and self.axis.channel.shared and self._is_uncut()
         if shared:
@@ -88,7 +92,7 @@ class Part:
             linear = linear and straight
         if linear and not shared:
             self.relative = None
-        if not self.quality.any():
+        if self.quality is not None and not self.quality.any():
             self.quality = None
         return self
 

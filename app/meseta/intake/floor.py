@@ -99,10 +99,8 @@ def _tails(part: Part) -> tuple[Floats, Floats, Floats]:
     stops = {row: stop for row, _, stop, kind in part.cut.phases if kind == 1}
     for row, stop in stops.items():
         begin = int(part.offsets[row])
-        tail = (
-            measured[begin + stop - max(int(stop * TAIL_SHARE), LEAST_TAIL) : begin + stop] if stop > LEAST_TAIL else []
-        )
-        tail = np.asarray(tail, np.float64)
+        last = max(int(stop * TAIL_SHARE), LEAST_TAIL)
+        tail = measured[begin + max(stop - last, 0) : begin + stop]
         tail = tail[np.isfinite(tail)]
         if len(tail) >= LEAST_TAIL:
             median[row] = np.median(tail)

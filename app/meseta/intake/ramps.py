@@ -81,6 +81,8 @@ def find_ramps(read: Read, samples: int, smallest_fraction: float) -> Ramps | No
     Ramps or None
         None where the drive never turns, or its swing does not stand out of its noise.
     """
+    if samples <= BLOCK and _is_monotonic(read(0, samples)):
+        return None
     span, noise = signal_scale(read, samples)
     threshold = max(0.5 * smallest_fraction * span, NOISE_SIGMAS * noise)
     if span == 0.0 or threshold >= span:
@@ -94,6 +96,12 @@ def find_ramps(read: Read, samples: int, smallest_fraction: float) -> Ramps | No
     end = np.maximum(end, begin)
     level = np.array([read(turn, turn + 1)[0] for turn in turns])
     return Ramps(begin, end, np.diff(level))
+
+
+def _is_monotonic(values: Floats) -> bool:
+    """Return whether a signal never turns; one with NaN is looked at more closely."""
+    steps = np.diff(values)
+    return bool((steps >= 0).all() or (steps <= 0).all())
 
 
 def _turning_points(read: Read, samples: int, threshold: float) -> list[int]:

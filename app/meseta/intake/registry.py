@@ -65,7 +65,7 @@ def find_reader(head: bytes, path: Path, wanted: str | None) -> Reader:
 
 
 def _not_recognised(head: bytes, path: Path) -> str:
-    if path.suffix.lower() in (".h5", ".hdf5", ".he5", ".nxs"):
+    if path.suffix.lower() in (".h5", ".hdf5", ".hdf", ".he5"):
         return "is named like HDF5 but is not an HDF5 file, nor any other known format"
     if 0 < head.count(0) < 0.01 * len(head) and sum(byte > 127 for byte in head[:4096]) < 0.1 * len(head[:4096]):
         return "is a text with NUL bytes in it"

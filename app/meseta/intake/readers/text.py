@@ -54,6 +54,8 @@ def text_contents(data: bytes, path: Path, settings: IntakeSettings) -> Contents
     form = find_form(head)
     if form is None:
         what = "is empty" if not data.strip() else "holds no rows of numbers"
+        if data.strip() and path.suffix.lower() in (".h5", ".hdf5", ".hdf", ".he5"):
+            what = "is named like HDF5 but is a text and not an HDF5 file"
         raise InputError(what, str(path), "give a table with numbers in rows")
     body = _body(data, form, encoding)
     columns, lengths = _numbers(body, form, path)
@@ -87,6 +89,11 @@ def _body(data: bytes, form: TextForm, encoding: str) -> bytes:
 def _numbers(body: bytes, form: TextForm, path: Path) -> tuple[Columns, list[int]]:
     """Return the columns, and the number of rows of each block between separators."""
     lines_before = form.skip_lines
+    body = body.rstrip()
+    if not _has_separators(body, form):
+        columns = _parsed(body, form, path, lines_before)
+        if len(columns[0]) == body.count(b"\n") + 1:  # no blank line was passed over
+            return _split_at_nan_rows(columns)
     blocks = _blocks(body, form)
     if len(blocks) == 1:
         return _split_at_nan_rows(_parsed(blocks[0], form, path, lines_before))
@@ -102,18 +109,25 @@ def _numbers(body: bytes, form: TextForm, path: Path) -> tuple[Columns, list[int
     return [np.concatenate([part[place] for part in parts]) for place in range(form.columns)], lengths
 
 
+def _has_separators(body: bytes, form: TextForm) -> bool:
+    """Return whether headings, remarks or lines of blanks stand between the rows."""
+    heading, comment = form.heading.encode().strip(), form.comment.encode()
+    if heading and heading in body:
+        return True
+    if comment and (body.startswith(comment) or b"\n" + comment in body):
+        return True
+    return b"\n \n" in body or b"\n\t\n" in body
+
+
 def _blocks(body: bytes, form: TextForm) -> list[bytes]:
     """Cut the rows at blank lines and at repeated headings; drop remarks between the rows."""
     heading = form.heading.encode().strip()
-    repeated = bool(heading) and heading in body
-    blank = re.search(rb"\n[ \t]*\r?\n[ \t\r\n]*\S", body) is not None
+    if heading and heading in body:
+        body = re.sub(rb"(?m)^" + re.escape(heading) + rb"[ \t]*\r?$", b"", body)
     if form.comment and b"\n" + form.comment.encode() in b"\n" + body:
         sign = re.escape(form.comment.encode())
         body = re.sub(rb"(?m)^[ \t]*" + sign + rb".*\n?", b"", body)
-    if not repeated and not blank:
-        return [body]
-    cut = re.sub(rb"(?m)^" + re.escape(heading) + rb"[ \t]*\r?$", b"", body) if repeated else body
-    return [block for block in re.split(rb"\n(?:[ \t]*\r?\n)+", cut) if block.strip()]
+    return [block for block in re.split(rb"\n(?:[ \t]*\r?\n)+", body) if block.strip()]
 
 
 def _split_at_nan_rows(columns: Columns) -> tuple[Columns, list[int]]:

@@ -97,7 +97,7 @@ def _is_numeric(line: str, delimiter: str, decimal: str) -> int:
 
 def find_form(text: str) -> TextForm | None:
     """Return the form of a text from its beginning; None where it holds no rows of numbers."""
-    lines = text.splitlines()[:HEAD_LINES]
+    lines = [line.rstrip("\r") for line in text.split("\n", HEAD_LINES)[:HEAD_LINES]]
     best: tuple[tuple[int, ...], str, str, int, int] | None = None
     for delimiter, decimal in _candidates(text[:PROBE_CHARACTERS]):
         start, count, cells = _numeric_run(lines, delimiter, decimal)
@@ -110,7 +110,7 @@ def find_form(text: str) -> TextForm | None:
         return None
     _, delimiter, decimal, start, cells = best
     doubts: list[str] = []
-    if delimiter == "," and cells == 2 and _looks_like_decimal_comma(lines[start : start + 200]):
+    if delimiter == "," and cells == 2 and _looks_like_decimal_comma(lines[start : start + 30]):
         delimiter, decimal, cells = ";", ",", 1
         doubts.append("one column with decimal commas, not two columns of whole numbers")
     return _with_headings(lines, delimiter, decimal, start, cells, doubts)

@@ -1,0 +1,146 @@
+"""Names, units and metadata as people write them."""
+
+from __future__ import annotations
+
+import json
+
+import pytest
+
+from meseta import intake
+from meseta.errors import InputError
+from meseta.intake.context import from_name
+from meseta.intake.metadata import canonical, canonical_entry
+from meseta.intake.roles import guess_role, stem_of
+from meseta.intake.units import parse_unit, unit_factor
+from meseta.recipe import Recipe
+
+TABLE = "displacement_nm,current_nA\n" + "".join(f"{0.01 * n:.2f},{100.0 / (n + 1):.6g}\n" for n in range(50))
+
+
+@pytest.mark.parametrize(
+    ("text", "base", "factor"),
+    [
+        ("nA", "A", 1e-9),
+        ("µA", "A", 1e-6),  # micro sign U+00B5
+        ("μA", "A", 1e-6),  # Greek mu U+03BC
+        ("V/nA", "V/A", 1e9),
+        ("nS", "S", 1e-9),
+        ("G0", "S", 7.748091729863649e-05),  # CODATA 2022
+        ("2e2/h", "G0", 1.0),
+        ("Å", "nm", 0.1),
+        ("Å", "nm", 0.1),  # the angstrom sign U+212B
+        ("ms", "s", 1e-3),
+        ("MΩ", "ohm", 1e6),
+        ("nm s-1", "nm/s", 1.0),
+        ("log10(G/G0)", "dec", 1.0),
+    ],
+)
+def test_units_as_people_write_them(text, base, factor):
+    assert unit_factor(text, base) == pytest.approx(factor, rel=1e-12)
+
+
+def test_an_unknown_unit_names_the_nearest():
+    with pytest.raises(InputError, match="did you mean"):
+        parse_unit("nAA")
+    with pytest.raises(InputError, match="does not fit"):
+        unit_factor("nA", "nm")
+
+
+@pytest.mark.parametrize(
+    ("name", "role", "unit"),
+    [
+        ("Current (nA)", "current", "nA"),
+        ("I/nA", "current", "nA"),
+        ("G/G0", "conductance", "G/G0"),
+        ("log10(G/G0)", "log_conductance", "log10(G/G0)"),
+        ("conductance_s", "conductance", "S"),
+        ("time_s", "time", "s"),
+        ("z [Å]", "displacement", "Å"),
+        ("Piezo (nm)", "displacement", "nm"),
+        ("piezo_V", "piezo", "V"),
+        ("trace_12 (G0)", "conductance", "G0"),
+        ("gate_V", "other", "V"),
+        ("noise floor remarks", "other", ""),
+    ],
+)
+def test_headings(name, role, unit):
+    guess = guess_role(name)
+    assert (guess.role, guess.unit) == (role, unit)
+
+
+def test_a_number_anywhere_in_a_heading_counts_traces():
+    assert {stem_of(f"trace_{n}_conductance_G0") for n in range(12)} == {"trace_conductance"}
+
+
+@pytest.mark.parametrize(
+    ("name", "value", "expected"),
+    [
+        ("bias_mV", 100, ("bias_volt", 0.1)),
+        ("Bias", "100 mV", ("bias_volt", 0.1)),
+        ("Gain (V/nA)", 1e-3, ("gain_volt_per_ampere", 1e6)),
+        ("Gain", "1e6 V/A", ("gain_volt_per_ampere", 1e6)),
+        ("speed_nm_s", 20, ("nm_per_second", 20.0)),
+        ("nm_per_V", 2, ("nm_per_volt", 2.0)),
+        ("sampling_rate_khz", 20, ("sampling_hertz", 20_000.0)),
+        ("molecule", "first", ("molecule", "first")),
+    ],
+)
+def test_constants(name, value, expected):
+    assert canonical_entry(name, value)[:2] == expected
+
+
+def test_a_bias_without_a_unit_is_doubted_and_an_impossible_one_not_used():
+    assert "taken as V" in canonical({"bias": 0.1})[1][0]
+    found, doubts = canonical({"bias": 100})
+    assert "bias_volt" not in found
+    assert "cannot be volts" in doubts[0]
+
+
+def test_metadata_from_names_sidecars_and_tables(tmp_path):
+    for n, bias in ((1, 50), (2, 100)):
+        (tmp_path / f"chip7_{bias}mV_{n}.csv").write_text(TABLE)
+    (tmp_path / "chip7_50mV_1.json").write_text(json.dumps({"solvent": "none", "setup": {"temperature": "300 K"}}))
+    table = tmp_path / "about.txt"
+    table.write_text("file,molecule\nchip7_50mV_1.csv,first\nchip7_100mV_2.csv,second\n")
+    settings = {"name_template": "{specimen}_{bias_mV}mV_{n}.csv", "metadata_table": str(table)}
+    traces = intake.read(str(tmp_path / "chip7*.csv"), Recipe.build({"intake": settings}))
+    assert traces.table["specimen"].tolist() == ["chip7", "chip7"]
+    assert traces.table["bias_volt"].tolist() == [0.05, 0.1]
+    assert traces.table["molecule"].tolist() == ["first", "second"]
+    assert traces.table["solvent"].tolist() == ["none", ""]
+    expected = 100e-9 / (0.05 * 7.748091729863649e-05)
+    assert traces.trace_conductance(0)[0] == pytest.approx(expected, rel=1e-6)
+
+
+def test_a_name_that_does_not_fit_its_template_is_an_error():
+    with pytest.raises(InputError, match="does not fit the template"):
+        from_name("other.csv", "{specimen}_{n}.csv")
+
+
+def test_a_remembered_layout_that_does_not_fit_says_how_it_differs(tmp_path):
+    (tmp_path / "a.csv").write_text(TABLE)
+    roles = {"strom": {"role": "current", "unit": "nA"}}
+    with pytest.raises(InputError, match="it has no 'strom', but 'displacement_nm', 'current_nA'"):
+        intake.read(
+            tmp_path / "a.csv", Recipe.build({"intake": {"channels": roles}, "calibration": {"bias_volt": 0.1}})
+        )
+
+
+def test_description_is_whole_and_plain(tmp_path):
+    (tmp_path / "a.csv").write_text("# bias: 0.1\n" + TABLE)
+    described, bad = intake.describe(tmp_path / "a.csv")
+    plain = json.loads(json.dumps(described[0].as_dict(), allow_nan=False))
+    assert bad == []
+    assert plain["traces"] == 1
+    assert [channel["role"] for channel in plain["channels"]] == ["displacement", "current"]
+    assert any("taken as V" in doubt for doubt in plain["doubts"])
+    text = "\n".join(described[0].lines())
+    assert "bias_volt = 0.1" in text
+    assert "taken as V" in text
+
+
+def test_description_of_a_file_that_lacks_a_constant_says_what_to_give(tmp_path):
+    (tmp_path / "a.csv").write_text(TABLE)
+    described, _ = intake.describe(tmp_path / "a.csv")
+    assert "calibration.bias_volt" in described[0].problem
+    assert described[0].traces == 0
