@@ -87,14 +87,14 @@ def test_independent_bins_scatter_by_one_over_root_traces() -> None:
 
 
 def test_permutation_keeps_each_block_of_each_column() -> None:
-    values = np.asfortranarray(np.random.default_rng(3).random((95, 4)), np.float32)
+    values = np.random.default_rng(3).random((95, 4)).astype(np.float32)
     permuted = np.empty_like(values)
     kernels.permute_within(values, 20, np.arange(4).astype(np.uint64), permuted)
     for first in range(0, 95, 20):
         assert np.array_equal(np.sort(permuted[first : first + 20], 0), np.sort(values[first : first + 20], 0))
     assert not np.array_equal(permuted, values)
     place = np.zeros((20, 20))
-    ramp = np.asfortranarray(np.tile(np.arange(20, dtype=np.float32)[:, None], (1, 2000)))
+    ramp = np.tile(np.arange(20, dtype=np.float32)[:, None], (1, 2000))
     shuffled = np.empty_like(ramp)
     kernels.permute_within(ramp, 20, np.random.default_rng(1).integers(0, 1 << 62, 2000).astype(np.uint64), shuffled)
     np.add.at(place, (np.repeat(np.arange(20), 2000), shuffled.astype(int).ravel()), 1)
@@ -158,3 +158,11 @@ def test_bins_start_six_sigma_above_the_floor() -> None:
     assert found.grid.edges_g0[0] <= 6e-5 < found.grid.edges_g0[1]
     assert np.isnan(found.threshold)
     assert len(found.weak) == found.grid.bins
+
+
+@pytest.mark.parametrize("rows", [3, 4, 10, 101])
+def test_largest_product_equals_the_plain_one(rows: int) -> None:
+    values = np.random.default_rng(rows).normal(size=(rows, 7)).astype(np.float32)
+    plain = np.abs(values.T @ values)
+    np.fill_diagonal(plain, 0)
+    assert kernels.largest_product(values) == pytest.approx(plain.max(), rel=1e-5)

@@ -142,19 +142,14 @@ def largest_by_chance(values: Floats, block: int, permutations: int, seed: int, 
     varying = values[:, spread > 0] - values[:, spread > 0].mean(0)
     if permutations == 0 or varying.shape[1] < 2 or len(values) < 3:
         return np.zeros(0)
-    scaled = np.asfortranarray(varying / np.sqrt((varying**2).sum(0)), np.float32)
+    scaled = np.ascontiguousarray(varying / np.sqrt((varying**2).sum(0)), np.float32)
     random = np.random.default_rng(seed)
     seeds = random.integers(0, 1 << 63, (permutations, scaled.shape[1]), dtype=np.uint64)
 
-    def permuted(columns: npt.NDArray[np.uint64]) -> npt.NDArray[np.float32]:
-        result = np.empty_like(scaled)
-        kernels.permute_within(scaled, block, columns, result)
-        return result
+    def one(columns: npt.NDArray[np.uint64]) -> float:
+        # a product of our own: threads of a matrix library inside threads of ours wait for each other
+        permuted = np.empty_like(scaled)
+        kernels.permute_within(scaled, block, columns, permuted)
+        return kernels.largest_product(permuted)
 
-    # the products stay on this thread: they have threads of their own
-    largest = np.zeros(permutations)
-    for number, result in enumerate(work.each(permuted, list(seeds), "permuting", unit="permutations")):
-        product = np.abs(result.T @ result)
-        np.fill_diagonal(product, 0.0)
-        largest[number] = product.max()
-    return largest
+    return np.array(list(work.each(one, list(seeds), "permuting", unit="permutations")))

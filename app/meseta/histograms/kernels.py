@@ -20,6 +20,7 @@ __all__ = [
     "draw_blocks",
     "first_at_or_past",
     "fold_rows",
+    "largest_product",
     "merge_rows",
     "permute_within",
     "place_of",
@@ -173,13 +174,13 @@ def permute_within(
 
     Fisher and Yates' shuffle, with the splitmix64 generator (Steele, Lea and Flood, OOPSLA 2014).
     """
-    rows = len(values)
-    for column in range(values.shape[1]):
-        state = seed[column]
-        for row in range(rows):
-            permuted[row, column] = values[row, column]
-        for first in range(0, rows, block):
-            last = min(first + block, rows)
+    rows, columns = values.shape
+    states = seed.copy()
+    permuted[:] = values
+    for first in range(0, rows, block):
+        last = min(first + block, rows)
+        for column in range(columns):
+            state = states[column]
             for row in range(last - 1, first, -1):
                 state += np.uint64(0x9E3779B97F4A7C15)
                 mixed = state
@@ -188,6 +189,27 @@ def permute_within(
                 mixed = mixed ^ (mixed >> np.uint64(31))
                 other = first + int((mixed >> np.uint64(32)) * np.uint64(row - first + 1) >> np.uint64(32))
                 permuted[row, column], permuted[other, column] = permuted[other, column], permuted[row, column]
+            states[column] = state
+
+
+@kernel
+def largest_product(values: npt.NDArray[np.float32]) -> float:
+    """Return the largest absolute sum of products of two different columns (four rows at a time, in order)."""
+    rows, columns = values.shape
+    sums = np.zeros((columns, columns), np.float32)
+    whole = rows // 4 * 4
+    for row in range(0, whole, 4):
+        one, two, three, four = values[row], values[row + 1], values[row + 2], values[row + 3]
+        for column in range(columns - 1):
+            line = sums[column]
+            first, second, third, fourth = one[column], two[column], three[column], four[column]
+            for other in range(column + 1, columns):
+                line[other] += first * one[other] + second * two[other] + third * three[other] + fourth * four[other]
+    for row in range(whole, rows):
+        for column in range(columns - 1):
+            for other in range(column + 1, columns):
+                sums[column, other] += values[row, column] * values[row, other]
+    return float(np.abs(sums).max())
 
 
 @kernel
@@ -370,8 +392,9 @@ def _warm_up() -> None:
         count_rows(values, begin, end, table, thresholds, 1, column, counts, special)
         count_flagged_rows(values, np.zeros(5, np.uint8), begin, end, table, thresholds, column, counts, special, 0, 1)
     draw_blocks(np.zeros((1, 1), np.int64), end, np.arange(5), np.zeros((1, 5), np.uint16))
-    square = np.asfortranarray(np.ones((2, 2), np.float32))
-    permute_within(square, 2, np.ones(2, np.uint64), np.asfortranarray(square.copy()))
+    square = np.ones((2, 2), np.float32)
+    permute_within(square, 2, np.ones(2, np.uint64), square.copy())
+    largest_product(square)
     settle_region(values, begin, end, values[:1], end, np.zeros(1, np.int64))
     unit = np.ones(1)
     edges = np.array([0.0, 1.0])
