@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import io
 import re
 from collections.abc import Sequence
 from pathlib import Path
@@ -156,7 +155,7 @@ def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int) -> Colu
     names = [str(place) for place in range(width)]
     try:
         table = csv.read_csv(
-            io.BytesIO(block),
+            pa.BufferReader(block),
             csv.ReadOptions(
                 column_names=names,
                 use_threads=len(block) > MANY_THREADS_BYTE,
