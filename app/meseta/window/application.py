@@ -10,11 +10,12 @@ from typing import Any
 
 import platformdirs
 from PySide6.QtCore import QSettings, Qt, QTimer
-from PySide6.QtGui import QGuiApplication
+from PySide6.QtGui import QGuiApplication, QIcon
 from PySide6.QtWidgets import QApplication
 
 from meseta.errors import WorkError
 from meseta.recipe import Recipe
+from meseta.resources import resource
 from meseta.window.jobs import Channel
 from meseta.window.main_window import MainWindow
 from meseta.window.theme import ThemeKeeper
@@ -34,6 +35,7 @@ def make_application() -> QApplication:
     application.setApplicationName("Meseta")
     application.setOrganizationName("Meseta")
     application.setStyle("Fusion")
+    application.setWindowIcon(QIcon(str(resource("icons", "meseta.svg"))))
     return application
 
 

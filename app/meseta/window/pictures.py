@@ -150,13 +150,11 @@ def histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], work: Work) ->
 
 
 def displacement_histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], work: Work) -> DisplacementHistogram:
-    """Return the 2D histogram of some traces, block by block, as the analysis makes it of all."""
-    noise, alignment = analysis.result("noise", work), analysis.result("alignment", work)
-    recipe = analysis.recipe
-    source = analysis.traces.only("conductance")
-    spans = source.blocks(work)
+    """Return the 2D histogram of some traces, exact: the engine counts the smaller of them and the others."""
+    noise, alignment, edges = (analysis.result(name, work) for name in ("noise", "alignment", "displacement_edges"))
+    recipe, source = analysis.recipe, analysis.traces.only("conductance")
 
-    def one(span: tuple[int, int]) -> DisplacementHistogram:
+    def count(span: tuple[int, int], chosen: npt.NDArray[np.bool_]) -> DisplacementHistogram:
         first, last = span
         return histograms.displacement_counts(
             source.block(first, last),
@@ -164,12 +162,13 @@ def displacement_histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], w
             recipe.histogram,
             noise,
             alignment.block(first, last),
-            mask[first:last],
+            chosen[first:last],
             phases_of(recipe.histogram.direction),
+            edges,
         )
 
-    parts = work.each(one, spans, "building the 2D histogram", sizes=[last - first for first, last in spans])
-    return DisplacementHistogram.summed(parts)
+    everything = analysis.result("displacement_all", work)
+    return histograms.displacement_of_selection(everything, mask, count, source.blocks(work), work)
 
 
 @dataclass(frozen=True)

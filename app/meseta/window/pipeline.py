@@ -179,7 +179,7 @@ class Pipeline(QObject):
         session.take_result(outcome.name, outcome.shown)
         if outcome.name in ("alignment", "noise", "plateaus"):
             self.refresh_trace()
-        if outcome.name in ("counts", "measures", "selection"):
+        if outcome.name in ("counts", "measures", "selection", "displacement_histogram"):
             self.refresh_subset()
         session.states_changed.emit()
 
@@ -228,7 +228,7 @@ class Pipeline(QObject):
         """Draw what takes longer than a frame, once nothing is dragged: lines and the 2D histogram."""
         self._refresh_overlay(mask)
         analysis, session = self._session.analysis, self._session
-        if analysis is None or not all(map(analysis.ready, ("noise", "alignment"))):
+        if analysis is None or not analysis.ready("displacement_all"):
             return
 
         def task(work: Work, _: Callable[[Any], None]) -> Any:

@@ -148,6 +148,8 @@ class Session(QObject):
         self.span = Span(-6.5, 1.2)
         self.drive_span = (-0.5, 2.0)
         self._drag_from: Document | None = None
+        self._keys: dict[str, str] = {}
+        self._keys_of: Analysis | None = None
         self._rows: dict[str, int] = {}
         self._rows_key = ""
         self.pipeline = Pipeline(self, jobs)
@@ -275,7 +277,7 @@ class Session(QObject):
         change = Change(before, document)
         if not (change.recipe or change.decisions or change.conditions):
             return
-        if self.analysis is not None:
+        if self.analysis is not None and (change.recipe or change.decisions):
             self.analysis = self.analysis.with_recipe(document.recipe).with_decisions(document.decisions)
         axis_changed = before.recipe.histogram.axis != document.recipe.histogram.axis
         if axis_changed:
@@ -343,7 +345,10 @@ class Session(QObject):
         return Span(float(np.log10(low)), float(np.log10(settings.high_g0)) + 0.1)
 
     def default_drive_span(self) -> tuple[float, float]:
-        """Return the displacement axis of the 2D histogram."""
+        """Return the displacement axis of the 2D histogram as last shown, else that of the recipe."""
+        shown = self.result("displacement_histogram")
+        if shown is not None:
+            return float(shown.drive_edges[0]), float(shown.drive_edges[-1])
         settings = self.document.recipe.displacement_histogram
         return settings.low_nm, settings.high_nm
 
@@ -358,6 +363,15 @@ class Session(QObject):
         shown = self.shown.get(name)
         return None if shown is None else shown.result
 
+    def _key(self, name: str) -> str:
+        """Return the key that a current result must have; worked out once for each analysis."""
+        assert self.analysis is not None
+        if self._keys_of is not self.analysis:
+            self._keys_of, self._keys = self.analysis, {}
+        if name not in self._keys:
+            self._keys[name] = self.analysis.key(name)
+        return self._keys[name]
+
     def state(self, name: str) -> str:
         """Return "none", "current", "out of date", "working" or "failed" of a step's result."""
         if self.analysis is None:
@@ -365,7 +379,7 @@ class Session(QObject):
         if name in self.errors:
             return "failed"
         shown = self.shown.get(name)
-        current = shown is not None and not shown.provisional and shown.key == self.analysis.key(name)
+        current = shown is not None and not shown.provisional and shown.key == self._key(name)
         if current:
             return "current"
         if self.jobs.runs(RESULTS) and name in self.pipeline.names:
@@ -379,6 +393,8 @@ class Session(QObject):
         self.errors.pop(name, None)
         if name in ("counts", "histogram") and first:
             self.set_span(self.default_span())
+        if name == "displacement_histogram" and first:
+            self.set_drive_span(*self.default_drive_span())
         self.result_changed.emit(name)
 
     def take_error(self, name: str, error: MesetaError) -> None:

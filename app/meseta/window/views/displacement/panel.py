@@ -75,7 +75,8 @@ class DisplacementPanel(DrivePanel):
     def _document_changed(self, change: Change) -> None:
         if change.before.recipe.figure != change.after.recipe.figure:
             self._draw()
-        self._say()
+        if change.recipe:
+            self._say()
 
     # -- drawing -----------------------------------------------------------------------------------------------------
 

@@ -182,8 +182,9 @@ class StepsPanel(QWidget):
         self.area.ensureWidgetVisible(card, 0, 0)
         self.area.ensureWidgetVisible(card.head, 0, 8)
 
-    def _document_changed(self, _: Change) -> None:
-        self.refresh_soon()
+    def _document_changed(self, change: Change) -> None:
+        if change.recipe or change.decisions:
+            self.refresh_soon()
 
     def refresh_soon(self) -> None:
         """Write the lines again once the present events are done."""
