@@ -169,7 +169,7 @@ def refit(fitted: Fitted, many: npt.ArrayLike, work: Work, weights: npt.ArrayLik
             upper,
             fitted.inner,
             _REFIT_TOLERANCE,
-            60,
+            300,
         )
         return found, status
 
