@@ -126,7 +126,8 @@ def run_one(files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bo
     from meseta.run import run_analysis
 
     analysis, bad = open_analysis(files, choice, strict, work)
-    title = Path(files[0]).stem if len(files) == 1 else f"{len(files)} recordings"
+    sources = analysis.traces.sources
+    title = Path(sources[0].name).stem if len(sources) == 1 else f"{len(sources)} recordings"
     try:
         return run_analysis(analysis, folder, work, bad, title, files)
     except MesetaError as error:
