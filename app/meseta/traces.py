@@ -489,7 +489,7 @@ def _drive_of(
     if displacement_nm is None:
         unit, step = ("step", 1.0) if step_nm is None else ("nm", float(step_nm))
         return Drive(np.zeros(traces), np.full(traces, step), unit)
-    if len(np.shape(displacement_nm[0])) == 0:  # type: ignore[index,arg-type]
+    if len(np.shape(displacement_nm[0])) == 0:  # type: ignore[index]
         shared = np.asarray(displacement_nm, np.float64)
         axes = [shared] * traces
     else:

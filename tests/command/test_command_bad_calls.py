@@ -86,6 +86,8 @@ def test_a_missing_file_and_an_empty_folder(tmp_path):
         (["--set", "histogram.bin_width_g0=0"], ["histogram.bin_width_g0", "above 0"]),
         (["--set", "histogram"], ["section.field=value"]),
         (["--set", "histogram.low_g0=5", "--set", "histogram.high_g0=1"], ["low_g0"]),
+        (["--set", "selection.rules=['platos >= 1']"], ["platos", "plateaus"]),
+        (["--set", "selection.rules=['plateaus >=']"], ["plateaus >="]),
         (["--preset", "metall"], ["metal"]),
         (["--recipe", "nowhere.toml"], ["nowhere.toml"]),
         (["--recipe", "nowhere.toml", "--preset", "metal"], ["--recipe", "--preset"]),

@@ -126,7 +126,18 @@ def recipe_from(
 def open_analysis(
     files: Sequence[str], choice: RecipeChoice, strict: bool, work: Work
 ) -> tuple[Analysis, list[MesetaError]]:
-    """Open a study, or read recordings, and return the analysis with the files that could not be read."""
+    """Open a study, or read recordings, and return the analysis with the files that could not be read.
+
+    Rules that cannot be understood for these traces are found here, before any work.
+    """
+    from meseta.selection import check_rules
+
+    analysis, bad = _opened(files, choice, strict, work)
+    check_rules(analysis.traces, analysis.recipe.selection, analysis.decisions)
+    return analysis, bad
+
+
+def _opened(files: Sequence[str], choice: RecipeChoice, strict: bool, work: Work) -> tuple[Analysis, list[MesetaError]]:
     from meseta import study
 
     if any(study.is_study(path) for path in files):

@@ -241,7 +241,7 @@ def _in_words(error: ValidationError, where: str) -> RecipeError:
         if len(place) == 1:
             return RecipeError(f"there is no section '{name}'", where, nearest(name, sections))
         section = sections.get(place[0])
-        known = list(section.annotation.model_fields) if section and section.annotation else []  # type: ignore[attr-defined]
+        known = list(section.annotation.model_fields) if section and section.annotation else []
         return RecipeError(f"there is no setting '{name}'", where, nearest(place[1], known))
     given = fault.get("input")
     allowed = _allowed(place) or str(fault["msg"])
@@ -252,7 +252,7 @@ def _allowed(place: list[str]) -> str:
     section = Recipe.model_fields.get(place[0])
     if section is None or len(place) != 2 or section.annotation is None:
         return ""
-    for info in section.annotation.fields():  # type: ignore[attr-defined]
+    for info in section.annotation.fields():
         if info.name == place[1]:
             words = {"number": "a number", "integer": "a whole number", "text": "text"}.get(info.kind, "")
             unit = f" in {info.unit}" if info.unit else ""

@@ -6,7 +6,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any, Literal, get_args, get_origin
 
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Field, JsonValue
 from pydantic.fields import FieldInfo as PydanticField
 
 __all__ = ["FieldInfo", "Section", "setting"]
@@ -41,7 +41,7 @@ def setting(
     **limits
         ``ge``, ``gt``, ``le``, ``lt``: the allowed range.
     """
-    extra = {"unit": unit, "unset": unset}
+    extra: dict[str, JsonValue] = {"unit": unit, "unset": unset}
     if factory is not None:
         return Field(default_factory=factory, title=title, description=help, json_schema_extra=extra, **limits)
     return Field(default, title=title, description=help, json_schema_extra=extra, **limits)
