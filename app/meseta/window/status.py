@@ -36,6 +36,7 @@ class StatusLine(QStatusBar):
         self.pointer.setAccessibleName("Under the pointer")
         self.pointer.setMinimumWidth(self.pointer.fontMetrics().horizontalAdvance("0") * 52)
         self.pointer.setAlignment(Qt.AlignmentFlag.AlignRight | Qt.AlignmentFlag.AlignVCenter)
+        self.pointer.setContentsMargins(0, 0, 12, 0)
         self.work_label, self.bar, self.stop = QLabel(""), QProgressBar(), QToolButton()
         self.bar.setTextVisible(False)
         self.bar.setFixedWidth(160)

@@ -175,8 +175,9 @@ class FileCheck(QWidget):
     def _show(self, picture: CheckPicture) -> None:
         first_look, self.picture = self.picture is None, picture
         if not picture.described:
-            self.title.setText("These files are not recognised")
-            self.summary.setText("Choose a reader or a layout below, or leave.")
+            known = bool(self.channels.roles)
+            self.title.setText("These files cannot be read like this" if known else "These files are not recognised")
+            self.summary.setText("Correct what is wrong below, choose a reader or a layout, or leave.")
         else:
             self._say_recognised(picture)
         self._say_doubts(picture.sentences())
