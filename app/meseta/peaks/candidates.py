@@ -82,7 +82,7 @@ def find_candidates(
     found: list[Candidate] = []
     for level, scale in enumerate(scales):
         curvature, error = layers[level]
-        for at in _hilltops(curvature, error):
+        for at in _hilltops(curvature, error, gaussian_filter1d(data, scale / step, mode="nearest")):
             inside = usable[0] + 0.5 * scale <= u[at] <= usable[1] - 0.5 * scale
             if _cut(data, at, scale / step):
                 continue
@@ -105,14 +105,21 @@ def _cut(data: Floats, at: int, scale_bins: float) -> bool:
     )
 
 
-def _hilltops(curvature: Floats, error: Floats) -> npt.NDArray[np.int64]:
-    """Return the highest point of every stretch of positive curvature that is large and no chance.
+def _hilltops(curvature: Floats, error: Floats, smooth: Floats) -> npt.NDArray[np.int64]:
+    """Return the top of every stretch of positive curvature that is large and no chance.
+
+    The top is the largest curvature; where that lies on the foot of a free-standing peak (its curvature is the same
+    all over), the highest density inside the stretch.
 
     Two tops that no stretch of non-positive curvature parts are one peak with noise on it.
     """
     hill = curvature > 0
     edges = np.flatnonzero(np.diff(np.concatenate([[False], hill, [False]]).astype(np.int8)))
-    tops = [first + int(np.argmax(curvature[first:last])) for first, last in edges.reshape(-1, 2)]
+    tops = []
+    for first, last in edges.reshape(-1, 2):
+        bend, high = first + int(np.argmax(curvature[first:last])), first + int(np.argmax(smooth[first:last]))
+        free = first < high < last - 1 and curvature[high] >= 0.5 * curvature[bend]
+        tops.append(high if free and smooth[bend] < 0.3 * smooth[high] else bend)
     good = [
         at
         for at in tops
@@ -158,12 +165,13 @@ def _curvature(
     data: Floats, traces_in_bin: Floats, replicates: npt.ArrayLike | None, scale_bins: float
 ) -> tuple[Floats, Floats]:
     """Return curvature and its standard error."""
-    hill = _hill(data, scale_bins)
+    reach = gaussian_filter1d(traces_in_bin, scale_bins, mode="nearest")
+    # Where next to nothing was counted the foot of a neighbour is a hill too: flatten it.
+    hill = np.where(reach < max(2.0, 0.01 * float(reach.max())), 0.0, _hill(data, scale_bins))
     if replicates is not None and len(np.asarray(replicates)) >= 20:
         spread = _hill(np.asarray(replicates, float)[:60], scale_bins)
         return hill, np.std(spread, axis=0) + 1e-12
     smooth = gaussian_filter1d(data, scale_bins, mode="nearest")
-    reach = gaussian_filter1d(traces_in_bin, scale_bins, mode="nearest")
     # var(s² d'' / d): second derivative of a Gaussian kernel, contributions of 2 (counts a trace) each.
     independent = np.maximum(reach, 0.5) * 2.0 * scale_bins * np.sqrt(np.pi) / 0.75
     return hill, np.where(smooth > 0, np.sqrt(2.0 / independent), np.inf)
