@@ -243,6 +243,8 @@ def _in_words(error: ValidationError, where: str) -> RecipeError:
         section = sections.get(place[0])
         known = list(section.annotation.model_fields) if section and section.annotation else []
         return RecipeError(f"there is no setting '{name}'", where, nearest(place[1], known))
+    if fault["type"] == "value_error":
+        return RecipeError(f"[{name}] {fault['ctx']['error']}", where, "change one of them")
     given = fault.get("input")
     allowed = _allowed(place) or str(fault["msg"])
     return RecipeError(f"'{name}' cannot be {given!r}", where, f"allowed: {allowed}")

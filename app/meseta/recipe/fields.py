@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import Any, Literal, get_args, get_origin
+from typing import Any, ClassVar, Literal, Self, get_args, get_origin
 
-from pydantic import BaseModel, ConfigDict, Field, JsonValue
+from pydantic import BaseModel, ConfigDict, Field, JsonValue, model_validator
 from pydantic.fields import FieldInfo as PydanticField
 
 __all__ = ["FieldInfo", "Section", "setting"]
@@ -92,6 +92,17 @@ class Section(BaseModel):
     """Base of every recipe section: frozen, nothing unknown allowed."""
 
     model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False, validate_default=True)
+
+    ordered: ClassVar[tuple[tuple[str, str], ...]] = ()
+    """Pairs of settings of which the first, where both are set, must be less than the second."""
+
+    @model_validator(mode="after")
+    def _ends_in_order(self) -> Self:
+        for low, high in self.ordered:
+            below, above = getattr(self, low), getattr(self, high)
+            if below is not None and above is not None and below >= above:
+                raise ValueError(f"{low} ({below:g}) must be less than {high} ({above:g})")
+        return self
 
     @classmethod
     def fields(cls) -> Iterator[FieldInfo]:

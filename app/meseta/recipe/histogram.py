@@ -23,6 +23,8 @@ _STORED_WIDTH_G0 = 0.004
 class HistogramSettings(Section):
     """The conductance histogram and the count matrix behind it."""
 
+    ordered = (("low_g0", "high_g0"),)
+
     axis: Literal["linear", "logarithmic"] = setting(
         "logarithmic", "Conductance axis", "Bins of equal width in G or in log10 G."
     )
@@ -107,6 +109,8 @@ class HistogramSettings(Section):
 class DisplacementHistogramSettings(Section):
     """The 2D conductance-displacement histogram."""
 
+    ordered = (("low_nm", "high_nm"),)
+
     low_nm: float = setting(-0.5, "From", "Lower end of the displacement axis, zero at the rupture.", unit="nm")
     high_nm: float = setting(2.0, "To", "Upper end of the displacement axis.", unit="nm")
     bins: int = setting(250, "Displacement bins", "Number of bins of the displacement axis.", ge=2, le=4000)
@@ -116,6 +120,8 @@ class DisplacementHistogramSettings(Section):
 
 class CorrelationSettings(Section):
     """The 2D correlation histogram."""
+
+    ordered = (("low_g0", "high_g0"),)
 
     bins_per_decade: int = setting(25, "Bins per decade", "Finer bins show only neighbours.", ge=1, le=200)
     bin_width_g0: float = setting(0.04, "Bin width", "Of the linear axis.", unit="G0", gt=0, le=10)
@@ -138,6 +144,8 @@ class TemporalSettings(Section):
 
 class LengthSettings(Section):
     """Length histograms."""
+
+    ordered = (("low_g0", "high_g0"),)
 
     low_g0: float = setting(0.5, "Window from", "Lower conductance of the window.", unit="G0", gt=0)
     high_g0: float = setting(1.2, "Window to", "Upper conductance of the window.", unit="G0", gt=0)

@@ -34,6 +34,8 @@ class PeakStart(BaseModel):
 class PeakSettings(Section):
     """The peak fit."""
 
+    ordered = (("fit_low_g0", "fit_high_g0"),)
+
     axis: Literal["as_histogram", "linear", "logarithmic"] = setting(
         "as_histogram",
         "Axis of the fit",

@@ -12,6 +12,8 @@ __all__ = ["PlateauSettings"]
 class PlateauSettings(Section):
     """The plateau finder."""
 
+    ordered = (("low_g0", "high_g0"),)
+
     method: Literal["change_points", "derivative", "levels"] = setting(
         "change_points",
         "Method",
