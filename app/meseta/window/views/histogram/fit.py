@@ -68,10 +68,12 @@ class FitLayer:
         if fit.grid.axis == self._panel.session.axis and fit.grid.bins:
             u = (fit.grid.u_edges[:-1] + fit.grid.u_edges[1:]) / 2
             across = self._panel.across
-            self.model.setData(across(fit.model), u)
-            self.background.setData(across(fit.background), u)
+            fitted = fit.grid.widths < 3 * float(np.median(fit.grid.widths))  # a wide bin bridges stretches not fitted
+            self.model.setData(np.where(fitted, across(fit.model), np.nan), u, connect="finite")
+            self.background.setData(np.where(fitted, across(fit.background), np.nan), u, connect="finite")
             gap = np.array([np.nan])
-            lines = [np.concatenate([across(one + fit.background), gap]) for one in fit.components]
+            parts = [np.where(fitted, across(one + fit.background), np.nan) for one in fit.components]
+            lines = [np.concatenate([part, gap]) for part in parts]
             heights = np.tile(np.concatenate([u, gap]), len(lines))
             self.components.setData(np.concatenate(lines), heights, connect="finite")
         else:
