@@ -8,6 +8,7 @@ import threading
 
 os.environ.setdefault("QT_QPA_PLATFORM", "offscreen")
 
+import pyqtgraph
 import pytest
 from PySide6.QtCore import QSettings, QTimer
 from PySide6.QtWidgets import QApplication
@@ -16,6 +17,7 @@ from meseta.simulate import simulate
 from meseta.window.application import make_application, make_window
 from meseta.window.session import Session
 
+pyqtgraph.setConfigOption("mouseRateLimit", -1)  # no move of a test's mouse is left out, however fast it comes
 WAIT_MS = 120_000
 """Upper bound of a wait on a condition: only a hang reaches it."""
 
