@@ -33,12 +33,12 @@ def result_lines(summary: dict[str, Any], folder: Path) -> list[str]:
     lines = [f"{typeset.integer(traces['kept'])} of {typeset.integer(traces['read'])} traces kept"]
     rows = [_HEADINGS, *(_peak_row(peak) for peak in summary["peaks"])]
     widths = [max(len(row[column]) for row in rows) for column in range(len(_HEADINGS))]
-    if len(rows) > 1:
+    if any(peak["position_g0"] is not None for peak in summary["peaks"]):
         lines += [
             "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows
         ]
     else:
-        lines.append("no peak was found")
+        lines += [str(peak["status"]) for peak in summary["peaks"]] or ["no peak was found"]
     lines += [f"caution: {warning}" for warning in summary["warnings"]]
     lines.append(f"figures: {folder / 'figure.pdf'}, {folder / 'figure.svg'}, {folder / 'figure.png'}")
     lines.append(f"report: {folder / 'report.html'}; tables and study: {folder}")
