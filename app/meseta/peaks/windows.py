@@ -20,23 +20,19 @@ Floats = npt.NDArray[np.float64]
 
 _REACH = 4.0
 _FLOOR_SIGMAS = 6.0
-_COMB_STEPS = 2.0
 
 
 @dataclass(frozen=True)
 class Floor:
-    """Reading with the contact open, in G0: mean, standard deviation of a sample, step of the converter (0: none)."""
+    """Reading with the contact open, in G0: mean and standard deviation of a sample."""
 
     mean_g0: float
     sigma_g0: float
-    step_g0: float = 0.0
 
     @classmethod
     def of(cls, noise: NoiseModel) -> Floor | None:
         """Return the floor of a noise model; None where no trace was shown to reach it."""
-        if not noise.floor_traces:
-            return None
-        return cls(noise.floor_g0, noise.floor_sigma_g0, noise.converter_step_g0)
+        return cls(noise.floor_g0, noise.floor_sigma_g0) if noise.floor_traces else None
 
 
 @dataclass(frozen=True)
@@ -79,8 +75,7 @@ def usable_range(histogram: ConductanceHistogram, floor: Floor | None) -> tuple[
     """Return the range of the axis in which a peak may lie: from clear above the floor to the upper end.
 
     The floor is a peak of the histogram too, and no conductance of a contact.  Where it is not given, it is looked for
-    at the lower end of a logarithmic axis.  Bins narrower than two steps of the converter form a comb, in which no peak
-    can be told.
+    at the lower end of a logarithmic axis.
     """
     grid = histogram.grid
     u, logarithmic = grid.u_edges, grid.axis == "logarithmic"
@@ -89,8 +84,6 @@ def usable_range(histogram: ConductanceHistogram, floor: Floor | None) -> tuple[
         top = floor.mean_g0 + _FLOOR_SIGMAS * floor.sigma_g0
         if top > 0 or not logarithmic:
             low = max(low, to_axis(top, logarithmic))
-        coarse = np.flatnonzero(np.diff(grid.edges_g0) >= _COMB_STEPS * floor.step_g0)
-        low = max(low, float(u[coarse[0]])) if logarithmic and len(coarse) else low
     elif logarithmic:
         low = max(low, _floor_edge(u, histogram.counts.astype(float)))
     return low, float(u[-1])
