@@ -47,8 +47,15 @@ check_qt() {
 }
 
 meseta_setup() {
-    stamp=$({ echo "$1"; cat pyproject.toml app/meseta/kernels.py app/meseta/*/kernels.py; } | cksum | tr ' ' '-')
-    [ -f ".venv/set-up-$stamp" ] && return 0
+    hash=$(cat pyproject.toml app/meseta/kernels.py app/meseta/*/*kernels.py | cksum | tr ' ' '-')
+    case "$1" in
+    "") enough="plain test dev" stamp=plain ;;
+    "[test]") enough="test dev" stamp=test ;;
+    *) enough=dev stamp=dev ;;
+    esac
+    for done in $enough; do # what was set up for more serves for less
+        [ -f ".venv/set-up-$hash-$done" ] && return 0
+    done
     python=$(find_python) || return 2
     if [ ! -x .venv/bin/python ] || ! .venv/bin/python -c '' >/dev/null 2>&1; then
         say "meseta: making a private environment in .venv"
@@ -64,6 +71,8 @@ meseta_setup() {
     check_qt
     say "meseta: compiling the kernels (once)"
     .venv/bin/python -m meseta.kernels >&2 || return 2
-    rm -f .venv/set-up-*
-    : >".venv/set-up-$stamp"
+    for old in .venv/set-up-*; do
+        case "$old" in *"$hash"*) ;; *) rm -f "$old" ;; esac
+    done
+    : >".venv/set-up-$hash-$stamp"
 }
