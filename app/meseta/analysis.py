@@ -146,7 +146,12 @@ def _plateaus(parts: Iterator[Any], traces: TraceSet, _: SettingsView, __: Input
 
 def _measures_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> TraceMeasures:
     return segmentation.measure_traces(
-        traces, settings.lengths, inputs["noise"], inputs["alignment"], phases_of(settings.histogram.direction)
+        traces,
+        settings.lengths,
+        inputs["noise"],
+        inputs["alignment"],
+        phases_of(settings.histogram.direction),
+        settings.calibration.displacement_from,
     )
 
 
@@ -309,7 +314,13 @@ STEPS: Mapping[str, Step] = {
             "plateaus", "finding plateaus", 1, ("noise", "alignment"), ("plateaus", _PHASE), _plateaus, _plateaus_block
         ),
         Step(
-            "measures", "measuring traces", 1, ("noise", "alignment"), ("lengths", _PHASE), _measures, _measures_block
+            "measures",
+            "measuring traces",
+            2,
+            ("noise", "alignment"),
+            ("lengths", _PHASE, "calibration.displacement_from"),
+            _measures,
+            _measures_block,
         ),
         Step(
             "selection", "selecting traces", 1, ("measures", "plateaus", "decisions"), ("selection", _PHASE), _selection

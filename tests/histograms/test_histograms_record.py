@@ -182,6 +182,8 @@ def measures(traces: int) -> TraceMeasures:
         lowest_g0=nothing,
         crossing_length=nothing,
         tunnelling_slope=nothing,
+        apparent_barrier_ev=nothing,
+        barrier_refused=np.full(traces, "no tunnelling slope was seen"),
         floor_noise_g0=nothing,
         saturated_samples=number,
         missing_samples=number,

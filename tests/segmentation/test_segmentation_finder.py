@@ -231,3 +231,19 @@ def test_level_crossing_length_of_the_contact():
     assert np.all(measures.reaches_floor)
     assert np.allclose(measures.floor_noise_g0, SIGMA, rtol=0.15)
     assert not np.any(measures.reforms)
+
+
+def test_apparent_barrier_and_why_there_is_none():
+    # 9.950338171 decades/nm is a square barrier of 5 eV (tests/core/test_core_quantities.py); 10 decades/nm is 5.05 eV.
+    traces = recording(10)
+    measures = Analysis(traces).result("measures")
+    assert np.allclose(measures.apparent_barrier_ev, 5.05, rtol=0.1)
+    assert set(measures.barrier_refused) == {""}
+    circular = Analysis(traces, Recipe().with_settings(["calibration.displacement_from=tunnelling"])).result("measures")
+    assert np.all(np.isnan(circular.apparent_barrier_ev))
+    assert set(circular.barrier_refused) == {"the displacement was calibrated by the tunnelling slope"}
+    rows = [traces.trace_conductance(t) for t in range(10)]
+    uncalibrated = Analysis(TraceSet.from_arrays(rows)).result("measures")
+    assert set(uncalibrated.barrier_refused) == {"the drive is not in nm"}
+    flat = Analysis(TraceSet.from_arrays([np.ones(200)], step_nm=STEP_NM)).result("measures")
+    assert set(flat.barrier_refused) == {"no tunnelling slope was seen"}

@@ -14,6 +14,7 @@ import numpy as np
 from meseta import __version__, typeset
 from meseta.analysis import Analysis
 from meseta.figures.stated import Stated
+from meseta.quantities import barrier_from_decay
 from meseta.recipe import Recipe
 from meseta.work import Work
 
@@ -158,7 +159,16 @@ def _noise(stated: Stated, analysis: Analysis, work: Work) -> list[str]:
         unit = analysis.traces.drive.unit
         slope = typeset.number(noise.tunnelling_slope, 3)
         sentences.append(f"The median slope of the tunnelling decay is {slope} decades per {unit}.")
+        sentences.append(_barrier(noise.tunnelling_slope, analysis))
     return sentences
+
+
+def _barrier(slope: float, analysis: Analysis) -> str:
+    if analysis.recipe.calibration.displacement_from == "tunnelling":
+        return "No apparent barrier is stated, because the displacement was itself calibrated by that slope."
+    if not analysis.traces.drive.is_displacement:
+        return ""
+    return f"It is that of a square barrier of {typeset.number(float(barrier_from_decay(slope)), 2)} eV."
 
 
 def _plateaus(stated: Stated, analysis: Analysis, work: Work) -> list[str]:

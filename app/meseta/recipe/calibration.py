@@ -114,6 +114,12 @@ class CalibrationSettings(Section):
         unset="not used",
         gt=0,
     )
+    displacement_from: Literal["measured", "tunnelling"] = setting(
+        "measured",
+        "Displacement known from",
+        "'tunnelling': the displacement was itself calibrated by the slope of the tunnelling decay, so that no "
+        "apparent barrier can be taken from that slope; 'measured': by anything else.",
+    )
     sampling_hertz: float | None = setting(
         None, "Sampling rate", "Samples per second and channel.", unit="Hz", unset=_RECORDING, gt=0
     )

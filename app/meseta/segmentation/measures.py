@@ -5,8 +5,10 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 import numpy as np
+import numpy.typing as npt
 
 from meseta.intake.alignment import Alignment
+from meseta.quantities import barrier_from_decay
 from meseta.recipe.histogram import LengthSettings
 from meseta.segmentation.measure_kernels import measure
 from meseta.segmentation.noise import CLEAR_OF_CONTACT_G0, Floats, Integers, phase_bounds, runs_backward
@@ -17,7 +19,12 @@ __all__ = ["measure_traces"]
 
 
 def measure_traces(
-    traces: TraceSet, settings: LengthSettings, noise: NoiseModel, alignment: Alignment, phases: Sequence[str]
+    traces: TraceSet,
+    settings: LengthSettings,
+    noise: NoiseModel,
+    alignment: Alignment,
+    phases: Sequence[str],
+    displacement_from: str = "measured",
 ) -> TraceMeasures:
     """Measure a block of traces.
 
@@ -32,6 +39,8 @@ def measure_traces(
         Of these traces.
     phases : sequence of str
         Phases to measure.
+    displacement_from : str
+        "tunnelling" where the displacement was calibrated by the tunnelling slope; no barrier is then taken from it.
     """
     starts, stops = phase_bounds(traces, phases)
     drive = traces.drive_values(0, traces.traces)
@@ -57,6 +66,7 @@ def measure_traces(
     span, rupture = np.zeros(len(starts)), np.full(len(starts), np.nan)
     span[some] = np.abs(drive[stops[some] - 1] - drive[starts[some]])
     rupture[some] = alignment.zero_drive[some] - drive[traces.offsets[:-1][some]]
+    barrier, refused = _barrier(rows[:, 3], traces.drive.is_displacement, displacement_from)
     return TraceMeasures(
         drive_span=span,
         rupture_drive=rupture,
@@ -67,10 +77,24 @@ def measure_traces(
         lowest_g0=rows[:, 1],
         crossing_length=rows[:, 2],
         tunnelling_slope=rows[:, 3],
+        apparent_barrier_ev=barrier,
+        barrier_refused=refused,
         floor_noise_g0=rows[:, 5],
         saturated_samples=_saturated(traces, starts, stops, noise.saturation_g0),
         missing_samples=rows[:, 7].astype(np.int64),
     )
+
+
+def _barrier(slope: Floats, in_nm: bool, displacement_from: str) -> tuple[Floats, npt.NDArray[np.str_]]:
+    """Return the apparent barrier of each trace in eV, and in words why there is none."""
+    if not in_nm:
+        refused = np.full(len(slope), "the drive is not in nm")
+    elif displacement_from == "tunnelling":
+        refused = np.full(len(slope), "the displacement was calibrated by the tunnelling slope")
+    else:
+        falls = np.where(slope < 0, "", "the conductance does not fall with displacement")
+        refused = np.where(np.isfinite(slope), falls, "no tunnelling slope was seen")
+    return np.where(refused == "", barrier_from_decay(slope), np.nan), refused
 
 
 def _saturated(traces: TraceSet, starts: Integers, stops: Integers, saturation: float) -> Integers:

@@ -155,6 +155,10 @@ class TraceMeasures(Table):
     tunnelling_slope : (traces,) float64
         Least-squares slope of log10 G after the rupture, clear of contact and floor, decades per drive unit; NaN where
         too few samples.
+    apparent_barrier_ev : (traces,) float64
+        Height in eV of the square barrier that has the tunnelling slope; NaN where ``barrier_refused`` says why.
+    barrier_refused : (traces,) str
+        Why there is no apparent barrier; "" where there is one.
     floor_noise_g0 : (traces,) float64
         Standard deviation of the trace's samples at the floor; NaN where it does not reach it.
     saturated_samples, missing_samples : (traces,) int64
@@ -170,6 +174,8 @@ class TraceMeasures(Table):
     lowest_g0: Floats
     crossing_length: Floats
     tunnelling_slope: Floats
+    apparent_barrier_ev: Floats
+    barrier_refused: npt.NDArray[np.str_]
     floor_noise_g0: Floats
     saturated_samples: Integers
     missing_samples: Integers

@@ -100,6 +100,7 @@ _ALL = (
     _measure("rupture_drive", "the drive at the rupture", "drive"),
     _measure("crossing_length", "the length by level crossing", "drive"),
     _measure("tunnelling_slope", "the slope of the tunnelling decay", "decades per drive unit"),
+    _measure("apparent_barrier_ev", "the apparent barrier of the tunnelling decay", "eV"),
     _measure("floor_noise_g0", "the noise at the floor", "G0"),
     _measure("saturated_samples", "the number of saturated samples", ""),
     _measure("missing_samples", "the number of missing samples", ""),
