@@ -1,4 +1,7 @@
-"""Reading against the bare parse: CSV files against pyarrow, one HDF5 file against h5py; the checksum on its own line.
+"""Reading against the bare parse: CSV files against pyarrow, one HDF5 file against h5py.
+
+The ratio is taken with the checksum left out (it is replaced by a constant for that measurement); the time with it, as
+every user has it, and the time of the checksums alone stand beside it.
 
 Run with ``python tests/benchmarks/bench_intake.py [traces]``.  Best of several, interleaved; the answer is asserted.
 """
@@ -12,6 +15,7 @@ import time
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
+from unittest.mock import patch
 
 import h5py
 import numpy as np
@@ -19,6 +23,8 @@ import pyarrow as pa
 from pyarrow import csv
 
 from meseta import intake
+from meseta.intake import opening, reading
+from meseta.intake.readers import unpack
 from meseta.work import Work
 
 SAMPLES, ROUNDS = 5000, 5
@@ -36,7 +42,17 @@ def best(functions: dict[str, Callable[[], object]]) -> dict[str, float]:
 
 
 def checksum(paths: list[Path]) -> list[str]:
-    return [intake.opening.sha256_of(path) for path in paths]
+    return [unpack.sha256_of(path) for path in paths]
+
+
+def read_without_checksum(path: Path) -> object:
+    """Read with checksums that cost nothing."""
+    with (
+        patch.object(reading, "sha256_of", lambda _: "0"),
+        patch.object(opening, "sha256_of", lambda _: "0"),
+        patch.object(unpack, "sha256_of_bytes", lambda _: "0"),
+    ):
+        return intake.read(path)
 
 
 def parse_csv(paths: list[Path]) -> list[pa.Table]:
@@ -51,10 +67,10 @@ def read_hdf5(path: Path) -> np.ndarray:
 
 
 def report(label: str, times: dict[str, float]) -> None:
-    ratio = (times["meseta"] - times["checksum"]) / times["bare"]
     print(
-        f"{label}: bare {times['bare']:.3f} s, Meseta {times['meseta']:.3f} s, checksum {times['checksum']:.3f} s; "
-        f"ratio without checksum {ratio:.2f} (aim 1.5)"
+        f"{label}: bare {times['bare']:.3f} s, without checksum {times['plain']:.3f} s, with it {times['meseta']:.3f} s"
+        f" (checksums alone {times['checksum']:.3f} s); ratio without checksum {times['plain'] / times['bare']:.2f}"
+        f" (aim 1.5), with it {times['meseta'] / times['bare']:.2f}"
     )
 
 
@@ -78,11 +94,13 @@ def main(traces: int) -> None:
         assert intake.read(few).sources[0].sha256 == hashlib.sha256(paths[0].read_bytes()).hexdigest()
         hdf5 = {
             "bare": lambda: read_hdf5(folder / "rows.h5"),
+            "plain": lambda: read_without_checksum(folder / "rows.h5"),
             "meseta": lambda: intake.read(folder / "rows.h5"),
             "checksum": lambda: checksum([folder / "rows.h5"]),
         }
         tables = {
             "bare": lambda: parse_csv(paths),
+            "plain": lambda: read_without_checksum(few),
             "meseta": lambda: intake.read(few),
             "checksum": lambda: checksum(paths),
         }

@@ -121,8 +121,11 @@ class Part:
         lo, hi = int(self.offsets[first]), int(self.offsets[last])
         at, bits = lo, self.quality
         for start, stop in self.spans(first, last):
-            found = self.calibration.apply(self.recording, start, stop)
             end = at + stop - start
+            if self.calibration.apply_into(self.recording, start, self.conductance[at:end]):
+                at = end
+                continue
+            found = self.calibration.apply(self.recording, start, stop)
             self.conductance[at:end] = found.conductance
             if found.quality is not None and bits is not None:
                 bits[at:end] = found.quality
@@ -133,33 +136,31 @@ class Part:
         return self._load_drive(first, last) if with_drive and self.axis.channel is not None else True
 
     def _load_drive(self, first: int, last: int) -> bool:
+        from meseta.intake.kernels import drive_steps
+
         assert self.relative is not None
         values = self.gathered(lambda a, b: self.axis.values(self.recording, a, b), first, last)
         offsets = self.offsets[first : last + 1] - self.offsets[first]
-        begin, lengths = values[np.minimum(offsets[:-1], max(len(values) - 1, 0))], np.diff(offsets)
-        ending = values[np.maximum(offsets[1:] - 1, 0)]
-        with np.errstate(divide="ignore", invalid="ignore"):
-            step = np.where(lengths > 1, (ending - begin) / np.maximum(lengths - 1, 1), 0.0)
-        relative = values - np.repeat(begin, lengths)
-        self.relative[int(self.offsets[first]) : int(self.offsets[last])] = relative
-        self.drive_start[first:last], self.drive_step[first:last] = begin, step
-        index = np.arange(len(values)) - np.repeat(offsets[:-1], lengths)
-        off = np.abs(relative - np.repeat(step, lengths) * index)
-        bound = LINEAR_TOLERANCE * float(np.max(np.abs(values), initial=0.0))
-        return bool(np.all(off <= bound))
+        own = slice(int(self.offsets[first]), int(self.offsets[last]))
+        start, step, relative = self.drive_start[first:last], self.drive_step[first:last], self.relative[own]
+        return bool(drive_steps(np.ascontiguousarray(values), offsets, LINEAR_TOLERANCE, start, step, relative))
 
     def settle_directions(self) -> None:
         """Give every trace without a stated direction one: closing where its conductance rises from end to end."""
         unknown = [row for row, direction in enumerate(self.cut.direction) if not direction]
         if unknown:
             rising = _rises(self.conductance, self.offsets, np.array(unknown, np.int64))
-            for row, closing in zip(unknown, rising, strict=True):
+            for row, closing in zip(unknown, rising.tolist(), strict=True):
                 self.cut.direction[row] = "closing" if closing else "opening"
         has_phase = {phase[0] for phase in self.cut.phases}
-        for row in range(self.traces):
-            if row not in has_phase:
-                kind = PUSH if self.cut.direction[row] == "closing" else PULL
-                self.cut.phases.append((row, 0, int(self.offsets[row + 1] - self.offsets[row]), kind))
+        if len(has_phase) == self.traces:
+            return
+        lengths = np.diff(self.offsets).tolist()
+        self.cut.phases += [
+            (row, 0, length, PUSH if direction == "closing" else PULL)
+            for row, (length, direction) in enumerate(zip(lengths, self.cut.direction, strict=True))
+            if row not in has_phase
+        ]
         self.cut.phases.sort()
 
     def notes(self) -> dict[str, Any]:
@@ -178,29 +179,11 @@ def _rises(
     values: npt.NDArray[np.float32], offsets: npt.NDArray[np.int64], rows: npt.NDArray[np.int64]
 ) -> npt.NDArray[np.bool_]:
     """Return for each row whether its conductance ends much higher than it begins."""
-    lengths = offsets[rows + 1] - offsets[rows]
-    reach = np.minimum(lengths, ENDS)
-    place = np.arange(ENDS)
-    usable = place < reach[:, None]
-    safe = np.minimum(place, np.maximum(reach - 1, 0)[:, None])
-    last = max(len(values) - 1, 0)
-    if len(values) == 0:
-        return np.zeros(len(rows), bool)
-    early = np.where(usable, np.abs(values[np.minimum(offsets[rows][:, None] + safe, last)]), np.nan)
-    late = np.where(usable, np.abs(values[np.clip(offsets[rows + 1][:, None] - 1 - safe, 0, last)]), np.nan)
-    enough = np.isfinite(early).any(axis=1) & np.isfinite(late).any(axis=1)
-    result = np.zeros(len(rows), bool)
-    if enough.any():
-        result[enough] = _row_medians(late[enough]) > RISE_FACTOR * _row_medians(early[enough])
-    return result
+    from meseta.intake.kernels import rising_rows
 
-
-def _row_medians(values: npt.NDArray[Any]) -> npt.NDArray[Any]:
-    """Return the (lower) median of the finite values of each row; every row has one."""
-    ordered = np.sort(values, axis=1)  # NaN last
-    middle = (np.isfinite(values).sum(axis=1) - 1) // 2
-    picked: npt.NDArray[Any] = np.take_along_axis(ordered, middle[:, None], 1)[:, 0]
-    return picked
+    rising = np.empty(len(rows), np.bool_)
+    rising_rows(values, offsets, rows, ENDS, RISE_FACTOR, rising)
+    return rising
 
 
 def prepared(recording: Recording, recipe: Recipe) -> Recording:

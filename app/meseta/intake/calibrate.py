@@ -74,6 +74,17 @@ class Calibration:
             measured = _without_series(measured, resistance)
         return Calibrated(measured.astype(np.float32), quality)
 
+    def apply_into(self, recording: Recording, start: int, target: npt.NDArray[np.float32]) -> bool:
+        """Fill ``target`` with recorded conductance from flat sample ``start`` on, where no number changes.
+
+        Returns
+        -------
+        bool
+            False where the samples need calibrating (or their reader has no way to fill an array): nothing was done.
+        """
+        read_into = getattr(self.channel.samples, "read_into", None)
+        return bool(read_into and self._is_plain() and not self.channel.shared and read_into(start, target))
+
     def _is_plain(self) -> bool:
         channel = self.channel
         return (

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import configparser
+import contextlib
 import json
+import os
 import re
 import tomllib
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any, Final
 
@@ -58,16 +60,26 @@ def _number(text: str) -> Plain:
     return text
 
 
-def sidecar(path: Path) -> dict[str, Plain]:
+def sidecar(path: Path, known: frozenset[str] | None = None) -> dict[str, Plain]:
     """Return what a file beside the recording says: the same name with .json, .toml, .ini or .yaml.
+
+    Parameters
+    ----------
+    path : Path
+    known : frozenset of str, optional
+        Names of all files of the folder that may be sidecars.
 
     Raises
     ------
     InputError
         Where the sidecar cannot be understood.
     """
+    if known is not None and not known:
+        return {}
     for ending in _ENDINGS:
         for candidate in (path.with_suffix(ending), path.with_name(path.name + ending)):
+            if known is not None and candidate.name not in known:
+                continue
             if candidate != path and candidate.is_file() and candidate.stat().st_size <= LARGEST_BYTE:
                 return _flat(_parsed(candidate))
     return {}
@@ -116,16 +128,26 @@ def _flat(entries: Mapping[str, Any]) -> dict[str, Plain]:
     return found
 
 
-def batch_context(settings: IntakeSettings) -> OpenContext:
-    """Return what is the same for all files of a batch: the table of metadata.
+def _sidecars(folders: Iterable[Path]) -> dict[Path, frozenset[str]]:
+    """Return the names of all files that may be sidecars, by folder; each folder is listed once."""
+    found = {}
+    for folder in folders:
+        with contextlib.suppress(OSError):  # one that cannot be listed is looked into file by file
+            found[folder] = frozenset(one.name for one in os.scandir(folder) if one.name.endswith(_ENDINGS))
+    return found
+
+
+def batch_context(settings: IntakeSettings, paths: Sequence[Path] = ()) -> OpenContext:
+    """Return what is the same for all files of a batch: the table of metadata, and which files have sidecars.
 
     Raises
     ------
     InputError
         Where the table cannot be read or has no column 'file'.
     """
+    sidecars = _sidecars({path.parent for path in paths}) if len(paths) > 1 else {}
     if settings.metadata_table is None:
-        return OpenContext()
+        return OpenContext({}, sidecars)
     import csv
 
     path = Path(settings.metadata_table)
@@ -143,12 +165,12 @@ def batch_context(settings: IntakeSettings) -> OpenContext:
     for row in rows:
         named = {str(key): _number(value) for key, value in row.items() if key not in (None, "file") and value}
         table[str(row["file"])] = named
-    return OpenContext(table)
+    return OpenContext(table, sidecars)
 
 
 def beside(path: Path, name: str, settings: IntakeSettings, context: OpenContext) -> tuple[dict[str, Plain], list[str]]:
     """Return what stands beside a file, under canonical names, with doubts; the table wins, then the name."""
-    entries: dict[str, Plain] = dict(sidecar(path))
+    entries: dict[str, Plain] = dict(sidecar(path, context.sidecars.get(path.parent)))
     if settings.name_template is not None:
         entries |= from_name(name, settings.name_template)
     if context.table:

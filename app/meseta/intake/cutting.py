@@ -74,11 +74,27 @@ def cut(recording: Recording, settings: CuttingSettings, calibration: Calibratio
     result = Cut()
     drive = recording.channel("piezo", "displacement")
     drive = None if drive is None or drive.shared else drive
+    if settings.method != "threshold" and drive is None and not _has_marks(recording, settings):
+        return _uncut(recording)
     for piece in range(recording.pieces):
         first, last = int(recording.offsets[piece]), int(recording.offsets[piece + 1])
         for start, stop in _parts(recording, settings, first, last):
             _cut_part(recording, settings, calibration, drive, result, (piece, start, stop))
     return result
+
+
+def _has_marks(recording: Recording, settings: CuttingSettings) -> bool:
+    """Return whether a channel may say where one trace ends and the next begins."""
+    channels = (recording.channel("trace_number"), recording.channel("time"))
+    return settings.method == "auto" and any(channel is not None and not channel.shared for channel in channels)
+
+
+def _uncut(recording: Recording) -> Cut:
+    """Return every piece that holds samples as one trace."""
+    start, stop = recording.offsets[:-1], recording.offsets[1:]
+    filled = np.flatnonzero(stop > start)
+    directions = [_stated_direction(recording, piece) for piece in filled.tolist()]
+    return Cut(start[filled].tolist(), stop[filled].tolist(), filled.tolist(), directions, [-1] * len(filled))
 
 
 def _parts(recording: Recording, settings: CuttingSettings, first: int, last: int) -> list[tuple[int, int]]:

@@ -147,7 +147,7 @@ def describe(
     """
     recipe, work = recipe or Recipe(), work or Work()
     files, _ = find_files(paths)
-    context = batch_context(recipe.intake)
+    context = batch_context(recipe.intake, [file.path for file in files])
     described: list[Description] = []
     bad: list[InputError] = []
     for done, file in enumerate(files):

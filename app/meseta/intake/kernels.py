@@ -9,7 +9,7 @@ import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
-__all__ = ["find_crossings", "find_turns", "power_of_ten"]
+__all__ = ["drive_steps", "find_crossings", "find_turns", "power_of_ten", "rising_rows"]
 
 ALIGNED, NEVER_REACHES, ENDS_ABOVE, NO_SAMPLES = 0, 1, 2, 3
 
@@ -126,6 +126,73 @@ def power_of_ten(exponents: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:
     return result
 
 
+@kernel
+def drive_steps(
+    values: npt.NDArray[np.float64],
+    offsets: npt.NDArray[np.int64],
+    tolerance: float,
+    start: npt.NDArray[np.float64],
+    step: npt.NDArray[np.float64],
+    relative: npt.NDArray[np.float32],
+) -> bool:
+    """Fill start, mean step and relative drive of every trace; return whether all steps are equal.
+
+    Steps are equal where no value is off the straight line from first to last by more than ``tolerance`` times the
+    largest value; NaN is never on a line.
+    """
+    largest = 0.0
+    for value in values:
+        if abs(value) > largest:
+            largest = abs(value)
+    bound, straight = tolerance * largest, True
+    for trace in range(len(offsets) - 1):
+        begin, end = offsets[trace], offsets[trace + 1]
+        if end == begin:
+            start[trace], step[trace] = np.nan, 0.0
+            continue
+        first = values[begin]
+        slope = (values[end - 1] - first) / (end - begin - 1) if end - begin > 1 else 0.0
+        start[trace], step[trace] = first, slope
+        for index in range(begin, end):
+            away = values[index] - first
+            relative[index] = away
+            if not abs(away - slope * (index - begin)) <= bound:
+                straight = False
+    return straight
+
+
+@kernel
+def _median_size(values: npt.NDArray[np.float32], scratch: npt.NDArray[np.float32]) -> float:
+    """Return the lower median of the sizes of the finite values; NaN where there are none."""
+    count = 0
+    for value in values:
+        if math.isfinite(value):
+            scratch[count] = abs(value)
+            count += 1
+    if count == 0:
+        return np.nan
+    return float(np.sort(scratch[:count])[(count - 1) // 2])
+
+
+@kernel
+def rising_rows(
+    values: npt.NDArray[np.float32],
+    offsets: npt.NDArray[np.int64],
+    rows: npt.NDArray[np.int64],
+    ends: int,
+    factor: float,
+    rising: npt.NDArray[np.bool_],
+) -> None:
+    """Fill for each row whether the median size of its last samples is more than ``factor`` times that of its first."""
+    scratch = np.empty(ends, np.float32)
+    for place in range(len(rows)):
+        begin, end = offsets[rows[place]], offsets[rows[place] + 1]
+        reach = min(ends, end - begin)
+        early = _median_size(values[begin : begin + reach], scratch)
+        late = _median_size(values[end - reach : end], scratch)
+        rising[place] = late > factor * early
+
+
 @warm_up
 def _compile() -> None:
     values = np.array([2.0, 1.0, 0.1, 0.1, 0.1], np.float32)
@@ -133,6 +200,10 @@ def _compile() -> None:
     sample, fraction, status = np.empty(1, np.int64), np.empty(1), np.empty(1, np.uint8)
     for _ in ("writable", "read-only"):
         find_crossings(values, bounds, bounds[:1], bounds[1:], False, 0.5, False, 3, sample, fraction, status)
+        rising_rows(values, bounds, bounds[:1], 2, 10.0, np.empty(1, np.bool_))
+        drive = values.astype(np.float64)
+        drive.flags.writeable = values.flags.writeable
+        drive_steps(drive, bounds, 1e-7, np.empty(1), np.empty(1), np.empty(5, np.float32))
         values = values.copy()
         values.flags.writeable = False
     find_turns(np.array([0.0, 1.0, 0.0]), 0, 0.5, np.zeros(6))

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -10,7 +9,7 @@ from typing import Final
 
 from meseta.errors import InputError, MesetaError
 from meseta.intake.readers.contents import Contents
-from meseta.intake.readers.unpack import is_packed, peek_bytes
+from meseta.intake.readers.unpack import peek_bytes, sha256_of
 from meseta.intake.recording import Recording
 from meseta.intake.registry import find_reader
 from meseta.recipe import Recipe
@@ -23,19 +22,27 @@ HEAD_BYTE: Final = 1 << 16
 
 @dataclass(frozen=True)
 class OpenContext:
-    """What is the same for all files of a batch: the metadata table by file name."""
+    """What is the same for all files of a batch.
+
+    Attributes
+    ----------
+    table : mapping
+        The metadata table by file name.
+    sidecars : mapping, optional
+        Names of all files that may be sidecars, by folder; a folder that is not in it is looked into file by file.
+    """
 
     table: Mapping[str, Mapping[str, str | int | float | bool]] = field(default_factory=dict)
-
-
-def sha256_of(path: Path) -> str:
-    """Return the SHA-256 of a file's bytes in hexadecimal."""
-    with path.open("rb") as file:
-        return hashlib.file_digest(file, "sha256").hexdigest()
+    sidecars: Mapping[Path, frozenset[str]] = field(default_factory=dict)
 
 
 def open_recording(
-    path: str | Path, recipe: Recipe | None = None, name: str = "", context: OpenContext | None = None
+    path: str | Path,
+    recipe: Recipe | None = None,
+    name: str = "",
+    context: OpenContext | None = None,
+    *,
+    checksum: bool = True,
 ) -> Recording:
     """Open a file as a recording; samples are read lazily where the format allows it.
 
@@ -48,6 +55,8 @@ def open_recording(
         Name relative to the folder that was given; the file's own name where empty.
     context : OpenContext, optional
         Of the batch that the file belongs to.
+    checksum : bool
+        False leaves ``source.sha256`` empty where it would cost another read: the caller adds it.
 
     Raises
     ------
@@ -59,11 +68,12 @@ def open_recording(
         size = path.stat().st_size
         if size == 0:
             raise InputError("is empty", str(path), "check how it was written")
-        reader = find_reader(peek_bytes(path, HEAD_BYTE), path, recipe.intake.reader)
-        if reader.name not in ("text", "NumPy") and is_packed(path):
+        head, packed = peek_bytes(path, HEAD_BYTE)
+        reader = find_reader(head, path, recipe.intake.reader)
+        if packed and reader.name not in ("text", "NumPy"):
             raise InputError(f"is a packed {reader.name} file", str(path), "unpack it first")
         contents = reader.open(path, recipe.intake)
-        digest = sha256_of(path)
+        digest = contents.sha256 or (sha256_of(path) if checksum else "")
     except MesetaError:
         raise
     except PermissionError as error:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -12,7 +14,8 @@ from meseta.intake.context import batch_context
 from meseta.intake.files import FoundFile, find_files
 from meseta.intake.floor import remove_floor_offset
 from meseta.intake.joining import joined
-from meseta.intake.opening import open_recording
+from meseta.intake.opening import OpenContext, open_recording
+from meseta.intake.readers.unpack import sha256_of
 from meseta.intake.recording import Recording
 from meseta.recipe import Recipe
 from meseta.traces import TraceSet
@@ -53,15 +56,17 @@ def read(
     """
     recipe, work = recipe or Recipe(), work or Work()
     files, passed = find_files(paths)
-    context = batch_context(recipe.intake)
+    context = batch_context(recipe.intake, [file.path for file in files])
     parts: list[Part] = []
     bad: list[MesetaError] = []
     one_file = len(files) == 1
 
     def take(file: FoundFile) -> Part | MesetaError:
         try:
+            if one_file:
+                return _one(file, recipe, context, work)
             with open_recording(file.path, recipe, file.name, context) as recording:
-                return _loaded(recording, recipe, work if one_file else _alone(work))
+                return _loaded(recording, recipe, _alone(work))
         except InputError as error:
             return error
 
@@ -113,6 +118,24 @@ def _loaded(recording: Recording, recipe: Recipe, work: Work) -> Part:
     part.load(work)
     part.settle_directions()
     return part
+
+
+def _one(file: FoundFile, recipe: Recipe, context: OpenContext, work: Work) -> Part:
+    """Return the traces of the only file; its checksum is worked out beside the read."""
+    with (
+        ThreadPoolExecutor(1, thread_name_prefix="meseta-checksum") as pool,
+        open_recording(file.path, recipe, file.name, context, checksum=False) as recording,
+    ):
+        if recording.source.sha256:
+            return _loaded(recording, recipe, work)
+        digest = pool.submit(sha256_of, file.path)
+        part = _loaded(recording, recipe, work)
+        try:
+            source = replace(recording.source, sha256=digest.result())
+        except OSError as error:
+            raise InputError(f"cannot be read ({error})", str(file.path), "check the file and the disk") from error
+        part.recording = replace(part.recording, source=source)
+        return part
 
 
 def _plain(error: MesetaError) -> dict[str, Any]:

@@ -24,6 +24,9 @@ _DIMENSION: Final = {
 _REMARKS: Final = frozenset(
     {"raw", "smoothed", "filtered", "measured", "calculated", "abs", "mean", "corrected", "t", "x"}
 )
+_NUMBER_BEHIND: Final = re.compile(r"(?<=[\])}>])[\s_#.:-]*\d+$")
+"""A number behind a unit in brackets: "Current (nA) 4"."""
+_LOGARITHM: Final = re.compile(r"(.*?)[\s_]*\b((?:log10|log|lg)\s*\(.+\))", re.IGNORECASE)
 _NUMBERS: Final = ("trace_number", "phase", "range_code")
 _ROLE_OF_DIMENSION: Final = {
     "S": "conductance", "dec": "log_conductance", "A": "current", "V": "voltage", "ohm": "resistance",
@@ -76,8 +79,20 @@ def _tokens(name: str) -> list[str]:
 
 @lru_cache(maxsize=4096)
 def stem_of(name: str) -> str:
-    """Return a name without its number: "trace_12" and "trace_12_G" are numbers 12 of "trace" and "trace_g"."""
-    tokens = _tokens(split_unit(name)[0] or name)
+    """Return a name without its number: "trace_12" and "trace_12_G" are numbers 12 of "trace" and "trace_g".
+
+    A unit in brackets stays as it is written: "R 4 (Mohm)" and "R (Mohm) 4" are "r (Mohm)".
+    """
+    plain = _NUMBER_BEHIND.sub("", name.strip())
+    said, unit = split_unit(plain)
+    stem = _without_number(said or plain)
+    if unit and plain[-1] in ")]}>":
+        return f"{stem} ({unit})" if said else unit
+    return stem
+
+
+def _without_number(name: str) -> str:
+    tokens = _tokens(name)
     words = [token for token in tokens if not token.isdigit()] or tokens[:1]
     joined = "_".join(words).lower()
     return re.sub(r"(?<=[a-z_])\d+$", "", joined).rstrip("_") or joined
@@ -97,9 +112,12 @@ def split_unit(name: str, role_unit: str = "") -> tuple[str, str]:
     (str, str)
         Name and unit; the unit is empty where none stands there.
     """
-    text = name.strip()
+    text = _NUMBER_BEHIND.sub("", name.strip())
     if _whole_unit(text):
         return "", text
+    logarithm = _LOGARITHM.fullmatch(text)
+    if logarithm and is_unit(logarithm[2]):
+        return logarithm[1], logarithm[2]
     match = re.fullmatch(r"(.*?)\s*[\[({<]\s*(.+?)\s*[\])}>]\s*", text) or re.fullmatch(r"(.+?)\s*[/,;:]\s*(\S+)", text)
     if match and is_unit(match[2]):
         return match[1].strip(), match[2]

@@ -45,6 +45,8 @@ class Contents:
     table: Mapping[str, npt.NDArray[Any]] = field(default_factory=dict)
     doubts: tuple[str, ...] = ()
     close: Callable[[], None] = _nothing
+    sha256: str = ""
+    """Checksum of the file, where the reader had all its bytes in hand; else the file is read once more for it."""
 
 
 class Reader(Protocol):

@@ -201,6 +201,13 @@ class VectorSamples:
             return _read(self.dataset, lambda: source[0, start:stop])
         return _read(self.dataset, lambda: source[start:stop, 0])
 
+    def read_into(self, start: int, target: npt.NDArray[np.float32]) -> bool:
+        """Fill a float32 array from sample ``start`` on; return False where the samples are of another kind."""
+        if self.field or not _fits(self.dataset, target) or len(self.dataset.shape) != 1:
+            return False
+        _read(self.dataset, lambda: self.dataset.read_direct(target, slice(start, start + len(target))) or target)
+        return True
+
 
 @dataclass(frozen=True)
 class RowSamples:
@@ -217,6 +224,17 @@ class RowSamples:
         first, last = start // n, -(-stop // n)
         block = _read(self.dataset, lambda: self.dataset[first:last])
         return block.reshape(-1)[start - first * n : stop - first * n]
+
+    def read_into(self, start: int, target: npt.NDArray[np.float32]) -> bool:
+        """Fill a float32 array with whole rows from sample ``start`` on; return False where they are of other kind."""
+        if not _fits(self.dataset, target) or len(self.dataset.shape) != 2:
+            return False
+        n = self.dataset.shape[1]
+        if start % n or len(target) % n:
+            return False
+        rows = slice(start // n, (start + len(target)) // n)
+        _read(self.dataset, lambda: self.dataset.read_direct(target.reshape(-1, n), rows) or target)
+        return True
 
 
 @dataclass
@@ -279,6 +297,11 @@ class PartSamples:
                 break
             found.append(self.parts[part].read(max(start - begin, 0), min(stop, end) - begin))
         return np.concatenate(found) if found else self.parts[0].read(0, 0)
+
+
+def _fits(dataset: Any, target: npt.NDArray[np.float32]) -> bool:
+    """Return whether a dataset's samples can be read into an array as they are."""
+    return isinstance(dataset, h5py.Dataset) and dataset.dtype == target.dtype and len(target) > 0
 
 
 def _field(dataset: Any, name: str) -> Any:

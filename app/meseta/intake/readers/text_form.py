@@ -10,7 +10,7 @@ from typing import Final
 from meseta.intake.roles import guess_role
 from meseta.intake.units import is_unit
 
-__all__ = ["TextForm", "decode_head", "find_form"]
+__all__ = ["KnownForm", "TextForm", "decode_head", "find_form", "known_form"]
 
 _COMMENT: Final = re.compile(r"^\s*(#|%|//|!|\"#|;(?=\s*[A-Za-z]))+\s?")
 _NUMBER: Final = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([eEdD][-+]?\d+)?$|[-+]?(nan|inf|infinity)$|n/?a$|$", re.IGNORECASE)
@@ -57,6 +57,38 @@ class TextForm:
     heading: str = ""
     comment: str = ""
     doubts: tuple[str, ...] = ()
+
+    @property
+    def numeric_heading(self) -> bool:
+        """Whether the heading is a row of numbers, which the rows cannot be told from."""
+        return bool(self.heading) and _is_numeric(self.heading, self.delimiter, self.decimal) > 0
+
+
+@dataclass(frozen=True)
+class KnownForm:
+    """The form of a file, and the bytes that stood before its numbers."""
+
+    before: bytes
+    form: TextForm
+
+    def fits(self, data: bytes) -> bool:
+        """Return whether another file begins with the same bytes and then with such a row of numbers."""
+        if not data.startswith(self.before):
+            return False
+        begin = len(self.before)
+        stop = data.find(b"\n", begin)
+        line = data[begin : stop if stop >= 0 else len(data)].decode("latin-1").rstrip("\r")
+        return _is_numeric(line, self.form.delimiter, self.form.decimal) == self.form.columns
+
+
+def known_form(data: bytes, form: TextForm) -> KnownForm | None:
+    """Return the form to try on the next file; None where there is no heading, or a doubt, to know it again by."""
+    if not form.names or form.doubts or form.numeric_heading:
+        return None
+    at = 0
+    for _ in range(form.skip_lines):
+        at = data.index(b"\n", at) + 1
+    return KnownForm(data[:at], form)
 
 
 def decode_head(data: bytes) -> str:

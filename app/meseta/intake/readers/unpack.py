@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import bz2
 import gzip
+import hashlib
 import io
 import lzma
 import zipfile
@@ -13,7 +14,7 @@ from typing import IO, Any, Final
 
 from meseta.errors import InputError
 
-__all__ = ["PACKED", "is_packed", "peek_bytes", "read_bytes"]
+__all__ = ["PACKED", "peek_bytes", "read_bytes", "sha256_of", "sha256_of_bytes"]
 
 BOMB_RATIO: Final = 500
 BOMB_BYTE: Final = 64 << 20
@@ -21,15 +22,20 @@ LARGEST_BYTE: Final = 8 << 30
 PACKED: Final = {b"\x1f\x8b": "gzip", b"\xfd7zXZ\x00": "xz", b"BZh": "bzip2", b"PK\x03\x04": "zip"}
 
 
+def sha256_of(path: Path) -> str:
+    """Return the SHA-256 of a file's bytes in hexadecimal."""
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
+
+
+def sha256_of_bytes(data: bytes) -> str:
+    """Return the SHA-256 of bytes in hexadecimal."""
+    return hashlib.sha256(data).hexdigest()
+
+
 def packing(head: bytes) -> str:
     """Return the name of the packing by its signature; empty where the file is not packed."""
     return next((name for mark, name in PACKED.items() if head.startswith(mark)), "")
-
-
-def is_packed(path: Path) -> bool:
-    """Return whether a file is packed."""
-    with path.open("rb") as file:
-        return bool(packing(file.read(8)))
 
 
 def _opened(path: Path, kind: str) -> IO[bytes] | Any:
@@ -57,8 +63,8 @@ def _first_member(path: Path) -> Any:
     return archive.open(members[0])
 
 
-def peek_bytes(path: Path, count: int) -> bytes:
-    """Return the first bytes of a file, unpacked.
+def peek_bytes(path: Path, count: int) -> tuple[bytes, bool]:
+    """Return the first bytes of a file, unpacked, and whether it is packed.
 
     Raises
     ------
@@ -69,16 +75,18 @@ def peek_bytes(path: Path, count: int) -> bytes:
         head = file.read(count)
     kind = packing(head)
     if not kind:
-        return head
+        return head, False
     try:
         with _first_member(path) if kind == "zip" else _opened(path, kind) as stream:
-            return bytes(stream.read(count))
+            return bytes(stream.read(count)), True
     except (OSError, EOFError, lzma.LZMAError, zlib.error, zipfile.BadZipFile, NotImplementedError) as error:
         raise InputError(f"is damaged {kind} ({error})", str(path), "pack the file again") from error
 
 
-def read_bytes(path: Path) -> bytes:
-    """Return all bytes of a file, unpacked; a file that unpacks beyond reason is refused.
+def read_bytes(path: Path) -> tuple[bytes, str]:
+    """Return all bytes of a file, unpacked, and the checksum of it as it lies there.
+
+    A file that unpacks beyond reason is refused.
 
     Raises
     ------
@@ -86,9 +94,10 @@ def read_bytes(path: Path) -> bytes:
         Where the file cannot be read or unpacked, or is a compression bomb.
     """
     data = path.read_bytes()
+    sha256 = sha256_of_bytes(data)
     kind = packing(data[:8])
     if not kind:
-        return data
+        return data, sha256
     limit = min(LARGEST_BYTE, max(BOMB_BYTE, BOMB_RATIO * len(data)))
     unpacked = io.BytesIO()
     try:
@@ -101,4 +110,4 @@ def read_bytes(path: Path) -> bytes:
                     )
     except (OSError, EOFError, lzma.LZMAError, zlib.error, zipfile.BadZipFile, NotImplementedError) as error:
         raise InputError(f"is damaged {kind} ({error})", str(path), "pack the file again") from error
-    return unpacked.getvalue()
+    return unpacked.getvalue(), sha256
