@@ -559,3 +559,17 @@ def test_a_further_view_is_computed_only_while_it_is_seen(window, settle):
     assert panel(window, "correlation").data().columns["correlation"].size == shown.grid.bins**2
     window.docks["correlation"].hide()
     assert "correlation_histogram" not in session.pipeline.names
+
+
+def test_arrow_keys_walk_over_the_analysed_direction_only(make, settle, mixture):
+    import dataclasses
+
+    directions = np.where(np.arange(mixture.traces) % 2, "closing", "opening")
+    both = dataclasses.replace(mixture, table={**mixture.table, "direction": directions})
+    window = make()
+    window.session.open_traces(both, "both ways")
+    settle(window)
+    window.session.step(1)
+    assert window.session.current == 2
+    window.session.step(-1)
+    assert window.session.current == 0

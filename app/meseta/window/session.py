@@ -304,11 +304,10 @@ class Session(QObject):
         self.pipeline.refresh_trace()
 
     def step(self, by: int, among: npt.NDArray[np.bool_] | None = None) -> None:
-        """Go forward or back by traces, or to the next of those in ``among``."""
-        if among is None:
-            self.go_to(self.current + by)
-            return
-        rows = np.flatnonzero(among)
+        """Go forward or back by traces of the analysed direction, or by those in ``among``."""
+        if among is None and self.traces is not None:
+            among = self.traces.table["direction"] == self.document.recipe.histogram.direction
+        rows = np.flatnonzero(among if among is not None else [])
         if not len(rows):
             return
         place = int(np.searchsorted(rows, self.current, side="right" if by > 0 else "left"))
