@@ -144,3 +144,26 @@ def test_description_of_a_file_that_lacks_a_constant_says_what_to_give(tmp_path)
     described, _ = intake.describe(tmp_path / "a.csv")
     assert "calibration.bias_volt" in described[0].problem
     assert described[0].traces == 0
+
+
+@pytest.mark.parametrize(
+    ("headings", "role"),
+    [
+        ([f"log10(G/G0) {n}" for n in range(4)], "log_conductance"),
+        (["log10(G/G0)"] * 4, "log_conductance"),
+        ([f"trace {n} log10(G/G0)" for n in range(4)], "log_conductance"),
+        ([f"R {n} (Mohm)" for n in range(4)], "resistance"),
+        ([f"R (Mohm) {n}" for n in range(4)], "resistance"),
+        ([f"Conductance (mS) {n}" for n in range(4)], "conductance"),
+    ],
+)
+def test_side_by_side_traces_keep_the_unit_of_their_headings(tmp_path, headings, role):
+    # 2 Mohm and 2 mS by CODATA 2022: 12906.403... ohm is 1 / G0.
+    stored = -2.0 if role == "log_conductance" else 2.0
+    lines = ["z (nm)," + ",".join(headings)] + [f"{0.01 * n:.2f}" + f",{stored}" * 4 for n in range(50)]
+    (tmp_path / "wide.csv").write_text("\n".join(lines) + "\n")
+    traces = intake.read([str(tmp_path / "wide.csv")], Recipe())
+    g0_ohm = 12906.40372
+    conductance = {"log_conductance": 1e-2, "resistance": g0_ohm / 2e6, "conductance": 2e-3 * g0_ohm}[role]
+    assert traces.traces == 4
+    assert traces.conductance == pytest.approx(conductance, rel=1e-6)
