@@ -6,7 +6,7 @@ a tunnelling background shows as well as a free-standing peak.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -20,6 +20,7 @@ _FINEST = {"logarithmic": 0.025, "linear": 0.05}
 _SUB_QUANTUM, _SUB_QUANTUM_SCALE = -0.4, 0.045
 _LEAST_CURVATURE = 0.06
 _LEAST_SIGNIFICANCE = 5.0
+_LEAST_OVER_CHANCE = 3.0
 _SCALE_STEP = 2**0.5
 
 
@@ -35,15 +36,21 @@ class Candidate:
         -s² d²(ln density)/du² at the scale s where it was found: 0 on any exponential, towards 1 for a lone peak.
     significance : float
         Curvature over its standard error.
+    over_chance : float
+        Curvature over what so few traces, scattered evenly, show at this scale by chance (one standard deviation).
     share : float
         Samples within one width, as a share of the most that any candidate has.
+    own : float
+        What part of the density there is the peak's own: the curvature over that of a lone peak of its width.
     """
 
     position_u: float
     width_u: float
     curvature: float
     significance: float
+    over_chance: float
     share: float
+    own: float
 
 
 def find_candidates(
@@ -53,6 +60,7 @@ def find_candidates(
     replicates: npt.ArrayLike | None,
     usable: tuple[float, float],
     logarithmic: bool,
+    traces: int,
 ) -> list[Candidate]:
     """Return the places that look like peaks, sorted by position.
 
@@ -68,9 +76,15 @@ def find_candidates(
     usable : (float, float)
         Range of the axis in which a peak may lie (above the floor).
     logarithmic : bool
+    traces : int
+        Traces that were counted.
 
     Notes
     -----
+    A few traces make hills of their own on fine scales, and those do not change from draw to draw: so a hill must also
+    be higher than n traces scattered evenly would make one, whose curvature has a standard deviation of
+    sqrt(3/(4 n)) (second derivative of a Gaussian kernel); n is what reaches the kernel, unequal parts counting less.
+
     Scale-space search from fine to coarse (Witkin, Proc. IJCAI 1019 (1983), for the idea; the statistic is our own).
     """
     u, data = np.asarray(middle, float), np.asarray(counts, float)
@@ -78,11 +92,13 @@ def find_candidates(
         return []
     step = float(u[1] - u[0])
     scales = _scales(u, step, logarithmic)
-    layers = [_curvature(data, np.asarray(traces_in_bin, float), replicates, scale / step) for scale in scales]
+    reach = np.asarray(traces_in_bin, float)
+    layers = [_curvature(data, reach, replicates, scale / step, traces) for scale in scales]
     found: list[Candidate] = []
     for level, scale in enumerate(scales):
-        curvature, error = layers[level]
-        for at in _hilltops(curvature, error, gaussian_filter1d(data, scale / step, mode="nearest")):
+        curvature, error, chance = layers[level]
+        least = np.maximum(_LEAST_SIGNIFICANCE * error, _LEAST_OVER_CHANCE * chance)
+        for at in _hilltops(curvature, least, gaussian_filter1d(data, scale / step, mode="nearest")):
             inside = usable[0] + 0.5 * scale <= u[at] <= usable[1] - 0.5 * scale
             if _cut(data, at, scale / step):
                 continue
@@ -90,42 +106,37 @@ def find_candidates(
                 continue  # below one quantum nothing is that narrow but steps of the converter and jumps
             width = _width(np.array([layer[0][at] for layer in layers]), scales, level)
             if inside and all(abs(u[at] - other.position_u) > max(scale, other.width_u) for other in found):
-                z = curvature[at] / max(error[at], 1e-300)
-                found.append(Candidate(float(u[at]), width, float(curvature[at]), float(z), 0.0))
+                over = float(curvature[at] / error[at]), float(curvature[at] / chance[at])
+                own = min(float(curvature[at]) * (1.0 + (width / scale) ** 2), 1.0)
+                found.append(Candidate(float(u[at]), width, float(curvature[at]), *over, 0.0, own))
     return _with_share(sorted(found, key=lambda candidate: candidate.position_u), u, data)
 
 
 def _cut(data: Floats, at: int, scale_bins: float) -> bool:
     """Return whether the data end so near, and so high, that the end itself looks like a slope of a hill."""
-    reach = int(np.ceil(2.0 * scale_bins))
-    few = max(int(scale_bins / 2), 1)
+    reach, few = int(np.ceil(2.0 * scale_bins)), max(int(np.ceil(scale_bins / 2)), 1)
     here = data[max(at - few, 0) : at + few + 1].mean()
-    return (at < reach and data[:few].mean() > 0.2 * here) or (
-        len(data) - 1 - at < reach and data[-few:].mean() > 0.2 * here
-    )
+    counted = np.flatnonzero(data)
+    first, last = int(counted[0]), int(counted[-1]) + 1
+    low, high = data[first : first + few].mean(), data[last - few : last].mean()
+    return bool((at - first < reach and low > 0.2 * here) or (last - 1 - at < reach and high > 0.2 * here))
 
 
-def _hilltops(curvature: Floats, error: Floats, smooth: Floats) -> npt.NDArray[np.int64]:
+def _hilltops(curvature: Floats, least: Floats, smooth: Floats) -> npt.NDArray[np.int64]:
     """Return the top of every stretch of positive curvature that is large and no chance.
 
-    The top is the largest curvature; where that lies on the foot of a free-standing peak (its curvature is the same
-    all over), the highest density inside the stretch.
+    The curvature of a free-standing peak is the same all over, so that noise says where it is largest, and it is
+    noisiest on the foot: the top is where curvature times the square root of the density, its significance if counts
+    were independent, is largest.
 
     Two tops that no stretch of non-positive curvature parts are one peak with noise on it.
     """
     hill = curvature > 0
     edges = np.flatnonzero(np.diff(np.concatenate([[False], hill, [False]]).astype(np.int8)))
-    tops = []
-    for first, last in edges.reshape(-1, 2):
-        bend, high = first + int(np.argmax(curvature[first:last])), first + int(np.argmax(smooth[first:last]))
-        free = first < high < last - 1 and curvature[high] >= 0.5 * curvature[bend]
-        tops.append(high if free and smooth[bend] < 0.3 * smooth[high] else bend)
+    weighed = curvature * np.sqrt(smooth)
+    tops = [first + int(np.argmax(weighed[first:last])) for first, last in edges.reshape(-1, 2)]
     good = [
-        at
-        for at in tops
-        if 0 < at < len(curvature) - 1
-        and curvature[at] >= _LEAST_CURVATURE
-        and curvature[at] >= _LEAST_SIGNIFICANCE * error[at]
+        at for at in tops if 0 < at < len(curvature) - 1 and curvature[at] >= max(_LEAST_CURVATURE, float(least[at]))
     ]
     return np.array(good, np.int64)
 
@@ -162,25 +173,37 @@ def _hill(data: Floats, scale_bins: float) -> Floats:
 
 
 def _curvature(
-    data: Floats, traces_in_bin: Floats, replicates: npt.ArrayLike | None, scale_bins: float
-) -> tuple[Floats, Floats]:
-    """Return curvature and its standard error."""
+    data: Floats, traces_in_bin: Floats, replicates: npt.ArrayLike | None, scale_bins: float, traces: int
+) -> tuple[Floats, Floats, Floats]:
+    """Return curvature, its standard error, and its standard deviation where traces are scattered evenly."""
     reach = gaussian_filter1d(traces_in_bin, scale_bins, mode="nearest")
     # Where next to nothing was counted the foot of a neighbour is a hill too: flatten it.
     hill = np.where(reach < max(2.0, 0.01 * float(reach.max())), 0.0, _hill(data, scale_bins))
     if replicates is not None and len(np.asarray(replicates)) >= 20:
-        spread = _hill(np.asarray(replicates, float)[:60], scale_bins)
-        return hill, np.std(spread, axis=0) + 1e-12
+        drawn = np.asarray(replicates, float)[:60]
+        error = np.std(_hill(drawn, scale_bins), axis=0) + 1e-12
+        return hill, error, np.sqrt(0.75 / _contributions(data, drawn, scale_bins, traces))
     smooth = gaussian_filter1d(data, scale_bins, mode="nearest")
-    # var(s² d'' / d): second derivative of a Gaussian kernel, contributions of 2 (counts a trace) each.
-    independent = np.maximum(reach, 0.5) * 2.0 * scale_bins * np.sqrt(np.pi) / 0.75
-    return hill, np.where(smooth > 0, np.sqrt(2.0 / independent), np.inf)
+    # Every trace in every bin is one contribution: those within the kernel are 2 sqrt(pi) s times those in a bin.
+    independent = np.maximum(reach, 0.5) * 2.0 * scale_bins * np.sqrt(np.pi)
+    error = np.where(smooth > 0, np.sqrt(1.5 / independent), np.inf)
+    return hill, error, error
+
+
+def _contributions(data: Floats, drawn: Floats, scale_bins: float, traces: int) -> Floats:
+    """Return how many equal, independent traces would make the smoothed counts scatter as they do.
+
+    (sum of parts)² over the sum of their squares; draws of a fixed number of traces give the latter less the square of
+    the sum over that number.
+    """
+    total = gaussian_filter1d(data, scale_bins, mode="nearest")
+    scatter = np.var(gaussian_filter1d(drawn, scale_bins, mode="nearest"), axis=0)
+    squares = scatter + total**2 / max(traces, 1)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return np.where(squares > 0, total**2 / squares, 0.0) + 1e-12
 
 
 def _with_share(found: list[Candidate], u: Floats, data: Floats) -> list[Candidate]:
     inside = [float(data[np.abs(u - c.position_u) <= c.width_u].sum()) for c in found]
     most = max([*inside, 1.0])
-    return [
-        Candidate(c.position_u, c.width_u, c.curvature, c.significance, part / most)
-        for c, part in zip(found, inside, strict=True)
-    ]
+    return [replace(c, share=part / most) for c, part in zip(found, inside, strict=True)]

@@ -86,7 +86,7 @@ class Chooser:
         return window.last - window.first >= _FEWEST_BINS and bool(self.data(window).any())
 
     def _found(self) -> list[Candidate]:
-        """Return the places that look like peaks, the most distinct first."""
+        """Return the places that look like peaks, those that hold the most samples of their own first."""
         u, settings = self.histogram.grid.u_edges, self.settings
         logarithmic = self.histogram.grid.axis == "logarithmic"
         low, high = self.usable
@@ -101,8 +101,10 @@ class Chooser:
             None if self.resampling is None else self.resampling.counts,
             (low, high),
             logarithmic,
+            self.histogram.traces,
         )
-        return sorted((place for place in found if place.share >= _LEAST_SHARE), key=lambda place: -place.curvature)
+        large = [place for place in found if place.share >= _LEAST_SHARE]
+        return sorted(large, key=lambda place: -place.own * place.share)
 
     def _proposed(self, found: Sequence[Candidate]) -> list[Window]:
         """Return windows with those of the found peaks that left-out traces support, one after the other."""
@@ -190,11 +192,30 @@ class Chooser:
         narrow = fitted.model.logarithmic and position < np.log10(_SUB_QUANTUM_G0)
         return not (narrow and width * WIDTH_TO_FWHM < _SUB_QUANTUM_FWHM)
 
+    def reached(self, window: Window, fitted: Fitted) -> list[int]:
+        """Return how many traces have a sample within two widths of each peak; what one bin shows where unknown."""
+        model = fitted.model
+        middle = (model.low + model.high) / 2
+        inside = [np.abs(middle - position) <= 2.0 * width for position, width in fitted.peaks[:, 1:3]]
+        matrix, rows = self.counts, self._rows()
+        if matrix is None or matrix.shown.bins != self.histogram.grid.bins:
+            here = self.histogram.traces_in_bin[window.first : window.last]
+            return [int(here[near].max(initial=0)) for near in inside]
+        fine = slice(window.first * matrix.merge, window.last * matrix.merge)
+        seen = matrix.counts[rows, fine] > 0
+        return [int(seen[:, np.repeat(near, matrix.merge)].any(axis=1).sum()) for near in inside]
+
+    def _rows(self) -> npt.NDArray[np.int64]:
+        """Return the traces that take part, in order; none where traces are not known."""
+        if self.resampling is not None:
+            return self.resampling.rows
+        return np.empty(0, np.int64) if self.counts is None else np.flatnonzero(self.counts.used)
+
     def blocks(self, number: int = 10) -> Floats | None:
         """Return the counts of blocks of consecutive traces on the histogram's bins, if traces are known."""
         if self.counts is None:
             return None
-        rows = np.flatnonzero(self.counts.used) if self.resampling is None else self.resampling.rows
+        rows = self._rows()
         if len(rows) < 20:
             return None
         blocks = rebinned(block_counts(self.counts.counts, rows, number), self.counts.merge)

@@ -94,7 +94,7 @@ def _fitted(chooser: Chooser, window: Window, work: Work) -> FittedWindow:
     if chooser.settings.intervals == "bca" and (groups := chooser.blocks(_BCA_GROUPS)) is not None:
         left_out = refit(fitted, (groups.sum(axis=0) - groups)[:, inside], work, weights)
     shifts = systematic_shifts(fitted, chooser.varied, window, chooser.histogram)
-    return FittedWindow(window, fitted, replicates, left_out, shifts)
+    return FittedWindow(window, fitted, replicates, left_out, shifts, tuple(chooser.reached(window, fitted)))
 
 
 def _weights(chooser: Chooser, window: Window) -> Floats | None:

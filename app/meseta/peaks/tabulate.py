@@ -32,13 +32,17 @@ _NO_TRACES = "no interval: a histogram alone does not know its traces"
 
 @dataclass(frozen=True)
 class FittedWindow:
-    """One stretch of the axis with its fit, refits of resampled and of left-out traces, and shifts."""
+    """One stretch of the axis with its fit, refits of resampled and of left-out traces, and shifts.
+
+    ``reached`` is the number of traces with a sample within two widths of each peak.
+    """
 
     window: Window
     fitted: Fitted
     replicates: Refitted | None
     left_out: Refitted | None
     shifts: tuple[tuple[str, Floats], ...]
+    reached: tuple[int, ...]
 
 
 @dataclass(frozen=True)
@@ -184,13 +188,9 @@ def _sample_verdicts(
 ) -> list[str]:
     """Return what the number of traces and the refits make doubtful."""
     said, fitted = [], part.fitted
-    area, position, width, _ = fitted.peaks[peak]
-    model = fitted.model
-    inside = np.abs((model.low + model.high) / 2 - position) <= width
-    reach = histogram.traces_in_bin[part.window.first : part.window.last][inside]
-    if len(reach) and reach.max() < histogram.weak_traces:
-        said.append(f"weak: reached by {int(reach.max())} traces")
-    elif _area_sigma(fitted, peak, intervals[0]) > area / 3.0:
+    if part.reached[peak] < histogram.weak_traces:
+        said.append(f"weak: reached by {part.reached[peak]} traces")
+    elif _area_sigma(fitted, peak, intervals[0]) > fitted.peaks[peak, 0] / 3.0:
         said.append("weak: area below three standard errors")
     misfit = _misfit(part, peak, histogram, resampling)
     if misfit > _POOR:
