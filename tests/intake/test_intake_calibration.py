@@ -128,6 +128,18 @@ def test_bias_of_each_trace(tmp_path):
     np.testing.assert_allclose([traces.trace_conductance(t)[0] for t in range(3)], expected, rtol=1e-6)
 
 
+def test_recorded_bias_is_divided_sample_by_sample_and_stated_in_volt(tmp_path):
+    path = record(
+        tmp_path,
+        current=(np.array([1.0, 1.0, 1.0]), {"unit": "nA"}),
+        bias=(np.array([100.0, 200.0, 50.0]), {"unit": "mV"}),
+    )
+    traces = intake.read(path, recipe())
+    expected = 1e-9 / (np.array([0.1, 0.2, 0.05]) * G0_SIEMENS)
+    np.testing.assert_allclose(traces.conductance, expected, rtol=1e-6)
+    np.testing.assert_allclose(traces.table["bias_volt"], [0.1])
+
+
 @pytest.mark.parametrize(
     ("channels", "given", "named"),
     [

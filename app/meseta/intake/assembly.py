@@ -16,7 +16,9 @@ from meseta.intake.cutting import PULL, PUSH, Cut, cut
 from meseta.intake.drive import DriveAxis, drive_of, sample_interval
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.roles import settle_roles, unmatched
+from meseta.intake.units import unit_factor
 from meseta.recipe import Recipe
+from meseta.traces import ArraySamples
 from meseta.work import Work, blocks_of
 
 __all__ = ["Part", "plan_of", "prepared"]
@@ -48,6 +50,7 @@ class Part:
     drive_step: npt.NDArray[np.float64] = field(default_factory=lambda: np.empty(0))
     relative: npt.NDArray[np.float32] | None = None
     carried: dict[str, npt.NDArray[np.float32]] = field(default_factory=dict)
+    first_bias_volt: npt.NDArray[np.float64] | None = None
 
     @property
     def traces(self) -> int:
@@ -92,6 +95,10 @@ class Part:
             linear = linear and straight
         if linear and not shared:
             self.relative = None
+        bias = self.calibration.bias_channel
+        if bias is not None:
+            firsts = [self.recording.values(bias, at, at + 1) for at in self.start.tolist()]
+            self.first_bias_volt = np.concatenate(firsts) * unit_factor(bias.unit or "V", "V")
         if self.quality is not None and not self.quality.any():
             self.quality = None
         return self
@@ -162,6 +169,23 @@ class Part:
             if row not in has_phase
         ]
         self.cut.phases.sort()
+
+    def let_go(self) -> Part:
+        """Drop the recorded samples, which are not needed once all is loaded; returns itself."""
+        nothing = ArraySamples(np.empty(0))
+        channels = tuple(replace(channel, samples=nothing) for channel in self.recording.channels)
+        self.recording = self.recording.with_channels(channels)
+        calibration, axis = self.calibration, self.axis
+        first, second, bias = calibration.channel, calibration.second, calibration.bias_channel
+        self.calibration = replace(
+            calibration,
+            channel=replace(first, samples=nothing),
+            second=None if second is None else replace(second, samples=nothing),
+            bias_channel=None if bias is None else replace(bias, samples=nothing),
+        )
+        self.axis = axis if axis.channel is None else replace(axis, channel=replace(axis.channel, samples=nothing))
+        self.extras = tuple(replace(channel, samples=nothing) for channel in self.extras)
+        return self
 
     def notes(self) -> dict[str, Any]:
         """Return what there is to say of this recording, in plain values."""

@@ -241,11 +241,13 @@ def _direct(channel: RawChannel, found: _Finder) -> Calibration:
 
 def _no_signal(recording: Recording) -> InputError:
     names = [channel.name for channel in recording.channels]
+    in_volts = [one.name for one in recording.channels if one.role in ("other", "voltage") and one.unit.endswith("V")]
+    likely, role, unit = (in_volts[-1], "amplifier", "V") if in_volts else (names[-1], "conductance", "G0")
     shown = ", ".join(f"'{name}'" for name in names[:6]) + (" ..." if len(names) > 6 else "")
     return InputError(
         f"no channel is known to be conductance, current or amplifier volts among {shown}",
         recording.source.name,
-        f'say what it is: --set intake.channels."{names[-1]}"=\'{{role = "conductance", unit = "G0"}}\'',
+        f'say what it is: --set intake.channels."{likely}"=\'{{role = "{role}", unit = "{unit}"}}\'',
     )
 
 

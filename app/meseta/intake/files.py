@@ -89,12 +89,23 @@ def find_files(paths: PathLike | Iterable[PathLike]) -> tuple[list[FoundFile], l
                 _one(match, str(given) != str(match), found, passed)
             else:
                 raise InputError("does not exist", str(match), _suggestion(match))
-    unique = list({file.path.resolve(): file for file in reversed(found)}.values())[::-1]
+    folders: dict[Path, str] = {}
+    unique = list({_real(file.path, folders): file for file in reversed(found)}.values())[::-1]
     if not unique:
         raise InputError(
             "holds no recordings", ", ".join(str(given) for given in listed), "give files or another folder"
         )
     return unique, passed
+
+
+def _real(path: Path, folders: dict[Path, str]) -> str:
+    """Return where a file really lies; each folder is followed once."""
+    if path.is_symlink():
+        return str(path.resolve())
+    folder = path.parent
+    if folder not in folders:
+        folders[folder] = str(folder.resolve())
+    return os.path.join(folders[folder], path.name)  # noqa: PTH118  no path object a file
 
 
 def _one(match: Path, from_pattern: bool, found: list[FoundFile], passed: list[str]) -> None:

@@ -195,10 +195,8 @@ def _time(part: Part, pieces: npt.NDArray[np.int64], record_start: npt.NDArray[n
 
 def _bias(part: Part, pieces: npt.NDArray[np.int64]) -> npt.NDArray[np.float64]:
     """Return the bias of each trace: of its channel the first value, else from the calibration or as stated."""
-    channel = part.calibration.bias_channel
-    if channel is not None:
-        firsts = [part.recording.values(channel, int(at), int(at) + 1) for at in part.start]
-        return np.concatenate(firsts) if firsts else np.empty(0)
+    if part.first_bias_volt is not None:
+        return part.first_bias_volt
     known = part.calibration.constants.get("bias_volt")
     if known is not None:
         return np.broadcast_to(np.asarray(known[0], np.float64), (part.recording.pieces,))[pieces]

@@ -66,7 +66,7 @@ def read(
             if one_file:
                 return _one(file, recipe, context, work)
             with open_recording(file.path, recipe, file.name, context) as recording:
-                return _loaded(recording, recipe, _alone(work))
+                return _loaded(recording, recipe, _alone(work)).let_go()
         except InputError as error:
             return error
 
@@ -127,11 +127,11 @@ def _one(file: FoundFile, recipe: Recipe, context: OpenContext, work: Work) -> P
         open_recording(file.path, recipe, file.name, context, checksum=False) as recording,
     ):
         if recording.source.sha256:
-            return _loaded(recording, recipe, work)
+            return _loaded(recording, recipe, work).let_go()
         digest = pool.submit(sha256_of, file.path)
-        part = _loaded(recording, recipe, work)
+        part = _loaded(recording, recipe, work).let_go()
         try:
-            source = replace(recording.source, sha256=digest.result())
+            source = replace(part.recording.source, sha256=digest.result())
         except OSError as error:
             raise InputError(f"cannot be read ({error})", str(file.path), "check the file and the disk") from error
         part.recording = replace(part.recording, source=source)

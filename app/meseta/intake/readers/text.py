@@ -208,7 +208,9 @@ def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int) -> Colu
 
 
 def _array(column: Any) -> npt.NDArray[np.float64]:
-    values: npt.NDArray[np.float64] = column.to_numpy()
+    """Return a column; of a single chunk without missing cells its own memory, which may not be written to."""
+    one = column.chunk(0) if column.num_chunks == 1 else column
+    values: npt.NDArray[np.float64] = one.to_numpy(zero_copy_only=False)
     return values
 
 
