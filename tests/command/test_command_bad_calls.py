@@ -32,6 +32,36 @@ def assert_one_clear_line(done, code, *words):
         assert word in lines[0]
 
 
+def test_an_interruption_while_libraries_load_is_answered(tmp_path):
+    write(tmp_path / "click.py", b"raise KeyboardInterrupt")
+    assert_one_clear_line(meseta("--help", environment={"PYTHONPATH": str(tmp_path)}), 130, "stopped")
+
+
+def test_files_that_say_the_same_are_checked_in_one_go(good_csv, tmp_path):
+    write(good_csv / "t9.csv", b"displacement (nm),current (nA)\n" + b"".join(b"%d,%d\n" % (n, n) for n in range(50)))
+    done = meseta("peek", good_csv)
+    assert done.returncode == 0, done.stderr
+    assert "5 more" in done.stdout and "t1.csv to t5.csv" in done.stdout
+    assert done.stdout.count("conductance (G0): conductance in G0") == 1
+    assert "\nt9.csv\n" in done.stdout and "bias" in done.stdout
+
+
+def test_each_recording_is_named_above_its_result(good_csv, tmp_path):
+    done = meseta(
+        "run",
+        good_csv / "t0.csv",
+        good_csv / "t1.csv",
+        "--each",
+        "--out",
+        tmp_path / "out",
+        "--set",
+        "resampling.replicates=20",
+    )
+    assert done.returncode == 0, done.stderr
+    lines = done.stdout.splitlines()
+    assert lines[0] == "t0" and "t1" in lines
+
+
 @pytest.fixture
 def good_csv(tmp_path):
     folder = tmp_path / "good"

@@ -20,7 +20,7 @@ from meseta.command.frame import (
     tell,
     working,
 )
-from meseta.command.printed import result_lines, study_answer, study_lines
+from meseta.command.printed import check_lines, result_lines, study_answer, study_lines
 from meseta.errors import CallError, Cancelled, InputError, MesetaError
 from meseta.work import Work
 
@@ -81,7 +81,7 @@ def peek(
         answers = [study_answer(path, work) for path in studies] + [check.as_dict() for check in checks]
     list_bad(bad, strict)
     lines = [line for answer in answers[: len(studies)] for line in study_lines(answer)]
-    lines += [line for check in checks for line in check.lines()]
+    lines += check_lines([check.lines() for check in checks])
     tell(as_json, {"files": answers, "bad_files": bad_plain(bad)}, lines)
 
 
@@ -112,7 +112,7 @@ def run(
             tell(as_json, outcome.summary | {"out": str(folder)}, result_lines(outcome.summary, outcome.folder))
             return
         summaries, bad = _run_each(files, folder, (recipe_path, preset, settings), strict, work)
-    lines = [line for one in summaries for line in result_lines(one.summary, one.folder)]
+    lines = [line for one in summaries for line in (one.folder.name, *result_lines(one.summary, one.folder))]
     answer = {
         "out": str(folder),
         "recordings": {one.folder.name: one.summary for one in summaries},

@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import itertools
 import math
+import re
+from collections.abc import Sequence
 from dataclasses import fields
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -14,7 +17,15 @@ if TYPE_CHECKING:
     from meseta.peaks import Decay
     from meseta.segmentation import Expectation
 
-__all__ = ["decay_lines", "expectation_answer", "expectation_lines", "result_lines", "study_answer", "study_lines"]
+__all__ = [
+    "check_lines",
+    "decay_lines",
+    "expectation_answer",
+    "expectation_lines",
+    "result_lines",
+    "study_answer",
+    "study_lines",
+]
 
 _HEADINGS = ("peak", "position", "95 % interval", "systematic", "fit on", "status")
 
@@ -60,6 +71,32 @@ def _peak_row(peak: dict[str, Any]) -> tuple[str, ...]:
 
 def _number(value: float | None) -> float:
     return math.nan if value is None else float(value)
+
+
+_ALIKE = re.compile(r"[-+]?\d[\d.]*(?:[eE][-+]?\d+)?")
+
+
+def check_lines(checks: Sequence[Sequence[str]]) -> list[str]:
+    """Return the checks of files one below the other; of neighbours that say the same only the first is written out.
+
+    Parameters
+    ----------
+    checks : sequence of sequences of str
+        The lines of each file, its name first.  Neighbours say the same where they differ in names, numbers and
+        findings that are in order alone.
+    """
+    lines: list[str] = []
+    for _, group in itertools.groupby(checks, key=_sense):
+        first, *others = group
+        lines += first
+        if others:
+            names = others[0][0] if len(others) == 1 else f"{others[0][0]} to {others[-1][0]}"
+            lines.append(f"the same is said of {typeset.integer(len(others))} more, but for numbers: {names}")
+    return lines
+
+
+def _sense(check: Sequence[str]) -> tuple[str, ...]:
+    return tuple(_ALIKE.sub("", line) for line in check[1:] if not line.startswith("  ok "))
 
 
 def study_answer(path: str, work: Work) -> dict[str, Any]:
