@@ -98,6 +98,6 @@ def _peaks(analysis: Analysis, work: Work) -> Iterator[str]:
     if not len(table):
         yield "No peak was fitted."
     for row in range(len(table)):
-        if str(table.status[row]) != "ok":
+        if str(table.status[row]) not in ("ok", f"fewer than {_FEW_TRACES} traces"):
             name = str(table.peak[row])
             yield f"Peak {name}: {table.status[row]}." if name else f"Peaks: {table.status[row]}."

@@ -116,7 +116,7 @@ def _staircase(axes: Axes, edges: Floats, density: Floats, colour: str, style: s
 
 
 def _fit(axes: Axes, fit: PeakFit, scale: ConductanceScale, components: bool) -> None:
-    if not len(fit.table):
+    if not np.any(np.isfinite(fit.model)):
         return
     places = scale.u(fit.grid.centres_g0)
     if components:
