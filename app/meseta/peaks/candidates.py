@@ -20,7 +20,7 @@ _FINEST = {"logarithmic": 0.025, "linear": 0.05}
 _SUB_QUANTUM, _SUB_QUANTUM_SCALE = -0.4, 0.045
 _LEAST_CURVATURE = 0.06
 _LEAST_SIGNIFICANCE = 5.0
-_LEAST_OVER_CHANCE = 3.0
+_LEAST_OVER_CHANCE = 2.5
 _SCALE_STEP = 2**0.5
 
 
@@ -113,13 +113,14 @@ def find_candidates(
 
 
 def _cut(data: Floats, at: int, scale_bins: float) -> bool:
-    """Return whether the data end so near, and so high, that the end itself looks like a slope of a hill."""
-    reach, few = int(np.ceil(2.0 * scale_bins)), max(int(np.ceil(scale_bins / 2)), 1)
+    """Return whether the data end so near that the end itself looks like a slope of a hill.
+
+    At the lower end they must be high there; at the upper end of what was counted traces begin, more or less sharply.
+    """
+    reach, few = int(np.ceil(2.0 * scale_bins)), max(int(scale_bins / 2), 1)
     here = data[max(at - few, 0) : at + few + 1].mean()
-    counted = np.flatnonzero(data)
-    first, last = int(counted[0]), int(counted[-1]) + 1
-    low, high = data[first : first + few].mean(), data[last - few : last].mean()
-    return bool((at - first < reach and low > 0.2 * here) or (last - 1 - at < reach and high > 0.2 * here))
+    last = int(np.flatnonzero(data)[-1])
+    return bool(last - at < reach or (at < reach and data[:few].mean() > 0.2 * here))
 
 
 def _hilltops(curvature: Floats, least: Floats, smooth: Floats) -> npt.NDArray[np.int64]:

@@ -188,7 +188,7 @@ def _sample_verdicts(
 ) -> list[str]:
     """Return what the number of traces and the refits make doubtful."""
     said, fitted = [], part.fitted
-    if part.reached[peak] < histogram.weak_traces:
+    if part.reached[peak] < min(histogram.weak_traces, histogram.traces / 2):  # few traces are said elsewhere
         said.append(f"weak: reached by {part.reached[peak]} traces")
     elif _area_sigma(fitted, peak, intervals[0]) > fitted.peaks[peak, 0] / 3.0:
         said.append("weak: area below three standard errors")
