@@ -15,6 +15,8 @@ from dataclasses import dataclass
 import numpy as np
 
 KINDS = ("staircase", "molecule50", "molecule20", "molecule5", "tunnelling")
+LOW = "low"
+"""A kind apart: every trace has a molecular plateau from 3 to 10 floor sigma, evenly in log G."""
 LEVELS = ("clean", "hard")
 STEP_NM = 0.0016
 SAMPLES = 2500
@@ -69,11 +71,11 @@ class Recording:
 
 def recording(kind: str, level: str, traces: int, seed: int) -> Recording:
     """Return traces of one kind and noise level with their truth."""
-    rng = np.random.default_rng([seed, KINDS.index(kind), LEVELS.index(level)])
+    rng = np.random.default_rng([seed, (*KINDS, LOW).index(kind), LEVELS.index(level)])
     noise = NOISES[level]
     values, rows = [], []
     for trace in range(traces):
-        ideal, plateaus, quiet = _junction(kind, rng)
+        ideal, plateaus, quiet = _junction(kind, rng, noise.floor_g0)
         shown = _instrument(_fluctuations(ideal, quiet, plateaus, noise, rng), noise, rng, trace)
         values.append(shown.astype(np.float32))
         for start, stop, molecule in plateaus:
@@ -88,7 +90,9 @@ def recording(kind: str, level: str, traces: int, seed: int) -> Recording:
     return Recording(kind, level, values, STEP_NM, noise.floor_g0, noise.boxcar + rise, truth)
 
 
-def _junction(kind: str, rng: np.random.Generator) -> tuple[np.ndarray, list[tuple[int, int, bool]], np.ndarray]:
+def _junction(
+    kind: str, rng: np.random.Generator, floor_g0: float
+) -> tuple[np.ndarray, list[tuple[int, int, bool]], np.ndarray]:
     """Return noiseless conductance, plateaus (start, stop, molecule), and which samples are at low conductance."""
     ideal, plateaus, at = np.zeros(SAMPLES), [], 0
     if kind != "tunnelling":
@@ -106,13 +110,13 @@ def _junction(kind: str, rng: np.random.Generator) -> tuple[np.ndarray, list[tup
         first = 10 ** rng.uniform(-3.6, -2.2)
     else:
         first = rng.uniform(1.5, 4.0)
-    rupture, share = at, {"molecule50": 0.5, "molecule20": 0.2, "molecule5": 0.05}.get(kind, 0.0)
+    rupture, share = at, {"molecule50": 0.5, "molecule20": 0.2, "molecule5": 0.05, LOW: 1.0}.get(kind, 0.0)
     decay = rng.uniform(7.5, 13.0)
     steps = np.arange(SAMPLES - rupture)
     gap = first * 10 ** (-decay * STEP_NM * steps)
     if rng.random() < share:
         length = int(rng.uniform(0.15, 0.9) / STEP_NM)
-        level = 10 ** rng.normal(-3.7, 0.28)
+        level = floor_g0 * 10 ** rng.uniform(np.log10(3), 1) if kind == LOW else 10 ** rng.normal(-3.7, 0.28)
         slope = rng.uniform(-0.9, 0.15)
         inside = steps[:length]
         own = level * 10 ** (slope * STEP_NM * (inside - length / 2))

@@ -14,7 +14,7 @@ import argparse
 from dataclasses import dataclass
 
 import numpy as np
-from independent import KINDS, LEVELS, STEP_NM, Recording, Truth, recording
+from independent import KINDS, LEVELS, LOW, STEP_NM, Recording, Truth, recording
 
 SHORTEST = 10
 
@@ -45,6 +45,7 @@ class Score:
     boundary_median: float
     bias_high: float
     bias_low: float
+    bias_low_error: float
 
 
 def matches(truth: Truth, found: Found) -> list[tuple[int, int]]:
@@ -84,6 +85,7 @@ def score(truth: Truth, found: Found, traces: int, floor_sigma_g0: float) -> Sco
     )
     deviation = np.log10(found.level_g0[found_rows] / truth.level_g0[true_rows])
     above = truth.level_g0[true_rows] / floor_sigma_g0
+    low = (above > 3) & (above <= 10)
     return Score(
         true=int(counted.sum()),
         found=judged,
@@ -96,7 +98,8 @@ def score(truth: Truth, found: Found, traces: int, floor_sigma_g0: float) -> Sco
         false_a_trace=(judged - len(right)) / traces,
         boundary_median=float(np.median(np.abs(edges))) if len(edges) else np.nan,
         bias_high=_mean(deviation[above > 10]),
-        bias_low=_mean(deviation[(above > 3) & (above <= 10)]),
+        bias_low=_mean(deviation[low]),
+        bias_low_error=float(np.std(deviation[low], ddof=1) / np.sqrt(low.sum())) if low.sum() > 1 else np.nan,
     )
 
 
@@ -132,7 +135,7 @@ def found_by_meseta(made: Recording, method: str) -> Found:
 
 HEADER = (
     f"{'kind':12}{'noise':7}{'seed':>5}{'true':>6}{'found':>6}{'P':>7}{'R':>7}{'F1':>7}"
-    f"{'mol':>5}{'molR':>7}{'false/tr':>9}{'edge':>6}{'bias>10s':>9}{'bias3-10':>9}"
+    f"{'mol':>5}{'molR':>7}{'false/tr':>9}{'edge':>6}{'bias>10s':>9}{'bias3-10':>9}{'+-':>8}"
 )
 
 
@@ -141,7 +144,7 @@ def line(kind: str, level: str, seed: str, figures: Score) -> str:
     return (
         f"{kind:12}{level:7}{seed:>5}{figures.true:6}{figures.found:6}{figures.precision:7.3f}{figures.recall:7.3f}"
         f"{figures.f1:7.3f}{figures.true_molecules:5}{figures.molecule_recall:7.3f}{figures.false_a_trace:9.3f}"
-        f"{figures.boundary_median:6.1f}{figures.bias_high:9.4f}{figures.bias_low:9.4f}"
+        f"{figures.boundary_median:6.1f}{figures.bias_high:9.4f}{figures.bias_low:9.4f}{figures.bias_low_error:8.4f}"
     )
 
 
@@ -149,7 +152,7 @@ def main() -> None:
     parser = argparse.ArgumentParser(description="Print how well plateaus are found.")
     parser.add_argument("--seeds", type=int, nargs="+", default=[1, 2])
     parser.add_argument("--traces", type=int, default=300)
-    parser.add_argument("--kinds", nargs="+", default=list(KINDS), choices=KINDS)
+    parser.add_argument("--kinds", nargs="+", default=list(KINDS), choices=[*KINDS, LOW])
     parser.add_argument("--levels", nargs="+", default=list(LEVELS), choices=LEVELS)
     parser.add_argument("--method", default="change_points")
     parser.add_argument("--each", action="store_true", help="print every seed, not only all seeds together")

@@ -247,3 +247,38 @@ def test_apparent_barrier_and_why_there_is_none():
     assert set(uncalibrated.barrier_refused) == {"the drive is not in nm"}
     flat = Analysis(TraceSet.from_arrays([np.ones(200)], step_nm=STEP_NM)).result("measures")
     assert set(flat.barrier_refused) == {"no tunnelling slope was seen"}
+
+
+def test_contacts_without_a_neck_do_not_pass_for_a_slow_amplifier():
+    # Ideal decays at 8 to 12 decades/nm from contact to floor, no jump: the amplifier is as fast as the sampling.
+    rng = np.random.default_rng(9)
+    rows = []
+    for slope in rng.uniform(8, 12, 60):
+        g = 2.0 * 10 ** (-slope * STEP_NM * np.arange(1200))
+        rows.append(g * (1 + RELATIVE * rng.standard_normal(1200)) + SIGMA * rng.standard_normal(1200))
+    analysis = Analysis(TraceSet.from_arrays(rows, step_nm=STEP_NM))
+    assert analysis.noise().rise_samples < 3
+    assert analysis.noise().tunnelling_slope == pytest.approx(-10, rel=0.1)
+    assert len(analysis.plateaus()) == 0
+
+
+@pytest.mark.parametrize("level", ["clean", "hard"])
+def test_plateaus_near_the_floor_keep_their_conductance(evaluation, level):
+    # Another simulator's molecules of 3 to 10 floor sigma, beside tunnelling that runs into them.
+    independent, score = evaluation
+    made = independent.recording("low", level, 120, 7)
+    found = score.found_by_meseta(made, "change_points")
+    figures = score.score(made.truth, found, 120, made.floor_sigma_g0)
+    assert figures.molecule_recall > 0.5
+    assert abs(figures.bias_low) < 0.03 + 2 * figures.bias_low_error
+
+
+@pytest.fixture
+def evaluation(monkeypatch):
+    from pathlib import Path
+
+    monkeypatch.syspath_prepend(str(Path(__file__).parents[1] / "evaluation"))
+    import independent
+    import score
+
+    return independent, score

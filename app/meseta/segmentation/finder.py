@@ -32,6 +32,10 @@ SHORTEST_NM: Final = (0.01, 0.02)
 METAL_FROM_G0: Final = 0.1
 METAL_SWITCH_G0: Final = 0.3
 """A metallic contact that switches by less is one plateau: less than a conductance channel opens or closes."""
+LOWEST_SIGMA: Final = 4.0
+"""Floor sigmas above the floor from which on plateaus are looked for where the recipe states nothing."""
+SLOWEST_TUNNELLING: Final = 2.0
+"""Decades per nm: a gentler slope is that of plateaus, not of tunnelling (a barrier of 0.2 eV)."""
 CENSORED: Final = np.array(["", "ramp", "floor", "saturation"])
 
 
@@ -111,7 +115,7 @@ def _rules(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, steps: Flo
     stated = settings.minimum_length_nm
     metal, molecule = SHORTEST_NM if stated is None else (stated, stated)
     factor = 2.0 ** (5.0 - settings.sensitivity)
-    low = 6.0 * noise.floor_sigma_g0 if settings.low_g0 is None else settings.low_g0 - noise.floor_g0
+    low = LOWEST_SIGMA * noise.floor_sigma_g0 if settings.low_g0 is None else settings.low_g0 - noise.floor_g0
     tunnelling = _tunnelling(noise, in_nm, steps)
     return kernels.Rules(
         change_cost=CHANGE_COST * factor,
@@ -135,10 +139,10 @@ def _rules(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, steps: Flo
 def _tunnelling(noise: NoiseModel, in_nm: bool, steps: Floats) -> float:
     """Return the size of the tunnelling slope in decades per drive unit.
 
-    Where none was seen: 10 decades per nm (common practice, no source), or a decade in 30 samples where the drive is
-    not calibrated.
+    Where none was seen, or what was taken for it is too gentle to be one: 10 decades per nm (common practice, no
+    source), or a decade in 30 samples where the drive is not calibrated.
     """
-    if np.isfinite(noise.tunnelling_slope):
+    if np.isfinite(noise.tunnelling_slope) and not (in_nm and abs(noise.tunnelling_slope) < SLOWEST_TUNNELLING):
         return abs(noise.tunnelling_slope)
     size = np.abs(steps[steps != 0])
     return 10.0 if in_nm or not len(size) else float(1.0 / (30.0 * np.median(size)))

@@ -157,6 +157,23 @@ def _group_end(
 
 
 @kernel
+def _runs_in(
+    j: int, last: int, begins: Integers, ends: Integers, moments: Floats, step: float, scale: Scale, rules: Rules
+) -> bool:
+    """Return whether stretch ``j`` is tunnelling that runs into the plateau of the stretches after it.
+
+    Where a decay meets a plateau the sum of both bends; its last piece is gentle enough for a plateau, but it falls at
+    more than half the slope bound to the level that then stays.
+    """
+    length = ends[j] - begins[j]
+    if 2 * length >= ends[last] - begins[j] or restored(moments[j, 2], scale) >= rules.metal_from:
+        return False
+    drop, error = _drop(moments[j], begins[j], ends[j], scale)
+    fall = decades_between(moments[j, 2], _line_at(moments[j + 1], ends[j] - 0.5), scale)
+    return drop + error < -0.5 * rules.bound * step * (length - 1) and fall < 0.0
+
+
+@kernel
 def _level(g: Floats, begin: int, end: int, weights: Floats) -> float:
     """Return the mean conductance of the trusted samples, NaN where there are none."""
     total, count = 0.0, 0
@@ -282,6 +299,8 @@ def find(
                     larger[:found] = out
                     out = larger
                 last, switches = _group_end(j, kinds, begins, ends, moments, scale, rules)
+                while j < last and _runs_in(j, last, begins, ends, moments, step, scale, rules):
+                    j += 1
                 row = out[found]
                 row[0], row[10] = t, 1.0 if switches else 0.0
                 if _describe(row, j, last, begins, ends, kinds, moments, g, weights, step, scale, rules, evidence):

@@ -63,7 +63,7 @@ def measure_traces(
         noise.saturation_g0,
     )
     some = stops > starts
-    span, rupture = np.zeros(len(starts)), np.full(len(starts), np.nan)
+    span, rupture = np.full(len(starts), np.nan), np.full(len(starts), np.nan)
     span[some] = np.abs(drive[stops[some] - 1] - drive[starts[some]])
     rupture[some] = alignment.zero_drive[some] - drive[traces.offsets[:-1][some]]
     barrier, refused = _barrier(rows[:, 3], traces.drive.is_displacement, displacement_from)

@@ -32,6 +32,12 @@ CLEAR_OF_CONTACT_G0: Final = 1e-2
 FEWEST_WINDOWS: Final = 30
 GROWTH: Final = 1.2
 """Ratio of long-run spreads over blocks of 8 and 4 samples that tells 1/f noise (1.41) from white noise (1)."""
+DECADES_OF_RISE: Final = 0.954
+"""log10 of 0.9 / 0.1: what an exponential falls in a rise time."""
+DECAYS_DIFFER: Final = 0.08
+"""Relative quartile distance beyond which fall times are not those of one amplifier (a few per cent)."""
+FASTEST_DECAY: Final = 5.0
+"""Falls within fewer samples count as jumps."""
 ROUNDING: Final = 2.0**-23
 """Relative rounding of float32: no recording knows its conductance better."""
 
@@ -147,9 +153,11 @@ def noise_model(statistics: Sequence[NoiseStatistics], settings: NoiseSettings) 
     if settings.relative_noise is not None:
         sample = np.hypot(sigma, settings.relative_noise * level)
         long_run = sample * np.maximum(long_run / np.maximum(sample, white), 1.0)
-    rise = _rise(rows) if settings.rise_samples is None else settings.rise_samples
+    pace = _samples_a_decade(statistics, floor + 10 * sigma)
+    rise = _rise(rows, pace) if settings.rise_samples is None else settings.rise_samples
     saturation = _saturation(rows, sample / level) if settings.saturation_g0 is None else settings.saturation_g0
-    slope = _tunnelling_slope(statistics, floor + 10 * sigma, CLEAR_OF_CONTACT_G0 * min(1.0, high), rise)
+    fewest = max(3, len(rows) // 4)
+    slope = _tunnelling_slope(statistics, floor + 10 * sigma, CLEAR_OF_CONTACT_G0 * min(1.0, high), rise, fewest)
     stated = tuple(info.name for info in settings.fields() if getattr(settings, info.name) is not None)
     return NoiseModel(
         floor, sigma, members, level, sample, long_run, rise, step, saturation, slope, stated, white, growing
@@ -196,10 +204,28 @@ def _converter_step(rows: Floats) -> float:
     return float(np.median(shown)) if len(shown) * 2 > len(steps) else 0.0
 
 
-def _rise(rows: Floats) -> float:
-    """Return the rise time in samples: the lower quartile of the largest falls, as a contact may only be slower."""
+def _samples_a_decade(statistics: Sequence[NoiseStatistics], low: float) -> float:
+    """Return the median number of samples in which traces fall by a decade above ``low``; NaN where none does."""
+    level = np.concatenate([part.slope_level for part in statistics] or [np.empty(0, np.int64)])
+    samples = np.concatenate([part.slope_samples for part in statistics] or [np.empty(0, np.int64)])
+    above = 10.0 ** (kernels.CROSSING_LOWEST + level / kernels.CROSSING_PER_DECADE) >= low
+    return float(np.median(samples[above])) * kernels.CROSSING_PER_DECADE if above.any() else float("nan")
+
+
+def _rise(rows: Floats, samples_a_decade: float) -> float:
+    """Return the rise time in samples: the lower quartile of the largest falls, as a contact may only be slower.
+
+    Contacts without a neck show no jump: their largest fall is the tunnelling decay, as slow as all the rest of it and
+    different from trace to trace.  It says nothing of the amplifier, which is then taken to be fast.
+    """
     falls = rows[np.isfinite(rows[:, 6]), 6]
-    return max(1.0, float(np.quantile(falls, 0.25))) if len(falls) else 1.0
+    if not len(falls):
+        return 1.0
+    quarter, middle, rest = np.quantile(falls, [0.25, 0.5, 0.75])
+    decay = DECADES_OF_RISE * samples_a_decade
+    if rest - quarter > DECAYS_DIFFER * middle and 0.4 * decay <= middle <= 2.5 * decay and middle > FASTEST_DECAY:
+        return 1.0
+    return max(1.0, float(quarter))
 
 
 def _saturation(rows: Floats, relative: Floats) -> float:
@@ -216,15 +242,20 @@ def _saturation(rows: Floats, relative: Floats) -> float:
     return float(np.median(highs[piled])) if piled.sum() >= max(2, 0.01 * finite.sum()) else np.inf
 
 
-def _tunnelling_slope(statistics: Sequence[NoiseStatistics], low: float, high: float, rise: float) -> float:
-    """Return the median slope over all half decades between the bounds that were not crossed by a jump; NaN if few."""
+def _tunnelling_slope(
+    statistics: Sequence[NoiseStatistics], low: float, high: float, rise: float, fewest: int
+) -> float:
+    """Return the median slope over all half decades between the bounds that were not crossed by a jump.
+
+    NaN where there are fewer than ``fewest``: where tunnelling lies below the floor the few slow ones are plateaus.
+    """
     slope = np.concatenate([part.slope for part in statistics] or [np.empty(0)])
     level = np.concatenate([part.slope_level for part in statistics] or [np.empty(0, np.int64)])
     samples = np.concatenate([part.slope_samples for part in statistics] or [np.empty(0, np.int64)])
     lower = 10.0 ** (kernels.CROSSING_LOWEST + level / kernels.CROSSING_PER_DECADE)
     upper = lower * 10.0 ** (1 / kernels.CROSSING_PER_DECADE)
     slow = (lower >= low) & (upper <= high * 1.0001) & (samples > max(2.0, 1.5 * rise))
-    return float(np.median(slope[slow])) if slow.sum() >= 3 else float("nan")
+    return float(np.median(slope[slow])) if slow.sum() >= fewest else float("nan")
 
 
 def _pooled(statistics: Sequence[NoiseStatistics], which: int) -> Integers:
