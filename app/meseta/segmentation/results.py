@@ -143,8 +143,8 @@ class TraceMeasures(Table):
     Attributes
     ----------
     drive_span, rupture_drive : (traces,) float64
-        Span of the drive; drive at the rupture (zero of displacement) counted from the trace's start; NaN where no
-        rupture was found.
+        Span of the drive, NaN where the trace has none of the measured phases; drive at the rupture (zero of
+        displacement) counted from the trace's start, NaN where no rupture was found.
     rupture_found, reaches_floor, reforms : (traces,) bool
         Whether the contact broke at the alignment level, came to the floor, and closed again after the rupture.
     highest_g0, lowest_g0 : (traces,) float64
