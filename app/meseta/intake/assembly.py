@@ -16,6 +16,7 @@ from meseta.intake.cutting import PULL, PUSH, Cut, cut
 from meseta.intake.drive import DriveAxis, drive_of, sample_interval
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.roles import settle_roles, unmatched
+from meseta.intake.two_gain import overlap_doubts
 from meseta.intake.units import unit_factor
 from meseta.recipe import Recipe
 from meseta.traces import ArraySamples
@@ -240,6 +241,7 @@ def plan_of(recording: Recording, recipe: Recipe) -> Part:
     """
     recording = prepared(recording, recipe)
     calibration = calibration_of(recording, recipe.calibration)
+    calibration = replace(calibration, doubts=(*calibration.doubts, *overlap_doubts(recording, calibration)))
     pieces = cut(recording, recipe.cutting, calibration)
     axis = drive_of(recording, recipe.calibration, pieces.pull_sign)
     interval, origin = sample_interval(recording, recipe.calibration)

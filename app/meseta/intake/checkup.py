@@ -14,6 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.intake.assembly import Part
+from meseta.intake.two_gain import TOLERATED, overlap_of
 from meseta.quantities import G0_SIEMENS, johnson_current_rms
 from meseta.recipe.alignment import AlignmentSettings
 from meseta.traces import Quality
@@ -29,6 +30,10 @@ TUNNELLING: Final = (2.0, 25.0)
 ROOM_KELVIN: Final = 300.0
 PILE_UP: Final = 0.002
 NEAR_LEVEL: Final = 0.02
+LEAST_LEVELS: Final = 10
+NEAR_ZERO_LEVELS: Final = 41
+STEPPED_SHARE: Final = 0.2
+"""Readings come in steps where fewer different values than this share of the samples occur."""
 
 
 @dataclass(frozen=True)
@@ -62,6 +67,7 @@ def check_up(part: Part, alignment: AlignmentSettings) -> tuple[tuple[Finding, .
     pooled = np.concatenate(values)
     found = [_sign(values), _full_scale(part), _step(part), _floor(part, pooled), _single_atom(pooled)]
     found += [_slope(part, spans), _both_ways(part)]
+    found.append(_gain_ratio(part))
     zero, finding = _zero_level(pooled, values, alignment.zero_at_g0)
     return tuple(one for one in (*found, finding) if one is not None), zero
 
@@ -111,18 +117,30 @@ def _full_scale(part: Part) -> Finding | None:
     return Finding("full scale", True, "no pile-up at the highest reading")
 
 
+def _gain_ratio(part: Part) -> Finding | None:
+    """Compare the two amplifiers of a two-gain recording where both are in range."""
+    overlap = overlap_of(part.recording, part.calibration)
+    if overlap is None:
+        return None
+    text = f"the second amplifier reads {overlap.ratio:.4g} +- {overlap.ratio_error:.2g} times the first in the overlap"
+    fine = abs(overlap.ratio - 1.0) <= max(TOLERATED, 4 * overlap.ratio_error)
+    return Finding("gain ratio", fine, text if fine else f"{text}: the two gains do not fit each other")
+
+
 def _step(part: Part) -> Finding | None:
     """Compare the converter's step with the noise at the floor."""
     if part.calibration.kind not in ("linear", "conductance", "current"):
         return None
     values = part.conductance[: min(len(part.conductance), 500_000)].astype(np.float64)
-    small = values[np.isfinite(values)]
-    small = small[np.abs(small) <= np.quantile(np.abs(small), 0.3)] if len(small) else small
-    steps = np.diff(np.unique(small))
-    if len(steps) < 10:
+    values = values[np.isfinite(values)]
+    levels = np.unique(values)
+    if len(levels) < LEAST_LEVELS:
         return None
-    step, noise = float(np.median(steps)), float(np.std(small))
-    if noise > 0 and step > noise:
+    near_zero = np.sort(levels[np.argsort(np.abs(levels))[:NEAR_ZERO_LEVELS]])
+    small = values[np.abs(values) <= np.quantile(np.abs(values), 0.3)]
+    step, noise = float(np.median(np.diff(near_zero))), float(np.std(small))
+    is_stepped = len(np.unique(small)) < STEPPED_SHARE * len(small)
+    if is_stepped and step > noise:
         return Finding("converter step", False, f"one step is {step:.2g} G0, coarser than the noise of {noise:.2g} G0")
     return Finding("converter step", True, f"one step of at most {step:.2g} G0 against a noise of {noise:.2g} G0")
 

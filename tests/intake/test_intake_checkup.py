@@ -1,0 +1,143 @@
+"""Planted calibration mistakes and what the check-up says of them."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import h5py
+import numpy as np
+import pytest
+
+from meseta import intake
+from meseta.intake.assembly import plan_of
+from meseta.intake.checkup import Finding
+from meseta.intake.two_gain import overlap_of
+from meseta.recipe import Recipe
+
+G0_SIEMENS = 7.748091729863649e-05  # CODATA 2022, 2e²/h
+TRACES, SAMPLES = 60, 600
+
+
+def contacts(seed: int = 8) -> np.ndarray:
+    """(traces, samples) G0: disordered larger contacts, a single-atom plateau near 1 G0, then tunnelling."""
+    rng = np.random.default_rng(seed)
+    stairs = np.repeat([5.0, 4.0, 3.0, 2.0, 1.0], [20, 30, 40, 60, 150])
+    rows = [
+        np.concatenate([stairs * rng.normal(1, np.where(stairs > 1, 0.25, 0.02)), 10.0 ** -rng.uniform(2, 5, 300)])
+        for _ in range(TRACES)
+    ]
+    return np.array(rows)
+
+
+def record(folder: Path, **channels: tuple[np.ndarray, dict[str, object]]) -> Path:
+    path = folder / "record.h5"
+    with h5py.File(path, "w") as file:
+        for name, (values, attributes) in channels.items():
+            file.create_dataset(name, data=values).attrs.update(attributes)
+    return path
+
+
+def findings(path: Path, **calibration: object) -> dict[str, Finding]:
+    described, _ = intake.describe(path, Recipe.build({"calibration": calibration}))
+    return {one.check: one for one in described[0].findings}
+
+
+@pytest.mark.parametrize(("factor", "word"), [(2.0, "2"), (10.0, "10"), (100.0, "100")])
+@pytest.mark.parametrize("side", ["low", "high"])
+@pytest.mark.parametrize("constant", ["gain_volt_per_ampere", "bias_volt"])
+def test_a_wrong_gain_or_bias_is_named_with_its_factor(tmp_path, factor, word, side, constant):
+    """A gain or bias stated too large by a factor makes every conductance too small by it, and the reverse."""
+    volts = contacts() * G0_SIEMENS * 0.1 * 1e4
+    stated = {"gain_volt_per_ampere": 1e4, "bias_volt": 0.1}
+    stated[constant] *= factor if side == "low" else 1 / factor
+    found = findings(record(tmp_path, amplifier=(volts, {"unit": "V"})), **stated)["single-atom peak"]
+    assert not found.fine
+    assert f"a factor {word} too {side}" in found.text
+    assert "divider" in found.text
+
+
+def test_right_gain_is_left_alone_and_a_wrong_sign_is_named(tmp_path):
+    path = record(tmp_path, amplifier=(contacts() * G0_SIEMENS * 0.1 * 1e4, {"unit": "V"}))
+    right = findings(path, gain_volt_per_ampere=1e4, bias_volt=0.1)
+    assert right["single-atom peak"].fine
+    assert right["sign"].fine
+    assert not findings(path, gain_volt_per_ampere=-1e4, bias_volt=0.1)["sign"].fine
+
+
+@pytest.mark.parametrize(("step", "fine"), [(1e-6, True), (2e-3, False)])
+def test_converter_step_against_the_noise_of_the_floor(tmp_path, step, fine):
+    """Values are rounded to the step; a step above the scatter of the smallest third of them is named."""
+    rng = np.random.default_rng(3)
+    values = contacts()
+    values[:, 300:] = rng.normal(0, 5e-4, (TRACES, 300))
+    found = findings(record(tmp_path, conductance=(np.round(values / step) * step, {"unit": "G0"})))["converter step"]
+    assert found.fine == fine
+
+
+@pytest.mark.parametrize(("share_of_bound", "fine"), [(30.0, True), (1 / 30, False)])
+def test_a_floor_quieter_than_thermal_noise_is_named(tmp_path, share_of_bound, fine):
+    """Johnson noise i² = 4 k T G B (Nyquist, Phys. Rev. 32, 110) of the conductance that the noise itself stands for.
+
+    With noise s G0 as the conductance, s lies below 2 % of its thermal noise where s < 0.02² 4 k T B / (V² G0).
+    """
+    from scipy import constants
+
+    rate, bias = 1e4, 0.1
+    bound = 0.02**2 * 4 * constants.k * 300.0 * (rate / 2) / (bias**2 * G0_SIEMENS)
+    rng = np.random.default_rng(5)
+    values = contacts()
+    values[:, 300:] = rng.normal(0, bound * share_of_bound, (TRACES, 300))
+    path = record(tmp_path, current=(values * G0_SIEMENS * bias * 1e9, {"unit": "nA"}))
+    assert findings(path, bias_volt=bias, sampling_hertz=rate)["floor"].fine == fine
+
+
+@pytest.mark.parametrize(("factor", "said"), [(1.0, ""), (10.0, "10 times too large"), (0.1, "10 times too small")])
+def test_displacement_off_by_a_factor_shows_in_the_tunnelling_slope(tmp_path, factor, said):
+    """Vacuum tunnelling of 10 decades per nm (2 kappa for a work function near 5 eV)."""
+    nm = np.arange(SAMPLES) * 0.002
+    values = np.where(nm < 0.3, 1.0, 0.003 * 10.0 ** (-10.0 * (nm - 0.3))) * np.ones((TRACES, 1))
+    path = record(tmp_path, conductance=(values, {"unit": "G0"}), displacement=(nm * factor, {"unit": "nm"}))
+    found = findings(path)["tunnelling slope"]
+    assert found.fine == (not said)
+    assert said in found.text
+
+
+@pytest.mark.parametrize(("top", "proposed"), [(5.0, None), (0.3, 0.2)])
+def test_a_zero_that_openings_do_not_cross_is_named_and_another_proposed(tmp_path, top, proposed):
+    rng = np.random.default_rng(2)
+    row = np.concatenate([top * np.linspace(1.0, 0.9, 200), top * 10.0 ** -np.linspace(0.1, 5, 400)])
+    values = row * rng.normal(1, 0.01, (TRACES, SAMPLES))
+    nm = np.arange(SAMPLES) * 0.002
+    path = record(tmp_path, conductance=(values, {"unit": "G0"}), displacement=(nm, {"unit": "nm"}))
+    described, _ = intake.describe(path, Recipe())
+    found = {one.check: one for one in described[0].findings}["zero of displacement"]
+    assert found.fine == (proposed is None)
+    assert described[0].proposed_zero_g0 == proposed
+
+
+@pytest.mark.parametrize(("true_gain", "fine"), [(1e8, True), (1.1e8, False)])
+def test_two_gains_are_compared_in_their_overlap(tmp_path, true_gain, fine):
+    """Gain ratio and offset that were put in come back from the overlap; a gain off by 10 % is named."""
+    rng = np.random.default_rng(4)
+    ampere = contacts() * G0_SIEMENS * 0.1
+    low = ampere * 1e5 + rng.normal(0, 2e-6, ampere.shape)
+    high = np.clip((ampere + 2e-10) * true_gain, -10, 10)
+    path = record(
+        tmp_path,
+        amplifier=(low, {"unit": "V"}),
+        amplifier_high_gain=(high, {"unit": "V", "role": "amplifier_high_gain"}),
+    )
+    stated = {"gain_volt_per_ampere": 1e5, "high_gain_volt_per_ampere": 1e8, "bias_volt": 0.1}
+    found = findings(path, **stated, full_scale_volt=10.0)["gain ratio"]
+    assert found.fine == fine
+    ratio = true_gain / 1e8
+    recipe = Recipe.build({"calibration": {**stated, "full_scale_volt": 10.0}})
+    with intake.open_recording(path) as recording:
+        part = plan_of(recording, recipe)
+        overlap = overlap_of(part.recording, part.calibration)
+    assert overlap is not None
+    assert overlap.ratio == pytest.approx(ratio, abs=4 * overlap.ratio_error)
+    assert overlap.offset_ampere == pytest.approx(2e-10 * ratio, rel=0.05)
+    assert not any("no full scale" in one for one in intake.read(path, recipe).notes["assumptions"])
+    without = intake.read(path, Recipe.build({"calibration": stated})).notes["assumptions"]
+    assert any("no full scale is stated" in one for one in without)
