@@ -282,3 +282,21 @@ def evaluation(monkeypatch):
     import score
 
     return independent, score
+
+
+def test_saturation_behind_a_series_resistance_and_beside_a_wild_sample():
+    # The amplifier stops at a reading of 2.5 G0; 300 ohm removed afterwards, sample by sample, put the pile-up at
+    # 2.5 / (1 - 2.5 x 300 / 12906.4) = 2.654 G0.  One trace holds a wild sample far above.
+    from meseta.quantities import remove_series_resistance
+
+    rng = np.random.default_rng(10)
+    rows = []
+    for _ in range(30):
+        reading = np.minimum(ideal() * (1 + 0.02 * rng.standard_normal(1500)), 2.5)
+        rows.append(remove_series_resistance(reading, 300.0))
+    rows[3][700] = 9.0
+    analysis = Analysis(TraceSet.from_arrays(rows, step_nm=STEP_NM))
+    assert analysis.noise().saturation_g0 == pytest.approx(2.654, rel=1e-3)
+    table = analysis.plateaus()
+    assert not np.any(table.level_g0 > 2.5)
+    assert set(table.take(table.level_g0 > 1.5).censored) == {"saturation"}

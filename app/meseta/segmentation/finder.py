@@ -122,7 +122,7 @@ def _rules(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, steps: Flo
         line_cost=LINE_COST * factor,
         low=low,
         high=np.inf if settings.high_g0 is None else settings.high_g0 - noise.floor_g0,
-        saturation=0.99 * (noise.saturation_g0 - noise.floor_g0),
+        saturation=_clipped_from(noise),
         bound=settings.slope_fraction * tunnelling,
         tunnelling=tunnelling,
         join=settings.join_decades,
@@ -134,6 +134,14 @@ def _rules(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, steps: Flo
         shortest_molecule=molecule if in_nm else 0.0,
         trim=int(np.ceil(noise.rise_samples)),
     )
+
+
+def _clipped_from(noise: NoiseModel) -> float:
+    """Return the level above the floor from which a plateau's noise is cut off by the saturated amplifier."""
+    if not np.isfinite(noise.saturation_g0):
+        return np.inf
+    margin = max(0.01 * noise.saturation_g0, 2.0 * float(noise.long_run(noise.saturation_g0)))
+    return noise.saturation_g0 - noise.floor_g0 - min(margin, 0.1 * noise.saturation_g0)
 
 
 def _tunnelling(noise: NoiseModel, in_nm: bool, steps: Floats) -> float:

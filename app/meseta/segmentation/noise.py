@@ -231,15 +231,19 @@ def _rise(rows: Floats, samples_a_decade: float) -> float:
 def _saturation(rows: Floats, relative: Floats) -> float:
     """Return the reading at which the traces pile up, or infinity.
 
-    The highest readings of many traces agree to one part in 1,000 and repeat, although the signal is noisy.
+    The highest readings of many traces agree to one part in 1,000 and repeat, although the signal is noisy.  A few
+    traces may show more (a spike, a missing sample written as a number), but not a tenth of those that agree.
     """
     highs, repeats = rows[:, 4], rows[:, 5]
     finite = np.isfinite(highs) & (highs > 0)
     if not finite.any() or float(np.median(relative)) < 1e-5:
         return np.inf
-    top = float(np.max(highs[finite]))
-    piled = finite & (np.abs(highs - top) <= 1e-3 * top) & (repeats >= 8)
-    return float(np.median(highs[piled])) if piled.sum() >= max(2, 0.01 * finite.sum()) else np.inf
+    every, piled = np.sort(highs[finite]), np.sort(highs[finite & (repeats >= 8)])
+    first, beyond = np.searchsorted(piled, 0.999 * piled), np.searchsorted(piled, piled, side="right")
+    agree = beyond - first
+    higher = len(every) - np.searchsorted(every, 1.001 * piled, side="right")
+    good = np.flatnonzero((agree >= max(2, 0.01 * len(every))) & (higher <= 0.1 * agree))
+    return float(np.median(piled[first[good[-1]] : beyond[good[-1]]])) if len(good) else np.inf
 
 
 def _tunnelling_slope(
