@@ -72,7 +72,8 @@ class Calibration:
         resistance = spread.of(self.constant("series_resistance_ohm"))
         if np.any(resistance):
             measured = _without_series(measured, resistance)
-        return Calibrated(measured.astype(np.float32), quality)
+        with np.errstate(over="ignore"):  # what float32 cannot hold becomes infinite, as it is in the recording
+            return Calibrated(measured.astype(np.float32), quality)
 
     def apply_into(self, recording: Recording, start: int, target: npt.NDArray[np.float32]) -> bool:
         """Fill ``target`` with recorded conductance from flat sample ``start`` on, where no number changes.
