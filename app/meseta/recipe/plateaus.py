@@ -76,7 +76,7 @@ class PlateauSettings(Section):
         "Plateaus below are not looked for.",
         unit="G0",
         gt=0,
-        unset="4 sigma above the floor",
+        unset="3 sigma above the floor",
     )
     high_g0: float | None = setting(
         None, "Highest plateau", "Plateaus above are not looked for.", unit="G0", gt=0, unset="no upper limit"

@@ -32,7 +32,7 @@ SHORTEST_NM: Final = (0.01, 0.02)
 METAL_FROM_G0: Final = 0.1
 METAL_SWITCH_G0: Final = 0.3
 """A metallic contact that switches by less is one plateau: less than a conductance channel opens or closes."""
-LOWEST_SIGMA: Final = 4.0
+LOWEST_SIGMA: Final = 3.0
 """Floor sigmas above the floor from which on plateaus are looked for where the recipe states nothing."""
 SLOWEST_TUNNELLING: Final = 2.0
 """Decades per nm: a gentler slope is that of plateaus, not of tunnelling (a barrier of 0.2 eV)."""
