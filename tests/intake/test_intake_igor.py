@@ -54,6 +54,18 @@ def test_a_wave_comes_back_with_unit_interval_and_note(tmp_path, kind):
     assert traces.table["specimen"].tolist() == ["A3"]
 
 
+@pytest.mark.parametrize("place", [4, 12, 76, 132])
+def test_a_wave_that_claims_more_than_its_file_holds_is_refused(tmp_path, place):
+    """Sizes of samples, note, points and dimension are checked before anything is allocated for them."""
+    content = bytearray(wave(np.linspace(2, 1, 64).astype(np.float32), unit="S"))
+    struct.pack_into("<i", content, place, 1 << 30)
+    path = tmp_path / "claims.ibw"
+    path.write_bytes(bytes(content))
+    with pytest.raises(MesetaError) as raised:
+        intake.read(path, Recipe.build({"intake": {"reader": "Igor"}}))
+    assert "claims more than the file holds" in raised.value.what
+
+
 @pytest.mark.parametrize(("kind", "order"), [("float32", "little"), ("float64", "big"), ("int16", "big")])
 def test_headerless_numbers_come_back(tmp_path, kind, order):
     rows = np.stack([np.linspace(3, 1, 64), np.linspace(0, 60, 64)], axis=1).round()

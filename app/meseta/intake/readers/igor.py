@@ -42,11 +42,40 @@ class IgorReader:
         """Return the wave with what its note says."""
         from igor2 import binarywave
 
+        if not _sizes_fit(path):
+            raise InputError(
+                "is damaged (its header claims more than the file holds)", str(path), "save the wave again"
+            )
         try:
             wave = binarywave.load(str(path))["wave"]
             return understood(_tree(wave, path), path, settings)
         except _FAULTS as error:
             raise InputError(f"is damaged ({str(error)[:60]})", str(path), "save the wave again") from error
+
+
+def _sizes_fit(path: Path) -> bool:
+    """Return whether every size in the header fits the file; the parser would allocate whatever is claimed."""
+    size = path.stat().st_size
+    with path.open("rb") as file:
+        head = file.read(384)
+    if len(head) < 2:
+        return False
+    order = "<" if struct.unpack_from("<h", head)[0] in _VERSIONS else ">"
+    version = struct.unpack_from(order + "h", head)[0]
+    if version not in _VERSIONS or len(head) < {2: 126, 3: 130, 5: 384}[version]:
+        return False
+    if version == 5:
+        claimed = struct.unpack_from(order + "15i", head, 4)
+        points, dimensions = struct.unpack_from(order + "i", head, 76)[0], struct.unpack_from(order + "4i", head, 132)
+        product = 1
+        for count in dimensions:
+            product *= max(count, 1)
+    else:
+        claimed = struct.unpack_from(order + ("2i" if version == 2 else "3i"), head, 2)
+        points = product = struct.unpack_from(order + "i", head, {2: 16, 3: 20}[version] + 42)[0]
+        dimensions = ()
+    every = (*claimed, points, product, *dimensions)
+    return all(0 <= count <= size for count in every)
 
 
 def _words_sum_to_zero(head: bytes, order: str, version: int) -> bool:
