@@ -308,10 +308,10 @@ _BINS = (*_AXIS, "histogram.low_g0", "histogram.high_g0", "histogram.bins_per_de
 STEPS: Mapping[str, Step] = {
     step.name: step
     for step in (
-        Step("noise", "learning the noise", 1, (), ("noise", _PHASE), _noise, _noise_block),
+        Step("noise", "learning the noise", 2, (), ("noise", _PHASE), _noise, _noise_block),
         Step("alignment", "finding the rupture", 1, (), ("alignment", _PHASE), _alignment, _alignment_block),
         Step(
-            "plateaus", "finding plateaus", 1, ("noise", "alignment"), ("plateaus", _PHASE), _plateaus, _plateaus_block
+            "plateaus", "finding plateaus", 2, ("noise", "alignment"), ("plateaus", _PHASE), _plateaus, _plateaus_block
         ),
         Step(
             "measures",
