@@ -105,7 +105,7 @@ def _main() -> None:
     """Compile every kernel with progress on the terminal; called once by set-up."""
     from tqdm import tqdm
 
-    with tqdm(total=len(KERNEL_MODULES), desc="compiling", unit="module", leave=False) as bar:
+    with tqdm(total=len(KERNEL_MODULES), desc="compiling", unit="module", leave=False, disable=None) as bar:
 
         def report(done: int, total: int) -> None:
             bar.total = total

@@ -11,9 +11,10 @@ from meseta.peaks.choosing import Chooser
 from meseta.peaks.fitting import fit_model, refit
 from meseta.peaks.modelling import background_template
 from meseta.peaks.results import PeakFit
+from meseta.peaks.shoulders import bare_shoulder
 from meseta.peaks.systematic import systematic_shifts
 from meseta.peaks.tabulate import FittedWindow, empty_fit, tabulate, weakest_peak
-from meseta.peaks.windows import Floor, Window, usable_range
+from meseta.peaks.windows import Floor, Start, Window, usable_range
 from meseta.recipe.peaks import PeakSettings
 from meseta.segmentation.results import PlateauTable
 from meseta.work import Work
@@ -74,12 +75,18 @@ def fit_histogram(
     if not windows:
         return empty_fit(histogram, settings, reason)
     parts = [_fitted(chooser, window, work) for window in windows]
-    while not settings.peaks and (weak := weakest_peak(parts)) is not None:
+    while not settings.peaks and (weak := _not_to_be_proposed(parts, plateaus, histogram.traces)) is not None:
         windows = chooser.without(windows, weak)
         if not windows:
             return empty_fit(histogram, settings, "no peak found")
         parts = [_fitted(chooser, window, work) for window in windows]
     return tabulate(histogram, settings, parts, resampling, plateaus)
+
+
+def _not_to_be_proposed(parts: list[FittedWindow], plateaus: PlateauTable | None, traces: int) -> Start | None:
+    """Return a peak that is too weak, or a shoulder without plateaus; None where all may stand."""
+    weak = weakest_peak(parts)
+    return bare_shoulder(parts, plateaus, traces) if weak is None and plateaus is not None else weak
 
 
 def _fitted(chooser: Chooser, window: Window, work: Work) -> FittedWindow:
