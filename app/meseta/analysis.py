@@ -391,7 +391,7 @@ STEPS: Mapping[str, Step] = {
         Step(
             "peaks",
             "fitting peaks",
-            1,
+            2,
             ("histogram", "resampling", "counts", "plateaus", "selection", "noise"),
             ("peaks",),
             _peaks,
