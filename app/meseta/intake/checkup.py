@@ -25,8 +25,8 @@ Floats = npt.NDArray[np.float64]
 LEAST_SAMPLES: Final = 200
 PEAK_SEARCH: Final = (-2.6, 2.6)
 FACTORS: Final = {0.01: "100", 0.1: "10", 0.5: "2", 2.0: "2", 10.0: "10", 100.0: "100"}
-SINGLE_ATOM_G0 = (0.7, 2.6)
-"""Single-atom peaks of metals: about 0.8 to 2.5 G0 (all values for Pt: 1 to 2.5, Nielsen et al., PRB 67, 245411)."""
+SINGLE_ATOM_G0: Final = (0.7, 2.6)
+"""Where single-atom peaks of metals lie, with room: 1 to 2.5 G0 for Pt (Nielsen et al., PRB 67, 245411)."""
 TUNNELLING: Final = (2.0, 25.0)
 """Decades per nm from solvent to vacuum (2 kappa / ln 10 is 10 for about 5 eV), with room on both sides."""
 ROOM_KELVIN: Final = 300.0

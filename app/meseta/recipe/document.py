@@ -161,11 +161,15 @@ class Recipe(BaseModel):
             yield name, getattr(self, name)
 
     def key(self, names: Iterable[str]) -> str:
-        """Return a hash of the named settings (``section`` or ``section.field``)."""
+        """Return a hash of the named settings (``section`` or ``section.field``).
+
+        Of a whole section only what differs from the defaults counts, so that a setting added by a later version leaves
+        the keys of earlier studies alone.
+        """
         chosen = {}
         for name in names:
             section, _, field = name.partition(".")
-            values = getattr(self, section).model_dump(mode="json")
+            values = getattr(self, section).model_dump(mode="json", exclude_defaults=not field)
             # a derived property (the stored grid of a histogram) may stand for the settings it is made of
             derived = field not in values
             chosen[name] = values if not field else getattr(getattr(self, section), field) if derived else values[field]
