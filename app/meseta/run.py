@@ -56,8 +56,12 @@ def check_output(folder: Path) -> None:
     if folder.exists() and not folder.is_dir():
         raise OutputError("is a file, not a folder", str(folder), "choose another --out")
     parent = _nearest_folder(folder)
-    if not os.access(parent, os.W_OK | os.X_OK):
-        raise OutputError("cannot be written to", str(parent), "choose another --out or change its permissions")
+    try:
+        # permissions do not tell everything (read-only or virtual file systems): the place itself decides
+        Path(tempfile.mkdtemp(prefix=".meseta-", dir=parent)).rmdir()
+    except OSError as error:
+        remedy = "choose another --out or change its permissions"
+        raise OutputError(f"cannot be written to ({error.strerror})", str(parent), remedy) from error
     if not folder.exists():
         return
     try:

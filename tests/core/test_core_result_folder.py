@@ -68,3 +68,14 @@ def test_a_file_or_a_folder_below_a_file_is_refused(tmp_path):
     for place in (tmp_path / "file", tmp_path / "file" / "below"):
         with pytest.raises(OutputError, match="file, not a folder"):
             check_output(place)
+
+
+def test_a_place_in_which_no_folder_can_be_made_is_refused_before_any_work(tmp_path, monkeypatch):
+    def refuse(**_):
+        raise OSError(30, "Read-only file system")
+
+    monkeypatch.setattr("meseta.run.tempfile.mkdtemp", refuse)
+    with pytest.raises(OutputError, match="Read-only file system") as caught:
+        check_output(tmp_path / "out")
+    assert caught.value.exit_code == 2 and caught.value.remedy
+    assert list(tmp_path.iterdir()) == []
