@@ -16,6 +16,7 @@ from PySide6.QtWidgets import QApplication
 from meseta.simulate import simulate
 from meseta.window.application import make_application, make_window
 from meseta.window.session import Session
+from meseta.window.visibility import Lazy
 
 pyqtgraph.setConfigOption("mouseRateLimit", -1)  # no move of a test's mouse is left out, however fast it comes
 WAIT_MS = 120_000
@@ -78,8 +79,12 @@ def settle(qtbot):
         qtbot.waitUntil(lambda: not window.jobs.busy, timeout=WAIT_MS)
         for _ in range(6):
             QApplication.processEvents()
-        steps = window.widgets["steps"]
-        qtbot.waitUntil(lambda: not window.jobs.busy and not steps._soon.isActive(), timeout=WAIT_MS)
+        steps, lazy = window.widgets["steps"], window.findChildren(Lazy)
+
+        def still() -> bool:
+            return not (window.jobs.busy or steps._soon.isActive() or any(one.pending for one in lazy))
+
+        qtbot.waitUntil(still, timeout=WAIT_MS)
 
     return wait
 

@@ -28,6 +28,11 @@ class Lazy(QObject):
         if self._widget.isVisible() and not self._timer.isActive():
             self._timer.start()
 
+    @property
+    def pending(self) -> bool:
+        """Whether a call is on its way."""
+        return self._timer.isActive()
+
     def eventFilter(self, watched: QObject, event: QEvent) -> bool:
         """Catch up when the widget appears."""
         if event.type() == QEvent.Type.Show and self._due:
