@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
-from functools import partial
+from functools import cached_property, partial
 from typing import Any, Final
 
 import numpy as np
@@ -16,6 +16,7 @@ from meseta.intake.cutting import PULL, PUSH, Cut, cut
 from meseta.intake.drive import DriveAxis, drive_of, sample_interval
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.roles import settle_roles, unmatched
+from meseta.intake.rows import BLOCK_SAMPLES, RawSpans, SharedAxis, StreamedRow
 from meseta.intake.two_gain import overlap_doubts
 from meseta.intake.units import unit_factor
 from meseta.recipe import Recipe
@@ -29,11 +30,17 @@ LINEAR_TOLERANCE: Final = 1.2e-7
 CARRIED: Final = ("other", "voltage", "bias", "range_code", "phase")
 ENDS: Final = 16
 RISE_FACTOR: Final = 10.0
+LARGEST_BLOCK: Final = 2_000_000
+"""Samples that are read at once at most; a longer trace comes in several blocks."""
 
 
 @dataclass
 class Part:
-    """The traces of one recording: ranges, calibration, drive axis, and, once loaded, their samples."""
+    """The traces of one recording: ranges, calibration, drive axis, and their samples once they can be had.
+
+    :meth:`load` brings the samples into memory; :meth:`stream` leaves them in the recording, which must then stay
+    open: rows are worked out block by block when they are read.
+    """
 
     recording: Recording
     calibration: Calibration
@@ -45,12 +52,12 @@ class Part:
     offsets: npt.NDArray[np.int64]
     start: npt.NDArray[np.int64]
     stop: npt.NDArray[np.int64]
-    conductance: npt.NDArray[np.float32] = field(default_factory=lambda: np.empty(0, np.float32))
-    quality: npt.NDArray[np.uint8] | None = None
+    conductance: Any = field(default_factory=lambda: np.empty(0, np.float32))
+    quality: Any = None
     drive_start: npt.NDArray[np.float64] = field(default_factory=lambda: np.empty(0))
     drive_step: npt.NDArray[np.float64] = field(default_factory=lambda: np.empty(0))
-    relative: npt.NDArray[np.float32] | None = None
-    carried: dict[str, npt.NDArray[np.float32]] = field(default_factory=dict)
+    relative: Any = None
+    carried: dict[str, Any] = field(default_factory=dict)
     first_bias_volt: npt.NDArray[np.float64] | None = None
 
     @property
@@ -58,51 +65,98 @@ class Part:
         """Number of traces."""
         return len(self.start)
 
-    def spans(self, first: int, last: int) -> Iterator[tuple[int, int]]:
-        """Yield flat raw ranges that hold traces ``first`` to ``last``, joined where they touch."""
-        begin = int(self.start[first])
-        for row in range(first, last):
-            if row + 1 == last or self.start[row + 1] != self.stop[row]:
-                yield begin, int(self.stop[row])
-                begin = int(self.start[row + 1]) if row + 1 < last else 0
+    @property
+    def samples(self) -> int:
+        """Number of samples of all traces."""
+        return int(self.offsets[-1])
 
-    def gathered(self, read: Callable[[int, int], npt.NDArray[Any]], first: int, last: int) -> npt.NDArray[Any]:
-        """Return what ``read`` gives for traces ``first`` to ``last``, end to end."""
-        parts = [read(start, stop) for start, stop in self.spans(first, last)]
-        return parts[0] if len(parts) == 1 else np.concatenate(parts)
+    @cached_property
+    def raw_spans(self) -> RawSpans:
+        """Where the samples lie in the recording."""
+        return RawSpans.of(self.start, self.stop, self.offsets)
+
+    def gathered(self, read: Callable[[int, int], npt.NDArray[Any]], low: int, high: int) -> npt.NDArray[Any]:
+        """Return what ``read`` gives for the recording's samples behind flat samples ``low`` to ``high``."""
+        parts = [read(start, stop) for start, stop in self.raw_spans.within(low, high)]
+        return parts[0] if len(parts) == 1 else np.concatenate(parts or [read(0, 0)])
+
+    # -- all in memory ----------------------------------------------------------------------------------------------
 
     def load(self, work: Work) -> Part:
         """Read and calibrate all samples into memory; returns itself."""
-        total = int(self.offsets[-1])
+        total = self.samples
         self.conductance = np.empty(total, np.float32)
         self.carried = {channel.name: np.empty(total, np.float32) for channel in self.extras}
-        self.quality = (
-            np.zeros(total, np.uint8)
-            if "full_scale_volt" in self.calibration.constants or (self.calibration.second is not None)
-            else None
-        )
-        self.drive_start, self.drive_step = np.zeros(self.traces), np.full(self.traces, self.axis.factor)
-        shared = self.axis.channel is not None and self.axis.channel.shared and self._is_uncut()
-        if shared:
-            self._share_drive()
-        elif self.axis.channel is not None:
+        self.quality = np.zeros(total, np.uint8) if self._may_be_doubtful() else None
+        own_drive = self._begin_drive()
+        if own_drive:
             self.relative = np.empty(total, np.float32)
-        spans = blocks_of(self.offsets, min(work.block_samples, 2_000_000))
-        sizes = [last - first for first, last in spans]
-        linear = True
-        for straight in work.each(
-            partial(self._load_block, with_drive=not shared), spans, "reading traces", sizes=sizes
+        blocks = flat_blocks(self.offsets, min(work.block_samples, LARGEST_BLOCK))
+        sizes = [high - low for low, high in blocks]
+        straight = True
+        for one in work.each(
+            partial(self._load_block, own_drive=own_drive), blocks, "reading", sizes=sizes, unit="samples"
         ):
-            linear = linear and straight
-        if linear and not shared:
+            straight = straight and one
+        if own_drive and straight:
             self.relative = None
-        bias = self.calibration.bias_channel
-        if bias is not None:
-            firsts = [self.recording.values(bias, at, at + 1) for at in self.start.tolist()]
-            self.first_bias_volt = np.concatenate(firsts) * unit_factor(bias.unit or "V", "V")
+        if isinstance(self.relative, SharedAxis):
+            self.relative = self.relative.read(0, total)
+        self._read_first_bias()
         if self.quality is not None and not self.quality.any():
             self.quality = None
         return self
+
+    def _load_block(self, block: tuple[int, int], own_drive: bool) -> bool:
+        """Fill the arrays over a range of flat samples; return whether the steps of the drive are equal."""
+        low, high = block
+        self._calibrate(low, self.conductance[low:high], None if self.quality is None else self.quality[low:high])
+        for channel in self.extras:
+            self.carried[channel.name][low:high] = self._carried_values(channel, low, high)
+        return self._drive_block(low, high, self.relative[low:high]) if own_drive else True
+
+    def _calibrate(self, low: int, target: npt.NDArray[np.float32], bits: npt.NDArray[np.uint8] | None) -> None:
+        """Fill arrays with conductance and quality from flat sample ``low`` on."""
+        at = 0
+        for start, stop in self.raw_spans.within(low, low + len(target)):
+            end = at + stop - start
+            if not self.calibration.apply_into(self.recording, start, target[at:end]):
+                found = self.calibration.apply(self.recording, start, stop)
+                target[at:end] = found.conductance
+                if found.quality is not None and bits is not None:
+                    bits[at:end] = found.quality
+            at = end
+
+    def _carried_values(self, channel: RawChannel, low: int, high: int) -> npt.NDArray[np.float32]:
+        values = self.gathered(partial(self.recording.values, channel), low, high)
+        with np.errstate(over="ignore"):  # what float32 cannot hold becomes infinite, as it is in the recording
+            return values.astype(np.float32)
+
+    def _may_be_doubtful(self) -> bool:
+        return "full_scale_volt" in self.calibration.constants or self.calibration.second is not None
+
+    def _read_first_bias(self) -> None:
+        bias = self.calibration.bias_channel
+        if bias is not None and self.traces:
+            firsts = [self.recording.values(bias, at, at + 1) for at in self.start.tolist()]
+            self.first_bias_volt = np.concatenate(firsts) * unit_factor(bias.unit or "V", "V")
+
+    # -- the drive --------------------------------------------------------------------------------------------------
+
+    def _begin_drive(self) -> bool:
+        """Make room for starts and steps; return whether they are to be found in a channel, block by block."""
+        self.drive_start, self.drive_step = np.zeros(self.traces), np.full(self.traces, self.axis.factor)
+        channel = self.axis.channel
+        if channel is None:
+            return False
+        if channel.shared and self._is_uncut():
+            self._share_drive()
+            return False
+        for row in np.flatnonzero(np.diff(self.offsets) > LARGEST_BLOCK).tolist():  # it comes in several blocks
+            begin, end = int(self.start[row]), int(self.stop[row])
+            first, last = (float(self.axis.values(self.recording, at, at + 1)[0]) for at in (begin, end - 1))
+            self.drive_start[row], self.drive_step[row] = first, (last - first) / (end - begin - 1)
+        return True
 
     def _is_uncut(self) -> bool:
         """Return whether every piece is one trace."""
@@ -121,43 +175,82 @@ class Part:
         self.drive_start[:], self.drive_step[:] = values[0], step
         bound = LINEAR_TOLERANCE * float(np.max(np.abs(values)))
         if not np.all(np.abs(relative - step * np.arange(longest)) <= bound):
-            self.relative = np.concatenate([relative[:n] for n in np.diff(self.offsets)]).astype(np.float32)
+            self.relative = SharedAxis(relative.astype(np.float32), self.offsets)
 
-    def _load_block(self, span: tuple[int, int], with_drive: bool) -> bool:
-        """Fill the arrays for traces ``first`` to ``last``; return whether their drive steps are equal."""
-        first, last = span
-        lo, hi = int(self.offsets[first]), int(self.offsets[last])
-        at, bits = lo, self.quality
-        for start, stop in self.spans(first, last):
-            end = at + stop - start
-            if self.calibration.apply_into(self.recording, start, self.conductance[at:end]):
-                at = end
-                continue
-            found = self.calibration.apply(self.recording, start, stop)
-            self.conductance[at:end] = found.conductance
-            if found.quality is not None and bits is not None:
-                bits[at:end] = found.quality
-            at = end
-        for channel in self.extras:
-            read = partial(self.recording.values, channel)
-            self.carried[channel.name][lo:hi] = self.gathered(read, first, last)
-        return self._load_drive(first, last) if with_drive and self.axis.channel is not None else True
+    def _drive_block(self, low: int, high: int, relative: npt.NDArray[np.float32]) -> bool:
+        """Fill the drive relative to each trace's start; return whether its steps are equal."""
+        from meseta.intake.kernels import drive_piece, drive_steps
 
-    def _load_drive(self, first: int, last: int) -> bool:
-        from meseta.intake.kernels import drive_steps
+        values = self.gathered(lambda a, b: self.axis.values(self.recording, a, b), low, high)
+        values = np.ascontiguousarray(values)
+        first, last = (int(np.searchsorted(self.offsets, at, side="right")) - 1 for at in (low, high - 1))
+        if int(self.offsets[first + 1] - self.offsets[first]) > LARGEST_BLOCK:
+            base = low - int(self.offsets[first])
+            begin, step = float(self.drive_start[first]), float(self.drive_step[first])
+            return bool(drive_piece(values, base, begin, step, LINEAR_TOLERANCE, relative))
+        rows = slice(first, last + 1)
+        offsets = self.offsets[first : last + 2] - low
+        start, step_of = self.drive_start[rows], self.drive_step[rows]
+        return bool(drive_steps(values, offsets, LINEAR_TOLERANCE, start, step_of, relative))
 
-        assert self.relative is not None
-        values = self.gathered(lambda a, b: self.axis.values(self.recording, a, b), first, last)
-        offsets = self.offsets[first : last + 1] - self.offsets[first]
-        own = slice(int(self.offsets[first]), int(self.offsets[last]))
-        start, step, relative = self.drive_start[first:last], self.drive_step[first:last], self.relative[own]
-        return bool(drive_steps(np.ascontiguousarray(values), offsets, LINEAR_TOLERANCE, start, step, relative))
+    # -- left in the recording --------------------------------------------------------------------------------------
+
+    def stream(self, work: Work) -> Part:
+        """Leave all samples in the recording and look through it once for what all rows need; returns itself."""
+        total = self.samples
+        self.conductance = StreamedRow(total, np.float32, self._conductance_of)
+        self.quality = StreamedRow(total, np.uint8, self._quality_of) if self._may_be_doubtful() else None
+        self.carried = {
+            channel.name: StreamedRow(total, np.float32, partial(self._carried_values, channel))
+            for channel in self.extras
+        }
+        own_drive = self._begin_drive()
+        blocks = flat_blocks(self.offsets, min(work.block_samples, BLOCK_SAMPLES))
+        sizes = [high - low for low, high in blocks]
+        straight, doubtful = True, False
+        look = partial(self._look_block, own_drive=own_drive)
+        for one, bits in work.each(look, blocks, "looking through", sizes=sizes, unit="samples"):
+            straight, doubtful = straight and one, doubtful or bits
+        if own_drive and not straight:
+            self.relative = StreamedRow(total, np.float32, self._relative_of)
+        self._read_first_bias()
+        self.quality = self.quality if doubtful else None
+        return self
+
+    def _look_block(self, block: tuple[int, int], own_drive: bool) -> tuple[bool, bool]:
+        low, high = block
+        scratch = np.empty(high - low, np.float32) if own_drive else None
+        straight = True if scratch is None else self._drive_block(low, high, scratch)
+        return straight, self.quality is not None and bool(self._quality_of(low, high).any())
+
+    def _conductance_of(self, low: int, high: int) -> npt.NDArray[np.float32]:
+        target = np.empty(high - low, np.float32)
+        self._calibrate(low, target, None)
+        return target
+
+    def _quality_of(self, low: int, high: int) -> npt.NDArray[np.uint8]:
+        bits = np.zeros(high - low, np.uint8)
+        self._calibrate(low, np.empty(high - low, np.float32), bits)
+        return bits
+
+    def _relative_of(self, low: int, high: int) -> npt.NDArray[np.float32]:
+        values = self.gathered(lambda a, b: self.axis.values(self.recording, a, b), low, high)
+        rows = np.searchsorted(self.offsets, np.arange(low, high), side="right") - 1
+        return (values - self.drive_start[rows]).astype(np.float32)
+
+    def nan_samples(self) -> int:
+        """Return how many samples have no conductance."""
+        step = 4 * BLOCK_SAMPLES
+        return sum(
+            int(np.isnan(self.conductance[at : min(at + step, self.samples)]).sum())
+            for at in range(0, self.samples, step)
+        )
 
     def settle_directions(self) -> None:
         """Give every trace without a stated direction one: closing where its conductance rises from end to end."""
         unknown = [row for row, direction in enumerate(self.cut.direction) if not direction]
         if unknown:
-            rising = _rises(self.conductance, self.offsets, np.array(unknown, np.int64))
+            rising = self._rises(np.array(unknown, np.int64))
             for row, closing in zip(unknown, rising.tolist(), strict=True):
                 self.cut.direction[row] = "closing" if closing else "opening"
         has_phase = {phase[0] for phase in self.cut.phases}
@@ -170,6 +263,28 @@ class Part:
             if row not in has_phase
         ]
         self.cut.phases.sort()
+
+    def _rises(self, rows: npt.NDArray[np.int64]) -> npt.NDArray[np.bool_]:
+        """Return for each row whether its conductance ends much higher than it begins."""
+        from meseta.intake.kernels import rising_rows
+
+        rising = np.empty(len(rows), np.bool_)
+        if isinstance(self.conductance, np.ndarray):
+            rising_rows(self.conductance, self.offsets, rows, ENDS, RISE_FACTOR, rising)
+            return rising
+        for first, last in blocks_of(self.offsets, BLOCK_SAMPLES):
+            wanted = slice(*np.searchsorted(rows, [first, last]))
+            offsets = self.offsets[first : last + 1] - self.offsets[first]
+            low, high = int(self.offsets[first]), int(self.offsets[last])
+            if len(rows[wanted]) == 0:
+                continue
+            if high - low > BLOCK_SAMPLES:  # a long trace: its ends will do
+                ends = [self.conductance[low : low + ENDS], self.conductance[high - ENDS : high]]
+                values, offsets = np.concatenate(ends), np.array([0, 2 * ENDS], np.int64)
+            else:
+                values = np.asarray(self.conductance[low:high])
+            rising_rows(values, offsets, rows[wanted] - first, ENDS, RISE_FACTOR, rising[wanted])
+        return rising
 
     def let_go(self) -> Part:
         """Drop the recorded samples, which are not needed once all is loaded; returns itself."""
@@ -198,17 +313,6 @@ class Part:
             "drive": self.axis.said,
             "doubts": list(dict.fromkeys(said)),
         }
-
-
-def _rises(
-    values: npt.NDArray[np.float32], offsets: npt.NDArray[np.int64], rows: npt.NDArray[np.int64]
-) -> npt.NDArray[np.bool_]:
-    """Return for each row whether its conductance ends much higher than it begins."""
-    from meseta.intake.kernels import rising_rows
-
-    rising = np.empty(len(rows), np.bool_)
-    rising_rows(values, offsets, rows, ENDS, RISE_FACTOR, rising)
-    return rising
 
 
 def prepared(recording: Recording, recipe: Recipe) -> Recording:
@@ -250,6 +354,18 @@ def plan_of(recording: Recording, recipe: Recipe) -> Part:
     used = {calibration.channel.name, *(c.name for c in (axis.channel, calibration.second) if c is not None)}
     extras = tuple(c for c in recording.channels if c.role in CARRIED and not c.shared and c.name not in used)
     return Part(recording, calibration, axis, pieces, interval, origin, _distinct(extras), offsets, start, stop)
+
+
+def flat_blocks(offsets: npt.NDArray[np.int64], block_samples: int) -> list[tuple[int, int]]:
+    """Cut flat samples into blocks of whole traces; only a trace beyond the largest block is cut itself."""
+    blocks: list[tuple[int, int]] = []
+    for first, last in blocks_of(offsets, block_samples):
+        low, high = int(offsets[first]), int(offsets[last])
+        if high - low > LARGEST_BLOCK:
+            blocks += [(at, min(at + LARGEST_BLOCK, high)) for at in range(low, high, LARGEST_BLOCK)]
+        elif high > low:
+            blocks.append((low, high))
+    return blocks
 
 
 def _distinct(extras: Sequence[RawChannel]) -> tuple[RawChannel, ...]:

@@ -12,8 +12,9 @@ import numpy.typing as npt
 from meseta.errors import InputError
 from meseta.intake.assembly import Part
 from meseta.intake.metadata import CONSTANTS
+from meseta.intake.rows import end_to_end
 from meseta.recipe import Recipe
-from meseta.traces import ArraySamples, Channel, Drive, PhaseTable, Source, TraceSet, trace_table
+from meseta.traces import Channel, Drive, PhaseTable, Source, TraceSet, trace_table
 
 __all__ = ["INTAKE_VERSION", "joined", "key_of"]
 
@@ -43,15 +44,13 @@ def joined(parts: Sequence[Part], recipe: Recipe, notes: Mapping[str, Any]) -> T
     ).astype(np.int64)
     rows = np.concatenate([[0], np.cumsum([part.traces for part in parts])]).astype(np.int64)
     sources = tuple(part.recording.source for part in parts)
-    channels = {"conductance": Channel(ArraySamples(_end_to_end([part.conductance for part in parts])), "G0")}
+    channels = {"conductance": Channel(end_to_end([part.conductance for part in parts]), "G0")}
     channels |= _carried(parts, sizes)
     has_quality = any(part.quality is not None for part in parts)
     quality = (
-        ArraySamples(
-            _end_to_end(
-                [np.zeros(n, np.uint8) if part.quality is None else part.quality
-                 for part, n in zip(parts, sizes, strict=True)]
-            )
+        end_to_end(
+            [np.zeros(n, np.uint8) if part.quality is None else part.quality
+             for part, n in zip(parts, sizes, strict=True)]
         )
         if has_quality
         else None
@@ -67,10 +66,6 @@ def joined(parts: Sequence[Part], recipe: Recipe, notes: Mapping[str, Any]) -> T
         quality=quality,
         notes=dict(notes) | _notes(parts),
     )
-
-
-def _end_to_end(arrays: Sequence[npt.NDArray[Any]]) -> npt.NDArray[Any]:
-    return arrays[0] if len(arrays) == 1 else np.concatenate(arrays)
 
 
 def _same_units(parts: Sequence[Part]) -> None:
@@ -94,7 +89,7 @@ def _carried(parts: Sequence[Part], sizes: Sequence[int]) -> dict[str, Channel]:
             part.carried[name] if name in part.carried else np.full(size, np.nan, np.float32)
             for part, size in zip(parts, sizes, strict=True)
         ]
-        found[name] = Channel(ArraySamples(_end_to_end(arrays)), units[name])
+        found[name] = Channel(end_to_end(arrays), units[name])
     return found
 
 
@@ -105,7 +100,7 @@ def _drive(parts: Sequence[Part]) -> Drive:
     if all(part.relative is None for part in parts):
         return Drive(start, step, unit)
     arrays = [_stepped(part) if part.relative is None else part.relative for part in parts]
-    return Drive(start, np.full(len(start), np.nan), unit, ArraySamples(_end_to_end(arrays)))
+    return Drive(start, np.full(len(start), np.nan), unit, end_to_end(arrays))
 
 
 def _stepped(part: Part) -> npt.NDArray[np.float32]:
@@ -220,7 +215,7 @@ def _notes(parts: Sequence[Part]) -> dict[str, Any]:
         for text, names in doubts.items()
     ]
     first = parts[0].notes()
-    ceiling = sum(int(np.isnan(part.conductance).sum()) for part in parts if _has_series(part))
+    ceiling = sum(part.nan_samples() for part in parts if _has_series(part))
     return {
         "assumptions": said,
         "incomplete": incomplete,

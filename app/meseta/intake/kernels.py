@@ -9,7 +9,7 @@ import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
-__all__ = ["drive_steps", "find_crossings", "find_turns", "power_of_ten", "rising_rows"]
+__all__ = ["drive_piece", "drive_steps", "find_crossings", "find_turns", "power_of_ten", "rising_rows"]
 
 ALIGNED, NEVER_REACHES, ENDS_ABOVE, NO_SAMPLES = 0, 1, 2, 3
 
@@ -162,6 +162,32 @@ def drive_steps(
 
 
 @kernel
+def drive_piece(
+    values: npt.NDArray[np.float64],
+    base: int,
+    start: float,
+    step: float,
+    tolerance: float,
+    relative: npt.NDArray[np.float32],
+) -> bool:
+    """Fill the relative drive of a piece of one trace, from its sample ``base`` on; return whether steps are equal.
+
+    ``start`` and ``step`` are those of the whole trace; equal is meant as in :func:`drive_steps`.
+    """
+    largest = 0.0
+    for value in values:
+        if abs(value) > largest:
+            largest = abs(value)
+    bound, straight = tolerance * largest, True
+    for index in range(len(values)):
+        away = values[index] - start
+        relative[index] = away
+        if not abs(away - step * (base + index)) <= bound:
+            straight = False
+    return straight
+
+
+@kernel
 def _median_size(values: npt.NDArray[np.float32], scratch: npt.NDArray[np.float32]) -> float:
     """Return the lower median of the sizes of the finite values; NaN where there are none."""
     count = 0
@@ -204,6 +230,7 @@ def _compile() -> None:
         drive = values.astype(np.float64)
         drive.flags.writeable = values.flags.writeable
         drive_steps(drive, bounds, 1e-7, np.empty(1), np.empty(1), np.empty(5, np.float32))
+        drive_piece(drive, 0, 0.0, 1.0, 1e-7, np.empty(5, np.float32))
         values = values.copy()
         values.flags.writeable = False
     find_turns(np.array([0.0, 1.0, 0.0]), 0, 0.5, np.zeros(6))

@@ -83,8 +83,19 @@ def read(
     return _joined(parts, recipe, {"bad_files": [_plain(error) for error in bad], "passed_over": passed})
 
 
-def traces_from(recordings: Sequence[Recording], recipe: Recipe | None = None, work: Work | None = None) -> TraceSet:
+def traces_from(
+    recordings: Sequence[Recording], recipe: Recipe | None = None, work: Work | None = None, *, stream: bool = False
+) -> TraceSet:
     """Return the traces of recordings that are open: calibrated, cut, and put end to end.
+
+    Parameters
+    ----------
+    recordings : sequence of Recording
+    recipe : Recipe, optional
+    work : Work, optional
+    stream : bool
+        Leave the samples in the recordings, which must then stay open: each channel is worked out block by block as it
+        is read, so that memory stays small however large the recording.
 
     Raises
     ------
@@ -92,7 +103,7 @@ def traces_from(recordings: Sequence[Recording], recipe: Recipe | None = None, w
         Where a recording's channels do not give conductance, or no trace is found.
     """
     recipe, work = recipe or Recipe(), work or Work()
-    parts = [_loaded(recording, recipe, work) for recording in recordings]
+    parts = [_loaded(recording, recipe, work, stream) for recording in recordings]
     parts = [part for part in parts if part.traces]
     if not parts:
         raise InputError("no traces were found", "recordings", "check the cutting settings")
@@ -111,11 +122,11 @@ def _alone(work: Work) -> Work:
     return Work(threads=1, block_samples=work.block_samples, cancel=work.cancel)
 
 
-def _loaded(recording: Recording, recipe: Recipe, work: Work) -> Part:
+def _loaded(recording: Recording, recipe: Recipe, work: Work, stream: bool = False) -> Part:
     part = plan_of(recording, recipe)
     if not part.traces:
         raise InputError("holds no traces", recording.source.name, "check the cutting settings")
-    part.load(work)
+    part = part.stream(work) if stream else part.load(work)
     part.settle_directions()
     return part
 

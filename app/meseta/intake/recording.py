@@ -72,7 +72,8 @@ class RawChannel:
 
     def values(self, start: int, stop: int) -> npt.NDArray[np.float64]:
         """(stop - start,) float64, numbers in ``unit``: stored * scale + offset."""
-        stored = self.samples.read(start, stop).astype(np.float64)
+        with np.errstate(invalid="ignore"):  # a NaN of any kind is a NaN
+            stored = self.samples.read(start, stop).astype(np.float64)
         if self.scale != 1.0:
             stored *= self.scale
         if self.offset != 0.0:

@@ -145,7 +145,8 @@ def _write_traces(
     """Write the traces of a batch; return the recordings that gave any."""
     quiet = work.quiet()
     try:
-        traces, good = traces_from(batch, recipe, quiet), list(batch)
+        large = sum(one.samples for one in batch) > BATCH_SAMPLES
+        traces, good = traces_from(batch, recipe, quiet, stream=large), list(batch)
         writer.append(traces)
     except InputError as error:
         if len(batch) == 1:

@@ -95,7 +95,8 @@ def batches(recordings: Sequence[Recording], recipe: Recipe) -> Iterator[Sequenc
 def write_derived(writer: TraceWriter, recordings: Sequence[Recording], recipe: Recipe, work: Work) -> None:
     """Make traces of recordings and write them, batch by batch."""
     for batch in batches(recordings, recipe):
-        writer.append(traces_from(batch, recipe, work))
+        large = sum(one.samples for one in batch) > BATCH_SAMPLES
+        writer.append(traces_from(batch, recipe, work, stream=large))
 
 
 def derived_key(sources: Sequence[Source], recipe: Recipe) -> str:
