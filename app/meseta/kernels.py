@@ -21,13 +21,16 @@ __all__ = ["KERNEL_MODULES", "compile_all", "kernel", "warm_up"]
 KERNEL_MODULES = (
     "meseta.simulate.kernels",
     "meseta.intake.kernels",
+    "meseta.intake.calibration_kernels",
     "meseta.segmentation.noise_kernels",
     "meseta.segmentation.kernels",
     "meseta.segmentation.stretch_kernels",
     "meseta.segmentation.finder_kernels",
     "meseta.segmentation.measure_kernels",
     "meseta.histograms.kernels",
+    "meseta.peaks.line_kernels",
     "meseta.peaks.kernels",
+    "meseta.window.raster",
 )
 """Every module that holds compiled kernels; each registers a warm-up with :func:`warm_up`."""
 

@@ -7,7 +7,7 @@ from dataclasses import fields
 import numpy as np
 
 from meseta.histograms import ConductanceHistogram, DisplacementHistogram, Grid
-from meseta.peaks import PeakFit, PeakTable
+from meseta.peaks import PeakFit, PeakTable, PositionShift
 
 
 def bell(u, centre, sigma):
@@ -95,9 +95,9 @@ def make_fit(histogram, positions, sigmas, areas, fit_low, fit_high, background,
         background=smooth,
         components=components,
         observed=histogram.density[inside],
-        systematic=(
-            ("bin width x 2", np.asarray(positions) * 0.002),
-            ("fit range - 10 %", np.asarray(positions) * -0.004),
+        shifts=(
+            PositionShift("fit", "bin width x 2", np.asarray(positions) * 0.002),
+            PositionShift("fit", "fit range - 10 %", np.asarray(positions) * -0.004),
         ),
         goodness=3.2,
     )

@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 from iminuit import Minuit
 from scipy import integrate, stats
 
-from meseta.peaks import kernels
+from meseta.peaks import kernels, line_kernels
 from meseta.peaks.fitting import fit_model, refit
 from meseta.peaks.model import Model
 from meseta.work import Work
@@ -108,12 +108,12 @@ def test_analytic_gradients_equal_differences(shape, background, logarithmic, mo
     elif logarithmic and "position_tie" not in more:
         inner[5], inner[9] = 0.3, 0.5
     arguments = (model.layout(), model.numbers(), model.low, model.high, model.template_counts())
-    _, slopes, _, chain = kernels.expected_counts(*arguments, inner)
+    _, slopes, _, chain = line_kernels.expected_counts(*arguments, inner)
     analytic = slopes @ chain
     for index in model.free():
         step = np.zeros(len(inner))
         step[index] = 1e-6 * max(abs(inner[index]), 0.1)
-        above, below = (kernels.expected_counts(*arguments, inner + sign * step)[0] for sign in (1, -1))
+        above, below = (line_kernels.expected_counts(*arguments, inner + sign * step)[0] for sign in (1, -1))
         numeric = (above - below) / (2 * step[index])
         np.testing.assert_allclose(analytic[:, index], numeric, atol=2e-7 * max(np.abs(numeric).max(), 1.0))
 

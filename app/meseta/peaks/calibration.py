@@ -9,9 +9,32 @@ import numpy.typing as npt
 
 from meseta.quantities import G0_SIEMENS
 
-__all__ = ["CalibrationShifts", "calibration_shifts"]
+__all__ = ["CalibrationErrors", "CalibrationShifts", "calibration_shifts"]
 
 Floats = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class CalibrationErrors:
+    """Standard errors of the constants of the calibration; 0 where none was stated.
+
+    Attributes
+    ----------
+    gain_relative, bias_relative : float
+        Relative standard errors of the amplifier's gain and of the bias.
+    offset_g0 : float
+        Standard error of the offset, as a conductance.
+    series_resistance_ohm : float
+    """
+
+    gain_relative: float = 0.0
+    bias_relative: float = 0.0
+    offset_g0: float = 0.0
+    series_resistance_ohm: float = 0.0
+
+    def stated(self) -> tuple[float, float, float, float]:
+        """Return the four in the order of :func:`calibration_shifts`."""
+        return self.gain_relative, self.bias_relative, self.offset_g0, self.series_resistance_ohm
 
 
 @dataclass(frozen=True)

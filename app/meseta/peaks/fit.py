@@ -2,18 +2,23 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 import numpy.typing as npt
 from scipy.ndimage import gaussian_filter1d
 
 from meseta.histograms.results import ConductanceHistogram, CountMatrix, Resampling
+from meseta.peaks.calibration import CalibrationErrors
 from meseta.peaks.choosing import Chooser
+from meseta.peaks.doubts import weakest_peak
 from meseta.peaks.fitting import fit_model, refit
 from meseta.peaks.modelling import background_template
 from meseta.peaks.results import PeakFit
 from meseta.peaks.shoulders import bare_shoulder
-from meseta.peaks.systematic import systematic_shifts
-from meseta.peaks.tabulate import FittedWindow, empty_fit, tabulate, weakest_peak
+from meseta.peaks.stretch import FittedWindow
+from meseta.peaks.systematic import OtherCounts, systematic_shifts
+from meseta.peaks.tabulate import empty_fit, tabulate
 from meseta.peaks.windows import Floor, Start, Window, usable_range
 from meseta.recipe.peaks import PeakSettings
 from meseta.segmentation.results import PlateauTable
@@ -36,6 +41,8 @@ def fit_histogram(
     *,
     floor: Floor | None = None,
     template: npt.ArrayLike | None = None,
+    others: Sequence[OtherCounts] = (),
+    calibration: CalibrationErrors | None = None,
 ) -> PeakFit:
     """Fit the peaks of a histogram.
 
@@ -54,6 +61,10 @@ def fit_histogram(
         Reading with the contact open: no peak is sought there.
     template : (bins,) array_like, optional
         Counts of a blank recording or a mean tunnelling trace on the histogram's grid, for those backgrounds.
+    others : sequence of OtherCounts
+        What other choices of the analysis would have counted, for the systematic part.
+    calibration : CalibrationErrors, optional
+        Standard errors of the calibration, for the systematic part.
 
     Returns
     -------
@@ -74,13 +85,13 @@ def fit_histogram(
     windows, reason = chooser.windows()
     if not windows:
         return empty_fit(histogram, settings, reason)
-    parts = [_fitted(chooser, window, work) for window in windows]
+    parts = [_fitted(chooser, window, others, work) for window in windows]
     while not settings.peaks and (weak := _not_to_be_proposed(parts, plateaus, histogram.traces)) is not None:
         windows = chooser.without(windows, weak)
         if not windows:
             return empty_fit(histogram, settings, "no peak found")
-        parts = [_fitted(chooser, window, work) for window in windows]
-    return tabulate(histogram, settings, parts, resampling, plateaus)
+        parts = [_fitted(chooser, window, others, work) for window in windows]
+    return tabulate(histogram, settings, parts, resampling, plateaus, calibration)
 
 
 def _not_to_be_proposed(parts: list[FittedWindow], plateaus: PlateauTable | None, traces: int) -> Start | None:
@@ -89,7 +100,7 @@ def _not_to_be_proposed(parts: list[FittedWindow], plateaus: PlateauTable | None
     return bare_shoulder(parts, plateaus, traces) if weak is None and plateaus is not None else weak
 
 
-def _fitted(chooser: Chooser, window: Window, work: Work) -> FittedWindow:
+def _fitted(chooser: Chooser, window: Window, others: Sequence[OtherCounts], work: Work) -> FittedWindow:
     """Return the fit of one stretch, its refits and its shifts."""
     work.check()
     weights = _weights(chooser, window)
@@ -100,7 +111,7 @@ def _fitted(chooser: Chooser, window: Window, work: Work) -> FittedWindow:
     left_out = None
     if chooser.settings.intervals == "bca" and (groups := chooser.blocks(_BCA_GROUPS)) is not None:
         left_out = refit(fitted, (groups.sum(axis=0) - groups)[:, inside], work, weights)
-    shifts = systematic_shifts(fitted, chooser.varied, window, chooser.histogram)
+    shifts = systematic_shifts(fitted, chooser.varied, window, chooser.histogram, others)
     return FittedWindow(window, fitted, replicates, left_out, shifts, tuple(chooser.reached(window, fitted)))
 
 

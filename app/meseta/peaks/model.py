@@ -8,14 +8,16 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 
-from meseta.peaks import kernels
+from meseta.peaks import kernels, line_kernels
 
 __all__ = ["BACKGROUNDS", "SHAPES", "WIDTH_TO_FWHM", "Curves", "Model"]
 
 Floats = npt.NDArray[np.float64]
+Integers = npt.NDArray[np.int64]
+Truths = npt.NDArray[np.bool_]
 
-SHAPES: Final = tuple(kernels.SHAPE_CODES)
-BACKGROUNDS: Final = tuple(kernels.BACKGROUND_CODES)
+SHAPES: Final = tuple(line_kernels.SHAPE_CODES)
+BACKGROUNDS: Final = tuple(line_kernels.BACKGROUND_CODES)
 WIDTH_TO_FWHM: Final = 2.0 * float(np.sqrt(2.0 * np.log(2.0)))
 """Full width at half maximum of a peak of unit width, for every shape."""
 
@@ -57,11 +59,15 @@ class Model:
         Bounds.
     fixed_position, fixed_width : (peaks,) bool
     position_tie : str
-        "none"; "multiples": every position is a multiple of one conductance; "ladder": the same behind a series
-        resistance.
+        "none"; "multiples": the tied positions are multiples of one conductance; "ladder": the same behind a series
+        resistance.  A tie of fewer than two peaks is none.
     equal_relative_widths : bool
+        The tied widths are in proportion to the positions (equal on a logarithmic axis).
     multiples : (peaks,) float64
         Which multiple each peak is.
+    tied_position, tied_width : (peaks,) bool
+        Which peaks take part in the ties; all where empty.  A tied peak whose position is fixed holds the conductance
+        that all are multiples of.
     template : (bins,) float64
         Shape of a "template" background (a blank recording, a mean tunnelling trace); its scale is fitted.
     """
@@ -77,11 +83,13 @@ class Model:
     position_high: Floats
     width_low: Floats
     width_high: Floats
-    fixed_position: npt.NDArray[np.bool_]
-    fixed_width: npt.NDArray[np.bool_]
+    fixed_position: Truths
+    fixed_width: Truths
     position_tie: str = "none"
     equal_relative_widths: bool = False
     multiples: Floats = field(default_factory=lambda: np.empty(0))
+    tied_position: Truths = field(default_factory=lambda: np.empty(0, bool))
+    tied_width: Truths = field(default_factory=lambda: np.empty(0, bool))
     template: Floats = field(default_factory=lambda: np.empty(0))
 
     @property
@@ -99,20 +107,34 @@ class Model:
         """Lower and upper end of the fit on the axis."""
         return float(self.low[0]), float(self.high[-1])
 
-    def layout(self, least_squares: bool = False) -> npt.NDArray[np.int64]:
+    def tied_positions(self) -> Integers:
+        """Return the peaks whose positions are tied to one another; none, or two and more."""
+        return self._tied(self.tied_position) if self.position_tie != "none" else np.empty(0, np.int64)
+
+    def tied_widths(self) -> Integers:
+        """Return the peaks whose relative widths are equal; none, or two and more."""
+        return self._tied(self.tied_width) if self.equal_relative_widths else np.empty(0, np.int64)
+
+    def _tied(self, chosen: Truths) -> Integers:
+        among = np.flatnonzero(chosen) if len(chosen) else np.arange(self.peaks)
+        return among if len(among) > 1 else np.empty(0, np.int64)
+
+    def layout(self, least_squares: bool = False) -> Integers:
         """Return the codes that the kernels want."""
-        return np.array(
-            [
-                kernels.SHAPE_CODES[self.shape],
-                kernels.BACKGROUND_CODES[self.background],
-                self.peaks,
-                _POSITION_TIES[self.position_tie] if self.peaks else 0,
-                int(self.equal_relative_widths and self.peaks > 0),
-                int(self.logarithmic),
-                kernels.LEAST_SQUARES if least_squares else kernels.LIKELIHOOD,
-            ],
-            np.int64,
-        )
+        positions, widths = self.tied_positions(), self.tied_widths()
+        flags = np.zeros(self.peaks, np.int64)
+        flags[positions] |= line_kernels.POSITION_TIED
+        flags[widths] |= line_kernels.WIDTH_TIED
+        codes = [
+            line_kernels.SHAPE_CODES[self.shape],
+            line_kernels.BACKGROUND_CODES[self.background],
+            self.peaks,
+            _POSITION_TIES[self.position_tie] if len(positions) else 0,
+            int(len(widths) > 0),
+            int(self.logarithmic),
+            kernels.LEAST_SQUARES if least_squares else kernels.LIKELIHOOD,
+        ]
+        return np.concatenate([np.array(codes, np.int64), flags])
 
     def numbers(self) -> Floats:
         """Return the multiples, 1, 2, 3 ... where none were given."""
@@ -122,16 +144,23 @@ class Model:
         """Return the template, ones where there is none."""
         return self.template if len(self.template) == len(self.low) else np.ones(len(self.low))
 
-    def free(self) -> npt.NDArray[np.int64]:
+    def free(self) -> Integers:
         """Return the indices of the free parameters."""
+        position, width = ~self.fixed_position, ~self.fixed_width
+        tied, alike = self.tied_positions(), self.tied_widths()
+        if len(tied):
+            held = bool(self.fixed_position[tied].any())
+            position[tied] = False
+            position[tied[0]] = not held
+            position[tied[1]] |= self.position_tie == "ladder"
+        if len(alike):
+            held = bool(self.fixed_width[alike].any())
+            width[alike] = False
+            width[alike[0]] = not held
         chosen = np.zeros(self.size, bool)
-        for peak in range(self.peaks):
-            chosen[4 * peak] = True
-            chosen[4 * peak + 1] = not self.fixed_position[peak] and (
-                self.position_tie == "none" or peak == 0 or (self.position_tie == "ladder" and peak == 1)
-            )
-            chosen[4 * peak + 2] = not self.fixed_width[peak] and (not self.equal_relative_widths or peak == 0)
-            chosen[4 * peak + 3] = self.shape in _EXTRA_LIMITS
+        chosen[0:-2:4] = True
+        chosen[1:-2:4], chosen[2:-2:4] = position, width
+        chosen[3:-2:4] = self.shape in _EXTRA_LIMITS
         count = {"none": 0, "constant": 1, "template": 1}.get(self.background, 2)
         chosen[4 * self.peaks : 4 * self.peaks + count] = True
         return np.flatnonzero(chosen)
@@ -153,19 +182,27 @@ class Model:
         return lower, upper
 
     def _tied_bounds(self, lower: Floats, upper: Floats) -> None:
-        """Widen the bounds of parameters that a tie uses for something else."""
-        if self.peaks and self.position_tie != "none":
+        """Set the bounds of parameters that a tie uses for something else."""
+        tied, alike = self.tied_positions(), self.tied_widths()
+        if len(tied):
             first, last = self.range_u
-            number = self.numbers()
+            number, at = self.numbers()[tied], 4 * int(tied[0]) + 1
             if self.logarithmic:
-                lower[1], upper[1] = first - np.log10(number.max()), last - np.log10(number.min()) + 1.0
+                lower[at], upper[at] = first - np.log10(number.max()), last - np.log10(number.min()) + 1.0
+                ends = self.position_low[tied] - np.log10(number), self.position_high[tied] - np.log10(number)
             else:
-                lower[1], upper[1] = max(first, 0.0) / number.max(), 2.0 * last / number.min()
-            if self.position_tie == "ladder" and self.peaks > 1:
-                top = 10.0**last if self.logarithmic else last
-                lower[5], upper[5] = -0.5 / top, 0.95 / top
-        if self.peaks and self.equal_relative_widths and not self.logarithmic:
-            lower[2], upper[2] = 1e-4, 2.0
+                lower[at], upper[at] = max(first, 0.0) / number.max(), 2.0 * last / number.min()
+                ends = self.position_low[tied] / number, self.position_high[tied] / number
+            # A bound of one peak bounds the conductance; behind a resistance only from below.
+            if float(ends[0].max()) < float(ends[1].min()):
+                lower[at] = max(lower[at], float(ends[0].max()))
+                if self.position_tie == "multiples":
+                    upper[at] = min(upper[at], float(ends[1].min()))
+            if self.position_tie == "ladder":
+                top, at = 10.0**last if self.logarithmic else last, 4 * int(tied[1]) + 1
+                lower[at], upper[at] = -0.5 / top, 0.95 / top
+        if len(alike) and not self.logarithmic:
+            lower[4 * alike[0] + 2], upper[4 * alike[0] + 2] = 1e-4, 2.0
 
     def start(self, counts: Floats) -> Floats:
         """Return starting values for these counts: a background from the quiet bins, areas from what lies above it."""
@@ -186,16 +223,19 @@ class Model:
         return np.clip(inner, lower, upper)
 
     def _tie_start(self, inner: Floats) -> None:
-        if not self.peaks:
-            return
-        if self.position_tie != "none":
-            number = self.numbers()
-            each = self.position_u - np.log10(number) if self.logarithmic else self.position_u / number
-            inner[1] = float(np.median(each))
-            if self.position_tie == "ladder" and self.peaks > 1:
-                inner[5] = 0.0
-        if self.equal_relative_widths:
-            inner[2] = float(np.median(self.width_u if self.logarithmic else self.width_u / self.position_u))
+        """Put the shared numbers where the kernels look for them: a fixed peak's own, else the median."""
+        tied, alike = self.tied_positions(), self.tied_widths()
+        if len(tied):
+            number, place = self.numbers()[tied], self.position_u[tied]
+            each = place - np.log10(number) if self.logarithmic else place / number
+            fixed = self.fixed_position[tied]
+            inner[4 * tied[0] + 1] = each[fixed][0] if fixed.any() else np.median(each)
+            if self.position_tie == "ladder":
+                inner[4 * tied[1] + 1] = 0.0
+        if len(alike):
+            width = self.width_u[alike] if self.logarithmic else self.width_u[alike] / self.position_u[alike]
+            fixed = self.fixed_width[alike]
+            inner[4 * alike[0] + 2] = width[fixed][0] if fixed.any() else np.median(width)
 
     def _background_start(self, counts: Floats) -> Floats:
         """Return a start of the background's two numbers from a lower quantile of the ends of the range."""
@@ -219,7 +259,7 @@ class Model:
     def curves(self, inner: Floats) -> Curves:
         """Return the model in counts a bin, and its parts, for parameters of the fit."""
         layout = self.layout()
-        total, slopes, full, _ = kernels.expected_counts(
+        total, slopes, full, _ = line_kernels.expected_counts(
             layout, self.numbers(), self.low, self.high, self.template_counts(), np.ascontiguousarray(inner, float)
         )
         components = np.array([full[4 * peak] * slopes[:, 4 * peak] for peak in range(self.peaks)])
@@ -228,7 +268,7 @@ class Model:
 
     def unpacked(self, inner: Floats) -> Floats:
         """Return area, position, width and extra of every peak, shape (peaks, 4), for parameters of the fit."""
-        _, _, full, _ = kernels.expected_counts(
+        _, _, full, _ = line_kernels.expected_counts(
             self.layout(), self.numbers(), self.low[:1], self.high[:1], np.ones(1), np.ascontiguousarray(inner, float)
         )
         return full[:-2].reshape(self.peaks, 4)

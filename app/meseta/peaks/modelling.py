@@ -37,7 +37,7 @@ def model_of(
     placed = [_on_axis(start, grid, logarithmic) for start in starts]
     position, width = np.array([s.position_u for s in placed]), np.array([s.width_u for s in placed])
     span, step = float(edges[-1] - edges[0]), float(np.diff(edges).min())
-    numbers = np.array([start.multiple or rank + 1.0 for rank, start in enumerate(starts)])
+    tied = np.array([start.tied for start in placed], bool)
     return Model(
         shape=settings.shape,
         background="template" if background == "tunnelling" else background,
@@ -54,9 +54,17 @@ def model_of(
         fixed_width=np.array([s.fixed_width for s in placed], bool),
         position_tie=settings.tie,
         equal_relative_widths=settings.equal_relative_widths,
-        multiples=numbers,
+        multiples=_multiples(placed, tied),
+        tied_position=tied,
+        tied_width=np.array([s.tied_width for s in placed], bool),
         template=rebinned(template[first:last], merge) if len(template) else template,
     )
+
+
+def _multiples(starts: list[Start], tied: npt.NDArray[np.bool_]) -> Floats:
+    """Return which multiple each peak is: as the user says, else 1, 2, 3 ... among those that are tied."""
+    rank = np.cumsum(tied)
+    return np.array([start.multiple or max(float(at), 1.0) for start, at in zip(starts, rank, strict=True)])
 
 
 def is_logarithmic(grid: Grid, settings: PeakSettings) -> bool:

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from meseta.peaks.tabulate import FittedWindow
+from meseta.peaks.stretch import FittedWindow
 from meseta.peaks.windows import Start
 from meseta.segmentation.results import PlateauTable
 

@@ -20,7 +20,7 @@ from meseta.recipe.peaks import PeakSettings
 from meseta.tables import Table
 from meseta.work import Work
 
-__all__ = ["AnalysisSpread", "DefensibleAnalyses", "defensible_analyses"]
+__all__ = ["AnalysisSpread", "DefensibleAnalyses", "PeakAnalyses", "defensible_analyses"]
 
 Floats = npt.NDArray[np.float64]
 Texts = npt.NDArray[np.str_]
@@ -51,6 +51,27 @@ class AnalysisSpread(Table):
 
 
 @dataclass(frozen=True)
+class PeakAnalyses:
+    """One peak under all analyses: what ``figures.analyses_figure`` draws.
+
+    Attributes
+    ----------
+    position_g0, position_low_g0, position_high_g0 : (analyses,) float64
+        NaN where the analysis cannot be defended or has no interval.
+    choices : dict of str to tuple of str
+        Name of a choice -> what each analysis chose.
+    chosen : int
+        Row of the analysis that is reported; -1 where it is not among them.
+    """
+
+    position_g0: Floats
+    position_low_g0: Floats
+    position_high_g0: Floats
+    choices: dict[str, tuple[str, ...]]
+    chosen: int
+
+
+@dataclass(frozen=True)
 class DefensibleAnalyses(Table):
     """One row a peak and analysis.
 
@@ -68,8 +89,33 @@ class DefensibleAnalyses(Table):
     merged_bins: npt.NDArray[np.int64]
     peak: Texts
     position_g0: Floats
+    position_low_g0: Floats
+    position_high_g0: Floats
     defensible: npt.NDArray[np.bool_]
     chosen: npt.NDArray[np.bool_]
+
+    def of_peak(self, peak: str) -> PeakAnalyses:
+        """Return all analyses of one peak as plain arrays, for drawing; not defensible ones have no position."""
+        rows = self.take(self.peak == peak)
+        if not len(rows):
+            raise CallError(
+                f"there is no peak '{peak}'", "all analyses", f"there are {', '.join(dict.fromkeys(self.peak))}"
+            )
+        marked = np.flatnonzero(rows.chosen)
+        kept = rows.defensible
+        return PeakAnalyses(
+            position_g0=np.where(kept, rows.position_g0, np.nan),
+            position_low_g0=np.where(kept, rows.position_low_g0, np.nan),
+            position_high_g0=np.where(kept, rows.position_high_g0, np.nan),
+            choices={
+                "histogram": tuple(map(str, rows.histogram)),
+                "line shape": tuple(str(name).replace("_", " ") for name in rows.shape),
+                "background": tuple(str(name).replace("_", " ") for name in rows.background),
+                "fit range": tuple(f"{factor:g} times" for factor in rows.range_factor),
+                "bin width": tuple(f"{merge} times" for merge in rows.merged_bins),
+            },
+            chosen=int(marked[0]) if len(marked) else -1,
+        )
 
     def spread(self) -> AnalysisSpread:
         """Return the spread of every peak over the defensible analyses."""
@@ -236,6 +282,8 @@ def _table(outcomes: list[list[_Outcome]], chosen: _Choice) -> DefensibleAnalyse
         merged_bins=np.array([row[1].merge for row in rows], np.int64),
         peak=np.array([row[2] for row in rows]),
         position_g0=np.array([row[3] for row in rows], float),
+        position_low_g0=np.full(len(rows), np.nan),
+        position_high_g0=np.full(len(rows), np.nan),
         defensible=np.array([row[4] for row in rows], bool),
         chosen=np.array([row[1] == chosen for row in rows], bool),
     )

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import replace
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -13,7 +13,7 @@ from meseta.peaks.fitting import Fitted, fit_model
 from meseta.peaks.model import Model
 from meseta.peaks.windows import Window, rebinned
 
-__all__ = ["half_spread", "systematic_shifts"]
+__all__ = ["OtherCounts", "Shift", "half_spread", "systematic_shifts"]
 
 Floats = npt.NDArray[np.float64]
 ModelMaker = Callable[[Window, int, int, int, str], Model]
@@ -22,10 +22,44 @@ _MUCH_WORSE = 2.0
 _SMOOTH = ("constant", "linear", "exponential", "power_law")
 
 
+@dataclass(frozen=True)
+class Shift:
+    """By how much the positions of one stretch move on the axis, (peaks,) float64, with another choice."""
+
+    kind: str
+    choice: str
+    moved_u: Floats
+    counted: bool = True
+
+
+@dataclass(frozen=True)
+class OtherCounts:
+    """Counts of the histogram's bins as another choice would have given them, beside those of the choice made.
+
+    Attributes
+    ----------
+    choice : str
+        What was changed ("region whole phase").
+    counts, reference : (bins,) float64
+        Of the same traces, with the other choice and with the one that was made: their difference is no chance.
+    counted : bool
+        Whether it is part of the systematic error, or only shown.
+    """
+
+    choice: str
+    counts: Floats
+    reference: Floats
+    counted: bool = True
+
+
 def systematic_shifts(
-    fitted: Fitted, make: ModelMaker, window: Window, histogram: ConductanceHistogram
-) -> tuple[tuple[str, Floats], ...]:
-    """Return by how much each position moves, on the axis, with bin width, fit range and background.
+    fitted: Fitted,
+    make: ModelMaker,
+    window: Window,
+    histogram: ConductanceHistogram,
+    others: Sequence[OtherCounts] = (),
+) -> tuple[Shift, ...]:
+    """Return by how much each position moves, on the axis, with choices of the fit and of the analysis.
 
     Parameters
     ----------
@@ -35,12 +69,14 @@ def systematic_shifts(
         Makes a model of the window over other bins: (window, first, last, merge, background).
     window : Window
     histogram : ConductanceHistogram
+    others : sequence of OtherCounts
+        What other choices of the analysis would have counted.
 
     Returns
     -------
-    tuple of (str, (peaks,) float64)
-        NaN where the changed fit failed, or another background fits much worse (deviance more than doubled): that
-        choice could not be defended.
+    tuple of Shift
+        Bin width, fit range and background, then the others.  NaN where the changed fit failed, or another background
+        fits much worse (deviance more than doubled): that choice could not be defended.
     """
     first, last = window.first, window.last
     bins, background = last - first, fitted.model.background
@@ -56,7 +92,33 @@ def systematic_shifts(
         for name in _SMOOTH
         if name != background and not (name == "power_law" and not _positive(fitted))
     ]
-    return tuple((name, _moved(fitted, make, window, histogram, *choice)) for name, choice in variants)
+    own = [Shift("fit", name, _moved(fitted, make, window, histogram, *choice)) for name, choice in variants]
+    return (*own, *(_otherwise(fitted, window, other) for other in others))
+
+
+def _otherwise(fitted: Fitted, window: Window, other: OtherCounts) -> Shift:
+    """Return by how much the positions move from the counts as chosen to those of another choice."""
+    inside, peaks = slice(window.first, window.last), fitted.model.peaks
+    unknown = Shift("analysis", other.choice, np.full(peaks, np.nan), other.counted)
+    start = fitted.inner.copy()
+    here, there = other.reference[inside], other.counts[inside]
+    if not here.any() or not there.any() or not fitted.converged:
+        return unknown
+    whole = max(float(fitted.model.curves(fitted.inner).total.sum()), 1e-300)
+    places = []
+    for counts in (here, there):
+        scaled = start.copy()
+        scaled[: 4 * peaks : 4] *= float(counts.sum()) / whole
+        scaled[-2] *= float(counts.sum()) / whole
+        if fitted.model.background == "linear":
+            scaled[-1] *= float(counts.sum()) / whole
+        again = fit_model(fitted.model, counts, start=scaled)
+        if not again.converged:
+            return unknown
+        places.append(again.peaks[:, 1])
+    moved = places[1] - places[0]
+    gone = (places[1] <= fitted.model.range_u[0]) | (places[1] >= fitted.model.range_u[1])
+    return Shift("analysis", other.choice, np.where(gone, np.nan, moved), other.counted)
 
 
 def _positive(fitted: Fitted) -> bool:
@@ -85,8 +147,8 @@ def _moved(
     return moved
 
 
-def half_spread(shifts: tuple[tuple[str, Floats], ...], peaks: int) -> Floats:
-    """Return half the spread of each position over all choices, the chosen one (no shift) among them."""
-    table = np.array([np.zeros(peaks), *[shift for _, shift in shifts]])
+def half_spread(shifts: Sequence[Shift], peaks: int) -> Floats:
+    """Return half the spread of each position over all choices that count, the chosen one (no shift) among them."""
+    table = np.array([np.zeros(peaks), *[shift.moved_u for shift in shifts if shift.counted]])
     spread: Floats = (np.nanmax(table, axis=0) - np.nanmin(table, axis=0)) / 2
     return spread

@@ -47,6 +47,8 @@ class Start:
     fixed: bool = False
     fixed_width: bool = False
     multiple: float | None = None
+    tied: bool = True
+    tied_width: bool = True
 
 
 @dataclass(frozen=True)
@@ -133,6 +135,8 @@ def _asked(peak: PeakStart, grid: Grid) -> Start:
         peak.fixed,
         peak.fixed_width,
         peak.multiple,
+        peak.tied,
+        peak.tied_width,
     )
 
 
@@ -153,11 +157,12 @@ def windows_of(
     logarithmic = grid.axis == "logarithmic"
     low = usable[0] if settings.fit_low_g0 is None else to_axis(settings.fit_low_g0, logarithmic)
     high = usable[1] if settings.fit_high_g0 is None else to_axis(settings.fit_high_g0, logarithmic)
-    together = settings.fit_low_g0 is not None or settings.fit_high_g0 is not None or settings.tie != "none"
+    together = settings.fit_low_g0 is not None or settings.fit_high_g0 is not None
+    bound = _between_tied(starts, settings)
     groups: list[list[Start]] = [[starts[0]]]
-    for start in starts[1:]:
+    for place, start in enumerate(starts[1:]):
         last = groups[-1][-1]
-        if together or start.position_u - last.position_u < _REACH * (start.width_u + last.width_u):
+        if together or bound[place] or start.position_u - last.position_u < _REACH * (start.width_u + last.width_u):
             groups[-1].append(start)
         else:
             groups.append([start])
@@ -174,6 +179,19 @@ def windows_of(
                 top = min(top, (other.position_u + group[-1].position_u) / 2)
         windows.append(Window(*_bins(grid, bottom, top), tuple(group)))
     return windows
+
+
+def _between_tied(starts: Sequence[Start], settings: PeakSettings) -> list[bool]:
+    """Return for each peak but the last whether a tie spans it and its upper neighbour: such are fitted together."""
+    spanned = [False] * max(len(starts) - 1, 0)
+    ties = [
+        [place for place, start in enumerate(starts) if start.tied and settings.tie != "none"],
+        [place for place, start in enumerate(starts) if start.tied_width and settings.equal_relative_widths],
+    ]
+    for places in ties:
+        for place in range(places[0], places[-1]) if places else ():
+            spanned[place] = True
+    return spanned
 
 
 def _bins(grid: Grid, bottom: float, top: float) -> tuple[int, int]:

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from typing import Literal
+import math
+from typing import Literal, Self
 
-from pydantic import BaseModel, ConfigDict
+from pydantic import BaseModel, ConfigDict, Field, model_validator
 
 from meseta.recipe.fields import Section, setting
 
@@ -12,23 +13,38 @@ __all__ = ["PeakSettings", "PeakStart"]
 
 
 class PeakStart(BaseModel):
-    """A peak that the user asks for: a name, and where to begin.
+    """A peak that the user asks for: a name, where to begin, and what is held.
 
     ``position_g0`` and ``width`` (sigma; decades on a logarithmic, G0 on a linear axis) are starting values;
-    ``fixed`` holds the position, ``fixed_width`` the width, ``low_g0`` and ``high_g0`` bound the position, ``multiple``
-    says which multiple a tied peak is (1, 2, 3 ... in their order where none says so).
+    ``fixed`` holds the position, ``fixed_width`` the width, ``low_g0`` and ``high_g0`` bound the position.  ``tied``
+    and ``tied_width`` say whether the peak takes part in the ties of positions and of relative widths, where the
+    section asks for these; ``multiple`` says which multiple a tied peak is (1, 2, 3 ... in their order where none says
+    so).
     """
 
     model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
 
     name: str = ""
-    position_g0: float
-    width: float | None = None
-    low_g0: float | None = None
-    high_g0: float | None = None
+    position_g0: float = Field(gt=0)
+    width: float | None = Field(None, gt=0)
+    low_g0: float | None = Field(None, gt=0)
+    high_g0: float | None = Field(None, gt=0)
     fixed: bool = False
     fixed_width: bool = False
-    multiple: float | None = None
+    multiple: float | None = Field(None, gt=0)
+    tied: bool = True
+    tied_width: bool = True
+
+    @model_validator(mode="after")
+    def _position_within_bounds(self) -> Self:
+        low, high = self.low_g0 or 0.0, self.high_g0 or math.inf
+        if low >= high:
+            raise ValueError(f"low_g0 ({low:g}) must be less than high_g0 ({high:g})")
+        if not low <= self.position_g0 <= high:
+            raise ValueError(f"position_g0 ({self.position_g0:g}) must lie from {low:g} to {high:g}")
+        if self.fixed_width and self.width is None:
+            raise ValueError("fixed_width needs a width")
+        return self
 
 
 class PeakSettings(Section):
@@ -59,10 +75,11 @@ class PeakSettings(Section):
     tie: Literal["none", "multiples", "ladder"] = setting(
         "none",
         "Tie positions",
-        "'multiples': all peaks are multiples of one conductance; 'ladder': the same behind one series resistance.",
+        "'multiples': all tied peaks are multiples of one conductance; 'ladder': the same behind one series "
+        "resistance.",
     )
     equal_relative_widths: bool = setting(
-        False, "Equal relative widths", "All peaks are equally wide relative to their position."
+        False, "Equal relative widths", "All tied peaks are equally wide relative to their position."
     )
     intervals: Literal["percentile", "bca"] = setting(
         "percentile",
