@@ -20,6 +20,7 @@ import numpy as np
 from meseta import histograms, intake, peaks, segmentation, selection
 from meseta.errors import CallError, nearest
 from meseta.histograms import (
+    Comparison,
     ConductanceHistogram,
     CorrelationHistogram,
     CountMatrix,
@@ -37,6 +38,8 @@ __all__ = [
     "STEPS",
     "Analysis",
     "Step",
+    "compare_parts",
+    "compare_recordings",
     "conductance_histogram",
     "correlation_histogram",
     "defensible_analyses",
@@ -253,6 +256,36 @@ def _correlation(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inp
     )
 
 
+def _partner_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> CountMatrix:
+    other = phases_of("opening" if settings.histogram.direction == "closing" else "closing")
+    alignment = intake.align(traces, settings.alignment, other)
+    return histograms.count_traces(traces, settings.histogram, inputs["noise"], alignment, other)
+
+
+def _partners(parts: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, __: Work) -> Any:
+    counts = histograms.with_bins(CountMatrix.joined(list(parts)), settings.histogram, inputs["noise"])
+    row = histograms.partner_rows(traces.table, counts.used)
+    return histograms.Partners(counts, row, settings.histogram.direction)
+
+
+def _opening_closing(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
+    return histograms.opening_closing_correlation(
+        inputs["counts"],
+        inputs["partners"],
+        inputs["selection"].kept,
+        settings.correlation,
+        inputs["noise"],
+        settings.resampling.seed,
+        work,
+    )
+
+
+def _shifted(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> Any:
+    return histograms.shifted_correlations(
+        inputs["counts"], inputs["selection"].kept, settings.correlation, inputs["noise"]
+    )
+
+
 def _temporal(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> Any:
     return histograms.temporal_histogram(inputs["counts"], inputs["selection"].kept, settings.temporal)
 
@@ -368,6 +401,31 @@ STEPS: Mapping[str, Step] = {
             ("counts", "selection", "noise"),
             ("correlation", "resampling.seed"),
             _correlation,
+        ),
+        Step(
+            "partners",
+            "counting the other direction",
+            1,
+            ("noise",),
+            tuple(dict.fromkeys(("alignment", *_STORED, *_BINS))),
+            _partners,
+            _partner_block,
+        ),
+        Step(
+            "opening_closing",
+            "correlating opening with closing",
+            1,
+            ("counts", "partners", "selection", "noise"),
+            ("correlation", "resampling.seed"),
+            _opening_closing,
+        ),
+        Step(
+            "shifted_correlation",
+            "comparing traces with later ones",
+            1,
+            ("counts", "selection", "noise"),
+            ("correlation",),
+            _shifted,
         ),
         Step("temporal_histogram", "following the record", 1, ("counts", "selection"), ("temporal",), _temporal),
         Step("record_memory", "looking for memory", 1, ("counts", "selection"), (), _record_memory),
@@ -627,6 +685,67 @@ def fit_peaks(
         fit: peaks.PeakFit = Analysis(histogram, recipe).result("peaks", work)
         return fit.table
     return peaks.fit_histogram(histogram, recipe.peaks, None, None, None, work or Work()).table
+
+
+def compare_parts(
+    analysis: Analysis, masks: str | Mapping[str, Any] = "selection", work: Work | None = None
+) -> Comparison:
+    """Put parts of one recording on one axis, each with its band.
+
+    Parameters
+    ----------
+    analysis : Analysis
+    masks : str or mapping of str to (traces,) bool
+        "selection": the kept traces and the others of the same direction; "group": groups of traces; the name of a
+        column of the trace table ("specimen", "session", "molecule" ...): its values; or the parts themselves, by name
+        (kept traces and :data:`~meseta.selection` masks; nothing is taken off them).
+
+    Returns
+    -------
+    meseta.histograms.Comparison
+        ``comparison.difference(0, 1)`` is the difference of two parts with its band.
+    """
+    work = work or Work()
+    counts, selection, table = analysis.result("counts", work), analysis.selection(work), analysis.traces.table
+    if isinstance(masks, str):
+        masks = _named_masks(masks, selection, counts.used, table)
+    settings = analysis.recipe.histogram
+    members, shared = histograms.members_of(counts, masks, table, settings, analysis.recipe.resampling, work)
+    return histograms.compared(members, settings, shared)
+
+
+def _named_masks(name: str, selection: Selection, used: Any, table: Mapping[str, Any]) -> dict[str, Any]:
+    if name == "selection":
+        return {"kept": selection.kept & used, "not kept": ~selection.kept & used}
+    if name == "group":
+        return histograms.parts_by(selection.group, selection.kept & used)
+    if name not in table:
+        raise CallError(f"the trace table has no column '{name}'", "comparison", nearest(name, table))
+    return histograms.parts_by(table[name], selection.kept & used)
+
+
+def compare_recordings(analyses: Mapping[str, Analysis], work: Work | None = None) -> Comparison:
+    """Put several recordings on one axis, each with its own selection and band.
+
+    Parameters
+    ----------
+    analyses : mapping of str to Analysis
+        By the name that the comparison shows.  The first one's normalisation is used for all; bins must have the same
+        width.
+
+    Returns
+    -------
+    meseta.histograms.Comparison
+    """
+    work = work or Work()
+    members = [
+        histograms.Member(name, one.result("counts", work), one.selection(work).kept, one.result("resampling", work))
+        for name, one in analyses.items()
+    ]
+    if not members:
+        raise CallError("there is nothing to compare", "comparison", "give at least one recording")
+    first = next(iter(analyses.values()))
+    return histograms.compared(members, first.recipe.histogram)
 
 
 def defensible_analyses(analysis: Analysis, work: Work | None = None) -> peaks.DefensibleAnalyses:

@@ -1,15 +1,47 @@
-"""Count matrix, 1D, 2D, correlation, temporal and length histograms, comparisons, resampling."""
+"""Count matrix, 1D, 2D, correlation, temporal and length histograms, comparisons, resampling.
+
+Most results are steps of the analysis (``Analysis.result(name)``, see ``meseta.analysis.STEPS``).  What depends on a
+question of the moment is a function here, given results of the analysis:
+
+=============================  ========================================================================================
+question                       function
+=============================  ========================================================================================
+a pair of bins                 :func:`pair_histograms` (from a map's :meth:`CorrelationHistogram.bins_at` and
+                               :meth:`~CorrelationHistogram.range_g0`)
+traces that satisfy something  :func:`conditional_histogram`
+parts, or recordings           ``meseta.analysis.compare_parts``, ``compare_recordings``; then
+                               :meth:`Comparison.difference`
+a later trace                  :func:`shifted_map`
+molecule and blank             :func:`molecular_yield`
+=============================  ========================================================================================
+"""
 
 from meseta.histograms.advice import bin_notes, proposed_width
-from meseta.histograms.comparison import Difference, Yield, difference, hits_in_window, molecular_yield
-from meseta.histograms.conditional import ConditionalHistogram, conditional_histogram, passes_more_than_usual
+from meseta.histograms.comparison import (
+    Comparison,
+    Difference,
+    Member,
+    Part,
+    compared,
+    difference,
+    members_of,
+    parts_by,
+)
+from meseta.histograms.conditional import (
+    ConditionalHistogram,
+    PairHistograms,
+    conditional_histogram,
+    pair_histograms,
+    passes_more_than_usual,
+)
 from meseta.histograms.correlation import correlation_histogram
 from meseta.histograms.counting import count_traces, with_bins
 from meseta.histograms.displacement import displacement_counts, displacement_edges, displacement_of_selection
 from meseta.histograms.distribution import conductance_histogram
 from meseta.histograms.lengths import LengthHistogram, Spacing, Survival, plateau_lengths, spacing_of
+from meseta.histograms.pairing import Partners, opening_closing_correlation, partner_rows
 from meseta.histograms.plateaus import plateau_histogram
-from meseta.histograms.resampling import resample
+from meseta.histograms.resampling import resample, restricted
 from meseta.histograms.results import (
     EXCLUDED,
     ConductanceHistogram,
@@ -21,6 +53,7 @@ from meseta.histograms.results import (
     Resampling,
     Ridge,
 )
+from meseta.histograms.shifted import Decay, ShiftedCorrelation, shifted_correlations, shifted_map
 from meseta.histograms.temporal import (
     Drift,
     RecordMemory,
@@ -30,27 +63,36 @@ from meseta.histograms.temporal import (
     shifted_correlation,
     temporal_histogram,
 )
+from meseta.histograms.yields import Yield, hits_in_window, molecular_yield
 
 __all__ = [
     "EXCLUDED",
+    "Comparison",
     "ConditionalHistogram",
     "ConductanceHistogram",
     "CorrelationHistogram",
     "CountMatrix",
+    "Decay",
     "Difference",
     "DisplacementHistogram",
     "Drift",
     "Grid",
     "HistogramTable",
     "LengthHistogram",
+    "Member",
+    "PairHistograms",
+    "Part",
+    "Partners",
     "RecordMemory",
     "Resampling",
     "Ridge",
+    "ShiftedCorrelation",
     "Spacing",
     "Survival",
     "TemporalHistogram",
     "Yield",
     "bin_notes",
+    "compared",
     "conditional_histogram",
     "conductance_histogram",
     "correlation_histogram",
@@ -61,14 +103,22 @@ __all__ = [
     "displacement_of_selection",
     "drift_of",
     "hits_in_window",
+    "members_of",
     "molecular_yield",
+    "opening_closing_correlation",
+    "pair_histograms",
+    "partner_rows",
+    "parts_by",
     "passes_more_than_usual",
     "plateau_histogram",
     "plateau_lengths",
     "proposed_width",
     "record_memory",
     "resample",
+    "restricted",
     "shifted_correlation",
+    "shifted_correlations",
+    "shifted_map",
     "spacing_of",
     "temporal_histogram",
     "with_bins",

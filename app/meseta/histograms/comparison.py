@@ -1,18 +1,23 @@
-"""Comparisons: recordings on one axis, molecule minus blank, molecular yield, false discoveries, upper limits."""
+"""Comparisons: recordings or parts of one on a common axis, and their differences (molecule minus blank, say)."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import CallError
-from meseta.histograms.memory import autocovariance, long_run, without_line
-from meseta.histograms.results import ConductanceHistogram, Grid, Resampling
-from meseta.segmentation.results import PlateauTable
+from meseta.histograms.distribution import conductance_histogram
+from meseta.histograms.resampling import resample, restricted
+from meseta.histograms.results import ConductanceHistogram, CountMatrix, Grid, Resampling
+from meseta.recipe.histogram import HistogramSettings
+from meseta.recipe.resampling import ResamplingSettings
+from meseta.work import Work
 
-__all__ = ["Difference", "Yield", "difference", "hits_in_window", "molecular_yield", "share_interval"]
+__all__ = ["Comparison", "Difference", "Member", "Part", "compared", "difference", "members_of", "parts_by"]
 
 Floats = npt.NDArray[np.float64]
 Truths = npt.NDArray[np.bool_]
@@ -49,6 +54,7 @@ def difference(
     second: tuple[ConductanceHistogram, Resampling],
     scale: float | None = 1.0,
     fit_range_g0: tuple[float, float] | None = None,
+    shared_draws: bool = False,
 ) -> Difference:
     """Subtract one recording's histogram from another's, both per trace, with a band from resampling both.
 
@@ -60,6 +66,9 @@ def difference(
         Factor of the second; None fits it.
     fit_range_g0 : (low, high), optional
         Where the two must agree when the scale is fitted (a range without molecular signal).
+    shared_draws : bool
+        Whether both histograms come from the same draws (parts of one recording, :func:`restricted`): replicates are
+        then taken pair by pair, so that what moves both is in the band as what it is.
 
     Raises
     ------
@@ -68,8 +77,8 @@ def difference(
 
     Notes
     -----
-    The scale is the ratio of the two lengths (or counts) a trace within the range.  Replicates of the two recordings
-    are independent, so their deviations are paired at random by their order.
+    The scale is the ratio of the two lengths (or counts) a trace within the range.  Replicates of two recordings are
+    independent, and are paired at random.
     """
     (a, drawn_a), (b, drawn_b) = first, second
     if not np.array_equal(a.edges_g0, b.edges_g0) or a.density_unit != b.density_unit:
@@ -82,7 +91,9 @@ def difference(
         raise CallError("fitting the scale of the blank needs a range", "comparison", "give fit_range_g0")
     one, other = _replicates(a, drawn_a), _replicates(b, drawn_b)
     number = min(len(one), len(other))
-    one, other = one[:number], other[:number]
+    # two recordings of equal length and seed have the same draws: a common drift must not cancel in the band
+    order = np.arange(number) if shared_draws else np.random.default_rng(number).permutation(number)
+    one, other = one[:number], other[:number][order]
     if scale is None and fit_range_g0 is not None:
         near = (a.edges_g0[:-1] >= fit_range_g0[0]) & (a.edges_g0[1:] <= fit_range_g0[1])
         factor = float(_ratio(a.density, b.density, near, a.grid.widths))
@@ -111,133 +122,171 @@ def _ratio(a: Floats, b: Floats, near: Truths, widths: Floats) -> Floats:
     return result
 
 
+# -- several on one axis ----------------------------------------------------------------------------------------------
+
+
 @dataclass(frozen=True)
-class Yield:
-    """Share of traces with a molecule.
+class Member:
+    """What is to be compared: a recording, or a part of one.
 
     Attributes
     ----------
-    share, share_low, share_high : float
-        (p - q) / (1 - q): p the share of traces with a plateau in the window, q the same in the blank; 95 %.
-    upper_limit : float
-        One-sided 95 % upper limit; what to quote where nothing is found.
-    found : bool
-        Whether the interval excludes zero.
-    false_discovery, false_discovery_high : float
-        Share of the plateaus found that the blank would have shown as well, and its 95 % upper limit.
-    hits, traces, blank_hits, blank_traces : int
-    effective_traces, blank_effective_traces : float
-        Independent traces that the recordings are worth for this question.
-    text : str
+    name : str
+    counts : CountMatrix
+    kept : (traces,) bool
+    resampling : Resampling
+        Of the same kept traces.
     """
 
-    share: float
-    share_low: float
-    share_high: float
-    upper_limit: float
-    found: bool
-    false_discovery: float
-    false_discovery_high: float
-    hits: int
-    traces: int
-    blank_hits: int
-    blank_traces: int
-    effective_traces: float
-    blank_effective_traces: float
-    text: str
+    name: str
+    counts: CountMatrix
+    kept: Truths
+    resampling: Resampling
 
 
-def share_interval(hits: float, traces: float, level: float = 0.95) -> tuple[float, float]:
-    """Return Wilson's score interval of a share; ``traces`` may be an effective number.
+@dataclass(frozen=True)
+class Part:
+    """One histogram of a comparison, with the draws behind its band."""
 
-    Notes
-    -----
-    Wilson, J. Am. Stat. Assoc. 22, 209 (1927).  0 and 1 are in it where no or all traces are hits.
+    name: str
+    histogram: ConductanceHistogram
+    resampling: Resampling
+
+
+@dataclass(frozen=True)
+class Comparison:
+    """Histograms on one axis with one normalisation.
+
+    Attributes
+    ----------
+    grid : Grid
+        Bins that all of them have.
+    density_unit : str
+    parts : tuple of Part
+        In the order given.
+    shared_draws : bool
+        Whether the parts come from the same draws of traces (parts of one recording).
+    notes : tuple of str
+        What had to be done to make them comparable.
     """
-    from scipy import special
 
-    if traces <= 0:
-        return 0.0, 1.0
-    z = float(special.ndtri((1 + level) / 2))
-    p = hits / traces
-    middle = (p + z**2 / (2 * traces)) / (1 + z**2 / traces)
-    reach = z / (1 + z**2 / traces) * np.sqrt(p * (1 - p) / traces + z**2 / (4 * traces**2))
-    return max(0.0, float(middle - reach)) if hits > 0 else 0.0, min(1.0, float(middle + reach)) if p < 1 else 1.0
+    grid: Grid
+    density_unit: str
+    parts: tuple[Part, ...]
+    shared_draws: bool
+    notes: tuple[str, ...] = ()
+
+    def difference(
+        self,
+        first: int,
+        second: int,
+        scale: float | None = 1.0,
+        fit_range_g0: tuple[float, float] | None = None,
+    ) -> Difference:
+        """Return part ``first`` minus ``scale`` times part ``second`` with its band; see :func:`difference`."""
+        a, b = self.parts[first], self.parts[second]
+        return difference(
+            (a.histogram, a.resampling), (b.histogram, b.resampling), scale, fit_range_g0, self.shared_draws
+        )
 
 
-def molecular_yield(hit: Truths, blank_hit: Truths | None = None) -> Yield:
-    """Return the share of traces with a molecule, from plateaus in a window in the recording and in its blank.
+def compared(members: Sequence[Member], settings: HistogramSettings, shared_draws: bool = False) -> Comparison:
+    """Put histograms on one axis with one normalisation.
 
     Parameters
     ----------
-    hit, blank_hit : (traces,) bool
-        Kept traces in the order of the record: whether each has a plateau in the window.  Without a blank q is 0 and
-        unknown: nothing is subtracted, and the text says so.
+    members : sequence of Member
+        On bins of the same width; bins that not all have (another floor) become under or over.
+    settings : HistogramSettings
+        Normalisation; where the displacement of any is unknown, samples are counted in all.
+    shared_draws : bool
+        Whether the members' draws are the same.
 
-    Notes
-    -----
-    A trace shows a plateau with probability p = y + (1 - y) q, so 1 - y is the ratio of two shares without plateau.
-    Its interval combines Wilson intervals of both by the method of variance recovery for ratios, Donner and Zou, Stat.
-    Methods Med. Res. 21, 347 (2012).  Both use the number of independent traces that the record is worth, from its
-    memory.  The finder's own misses are not in it (see ``meseta expect``).
+    Raises
+    ------
+    CallError
+        Where there is nothing to compare, or bins differ in axis or width.
     """
-    blank = np.zeros(0, bool) if blank_hit is None else blank_hit
-    worth, blank_worth = _effective(hit), _effective(blank)
-    p = float(hit.mean()) if len(hit) else np.nan
-    q = float(blank.mean()) if len(blank) else 0.0
-    low, high = _yield_interval(p, worth, q, blank_worth, 0.95)
-    upper = _yield_interval(p, worth, q, blank_worth, 0.90)[1]
-    share = (p - q) / (1 - q) if q < 1 else np.nan
-    q_high = share_interval(q * blank_worth, blank_worth)[1] if len(blank) else np.nan
-    false, false_high = (_false(share, q, p), _false(max(low, 0.0), q_high, p)) if len(blank) else (np.nan, np.nan)
-    found = low > 0
-    return Yield(
-        share, low, high, upper, found, false, false_high, int(hit.sum()), len(hit), int(blank.sum()), len(blank),
-        worth, blank_worth, _yield_text(share, low, high, upper, found, len(blank) > 0),
-    )  # fmt: skip
+    if not members:
+        raise CallError("there is nothing to compare", "comparison", "give at least one recording or part")
+    notes = []
+    lengths = [np.isfinite(one.counts.nm_a_sample[one.kept & one.counts.used]).all() for one in members]
+    if settings.normalisation == "nm_per_trace" and not all(lengths):
+        settings = settings.model_copy(update={"normalisation": "counts_per_trace"})
+        if any(lengths):
+            notes.append("displacement is not known everywhere: samples are counted instead of nm")
+    edges = [one.counts.shown.edges_g0 for one in members]
+    low, high = max(each[0] for each in edges), min(each[-1] for each in edges)
+    parts = tuple(_part(one, low, high, settings) for one in members)
+    grid = parts[0].histogram.grid
+    if any(not np.array_equal(part.histogram.edges_g0, grid.edges_g0) for part in parts):
+        raise CallError("the bins differ", "comparison", "use the same axis and width of bins for all")
+    if any(len(each) != len(grid.edges_g0) for each in edges):
+        notes.append(f"compared from {low:.3g} to {high:.3g} G0, where all have bins")
+    return Comparison(grid, parts[0].histogram.density_unit, parts, shared_draws, tuple(notes))
 
 
-def _yield_interval(p: float, worth: float, q: float, blank_worth: float, level: float) -> tuple[float, float]:
-    """Return the interval of 1 - (1 - p)/(1 - q)."""
-    top, bottom = 1 - p, 1 - q
-    top_high, top_low = (1 - end for end in share_interval(p * worth, worth, level))
-    if blank_worth <= 0:
-        return 1 - top_high, 1 - top_low
-    bottom_high, bottom_low = (1 - end for end in share_interval(q * blank_worth, blank_worth, level))
-    if bottom <= 0:
-        return np.nan, np.nan
-    product = top * bottom
-    low_root = product**2 - top_low * bottom_high * (2 * top - top_low) * (2 * bottom - bottom_high)
-    high_root = product**2 - top_high * bottom_low * (2 * top - top_high) * (2 * bottom - bottom_low)
-    ratio_low = (product - np.sqrt(max(low_root, 0.0))) / (bottom_high * (2 * bottom - bottom_high))
-    ratio_high = (product + np.sqrt(max(high_root, 0.0))) / (bottom_low * (2 * bottom - bottom_low))
-    return float(1 - ratio_high), float(1 - ratio_low)
+def _part(member: Member, low_g0: float, high_g0: float, settings: HistogramSettings) -> Part:
+    """Return a member's histogram on those of its bins that lie between two edges."""
+    edges, merge = member.counts.shown.edges_g0, member.counts.merge
+    first, last = int(np.searchsorted(edges, low_g0)), int(np.searchsorted(edges, high_g0, side="right")) - 1
+    if last <= first:
+        raise CallError(
+            f"'{member.name}' has no bins where the others have theirs",
+            "comparison",
+            "set histogram.low_g0 and high_g0",
+        )
+    # the last bins of a matrix may be no whole bin of the histogram
+    counts = member.counts.trimmed(first * merge, last * merge, merge)
+    drawn = replace(member.resampling, counts=member.resampling.counts[:, first:last])
+    return Part(member.name, conductance_histogram(counts, member.kept, settings, drawn), drawn)
 
 
-def _false(share: float, q: float, p: float) -> float:
-    """Return the share of hits that are not molecules, q (1 - y) / p."""
-    return float(min(1.0, q * (1 - max(share, 0.0)) / p)) if p > 0 else np.nan
+def parts_by(labels: npt.NDArray[Any], kept: Truths) -> dict[str, Truths]:
+    """Return the kept traces by label, (traces,) bool each, in the order of first appearance.
+
+    A label may hold several names joined by ";" (groups): the trace is then in each.  Traces without a label are left
+    out.
+    """
+    words = np.asarray(labels).astype(np.str_)
+    found: dict[str, Truths] = {}
+    for word in dict.fromkeys(words[kept].tolist()):
+        for name in filter(None, word.split(";")):
+            found.setdefault(name, np.zeros(len(words), bool))
+            found[name] |= kept & (words == word)
+    return found
 
 
-def _effective(hit: Truths) -> float:
-    """Return how many independent traces a series of hits is worth."""
-    traces = len(hit)
-    if traces < 20 or hit.all() or not hit.any():
-        return float(traces)
-    covariance = autocovariance(without_line(hit.astype(np.float64)[:, None]))[:, 0]
-    total, _, stands_out = long_run(covariance, traces)
-    return float(traces / max(1.0, total / covariance[0])) if stands_out else float(traces)
+def members_of(
+    counts: CountMatrix,
+    masks: Mapping[str, Truths],
+    trace_table: Mapping[str, npt.NDArray[Any]],
+    settings: HistogramSettings,
+    resampling: ResamplingSettings,
+    work: Work,
+) -> tuple[list[Member], bool]:
+    """Return parts of one recording with their draws, and whether the draws are shared.
 
+    Parts of the same specimens see the same draws, so that what moves them together is told from what sets them
+    apart.  Parts that share no specimen (specimens compared with one another, say) are drawn each on its own.
 
-def _yield_text(share: float, low: float, high: float, upper: float, found: bool, blank: bool) -> str:
-    if not found:
-        return f"no molecules found; at most {100 * max(upper, 0):.2g} % of traces (95 %)"
-    text = f"molecules in {100 * share:.3g} % of traces ({100 * low:.3g} to {100 * high:.3g} %)"
-    return text if blank else f"{text}; no blank: false plateaus are not taken off"
-
-
-def hits_in_window(plateaus: PlateauTable, traces: int, window_g0: tuple[float, float]) -> Truths:
-    """Return (traces,) bool: which traces have at least one plateau whose conductance lies in the window."""
-    result = np.zeros(traces, bool)
-    result[plateaus.trace[(plateaus.level_g0 >= window_g0[0]) & (plateaus.level_g0 < window_g0[1])]] = True
-    return result
+    Parameters
+    ----------
+    counts : CountMatrix
+    masks : mapping of str to (traces,) bool
+    trace_table : mapping of str to (traces,) array
+    settings : HistogramSettings
+    resampling : ResamplingSettings
+    work : Work
+    """
+    masks = {name: mask & counts.used for name, mask in masks.items()}
+    specimens = [set(np.unique(trace_table["specimen"][mask]).tolist()) for mask in masks.values()]
+    apart = len(masks) > 1 and all(not one & other for at, one in enumerate(specimens) for other in specimens[:at])
+    if apart:
+        return [
+            Member(name, counts, mask, resample(counts, mask, trace_table, settings, resampling, work))
+            for name, mask in masks.items()
+        ], False
+    anyone = np.logical_or.reduce(list(masks.values())) if masks else np.zeros(len(counts.used), bool)
+    drawn = resample(counts, anyone, trace_table, settings, resampling, work)
+    return [Member(name, counts, mask, restricted(drawn, counts, mask, work)) for name, mask in masks.items()], True

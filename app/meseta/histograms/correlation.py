@@ -12,13 +12,22 @@ from meseta.recipe.histogram import CorrelationSettings
 from meseta.segmentation.results import NoiseModel
 from meseta.work import Work
 
-__all__ = ["correlation_counts", "correlation_histogram", "correlation_of", "largest_by_chance", "products"]
+__all__ = [
+    "WEAK_TRACES",
+    "block_traces",
+    "correlation_counts",
+    "correlation_histogram",
+    "correlation_of",
+    "largest_by_chance",
+    "products",
+]
 
 Floats = npt.NDArray[np.float64]
 _CHUNK = 2048
 _EXACT_FLOAT32 = 1 << 23
 """Half of where float32 stops to be exact, because the test itself is rounded."""
-_WEAK_TRACES = 20
+WEAK_TRACES = 20
+"""Bins that fewer traces reach take no part in the significance."""
 _BLOCK_TRACES = 100
 _ABOVE_FLOOR_SIGMA = 6.0
 
@@ -72,6 +81,11 @@ def products(values: npt.NDArray[np.number]) -> Floats:
     return total
 
 
+def block_traces(traces: int) -> int:
+    """Return within how many consecutive traces counts are permuted."""
+    return max(2, min(_BLOCK_TRACES, traces))
+
+
 def correlation_counts(
     counts: CountMatrix, kept: npt.NDArray[np.bool_], settings: CorrelationSettings, noise: NoiseModel
 ) -> CountMatrix:
@@ -112,8 +126,8 @@ def correlation_histogram(
     values = np.empty((len(chosen.counts), chosen.shown.bins))
     kernels.merge_rows(chosen.counts, np.arange(len(chosen.counts)), chosen.merge, values)
     traces = len(values)
-    weak = (values > 0).sum(0) < _WEAK_TRACES
-    block = max(2, min(_BLOCK_TRACES, traces))
+    weak = (values > 0).sum(0) < WEAK_TRACES
+    block = block_traces(traces)
     largest = largest_by_chance(values[:, ~weak], block, settings.permutations, seed, work)
     return CorrelationHistogram(
         grid=chosen.shown,

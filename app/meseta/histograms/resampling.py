@@ -21,7 +21,7 @@ be missing, times the ratio of the t quantile to the normal one.  Coverage is me
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -34,7 +34,7 @@ from meseta.recipe.histogram import HistogramSettings
 from meseta.recipe.resampling import ResamplingSettings
 from meseta.work import Work
 
-__all__ = ["FEWEST_SPECIMENS", "block_traces_for", "replicate_counts", "resample", "t_factor"]
+__all__ = ["FEWEST_SPECIMENS", "block_traces_for", "replicate_counts", "resample", "restricted", "t_factor"]
 
 Integers = npt.NDArray[np.int64]
 Weights = npt.NDArray[np.uint16]
@@ -94,6 +94,32 @@ def resample(
         degrees=plan.degrees,
         specimens=plan.groups,
         held_fixed=plan.held_fixed,
+    )
+
+
+def restricted(drawn: Resampling, counts: CountMatrix, chosen: npt.NDArray[np.bool_], work: Work) -> Resampling:
+    """Return the same draws as some of the traces see them, so that parts of a recording can be compared.
+
+    Parameters
+    ----------
+    drawn : Resampling
+    counts : CountMatrix
+        What it was drawn for.
+    chosen : (traces,) bool
+        Traces that were not drawn from are left out.
+    work : Work
+    """
+    mine = chosen[drawn.rows]
+    if mine.all():
+        return drawn
+    rows, weights = drawn.rows[mine], drawn.weights[:, mine]
+    share = len(rows) / max(len(drawn.rows), 1)
+    return replace(
+        drawn,
+        rows=rows,
+        weights=weights,
+        effective_traces=drawn.effective_traces * share,
+        counts=replicate_counts(counts, rows, weights, work),
     )
 
 

@@ -193,6 +193,17 @@ class Resampling:
     specimens: int = 0
     held_fixed: str = ""
 
+    def statement(self) -> str:
+        """Say how many independent traces the kept ones are worth, why, and what would halve the error."""
+        traces, worth = len(self.rows), round(self.effective_traces)
+        if traces == 0:
+            return "no trace is kept"
+        as_many = "as much as" if worth == traces else "worth"
+        return (
+            f"{traces:,} traces are {as_many} {worth:,} independent ones ({self.reason}); "
+            f"half the error needs {self.to_halve_error()}"
+        )
+
     def to_halve_error(self) -> str:
         """Say how much more would have to be measured for half the statistical error."""
         if self.specimens:
@@ -432,6 +443,12 @@ class CorrelationHistogram:
     permutations : int
     block_traces : int
         Traces within which counts were permuted.
+    first_axis, second_axis : str
+        Where the two axes show different things, what they show ("opening", "closing"; a shift); else empty.
+    weak_second : (bins,) bool
+        Weak bins of the second axis where it differs from the first; else empty.
+    note : str
+        What a reader should know; empty where there is nothing.
     """
 
     grid: Grid
@@ -441,12 +458,32 @@ class CorrelationHistogram:
     weak: npt.NDArray[np.bool_] = field(default_factory=lambda: np.zeros(0, bool))
     permutations: int = 0
     block_traces: int = 0
+    first_axis: str = ""
+    second_axis: str = ""
+    weak_second: npt.NDArray[np.bool_] = field(default_factory=lambda: np.zeros(0, bool))
+    note: str = ""
+
+    @property
+    def crossed(self) -> bool:
+        """Whether the two axes show different things, so that the map is not symmetric."""
+        return bool(self.first_axis or self.second_axis)
+
+    def bins_at(self, first_g0: float, second_g0: float) -> tuple[int, int] | None:
+        """Return the bins that hold two conductances in G0; None where one lies outside the map."""
+        found = [int(np.searchsorted(self.grid.edges_g0, at, side="right")) - 1 for at in (first_g0, second_g0)]
+        return (found[0], found[1]) if all(0 <= at < self.grid.bins for at in found) else None
+
+    def range_g0(self, place: int) -> tuple[float, float]:
+        """Return the ends of a bin in G0."""
+        return float(self.grid.edges_g0[place]), float(self.grid.edges_g0[place + 1])
 
     @property
     def significant(self) -> npt.NDArray[np.bool_]:
         """(bins, bins) where the correlation of two different bins exceeds what chance makes anywhere in the map."""
         strong = np.abs(np.nan_to_num(self.correlation)) > self.threshold
+        second = self.weak_second if len(self.weak_second) else self.weak
         if len(self.weak):
-            strong &= ~(self.weak | self.weak[:, None])
-        np.fill_diagonal(strong, False)
+            strong &= ~(second | self.weak[:, None])
+        if not self.crossed:
+            np.fill_diagonal(strong, False)
         return strong
