@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property, partial
+from itertools import pairwise
 from typing import Any, Final
 
 import numpy as np
@@ -235,16 +236,23 @@ class Part:
 
     def _relative_of(self, low: int, high: int) -> npt.NDArray[np.float32]:
         values = self.gathered(lambda a, b: self.axis.values(self.recording, a, b), low, high)
-        rows = np.searchsorted(self.offsets, np.arange(low, high), side="right") - 1
-        return (values - self.drive_start[rows]).astype(np.float32)
+        first, last = np.searchsorted(self.offsets, [low, high - 1], side="right") - 1
+        bounds = np.clip(self.offsets[first : last + 2], low, high)
+        return (values - np.repeat(self.drive_start[first : last + 1], np.diff(bounds))).astype(np.float32)
 
     def nan_samples(self) -> int:
         """Return how many samples have no conductance."""
-        step = 4 * BLOCK_SAMPLES
-        return sum(
-            int(np.isnan(self.conductance[at : min(at + step, self.samples)]).sum())
-            for at in range(0, self.samples, step)
-        )
+        return self._count(self.conductance, lambda values: np.isnan(values))
+
+    def share_of(self, bit: int) -> float:
+        """Return the share of all samples that have a bit of :class:`meseta.traces.Quality`."""
+        if self.quality is None or not self.samples:
+            return 0.0
+        return self._count(self.quality, lambda bits: bits & bit > 0) / self.samples
+
+    def _count(self, row: Any, has: Callable[[npt.NDArray[Any]], npt.NDArray[np.bool_]]) -> int:
+        edges = [*range(0, self.samples, BLOCK_SAMPLES), self.samples]
+        return sum(int(np.count_nonzero(has(row[low:high]))) for low, high in pairwise(edges))
 
     def settle_directions(self) -> None:
         """Give every trace without a stated direction one: closing where its conductance rises from end to end."""

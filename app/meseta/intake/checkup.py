@@ -23,6 +23,8 @@ __all__ = ["Finding", "check_up"]
 
 Floats = npt.NDArray[np.float64]
 LEAST_SAMPLES: Final = 200
+MOST_SAMPLES: Final = 2_000_000
+"""About so many samples of openings are looked at, so that a long recording takes no more memory than a short one."""
 PEAK_SEARCH: Final = (-2.6, 2.6)
 FACTORS: Final = {0.01: "100", 0.1: "10", 0.5: "2", 2.0: "2", 10.0: "10", 100.0: "100"}
 SINGLE_ATOM_G0: Final = (0.7, 2.6)
@@ -61,8 +63,10 @@ def check_up(part: Part, alignment: AlignmentSettings) -> tuple[tuple[Finding, .
     alignment : AlignmentSettings
     """
     rows = np.flatnonzero(np.array(part.cut.direction) == "opening")
-    chosen = rows[np.linspace(0, len(rows) - 1, min(len(rows), 200)).astype(int)] if len(rows) else rows
-    spans = _pulls(part, chosen)
+    usual = float(np.median(np.diff(part.offsets))) if part.traces else 1.0
+    most = int(np.clip(MOST_SAMPLES / max(usual, 1.0), 20, 200))
+    chosen = rows[np.linspace(0, len(rows) - 1, min(len(rows), most)).astype(int)] if len(rows) else rows
+    spans = [(start, min(stop, start + MOST_SAMPLES)) for start, stop in _pulls(part, chosen)]
     values = [_trusted(part, a, b) for a, b in spans if b > a]
     if sum(len(one) for one in values) < LEAST_SAMPLES:
         return (), None
@@ -107,7 +111,7 @@ def _full_scale(part: Part) -> Finding | None:
     if part.calibration.kind not in ("linear", "logarithmic"):
         return None
     if part.quality is not None:
-        share = float(np.mean(part.quality & 1 > 0))
+        share = part.share_of(Quality.SATURATED)
         return Finding("full scale", True, f"{share:.2%} of the samples are saturated and marked")
     stored = np.asarray(part.recording.stored(part.calibration.channel, 0, min(part.recording.samples, 2_000_000)))
     if len(stored) == 0:

@@ -22,6 +22,8 @@ from meseta.work import Work
 __all__ = ["ChannelDescription", "Description", "describe", "describe_recording"]
 
 SHOWN_ENTRIES = 24
+LOADED_SAMPLES = 4_000_000
+"""Larger recordings are looked at where they lie."""
 
 
 @dataclass(frozen=True)
@@ -186,7 +188,7 @@ def _with(base: Description, **changes: Any) -> Description:
 
 
 def _read(base: Description, part: Part, recipe: Recipe, work: Work) -> Description:
-    part.load(work)
+    part = part.stream(work) if part.samples > LOADED_SAMPLES else part.load(work)
     part.settle_directions()
     notes = part.notes()
     findings, proposed = check_up(part, recipe.alignment)
