@@ -12,13 +12,13 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import InputError
-from meseta.intake.calibrate import Calibration, calibration_of, plain_constants
+from meseta.intake.calibrate import Calibration
+from meseta.intake.constants import calibration_of, plain_constants
 from meseta.intake.cutting import PULL, PUSH, Cut, cut
 from meseta.intake.drive import DriveAxis, drive_of, sample_interval
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.roles import settle_roles, unmatched
 from meseta.intake.rows import BLOCK_SAMPLES, RawSpans, SharedAxis, StreamedRow
-from meseta.intake.two_gain import overlap_doubts
 from meseta.intake.units import unit_factor
 from meseta.recipe import Recipe
 from meseta.traces import ArraySamples
@@ -134,7 +134,7 @@ class Part:
             return values.astype(np.float32)
 
     def _may_be_doubtful(self) -> bool:
-        return "full_scale_volt" in self.calibration.constants or self.calibration.second is not None
+        return self.calibration.has_quality
 
     def _read_first_bias(self) -> None:
         bias = self.calibration.bias_channel
@@ -299,14 +299,7 @@ class Part:
         nothing = ArraySamples(np.empty(0))
         channels = tuple(replace(channel, samples=nothing) for channel in self.recording.channels)
         self.recording = self.recording.with_channels(channels)
-        calibration, axis = self.calibration, self.axis
-        first, second, bias = calibration.channel, calibration.second, calibration.bias_channel
-        self.calibration = replace(
-            calibration,
-            channel=replace(first, samples=nothing),
-            second=None if second is None else replace(second, samples=nothing),
-            bias_channel=None if bias is None else replace(bias, samples=nothing),
-        )
+        self.calibration, axis = self.calibration.without_samples(), self.axis
         self.axis = axis if axis.channel is None else replace(axis, channel=replace(axis.channel, samples=nothing))
         self.extras = tuple(replace(channel, samples=nothing) for channel in self.extras)
         return self
@@ -353,13 +346,12 @@ def plan_of(recording: Recording, recipe: Recipe) -> Part:
     """
     recording = prepared(recording, recipe)
     calibration = calibration_of(recording, recipe.calibration)
-    calibration = replace(calibration, doubts=(*calibration.doubts, *overlap_doubts(recording, calibration)))
     pieces = cut(recording, recipe.cutting, calibration)
     axis = drive_of(recording, recipe.calibration, pieces.pull_sign)
     interval, origin = sample_interval(recording, recipe.calibration)
     start, stop = np.array(pieces.start, np.int64), np.array(pieces.stop, np.int64)
     offsets = np.concatenate([[0], np.cumsum(stop - start)]).astype(np.int64)
-    used = {calibration.channel.name, *(c.name for c in (axis.channel, calibration.second) if c is not None)}
+    used = {channel.name for channel in (calibration.channel, axis.channel, calibration.second) if channel is not None}
     extras = tuple(c for c in recording.channels if c.role in CARRIED and not c.shared and c.name not in used)
     return Part(recording, calibration, axis, pieces, interval, origin, _distinct(extras), offsets, start, stop)
 

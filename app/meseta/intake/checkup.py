@@ -14,7 +14,6 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.intake.assembly import Part
-from meseta.intake.two_gain import TOLERATED, overlap_of
 from meseta.quantities import G0_SIEMENS, johnson_current_rms
 from meseta.recipe.alignment import AlignmentSettings
 from meseta.traces import Quality
@@ -125,12 +124,13 @@ def _full_scale(part: Part) -> Finding | None:
 
 def _gain_ratio(part: Part) -> Finding | None:
     """Compare the two amplifiers of a two-gain recording where both are in range."""
-    overlap = overlap_of(part.recording, part.calibration)
+    overlap = part.calibration.overlap
     if overlap is None:
         return None
     text = f"the second amplifier reads {overlap.ratio:.4g} +- {overlap.ratio_error:.2g} times the first in the overlap"
-    fine = abs(overlap.ratio - 1.0) <= max(TOLERATED, 4 * overlap.ratio_error)
-    return Finding("gain ratio", fine, text if fine else f"{text}: the two gains do not fit each other")
+    if part.calibration.is_scaled_by_overlap:
+        return Finding("gain ratio", True, f"{text}, and is scaled by it")
+    return Finding("gain ratio", overlap.fits, text if overlap.fits else f"{text}: the two gains do not fit each other")
 
 
 def _step(part: Part) -> Finding | None:

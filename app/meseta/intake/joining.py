@@ -215,7 +215,7 @@ def _notes(parts: Sequence[Part]) -> dict[str, Any]:
         for text, names in doubts.items()
     ]
     first = parts[0].notes()
-    ceiling = sum(part.nan_samples() for part in parts if _has_series(part))
+    ceiling = sum(part.nan_samples() for part in parts if _may_lack_numbers(part))
     return {
         "assumptions": said,
         "incomplete": incomplete,
@@ -226,5 +226,6 @@ def _notes(parts: Sequence[Part]) -> dict[str, Any]:
     }
 
 
-def _has_series(part: Part) -> bool:
-    return bool(np.any(np.asarray(part.calibration.constant("series_resistance_ohm"))))
+def _may_lack_numbers(part: Part) -> bool:
+    """Return whether the calibration itself leaves readings without a number: at a ceiling, beyond a curve."""
+    return bool(np.any(part.calibration.in_series_ohm)) or part.calibration.curve is not None

@@ -37,6 +37,9 @@ CONSTANTS: Final = {
     "reference_ampere": ("A", "reference_current reference i_ref iref log_reference current_reference"),
     "full_scale_volt": ("V", "full_scale adc_range input_range amplifier_full_scale fullscale"),
     "series_resistance_ohm": ("ohm", "series_resistance series_resistor r_series rs protective_resistor"),
+    "source_resistance_ohm": ("ohm", "source_resistance source_impedance bias_source_resistance"),
+    "reference_resistance_ohm": ("ohm", "reference_resistance reference_resistor"),
+    "bias_divided_by": ("1", ""),
     "nm_per_volt": ("nm/V", "piezo_constant piezo_calibration piezo_sensitivity displacement_per_volt piezo_factor"),
     "nm_per_second": (
         "nm/s",

@@ -16,6 +16,7 @@ from pydantic import BaseModel, ConfigDict, Field, ValidationError
 from meseta.errors import CallError, RecipeError, nearest
 from meseta.recipe.alignment import AlignmentSettings
 from meseta.recipe.calibration import CalibrationSettings
+from meseta.recipe.curve_files import with_curves_read
 from meseta.recipe.cutting import CuttingSettings
 from meseta.recipe.fields import FieldInfo, Section
 from meseta.recipe.figure import FigureSettings
@@ -68,8 +69,10 @@ class Recipe(BaseModel):
     # -- in ---------------------------------------------------------------------------------------------------
 
     @classmethod
-    def parse(cls, text: str, where: str = "recipe") -> Recipe:
+    def parse(cls, text: str, where: str = "recipe", folder: Path | None = None) -> Recipe:
         """Return the recipe in a TOML text; settings that it does not name have their defaults.
+
+        Files that it names (a measured amplifier curve) are read once, from ``folder``; without one none is opened.
 
         Raises
         ------
@@ -80,7 +83,7 @@ class Recipe(BaseModel):
             document = tomllib.loads(text)
         except tomllib.TOMLDecodeError as error:
             raise RecipeError(f"not valid TOML ({error})", where, "see `meseta recipe` for a complete one") from error
-        return cls.build(document, where)
+        return cls.build(document if folder is None else with_curves_read(document, folder), where)
 
     @classmethod
     def build(cls, document: Mapping[str, Any], where: str = "recipe") -> Recipe:
@@ -99,7 +102,7 @@ class Recipe(BaseModel):
             raise RecipeError(f"cannot be read ({error.strerror})", str(path), "check the path") from error
         except UnicodeDecodeError as error:
             raise RecipeError("is not a text file in UTF-8", str(path), "a recipe is a TOML file") from error
-        return cls.parse(text, str(path))
+        return cls.parse(text, str(path), Path(path).parent)
 
     @classmethod
     def preset(cls, name: str) -> Recipe:
@@ -126,7 +129,7 @@ class Recipe(BaseModel):
             if not separator or len(parts) < 2:
                 raise CallError(f"'{text}' is not a setting", where, "write section.field=value")
             _put(document, parts, _value(value.strip()), name.strip(), where)
-        return type(self).build(document, where)
+        return type(self).build(with_curves_read(document, Path()), where)
 
     def with_values(self, section: str, **values: Any) -> Recipe:
         """Return the recipe with settings of one section changed."""
@@ -163,16 +166,21 @@ class Recipe(BaseModel):
     def key(self, names: Iterable[str]) -> str:
         """Return a hash of the named settings (``section`` or ``section.field``).
 
-        Of a whole section only what differs from the defaults counts, so that a setting added by a later version leaves
-        the keys of earlier studies alone.
+        Only what differs from the defaults counts, so that a setting added by a later version leaves the keys of
+        earlier studies alone.
         """
         chosen = {}
         for name in names:
             section, _, field = name.partition(".")
-            values = getattr(self, section).model_dump(mode="json", exclude_defaults=not field)
-            # a derived property (the stored grid of a histogram) may stand for the settings it is made of
-            derived = field not in values
-            chosen[name] = values if not field else getattr(getattr(self, section), field) if derived else values[field]
+            part = getattr(self, section)
+            changed = part.model_dump(mode="json", exclude_defaults=True)
+            if not field:
+                chosen[name] = changed
+            elif field in changed:
+                chosen[name] = changed[field]
+            elif field not in type(part).model_fields:
+                # a derived property (the stored grid of a histogram) may stand for the settings it is made of
+                chosen[name] = getattr(part, field)
         return hashlib.sha256(json.dumps(chosen, sort_keys=True).encode()).hexdigest()
 
 

@@ -196,7 +196,7 @@ class LinesEditor(Editor):
 
     def _read(self, lines: list[str]) -> Any:
         if self.info.kind == "list":
-            return [json.loads(line) if line.startswith("{") else line for line in lines]
+            return [json.loads(line) if line.startswith(("{", "[")) else line for line in lines]
         table = {}
         for line in lines:
             name, separator, value = line.partition("=")

@@ -1,0 +1,268 @@
+"""Mains pickup: 50 or 60 Hz and harmonics on the continuous record, fitted before anything is cut.
+
+Pickup adds to the current whatever the contact does.  It is fitted where the contact is open, on stretches that lie
+near the floor, each less its own mean, so that neither steps nor drift take part.  The record is fitted in windows of
+about a second with one common frequency; amplitude and phase follow the mains from window to window.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.intake.recording import Recording
+
+__all__ = ["Pickup", "find_pickup"]
+
+Floats = npt.NDArray[np.float64]
+Integers = npt.NDArray[np.int64]
+Read = Callable[[int, int], Floats]
+
+NOMINAL_HERTZ: Final = (50.0, 60.0)
+SEARCH_HERTZ: Final = 0.6
+"""How far from the nominal value the frequency is looked for; mains stray less, clocks of converters may not."""
+SEARCH_STEP_HERTZ: Final = 0.1
+HARMONICS: Final = 3
+WINDOW_SECOND: Final = 1.0
+FEWEST_PERIODS: Final = 2.0
+PROBE_WINDOWS: Final = 48
+THINNED_HERTZ: Final = 2000.0
+"""Probes are averaged down to about this rate to find the frequency."""
+FLOOR_SHARE: Final = 0.2
+FLOOR_WIDTHS: Final = 12.0
+"""A band of 12 times the shortest stretch of values that holds a fifth of the samples takes in 6 sigma of noise, and a
+sine from end to end: a fifth of its time it spends within a tenth of its span."""
+SHORTEST_RUN_PERIODS: Final = 0.25
+SIGNIFICANT_SIGMAS: Final = 5.0
+MOST_FLOOR_PROBES: Final = 400_000
+
+
+@dataclass(frozen=True)
+class Pickup:
+    """What the mains add to one channel.
+
+    Attributes
+    ----------
+    frequency_hertz : float
+        Common frequency of the fundamental, refined.
+    amplitude : (harmonics,) float64
+        Median amplitude of the fundamental and its multiples, in the channel's unit.
+    amplitude_error : float
+        Standard error of one window's amplitude from the rest of the fit, white noise assumed.
+    unit : str
+    cycles_a_sample : float
+    at : (anchors,) int64
+        Flat samples at which ``parts`` hold; the ends of every piece are among them.
+    parts : (anchors, 2 harmonics) float64
+        cos and sin parts of each harmonic, phase counted from flat sample 0.
+    floor_share : float
+        Share of the samples that took part.
+    """
+
+    frequency_hertz: float
+    amplitude: Floats
+    amplitude_error: float
+    unit: str
+    cycles_a_sample: float
+    at: Integers
+    parts: Floats
+    floor_share: float
+
+    @property
+    def is_significant(self) -> bool:
+        """Return whether the fundamental, or any harmonic, stands out of the noise."""
+        return bool(self.amplitude.max() > SIGNIFICANT_SIGMAS * self.amplitude_error)
+
+    def text(self) -> str:
+        """Return frequency and amplitudes in words."""
+        sizes = ", ".join(
+            f"{size:.3g} {self.unit} at {(place + 1) * self.frequency_hertz:.4g} Hz"
+            for place, size in enumerate(self.amplitude.tolist())
+        )
+        return f"{self.frequency_hertz:.3f} Hz, amplitude {sizes} (+- {self.amplitude_error:.2g} a second of record)"
+
+    def subtract(self, values: Floats, start: int) -> None:
+        """Subtract the pickup from the channel's values from flat sample ``start`` on, in place."""
+        from meseta.intake.calibration_kernels import subtract_pickup
+
+        subtract_pickup(values, start, self.cycles_a_sample, self.at, self.parts)
+
+
+def find_pickup(recording: Recording, read: Read, unit: str, interval_second: float) -> Pickup | None:
+    """Fit the mains pickup of one channel over the whole record.
+
+    Parameters
+    ----------
+    recording : Recording
+        Its pieces are continuous; nothing is assumed of the time between them.
+    read : callable
+        Returns the channel, linear in current, over flat samples start to stop.
+    unit : str
+    interval_second : float
+
+    Returns
+    -------
+    Pickup or None
+        None where the rate is not known or too low, or the floor is seen too seldom to tell.
+    """
+    if not np.isfinite(interval_second) or interval_second <= 0 or 1 / interval_second < 5 * max(NOMINAL_HERTZ):
+        return None
+    harmonics = min(HARMONICS, int(0.4 / interval_second / max(NOMINAL_HERTZ)))
+    windows = _windows(recording.offsets, interval_second)
+    if len(windows) == 0:
+        return None
+    band = _floor_band(read, windows)
+    frequency = _frequency(read, windows, band, interval_second, harmonics)
+    if frequency is None:
+        return None
+    return _followed(recording, read, windows, band, (frequency, interval_second, harmonics), unit)
+
+
+def _windows(offsets: Integers, interval: float) -> Integers:
+    """Return (windows, 2) ranges of about a second that cross no end of a piece; pieces of few periods have none."""
+    wanted, fewest = round(WINDOW_SECOND / interval), FEWEST_PERIODS / min(NOMINAL_HERTZ) / interval
+    lengths = np.diff(offsets)
+    counts = np.where(lengths >= fewest, np.maximum(lengths // wanted, 1), 0)
+    begins = np.repeat(offsets[:-1], counts)
+    number = np.arange(counts.sum()) - np.repeat(np.cumsum(counts) - counts, counts)
+    whole, parts = np.repeat(lengths, counts), np.repeat(counts, counts)
+    found: Integers = np.stack([begins + whole * number // parts, begins + whole * (number + 1) // parts], axis=1)
+    return found
+
+
+def _floor_band(read: Read, windows: Integers) -> tuple[float, float]:
+    """Return the values between which a reading counts as floor: round the densest fifth of all samples."""
+    chosen = windows[np.unique(np.linspace(0, len(windows) - 1, PROBE_WINDOWS).astype(int))]
+    thin = max(1, int(np.sum(chosen[:, 1] - chosen[:, 0])) // MOST_FLOOR_PROBES)
+    values = np.concatenate([read(int(a), int(b))[::thin] for a, b in chosen])
+    values = np.sort(values[np.isfinite(values)])
+    held = int(FLOOR_SHARE * len(values))
+    if held < 1:
+        return np.nan, np.nan
+    widths = values[held:] - values[: len(values) - held]
+    place = int(np.argmin(widths))
+    centre = float(np.median(values[place : place + held + 1]))
+    step = np.diff(np.unique(values))
+    reach = FLOOR_WIDTHS * max(float(widths[place]), float(step.min()) if len(step) else 0.0)
+    return centre - reach, centre + reach
+
+
+def _runs(values: Floats, band: tuple[float, float], shortest: int) -> Integers:
+    """Return (n, 2) ranges of at least ``shortest`` samples that lie within the band."""
+    inside = np.concatenate([[False], (values >= band[0]) & (values <= band[1]), [False]])
+    edges = np.flatnonzero(np.diff(inside)).reshape(-1, 2)
+    long: Integers = np.ascontiguousarray(edges[edges[:, 1] - edges[:, 0] >= shortest], np.int64)
+    return long
+
+
+@dataclass(frozen=True)
+class _Fit:
+    """Fourier parts of one window, what they explain and what is left, and over how many samples."""
+
+    parts: Floats
+    explained: float
+    left: float
+    samples: int
+
+
+def _fit(values: Floats, first: int, runs: Integers, cycles_a_sample: float, harmonics: int) -> _Fit | None:
+    from meseta.intake.calibration_kernels import pickup_sums
+
+    used = int(np.sum(runs[:, 1] - runs[:, 0]))
+    if used * cycles_a_sample < 1.0:
+        return None
+    turns = (first + np.arange(len(values))) * cycles_a_sample
+    matrix, vector = np.zeros((2 * harmonics, 2 * harmonics)), np.zeros(2 * harmonics)
+    total = pickup_sums(values, np.asarray(2 * np.pi * (turns % 1.0)), runs, harmonics, matrix, vector)
+    if np.linalg.cond(matrix) > 1e6:
+        return None
+    parts = np.asarray(np.linalg.solve(matrix, vector), np.float64)
+    explained = float(parts @ vector)
+    return _Fit(parts, explained, max(total - explained, 0.0), used)
+
+
+def _thinned(values: Floats, by: int) -> Floats:
+    return values[: len(values) // by * by].reshape(-1, by).mean(axis=1)
+
+
+def _frequency(
+    read: Read, windows: Integers, band: tuple[float, float], interval: float, harmonics: int
+) -> float | None:
+    """Return the frequency whose Fourier series explains most of the floor, refined by a parabola."""
+    by = max(1, int(1.0 / interval / THINNED_HERTZ))
+    chosen = windows[np.unique(np.linspace(0, len(windows) - 1, PROBE_WINDOWS).astype(int))]
+    probes = []
+    for begin, end in chosen.tolist():
+        values = read(begin, end)
+        inside = (values >= band[0]) & (values <= band[1])
+        thin = _thinned(np.where(inside, values, np.nan), by)
+        shortest = max(2, int(SHORTEST_RUN_PERIODS / max(NOMINAL_HERTZ) / interval / by))
+        runs = _runs(thin, band, shortest)
+        if len(runs):
+            probes.append((np.nan_to_num(thin), runs))
+
+    def explained(hertz: float) -> float:
+        fits = [_fit(values, 0, runs, hertz * interval * by, harmonics) for values, runs in probes]
+        return sum(fit.explained for fit in fits if fit is not None)
+
+    offsets = np.arange(-SEARCH_HERTZ, SEARCH_HERTZ + SEARCH_STEP_HERTZ / 2, SEARCH_STEP_HERTZ)
+    found = [(explained(nominal + away), nominal, away) for nominal in NOMINAL_HERTZ for away in offsets.tolist()]
+    if not found or max(found)[0] <= 0.0:
+        return None
+    best, nominal, away = max(found)
+    before, after = explained(nominal + away - SEARCH_STEP_HERTZ), explained(nominal + away + SEARCH_STEP_HERTZ)
+    bend = before - 2 * best + after
+    shift = 0.5 * (before - after) / bend if bend < 0 else 0.0
+    return float(nominal + away + SEARCH_STEP_HERTZ * np.clip(shift, -0.5, 0.5))
+
+
+def _followed(
+    recording: Recording,
+    read: Read,
+    windows: Integers,
+    band: tuple[float, float],
+    rate: tuple[float, float, int],
+    unit: str,
+) -> Pickup | None:
+    """Fit every window at the common frequency; parts run linearly between the middles of windows of one piece."""
+    frequency, interval, harmonics = rate
+    shortest = max(4, int(SHORTEST_RUN_PERIODS / max(NOMINAL_HERTZ) / interval))
+    middles, fits = [], []
+    for begin, end in windows.tolist():
+        values = read(begin, end)
+        runs = _runs(values, band, shortest)
+        fit = _fit(np.nan_to_num(values), begin, runs, frequency * interval, harmonics) if len(runs) else None
+        if fit is not None:
+            middles.append((begin + end) // 2)
+            fits.append(fit)
+    if not fits:
+        return None
+    parts = np.array([fit.parts for fit in fits])
+    sizes = np.hypot(parts[:, 0::2], parts[:, 1::2])
+    used = sum(fit.samples for fit in fits)
+    noise = np.sqrt(sum(fit.left for fit in fits) / used)
+    error = float(noise * np.sqrt(2.0 / np.median([fit.samples for fit in fits])))
+    at, anchored = _anchored(recording.offsets, np.array(middles, np.int64), parts)
+    return Pickup(
+        frequency, np.median(sizes, axis=0), error, unit, frequency * interval, at, anchored, used / recording.samples
+    )
+
+
+def _anchored(offsets: Integers, middles: Integers, parts: Floats) -> tuple[Integers, Floats]:
+    """Return anchors with the ends of every piece: the nearest parts hold there, and none in a piece without any."""
+    at, rows = [], []
+    piece_of = np.searchsorted(offsets, middles, side="right") - 1
+    bounds = np.searchsorted(piece_of, np.arange(len(offsets)))
+    none = np.zeros(parts.shape[1])
+    for piece in range(len(offsets) - 1):
+        if offsets[piece + 1] == offsets[piece]:
+            continue
+        own = slice(bounds[piece], bounds[piece + 1])
+        held = parts[own]
+        at += [offsets[piece], *middles[own].tolist(), offsets[piece + 1] - 1]
+        rows += [held[0] if len(held) else none, *held, held[-1] if len(held) else none]
+    return np.array(at, np.int64), np.array(rows)
