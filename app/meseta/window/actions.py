@@ -7,9 +7,9 @@ from typing import Literal
 
 __all__ = ["ACTIONS", "MENUS", "ActionSpec"]
 
-When = Literal["always", "open", "conditions", "subset", "dirty"]
+When = Literal["always", "open", "conditions", "subset", "peak", "dirty"]
 
-MENUS = ("File", "Edit", "Trace", "Conditions", "Look", "Help")
+MENUS = ("File", "Edit", "Trace", "Conditions", "Peaks", "Look", "Help")
 
 
 @dataclass(frozen=True)
@@ -27,7 +27,8 @@ class ActionSpec:
     keys : tuple of str
         Shortcuts, the first one is shown.
     when : str
-        "always", "open" (traces are open), "conditions" (some are switched on), "subset" (they pick traces).
+        "always", "open" (traces are open), "conditions" (some are switched on), "subset" (they pick traces),
+        "peak" (one is chosen).
     bar : str
         Word on the tool bar; empty where it has none.
     help : str
@@ -138,6 +139,26 @@ ACTIONS: tuple[ActionSpec, ...] = (
     ActionSpec("toggle_conditions", "Switch all conditions off or on", "Conditions", ("C",), "open"),
     ActionSpec("clear_conditions", "Remove all conditions", "Conditions", ("Ctrl+Backspace",), "conditions"),
     ActionSpec("reject_selected", "Reject the selected traces", "Conditions", ("Shift+R",), "subset", line_before=True),
+    ActionSpec(
+        "peak_add",
+        "Add a peak here",
+        "Peaks",
+        ("P",),
+        "open",
+        help="Ask the fit for one more peak where the pointer or the caret is on the conductance axis.",
+    ),
+    ActionSpec("peak_next", "Choose the next peak up", "Peaks", ("N",), "open"),
+    ActionSpec("peak_previous", "Choose the next peak down", "Peaks", ("Shift+N",), "open"),
+    ActionSpec("peak_edit", "Edit the chosen peak …", "Peaks", ("F2",), "peak", line_before=True),
+    ActionSpec("peak_up", "Move the chosen peak up by a bin", "Peaks", ("Ctrl+Up",), "peak"),
+    ActionSpec("peak_down", "Move the chosen peak down by a bin", "Peaks", ("Ctrl+Down",), "peak"),
+    ActionSpec("peak_hold", "Hold or free the chosen peak", "Peaks", ("H",), "peak"),
+    ActionSpec("peak_hold_width", "Hold or free its width", "Peaks", ("Shift+H",), "peak"),
+    ActionSpec("peak_remove", "Remove the chosen peak", "Peaks", ("Del",), "peak"),
+    ActionSpec("peak_multiples", "Tie or free positions as multiples", "Peaks", ("T",), "open", line_before=True),
+    ActionSpec("peak_ladder", "Tie or free positions behind a series resistance", "Peaks", ("Shift+T",), "open"),
+    ActionSpec("peak_widths", "Tie or free relative widths", "Peaks", ("W",), "open"),
+    ActionSpec("peak_propose", "Let the peaks be proposed again", "Peaks", (), "open", line_before=True),
     ActionSpec(
         "axis",
         "Linear or logarithmic conductance axis",

@@ -22,7 +22,9 @@ from meseta.window.finder import ActionFinder, keys_page
 from meseta.window.groups import with_new_group
 from meseta.window.jobs import Channel
 from meseta.window.opening import Opened, export_results, open_paths, read_unfinished, write_columns
+from meseta.window.peak_editing import PeakEditor
 from meseta.window.session import Document, Span
+from meseta.window.views.peaks.dialog import edit_peak
 
 if TYPE_CHECKING:
     from meseta.window.main_window import MainWindow
@@ -49,6 +51,7 @@ class Commands(QObject):
         self._growing = False
         self._off: tuple[bool, ...] = ()
         self._check: FileCheck | None = None
+        self._peaks = PeakEditor.of(window.session)
 
     # -- files -------------------------------------------------------------------------------------------------------
 
@@ -395,6 +398,62 @@ class Commands(QObject):
         if given and text.strip():
             event = Event(session.traces.identity(session.current).text(), text.strip())
             session.change_decisions(f"mark the event {text.strip()}", session.document.decisions.with_event(event))
+
+    # -- peaks -------------------------------------------------------------------------------------------------------
+
+    def do_peak_add(self) -> None:
+        """Ask for a peak where the pointer or the caret is."""
+        self._peaks.add_at_caret()
+
+    def do_peak_next(self) -> None:
+        """Choose the next peak up the axis."""
+        self._peaks.step(1)
+
+    def do_peak_previous(self) -> None:
+        """Choose the next peak down the axis."""
+        self._peaks.step(-1)
+
+    def do_peak_edit(self) -> None:
+        """Ask for the numbers of the chosen peak."""
+        edit_peak(self._peaks, self._peaks.chosen, self._window)
+
+    def do_peak_up(self) -> None:
+        """Move the chosen peak up by a bin."""
+        self._peaks.nudge(1.0)
+
+    def do_peak_down(self) -> None:
+        """Move the chosen peak down by a bin."""
+        self._peaks.nudge(-1.0)
+
+    def do_peak_hold(self) -> None:
+        """Hold the chosen peak where it stands, or free it."""
+        if self._peaks.chosen >= 0:
+            self._peaks.hold(self._peaks.chosen, not self._peaks.starts()[self._peaks.chosen].fixed)
+
+    def do_peak_hold_width(self) -> None:
+        """Hold the chosen peak's width as it is, or free it."""
+        if self._peaks.chosen >= 0:
+            self._peaks.hold_width(self._peaks.chosen, not self._peaks.starts()[self._peaks.chosen].fixed_width)
+
+    def do_peak_remove(self) -> None:
+        """Take the chosen peak out of the fit."""
+        self._peaks.remove(self._peaks.chosen)
+
+    def do_peak_multiples(self) -> None:
+        """Tie all positions to multiples of one conductance, or free them."""
+        self._peaks.tie("none" if self._peaks.settings.tie == "multiples" else "multiples")
+
+    def do_peak_ladder(self) -> None:
+        """Tie all positions to multiples behind one series resistance, or free them."""
+        self._peaks.tie("none" if self._peaks.settings.tie == "ladder" else "ladder")
+
+    def do_peak_widths(self) -> None:
+        """Make all peaks equally wide relative to their position, or free their widths."""
+        self._peaks.equal_widths(not self._peaks.settings.equal_relative_widths)
+
+    def do_peak_propose(self) -> None:
+        """Ask for no peaks in particular."""
+        self._peaks.forget()
 
     # -- conditions --------------------------------------------------------------------------------------------------
 

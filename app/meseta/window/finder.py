@@ -91,8 +91,9 @@ def keys_page(actions: Sequence[QAction]) -> str:
         ("wheel", "zoom the conductance axis (on the strip: the record)"),
         ("Ctrl + wheel", "zoom the other axis"),
         ("Shift + drag, middle drag", "move the view"),
-        ("double click", "show the whole"),
+        ("double click", "show the whole (on the conductance histogram: add a peak, or edit the one there)"),
         ("drag a diamond of the fit", "begin the fit elsewhere"),
+        ("Up, Down with the focus on the conductance histogram", "move the caret along the axis (with Shift by five)"),
         ("right click", "data, picture, help"),
     )
     gestures = "".join(f"<tr><td>{gesture}</td><td>&nbsp;&nbsp;{does}</td></tr>" for gesture, does in mouse)

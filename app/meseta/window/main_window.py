@@ -20,6 +20,7 @@ from meseta.window.commands import Commands
 from meseta.window.help import HelpBrowser
 from meseta.window.jobs import JobRunner
 from meseta.window.keeper import Keeper
+from meseta.window.peak_editing import PeakEditor
 from meseta.window.plots.panel import PlotPanel
 from meseta.window.recent import RecentFiles
 from meseta.window.session import Session
@@ -100,6 +101,7 @@ class MainWindow(QMainWindow):
             toggle.setCheckable(True)
             toggle.setChecked(view.shown)
             toggle.toggled.connect(lambda shown, name=view.name: self.centre.spine.set_shown(name, shown))
+            widget.setVisible(view.shown)
         else:
             dock = QDockWidget(view.title, self)
             dock.setObjectName(view.name)
@@ -111,6 +113,7 @@ class MainWindow(QMainWindow):
             dock.setVisible(view.shown)
             self.docks[view.name] = dock
             toggle = dock.toggleViewAction()
+            toggle.triggered.connect(lambda shown, one=view: self._make_room(one) if shown else None)
             if view.steps:
                 dock.visibilityChanged.connect(
                     lambda shown, one=view: self.session.pipeline.want(one.name, one.steps if shown else ())
@@ -139,6 +142,13 @@ class MainWindow(QMainWindow):
         self.resizeDocks(
             [docks["peaks"], docks["conditions"], docks["groups"]], [300, 200, 130], Qt.Orientation.Vertical
         )
+
+    def _make_room(self, view: View) -> None:
+        """Bring a dock that was asked for to the front, as wide as its picture needs and half the window allows."""
+        dock = self.docks[view.name]
+        dock.raise_()
+        if view.room > dock.width() and not dock.isFloating():
+            self.resizeDocks([dock], [min(view.room, self.width() * 2 // 5)], Qt.Orientation.Horizontal)
 
     def _make_menus(self) -> None:
         for name in MENUS:
@@ -199,6 +209,7 @@ class MainWindow(QMainWindow):
             signal.connect(self._refresh_actions)
         session.document_changed.connect(lambda _: self._refresh_actions())
         session.subset_changed.connect(lambda _: self._refresh_actions())
+        PeakEditor.of(session).chosen_changed.connect(self._refresh_actions)
         session.traces_changed.connect(self._traces_changed)
         session.saved_changed.connect(lambda _: self._title())
         session.problem.connect(self.status.complain)
@@ -220,7 +231,8 @@ class MainWindow(QMainWindow):
         if isinstance(state, QByteArray):
             self._restored = self.restoreState(state, LAYOUT_VERSION)
         for name, panel in self.centre.spine.panels.items():
-            shown = self.settings.value(f"window/shown/{name}", True, bool)
+            first = next(view.shown for view in VIEWS if view.name == name)
+            shown = self.settings.value(f"window/shown/{name}", first, bool)
             self.actions_by_key[f"view_{name}"].setChecked(bool(shown))
             panel.setVisible(bool(shown))
         self.centre.spine.show_one_scale()
@@ -318,6 +330,7 @@ class MainWindow(QMainWindow):
             "open": open_,
             "conditions": open_ and bool(session.document.conditions.conditions),
             "subset": open_ and session.subset is not None,
+            "peak": open_ and PeakEditor.of(session).chosen >= 0,
         }
         for spec in ACTIONS:
             self.actions_by_key[spec.key].setEnabled(usable.get(spec.when, True))

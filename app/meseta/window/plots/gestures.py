@@ -32,7 +32,9 @@ class GestureBox(pg.ViewBox):
     zoomed = Signal(float, float, float, float)
     """The view shall be (x factor, y factor) as wide, keeping (x, y) in place."""
     clicked = Signal(float, float)
+    double_clicked = Signal(float, float)
     reset = Signal()
+    """A double click as well: most plots show the whole again and need not know where it was."""
 
     def __init__(self) -> None:
         super().__init__(enableMenu=False)
@@ -61,10 +63,11 @@ class GestureBox(pg.ViewBox):
             event.ignore()
             return
         event.accept()
+        point = self._plot_point(event.scenePos())
         if event.double():
+            self.double_clicked.emit(point.x(), point.y())
             self.reset.emit()
             return
-        point = self._plot_point(event.scenePos())
         self.clicked.emit(point.x(), point.y())
 
     def wheelEvent(self, event: Any, axis: int | None = None) -> None:

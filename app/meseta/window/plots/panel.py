@@ -58,6 +58,8 @@ class PlotPanel(QWidget):
         self._prepare_plot()
         self.header = QWidget()
         self.heading = Elided(self.title, "title")
+        self.note = Elided("")
+        self.note.hide()
         self.state = QLabel("")
         self.state.setProperty("tone", "doubtful")
         self.corner = QHBoxLayout()
@@ -88,6 +90,7 @@ class PlotPanel(QWidget):
         top.setContentsMargins(12, 4, 8, 0)
         top.setSpacing(8)
         top.addWidget(self.heading, 1)
+        top.addWidget(self.note, 6)
         top.addWidget(self.state)
         self.corner.setSpacing(4)
         top.addLayout(self.corner)
@@ -135,6 +138,11 @@ class PlotPanel(QWidget):
         """Show a word of doubt beside the heading ("out of date")."""
         if text != self.state.text():
             self.state.setText(text)
+
+    def say_note(self, text: str) -> None:
+        """Write a quiet line beside the heading; all of it is its tool tip where it does not fit."""
+        self.note.say(text)
+        self.note.setVisible(bool(text))
 
     def say_heading(self, text: str) -> None:
         """Write the heading."""
@@ -240,7 +248,7 @@ class SpinePanel(PlotPanel):
         session.hover_moved.connect(self._hover_moved)
         self.box.zoomed.connect(self._zoomed)
         self.box.moved.connect(self._moved)
-        self.box.reset.connect(frame.reset_view)
+        self.box.double_clicked.connect(self.double_clicked)
         self._span_changed(session.span)
 
     def show_scale(self, shown: bool) -> None:
@@ -297,6 +305,10 @@ class SpinePanel(PlotPanel):
     def _moved(self, x: float, y: float) -> None:
         self.session.set_span(self.session.span.moved(y))
         self.move_across(x)
+
+    def double_clicked(self, x: float, y: float) -> None:
+        """Show the whole of both axes."""
+        self.frame.reset_view()
 
     def zoom_across(self, factor: float, around: float) -> None:
         """Zoom the axis that is this panel's own."""

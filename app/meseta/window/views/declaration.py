@@ -37,6 +37,8 @@ class View:
         Whether it is visible at first.
     stretch : int
         Share of the width, for the spine.
+    room : int
+        Pixels that a dock on the right asks for when it is shown; 0 asks for none.
     """
 
     name: str
@@ -47,3 +49,4 @@ class View:
     steps: tuple[str, ...] = ()
     shown: bool = True
     stretch: int = 10
+    room: int = 0

@@ -8,8 +8,8 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 import pyqtgraph as pg
-from PySide6.QtCore import QPointF
-from PySide6.QtGui import QAction, QActionGroup, QPolygonF
+from PySide6.QtCore import QEvent, QObject, QPointF, Qt
+from PySide6.QtGui import QAction, QActionGroup, QKeyEvent, QPolygonF
 from PySide6.QtWidgets import QGraphicsPolygonItem, QMenu, QToolButton
 
 from meseta import typeset
@@ -19,6 +19,7 @@ from meseta.window.pictures import SubsetPicture
 from meseta.window.plots.drawing import WindowTool
 from meseta.window.plots.panel import PlotData, SpinePanel
 from meseta.window.plots.ticks import LogCountAxis
+from meseta.window.session import Change, Hover
 from meseta.window.theme import Theme
 from meseta.window.views.histogram.fit import FitLayer
 
@@ -27,6 +28,8 @@ __all__ = ["HistogramPanel"]
 Floats = npt.NDArray[np.float64]
 SCALES = ("in view", "selected", "logarithmic")
 DECADES_SHOWN = 4.0
+NEAR_PIXELS = 9.0
+"""A click this near a peak's height means that peak."""
 
 
 class HistogramPanel(SpinePanel):
@@ -59,8 +62,10 @@ class HistogramPanel(SpinePanel):
         session.states_changed.connect(self._say)
         session.subset_changed.connect(self._subset_changed)
         session.traces_changed.connect(self._draw)
-        session.document_changed.connect(lambda _: self._say())
+        session.document_changed.connect(self._document_changed)
         session.span_changed.connect(lambda _: self._rescale())
+        self.box.clicked.connect(self._clicked)
+        self.plot.installEventFilter(self)
         self.wear(frame.theme)
         self._draw()
 
@@ -126,6 +131,11 @@ class HistogramPanel(SpinePanel):
     def _result_changed(self, name: str) -> None:
         if name in ("histogram", "peaks"):
             self._draw()
+
+    def _document_changed(self, change: Change) -> None:
+        if change.recipe:
+            self.fit.place()
+        self._say()
 
     def _subset_changed(self, _: SubsetPicture | None) -> None:
         self._draw()
@@ -276,12 +286,55 @@ class HistogramPanel(SpinePanel):
         histogram: ConductanceHistogram | None = self.session.result("histogram")
         return None if histogram is None else PlotData("conductance histogram", histogram.table().columns())
 
+    # -- peaks by mouse and keys -------------------------------------------------------------------------------------
+
+    def _clicked(self, _: float, y: float) -> None:
+        editor = self.fit.editor
+        if editor.choose_near(y, NEAR_PIXELS * self.box.viewPixelSize()[1]) < 0:
+            editor.choose(-1)
+
+    def double_clicked(self, x: float, y: float) -> None:
+        """Edit the peak under the pointer, or add one there."""
+        if self.histogram is None:
+            self.frame.reset_view()
+        elif self.fit.editor.choose_near(y, NEAR_PIXELS * self.box.viewPixelSize()[1]) >= 0:
+            self.frame.run_action("peak_edit")
+        else:
+            self.fit.editor.add(self.fit.editor.g0_of(y))
+
+    def eventFilter(self, watched: QObject, event: QEvent) -> bool:
+        """Move the caret with the arrow keys while the plot has the focus; Enter adds a peak there or edits it."""
+        if isinstance(event, QKeyEvent) and event.type() == QEvent.Type.KeyPress and self.histogram is not None:
+            steps = {Qt.Key.Key_Up: 1.0, Qt.Key.Key_Down: -1.0}.get(Qt.Key(event.key()), 0.0)
+            if steps and not event.modifiers() & ~Qt.KeyboardModifier.ShiftModifier:
+                self._move_caret(steps * (5.0 if event.modifiers() else 1.0))
+                return True
+            if event.key() in (Qt.Key.Key_Return, Qt.Key.Key_Enter, Qt.Key.Key_Insert):
+                self.double_clicked(0.0, self.fit.editor.caret_u)
+                return True
+        return super().eventFilter(watched, event)
+
+    def _move_caret(self, bins: float) -> None:
+        histogram, span, u = self.histogram, self.session.span, self.fit.editor.caret_u
+        assert histogram is not None
+        start = u if span.low <= u <= span.high else (span.low + span.high) / 2
+        step = max(float(np.median(histogram.grid.widths)), self.box.viewPixelSize()[1])
+        self.session.hover(Hover(min(max(start + bins * step, span.low), span.high)))
+
     def menu_entries(self) -> list[tuple[str, Callable[[], None]]]:
         """Offer what can be done with peaks."""
-        return [
-            ("Add a peak at the pointer", self.fit.add_at_pointer),
-            ("Let the peaks be proposed again", self.fit.forget),
-        ]
+        editor, run = self.fit.editor, self.frame.run_action
+        entries: list[tuple[str, Callable[[], None]]] = [("Add a peak at the pointer", editor.add_at_caret)]
+        if editor.chosen >= 0:
+            name, start = editor.name_of(editor.chosen), editor.starts()[editor.chosen]
+            entries += [
+                (f"Edit {name} …", lambda: run("peak_edit")),
+                (f"{'Free' if start.fixed else 'Hold'} {name}", lambda: run("peak_hold")),
+                (f"Remove {name}", lambda: run("peak_remove")),
+            ]
+        if editor.asked:
+            entries.append(("Let the peaks be proposed again", editor.forget))
+        return entries
 
 
 def _curve(z: int) -> pg.PlotCurveItem:

@@ -1,4 +1,4 @@
-"""The four tables of the right side, each filled from one result."""
+"""Tables of the right side, each filled from one result."""
 
 from __future__ import annotations
 
@@ -9,14 +9,13 @@ import numpy.typing as npt
 from PySide6.QtWidgets import QLabel, QVBoxLayout, QWidget
 
 from meseta import typeset
-from meseta.peaks import PeakTable
 from meseta.selection import Selection, SelectionTable
 from meseta.window.frame import Frame
 from meseta.window.tables.model import Column, plain
 from meseta.window.tables.view import TablePanel
 from meseta.window.visibility import Lazy
 
-__all__ = ["PeaksTable", "PlateausTable", "RulesTable", "TracesTable"]
+__all__ = ["PlateausTable", "RulesTable", "TracesTable"]
 
 
 def _digits(count: int) -> Any:
@@ -47,68 +46,6 @@ class _Panel(QWidget):
         """Write the line below the table."""
         self.note.setText(text)
         self.note.setVisible(bool(text))
-
-
-class PeaksTable(_Panel):
-    """Peaks with their intervals."""
-
-    def __init__(self, frame: Frame) -> None:
-        columns = (
-            Column("peak", "peak", plain),
-            Column(
-                "position_g0", f"G / {typeset.G0}", self._position, "position with the half width of its 95 % interval"
-            ),
-            Column("position_siemens", "siemens", lambda value, _: typeset.prefixed(float(value), "S")),
-            Column("position_ohm", "ohm", lambda value, _: typeset.prefixed(float(value), "ohm")),
-            Column("fwhm", "width", _digits(2), "full width at half maximum, decades (logarithmic) or G0 (linear)"),
-            Column("area_per_trace", "area", _digits(3), "area a trace, in the histogram's unit"),
-            Column("position_systematic_g0", "systematic", _digits(2), "half spread over defensible choices, G0"),
-            Column("plateau_median_g0", "plateaus", _digits(3), "median conductance of the plateaus at the peak, G0"),
-            Column("status", "status", plain),
-        )
-        self._table: PeakTable | None = None
-        table = TablePanel(
-            frame,
-            "peaks",
-            columns,
-            jump=self._jump,
-            filtered=False,
-            empty="Peaks will stand here once the histogram is fitted.",
-        )
-        super().__init__(frame, table)
-        frame.session.result_changed.connect(lambda name: self.lazy.ask() if name == "peaks" else None)
-        frame.session.states_changed.connect(self._say)
-
-    def _position(self, value: float, row: int) -> str:
-        table = self._table
-        if table is None:
-            return typeset.number(float(value))
-        return typeset.value_with_uncertainty(
-            float(value), float(table.position_low_g0[row]), float(table.position_high_g0[row])
-        )
-
-    def refresh(self) -> None:
-        """Show the fitted peaks."""
-        fit = self.frame.session.result("peaks")
-        self._table = None if fit is None else fit.table
-        self.table.show_columns({} if fit is None else fit.table.columns())
-        self._say()
-
-    def _say(self) -> None:
-        state, fit = self.frame.session.state("peaks"), self.frame.session.result("peaks")
-        error = self.frame.session.errors.get("peaks")
-        if error is not None:
-            self.say(str(error))
-        elif fit is None or not len(fit.table):
-            self.say("")
-        elif state != "current":
-            self.say("out of date")
-        else:
-            self.say(f"95 % intervals: {fit.table.resampling[0] or 'none'}. Fit on the {fit.table.axis[0]} axis.")
-
-    def _jump(self, row: int) -> None:
-        if self._table is not None:
-            self.frame.look_at(float(self._table.position_g0[row]))
 
 
 class PlateausTable(_Panel):
