@@ -334,8 +334,16 @@ _AXIS = (
     "histogram.stored_bin_width_g0",
     "histogram.stored_low_g0",
     "histogram.stored_high_g0",
+    "histogram.edges_g0",
 )
-_STORED = (*_AXIS, "histogram.region", "histogram.floor_tail_second", _PHASE)
+_STORED = (
+    *_AXIS,
+    "histogram.region",
+    "histogram.floor_tail_second",
+    "histogram.region_low_nm",
+    "histogram.region_high_nm",
+    _PHASE,
+)
 _BINS = (*_AXIS, "histogram.low_g0", "histogram.high_g0", "histogram.bins_per_decade", "histogram.bin_width_g0")
 
 STEPS: Mapping[str, Step] = {

@@ -220,6 +220,8 @@ def _histograms(stated: Stated, analysis: Analysis, work: Work) -> list[str]:
         if logarithmic
         else f"bins of {stated('histogram.bin_width_g0')}"
     )
+    if stated.value("histogram.edges_g0"):
+        bins = f"{histogram.grid.bins} bins between given edges"
     stated.names |= {f"histogram.{name}" for name in ("bins_per_decade", "bin_width_g0", "low_g0", "high_g0")}
     span = typeset.interval(float(histogram.edges_g0[0]), float(histogram.edges_g0[-1]), "G0")
     return [
@@ -243,6 +245,8 @@ def _region(stated: Stated) -> str:
         "phase": "all samples of the phase",
         "after_zero": f"samples from the zero of displacement until {tail} inside the floor",
         "before_zero": "samples up to the zero of displacement",
+        "displacement": f"samples from {stated('histogram.region_low_nm')} to {stated('histogram.region_high_nm')} "
+        "from the zero of displacement",
     }[region]
 
 

@@ -105,6 +105,8 @@ def with_bins(counts: CountMatrix, settings: HistogramSettings, noise: NoiseMode
     RecipeError
         Where the bins are no sum of the stored ones.
     """
+    if counts.grid.given:
+        return counts
     low, high = axis_range(settings.axis, settings.low_g0, settings.high_g0, noise)
     first, last, merge = histogram_grid(counts.grid, low, high, settings.bins_per_decade, settings.bin_width_g0)
     return counts.trimmed(first, last, merge)

@@ -131,8 +131,11 @@ def _drive_ends(traces: TraceSet, row: int) -> tuple[float, float]:
 
 
 def displacement_grid(frame: DisplacementHistogramSettings, settings: HistogramSettings, noise: NoiseModel) -> Grid:
-    """Return the conductance axis of the 2D histogram: the range of the 1D one, in its own bins."""
-    low, high = axis_range(settings.axis, settings.low_g0, settings.high_g0, noise)
+    """Return the conductance axis of the 2D histogram: the range of the 1D one, in its own bins of equal width."""
+    if settings.edges_g0:
+        low, high = settings.edges_g0[0], settings.edges_g0[-1]
+    else:
+        low, high = axis_range(settings.axis, settings.low_g0, settings.high_g0, noise)
     return anchored_grid(settings.axis, low, high, frame.bins_per_decade, frame.bin_width_g0)
 
 

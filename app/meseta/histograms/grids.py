@@ -94,6 +94,9 @@ def stored_grid(settings: HistogramSettings, noise: NoiseModel) -> Grid:
     RecipeError
         Where the bins would be too many to be meant.
     """
+    if settings.edges_g0:
+        _check(len(settings.edges_g0) - 1)
+        return Grid(np.array(settings.edges_g0, np.float64), settings.axis, given=True)
     low, high = axis_range(settings.axis, settings.stored_low_g0, settings.stored_high_g0, noise)
     if settings.axis == "logarithmic":
         per_decade = settings.stored_bins_per_decade
@@ -148,6 +151,7 @@ def histogram_grid(
     -------
     first, last, merge : int
         Stored bins ``first`` to ``last`` (exclusive), ``merge`` of them a bin; ``last - first`` is a multiple of it.
+        Given bins are taken as they are.
 
     Raises
     ------
@@ -155,6 +159,9 @@ def histogram_grid(
         Where the bins are no whole multiple of stored bins.
     """
     edges, bins = stored.edges_g0, stored.bins
+    if stored.given:
+        first = min(max(int(np.searchsorted(edges, low_g0, side="right")) - 1, 0), bins - 1)
+        return first, max(min(int(np.searchsorted(edges, high_g0)), bins), first + 1), 1
     if stored.axis == "logarithmic":
         unit = round(1 / math.log10(edges[1] / edges[0]))
         fine, offset = unit / per_decade, round(unit * math.log10(edges[0]))

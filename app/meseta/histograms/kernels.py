@@ -18,6 +18,7 @@ __all__ = [
     "count_rows",
     "count_stepped_grid",
     "draw_blocks",
+    "find_window",
     "first_at_or_past",
     "fold_rows",
     "largest_product",
@@ -255,6 +256,45 @@ def first_at_or_past(bound: float, start: float, step: float, zero: float, last:
 
 
 @kernel
+def find_window(
+    origin: npt.NDArray[np.int64],
+    begin: npt.NDArray[np.int64],
+    end: npt.NDArray[np.int64],
+    start: npt.NDArray[np.float64],
+    step: npt.NDArray[np.float64],
+    relative: npt.NDArray[np.float32],
+    zero: npt.NDArray[np.float64],
+    low: float,
+    high: float,
+    first: npt.NDArray[np.int64],
+    last: npt.NDArray[np.int64],
+) -> None:
+    """Find the samples ``first`` to ``last`` of each row whose drive lies from ``low`` to ``high``, from its zero.
+
+    ``first`` is the first sample in the window, ``last`` the first after it that is beyond the end which the drive
+    goes to.  Empty ranges end at the row's end.
+    """
+    explicit = len(relative) > 0
+    for row in range(len(begin)):
+        first[row] = last[row] = end[row]
+        if end[row] <= begin[row] or np.isnan(zero[row]):
+            continue
+        if explicit:
+            rising = relative[end[row] - 1] >= relative[begin[row]]
+        else:
+            rising = step[row] >= 0.0
+        for at in range(begin[row], end[row]):
+            drive = start[row] + (np.float64(relative[at]) if explicit else step[row] * (at - origin[row]))
+            shifted = drive - zero[row]
+            if first[row] == end[row]:
+                if shifted >= low and shifted < high:
+                    first[row] = at
+            elif (rising and shifted >= high) or (not rising and shifted < low):
+                last[row] = at
+                break
+
+
+@kernel
 def place_of(shifted: float, edges: npt.NDArray[np.float64]) -> int:
     """Return the half-open interval of nearly equally spaced edges that holds a value inside them."""
     columns = len(edges) - 1
@@ -397,6 +437,8 @@ def _warm_up() -> None:
     largest_product(square)
     settle_region(values, begin, end, values[:1], end, np.zeros(1, np.int64))
     unit = np.ones(1)
+    for drive in (np.zeros(0, np.float32), values):
+        find_window(begin, begin, end, unit, unit, drive, unit, 0.0, 1.0, begin.copy(), begin.copy())
     edges = np.array([0.0, 1.0])
     tally = np.zeros((2, 1, 2), np.uint32)
     count_stepped_grid(values, begin, begin, end, begin, unit, unit, unit, edges, table, thresholds, 1, tally)

@@ -57,9 +57,23 @@ def region_of(
 ) -> Region:
     """Return the samples of each trace that take part.
 
+    Parameters
+    ----------
+    traces : TraceSet
+        A block of traces in memory.
+    settings : HistogramSettings
+    noise : NoiseModel
+    alignment : Alignment
+        Of the same traces.
+    phases : sequence of str
+
+    Notes
+    -----
     "phase": all samples of the phase.  "before_zero": up to the zero of displacement.  "after_zero": from the zero
     until the trace has stayed within 4 sigma of the floor for ``floor_tail_second`` (50 samples where the sample
-    interval is unknown); a trace without a zero has no such region.
+    interval is unknown).  "displacement": from the first sample of the phase within the window of displacement, counted
+    from the zero, to the first beyond it, in the direction of the drive; half-open as bins are, so that a drive that
+    goes one way has exactly the samples of the window.  A trace without a zero has neither of the last two.
     """
     origin = traces.offsets[:-1]
     start, stop = traces.phase_range(phases)
@@ -72,7 +86,32 @@ def region_of(
         begin = np.where(zero >= 0, np.clip(zero, phase_begin, phase_end), phase_end)
         end = _settled(traces, begin, phase_end, noise, settings.floor_tail_second)
         floor = phase_end - end
+    elif settings.region == "displacement":
+        begin, end = _window(traces, settings, alignment, phase_begin, phase_end)
     return Region(phase_begin, phase_end, begin, np.maximum(end, begin), floor)
+
+
+def _window(
+    traces: TraceSet, settings: HistogramSettings, alignment: Alignment, phase_begin: Integers, phase_end: Integers
+) -> tuple[Integers, Integers]:
+    """Return the range of each trace's phase within the window of displacement; empty where it has no zero."""
+    drive = traces.drive
+    begin, end = np.empty(traces.traces, np.int64), np.empty(traces.traces, np.int64)
+    relative = np.empty(0, np.float32) if drive.relative is None else drive.relative.read(0, traces.samples)
+    kernels.find_window(
+        np.ascontiguousarray(traces.offsets[:-1]),
+        phase_begin,
+        phase_end,
+        np.ascontiguousarray(drive.start),
+        np.ascontiguousarray(drive.step),
+        np.ascontiguousarray(relative),
+        np.ascontiguousarray(alignment.zero_drive),
+        settings.region_low_nm,
+        settings.region_high_nm,
+        begin,
+        end,
+    )
+    return begin, end
 
 
 def _settled(traces: TraceSet, begin: Integers, end: Integers, noise: NoiseModel, tail_second: float) -> Integers:

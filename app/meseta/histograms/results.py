@@ -45,10 +45,17 @@ class Grid:
     edges_g0 : (bins + 1,) float64, G0
     axis : str
         "linear" or "logarithmic".
+    given : bool
+        Whether the edges were given one by one; else bins have equal widths, and merge to wider ones.
     """
 
     edges_g0: Floats
     axis: str
+    given: bool = False
+
+    def part(self, first: int, last: int, merge: int = 1) -> Grid:
+        """Return bins ``first`` to ``last``, ``merge`` of them put together."""
+        return replace(self, edges_g0=self.edges_g0[first : last + 1 : merge])
 
     @property
     def bins(self) -> int:
@@ -119,7 +126,7 @@ class CountMatrix:
     @property
     def shown(self) -> Grid:
         """The histogram's grid: fine bins, ``merge`` by ``merge``."""
-        return Grid(self.grid.edges_g0[:: self.merge], self.grid.axis)
+        return self.grid.part(0, self.grid.bins, self.merge)
 
     def shown_counts(self, fine: npt.NDArray[Any]) -> npt.NDArray[Any]:
         """Return fine counts ``(..., fine bins)`` summed exactly to the histogram's bins ``(..., bins)``."""
@@ -131,8 +138,9 @@ class CountMatrix:
         excluded = self.excluded.copy()
         excluded[:, EXCLUDED.index("under")] += self.counts[:, :first].sum(1, dtype=np.int64)
         excluded[:, EXCLUDED.index("over")] += self.counts[:, last:].sum(1, dtype=np.int64)
-        grid = Grid(self.grid.edges_g0[first : last + 1], self.grid.axis)
-        return replace(self, grid=grid, counts=self.counts[:, first:last], excluded=excluded, merge=merge)
+        return replace(
+            self, grid=self.grid.part(first, last), counts=self.counts[:, first:last], excluded=excluded, merge=merge
+        )
 
     def block(self, first: int, last: int) -> CountMatrix:
         """Return the rows of traces ``first`` to ``last``."""

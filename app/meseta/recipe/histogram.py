@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import math
-from typing import Literal
+from itertools import pairwise
+from typing import Literal, Self
+
+from pydantic import model_validator
 
 from meseta.recipe.fields import Section, setting
 
@@ -23,7 +26,7 @@ _STORED_WIDTH_G0 = 0.004
 class HistogramSettings(Section):
     """The conductance histogram and the count matrix behind it."""
 
-    ordered = (("low_g0", "high_g0"),)
+    ordered = (("low_g0", "high_g0"), ("region_low_nm", "region_high_nm"))
 
     axis: Literal["linear", "logarithmic"] = setting(
         "logarithmic", "Conductance axis", "Bins of equal width in G or in log10 G."
@@ -44,15 +47,33 @@ class HistogramSettings(Section):
         unset="3 robust sigma below the floor (linear), a tenth of the floor's sigma (logarithmic)",
     )
     high_g0: float = setting(10.0, "Highest conductance", "Upper end of the axis.", unit="G0", gt=0)
+    edges_g0: list[float] = setting(
+        None,
+        "Given edges",
+        "Edges of the bins, ascending (those of a published histogram, say); ends and widths above are then not used, "
+        "and the axis tells only whether densities are per decade or per G0.",
+        unit="G0",
+        unset="bins of equal width",
+        factory=list,
+    )
     direction: Literal["opening", "closing"] = setting(
         "opening", "Direction", "Opening (pull) or closing (push) traces; they are never mixed."
     )
-    region: Literal["phase", "after_zero", "before_zero"] = setting(
+    region: Literal["phase", "after_zero", "before_zero", "displacement"] = setting(
         "phase",
         "Region",
         "'phase': all samples of the pull; 'after_zero': from the zero of displacement until "
-        "shortly inside the floor (molecules); 'before_zero': up to the zero (metals).",
+        "shortly inside the floor (molecules); 'before_zero': up to the zero (metals); 'displacement': between two "
+        "displacements from the zero.",
     )
+    region_low_nm: float = setting(
+        0.0,
+        "Region from",
+        "With 'displacement': from this displacement on, zero at the rupture (in the drive's own unit where that is "
+        "not nm).",
+        unit="nm",
+    )
+    region_high_nm: float = setting(1.0, "Region to", "With 'displacement': up to this displacement.", unit="nm")
     floor_tail_second: float = setting(
         0.005,
         "Tail inside the floor",
@@ -73,6 +94,15 @@ class HistogramSettings(Section):
         "Plateaus by length",
         "Plateau histogram: every plateau weighs its length instead of one vote.",
     )
+
+    @model_validator(mode="after")
+    def _edges_ascend(self) -> Self:
+        edges = self.edges_g0
+        if edges and (len(edges) < 2 or any(low >= high for low, high in pairwise(edges))):
+            raise ValueError("edges_g0 must be two or more ascending numbers")
+        if edges and self.axis == "logarithmic" and edges[0] <= 0:
+            raise ValueError(f"edges_g0 begins at {edges[0]:g}, and a logarithmic axis has no zero")
+        return self
 
     @property
     def stored_low_g0(self) -> float | None:
