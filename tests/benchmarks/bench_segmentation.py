@@ -19,10 +19,11 @@ from meseta.simulate import standard_workload
 from meseta.work import Work
 
 
-def _steps(traces: int, samples: int = 5000) -> list[np.ndarray]:
+def _steps(traces: int, every: int, samples: int = 5000) -> list[np.ndarray]:
     rng = np.random.default_rng(1)
     return [
-        np.repeat(rng.standard_normal(samples // 500) * 8, 500) + rng.standard_normal(samples) for _ in range(traces)
+        np.repeat(rng.standard_normal(samples // every) * 8, every) + rng.standard_normal(samples)
+        for _ in range(traces)
     ]
 
 
@@ -52,7 +53,8 @@ def main() -> None:
     parser.add_argument("--traces", type=int, default=10_000)
     parser.add_argument("--compare", type=int, default=40)
     chosen = parser.parse_args()
-    _compare("steps", _steps(chosen.compare), 15)
+    _compare("steps of 500 samples", _steps(chosen.compare, 500), 15)
+    _compare("steps of 100 samples", _steps(chosen.compare, 100), 15)
     few = standard_workload(chosen.compare, 5000, seed=1)
     noise = Analysis(few).noise()
     scale, mix = scale_of(noise), []

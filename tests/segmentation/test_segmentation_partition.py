@@ -62,6 +62,14 @@ def test_cost_equals_the_dynamic_programme(seed, n, minimum, penalty, shape, wei
     assert partition_cost(y, ends, penalty, weights) == pytest.approx(best, rel=1e-9, abs=1e-9)
 
 
+@pytest.mark.parametrize("minimum", [1, 3])
+def test_a_smooth_ramp_keeps_many_candidates_and_stays_exact(minimum):
+    y = np.linspace(0, 30, 700) ** 1.1
+    ends = optimal_partition(y, 5.0, minimum_length=minimum)
+    best = dynamic_programme(y - y.mean(), 5.0, np.ones(len(y)), minimum)
+    assert partition_cost(y, ends, 5.0) == pytest.approx(best, rel=1e-9)
+
+
 @pytest.mark.parametrize("seed", range(8))
 def test_never_above_ruptures(seed):
     rng = np.random.default_rng(seed)

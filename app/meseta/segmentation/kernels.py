@@ -13,9 +13,122 @@ __all__ = ["merge_moments", "partition", "partition_lines"]
 
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
+Row = np.uint64
 
+ONE = np.uint64(1)
+LOW, TOTAL, WEIGHT, BASE, OWNER, INVERSE, MIDDLE, VERTEX = (np.uint64(column) for column in range(8))
+"""Columns of the envelope: lower edge of the interval of means, the owner's sums and cost, the parabola's vertex.
+Unsigned row and column numbers spare the test for indices that count from the end, a quarter of the time."""
 NOISIEST = 4.0
 """A stretch may be this much noisier (in variance) than the recording is on average at its conductance."""
+
+
+@kernel
+def _put(rows: Floats, at: Row, low: float, total: float, weight: float, base: float, owner: float) -> None:
+    rows[at, LOW], rows[at, TOTAL], rows[at, WEIGHT], rows[at, BASE], rows[at, OWNER] = low, total, weight, base, owner
+
+
+@kernel
+def _lowest(rows: Floats, first: Row, stop: Row, weight: float, total: float, square: float) -> Row:
+    """Fill each piece's vertex for the sums of the samples so far; return the row with the lowest one."""
+    choice, best = first, np.inf
+    p = first
+    while p < stop:
+        bend, lean = weight - rows[p, WEIGHT], total - rows[p, TOTAL]
+        inverse = 1.0 / bend
+        middle = lean * inverse if bend > 0.0 else 0.0
+        vertex = rows[p, BASE] + square - lean * middle
+        rows[p, INVERSE], rows[p, MIDDLE], rows[p, VERTEX] = inverse, middle, vertex
+        if vertex < best:
+            best, choice = vertex, p
+        p += ONE
+    return choice
+
+
+@kernel
+def _with_newcomer(
+    rows: Floats, first: Row, stop: Row, into: Row, s: float, entry: float, weight: float, total: float, square: float
+) -> Row:
+    """Write the envelope with newcomer ``s``, whose cost is ``entry`` for every mean, to rows from ``into`` on.
+
+    The vertices must be those for the sums at ``s``.  Returns the end of the new envelope.
+    """
+    q, mine, base = into, False, entry - square
+    low = rows[first, LOW]
+    p = first
+    while p < stop:
+        high, middle = rows[p + ONE, LOW], rows[p, MIDDLE]
+        reach = (entry - rows[p, VERTEX]) * rows[p, INVERSE]
+        if (low - middle) ** 2 <= reach and (high - middle) ** 2 <= reach:
+            _put(rows, q, low, rows[p, TOTAL], rows[p, WEIGHT], rows[p, BASE], rows[p, OWNER])
+            q, mine = q + ONE, False
+        else:
+            half = math.sqrt(reach) if reach > 0.0 else -1.0
+            keep_low, keep_high = max(low, middle - half), min(high, middle + half)
+            kept = keep_low < keep_high
+            if (keep_low > low or not kept) and not mine:
+                _put(rows, q, low, total, weight, base, s)
+                q, mine = q + ONE, True
+            if kept:
+                _put(rows, q, keep_low, rows[p, TOTAL], rows[p, WEIGHT], rows[p, BASE], rows[p, OWNER])
+                q, mine = q + ONE, keep_high < high
+                if mine:
+                    _put(rows, q, keep_high, total, weight, base, s)
+                    q += ONE
+        low = high
+        p += ONE
+    rows[q, LOW] = low
+    return q
+
+
+@kernel
+def _advance(
+    values: Floats,
+    weights: Floats,
+    penalty: float,
+    minimum: int,
+    recent: Floats,
+    came_from: Integers,
+    rows: Floats,
+    begin: int,
+    pieces: int,
+) -> tuple[int, int, int]:
+    """Go on after ``begin`` samples until all are done or the rows may become too few.
+
+    ``rows`` has room for two envelopes, which take turns; the one at hand begins at row 0 on entry.  No array is
+    assigned within the loop: counting its references would take longer than the search.  ``recent`` is a ring of the
+    last minimum + 1 sums and entry costs.  Returns the samples done, the number of pieces, and the row in which the
+    envelope at hand begins.
+    """
+    n, even = len(values), len(weights) == 0
+    room = np.uint64(len(rows) // 2)
+    first, stop = np.uint64(0), np.uint64(pieces)
+    now = begin % len(recent)
+    weight, total, square = recent[now, 0], recent[now, 1], recent[now, 2]
+    for t in range(begin + 1, n + 1):
+        now = now + 1 if now + 1 < len(recent) else 0
+        s, then = t - minimum, now + 1 if now + 1 < len(recent) else 0
+        if s == 0:
+            stop = ONE
+        elif s >= minimum:
+            pieces = int(stop - first)
+            if 3 * pieces + 3 > len(rows) // 2:
+                return t - 1, pieces, int(first)
+            if minimum > 1:
+                _lowest(rows, first, stop, recent[then, 0], recent[then, 1], recent[then, 2])
+            into = room - first
+            stop = _with_newcomer(
+                rows, first, stop, into, s, recent[then, 3], recent[then, 0], recent[then, 1], recent[then, 2]
+            )
+            first = into
+        w = 1.0 if even else weights[t - 1]
+        y = values[t - 1]
+        weight, total, square, entry = weight + w, total + w * y, square + w * y * y, np.inf
+        if s >= 0:
+            choice = _lowest(rows, first, stop, weight, total, square)
+            entry, came_from[t] = rows[choice, VERTEX] + penalty, int(rows[choice, OWNER])
+        recent[now, 0], recent[now, 1], recent[now, 2], recent[now, 3] = weight, total, square, entry
+    return n, int(stop - first), int(first)
 
 
 @kernel
@@ -45,85 +158,18 @@ def partition(values: Floats, weights: Floats, penalty: float, minimum: int) -> 
         Weighted sum of squares about the means + penalty x (k - 1).
     """
     n = len(values)
-    even = len(weights) == 0
-    total = np.zeros(n + 1)
-    square = np.zeros(n + 1)
-    weight = np.zeros(n + 1)
-    entry = np.full(n + 1, np.inf)
-    entry[0] = 0.0
+    recent = np.zeros((minimum + 1, 4))
     came_from = np.zeros(n + 1, np.int64)
-    room = 64
-    edge, fresh_edge = np.empty(room + 1), np.empty(room + 1)
-    owner, fresh_owner = np.empty(room, np.int64), np.empty(room, np.int64)
-    base, fresh_base = np.empty(room), np.empty(room)
-    pieces = 0
-    lowest, highest = np.min(values), np.max(values)
-    for t in range(1, n + 1):
-        w = 1.0 if even else weights[t - 1]
-        y = values[t - 1]
-        weight[t] = weight[t - 1] + w
-        total[t] = total[t - 1] + w * y
-        square[t] = square[t - 1] + w * y * y
-        s = t - minimum
-        if s >= 0 and (s == 0 or s >= minimum):
-            if 3 * pieces + 3 > room:
-                room *= 2
-                while 3 * pieces + 3 > room:
-                    room *= 2
-                edge, fresh_edge = np.append(edge, np.empty(room + 1 - len(edge))), np.empty(room + 1)
-                owner, fresh_owner = np.append(owner, np.empty(room - len(owner), np.int64)), np.empty(room, np.int64)
-                base, fresh_base = np.append(base, np.empty(room - len(base))), np.empty(room)
-            own_base, own_total, own_weight = entry[s] - square[s], total[s], weight[s]
-            count = 0
-            mine = False
-            if pieces == 0:
-                fresh_edge[0], fresh_owner[0], fresh_base[0], count = lowest, s, own_base, 1
-            for p in range(pieces):
-                low, high, r = edge[p], edge[p + 1], owner[p]
-                gain, lean, bend = own_base - base[p], own_total - total[r], own_weight - weight[r]
-                keep_low, keep_high = low, high
-                if gain + low * (2.0 * lean - low * bend) < 0.0 or gain + high * (2.0 * lean - high * bend) < 0.0:
-                    if bend > 0.0:
-                        middle = lean / bend
-                        half = middle * middle + gain / bend
-                        if half > 0.0:
-                            half = math.sqrt(half)
-                            keep_low, keep_high = max(low, middle - half), min(high, middle + half)
-                        else:
-                            keep_high = low - 1.0
-                    else:
-                        keep_high = low - 1.0
-                    if keep_low >= keep_high:
-                        keep_low, keep_high = high, high
-                if keep_low > low and not mine:
-                    fresh_edge[count], fresh_owner[count], fresh_base[count] = low, s, own_base
-                    count += 1
-                    mine = True
-                if keep_high > keep_low or (keep_high == high and keep_low == low):
-                    fresh_edge[count], fresh_owner[count], fresh_base[count] = keep_low, r, base[p]
-                    count += 1
-                    mine = False
-                    if keep_high < high:
-                        fresh_edge[count], fresh_owner[count], fresh_base[count] = keep_high, s, own_base
-                        count += 1
-                        mine = True
-            fresh_edge[count] = highest
-            edge, fresh_edge = fresh_edge, edge
-            owner, fresh_owner = fresh_owner, owner
-            base, fresh_base = fresh_base, base
-            pieces = count
-        best, choice = np.inf, 0
-        for p in range(pieces):
-            r = owner[p]
-            cost = base[p] + square[t]
-            if weight[t] > weight[r]:
-                away = total[t] - total[r]
-                cost -= away * away / (weight[t] - weight[r])
-            if cost < best:
-                best, choice = cost, r
-        entry[t] = best + penalty
-        came_from[t] = choice
-    return _ends(came_from), entry[n] - penalty
+    rows = np.zeros((512, 8))
+    rows[0, LOW], rows[1, LOW] = np.min(values), np.max(values)
+    done, pieces = 0, 0
+    while True:
+        done, pieces, first = _advance(values, weights, penalty, minimum, recent, came_from, rows, done, pieces)
+        if done == n:
+            return _ends(came_from), recent[n % (minimum + 1), 3] - penalty
+        larger = np.zeros((2 * len(rows), 8))
+        larger[: pieces + 1] = rows[first : first + pieces + 1]
+        rows = larger
 
 
 @kernel
