@@ -104,20 +104,16 @@ def flag_slewing(volts: Floats, begins: Integers, limit: float, bit: int, bits: 
 
 @kernel
 def pickup_sums(
-    values: Floats,
-    phase: Floats,
-    runs: Integers,
-    harmonics: int,
-    matrix: Floats,
-    vector: Floats,
-) -> float:
-    """Add up the normal equations of a Fourier series over runs of samples, each run less its own mean.
+    values: Floats, phase: Floats, runs: Integers, harmonics: int, matrix: Floats, vector: Floats, total: Floats
+) -> None:
+    """Add up the normal equations of a Fourier series over each run of samples, less the run's own mean.
 
     ``phase`` is the angle of the fundamental at every sample; ``runs`` (n, 2) half-open ranges.  Columns are
-    cos 1, sin 1, cos 2, sin 2 ...  Returns the sum of squares of the values less the means of their runs.
+    cos 1, sin 1, cos 2, sin 2 ...; ``matrix`` (n, k, k) and ``vector`` (n, k) begin as zeros; ``total`` (n,) is filled
+    with the sums of squares of the values.
     """
     size = 2 * harmonics
-    row, total, mean = np.empty(size), 0.0, np.empty(size)
+    row, mean = np.empty(size), np.empty(size)
     for run in range(len(runs)):
         begin, end = runs[run, 0], runs[run, 1]
         count = end - begin
@@ -131,20 +127,20 @@ def pickup_sums(
         for place in range(size):
             mean[place] /= count
         centre /= count
+        total[run] = 0.0
         for index in range(begin, end):
             _series(phase[index], harmonics, row)
             away = values[index] - centre
-            total += away * away
+            total[run] += away * away
             for place in range(size):
                 row[place] -= mean[place]
-                vector[place] += row[place] * away
+                vector[run, place] += row[place] * away
             for one in range(size):
                 for other in range(one + 1):
-                    matrix[one, other] += row[one] * row[other]
-    for one in range(size):
-        for other in range(one):
-            matrix[other, one] = matrix[one, other]
-    return total
+                    matrix[run, one, other] += row[one] * row[other]
+        for one in range(size):
+            for other in range(one):
+                matrix[run, other, one] = matrix[run, one, other]
 
 
 @kernel
@@ -190,5 +186,5 @@ def _compile() -> None:
     flag_switches(np.array([0, 0, 1, 1]), begins, 1, 4, 8, bits)
     flag_slewing(values, begins, 1.0, 2, bits)
     runs = np.array([[0, 4]], np.int64)
-    pickup_sums(values, values, runs, 2, np.zeros((4, 4)), np.zeros(4))
+    pickup_sums(values, values, runs, 2, np.zeros((1, 4, 4)), np.zeros((1, 4)), np.zeros(1))
     subtract_pickup(values, 0, 0.1, np.array([0, 3]), np.zeros((2, 4)))

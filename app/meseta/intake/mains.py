@@ -36,7 +36,10 @@ FLOOR_SHARE: Final = 0.2
 FLOOR_WIDTHS: Final = 12.0
 """A band of 12 times the shortest stretch of values that holds a fifth of the samples takes in 6 sigma of noise, and a
 sine from end to end: a fifth of its time it spends within a tenth of its span."""
-SHORTEST_RUN_PERIODS: Final = 0.25
+SHORTEST_RUN_PERIODS: Final = 0.5
+LIVELY: Final = 2.0
+ROUNDS: Final = 4
+"""A stretch of which the fit leaves more than twice the usual mean square holds a decay or a step and takes no part."""
 SIGNIFICANT_SIGMAS: Final = 5.0
 MOST_FLOOR_PROBES: Final = 400_000
 
@@ -151,38 +154,59 @@ def _floor_band(read: Read, windows: Integers) -> tuple[float, float]:
     return centre - reach, centre + reach
 
 
-def _runs(values: Floats, band: tuple[float, float], shortest: int) -> Integers:
-    """Return (n, 2) ranges of at least ``shortest`` samples that lie within the band."""
+def _runs(values: Floats, band: tuple[float, float], period: float) -> Integers:
+    """Return (n, 2) ranges within the band, at most ``period`` samples long and not shorter than half of that."""
     inside = np.concatenate([[False], (values >= band[0]) & (values <= band[1]), [False]])
     edges = np.flatnonzero(np.diff(inside)).reshape(-1, 2)
-    long: Integers = np.ascontiguousarray(edges[edges[:, 1] - edges[:, 0] >= shortest], np.int64)
-    return long
+    edges = edges[edges[:, 1] - edges[:, 0] >= max(SHORTEST_RUN_PERIODS * period, 2)]
+    lengths = edges[:, 1] - edges[:, 0]
+    counts = np.maximum(np.ceil(lengths / period), 1).astype(np.int64)
+    number = np.arange(counts.sum()) - np.repeat(np.cumsum(counts) - counts, counts)
+    begin, whole, parts = np.repeat(edges[:, 0], counts), np.repeat(lengths, counts), np.repeat(counts, counts)
+    found = np.stack([begin + whole * number // parts, begin + whole * (number + 1) // parts], axis=1)
+    return np.ascontiguousarray(found, np.int64)
 
 
 @dataclass(frozen=True)
 class _Fit:
-    """Fourier parts of one window, what they explain and what is left, and over how many samples."""
+    """Fourier parts of one window, what they explain and what is left, over how many samples, and of which runs."""
 
     parts: Floats
     explained: float
     left: float
     samples: int
+    kept: npt.NDArray[np.bool_]
 
 
-def _fit(values: Floats, first: int, runs: Integers, cycles_a_sample: float, harmonics: int) -> _Fit | None:
+def _fit(
+    values: Floats,
+    first: int,
+    runs: Integers,
+    cycles_a_sample: float,
+    harmonics: int,
+    kept: npt.NDArray[np.bool_] | None = None,
+) -> _Fit | None:
+    """Fit one window; runs that are left lively are dropped and the rest fitted again, unless ``kept`` is told."""
     from meseta.intake.calibration_kernels import pickup_sums
 
-    used = int(np.sum(runs[:, 1] - runs[:, 0]))
-    if used * cycles_a_sample < 1.0:
-        return None
+    count, size = len(runs), 2 * harmonics
+    lengths = runs[:, 1] - runs[:, 0]
     turns = (first + np.arange(len(values))) * cycles_a_sample
-    matrix, vector = np.zeros((2 * harmonics, 2 * harmonics)), np.zeros(2 * harmonics)
-    total = pickup_sums(values, np.asarray(2 * np.pi * (turns % 1.0)), runs, harmonics, matrix, vector)
-    if np.linalg.cond(matrix) > 1e6:
-        return None
-    parts = np.asarray(np.linalg.solve(matrix, vector), np.float64)
-    explained = float(parts @ vector)
-    return _Fit(parts, explained, max(total - explained, 0.0), used)
+    matrix, vector, total = np.zeros((count, size, size)), np.zeros((count, size)), np.zeros(count)
+    pickup_sums(values, np.asarray(2 * np.pi * (turns % 1.0)), runs, harmonics, matrix, vector, total)
+    chosen = np.ones(count, np.bool_) if kept is None else kept
+    for _ in range(ROUNDS if kept is None else 1):
+        whole, right = matrix[chosen].sum(axis=0), vector[chosen].sum(axis=0)
+        if lengths[chosen].sum() * cycles_a_sample < 1.0 or np.linalg.cond(whole) > 1e6:
+            return None
+        parts = np.asarray(np.linalg.solve(whole, right), np.float64)
+        left = np.maximum(total - 2 * vector @ parts + np.einsum("i,nij,j->n", parts, matrix, parts), 0.0)
+        if kept is None:
+            quiet = left / lengths <= LIVELY * np.median(left / lengths)
+            if (quiet == chosen).all():
+                break
+            chosen = quiet
+    return _Fit(parts, float(parts @ right), float(left[chosen].sum()), int(lengths[chosen].sum()), chosen)
 
 
 def _thinned(values: Floats, by: int) -> Floats:
@@ -195,29 +219,34 @@ def _frequency(
     """Return the frequency whose Fourier series explains most of the floor, refined by a parabola."""
     by = max(1, int(1.0 / interval / THINNED_HERTZ))
     chosen = windows[np.unique(np.linspace(0, len(windows) - 1, PROBE_WINDOWS).astype(int))]
+    period = 1.0 / min(NOMINAL_HERTZ) / interval / by
     probes = []
     for begin, end in chosen.tolist():
         values = read(begin, end)
         inside = (values >= band[0]) & (values <= band[1])
         thin = _thinned(np.where(inside, values, np.nan), by)
-        shortest = max(2, int(SHORTEST_RUN_PERIODS / max(NOMINAL_HERTZ) / interval / by))
-        runs = _runs(thin, band, shortest)
+        runs = _runs(thin, band, period)
         if len(runs):
-            probes.append((np.nan_to_num(thin), runs))
+            probes.append((np.nan_to_num(thin), runs, np.ones(len(runs), np.bool_)))
 
     def explained(hertz: float) -> float:
-        fits = [_fit(values, 0, runs, hertz * interval * by, harmonics) for values, runs in probes]
+        fits = [_fit(values, 0, runs, hertz * interval * by, harmonics, kept) for values, runs, kept in probes]
         return sum(fit.explained for fit in fits if fit is not None)
 
     offsets = np.arange(-SEARCH_HERTZ, SEARCH_HERTZ + SEARCH_STEP_HERTZ / 2, SEARCH_STEP_HERTZ)
-    found = [(explained(nominal + away), nominal, away) for nominal in NOMINAL_HERTZ for away in offsets.tolist()]
+    found = [(explained(nominal + away), nominal + away) for nominal in NOMINAL_HERTZ for away in offsets.tolist()]
     if not found or max(found)[0] <= 0.0:
         return None
-    best, nominal, away = max(found)
-    before, after = explained(nominal + away - SEARCH_STEP_HERTZ), explained(nominal + away + SEARCH_STEP_HERTZ)
+    near = max(found)[1]
+    # once more round the best, without the runs that hold a decay or a step
+    fits = [(one, _fit(one[0], 0, one[1], near * interval * by, harmonics)) for one in probes]
+    probes = [(values, runs, fit.kept) for (values, runs, _), fit in fits if fit is not None]
+    found = [(explained(near + step * SEARCH_STEP_HERTZ), near + step * SEARCH_STEP_HERTZ) for step in range(-3, 4)]
+    best, near = max(found)
+    before, after = explained(near - SEARCH_STEP_HERTZ), explained(near + SEARCH_STEP_HERTZ)
     bend = before - 2 * best + after
     shift = 0.5 * (before - after) / bend if bend < 0 else 0.0
-    return float(nominal + away + SEARCH_STEP_HERTZ * np.clip(shift, -0.5, 0.5))
+    return float(near + SEARCH_STEP_HERTZ * np.clip(shift, -0.5, 0.5))
 
 
 def _followed(
@@ -230,11 +259,11 @@ def _followed(
 ) -> Pickup | None:
     """Fit every window at the common frequency; parts run linearly between the middles of windows of one piece."""
     frequency, interval, harmonics = rate
-    shortest = max(4, int(SHORTEST_RUN_PERIODS / max(NOMINAL_HERTZ) / interval))
+    period = 1.0 / min(NOMINAL_HERTZ) / interval
     middles, fits = [], []
     for begin, end in windows.tolist():
         values = read(begin, end)
-        runs = _runs(values, band, shortest)
+        runs = _runs(values, band, period)
         fit = _fit(np.nan_to_num(values), begin, runs, frequency * interval, harmonics) if len(runs) else None
         if fit is not None:
             middles.append((begin + end) // 2)
