@@ -149,6 +149,8 @@ class MainWindow(QMainWindow):
         dock.raise_()
         if view.room > dock.width() and not dock.isFloating():
             self.resizeDocks([dock], [min(view.room, self.width() * 2 // 5)], Qt.Orientation.Horizontal)
+            below = [self.docks[name] for name in ("conditions", "groups")]
+            self.resizeDocks([dock, *below], [self.height() * 3 // 5, 150, 100], Qt.Orientation.Vertical)
 
     def _make_menus(self) -> None:
         for name in MENUS:

@@ -14,7 +14,8 @@ import numpy as np
 from PySide6.QtCore import QObject, Signal
 
 from meseta import typeset
-from meseta.peaks import PeakFit
+from meseta.errors import CallError, MesetaError
+from meseta.peaks import PeakFit, editable_peaks, edited_peaks
 from meseta.recipe.peaks import PeakSettings, PeakStart
 
 if TYPE_CHECKING:
@@ -40,7 +41,7 @@ def said_of(start: PeakStart, settings: PeakSettings, number: int) -> str:
         said.append("width held")
     if start.low_g0 is not None or start.high_g0 is not None:
         said.append("bounded")
-    if settings.tie != "none":
+    if settings.tie != "none" and start.tied:
         multiple = float(number) if start.multiple is None else start.multiple
         said.append(f"{typeset.TIMES}{typeset.THIN_SPACE}{multiple:g}")
     return ", ".join(said) or "free"
@@ -89,20 +90,10 @@ class PeakEditor(QObject):
 
     def starts(self) -> list[PeakStart]:
         """Return the peaks asked for, else those proposed and fitted, sorted by conductance."""
-        if self.asked:
-            return sorted(self.settings.peaks, key=lambda start: start.position_g0)
         fit = self.fit
         if fit is None:
-            return []
-        names = [str(name) for name in fit.table.peak]
-        return [
-            PeakStart(
-                name="" if names[row] == str(row + 1) else names[row],
-                position_g0=float(fit.table.position_g0[row]),
-                width=_positive(float(fit.table.fwhm[row]) / FWHM_IN_SIGMA),
-            )
-            for row in np.flatnonzero(np.isfinite(fit.table.position_g0)).tolist()
-        ]
+            return sorted(self.settings.peaks, key=lambda start: start.position_g0)
+        return editable_peaks(self.settings, fit.table)
 
     def row_of(self, place: int) -> int:
         """Return the row of the fit's table that belongs to a peak; -1 where the fit does not know it yet."""
@@ -178,7 +169,7 @@ class PeakEditor(QObject):
 
     def add(self, position_g0: float) -> None:
         """Ask for one more peak, and choose it."""
-        if self._session.traces is None or not np.isfinite(position_g0):
+        if self._session.traces is None or not 0 < position_g0 < np.inf:
             return
         new = PeakStart(position_g0=position_g0)
         starts = sorted([*self.starts(), new], key=lambda start: start.position_g0)
@@ -203,7 +194,8 @@ class PeakEditor(QObject):
     def move(self, place: int, position_g0: float, same: str = "") -> None:
         """Begin the fit of a peak elsewhere, within its bounds."""
         starts = self.starts()
-        if not 0 <= place < len(starts) or not np.isfinite(position_g0):
+        if not 0 <= place < len(starts) or not 0 < position_g0 < np.inf:
+            self.chosen_changed.emit(self.chosen)  # handles go back
             return
         start, name = starts[place], self.name_of(place)
         low = -np.inf if start.low_g0 is None else start.low_g0
@@ -239,11 +231,17 @@ class PeakEditor(QObject):
         width = starts[place].width
         if on and row >= 0 and fit is not None:
             width = _positive(float(fit.table.fwhm[row]) / FWHM_IN_SIGMA)
+        if on and width is None:
+            raise CallError(f"the width of {self.name_of(place)} is not known yet", "peaks", "wait for the fit")
         self._update(place, "hold the width of" if on else "free the width of", fixed_width=on, width=width)
 
     def bound(self, place: int, low_g0: float | None, high_g0: float | None) -> None:
-        """Bound a peak's position; None leaves an end open."""
-        self._update(place, "bound", low_g0=low_g0, high_g0=high_g0)
+        """Bound a peak's position; None leaves an end open.  A start outside moves to the nearer bound."""
+        starts = self.starts()
+        if 0 <= place < len(starts):
+            low, high = low_g0 or 0.0, np.inf if high_g0 is None else high_g0
+            inside = float(min(max(starts[place].position_g0, low), high))
+            self._update(place, "bound", low_g0=low_g0, high_g0=high_g0, position_g0=inside)
 
     def replace(self, place: int, start: PeakStart) -> None:
         """Put another description in place of a peak's."""
@@ -252,12 +250,16 @@ class PeakEditor(QObject):
     def tie(self, kind: str) -> None:
         """Tie the positions of all peaks, or free them."""
         text = "free the positions of the peaks" if kind == "none" else f"tie the peaks: {TIES[kind]}"
-        self._set(text, tie=kind)
+        self._set(text, self.starts() if self.asked or kind == "none" else self._to_tie(), tie=kind)
+
+    def _to_tie(self) -> list[PeakStart]:
+        """Return the proposed peaks, tied where they are near a multiple of G0."""
+        return [start.model_copy(update={"tied": start.multiple is not None}) for start in self.starts()]
 
     def equal_widths(self, on: bool) -> None:
         """Make all peaks equally wide relative to their position, or free their widths."""
         text = "tie the widths of the peaks" if on else "free the widths of the peaks"
-        self._set(text, equal_relative_widths=on)
+        self._set(text, self.starts() if on or self.asked else (), equal_relative_widths=on)
 
     def forget(self) -> None:
         """Ask for no peaks in particular: they are proposed from the histogram."""
@@ -274,11 +276,18 @@ class PeakEditor(QObject):
             self.choose(starts.index(changed))
 
     def _write(self, text: str, starts: Sequence[PeakStart], same: str = "") -> None:
-        self._set(text, same, peaks=[start.model_dump() for start in starts])
+        self._set(text, starts, same)
 
-    def _set(self, text: str, same: str = "", **values: Any) -> None:
+    def _set(self, text: str, starts: Sequence[PeakStart], same: str = "", **ties: Any) -> None:
+        """Write peaks and ties as one step; where they do not go together the window says why, and nothing changes."""
         session = self._session
-        recipe = session.document.recipe.with_values("peaks", **values)
+        try:
+            settings = edited_peaks(self.settings, starts, **ties)
+        except MesetaError as error:
+            session.problem.emit(error)
+            self.chosen_changed.emit(self.chosen)
+            return
+        recipe = session.document.recipe.model_copy(update={"peaks": settings})
         session.change(text, replace(session.document, recipe=recipe), same)
 
 

@@ -10,7 +10,8 @@ from meseta.window.views.correlation import VIEW as CORRELATION
 from meseta.window.views.declaration import View
 from meseta.window.views.displacement import VIEW as DISPLACEMENT
 from meseta.window.views.histogram import VIEW as HISTOGRAM
-from meseta.window.views.peaks import VIEWS as PEAKS
+from meseta.window.views.peaks import PEAKS
+from meseta.window.views.peaks import VIEWS as PEAK_VIEWS
 from meseta.window.views.steps import VIEW as STEPS
 from meseta.window.views.strip import VIEW as STRIP
 from meseta.window.views.tables import VIEWS as TABLES
@@ -18,5 +19,16 @@ from meseta.window.views.trace import VIEW as TRACE
 
 __all__ = ["VIEWS", "View"]
 
-VIEWS: tuple[View, ...] = (TRACE, DISPLACEMENT, HISTOGRAM, STRIP, STEPS, *PEAKS, *TABLES, *CONDITIONS, CORRELATION)
+VIEWS: tuple[View, ...] = (
+    TRACE,
+    DISPLACEMENT,
+    HISTOGRAM,
+    STRIP,
+    STEPS,
+    PEAKS,
+    *TABLES,
+    *CONDITIONS,
+    *PEAK_VIEWS,
+    CORRELATION,
+)
 """All views, in the order in which menus name them."""

@@ -31,6 +31,8 @@ class PeakDialog(QDialog):
         self.fixed, self.fixed_width = QCheckBox("hold the position"), QCheckBox("hold the width")
         self.fixed.setChecked(start.fixed)
         self.fixed_width.setChecked(start.fixed_width)
+        self.tied = QCheckBox("takes part in a tie of positions")
+        self.tied.setChecked(start.tied)
         self.wrong = QLabel("")
         self.wrong.setProperty("tone", "fit")
         self.wrong.setWordWrap(True)
@@ -43,6 +45,7 @@ class PeakDialog(QDialog):
         self.edits["width"].setPlaceholderText("from the histogram")
         form.addRow("", self.fixed)
         form.addRow("", self.fixed_width)
+        form.addRow("", self.tied)
         form.addRow(self.wrong)
         buttons = QDialogButtonBox(QDialogButtonBox.StandardButton.Ok | QDialogButtonBox.StandardButton.Cancel)
         buttons.accepted.connect(self.accept)
@@ -63,12 +66,16 @@ class PeakDialog(QDialog):
         position, low, high, width = (numbers[name] for name in ("position_g0", "low_g0", "high_g0", "width"))
         if position is None:
             raise ValueError("write where the fit begins, in G0")
+        for name, words in (("position_g0", "a conductance"), ("low_g0", "a bound"), ("high_g0", "a bound")):
+            if numbers[name] is not None and not numbers[name] > 0:  # type: ignore[operator]
+                raise ValueError(f"{words} is above zero")
         if low is not None and high is not None and low >= high:
             raise ValueError("the bounds are empty: write the lower end first")
         if (low is not None and position < low) or (high is not None and position > high):
             raise ValueError("the fit begins outside its bounds")
-        if width is not None and width <= 0:
-            raise ValueError("a width is above zero")
+        for name in ("width", "multiple"):
+            if numbers[name] is not None and not numbers[name] > 0:  # type: ignore[operator]
+                raise ValueError(f"a {name} is above zero")
         if self.fixed_width.isChecked() and width is None:
             raise ValueError("write the width that is to be held")
         return PeakStart(
@@ -80,6 +87,8 @@ class PeakDialog(QDialog):
             multiple=numbers["multiple"],
             fixed=self.fixed.isChecked(),
             fixed_width=self.fixed_width.isChecked(),
+            tied=self.tied.isChecked(),
+            tied_width=self._start.tied_width,
         )
 
     def accept(self) -> None:
