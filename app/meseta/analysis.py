@@ -25,6 +25,7 @@ from meseta.histograms import (
     CorrelationHistogram,
     CountMatrix,
     DisplacementHistogram,
+    Yield,
 )
 from meseta.intake import Alignment
 from meseta.peaks import PeakTable
@@ -47,6 +48,7 @@ __all__ = [
     "find_plateaus",
     "fit_peaks",
     "phases_of",
+    "yield_in_window",
 ]
 
 
@@ -754,6 +756,47 @@ def compare_recordings(analyses: Mapping[str, Analysis], work: Work | None = Non
         raise CallError("there is nothing to compare", "comparison", "give at least one recording")
     first = next(iter(analyses.values()))
     return histograms.compared(members, first.recipe.histogram)
+
+
+def yield_in_window(
+    analysis: Analysis,
+    window_g0: tuple[float, float],
+    blank: Analysis | None = None,
+    efficiency: float = 1.0,
+    efficiency_error: float = 0.0,
+    work: Work | None = None,
+) -> Yield:
+    """Return the share of kept traces with a molecule: those with a plateau in a window, less what a blank shows.
+
+    Parameters
+    ----------
+    analysis : Analysis
+    window_g0 : (low, high)
+        Conductance of the molecule's plateaus.
+    blank : Analysis, optional
+        Of a recording without the molecule; its plateaus must be found with the same ``[plateaus]`` settings.
+    efficiency, efficiency_error : float
+        See :func:`meseta.histograms.molecular_yield` and :func:`meseta.histograms.window_efficiency`.
+
+    Raises
+    ------
+    CallError
+        Where the blank's plateaus are found with other settings.
+    """
+    if blank is not None and blank.recipe.key(("plateaus",)) != analysis.recipe.key(("plateaus",)):
+        raise CallError(
+            "plateaus of the blank are found with other settings", "molecular yield", "use one recipe for both"
+        )
+    sides = []
+    for one in (analysis, blank):
+        if one is None:
+            sides.append((None, None))
+            continue
+        kept = one.selection(work).kept
+        hit = histograms.hits_in_window(one.plateaus(work), one.traces.traces, window_g0)
+        sides.append((hit[kept], one.traces.table["specimen"][kept]))
+    (hit, specimen), (blank_hit, blank_specimen) = sides
+    return histograms.molecular_yield(hit, blank_hit, efficiency, efficiency_error, specimen, blank_specimen)
 
 
 def defensible_analyses(analysis: Analysis, work: Work | None = None) -> peaks.DefensibleAnalyses:

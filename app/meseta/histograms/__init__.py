@@ -12,7 +12,7 @@ traces that satisfy something  :func:`conditional_histogram`
 parts, or recordings           ``meseta.analysis.compare_parts``, ``compare_recordings``; then
                                :meth:`Comparison.difference`
 a later trace                  :func:`shifted_map`
-molecule and blank             :func:`molecular_yield`
+molecule and blank             :func:`molecular_yield` (``meseta.analysis.yield_in_window`` from two recordings)
 =============================  ========================================================================================
 """
 
@@ -63,7 +63,7 @@ from meseta.histograms.temporal import (
     shifted_correlation,
     temporal_histogram,
 )
-from meseta.histograms.yields import Yield, hits_in_window, molecular_yield
+from meseta.histograms.yields import Yield, hits_in_window, molecular_yield, window_efficiency
 
 __all__ = [
     "EXCLUDED",
@@ -121,5 +121,6 @@ __all__ = [
     "shifted_map",
     "spacing_of",
     "temporal_histogram",
+    "window_efficiency",
     "with_bins",
 ]
