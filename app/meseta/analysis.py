@@ -787,16 +787,16 @@ def yield_in_window(
         raise CallError(
             "plateaus of the blank are found with other settings", "molecular yield", "use one recipe for both"
         )
-    sides = []
-    for one in (analysis, blank):
-        if one is None:
-            sides.append((None, None))
-            continue
-        kept = one.selection(work).kept
-        hit = histograms.hits_in_window(one.plateaus(work), one.traces.traces, window_g0)
-        sides.append((hit[kept], one.traces.table["specimen"][kept]))
-    (hit, specimen), (blank_hit, blank_specimen) = sides
+    hit, specimen = _hits(analysis, window_g0, work)
+    blank_hit, blank_specimen = (None, None) if blank is None else _hits(blank, window_g0, work)
     return histograms.molecular_yield(hit, blank_hit, efficiency, efficiency_error, specimen, blank_specimen)
+
+
+def _hits(analysis: Analysis, window_g0: tuple[float, float], work: Work | None) -> tuple[Any, Any]:
+    """Return of every kept trace whether it has a plateau in the window, and its specimen."""
+    kept = analysis.selection(work).kept
+    hit = histograms.hits_in_window(analysis.plateaus(work), analysis.traces.traces, window_g0)
+    return hit[kept], analysis.traces.table["specimen"][kept]
 
 
 def defensible_analyses(analysis: Analysis, work: Work | None = None) -> peaks.DefensibleAnalyses:
