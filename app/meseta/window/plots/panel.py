@@ -11,7 +11,7 @@ import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QPointF, QRectF, Qt, QTimer
 from PySide6.QtGui import QContextMenuEvent, QGuiApplication, QResizeEvent
-from PySide6.QtWidgets import QFileDialog, QHBoxLayout, QLabel, QMenu, QVBoxLayout, QWidget
+from PySide6.QtWidgets import QFileDialog, QHBoxLayout, QLabel, QMenu, QSizePolicy, QVBoxLayout, QWidget
 
 from meseta import typeset
 from meseta.window.elided import Elided
@@ -143,6 +143,11 @@ class PlotPanel(QWidget):
         """Write a quiet line beside the heading; all of it is its tool tip where it does not fit."""
         self.note.say(text)
         self.note.setVisible(bool(text))
+        wide = QSizePolicy.Policy.Preferred if text else QSizePolicy.Policy.Ignored
+        self.heading.setSizePolicy(wide, QSizePolicy.Policy.Fixed)
+        top = self.header.layout()
+        if isinstance(top, QHBoxLayout):
+            top.setStretch(0, 0 if text else 1)
 
     def say_heading(self, text: str) -> None:
         """Write the heading."""

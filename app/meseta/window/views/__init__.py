@@ -12,6 +12,7 @@ from meseta.window.views.displacement import VIEW as DISPLACEMENT
 from meseta.window.views.histogram import VIEW as HISTOGRAM
 from meseta.window.views.peaks import PEAKS
 from meseta.window.views.peaks import VIEWS as PEAK_VIEWS
+from meseta.window.views.record import VIEW as RECORD
 from meseta.window.views.steps import VIEW as STEPS
 from meseta.window.views.strip import VIEW as STRIP
 from meseta.window.views.tables import VIEWS as TABLES
@@ -30,5 +31,6 @@ VIEWS: tuple[View, ...] = (
     *CONDITIONS,
     *PEAK_VIEWS,
     CORRELATION,
+    RECORD,
 )
 """All views, in the order in which menus name them."""

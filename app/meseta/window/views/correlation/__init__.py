@@ -11,6 +11,6 @@ VIEW = View(
     "right",
     CorrelationPanel,
     help_page="correlation",
-    steps=("correlation_histogram",),
     shown=False,
+    room=480,
 )

@@ -276,6 +276,8 @@ class HistogramPanel(SpinePanel):
             self.say_empty("No sample lies in the range. See the step Conductance histogram.")
         else:
             self.say_empty("")
+        resampling = session.result("resampling")
+        self.heading.setToolTip(self.title if resampling is None else resampling.statement())
         words = {"out of date": "out of date", "working": "provisional" if shown else ""}
         self.say_state(words.get(state, "") if shown is not None else "")
 

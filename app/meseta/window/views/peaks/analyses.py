@@ -180,10 +180,10 @@ class AnalysesPanel(PlotPanel):
         self.box.setXRange(-0.5, len(order) - 0.5, padding=0)
         self.said.setPos(-0.5, float(ends.max() + 2.5 * room))
         chosen = float(spread.chosen_g0[row])
+        count, inner = typeset.integer(int(spread.analyses[row])), typeset.interval(bottom, top, "G0")
+        whole = typeset.interval(float(spread.lowest_g0[row]), float(spread.highest_g0[row]), "G0")
         self.said.setText(
-            f"{typeset.integer(int(spread.analyses[row]))} analyses: nine tenths in\n{typeset.interval(bottom, top, 'G0')},\n"
-            f"all in {typeset.interval(float(spread.lowest_g0[row]), float(spread.highest_g0[row]), 'G0')} "
-            f"; reported {typeset.conductance(chosen)}"
+            f"{count} analyses, nine tenths in {inner},\nall in {whole}; reported {typeset.conductance(chosen)}"
         )
         reported = np.flatnonzero(order == shown.chosen)
         self.chosen.setData(reported.astype(float), shown.position_g0[order[reported]])

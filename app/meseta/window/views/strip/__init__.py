@@ -5,4 +5,4 @@ from meseta.window.views.strip.panel import StripPanel
 
 __all__ = ["VIEW"]
 
-VIEW = View("strip", "Record", "below", StripPanel, help_page="temporal")
+VIEW = View("strip", "Record", "below", StripPanel, help_page="temporal", steps=("drift",))

@@ -97,6 +97,7 @@ class StripPanel(PlotPanel):
         self.position.setVisible(traces is not None)
         self._draw_ribbons()
         self._draw_marks()
+        self._say_statements()
         self._say()
 
     def _result_changed(self, name: str) -> None:
@@ -104,6 +105,8 @@ class StripPanel(PlotPanel):
             self._ask()
         if name == "selection":
             self._draw_ribbons()
+        if name in ("drift", "resampling"):
+            self._say_statements()
 
     def _document_changed(self, change: Change) -> None:
         if change.conditions:
@@ -270,6 +273,12 @@ class StripPanel(PlotPanel):
             self.say_empty("")
         out = self.session.state("counts") == "out of date"
         self.say_state("out of date" if out else "")
+
+    def _say_statements(self) -> None:
+        """Say beside the heading whether the record drifts, and what its traces are worth."""
+        drift, resampling = self.session.result("drift"), self.session.result("resampling")
+        parts = ([] if resampling is None else [resampling.statement()]) + ([] if drift is None else [drift.text])
+        self.say_note("; ".join(parts))
 
     def data(self) -> PlotData | None:
         """Return the columns of the picture: mean counts a trace, one row a bin."""
