@@ -10,6 +10,7 @@ from meseta.window.views.correlation import VIEW as CORRELATION
 from meseta.window.views.declaration import View
 from meseta.window.views.displacement import VIEW as DISPLACEMENT
 from meseta.window.views.histogram import VIEW as HISTOGRAM
+from meseta.window.views.lengths import VIEW as LENGTHS
 from meseta.window.views.peaks import PEAKS
 from meseta.window.views.peaks import VIEWS as PEAK_VIEWS
 from meseta.window.views.record import VIEW as RECORD
@@ -32,5 +33,6 @@ VIEWS: tuple[View, ...] = (
     *PEAK_VIEWS,
     CORRELATION,
     RECORD,
+    LENGTHS,
 )
 """All views, in the order in which menus name them."""
