@@ -24,8 +24,7 @@ __all__ = [
 
 Floats = npt.NDArray[np.float64]
 _CHUNK = 2048
-_EXACT_FLOAT32 = 1 << 23
-"""Half of where float32 stops to be exact, because the test itself is rounded."""
+_EXACT_FLOAT32 = 1 << 24
 WEAK_TRACES = 20
 """Bins that fewer traces reach take no part in the significance."""
 _BLOCK_TRACES = 100
@@ -49,36 +48,33 @@ def correlation_of(counts: npt.NDArray[np.number]) -> Floats:
     -----
     C_ij = <dN_i dN_j> / sqrt(<dN_i^2><dN_j^2>), Makk et al., ACS Nano 6, 3411 (2012).
     """
-    values = np.asarray(counts)
-    traces = len(values)
-    total = values.sum(0, dtype=np.float64)
-    covariance = traces * products(values)
-    covariance -= np.outer(total, total)
-    scale = np.sqrt(np.diag(covariance))
-    with np.errstate(invalid="ignore", divide="ignore"):
-        result: Floats = covariance / np.outer(scale, scale)
-    varies = scale > 0
-    np.fill_diagonal(result, np.where(varies, 1.0, np.nan))
-    return np.clip(result, -1.0, 1.0, out=result)
+    values = np.ascontiguousarray(counts)
+    total = np.zeros(values.shape[1])
+    result = np.empty((values.shape[1], values.shape[1]))
+    kernels.correlate_products(products(values, total), total, len(values), result)
+    return result
 
 
-def products(values: npt.NDArray[np.number]) -> Floats:
+def products(values: npt.NDArray[np.number], total: Floats | None = None) -> Floats:
     """Return the sums over traces of the products of every two columns, exact for integers.
 
     A chunk of traces whose sums of squares stay below 2**24 is multiplied in float32, where all its partial sums are
-    exact (by Cauchy and Schwarz no product's sum is larger); any other in float64.
+    exact (by Cauchy and Schwarz no product's sum is larger); any other in float64.  ``total`` gets the columns' sums.
     """
     bins = values.shape[1]
-    total = np.zeros((bins, bins))
+    result = np.zeros((bins, bins))
+    total = np.zeros(bins) if total is None else total
+    narrow = np.empty((min(_CHUNK, len(values)), bins), np.float32)
     for first in range(0, len(values), _CHUNK):
-        chunk = values[first : first + _CHUNK]
-        part = np.asarray(chunk, np.float32)
-        if np.einsum("ij,ij->j", part, part).max(initial=0.0) < _EXACT_FLOAT32:
-            total += part.T @ part
+        chunk = np.ascontiguousarray(values[first : first + _CHUNK])
+        part, squares = narrow[: len(chunk)], np.zeros(bins)
+        kernels.narrow_rows(chunk, part, total, squares)
+        if squares.max(initial=0.0) < _EXACT_FLOAT32:
+            result += part.T @ part
         else:
             exact = chunk.astype(np.float64)
-            total += exact.T @ exact
-    return total
+            result += exact.T @ exact
+    return result
 
 
 def block_traces(traces: int) -> int:

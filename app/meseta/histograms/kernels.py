@@ -13,6 +13,7 @@ import numpy.typing as npt
 from meseta.kernels import kernel, warm_up
 
 __all__ = [
+    "correlate_products",
     "count_explicit_grid",
     "count_flagged_rows",
     "count_rows",
@@ -23,6 +24,7 @@ __all__ = [
     "fold_rows",
     "largest_product",
     "merge_rows",
+    "narrow_rows",
     "permute_within",
     "place_of",
     "settle_region",
@@ -165,6 +167,43 @@ def merge_rows(
             for at in range(coarse * merge, min(coarse * merge + merge, len(line))):
                 total += line[at]
             merged[place, coarse] = total
+
+
+@kernel
+def narrow_rows(
+    values: npt.NDArray[np.number],
+    narrow: npt.NDArray[np.float32],
+    total: npt.NDArray[np.float64],
+    squares: npt.NDArray[np.float64],
+) -> None:
+    """Write rows as float32; add every column's sum to ``total`` and its sum of squares to ``squares``."""
+    for row in range(values.shape[0]):
+        for column in range(values.shape[1]):
+            value = np.float64(values[row, column])
+            narrow[row, column] = value
+            total[column] += value
+            squares[column] += value * value
+
+
+@kernel
+def correlate_products(
+    products: npt.NDArray[np.float64],
+    total: npt.NDArray[np.float64],
+    rows: int,
+    result: npt.NDArray[np.float64],
+) -> None:
+    """Write Pearson's correlation of columns from their sums and sums of products; NaN where a column is constant."""
+    columns = len(total)
+    scale = np.empty(columns)
+    for column in range(columns):
+        spread = rows * products[column, column] - total[column] * total[column]
+        scale[column] = np.sqrt(spread) if spread > 0.0 else np.nan
+    for one in range(columns):
+        for other in range(columns):
+            covariance = rows * products[one, other] - total[one] * total[other]
+            value = covariance / (scale[one] * scale[other])
+            result[one, other] = -1.0 if value < -1.0 else (1.0 if value > 1.0 else value)
+        result[one, one] = 1.0 if scale[one] > 0.0 else np.nan
 
 
 @kernel
@@ -433,6 +472,9 @@ def _warm_up() -> None:
         count_flagged_rows(values, np.zeros(5, np.uint8), begin, end, table, thresholds, column, counts, special, 0, 1)
     draw_blocks(np.zeros((1, 1), np.int64), end, np.arange(5), np.zeros((1, 5), np.uint16))
     square = np.ones((2, 2), np.float32)
+    for wide in (np.ones((2, 2)), np.ones((2, 2), np.int64), np.ones((2, 2), np.uint16)):
+        narrow_rows(wide, square, np.zeros(2), np.zeros(2))
+    correlate_products(np.ones((2, 2)), np.ones(2), 2, np.ones((2, 2)))
     permute_within(square, 2, np.ones(2, np.uint64), square.copy())
     largest_product(square)
     settle_region(values, begin, end, values[:1], end, np.zeros(1, np.int64))
