@@ -149,7 +149,7 @@ def test_a_window_drawn_on_the_histogram_picks_traces_everywhere(window, settle)
     assert np.array_equal(session.subset.histogram.counts, own.counts)
     x, _ = panel(window, "histogram").part.getData()
     assert np.array_equal(x, np.repeat(own.density, 2))
-    assert panel(window, "trace")._overlay_picture.asked == expected.sum()
+    assert panel(window, "trace").overlay.picture.asked == expected.sum()
     assert panel(window, "displacement").over.isVisible()
     assert (
         panel(window, "displacement").data().columns["counts"].sum() == panel(window, "displacement")._part.counts.sum()

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gc
 import sys
 from collections.abc import Callable
 from pathlib import Path
@@ -23,10 +24,13 @@ from meseta.window.theme import ThemeKeeper
 __all__ = ["make_application", "make_window", "open_window"]
 
 PREPARE = Channel("prepare", quick=True, shown=False)
+SWITCH_SECOND = 0.0005
+"""How long a worker's Python code keeps the interpreter once the window's thread asks for it: painting asks often."""
 
 
 def make_application() -> QApplication:
     """Return the application, made with the look of Meseta."""
+    sys.setswitchinterval(SWITCH_SECOND)
     found = QApplication.instance()
     if isinstance(found, QApplication):
         return found
@@ -101,7 +105,9 @@ def prepare(window: MainWindow) -> None:
         assert study is not None
         return kernels.compile_all()
 
-    window.jobs.submit(PREPARE, "getting ready", task, lambda _: None)
+    # What is loaded by now stays: the collector need not look at a million lasting objects, which would stop every
+    # thread for a tenth of a second each time.
+    window.jobs.submit(PREPARE, "getting ready", task, lambda _: gc.freeze())
 
 
 def _shown_in(window: MainWindow, earlier: Callable[..., Any]) -> Callable[..., Any]:

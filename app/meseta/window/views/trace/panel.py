@@ -11,12 +11,13 @@ import pyqtgraph as pg
 from meseta import typeset
 from meseta.window.envelope import heights
 from meseta.window.frame import Frame
-from meseta.window.pictures import OverlayPicture, TracePicture
+from meseta.window.pictures import TracePicture
 from meseta.window.plots.drawing import WindowTool
 from meseta.window.plots.panel import DrivePanel, PlotData
 from meseta.window.plots.ticks import PlainAxis
 from meseta.window.session import Change
 from meseta.window.theme import Theme
+from meseta.window.views.trace.overlay import OverlayLayer
 
 __all__ = ["TracePanel"]
 
@@ -31,19 +32,18 @@ class TracePanel(DrivePanel):
     object_name = "trace"
 
     def __init__(self, frame: Frame) -> None:
-        self._overlay_picture: OverlayPicture | None = None
         super().__init__(frame, PlainAxis("bottom", "displacement (nm)"))
-        self.overlay = _curve(1)
         self.curve = _curve(10)
         self.levels = _curve(20)
         self.caps = _curve(20)
         self.labels: list[pg.TextItem] = []
-        for item in (self.overlay, self.curve, self.levels, self.caps):
+        for item in (self.curve, self.levels, self.caps):
             self.box.addItem(item, ignoreBounds=True)
+        self.overlay = OverlayLayer(self)
         self.tool = WindowTool(self, across=True)
         session = self.session
         session.picture_changed.connect(self._show)
-        session.overlay_changed.connect(self._show_overlay)
+        session.overlay_changed.connect(self.overlay.show)
         session.traces_changed.connect(self._traces_changed)
         session.document_changed.connect(self._document_changed)
         session.current_changed.connect(self._current_changed)
@@ -58,17 +58,12 @@ class TracePanel(DrivePanel):
         """Take the colours of a theme."""
         super().wear(theme)
         self.curve.setPen(theme.pen("ink"))
-        self._pen_overlay()
+        self.overlay.wear(theme)
         self.levels.setPen(theme.wide_pen("selected", 3.0))
         self.caps.setPen(theme.wide_pen("selected", 2.0))
         for label in self.labels:
             self._wear_label(label)
         self.tool.wear(theme)
-
-    def _pen_overlay(self) -> None:
-        """Draw the overlay the fainter the more traces it holds, so that the current one stands out."""
-        drawn = 1 if self._overlay_picture is None else max(self._overlay_picture.drawn, 1)
-        self.overlay.setPen(self.frame.theme.pen("selected", alpha=int(min(max(5000 / drawn, 22), 120))))
 
     def _wear_label(self, label: pg.TextItem) -> None:
         theme = self.frame.theme
@@ -94,9 +89,9 @@ class TracePanel(DrivePanel):
         self._clear()
 
     def _clear(self) -> None:
-        for item in (self.curve, self.levels, self.caps, self.overlay):
+        for item in (self.curve, self.levels, self.caps):
             item.setData([], [])
-        self._overlay_picture = None
+        self.overlay.show(None)
         self._label([], [], [])
 
     def _current_changed(self, trace: int) -> None:
@@ -105,7 +100,8 @@ class TracePanel(DrivePanel):
             self.say_heading(f"Trace {typeset.integer(trace)}")
 
     def _redraw(self, _: object) -> None:
-        """Place labels and caps anew: they depend on what is in view."""
+        """Place labels and caps anew: they depend on what is in view; so does the image of the overlay."""
+        self.overlay.ask()
         if self.session.picture is not None:
             self._show_plateaus(self.session.picture)
 
@@ -113,7 +109,7 @@ class TracePanel(DrivePanel):
         if change.before.recipe.histogram.axis != change.after.recipe.histogram.axis:
             if self.session.picture is not None:
                 self._show(self.session.picture)
-            self._show_overlay(self._overlay_picture)
+            self.overlay.ask()
 
     def _show(self, picture: TracePicture) -> None:
         lowest, axis = self._lowest(), self.session.axis
@@ -168,17 +164,6 @@ class TracePanel(DrivePanel):
                 index = shown[place]
                 label.setText(texts[index])
                 label.setPos(xs[index], us[index])
-
-    def _show_overlay(self, overlay: OverlayPicture | None) -> None:
-        self._overlay_picture = overlay
-        if overlay is None:
-            self.overlay.setData([], [])
-            return
-        self._pen_overlay()
-        heights_u = overlay.curve.on(self.session.axis, self._lowest())
-        self.overlay.setData(overlay.curve.x, heights_u, connect="finite")
-        if overlay.drawn < overlay.asked:
-            self.overlay.setToolTip(f"{overlay.drawn} of {overlay.asked} traces drawn")
 
     # -- the numbers behind it ---------------------------------------------------------------------------------------
 
