@@ -194,7 +194,7 @@ def test_planted_mistakes_are_named_by_the_check_up(tmp_path):
 
     def findings(factor: float) -> dict[str, object]:
         path = record(tmp_path, conductance=(np.array(rows) * factor, {"unit": "G0"}))
-        described, _ = intake.describe(path, Recipe())
+        described, _ = intake.describe(path, Recipe.build({"intake": {"layout": "rows"}}))
         return {one.check: one for one in described[0].findings}
 
     assert findings(1.0)["single-atom peak"].fine

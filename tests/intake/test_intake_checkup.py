@@ -38,7 +38,7 @@ def record(folder: Path, **channels: tuple[np.ndarray, dict[str, object]]) -> Pa
 
 
 def findings(path: Path, **calibration: object) -> dict[str, Finding]:
-    described, _ = intake.describe(path, Recipe.build({"calibration": calibration}))
+    described, _ = intake.describe(path, Recipe.build({"calibration": calibration, "intake": {"layout": "rows"}}))
     return {one.check: one for one in described[0].findings}
 
 
@@ -141,3 +141,113 @@ def test_two_gains_are_compared_in_their_overlap(tmp_path, true_gain, fine):
     assert not any("no full scale" in one for one in intake.read(path, recipe).notes["assumptions"])
     without = intake.read(path, Recipe.build({"calibration": stated})).notes["assumptions"]
     assert any("no full scale is stated" in one for one in without)
+
+
+@pytest.mark.parametrize(
+    ("stated", "fine", "said"),
+    [(10.0, True, ""), (100.0, False, "factor 10 below"), (1.0, False, "factor 10 above"), (20.0, False, "factor 2")],
+)
+def test_full_scale_off_by_a_factor_names_the_converter(tmp_path, stated, fine, said):
+    """Readings pile up at 10 V, the end of the converter, whatever full scale is stated."""
+    rng = np.random.default_rng(6)
+    clipped = np.clip(contacts() * 7.5 + 1e-3 * rng.normal(size=(TRACES, SAMPLES)), -10, 10)
+    path = record(tmp_path, amplifier=(clipped, {"unit": "V"}))
+    gain = 7.5 / (G0_SIEMENS * 0.1)
+    found = findings(path, gain_volt_per_ampere=gain, bias_volt=0.1, full_scale_volt=stated)["full scale"]
+    assert found.fine == fine
+    assert said in found.text
+
+
+@pytest.mark.parametrize(("share", "fine"), [(1.0, True), (0.02, False)])
+def test_a_floor_quieter_than_the_feedback_resistor_is_named(tmp_path, share, fine):
+    """10 Mohm alone have 2.88 pA rms in 5 kHz at 300 K: sqrt(4 k T B / R) (Nyquist, Phys. Rev. 32, 110)."""
+    from scipy import constants
+
+    ampere = np.sqrt(4 * constants.k * 300.0 * 5e3 / 1e7)
+    assert ampere == pytest.approx(2.878e-12, rel=1e-3)
+    rng = np.random.default_rng(7)
+    values = contacts() * G0_SIEMENS * 0.1
+    values[:, 300:] = rng.normal(0, share * ampere, (TRACES, 300))
+    path = record(tmp_path, amplifier=(values * 1e7, {"unit": "V"}))
+    found = findings(path, gain_volt_per_ampere=1e7, bias_volt=0.1, sampling_hertz=1e4)["floor"]
+    assert found.fine == fine
+    assert "1e+07 ohm" in found.text
+
+
+@pytest.mark.parametrize(("amplitude", "fine"), [(0.0, True), (5e-4, True), (1e-2, False)])
+def test_mains_pickup_is_reported_against_the_noise(tmp_path, amplitude, fine):
+    rng = np.random.default_rng(8)
+    volts = contacts() * G0_SIEMENS * 0.1 * 1e5
+    volts[:, 300:] = 1e-3 * rng.normal(size=(TRACES, 300))
+    time = np.arange(volts.size).reshape(volts.shape) / 5e3
+    path = record(tmp_path, amplifier=(volts + amplitude * np.sin(2 * np.pi * 50 * time), {"unit": "V"}))
+    found = findings(path, gain_volt_per_ampere=1e5, bias_volt=0.1, sampling_hertz=5e3)["mains pickup"]
+    assert found.fine == fine
+    assert ("remove_mains" in found.text) != fine
+    if amplitude:
+        words = found.text.split()
+        assert float(words[0]) == pytest.approx(50.0, abs=0.1 if amplitude > 1e-3 else 0.7)
+        assert float(words[3]) == pytest.approx(amplitude, abs=2e-4)
+
+
+@pytest.mark.parametrize(("told", "fine"), [("rising", True), ("falling", False)])
+def test_pulling_told_the_wrong_way_round_is_named(tmp_path, told, fine):
+    drive = np.tile(np.concatenate([np.linspace(0, 5, 900), np.linspace(5, 0, 300)]), 8)
+    conductance = np.where(drive < 2.0, 10.0 - 4 * drive, 10 ** (-(drive - 2.0) * 1.5))
+    path = record(tmp_path, piezo=(drive, {"unit": "V"}), conductance=(conductance, {"unit": "G0"}))
+    described, _ = intake.describe(path, Recipe.build({"cutting": {"pull_is": told}}))
+    found = {one.check: one for one in described[0].findings}["direction"]
+    assert found.fine == fine
+    assert ("cutting.pull_is" in found.text) != fine
+
+
+@pytest.mark.parametrize("kind", ["metal", "molecule", "tunnelling", "blank"])
+@pytest.mark.parametrize(("amplifier", "raw"), [("logarithmic", True), ("two gains", True), ("linear", False)])
+def test_good_recordings_raise_no_alarm(tmp_path, kind, amplifier, raw):
+    from meseta.simulate import SimulationSettings, write_simulation
+
+    chosen = {
+        "logarithmic": SimulationSettings(amplifier="logarithmic"),
+        "two gains": SimulationSettings(gain_volt_per_ampere=1e5, high_gain_volt_per_ampere=1e8),
+        "linear": SimulationSettings(),
+    }[amplifier]
+    write_simulation(kind, 24, 3, tmp_path / "good.h5", raw=raw, settings=chosen)
+    described, _ = intake.describe(tmp_path / "good.h5", Recipe())
+    assert [one.line() for one in described[0].findings if not one.fine] == []
+    assert len(described[0].findings) >= 7
+
+
+@pytest.fixture(scope="module")
+def right(tmp_path_factory):
+    """Return a raw recording that states what is right, with its settings."""
+    from meseta.simulate import SimulationSettings, write_simulation
+
+    chosen = SimulationSettings(gain_volt_per_ampere=1e5, high_gain_volt_per_ampere=1e8)
+    path = tmp_path_factory.mktemp("right") / "raw.h5"
+    write_simulation("metal", 24, 5, path, raw=True, settings=chosen)
+    return path, chosen
+
+
+@pytest.mark.parametrize(
+    ("setting", "factor", "check", "said"),
+    [
+        ("gain_volt_per_ampere", 10.0, "single-atom peak", "factor 10 too low"),
+        ("bias_volt", 0.01, "single-atom peak", "factor 100 too high"),
+        ("bias_volt", 2.0, "single-atom peak", "factor 2 too low"),
+        ("bias_volt", -1.0, "sign", "wrong sign"),
+        ("nm_per_volt", 10.0, "tunnelling slope", "too large"),
+        ("nm_per_volt", 0.1, "tunnelling slope", "too small"),
+        ("full_scale_volt", 10.0, "full scale", "factor 10 below"),
+        ("high_gain_volt_per_ampere", 2.0, "gain ratio", "do not fit each other"),
+    ],
+)
+def test_mistakes_in_a_simulated_recording_are_named(right, setting, factor, check, said):
+    """The recording states what is right; the recipe gets it wrong by a factor."""
+    path, chosen = right
+    wrong = {setting: getattr(chosen, setting) * factor}
+    if setting == "gain_volt_per_ampere":
+        wrong["high_gain_volt_per_ampere"] = chosen.high_gain_volt_per_ampere * factor
+    described, _ = intake.describe(path, Recipe.build({"calibration": wrong}))
+    found = {one.check: one for one in described[0].findings}[check]
+    assert not found.fine
+    assert said in found.text

@@ -54,8 +54,10 @@ class Pickup:
         Common frequency of the fundamental, refined.
     amplitude : (harmonics,) float64
         Median amplitude of the fundamental and its multiples, in the channel's unit.
+    noise : float
+        Standard deviation of what the fit leaves at the floor.
     amplitude_error : float
-        Standard error of one window's amplitude from the rest of the fit, white noise assumed.
+        Standard error of one window's amplitude from that noise, taken as white.
     unit : str
     cycles_a_sample : float
     at : (anchors,) int64
@@ -63,11 +65,12 @@ class Pickup:
     parts : (anchors, 2 harmonics) float64
         cos and sin parts of each harmonic, phase counted from flat sample 0.
     floor_share : float
-        Share of the samples that took part.
+        Share of the samples looked at that took part.
     """
 
     frequency_hertz: float
     amplitude: Floats
+    noise: float
     amplitude_error: float
     unit: str
     cycles_a_sample: float
@@ -95,7 +98,9 @@ class Pickup:
         subtract_pickup(values, start, self.cycles_a_sample, self.at, self.parts)
 
 
-def find_pickup(recording: Recording, read: Read, unit: str, interval_second: float) -> Pickup | None:
+def find_pickup(
+    recording: Recording, read: Read, unit: str, interval_second: float, most_windows: int | None = None
+) -> Pickup | None:
     """Fit the mains pickup of one channel over the whole record.
 
     Parameters
@@ -106,6 +111,8 @@ def find_pickup(recording: Recording, read: Read, unit: str, interval_second: fl
         Returns the channel, linear in current, over flat samples start to stop.
     unit : str
     interval_second : float
+    most_windows : int, optional
+        Look at so many windows only, spread over the record: enough for a report, not for subtracting.
 
     Returns
     -------
@@ -118,6 +125,8 @@ def find_pickup(recording: Recording, read: Read, unit: str, interval_second: fl
     windows = _windows(recording.offsets, interval_second)
     if len(windows) == 0:
         return None
+    if most_windows is not None:
+        windows = windows[np.unique(np.linspace(0, len(windows) - 1, most_windows).astype(int))]
     band = _floor_band(read, windows)
     frequency = _frequency(read, windows, band, interval_second, harmonics)
     if frequency is None:
@@ -277,7 +286,15 @@ def _followed(
     error = float(noise * np.sqrt(2.0 / np.median([fit.samples for fit in fits])))
     at, anchored = _anchored(recording.offsets, np.array(middles, np.int64), parts)
     return Pickup(
-        frequency, np.median(sizes, axis=0), error, unit, frequency * interval, at, anchored, used / recording.samples
+        frequency,
+        np.median(sizes, axis=0),
+        float(noise),
+        error,
+        unit,
+        frequency * interval,
+        at,
+        anchored,
+        used / recording.samples,
     )
 
 
