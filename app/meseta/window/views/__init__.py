@@ -5,6 +5,7 @@ To add a view, write a folder with a widget and a ``VIEW``, and name it in :data
 
 from __future__ import annotations
 
+from meseta.window.views.comparison import VIEW as COMPARISON
 from meseta.window.views.conditions import VIEWS as CONDITIONS
 from meseta.window.views.correlation import VIEW as CORRELATION
 from meseta.window.views.declaration import View
@@ -34,5 +35,6 @@ VIEWS: tuple[View, ...] = (
     CORRELATION,
     RECORD,
     LENGTHS,
+    COMPARISON,
 )
 """All views, in the order in which menus name them."""
