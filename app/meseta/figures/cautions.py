@@ -94,7 +94,9 @@ def _samples(analysis: Analysis, work: Work) -> Iterator[str]:
 
 
 def _peaks(analysis: Analysis, work: Work) -> Iterator[str]:
-    table = analysis.result("peaks", work).table
+    fit = analysis.result("peaks", work)
+    table = fit.table
+    yield from (f"{note[:1].upper()}{note[1:]}." for note in fit.notes)
     if not len(table):
         yield "No peak was fitted."
     for row in range(len(table)):

@@ -42,6 +42,9 @@ class Candidate:
         Samples within one width, as a share of the most that any candidate has.
     own : float
         What part of the density there is the peak's own: the curvature over that of a lone peak of its width.
+    broader : tuple of (float, float)
+        Position and width of the wider hills that it is part of, from narrow to wide: what looks like a narrow peak may
+        be a lump on a wide one, or one of two that overlap.
     """
 
     position_u: float
@@ -51,6 +54,7 @@ class Candidate:
     over_chance: float
     share: float
     own: float
+    broader: tuple[tuple[float, float], ...] = ()
 
 
 def find_candidates(
@@ -105,11 +109,27 @@ def find_candidates(
             if logarithmic and u[at] < _SUB_QUANTUM and scale < _SUB_QUANTUM_SCALE:
                 continue  # below one quantum nothing is that narrow but steps of the converter and jumps
             width = _width(np.array([layer[0][at] for layer in layers]), scales, level)
-            if inside and all(abs(u[at] - other.position_u) > max(scale, other.width_u) for other in found):
+            if not inside:
+                continue
+            part = next((n for n, other in enumerate(found) if _within(u[at], scale, other)), None)
+            if part is None:
                 over = float(curvature[at] / error[at]), float(curvature[at] / chance[at])
                 own = min(float(curvature[at]) * (1.0 + (width / scale) ** 2), 1.0)
                 found.append(Candidate(float(u[at]), width, float(curvature[at]), *over, 0.0, own))
+            else:
+                found[part] = _with_broader(found[part], float(u[at]), width)
     return _with_share(sorted(found, key=lambda candidate: candidate.position_u), u, data)
+
+
+def _within(place: float, scale: float, other: Candidate) -> bool:
+    """Return whether a hill of this scale is another view of one that was found on a finer scale."""
+    return bool(abs(place - other.position_u) <= max(scale, other.width_u))
+
+
+def _with_broader(found: Candidate, place: float, width: float) -> Candidate:
+    """Return the candidate with one more wider hill, if that is clearly wider than the last."""
+    last = found.broader[-1][1] if found.broader else found.width_u
+    return replace(found, broader=(*found.broader, (place, width))) if width > 1.4 * last else found
 
 
 def _cut(data: Floats, at: int, scale_bins: float) -> bool:

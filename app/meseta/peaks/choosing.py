@@ -13,9 +13,11 @@ from meseta.peaks.candidates import Candidate, find_candidates
 from meseta.peaks.fitting import Fitted, fit_model
 from meseta.peaks.model import WIDTH_TO_FWHM, Model
 from meseta.peaks.modelling import model_of
+from meseta.peaks.parting import parted
 from meseta.peaks.proposal import block_counts, held_out_gain
 from meseta.peaks.windows import Start, Window, rebinned, starts_of, to_axis, windows_of
 from meseta.recipe.peaks import PeakSettings
+from meseta.typeset import conductance
 
 __all__ = ["Chooser"]
 
@@ -27,6 +29,8 @@ _LEAST_HEIGHT = 0.2
 _SUB_QUANTUM_G0 = 0.4
 _SUB_QUANTUM_FWHM = 0.1
 _ROUNDS = 4
+_LEAST_REACH = 0.7
+_FEW = 100
 
 
 @dataclass(frozen=True)
@@ -61,25 +65,34 @@ class Chooser:
         grid, settings = self.histogram.grid, self.settings
         return model_of(grid, settings, window.starts, (first, last), merge, background, self.template)
 
-    def windows(self) -> tuple[list[Window], str]:
-        """Return where to fit what, or why nothing can be fitted."""
+    def windows(self) -> tuple[list[Window], str, tuple[str, ...]]:
+        """Return where to fit what; why nothing can be fitted; and what a reader must know of peaks left unfitted."""
         grid = self.histogram.grid
         if grid.bins < _FEWEST_BINS:
-            return [], f"no fit: {grid.bins} bins are too few"
+            return [], f"no fit: {grid.bins} bins are too few", ()
         if not self.histogram.counts.any():
-            return [], "no fit: the histogram is empty"
+            return [], "no fit: the histogram is empty", ()
+        beyond: tuple[str, ...] = ()
         if self.settings.peaks:
             windows = self._settled(starts_of(self.settings, grid), [])
         else:
-            windows = self._proposed(self._found())
+            windows, beyond = self._proposed(self._found())
             if not windows:
-                return [], "no peak found"
+                return [], "no peak found", ()
         good = [window for window in windows if self._fittable(window)]
-        return good, "" if good else f"no fit: fewer than {_FEWEST_BINS} bins with counts in the range of the fit"
+        reason = "" if good else f"no fit: fewer than {_FEWEST_BINS} bins with counts in the range of the fit"
+        return good, reason, beyond
 
     def without(self, windows: Sequence[Window], left_out: Start) -> list[Window]:
-        """Return windows round the peaks that remain when one is left out."""
+        """Return windows when one peak is left out: its next wider view takes its place, where there is one.
+
+        What proves too weak alone may be a lump of a wider peak, which then takes in the others within its width.
+        """
         rest = [start for window in windows for start in window.starts if start != left_out]
+        if left_out.broader:
+            position, width = left_out.broader[0]
+            wider = Start(position, width, least_u=_LEAST_REACH * width, broader=left_out.broader[1:])
+            rest = sorted([s for s in rest if abs(s.position_u - position) > width] + [wider], key=_place)
         return [window for window in self._settled(rest, []) if self._fittable(window)] if rest else []
 
     def _fittable(self, window: Window) -> bool:
@@ -106,40 +119,105 @@ class Chooser:
         large = [place for place in found if place.share >= _LEAST_SHARE]
         return sorted(large, key=lambda place: -place.own * place.share)
 
-    def _proposed(self, found: Sequence[Candidate]) -> list[Window]:
-        """Return windows with those of the found peaks that left-out traces support, one after the other."""
+    def _proposed(self, found: Sequence[Candidate]) -> tuple[list[Window], tuple[str, ...]]:
+        """Return windows with those of the found peaks that left-out traces support, one after the other.
+
+        What would be supported too, but for the largest number of peaks, is told.
+        """
         blocks = self.blocks()
         chosen: list[Start] = []
         windows: list[Window] = []
-        standing = list(found)
+        standing, full = list(found), []
         for place in found:
-            new = Start(place.position_u, place.width_u)
-            if sum(self._below_quantum(start) == self._below_quantum(new) for start in chosen) >= self.settings.most:
+            if not self._room_for(place.position_u, chosen):
+                full.append(place)
                 continue
-            trial = sorted([*chosen, new], key=lambda start: start.position_u)
-            settled = self._settled(trial, standing)
-            window = next((w for w in settled if any(_same(start, new) for start in w.starts)), None)
-            if window is not None and self._supported(window, new, blocks):
-                chosen, windows = trial, settled
-            else:
+            taken = False
+            views = ((place.position_u, place.width_u), *place.broader)
+            for number, (position, width) in enumerate(views):
+                new = Start(position, width, least_u=_LEAST_REACH * width, broader=views[number + 1 :])
+                trial = sorted([*chosen, new], key=_place)
+                settled = self._settled(trial, standing)
+                window = next((w for w in settled if any(_same(start, new) for start in w.starts)), None)
+                if window is not None and self._supported(window, new, blocks):
+                    chosen, windows, taken = trial, settled, True
+                    break
+            if not taken:
                 standing.remove(place)  # what is no peak keeps no room
                 windows = self._settled(chosen, standing) if chosen else []
-        return windows
+        beyond = tuple(
+            self._unfitted(place) for place in full if self._would_be_supported(place, chosen, standing, blocks)
+        )
+        return (windows if blocks is None else self._parted(windows, standing, blocks)), beyond
 
-    def _below_quantum(self, start: Start) -> bool:
+    def _would_be_supported(
+        self, place: Candidate, chosen: Sequence[Start], standing: Sequence[Candidate], blocks: Floats | None
+    ) -> bool:
+        new = Start(place.position_u, place.width_u, least_u=_LEAST_REACH * place.width_u)
+        settled = self._settled(sorted([*chosen, new], key=_place), standing)
+        window = next((w for w in settled if any(_same(start, new) for start in w.starts)), None)
+        return window is not None and self._supported(window, new, blocks)
+
+    def _unfitted(self, place: Candidate) -> str:
+        return (
+            f"a further peak near {self._stated(place.position_u)} is not fitted: at most {self.settings.most} are "
+            "proposed on either side of 0.4 G0 (peaks.most)"
+        )
+
+    def not_proposed(self, dropped: Sequence[Start], windows: Sequence[Window]) -> tuple[str, ...]:
+        """Return in words what looked like a peak and was not proposed in the end, unless a fitted one stands there."""
+        standing = [start for window in windows for start in window.starts]
+        lone = [
+            start
+            for number, start in enumerate(dropped)
+            if all(abs(start.position_u - s.position_u) > start.width_u + s.width_u for s in standing)
+            and not any(abs(start.position_u - later.position_u) <= later.width_u for later in dropped[number + 1 :])
+        ]
+        return tuple(
+            f"what looks like a peak near {self._stated(start.position_u)} is not proposed: its area is below three "
+            "standard errors, or no plateaus lie there; ask for it in peaks.peaks to see it fitted"
+            for start in lone
+        )
+
+    def _room_for(self, place_u: float, chosen: Sequence[Start]) -> bool:
+        """Return whether fewer than the most peaks are chosen on this side of the quantum."""
+        below = self._below_quantum(place_u)
+        return sum(self._below_quantum(start.position_u) == below for start in chosen) < self.settings.most
+
+    def _parted(self, windows: list[Window], standing: Sequence[Candidate], blocks: Floats) -> list[Window]:
+        """Return the windows with peaks parted in two where left-out traces ask for it."""
+        starts = [start for window in windows for start in window.starts]
+        number = len(starts)
+        for window in windows:
+            for start in window.starts:
+                if (
+                    self._room_for(start.position_u, starts)
+                    and (pair := parted(self, window, start, blocks)) is not None
+                ):
+                    starts = sorted([*(s for s in starts if s != start), *pair], key=_place)
+        return windows if len(starts) == number else self._settled(starts, standing)
+
+    def _stated(self, place_u: float) -> str:
+        return conductance(10.0**place_u if self.histogram.grid.axis == "logarithmic" else place_u, 2)
+
+    def _below_quantum(self, place_u: float) -> bool:
         """Return whether a peak is a molecular one by its place; each side has its own largest number of peaks."""
-        return start.position_u < to_axis(_SUB_QUANTUM_G0, self.histogram.grid.axis == "logarithmic")
+        return place_u < to_axis(_SUB_QUANTUM_G0, self.histogram.grid.axis == "logarithmic")
 
     def _settled(self, starts: Sequence[Start], found: Sequence[Candidate]) -> list[Window]:
         """Return windows round the peaks as fitted: fit, move the windows, fit again, until they stand still."""
         grid, settings = self.histogram.grid, self.settings
         windows = windows_of(starts, grid, self.usable, settings, found)
         for _ in range(_ROUNDS):
+            origins = [start for window in windows for start in window.starts]
             moved: list[Start] = []
             for window in windows:
                 moved += self._moved(window) if self._fittable(window) else window.starts
-            again = windows_of(sorted(moved, key=lambda s: s.position_u), grid, self.usable, settings, found)
-            again = [replace(w, starts=tuple(_origin(s, starts) for s in w.starts)) for w in again]
+            order = sorted(range(len(moved)), key=lambda at: moved[at].position_u)
+            again = windows_of([moved[at] for at in order], grid, self.usable, settings, found)
+            # every round begins where the first began
+            first = iter([origins[at] for at in order])
+            again = [replace(w, starts=tuple(next(first) for _ in w.starts)) for w in again]
             if [(w.first, w.last) for w in again] == [(w.first, w.last) for w in windows]:
                 break
             windows = again
@@ -155,7 +233,8 @@ class Chooser:
         for start, (_, position, width, _) in zip(window.starts, fitted.peaks, strict=True):
             near = abs(position - start.position_u) < 3.0 * start.width_u
             sane = 0.3 * start.width_u < width < 4.0 * start.width_u
-            moved.append(replace(start, position_u=float(position), width_u=float(width)) if near and sane else start)
+            reach = max(float(width), start.least_u)
+            moved.append(replace(start, position_u=float(position), width_u=reach) if near and sane else start)
         return moved
 
     def _supported(self, window: Window, new: Start, blocks: Floats | None) -> bool:
@@ -167,16 +246,17 @@ class Chooser:
         background = settings.background
         larger = model_of(self.histogram.grid, settings, window.starts, bins, 1, background, self.template)
         fitted = fit_model(larger, self.data(window))
-        if not all(self._stands_out(fitted, number) for number in range(len(window.starts))):
+        if not all(self.stands_out(fitted, number) for number in range(len(window.starts))):
             return False
         if blocks is None:
             return True
         others = tuple(start for start in window.starts if not _same(start, new))
         smaller = model_of(self.histogram.grid, settings, others, bins, 1, background, self.template)
-        gain, error = held_out_gain(blocks[:, window.first : window.last], smaller, larger)
-        return gain > error
+        gain = held_out_gain(blocks[:, window.first : window.last], smaller, larger)
+        strict = min(self.histogram.traces / _FEW, 1.0)  # blocks of a trace or two say little; candidates were tested
+        return gain.mean > strict * gain.error
 
-    def _stands_out(self, fitted: Fitted, number: int) -> bool:
+    def stands_out(self, fitted: Fitted, number: int) -> bool:
         """Return whether a fitted peak is one: inside its range, narrower than it, no ripple on what is beneath."""
         _, position, width, _ = fitted.peaks[number]
         low, high = fitted.model.range_u
@@ -222,10 +302,9 @@ class Chooser:
         return blocks if blocks.shape[1] == self.histogram.grid.bins else None
 
 
+def _place(start: Start) -> float:
+    return start.position_u
+
+
 def _same(start: Start, other: Start) -> bool:
     return start.position_u == other.position_u
-
-
-def _origin(moved: Start, starts: Sequence[Start]) -> Start:
-    """Return the start that a moved one came from, so that every round begins where the first began."""
-    return min(starts, key=lambda start: abs(start.position_u - moved.position_u))

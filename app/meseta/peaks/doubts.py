@@ -20,11 +20,14 @@ _POOR = 0.06
 _NO_TRACES = "no interval: a histogram alone does not know its traces"
 
 
-def weakest_peak(parts: Sequence[FittedWindow]) -> Start | None:
-    """Return the peak with the smallest area in standard errors, if that is below three: not to be proposed."""
+def weakest_peak(parts: Sequence[FittedWindow], factor: float = 1.0) -> Start | None:
+    """Return the peak with the smallest area in standard errors, if that is below three: not to be proposed.
+
+    ``factor`` stretches the replicates, as in :func:`interval_of`.
+    """
     strength = {}
     for part in parts:
-        interval = interval_of(part, 0, 1.0)
+        interval = interval_of(part, 0, factor)
         for peak, start in enumerate(part.window.starts):
             area, sigma = part.fitted.peaks[peak, 0], area_sigma(part.fitted, peak, interval)
             strength[start] = area / sigma if sigma > 0 else float("inf") if area > 0 else 0.0

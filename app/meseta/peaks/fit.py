@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 import numpy.typing as npt
@@ -82,21 +83,26 @@ def fit_histogram(
     work = work or Work()
     shape = background_template(histogram, settings, counts, plateaus, template)
     chooser = Chooser(histogram, settings, resampling, counts, usable_range(histogram, floor), shape)
-    windows, reason = chooser.windows()
+    windows, reason, notes = chooser.windows()
     if not windows:
         return empty_fit(histogram, settings, reason)
     parts = [_fitted(chooser, window, others, work) for window in windows]
-    while not settings.peaks and (weak := _not_to_be_proposed(parts, plateaus, histogram.traces)) is not None:
+    factor, dropped = 1.0 if resampling is None else resampling.widen, []
+    while not settings.peaks and (weak := _not_to_be_proposed(parts, plateaus, histogram.traces, factor)) is not None:
         windows = chooser.without(windows, weak)
+        dropped.append(weak)
         if not windows:
-            return empty_fit(histogram, settings, "no peak found")
+            return replace(empty_fit(histogram, settings, "no peak found"), notes=chooser.not_proposed(dropped, ()))
         parts = [_fitted(chooser, window, others, work) for window in windows]
-    return tabulate(histogram, settings, parts, resampling, plateaus, calibration)
+    table = tabulate(histogram, settings, parts, resampling, plateaus, calibration)
+    return replace(table, notes=(*notes, *chooser.not_proposed(dropped, windows)))
 
 
-def _not_to_be_proposed(parts: list[FittedWindow], plateaus: PlateauTable | None, traces: int) -> Start | None:
+def _not_to_be_proposed(
+    parts: list[FittedWindow], plateaus: PlateauTable | None, traces: int, factor: float
+) -> Start | None:
     """Return a peak that is too weak, or a shoulder without plateaus; None where all may stand."""
-    weak = weakest_peak(parts)
+    weak = weakest_peak(parts, factor)
     return bare_shoulder(parts, plateaus, traces) if weak is None and plateaus is not None else weak
 
 

@@ -17,7 +17,7 @@ __all__ = ["Fitted", "Refitted", "fit_model", "refit"]
 Floats = npt.NDArray[np.float64]
 
 _TOLERANCE = 1e-12
-_REFIT_TOLERANCE = 1e-8
+_REFIT_TOLERANCE = 1e-7
 
 
 @dataclass(frozen=True)

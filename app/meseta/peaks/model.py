@@ -21,6 +21,8 @@ BACKGROUNDS: Final = tuple(line_kernels.BACKGROUND_CODES)
 WIDTH_TO_FWHM: Final = 2.0 * float(np.sqrt(2.0 * np.log(2.0)))
 """Full width at half maximum of a peak of unit width, for every shape."""
 
+_STEEPEST: Final = 20.0
+"""Most e-folds of an exponential background over the range of the fit, and largest power of a power law."""
 _POSITION_TIES: Final = {"none": 0, "multiples": 1, "ladder": 2}
 _EXTRA_LIMITS: Final = {"pseudo_voigt": (0.0, 1.0, 0.5), "skewed_gaussian": (-0.9, 0.9, 0.0)}
 
@@ -177,7 +179,7 @@ class Model:
         if self.background == "linear":
             lower[-1] = 0.0
         elif self.background in ("exponential", "power_law"):
-            lower[-1], upper[-1] = -60.0, 60.0
+            lower[-1], upper[-1] = -_STEEPEST, _STEEPEST
         self._tied_bounds(lower, upper)
         return lower, upper
 

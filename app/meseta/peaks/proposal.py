@@ -6,13 +6,15 @@ as independent (AIC, BIC) always ask for more peaks.  Whole blocks of traces are
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 import numpy.typing as npt
 
 from meseta.peaks.fitting import fit_model
 from meseta.peaks.model import Model
 
-__all__ = ["block_counts", "held_out_gain"]
+__all__ = ["Gain", "block_counts", "held_out_gain"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -41,27 +43,50 @@ def block_counts(counts: npt.NDArray[np.unsignedinteger], rows: npt.NDArray[np.i
     return np.array(sums, float).reshape(len(parts), counts.shape[1])
 
 
-def held_out_gain(blocks: Floats, smaller: Model, larger: Model) -> tuple[float, float]:
-    """Return by how much the larger model foretells left-out blocks better: mean Poisson deviance, standard error.
+@dataclass(frozen=True)
+class Gain:
+    """By how much a larger model foretells left-out blocks better than a smaller one.
+
+    Attributes
+    ----------
+    mean, error : float
+        Poisson deviance a block, and its standard error.
+    shares : (blocks, peaks) float64
+        Area of each peak of the larger model as a share of all counts, each block left out in turn.
+    """
+
+    mean: float
+    error: float
+    shares: Floats
+
+    def area_in_errors(self, peak: int) -> float:
+        """Return the area of a peak of the larger model over its jackknife standard error."""
+        share, number = self.shares[:, peak], len(self.shares)
+        error = float(np.sqrt((number - 1) * share.var()))
+        return float(share.mean()) / error if error > 0 else np.inf
+
+
+def held_out_gain(blocks: Floats, smaller: Model, larger: Model) -> Gain:
+    """Return by how much the larger model foretells left-out blocks better.
 
     Each block is left out in turn; both models are fitted to the rest and judged on the block.
     """
     total = blocks.sum(axis=0)
-    gains = []
-    start_small = fit_model(smaller, total).inner
-    start_large = fit_model(larger, total).inner
+    gains, shares = [], []
+    start_small, start_large = fit_model(smaller, total).inner, fit_model(larger, total).inner
     for block in blocks:
         rest = total - block
         share = block.sum() / max(rest.sum(), 1.0)
         small = fit_model(smaller, rest, start=start_small)
         large = fit_model(larger, rest, start=start_large)
+        shares.append(large.peaks[:, 0] / max(rest.sum(), 1.0))
         gains.append(
             _deviance(block, share * smaller.curves(small.inner).total)
             - _deviance(block, share * larger.curves(large.inner).total)
         )
     values = np.array(gains)
     error = float(values.std(ddof=1) / np.sqrt(len(values))) if len(values) > 1 else np.inf
-    return float(values.mean()), error
+    return Gain(float(values.mean()), error, np.array(shares))
 
 
 def _deviance(counts: Floats, expected: Floats) -> float:

@@ -49,6 +49,9 @@ def fit_verdicts(fitted: Fitted, counts: Floats) -> list[list[str]]:
     for peak, other in _not_told_apart(found):
         verdicts[peak].append(f"not told apart from peak {other + 1}")
         verdicts[other].append(f"not told apart from peak {peak + 1}")
+    for peak, other in _overlapping(found):
+        verdicts[peak].append(f"overlaps peak {other + 1}: rests on the line shape")
+        verdicts[other].append(f"overlaps peak {peak + 1}: rests on the line shape")
     return verdicts
 
 
@@ -67,11 +70,19 @@ def _bound_verdicts(fitted: Fitted, peak: int, lower: Floats, upper: Floats) -> 
 
 
 def _not_told_apart(found: Floats) -> list[tuple[int, int]]:
-    """Return neighbours so close that their sum has one top: equal Gaussians nearer than two widths."""
-    order = np.argsort(found[:, 1])
-    pairs = []
-    for left, right in pairwise(order):
-        distance = found[right, 1] - found[left, 1]
-        if distance < 0.6 * (found[left, 2] + found[right, 2]):
-            pairs.append((int(left), int(right)))
-    return pairs
+    """Return neighbours so close that one wider peak would do as well: nearer than 1.2 widths."""
+    return [pair for pair, distance in _neighbours(found) if distance < 1.2]
+
+
+def _overlapping(found: Floats) -> list[tuple[int, int]]:
+    """Return neighbours that are told apart, but nearer than half their height is wide: their sum has one top."""
+    return [pair for pair, distance in _neighbours(found) if 1.2 <= distance < WIDTH_TO_FWHM]
+
+
+def _neighbours(found: Floats) -> list[tuple[tuple[int, int], float]]:
+    """Return neighbours along the axis, with their distance in mean widths."""
+    order = [int(peak) for peak in np.argsort(found[:, 1])]
+    return [
+        ((left, right), 2.0 * float(found[right, 1] - found[left, 1]) / float(found[left, 2] + found[right, 2]))
+        for left, right in pairwise(order)
+    ]

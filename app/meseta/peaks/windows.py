@@ -37,7 +37,11 @@ class Floor:
 
 @dataclass(frozen=True)
 class Start:
-    """One peak to fit: starting values on the axis, and what the user said about it."""
+    """One peak to fit: starting values on the axis, and what the user said about it.
+
+    ``least_u`` is the smallest width that sets the length of the fit range: of a proposed peak, so that the range does
+    not close in on a lump of it; ``broader`` are the position and width of wider hills that it is part of.
+    """
 
     position_u: float
     width_u: float
@@ -49,6 +53,8 @@ class Start:
     multiple: float | None = None
     tied: bool = True
     tied_width: bool = True
+    least_u: float = 0.0
+    broader: tuple[tuple[float, float], ...] = ()
 
 
 @dataclass(frozen=True)
