@@ -17,6 +17,7 @@ __all__ = ["Fitted", "Refitted", "fit_model", "refit"]
 Floats = npt.NDArray[np.float64]
 
 _TOLERANCE = 1e-12
+_STEPS = 4000
 _REFIT_TOLERANCE = 1e-7
 
 
@@ -113,7 +114,7 @@ def fit_model(
         upper,
         inner,
         _TOLERANCE,
-        400,
+        _STEPS,
     )
     return Fitted(
         model=model,
