@@ -71,6 +71,7 @@ def array_owners(value: Any) -> Iterator[tuple[int, int]]:
         owner: Any = value
         while isinstance(owner, np.ndarray) and owner.base is not None:
             owner = owner.base
+        owner = owner.obj if isinstance(owner, memoryview) else owner
         if not isinstance(owner, mmap.mmap):
             yield id(owner), int(getattr(owner, "nbytes", value.nbytes))
     elif is_dataclass(value):

@@ -157,7 +157,7 @@ def _counts_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> C
 
 
 def _fine_counts(parts: Iterator[Any], _: TraceSet, __: SettingsView, ___: Inputs, ____: Work) -> CountMatrix:
-    return CountMatrix.joined(list(parts))
+    return CountMatrix.joined(parts)
 
 
 def _counts(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> CountMatrix:
@@ -236,7 +236,7 @@ def _partner_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> 
 
 
 def _partners(parts: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, __: Work) -> Any:
-    counts = histograms.with_bins(CountMatrix.joined(list(parts)), settings.histogram, inputs["noise"])
+    counts = histograms.with_bins(CountMatrix.joined(parts), settings.histogram, inputs["noise"])
     row = histograms.partner_rows(traces.table, counts.used)
     return histograms.Partners(counts, row, settings.histogram.direction)
 

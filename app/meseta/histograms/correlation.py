@@ -7,7 +7,7 @@ import numpy.typing as npt
 
 from meseta.histograms import kernels
 from meseta.histograms.grids import histogram_grid
-from meseta.histograms.results import CorrelationHistogram, CountMatrix
+from meseta.histograms.results import CorrelationHistogram, CountMatrix, Grid
 from meseta.recipe.histogram import CorrelationSettings
 from meseta.segmentation.results import NoiseModel
 from meseta.work import Work
@@ -83,16 +83,24 @@ def block_traces(traces: int) -> int:
 
 
 def correlation_counts(
-    counts: CountMatrix, kept: npt.NDArray[np.bool_], settings: CorrelationSettings, noise: NoiseModel
-) -> CountMatrix:
-    """Return the kept rows of the count matrix with the coarser bins of the correlation histogram chosen."""
+    counts: CountMatrix, rows: npt.NDArray[np.int64], settings: CorrelationSettings, noise: NoiseModel
+) -> tuple[Grid, Floats]:
+    """Return the coarser bins of the correlation histogram, and the counts of the chosen rows in them.
+
+    Returns
+    -------
+    grid : Grid
+    values : (rows, bins) float64
+    """
     low = settings.low_g0
     if low is None:
         low = max(noise.floor_g0 + _ABOVE_FLOOR_SIGMA * noise.floor_sigma_g0, counts.shown.edges_g0[0])
     high = min(settings.high_g0, counts.shown.edges_g0[-1])
     first, last, merge = histogram_grid(counts.grid, low, high, settings.bins_per_decade, settings.bin_width_g0)
-    rows = np.flatnonzero(kept & counts.used)
-    return counts.take(rows).trimmed(first, last, merge)
+    grid = counts.grid.part(first, last, merge)
+    values = np.empty((len(rows), grid.bins))
+    kernels.merge_rows(counts.counts[:, first:last], rows, merge, values)
+    return grid, values
 
 
 def correlation_histogram(
@@ -118,21 +126,20 @@ def correlation_histogram(
     Permuting within blocks keeps what drift does to all bins at once, so drift alone is not significant.  A record of
     fixed length makes negative correlations of its own: a longer plateau leaves fewer samples for the rest.
     """
-    chosen = correlation_counts(counts, kept, settings, noise)
-    values = np.empty((len(chosen.counts), chosen.shown.bins))
-    kernels.merge_rows(chosen.counts, np.arange(len(chosen.counts)), chosen.merge, values)
+    grid, values = correlation_counts(counts, np.flatnonzero(kept & counts.used), settings, noise)
     traces = len(values)
     weak = (values > 0).sum(0) < WEAK_TRACES
     block = block_traces(traces)
     largest = largest_by_chance(values[:, ~weak], block, settings.permutations, seed, work)
     return CorrelationHistogram(
-        grid=chosen.shown,
+        grid=grid,
         correlation=correlation_of(values),
         traces=traces,
         threshold=float(np.quantile(largest, 0.95)) if len(largest) else np.nan,
         weak=weak,
         permutations=len(largest),
         block_traces=block,
+        note="" if traces >= 3 else "too few traces are kept to correlate",
     )
 
 
@@ -148,9 +155,11 @@ def largest_by_chance(values: Floats, block: int, permutations: int, seed: int, 
     seed : int
     work : Work
     """
-    spread = values.std(0)
-    varying = values[:, spread > 0] - values[:, spread > 0].mean(0)
-    if permutations == 0 or varying.shape[1] < 2 or len(values) < 3:
+    if permutations == 0 or len(values) < 3:
+        return np.zeros(0)
+    varies = values.max(0) > values.min(0)
+    varying = values[:, varies] - values[:, varies].mean(0)
+    if varying.shape[1] < 2:
         return np.zeros(0)
     scaled = np.ascontiguousarray(varying / np.sqrt((varying**2).sum(0)), np.float32)
     random = np.random.default_rng(seed)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import numpy.typing as npt
 
@@ -13,6 +15,7 @@ __all__ = ["conductance_histogram", "summed"]
 
 Floats = npt.NDArray[np.float64]
 _EQUAL_STEPS = 1e-6
+_ROWS_A_BLOCK = 2048
 
 
 def conductance_histogram(
@@ -100,8 +103,34 @@ def _weighted(
     if weight is None or _is_flat(weight):
         flat: Floats = total.astype(np.float64) * _flat_scale(weight)
         return flat
-    summed: Floats = (weight @ counts.counts[rows]).astype(np.float64)
-    return counts.shown_counts(summed)
+    one = weight[None, :]
+    return weighted_counts(counts, rows, one)[0]
+
+
+def weighted_counts(
+    counts: CountMatrix, rows: npt.NDArray[np.int64], draws: npt.NDArray[Any], length: Floats | None = None
+) -> Floats:
+    """Return the weighted sums (replicates, bins) of the chosen rows, block by block.
+
+    Parameters
+    ----------
+    counts : CountMatrix
+    rows : (traces,) int64
+    draws : (replicates, traces) array
+        Weight of every row in every replicate.
+    length : (traces,) float64, optional
+        Further weight of every row, the same in all replicates.
+    """
+    total = np.zeros((len(draws), counts.shown.bins))
+    part = np.empty((min(_ROWS_A_BLOCK, len(rows)), counts.shown.bins))
+    for first in range(0, len(rows), _ROWS_A_BLOCK):
+        chosen = rows[first : first + _ROWS_A_BLOCK]
+        kernels.merge_rows(counts.counts, chosen, counts.merge, part[: len(chosen)])
+        drawn = draws[:, first : first + _ROWS_A_BLOCK].astype(np.float64)
+        if length is not None:
+            drawn *= length[first : first + _ROWS_A_BLOCK]
+        total += drawn @ part[: len(chosen)]
+    return total
 
 
 def _norm(normalisation: str, weight: Floats | None, traces: int, total: float, axis: str) -> tuple[float, str]:
@@ -129,7 +158,7 @@ def _band(
     if weight is None or _is_flat(weight):
         replicate = resampling.counts * _flat_scale(weight)
     else:
-        replicate = counts.shown_counts((resampling.weights * weight) @ counts.counts[rows].astype(np.float64))
+        replicate = weighted_counts(counts, rows, resampling.weights, weight)
     if normalisation == "probability":
         replicate = replicate / np.maximum(replicate.sum(1, keepdims=True), np.finfo(float).tiny)
         norm = 1.0

@@ -61,6 +61,8 @@ def record_features(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> Floats:
     """
     width = max(1, -(-counts.grid.bins // _GROUPS))
     values = np.empty((len(rows), -(-counts.grid.bins // width)))
+    if len(rows) == 0:
+        return np.empty((0, 0))
     kernels.merge_rows(counts.counts, rows, width, values)
     np.sqrt(values, out=values)
     values -= values.mean(0)

@@ -9,7 +9,6 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
 from meseta.histograms.correlation import WEAK_TRACES, block_traces, correlation_counts
 from meseta.histograms.results import CorrelationHistogram, CountMatrix
 from meseta.recipe.histogram import CorrelationSettings
@@ -94,11 +93,9 @@ def opening_closing_correlation(
     kept (maximum statistic: Westfall and Young, Resampling-Based Multiple Testing (1993)).
     """
     rows = np.flatnonzero(kept & counts.used & (partners.row >= 0))
-    mine, other = counts.take(rows), partners.counts.take(partners.row[rows])
-    pair = (mine, other) if partners.direction == "opening" else (other, mine)
-    everything = np.ones(len(rows), bool)
-    chosen = [correlation_counts(one, everything, settings, noise) for one in pair]
-    opening, closing = (_values(one) for one in chosen)
+    grid, mine = correlation_counts(counts, rows, settings, noise)
+    _, other = correlation_counts(partners.counts, partners.row[rows], settings, noise)
+    opening, closing = (mine, other) if partners.direction == "opening" else (other, mine)
     weak, weak_second = ((values > 0).sum(0) < WEAK_TRACES for values in (opening, closing))
     block = block_traces(len(rows))
     left, right = _scaled(opening), _scaled(closing)
@@ -107,7 +104,7 @@ def opening_closing_correlation(
     correlation[np.ix_(~_varies(opening), np.ones(right.shape[1], bool))] = np.nan
     correlation[:, ~_varies(closing)] = np.nan
     return CorrelationHistogram(
-        grid=chosen[0].shown,
+        grid=grid,
         correlation=correlation,
         traces=len(rows),
         threshold=float(np.quantile(largest, 0.95)) if len(largest) else np.nan,
@@ -119,12 +116,6 @@ def opening_closing_correlation(
         weak_second=weak_second,
         note="" if len(rows) >= _FEWEST_PAIRS else "no kept trace has a partner of the other direction",
     )
-
-
-def _values(counts: CountMatrix) -> Floats:
-    values = np.empty((len(counts.counts), counts.shown.bins))
-    kernels.merge_rows(counts.counts, np.arange(len(values)), counts.merge, values)
-    return values
 
 
 def _varies(values: Floats) -> Truths:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field, replace
 from typing import Any, Final
 
@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.histograms.plottable import PlottableAxis, PlottableHistogram
+from meseta.histograms.rows import stacked
 from meseta.tables import Table
 
 __all__ = [
@@ -106,21 +107,22 @@ class CountMatrix:
     merge: int = 1
 
     @classmethod
-    def joined(cls, parts: Sequence[CountMatrix]) -> CountMatrix:
-        """Return the matrices of consecutive blocks of traces as one, in the widest integer type among them."""
-        head = parts[0]
-        kind = max((part.counts.dtype for part in parts), key=lambda dtype: dtype.itemsize)
-        counts = np.empty((sum(len(part.counts) for part in parts), head.grid.bins), kind)
-        at = 0
-        for part in parts:
-            counts[at : at + len(part.counts)] = part.counts
-            at += len(part.counts)
+    def joined(cls, parts: Iterable[CountMatrix]) -> CountMatrix:
+        """Return the matrices of consecutive blocks of traces as one; a large one lies in a file (:func:`stacked`)."""
+        rest: list[CountMatrix] = []
+
+        def rows() -> Iterator[npt.NDArray[np.unsignedinteger]]:
+            for part in parts:
+                rest.append(replace(part, counts=part.counts[:0]))
+                yield part.counts
+
+        counts = stacked(rows())
         return replace(
-            head,
+            rest[0],
             counts=counts,
-            excluded=np.concatenate([part.excluded for part in parts]),
-            nm_a_sample=np.concatenate([part.nm_a_sample for part in parts]),
-            used=np.concatenate([part.used for part in parts]),
+            excluded=np.concatenate([part.excluded for part in rest]),
+            nm_a_sample=np.concatenate([part.nm_a_sample for part in rest]),
+            used=np.concatenate([part.used for part in rest]),
         )
 
     @property

@@ -10,7 +10,6 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
 from meseta.histograms.correlation import WEAK_TRACES, correlation_counts
 from meseta.histograms.memory import autocovariance, memory_of, record_features, without_line
 from meseta.histograms.results import CorrelationHistogram, CountMatrix, Grid
@@ -106,27 +105,25 @@ def shifted_correlations(
     -----
     Formula as in :func:`shifted_correlation`, for i = j.  Shifts run to a tenth of the record, at most 400 traces.
     """
-    chosen = correlation_counts(counts, kept, settings, noise)
-    values = np.empty((len(chosen.counts), chosen.shown.bins))
-    kernels.merge_rows(chosen.counts, np.arange(len(values)), chosen.merge, values)
+    grid, values = correlation_counts(counts, np.flatnonzero(kept & counts.used), settings, noise)
     traces, weak = len(values), (values > 0).sum(0) < WEAK_TRACES
     most = min(_MOST_SHIFT, traces // _GROUPS)
     shift = np.arange(1, most + 1, dtype=np.int64) if traces >= _FEWEST_TRACES else np.zeros(0, np.int64)
     same = np.empty((len(shift), values.shape[1]))
-    for first in range(0, values.shape[1], _COLUMNS):
+    for first in range(0, values.shape[1] if len(shift) else 0, _COLUMNS):
         same[:, first : first + _COLUMNS] = _same_bin(values[:, first : first + _COLUMNS], shift)
     chance = 1.96 / np.sqrt(traces) if traces else np.nan
     unknown = Decay(np.nan, np.nan, np.nan, np.nan, False)
     if not len(shift):
         return ShiftedCorrelation(
-            chosen.shown, shift, same, weak, np.zeros(0), chance, unknown, traces, "too few traces to compare shifts"
+            grid, shift, same, weak, np.zeros(0), chance, unknown, traces, "too few traces to compare shifts"
         )
     features = record_features(counts, np.flatnonzero(kept & counts.used))
     straight = without_line(features)
     covariance = autocovariance(straight).sum(1)
     mean = covariance[1 : most + 1] / covariance[0] if covariance[0] > 0 else np.zeros(most)
     decay = decay_of(straight, most) if memory_of(features).found else unknown
-    return ShiftedCorrelation(chosen.shown, shift, same, weak, mean, chance, decay, traces, _sentence(decay))
+    return ShiftedCorrelation(grid, shift, same, weak, mean, chance, decay, traces, _sentence(decay))
 
 
 def _same_bin(values: Floats, shift: Integers) -> Floats:
@@ -210,13 +207,11 @@ def shifted_map(
 
     No significance is worked out (``threshold`` is NaN); single values scatter by 1 / sqrt(traces).
     """
-    chosen = correlation_counts(counts, kept, settings, noise)
-    values = np.empty((len(chosen.counts), chosen.shown.bins))
-    kernels.merge_rows(chosen.counts, np.arange(len(values)), chosen.merge, values)
+    grid, values = correlation_counts(counts, np.flatnonzero(kept & counts.used), settings, noise)
     enough = len(values) - shift >= 3
     found = shifted_correlation(values, values, shift) if enough else np.full((values.shape[1],) * 2, np.nan)
     return CorrelationHistogram(
-        grid=chosen.shown,
+        grid=grid,
         correlation=found,
         traces=max(len(values) - shift, 0),
         threshold=np.nan,
