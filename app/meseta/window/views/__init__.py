@@ -8,6 +8,7 @@ from __future__ import annotations
 from meseta.window.views.comparison import VIEW as COMPARISON
 from meseta.window.views.conditions import VIEWS as CONDITIONS
 from meseta.window.views.correlation import VIEW as CORRELATION
+from meseta.window.views.decay import VIEW as DECAY
 from meseta.window.views.declaration import View
 from meseta.window.views.displacement import VIEW as DISPLACEMENT
 from meseta.window.views.histogram import VIEW as HISTOGRAM
@@ -36,5 +37,6 @@ VIEWS: tuple[View, ...] = (
     RECORD,
     LENGTHS,
     COMPARISON,
+    DECAY,
 )
 """All views, in the order in which menus name them."""
