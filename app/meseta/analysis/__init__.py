@@ -16,6 +16,7 @@ from meseta.analysis.functions import (
     find_plateaus,
     fit_peaks,
 )
+from meseta.analysis.saving import save_result
 from meseta.analysis.steps import STEPS, SettingsView, Step, phases_of
 
 __all__ = [
@@ -32,5 +33,6 @@ __all__ = [
     "find_plateaus",
     "fit_peaks",
     "phases_of",
+    "save_result",
     "yield_in_window",
 ]

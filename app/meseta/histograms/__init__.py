@@ -12,6 +12,8 @@ traces that satisfy something  :func:`conditional_histogram`
 parts, or recordings           ``meseta.analysis.compare_parts``, ``compare_recordings``; then
                                :meth:`Comparison.difference`
 a later trace                  :func:`shifted_map`
+other tools                    :func:`content_of` (arrays with units), :func:`columns_of` (table), :func:`uhi_of`;
+                               ``meseta.analysis.save_result`` writes CSV, HDF5 or npz
 molecule and blank             :func:`molecular_yield` (``meseta.analysis.yield_in_window`` from two recordings)
 =============================  ========================================================================================
 """
@@ -34,6 +36,7 @@ from meseta.histograms.conditional import (
     pair_histograms,
     passes_more_than_usual,
 )
+from meseta.histograms.content import Content, columns_of, content_of, uhi_of
 from meseta.histograms.correlation import correlation_histogram
 from meseta.histograms.counting import count_traces, with_bins
 from meseta.histograms.displacement import displacement_counts, displacement_edges, displacement_of_selection
@@ -70,6 +73,7 @@ __all__ = [
     "Comparison",
     "ConditionalHistogram",
     "ConductanceHistogram",
+    "Content",
     "CorrelationHistogram",
     "CountMatrix",
     "Decay",
@@ -92,9 +96,11 @@ __all__ = [
     "TemporalHistogram",
     "Yield",
     "bin_notes",
+    "columns_of",
     "compared",
     "conditional_histogram",
     "conductance_histogram",
+    "content_of",
     "correlation_histogram",
     "count_traces",
     "difference",
@@ -121,6 +127,7 @@ __all__ = [
     "shifted_map",
     "spacing_of",
     "temporal_histogram",
+    "uhi_of",
     "window_efficiency",
     "with_bins",
 ]
