@@ -278,6 +278,10 @@ def _length_histograms(_: Iterator[Any], traces: TraceSet, settings: SettingsVie
     )
 
 
+def _slope_histogram(_: Iterator[Any], traces: TraceSet, __: SettingsView, inputs: Inputs, ___: Work) -> Any:
+    return histograms.slope_histogram(inputs["measures"].tunnelling_slope, inputs["selection"].kept, traces.drive.unit)
+
+
 def _plateau_histogram(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, ___: Work) -> Any:
     return histograms.plateau_histogram(
         inputs["plateaus"],
@@ -419,6 +423,7 @@ STEPS: Mapping[str, Step] = {
             ("lengths",),
             _length_histograms,
         ),
+        Step("slope_histogram", "measuring slopes", 1, ("measures", "selection"), (), _slope_histogram),
         Step(
             "plateau_histogram",
             "counting plateaus",

@@ -41,7 +41,7 @@ from meseta.histograms.correlation import correlation_histogram
 from meseta.histograms.counting import count_traces, with_bins
 from meseta.histograms.displacement import displacement_counts, displacement_edges, displacement_of_selection
 from meseta.histograms.distribution import conductance_histogram
-from meseta.histograms.lengths import LengthHistogram, Spacing, Survival, plateau_lengths, spacing_of
+from meseta.histograms.lengths import LengthHistogram, Spacing, Survival, plateau_lengths, slope_histogram, spacing_of
 from meseta.histograms.pairing import Partners, opening_closing_correlation, partner_rows
 from meseta.histograms.plateaus import plateau_histogram
 from meseta.histograms.resampling import resample, restricted
@@ -125,6 +125,7 @@ __all__ = [
     "shifted_correlation",
     "shifted_correlations",
     "shifted_map",
+    "slope_histogram",
     "spacing_of",
     "temporal_histogram",
     "uhi_of",
