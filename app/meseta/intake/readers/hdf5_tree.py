@@ -6,6 +6,7 @@ file is ever opened.  Link loops are met by remembering the address of every obj
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -16,12 +17,14 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import InputError
+from meseta.intake.readers.spool import turned
+from meseta.traces import ArraySamples
 
 __all__ = ["ColumnSamples", "Node", "PartSamples", "RowSamples", "Tree", "VectorSamples", "open_file", "walk"]
 
 BOMB_RATIO: Final = 500
 BOMB_BYTE: Final = 64 << 20
-CACHED_BYTE: Final = 256 << 20
+CACHED_BYTE: Final = 64 << 20
 
 
 @dataclass(frozen=True)
@@ -239,24 +242,29 @@ class RowSamples:
 
 @dataclass
 class ColumnSamples:
-    """A 2D dataset whose columns stand end to end; a small one is turned once and kept."""
+    """A 2D dataset whose columns stand end to end; it is turned once, a large one into a temporary file."""
 
     dataset: Any
-    _turned: npt.NDArray[Any] | None = None
+    _turned: Any = None
+    _lock: Any = field(default_factory=threading.Lock, repr=False, compare=False)
 
     def __len__(self) -> int:
         return int(np.prod(self.dataset.shape))
 
     def read(self, start: int, stop: int) -> npt.NDArray[Any]:
         """Return samples ``start`` to ``stop``."""
-        n = self.dataset.shape[0]
-        if self._turned is None and len(self) * self.dataset.dtype.itemsize <= CACHED_BYTE and stop > start:
-            self._turned = np.ascontiguousarray(_read(self.dataset, lambda: self.dataset[()]).T).reshape(-1)
-        if self._turned is not None:
-            return self._turned[start:stop]
-        first, last = start // n, -(-stop // n)
-        block = _read(self.dataset, lambda: self.dataset[:, first:last])
-        return np.ascontiguousarray(block.T).reshape(-1)[start - first * n : stop - first * n]
+        if stop <= start:
+            return np.empty(0, self.dataset.dtype)
+        with self._lock:
+            if self._turned is None:
+                self._turned = self._turn()
+        return self._turned.read(start, stop)
+
+    def _turn(self) -> Any:
+        data = self.dataset
+        if len(self) * data.dtype.itemsize <= CACHED_BYTE:
+            return ArraySamples(np.ascontiguousarray(_read(data, lambda: data[()]).T).reshape(-1))
+        return turned(lambda a, b: _read(data, lambda: data[a:b]), data.shape, data.dtype, Path(_place_of(data)))
 
 
 @dataclass(frozen=True)
@@ -309,10 +317,18 @@ def _field(dataset: Any, name: str) -> Any:
     return dataset[name] if isinstance(dataset, np.ndarray) else dataset.fields(name)
 
 
+def _place_of(dataset: Any) -> str:
+    """Return the file that an array lies in, and its name there."""
+    if isinstance(dataset, h5py.Dataset) and dataset:
+        return f"{dataset.file.filename}, {dataset.name}"
+    return str(getattr(dataset, "path", "file"))
+
+
 def _read(dataset: Any, action: Any) -> npt.NDArray[Any]:
     try:
         values: npt.NDArray[Any] = action()
         return values
     except (OSError, RuntimeError, ValueError) as error:
-        name = f"{dataset.file.filename}, {dataset.name}" if isinstance(dataset, h5py.Dataset) and dataset else "file"
-        raise InputError("cannot be read: the file is damaged or truncated", name, "copy the file again") from error
+        raise InputError(
+            "cannot be read: the file is damaged or truncated", _place_of(dataset), "copy the file again"
+        ) from error

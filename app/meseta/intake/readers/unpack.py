@@ -9,16 +9,16 @@ import io
 import lzma
 import zipfile
 import zlib
+from collections.abc import Iterator
 from pathlib import Path
 from typing import IO, Any, Final
 
 from meseta.errors import InputError
 
-__all__ = ["PACKED", "peek_bytes", "read_bytes", "sha256_of", "sha256_of_bytes"]
+__all__ = ["PACKED", "peek_bytes", "read_bytes", "sha256_of", "sha256_of_bytes", "unpacked_blocks"]
 
 BOMB_RATIO: Final = 500
 BOMB_BYTE: Final = 64 << 20
-LARGEST_BYTE: Final = 8 << 30
 PACKED: Final = {b"\x1f\x8b": "gzip", b"\xfd7zXZ\x00": "xz", b"BZh": "bzip2", b"PK\x03\x04": "zip"}
 
 
@@ -83,8 +83,8 @@ def peek_bytes(path: Path, count: int) -> tuple[bytes, bool]:
         raise InputError(f"is damaged {kind} ({error})", str(path), "pack the file again") from error
 
 
-def read_bytes(path: Path) -> tuple[bytes, str]:
-    """Return all bytes of a file, unpacked, and the checksum of it as it lies there.
+def read_bytes(path: Path, most_byte: int) -> tuple[bytes, str] | None:
+    """Return all bytes of a file, unpacked, and the checksum of it as it lies there; None where there are too many.
 
     A file that unpacks beyond reason is refused.
 
@@ -93,21 +93,42 @@ def read_bytes(path: Path) -> tuple[bytes, str]:
     InputError
         Where the file cannot be read or unpacked, or is a compression bomb.
     """
+    if path.stat().st_size > most_byte:
+        return None
     data = path.read_bytes()
     sha256 = sha256_of_bytes(data)
-    kind = packing(data[:8])
-    if not kind:
+    if not packing(data[:8]):
         return data, sha256
-    limit = min(LARGEST_BYTE, max(BOMB_BYTE, BOMB_RATIO * len(data)))
     unpacked = io.BytesIO()
+    for block in unpacked_blocks(path, 1 << 22):
+        unpacked.write(block)
+        if unpacked.tell() > most_byte:
+            return None
+    return unpacked.getvalue(), sha256
+
+
+def unpacked_blocks(path: Path, block_byte: int) -> Iterator[bytes]:
+    """Yield the bytes of a file, unpacked, block by block.
+
+    Raises
+    ------
+    InputError
+        Where the file cannot be read or unpacked, or is a compression bomb.
+    """
+    with path.open("rb") as file:
+        kind = packing(file.read(8))
+    limit = max(BOMB_BYTE, BOMB_RATIO * path.stat().st_size)
+    count = 0
     try:
-        with _opened(path, kind) as stream:
-            while block := stream.read(1 << 22):
-                unpacked.write(block)
-                if unpacked.tell() > limit:
+        with _opened(path, kind) if kind else path.open("rb") as stream:
+            while block := stream.read(block_byte):
+                count += len(block)
+                if kind and count > limit:
                     raise InputError(
                         f"unpacks to more than {limit >> 20} MB", str(path), "unpack it yourself if it is meant to"
                     )
+                yield block
     except (OSError, EOFError, lzma.LZMAError, zlib.error, zipfile.BadZipFile, NotImplementedError) as error:
+        if not kind:
+            raise
         raise InputError(f"is damaged {kind} ({error})", str(path), "pack the file again") from error
-    return unpacked.getvalue(), sha256

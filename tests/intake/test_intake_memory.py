@@ -1,0 +1,142 @@
+"""Large recordings pass through memory block by block, and what is put aside on the way changes nothing."""
+
+from __future__ import annotations
+
+import os
+import subprocess
+import sys
+from pathlib import Path
+
+import h5py
+import nptdms
+import numpy as np
+import pytest
+from test_intake_layouts import WRITERS, assert_same
+
+from meseta import intake
+from meseta.intake import open_recording, traces_from
+from meseta.intake.readers import hdf5_tree, numpy_files, spool, tdms, text, text_stream
+from meseta.recipe import Recipe
+from meseta.work import Work
+
+TEXTS = [write for write in WRITERS if not write.__name__.startswith(("hdf5", "numpy", "mat", "tdms", "siemens"))]
+PERIOD = 100_000
+
+
+@pytest.mark.parametrize("write", TEXTS, ids=lambda write: write.__name__)
+def test_a_text_that_is_put_aside_reads_like_one_in_memory(write, tmp_path, monkeypatch):
+    path = write(tmp_path)
+    whole = intake.read(path)
+    monkeypatch.setattr(text, "LARGE_BYTE", 100)
+    for block_byte in (301, 4096):  # cuts fall into rows, headings and separators
+        monkeypatch.setattr(text_stream, "BLOCK_BYTE", block_byte)
+        aside = intake.read(path)
+        assert_same(aside, 0.0)
+        np.testing.assert_array_equal(aside.conductance, whole.conductance)
+        assert aside.notes == whole.notes
+        assert aside.key == whole.key
+
+
+def test_a_bad_cell_deep_in_a_large_text_is_named_with_its_line(tmp_path, monkeypatch):
+    monkeypatch.setattr(text, "LARGE_BYTE", 100)
+    monkeypatch.setattr(text_stream, "BLOCK_BYTE", 500)
+    rows = [f"{0.01 * n:.2f},{2.0 / (n + 1):.6g}" for n in range(400)]
+    rows[299] = "2.99,oops"
+    (tmp_path / "a.csv").write_text("displacement_nm,conductance_G0\n" + "\n".join(rows) + "\n")
+    with pytest.raises(intake.opening.InputError, match="'oops' is not a number") as raised:
+        intake.read(tmp_path / "a.csv")
+    assert raised.value.where.endswith("line 301")
+
+
+@pytest.mark.parametrize("order", ["C", "F"])
+def test_large_arrays_stay_in_their_file(order, tmp_path, monkeypatch):
+    rows = np.random.default_rng(1).normal(size=(40, 300)).astype(">f4")
+    np.save(tmp_path / "conductance_G0.npy", np.asarray(rows, order=order))
+    np.savez(tmp_path / "stored.npz", conductance_G0=np.asarray(rows, order=order))
+    monkeypatch.setattr(numpy_files, "LARGE_BYTE", 100)
+    monkeypatch.setattr(numpy_files, "BLOCK_BYTE", 5000)
+    monkeypatch.setattr(hdf5_tree, "CACHED_BYTE", 100)
+    monkeypatch.setattr(spool, "TURN_BYTE", 7000)
+    for name in ("conductance_G0.npy", "stored.npz"):
+        for layout, expected in (("rows", rows), ("columns", rows.T)):
+            traces = intake.read(tmp_path / name, Recipe.build({"intake": {"layout": layout}}))
+            assert traces.traces == len(expected)
+            np.testing.assert_array_equal(traces.conductance, expected.ravel().astype("f4"))
+
+
+def test_tdms_chunks_of_any_size_and_order_are_found_in_their_places(tmp_path, monkeypatch):
+    """Numbers read from their places agree with the library's own, also where the file was cut off in a chunk."""
+    rng, path = np.random.default_rng(2), tmp_path / "a.tdms"
+    with nptdms.TdmsWriter(path) as writer:
+        for part in range(7):
+            channels = [nptdms.ChannelObject("g", "conductance", rng.normal(size=100), {"unit_string": "G0"})]
+            channels.append(nptdms.ChannelObject("g", "force", rng.normal(size=100 + part).astype("f4")))
+            writer.write_segment(channels[::-1] if part > 4 else channels)
+    for cut in (0, 500):
+        shorter = tmp_path / f"cut{cut}.tdms"
+        shorter.write_bytes(path.read_bytes()[: -cut or None])
+        file = nptdms.TdmsFile.open(str(shorter))
+        for channel in file["g"].channels():
+            whole = channel[:]
+            for start, stop in ((0, len(whole)), (95, 210), (len(whole) - 3, len(whole))):
+                places = tdms._places_of(file, channel)
+                np.testing.assert_array_equal(places.read(shorter, start, stop), whole[start:stop])
+        file.close()
+
+
+def _record(path: Path, samples: int) -> None:
+    """Write a continuous recording of triangular piezo volts and amplifier volts, as counts."""
+    with h5py.File(path, "w") as file:
+        size = {"shape": (samples,), "dtype": "<i2", "chunks": (1 << 17,), "compression": "gzip", "shuffle": True}
+        piezo, amplifier = file.create_dataset("piezo", **size), file.create_dataset("amplifier", **size)
+        piezo.attrs.update(unit="V", scale=1e-3)
+        amplifier.attrs.update(unit="V", scale=1e-4)
+        file.attrs.update(bias_volt=0.1, gain_volt_per_ampere=1e5, nm_per_volt=0.5, sampling_hertz=2e4)
+        for start in range(0, samples, 1 << 20):
+            stop = min(start + (1 << 20), samples)
+            phase = np.arange(start, stop) % PERIOD / PERIOD
+            up = 1 - np.abs(2 * phase - 1)
+            piezo[start:stop] = 8000 * up
+            amplifier[start:stop] = 20000 * 10.0 ** np.maximum(-0.4 - 6 * up, -3.3)
+
+
+def test_streamed_traces_are_those_in_memory(tmp_path):
+    _record(tmp_path / "a.h5", 1_200_000)
+    recipe = Recipe.build({"calibration": {"full_scale_volt": 0.79, "series_resistance_ohm": 100.0}})
+    whole = intake.read(tmp_path / "a.h5", recipe)
+    with open_recording(tmp_path / "a.h5", recipe) as recording:
+        streamed = traces_from([recording], recipe, Work(block_samples=20_000), stream=True)
+        assert streamed.key == whole.key
+        np.testing.assert_array_equal(streamed.offsets, whole.offsets)
+        np.testing.assert_array_equal(streamed.conductance, whole.conductance)
+        np.testing.assert_array_equal(streamed.drive_values(0, whole.traces), whole.drive_values(0, whole.traces))
+        assert whole.quality is not None
+        assert streamed.quality is not None
+        np.testing.assert_array_equal(streamed.quality.read(0, whole.samples), whole.quality.read(0, whole.samples))
+        assert streamed.notes == whole.notes
+
+
+_GATHER = """
+import resource, sys
+from meseta import intake, study
+from meseta.work import Work
+import hdf5plugin, numba, pyarrow.csv, scipy.stats
+small, large, into = sys.argv[1:]
+study.gather([small], into + ".small")
+intake.describe([small])
+used = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+study.gather([large], into)
+intake.describe([large])
+print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - used)
+"""
+
+
+@pytest.mark.skipif(not Path("/proc").exists(), reason="peak memory is counted in kB on Linux only")
+def test_gathering_and_checking_a_long_record_takes_no_memory_for_it(tmp_path):
+    """12 million samples are 48 MB a channel as float32 and 96 MB as float64; none of it is ever held whole."""
+    _record(tmp_path / "small.h5", 4_100_000)
+    _record(tmp_path / "large.h5", 12_000_000)
+    arguments = [sys.executable, "-c", _GATHER, *(str(tmp_path / name) for name in ("small.h5", "large.h5", "s.h5"))]
+    done = subprocess.run(arguments, capture_output=True, text=True, check=False, env={**os.environ})
+    assert done.returncode == 0, done.stderr
+    assert int(done.stdout.split()[-1]) < 40_000
