@@ -28,7 +28,7 @@ __all__ = ["Part", "plan_of", "prepared"]
 
 LINEAR_TOLERANCE: Final = 1.2e-7
 """Steps are equal where no value is off by more than the rounding of float32."""
-CARRIED: Final = ("other", "voltage", "bias", "range_code", "phase")
+CARRIED: Final = ("other", "voltage", "bias", "range_code", "trigger", "phase")
 ENDS: Final = 16
 RISE_FACTOR: Final = 10.0
 LARGEST_BLOCK: Final = 2_000_000

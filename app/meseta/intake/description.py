@@ -113,7 +113,8 @@ class Description:
         shown.append(f"  conductance from {self.conductance_from}; {self.drive}")
         shown += [f"  {name} = {one['value']} ({one['from']})" for name, one in self.calibration.items()]
         closings = self.traces - self.openings
-        apart = f", {self.incomplete} ranges kept apart as incomplete" if self.incomplete else ""
+        ranges = "range" if self.incomplete == 1 else "ranges"
+        apart = f", {self.incomplete} {ranges} kept apart as incomplete" if self.incomplete else ""
         shown.append(f"  traces: {self.openings} opening, {closings} closing{apart}")
         if self.proposed_zero_g0 is not None:
             shown.append(f"  zero of displacement: {self.proposed_zero_g0:g} G0 fits this recording")

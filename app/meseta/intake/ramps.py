@@ -22,6 +22,11 @@ BLOCK: Final = 4_000_000
 PROBES: Final = 64
 PROBE_SAMPLES: Final = 4096
 NOISE_SIGMAS: Final = 12.0
+SMALLEST_SHARE: Final = 1e-4
+"""Ramps smaller than this share of the whole range are not looked for."""
+CLEARLY_LARGER: Final = 4.0
+LEAST_FLANK: Final = 12
+LINE_SIGMAS: Final = 12.0
 MAD_SECOND: Final = 0.605269821
 """Noise from the median absolute second difference of a signal that is straight between few corners."""
 
@@ -36,11 +41,14 @@ class Ramps:
         Half-open range of samples in which the drive moves; from ``end`` to the next ``begin`` it holds.
     swing : (ramps,) float64
         Change of the drive over the ramp, with its sign.
+    noise : float
+        Standard deviation of the drive's noise.
     """
 
     begin: npt.NDArray[np.int64]
     end: npt.NDArray[np.int64]
     swing: Floats
+    noise: float
 
 
 def signal_scale(read: Read, samples: int) -> tuple[float, float]:
@@ -84,10 +92,9 @@ def find_ramps(read: Read, samples: int, smallest_fraction: float) -> Ramps | No
     if samples <= BLOCK and _is_monotonic(read(0, samples)):
         return None
     span, noise = signal_scale(read, samples)
-    threshold = max(0.5 * smallest_fraction * span, NOISE_SIGMAS * noise)
-    if span == 0.0 or threshold >= span:
+    if span == 0.0 or NOISE_SIGMAS * noise >= span:
         return None
-    turns = _turning_points(read, samples, threshold)
+    turns = _turns_of_ramps(read, samples, span, noise, smallest_fraction)
     if len(turns) < 3:
         return None
     corners = [_corner(read, turns, place, noise, samples) for place in range(len(turns))]
@@ -95,13 +102,36 @@ def find_ramps(read: Read, samples: int, smallest_fraction: float) -> Ramps | No
     end = np.array([corner[0] for corner in corners[1:]], np.int64)
     end = np.maximum(end, begin)
     level = np.array([read(turn, turn + 1)[0] for turn in turns])
-    return Ramps(begin, end, np.diff(level))
+    return Ramps(begin, end, np.diff(level), noise)
 
 
 def _is_monotonic(values: Floats) -> bool:
     """Return whether a signal never turns; one with NaN is looked at more closely."""
     steps = np.diff(values)
     return bool((steps >= 0).all() or (steps <= 0).all())
+
+
+def _turns_of_ramps(read: Read, samples: int, span: float, noise: float, smallest_fraction: float) -> list[int]:
+    """Return the turning points between ramps, whose size is not known beforehand.
+
+    Cycles may be far smaller than the whole range (drift, a coarse approach before them).  So the size of swings that
+    count is lowered from the whole range on until the usual swing is several times that size: drift has no size of its
+    own, its swings are hardly larger than what is looked for, whatever that is.
+    """
+    least = max(NOISE_SIGMAS * noise, SMALLEST_SHARE * span)
+    threshold = max(0.5 * smallest_fraction * span, least)
+    first: list[int] = []
+    while True:
+        turns = _turning_points(read, samples, threshold)
+        first = first or turns
+        if len(turns) >= 3:
+            usual = float(np.median(np.abs(np.diff([read(turn, turn + 1)[0] for turn in turns]))))
+            if usual >= CLEARLY_LARGER * threshold:
+                wanted = max(0.5 * smallest_fraction * usual, least)
+                return turns if wanted >= threshold else _turning_points(read, samples, wanted)
+        if threshold <= least:
+            return first
+        threshold = max(threshold / 2, least)
 
 
 def _turning_points(read: Read, samples: int, threshold: float) -> list[int]:
@@ -145,12 +175,18 @@ class _Flank:
 
 
 def _flank(values: Floats, extreme: float, noise: float) -> _Flank | None:
-    """Return the flank that leaves the extreme along ``values``; the first value is the extreme."""
+    """Return the flank that leaves the extreme along ``values``; the first value is the extreme.
+
+    The line is fitted to no more samples than it needs to be sure of the corner: a hold or another speed further along
+    the ramp must not bend it.
+    """
     away = np.abs(values - extreme)
     full = float(np.nanmax(away))
-    steps = np.abs(np.diff(values[np.isfinite(values)]))
-    moving = steps[steps > 0]
-    stair = float(np.median(moving)) if len(moving) else 0.0
+    finite = values[np.isfinite(values)]
+    steps = np.abs(np.diff(finite))
+    moves = np.flatnonzero(steps > 0)
+    stair = float(np.median(steps[moves])) if len(moves) else 0.0
+    wait = float(np.median(np.diff(moves))) if len(moves) > 1 else 1.0
     tolerance = max(10 * noise, 2.5 * stair, 3 * full / max(len(values), 1))
     if not full > 2 * tolerance:
         tolerance = full / 4
@@ -158,6 +194,10 @@ def _flank(values: Floats, extreme: float, noise: float) -> _Flank | None:
     near = int(close[-1]) + 1 if len(close) else 1
     far_candidates = np.flatnonzero(away[near:] >= min(0.3 * full + tolerance, full))
     far = near + int(far_candidates[0]) if len(far_candidates) else len(values) - 1
+    early = np.flatnonzero(away[near:] >= min(0.1 * full + tolerance, full))
+    speed = (0.1 * full + tolerance) / max(near + int(early[0]) if len(early) else far, 1)
+    enough = max(LEAST_FLANK, (LINE_SIGMAS * noise / speed) ** 2, 6 * wait)
+    far = min(far, near + int(enough))
     index = np.arange(near, max(far, near + 2) + 1)
     index = index[index < len(values)]
     index = index[np.isfinite(values[index])]
@@ -182,6 +222,14 @@ def _meeting(values: Floats, turn: int, first: int, before: _Flank | None, after
         across = (after.level_at - before.level_at) / (before.slope - after.slope)
         corner = turn + round(float(np.clip(across, near_before, near_after)))
         return corner, corner
+    if not flat and before is None:  # the record begins within the ramp, or with it
+        return first, first
+    if not flat and after is None:
+        return first + len(values), first + len(values)
+    # the level of the hold without the ends of the flanks
+    inner_lo = lo + (round(before.reach) if before is not None else 0)
+    inner_hi = hi - (round(after.reach) if after is not None else 0)
+    lo, hi = (inner_lo, inner_hi) if inner_hi - inner_lo >= 3 else (lo, hi)
     level = float(np.nanmedian(values[lo:hi])) if hi > lo else float(values[turn - first])
     end = begin = turn
     if before is not None:

@@ -52,6 +52,7 @@ _NAMES: Final = {
     "range_code": "range range_code gain_code gain_range range_index",
     "trace_number": "trace trace_number trace_no trace_id tracenumber traceid trace_index curve curve_number curve_id "
     "cycle cycle_number trace_nr",
+    "trigger": "trigger trig ttl trigger_in trigger_out trigger_signal",
     "phase": "phase segment_kind motion",
 }  # fmt: skip
 _ROLE_OF_NAME: Final = {name: role for role, names in _NAMES.items() for name in names.split()}

@@ -12,11 +12,21 @@ __all__ = ["CuttingSettings"]
 class CuttingSettings(Section):
     """Continuous recordings to single traces."""
 
-    method: Literal["auto", "ramp", "threshold", "none"] = setting(
+    method: Literal["auto", "ramp", "threshold", "trigger", "number", "time", "none"] = setting(
         "auto",
         "Cut by",
-        "'auto': by the ramp of the piezo where there is one; 'threshold': by the conductance; "
-        "'none': the recording is one trace.",
+        "'ramp': the ramp of the piezo; 'threshold': the conductance; 'trigger': the edges of a trigger channel; "
+        "'number': changes of a trace-number channel; 'time': falls of the time; 'none': the recording is one trace; "
+        "'auto': the trace number where there is one, else the ramp, else time or trigger.",
+    )
+    trigger_edge: Literal["rising", "falling", "both"] = setting(
+        "rising", "Trigger edge", "Edge of the trigger at which a trace begins."
+    )
+    trigger_level: float | None = setting(
+        None,
+        "Trigger level",
+        "Reading that an edge crosses, in the unit of the trigger channel.",
+        unset="half way between its least and largest reading",
     )
     pull_is: Literal["rising", "falling"] | None = setting(
         None,

@@ -24,6 +24,7 @@ Role = Literal[
     "bias",
     "range_code",
     "trace_number",
+    "trigger",
     "phase",
     "other",
     "ignore",

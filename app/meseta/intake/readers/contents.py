@@ -142,7 +142,11 @@ def make_channel(
             guess = second if second.role != "other" else guess
     scale, offset = conversion(attributes, dtype.kind in "iu")
     doubts = list(guess.doubts)
-    if dtype.kind in "iu" and scale == 1.0 and guess.role not in ("trace_number", "phase", "range_code", "other"):
+    if (
+        dtype.kind in "iu"
+        and scale == 1.0
+        and guess.role not in ("trace_number", "trigger", "phase", "range_code", "other")
+    ):
         doubts.append("stored as whole numbers without a scale: taken as they are")
     plain = {str(key): value for key, raw in attributes.items() if (value := plain_value(raw)) is not None}
     said = (guess.role, guess.unit, scale, offset, shared, guess.ground, guess.confidence)
