@@ -1,22 +1,25 @@
-"""Recordings with a known expected histogram, made at the level of counts, for measuring how often intervals hold.
+"""Recordings with a known expected histogram, for measuring how often intervals hold.
 
+Made sample by sample and counted as any recording is (:func:`recorded`), or, faster, as counts (:func:`experiment`).
 Every trace may have a plateau (latent choice), at a position that scatters from trace to trace; both may have memory
 along the record; the position may drift and differ between specimens.  The expected histogram is known in closed form.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import signal, stats
 
-from meseta.histograms import Grid, conductance_histogram, resample
+from meseta.histograms import Grid, conductance_histogram, count_traces, resample, with_bins
 from meseta.histograms.grids import logarithmic_edges
 from meseta.histograms.results import EXCLUDED, CountMatrix, Resampling
+from meseta.intake.alignment import Alignment
 from meseta.recipe import Recipe
-from meseta.traces import trace_table
+from meseta.segmentation.results import NoiseModel
+from meseta.traces import TraceSet, trace_table
 from meseta.work import Work
 
 CENTRE = -3.5
@@ -64,16 +67,22 @@ def latent(scenario: Scenario, random: np.random.Generator) -> np.ndarray:
     return np.sqrt(scenario.memory_share) * slow + np.sqrt(1 - scenario.memory_share) * fresh
 
 
-def experiment(scenario: Scenario, seed: int) -> tuple[CountMatrix, dict[str, np.ndarray]]:
-    """Return the count matrix and the trace table of one recording."""
-    random = np.random.default_rng(seed)
+def plateaus(scenario: Scenario, random: np.random.Generator) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return place (log10 G) and number of samples of every trace's plateau, and its specimen."""
     traces = scenario.traces
     specimen = np.arange(traces) * scenario.specimens // traces
     place = CENTRE + SCATTER * latent(scenario, random)
     place += scenario.drift_decades * ((np.arange(traces) + 0.5) / traces - 0.5)
     place += (scenario.between_decades * random.standard_normal(scenario.specimens))[specimen]
     has_plateau = latent(scenario, random) < stats.norm.ppf(SHARE)
-    number = random.poisson(SAMPLES_A_PLATEAU * random.gamma(2.0, 0.5, traces)) * has_plateau
+    return place, random.poisson(SAMPLES_A_PLATEAU * random.gamma(2.0, 0.5, traces)) * has_plateau, specimen
+
+
+def experiment(scenario: Scenario, seed: int) -> tuple[CountMatrix, dict[str, np.ndarray]]:
+    """Return the count matrix and the trace table of one recording, made as counts."""
+    random = np.random.default_rng(seed)
+    traces = scenario.traces
+    place, number, specimen = plateaus(scenario, random)
     u = np.repeat(place, number) + WITHIN * random.standard_normal(int(number.sum()))
     bins = GRID.bins
     at = np.searchsorted(GRID.u_edges, u, side="right") - 1
@@ -87,6 +96,36 @@ def experiment(scenario: Scenario, seed: int) -> tuple[CountMatrix, dict[str, np
     return matrix, trace_table(traces, specimen=specimen.astype(str))
 
 
+FLOOR, SAMPLES_A_DECADE, SAMPLES = 1e-7, 10, 700
+FINE = Recipe().with_values("histogram", bins_per_decade=20, low_g0=1e-5, high_g0=1e-2)
+
+
+def recorded(scenario: Scenario, seed: int) -> tuple[CountMatrix, dict[str, np.ndarray]]:
+    """Return the same recording from samples: a decay that passes every bin alike, the plateau, and the floor.
+
+    The decay has 10 samples a decade and begins at a random phase, so that every bin of 1/20 decade expects half a
+    sample of it, as in :func:`expected_counts`.
+    """
+    random = np.random.default_rng(seed)
+    traces = scenario.traces
+    place, number, specimen = plateaus(scenario, random)
+    number = np.minimum(number, SAMPLES - 70)
+    begin = 1.0 - random.random(traces) / SAMPLES_A_DECADE
+    decay = begin[:, None] - np.arange(SAMPLES) / SAMPLES_A_DECADE
+    before = np.clip(np.ceil((begin - place) * SAMPLES_A_DECADE), 0, SAMPLES).astype(np.int64)
+    at = np.arange(SAMPLES) - before[:, None]
+    on_plateau = (at >= 0) & (at < number[:, None])
+    row = np.arange(traces)[:, None]
+    u = decay[row, np.where(at < 0, np.arange(SAMPLES), np.maximum(np.arange(SAMPLES) - number[:, None], 0))]
+    u = np.where(on_plateau, place[:, None] + WITHIN * random.standard_normal(u.shape), u)
+    values = 10.0 ** np.maximum(u, -9) + FLOOR * random.standard_normal(u.shape)
+    traces_set = TraceSet.from_arrays(values, step_nm=0.001, specimen=specimen.astype(str))
+    noise = NoiseModel(0.0, FLOOR, 100, *(np.ones(1) for _ in range(3)), 2.0, 0.0, np.inf, -10.0)
+    none = Alignment(np.full(traces, np.nan), np.full(traces, -1), np.ones(traces, np.uint8), 0.5)
+    counts = count_traces(traces_set, FINE.histogram, noise, none, ("pull",))
+    return with_bins(counts, FINE.histogram, noise), dict(traces_set.table)
+
+
 def centroid(counts: np.ndarray) -> np.ndarray:
     """Return the mean log10 G within 0.5 decade of the centre, background taken off: a stand-in for a peak position."""
     u = (GRID.u_edges[1:] + GRID.u_edges[:-1]) / 2
@@ -94,6 +133,9 @@ def centroid(counts: np.ndarray) -> np.ndarray:
     level = np.median(counts[..., ~near], axis=-1, keepdims=True)
     weight = counts[..., near] - level
     return (weight * u[near]).sum(-1) / weight.sum(-1)
+
+
+Maker = Callable[[Scenario, int], tuple[CountMatrix, dict[str, np.ndarray]]]
 
 
 @dataclass(frozen=True)
@@ -107,7 +149,7 @@ class Coverage:
 
 
 def outcomes(
-    scenario: Scenario, experiments: int, replicates: int, seed: int
+    scenario: Scenario, experiments: int, replicates: int, seed: int, make: Maker
 ) -> Iterator[tuple[np.ndarray, bool, float, Resampling]]:
     recipe = Recipe().with_values("resampling", replicates=replicates)
     truth = expected_counts(scenario)
@@ -115,7 +157,7 @@ def outcomes(
     true_place = float(centroid(truth))
     kept, work = np.ones(scenario.traces, bool), Work(threads=1)
     for number in range(experiments):
-        matrix, table = experiment(scenario, seed + number)
+        matrix, table = make(scenario, seed + number)
         settings = replace_seed(recipe, number)
         drawn = resample(matrix, kept, table, recipe.histogram, settings.resampling, work)
         histogram = conductance_histogram(matrix, kept, recipe.histogram, drawn)
@@ -129,10 +171,12 @@ def replace_seed(recipe: Recipe, seed: int) -> Recipe:
     return recipe.with_values("resampling", seed=seed)
 
 
-def measure(scenario: Scenario, experiments: int, replicates: int = 400, seed: int = 1000) -> Coverage:
+def measure(
+    scenario: Scenario, experiments: int, replicates: int = 400, seed: int = 1000, make: Maker = experiment
+) -> Coverage:
     """Return the coverage of the pointwise band (over bins that are not weak) and of the position."""
     bands, places, widths, worth = [], [], [], []
-    for holds, place, width, drawn in outcomes(scenario, experiments, replicates, seed):
+    for holds, place, width, drawn in outcomes(scenario, experiments, replicates, seed, make):
         bands.append(holds.mean())
         places.append(place)
         widths.append(width)
