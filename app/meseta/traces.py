@@ -14,6 +14,7 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from itertools import pairwise
 from typing import Any, Final, Protocol
 
 import numpy as np
@@ -316,14 +317,20 @@ class TraceSet:
 
     def drive_values(self, first: int, last: int) -> npt.NDArray[np.float64]:
         """(n,) float64, drive axis of traces ``first`` to ``last``, end to end, in ``drive.unit``."""
-        lengths = np.diff(self.offsets[first : last + 1])
-        start = np.repeat(self.drive.start[first:last], lengths)
         if self.drive.relative is not None:
+            lengths = np.diff(self.offsets[first : last + 1])
+            start = np.repeat(self.drive.start[first:last], lengths)
             relative = self.drive.relative.read(int(self.offsets[first]), int(self.offsets[last]))
             return start + relative.astype(np.float64)
-        begin = np.repeat(self.offsets[first:last] - self.offsets[first], lengths)
-        index = np.arange(len(begin), dtype=np.int64) - begin
-        return start + np.repeat(self.drive.step[first:last], lengths) * index
+        # trace by trace in place: no array of the length of all samples is repeated, so the interpreter stays free
+        ends = (self.offsets[first : last + 1] - self.offsets[first]).tolist()
+        values = np.empty(ends[-1], np.float64)
+        index = np.arange(max((stop - start for start, stop in pairwise(ends)), default=0), dtype=np.float64)
+        for row, (start, stop) in enumerate(pairwise(ends), first):
+            part = values[start:stop]
+            np.multiply(index[: stop - start], self.drive.step[row], out=part)
+            part += self.drive.start[row]
+        return values
 
     def identity(self, trace: int) -> TraceIdentity:
         """Return what trace number ``trace`` is."""

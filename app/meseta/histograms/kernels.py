@@ -481,6 +481,12 @@ def _warm_up() -> None:
     unit = np.ones(1)
     for drive in (np.zeros(0, np.float32), values):
         find_window(begin, begin, end, unit, unit, drive, unit, 0.0, 1.0, begin.copy(), begin.copy())
+    for kind in (np.uint16, np.uint32):
+        matrix = np.ones((2, 8), kind)
+        for some in (matrix, matrix[:, :4]):  # a part of the axis is a view with gaps: another kernel
+            sum_rows(some, begin, 4, np.zeros(4, np.int64), np.zeros(1, np.int64))
+            for number in (np.float32, np.float64):
+                merge_rows(some, begin, 4, np.zeros((1, 1), number))
     edges = np.array([0.0, 1.0])
     tally = np.zeros((2, 1, 2), np.uint32)
     count_stepped_grid(values, begin, begin, end, begin, unit, unit, unit, edges, table, thresholds, 1, tally)

@@ -191,6 +191,10 @@ class StripPicture:
         Counts a trace, averaged over 2**k consecutive traces at level k + ``first_level``.
     u_low, u_high : float
         Ends of the conductance axis as drawn.
+    scale : str
+        How the images divide their colours.
+    images : tuple of (columns, bins) uint8
+        The levels as places in a colour table.
     """
 
     levels: tuple[npt.NDArray[np.float32], ...]
@@ -198,6 +202,8 @@ class StripPicture:
     axis: str
     u_low: float
     u_high: float
+    scale: str
+    images: tuple[npt.NDArray[np.uint8], ...]
 
     def level_for(self, first: float, last: float) -> int:
         """Return the level that shows traces ``first`` to ``last`` in at most about 2,000 columns."""
@@ -206,8 +212,8 @@ class StripPicture:
         return min(level, len(self.levels) - 1)
 
 
-def strip_picture(counts: CountMatrix, work: Work) -> StripPicture:
-    """Return the pyramid of the temporal histogram."""
+def strip_picture(counts: CountMatrix, scale: str, work: Work) -> StripPicture:
+    """Return the pyramid of the temporal histogram, with its images on a colour scale."""
     edges = counts.grid.u_edges
     merge = max(counts.grid.bins // STRIP_BINS, 1)
     bins = counts.grid.bins // merge
@@ -221,7 +227,12 @@ def strip_picture(counts: CountMatrix, work: Work) -> StripPicture:
     while len(levels[-1]) > STRIP_COLUMNS // 2:
         work.check()
         levels.append(_halved(levels[-1]))
-    return StripPicture(tuple(levels), traces, counts.grid.axis, float(edges[0]), float(edges[bins * merge]))
+    images = []
+    for level in levels:
+        work.check()
+        images.append(scaled_image(level, scale, usual_top(level[:: max(len(level) // 500, 1)])))
+    ends = float(edges[0]), float(edges[bins * merge])
+    return StripPicture(tuple(levels), traces, counts.grid.axis, *ends, scale, tuple(images))
 
 
 def _halved(columns: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:

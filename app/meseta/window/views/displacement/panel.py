@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import Any
+
 import numpy as np
 import pyqtgraph as pg
 from PySide6.QtCore import QRectF
@@ -9,15 +12,19 @@ from PySide6.QtCore import QRectF
 from meseta import typeset
 from meseta.histograms import DisplacementHistogram
 from meseta.window.frame import Frame
-from meseta.window.pictures import scaled_image, usual_top
+from meseta.window.jobs import Channel
 from meseta.window.plots.drawing import WindowTool
 from meseta.window.plots.panel import DrivePanel, PlotData
 from meseta.window.plots.scale import ScaleBar
 from meseta.window.plots.ticks import PlainAxis
 from meseta.window.session import Change
 from meseta.window.theme import Theme
+from meseta.window.views.displacement.picture import DisplacementImage, DisplacementPicture, displacement_picture
+from meseta.work import Work
 
 __all__ = ["DisplacementPanel"]
+
+IMAGE = Channel("displacement_image", quick=True, shown=False)
 
 
 class DisplacementPanel(DrivePanel):
@@ -40,6 +47,7 @@ class DisplacementPanel(DrivePanel):
         self.tool = WindowTool(self, across=True)
         self._whole: DisplacementHistogram | None = None
         self._part: DisplacementHistogram | None = None
+        self._picture: DisplacementPicture | None = None
         session = self.session
         session.result_changed.connect(self._result_changed)
         session.states_changed.connect(self._say)
@@ -58,53 +66,71 @@ class DisplacementPanel(DrivePanel):
     def _traces_changed(self) -> None:
         self._whole = self.session.result("displacement_histogram")
         self._part = None
+        self._ask()
         unit = self.session.drive_unit
         self.bottom.say("displacement (nm)" if unit == "nm" else f"drive ({unit})")
-        self._draw()
         self._say()
 
     def _result_changed(self, name: str) -> None:
         if name == "displacement_histogram":
             self._whole = self.session.result(name)
-            self._draw()
+            self._ask()
 
     def _part_changed(self, part: DisplacementHistogram | None) -> None:
         self._part = part
-        self._draw()
+        self._ask()
 
     def _document_changed(self, change: Change) -> None:
-        if change.before.recipe.figure != change.after.recipe.figure:
+        before, after = change.before.recipe, change.after.recipe
+        if before.figure.colour_scale != after.figure.colour_scale:
+            self._ask()
+        if before.figure != after.figure or before.histogram.axis != after.histogram.axis:
             self._draw()
         if change.recipe:
             self._say()
 
     # -- drawing -----------------------------------------------------------------------------------------------------
 
+    def _ask(self) -> None:
+        """Have the images made off the window's thread; until they come the last ones stay."""
+        whole, part, before = self._whole, self._part, self._picture
+        if whole is None:
+            self.session.jobs.cancel(IMAGE)
+            self._take(None)
+            return
+        scale = self.session.document.recipe.figure.colour_scale
+
+        def task(work: Work, _: Callable[[Any], None]) -> DisplacementPicture:
+            return displacement_picture(whole, part, scale, before, work)
+
+        self.session.jobs.submit(IMAGE, "2D histogram", task, self._take, self.session.problem.emit)
+
+    def _take(self, picture: DisplacementPicture | None) -> None:
+        self._picture = picture
+        self._draw()
+        self._say()
+
     def _draw(self) -> None:
-        whole = self._whole
-        fits = whole is not None and whole.grid.axis == self.session.axis
+        picture = self._picture
+        fits = picture is not None and picture.whole.histogram.grid.axis == self.session.axis
         self.image.setVisible(fits)
-        if not fits or whole is None:
+        if not fits or picture is None:
             self.over.hide()
             self.scale.hide()
             return
         theme, settings = self.frame.theme, self.session.document.recipe.figure
-        part = self._part if self._part is not None and self._part.density.shape == whole.density.shape else None
-        lookup = theme.lookup(settings.colour_map) if part is None else theme.grey_lookup
-        lookup = lookup.copy()
+        lookup = (theme.lookup(settings.colour_map) if picture.part is None else theme.grey_lookup).copy()
         lookup[0, :3] = theme.lookup("grey")[0, :3]
-        self._set(self.image, whole, lookup)
-        if part is not None:
-            self._set(self.over, part, theme.over_lookup)
-        self.over.setVisible(part is not None)
-        top = usual_top(whole.density)
-        self.scale.show_scale(lookup, top, settings.colour_scale, whole.density_unit, theme)
+        self._set(self.image, picture.whole, lookup)
+        if picture.part is not None:
+            self._set(self.over, picture.part, theme.over_lookup)
+        self.over.setVisible(picture.part is not None)
+        unit = picture.whole.histogram.density_unit
+        self.scale.show_scale(lookup, picture.whole.top, picture.scale, unit, theme)
 
-    def _set(self, item: pg.ImageItem, histogram: DisplacementHistogram, lookup: np.ndarray) -> None:
-        scale = self.session.document.recipe.figure.colour_scale
-        image = scaled_image(histogram.density, scale, usual_top(histogram.density))
-        item.setImage(image, autoLevels=False, levels=(0, 255), lut=lookup)
-        x, u = histogram.drive_edges, histogram.grid.u_edges
+    def _set(self, item: pg.ImageItem, image: DisplacementImage, lookup: np.ndarray) -> None:
+        item.setImage(image.places, autoLevels=False, levels=(0, 255), lut=lookup)
+        x, u = image.histogram.drive_edges, image.histogram.grid.u_edges
         item.setRect(QRectF(float(x[0]), float(u[0]), float(x[-1] - x[0]), float(u[-1] - u[0])))
 
     def _say(self) -> None:

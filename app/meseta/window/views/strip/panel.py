@@ -17,7 +17,7 @@ from meseta.histograms import CountMatrix
 from meseta.window.conditions import Condition
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
-from meseta.window.pictures import StripPicture, scaled_image, strip_picture, usual_top
+from meseta.window.pictures import StripPicture, strip_picture
 from meseta.window.plots.gestures import Drag
 from meseta.window.plots.panel import PlotData, PlotPanel
 from meseta.window.plots.ticks import ConductanceAxis, PlainAxis
@@ -113,13 +113,22 @@ class StripPanel(PlotPanel):
             self._draw_ranges()
         if change.decisions:
             self._draw_marks()
+        before, after = change.before.recipe.figure, change.after.recipe.figure
+        if before.colour_scale != after.colour_scale:
+            self._ask()
+        elif before != after:
+            self._level = -1
+            self._draw()
 
     def _ask(self) -> None:
         """Have the pyramid of the picture made off the window's thread."""
-        counts: CountMatrix = self.session.result("counts")
+        counts: CountMatrix | None = self.session.result("counts")
+        if counts is None:
+            return
+        scale = self.session.document.recipe.figure.colour_scale
 
         def task(work: Any, _: Callable[[Any], None]) -> StripPicture:
-            return strip_picture(counts, work)
+            return strip_picture(counts, scale, work)
 
         self.session.jobs.submit(STRIP, "record strip", task, self._take, self.session.problem.emit)
 
@@ -149,8 +158,7 @@ class StripPanel(PlotPanel):
         lookup = theme.lookup(settings.colour_map).copy()
         lookup[0, :3] = theme.lookup("grey")[0, :3]
         columns = picture.levels[level]
-        image = scaled_image(columns, settings.colour_scale, usual_top(columns[:: max(len(columns) // 500, 1)]))
-        self.image.setImage(image, autoLevels=False, levels=(0, 255), lut=lookup)
+        self.image.setImage(picture.images[level], autoLevels=False, levels=(0, 255), lut=lookup)
         width = len(columns) * 2**level
         self.image.setRect(QRectF(0, picture.u_low, width, picture.u_high - picture.u_low))
         self.image.show()
