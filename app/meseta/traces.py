@@ -342,9 +342,23 @@ class TraceSet:
             str(row["direction"][trace]),
         )
 
-    def identities(self) -> list[str]:
-        """Return the identity of every trace as text."""
-        return [self.identity(trace).text() for trace in range(self.traces)]
+    def identities(self, rows: npt.ArrayLike | None = None) -> list[str]:
+        """Return the identity of every trace, or of the chosen ones, as text; quick for a hundred thousand."""
+        index = slice(None) if rows is None else np.asarray(rows, np.int64)
+        names = ("source", "dataset", "record_start", "direction")
+        columns = zip(*(self.table[name][index].tolist() for name in names), strict=True)
+        return [
+            TraceIdentity(self.sources[source].sha256, dataset, start, direction).text()
+            for source, dataset, start, direction in columns
+        ]
+
+    def row_of(self, identity: TraceIdentity) -> int:
+        """Return the row of the trace that is ``identity``; -1 where there is none."""
+        same = self.table["record_start"] == identity.record_start
+        for row in np.flatnonzero(same).tolist():
+            if self.identity(row) == identity:
+                return row
+        return -1
 
     def phase_range(self, kinds: Sequence[str]) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.int64]]:
         """Return the first contiguous sample range of each trace in which a phase of the given kinds runs.

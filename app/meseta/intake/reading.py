@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
@@ -30,6 +30,7 @@ def read(
     work: Work | None = None,
     *,
     strict: bool = False,
+    so_far: Callable[[int, Callable[[], TraceSet]], None] | None = None,
 ) -> TraceSet:
     """Read recordings into a TraceSet: open, calibrate, cut, and put end to end.
 
@@ -42,6 +43,9 @@ def read(
     work : Work, optional
     strict : bool
         Raise for the first bad file instead of taking in the good ones.
+    so_far : callable, optional
+        Told after each of several files how many are read, with a function that returns the traces read so far (with no
+        offset from the floor removed, which takes all of them).
 
     Returns
     -------
@@ -73,6 +77,8 @@ def read(
     for found in work.each(take, files, "reading files", unit="files") if not one_file else map(take, files):
         if isinstance(found, Part):
             parts.append(found)
+            if so_far is not None and not one_file:
+                so_far(len(parts), lambda: joined([part for part in parts if part.traces], recipe, {}))
         elif strict or one_file:
             raise found
         else:

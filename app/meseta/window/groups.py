@@ -22,7 +22,7 @@ def symbol_of(session: Session, name: str) -> str:
 def with_new_group(session: Session, name: str, mask: npt.NDArray[np.bool_]) -> Decisions:
     """Return the decisions with a group of the traces in a mask, in the next free style."""
     traces, decisions = session.traces, session.document.decisions
-    members = [] if traces is None else [traces.identity(int(row)).text() for row in np.flatnonzero(mask)]
+    members = [] if traces is None else traces.identities(np.flatnonzero(mask))
     taken = {group.symbol for other, group in decisions.groups.items() if other != name}
     style = next((one for one in GROUPS if one.symbol not in taken), GROUPS[len(decisions.groups) % len(GROUPS)])
     return decisions.with_group(name, members, style.light, style.symbol)

@@ -44,11 +44,19 @@ class Channel:
         Quick work (a trace to draw) has a thread of its own and never waits behind long work.
     shown : bool
         Whether progress stands in the status line.
+    files : bool
+        Reading and writing files has a thread of its own: results are worked out while reading goes on.
     """
 
     name: str
     quick: bool = False
     shown: bool = True
+    files: bool = False
+
+    @property
+    def lane(self) -> str:
+        """Name of the threads that do this work."""
+        return "quick" if self.quick else "files" if self.files else "long"
 
 
 @dataclass(frozen=True)
@@ -80,7 +88,7 @@ def _ignored(_: Any) -> None:
 
 
 class JobRunner(QObject):
-    """Runs requests on a few threads (two quick, one long) and brings responses back to the window's thread."""
+    """Runs requests on a few threads (two quick, one for files, one long); brings responses to the window's thread."""
 
     progressed = Signal(object)
     """A :class:`~meseta.work.Progress` of the longest-running shown request, or None when nothing runs."""
@@ -93,8 +101,8 @@ class JobRunner(QObject):
     def __init__(self, parent: QObject | None = None) -> None:
         super().__init__(parent)
         self._pools = {
-            quick: ThreadPoolExecutor(2 if quick else 1, thread_name_prefix="meseta-quick" if quick else "meseta-long")
-            for quick in (True, False)
+            lane: ThreadPoolExecutor(threads, thread_name_prefix=f"meseta-{lane}")
+            for lane, threads in (("quick", 2), ("files", 1), ("long", 1))
         }
         self._numbers = itertools.count(1)
         self._running: dict[int, tuple[Request, Future[None]]] = {}
@@ -130,15 +138,16 @@ class JobRunner(QObject):
         self.cancel(channel)
         request = Request(next(self._numbers), channel, label, task, done, failed or self.failed.emit, part)
         self._newest[channel.name] = request.number
-        self._running[request.number] = (request, self._pools[channel.quick].submit(self._run, request))
+        self._running[request.number] = (request, self._pools[channel.lane].submit(self._run, request))
         if not self._clock.isActive():
             self._clock.start()
         return request.number
 
-    def cancel(self, channel: Channel | None = None) -> None:
-        """Ask the work of a channel (or all work) to stop; its responses are dropped."""
+    def cancel(self, channel: Channel | None = None, *, spare_files: bool = False) -> None:
+        """Ask the work of a channel (or all work, or all but that on files) to stop; its responses are dropped."""
         for request, future in list(self._running.values()):
-            if channel is None or request.channel.name == channel.name:
+            spared = spare_files and request.channel.files
+            if (channel is None and not spared) or (channel is not None and request.channel.name == channel.name):
                 request.cancel.set()
                 self._newest.pop(request.channel.name, None)
                 if future.cancel():

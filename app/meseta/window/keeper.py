@@ -42,6 +42,11 @@ class Keeper(QObject):
         """The open study; to be touched on the keeper's thread only.  None where nothing was saved yet."""
         return self._study
 
+    @property
+    def paths(self) -> tuple[str, ...]:
+        """What is open, as the user named it: a study, or recordings."""
+        return self._paths
+
     def open(self, study: Any, paths: tuple[str, ...]) -> None:
         """Keep changes in another study (None: in the recovery file) from now on."""
         self._let_go()

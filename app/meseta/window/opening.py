@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -31,7 +32,10 @@ __all__ = [
 
 @dataclass(frozen=True)
 class Opened:
-    """What was opened: traces, their recipe and decisions, and the study they live in, if they live in one."""
+    """What was opened: traces, their recipe and decisions, and the study they live in, if they live in one.
+
+    ``files_read`` is not 0 while reading goes on.
+    """
 
     traces: TraceSet
     recipe: Recipe
@@ -39,6 +43,32 @@ class Opened:
     name: str
     paths: tuple[str, ...]
     study: Any = None
+    files_read: int = 0
+
+    def derive(self, recipe: Recipe, work: Work) -> TraceSet:
+        """Return the traces as another calibration or cutting makes them of the same recordings."""
+        from meseta import study
+
+        if self.study is None:
+            return study.read(list(self.paths), recipe, work)
+        return _measured(self.study.traces(work, recipe), recipe, work)
+
+
+class _Growth:
+    """Hands over what is read so far: early, then about every second."""
+
+    def __init__(self, take: Callable[[int, TraceSet], None]) -> None:
+        self._take, self._due = take, time.monotonic() + FIRST_SECOND
+
+    def __call__(self, files: int, traces: Callable[[], TraceSet]) -> None:
+        """Take note of one more file."""
+        if time.monotonic() >= self._due:
+            self._take(files, traces())
+            self._due = time.monotonic() + NEXT_SECOND
+
+
+FIRST_SECOND, NEXT_SECOND = 0.7, 1.2
+"""So long reading goes on before what is read so far is shown, and then shown again."""
 
 
 def open_paths(
@@ -56,7 +86,7 @@ def open_paths(
     part : callable, optional
         Takes what is read so far, while reading goes on.
     """
-    from meseta import study
+    from meseta import intake, study
 
     missing = [path for path in paths if not Path(path).exists()]
     if missing:
@@ -65,29 +95,22 @@ def open_paths(
         return _open_study(paths[0], work)
     chosen = recipe or Recipe()
     name = _name_of(paths)
-    files = _plain_files(paths)
-    if part is not None and len(files) > FIRST_FILES:
-        first = study.read(files[:FIRST_FILES], chosen, work)
-        part(Opened(first, chosen, Decisions(), name, tuple(paths)))
-    traces = study.read(list(paths), chosen, work)
+
+    def take(files: int, traces: TraceSet) -> None:
+        if part is not None:
+            part(Opened(traces, chosen, Decisions(), name, tuple(paths), files_read=files))
+
+    growth = None if part is None else _Growth(take)
+    traces = _measured(intake.read(list(paths), chosen, work, so_far=growth), chosen, work)
     if not traces.traces:
         raise InputError("has no traces", name, "look at the file check: meseta peek")
     return Opened(traces, chosen, Decisions(), name, tuple(paths))
 
 
-FIRST_FILES = 200
-"""So many files are read and shown before all of them are."""
+def _measured(traces: TraceSet, recipe: Recipe, work: Work) -> TraceSet:
+    from meseta.selection import with_measures
 
-
-def _plain_files(paths: Sequence[str]) -> list[str]:
-    """Return the files named, or those of the one folder named, in natural order; nothing of nested folders."""
-    from natsort import natsorted
-
-    if len(paths) == 1 and Path(paths[0]).is_dir():
-        return [
-            str(one) for one in natsorted(Path(paths[0]).iterdir()) if one.is_file() and not one.name.startswith(".")
-        ]
-    return list(paths) if all(Path(path).is_file() for path in paths) else []
+    return with_measures(traces, recipe.selection.measures, work)
 
 
 def _open_study(path: str, work: Work) -> Opened:
@@ -95,7 +118,8 @@ def _open_study(path: str, work: Work) -> Opened:
 
     opened = Study.open(path)
     try:
-        return Opened(opened.traces(work), opened.recipe, opened.decisions, Path(path).stem, (path,), opened)
+        traces = _measured(opened.traces(work), opened.recipe, work)
+        return Opened(traces, opened.recipe, opened.decisions, Path(path).stem, (path,), opened)
     except MesetaError:
         opened.close()
         raise
@@ -108,11 +132,11 @@ def _name_of(paths: Sequence[str]) -> str:
     return f"{first.parent.name or first.stem}, {len(paths)} files"
 
 
-def export_results(analysis: Analysis, folder: str, title: str, work: Work) -> str:
+def export_results(analysis: Analysis, folder: str, title: str, paths: Sequence[str], work: Work) -> str:
     """Write the whole result into a folder; return its name."""
     from meseta.run import run_analysis
 
-    return str(run_analysis(analysis, Path(folder), work, title=title).folder)
+    return str(run_analysis(analysis, Path(folder), work, title=title, files=list(paths)).folder)
 
 
 def write_columns(path: str, columns: Mapping[str, npt.NDArray[Any]], _: Work) -> str:

@@ -12,6 +12,7 @@ from PySide6.QtCore import QObject
 
 from meseta.analysis import STEPS, Analysis
 from meseta.errors import Cancelled, MesetaError
+from meseta.traces import TraceSet
 from meseta.window.jobs import Channel, JobRunner
 from meseta.window.pictures import (
     OverlayPicture,
@@ -27,10 +28,12 @@ from meseta.work import Work
 if TYPE_CHECKING:
     from meseta.window.session import Session
 
-__all__ = ["OVERLAY", "PICTURE", "RESULTS", "SUBSET", "SUBSET_2D", "Pipeline", "Shown"]
+__all__ = ["DERIVE", "OVERLAY", "PICTURE", "RESULTS", "SUBSET", "SUBSET_2D", "Pipeline", "Shown"]
 
 RESULTS = Channel("results")
 """All steps of the analysis."""
+DERIVE = Channel("derive")
+"""The traces, by another calibration or cutting."""
 PICTURE = Channel("picture", quick=True, shown=False)
 """The current trace."""
 SUBSET = Channel("subset", quick=True, shown=False)
@@ -53,6 +56,10 @@ ORDER = (
     "peaks",
 )
 """Steps whose results the frame always shows, in the order in which a user wants to see them."""
+
+
+FIRST = ("alignment", "noise", "counts")
+"""Steps that are worked out while more traces are being read: enough for the distribution of what is there."""
 
 
 @dataclass(frozen=True)
@@ -144,15 +151,21 @@ class Pipeline(QObject):
     @property
     def names(self) -> tuple[str, ...]:
         """Steps that are computed: those of the frame, then those that visible views ask for."""
+        if self._session.growing:
+            return FIRST
         extra = dict.fromkeys(name for names in self._wanted.values() for name in names if name not in ORDER)
         return ORDER + tuple(extra)
 
     def refresh(self) -> None:
-        """Bring all shown results up to date."""
+        """Bring all shown results up to date, after the traces where these must be made anew."""
         session = self._session
         analysis = session.analysis
         if analysis is None:
             return
+        if session.unmade:
+            self._derive()
+            return
+        self._jobs.cancel(DERIVE)
         names = self.names
         known = {name: shown.key for name, shown in session.shown.items() if not shown.provisional}
         session.errors.clear()
@@ -167,6 +180,31 @@ class Pipeline(QObject):
             done=lambda _: session.states_changed.emit(),
             failed=session.problem.emit,
             part=self._take_outcome,
+        )
+        session.states_changed.emit()
+
+    @property
+    def working(self) -> bool:
+        """Whether results or traces are being worked out."""
+        return self._jobs.runs(RESULTS) or self._jobs.runs(DERIVE)
+
+    def _derive(self) -> None:
+        """Make the traces anew by the calibration and cutting as they are set now."""
+        session = self._session
+        derive, recipe = session.derive, session.document.recipe
+        assert derive is not None
+        self._jobs.cancel(RESULTS)
+        session.errors.clear()
+
+        def task(work: Work, _: Callable[[Any], None]) -> TraceSet:
+            return derive(recipe, work)
+
+        self._jobs.submit(
+            DERIVE,
+            "making the traces anew",
+            task,
+            done=lambda traces: session.replace_traces(traces, recipe),
+            failed=lambda error: session.take_error("traces", error),
         )
         session.states_changed.emit()
 

@@ -7,7 +7,8 @@ result out of date stays visible and is known to be so.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -19,70 +20,15 @@ from meseta.analysis import Analysis
 from meseta.errors import MesetaError
 from meseta.recipe import Recipe
 from meseta.selection import Decisions
-from meseta.traces import TraceSet
+from meseta.traces import TraceIdentity, TraceSet
 from meseta.window.conditions import ConditionSet
+from meseta.window.document import FROM_RAW, Change, Document, Hover, Span
 from meseta.window.jobs import JobRunner
 from meseta.window.pictures import SubsetPicture, TracePicture
-from meseta.window.pipeline import RESULTS, Pipeline, Shown
+from meseta.window.pipeline import Pipeline, Shown
+from meseta.work import Work
 
 __all__ = ["Change", "Document", "Hover", "Session", "Shown", "Span"]
-
-
-@dataclass(frozen=True)
-class Document:
-    """All that undo goes over."""
-
-    recipe: Recipe = field(default_factory=Recipe)
-    decisions: Decisions = field(default_factory=Decisions)
-    conditions: ConditionSet = field(default_factory=ConditionSet)
-
-
-@dataclass(frozen=True)
-class Change:
-    """A document before and after, as views hear of it."""
-
-    before: Document
-    after: Document
-
-    @property
-    def recipe(self) -> bool:
-        """Whether the recipe changed."""
-        return self.before.recipe != self.after.recipe
-
-    @property
-    def decisions(self) -> bool:
-        """Whether decisions by hand changed."""
-        return self.before.decisions != self.after.decisions
-
-    @property
-    def conditions(self) -> bool:
-        """Whether the conditions changed."""
-        return self.before.conditions != self.after.conditions
-
-
-@dataclass(frozen=True)
-class Hover:
-    """Where the pointer is: height on the conductance axis as drawn, displacement where the plot has one."""
-
-    u: float
-    drive: float = float("nan")
-    unit: str = "nm"
-
-
-@dataclass(frozen=True)
-class Span:
-    """The part of the conductance axis in view, as drawn: log10 G or G."""
-
-    low: float
-    high: float
-
-    def zoomed(self, factor: float, around: float) -> Span:
-        """Return the span made ``factor`` times as wide, keeping one height in place."""
-        return Span(around - (around - self.low) * factor, around + (self.high - around) * factor)
-
-    def moved(self, by: float) -> Span:
-        """Return the span shifted."""
-        return Span(self.low + by, self.high + by)
 
 
 class _ChangeCommand(QUndoCommand):
@@ -113,6 +59,10 @@ class _ChangeCommand(QUndoCommand):
         return True
 
 
+Derive = Callable[[Recipe, Work], TraceSet]
+"""Makes the traces anew by another calibration or cutting."""
+
+
 class Session(QObject):
     """What is open and how it is looked at."""
 
@@ -140,6 +90,9 @@ class Session(QObject):
         self.analysis: Analysis | None = None
         self.name = ""
         self.study_path: str = ""
+        self.derive: Derive | None = None
+        self.made_by = self.document.recipe
+        self.growing = False
         self.current = -1
         self.picture: TracePicture | None = None
         self.subset: SubsetPicture | None = None
@@ -168,14 +121,35 @@ class Session(QObject):
         return self.document.recipe.histogram.axis
 
     def open_traces(
-        self, traces: TraceSet, name: str, document: Document | None = None, *, study_path: str = ""
+        self,
+        traces: TraceSet,
+        name: str,
+        document: Document | None = None,
+        *,
+        study_path: str = "",
+        derive: Derive | None = None,
+        growing: bool = False,
     ) -> None:
-        """Show other traces; undo begins anew."""
-        self.jobs.cancel()
+        """Show other traces; undo begins anew.
+
+        Parameters
+        ----------
+        traces : TraceSet
+        name : str
+        document : Document, optional
+        study_path : str
+            The study that they live in.
+        derive : callable, optional
+            (recipe, work) -> the traces as another calibration or cutting makes them; without it they stay as they are.
+        growing : bool
+            Whether more of them are being read.
+        """
+        self.jobs.cancel(spare_files=growing)
         self.undo.clear()
         self.document = document or Document(self.document.recipe)
         self.analysis = Analysis(traces, self.document.recipe, self.document.decisions)
         self.name, self.study_path = name, study_path
+        self.derive, self.made_by, self.growing = derive, self.document.recipe, growing
         self.shown, self.errors, self.subset, self.picture = {}, {}, None, None
         self.span = self.default_span()
         self.drive_span = self.default_drive_span()
@@ -191,22 +165,49 @@ class Session(QObject):
         """Show nothing; undo begins anew."""
         self.jobs.cancel()
         self.undo.clear()
-        self.analysis = None
+        self.analysis = self.derive = None
         self.document = Document(self.document.recipe)
         self.name = self.study_path = ""
+        self.growing = False
         self.shown, self.errors, self.subset, self.picture, self.current = {}, {}, None, None, -1
         self.traces_changed.emit()
         self.take_subset(None)
         self.overlay_changed.emit(None)
         self.states_changed.emit()
 
-    def grow_traces(self, traces: TraceSet) -> None:
-        """Take more traces of the same recording while reading goes on; rows keep their numbers."""
-        if self.analysis is None:
+    def replace_traces(self, traces: TraceSet, made_by: Recipe, *, growing: bool = False) -> None:
+        """Take other traces of the same recordings: more of them, or made by another calibration or cutting.
+
+        What is shown stays, out of date, until it is replaced; the current trace stays the same one, wherever it is.
+        """
+        if self.analysis is None or self.traces is None:
             return
+        unit, here = self.drive_unit, self.traces.identity(self.current) if self.current >= 0 else None
         self.analysis = self.analysis.with_traces(traces)
+        self.made_by, self.growing = made_by, growing
+        if self.drive_unit != unit:
+            self.shown.pop("displacement_histogram", None)
+        self.current = self._row_now(here)
         self.traces_changed.emit()
+        self.current_changed.emit(self.current)
+        if self.drive_unit != unit:
+            self.set_drive_span(*self.default_drive_span())
         self.pipeline.refresh()
+        self.pipeline.refresh_trace()
+        self.pipeline.refresh_subset()
+
+    def _row_now(self, here: TraceIdentity | None) -> int:
+        assert self.traces is not None
+        row = -1 if here is None else self.traces.row_of(here)
+        return row if row >= 0 else min(max(self.current, 0), self.traces.traces - 1)
+
+    @property
+    def unmade(self) -> tuple[str, ...]:
+        """Sections of the recipe by which the open traces are not yet made."""
+        if self.derive is None or self.analysis is None:
+            return ()
+        now = self.document.recipe
+        return tuple(name for name in FROM_RAW if getattr(now, name) != getattr(self.made_by, name))
 
     @property
     def drive_unit(self) -> str:
@@ -379,9 +380,9 @@ class Session(QObject):
             return "failed"
         shown = self.shown.get(name)
         current = shown is not None and not shown.provisional and shown.key == self._key(name)
-        if current:
+        if current and not self.unmade:
             return "current"
-        if self.jobs.runs(RESULTS) and name in self.pipeline.names:
+        if self.pipeline.working and name in self.pipeline.names:
             return "working"
         return "none" if shown is None else "out of date"
 

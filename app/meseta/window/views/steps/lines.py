@@ -42,7 +42,9 @@ def line_of(session: Session, section: str) -> StepLine:
     step = STEP_OF.get(section, "")
     if session.traces is None:
         return StepLine("not yet", "none")
-    state = session.state(step) if step else "current"
+    state = session.state(step) if step else _state_of_traces(session, section)
+    if state == "failed" and not step:
+        return StepLine(session.errors["traces"].what, state)
     if step in session.errors:
         return StepLine(session.errors[step].what, "failed")
     writer = _WRITERS.get(section)
@@ -52,6 +54,15 @@ def line_of(session: Session, section: str) -> StepLine:
     elif state == "out of date":
         text = f"out of date · {text}"
     return StepLine(text, state)
+
+
+def _state_of_traces(session: Session, section: str) -> str:
+    """Return whether the traces are made by a section's settings."""
+    if section not in session.unmade:
+        return "current"
+    if "traces" in session.errors:
+        return "failed"
+    return "working" if session.pipeline.working else "out of date"
 
 
 def _count(value: int, one: str, many: str | None = None) -> str:

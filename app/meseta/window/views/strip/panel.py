@@ -57,7 +57,6 @@ class StripPanel(PlotPanel):
         self._level = -1
         self._drawing: int | None = None
         self._span = (0.0, 1.0)
-        self._counts_key = ""
         self._connect()
         self.wear(frame.theme)
         self._traces_changed()
@@ -91,9 +90,13 @@ class StripPanel(PlotPanel):
 
     def _traces_changed(self) -> None:
         traces = self.session.traces
-        self._picture, self._counts_key = None, ""
-        self.image.hide()
-        self.show_all()
+        if "counts" not in self.session.shown:
+            self._picture = None
+            self.image.hide()
+        if self._picture is None or self._span[0] <= 0:
+            self.show_all()
+        else:
+            self._look(*self._span)
         self.position.setVisible(traces is not None)
         self._draw_ribbons()
         self._draw_marks()

@@ -86,7 +86,8 @@ class TracePanel(DrivePanel):
             self.say_empty("")
         unit = self.session.drive_unit
         self.bottom.say("displacement (nm)" if unit == "nm" else f"drive ({unit})")
-        self._clear()
+        if self.session.picture is None:
+            self._clear()
 
     def _clear(self) -> None:
         for item in (self.curve, self.levels, self.caps):
