@@ -204,3 +204,19 @@ def test_planted_mistakes_are_named_by_the_check_up(tmp_path):
         found = findings(factor)["single-atom peak"]
         assert not found.fine
         assert word in found.text
+
+
+@pytest.mark.parametrize("unit", ["V", "mV"])
+def test_a_bent_piezo_by_a_polynomial(tmp_path, unit):
+    """Worked: 2 U + 0.1 U^2 - 0.005 U^3 at 5 V is 10 + 2.5 - 0.625 = 11.875 nm."""
+    conductance = (np.linspace(2, 1, 51), {"unit": "G0"})
+    reading = np.linspace(0, 5, 51) * (1 if unit == "V" else 1e3)
+    path = record(tmp_path, conductance=conductance, piezo=(reading, {"unit": unit}))
+    traces = intake.read(path, recipe(nm_polynomial=[2.0, 0.1, -0.005], nm_per_volt=7.0))
+    assert traces.drive.unit == "nm"
+    drive = traces.trace_drive(0)
+    assert drive[-1] - drive[0] == pytest.approx(11.875, rel=1e-6)
+    assert drive[20] - drive[0] == pytest.approx(4 + 0.4 - 0.04, rel=1e-6)
+    assert not any("turns" in text for text in traces.notes["assumptions"])
+    bent = intake.read(path, recipe(nm_polynomial=[2.0, -0.5])).notes["assumptions"]
+    assert any("turns within the range of the piezo" in text for text in bent)

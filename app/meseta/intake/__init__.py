@@ -6,15 +6,18 @@ from meseta.intake.files import expand, find_files
 from meseta.intake.opening import OpenContext, open_recording
 from meseta.intake.reading import read, traces_from
 from meseta.intake.recording import RawChannel, Recording
+from meseta.intake.uncertainty import CalibrationErrors, calibration_errors
 
 __all__ = [
     "ALIGNMENT_STATUS",
     "Alignment",
+    "CalibrationErrors",
     "Description",
     "OpenContext",
     "RawChannel",
     "Recording",
     "align",
+    "calibration_errors",
     "describe",
     "expand",
     "find_files",

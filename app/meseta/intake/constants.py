@@ -22,6 +22,7 @@ from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.spread import Value
 from meseta.intake.switching import Switching
 from meseta.intake.two_gain import overlap_doubts, overlap_of
+from meseta.intake.uncertainty import ERROR_SETTINGS
 from meseta.intake.units import parse_unit
 from meseta.recipe.calibration import CalibrationSettings
 
@@ -180,7 +181,7 @@ class _Finder:
             channel,
             second,
             bias_channel if "bias_volt" in needs else None,
-            constants | self._optional(kind),
+            constants | self._optional(kind) | self._errors(),
             self._doubts(kind, channel),
         )
         return self._with_amplifier(made) if kind in AMPLIFIER_KINDS else self._cleaned(made)
@@ -197,6 +198,10 @@ class _Finder:
         from_recipe |= {"series_resistance_ohm", "source_resistance_ohm"} if kind in DIRECT else set()
         from_recipe |= {"offset_volt"} if kind == "curve" else set()
         return {name: value for name, value in found.items() if name not in from_recipe or value[1] == "recipe"}
+
+    def _errors(self) -> dict[str, tuple[Value, str]]:
+        """Return the stated errors, which change no number but go with the constants."""
+        return {name: value for name in ERROR_SETTINGS if (value := self.find(name)) is not None}
 
     def _with_amplifier(self, made: Calibration) -> Calibration:
         """Return the calibration with what the recipe says of curve, polarity, switches, slew limit and mains."""

@@ -13,6 +13,7 @@ from meseta.recipe.calibration import CalibrationSettings
 
 __all__ = ["DriveAxis", "drive_of", "sample_interval"]
 
+LOOKED_SAMPLES = 2_000_000
 PLAUSIBLE_NM = (0.02, 200.0)
 """Span of one trace that a displacement without a unit must have to be taken as nm (common practice, no source)."""
 
@@ -29,6 +30,8 @@ class DriveAxis:
         Drive value in ``unit`` of one unit of the channel, or of one sample where there is no channel.
     unit : str
         "nm", "V", "s" or "step".
+    polynomial : tuple of float
+        nm for the powers 1, 2, 3 ... of the channel's value, times ``factor``; empty where the scale is straight.
     said : str
         One line: what the drive is and where its scale was taken from.
     doubts : tuple of str
@@ -39,11 +42,14 @@ class DriveAxis:
     unit: str
     said: str
     doubts: tuple[str, ...] = ()
+    polynomial: tuple[float, ...] = ()
 
     def values(self, recording: Recording, start: int, stop: int) -> npt.NDArray[np.float64]:
         """(stop - start,) float64, drive in ``unit`` over flat samples; only where there is a channel."""
         assert self.channel is not None
         values = recording.values(self.channel, start, stop)
+        if self.polynomial:
+            values = values * np.polynomial.polynomial.polyval(values, self.polynomial)
         return values if self.factor == 1.0 else values * self.factor
 
 
@@ -116,12 +122,33 @@ def _displacement(recording: Recording, channel: RawChannel, sign: float) -> Dri
 
 def _piezo(recording: Recording, settings: CalibrationSettings, channel: RawChannel, sign: float) -> DriveAxis:
     volts = unit_factor(channel.unit or "V", "V", f"{recording.source.name}, '{channel.name}'")
+    if settings.nm_polynomial:
+        return _bent(recording, settings, channel, volts, sign)
     constant = _stated(recording, settings, "nm_per_volt")
     if constant is not None:
         said = f"displacement from '{channel.name}' at {constant[0]:g} nm/V ({constant[1]})"
         return DriveAxis(channel, sign * volts * constant[0], "nm", said)
     doubt = "nm per volt is not stated: the drive stays in volts (calibration.nm_per_volt)"
     return DriveAxis(channel, sign * volts, "V", f"piezo volts from '{channel.name}'", (doubt,))
+
+
+def _bent(
+    recording: Recording, settings: CalibrationSettings, channel: RawChannel, volts: float, sign: float
+) -> DriveAxis:
+    """Return the displacement by a polynomial of the piezo volts, with a doubt where it turns on the way."""
+    powers = tuple(one * volts ** (power + 1) for power, one in enumerate(settings.nm_polynomial))
+    looked = recording.values(channel, 0, min(recording.samples, LOOKED_SAMPLES))
+    looked = looked[np.isfinite(looked)]
+    doubts: tuple[str, ...] = ()
+    if len(looked):
+        slopes = np.polynomial.polynomial.polyval(
+            np.linspace(looked.min(), looked.max(), 257), [one * (n + 1) for n, one in enumerate(powers)]
+        )
+        if not ((slopes > 0).all() or (slopes < 0).all()):
+            doubts = ("the displacement polynomial turns within the range of the piezo (calibration.nm_polynomial)",)
+    terms = " + ".join(f"{one:g} U^{power + 1}" for power, one in enumerate(settings.nm_polynomial))
+    said = f"displacement from '{channel.name}' as {terms} nm (recipe)"
+    return DriveAxis(channel, sign, "nm", said, doubts, powers)
 
 
 def _timed(recording: Recording, settings: CalibrationSettings) -> DriveAxis:

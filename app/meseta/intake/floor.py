@@ -15,7 +15,7 @@ import numpy.typing as npt
 from meseta.intake.assembly import Part
 from meseta.quantities import G0_SIEMENS
 
-__all__ = ["remove_floor_offset", "running_offset"]
+__all__ = ["offset_error", "remove_floor_offset", "running_offset"]
 
 Floats = npt.NDArray[np.float64]
 TAIL_SHARE: Final = 0.1
@@ -88,8 +88,22 @@ def remove_floor_offset(parts: Sequence[Part]) -> dict[str, Any]:
         "at_trace": shown.tolist(),
         "offset": [float(value) for value in offset[shown]],
         "unit": unit,
+        "offset_error": offset_error(tails * bias, reaches),
         "offset_ampere_median": float(np.median(offset) * G0_SIEMENS) if unit == "G0 V" else None,
     }
+
+
+def offset_error(tails: Floats, reaches: npt.NDArray[np.bool_]) -> float | None:
+    """Return the standard error of the running median: sqrt(pi / 2n) sigma for n tails that scatter by sigma.
+
+    The scatter is taken from neighbouring tails, which share the drift; None where there are too few.
+    """
+    held = min(int(reaches.sum()), WINDOW_TRACES)
+    steps = np.abs(np.diff(tails[reaches]))
+    if held < LEAST_TRACES or len(steps) == 0:
+        return None
+    sigma = MAD_TO_SIGMA * float(np.median(steps)) / np.sqrt(2.0)
+    return float(np.sqrt(np.pi / 2.0 / held) * sigma)
 
 
 def _tails(part: Part) -> tuple[Floats, Floats, Floats]:
@@ -105,16 +119,15 @@ def _tails(part: Part) -> tuple[Floats, Floats, Floats]:
         if len(tail) >= LEAST_TAIL:
             median[row] = np.median(tail)
             error[row] = MAD_TO_SIGMA * np.median(np.abs(tail - median[row])) / np.sqrt(len(tail))
-    known = part.calibration.constants.get("bias_volt")
-    if known is None:
+    if "bias_volt" not in part.calibration.constants:
         return median, error, np.ones(part.traces)
     pieces = np.array(part.cut.piece, np.int64)
-    bias = np.broadcast_to(np.asarray(known[0], np.float64), (part.recording.pieces,))[pieces]
-    return median, error, bias
+    bias = np.broadcast_to(np.asarray(part.calibration.bias_at_junction_volt), (part.recording.pieces,))[pieces]
+    return median, error, bias.astype(np.float64)
 
 
 def _resistance(part: Part) -> Floats:
-    value = np.asarray(part.calibration.constant("series_resistance_ohm"), np.float64)
+    value = np.asarray(part.calibration.in_series_ohm, np.float64)
     pieces = np.array(part.cut.piece, np.int64)
     spread = np.broadcast_to(value, (part.recording.pieces,))[pieces]
     return np.repeat(spread, np.diff(part.offsets)) * G0_SIEMENS
@@ -123,14 +136,14 @@ def _resistance(part: Part) -> Floats:
 def _as_measured(part: Part, contact: npt.NDArray[Any]) -> Floats:
     """Return the conductance as it was measured, with the series resistance put back."""
     values = contact.astype(np.float64)
-    if not np.any(part.calibration.constant("series_resistance_ohm")):
+    if not np.any(part.calibration.in_series_ohm):
         return values
     return values / (1.0 + _resistance(part) * values)
 
 
 def _subtract(part: Part, offset_g0: Floats) -> None:
     measured = _as_measured(part, part.conductance) - np.repeat(offset_g0, np.diff(part.offsets))
-    if np.any(part.calibration.constant("series_resistance_ohm")):
+    if np.any(part.calibration.in_series_ohm):
         rest = 1.0 - _resistance(part) * measured
         with np.errstate(divide="ignore", invalid="ignore"):
             measured = np.where(rest > 0, measured / rest, np.nan)
