@@ -276,6 +276,12 @@ def test_other_widths_are_not_compared() -> None:
         compare_recordings({"one": one, "other": other}, WORK)
 
 
+def test_a_part_without_traces_is_left_out_with_a_note() -> None:
+    found = compare_parts(Analysis(TraceSet.from_arrays(decays(30, 1), step_nm=0.01), RECIPE), "selection", WORK)
+    assert [part.name for part in found.parts] == ["kept"]
+    assert found.notes == ("no trace in 'not kept'",)
+
+
 def test_traces_may_be_in_several_groups() -> None:
     kept = np.array([True, True, True, False])
     found = parts_by(np.array(["a;b", "a", "", "b"]), kept)

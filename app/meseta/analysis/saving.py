@@ -15,7 +15,7 @@ from meseta.errors import OutputError
 from meseta.histograms.content import Content, columns_of, content_of
 from meseta.tables import write_csv
 
-__all__ = ["provenance_of", "save_result", "write_hdf5"]
+__all__ = ["provenance_of", "save_result", "save_results", "write_hdf5"]
 
 
 def save_result(result: Any, path: str | Path, analysis: Analysis | None = None) -> None:
@@ -36,17 +36,25 @@ def save_result(result: Any, path: str | Path, analysis: Analysis | None = None)
         Where the ending is unknown or the file cannot be written.
     """
     target = Path(path)
+    if target.suffix.lower() in (".h5", ".hdf5"):
+        save_results({"result": result}, target, analysis)
+        return
     provenance = {} if analysis is None else provenance_of(analysis)
     ending = target.suffix.lower()
     writers: dict[str, Callable[[Path], None]] = {
         ".csv": lambda partial: write_csv(partial, columns_of(result)),
         ".npz": lambda partial: _write_arrays(partial, content_of(result), provenance),
-        ".h5": lambda partial: write_hdf5(partial, {"result": content_of(result)}, provenance),
     }
-    writers[".hdf5"] = writers[".h5"]
     if ending not in writers:
-        raise OutputError(f"ends in '{ending}'", str(target), f"take one of {', '.join(writers)}")
+        raise OutputError(f"ends in '{ending}'", str(target), "take one of .csv, .npz, .h5, .hdf5")
     _whole_file(target, writers[ending])
+
+
+def save_results(results: Mapping[str, Any], path: str | Path, analysis: Analysis | None = None) -> None:
+    """Write several results into one HDF5 file, a group each; see :func:`save_result`."""
+    provenance = {} if analysis is None else provenance_of(analysis)
+    contents = {name: content_of(result) for name, result in results.items()}
+    _whole_file(Path(path), lambda partial: write_hdf5(partial, contents, provenance))
 
 
 def provenance_of(analysis: Analysis) -> dict[str, str]:

@@ -11,6 +11,7 @@ import click
 
 from meseta import __version__
 from meseta.command import jobs, tools
+from meseta.command.compare import compare
 from meseta.errors import CallError, Cancelled, MesetaError
 
 __all__ = ["main"]
@@ -86,5 +87,6 @@ for _command in (
     tools.sheet,
     tools.simulate,
     tools.decay,
+    compare,
 ):
     cli.add_command(_command)

@@ -196,7 +196,8 @@ def compared(members: Sequence[Member], settings: HistogramSettings, shared_draw
     Parameters
     ----------
     members : sequence of Member
-        On bins of the same width; bins that not all have (another floor) become under or over.
+        On bins of the same width; bins that not all have (another floor) become under or over.  Those without a trace
+        are left out with a note.
     settings : HistogramSettings
         Normalisation; where the displacement of any is unknown, samples are counted in all.
     shared_draws : bool
@@ -207,9 +208,11 @@ def compared(members: Sequence[Member], settings: HistogramSettings, shared_draw
     CallError
         Where there is nothing to compare, or bins differ in axis or width.
     """
+    empty = [one.name for one in members if not (one.kept & one.counts.used).any()]
+    members = [one for one in members if one.name not in empty]
     if not members:
-        raise CallError("there is nothing to compare", "comparison", "give at least one recording or part")
-    notes = []
+        raise CallError("there is nothing to compare", "comparison", "give at least one recording or part with traces")
+    notes = [f"no trace in '{name}'" for name in empty]
     lengths = [np.isfinite(one.counts.nm_a_sample[one.kept & one.counts.used]).all() for one in members]
     if settings.normalisation == "nm_per_trace" and not all(lengths):
         settings = settings.model_copy(update={"normalisation": "counts_per_trace"})

@@ -251,10 +251,14 @@ def hits_in_window(plateaus: PlateauTable, traces: int, window_g0: tuple[float, 
 class Detection(Protocol):
     """What :func:`window_efficiency` asks of the result of ``meseta.segmentation.expect``."""
 
-    conductance_g0: Floats
-    length: Floats
-    planted: npt.NDArray[np.int64]
-    found: npt.NDArray[np.int64]
+    @property
+    def conductance_g0(self) -> Floats: ...
+    @property
+    def length(self) -> Floats: ...
+    @property
+    def planted(self) -> npt.NDArray[np.int64]: ...
+    @property
+    def found(self) -> npt.NDArray[np.int64]: ...
 
 
 def window_efficiency(
