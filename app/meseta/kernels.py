@@ -30,6 +30,7 @@ KERNEL_MODULES = (
     "meseta.histograms.kernels",
     "meseta.peaks.line_kernels",
     "meseta.peaks.kernels",
+    "meseta.selection.kernels",
     "meseta.window.raster",
 )
 """Every module that holds compiled kernels; each registers a warm-up with :func:`warm_up`."""

@@ -12,11 +12,14 @@ import numpy.typing as npt
 from meseta.segmentation import PlateauTable, TraceMeasures
 from meseta.selection.decisions import Decisions
 from meseta.traces import PHASE_KINDS, TraceSet
+from meseta.work import Work
 
 __all__ = ["Facts"]
 
 Floats = npt.NDArray[np.float64]
 Truths = npt.NDArray[np.bool_]
+EVERYWHERE = (float("-inf"), float("inf"))
+BLOCK_SAMPLES = 4_000_000
 
 
 @dataclass(frozen=True)
@@ -53,19 +56,67 @@ class Facts:
         return inside
 
     def chosen_plateaus(
-        self, bounds_g0: tuple[float, float], kind: str, place: tuple[float, float] = (float("-inf"), float("inf"))
+        self, bounds_g0: tuple[float, float], kind: str, place: tuple[float, float] = EVERYWHERE
     ) -> Truths:
         """Return which plateaus have their conductance in a half-open window and are of a kind ("" for any).
 
-        ``place`` is a half-open window of displacement in nm, counted from the zero, for the middle of the plateau; a
-        plateau whose trace has no zero, or whose drive is not in nm, lies in none.
+        ``place`` is a half-open window of the drive in its own unit, counted from the zero, for the middle of the
+        plateau; a plateau whose trace has no zero lies in none.
         """
         level = self.plateaus.level_g0
         chosen: Truths = (level >= bounds_g0[0]) & (level < bounds_g0[1])
-        if place != (float("-inf"), float("inf")):
-            middle = (self.plateaus.displacement_start_nm + self.plateaus.displacement_stop_nm) / 2
-            chosen = chosen & (middle >= place[0]) & (middle < place[1]) & self.plateaus.aligned
+        if place != EVERYWHERE:
+            chosen = chosen & (self.plateau_middle >= place[0]) & (self.plateau_middle < place[1])
+            chosen = chosen & self.plateaus.aligned
         return chosen & (self.plateaus.kind == kind) if kind else chosen
+
+    @cached_property
+    def plateau_middle(self) -> Floats:
+        """(plateaus,) float64, middle of each plateau in the unit of the drive, from the zero of its trace."""
+        table, drive = self.plateaus, self.traces.drive
+        if drive.is_displacement:
+            return (table.displacement_start_nm + table.displacement_stop_nm) / 2
+        last = np.maximum(table.stop - 1, table.start)
+        if drive.relative is None:
+            middle = drive.step[table.trace] * (table.start + last) / 2
+        else:
+            relative, begin = drive.relative, self.traces.offsets[table.trace]
+            ends = [
+                [float(relative.read(int(at), int(at) + 1)[0]) for at in begin + edge] for edge in (table.start, last)
+            ]
+            middle = (np.array(ends[0]) + np.array(ends[1])) / 2
+        return np.asarray(middle - self.measures.rupture_drive[table.trace], np.float64)
+
+    def samples_inside(self, bounds_g0: tuple[float, float], place: tuple[float, float] = EVERYWHERE) -> Floats:
+        """Return how many samples of each trace lie in two half-open windows: conductance, and drive from the zero.
+
+        Only pulls and pushes count, as in the 2D histogram.
+        """
+        from meseta.selection.kernels import count_inside
+
+        traces, counts = self.traces, np.zeros(self.traces.traces)
+        start, stop = traces.phase_range(("pull", "push"))
+        everywhere = place == EVERYWHERE
+        zero = np.zeros(traces.traces) if everywhere else np.asarray(self.measures.rupture_drive, np.float64)
+        for first, last in traces.blocks(Work(block_samples=BLOCK_SAMPLES)):
+            begin = traces.offsets[first:last] - traces.offsets[first]
+            relative = np.empty(0, np.float32)
+            if traces.drive.relative is not None and not everywhere:
+                lo, hi = int(traces.offsets[first]), int(traces.offsets[last])
+                relative = np.ascontiguousarray(traces.drive.relative.read(lo, hi), np.float32)
+            count_inside(
+                np.ascontiguousarray(traces.read("conductance", first, last), np.float32),
+                begin + start[first:last],
+                begin + stop[first:last],
+                begin,
+                np.nan_to_num(traces.drive.step[first:last]),
+                relative,
+                zero[first:last],
+                *bounds_g0,
+                *place,
+                counts[first:last],
+            )
+        return counts
 
     def count_plateaus(self, chosen: Truths) -> Floats:
         """Return the number of chosen plateaus in each trace."""

@@ -47,10 +47,10 @@ class Quantity:
     find : callable
         (Facts, Asked) -> (traces,) array.
     takes : frozenset of str
-        Allowed arguments: "span" (a conductance window), "place" (a second span: the displacement of the plateau's
-        middle, from the zero), "word", "text".
+        Allowed arguments: "span" (a conductance window), "place" (a second span: the displacement of the sample or the
+        plateau's middle, from the zero, in the drive's unit), "word", "text".
     needs : str
-        The argument that must be there ("text", "word" or "").
+        The argument that must be there ("span", "text", "word" or "").
     words : tuple of str
         Allowed words where it takes a word.
     """
@@ -168,6 +168,14 @@ _ALL = (
         "the conductance of the last plateau",
         lambda facts, _: facts.of_last_plateau(facts.plateaus.level_g0),
         "G0",
+    ),
+    Quantity(
+        "samples_inside",
+        "number",
+        "the number of samples{span}",
+        lambda facts, asked: facts.samples_inside(asked.bounds, asked.place),
+        takes=frozenset({"span", "place"}),
+        needs="span",
     ),
     # place and time in the record
     Quantity("trace", "number", "the trace number", lambda facts, _: np.arange(facts.traces.traces, dtype=np.float64)),

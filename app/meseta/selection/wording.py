@@ -190,7 +190,11 @@ def _filled(title: str, measure: Measure) -> str:
     span = text = word = ""
     for argument in measure.arguments:
         if isinstance(argument, Span):
-            span += f" and lying {_span_said(argument)} nm" if span else f" {_span_said(argument)} G0"
+            span += (
+                f" and lying {_span_said(argument)} nm (or units of the drive)"
+                if span
+                else f" {_span_said(argument)} G0"
+            )
         elif isinstance(argument, Word):
             word = f"{argument.name} "
         else:

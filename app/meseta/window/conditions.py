@@ -7,9 +7,13 @@ from typing import Literal
 
 from meseta import typeset
 
-__all__ = ["Condition", "ConditionSet", "Kind"]
+__all__ = ["BOXES", "WINDOWS", "Condition", "ConditionSet", "Kind"]
 
-Kind = Literal["plateau", "passes", "range", "rule"]
+Kind = Literal["plateau", "passes", "settles", "range", "rule"]
+WINDOWS = ("plateau", "passes", "settles")
+"""Kinds that have a conductance window."""
+BOXES = ("passes", "settles")
+"""Kinds that have a window of displacement as well."""
 
 
 def _exact(value: float) -> str:
@@ -24,8 +28,9 @@ class Condition:
     Attributes
     ----------
     kind : str
-        "plateau" (a plateau whose conductance lies in the window), "passes" (the same, with the plateau's middle in a
-        window of displacement), "range" (traces of a stretch of the record), "rule" (text of the rule language).
+        "plateau" (a plateau whose conductance lies in the window), "passes" (samples in a window of conductance and
+        displacement), "settles" (a plateau there), "range" (traces of a stretch of the record), "rule" (text of the
+        rule language).
     low_g0, high_g0 : float
         Conductance window.
     low_drive, high_drive : float
@@ -64,8 +69,10 @@ class Condition:
         if self.kind == "plateau":
             longer = f", longer than {typeset.quantity(self.longer_than, self.unit, 2)}" if self.longer_than else ""
             return f"a plateau between {self._window()}{longer}"
-        if self.kind == "passes":
+        if self.kind in BOXES:
             between = typeset.interval(self.low_drive, self.high_drive, self.unit, 2).replace(" to ", " and ")
+            if self.kind == "passes":
+                return f"passes between {self._window()}, {between} from the zero"
             return f"a plateau between {self._window()} whose middle lies between {between}"
         if self.kind == "range":
             return f"traces {typeset.integer(self.first)} to {typeset.integer(self.last)} of the record"
@@ -86,9 +93,10 @@ class Condition:
                 return f"plateaus({window}) >= 1"
             quantity = "longest_plateau_nm" if self.unit == "nm" else "longest_plateau_drive"
             return f"{quantity}({window}) >= {_exact(self.longer_than)}"
-        if self.kind == "passes":
+        if self.kind in BOXES:
             window = f"{_exact(self.low_g0)}..{_exact(self.high_g0)}"
-            return f"plateaus({window}, {_exact(self.low_drive)}..{_exact(self.high_drive)}) >= 1"
+            quantity = "samples_inside" if self.kind == "passes" else "plateaus"
+            return f"{quantity}({window}, {_exact(self.low_drive)}..{_exact(self.high_drive)}) >= 1"
         if self.kind == "range":
             return f"trace in {self.first}..{self.last + 1}"
         return self.text

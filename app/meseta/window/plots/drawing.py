@@ -9,7 +9,7 @@ import numpy as np
 import pyqtgraph as pg
 from PySide6.QtWidgets import QGraphicsRectItem
 
-from meseta.window.conditions import Condition
+from meseta.window.conditions import BOXES, WINDOWS, Condition
 from meseta.window.plots.gestures import Drag
 from meseta.window.theme import Theme
 
@@ -80,7 +80,7 @@ class WindowTool:
     def show_conditions(self) -> None:
         """Draw a band for every condition that is switched on and has a conductance window."""
         session = self._panel.session
-        shown = [one for one in session.document.conditions.active if one.kind in ("plateau", "passes")]
+        shown = [one for one in session.document.conditions.active if one.kind in WINDOWS]
         if session.analysis is None:
             shown = []
         while len(self._bands) < len(shown):
@@ -98,7 +98,7 @@ class WindowTool:
         low, high = (self._u(value) for value in (condition.low_g0, condition.high_g0))
         left, right = self._panel.box.viewRange()[0]
         margin = 10 * (right - left)
-        if condition.kind == "passes" and self._across:
+        if condition.kind in BOXES and self._across:
             left, right, margin = condition.low_drive, condition.high_drive, 0.0
         band.setRect(left - margin, low, right - left + 2 * margin, high - low)
         band.setToolTip(condition.sentence())

@@ -19,6 +19,7 @@ from meseta.analysis import Analysis
 from meseta.colours import GROUPS
 from meseta.errors import MesetaError
 from meseta.histograms import ConductanceHistogram
+from meseta.window.conditions import WINDOWS
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
@@ -185,7 +186,7 @@ class ComparisonPanel(SpinePanel):
 
     def _window(self) -> tuple[float, float] | None:
         active = self.session.document.conditions.active
-        drawn = [(one.low_g0, one.high_g0) for one in active if one.kind in ("plateau", "passes")]
+        drawn = [(one.low_g0, one.high_g0) for one in active if one.kind in WINDOWS]
         return drawn[-1] if drawn else None
 
     def _question(self) -> Question:

@@ -7,19 +7,21 @@ from dataclasses import replace
 from PySide6.QtWidgets import QCheckBox, QComboBox, QDialog, QDialogButtonBox, QFormLayout, QLabel, QLineEdit, QWidget
 
 from meseta import typeset
-from meseta.window.conditions import Condition, Kind
+from meseta.window.conditions import BOXES, WINDOWS, Condition, Kind
 
 __all__ = ["ConditionEditor"]
 
 _KINDS: tuple[tuple[Kind, str], ...] = (
     ("plateau", "a plateau in a conductance window"),
-    ("passes", "a plateau in a window of conductance and displacement"),
+    ("passes", "samples in a window of conductance and displacement"),
+    ("settles", "a plateau in a window of conductance and displacement"),
     ("range", "a stretch of the record"),
     ("rule", "a rule in words"),
 )
 _FIELDS: dict[str, tuple[str, ...]] = {
     "plateau": ("low_g0", "high_g0", "longer_than"),
     "passes": ("low_g0", "high_g0", "low_drive", "high_drive"),
+    "settles": ("low_g0", "high_g0", "low_drive", "high_drive"),
     "range": ("first", "last"),
     "rule": ("text",),
 }
@@ -97,9 +99,9 @@ class ConditionEditor(QDialog):
             else:
                 values[name] = float(text)
         result = replace(self._condition, kind=kind, inverted=self.inverted.isChecked(), **values)  # type: ignore[arg-type]
-        if kind in ("plateau", "passes") and not result.low_g0 < result.high_g0:
+        if kind in WINDOWS and not result.low_g0 < result.high_g0:
             raise ValueError("the conductance window is empty: write the lower end first")
-        if kind == "passes" and not result.low_drive < result.high_drive:
+        if kind in BOXES and not result.low_drive < result.high_drive:
             raise ValueError("the displacement window is empty: write the lower end first")
         if kind == "range" and result.first > result.last:
             raise ValueError("the stretch is empty: write the first trace first")

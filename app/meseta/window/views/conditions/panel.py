@@ -23,7 +23,7 @@ from PySide6.QtWidgets import (
 
 from meseta import typeset
 from meseta.errors import MesetaError
-from meseta.window.conditions import Condition, ConditionSet
+from meseta.window.conditions import BOXES, Condition, ConditionSet
 from meseta.window.frame import Frame
 from meseta.window.layouts import emptied
 from meseta.window.pictures import SubsetPicture
@@ -63,6 +63,9 @@ class _Line(QWidget):
         menu.addAction(
             "Turn round (not)" if not condition.inverted else "Turn round again", lambda: panel.invert(index)
         )
+        if condition.kind in BOXES:
+            other = "Ask for a plateau there" if condition.kind == "passes" else "Ask only to pass there"
+            menu.addAction(other, lambda: panel.turn_box(index))
         menu.addAction("Name …", lambda: panel.rename(index))
         menu.addAction("Remove", lambda: panel.remove(index))
         button.setMenu(menu)
@@ -213,6 +216,14 @@ class ConditionsPanel(QWidget):
         self._change(
             "turn a condition round",
             self.conditions.changed(index, replace(condition, inverted=not condition.inverted)),
+        )
+
+    def turn_box(self, index: int) -> None:
+        """Ask for a plateau in a box instead of samples, or the other way round."""
+        condition = self.conditions.conditions[index]
+        other = replace(condition, kind="settles" if condition.kind == "passes" else "passes")
+        self._change(
+            "ask for a plateau" if other.kind == "settles" else "ask to pass", self.conditions.changed(index, other)
         )
 
     def remove(self, index: int) -> None:

@@ -14,6 +14,7 @@ from PySide6.QtWidgets import QGraphicsPolygonItem, QMenu, QToolButton
 
 from meseta import typeset
 from meseta.histograms import ConductanceHistogram
+from meseta.window.conditions import WINDOWS
 from meseta.window.frame import Frame
 from meseta.window.pictures import SubsetPicture
 from meseta.window.plots.drawing import WindowTool
@@ -225,7 +226,7 @@ class HistogramPanel(SpinePanel):
         centres = histogram.grid.centres_g0
         chosen = np.zeros(len(centres), bool)
         for condition in self.session.document.conditions.active:
-            if condition.kind in ("plateau", "passes"):
+            if condition.kind in WINDOWS:
                 chosen |= (centres >= condition.low_g0) & (centres < condition.high_g0)
         fit = self.session.result("peaks")
         if not chosen.any() and fit is not None and fit.grid.bins:

@@ -15,6 +15,7 @@ from PySide6.QtWidgets import QHBoxLayout, QLabel, QMenu, QPushButton, QToolButt
 
 from meseta import histograms, typeset
 from meseta.histograms import LengthHistogram, Spacing
+from meseta.window.conditions import WINDOWS
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
@@ -144,7 +145,7 @@ class LengthsPanel(PlotPanel):
     def _window(self) -> tuple[float, float] | None:
         """Return the last conductance window that is drawn and switched on."""
         active = self.session.document.conditions.active
-        drawn = [(one.low_g0, one.high_g0) for one in active if one.kind in ("plateau", "passes")]
+        drawn = [(one.low_g0, one.high_g0) for one in active if one.kind in WINDOWS]
         return drawn[-1] if drawn else None
 
     def _offer(self) -> None:
