@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 
 from meseta import histograms, intake, peaks, segmentation, selection
+from meseta.analysis.choices import calibration_errors, other_counts
 from meseta.histograms import CountMatrix, DisplacementHistogram
 from meseta.intake import Alignment
 from meseta.recipe import Recipe, Section
@@ -292,7 +293,11 @@ def _plateau_histogram(_: Iterator[Any], __: TraceSet, settings: SettingsView, i
     )
 
 
-def _peaks(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
+def _other_counts(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
+    return other_counts(traces, settings, inputs, phases_of(settings.histogram.direction), work)
+
+
+def _peaks(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
     return peaks.fit_histogram(
         inputs["histogram"],
         settings.peaks,
@@ -301,6 +306,8 @@ def _peaks(_: Iterator[Any], __: TraceSet, settings: SettingsView, inputs: Input
         inputs["plateaus"].take(inputs["selection"].kept[inputs["plateaus"].trace]),
         work,
         floor=peaks.Floor.of(inputs["noise"]),
+        others=inputs["other_counts"],
+        calibration=calibration_errors(settings.calibration, traces),
     )
 
 
@@ -433,11 +440,26 @@ STEPS: Mapping[str, Step] = {
             _plateau_histogram,
         ),
         Step(
+            "other_counts",
+            "trying other choices",
+            1,
+            ("counts", "selection", "measures", "plateaus", "noise", "alignment", "decisions"),
+            ("histogram", "alignment", "plateaus", "selection"),
+            _other_counts,
+        ),
+        Step(
             "peaks",
             "fitting peaks",
-            2,
-            ("histogram", "resampling", "counts", "plateaus", "selection", "noise"),
-            ("peaks",),
+            3,
+            ("histogram", "resampling", "counts", "plateaus", "selection", "noise", "other_counts"),
+            (
+                "peaks",
+                "calibration.bias_volt",
+                "calibration.gain_relative_error",
+                "calibration.bias_relative_error",
+                "calibration.offset_error_ampere",
+                "calibration.series_resistance_error_ohm",
+            ),
             _peaks,
         ),
     )

@@ -99,7 +99,11 @@ class Chooser:
         return window.last - window.first >= _FEWEST_BINS and bool(self.data(window).any())
 
     def _found(self) -> list[Candidate]:
-        """Return the places that look like peaks, those that hold the most samples of their own first."""
+        """Return the places that look like peaks, those that hold the most samples of their own first.
+
+        Above one quantum samples count less the higher they are: contacts are thinned step by step, and where the
+        openings begin every trace leaves samples.
+        """
         u, settings = self.histogram.grid.u_edges, self.settings
         logarithmic = self.histogram.grid.axis == "logarithmic"
         low, high = self.usable
@@ -117,7 +121,7 @@ class Chooser:
             self.histogram.traces,
         )
         large = [place for place in found if place.share >= _LEAST_SHARE]
-        return sorted(large, key=lambda place: -place.own * place.share)
+        return sorted(large, key=lambda place: -place.own * place.share / max(self._g0(place.position_u), 1.0) ** 2)
 
     def _proposed(self, found: Sequence[Candidate]) -> tuple[list[Window], tuple[str, ...]]:
         """Return windows with those of the found peaks that left-out traces support, one after the other.
@@ -198,7 +202,10 @@ class Chooser:
         return windows if len(starts) == number else self._settled(starts, standing)
 
     def _stated(self, place_u: float) -> str:
-        return conductance(10.0**place_u if self.histogram.grid.axis == "logarithmic" else place_u, 2)
+        return conductance(self._g0(place_u), 2)
+
+    def _g0(self, place_u: float) -> float:
+        return 10.0**place_u if self.histogram.grid.axis == "logarithmic" else place_u
 
     def _below_quantum(self, place_u: float) -> bool:
         """Return whether a peak is a molecular one by its place; each side has its own largest number of peaks."""

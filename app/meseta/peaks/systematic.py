@@ -10,7 +10,7 @@ import numpy.typing as npt
 
 from meseta.histograms.results import ConductanceHistogram
 from meseta.peaks.fitting import Fitted, fit_model
-from meseta.peaks.model import Model
+from meseta.peaks.model import WIDTH_TO_FWHM, Model
 from meseta.peaks.windows import Window, rebinned
 
 __all__ = ["OtherCounts", "Shift", "half_spread", "systematic_shifts"]
@@ -19,6 +19,7 @@ Floats = npt.NDArray[np.float64]
 ModelMaker = Callable[[Window, int, int, int, str], Model]
 
 _MUCH_WORSE = 2.0
+_LEAST_LEFT = 0.3
 _SMOOTH = ("constant", "linear", "exponential", "power_law")
 
 
@@ -104,6 +105,8 @@ def _otherwise(fitted: Fitted, window: Window, other: OtherCounts) -> Shift:
     here, there = other.reference[inside], other.counts[inside]
     if not here.any() or not there.any() or not fitted.converged:
         return unknown
+    if there.sum() < _LEAST_LEFT * here.sum():
+        return unknown  # what was fitted is not in the other region at all
     whole = max(float(fitted.model.curves(fitted.inner).total.sum()), 1e-300)
     places = []
     for counts in (here, there):
@@ -116,7 +119,7 @@ def _otherwise(fitted: Fitted, window: Window, other: OtherCounts) -> Shift:
         if not again.converged:
             return unknown
         places.append(again.peaks[:, 1])
-    moved = places[1] - places[0]
+    moved = _same_peak(places[1] - places[0], fitted)
     gone = (places[1] <= fitted.model.range_u[0]) | (places[1] >= fitted.model.range_u[1])
     return Shift("analysis", other.choice, np.where(gone, np.nan, moved), other.counted)
 
@@ -143,8 +146,12 @@ def _moved(
     worse = other.score / other.degrees_of_freedom > _MUCH_WORSE * fitted.score / fitted.degrees_of_freedom
     if not other.converged or (background != fitted.model.background and worse):
         return np.full(fitted.model.peaks, np.nan)
-    moved: Floats = other.peaks[:, 1] - fitted.peaks[:, 1]
-    return moved
+    return _same_peak(other.peaks[:, 1] - fitted.peaks[:, 1], fitted)
+
+
+def _same_peak(moved: Floats, fitted: Fitted) -> Floats:
+    """Return the moves, NaN where what was found is so far away that it is another peak."""
+    return np.where(np.abs(moved) <= WIDTH_TO_FWHM * fitted.peaks[:, 2], moved, np.nan)
 
 
 def half_spread(shifts: Sequence[Shift], peaks: int) -> Floats:
