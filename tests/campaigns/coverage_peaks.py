@@ -68,20 +68,31 @@ def experiment(case: str, number: int, traces: int, replicates: int) -> list[tup
     ]
 
 
-def campaign(case: str, experiments: int, traces: int, replicates: int, processes: int) -> dict[str, np.ndarray]:
-    """Return the results of all experiments of one case: arrays (n, 4) of truth, position, low, high by scene."""
+def campaign(
+    case: str, experiments: int, traces: int, replicates: int, processes: int, tell_every: int = 0
+) -> dict[str, np.ndarray]:
+    """Return the results of all experiments of one case: arrays (n, 4) of truth, position, low, high by scene.
+
+    ``tell_every`` prints the verdict so far after so many experiments (never where it is 0), so that a campaign that is
+    stopped has told what it found.
+    """
     scenes: dict[str, list[tuple[float, ...]]] = {}
+
+    def take(number: int, rows: list[tuple[str, float, float, float, float]]) -> None:
+        for scene, *values in rows:
+            scenes.setdefault(scene, []).append(tuple(values))
+        if tell_every and (number + 1) % tell_every == 0 and number + 1 < experiments:
+            coverage, intervals, _ = verdict({scene: np.array(values) for scene, values in scenes.items()})
+            print(f"    {case}, {number + 1} experiments: {100 * coverage:.2f} % of {intervals}", flush=True)
+
     if processes == 1:
-        results = (experiment(case, number, traces, replicates) for number in range(experiments))
-        for rows in results:
-            for scene, *values in rows:
-                scenes.setdefault(scene, []).append(tuple(values))
-        return {scene: np.array(values) for scene, values in scenes.items()}
-    with ProcessPoolExecutor(processes) as pool:
-        jobs = [pool.submit(experiment, case, number, traces, replicates) for number in range(experiments)]
-        for job in jobs:
-            for scene, *values in job.result():
-                scenes.setdefault(scene, []).append(tuple(values))
+        for number in range(experiments):
+            take(number, experiment(case, number, traces, replicates))
+    else:
+        with ProcessPoolExecutor(processes) as pool:
+            jobs = [pool.submit(experiment, case, number, traces, replicates) for number in range(experiments)]
+            for number, job in enumerate(jobs):
+                take(number, job.result())
     return {scene: np.array(values) for scene, values in scenes.items()}
 
 
@@ -102,7 +113,7 @@ def main() -> None:
     parser.add_argument("--case", nargs="*", default=list(CASES))
     given = parser.parse_args()
     for case in given.case:
-        results = campaign(case, given.experiments, given.traces, given.replicates, given.processes)
+        results = campaign(case, given.experiments, given.traces, given.replicates, given.processes, 100)
         coverage, intervals, bias = verdict(results)
         error = np.sqrt(0.95 * 0.05 / given.experiments)
         print(
