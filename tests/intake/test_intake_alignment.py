@@ -122,3 +122,74 @@ def test_kernel_equals_the_definition(values, first, stay, scale):
     assert found.zero_sample[0] == sample
     if sample >= 0:
         assert found.zero_drive[0] == pytest.approx(sample + fraction, rel=1e-12)
+
+
+def plain_jump(values: np.ndarray, level: float, stay: int) -> int:
+    """The definition, word by word, in plain Python (twin of the kernel)."""
+    there = [(index, float(value)) for index, value in enumerate(values) if not math.isnan(value)]
+    best, found = 0.0, -1
+    for at in range(stay - 1, len(there) - stay):
+        before = [value for _, value in there[at - stay + 1 : at + 1]]
+        after = [value for _, value in there[at + 1 : at + 1 + stay]]
+        logs = [[math.log(max(value, 1e-4 * level)) for value in side] for side in (before, after)]
+        fall = sum(logs[0]) - sum(logs[1])
+        half = stay * math.log(0.5 * level)
+        through = sum(logs[0]) >= half > sum(logs[1])
+        if through and max(after) < level and fall >= best:
+            best, found = fall, there[at][0]
+    return found
+
+
+@settings(deadline=None, max_examples=150)
+@given(
+    st.lists(
+        st.one_of(st.sampled_from([0.0, 0.011, 0.23, 0.31, 0.5, 1.3, 2.9]), st.just(float("nan"))),
+        min_size=1,
+        max_size=30,
+    ),
+    st.integers(1, 4),
+    st.sampled_from([1.0, 1e-6]),
+)
+def test_jump_kernel_equals_the_definition(values, stay, scale):
+    row = (np.array(values, np.float32) * np.float32(scale)).astype(np.float32)
+    level = float(np.float32(0.5) * np.float32(scale))
+    traces = TraceSet.from_arrays([row], step_nm=1.0)
+    chosen = AlignmentSettings(zero_at_g0=level, crossing="jump", stay_samples=stay)
+    found = align(traces, chosen, ("pull",))
+    sample = plain_jump(row, level, stay)
+    assert found.zero_sample[0] == sample
+    if sample >= 0:
+        assert found.zero_drive[0] == sample + 0.5
+
+
+def test_a_plateau_at_the_level_does_not_move_the_jump():
+    """A noisy plateau at 0.5 G0 that breaks at a known sample: the jump is exact, the last crossing lies before it."""
+    rng = np.random.default_rng(7)
+    breaks = rng.integers(150, 250, 200)
+    rows = [
+        np.concatenate([np.full(100, 1.0), 0.5 * np.exp(0.05 * rng.normal(size=at - 100)), 1e-3 * np.ones(300 - at)])
+        for at in breaks
+    ]
+    traces = TraceSet.from_arrays(rows, step_nm=1.0)
+    jump = align(traces, AlignmentSettings(crossing="jump"), ("pull",))
+    np.testing.assert_array_equal(jump.zero_drive, breaks - 0.5)
+    last = align(traces, DEFAULT, ("pull",))
+    assert np.mean(np.abs(last.zero_drive - breaks) > 1) > 0.3
+
+
+def test_the_jump_of_a_closing_trace_is_the_mirror_image():
+    row = [1, 1, 1, 0.9, 1e-3, 1e-4, 1e-5, 1e-5]
+    chosen = AlignmentSettings(crossing="jump", stay_samples=2)
+    opening = align(TraceSet.from_arrays([row], step_nm=0.1), chosen, ("pull",))
+    back = TraceSet.from_arrays([row[::-1]], displacement_nm=[np.arange(8)[::-1] * 0.1], direction="closing")
+    closing = align(back, chosen, ("push",))
+    assert opening.zero_drive[0] == pytest.approx(0.35)
+    assert closing.zero_drive[0] == pytest.approx(0.35, abs=1e-7)
+    assert closing.zero_sample[0] == 4
+
+
+def test_traces_without_a_jump_are_flagged():
+    rows = [[0.2] * 8, [1.0] * 8, [1, 1, 1, 0.1, 0.1, 1, 1, 1]]
+    found = align(TraceSet.from_arrays(rows, step_nm=1.0), AlignmentSettings(crossing="jump"), ("pull",))
+    assert words(found) == ["never reaches the level", "ends above the level", "ends above the level"]
+    assert np.isnan(found.zero_drive).all()

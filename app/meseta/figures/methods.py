@@ -133,7 +133,10 @@ def _zero(stated: Stated, analysis: Analysis, work: Work) -> list[str]:
     status = analysis.result("alignment", work).status
     found = int(np.sum(status == 0))
     return [
-        f"Displacement is zero at the {stated('alignment.crossing')} crossing of {stated('alignment.zero_at_g0')} "
+        f"Displacement is zero at the {stated('alignment.crossing')}, the largest fall of the conductance through half "
+        f"of {stated('alignment.zero_at_g0')}, between means over {stated('alignment.stay_samples')}."
+        if stated.value("alignment.crossing") == "jump"
+        else f"Displacement is zero at the {stated('alignment.crossing')} crossing of {stated('alignment.zero_at_g0')} "
         f"after which the conductance stays below for {stated('alignment.stay_samples')}, interpolated in log G.",
         f"{_count(found, 'trace')} of {typeset.integer(len(status))} have such a crossing.",
     ]

@@ -14,6 +14,7 @@ from meseta.traces import TraceSet
 
 __all__ = ["ALIGNMENT_STATUS", "Alignment", "align"]
 
+DEEPEST_SHARE: Final = 1e-4
 ALIGNMENT_STATUS: Final = ("aligned", "never reaches the level", "ends above the level", "no samples in this phase")
 
 
@@ -70,6 +71,11 @@ def align(traces: TraceSet, settings: AlignmentSettings, phases: Sequence[str]) 
     ln g(t+1))``; not moved where g(t+1) is not above zero or not finite (common practice, no source).  Push phases are
     walked backwards in time, so that opening and closing have the same definition.
 
+    By the jump, the zero lies half way between the two samples where ln G, averaged over ``stay_samples`` on each side,
+    falls most, among the falls from above to below half the level that stay below the level: a change point, which a
+    plateau near the level does not move (our choice).  Falls deeper than four decades below the level count alike, so
+    that the noise of the floor does not choose.
+
     Parameters
     ----------
     traces : TraceSet
@@ -85,27 +91,19 @@ def align(traces: TraceSet, settings: AlignmentSettings, phases: Sequence[str]) 
     -----
     NaN samples are passed over: they count neither as above nor as below.
     """
-    from meseta.intake.kernels import find_crossings
+    from meseta.intake.kernels import find_crossings, find_jumps
 
     start, stop = traces.phase_range(phases)
     count, backwards = traces.traces, tuple(phases) == ("push",)
     sample, fraction, status = np.empty(count, np.int64), np.empty(count), np.empty(count, np.uint8)
-    values = np.ascontiguousarray(traces.conductance, np.float32)
-    find_crossings(
-        values,
-        np.ascontiguousarray(traces.offsets),
-        start,
-        stop,
-        backwards,
-        settings.zero_at_g0,
-        settings.crossing == "first",
-        settings.stay_samples,
-        sample,
-        fraction,
-        status,
-    )
+    values, level = np.ascontiguousarray(traces.conductance, np.float32), settings.zero_at_g0
+    spans = (values, np.ascontiguousarray(traces.offsets), start, stop, backwards, level)
+    if settings.crossing == "jump":
+        find_jumps(*spans, DEEPEST_SHARE * level, settings.stay_samples, sample, fraction, status)
+    else:
+        find_crossings(*spans, settings.crossing == "first", settings.stay_samples, sample, fraction, status)
     zero = _drive_at(traces, sample, fraction, -1 if backwards else 1)
-    return Alignment(zero, sample, status, settings.zero_at_g0)
+    return Alignment(zero, sample, status, level)
 
 
 def _drive_at(

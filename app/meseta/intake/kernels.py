@@ -86,6 +86,58 @@ def find_crossings(
 
 
 @kernel
+def find_jumps(
+    values: npt.NDArray[np.float32],
+    offsets: npt.NDArray[np.int64],
+    start: npt.NDArray[np.int64],
+    stop: npt.NDArray[np.int64],
+    backwards: bool,
+    level: float,
+    deepest: float,
+    stay: int,
+    sample: npt.NDArray[np.int64],
+    fraction: npt.NDArray[np.float64],
+    status: npt.NDArray[np.uint8],
+) -> None:
+    """Find in every trace the sample before the largest fall of ln G, between means over ``stay`` samples.
+
+    Falls count whose mean lies at or above half the level before and below it after, all samples there below the
+    level; values below ``deepest`` count as it.  NaN samples are passed over.  The last of equal falls wins; the zero
+    lies half way to the next sample.
+    """
+    middle = math.log(0.5 * level) * stay
+    for trace in range(len(start)):
+        base = offsets[trace]
+        length = stop[trace] - start[trace]
+        place = np.empty(length, np.int64)
+        logs = np.empty(length)
+        count, highest = 0, -np.inf
+        for step in range(length):
+            index = base + (stop[trace] - 1 - step if backwards else start[trace] + step)
+            value = np.float64(values[index])
+            if math.isnan(value):
+                continue
+            place[count] = index
+            logs[count] = math.log(max(value, deepest))
+            highest = max(highest, value)
+            count += 1
+        best, found = 0.0, -1
+        for at in range(stay - 1, count - stay):
+            before, after, largest = 0.0, 0.0, -np.inf
+            for near in range(stay):
+                before += logs[at - near]
+                after += logs[at + 1 + near]
+                largest = max(largest, np.float64(values[place[at + 1 + near]]))
+            if before >= middle and after < middle and largest < level and before - after >= best:
+                best, found = before - after, at
+        sample[trace], fraction[trace] = -1, 0.0
+        if found >= 0:
+            status[trace], sample[trace], fraction[trace] = ALIGNED, place[found] - base, 0.5
+        else:
+            status[trace] = NO_SAMPLES if length == 0 else (ENDS_ABOVE if highest >= level else NEVER_REACHES)
+
+
+@kernel
 def find_turns(
     values: npt.NDArray[np.float64], base: int, threshold: float, state: npt.NDArray[np.float64]
 ) -> list[int]:
@@ -226,6 +278,7 @@ def _compile() -> None:
     sample, fraction, status = np.empty(1, np.int64), np.empty(1), np.empty(1, np.uint8)
     for _ in ("writable", "read-only"):
         find_crossings(values, bounds, bounds[:1], bounds[1:], False, 0.5, False, 3, sample, fraction, status)
+        find_jumps(values, bounds, bounds[:1], bounds[1:], False, 0.5, 1e-4, 3, sample, fraction, status)
         rising_rows(values, bounds, bounds[:1], 2, 10.0, np.empty(1, np.bool_))
         drive = values.astype(np.float64)
         drive.flags.writeable = values.flags.writeable

@@ -19,9 +19,17 @@ class AlignmentSettings(Section):
         unit="G0",
         gt=0,
     )
-    crossing: Literal["last", "first"] = setting(
-        "last", "Crossing", "'last': the last crossing that stays below; 'first': the first one."
+    crossing: Literal["last", "first", "jump"] = setting(
+        "last",
+        "Crossing",
+        "'last': the last crossing that stays below; 'first': the first one; 'jump': the largest fall "
+        "through half the level, for plateaus that lie near the level.",
     )
     stay_samples: int = setting(
-        3, "Stays below for", "Samples that must lie below after the crossing.", unit="samples", ge=1, le=1000
+        3,
+        "Stays below for",
+        "Samples that must lie below after the crossing; for a jump, samples averaged on each side.",
+        unit="samples",
+        ge=1,
+        le=1000,
     )
