@@ -33,25 +33,27 @@ _ROLE_OF_DIMENSION: Final = {
     "m": "displacement", "s": "time",
 }  # fmt: skip
 _NAMES: Final = {
-    "conductance": "conductance cond g gg0 g_g0 conductances junction_conductance",
-    "log_conductance": "logg log_g log10g log10_g lg_g lgg log_conductance log10_conductance logconductance log_cond "
-    "log10_g_g0 log_g_g0 log10gg0",
-    "current": "current i curr currents junction_current tunnel_current tunneling_current tunnelling_current isd ids",
+    "conductance": "leitwert conductancia conduttanza conductance cond g gg0 g_g0 conductances junction_conductance",
+    "log_conductance": "logg log_g log10g log10_g lg_g lgg log_conductance log10_conductance logconductance "
+    "log_cond log10_g_g0 log_g_g0 log10gg0",
+    "current": "strom courant corriente corrente current i curr currents junction_current tunnel_current "
+    "tunneling_current tunnelling_current isd ids",
     "amplifier": "amplifier amp amplifier_volts amp_volts amplifier_output amp_out amplifier_voltage amp_voltage "
-    "preamp preamplifier preamp_out output iv_out iv_converter log_amp logamp log_amplifier amplifier_1 amp1 low_gain "
-    "amplifier_low_gain amp_low",
+    "preamp preamplifier preamp_out output iv_out iv_converter log_amp logamp log_amplifier amplifier_1 amp1 "
+    "low_gain amplifier_low_gain amp_low",
     "amplifier_high_gain": "amplifier_high_gain amp_high amp_high_gain high_gain amplifier_2 amp2 amplifier_high",
-    "resistance": "resistance r resistances",
-    "displacement": "displacement distance z extension stretch elongation position gap dz displacements distances "
-    "electrode_separation separation x_displacement",
-    "piezo": "piezo piezo_volts piezo_voltage piezo_v pzt z_piezo piezo_z drive ramp piezo_drive piezo_monitor vpiezo "
-    "v_piezo u_piezo",
-    "time": "time t times timestamp_s elapsed",
+    "resistance": "widerstand resistencia resistenza resistance r resistances",
+    "displacement": "weg abstand auslenkung dehnung deplacement desplazamiento spostamento displacement distance z "
+    "extension stretch elongation position gap dz displacements distances electrode_separation separation "
+    "x_displacement",
+    "piezo": "piezo piezo_volts piezo_voltage piezo_v pzt z_piezo piezo_z drive ramp piezo_drive piezo_monitor "
+    "vpiezo v_piezo u_piezo",
+    "time": "zeit temps tiempo tempo time t times timestamp_s elapsed",
     "bias": "bias vbias v_bias bias_voltage ubias u_bias bias_v applied_bias",
-    "voltage": "voltage v u volt volts",
+    "voltage": "spannung tension voltaje voltage v u volt volts",
     "range_code": "range range_code gain_code gain_range range_index",
-    "trace_number": "trace trace_number trace_no trace_id tracenumber traceid trace_index curve curve_number curve_id "
-    "cycle cycle_number trace_nr",
+    "trace_number": "trace trace_number trace_no trace_id tracenumber traceid trace_index curve curve_number "
+    "curve_id cycle cycle_number trace_nr",
     "trigger": "trigger trig ttl trigger_in trigger_out trigger_signal",
     "phase": "phase segment_kind motion",
 }  # fmt: skip
@@ -96,6 +98,8 @@ def _without_number(name: str) -> str:
     tokens = _tokens(name)
     words = [token for token in tokens if not token.isdigit()] or tokens[:1]
     joined = "_".join(words).lower()
+    if len(words) > 1 and is_unit(words[-1]):  # "G_G0": the nought is no number of a trace
+        return joined
     return re.sub(r"(?<=[a-z_])\d+$", "", joined).rstrip("_") or joined
 
 
@@ -138,6 +142,8 @@ def _whole_unit(text: str) -> bool:
 
 
 def _unit_of_words(words: Sequence[str], dimension: str) -> str:
+    if words[-1].isdigit():
+        return ""
     joined = "/".join(words) if len(words) == 2 and "per" not in words else "_".join(words)
     if len(words) == 3 and words[1] != "per":
         return ""

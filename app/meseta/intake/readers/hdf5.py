@@ -28,6 +28,11 @@ from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["Hdf5Reader", "understood"]
 
+_VERSIONS: Final = (
+    "raw", "filtered", "smoothed", "processed", "calibrated", "corrected", "analysis", "analysed", "analyzed",
+    "results", "backup", "copy",
+)  # fmt: skip
+"""Words of a path that say that it holds other versions of the same samples."""
 _SIGNATURE: Final = b"\x89HDF\r\n\x1a\n"
 
 
@@ -63,7 +68,7 @@ def understood(tree: Tree, path: Path, settings: IntakeSettings) -> Contents:
     InputError
         Where it holds no samples.
     """
-    leaves = [leaf for node in tree.nodes for leaf in leaves_of(node)]
+    leaves = [leaf for node in tree.nodes for leaf in leaves_of(node, settings.channels)]
     by_parent: dict[str, list[Leaf]] = {}
     for leaf in leaves:
         by_parent.setdefault(leaf.parent, []).append(leaf)
@@ -94,11 +99,14 @@ def _best_sheet(by_parent: Mapping[str, Sequence[Leaf]], layout: str) -> tuple[S
     numbered = {parent: found for parent, leaves in by_parent.items() if (found := numbered_sheet(parent, leaves))}
     if numbered:
         return _numbered(numbered, by_parent)
-    sheets = {parent: found for parent, leaves in by_parent.items() if (found := sheet_of(parent, leaves, layout))}
-    families: dict[tuple[str, frozenset[str]], list[str]] = {}
+    everywhere = [leaf for leaves in by_parent.values() for leaf in leaves if leaf.is_vector]
+    sheets = {
+        parent: found for parent, leaves in by_parent.items() if (found := sheet_of(parent, leaves, layout, everywhere))
+    }
+    families: dict[tuple[int, str, frozenset[str]], list[str]] = {}
     for parent, sheet in sheets.items():
         names = frozenset(channel[0] for channel in sheet.channels)
-        families.setdefault((parent.rpartition("/")[0], names), []).append(parent)
+        families.setdefault((parent.count("/"), _version_of(parent), names), []).append(parent)
     if not families:
         return None, []
 
@@ -107,6 +115,11 @@ def _best_sheet(by_parent: Mapping[str, Sequence[Leaf]], layout: str) -> tuple[S
         return sheets[parents[0]], parents
     layout_text = "one group a trace" if all(len(sheets[p].names) == 1 for p in parents) else "several groups"
     return joined_sheets([sheets[parent] for parent in parents], layout_text), parents
+
+
+def _version_of(parent: str) -> str:
+    """Return the word of a path that says that it holds another version of the same samples; empty without one."""
+    return next((word for word in parent.lower().split("/") if word in _VERSIONS), "")
 
 
 def _weight(sheets: Sequence[Sheet]) -> tuple[int, int]:
@@ -195,17 +208,22 @@ def _common_ancestors(parents: Sequence[str]) -> list[str]:
 
 
 def _piece_rows(tree: Tree, parents: Sequence[str], sheet: Sheet, path: Path) -> list[dict[str, Plain]]:
-    """Return attributes and single values of each group where every group is a piece."""
-    if len(parents) < 2 or len(parents) != len(sheet.names):
+    """Return what each group, and those above it that are not above all, say of the pieces in it."""
+    if len(parents) < 2 or len(parents) != len(sheet.pieces_of):
         return []
     singles: dict[str, dict[str, Any]] = {}
     for name, value in tree.values.items():
         parent, _, leaf = name.rpartition("/")
         singles.setdefault(parent, {})[leaf] = value
-    return [
-        canonical({**tree.attributes.get(parent, {}), **singles.get(parent, {})}, f"{path}, {parent}")[0]
-        for parent in parents
-    ]
+    common = set(_common_ancestors(parents))
+    rows = []
+    for parent, count in zip(parents, sheet.pieces_of, strict=True):
+        words = parent.split("/")
+        chain = [step for n in range(len(words)) if (step := "/".join(words[: n + 1])) not in common]
+        said = [{**tree.attributes.get(step, {}), **singles.get(step, {})} for step in chain]
+        row = canonical({name: value for one in said for name, value in one.items()}, f"{path}, {parent}")[0]
+        rows += [row] * count
+    return rows
 
 
 def _canonical_table(table: Mapping[str, Any], path: Path) -> dict[str, Any]:

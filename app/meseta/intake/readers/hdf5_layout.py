@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
+import re
+from collections.abc import Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from typing import Any, Final
 
@@ -13,11 +14,13 @@ from natsort import natsorted
 from meseta.intake.metadata import plain_value
 from meseta.intake.readers.hdf5_tree import (
     ColumnSamples,
+    Layer,
     Node,
-    OneColumnSamples,
+    Ragged,
     RowSamples,
     VectorSamples,
 )
+from meseta.intake.readers.orientation import orientation
 from meseta.intake.roles import DRIVE_ROLES, SIGNAL_ROLES, guess_role, stem_of
 from meseta.traces import Samples
 
@@ -29,6 +32,10 @@ _CUTS: Final = {
     "lengths": "lengths length trace_lengths counts n_samples samples sizes size npts",
 }
 _COLUMN_NAMES: Final = ("columns", "channels", "names", "channel_names", "column_names", "fields", "labels")
+_UNITS: Final = ("units", "unit")
+MOST_COLUMNS: Final = 64
+CORNER: Final = (256, 4096)
+"""Traces and samples that are looked at to tell rows from columns."""
 _CHANNEL_STEMS: Final = frozenset(
     {
         "ch",
@@ -94,20 +101,52 @@ class Sheet:
     starts: npt.NDArray[np.int64]
     table: dict[str, npt.NDArray[Any]] = field(default_factory=dict)
     doubts: tuple[str, ...] = ()
+    pieces_of: tuple[int, ...] = ()
+    """Pieces of each group, where several groups stand one after the other."""
 
 
-def leaves_of(node: Node) -> Iterator[Leaf]:
-    """Yield the channel-like parts of a dataset."""
-    if node.dtype.names is None:
+def leaves_of(node: Node, told: Collection[str] = ()) -> Iterator[Leaf]:
+    """Yield the channel-like parts of a dataset: itself, its fields, or its named columns.
+
+    Parameters
+    ----------
+    node : Node
+    told : collection of str
+        Names in ``intake.channels`` of the recipe; "column 2" there makes columns of a 2D array without names channels.
+    """
+    if node.dtype.names is not None:
+        yield from _fields(node)
+        return
+    names = _column_names(node) or _columns_told(node, told)
+    if not names:
         yield Leaf(node.leaf, node.parent, node.shape, node.dtype, node.attributes, node, VectorSamples(node.dataset))
         return
+    axis = max(place for place, n in enumerate(node.shape) if n == len(names))
+    shape = tuple(n for place, n in enumerate(node.shape) if place != axis)
+    shared = {key: value for key, value in node.attributes.items() if str(key).lower() not in (*_COLUMN_NAMES, *_UNITS)}
+    for place, (name, unit) in enumerate(zip(names, _column_units(node, len(names)), strict=True)):
+        attributes = shared | ({"unit": unit} if unit else {})
+        layer = Layer(node.dataset, axis, place)
+        part = Node(f"{node.path}/{name}", layer, shape, node.dtype, attributes)
+        yield Leaf(name, node.path, shape, node.dtype, attributes, part, VectorSamples(layer))
+
+
+def _fields(node: Node) -> Iterator[Leaf]:
     if len(node.shape) != 1:
         return
-    for name in node.dtype.names:
+    for name in node.dtype.names or ():
         dtype = node.dtype[name]
         if dtype.kind in "biuf" and dtype.shape == ():
             samples = VectorSamples(node.dataset, name)
             yield Leaf(name, node.path, node.shape, dtype, _field_attributes(node, name), node, samples)
+
+
+def _columns_told(node: Node, told: Collection[str]) -> list[str]:
+    """Return "column 1", "column 2" ... where the recipe speaks of so many columns of a 2D array without names."""
+    numbers = [int(name.rsplit(" ", 1)[-1]) for name in told if re.fullmatch(r"(column )?\d{1,3}", name)]
+    if not numbers or len(node.shape) != 2 or not max(numbers) <= min(node.shape) <= MOST_COLUMNS:
+        return []
+    return [f"column {n + 1}" for n in range(min(node.shape))]
 
 
 def _field_attributes(node: Node, name: str) -> dict[str, Any]:
@@ -225,55 +264,60 @@ def _differing(rows: Sequence[Mapping[str, Any]]) -> dict[str, npt.NDArray[Any]]
 # -- one group --------------------------------------------------------------------------------------------------------
 
 
-def sheet_of(parent: str, leaves: Sequence[Leaf], layout: str) -> Sheet | None:
-    """Return the sheet of the datasets of one group that are not numbered traces; None where nothing is understood."""
+def sheet_of(parent: str, leaves: Sequence[Leaf], layout: str, elsewhere: Sequence[Leaf] = ()) -> Sheet | None:
+    """Return the sheet of the datasets of one group that are not numbered traces; None where nothing is understood.
+
+    Parameters
+    ----------
+    parent : str
+    leaves : sequence of Leaf
+        The datasets of the group.
+    layout : str
+        ``intake.layout`` of the recipe.
+    elsewhere : sequence of Leaf
+        Datasets of other groups that may say where traces begin.
+    """
     matrices = [leaf for leaf in leaves if len(leaf.shape) == 2 and not leaf.is_vector]
     vectors = [leaf for leaf in leaves if leaf.is_vector and leaf.length > 1]
-    named = next((leaf for leaf in matrices if _column_names(leaf)), None)
-    if named is not None:
-        return _multichannel(named)
+    ragged = [leaf for leaf in leaves if isinstance(leaf.node.dataset, Ragged)]
+    if ragged:
+        return _ragged_rows(ragged, [leaf for leaf in vectors if leaf not in ragged])
     if matrices:
         return _matrix(matrices, vectors, layout)
     if not vectors:
         return None
-    cut = _cut_points(vectors)
+    cut = _cut_points(vectors) or _cut_points(vectors, elsewhere)
     return _ragged(vectors, *cut) if cut else _record(parent, vectors)
 
 
-def _column_names(leaf: Leaf) -> list[str]:
-    for key, value in leaf.attributes.items():
-        array = np.asarray(value)
+def _column_names(node: Node) -> list[str]:
+    """Return the names that an attribute gives to the places of one axis; nothing where none does."""
+    if not 2 <= len(node.shape) <= 3:
+        return []
+    for key, value in node.attributes.items():
         if str(key).lower() in _COLUMN_NAMES:
-            words = array.reshape(-1).tolist() if array.size > 1 else str(plain_value(value) or "").split(",")
-            names = [
-                word.decode("utf-8", "replace") if isinstance(word, bytes) else str(word).strip() for word in words
-            ]
-            if len(names) in leaf.shape and len(names) > 1:
+            names = _words(value)
+            if len(names) in node.shape and len(set(names)) == len(names) > 1:
                 return names
     return []
 
 
-def _multichannel(leaf: Leaf) -> Sheet:
-    names = _column_names(leaf)
-    axis = 1 if len(names) == leaf.shape[1] else 0
-    units = _column_units(leaf, len(names))
-    channels: list[tuple[str, Samples, np.dtype[Any], Mapping[str, Any], bool, str]] = [
-        (name, OneColumnSamples(leaf.node.dataset, place, axis), leaf.dtype, {"unit": unit} if unit else {}, False, "")
-        for place, (name, unit) in enumerate(zip(names, units, strict=True))
-    ]
-    length = leaf.shape[1 - axis]
-    layout = f"{len(names)} named {'columns' if axis else 'rows'} of one 2D dataset"
-    return Sheet(layout, channels, np.array([0, length], np.int64), [leaf.node.path], np.zeros(1, np.int64))
-
-
-def _column_units(leaf: Leaf, count: int) -> list[str]:
-    for key, value in leaf.attributes.items():
-        if str(key).lower() in ("units", "unit"):
-            array = np.asarray(value)
-            words = array.reshape(-1).tolist() if array.size > 1 else str(plain_value(value) or "").split(",")
+def _column_units(node: Node, count: int) -> list[str]:
+    for key, value in node.attributes.items():
+        if str(key).lower() in _UNITS:
+            words = _words(value)
             if len(words) == count:
-                return [word.decode() if isinstance(word, bytes) else str(word).strip() for word in words]
+                return words
+            if len(words) == 1:
+                return words * count
     return [""] * count
+
+
+def _words(value: Any) -> list[str]:
+    """Return the words of a list, or of one text with commas between them."""
+    array = np.asarray(value)
+    words = array.reshape(-1).tolist() if array.size > 1 else re.split(r"[,;|\t]", str(plain_value(value) or ""))
+    return [word.decode("utf-8", "replace") if isinstance(word, bytes) else str(word).strip() for word in words]
 
 
 def _matrix(matrices: Sequence[Leaf], vectors: Sequence[Leaf], layout: str) -> Sheet:
@@ -318,39 +362,44 @@ def _is_signal(leaf: Leaf) -> bool:
 
 
 def _rows_are_traces(leaf: Leaf, vectors: Sequence[Leaf], layout: str) -> tuple[bool, str]:
-    """Return whether each row is a trace, and a doubt: told, by a fitting axis, else by which way is smooth."""
+    """Return whether each row is a trace, and a doubt: told, by a fitting axis, else by what the numbers look like."""
     if layout in ("rows", "columns"):
         return layout == "rows", ""
     fits = {leaf.shape.index(v.length) for v in vectors if v.length in leaf.shape and leaf.shape[0] != leaf.shape[1]
             and guess_role(v.name).role in DRIVE_ROLES}  # fmt: skip
     if len(fits) == 1:
         return fits == {1}, ""
-    along, across = _roughness(leaf)
-    rows = along <= across
-    if not max(along, across) > 1.5 * min(along, across):
-        return rows, (
-            f"'{leaf.name}': it is not clear whether traces are its rows or its columns; "
-            f"{'rows' if rows else 'columns'} taken (set intake.layout)"
-        )
-    return rows, ""
+    found = orientation(leaf.node.dataset[: CORNER[0], : CORNER[1]], leaf.node.dataset[: CORNER[1], : CORNER[0]])
+    if found.sure:
+        return found.rows, ""
+    word = "rows" if found.rows else "columns"
+    return found.rows, (
+        f"'{leaf.name}': it is not clear whether traces are its rows or its columns; {word} taken (set intake.layout)"
+    )
 
 
-def _roughness(leaf: Leaf) -> tuple[float, float]:
-    """Return the mean step between neighbours along the rows and along the columns of a corner of a 2D dataset."""
-    block = np.asarray(leaf.node.dataset[:256, :256], np.float64)
-    finite = np.abs(block[np.isfinite(block)])
-    unit = float(np.median(finite)) if finite.size else 0.0
-    shaped = np.arcsinh(block / unit) if unit > 0 else block
-    steps = [np.abs(np.diff(shaped, axis=axis)) for axis in (1, 0)]
-    along, across = (float(np.nanmean(step)) if np.isfinite(step).any() else 0.0 for step in steps)
-    return along, across
+def _ragged_rows(ragged: Sequence[Leaf], vectors: Sequence[Leaf]) -> Sheet:
+    """Return the sheet of datasets whose elements are rows of different length."""
+    main = max(ragged, key=lambda leaf: (_is_signal(leaf), leaf.length))
+    offsets = main.node.dataset.offsets
+    alike = [leaf for leaf in ragged if np.array_equal(leaf.node.dataset.offsets, offsets)]
+    doubts = [f"'{leaf.name}' has rows of other lengths and was left out" for leaf in ragged if leaf not in alike]
+    channels = [
+        (leaf.name, leaf.samples, leaf.dtype, leaf.attributes, False, leaf.parent.rpartition("/")[2]) for leaf in alike
+    ]
+    pieces = len(offsets) - 1
+    table = {leaf.name: np.asarray(leaf.samples.read(0, pieces)) for leaf in vectors if leaf.length == pieces}
+    names, starts = [main.node.path] * pieces, offsets[:-1].copy()
+    return Sheet("rows of different length", channels, offsets, names, starts, table, tuple(doubts))
 
 
-def _cut_points(vectors: Sequence[Leaf]) -> tuple[Leaf, npt.NDArray[np.int64]] | None:
+def _cut_points(
+    vectors: Sequence[Leaf], candidates: Sequence[Leaf] | None = None
+) -> tuple[Leaf, npt.NDArray[np.int64]] | None:
     """Return the dataset of offsets or lengths, and the offsets it means for the longest channel; None without one."""
     longest = max(leaf.length for leaf in vectors)
     for kind, names in _CUTS.items():
-        for leaf in vectors:
+        for leaf in vectors if candidates is None else candidates:
             if leaf.name.lower() not in names.split() or leaf.length > 50_000_000:
                 continue
             values = np.asarray(leaf.samples.read(0, leaf.length))
@@ -417,7 +466,7 @@ def joined_sheets(sheets: Sequence[Sheet], layout: str) -> Sheet:
     doubts = tuple(dict.fromkeys(doubt for sheet in sheets for doubt in sheet.doubts))
     return replace(
         sheets[0], layout=layout, channels=channels, offsets=offsets.astype(np.int64), names=names, starts=starts,
-        table=_joined_tables(sheets), doubts=doubts,
+        table=_joined_tables(sheets), doubts=doubts, pieces_of=tuple(len(sheet.names) for sheet in sheets),
     )  # fmt: skip
 
 

@@ -20,7 +20,18 @@ from meseta.errors import InputError
 from meseta.intake.readers.spool import turned
 from meseta.traces import ArraySamples
 
-__all__ = ["ColumnSamples", "Node", "PartSamples", "RowSamples", "Tree", "VectorSamples", "open_file", "walk"]
+__all__ = [
+    "ColumnSamples",
+    "Layer",
+    "Node",
+    "PartSamples",
+    "Ragged",
+    "RowSamples",
+    "Tree",
+    "VectorSamples",
+    "open_file",
+    "walk",
+]
 
 BOMB_RATIO: Final = 500
 BOMB_BYTE: Final = 64 << 20
@@ -154,6 +165,8 @@ def _add_dataset(tree: Tree, name: str, dataset: Any, file_byte: int) -> None:
         tree.values[name] = dataset[()].reshape(-1)[0] if shape else dataset[()]
     elif dtype.kind in "biuf" or dtype.names:
         tree.nodes.append(Node(name, dataset, tuple(int(n) for n in shape), dtype, _attributes(dataset)))
+    elif (inner := h5py.check_vlen_dtype(dtype)) is not None and np.dtype(inner).kind in "iuf" and len(shape) == 1:
+        _add_ragged(tree, name, dataset, np.dtype(inner))
     elif h5py.check_string_dtype(dtype) is not None and count <= 1_000_000:
         text = np.asarray(dataset.asstr(errors="replace")[()]).astype(np.str_)
         if count == 1:
@@ -162,6 +175,16 @@ def _add_dataset(tree: Tree, name: str, dataset: Any, file_byte: int) -> None:
             tree.texts[name] = text.reshape(-1)
     else:
         tree.refused.append(f"{name} holds objects, which are not read")
+
+
+def _add_ragged(tree: Tree, name: str, dataset: Any, dtype: np.dtype[Any]) -> None:
+    try:
+        rows = Ragged.of(dataset, dtype)
+    except (OSError, RuntimeError, ValueError, TypeError, MemoryError):
+        tree.refused.append(f"{name} is damaged and was not read")
+        return
+    if rows.shape[0]:
+        tree.nodes.append(Node(name, rows, rows.shape, dtype, _attributes(dataset)))
 
 
 def _size_fault(dataset: Any, shape: tuple[int, ...], dtype: np.dtype[Any], file_byte: int) -> str:
@@ -268,21 +291,71 @@ class ColumnSamples:
 
 
 @dataclass(frozen=True)
-class OneColumnSamples:
-    """One column (or row) of a 2D dataset."""
+class Layer:
+    """One place of one axis of a dataset, as a dataset of one dimension less."""
 
     dataset: Any
-    place: int
     axis: int
+    place: int
 
-    def __len__(self) -> int:
-        return int(self.dataset.shape[1 - self.axis])
+    @property
+    def path(self) -> str:
+        """Where the dataset lies."""
+        return _place_of(self.dataset)
 
-    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
-        """Return samples ``start`` to ``stop``."""
-        if self.axis == 1:
-            return _read(self.dataset, lambda: self.dataset[start:stop, self.place])
-        return _read(self.dataset, lambda: self.dataset[self.place, start:stop])
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Its shape without the axis."""
+        return tuple(int(n) for place, n in enumerate(self.dataset.shape) if place != self.axis)
+
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """Type of its numbers."""
+        return np.dtype(self.dataset.dtype)
+
+    def __getitem__(self, key: Any) -> npt.NDArray[Any]:
+        """Return a part of the layer."""
+        keys = list(key) if isinstance(key, tuple) else [key]
+        keys += [slice(None)] * (len(self.shape) - len(keys))
+        keys.insert(self.axis, self.place)
+        found: npt.NDArray[Any] = self.dataset[tuple(keys)]
+        return found
+
+
+@dataclass(frozen=True)
+class Ragged:
+    """A dataset whose elements are rows of numbers of different length, end to end."""
+
+    dataset: Any
+    offsets: npt.NDArray[np.int64]
+    dtype: np.dtype[Any]
+
+    @classmethod
+    def of(cls, dataset: Any, dtype: np.dtype[Any]) -> Ragged:
+        """Return the rows of a dataset; their lengths are asked for by reading them once."""
+        step = 64
+        lengths = [len(row) for at in range(0, len(dataset), step) for row in dataset[at : at + step]]
+        return cls(dataset, np.concatenate([[0], np.cumsum(lengths)]).astype(np.int64), dtype)
+
+    @property
+    def shape(self) -> tuple[int]:
+        """Number of numbers in all rows."""
+        return (int(self.offsets[-1]),)
+
+    @property
+    def path(self) -> str:
+        """Where the dataset lies."""
+        return _place_of(self.dataset)
+
+    def __getitem__(self, key: slice) -> npt.NDArray[Any]:
+        """Return numbers ``start`` to ``stop``."""
+        start, stop, _ = key.indices(self.shape[0])
+        if stop <= start:
+            return np.empty(0, self.dtype)
+        first = int(np.searchsorted(self.offsets, start, side="right")) - 1
+        last = int(np.searchsorted(self.offsets, stop, side="left"))
+        rows = np.concatenate(list(self.dataset[first:last]))
+        return rows[start - self.offsets[first] : stop - self.offsets[first]]
 
 
 @dataclass(frozen=True)

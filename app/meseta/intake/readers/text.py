@@ -15,10 +15,10 @@ from meseta.errors import InputError
 from meseta.intake.metadata import Plain, canonical
 from meseta.intake.readers.contents import Contents, columns_of, make_channel, whole
 from meseta.intake.readers.spool import SpooledColumn
-from meseta.intake.readers.text_form import KnownForm, TextForm, decode_head, find_form, known_form
+from meseta.intake.readers.text_form import KnownForm, TextForm, decode_head, entries_of, find_form, known_form
 from meseta.intake.readers.text_rows import Columns, numbers
 from meseta.intake.readers.text_stream import put_aside
-from meseta.intake.readers.unpack import read_bytes, unpacked_blocks
+from meseta.intake.readers.unpack import members_of, read_bytes, unpacked_blocks, unpacked_members
 from meseta.intake.recording import RawChannel
 from meseta.intake.roles import guess_role, stem_of
 from meseta.intake.rows import end_to_end
@@ -47,6 +47,9 @@ class TextReader:
 
     def open(self, path: Path, settings: IntakeSettings) -> Contents:
         """Read the whole table."""
+        members = members_of(path)
+        if len(members) > 1:
+            return _from_members(path, members, settings)
         found = read_bytes(path, LARGE_BYTE)
         if found is None:
             return _large_contents(path, settings)
@@ -87,7 +90,7 @@ def _contents(data: bytes, encoding: str, form: TextForm, path: Path, settings: 
     if not rows.lengths:
         raise InputError("holds no rows of numbers", str(path), "give a table with numbers in rows")
     columns = [ArraySamples(column) for column in rows.columns]
-    table = _Table(columns, rows.lengths, lambda: _lengths(rows.columns))
+    table = _Table(columns, rows.lengths, rows.said, lambda: _lengths(rows.columns))
     return _laid_out(table, form, _doubts(data, encoding, form), settings, path)
 
 
@@ -95,10 +98,56 @@ def _large_contents(path: Path, settings: IntakeSettings) -> Contents:
     """Return the content of a large text, its numbers put aside."""
     head = next(unpacked_blocks(path, HEAD_BYTE))
     encoding, _, form = _recognised(head, path)
-    columns, lengths = put_aside(path, form, encoding)
+    columns, stretches = put_aside(path, form, encoding)
     samples = [SpooledColumn(columns, place, columns.rows) for place in range(form.columns)]
-    table = _Table(samples, lengths, lambda: columns.last_number)
+    table = _Table(samples, stretches.lengths, stretches.said, lambda: columns.last_number)
     return _laid_out(table, form, _doubts(head, encoding, form), settings, path)
+
+
+def _from_members(path: Path, members: Sequence[str], settings: IntakeSettings) -> Contents:
+    """Return the tables in a zip one after the other; what cannot be read, or has other channels, is a doubt."""
+    good: list[tuple[str, Contents]] = []
+    doubts: list[str] = []
+    for name, data in unpacked_members(path, members):
+        try:
+            found = _contents(*_unsniffed(data, path), path, settings)
+        except InputError as error:
+            doubts.append(f"'{name}' in it {error.what}")
+            continue
+        if good and _kinds(found) != _kinds(good[0][1]):
+            doubts.append(f"'{name}' in it has other channels than '{good[0][0]}' and was left out")
+        else:
+            good.append((name, found))
+    if not good:
+        raise InputError(f"holds no table that can be read ({'; '.join(doubts[:3])})", str(path), "unpack it and look")
+    first = good[0][1]
+    bases = np.concatenate([[0], np.cumsum([int(one.offsets[-1]) for _, one in good])]).astype(np.int64)
+    channels = tuple(
+        replace(channel, samples=end_to_end([one.channels[place].samples for _, one in good]))
+        for place, channel in enumerate(first.channels)
+    )
+    counts = [len(one.offsets) - 1 for _, one in good]
+    rows = [row for (_, one), count in zip(good, counts, strict=True) for row in [dict(one.metadata)] * count]
+    columns = {name: column for name, column in columns_of(rows).items() if len(np.unique(column)) > 1}
+    return Contents(
+        layout=f"{len(good)} tables in a zip; the first: {first.layout}",
+        channels=channels,
+        offsets=np.concatenate([[0], *(one.offsets[1:] + base for (_, one), base in zip(good, bases, strict=False))]),
+        record_start=np.concatenate([one.record_start for _, one in good]),
+        dataset=np.repeat(np.array([name for name, _ in good], np.str_), counts),
+        metadata=first.metadata,
+        table=columns,
+        doubts=tuple(dict.fromkeys([*doubts, *(doubt for _, one in good for doubt in one.doubts)])),
+    )
+
+
+def _unsniffed(data: bytes, path: Path) -> tuple[bytes, str, TextForm]:
+    encoding, data, form = _recognised(data, path)
+    return data, encoding, form
+
+
+def _kinds(contents: Contents) -> list[tuple[str, str, str]]:
+    return [(channel.name, channel.role, channel.unit) for channel in contents.channels]
 
 
 def _doubts(data: bytes, encoding: str, form: TextForm) -> list[str]:
@@ -129,10 +178,13 @@ def _body(data: bytes, form: TextForm, encoding: str) -> bytes:
 
 @dataclass(frozen=True)
 class _Table:
-    """Columns of numbers, the rows of each stretch of them, and how long each column is without empty cells below."""
+    """Columns of numbers, the rows of each stretch of them and the lines before it, and how long each column is without
+    empty cells below.
+    """
 
     columns: Sequence[Samples]
     lengths: list[int]
+    said: Sequence[tuple[str, ...]]
     filled: Callable[[], Sequence[int]]
 
 
@@ -155,7 +207,18 @@ def _laid_out(table: _Table, form: TextForm, doubts: list[str], settings: Intake
         offsets = np.concatenate([[0], np.cumsum(table.lengths)]).astype(np.int64)
         starts, dataset = offsets[:-1].copy(), np.full(len(table.lengths), "", np.str_)
         layout += f", {len(table.lengths)} blocks"
-    return Contents(layout, tuple(channels), offsets, starts, dataset, metadata, {}, tuple(doubts))
+    rows = _said_of_each(table, form, path)
+    return Contents(layout, tuple(channels), offsets, starts, dataset, metadata, rows, tuple(doubts))
+
+
+def _said_of_each(table: _Table, form: TextForm, path: Path) -> dict[str, npt.NDArray[Any]]:
+    """Return what lines before each stretch say where they do not all say the same ("bias_mV: 100", "bias_mV: 200")."""
+    if not any(table.said):
+        return {}
+    whole_file = canonical(form.entries, str(path))[0]
+    entries = [canonical(entries_of(lines, form.heading, form.delimiter), str(path))[0] for lines in table.said]
+    columns = columns_of([whole_file | own for own in entries])
+    return {name: column for name, column in columns.items() if len(np.unique(column)) > 1}
 
 
 def _wide_sets(names: Sequence[str], settings: IntakeSettings) -> dict[str, list[int]] | None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import csv
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -10,7 +11,7 @@ from typing import Final
 from meseta.intake.roles import guess_role
 from meseta.intake.units import is_unit
 
-__all__ = ["KnownForm", "TextForm", "decode_head", "find_form", "known_form"]
+__all__ = ["KnownForm", "TextForm", "decode_head", "entries_of", "find_form", "known_form"]
 
 _COMMENT: Final = re.compile(r"^\s*(#|%|//|!|\"#|;(?=\s*[A-Za-z]))+\s?")
 _NUMBER: Final = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([eEdD][-+]?\d+)?$|[-+]?(nan|inf|infinity)$|n/?a$|$", re.IGNORECASE)
@@ -57,6 +58,8 @@ class TextForm:
     heading: str = ""
     comment: str = ""
     doubts: tuple[str, ...] = ()
+    before: tuple[str, ...] = ()
+    """Lines before the numbers, as they stand there; before each further trace they may come again."""
 
     @property
     def numeric_heading(self) -> bool:
@@ -111,8 +114,24 @@ def decode_head(data: bytes) -> str:
 def _cells(line: str, delimiter: str) -> list[str]:
     if delimiter == " ":
         return [cell.strip("\"'") for cell in line.split()]
+    if '"' in line:  # a delimiter within quotes is none
+        quoted = next(csv.reader([line.strip()], delimiter=delimiter, skipinitialspace=True), [])
+        cells = [cell.strip() for cell in quoted]
+        return cells[:-1] if len(cells) > 1 and not cells[-1] else cells
     cells = [cell.strip().strip("\"'").strip() for cell in line.split(delimiter)]
     return cells[:-1] if len(cells) > 1 and not cells[-1] else cells
+
+
+def _heading_cells(line: str, delimiter: str, count: int) -> list[str]:
+    """Return the cells of a line of headings; between blanks, a unit in brackets belongs to the word before it."""
+    row = _cells(line, delimiter)
+    if delimiter != " " or len(row) == count:
+        return row
+    for pattern in (r'"[^"]*"|\S+(?:\s+[\[(][^\])]*[\])])?', r'"[^"]*"|\S+(?: \S+)*'):
+        found = [cell.strip("\"'") for cell in re.findall(pattern, line.replace("\t", "  "))]
+        if len(found) == count:
+            return found
+    return row
 
 
 def _is_numeric(line: str, delimiter: str, decimal: str) -> int:
@@ -194,11 +213,13 @@ def _with_headings(
     heading, comment = "", ""
     for line in reversed(before):
         match = _COMMENT.match(line)
-        row = _cells(line[match.end() :] if match else line, delimiter)
+        row = _heading_cells(line[match.end() :] if match else line, delimiter, cells)
         if match:
             comment = comment or match[1].strip('"')
         if len(row) != cells or names:
             if not match and not names and len(row) != cells:
+                continue
+            if match and not names:
                 continue
             break
         if not units and _is_units_row(row) and len(before) > 1 and not names:
@@ -206,16 +227,32 @@ def _with_headings(
             continue
         if match and not _is_heading(row, line[match.end() :]):
             continue
+        if not _is_known(row) and _better_heading(before, line, delimiter, cells):
+            if not match and any(_NUMBER.match(cell) for cell in row if cell):
+                start = max(place for place in range(start) if lines[place] == line)  # a row with a bad cell
+            continue
         names, heading = row, line
         break
+    before = [line for line in lines[:start] if line.strip()]
     first_numbers = _cells(lines[start], delimiter)
     if not names and len(first_numbers) > 2 and first_numbers == [str(n) for n in range(len(first_numbers))]:
         names, heading, start = [f"trace_{n}" for n in range(len(first_numbers))], lines[start], start + 1
     if not names and units:
         names, units = units, []
-    entries = _entries(before, heading, delimiter)
+    entries = entries_of(before, heading, delimiter)
     shape = (tuple(names), tuple(units) or ("",) * cells, cells)
-    return TextForm(delimiter, decimal, start, *shape, entries, heading, comment, tuple(doubts))
+    return TextForm(delimiter, decimal, start, *shape, entries, heading, comment, tuple(doubts), tuple(before))
+
+
+def _is_known(row: Sequence[str]) -> bool:
+    return all(guess_role(cell).role != "other" for cell in row)
+
+
+def _better_heading(before: Sequence[str], line: str, delimiter: str, cells: int) -> bool:
+    """Return whether a line further up names known quantities, so that this one ("# trace 1") is no heading."""
+    above = before[: len(before) - 1 - before[::-1].index(line)]
+    rows = [_heading_cells(_COMMENT.sub("", one), delimiter, cells) for one in above]
+    return any(len(row) == cells and _is_known(row) for row in rows)
 
 
 def _is_units_row(row: Sequence[str]) -> bool:
@@ -230,7 +267,7 @@ def _is_heading(row: Sequence[str], text: str) -> bool:
     return any(guess_role(cell).role != "other" for cell in row) or len(row) > 1
 
 
-def _entries(before: Sequence[str], heading: str, delimiter: str) -> tuple[tuple[str, str], ...]:
+def entries_of(before: Sequence[str], heading: str, delimiter: str) -> tuple[tuple[str, str], ...]:
     """Return the "key: value" lines before the numbers, with or without a comment sign."""
     found = []
     for line in before:

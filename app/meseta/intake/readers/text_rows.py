@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import lru_cache
 from pathlib import Path
 from typing import Any, Final
 
@@ -17,6 +18,7 @@ __all__ = ["Columns", "Rows", "numbers"]
 
 MANY_THREADS_BYTE: Final = 8 << 20
 _NULLS: Final = ["", "nan", "NaN", "NAN", "NA", "N/A", "n/a", "null", "-", "--", "#N/A", "1.#QNAN", "-nan"]
+_NUMBER: Final = r"(?:[-+]?\d+(?:[.,]\d+)?(?:[eE][-+]?\d+)?)"
 Columns = list[npt.NDArray[np.float64]]
 
 
@@ -40,6 +42,10 @@ class Rows:
     opens: bool = False
     closes: bool = False
     by_lines: bool = False
+    said: tuple[tuple[str, ...], ...] = ()
+    """Of each stretch, the lines before it that are like those before the first numbers."""
+    left: tuple[str, ...] = ()
+    """Such lines behind the last row."""
 
 
 def numbers(body: bytes, form: TextForm, path: Path, lines_before: int, by_lines: bool = False) -> Rows:
@@ -72,21 +78,22 @@ def numbers(body: bytes, form: TextForm, path: Path, lines_before: int, by_lines
         return (
             Rows(columns, [len(columns[0])], False, closes, True) if by_lines else _split_at_nan_rows(columns, closes)
         )
-    blocks, opens, ends = _blocks(body, form)
-    closes = closes or ends
-    if len(blocks) == 1 and not by_lines and not opens:
-        return _split_at_nan_rows(_parsed(blocks[0], form, path, lines_before), closes)
-    parts, lengths = [], []
-    for block in blocks:
-        part = _parsed(block, form, path, lines_before)
-        lines_before += block.count(b"\n") + 1
+    cut = _cut(body, form)
+    closes = closes or cut.ends
+    if len(cut.blocks) == 1 and not by_lines and not cut.begins and not cut.left:
+        return _split_at_nan_rows(_parsed(cut.blocks[0], form, path, lines_before), closes)
+    parts, lengths, said = [], [], []
+    for block, place, lines in zip(cut.blocks, cut.places, cut.said, strict=True):
+        part = _parsed(block, form, path, lines_before + body.count(b"\n", 0, place))
         if len(part[0]):
             parts.append(part)
             lengths.append(len(part[0]))
+            said.append(lines)
     if not parts:
-        return Rows([np.empty(0) for _ in range(form.columns)], [], True, True, by_lines)
+        return Rows([np.empty(0) for _ in range(form.columns)], [], True, True, by_lines, left=cut.left)
     columns = [np.concatenate([part[place] for part in parts]) for place in range(form.columns)]
-    return Rows(columns, lengths, opens, closes, by_lines or opens or len(parts) > 1)
+    by_lines = by_lines or cut.begins or len(parts) > 1
+    return Rows(columns, lengths, cut.begins, closes, by_lines, tuple(said), cut.left)
 
 
 def _lines(body: bytes) -> int:
@@ -95,29 +102,79 @@ def _lines(body: bytes) -> int:
 
 
 def _has_separators(body: bytes, form: TextForm) -> bool:
-    """Return whether headings, remarks or blank lines stand between the rows."""
-    heading, comment = form.heading.encode().strip(), form.comment.encode()
-    if heading and heading in body:
+    """Return whether lines like those before the numbers, remarks or blank lines stand between the rows."""
+    again, comment = _again(form.before), form.comment.encode()
+    if again is not None and again.search(body):
         return True
     if comment and (body.startswith(comment) or b"\n" + comment in body):
         return True
     return re.search(rb"\n[ \t]*\r?\n", body) is not None
 
 
-def _blocks(body: bytes, form: TextForm) -> tuple[list[bytes], bool, bool]:
-    """Cut the rows at blank lines and repeated headings, drop remarks; say whether it begins and ends with a cut."""
-    heading = form.heading.encode().strip()
-    if heading and heading in body:
-        body = re.sub(rb"(?m)^" + re.escape(heading) + rb"[ \t]*\r?$", b"", body)
-    if form.comment and b"\n" + form.comment.encode() in b"\n" + body:
-        sign = re.escape(form.comment.encode())
-        body = re.sub(rb"(?m)^[ \t]*" + sign + rb".*\n?", b"", body)
-    begins = re.match(rb"[ \t]*\r?\n", body) is not None
-    return (
-        [block for block in re.split(rb"(?:^|\n)(?:[ \t]*\r?\n)+", body) if block.strip()],
-        begins,
-        body.endswith(b"\n"),
+@lru_cache(maxsize=64)
+def _again(before: tuple[str, ...]) -> re.Pattern[bytes] | None:
+    """Return the pattern of lines like those before the first numbers: with other numbers, or other values of a key.
+
+    A plain row of numbers is like none of them, unless it is a heading that comes again as it is.
+    """
+    likes = []
+    for line in before:
+        text = line.strip()
+        entry = re.match(r"^([^:=\t,;]*[A-Za-z][^:=\t,;]*)[:=]", text)
+        if entry:
+            likes.append(re.escape(entry[0]) + r"[^\n]*?")
+        elif re.search(r"[^\W\d_]", text) or re.fullmatch(r"[-+\d.]+", text):
+            likes.append(_NUMBER.join(re.escape(part) for part in re.split(_NUMBER, text)))
+        elif text:
+            likes.append(re.escape(text))
+    if not likes:
+        return None
+    return re.compile(rb"(?m)^[ \t]*(?:" + "|".join(dict.fromkeys(likes)).encode() + rb")[ \t]*\r?$")
+
+
+@dataclass(frozen=True)
+class _Cut:
+    """Rows between separators: blocks of them, the byte at which each begins, and the lines before each."""
+
+    blocks: list[bytes]
+    places: list[int]
+    said: list[tuple[str, ...]]
+    begins: bool
+    ends: bool
+    left: tuple[str, ...]
+
+
+def _cut(body: bytes, form: TextForm) -> _Cut:
+    """Cut rows at blank lines and at lines like those before the first numbers; drop remarks between the rows."""
+    again = _again(form.before)
+    marks = (
+        []
+        if again is None
+        else [(m.start(), m.end(), m.group().decode("utf-8", "replace")) for m in again.finditer(body)]
     )
+    cut = _Cut([], [], [], False, False, ())
+    said: list[str] = []
+    at, begins, behind = 0, False, b""
+    for start, stop, line in [*marks, (len(body), len(body), "")]:
+        text = _without_remarks(body[at:start], form)
+        if not cut.blocks and (at > 0 or re.match(rb"[ \t]*\r?\n", text)):
+            begins = True
+        for block in re.split(rb"(?:^|\n)(?:[ \t]*\r?\n)+", text):
+            if block.strip():
+                cut.blocks.append(block)
+                cut.places.append(at + (len(body[at:start]) - len(body[at:start].lstrip())))
+                cut.said.append(tuple(said))
+                said = []
+        if line:
+            said.append(line.strip())
+        at, behind = stop, text
+    return replace(cut, begins=begins, ends=bool(said) or behind.endswith(b"\n"), left=tuple(said))
+
+
+def _without_remarks(text: bytes, form: TextForm) -> bytes:
+    if form.comment and b"\n" + form.comment.encode() in b"\n" + text:
+        text = re.sub(rb"(?m)^[ \t]*" + re.escape(form.comment.encode()) + rb".*\n?", b"", text)
+    return text
 
 
 def _split_at_nan_rows(columns: Columns, closes: bool) -> Rows:
@@ -162,6 +219,10 @@ def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int) -> Colu
         except pa.ArrowInvalid:
             found = table(_NULLS)
     except pa.ArrowInvalid as error:
+        if re.search(rb"\d[dD][-+]?\d", first) or re.search(r"'[-+.\d]+[dD][-+]?\d+'", str(error)):
+            eased = re.sub(rb"(?<=[\d.])[dD](?=[-+]?\d)", b"E", block)
+            if eased != block:
+                return _parsed(eased, form, path, lines_before)
         if str(error).startswith("Empty CSV"):
             return [np.empty(0) for _ in range(form.columns)]
         raise _in_words(error, path, lines_before) from error

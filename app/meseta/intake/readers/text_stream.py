@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import codecs
 from collections.abc import Iterator
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Final
 
@@ -13,42 +14,55 @@ from meseta.intake.readers.text_form import TextForm
 from meseta.intake.readers.text_rows import Rows, numbers
 from meseta.intake.readers.unpack import unpacked_blocks
 
-__all__ = ["put_aside"]
+__all__ = ["Stretches", "put_aside"]
 
 BLOCK_BYTE: Final = 16 << 20
 LONGEST_LINE_BYTE: Final = 64 << 20
 
 
-def put_aside(path: Path, form: TextForm, encoding: str) -> tuple[SpooledColumns, list[int]]:
-    """Return the columns of a text table, put aside, and the rows of each stretch between separators.
+@dataclass
+class Stretches:
+    """Rows of each stretch between separators, and the lines before it that are like those before the first one."""
+
+    lengths: list[int] = field(default_factory=list)
+    said: list[tuple[str, ...]] = field(default_factory=list)
+    _left: tuple[str, ...] = ()
+
+    def add(self, rows: Rows, begins: bool) -> None:
+        """Count further rows; the first stretch goes on with the one before unless something separates them."""
+        if not rows.lengths:
+            self._left += rows.left
+            return
+        said = list(rows.said) or [()] * len(rows.lengths)
+        said[0] = (*self._left, *said[0])
+        self._left = rows.left
+        first = 0
+        if self.lengths and not begins:
+            self.lengths[-1] += rows.lengths[0]
+            first = 1
+        self.lengths += rows.lengths[first:]
+        self.said += said[first:]
+
+
+def put_aside(path: Path, form: TextForm, encoding: str) -> tuple[SpooledColumns, Stretches]:
+    """Return the columns of a text table, put aside, and its stretches of rows.
 
     Raises
     ------
     InputError
         Where a line is no row of numbers, or there is no room.
     """
-    columns, lengths = SpooledColumns(path, form.columns), list[int]()
+    columns, stretches = SpooledColumns(path, form.columns), Stretches()
     lines_before, begins, by_lines = form.skip_lines, True, False
     for text in _whole_lines(path, encoding, form.skip_lines):
         rows = numbers(text, form, path, lines_before, by_lines)
         lines_before += text.count(b"\n")
-        _count(lengths, rows, begins or rows.opens)
+        stretches.add(rows, begins or rows.opens)
         begins, by_lines = rows.closes, rows.by_lines
         columns.add(rows.columns)
-    if not lengths:
+    if not stretches.lengths:
         raise InputError("holds no rows of numbers", str(path), "give a table with numbers in rows")
-    return columns, lengths
-
-
-def _count(lengths: list[int], rows: Rows, begins: bool) -> None:
-    """Add the rows of each stretch; the first goes on with the one before unless something separates them."""
-    if not rows.lengths:
-        return
-    if lengths and not begins:
-        lengths[-1] += rows.lengths[0]
-    else:
-        lengths.append(rows.lengths[0])
-    lengths += rows.lengths[1:]
+    return columns, stretches
 
 
 def _whole_lines(path: Path, encoding: str, skip_lines: int) -> Iterator[bytes]:

@@ -9,13 +9,24 @@ import io
 import lzma
 import zipfile
 import zlib
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import IO, Any, Final
 
+from natsort import natsorted, ns
+
 from meseta.errors import InputError
 
-__all__ = ["PACKED", "peek_bytes", "read_bytes", "sha256_of", "sha256_of_bytes", "unpacked_blocks"]
+__all__ = [
+    "PACKED",
+    "members_of",
+    "peek_bytes",
+    "read_bytes",
+    "sha256_of",
+    "sha256_of_bytes",
+    "unpacked_blocks",
+    "unpacked_members",
+]
 
 BOMB_RATIO: Final = 500
 BOMB_BYTE: Final = 64 << 20
@@ -46,12 +57,62 @@ def _opened(path: Path, kind: str) -> IO[bytes] | Any:
     if kind == "bzip2":
         return bz2.open(path, "rb")
     archive = zipfile.ZipFile(path)
-    members = [info for info in archive.infolist() if not info.is_dir() and not info.filename.startswith("__MACOSX")]
+    members = _plain_members(archive)
     if len(members) != 1:
         raise InputError(f"holds {len(members)} files", str(path), "unpack it and give the folder")
     if members[0].flag_bits & 1:
         raise InputError("is locked with a password", str(path), "unpack it first")
     return archive.open(members[0])
+
+
+def _plain_members(archive: zipfile.ZipFile) -> list[zipfile.ZipInfo]:
+    """Return the files of a zip, without what systems put beside them, in natural order."""
+    found = [info for info in archive.infolist() if not info.is_dir() and not info.filename.startswith("__MACOSX")]
+    return natsorted(
+        [info for info in found if not info.filename.rpartition("/")[2].startswith(".")],
+        key=lambda info: info.filename,
+        alg=ns.PATH,
+    )
+
+
+def members_of(path: Path) -> list[str]:
+    """Return the names of the files in a zip; nothing where the file is none.
+
+    Raises
+    ------
+    InputError
+        Where the zip is damaged, or would unpack beyond reason.
+    """
+    with path.open("rb") as file:
+        if packing(file.read(8)) != "zip":
+            return []
+    try:
+        with zipfile.ZipFile(path) as archive:
+            members = _plain_members(archive)
+    except (OSError, zipfile.BadZipFile, NotImplementedError, ValueError) as error:
+        raise InputError(f"is damaged zip ({error})", str(path), "pack the file again") from error
+    limit = max(BOMB_BYTE, BOMB_RATIO * path.stat().st_size)
+    if len(members) > 1 and sum(info.file_size for info in members) > limit:
+        raise InputError(f"unpacks to more than {limit >> 20} MB", str(path), "unpack it yourself if it is meant to")
+    return [info.filename for info in members]
+
+
+def unpacked_members(path: Path, names: Sequence[str]) -> Iterator[tuple[str, bytes]]:
+    """Yield name and bytes of files in a zip.
+
+    Raises
+    ------
+    InputError
+        Where one is damaged or locked.
+    """
+    try:
+        with zipfile.ZipFile(path) as archive:
+            for name in names:
+                yield name, archive.read(name)
+    except (OSError, EOFError, lzma.LZMAError, zlib.error, zipfile.BadZipFile, NotImplementedError) as error:
+        raise InputError(f"is damaged zip ({error})", str(path), "pack the file again") from error
+    except RuntimeError as error:  # a password is wanted
+        raise InputError("is locked with a password", str(path), "unpack it first") from error
 
 
 def _first_member(path: Path) -> Any:
