@@ -11,6 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from small_recordings import aligned_at, explicit_drive, log_uniform, noise_model, recording
 
+from meseta.analysis import Analysis
 from meseta.histograms import (
     DisplacementHistogram,
     Grid,
@@ -156,3 +157,58 @@ def test_a_drive_in_its_own_unit_gets_an_axis_that_fits() -> None:
     assert (in_nm[0], in_nm[-1]) == (-0.2, 0.5)
     explicit = replace(traces, drive=explicit_drive(traces, np.tile(np.arange(400.0), (30, 1))).drive)
     assert np.allclose(displacement_edges(explicit, frame().displacement_histogram, aligned_at(100.0, 100, 30)), edges)
+
+
+# -- events ----------------------------------------------------------------------------------------------------------
+
+
+def with_plateaus(falling: bool, explicit: bool) -> tuple[TraceSet, np.ndarray]:
+    """Traces whose molecular plateau ends 20 to 120 samples before the end of the trace; where it ends, in nm."""
+    random = np.random.default_rng(9)
+    stop = random.integers(280, 380, 50)
+    values = np.full((50, 400), 1e-6)
+    for row, end in enumerate(stop):
+        values[row, :100] = 2.0
+        values[row, 100:110] = np.geomspace(1e-1, 1e-4, 10)
+        values[row, 110:end] = 2e-4
+    values *= np.exp(0.05 * random.standard_normal(values.shape))
+    values += 1e-7 * random.standard_normal(values.shape)
+    step = -0.01 if falling else 0.01
+    traces = TraceSet.from_arrays(values, step_nm=step)
+    if explicit:
+        traces = TraceSet.from_arrays(values, displacement_nm=step * np.arange(400))
+    return traces, step * (stop - 0.5)
+
+
+@pytest.mark.parametrize("falling", [False, True])
+@pytest.mark.parametrize("explicit", [False, True])
+def test_aligned_where_the_molecular_plateau_ends(falling: bool, explicit: bool) -> None:
+    traces, ends = with_plateaus(falling, explicit)
+    recipe = Recipe().with_values(
+        "displacement_histogram", aligned_at="plateau_end", event_low_g0=1e-5, low_nm=-1.0, high_nm=1.0, bins=40
+    )
+    analysis, work = Analysis(traces, recipe), Work(threads=1)
+    zero = analysis.result("displacement_zero", work)
+    assert np.isfinite(zero.zero_drive).all()
+    assert np.abs(zero.zero_drive - ends).max() < 0.03
+    plane = analysis.result("displacement_histogram", work)
+    assert (plane.traces, plane.not_aligned) == (50, 0)
+    ridge = plane.ridge()
+    before = (ridge.drive > 0.1) if falling else (ridge.drive < -0.1)
+    after = (ridge.drive < -0.1) if falling else (ridge.drive > 0.1)
+    assert np.nanmedian(ridge.median_g0[before]) == pytest.approx(2e-4, rel=0.05)
+    assert np.nanmax(ridge.median_g0[after], initial=0.0) < 5e-6
+    # every column before the end holds a profile of width one, in decades
+    column = int(np.flatnonzero(before)[len(np.flatnonzero(before)) // 2])
+    assert (plane.profile(column) * plane.grid.widths).sum() == pytest.approx(1.0)
+
+
+def test_event_needs_plateaus_only_where_it_is_asked_for() -> None:
+    traces, _ = with_plateaus(False, False)
+    at_zero = Analysis(traces, Recipe())
+    other = at_zero.with_recipe(Recipe().with_values("plateaus", sensitivity=7))
+    assert at_zero.key("displacement_all") == other.key("displacement_all")
+    at_end = Recipe().with_values("displacement_histogram", aligned_at="plateau_end")
+    assert Analysis(traces, at_end).key("displacement_all") != Analysis(
+        traces, at_end.with_values("plateaus", sensitivity=7)
+    ).key("displacement_all")

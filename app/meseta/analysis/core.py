@@ -55,7 +55,7 @@ class Analysis:
             return self.decisions.key()
         step = _step(name)
         parts = [self.traces.key, name, str(step.version), self.recipe.key(step.settings)]
-        parts += [self.key(needed) for needed in step.needs]
+        parts += [self.key(needed) for needed in step.needed(self.recipe)]
         return hashlib.sha256("\n".join(parts).encode()).hexdigest()
 
     def ready(self, name: str) -> bool:
@@ -85,7 +85,7 @@ class Analysis:
         found = self._store.get(name, key)
         if found is not None:
             return found
-        inputs = {needed: self.result(needed, work) for needed in step.needs}
+        inputs = {needed: self.result(needed, work) for needed in step.needed(self.recipe)}
         work.check()
         view = SettingsView(self.recipe, step.settings)
         result = step.combine(self._parts(step, view, inputs, work), self.traces, view, inputs, work)
@@ -112,7 +112,7 @@ class Analysis:
         if step.block is None:
             raise CallError(f"'{step.title}' looks at all traces together", "preview", "ask for its result")
         inputs: dict[str, Any] = {}
-        for needed in step.needs:
+        for needed in step.needed(self.recipe):
             per_trace = needed in STEPS and STEPS[needed].block is not None and needed != "noise"
             inputs[needed] = (
                 self.preview(needed, trace, work)

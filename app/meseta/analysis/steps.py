@@ -6,7 +6,7 @@ The functions here are adapters, from the table to the functions of the rooms.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -74,6 +74,8 @@ class Step:
         Pure function of one block of traces.
     channels : tuple of str
         Channels that ``block`` reads.
+    sometimes : mapping of str to callable
+        Further steps that it takes where the callable says so of the recipe.
     """
 
     name: str
@@ -84,6 +86,11 @@ class Step:
     combine: Combine
     block: Block | None = None
     channels: tuple[str, ...] = ("conductance",)
+    sometimes: Mapping[str, Callable[[Recipe], bool]] = field(default_factory=dict)
+
+    def needed(self, recipe: Recipe) -> tuple[str, ...]:
+        """Return the steps whose results it takes under a recipe."""
+        return (*self.needs, *(name for name, wanted in self.sometimes.items() if wanted(recipe)))
 
 
 # -- adapters: from the table of steps to the functions of the rooms ------------------------------------------------
@@ -188,11 +195,18 @@ def _displacement_counts(traces: TraceSet, settings: SettingsView, inputs: Input
         kept,
         phases_of(settings.histogram.direction),
         inputs["displacement_edges"],
+        inputs["displacement_zero"],
+    )
+
+
+def _displacement_zero(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, __: Work) -> Any:
+    return histograms.displacement_zero(
+        traces, settings.displacement_histogram, inputs["alignment"], inputs.get("plateaus")
     )
 
 
 def _displacement_edges(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, __: Work) -> Any:
-    return histograms.displacement_edges(traces, settings.displacement_histogram, inputs["alignment"])
+    return histograms.displacement_edges(traces, settings.displacement_histogram, inputs["displacement_zero"])
 
 
 def _displacement_all_block(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> DisplacementHistogram:
@@ -362,10 +376,19 @@ STEPS: Mapping[str, Step] = {
             _histogram,
         ),
         Step(
+            "displacement_zero",
+            "aligning the 2D histogram",
+            1,
+            ("alignment",),
+            tuple(f"displacement_histogram.{name}" for name in ("aligned_at", "event_low_g0", "event_high_g0")),
+            _displacement_zero,
+            sometimes={"plateaus": lambda recipe: recipe.displacement_histogram.aligned_at != "zero"},
+        ),
+        Step(
             "displacement_edges",
             "choosing the displacement axis",
             1,
-            ("alignment",),
+            ("displacement_zero",),
             ("displacement_histogram",),
             _displacement_edges,
         ),
@@ -373,7 +396,7 @@ STEPS: Mapping[str, Step] = {
             "displacement_all",
             "building the 2D histogram",
             1,
-            ("noise", "alignment", "displacement_edges"),
+            ("noise", "alignment", "displacement_zero", "displacement_edges"),
             ("displacement_histogram", *_STORED, "histogram.low_g0", "histogram.high_g0"),
             _displacement_all,
             _displacement_all_block,
@@ -382,7 +405,7 @@ STEPS: Mapping[str, Step] = {
             "displacement_histogram",
             "selecting in the 2D histogram",
             1,
-            ("noise", "alignment", "selection", "displacement_edges", "displacement_all"),
+            ("noise", "alignment", "displacement_zero", "selection", "displacement_edges", "displacement_all"),
             ("displacement_histogram", *_STORED, "histogram.low_g0", "histogram.high_g0"),
             _displacement,
         ),

@@ -37,9 +37,9 @@ def summary(analysis: Analysis, bad_files: Sequence[MesetaError] = (), work: Wor
     Returns
     -------
     dict
-        ``versions``, ``inputs``, ``bad_files``, ``recipe``, ``traces``, ``noise``, ``plateaus``, ``histogram``,
-        ``displacement_histogram``, ``correlation_histogram``, ``peaks``, ``notes`` and ``warnings``; the help page
-        "results" describes each.
+        ``versions``, ``inputs``, ``bad_files``, ``recipe``, ``traces``, ``record``, ``noise``, ``plateaus``,
+        ``histogram``, ``displacement_histogram``, ``correlation_histogram``, ``peaks``, ``notes`` and ``warnings``; the
+        help page "results" describes each.
     """
     work = work or Work()
     fit = analysis.result("peaks", work)
@@ -49,6 +49,7 @@ def summary(analysis: Analysis, bad_files: Sequence[MesetaError] = (), work: Wor
         "bad_files": [{"what": bad.what, "where": bad.where, "remedy": bad.remedy} for bad in bad_files],
         "recipe": analysis.recipe.model_dump(mode="json"),
         "traces": _traces(analysis, work),
+        "record": _along_the_record(analysis, work),
         "noise": _record(analysis.noise(work), leave_arrays=True),
         "plateaus": _plateaus(analysis, work),
         "histogram": _histogram(analysis, work),
@@ -91,6 +92,23 @@ def _traces(analysis: Analysis, work: Work) -> dict[str, Any]:
         "effective_reason": resampling.reason,
         "resampling": resampling.scheme,
         "block_traces": resampling.block_traces,
+    }
+
+
+def _along_the_record(analysis: Analysis, work: Work) -> dict[str, Any]:
+    """Return what is said of the record in time: what its traces are worth, memory, drift."""
+    memory, drift = analysis.result("record_memory", work), analysis.result("drift", work)
+    return {
+        "worth": analysis.result("resampling", work).statement(),
+        "memory": memory.text,
+        "memory_traces": memory.decay_traces,
+        "drift": drift.text,
+        "drift_moved": drift.moved,
+        "drift_moved_low": drift.moved_low,
+        "drift_moved_high": drift.moved_high,
+        "drift_unit": drift.unit,
+        "drift_p_peak": drift.p_peak,
+        "drift_p_shape": drift.p_shape,
     }
 
 

@@ -39,7 +39,12 @@ from meseta.histograms.conditional import (
 from meseta.histograms.content import Content, columns_of, content_of, uhi_of
 from meseta.histograms.correlation import correlation_histogram
 from meseta.histograms.counting import count_traces, with_bins
-from meseta.histograms.displacement import displacement_counts, displacement_edges, displacement_of_selection
+from meseta.histograms.displacement import (
+    displacement_counts,
+    displacement_edges,
+    displacement_of_selection,
+    displacement_zero,
+)
 from meseta.histograms.distribution import conductance_histogram
 from meseta.histograms.lengths import LengthHistogram, Spacing, Survival, plateau_lengths, slope_histogram, spacing_of
 from meseta.histograms.pairing import Partners, opening_closing_correlation, partner_rows
@@ -107,6 +112,7 @@ __all__ = [
     "displacement_counts",
     "displacement_edges",
     "displacement_of_selection",
+    "displacement_zero",
     "drift_of",
     "hits_in_window",
     "members_of",

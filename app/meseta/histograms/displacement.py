@@ -15,11 +15,11 @@ from meseta.histograms.region import Region, region_of
 from meseta.histograms.results import DisplacementHistogram, Grid
 from meseta.intake.alignment import Alignment
 from meseta.recipe.histogram import DisplacementHistogramSettings, HistogramSettings
-from meseta.segmentation.results import NoiseModel
+from meseta.segmentation.results import NoiseModel, PlateauTable
 from meseta.traces import TraceSet
 from meseta.work import Work
 
-__all__ = ["displacement_counts", "displacement_edges", "displacement_of_selection"]
+__all__ = ["displacement_counts", "displacement_edges", "displacement_of_selection", "displacement_zero"]
 
 
 def displacement_counts(
@@ -31,6 +31,7 @@ def displacement_counts(
     kept: npt.NDArray[np.bool_],
     phases: Sequence[str],
     edges: npt.NDArray[np.float64] | None = None,
+    zero: Alignment | None = None,
 ) -> DisplacementHistogram:
     """Count the samples of the kept, aligned traces of a block by displacement and conductance.
 
@@ -49,6 +50,9 @@ def displacement_counts(
     phases : sequence of str
     edges : (columns + 1,) float64, optional
         Of the displacement axis, from :func:`displacement_edges`; ``frame`` in the drive's unit where not given.
+    zero : Alignment, optional
+        What the displacement is counted from, from :func:`displacement_zero`; the zero of ``alignment`` (on which the
+        region rests in any case) where not given.
 
     Returns
     -------
@@ -60,9 +64,10 @@ def displacement_counts(
         edges = np.linspace(frame.low_nm, frame.high_nm, frame.bins + 1)
     region = region_of(traces, settings, noise, alignment, phases)
     used = np.asarray(kept, bool) & (region.phase_end > region.phase_begin)
-    rows = np.flatnonzero(used & np.isfinite(alignment.zero_drive)).astype(np.int64)
+    origin = (zero or alignment).zero_drive
+    rows = np.flatnonzero(used & np.isfinite(origin)).astype(np.int64)
     lookup = lookup_of(grid, saturation_level(noise))
-    counts = _count(traces, rows, region, alignment.zero_drive, edges, lookup, grid.bins)
+    counts = _count(traces, rows, region, origin, edges, lookup, grid.bins)
     empty = np.empty((0, 0))
     unit = f"counts / trace / {traces.drive.unit} / {'decade' if grid.axis == 'logarithmic' else 'G0'}"
     frame_only = DisplacementHistogram(grid, edges, traces.drive.unit, counts, 0, 0, empty, unit)
@@ -99,6 +104,54 @@ def _count(
     inside = np.flatnonzero(lookup.column < bins)  # no two intervals are the same bin
     counts[:, lookup.column[inside]] = tally[0, :, inside].T.astype(np.int64) + tally[1, :, inside].T
     return counts
+
+
+def displacement_zero(
+    traces: TraceSet, frame: DisplacementHistogramSettings, alignment: Alignment, plateaus: PlateauTable | None
+) -> Alignment:
+    """Return what the displacement of every trace is counted from.
+
+    Parameters
+    ----------
+    traces : TraceSet
+    frame : DisplacementHistogramSettings
+        ``aligned_at``; with plateaus, the last one of a trace between ``event_low_g0`` and ``event_high_g0`` counts.
+    alignment : Alignment
+        Returned as it is where ``aligned_at`` is "zero".
+    plateaus : PlateauTable, optional
+        Of all traces; needed for the other events.
+
+    Returns
+    -------
+    Alignment
+        The drive half way between the last sample before the event and the first after it; NaN where a trace has none.
+    """
+    if frame.aligned_at == "zero" or plateaus is None:
+        return alignment
+    inside = (plateaus.level_g0 >= frame.event_low_g0) & (plateaus.level_g0 < frame.event_high_g0)
+    trace = plateaus.trace[inside]
+    edge = (plateaus.start if frame.aligned_at == "plateau_start" else plateaus.stop)[inside]
+    last = np.flatnonzero(np.diff(trace, append=-1))  # rows are sorted by trace, then start
+    before = np.full(traces.traces, -1, np.int64)
+    before[trace[last]] = edge[last] - 1
+    zero = np.full(traces.traces, np.nan)
+    found = np.flatnonzero(before >= 0)
+    zero[found] = _drive_after(traces, found, before[found])
+    return Alignment(zero, before, np.where(np.isfinite(zero), 0, 1).astype(np.uint8), alignment.level_g0)
+
+
+def _drive_after(
+    traces: TraceSet, rows: npt.NDArray[np.int64], sample: npt.NDArray[np.int64]
+) -> npt.NDArray[np.float64]:
+    """Return the drive half way between a sample of each row and the next one."""
+    drive = traces.drive
+    if drive.relative is None:
+        middle: npt.NDArray[np.float64] = drive.start[rows] + drive.step[rows] * (sample + 0.5)
+        return middle
+    at = traces.offsets[rows] + sample
+    ends = np.minimum(at + 2, traces.offsets[rows + 1])
+    pairs = [drive.relative.read(int(first), int(last)) for first, last in zip(at, ends, strict=True)]
+    return drive.start[rows] + np.array([float(pair.mean(dtype=np.float64)) for pair in pairs])
 
 
 def displacement_edges(

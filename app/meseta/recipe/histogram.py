@@ -139,11 +139,19 @@ class HistogramSettings(Section):
 class DisplacementHistogramSettings(Section):
     """The 2D conductance-displacement histogram."""
 
-    ordered = (("low_nm", "high_nm"),)
+    ordered = (("low_nm", "high_nm"), ("event_low_g0", "event_high_g0"))
 
     low_nm: float = setting(-0.5, "From", "Lower end of the displacement axis, zero at the rupture.", unit="nm")
     high_nm: float = setting(2.0, "To", "Upper end of the displacement axis.", unit="nm")
     bins: int = setting(250, "Displacement bins", "Number of bins of the displacement axis.", ge=2, le=4000)
+    aligned_at: Literal["zero", "plateau_start", "plateau_end"] = setting(
+        "zero",
+        "Aligned at",
+        "'zero': the zero of displacement; 'plateau_start', 'plateau_end': where the last plateau of a trace between "
+        "two conductances begins or ends (a molecular junction forms or breaks); traces without one are left out.",
+    )
+    event_low_g0: float = setting(1e-6, "Plateaus from", "With plateaus: lowest conductance.", unit="G0", gt=0)
+    event_high_g0: float = setting(0.1, "Plateaus to", "With plateaus: highest conductance.", unit="G0", gt=0)
     bins_per_decade: int = setting(50, "Bins per decade", "Of the logarithmic conductance axis.", ge=1, le=400)
     bin_width_g0: float = setting(0.02, "Bin width", "Of the linear conductance axis.", unit="G0", gt=0, le=10)
 

@@ -151,7 +151,8 @@ def histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], work: Work) ->
 
 def displacement_histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], work: Work) -> DisplacementHistogram:
     """Return the 2D histogram of some traces, exact: the engine counts the smaller of them and the others."""
-    noise, alignment, edges = (analysis.result(name, work) for name in ("noise", "alignment", "displacement_edges"))
+    names = ("noise", "alignment", "displacement_edges", "displacement_zero")
+    noise, alignment, edges, zero = (analysis.result(name, work) for name in names)
     recipe, source = analysis.recipe, analysis.traces.only("conductance")
 
     def count(span: tuple[int, int], chosen: npt.NDArray[np.bool_]) -> DisplacementHistogram:
@@ -165,6 +166,7 @@ def displacement_histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], w
             chosen[first:last],
             phases_of(recipe.histogram.direction),
             edges,
+            zero.block(first, last),
         )
 
     everything = analysis.result("displacement_all", work)
