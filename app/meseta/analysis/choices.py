@@ -194,14 +194,19 @@ def _other_sensitivities(
 
 
 def calibration_errors(calibration: Any, traces: TraceSet) -> CalibrationErrors:
-    """Return the standard errors of the calibration that were stated; an error of the offset needs a known bias."""
+    """Return the standard errors of the calibration: as stated, else as the recording shows them, else 0.
+
+    An error of the offset that is stated in ampere needs a known bias.
+    """
+    shown = intake.calibration_errors(traces)
     bias = np.abs(np.asarray(traces.table.get("bias_volt", []), float))
     bias = bias[np.isfinite(bias) & (bias > 0)]
     volt = float(np.median(bias)) if len(bias) else abs(calibration.bias_volt or 0.0)
     ampere = calibration.offset_error_ampere or 0.0
+    of_positions = shown.of_positions()
     return CalibrationErrors(
-        calibration.gain_relative_error or 0.0,
-        calibration.bias_relative_error or 0.0,
-        ampere / (volt * G0_SIEMENS) if volt else 0.0,
-        calibration.series_resistance_error_ohm or 0.0,
+        calibration.gain_relative_error or of_positions["gain_relative"],
+        calibration.bias_relative_error or of_positions["bias_relative"],
+        ampere / (volt * G0_SIEMENS) if ampere and volt else of_positions["offset_g0"],
+        calibration.series_resistance_error_ohm or of_positions["series_resistance_ohm"],
     )
