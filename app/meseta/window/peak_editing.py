@@ -96,17 +96,29 @@ class PeakEditor(QObject):
         return editable_peaks(self.settings, fit.table)
 
     def row_of(self, place: int) -> int:
-        """Return the row of the fit's table that belongs to a peak; -1 where the fit does not know it yet."""
-        fit = self.fit
-        if fit is None:
+        """Return the row of the fit's table that belongs to a peak; -1 where the fit does not know it.
+
+        A fit may leave out a peak that it was asked for (too few bins): rows then belong to the peaks nearest to them.
+        """
+        fit, starts = self.fit, self.starts()
+        if fit is None or not 0 <= place < len(starts) or (self.asked and self._session.state("peaks") != "current"):
             return -1
         rows = np.flatnonzero(np.isfinite(fit.table.position_g0))
-        current = not self.asked or self._session.state("peaks") == "current"
-        return int(rows[place]) if current and 0 <= place < len(rows) and len(rows) == len(self.starts()) else -1
+        if len(rows) == len(starts):
+            return int(rows[place])
+        begin = np.array([self.u_of(start.position_g0) for start in starts])
+        near = {int(np.abs(begin - self.u_of(float(fit.table.position_g0[row]))).argmin()): int(row) for row in rows}
+        return near.get(place, -1)
 
     def place_of(self, row: int) -> int:
         """Return the place of the peak in a row of the fit's table; -1 where it is none."""
         return next((place for place in range(len(self.starts())) if self.row_of(place) == row), -1)
+
+    @property
+    def not_fitted(self) -> str:
+        """Why a peak has no row in the fit, in words."""
+        current = self._session.state("peaks") == "current"
+        return "not fitted: no counts, or too few bins, in its range" if current else "not fitted yet"
 
     def name_of(self, place: int) -> str:
         """Return how a peak is called."""

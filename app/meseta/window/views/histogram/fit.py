@@ -141,7 +141,7 @@ class FitLayer:
         editor, row = self.editor, self.editor.row_of(place)
         fit = editor.fit
         if row < 0 or fit is None:
-            return f"begins at {typeset.conductance(editor.position_of(place), 3)}", "not fitted yet"
+            return f"begins at {typeset.conductance(editor.position_of(place), 3)}", editor.not_fitted
         table = fit.table
         text = typeset.value_with_uncertainty(
             float(table.position_g0[row]), float(table.position_low_g0[row]), float(table.position_high_g0[row]), "G0"

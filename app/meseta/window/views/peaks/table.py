@@ -237,7 +237,7 @@ class PeaksPanel(QWidget):
         if fit is not None and 0 <= row < len(fit.table):
             verdict = f"{editor.name_of(editor.chosen)}: {fit.table.status[row]}"
         elif editor.chosen >= 0:
-            verdict = f"{editor.name_of(editor.chosen)}: not fitted yet"
+            verdict = f"{editor.name_of(editor.chosen)}: {editor.not_fitted}"
         elif fit is not None and len(fit.table) and not np.isfinite(fit.table.position_g0).any():
             verdict = str(fit.table.status[0])
         self.verdict.setText(verdict)
