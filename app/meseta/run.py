@@ -36,6 +36,8 @@ RESULT_FILES = (
     "figure.svg",
     "figure.png",
     "report.html",
+    "analyses.csv",
+    "analyses.pdf",
 )
 """Every file of a result folder; a folder that holds anything else is never replaced."""
 
@@ -176,10 +178,13 @@ def run_analysis(
     bad_files: Sequence[MesetaError] = (),
     title: str = "",
     files: Sequence[str | Path] = (),
+    all_analyses: bool = False,
 ) -> RunResult:
     """Do every step, and fill ``folder`` with the result, whole or not at all.
 
     ``files`` is what the traces were read from, so that the study of the result can keep the recordings.
+    ``all_analyses`` fits the peaks under every defensible choice too: ``analyses.csv``, ``analyses.pdf``, and their
+    spread in the summary (``all_analyses``); nothing of it where no peak was fitted.
 
     Raises
     ------
@@ -217,10 +222,32 @@ def run_analysis(
             figures.save_figure(figure, partial / f"figure.{suffix}")
         work.tell("writing the result", 3, 4, "parts")
         summary = figures.summary(analysis, bad_files)
+        if all_analyses and np.isfinite(fit.table.position_g0).any():
+            summary["all_analyses"] = _write_analyses(partial, analysis, work)
         (partial / "report.html").write_text(figures.report(analysis, summary, title), encoding="utf-8")
         (partial / "summary.json").write_text(json.dumps(summary, indent=1, allow_nan=False), encoding="utf-8")
         work.tell("writing the result", 4, 4, "parts")
     return RunResult(folder, summary)
+
+
+def _write_analyses(folder: Path, analysis: Analysis, work: Work) -> list[dict[str, Any]]:
+    """Write the table and the figure of all defensible analyses; return the spread of every peak as plain rows."""
+    from meseta import figures
+    from meseta.analysis import defensible_analyses
+
+    found = defensible_analyses(analysis, work)
+    write_csv(folder / "analyses.csv", found.columns())
+    spread = found.spread()
+    pages = [
+        figures.analyses_figure(**vars(found.of_peak(str(peak))), settings=analysis.recipe.figure, title=f"peak {peak}")
+        for peak, number in zip(spread.peak, spread.analyses, strict=True)
+        if number
+    ]
+    if pages:
+        figures.save_pages(pages, folder / "analyses.pdf")
+    columns = {name: column.tolist() for name, column in spread.columns().items()}
+    rows = [{name: column[row] for name, column in columns.items()} for row in range(len(spread))]
+    return [{name: None if value != value else value for name, value in row.items()} for row in rows]
 
 
 def displacement_arrays(result: Any) -> dict[str, Any]:

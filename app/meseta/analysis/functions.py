@@ -20,6 +20,8 @@ __all__ = [
     "fit_peaks",
 ]
 
+_MOST_RULES = 4
+
 
 def find_plateaus(traces: TraceSet, recipe: Recipe | None = None, work: Work | None = None) -> PlateauTable:
     """Find the plateaus of every trace.
@@ -86,21 +88,44 @@ def fit_peaks(
 def defensible_analyses(analysis: Analysis, work: Work | None = None) -> peaks.DefensibleAnalyses:
     """Fit the peaks of an analysis under all combinations of choices that could be defended as well.
 
-    To line shape, background, fit range and bin width come other histograms: all traces instead of the selected ones,
-    another zero of displacement, another region.  Returns one row a peak and analysis, the chosen one marked.
+    To line shape, background, fit range and bin width come other histograms: without each rule of the selection,
+    plateaus found more or less eagerly where rules may ask for them, another region, another zero of displacement.
+
+    Returns
+    -------
+    DefensibleAnalyses
+        One row a peak and analysis, with 95 % intervals, the chosen one marked.
+
+    Raises
+    ------
+    CallError
+        Where no peak is fitted.
     """
-    recipe = analysis.recipe
-    others = {"as chosen": recipe}
-    if recipe.selection.rules:
-        others["no selection"] = recipe.with_values("selection", rules=[])
-    if recipe.histogram.region == "phase":
-        others["from the rupture on"] = recipe.with_values("histogram", region="after_zero")
-        others["up to the rupture"] = recipe.with_values("histogram", region="before_zero")
-    else:
-        others["whole phase"] = recipe.with_values("histogram", region="phase")
-        for factor in (0.6, 1.4):
-            level = recipe.alignment.zero_at_g0 * factor
-            others[f"zero at {level:.2g} G0"] = recipe.with_values("alignment", zero_at_g0=level)
-    made = {name: analysis.with_recipe(other).histogram(work) for name, other in others.items()}
     fit: peaks.PeakFit = analysis.result("peaks", work)
-    return peaks.defensible_analyses(made, fit.table, recipe.peaks, work)
+    made, drawn = {}, {}
+    for name, recipe in _other_recipes(analysis.recipe).items():
+        other = analysis.with_recipe(recipe)
+        made[name], drawn[name] = other.histogram(work), other.result("resampling", work)
+    return peaks.defensible_analyses(made, fit.table, analysis.recipe.peaks, work, drawn)
+
+
+def _other_recipes(recipe: Recipe) -> dict[str, Recipe]:
+    """Return the recipe as chosen, then others that could be defended, each with a name."""
+    others = {"as chosen": recipe}
+    rules = [rule for rule in recipe.selection.rules if rule.strip()]
+    for rule in rules[:_MOST_RULES]:
+        rest = [other for other in rules if other != rule]
+        others[f"without {rule.strip()}"] = recipe.with_values("selection", rules=rest)
+    if rules:
+        for step in (-1.0, 1.0):
+            value = min(max(recipe.plateaus.sensitivity + step, 0.0), 10.0)
+            others[f"sensitivity {value:g}"] = recipe.with_values("plateaus", sensitivity=value)
+    if recipe.histogram.region == "phase":
+        others["after the zero"] = recipe.with_values("histogram", region="after_zero")
+        others["up to the zero"] = recipe.with_values("histogram", region="before_zero")
+        return others
+    others["whole phase"] = recipe.with_values("histogram", region="phase")
+    for factor in (0.6, 1.4):
+        level = recipe.alignment.zero_at_g0 * factor
+        others[f"zero at {level:.2g} G0"] = recipe.with_values("alignment", zero_at_g0=level)
+    return others

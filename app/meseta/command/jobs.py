@@ -20,6 +20,7 @@ from meseta.command.frame import (
     tell,
     working,
 )
+from meseta.command.physics import spread_lines
 from meseta.command.printed import check_lines, result_lines, study_answer, study_lines
 from meseta.errors import CallError, Cancelled, InputError, MesetaError
 from meseta.work import Work
@@ -89,6 +90,11 @@ def peek(
 @click.argument("files", nargs=-1, required=True, type=click.Path())
 @click.option("--out", "folder", required=True, type=click.Path(path_type=Path), help="Folder for the result.")
 @click.option("--each", is_flag=True, help="Every file or folder is a recording of its own, in DIR/name/.")
+@click.option(
+    "--all-analyses",
+    is_flag=True,
+    help="Fit the peaks under every defensible choice too: analyses.csv, analyses.pdf.",
+)
 @recipe_options
 @strict_option
 @json_option
@@ -96,6 +102,7 @@ def run(
     files: tuple[str, ...],
     folder: Path,
     each: bool,
+    all_analyses: bool,
     recipe_path: str | None,
     preset: str | None,
     settings: tuple[str, ...],
@@ -108,11 +115,11 @@ def run(
     with working() as work:
         if not each:
             check_output(folder)
-            outcome = run_one(files, folder, (recipe_path, preset, settings), strict, work)
-            tell(as_json, outcome.summary | {"out": str(folder)}, result_lines(outcome.summary, outcome.folder))
+            outcome = run_one(files, folder, (recipe_path, preset, settings), strict, work, all_analyses)
+            tell(as_json, outcome.summary | {"out": str(folder)}, _lines(outcome))
             return
-        summaries, bad = _run_each(files, folder, (recipe_path, preset, settings), strict, work)
-    lines = [line for one in summaries for line in (one.folder.name, *result_lines(one.summary, one.folder))]
+        summaries, bad = _run_each(files, folder, (recipe_path, preset, settings), strict, work, all_analyses)
+    lines = [line for one in summaries for line in (one.folder.name, *_lines(one))]
     answer = {
         "out": str(folder),
         "recordings": {one.folder.name: one.summary for one in summaries},
@@ -121,7 +128,14 @@ def run(
     tell(as_json, answer, lines)
 
 
-def run_one(files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bool, work: Work) -> RunResult:
+def _lines(outcome: RunResult) -> list[str]:
+    """Return what a finished run prints."""
+    return [*result_lines(outcome.summary, outcome.folder), *spread_lines(outcome.summary.get("all_analyses", []))]
+
+
+def run_one(
+    files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bool, work: Work, all_analyses: bool = False
+) -> RunResult:
     """Do the whole job on one recording or study; errors after work began have exit code 1."""
     from meseta.run import run_analysis
 
@@ -129,7 +143,7 @@ def run_one(files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bo
     sources = analysis.traces.sources
     title = Path(sources[0].name).stem if len(sources) == 1 else f"{len(sources)} recordings"
     try:
-        return run_analysis(analysis, folder, work, bad, title, files)
+        return run_analysis(analysis, folder, work, bad, title, files, all_analyses)
     except MesetaError as error:
         raise _later(error) from error
 
@@ -142,7 +156,7 @@ def _later(error: MesetaError) -> MesetaError:
 
 
 def _run_each(
-    files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bool, work: Work
+    files: Sequence[str], folder: Path, choice: RecipeChoice, strict: bool, work: Work, all_analyses: bool
 ) -> tuple[list[RunResult], list[MesetaError]]:
     from meseta import intake
 
@@ -151,7 +165,7 @@ def _run_each(
     for path in intake.expand(files):
         name = _free_name(Path(path).name.split(".")[0] or "recording", {one.folder.name for one in done})
         try:
-            done.append(run_one([str(path)], folder / name, choice, strict, work))
+            done.append(run_one([str(path)], folder / name, choice, strict, work, all_analyses))
         except Cancelled:
             raise
         except MesetaError as error:

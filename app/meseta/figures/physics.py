@@ -97,6 +97,7 @@ def analyses_figure(
     choices: Mapping[str, Sequence[str]],
     chosen: int,
     settings: FigureSettings,
+    title: str = "",
 ) -> Figure:
     """Draw the headline number of all defensible analyses, in the order of its value, over the choices that made it.
 
@@ -109,6 +110,8 @@ def analyses_figure(
     chosen : int
         Row of the analysis that is reported; marked with a diamond and a dashed line.
     settings : FigureSettings
+    title : str
+        What the position is of.
 
     Raises
     ------
@@ -133,6 +136,8 @@ def analyses_figure(
         lower = figure.add_axes((left / width, bottom / height, share, grid / height))
         _values(upper, position, np.asarray(position_low_g0, float), np.asarray(position_high_g0, float), order, chosen)
         _grid(lower, choices, order, chosen)
+        if title:
+            upper.set_title(title, loc="left", pad=3)
         figure.draw_without_rendering()
     return figure
 
