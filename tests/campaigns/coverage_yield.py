@@ -24,7 +24,7 @@ def main(experiments: int, traces: int) -> None:
         for number in range(experiments):
             seed = int(1000 * share) * 1000 + number
             # the efficiency is measured anew for every experiment: its error is in the interval
-            found = experiment(share, traces, seed, efficiency(traces, 900_000 + seed, work), work)
+            found = experiment(share, traces, seed, efficiency(2 * traces, 900_000 + seed, work), work)
             held.append(found.share_low <= share <= found.share_high)
             limits.append(share <= found.upper_limit)
             shares.append(found.share)

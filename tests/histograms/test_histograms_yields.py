@@ -18,7 +18,7 @@ from meseta.work import Work
 def test_planted_yields_come_back_from_the_samples() -> None:
     """50, 20, 5 and 0 %, two recordings of 200 traces each: 8 intervals of 95 %, of which 6 hold (p = 0.994)."""
     work = Work(threads=2)
-    known = efficiency(400, 7, work)
+    known = efficiency(600, 7, work)
     assert 0.5 < known.share < 0.8
     held = []
     for share in SHARES:
