@@ -25,6 +25,7 @@ KERNEL_MODULES = (
     "meseta.segmentation.noise_kernels",
     "meseta.segmentation.kernels",
     "meseta.segmentation.stretch_kernels",
+    "meseta.segmentation.joining_kernels",
     "meseta.segmentation.finder_kernels",
     "meseta.segmentation.measure_kernels",
     "meseta.histograms.kernels",

@@ -6,7 +6,6 @@ import itertools
 import math
 import re
 from collections.abc import Sequence
-from dataclasses import fields
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -154,17 +153,7 @@ def decay_lines(result: Decay) -> list[str]:
 
 def expectation_answer(found: Expectation) -> dict[str, Any]:
     """Return what the plateau finder does as plain values; None where nothing can be told."""
-    answer = {}
-    for field in fields(found):
-        value = getattr(found, field.name)
-        answer[field.name] = _plain(value.tolist() if hasattr(value, "tolist") else value)
-    return answer
-
-
-def _plain(value: Any) -> Any:
-    if isinstance(value, list):
-        return [_plain(entry) for entry in value]
-    return None if isinstance(value, float) and not math.isfinite(value) else value
+    return found.plain()
 
 
 def expectation_lines(found: Expectation) -> list[str]:

@@ -5,12 +5,15 @@ from __future__ import annotations
 import math
 from dataclasses import asdict, fields, replace
 from pathlib import Path
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 import click
 
 from meseta.command.frame import json_option, open_analysis, recipe_options, tell, working
 from meseta.errors import CallError
+
+if TYPE_CHECKING:
+    from meseta.segmentation import Expectation
 
 __all__ = ["decay", "example", "expect", "sheet", "simulate"]
 
@@ -47,6 +50,9 @@ def example(folder: Path, as_json: bool) -> None:
     help="Plateaus planted for each conductance and length.",
 )
 @click.option("--seed", default=0, show_default=True, type=click.IntRange(0), help="Of the random choice of traces.")
+@click.option(
+    "--out", "out_path", type=click.Path(path_type=Path), help="Keep the result: .json (all) or .csv (table)."
+)
 @recipe_options
 @json_option
 def expect(
@@ -55,6 +61,7 @@ def expect(
     slope_decades: float,
     plateaus_each: int,
     seed: int,
+    out_path: Path | None,
     recipe_path: str | None,
     preset: str | None,
     settings: tuple[str, ...],
@@ -65,6 +72,8 @@ def expect(
     from meseta.analysis import phases_of
     from meseta.command.printed import expectation_answer, expectation_lines
 
+    if out_path is not None and out_path.suffix.lower() not in (".json", ".csv"):
+        raise CallError(f"'{out_path.name}' ends in neither .json nor .csv", "--out", "name the file so")
     with working() as work:
         analysis, _ = open_analysis([study_path], (recipe_path, preset, settings), False, work)
         found = segmentation.expect(
@@ -79,7 +88,24 @@ def expect(
             seed=seed,
             work=work,
         )
+    if out_path is not None:
+        _keep_expectation(found, out_path)
     tell(as_json, expectation_answer(found), expectation_lines(found))
+
+
+def _keep_expectation(found: Expectation, path: Path) -> None:
+    """Write what the plateau finder does: everything as JSON, or the grid as CSV."""
+    import json
+
+    from meseta.tables import write_csv
+
+    try:
+        if path.suffix.lower() == ".csv":
+            write_csv(path, found.columns())
+        else:
+            path.write_text(json.dumps(found.plain(), indent=1) + "\n", encoding="utf-8")
+    except OSError as error:
+        raise CallError(f"cannot write: {error.strerror or error}", str(path), "choose another place") from error
 
 
 @click.command()

@@ -89,6 +89,14 @@ def _samples(analysis: Analysis, work: Work) -> Iterator[str]:
             yield f"{typeset.percent(number, everything)} of the samples {text}."
     if not counted:
         yield "No sample lies in the range of the histogram."
+    plateaus = analysis.plateaus(work)
+    gaps = int(np.sum(plateaus.missing_samples > 0))
+    if gaps > _SHARE * len(plateaus):
+        yield (
+            f"{typeset.integer(gaps)} of {typeset.integer(len(plateaus))} plateaus have missing or untrusted samples "
+            f"inside (at most {typeset.integer(int(plateaus.longest_gap_samples.max()))} in a row; column "
+            "missing_samples of plateaus.csv)."
+        )
     for note in bin_notes(histogram.grid, noise):
         yield f"{note[:1].upper()}{note[1:]}."
 

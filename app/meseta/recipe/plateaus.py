@@ -55,11 +55,20 @@ class PlateauSettings(Section):
     join_decades: float = setting(
         0.15,
         "Join within",
-        "Neighbouring stretches below 0.1 G0 whose conductance differs by less are one plateau; above, stretches are "
-        "joined where the step between them is within their noise.",
+        "Neighbouring stretches whose conductance differs by less than this and by less than 'Join within, metal', or "
+        "by less than their noise, are one plateau.",
         unit="decades",
         ge=0,
         le=1,
+    )
+    join_g0: float = setting(
+        0.25,
+        "Join within, metal",
+        "The same as a difference: a step of less than this is no change in the number of atoms. Matters above about "
+        "0.5 G0, where it is the smaller of the two.",
+        unit="G0",
+        ge=0,
+        le=10,
     )
     switch_decades: float = setting(
         0.35,

@@ -1,7 +1,8 @@
 """Noise model, change points, plateaus, measures of every trace."""
 
 from meseta.segmentation.change_points import optimal_partition, partition_cost
-from meseta.segmentation.expectation import Expectation, expect
+from meseta.segmentation.expectation import expect
+from meseta.segmentation.expected import Expectation
 from meseta.segmentation.finder import find_plateaus
 from meseta.segmentation.measures import measure_traces
 from meseta.segmentation.noise import NoiseStatistics, noise_block, noise_model

@@ -104,7 +104,11 @@ def _row(trace: int, g: Floats, begin: int, end: int) -> list[float]:
         spread = float(np.std(y - slope * x - offset))
     censored = 1.0 if end >= len(g) else 0.0
     level = float(np.nanmean(inside))
-    return [trace, begin, end, level, slope, spread, np.nan, np.nan, np.nan, censored, 0.0, np.nan]
+    missing = ~np.isfinite(inside)
+    gap = max((stop - start for start, stop in _runs(missing)), default=0)
+    return [
+        trace, begin, end, level, slope, spread, np.nan, np.nan, np.nan, censored, 0.0, np.nan, int(missing.sum()), gap,
+    ]  # fmt: skip
 
 
 def _rows(rows: list[list[float]]) -> Floats:

@@ -1,99 +1,32 @@
-"""What the plateau finder does on traces like these: plateaus of known make are planted, and looked for.
-
-A planted plateau is a conductance in parallel with what the trace shows anyway, so noise of the floor, pickup, leakage
-and the tunnelling beneath it are the recording's own; only its relative noise
-and the rise of the amplifier come from the noise model.
-"""
+"""What the plateau finder does on traces like these: plateaus of known make are planted, and looked for."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
 import numpy.typing as npt
-from scipy.ndimage import uniform_filter1d
-from scipy.signal import lfilter
 
 from meseta.errors import CallError
 from meseta.intake.alignment import Alignment
 from meseta.recipe.plateaus import PlateauSettings
+from meseta.segmentation.expected import Expectation, poisson_interval, wilson_interval
 from meseta.segmentation.finder import METAL_FROM_G0, find_plateaus
-from meseta.segmentation.noise import phase_bounds, runs_backward
+from meseta.segmentation.planting import plant
 from meseta.segmentation.results import NoiseModel, PlateauTable
-from meseta.traces import Channel, TraceSet
+from meseta.traces import TraceSet
 from meseta.work import Work
 
-__all__ = ["Expectation", "expect", "plant"]
+__all__ = ["expect"]
 
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
 
 LEVEL_WITHIN_DECADES: Final = 0.1
 OVERLAP: Final = 0.5
-NORMAL_95: Final = 1.959963984540054
-SMOOTHING: Final = 9
-"""Samples of the running mean in which the place of a plateau is looked for."""
 DETECTED: Final = 0.9
 """Efficiency at which a plateau counts as detectable."""
-
-
-@dataclass(frozen=True)
-class Expectation:
-    """Detection of planted plateaus over conductance and length, at the present settings.
-
-    A planted plateau is found if one found plateau overlaps it by at least half of their union and its conductance lies
-    within 0.1 decade.
-
-    Attributes
-    ----------
-    conductance_g0 : (k,) float64
-    length : (m,) float64
-        In ``drive_unit``.
-    slope_decades : float
-        Slope of the planted plateaus, decades per drive unit.
-    planted, found : (k, m) int64
-    efficiency, efficiency_low, efficiency_high : (k, m) float64
-        found / planted with the 95 % interval of Wilson (1927); NaN where none was planted.
-    level_bias_decades, length_bias : (k, m) float64
-        Median of found minus planted; NaN where none was found.
-    limit_g0 : (m,) float64
-        Lowest conductance from which on the efficiency is at least 0.9; NaN where there is none.
-    false_a_trace, false_low, false_high : float
-        Plateaus below 0.1 G0 found in the traces as they are, with the 95 % interval of a Poisson count; an upper bound
-        where the traces are not known to be blank.
-    traces : int
-        Traces that took part.
-    blank : bool
-        Whether the traces were stated to be blank.
-    """
-
-    conductance_g0: Floats
-    length: Floats
-    drive_unit: str
-    slope_decades: float
-    planted: Integers
-    found: Integers
-    efficiency: Floats
-    efficiency_low: Floats
-    efficiency_high: Floats
-    level_bias_decades: Floats
-    length_bias: Floats
-    limit_g0: Floats
-    false_a_trace: float
-    false_low: float
-    false_high: float
-    traces: int
-    blank: bool
-
-    def efficiency_at(self, conductance_g0: float, length: float) -> float:
-        """Return the efficiency interpolated in log conductance and length; NaN beyond the grid."""
-        from scipy.interpolate import RegularGridInterpolator
-
-        grid = (np.log10(self.conductance_g0), self.length)
-        between = RegularGridInterpolator(grid, self.efficiency, bounds_error=False)
-        return float(between((np.log10(conductance_g0), length)))
 
 
 def expect(
@@ -117,7 +50,7 @@ def expect(
     ----------
     traces : TraceSet
         The user's own, blank or tunnelling-only where ``blank`` says so; else those without a plateau below 0.1 G0
-        are used.
+        are used.  They are read block by block.
     settings, noise, alignment, phases
         As for :func:`~meseta.segmentation.find_plateaus`.
     conductance_g0, length : (k,), (m,) array_like, optional
@@ -136,9 +69,9 @@ def expect(
         Where no trace is fit to plant in.
     """
     work = work or Work()
-    plain = find_plateaus(traces, settings, noise, alignment, phases)
-    molecules = plain.take(plain.level_g0 < METAL_FROM_G0)
-    fit = np.ones(traces.traces, bool) if blank else ~np.isin(np.arange(traces.traces), molecules.trace)
+    traces = traces.only("conductance")
+    molecules = _molecules(traces, settings, noise, alignment, phases, work)
+    fit = (molecules == 0) | blank
     fit &= alignment.zero_sample >= 0
     rows = np.flatnonzero(fit)
     if not len(rows):
@@ -154,17 +87,22 @@ def expect(
         work.tell("planting plateaus", cell, len(levels) * len(lengths), "cells")
         chosen = np.sort(rng.permutation(rows)[:each])
         level, long = float(levels[a]), float(lengths[b])
-        part, start, stop = plant(traces, chosen, level, long, slope_decades, noise, phases, rng)
-        table = find_plateaus(part, settings, noise, _taken(alignment, chosen), phases)
-        away, longer = _matched(table, start, stop, level, part)
-        planted[a, b], found[a, b] = int((stop > start).sum()), len(away)
-        if len(away):
+        away: list[float] = []
+        longer: list[float] = []
+        for rows_now in _parts(chosen, traces.lengths, work.block_samples):
+            part, start, stop = plant(traces, rows_now, level, long, slope_decades, noise, phases, rng)
+            table = find_plateaus(part, settings, noise, _taken(alignment, rows_now), phases)
+            more_away, more_longer = _matched(table, start, stop, level, part)
+            away, longer = away + more_away, longer + more_longer
+            planted[a, b] += int((stop > start).sum())
+        found[a, b] = len(away)
+        if away:
             level_bias[a, b], length_bias[a, b] = float(np.median(away)), float(np.median(longer))
-    low, high = _wilson(found, planted)
+    low, high = wilson_interval(found, planted)
     with np.errstate(invalid="ignore", divide="ignore"):
         efficiency = found / planted
-    false = len(molecules) if blank else 0
-    false_low, false_high = _poisson(false)
+    false = int(molecules[rows].sum()) if blank else 0
+    false_low, false_high = poisson_interval(false)
     return Expectation(
         conductance_g0=levels,
         length=lengths,
@@ -186,76 +124,29 @@ def expect(
     )
 
 
-def plant(
+def _molecules(
     traces: TraceSet,
-    rows: Integers,
-    level_g0: float,
-    length: float,
-    slope_decades: float,
+    settings: PlateauSettings,
     noise: NoiseModel,
+    alignment: Alignment,
     phases: Sequence[str],
-    rng: np.random.Generator,
-) -> tuple[TraceSet, Integers, Integers]:
-    """Return the chosen traces with a plateau planted in each, and its range of samples.
-
-    The plateau begins where the trace falls below its conductance for the last time; the stretch in which the trace
-    falls on to a twentieth of that is left out, as the bridge forms at once (its samples are made up at the end by the
-    trace's own last ones).  A trace too short for the plateau stays as it is, with an empty range.
-    """
-    part = traces.take(rows)
-    begin, end = phase_bounds(part, phases)
-    backward = runs_backward(phases)
-    drive = part.drive_values(0, part.traces)
-    values = part.conductance.astype(np.float64)
-    start, stop = np.zeros(len(rows), np.int64), np.zeros(len(rows), np.int64)
-    for k in range(len(rows)):
-        span = slice(int(begin[k]), int(end[k]))
-        order = slice(None, None, -1) if backward else slice(None)
-        g = values[span][order]
-        step = abs(drive[span][-1] - drive[span][0]) / max(len(g) - 1, 1) if len(g) > 1 else np.nan
-        samples = round(length / step) if step > 0 else 0
-        first, late = _place(g - noise.floor_g0, level_g0, noise.floor_sigma_g0)
-        if samples < 2 or late + samples > len(g):
-            continue
-        g = np.concatenate([g[:first], g[late:], g[::-1][: late - first]])
-        g[first : first + samples + 64] += _plateau(level_g0, samples, step * slope_decades, noise, rng)[
-            : len(g) - first
-        ]
-        values[span] = g[order]
-        inside = (len(g) - first - samples, len(g) - first) if backward else (first, first + samples)
-        start[k], stop[k] = (int(begin[k] - part.offsets[k]) + edge for edge in inside)
-    channels = {"conductance": Channel.of(values, "G0")}
-    return replace(part, channels=channels, key=f"{part.key}+planted"), start, stop
+    work: Work,
+) -> Integers:
+    """Return the number of plateaus below 0.1 G0 in each trace as it is."""
+    counts = np.zeros(traces.traces, np.int64)
+    spans = traces.blocks(work)
+    for done, (first, last) in enumerate(spans):
+        work.tell("looking at the traces as they are", done, len(spans), "blocks")
+        block = traces.block(first, last)
+        table = find_plateaus(block, settings, noise, _taken(alignment, np.arange(first, last)), phases)
+        np.add.at(counts, first + table.trace[table.level_g0 < METAL_FROM_G0], 1)
+    return counts
 
 
-def _place(g: Floats, level: float, sigma: float) -> tuple[int, int]:
-    """Return the sample at which the trace falls below the level, and below a twentieth of it or the floor."""
-    smooth = uniform_filter1d(np.where(np.isfinite(g), g, 0.0), SMOOTHING)
-    above = np.flatnonzero(smooth >= level)
-    first = int(above[-1]) + 1 if len(above) else len(g)
-    away = np.flatnonzero(smooth[first:] < max(0.05 * level, sigma))
-    return first, first + int(away[0]) if len(away) else len(g)
-
-
-def _plateau(level: float, samples: int, slope: float, noise: NoiseModel, rng: np.random.Generator) -> Floats:
-    """Return a plateau and 64 samples after it: relative noise of the recording, edges as slow as its amplifier."""
-    shape = np.zeros(samples + 64)
-    x = np.arange(samples) - 0.5 * (samples - 1)
-    floor = noise.floor_sigma_g0
-    single = float(noise.sigma(level)) ** 2 - floor**2
-    white = min(float(np.interp(level, noise.level_g0, noise.white_g0)) ** 2, max(single, 0.0)) if single > 0 else 0.0
-    slow = max(single - white, 0.0)
-    relative = np.sqrt(white) * rng.standard_normal(samples) + np.sqrt(slow) * _slow_noise(samples, rng)
-    shape[:samples] = level * 10 ** (slope * x) * (1 + relative / level)
-    keep = float(np.exp(-2.2 / max(noise.rise_samples, 1e-9))) if noise.rise_samples > 1 else 0.0
-    return np.asarray(lfilter([1 - keep], [1, -keep], shape), float)
-
-
-def _slow_noise(samples: int, rng: np.random.Generator, kept: float = 0.9) -> Floats:
-    """Return correlated noise of unit variance (first-order autoregressive)."""
-    fresh = rng.standard_normal(samples) * np.sqrt(1 - kept**2)
-    fresh[0] /= np.sqrt(1 - kept**2)
-    return np.asarray(lfilter([1.0], [1.0, -kept], fresh), float)
+def _parts(rows: Integers, lengths: Integers, samples: int) -> list[Integers]:
+    """Return the rows in parts of about ``samples`` samples each."""
+    part = np.cumsum(lengths[rows]) // max(samples, 1)
+    return np.split(rows, np.flatnonzero(np.diff(part)) + 1)
 
 
 def _grid(
@@ -282,7 +173,7 @@ def _taken(alignment: Alignment, rows: Integers) -> Alignment:
 
 def _matched(
     table: PlateauTable, start: Integers, stop: Integers, level: float, traces: TraceSet
-) -> tuple[Floats, Floats]:
+) -> tuple[list[float], list[float]]:
     """Return level error (decades) and length error (drive) of every planted plateau that was found."""
     away, longer = [], []
     drive_step = np.abs(traces.drive_values(0, 1)[1:2] - traces.drive_values(0, 1)[:1])
@@ -296,25 +187,7 @@ def _matched(
                 away.append(float(np.log10(table.level_g0[row] / level)))
                 longer.append(float(table.stop[row] - table.start[row] - stop[trace] + start[trace]) * step)
                 break
-    return np.array(away), np.array(longer)
-
-
-def _wilson(found: Integers, planted: Integers) -> tuple[Floats, Floats]:
-    """Return the 95 % score interval of a share (Wilson, J. Am. Stat. Assoc. 22, 209 (1927))."""
-    z2 = NORMAL_95**2
-    with np.errstate(invalid="ignore", divide="ignore"):
-        share = found / planted
-        middle = (share + z2 / (2 * planted)) / (1 + z2 / planted)
-        half = NORMAL_95 * np.sqrt(share * (1 - share) / planted + z2 / (4 * planted**2)) / (1 + z2 / planted)
-    return np.maximum(middle - half, 0.0), np.minimum(middle + half, 1.0)
-
-
-def _poisson(count: int) -> tuple[float, float]:
-    """Return the exact 95 % interval of a Poisson mean (Garwood, Biometrika 28, 437 (1936))."""
-    from scipy.stats import chi2
-
-    low = 0.5 * float(chi2.ppf(0.025, 2 * count)) if count else 0.0
-    return low, 0.5 * float(chi2.ppf(0.975, 2 * count + 2))
+    return away, longer
 
 
 def _limits(levels: Floats, efficiency: Floats) -> Floats:

@@ -15,7 +15,7 @@ from meseta.segmentation.detectors import derivative_rows, level_rows
 from meseta.segmentation.noise import phase_bounds, runs_backward, trusted_samples
 from meseta.segmentation.results import NoiseModel, PlateauTable
 from meseta.segmentation.scale import scale_of
-from meseta.traces import TraceSet
+from meseta.traces import Quality, TraceSet
 
 __all__ = ["find_plateaus"]
 
@@ -83,16 +83,26 @@ def _search(
 ) -> Floats:
     """Return the rows of :func:`meseta.segmentation.finder_kernels.find`."""
     rules = _rules(settings, noise, traces.drive.is_displacement, steps)
-    conductance, trusted = np.ascontiguousarray(traces.conductance), trusted_samples(traces)
+    conductance, faults = np.ascontiguousarray(traces.conductance), _faults(traces)
     if settings.method == "change_points":
         room = max(64, 8 * traces.traces)
-        rows: Floats = kernels.find(conductance, trusted, starts, stops, backward, steps, scale_of(noise), rules, room)
+        rows: Floats = kernels.find(conductance, faults, starts, stops, backward, steps, scale_of(noise), rules, room)
         return rows
+    trusted = faults == 0
     pieces = [_above_floor(conductance, trusted, *span, backward, noise) for span in zip(starts, stops, strict=True)]
     if settings.method == "derivative":
         smoothing = max(settings.smoothing_samples, int(np.ceil(2 * noise.rise_samples)))
         return derivative_rows(pieces, steps, rules, noise, smoothing)
     return level_rows(pieces, steps, rules, np.asarray(settings.levels_g0))
+
+
+def _faults(traces: TraceSet) -> npt.NDArray[np.uint8]:
+    """Return for each sample of the block whether it is not trusted, or saturated; empty where none is."""
+    trusted = trusted_samples(traces)
+    if traces.quality is None or trusted.all():
+        return np.empty(0, np.uint8)
+    saturated = (traces.quality.read(0, traces.samples) & Quality.SATURATED) > 0
+    return np.where(saturated, kernels.CLIPPED, ~trusted).astype(np.uint8)
 
 
 def _above_floor(
@@ -126,6 +136,7 @@ def _rules(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, steps: Flo
         bound=settings.slope_fraction * tunnelling,
         tunnelling=tunnelling,
         join=settings.join_decades,
+        join_metal=settings.join_g0,
         switch=settings.switch_decades,
         metal_from=METAL_FROM_G0,
         metal_switch=METAL_SWITCH_G0,
@@ -207,6 +218,8 @@ def _table(
         number=_numbers(trace),
         score=rows[:, 11],
         telegraph=rows[:, 10] > 0,
+        missing_samples=rows[:, 12].astype(np.int64),
+        longest_gap_samples=rows[:, 13].astype(np.int64),
     )
 
 

@@ -9,7 +9,7 @@ import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
-__all__ = ["merge_moments", "partition", "partition_lines"]
+__all__ = ["fill_moments", "merge_moments", "partition", "partition_lines"]
 
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
@@ -222,7 +222,7 @@ def merge_moments(a: Floats, b: Floats) -> None:
 
 
 @kernel
-def _moments(values: Floats, weights: Floats, begin: int, end: int, out: Floats) -> None:
+def fill_moments(values: Floats, weights: Floats, begin: int, end: int, out: Floats) -> None:
     """Fill the moments of samples ``begin`` to ``end``; x is the sample number."""
     out[:] = 0.0
     weight, x, y = 0.0, 0.0, 0.0
@@ -272,7 +272,7 @@ def partition_lines(
     pieces = np.empty((k, 6))
     begin = 0
     for j in range(k):
-        _moments(values, weights, begin, candidates[j], pieces[j])
+        fill_moments(values, weights, begin, candidates[j], pieces[j])
         begin = candidates[j]
     entry = np.zeros(k + 1)
     came_from = np.zeros(k + 1, np.int64)

@@ -93,7 +93,9 @@ class PlateauTable(Table):
     ``noise_decades`` the robust spread of log10 G about that slope, ``kind`` one of :data:`PLATEAU_KINDS`,
     ``censored`` "" or what cut the plateau ("ramp", "floor", "saturation"), ``number`` counts plateaus in the trace
     from the last one (1 = last), ``score`` lies in 0..1, ``jump_before_decades``/``jump_after_decades`` are NaN at the
-    end of a trace, ``telegraph`` is true for a plateau that switches between close levels.
+    end of a trace, ``telegraph`` is true for a plateau that switches between close levels.  ``missing_samples`` counts
+    samples within the plateau that are missing or not trusted (they have no weight), ``longest_gap_samples`` the
+    longest run of them; a plateau neither begins nor ends with one.
     """
 
     trace: Integers
@@ -117,6 +119,8 @@ class PlateauTable(Table):
     number: Integers
     score: Floats
     telegraph: npt.NDArray[np.bool_]
+    missing_samples: Integers
+    longest_gap_samples: Integers
 
     @classmethod
     def joined(cls, parts: Sequence[PlateauTable], first_traces: Sequence[int]) -> PlateauTable:
