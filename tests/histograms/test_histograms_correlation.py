@@ -10,7 +10,7 @@ from hypothesis.extra import numpy as hnp
 from small_recordings import counted, log_uniform, matrix_of, noise_model, recording
 
 from meseta.histograms import Grid, correlation_histogram, kernels, shifted_correlation
-from meseta.histograms.correlation import correlation_of, largest_by_chance, products
+from meseta.histograms.correlation import correlation_notes, correlation_of, largest_by_chance, products
 from meseta.histograms.grids import logarithmic_edges
 from meseta.recipe import Recipe
 from meseta.work import Work
@@ -128,6 +128,21 @@ def test_a_fixed_record_length_makes_negative_correlations_of_its_own() -> None:
     beside = correlation_of(counts)[np.triu_indices(5, 1)]
     # multinomial: -p/(1 - p) for equal shares p = 1/5
     assert beside == pytest.approx(np.full(10, -0.25), abs=4 / np.sqrt(4000))
+
+
+def test_what_makes_correlations_of_its_own_is_said() -> None:
+    random = np.random.default_rng(14)
+    independent = random.poisson(20, (600, 12)).astype(float)
+    assert correlation_notes(independent) == ""
+    fixed = random.multinomial(240, np.full(12, 1 / 12), size=600).astype(float)
+    assert "same number of samples" in correlation_notes(fixed)
+    drifting = random.poisson(20 * np.linspace(0.7, 1.3, 600)[:, None] * np.ones(12)).astype(float)
+    assert "drift along the record" in correlation_notes(drifting)
+    # and it is said where the map is looked at
+    matrix = matrix_of(fixed, Grid(logarithmic_edges(-8, 4, 4), "logarithmic"))
+    recipe = Recipe().with_values("correlation", bins_per_decade=4, low_g0=0.01, permutations=0)
+    found = correlation_histogram(matrix, matrix.used, recipe.correlation, noise_model(), 1, Work(threads=1))
+    assert "same number of samples" in found.note
 
 
 def test_planted_correlation_is_found_and_reported_on_coarse_bins() -> None:

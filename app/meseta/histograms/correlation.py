@@ -7,6 +7,7 @@ import numpy.typing as npt
 
 from meseta.histograms import kernels
 from meseta.histograms.grids import histogram_grid
+from meseta.histograms.memory import without_line
 from meseta.histograms.results import CorrelationHistogram, CountMatrix, Grid
 from meseta.recipe.histogram import CorrelationSettings
 from meseta.segmentation.results import NoiseModel
@@ -17,6 +18,7 @@ __all__ = [
     "block_traces",
     "correlation_counts",
     "correlation_histogram",
+    "correlation_notes",
     "correlation_of",
     "largest_by_chance",
     "products",
@@ -28,6 +30,8 @@ _EXACT_FLOAT32 = 1 << 24
 WEAK_TRACES = 20
 """Bins that fewer traces reach take no part in the significance."""
 _BLOCK_TRACES = 100
+_FIXED_SHARE = 0.2
+_DRIFT_SHARE = 0.02
 _ABOVE_FLOOR_SIGMA = 6.0
 
 
@@ -139,8 +143,37 @@ def correlation_histogram(
         weak=weak,
         permutations=len(largest),
         block_traces=block,
-        note="" if traces >= 3 else "too few traces are kept to correlate",
+        note=correlation_notes(values) if traces >= 3 else "too few traces are kept to correlate",
     )
+
+
+def correlation_notes(values: Floats) -> str:
+    """Return what makes correlations of its own in counts (traces, bins), in words; empty where nothing does.
+
+    Notes
+    -----
+    Fixed record length: where every trace has about as many samples in these bins, who stays longer in one bin has
+    fewer left for the others.  Seen from the variance of a trace's sum over the sum of the bins' variances: 1 for
+    independent bins, 0 for a fixed sum.  Drift: seen from the share of the bins' variance that a straight line along the record
+    explains.
+    """
+    spread = values.var(0)
+    if len(values) < WEAK_TRACES or not spread.sum() > 0:
+        return ""
+    notes = []
+    if values.sum(1).var() < _FIXED_SHARE * spread.sum():
+        notes.append(
+            "nearly all traces have the same number of samples in these bins: longer in one bin is shorter in the "
+            "others, which makes negative correlations by itself"
+        )
+    rest = without_line(values).var(0).sum()
+    explained = 1 - rest / spread.sum()
+    if explained > max(_DRIFT_SHARE, 10 / len(values)):
+        notes.append(
+            f"counts drift along the record ({100 * explained:.2g} % of their variance): bins that grow and fade "
+            "together correlate by that alone"
+        )
+    return "; ".join(notes)
 
 
 def largest_by_chance(values: Floats, block: int, permutations: int, seed: int, work: Work) -> Floats:
