@@ -57,7 +57,7 @@ def experiment(case: str, number: int, traces: int, replicates: int) -> list[tup
     table = trace_table(traces, specimen=specimen.astype(str))
     kept = np.ones(traces, bool)
     drawn = resample(matrix, kept, table, recipe.histogram, recipe.resampling, work)
-    fit = fit_histogram(histogram_of(matrix), recipe.peaks, drawn, None, None, work)
+    fit = fit_histogram(histogram_of(matrix), recipe.peaks, drawn, matrix, None, work)
     found = fit.table
     place = [found.position_g0, found.position_low_g0, found.position_high_g0]
     position, low, high = (np.log10(value) if axis == "logarithmic" else value for value in place)

@@ -14,6 +14,7 @@ from meseta.peaks.calibration import CalibrationErrors
 from meseta.peaks.choosing import Chooser
 from meseta.peaks.doubts import weakest_peak
 from meseta.peaks.fitting import fit_model, refit
+from meseta.peaks.memory import extra_widening
 from meseta.peaks.modelling import background_template
 from meseta.peaks.results import PeakFit
 from meseta.peaks.shoulders import bare_shoulder
@@ -117,8 +118,11 @@ def _fitted(chooser: Chooser, window: Window, others: Sequence[OtherCounts], wor
     left_out = None
     if chooser.settings.intervals == "bca" and (groups := chooser.blocks(_BCA_GROUPS)) is not None:
         left_out = refit(fitted, (groups.sum(axis=0) - groups)[:, inside], work, weights)
+    wider = np.ones(fitted.model.peaks)
+    if chooser.settings.method == "likelihood":
+        wider = extra_widening(fitted, chooser.counts, drawn, (window.first, window.last))
     shifts = systematic_shifts(fitted, chooser.varied, window, chooser.histogram, others)
-    return FittedWindow(window, fitted, replicates, left_out, shifts, tuple(chooser.reached(window, fitted)))
+    return FittedWindow(window, fitted, replicates, left_out, shifts, tuple(chooser.reached(window, fitted)), wider)
 
 
 def _weights(chooser: Chooser, window: Window) -> Floats | None:

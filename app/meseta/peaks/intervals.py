@@ -29,7 +29,7 @@ class Interval:
     sigma: Floats
 
 
-def percentile_interval(estimate: npt.ArrayLike, replicates: npt.ArrayLike, factor: float = 1.0) -> Interval:
+def percentile_interval(estimate: npt.ArrayLike, replicates: npt.ArrayLike, factor: float | Floats = 1.0) -> Interval:
     """Return the percentile interval of each column.
 
     Parameters
@@ -37,7 +37,7 @@ def percentile_interval(estimate: npt.ArrayLike, replicates: npt.ArrayLike, fact
     estimate : (peaks,) array_like
     replicates : (n, peaks) array_like
         NaN where a refit failed; fewer than 20 good ones give NaN.
-    factor : float
+    factor : float or (peaks,) float64
         Stretches the replicates' deviations from the estimate where few groups were resampled: a bootstrap over n
         groups is too narrow by sqrt((n - 1)/n), and its quantiles are those of a normal, not of a Student distribution.
 
@@ -58,7 +58,7 @@ def percentile_interval(estimate: npt.ArrayLike, replicates: npt.ArrayLike, fact
 
 
 def bca_interval(
-    estimate: npt.ArrayLike, replicates: npt.ArrayLike, left_out: npt.ArrayLike, factor: float = 1.0
+    estimate: npt.ArrayLike, replicates: npt.ArrayLike, left_out: npt.ArrayLike, factor: float | Floats = 1.0
 ) -> Interval:
     """Return the bias-corrected and accelerated interval of each column.
 
@@ -77,7 +77,7 @@ def bca_interval(
     jackknife = np.asarray(left_out, float)
     plain = percentile_interval(centre, values, factor)
     low, high = plain.low.copy(), plain.high.copy()
-    tail = ndtri((1.0 - _LEVEL) / 2.0)
+    tail, stretch = ndtri((1.0 - _LEVEL) / 2.0), np.broadcast_to(factor, centre.shape)
     for column in range(len(centre)):
         good = values[np.isfinite(values[:, column]), column]
         away = jackknife[np.isfinite(jackknife[:, column]), column]
@@ -89,6 +89,6 @@ def bca_interval(
         spread = float((deviation**2).sum())
         acceleration = float((deviation**3).sum()) / (6.0 * spread**1.5) if spread > 0 else 0.0
         ends = [ndtr(bias + (bias + z) / (1.0 - acceleration * (bias + z))) for z in (tail, -tail)]
-        stretched = centre[column] + factor * (good - centre[column])
+        stretched = centre[column] + stretch[column] * (good - centre[column])
         low[column], high[column] = np.quantile(stretched, ends)
     return Interval(low, high, plain.sigma)

@@ -21,7 +21,8 @@ Floats = npt.NDArray[np.float64]
 class FittedWindow:
     """One stretch of the axis with its fit, refits of resampled and of left-out traces, and shifts.
 
-    ``reached`` is the number of traces with a sample within two widths of each peak.
+    ``reached`` is the number of traces with a sample within two widths of each peak, ``wider`` what stretches the
+    interval of each position further, where it remembers more than the histogram as a whole.
     """
 
     window: Window
@@ -30,9 +31,10 @@ class FittedWindow:
     left_out: Refitted | None
     shifts: tuple[Shift, ...]
     reached: tuple[int, ...]
+    wider: Floats
 
 
-def interval_of(part: FittedWindow, column: int, factor: float) -> Interval:
+def interval_of(part: FittedWindow, column: int, factor: float | Floats) -> Interval:
     """Return the interval of area (0), position (1) or width (2) of every peak."""
     fitted, replicates = part.fitted, part.replicates
     if replicates is None or not fitted.converged:

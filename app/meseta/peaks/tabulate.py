@@ -114,7 +114,7 @@ def _rows(
     factor = 1.0 if resampling is None else resampling.widen
     counts = histogram.counts[part.window.first : part.window.last].astype(float)
     verdicts = fit_verdicts(fitted, counts)
-    intervals = [interval_of(part, column, factor) for column in range(3)]
+    intervals = [interval_of(part, column, factor * part.wider) for column in range(3)]
     spread = half_spread(part.shifts, model.peaks)
     unit = area_scale(histogram, part)
     rows = []
