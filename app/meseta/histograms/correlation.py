@@ -154,8 +154,8 @@ def correlation_notes(values: Floats) -> str:
     -----
     Fixed record length: where every trace has about as many samples in these bins, who stays longer in one bin has
     fewer left for the others.  Seen from the variance of a trace's sum over the sum of the bins' variances: 1 for
-    independent bins, 0 for a fixed sum.  Drift: seen from the share of the bins' variance that a straight line along the record
-    explains.
+    independent bins, 0 for a fixed sum.  Drift: seen from the share of the bins' variance that a straight line along
+    the record explains.
     """
     spread = values.var(0)
     if len(values) < WEAK_TRACES or not spread.sum() > 0:
