@@ -3,7 +3,7 @@
     python tests/window/screenshots.py FOLDER [--traces N] [--only WORD]
 
 Simulated recordings only.  Every picture is a state that a user meets: first page, a day's recording, a window drawn,
-an open form, the linear axis, the tables.
+an open form, the linear axis, the tables, every view that is hidden at first.
 """
 
 from __future__ import annotations
@@ -108,7 +108,69 @@ def shoot(folder: Path, size: str, width: int, height: int, traces: int, only: s
         )
         settle()
         picture("molecule")
+        shoot_views(window, settle, picture)
         window.shut_down(forget=True)
+
+
+SERIES = "0.9\t1e-3\t1e-4\ta\n1.15\t2.6e-4\t3e-5\tb\n1.4\t7e-5\t1e-5\tc\n1.65\t1.9e-5\t3e-6\td\n"
+
+
+def shoot_views(window, settle, picture) -> None:
+    """Shoot the views that are hidden at first, each with something in it."""
+    from PySide6.QtGui import QGuiApplication
+
+    from meseta.resources import sample
+    from meseta.window.conditions import Condition, ConditionSet
+    from meseta.window.opening import open_paths
+    from meseta.window.peak_editing import PeakEditor
+    from meseta.work import Work
+
+    session = window.session
+    recipe = type(session.document.recipe)()
+    opened = open_paths([str(sample() / "night_raw.h5")], recipe, Work())
+    session.change_recipe("defaults", recipe)
+    session.open_traces(opened.traces, opened.name)
+    settle()
+    editor = PeakEditor.of(session)
+    editor.add(5e-3)
+    editor.choose(0)
+    editor.bound(0, 1e-4, 6e-4)
+    window.actions_by_key["view_residuals"].trigger()
+    window.docks["peaks"].raise_()
+    settle()
+    picture("peaks")
+    editor.forget()
+    settle()
+    editor.choose(0)
+    for name in ("systematic", "analyses", "record", "lengths"):
+        window.actions_by_key[f"view_{name}"].trigger()
+        settle()
+        picture(name)
+        window.docks[name].hide()
+    window.actions_by_key["view_correlation"].trigger()
+    settle()
+    window.widgets["correlation"].choose_bins(-3.7, 0.0)
+    settle()
+    picture("correlation")
+    window.widgets["correlation"].switch.click()
+    settle()
+    picture("crossed")
+    window.docks["correlation"].hide()
+    window.actions_by_key["view_decay"].trigger()
+    QGuiApplication.clipboard().setText(SERIES)
+    window.widgets["decay"].paste()
+    settle()
+    picture("decay")
+    window.docks["decay"].hide()
+    window.actions_by_key["view_residuals"].trigger()
+    window.actions_by_key["view_comparison"].trigger()
+    session.change_conditions("draw a window", ConditionSet((Condition("plateau", 5e-5, 1e-3),)))
+    settle()
+    picture("comparison")
+    window.widgets["comparison"].open_recording([str(sample() / "evening_blank_raw.h5")])
+    settle()
+    window.widgets["comparison"].show_as("difference")
+    picture("blank")
 
 
 if __name__ == "__main__":
