@@ -54,3 +54,27 @@ def test_offset_is_removed_before_the_series_resistance(tmp_path, resistance):
     read = traces.conductance.reshape(true.shape)
     for columns, level in ((slice(0, 100), 3.0), (slice(100, 200), 1.0), (slice(200, 400), 0.0)):
         assert np.mean(read[:, columns]) == pytest.approx(level, abs=1e-4)
+
+
+@pytest.mark.parametrize("resistance", [0.0, 500.0])
+def test_traces_that_stay_in_their_recording_have_the_same_offset_removed(tmp_path, resistance):
+    """A recording too large for memory is worked out as it is read; the numbers are those of one that is not."""
+    rng = np.random.default_rng(4)
+    rows = np.tile(np.concatenate([np.full(100, 0.4), np.zeros(200)]), (40, 1)) + 1e-3 * rng.normal(size=(40, 300))
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        file.create_dataset("amplifier", data=rows + 0.004).attrs["unit"] = "V"
+    calibration = {
+        "gain_volt_per_ampere": 1e5,
+        "bias_volt": 0.1,
+        "series_resistance_ohm": resistance,
+        "offset_from_floor": True,
+    }
+    recipe = Recipe.build({"calibration": calibration, "intake": {"layout": "rows"}})
+    with intake.open_recording(tmp_path / "a.h5", recipe) as recording:
+        streamed = intake.traces_from([recording], recipe, stream=True)
+        loaded = intake.traces_from([recording], recipe)
+        assert streamed.notes["floor_offset"] == loaded.notes["floor_offset"]
+        values = streamed.channels["conductance"].samples
+        np.testing.assert_array_equal(values.read(0, streamed.samples), loaded.conductance)
+        np.testing.assert_array_equal(values.read(299, 1203), loaded.conductance[299:1203])
+    assert abs(np.mean(loaded.conductance.reshape(40, 300)[:, 150:])) < 1e-4

@@ -105,11 +105,15 @@ def _stitched(
     """Return the current of the high-gain channel where it is within its range, else of the other."""
     full = float(np.max(calibration.constant("full_scale_volt", ASSUMED_FULL_SCALE_VOLT)))
 
+    seen: list[tuple[int, Floats]] = []
+
     def share(start: int, stop: int) -> Floats:
-        return np.abs(_volts(calibration, second, spread.recording, start, stop)) / full
+        seen.append((start, _volts(calibration, second, spread.recording, start, stop)))
+        return np.abs(seen[-1][1]) / full
 
     use, seams = calibration.switching.choose(share, spread)
-    volts = _volts(calibration, second, spread.recording, spread.start, spread.stop)
+    begin, wide = seen[-1]  # the range itself, and what it needed before and behind
+    volts = wide[spread.start - begin : spread.stop - begin]
     high = (volts - spread.of(calibration.constant("high_gain_offset_volt"))) / spread.of(
         calibration.constant("high_gain_volt_per_ampere")
     )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Final
 
 import numpy as np
@@ -50,7 +51,7 @@ class Look:
     spans: tuple[tuple[int, int], ...]
     values: tuple[Floats, ...]
 
-    @property
+    @cached_property
     def pooled(self) -> Floats:
         """All conductances, end to end."""
         return np.concatenate(self.values) if self.values else np.empty(0)

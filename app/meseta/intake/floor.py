@@ -13,6 +13,8 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.intake.assembly import Part
+from meseta.intake.rows import BLOCK_SAMPLES, StreamedRow
+from meseta.intake.spread import Value
 from meseta.quantities import G0_SIEMENS
 
 __all__ = ["offset_error", "remove_floor_offset", "running_offset"]
@@ -108,43 +110,50 @@ def offset_error(tails: Floats, reaches: npt.NDArray[np.bool_]) -> float | None:
 
 def _tails(part: Part) -> tuple[Floats, Floats, Floats]:
     """Return (median, its standard error, bias) of the last stretch of each opening, as measured."""
-    measured = _as_measured(part, part.conductance)
     median, error = np.full(part.traces, np.nan), np.full(part.traces, np.nan)
+    series = _of_traces(part, part.calibration.in_series_ohm) * G0_SIEMENS
     stops = {row: stop for row, _, stop, kind in part.cut.phases if kind == 1}
-    for row, stop in stops.items():
+    for row, stop in sorted(stops.items()):
         begin = int(part.offsets[row])
         last = max(int(stop * TAIL_SHARE), LEAST_TAIL)
-        tail = measured[begin + max(stop - last, 0) : begin + stop]
-        tail = tail[np.isfinite(tail)]
+        tail = np.asarray(part.conductance[begin + max(stop - last, 0) : begin + stop], np.float64)
+        tail = _as_measured(tail[np.isfinite(tail)], series[row])
         if len(tail) >= LEAST_TAIL:
             median[row] = np.median(tail)
             error[row] = MAD_TO_SIGMA * np.median(np.abs(tail - median[row])) / np.sqrt(len(tail))
     if "bias_volt" not in part.calibration.constants:
         return median, error, np.ones(part.traces)
+    return median, error, _of_traces(part, part.calibration.bias_at_junction_volt)
+
+
+def _of_traces(part: Part, value: Value) -> Floats:
+    """Return a constant of the pieces as one number a trace."""
     pieces = np.array(part.cut.piece, np.int64)
-    bias = np.broadcast_to(np.asarray(part.calibration.bias_at_junction_volt), (part.recording.pieces,))[pieces]
-    return median, error, bias.astype(np.float64)
+    return np.broadcast_to(np.asarray(value, np.float64), (part.recording.pieces,))[pieces]
 
 
-def _resistance(part: Part) -> Floats:
-    value = np.asarray(part.calibration.in_series_ohm, np.float64)
-    pieces = np.array(part.cut.piece, np.int64)
-    spread = np.broadcast_to(value, (part.recording.pieces,))[pieces]
-    return np.repeat(spread, np.diff(part.offsets)) * G0_SIEMENS
-
-
-def _as_measured(part: Part, contact: npt.NDArray[Any]) -> Floats:
-    """Return the conductance as it was measured, with the series resistance put back."""
-    values = contact.astype(np.float64)
-    if not np.any(part.calibration.in_series_ohm):
-        return values
-    return values / (1.0 + _resistance(part) * values)
+def _as_measured(contact: Floats, series: Floats | float) -> Floats:
+    """Return the conductance as it was measured, with what is in series put back (``series`` in ohm times G0)."""
+    return contact / (1.0 + series * contact) if np.any(series) else contact
 
 
 def _subtract(part: Part, offset_g0: Floats) -> None:
-    measured = _as_measured(part, part.conductance) - np.repeat(offset_g0, np.diff(part.offsets))
-    if np.any(part.calibration.in_series_ohm):
-        rest = 1.0 - _resistance(part) * measured
-        with np.errstate(divide="ignore", invalid="ignore"):
-            measured = np.where(rest > 0, measured / rest, np.nan)
-    part.conductance = measured.astype(np.float32)
+    """Subtract the offset of each trace, now or, for samples that stay in their recording, whenever they are read."""
+    series = _of_traces(part, part.calibration.in_series_ohm) * G0_SIEMENS
+    recorded = part.conductance
+
+    def corrected(low: int, high: int) -> npt.NDArray[np.float32]:
+        rows = np.searchsorted(part.offsets, np.arange(low, high), side="right") - 1
+        spread = series[rows]
+        measured = _as_measured(np.asarray(recorded[low:high], np.float64), spread) - offset_g0[rows]
+        if np.any(spread):
+            rest = 1.0 - spread * measured
+            with np.errstate(divide="ignore", invalid="ignore"):
+                measured = np.where(rest > 0, measured / rest, np.nan)
+        return measured.astype(np.float32)
+
+    if isinstance(recorded, StreamedRow):
+        part.conductance = StreamedRow(part.samples, np.float32, corrected)
+        return
+    blocks = range(0, part.samples, BLOCK_SAMPLES)
+    part.conductance = np.concatenate([corrected(at, min(at + BLOCK_SAMPLES, part.samples)) for at in blocks])
