@@ -20,7 +20,7 @@ from meseta.command.frame import (
     tell,
     working,
 )
-from meseta.command.physics import spread_lines
+from meseta.command.physics import physics_lines, spread_lines
 from meseta.command.printed import check_lines, result_lines, study_answer, study_lines
 from meseta.errors import CallError, Cancelled, InputError, MesetaError
 from meseta.work import Work
@@ -130,7 +130,9 @@ def run(
 
 def _lines(outcome: RunResult) -> list[str]:
     """Return what a finished run prints."""
-    return [*result_lines(outcome.summary, outcome.folder), *spread_lines(outcome.summary.get("all_analyses", []))]
+    summary = outcome.summary
+    lines = result_lines(summary, outcome.folder)
+    return [*lines[:-2], *physics_lines(summary), *spread_lines(summary.get("all_analyses", [])), *lines[-2:]]
 
 
 def run_one(

@@ -15,6 +15,7 @@ from meseta import __version__
 from meseta.analysis import Analysis
 from meseta.errors import MesetaError
 from meseta.figures.cautions import cautions
+from meseta.peaks import PeakFit, peak_physics
 from meseta.tables import Table
 from meseta.work import Work
 
@@ -38,8 +39,8 @@ def summary(analysis: Analysis, bad_files: Sequence[MesetaError] = (), work: Wor
     -------
     dict
         ``versions``, ``inputs``, ``bad_files``, ``recipe``, ``traces``, ``record``, ``noise``, ``plateaus``,
-        ``histogram``, ``displacement_histogram``, ``correlation_histogram``, ``peaks``, ``notes`` and ``warnings``; the
-        help page "results" describes each.
+        ``histogram``, ``displacement_histogram``, ``correlation_histogram``, ``peaks``, ``physics``, ``notes`` and
+        ``warnings``; the help page "results" describes each.
     """
     work = work or Work()
     fit = analysis.result("peaks", work)
@@ -56,13 +57,29 @@ def summary(analysis: Analysis, bad_files: Sequence[MesetaError] = (), work: Wor
         "displacement_histogram": _displacement(analysis, work),
         "correlation_histogram": _correlation(analysis, work),
         "peaks": _rows(fit.table),
-        "systematic": [{"choice": name, "position_moves_by_g0": moved.tolist()} for name, moved in fit.systematic],
+        "systematic": [
+            {
+                "choice": shift.choice,
+                "kind": shift.kind,
+                "position_moves_by_g0": shift.moves_by_g0.tolist(),
+                "counted": shift.counted,
+            }
+            for shift in fit.shifts
+        ],
         "fit_deviance_per_degree_of_freedom": fit.goodness,
+        "physics": _physics(analysis, fit, work),
         "notes": dict(analysis.traces.notes),
         "warnings": cautions(analysis, bad_files, work),
     }
     plain: dict[str, Any] = _plain(content)
     return plain
+
+
+def _physics(analysis: Analysis, fit: PeakFit, work: Work) -> dict[str, Any]:
+    """Return series resistance, published values and junction formation, as they follow from the peaks."""
+    plateaus, kept = analysis.plateaus(work), analysis.selection(work).kept
+    worth = analysis.result("resampling", work).effective_traces
+    return peak_physics(fit.table, plateaus.take(kept[plateaus.trace]), int(np.sum(kept)), worth).plain()
 
 
 def _versions() -> dict[str, str]:

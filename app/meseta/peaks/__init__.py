@@ -14,6 +14,7 @@ from meseta.peaks.editing import editable_peaks, edited_peaks
 from meseta.peaks.fit import fit_histogram
 from meseta.peaks.formation import Formation, formation_probability
 from meseta.peaks.meaning import assignment, channels_at_least
+from meseta.peaks.physics import PeakPhysics, peak_physics
 from meseta.peaks.points import read_points
 from meseta.peaks.published import PublishedValue, published
 from meseta.peaks.resistance import SeriesResistance, series_resistance
@@ -34,6 +35,7 @@ __all__ = [
     "OtherCounts",
     "PeakAnalyses",
     "PeakFit",
+    "PeakPhysics",
     "PeakTable",
     "PositionShift",
     "PublishedValue",
@@ -48,6 +50,7 @@ __all__ = [
     "edited_peaks",
     "fit_histogram",
     "formation_probability",
+    "peak_physics",
     "published",
     "read_points",
     "series_resistance",
