@@ -16,8 +16,9 @@ from meseta.analysis.choices import calibration_errors, other_counts
 from meseta.histograms import CountMatrix, DisplacementHistogram
 from meseta.intake import Alignment
 from meseta.recipe import Recipe, Section
+from meseta.recipe.selection import SelectionSettings
 from meseta.segmentation import NoiseModel, PlateauTable, TraceMeasures
-from meseta.selection import Selection
+from meseta.selection import Decisions, Selection
 from meseta.traces import TraceSet
 from meseta.work import Work
 
@@ -311,6 +312,16 @@ def _other_counts(_: Iterator[Any], traces: TraceSet, settings: SettingsView, in
     return other_counts(traces, settings, inputs, phases_of(settings.histogram.direction), work)
 
 
+def _blank(traces: TraceSet, settings: SettingsView, inputs: Inputs) -> Any:
+    """Return which traces are a blank's, for a background made of them; None where that is not asked for."""
+    if settings.peaks.background != "template" or not settings.peaks.blank.strip():
+        return None
+    rule = SelectionSettings(rules=[settings.peaks.blank])
+    return selection.select(
+        traces, rule, inputs["measures"], inputs["plateaus"], Decisions(), settings.histogram.direction
+    ).kept
+
+
 def _peaks(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: Inputs, work: Work) -> Any:
     return peaks.fit_histogram(
         inputs["histogram"],
@@ -320,6 +331,7 @@ def _peaks(_: Iterator[Any], traces: TraceSet, settings: SettingsView, inputs: I
         inputs["plateaus"].take(inputs["selection"].kept[inputs["plateaus"].trace]),
         work,
         floor=peaks.Floor.of(inputs["noise"]),
+        blank=_blank(traces, settings, inputs),
         others=inputs["other_counts"],
         calibration=calibration_errors(settings.calibration, traces),
     )
@@ -474,9 +486,10 @@ STEPS: Mapping[str, Step] = {
             "peaks",
             "fitting peaks",
             3,
-            ("histogram", "resampling", "counts", "plateaus", "selection", "noise", "other_counts"),
+            ("histogram", "resampling", "counts", "plateaus", "measures", "selection", "noise", "other_counts"),
             (
                 "peaks",
+                _PHASE,
                 "calibration.bias_volt",
                 "calibration.gain_relative_error",
                 "calibration.bias_relative_error",

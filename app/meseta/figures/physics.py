@@ -162,7 +162,7 @@ def _values(axes: Axes, position: Floats, low: Floats, high: Floats, order: Sequ
     axes.set_ylabel(f"Position ({typeset.G0})")
     spread = typeset.interval(float(position[order].min()), float(position[order].max()), "G0", 4)
     failed = len(position) - len(order)
-    note = f", {typeset.integer(failed)} failed" if failed else ""
+    note = f", {typeset.integer(failed)} left out" if failed else ""
     axes.set_title(f"{typeset.integer(len(order))} analyses, {spread}{note}", loc="right", pad=3)
 
 

@@ -15,12 +15,12 @@ from meseta.peaks.choosing import Chooser
 from meseta.peaks.doubts import weakest_peak
 from meseta.peaks.fitting import fit_model, refit
 from meseta.peaks.memory import extra_widening
-from meseta.peaks.modelling import background_template
 from meseta.peaks.results import PeakFit
 from meseta.peaks.shoulders import bare_shoulder
 from meseta.peaks.stretch import FittedWindow
 from meseta.peaks.systematic import OtherCounts, systematic_shifts
 from meseta.peaks.tabulate import empty_fit, tabulate
+from meseta.peaks.templates import Template, background_template
 from meseta.peaks.windows import Floor, Start, Window, usable_range
 from meseta.recipe.peaks import PeakSettings
 from meseta.segmentation.results import PlateauTable
@@ -43,6 +43,7 @@ def fit_histogram(
     *,
     floor: Floor | None = None,
     template: npt.ArrayLike | None = None,
+    blank: npt.NDArray[np.bool_] | None = None,
     others: Sequence[OtherCounts] = (),
     calibration: CalibrationErrors | None = None,
 ) -> PeakFit:
@@ -62,7 +63,10 @@ def fit_histogram(
     floor : Floor, optional
         Reading with the contact open: no peak is sought there.
     template : (bins,) array_like, optional
-        Counts of a blank recording or a mean tunnelling trace on the histogram's grid, for those backgrounds.
+        Counts of a blank recording or a mean tunnelling trace on the histogram's grid, for those backgrounds; its noise
+        is then not in the intervals.
+    blank : (traces,) bool, optional
+        Traces of ``counts`` that are a blank's, for the background "template"; they are resampled too.
     others : sequence of OtherCounts
         What other choices of the analysis would have counted, for the systematic part.
     calibration : CalibrationErrors, optional
@@ -82,19 +86,19 @@ def fit_histogram(
     Every group of peaks is fitted on its own stretch of the axis, 4 widths to either side, stated in the table.
     """
     work = work or Work()
-    shape = background_template(histogram, settings, counts, plateaus, template)
-    chooser = Chooser(histogram, settings, resampling, counts, usable_range(histogram, floor), shape)
+    shape = background_template(histogram, settings, counts, plateaus, resampling, template, blank, work)
+    chooser = Chooser(histogram, settings, resampling, counts, usable_range(histogram, floor), shape.counts)
     windows, reason, notes = chooser.windows()
     if not windows:
         return empty_fit(histogram, settings, reason)
-    parts = [_fitted(chooser, window, others, work) for window in windows]
+    parts = [_fitted(chooser, window, others, shape, work) for window in windows]
     factor, dropped = 1.0 if resampling is None else resampling.widen, []
     while not settings.peaks and (weak := _not_to_be_proposed(parts, plateaus, histogram.traces, factor)) is not None:
         windows = chooser.without(windows, weak)
         dropped.append(weak)
         if not windows:
             return replace(empty_fit(histogram, settings, "no peak found"), notes=chooser.not_proposed(dropped, ()))
-        parts = [_fitted(chooser, window, others, work) for window in windows]
+        parts = [_fitted(chooser, window, others, shape, work) for window in windows]
     table = tabulate(histogram, settings, parts, resampling, plateaus, calibration)
     return replace(table, notes=(*notes, *chooser.not_proposed(dropped, windows)))
 
@@ -107,14 +111,17 @@ def _not_to_be_proposed(
     return bare_shoulder(parts, plateaus, traces) if weak is None and plateaus is not None else weak
 
 
-def _fitted(chooser: Chooser, window: Window, others: Sequence[OtherCounts], work: Work) -> FittedWindow:
+def _fitted(
+    chooser: Chooser, window: Window, others: Sequence[OtherCounts], shape: Template, work: Work
+) -> FittedWindow:
     """Return the fit of one stretch, its refits and its shifts."""
     work.check()
     weights = _weights(chooser, window)
     fitted = fit_model(chooser.model(window), chooser.data(window), weights)
     inside = slice(window.first, window.last)
     drawn = chooser.resampling
-    replicates = None if drawn is None else refit(fitted, drawn.counts[:, inside], work, weights)
+    templates = shape.draws[:, inside] if len(shape.draws) else None
+    replicates = None if drawn is None else refit(fitted, drawn.counts[:, inside], work, weights, templates)
     left_out = None
     if chooser.settings.intervals == "bca" and (groups := chooser.blocks(_BCA_GROUPS)) is not None:
         left_out = refit(fitted, (groups.sum(axis=0) - groups)[:, inside], work, weights)

@@ -140,7 +140,13 @@ def _inverse(information: Floats) -> Floats:
     return inverse
 
 
-def refit(fitted: Fitted, many: npt.ArrayLike, work: Work, weights: npt.ArrayLike | None = None) -> Refitted:
+def refit(
+    fitted: Fitted,
+    many: npt.ArrayLike,
+    work: Work,
+    weights: npt.ArrayLike | None = None,
+    templates: Floats | None = None,
+) -> Refitted:
     """Refit every replicate from the fit's own result, peaks matched to those of the fit.
 
     Parameters
@@ -150,21 +156,25 @@ def refit(fitted: Fitted, many: npt.ArrayLike, work: Work, weights: npt.ArrayLik
         Counts of every replicate over the bins of the model.
     work : Work
         Replicates are shared among its threads; the result does not depend on how.
+    weights : (bins,) array_like, optional
+        As in :func:`fit_model`.
+    templates : (replicates, bins) float64, optional
+        Shape of a template background in each replicate; that of the model in all where it is not given.
     """
     model, rows = fitted.model, np.ascontiguousarray(many, float)
     weight = np.ones(rows.shape[1]) if weights is None else np.ascontiguousarray(weights, float)
     layout = model.layout(least_squares=weights is not None)
     free, (lower, upper) = model.free(), model.bounds()
 
-    def one(span: tuple[int, int]) -> tuple[Floats, npt.NDArray[np.int64]]:
+    def some(first: int, last: int, template: Floats) -> tuple[Floats, npt.NDArray[np.int64]]:
         found, status, _ = kernels.fit_many(
             layout,
             model.numbers(),
             model.low,
             model.high,
-            rows[span[0] : span[1]],
+            rows[first:last],
             weight,
-            model.template_counts(),
+            template,
             free,
             lower,
             upper,
@@ -173,6 +183,12 @@ def refit(fitted: Fitted, many: npt.ArrayLike, work: Work, weights: npt.ArrayLik
             300,
         )
         return found, status
+
+    def one(span: tuple[int, int]) -> tuple[Floats, npt.NDArray[np.int64]]:
+        if templates is None:
+            return some(*span, model.template_counts())
+        each = [some(row, row + 1, np.ascontiguousarray(templates[row], float)) for row in range(*span)]
+        return np.concatenate([part[0] for part in each]), np.concatenate([part[1] for part in each])
 
     edges = np.linspace(0, len(rows), min(len(rows), 4 * work.threads) + 1).astype(int)
     spans = [(int(a), int(b)) for a, b in pairwise(edges)]

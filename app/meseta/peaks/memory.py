@@ -52,7 +52,8 @@ def influences(fitted: Fitted, counts: CountMatrix, rows: npt.NDArray[np.int64],
     )
     by_inner = slopes @ chain
     positions = chain[1 : 4 * model.peaks : 4][:, fitted.free] @ fitted.covariance
-    weight = (by_inner[:, fitted.free] @ positions.T) / np.maximum(expected, 1e-300)[:, None]
+    least = 1e-3 * max(float(expected.mean()), 1e-300)  # where next to nothing is expected, a stray sample is no lever
+    weight = (by_inner[:, fitted.free] @ positions.T) / np.maximum(expected, least)[:, None]
     fine = np.repeat(weight, counts.merge, axis=0)
     first, last = bins[0] * counts.merge, bins[1] * counts.merge
     moved = [

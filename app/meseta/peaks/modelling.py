@@ -7,14 +7,12 @@ from dataclasses import replace
 import numpy as np
 import numpy.typing as npt
 
-from meseta.errors import CallError
-from meseta.histograms.results import ConductanceHistogram, CountMatrix, Grid
+from meseta.histograms.results import Grid
 from meseta.peaks.model import Model
 from meseta.peaks.windows import Start, rebinned
 from meseta.recipe.peaks import PeakSettings
-from meseta.segmentation.results import PlateauTable
 
-__all__ = ["background_template", "is_logarithmic", "model_of"]
+__all__ = ["is_logarithmic", "model_of"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -84,39 +82,3 @@ def _on_axis(start: Start, grid: Grid, logarithmic: bool) -> Start:
         position, low, high = (10.0**value for value in (start.position_u, start.low_u, start.high_u))
         width = start.width_u * position * np.log(10)
     return replace(start, position_u=float(position), width_u=float(width), low_u=float(low), high_u=float(high))
-
-
-def background_template(
-    histogram: ConductanceHistogram,
-    settings: PeakSettings,
-    counts: CountMatrix | None,
-    plateaus: PlateauTable | None,
-    template: npt.ArrayLike | None,
-) -> Floats:
-    """Return the shape of a template background, an empty array where none is wanted."""
-    if settings.background == "template":
-        if template is None or np.shape(template) != histogram.counts.shape:
-            raise CallError(
-                "the background 'template' needs a shape on the histogram's bins",
-                "peaks.background",
-                "give the counts of a blank recording, or choose another background",
-            )
-        return np.ascontiguousarray(template, float)
-    if settings.background != "tunnelling":
-        return np.empty(0)
-    if template is not None:
-        return np.ascontiguousarray(template, float)
-    if counts is None or plateaus is None:
-        raise CallError(
-            "the background 'tunnelling' is made of the traces without a plateau, and a histogram alone has none",
-            "peaks.background",
-            "fit from the traces, or choose another background",
-        )
-    bare = counts.used.copy()
-    bare[plateaus.trace[plateaus.kind == "molecule"]] = False
-    shape: Floats = rebinned(counts.counts[bare].sum(axis=0, dtype=np.int64).astype(float), counts.merge)
-    if not shape.any() or len(shape) != len(histogram.counts):
-        raise CallError(
-            "no trace is without a plateau", "peaks.background", "choose another background than 'tunnelling'"
-        )
-    return shape

@@ -57,7 +57,8 @@ def published(
     Parameters
     ----------
     near_g0 : float, optional
-        Only values within ``within_decades`` of this conductance, wide ranges after single values; a position that is not positive is near nothing.
+        Only values within ``within_decades`` of this conductance, wide ranges after single values; a position that is
+        not positive is near nothing.
     within_decades : float
     system : str
         Only systems whose name holds this text.

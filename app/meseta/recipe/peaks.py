@@ -66,6 +66,12 @@ class PeakSettings(Section):
         "Smooth part under the peaks, on the axis of the fit; 'tunnelling': the traces without a plateau, scaled; "
         "'template': a given shape (a blank recording), scaled.",
     )
+    blank: str = setting(
+        "",
+        "Blank traces",
+        "Rule that names the traces of a blank recording, whose histogram, scaled, is the background 'template'; the "
+        "traces of the blank are no part of the histogram where a rule of the selection leaves them out.",
+    )
     method: Literal["likelihood", "least_squares"] = setting(
         "likelihood",
         "Method",
