@@ -136,7 +136,7 @@ def test_analyses_stand_in_order_with_the_chosen_one_marked():
     assert np.array_equal(drawn, np.sort(position[np.isfinite(position)]))
     chosen = next(line for line in upper.get_lines() if line.get_marker() == "D")
     assert chosen.get_ydata()[0] == position[7]
-    assert "1 failed" in upper.get_title(loc="right")
+    assert "1 left out" in upper.get_title(loc="right")
     labels = [text.get_text() for text in lower.get_yticklabels()]
     assert labels == ["bins per decade: 25", "50", "100", "background: linear", "exponential"]
 
