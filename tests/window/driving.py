@@ -38,6 +38,16 @@ def click(panel, x: float, y: float) -> None:
     QApplication.processEvents()
 
 
+def double_click(panel, x: float, y: float) -> None:
+    """Double-click on a plot: two presses and two releases, as a mouse sends them."""
+    place, left, none = place_of(panel, x, y), Qt.MouseButton.LeftButton, Qt.MouseButton.NoButton
+    plain = Qt.KeyboardModifier.NoModifier
+    for kind in (QEvent.Type.MouseButtonPress, QEvent.Type.MouseButtonDblClick):
+        _send(panel, kind, place, left, left, plain)
+        _send(panel, QEvent.Type.MouseButtonRelease, place, left, none, plain)
+    QApplication.processEvents()
+
+
 def point_at(panel, x: float, y: float) -> None:
     """Move the pointer over a plot."""
     nothing = Qt.MouseButton.NoButton

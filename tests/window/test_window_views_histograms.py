@@ -181,6 +181,27 @@ def test_a_blank_opened_beside_gives_the_yield_of_the_engine(make, settle, night
     assert "scaled by" in panel.statements()[1]
 
 
+def test_a_study_beside_is_read_only_and_keeps_its_decisions(window, session, settle, tmp_path):
+    from meseta.selection import Decisions
+    from meseta.study import Study, write_study
+
+    other = simulate("mixture", 40, 3).traces
+    path = tmp_path / "other.meseta"
+    write_study(path, Analysis(other, decisions=Decisions().with_verdict([other.identity(0).text()], False)))
+    before = path.read_bytes()
+    panel = show(window, settle, "comparison")
+    panel.open_recording([str(path)])
+    settle(window)
+    parts = panel.compared.comparison.parts
+    assert [part.name for part in parts] == ["mixture", "other"]
+    assert [part.histogram.traces for part in parts] == [60, 39]
+    assert "Draw a window on the molecule" in panel.statements()[0]
+    assert path.read_bytes() == before and sorted(one.name for one in tmp_path.glob("other*")) == ["other.meseta"]
+    with_lock = Study.open(path)
+    assert not with_lock.read_only
+    with_lock.close()
+
+
 @pytest.fixture(scope="module")
 def night():
     """The first cycles of the bundled night, openings and closings."""

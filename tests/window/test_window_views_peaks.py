@@ -4,10 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from driving import click, drag, place_of, point_at, press
+from driving import click, double_click, drag, point_at, press
 from PySide6.QtCore import Qt
-from PySide6.QtTest import QTest
-from PySide6.QtWidgets import QApplication
 
 from meseta.analysis import Analysis, defensible_analyses
 from meseta.window.peak_editing import PeakEditor
@@ -20,16 +18,12 @@ def editor(session) -> PeakEditor:
     return PeakEditor.of(session)
 
 
-def double_click(panel, x: float, y: float) -> None:
-    QTest.mouseDClick(panel.plot.viewport(), Qt.MouseButton.LeftButton, pos=place_of(panel, x, y))
-    QApplication.processEvents()
-
-
 def test_a_double_click_on_the_histogram_asks_for_a_peak_there(window, session, editor, settle):
     panel = window.widgets["histogram"]
     before, span = len(editor.starts()), session.span
     double_click(panel, 1.0, -3.0)
     assert session.span == span  # and the view stays
+    assert editor.chosen >= 0
     added = editor.starts()[editor.chosen]
     assert abs(np.log10(added.position_g0) + 3.0) < 2 * panel.box.viewPixelSize()[1]
     assert len(session.document.recipe.peaks.peaks) == before + 1

@@ -23,12 +23,11 @@ from meseta.window.conditions import WINDOWS
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
-from meseta.window.opening import Opened, open_paths
 from meseta.window.plots.drawing import WindowTool
 from meseta.window.plots.panel import PlotData, SpinePanel
 from meseta.window.plots.ticks import LogCountAxis
 from meseta.window.theme import Theme
-from meseta.window.views.comparison.request import MOST_PARTS, SOURCES, Compared, Question, answer
+from meseta.window.views.comparison.request import MOST_PARTS, SOURCES, Compared, Question, answer, read_beside
 from meseta.work import Work
 
 __all__ = ["ComparisonPanel"]
@@ -166,17 +165,15 @@ class ComparisonPanel(SpinePanel):
         """Read another recording in the background, with the settings of this one, and compare."""
         recipe = self.session.document.recipe
 
-        def task(work: Work, _: Callable[[Any], None]) -> Opened:
-            return open_paths(paths, recipe, work)
+        def task(work: Work, _: Callable[[Any], None]) -> tuple[str, Analysis]:
+            return read_beside(paths, recipe, work)
 
         self.frame.say(f"opening {Path(paths[0]).name} to compare with …")
         self.session.jobs.submit(READ, "reading files to compare with", task, self._opened, self._not_opened)
 
-    def _opened(self, opened: Opened) -> None:
-        name = opened.name if opened.name != self.session.name else f"{opened.name} (2)"
-        if opened.study is not None:
-            opened.study.close()
-        self.others = {**self.others, name: Analysis(opened.traces, opened.recipe, opened.decisions)}
+    def _opened(self, opened: tuple[str, Analysis]) -> None:
+        name = opened[0] if opened[0] != self.session.name else f"{opened[0]} (2)"
+        self.others = {**self.others, name: opened[1]}
         self.compare("recording")
 
     def _not_opened(self, error: MesetaError) -> None:

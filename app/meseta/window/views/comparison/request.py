@@ -2,16 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from pathlib import Path
 
 from meseta.analysis import Analysis, compare_parts, compare_recordings, yield_in_window
 from meseta.errors import CallError
 from meseta.histograms import Comparison, Difference, Yield, parts_by
+from meseta.recipe import Recipe
+from meseta.window.opening import open_paths
 from meseta.window.subset import mask_of
 from meseta.work import Work
 
-__all__ = ["MOST_PARTS", "SOURCES", "Compared", "Question", "answer"]
+__all__ = ["MOST_PARTS", "SOURCES", "Compared", "Question", "answer", "read_beside"]
 
 SOURCES = {
     "conditions": "selected traces and the others",
@@ -55,6 +58,22 @@ class Compared:
     comparison: Comparison
     difference: Difference | None
     found: Yield | None
+
+
+def read_beside(paths: Sequence[str], recipe: Recipe, work: Work) -> tuple[str, Analysis]:
+    """Read another recording with the settings of the open one, or a study for reading only; return it with its name.
+
+    A study has its own traces, and its own decisions by hand; nothing is written to it.
+    """
+    from meseta.study import Study, is_study
+
+    if len(paths) == 1 and Path(paths[0]).is_file() and is_study(paths[0]):
+        study = Study.open(paths[0], read_only=True)
+        traces, decisions = study.traces(work), study.decisions
+        study.close()
+        return Path(paths[0]).stem, Analysis(traces, recipe, decisions)
+    opened = open_paths(paths, recipe, work)
+    return opened.name, Analysis(opened.traces, recipe, opened.decisions)
 
 
 def answer(analysis: Analysis, others: Mapping[str, Analysis], name: str, question: Question, work: Work) -> Compared:
