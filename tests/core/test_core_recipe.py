@@ -141,3 +141,17 @@ def test_values_survive_the_file(width, bins, specimen):
     recipe = recipe.with_values("intake", specimen=specimen)
     assert Recipe.parse(recipe.text()) == recipe
     assert tomllib.loads(recipe.text())["calibration"]["bias_volt"] == width
+
+
+def test_a_quoted_name_may_hold_points_and_blanks():
+    told = Recipe().with_settings(
+        [
+            'intake.channels."run 1.amp"={role="amplifier", unit="V"}',
+            'intake.channels.b.unit="V"',
+            'intake.channels.b.role="bias"',
+            'calibration.range_gains."5"=1e6',
+        ]
+    )
+    assert told.intake.channels["run 1.amp"].role == "amplifier"
+    assert told.intake.channels["b"].role == "bias"
+    assert told.calibration.range_gains == {"5": 1e6}

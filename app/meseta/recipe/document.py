@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import re
 import textwrap
 import tomllib
 from collections.abc import Iterable, Mapping
@@ -125,7 +126,7 @@ class Recipe(BaseModel):
         document = self.model_dump()
         for text in settings:
             name, separator, value = text.partition("=")
-            parts = name.strip().split(".")
+            parts = [quoted or bare for quoted, bare in re.findall(r'"([^"]*)"|([^."]+)', name.strip())]
             if not separator or len(parts) < 2:
                 raise CallError(f"'{text}' is not a setting", where, "write section.field=value")
             _put(document, parts, _value(value.strip()), name.strip(), where)
