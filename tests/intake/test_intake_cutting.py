@@ -7,6 +7,8 @@ import itertools
 import h5py
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from meseta import intake
 from meseta.recipe import Recipe
@@ -235,6 +237,46 @@ def test_one_range_kept_apart_is_said_in_the_singular(tmp_path):
         file.create_dataset("conductance", data=conductance[begin:]).attrs["unit"] = "G0"
     described, _ = intake.describe(tmp_path / "record.h5", Recipe())
     assert any("1 range kept apart" in line for line in described[0].lines())
+
+
+def test_a_sawtooth_is_cut_at_its_flybacks():
+    from meseta.intake.ramps import find_ramps
+
+    drive = (np.arange(20000) % 2000) / 2000.0
+    ramps = find_ramps(lambda a, b: drive[a:b], len(drive), 0.3)
+    pulls = ramps.end - ramps.begin > 100
+    assert pulls.sum() == 10
+    assert np.abs(ramps.begin[pulls] - np.arange(0, 20000, 2000)).max() <= 2
+    assert np.abs(ramps.end[pulls] - np.arange(2000, 20001, 2000)).max() <= 2
+
+
+@pytest.mark.parametrize("wild", [500.0, -1e9, np.inf, np.nan])
+def test_a_wild_sample_of_the_drive_costs_at_most_its_own_ramp(wild):
+    from meseta.intake.ramps import find_ramps
+
+    drive = np.abs((np.arange(40000) / 2000) % 2 - 1) * 5
+    drive[7777] = wild
+    ramps = find_ramps(lambda a, b: drive[a:b], len(drive), 0.3)
+    corners = np.arange(0, 40000, 2000)
+    missed = [at for at in corners if np.abs(ramps.begin - at).min() > 2]
+    assert len(missed) <= 1
+    assert len(ramps.begin) <= 24
+
+
+@settings(deadline=None, max_examples=60)
+@given(st.lists(st.tuples(st.integers(1, 80), st.floats(-3, 3)), min_size=2, max_size=30), st.booleans())
+def test_ramps_never_overlap(steps, is_noisy):
+    from meseta.intake.ramps import find_ramps
+
+    places = np.cumsum([0] + [count for count, _ in steps])
+    drive = np.interp(np.arange(places[-1] + 1), places, [0.0] + [height for _, height in steps])
+    drive = drive + (1e-3 * np.random.default_rng(0).normal(size=len(drive)) if is_noisy else 0.0)
+    ramps = find_ramps(lambda a, b: drive[a:b], len(drive), 0.3)
+    if ramps is not None:
+        assert ramps.begin[0] >= 0
+        assert (ramps.end >= ramps.begin).all()
+        assert (ramps.begin[1:] >= ramps.end[:-1]).all()
+        assert ramps.end[-1] <= len(drive)
 
 
 # -- marks -----------------------------------------------------------------------------------------------------------

@@ -22,6 +22,8 @@ BLOCK: Final = 4_000_000
 PROBES: Final = 64
 PROBE_SAMPLES: Final = 4096
 NOISE_SIGMAS: Final = 12.0
+GLITCHES: Final = 1e-4
+"""This share of the samples may be wild without making the range."""
 SMALLEST_SHARE: Final = 1e-4
 """Ramps smaller than this share of the whole range are not looked for."""
 CLEARLY_LARGER: Final = 4.0
@@ -70,7 +72,8 @@ def _scale_of(probes: list[Floats]) -> tuple[float, float]:
     curvature = np.concatenate([np.diff(probe, 2) for probe in probes])
     curvature = curvature[np.isfinite(curvature)]
     noise = MAD_SECOND * float(np.median(np.abs(curvature))) if len(curvature) else 0.0
-    return float(values.max() - values.min()), noise
+    low, high = np.quantile(values, [GLITCHES, 1 - GLITCHES])
+    return float(high - low), noise
 
 
 def find_ramps(read: Read, samples: int, smallest_fraction: float) -> Ramps | None:
@@ -100,7 +103,8 @@ def find_ramps(read: Read, samples: int, smallest_fraction: float) -> Ramps | No
     corners = [_corner(read, turns, place, noise, samples) for place in range(len(turns))]
     begin = np.array([corner[1] for corner in corners[:-1]], np.int64)
     end = np.array([corner[0] for corner in corners[1:]], np.int64)
-    end = np.maximum(end, begin)
+    begin = np.maximum.accumulate(begin)
+    end = np.clip(end, begin, np.append(begin[1:], samples))
     level = np.array([read(turn, turn + 1)[0] for turn in turns])
     return Ramps(begin, end, np.diff(level), noise)
 
@@ -157,7 +161,8 @@ def _corner(read: Read, turns: list[int], place: int, noise: float, samples: int
     after = _flank(values[turn - first :], extreme, noise) if place + 1 < len(turns) else None
     if before is not None:
         before = _Flank(-before.near, -before.slope, before.level_at, before.reach)
-    return _meeting(values, turn, first, before, after)
+    jumps = (before is None and place > 0, after is None and place + 1 < len(turns))
+    return _meeting(values, turn, first, before, after, jumps)
 
 
 @dataclass(frozen=True)
@@ -209,12 +214,17 @@ def _flank(values: Floats, extreme: float, noise: float) -> _Flank | None:
     return _Flank(near, float(slope), float(level), tolerance / abs(float(slope)))
 
 
-def _meeting(values: Floats, turn: int, first: int, before: _Flank | None, after: _Flank | None) -> tuple[int, int]:
-    """Return where the flanks meet the hold between them, or each other."""
+def _meeting(
+    values: Floats, turn: int, first: int, before: _Flank | None, after: _Flank | None, jumps: tuple[bool, bool]
+) -> tuple[int, int]:
+    """Return where the flanks meet the hold between them, or each other.
+
+    ``jumps`` tells where the drive jumps to or from the turning point within a sample or two, and so has no flank.
+    """
     if before is None and after is None:
         return turn, turn
-    near_before = before.near if before is not None else -(turn - first)
-    near_after = after.near if after is not None else len(values) - 1 - (turn - first)
+    near_before = before.near if before is not None else -1 if jumps[0] else -(turn - first)
+    near_after = after.near if after is not None else 1 if jumps[1] else len(values) - 1 - (turn - first)
     lo, hi = turn - first + near_before + 1, turn - first + near_after
     expected = (before.reach if before is not None else 0.0) + (after.reach if after is not None else 0.0)
     flat = hi - lo > expected + max(3.0, 0.15 * expected)
@@ -222,9 +232,11 @@ def _meeting(values: Floats, turn: int, first: int, before: _Flank | None, after
         across = (after.level_at - before.level_at) / (before.slope - after.slope)
         corner = turn + round(float(np.clip(across, near_before, near_after)))
         return corner, corner
+    if not flat and any(jumps):
+        return turn, turn
     if not flat and before is None:  # the record begins within the ramp, or with it
         return first, first
-    if not flat and after is None:
+    if not flat:
         return first + len(values), first + len(values)
     # the level of the hold without the ends of the flanks
     inner_lo = lo + (round(before.reach) if before is not None else 0)
@@ -234,8 +246,8 @@ def _meeting(values: Floats, turn: int, first: int, before: _Flank | None, after
     end = begin = turn
     if before is not None:
         end = turn + int(np.ceil(np.clip((level - before.level_at) / before.slope, near_before, near_after)))
-        begin = end if after is None else begin
+        begin = end if after is None and not jumps[1] else begin
     if after is not None:
         begin = turn + int(np.floor(np.clip((level - after.level_at) / after.slope, near_before, near_after)))
-        end = begin if before is None else end
+        end = begin if before is None and not jumps[0] else end
     return (end, begin) if end <= begin else ((end + begin) // 2,) * 2
