@@ -113,7 +113,7 @@ class MainWindow(QMainWindow):
             dock.setVisible(view.shown)
             self.docks[view.name] = dock
             toggle = dock.toggleViewAction()
-            toggle.triggered.connect(lambda shown, one=view: self._make_room(one) if shown else None)
+            toggle.triggered.connect(lambda shown, one=view: self._make_room(one, shown))
             if view.steps:
                 dock.visibilityChanged.connect(
                     lambda shown, one=view: self.session.pipeline.want(one.name, one.steps if shown else ())
@@ -143,9 +143,13 @@ class MainWindow(QMainWindow):
             [docks["peaks"], docks["conditions"], docks["groups"]], [300, 200, 130], Qt.Orientation.Vertical
         )
 
-    def _make_room(self, view: View) -> None:
-        """Bring a dock that was asked for to the front, as wide as its picture needs and half the window allows."""
+    def _make_room(self, view: View, shown: bool) -> None:
+        """Bring a dock that was asked for to the front with the room its picture needs; take the room back after it."""
         dock = self.docks[view.name]
+        if not shown:
+            if view.room:
+                self._size_docks()
+            return
         dock.raise_()
         if view.room > dock.width() and not dock.isFloating():
             self.resizeDocks([dock], [min(view.room, self.width() * 2 // 5)], Qt.Orientation.Horizontal)

@@ -261,7 +261,7 @@ class ComparisonPanel(SpinePanel):
                         offset,
                     )
             unit = found.comparison.density_unit.replace(" / ", " per ").replace("G0", typeset.G0)
-            self.density.say(unit if self.look != "difference" else f"difference, {unit}")
+            self.density.say(unit if self.look != "difference" else f"Δ {unit}")
         self.density.setStyle(showValues=self.look != "beside")
         self._write(found)
         self._rescale()
@@ -387,7 +387,8 @@ class ComparisonPanel(SpinePanel):
         (left, right), (low, high) = self.box.viewRange()
         self.legend.setPos(right, high)
         self.said.setPos(left, low)
-        self.said.setTextWidth(max(self.box.width() - 12.0, 60.0))
+        for item in (self.legend, self.said):
+            item.setTextWidth(max(self.box.width() - 12.0, 60.0))
 
     def resizeEvent(self, event: QResizeEvent) -> None:
         """Keep the words inside."""

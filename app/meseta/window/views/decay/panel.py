@@ -66,6 +66,7 @@ class DecayPanel(PlotPanel):
         self.up = ConductanceAxis("left")
         super().__init__(frame, PlainAxis("bottom", "length"), self.up)
         self.up.setWidth(64)
+        self.plot.setMinimumHeight(180)
         self.low, self.high = pg.PlotCurveItem(), pg.PlotCurveItem()
         self.band = pg.FillBetweenItem(self.low, self.high)
         self.line, self.bars = pg.PlotCurveItem(antialias=False), pg.PlotCurveItem(connect="pairs")
@@ -311,7 +312,7 @@ class DecayPanel(PlotPanel):
         contact = f"At zero length {typeset.conductance(fit.contact_g0, 3)}"
         if np.isfinite(fit.contact_low_g0):
             contact += f" (95 %: {typeset.interval(fit.contact_low_g0, fit.contact_high_g0, 'G0')})"
-        said.append(f"{contact}; {len(fit.points.length)} points, {fit.freedom} degrees of freedom.")
+        said.append(f"{contact}; {len(fit.points.length)} points, degrees of freedom: {fit.freedom}.")
         return said + [f"{note[:1].upper()}{note[1:]}." for note in fit.notes]
 
     def hover_at(self, x: float, y: float) -> Hover | None:

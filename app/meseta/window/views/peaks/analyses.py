@@ -28,6 +28,8 @@ __all__ = ["AnalysesPanel"]
 
 ANALYSES = Channel("analyses")
 PIXELS_A_LINE = 15.0
+SHORT = {"fit range": "range", "bin width": "bins"}
+"""What stands before the levels of a choice that would not be understood without it."""
 FEWEST_PIXELS = 150
 """Height that the positions need before the choices get any."""
 
@@ -176,15 +178,17 @@ class AnalysesPanel(PlotPanel):
         self.band.setRect(-0.5, bottom, len(order), top - bottom)
         ends = np.concatenate([places, low[known], high[known]])
         room = 0.08 * (ends.max() - ends.min()) or 0.05 * abs(float(ends[0]))
-        self.box.setYRange(float(ends.min() - room), float(ends.max() + 2.5 * room), padding=0)
+        top_of_all = float(ends.max() + 5 * room)  # with room for the words
+        self.box.setYRange(float(ends.min() - room), top_of_all, padding=0)
         self.box.setXRange(-0.5, len(order) - 0.5, padding=0)
-        self.said.setPos(-0.5, float(ends.max() + 2.5 * room))
+        self.said.setPos(-0.5, top_of_all)
         chosen = float(spread.chosen_g0[row])
         count, inner = typeset.integer(int(spread.analyses[row])), typeset.interval(bottom, top, "G0")
         whole = typeset.interval(float(spread.lowest_g0[row]), float(spread.highest_g0[row]), "G0")
         self.said.setText(
-            f"{count} analyses, nine tenths in {inner},\nall in {whole}; reported {typeset.conductance(chosen)}"
+            f"{count} analyses, nine tenths in {inner}, all in {whole}; reported {typeset.conductance(chosen)}"
         )
+        self.said.setTextWidth(max(self.box.width() - 12.0, 60.0))
         reported = np.flatnonzero(order == shown.chosen)
         self.chosen.setData(reported.astype(float), shown.position_g0[order[reported]])
         self.chosen_line.setVisible(bool(np.isfinite(chosen)))
@@ -197,7 +201,7 @@ class AnalysesPanel(PlotPanel):
         x, y, ring = [], [], []
         height = 0.0
         reported = np.flatnonzero(order == shown.chosen)
-        for values in shown.choices.values():
+        for choice, values in shown.choices.items():
             texts = np.array(values)[order]
             for level in dict.fromkeys(values):
                 height -= 1.0
@@ -206,7 +210,7 @@ class AnalysesPanel(PlotPanel):
                 y.append(np.tile([height - 0.3, height + 0.3], len(at)))
                 if len(reported) and texts[reported[0]] == level:
                     ring.append((float(reported[0]), height))
-                lines.append((height, str(level)))
+                lines.append((height, f"{SHORT.get(choice, '')} {level}".strip()))
             height -= 0.5
         self.marks.setData(np.concatenate(x), np.concatenate(y))
         self.ring.setData(*(np.array(ring).T if ring else ([], [])))
@@ -226,9 +230,10 @@ class AnalysesPanel(PlotPanel):
         self.grid.setFixedHeight(min(PIXELS_A_LINE * self._lines, room) if fits else 0)
 
     def resizeEvent(self, event: QResizeEvent) -> None:
-        """Share the height anew."""
+        """Share the height anew, and keep the words inside."""
         super().resizeEvent(event)
         self._share_height()
+        self.said.setTextWidth(max(self.box.width() - 12.0, 60.0))
 
     def _say(self, peak: str) -> None:
         session, state = self.session, self.job.state

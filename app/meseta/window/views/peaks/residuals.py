@@ -24,6 +24,19 @@ Floats = npt.NDArray[np.float64]
 SCATTERS = 2.0
 
 
+class _EvenAxis(PlainAxis):
+    """Zero and one round number to either side: all that a narrow panel has room for."""
+
+    def tickValues(self, minVal: float, maxVal: float, size: float) -> list[tuple[float, list[float]]]:
+        """Return the places of the three ticks."""
+        reach = min(-minVal, maxVal) * 0.9
+        if not reach > 0:
+            return []
+        power = 10.0 ** np.floor(np.log10(reach))
+        step = float(next(one * power for one in (5, 2, 1) if one * power <= reach))
+        return [(step, [-step, 0.0, step])]
+
+
 class ResidualsPanel(SpinePanel):
     """Observed less fitted density, beside the histogram."""
 
@@ -32,7 +45,7 @@ class ResidualsPanel(SpinePanel):
     object_name = "residuals"
 
     def __init__(self, frame: Frame) -> None:
-        self.axis = PlainAxis("bottom", "observed less fitted")
+        self.axis = _EvenAxis("bottom", "observed less fitted")
         super().__init__(frame, self.axis)
         self.band = QGraphicsPolygonItem()
         self.band.setZValue(0)
