@@ -21,7 +21,6 @@ from meseta.intake.roles import settle_roles, unmatched
 from meseta.intake.rows import BLOCK_SAMPLES, RawSpans, SharedAxis, StreamedRow
 from meseta.intake.units import unit_factor
 from meseta.recipe import Recipe
-from meseta.traces import ArraySamples
 from meseta.work import Work, blocks_of
 
 __all__ = ["Part", "plan_of", "prepared"]
@@ -108,6 +107,7 @@ class Part:
             self.quality = None
         return self
 
+    @np.errstate(all="ignore")
     def _load_block(self, block: tuple[int, int], own_drive: bool) -> bool:
         """Fill the arrays over a range of flat samples; return whether the steps of the drive are equal."""
         low, high = block
@@ -165,6 +165,7 @@ class Part:
             self.stop, self.recording.offsets[1:]
         )
 
+    @np.errstate(all="ignore")
     def _share_drive(self) -> None:
         """Take one axis for all traces, each as long as it is."""
         longest = int(np.max(np.diff(self.offsets)))
@@ -218,6 +219,7 @@ class Part:
         self.quality = self.quality if doubtful else None
         return self
 
+    @np.errstate(all="ignore")
     def _look_block(self, block: tuple[int, int], own_drive: bool) -> tuple[bool, bool]:
         low, high = block
         scratch = np.empty(high - low, np.float32) if own_drive else None
@@ -254,6 +256,7 @@ class Part:
         edges = [*range(0, self.samples, BLOCK_SAMPLES), self.samples]
         return sum(int(np.count_nonzero(has(row[low:high]))) for low, high in pairwise(edges))
 
+    @np.errstate(all="ignore")
     def settle_directions(self) -> None:
         """Give every trace without a stated direction one: closing where its conductance rises from end to end."""
         unknown = [row for row, direction in enumerate(self.cut.direction) if not direction]
@@ -296,12 +299,11 @@ class Part:
 
     def let_go(self) -> Part:
         """Drop the recorded samples, which are not needed once all is loaded; returns itself."""
-        nothing = ArraySamples(np.empty(0))
-        channels = tuple(replace(channel, samples=nothing) for channel in self.recording.channels)
+        channels = tuple(channel.without_samples() for channel in self.recording.channels)
         self.recording = self.recording.with_channels(channels)
         self.calibration, axis = self.calibration.without_samples(), self.axis
-        self.axis = axis if axis.channel is None else replace(axis, channel=replace(axis.channel, samples=nothing))
-        self.extras = tuple(replace(channel, samples=nothing) for channel in self.extras)
+        self.axis = axis if axis.channel is None else replace(axis, channel=axis.channel.without_samples())
+        self.extras = tuple(channel.without_samples() for channel in self.extras)
         return self
 
     def notes(self) -> dict[str, Any]:
@@ -336,6 +338,7 @@ def prepared(recording: Recording, recipe: Recipe) -> Recording:
     return recording.with_channels(channels)
 
 
+@np.errstate(all="ignore")  # the numbers of a damaged recording may be anything
 def plan_of(recording: Recording, recipe: Recipe) -> Part:
     """Return the traces of one recording, not yet loaded.
 

@@ -165,6 +165,7 @@ def describe(
     return described, bad
 
 
+@np.errstate(all="ignore")  # the numbers of a damaged recording may be anything
 def describe_recording(recording: Recording, recipe: Recipe, work: Work | None = None) -> Description:
     """Describe one open recording: what it is taken for and what its numbers say of the calibration."""
     recording = prepared(recording, recipe)

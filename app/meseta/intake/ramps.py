@@ -209,7 +209,7 @@ def _flank(values: Floats, extreme: float, noise: float) -> _Flank | None:
     if len(index) < 2:
         return None
     slope, level = np.polyfit(index.astype(np.float64), values[index], 1)
-    if slope == 0:
+    if slope == 0 or not (np.isfinite(slope) and np.isfinite(level)):
         return None
     return _Flank(near, float(slope), float(level), tolerance / abs(float(slope)))
 
@@ -230,6 +230,7 @@ def _meeting(
     flat = hi - lo > expected + max(3.0, 0.15 * expected)
     if before is not None and after is not None and not flat:
         across = (after.level_at - before.level_at) / (before.slope - after.slope)
+        across = across if np.isfinite(across) else 0.0
         corner = turn + round(float(np.clip(across, near_before, near_after)))
         return corner, corner
     if not flat and any(jumps):

@@ -16,11 +16,14 @@ from typing import Any, Self
 import numpy as np
 import numpy.typing as npt
 
-from meseta.traces import Samples, Source
+from meseta.traces import ArraySamples, Samples, Source
 
 __all__ = ["RawChannel", "Recording"]
 
 Plain = str | int | float | bool
+
+
+_NO_SAMPLES = ArraySamples(np.empty(0))
 
 
 def _nothing() -> None:
@@ -69,6 +72,12 @@ class RawChannel:
     def dtype(self) -> np.dtype[Any]:
         """Type of the stored numbers."""
         return self.samples.read(0, 0).dtype
+
+    def without_samples(self) -> RawChannel:
+        """Return the channel without its samples; one of thousands of files, so without the cost of checking it."""
+        emptied = object.__new__(RawChannel)
+        emptied.__dict__.update(self.__dict__, samples=_NO_SAMPLES)
+        return emptied
 
     def values(self, start: int, stop: int) -> npt.NDArray[np.float64]:
         """(stop - start,) float64, numbers in ``unit``: stored * scale + offset."""

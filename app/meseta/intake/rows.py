@@ -36,12 +36,14 @@ class RawSpans:
     @classmethod
     def of(cls, start: npt.NDArray[np.int64], stop: npt.NDArray[np.int64], offsets: npt.NDArray[np.int64]) -> Self:
         """Return the runs of traces that lie from ``start`` to ``stop`` in the recording."""
+        if len(start) == 1:
+            return cls(offsets, start)
         first = np.flatnonzero(np.concatenate([np.ones(min(len(start), 1), bool), start[1:] != stop[:-1]]))
         return cls(np.append(offsets[first], offsets[-1]).astype(np.int64), start[first])
 
     def within(self, low: int, high: int) -> Iterator[tuple[int, int]]:
         """Yield the ranges of the recording that hold flat samples ``low`` to ``high`` of the traces."""
-        run = int(np.searchsorted(self.begin, low, side="right")) - 1
+        run = int(np.searchsorted(self.begin, low, side="right")) - 1 if len(self.raw) > 1 else 0
         while low < high:
             end = min(int(self.begin[run + 1]), high)
             shift = int(self.raw[run]) - int(self.begin[run])

@@ -6,6 +6,7 @@ file is ever opened.  Link loops are met by remembering the address of every obj
 
 from __future__ import annotations
 
+import contextlib
 import threading
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
@@ -120,7 +121,7 @@ def _address(item: Any) -> tuple[int, int]:
 
 def _children(group: Any, name: str, tree: Tree) -> Iterator[tuple[str, Any]]:
     """Yield the members that hard links lead to; soft links lead to them a second time, external ones outside."""
-    for key in group:
+    for key in _names_in(group, name, tree):
         link = group.get(key, getlink=True)
         full = f"{name}/{key}"
         if isinstance(link, h5py.ExternalLink):
@@ -132,15 +133,26 @@ def _children(group: Any, name: str, tree: Tree) -> Iterator[tuple[str, Any]]:
                 tree.refused.append(f"{full} is damaged and was not read")
 
 
+def _names_in(group: Any, name: str, tree: Tree) -> list[str]:
+    """Return the names in a group; the links of a damaged one may lead nowhere or have names that are no text."""
+    found: list[str] = []
+    try:
+        found.extend(group)
+    except (UnicodeError, OSError, RuntimeError, ValueError, KeyError):
+        tree.refused.append(f"{name or '/'} is damaged from its member {len(found) + 1} on")
+    return found
+
+
 def _attributes(item: Any) -> dict[str, Any]:
     if h5py.h5a.get_num_attrs(item.id) == 0:
         return {}
     found = {}
-    for name in item.attrs:
-        try:
-            found[str(name)] = item.attrs[name]
-        except (OSError, TypeError, ValueError, KeyError, RuntimeError):
-            continue  # an attribute of a type that has no plain value says nothing of the samples
+    with contextlib.suppress(UnicodeError, OSError, RuntimeError, KeyError):  # a name that is no text
+        for name in item.attrs:
+            try:
+                found[str(name)] = item.attrs[name]
+            except (OSError, TypeError, ValueError, KeyError, RuntimeError):
+                continue  # an attribute of a type that has no plain value says nothing of the samples
     return found
 
 

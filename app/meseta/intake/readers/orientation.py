@@ -28,6 +28,7 @@ class Orientation:
     sure: bool
 
 
+@np.errstate(all="ignore")
 def orientation(rows: Any, columns: Any) -> Orientation:
     """Tell whether traces are the rows or the columns of a 2D array.
 
@@ -67,12 +68,15 @@ def _shaped(part: Floats) -> Floats:
 def _trend(part: Floats) -> float:
     """Return how far the ends of rows lie apart, the same way in all of them."""
     reach = max(int(part.shape[1] * ENDS), 1)
-    with np.errstate(invalid="ignore"):
-        steps = np.nanmean(part[:, -reach:], axis=1) - np.nanmean(part[:, :reach], axis=1)
+    steps = _means(part[:, -reach:]) - _means(part[:, :reach])
     steps = steps[np.isfinite(steps)]
-    if not len(steps):
-        return 0.0
-    return float(abs(np.median(steps)) + 1e-12)
+    return float(abs(np.median(steps))) + 1e-12 if len(steps) else 1e-12
+
+
+def _means(part: Floats) -> Floats:
+    """Return the mean of the finite values of each row; NaN where it has none."""
+    finite = np.isfinite(part)
+    return np.where(finite, part, 0.0).sum(axis=1) / np.where(finite.any(axis=1), finite.sum(axis=1), np.nan)
 
 
 def _roughness(part: Floats) -> float:

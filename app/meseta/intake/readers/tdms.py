@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import logging
 import struct
 import threading
 from collections.abc import Iterator
+from contextlib import ExitStack
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Final
@@ -152,18 +154,17 @@ class TdmsReader:
         """Return the channels of the file, groups as groups."""
         from nptdms import TdmsFile
 
-        try:
-            file = TdmsFile.open(str(path))
-        except _FAULTS as error:
-            raise InputError(f"is damaged ({str(error)[:60]})", str(path), "copy the file again") from error
-        try:
-            return replace(understood(_tree(file, path), path, settings), close=file.close)
-        except _FAULTS as error:
-            file.close()
-            raise InputError(f"is damaged ({str(error)[:60]})", str(path), "copy the file again") from error
-        except InputError:
-            file.close()
-            raise
+        logging.getLogger("nptdms").setLevel(logging.ERROR)  # what it warns of is said as a doubt
+        with ExitStack() as stack:
+            opened = stack.enter_context(path.open("rb"))
+            try:
+                file = TdmsFile.open(opened)
+                found = understood(_tree(file, path), path, settings)
+                cut_off = bool(file.file_status.incomplete_final_segment)
+            except _FAULTS as error:
+                raise InputError(f"is damaged ({str(error)[:60]})", str(path), "copy the file again") from error
+            doubts = ("its last part is not whole: it was cut off while it was written",) if cut_off else ()
+            return replace(found, doubts=(*found.doubts, *doubts), close=stack.pop_all().close)
 
 
 def _tree(file: Any, path: Path) -> Tree:

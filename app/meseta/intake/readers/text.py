@@ -43,17 +43,16 @@ class TextReader:
 
     def sniff(self, head: bytes, path: Path) -> bool:
         """Return whether the first bytes are text; whether it holds rows of numbers shows when it is opened."""
-        return bool(head) and (decode_head(head).startswith("utf-16") or b"\x00" not in head)
+        return bool(head) and (b"\x00" not in head or decode_head(head).startswith("utf-16"))
 
     def open(self, path: Path, settings: IntakeSettings) -> Contents:
         """Read the whole table."""
-        members = members_of(path)
-        if len(members) > 1:
-            return _from_members(path, members, settings)
         found = read_bytes(path, LARGE_BYTE)
         if found is None:
             return _large_contents(path, settings)
         data, sha256 = found
+        if not data and (members := members_of(path)):
+            return _from_members(path, members, settings)
         last = self._last
         if last is not None and last.fits(data):
             try:
@@ -178,9 +177,7 @@ def _body(data: bytes, form: TextForm, encoding: str) -> bytes:
 
 @dataclass(frozen=True)
 class _Table:
-    """Columns of numbers, the rows of each stretch of them and the lines before it, and how long each column is without
-    empty cells below.
-    """
+    """Columns of numbers, rows and lines before each stretch, and how far down each column is filled."""
 
     columns: Sequence[Samples]
     lengths: list[int]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import re
 from dataclasses import dataclass, replace
 from functools import lru_cache
@@ -82,18 +83,26 @@ def numbers(body: bytes, form: TextForm, path: Path, lines_before: int, by_lines
     closes = closes or cut.ends
     if len(cut.blocks) == 1 and not by_lines and not cut.begins and not cut.left:
         return _split_at_nan_rows(_parsed(cut.blocks[0], form, path, lines_before), closes)
-    parts, lengths, said = [], [], []
-    for block, place, lines in zip(cut.blocks, cut.places, cut.said, strict=True):
-        part = _parsed(block, form, path, lines_before + body.count(b"\n", 0, place))
-        if len(part[0]):
-            parts.append(part)
-            lengths.append(len(part[0]))
-            said.append(lines)
-    if not parts:
+    parts, lengths = _parts(cut, body, form, path, lines_before)
+    said = tuple(lines for lines, length in zip(cut.said, lengths, strict=True) if length)
+    lengths = [length for length in lengths if length]
+    if not lengths:
         return Rows([np.empty(0) for _ in range(form.columns)], [], True, True, by_lines, left=cut.left)
-    columns = [np.concatenate([part[place] for part in parts]) for place in range(form.columns)]
-    by_lines = by_lines or cut.begins or len(parts) > 1
-    return Rows(columns, lengths, cut.begins, closes, by_lines, tuple(said), cut.left)
+    by_lines = by_lines or cut.begins or len(lengths) > 1
+    return Rows(parts, lengths, cut.begins, closes, by_lines, said, cut.left)
+
+
+def _parts(cut: _Cut, body: bytes, form: TextForm, path: Path, lines_before: int) -> tuple[Columns, list[int]]:
+    """Return the columns of all blocks end to end, and the rows of each; parsed in one go where nothing is wrong."""
+    lengths = [block.strip().count(b"\n") + 1 for block in cut.blocks]
+    with contextlib.suppress(InputError):
+        columns = _parsed(b"\n".join(block.strip() for block in cut.blocks), form, path, lines_before)
+        if len(columns[0]) == sum(lengths):
+            return columns, lengths
+    places = zip(cut.blocks, cut.places, strict=True)
+    parts = [_parsed(block, form, path, lines_before + body.count(b"\n", 0, at)) for block, at in places]
+    joined = [np.concatenate([part[place] for part in parts]) for place in range(form.columns)] if parts else []
+    return joined, [len(part[0]) for part in parts]
 
 
 def _lines(body: bytes) -> int:

@@ -147,19 +147,23 @@ def peek_bytes(path: Path, count: int) -> tuple[bytes, bool]:
 def read_bytes(path: Path, most_byte: int) -> tuple[bytes, str] | None:
     """Return all bytes of a file, unpacked, and the checksum of it as it lies there; None where there are too many.
 
-    A file that unpacks beyond reason is refused.
+    Of a zip with several files no bytes are returned: :func:`members_of` tells their names.  A file that unpacks beyond
+    reason is refused.
 
     Raises
     ------
     InputError
         Where the file cannot be read or unpacked, or is a compression bomb.
     """
-    if path.stat().st_size > most_byte:
+    if path.stat().st_size > most_byte and len(members_of(path)) < 2:
         return None
     data = path.read_bytes()
     sha256 = sha256_of_bytes(data)
-    if not packing(data[:8]):
+    kind = packing(data[:8])
+    if not kind:
         return data, sha256
+    if kind == "zip" and len(members_of(path)) > 1:
+        return b"", sha256
     unpacked = io.BytesIO()
     for block in unpacked_blocks(path, 1 << 22):
         unpacked.write(block)
