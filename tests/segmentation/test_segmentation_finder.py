@@ -233,6 +233,22 @@ def test_level_crossing_length_of_the_contact():
     assert not np.any(measures.reforms)
 
 
+def test_a_spike_is_no_crossing_and_a_gap_is_bridged():
+    rng = np.random.default_rng(12)
+    rows = [ideal() * (1 + 0.01 * rng.standard_normal(1500)) + SIGMA * rng.standard_normal(1500) for _ in range(10)]
+    for row in rows:
+        row[1200:1202] = 0.8  # two samples: closing on a particle, pickup ...
+        row[345:349] = np.nan
+    measures = Analysis(TraceSet.from_arrays(rows, step_nm=STEP_NM)).result("measures")
+    assert np.allclose(measures.crossing_length, 150 * STEP_NM, atol=1.1 * STEP_NM)
+
+
+def test_no_barrier_is_taken_from_a_decay_with_a_plateau():
+    measures = Analysis(recording(10, molecule=2e-4)).result("measures")
+    assert set(measures.barrier_refused) == {"the decay is not straight: a plateau lies in it"}
+    assert np.all(np.isnan(measures.apparent_barrier_ev))
+
+
 def test_apparent_barrier_and_why_there_is_none():
     # 9.950338171 decades/nm is a square barrier of 5 eV (tests/core/test_core_quantities.py); 10 decades/nm is 5.05 eV.
     traces = recording(10)

@@ -367,7 +367,7 @@ STEPS: Mapping[str, Step] = {
         Step(
             "measures",
             "measuring traces",
-            2,
+            3,
             ("noise", "alignment"),
             ("lengths", _PHASE, "calibration.displacement_from"),
             _measures,

@@ -15,7 +15,9 @@ Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
 
 BLOCK = 16
-COLUMNS = 8
+COLUMNS = 9
+CROSSING_RUN = 3
+"""Samples in a row at or above a level that are more than a spike."""
 FEWEST_FOR_SLOPE = 8
 
 
@@ -34,12 +36,22 @@ def _extremes(g: Floats, zero: int) -> tuple[float, float]:
 
 @kernel
 def _last_crossing(g: Floats, drive: Floats, level: float) -> float:
-    """Return the interpolated drive at which g is at or above the level for the last time; NaN where it never falls."""
-    last = -1
+    """Return the interpolated drive at which g is at or above the level for the last time; NaN where it never falls.
+
+    A run of fewer than ``CROSSING_RUN`` samples is a spike and does not count; missing samples do not end a run.
+    """
+    last, run = -1, 0
     for i in range(len(g) - 1, -1, -1):
-        if g[i] >= level:
-            last = i
+        if not math.isfinite(g[i]):
+            continue
+        if g[i] < level:
+            last, run = -1, 0
+            continue
+        last, run = (i if run == 0 else last), run + 1
+        if run == CROSSING_RUN:
             break
+    if run < CROSSING_RUN:
+        last = -1
     if last < 0:
         return np.nan
     after = last + 1
@@ -65,20 +77,26 @@ def _reforms(g: Floats, level: float) -> bool:
 
 
 @kernel
-def _slope_between(g: Floats, drive: Floats, begin: int, low: float, high: float) -> float:
-    """Return the slope of log10 g against drive from the first sample below ``high`` to the first below ``low``."""
-    count, x, y, xx, xy = 0, 0.0, 0.0, 0.0, 0.0
+def _slope_between(g: Floats, drive: Floats, begin: int, low: float, high: float) -> tuple[float, float]:
+    """Return the slope of log10 g against drive from the first sample below ``high`` to the first below ``low``.
+
+    Second, the standard deviation about that line, in decades.
+    """
+    count, x, y, xx, xy, yy = 0, 0.0, 0.0, 0.0, 0.0, 0.0
     for i in range(begin, len(g)):
         if g[i] >= high or not math.isfinite(g[i]):
             continue
         if g[i] < low:
             break
         dx, dy = drive[i] - drive[begin], math.log10(g[i])
-        count, x, y, xx, xy = count + 1, x + dx, y + dy, xx + dx * dx, xy + dx * dy
+        count, x, y = count + 1, x + dx, y + dy
+        xx, xy, yy = xx + dx * dx, xy + dx * dy, yy + dy * dy
     spread = xx - x * x / count if count > 0 else 0.0
     if count < FEWEST_FOR_SLOPE or spread <= 0.0:
-        return np.nan
-    return (xy - x * y / count) / spread
+        return np.nan, np.nan
+    slope = (xy - x * y / count) / spread
+    rest = yy - y * y / count - slope * slope * spread
+    return slope, math.sqrt(max(rest, 0.0) / (count - 2))
 
 
 @kernel
@@ -122,7 +140,8 @@ def measure(
     Returns
     -------
     (traces, COLUMNS) float64
-        highest, lowest, crossing length, tunnelling slope, blocks at the floor, floor noise, reforms, missing samples.
+        highest, lowest, crossing length, tunnelling slope, blocks at the floor, floor noise, reforms, missing samples,
+        standard deviation about the tunnelling slope (decades).
     """
     out = np.full((len(starts), COLUMNS), np.nan)
     for t in range(len(starts)):
@@ -136,7 +155,7 @@ def measure(
         row[0], row[1] = _extremes(g, zero)
         row[2] = _last_crossing(g, z, low) - _last_crossing(g, z, high)
         begin = max(zero, 0)
-        row[3] = _slope_between(g, z, begin, floor + 10.0 * sigma, clear)
+        row[3], row[8] = _slope_between(g, z, begin, floor + 10.0 * sigma, clear)
         row[4], row[5] = _at_floor(g, begin, floor, sigma, restless)
         row[6] = 1.0 if _reforms(g, level) else 0.0
         row[7] = len(g) - np.isfinite(g).sum()

@@ -17,6 +17,9 @@ from meseta.traces import Quality, TraceSet
 
 __all__ = ["measure_traces"]
 
+STRAIGHT_DECADES = 0.2
+"""A decay that scatters more about its line holds more than noise and tunnelling."""
+
 
 def measure_traces(
     traces: TraceSet,
@@ -66,7 +69,7 @@ def measure_traces(
     span, rupture = np.full(len(starts), np.nan), np.full(len(starts), np.nan)
     span[some] = np.abs(drive[stops[some] - 1] - drive[starts[some]])
     rupture[some] = alignment.zero_drive[some] - drive[traces.offsets[:-1][some]]
-    barrier, refused = _barrier(rows[:, 3], traces.drive.is_displacement, displacement_from)
+    barrier, refused = _barrier(rows[:, 3], rows[:, 8], traces.drive.is_displacement, displacement_from)
     return TraceMeasures(
         drive_span=span,
         rupture_drive=rupture,
@@ -85,14 +88,15 @@ def measure_traces(
     )
 
 
-def _barrier(slope: Floats, in_nm: bool, displacement_from: str) -> tuple[Floats, npt.NDArray[np.str_]]:
+def _barrier(slope: Floats, about: Floats, in_nm: bool, displacement_from: str) -> tuple[Floats, npt.NDArray[np.str_]]:
     """Return the apparent barrier of each trace in eV, and in words why there is none."""
     if not in_nm:
         refused = np.full(len(slope), "the drive is not in nm")
     elif displacement_from == "tunnelling":
         refused = np.full(len(slope), "the displacement was calibrated by the tunnelling slope")
     else:
-        falls = np.where(slope < 0, "", "the conductance does not fall with displacement")
+        straight = np.where(about <= STRAIGHT_DECADES, "", "the decay is not straight: a plateau lies in it")
+        falls = np.where(slope < 0, straight, "the conductance does not fall with displacement")
         refused = np.where(np.isfinite(slope), falls, "no tunnelling slope was seen")
     return np.where(refused == "", barrier_from_decay(slope), np.nan), refused
 
