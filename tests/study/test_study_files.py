@@ -208,14 +208,14 @@ def test_a_journal_line_that_does_not_fit_is_refused_whole(tmp_path):
         kept = 0
         try:
             for number in range(10_000):
-                study.note(f"note {number} " + "x" * 3000)
+                study.note(f"note {number} " + "x" * 30_000)
                 kept += 1
         except StudyError as error:
             assert "could not be kept" in str(error)
         study.name("short enough")
         return kept + 1
 
-    kept = int(_with_file_limit(path.stat().st_size + 40_000, work))
+    kept = int(_with_file_limit(path.stat().st_size + 400_000, work))
     with Study.open(path) as study:
         assert study.damage == () and len(study.recovered) == kept and study.history.entries[-1].text == "short enough"
 

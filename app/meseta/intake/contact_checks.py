@@ -189,6 +189,8 @@ def zero_level(look: Look, level: float) -> tuple[float | None, Finding]:
         return float(np.mean([np.nanmax(one) >= at > one[-1] for one in values if np.isfinite(one).any()]))
 
     def lingering(at: float) -> float:
+        if not (pooled > 0).any():
+            return 0.0
         return float(np.mean(np.abs(np.log10(np.maximum(pooled[pooled > 0], 1e-300) / at)) < NEAR_LEVEL))
 
     crossed, near = crossing(level), lingering(level)

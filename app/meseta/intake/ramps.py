@@ -185,7 +185,8 @@ def _flank(values: Floats, extreme: float, noise: float) -> _Flank | None:
     The line is fitted to no more samples than it needs to be sure of the corner: a hold or another speed further along
     the ramp must not bend it.
     """
-    away = np.abs(values - extreme)
+    with np.errstate(invalid="ignore"):  # a wild sample may be infinite
+        away = np.abs(values - extreme)
     full = float(np.nanmax(away))
     finite = values[np.isfinite(values)]
     steps = np.abs(np.diff(finite))
