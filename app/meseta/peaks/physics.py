@@ -36,7 +36,8 @@ class PeakPhysics:
     resistance_peaks : tuple of str
         Names of those peaks.
     published : tuple of tuples of PublishedValue
-        For each row of the table at most two published values within 0.1 decade, nearest first.
+        For each row of the table at most two published values within 0.1 decade, single values before wide
+        ranges.
     formation : tuple of (Formation or None)
         For each row below 0.4 G0: share of the traces with a plateau within the full width at half maximum.
     """
@@ -86,9 +87,19 @@ def peak_physics(
     return PeakPhysics(
         resistance,
         tuple(str(table.peak[row]) for row in rows),
-        tuple(published(float(g))[:_MOST_PUBLISHED] if np.isfinite(g) else () for g in table.position_g0),
+        tuple(_nearest_published(float(g)) for g in table.position_g0),
         tuple(_formation(table, row, plateaus, traces, effective_traces) for row in range(len(table))),
     )
+
+
+def _nearest_published(position_g0: float) -> tuple[PublishedValue, ...]:
+    """Return the published values nearest to a position, single values before wide ranges."""
+
+    def order(value: PublishedValue) -> float:
+        return value.decades_away(position_g0) + float(np.log10(value.high_g0 / value.low_g0)) / 2
+
+    near = published(position_g0) if np.isfinite(position_g0) else ()
+    return tuple(sorted(near, key=order)[:_MOST_PUBLISHED])
 
 
 def _near_multiples(table: PeakTable) -> tuple[npt.NDArray[np.int64], Floats]:

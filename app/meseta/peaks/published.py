@@ -57,8 +57,7 @@ def published(
     Parameters
     ----------
     near_g0 : float, optional
-        Only values within ``within_decades`` of this conductance, wide ranges after single values; a position that is
-        not positive is near nothing.
+        Only values within ``within_decades`` of this conductance; a position that is not positive is near nothing.
     within_decades : float
     system : str
         Only systems whose name holds this text.
@@ -73,9 +72,7 @@ def published(
     if not near_g0 > 0:
         return ()
     near = [value for value in values if value.decades_away(near_g0) <= within_decades]
-    return tuple(
-        sorted(near, key=lambda value: value.decades_away(near_g0) + np.log10(value.high_g0 / value.low_g0) / 2)
-    )
+    return tuple(sorted(near, key=lambda value: value.decades_away(near_g0)))
 
 
 def _entries() -> list[dict[str, str | float]]:
