@@ -3,16 +3,21 @@
 from __future__ import annotations
 
 import json
+from importlib.metadata import EntryPoint
 
+import numpy as np
 import pytest
 
 from meseta import intake
 from meseta.errors import InputError
+from meseta.intake import registry
 from meseta.intake.context import from_name
 from meseta.intake.metadata import canonical, canonical_entry
+from meseta.intake.readers.contents import Contents, make_channel, whole
 from meseta.intake.roles import guess_role, stem_of
 from meseta.intake.units import parse_unit, unit_factor
 from meseta.recipe import Recipe
+from meseta.traces import ArraySamples
 
 TABLE = "displacement_nm,current_nA\n" + "".join(f"{0.01 * n:.2f},{100.0 / (n + 1):.6g}\n" for n in range(50))
 
@@ -167,3 +172,64 @@ def test_side_by_side_traces_keep_the_unit_of_their_headings(tmp_path, headings,
     conductance = {"log_conductance": 1e-2, "resistance": g0_ohm / 2e6, "conductance": 2e-3 * g0_ohm}[role]
     assert traces.traces == 4
     assert traces.conductance == pytest.approx(conductance, rel=1e-6)
+
+
+def test_a_unit_in_an_entry_of_its_own_belongs_to_its_value():
+    said = {"gain": 1, "gain_unit": "V/nA", "bias": 100.0, "Bias Units": "mV", "speed": 5, "speed_unit": "parsec"}
+    found, doubts = canonical(said)
+    assert (found["gain_volt_per_ampere"], found["bias_volt"]) == (1e9, 0.1)
+    assert doubts == ["the unit of 'speed' is not stated: 5 is taken as nm/s"]
+
+
+@pytest.mark.parametrize(
+    ("ending", "text"),
+    [
+        (".json", '{"set-up": {"bias": "100 mV", "molecule": "M1"}}'),
+        (".toml", 'bias_mV = 100\n[sample]\nmolecule = "M1"\n'),
+        (".ini", "[set-up]\nbias = 100 mV\nmolecule = M1\n"),
+        (".yaml", '# by hand\nset-up:\n  bias: 100 mV\n  molecule: "M1"  # pure\n  run: !!python/name:os.system\n'),
+    ],
+)
+def test_sidecars_names_and_tables_become_columns(tmp_path, ending, text):
+    (tmp_path / "chip3_t1.csv").write_text(TABLE)
+    (tmp_path / f"chip3_t1{ending}").write_text(text)
+    (tmp_path / "about.md").write_text("nothing\n")
+    (tmp_path / "table.csv.txt").write_text("file;solvent;temperature_K\nchip3_t1.csv;mesitylene;293\n")
+    recipe = {"name_template": "{specimen}_t{n}.csv", "metadata_table": str(tmp_path / "table.csv.txt")}
+    traces = intake.read(tmp_path / "chip3_t1.csv", Recipe.build({"intake": recipe}))
+    row = {name: traces.table[name][0] for name in ("bias_volt", "molecule", "specimen", "n", "solvent")}
+    assert row == {"bias_volt": 0.1, "molecule": "M1", "specimen": "chip3", "n": 1, "solvent": "mesitylene"}
+
+
+class _Words:
+    """A reader as another package would bring it: one number a line, written as a word."""
+
+    name = "words"
+
+    def sniff(self, head, path):
+        return head.startswith(b"WORDS")
+
+    def open(self, path, settings):
+        numbers = {"two": 2.0, "one": 1.0, "tenth": 0.1}
+        values = np.array([numbers[word] for word in path.read_text().split()[1:]])
+        channel = make_channel("conductance", ArraySamples(values), values.dtype, unit="G0")
+        return Contents("words", (channel,), *whole(len(values)))
+
+
+def test_a_reader_of_another_package_is_found_and_a_broken_one_harms_nothing(tmp_path, monkeypatch):
+    points = [
+        EntryPoint("words", f"{__name__}:_Words", "meseta.readers"),
+        EntryPoint("lost", "no_such_module:Reader", "meseta.readers"),
+    ]
+    monkeypatch.setattr(registry, "entry_points", lambda group: points)
+    monkeypatch.setattr(EntryPoint, "load", lambda point: _Words if point.name == "words" else __import__("no_such"))
+    registry.readers.cache_clear()
+    try:
+        (tmp_path / "a.txt").write_text("WORDS two two one tenth\n")
+        (tmp_path / "b.csv").write_text("z_nm,G_G0\n" + "".join(f"{n},{1 / (n + 1)}\n" for n in range(9)))
+        np.testing.assert_array_equal(intake.read(tmp_path / "a.txt").conductance, np.float32([2, 2, 1, 0.1]))
+        assert intake.read(tmp_path / "b.csv").sources[0].reader == "text"
+        with pytest.raises(InputError, match="'lost' cannot be loaded"):
+            intake.read(tmp_path / "b.csv", Recipe.build({"intake": {"reader": "lost"}}))
+    finally:
+        registry.readers.cache_clear()

@@ -202,6 +202,22 @@ def test_points_are_read_from_a_file(tmp_path):
 
 
 @pytest.mark.parametrize(
+    ("encoding", "text"),
+    [
+        ("utf-16", 'length;conductance_g0;label\n1,5;0,1;a\n2;0,01;"b;c"\n'),
+        ("latin-1", "# alkanes, \u00e4ltere\r\nlength\tconductance_g0\r\n1.5\t0.1\r\n2\t0.01\r\n"),
+        ("utf-8-sig", "length conductance_g0\n1.5 0.1\n2 1e-2\n"),
+    ],
+)
+def test_points_are_read_from_texts_of_any_kind(tmp_path, encoding, text):
+    path = tmp_path / "series.txt"
+    path.write_bytes(text.encode(encoding))
+    points = read_points(path)
+    np.testing.assert_array_equal(points.length, [1.5, 2.0])
+    np.testing.assert_array_equal(points.conductance_g0, [0.1, 0.01])
+
+
+@pytest.mark.parametrize(
     ("text", "place", "word"),
     [
         ("", "", "empty"),

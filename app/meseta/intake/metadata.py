@@ -178,6 +178,25 @@ def _number_and_unit(value: Plain) -> tuple[float | None, str]:
     return float(match[1]), (match[2] or "").strip()
 
 
+def _with_units(pairs: list[tuple[str, Any]]) -> list[tuple[str, Any]]:
+    """Return entries with the units that stand in entries of their own: "gain" and "gain_unit"."""
+    units = {}
+    for name, raw in pairs:
+        beside = re.fullmatch(r"(.+?)[\s_.]*units?", str(name), re.IGNORECASE)
+        value = plain_value(raw)
+        if beside and isinstance(value, str) and is_unit(value):
+            units[_key(beside[1])] = value.strip()
+    joined = []
+    for name, raw in pairs:
+        value, unit = plain_value(raw), units.get(_key(str(name)))
+        constant, unit_in_name = _constant_of(str(name)) if unit else ("", "")
+        if constant and not unit_in_name and isinstance(value, int | float) and not isinstance(value, bool):
+            joined.append((name, f"{float(value)!r} {unit}"))
+        else:
+            joined.append((name, raw))
+    return joined
+
+
 def canonical(
     entries: Mapping[str, Any] | Iterable[tuple[str, Any]], where: str = ""
 ) -> tuple[dict[str, Plain], list[str]]:
@@ -187,7 +206,7 @@ def canonical(
     """
     found: dict[str, Plain] = {}
     doubts = []
-    pairs = list(entries.items() if isinstance(entries, Mapping) else entries)
+    pairs = _with_units(list(entries.items() if isinstance(entries, Mapping) else entries))
     for name, raw in sorted(pairs, key=lambda pair: _key(str(pair[0])) in CONSTANTS):
         value = plain_value(raw)
         if value is None or value == "":

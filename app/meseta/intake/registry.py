@@ -7,13 +7,15 @@ here; or publish it under the entry-point group ``meseta.readers``.
 from __future__ import annotations
 
 import importlib
+from dataclasses import dataclass
 from functools import cache
-from importlib.metadata import entry_points
+from importlib.metadata import EntryPoint, entry_points
 from pathlib import Path
 from typing import Final
 
 from meseta.errors import InputError, nearest
-from meseta.intake.readers.contents import Reader
+from meseta.intake.readers.contents import Contents, Reader
+from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["find_reader", "readers"]
 
@@ -28,15 +30,43 @@ _READERS: Final = (
 )
 
 
+_LAST: Final = 2
+"""So many of the own readers take what no other does: they are asked after those of other packages."""
+
+
+@dataclass
+class _Broken:
+    """A reader of another package that cannot be loaded: it recognises nothing, and says why where it is named."""
+
+    name: str
+    fault: str
+
+    def sniff(self, head: bytes, path: Path) -> bool:
+        """Return False."""
+        return False
+
+    def open(self, path: Path, settings: IntakeSettings) -> Contents:
+        """Raise what is wrong with the reader."""
+        raise InputError(f"reader '{self.name}' cannot be loaded ({self.fault})", str(path), "repair its package")
+
+
 @cache
 def readers() -> tuple[Reader, ...]:
-    """Return one of every reader, own ones first."""
-    made = []
+    """Return one of every reader: own ones, those of other packages, last the ones that take any text or numbers."""
+    own: list[Reader] = []
     for entry in _READERS:
         module, _, name = entry.partition(":")
-        made.append(getattr(importlib.import_module(module), name)())
-    made += [point.load()() for point in entry_points(group="meseta.readers")]
-    return tuple(made)
+        own.append(getattr(importlib.import_module(module), name)())
+    others = [_loaded(point) for point in entry_points(group="meseta.readers")]
+    return (*own[:-_LAST], *others, *own[-_LAST:])
+
+
+def _loaded(point: EntryPoint) -> Reader:
+    try:
+        made: Reader = point.load()()
+    except Exception as error:  # noqa: BLE001  whatever another package does wrong must not stop all reading
+        return _Broken(point.name, f"{type(error).__name__}: {error}")
+    return made
 
 
 def find_reader(head: bytes, path: Path, wanted: str | None) -> Reader:
@@ -60,7 +90,7 @@ def find_reader(head: bytes, path: Path, wanted: str | None) -> Reader:
     raise InputError(
         _not_recognised(head, path),
         str(path),
-        "see which files Meseta takes: `meseta peek --help`, or set intake.reader",
+        "see the help page Files for what is read, or set intake.reader",
     )
 
 
