@@ -54,6 +54,16 @@ def test_products_are_exact_small_and_large() -> None:
         assert np.array_equal(products(counts), (counts.T @ counts).astype(np.float64))
 
 
+@pytest.mark.parametrize("kind", [np.uint16, np.uint32, np.int64, np.float64])
+def test_products_are_exact_where_some_columns_are_large(kind: type) -> None:
+    random = np.random.default_rng(1)
+    counts = random.integers(0, 20, (5000, 12))
+    counts[:, [3, 8]] *= 1000
+    total = np.zeros(12)
+    assert np.array_equal(products(counts.astype(kind), total), (counts.T @ counts).astype(np.float64))
+    assert np.array_equal(total, counts.sum(0))
+
+
 def test_a_bin_rescaled_changes_nothing() -> None:
     counts = np.random.default_rng(2).poisson(4, (200, 6))
     assert np.allclose(correlation_of(counts), correlation_of(counts * [1, 2, 3, 4, 5, 6]), atol=1e-12)

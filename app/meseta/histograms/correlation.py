@@ -25,8 +25,9 @@ __all__ = [
 ]
 
 Floats = npt.NDArray[np.float64]
-_CHUNK = 2048
+_CHUNK = 4096
 _EXACT_FLOAT32 = 1 << 24
+_FEW_LOUD = 0.25
 WEAK_TRACES = 20
 """Bins that fewer traces reach take no part in the significance."""
 _BLOCK_TRACES = 100
@@ -62,8 +63,9 @@ def correlation_of(counts: npt.NDArray[np.number]) -> Floats:
 def products(values: npt.NDArray[np.number], total: Floats | None = None) -> Floats:
     """Return the sums over traces of the products of every two columns, exact for integers.
 
-    A chunk of traces whose sums of squares stay below 2**24 is multiplied in float32, where all its partial sums are
-    exact (by Cauchy and Schwarz no product's sum is larger); any other in float64.  ``total`` gets the columns' sums.
+    Columns whose sum of squares over a chunk of traces stays below 2**24 are multiplied in float32, where all partial
+    sums are exact (by Cauchy and Schwarz no product's sum is larger); the others in float64.  ``total`` gets the
+    columns' sums.
     """
     bins = values.shape[1]
     result = np.zeros((bins, bins))
@@ -73,11 +75,19 @@ def products(values: npt.NDArray[np.number], total: Floats | None = None) -> Flo
         chunk = np.ascontiguousarray(values[first : first + _CHUNK])
         part, squares = narrow[: len(chunk)], np.zeros(bins)
         kernels.narrow_rows(chunk, part, total, squares)
-        if squares.max(initial=0.0) < _EXACT_FLOAT32:
+        loud = squares >= _EXACT_FLOAT32
+        if not loud.any():
             result += part.T @ part
-        else:
-            exact = chunk.astype(np.float64)
+            continue
+        exact = chunk.astype(np.float64, copy=False)
+        if loud.sum() > _FEW_LOUD * bins:
             result += exact.T @ exact
+            continue
+        part[:, loud] = 0.0
+        result += part.T @ part
+        beside = np.ascontiguousarray(exact[:, loud].T) @ exact
+        result[loud] += beside
+        result[np.ix_(~loud, loud)] += beside[:, ~loud].T
     return result
 
 
