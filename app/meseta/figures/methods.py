@@ -289,9 +289,9 @@ def _peaks(stated: Stated, analysis: Analysis, work: Work) -> list[str]:
         low, high = float(np.nanmin(fit.table.fit_low_g0)), float(np.nanmax(fit.table.fit_high_g0))
         sentences.append(f"The fit spans {typeset.interval(low, high, 'G0')}.")
     tried = list(dict.fromkeys(shift.choice for shift in fit.shifts if shift.kind != "calibration" and shift.counted))
-    stated = list(dict.fromkeys(shift.choice for shift in fit.shifts if shift.kind == "calibration"))
+    known = list(dict.fromkeys(shift.choice for shift in fit.shifts if shift.kind == "calibration"))
     if tried:
-        beside = f", in quadrature with the stated errors of {' and '.join(stated)}" if stated else ""
+        beside = f", in quadrature with the stated errors of {' and '.join(known)}" if known else ""
         sentences.append(
             f"The systematic part is the half spread of the position over these choices: {', '.join(tried)}{beside}. "
             "It is reported apart from the statistical interval."
