@@ -23,6 +23,10 @@ __all__ = ["contact_sheet"]
 Floats = npt.NDArray[np.float64]
 _COLUMNS, _ROWS = 4, 6
 _PAGE_MM: Final = 250.0
+_BLOCK: Final = 16
+_ABOVE_DECADES: Final = 2.3
+"""A panel ends soon after the trace has fallen to so many decades above the lower end of the axis, which lies at the
+smallest of the floor's readings, some 1.5 decades below its noise."""
 _POINTS: Final = 700
 """Points a trace is drawn with: smallest and largest of each stretch, so that no spike is lost."""
 
@@ -108,11 +112,12 @@ def _panel(
 ) -> None:
     drive, conductance = traces.trace_drive(row), traces.trace_conductance(row)
     scale.decorate(axes.yaxis, labelled)
-    begin, end = (float(np.nanmin(drive)), float(np.nanmax(drive))) if drive.size else (0.0, 1.0)
+    mine = plateaus.take(plateaus.trace == row)
+    shown = drive[_shown(conductance, mine, 10.0 ** (scale.low + _ABOVE_DECADES))]
+    begin, end = (float(np.nanmin(shown)), float(np.nanmax(shown))) if np.isfinite(shown).any() else (0.0, 1.0)
     end = end if end > begin else begin + 1.0
     plain_ticks(axes.xaxis, begin, end, most=3)
     axes.set_xlim(begin, end)
-    mine = plateaus.take(plateaus.trace == row)
     axes.set_title(f"{typeset.integer(row)}", color=colours.LIGHT.quiet, pad=1.5)
     found = f"{len(mine)} plateau{'' if len(mine) == 1 else 's'}"
     axes.set_title(found, loc="right", color=colours.LIGHT.quiet, pad=1.5)
@@ -121,6 +126,19 @@ def _panel(
     axes.plot(x, y, color=colours.LIGHT.ink, linewidth=0.45, zorder=1)
     for place in range(len(mine)):
         _plateau(axes, mine, place, drive)
+
+
+def _shown(conductance: npt.NDArray[np.floating], plateaus: PlateauTable, above_g0: float) -> slice:
+    """Return the samples that a panel shows: all above the floor, all plateaus, and a margin, not the long floor."""
+    whole = len(conductance) // _BLOCK * _BLOCK
+    blocks = np.nan_to_num(conductance[:whole].reshape(-1, _BLOCK), nan=0.0)
+    high = np.flatnonzero(np.median(blocks, axis=1) > above_g0) * _BLOCK
+    edges = np.concatenate([high, high + _BLOCK, plateaus.start, plateaus.stop])
+    if not len(high):
+        return slice(0, len(conductance))
+    first, last = int(edges.min()), int(edges.max())
+    margin = max(_BLOCK, (last - first) // 4)
+    return slice(max(first - margin, 0), min(last + margin, len(conductance)))
 
 
 def _plateau(axes: Axes, plateaus: PlateauTable, place: int, drive: Floats) -> None:
