@@ -171,6 +171,8 @@ class Drive:
 class PhaseTable:
     """What the drive was doing: rows sorted by trace, then start.
 
+    A rest on the way of a pull or push is a hold that lies within it.
+
     Attributes
     ----------
     trace, start, stop : (phases,) int64

@@ -32,6 +32,7 @@ class Spread:
     def piece_begins(self) -> npt.NDArray[np.int64]:
         """Return the places within the range at which a piece begins, the range's own begin among them."""
         offsets = self.recording.offsets
-        inside = offsets[(offsets > self.start) & (offsets < self.stop)] - self.start
+        first, last = np.searchsorted(offsets, self.start, side="right"), np.searchsorted(offsets, self.stop)
+        inside = offsets[first:last] - self.start
         begins: npt.NDArray[np.int64] = np.unique(np.concatenate([[0], inside]))
         return begins
