@@ -76,6 +76,9 @@ def _place(g: Floats, level: float, sigma: float) -> tuple[int, int]:
     smooth = uniform_filter1d(np.where(np.isfinite(g), g, 0.0), SMOOTHING)
     above = np.flatnonzero(smooth >= level)
     first = int(above[-1]) + 1 if len(above) else len(g)
+    # The running mean lags behind a jump by half its samples; the bridge forms before the trace has dipped.
+    for _ in range(SMOOTHING // 2):
+        first -= 1 if 0 < first < len(g) and g[first - 1] < level else 0
     away = np.flatnonzero(smooth[first:] < max(0.05 * level, sigma))
     return first, first + int(away[0]) if len(away) else len(g)
 
