@@ -95,8 +95,10 @@ def test_opening_with_closing_where_the_recording_has_both(make, settle, night):
 
 def test_drift_and_worth_are_stated_in_the_engines_words(window, session, settle):
     alone = Analysis(session.traces, session.document.recipe)
-    note = window.widgets["strip"].note.text()
-    assert alone.result("resampling").statement() in note and alone.result("drift").text in note
+    note = window.widgets["strip"].note
+    worth, drift = alone.result("resampling").statement(), alone.result("drift").text
+    assert worth in note.toolTip() and drift in note.toolTip()
+    assert worth.partition("; ")[0] in note.text() and drift.partition(":")[0] in note.text()
     panel = show(window, settle, "record")
     shifted = alone.result("shifted_correlation")
     assert alone.result("drift").text[1:] in panel.statements.text()
@@ -124,6 +126,11 @@ def test_lengths_are_measured_in_the_drawn_window_as_a_step_of_undo(window, sess
     settle(window)
     assert np.array_equal(panel.data().columns["complete"], expected[2].counts)
     assert str(expected[2].traces) in panel.statement.text()
+    panel.show_kind(3)
+    settle(window)
+    slopes = Analysis(session.traces, session.document.recipe).result("slope_histogram")
+    assert np.array_equal(panel.data().columns["complete"], slopes.counts)
+    assert panel.length.labelText == "slope (decades / nm)"
 
 
 # -- comparison ------------------------------------------------------------------------------------------------------

@@ -284,9 +284,13 @@ class CorrelationPanel(PlotPanel):
     def _words(self, found: PairHistograms | None) -> str:
         if self.pair.error is not None:
             return str(self.pair.error)
+        shown = self._shown
+        if shown is None or not np.isfinite(shown.correlation).any():
+            return ""
+        caution = f"<br>Caution: {shown.note}." if shown.note else ""
         if found is None:
-            return "" if self._shown is None else "Click a pair of bins: which traces are rich there will stand here."
-        return f"{self.pair_plot.legend()}<br>{found.text[:1].upper()}{found.text[1:]}."
+            return f"Click a pair of bins: which traces are rich there will stand here.{caution}"
+        return f"{self.pair_plot.legend()}<br>{found.text[:1].upper()}{found.text[1:]}.{caution}"
 
     # -- words -------------------------------------------------------------------------------------------------------
 
@@ -320,13 +324,13 @@ class CorrelationPanel(PlotPanel):
             self.say_empty(str(error))
         elif shown is None:
             self.say_empty("Correlating …" if state == "working" else "Not yet worked out.")
-        elif shown.note:
-            self.say_empty(shown.note)
+        elif not np.isfinite(shown.correlation).any():
+            self.say_empty(shown.note or "No bin varies over the traces.")
         else:
             self.say_empty("")
         self.say_state("out of date" if state == "out of date" else "")
         note = ""
-        if shown is not None and not shown.note:
+        if shown is not None and np.isfinite(shown.correlation).any():
             limit = typeset.number(self._limit, 2)
             note = f"teal {typeset.MINUS}{limit} to orange +{limit}"
             if np.isfinite(shown.threshold):

@@ -11,7 +11,7 @@ VIEW = View(
     "right",
     LengthsPanel,
     help_page="lengths",
-    steps=("length_histograms",),
+    steps=("length_histograms", "slope_histogram"),
     shown=False,
     room=460,
 )

@@ -28,7 +28,12 @@ __all__ = ["LengthsPanel"]
 
 SPACING = Channel("spacing", quick=True, shown=False)
 STEP = "length_histograms"
-KINDS = ("plateaus in the window", "level crossing", "stretch to rupture")
+SLOPES = "slope_histogram"
+KINDS = ("plateaus in the window", "level crossing", "stretch to rupture", "tunnelling slope")
+NOTHING = {
+    STEP: "No plateau lies in the window. Draw a window on the histogram and use it here.",
+    SLOPES: "No trace shows a tunnelling decay.",
+}
 HEIGHT = 150
 
 
@@ -72,7 +77,7 @@ class LengthsPanel(PlotPanel):
         column.addLayout(row)
         self.spacing = OnDemand(self, frame.session, SPACING, "spacing of lengths", self._wanted, self._draw_spacing)
         session = self.session
-        session.result_changed.connect(lambda name: self._draw() if name == STEP else None)
+        session.result_changed.connect(lambda name: self._draw() if name == self.step else None)
         session.states_changed.connect(self._say)
         session.traces_changed.connect(self._draw)
         session.document_changed.connect(lambda _: self._offer())
@@ -168,7 +173,15 @@ class LengthsPanel(PlotPanel):
     def found(self) -> LengthHistogram | None:
         """The length histogram that is looked at, as last shown."""
         found: tuple[LengthHistogram, ...] | None = self.session.result(STEP)
+        if self.step == SLOPES:
+            slopes: LengthHistogram | None = self.session.result(SLOPES)
+            return slopes
         return found[self.kind] if found is not None and self.kind < len(found) else None
+
+    @property
+    def step(self) -> str:
+        """The step of the analysis that is looked at."""
+        return SLOPES if self.kind == len(KINDS) - 1 else STEP
 
     def _draw(self) -> None:
         found = self.found
@@ -198,7 +211,8 @@ class LengthsPanel(PlotPanel):
         self.median.setVisible(bool(np.isfinite(curve.median)))
         if np.isfinite(curve.median):
             self.median.setPos(curve.median)
-        self.length.say(f"length ({found.unit})")
+        self.length.say(f"{'slope' if self.step == SLOPES else 'length'} ({found.unit})")
+        self.share.say("share steeper" if self.step == SLOPES else "share longer")
 
     def _show_all(self) -> None:
         found = self.found
@@ -221,7 +235,7 @@ class LengthsPanel(PlotPanel):
 
     def _wanted(self) -> Wanted | None:
         analysis, found = self.session.analysis, self.found
-        if analysis is None or found is None or self.session.state(STEP) != "current":
+        if analysis is None or found is None or self.step == SLOPES or self.session.state(STEP) != "current":
             return None
 
         def task(_: Work, __: Callable[[Any], None]) -> Spacing:
@@ -248,21 +262,23 @@ class LengthsPanel(PlotPanel):
             f"{found.kind[:1].upper()}{found.kind[1:].replace('G0', typeset.G0)}: {typeset.integer(number)} in "
             f"{typeset.integer(found.traces)} traces, {typeset.integer(found.none)} traces without."
         ]
+        if self.step == SLOPES:
+            self.statement.setText(
+                f"Tunnelling slope: seen in {typeset.integer(number)} of {typeset.integer(found.traces)} traces; "
+                f"median {typeset.quantity(found.survival.median, found.unit)}."
+            )
+            return
         short = f"the {typeset.integer(cut)} that were cut short count as longer" if cut else "none was cut short"
         parts.append(f"Median {typeset.quantity(found.survival.median, found.unit)} (Kaplan and Meier; {short}).")
         if found.over:
             parts.append(f"{typeset.integer(found.over)} beyond the axis.")
-        if spacing is not None and len(spacing.peaks) > 1:
-            error = spacing.error if np.isfinite(spacing.error) else np.nan
-            parts.append(
-                f"{len(spacing.peaks)} peaks, {typeset.quantity(spacing.spacing, found.unit)} apart"
-                + (f" (standard error {typeset.quantity(error, found.unit, 2)})." if np.isfinite(error) else ".")
-            )
+        if spacing is not None and len(spacing.peaks):
+            parts.append(f"{spacing.text[:1].upper()}{spacing.text[1:]}.")
         self.statement.setText(" ".join(parts))
 
     def _say(self) -> None:
-        session, state, found = self.session, self.session.state(STEP), self.found
-        error = session.errors.get(STEP)
+        session, state, found = self.session, self.session.state(self.step), self.found
+        error = session.errors.get(self.step)
         if session.traces is None:
             self.say_empty("How long plateaus are will stand here.")
         elif error is not None:
@@ -270,10 +286,10 @@ class LengthsPanel(PlotPanel):
         elif found is None:
             self.say_empty("Measuring lengths …" if state == "working" else "Not yet worked out.")
         elif not found.counts.sum() + found.censored_counts.sum():
-            self.say_empty("No plateau lies in the window. Draw a window on the histogram and use it here.")
+            self.say_empty(NOTHING[self.step])
         else:
             self.say_empty("")
-        self.say_note("filled: complete; dotted: with those cut short" if found is not None else "")
+        self.say_note("" if found is None or self.step == SLOPES else "filled: complete; dotted: with those cut short")
         self.say_state("out of date" if state == "out of date" else "")
 
     def data(self) -> PlotData | None:

@@ -230,7 +230,8 @@ class PeaksPanel(QWidget):
         elif state != "current":
             note = "fitting again" if state == "working" else "out of date"
         else:
-            note = f"95 % intervals: {fit.table.resampling[0] or 'none'}. Fit on the {fit.table.axis[0]} axis."
+            said = "".join(f"{one[:1].upper()}{one[1:]}. " for one in fit.notes)
+            note = f"{said}95 % intervals: {fit.table.resampling[0] or 'none'}. Fit on the {fit.table.axis[0]} axis."
         self.note.say(note, "quiet" if state == "current" else "doubtful")
         self.note.setVisible(bool(note))
         verdict = ""

@@ -288,8 +288,11 @@ class StripPanel(PlotPanel):
     def _say_statements(self) -> None:
         """Say beside the heading whether the record drifts, and what its traces are worth."""
         drift, resampling = self.session.result("drift"), self.session.result("resampling")
-        parts = ([] if resampling is None else [resampling.statement()]) + ([] if drift is None else [drift.text])
-        self.say_note("; ".join(parts))
+        drifts, worth = "" if drift is None else drift.text, "" if resampling is None else resampling.statement()
+        # the verdicts; their numbers and what follows stand in the tool tip and in the memory of the record
+        heads = [drifts.partition(":")[0], worth.partition("; ")[0]]
+        self.say_note("; ".join(head for head in heads if head))
+        self.note.setToolTip("\n".join(text for text in (drifts, worth) if text))
 
     def data(self) -> PlotData | None:
         """Return the columns of the picture: mean counts a trace, one row a bin."""
