@@ -97,6 +97,17 @@ def test_the_result_is_kept_and_read_back():
         Expectation.from_plain({name: value for name, value in result.plain().items() if name != "efficiency"})
 
 
+def test_a_result_kept_beside_the_recording_does_not_disturb_it(tmp_path):
+    import meseta
+
+    rows = np.vstack([recording(4).trace_conductance(t) for t in range(4)])
+    np.savetxt(tmp_path / "night.csv", rows.T, delimiter=",", header="a (G0),b (G0),c (G0),d (G0)", comments="")
+    before = meseta.read(tmp_path / "night.csv").traces
+    result = expectation(conductance_g0=[1e-3], length=[100 * STEP_NM], each=5)
+    (tmp_path / "night.json").write_text(json.dumps(result.plain()))
+    assert meseta.read(tmp_path / "night.csv").traces == before
+
+
 def test_yield_and_formation_take_it():
     from meseta.histograms.yields import window_efficiency
     from meseta.peaks import formation_probability

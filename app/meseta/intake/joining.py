@@ -21,8 +21,8 @@ __all__ = ["INTAKE_VERSION", "joined", "key_of"]
 INTAKE_VERSION: Final = 2
 """Raised when intake gives other numbers for the same files."""
 _OWN_COLUMNS: Final = frozenset({
-    "trace", "source", "dataset", "record_start", "samples", "direction", "partner", "kept", "reason", "group",
-    "displacement_span_nm", "rupture_displacement_nm", "length_drive", "drive_unit",
+    "trace", "traces", "source", "dataset", "record_start", "samples", "direction", "partner", "kept", "reason",
+    "group", "displacement_span_nm", "rupture_displacement_nm", "length_drive", "drive_unit",
 })  # fmt: skip
 LONGEST_TEXT: Final = 200
 
