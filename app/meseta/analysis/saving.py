@@ -59,16 +59,23 @@ def save_results(results: Mapping[str, Any], path: str | Path, analysis: Analysi
 
 def provenance_of(analysis: Analysis) -> dict[str, str]:
     """Return what made an analysis, as text by name: version, recordings with their SHA-256, traces' key, recipe."""
-    from meseta import __version__
-
     sources = [f"{source.sha256}  {source.name}" for source in analysis.traces.sources]
     return {
-        "meseta_version": __version__,
+        "meseta_version": _version(),
         "recordings_sha256": "\n".join(sources),
         "traces_key": analysis.traces.key,
         "decisions_key": analysis.decisions.key(),
         "recipe_toml": analysis.recipe.text(),
     }
+
+
+def _version() -> str:
+    from importlib.metadata import PackageNotFoundError, version
+
+    try:
+        return version("meseta")
+    except PackageNotFoundError:
+        return "unknown"
 
 
 def _whole_file(target: Path, write: Callable[[Path], None]) -> None:
