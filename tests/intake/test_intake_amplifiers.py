@@ -80,6 +80,7 @@ def test_readings_beyond_the_curve_are_flagged_and_have_no_number(tmp_path):
     bits = traces.quality.read(0, 7).tolist()
     assert bits == [Quality.UNTRUSTED, 0, 0, 0, Quality.SATURATED, Quality.SATURATED, 0]
     assert traces.notes["samples_without_conductance"] == 4
+    assert traces.notes["calibration"]["amplifier_curve"]["value"] == "7 points from -3 to 3 V"
     falling = [(-u, i) for u, i in log_curve(7)]
     bits = intake.read(path, recipe(amplifier_curve=falling, bias_volt=BIAS)).quality.read(0, 7).tolist()
     assert bits == [Quality.SATURATED, 0, 0, 0, Quality.UNTRUSTED, Quality.UNTRUSTED, 0]

@@ -306,6 +306,12 @@ def plain_constants(calibration: Calibration) -> dict[str, Any]:
         array = np.asarray(value)
         plain = float(array) if array.ndim == 0 else [float(array.min()), float(array.max())]
         found[name] = {"value": plain, "from": origin}
+    if calibration.curve is not None:
+        volt = calibration.curve.volt
+        found["amplifier_curve"] = {
+            "value": f"{len(volt)} points from {volt[0]:g} to {volt[-1]:g} V",
+            "from": "recipe",
+        }
     if calibration.overlap is not None:
         origin = "fitted in the overlap" + (", used" if calibration.is_scaled_by_overlap else ", not used")
         for name in ("ratio", "ratio_error", "offset_ampere"):
