@@ -28,7 +28,7 @@ from meseta.work import Work
 if TYPE_CHECKING:
     from meseta.run import RunResult
 
-__all__ = ["gather", "peek", "recipe", "run", "run_one", "window"]
+__all__ = ["gather", "peek", "recipe", "run", "run_lines", "run_one", "window"]
 
 
 @click.command()
@@ -116,10 +116,10 @@ def run(
         if not each:
             check_output(folder)
             outcome = run_one(files, folder, (recipe_path, preset, settings), strict, work, all_analyses)
-            tell(as_json, outcome.summary | {"out": str(folder)}, _lines(outcome))
+            tell(as_json, outcome.summary | {"out": str(folder)}, run_lines(outcome))
             return
         summaries, bad = _run_each(files, folder, (recipe_path, preset, settings), strict, work, all_analyses)
-    lines = [line for one in summaries for line in (one.folder.name, *_lines(one))]
+    lines = [line for one in summaries for line in (one.folder.name, *run_lines(one))]
     answer = {
         "out": str(folder),
         "recordings": {one.folder.name: one.summary for one in summaries},
@@ -128,7 +128,7 @@ def run(
     tell(as_json, answer, lines)
 
 
-def _lines(outcome: RunResult) -> list[str]:
+def run_lines(outcome: RunResult) -> list[str]:
     """Return what a finished run prints."""
     summary = outcome.summary
     lines = result_lines(summary, outcome.folder)

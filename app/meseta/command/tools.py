@@ -25,15 +25,14 @@ __all__ = ["decay", "example", "expect", "sheet", "simulate"]
 @json_option
 def example(folder: Path, as_json: bool) -> None:
     """Do the main job on the bundled recording."""
-    from meseta.command.jobs import run_one
-    from meseta.command.printed import result_lines
+    from meseta.command.jobs import run_lines, run_one
     from meseta.resources import sample
     from meseta.run import check_output
 
     with working() as work:
         check_output(folder)
         outcome = run_one([str(sample("night_raw.h5"))], folder, (None, None, ()), False, work)
-    tell(as_json, outcome.summary | {"out": str(folder)}, result_lines(outcome.summary, outcome.folder))
+    tell(as_json, outcome.summary | {"out": str(folder)}, run_lines(outcome))
 
 
 @click.command()
