@@ -47,3 +47,20 @@ def test_every_defensible_analysis_is_written_drawn_and_printed(recording, tmp_p
     spread = json.loads((out / "summary.json").read_text())["all_analyses"]
     assert spread[0]["analyses"] == len(first)
     assert f"{len(first)} analyses can be defended" in capsys.readouterr().out
+
+
+def test_a_run_prints_what_follows_from_its_peaks(recording, tmp_path, capsys):
+    """The recording's contacts lie behind 200 ohm (its simulation's own setting); 80 traces tell it within 120 ohm."""
+    out = tmp_path / "out"
+    with pytest.raises(SystemExit):
+        main(["run", str(recording), "--out", str(out), "--preset", "metal", "--set", "resampling.replicates=60"])
+    printed = capsys.readouterr().out
+    assert "fitted centre" in printed
+    assert "highest point" in printed
+    assert "at least 1 channel;" in printed
+    assert "nm / trace" in printed
+    assert "published, no identification" in printed
+    assert "resistance in series that each peak alone would ask for" in printed
+    physics = json.loads((out / "summary.json").read_text())["physics"]
+    assert physics["series_resistance"]["per_peak_ohm"][1] == pytest.approx(200, abs=120)
+    assert len(physics["published"]) == len(rows_of(out / "peaks.csv"))
