@@ -143,11 +143,20 @@ class JoinedSamples:
         return found[0] if len(found) == 1 else np.concatenate(found or [self.parts[0].read(0, 0)])
 
 
+def _copied(arrays: Sequence[npt.NDArray[Any]]) -> npt.NDArray[Any]:
+    """Return arrays end to end, copied one by one: one call for all would keep every other thread waiting."""
+    ends = np.cumsum([len(array) for array in arrays]).tolist()
+    whole = np.empty(ends[-1], np.result_type(*{array.dtype for array in arrays}))
+    for array, end in zip(arrays, ends, strict=True):
+        whole[end - len(array) : end] = array
+    return whole
+
+
 def end_to_end(rows: Sequence[Row | Samples]) -> Samples:
     """Return rows end to end: in memory where all of them are, else behind their files."""
     arrays = [row for row in rows if isinstance(row, np.ndarray)]
     if len(arrays) == len(rows):
-        return ArraySamples(arrays[0] if len(arrays) == 1 else np.concatenate(arrays))
+        return ArraySamples(arrays[0] if len(arrays) == 1 else _copied(arrays))
     parts = tuple(ArraySamples(row) if isinstance(row, np.ndarray) else row for row in rows)
     offsets = np.concatenate([[0], np.cumsum([len(part) for part in parts])]).astype(np.int64)
     return parts[0] if len(parts) == 1 else JoinedSamples(parts, offsets)

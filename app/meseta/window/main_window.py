@@ -16,6 +16,7 @@ from meseta.errors import MesetaError
 from meseta.recipe import Recipe
 from meseta.window.actions import ACTIONS, MENUS, ActionSpec
 from meseta.window.centre import Centre
+from meseta.window.collector import Collector
 from meseta.window.commands import Commands
 from meseta.window.help import HelpBrowser
 from meseta.window.jobs import JobRunner
@@ -47,6 +48,7 @@ class MainWindow(QMainWindow):
         super().__init__()
         self.themes, self.settings = themes, settings
         self.jobs = JobRunner(self)
+        self.collector = Collector(self.jobs)
         self.session = Session(self.jobs, recipe, self)
         self.keeper = Keeper(self.session, recovery)
         self.recent = RecentFiles(settings)
@@ -380,6 +382,7 @@ class MainWindow(QMainWindow):
         """Stop all work and wait for it."""
         self.jobs.close()
         self.keeper.close(forget=forget)
+        self.collector.close()
 
     def sizeHint(self) -> QSize:
         """Ask for a comfortable size."""
