@@ -5,10 +5,11 @@ from __future__ import annotations
 import os
 import random
 import sys
+from pathlib import Path
 
 import pytest
 from driving import drag, wheel
-from PySide6.QtCore import QPoint, Qt
+from PySide6.QtCore import QPoint, Qt, QTimer
 from PySide6.QtTest import QTest
 from PySide6.QtWidgets import QApplication, QDialog, QFileDialog, QInputDialog, QMenu, QMessageBox
 
@@ -25,9 +26,20 @@ CTRL_KEYS = [Qt.Key.Key_Z, Qt.Key.Key_Y, Qt.Key.Key_R, Qt.Key.Key_Home, Qt.Key.K
 
 
 def close_dialogs() -> None:
+    popup = QApplication.activePopupWidget()
+    if popup is not None:
+        popup.close()
     for widget in QApplication.topLevelWidgets():
         if isinstance(widget, QDialog | QMenu) and widget.isVisible():
             widget.close()
+
+
+def memory_in_use() -> float:
+    """Return the memory in use in MB; 0 where the system does not tell."""
+    try:
+        return int(Path("/proc/self/statm").read_text().split()[1]) * os.sysconf("SC_PAGE_SIZE") / 1e6
+    except (OSError, AttributeError, ValueError):
+        return 0.0
 
 
 @pytest.fixture
@@ -46,7 +58,13 @@ def no_questions(monkeypatch):
 def test_random_clicks_and_keys_end_with_no_exception(window, settle, no_questions, qtbot):
     dice = random.Random(4)
     plots = [window.widgets[name] for name in ("trace", "displacement", "histogram", "strip")]
+    escape = QTimer(window)  # a menu that a click opens keeps the click waiting until it is closed
+    escape.timeout.connect(close_dialogs)
+    escape.start(200)
+    in_use: list[float] = []
     for turn in range(ROUNDS):
+        if turn in (ROUNDS // 2, ROUNDS - 1):
+            in_use.append(memory_in_use())
         choice = dice.random()
         if choice < 0.3:
             QTest.keyClick(QApplication.focusWidget() or window, dice.choice(KEYS))
@@ -70,9 +88,11 @@ def test_random_clicks_and_keys_end_with_no_exception(window, settle, no_questio
             QApplication.processEvents()
         if len(window.session.document.conditions.conditions) > 6:
             window.run_action("clear_conditions")
+    escape.stop()
     close_dialogs()
     window.show()
     settle(window)
+    assert in_use[1] <= 1.25 * in_use[0]  # results of the last few settings are kept, no more
     assert window.session.traces is not None
     assert not window.jobs.busy
 

@@ -14,6 +14,7 @@ from meseta.resources import sample
 from meseta.traces import TraceIdentity
 from meseta.window import opening
 from meseta.window.conditions import Condition, ConditionSet
+from meseta.window.session import Span
 
 FOLDER = sample() / "bench_check"
 
@@ -146,3 +147,37 @@ def test_identities_are_found_again(mixture):
     assert mixture.identities([3, 1]) == [names[3], names[1]]
     assert mixture.row_of(TraceIdentity.parse(names[17])) == 17
     assert mixture.row_of(TraceIdentity("0" * 64, "", 0, "opening")) == -1
+
+
+def test_a_recording_is_reopened_exactly_where_it_was_left(opened, make, settle):
+    session = opened.session
+    conditions = ConditionSet(
+        (Condition("plateau", 0.5, 1.5), Condition("range", first=2, last=9, inverted=True)), "or"
+    )
+    session.change_conditions("draw", conditions)
+    session.go_to(11)
+    session.set_span(Span(-3.0, 0.5))
+    session.set_drive_span(-0.2, 0.7)
+    session.undo.setClean()
+    opened.close()
+    again = make()
+    again.commands.open_paths([str(FOLDER)])
+    settle(again)
+    assert again.session.current == 11
+    assert again.session.document.conditions == conditions and again.session.subset is not None
+    assert again.session.span == Span(-3.0, 0.5) and again.session.drive_span == (-0.2, 0.7)
+
+
+def test_a_session_taken_up_again_is_not_taken_for_saved(opened, make, settle, place):
+    session = opened.session
+    session.change_setting("plateaus", "sensitivity", 7.0, "Sensitivity to 7")
+    session.change_conditions("draw", ConditionSet((Condition("plateau", 0.5, 1.5),)))
+    session.go_to(4)
+    opened.keeper._write_recovery()
+    opened.shut_down(forget=False)
+    again = make()
+    again.run_action("recover")
+    settle(again)
+    assert again.session.document.recipe.plateaus.sensitivity == 7.0
+    assert len(again.session.document.conditions.conditions) == 1 and again.session.current == 4
+    assert not again.session.undo.isClean()

@@ -23,7 +23,7 @@ from meseta.window.theme import ThemeKeeper
 
 __all__ = ["make_application", "make_window", "open_window"]
 
-PREPARE = Channel("prepare", quick=True, shown=False)
+PREPARE = Channel("prepare", quick=True)
 SWITCH_SECOND = 0.0005
 """How long a worker's Python code keeps the interpreter once the window's thread asks for it: painting asks often."""
 
@@ -101,9 +101,11 @@ def prepare(window: MainWindow) -> None:
     def task(work: Any, _: Callable[[Any], None]) -> int:
         from meseta import kernels, study
 
-        work.check()
+        def report(done: int, total: int) -> None:
+            work.tell("getting ready (the first start takes a minute)", done, total, "parts")
+
         assert study is not None
-        return kernels.compile_all()
+        return kernels.compile_all(report)
 
     # What is loaded by now stays: the collector need not look at a million lasting objects, which would stop every
     # thread for a tenth of a second each time.

@@ -16,9 +16,11 @@ from meseta.errors import InputError, MesetaError
 from meseta.recipe import Recipe
 from meseta.resources import sample
 from meseta.selection import Decisions
+from meseta.window.conditions import ConditionSet
 from meseta.window.filecheck import FileCheck
 from meseta.window.jobs import Channel
 from meseta.window.opening import Opened, export_results, open_paths, read_unfinished, write_columns
+from meseta.window.places import Place, Places
 from meseta.window.session import Document
 
 if TYPE_CHECKING:
@@ -44,6 +46,7 @@ class FileCommands(QObject):
         super().__init__(window)
         self._window, self._session, self._recovery = window, window.session, recovery
         self._check: FileCheck | None = None
+        self._places = Places(window.settings)
         window.jobs.idle.connect(self._reading_stopped)
 
     def do_open(self) -> None:
@@ -132,15 +135,24 @@ class FileCommands(QObject):
         traces = opened.traces
         self._window.say(f"{typeset.integer(traces.traces)} traces, {typeset.integer(traces.samples)} samples")
 
-    def _show_opened(self, opened: Opened) -> None:
+    def _show_opened(self, opened: Opened, place: Place | None = None) -> None:
+        self.remember_place()
         self._window.status.complain(None)
-        document = Document(opened.recipe, opened.decisions)
+        place = place or self._places.recall(opened.paths)
+        conditions = ConditionSet() if place is None else place.conditions
+        document = Document(opened.recipe, opened.decisions, conditions)
         path = opened.paths[0] if opened.study is not None else ""
         growing = opened.files_read > 0
         self._session.open_traces(
             opened.traces, opened.name, document, study_path=path, derive=opened.derive, growing=growing
         )
         self._window.keeper.open(opened.study, opened.paths)
+        if place is not None:
+            place.show(self._session)
+
+    def remember_place(self) -> None:
+        """Keep where the user is in the open recording, to come back there."""
+        self._places.remember(self._window.keeper.paths, Place.of(self._session))
 
     def _reading_stopped(self) -> None:
         """Go on with what was read where the user stopped the reading."""
@@ -243,6 +255,7 @@ class FileCommands(QObject):
     def do_close(self) -> None:
         """Close the recording."""
         if self.may_leave():
+            self.remember_place()
             self._window.jobs.cancel()
             self._session.close_traces()
             self._window.keeper.open(None, ())
@@ -286,7 +299,7 @@ class FileCommands(QObject):
             return replace(open_paths(unfinished.paths, recipe, work), recipe=recipe, decisions=decisions)
 
         def done(opened: Opened) -> None:
-            self._opened(opened)
-            self._session.go_to(unfinished.current)
+            self._show_opened(opened, Place.parse(unfinished.place))
+            self._session.undo.resetClean()  # what was taken up is in no study yet
 
         self._window.jobs.submit(OPEN, "reading files", task, done, self._not_opened)

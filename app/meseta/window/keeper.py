@@ -11,6 +11,7 @@ from PySide6.QtCore import QObject, QTimer, Signal
 
 from meseta.errors import MesetaError, WorkError
 from meseta.window.opening import Unfinished, write_unfinished
+from meseta.window.places import Place
 from meseta.window.session import Change, Document, Session
 
 __all__ = ["Keeper"]
@@ -77,8 +78,9 @@ class Keeper(QObject):
         if session.analysis is None or self._study is not None or not self._paths:
             return
         document = session.document
+        place = Place.of(session)
         unfinished = Unfinished(
-            self._paths, document.recipe.text(), document.decisions.plain(), max(session.current, 0)
+            self._paths, document.recipe.text(), document.decisions.plain(), {} if place is None else place.plain()
         )
         path = self._recovery
         self._run(lambda: write_unfinished(path, unfinished))

@@ -374,6 +374,7 @@ class MainWindow(QMainWindow):
         if not self.commands.may_leave():
             event.ignore()
             return
+        self.commands.remember_place()
         self._keep_arrangement()
         self.shut_down(forget=True)
         event.accept()

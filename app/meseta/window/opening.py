@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import time
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -160,7 +160,7 @@ class Unfinished:
     paths: tuple[str, ...]
     recipe: str
     decisions: Mapping[str, Any]
-    current: int = 0
+    place: Mapping[str, Any] = field(default_factory=dict)
 
 
 def write_unfinished(path: Path, unfinished: Unfinished) -> None:
@@ -170,7 +170,7 @@ def write_unfinished(path: Path, unfinished: Unfinished) -> None:
         "paths": list(unfinished.paths),
         "recipe": unfinished.recipe,
         "decisions": unfinished.decisions,
-        "current": unfinished.current,
+        "place": unfinished.place,
     }
     path.parent.mkdir(parents=True, exist_ok=True)
     partial = path.with_suffix(".partial")
@@ -184,6 +184,6 @@ def read_unfinished(path: Path) -> Unfinished | None:
         plain = json.loads(path.read_text(encoding="utf-8"))
         if plain.get("schema") != 1 or not plain["paths"]:
             return None
-        return Unfinished(tuple(plain["paths"]), plain["recipe"], plain["decisions"], int(plain.get("current", 0)))
+        return Unfinished(tuple(plain["paths"]), plain["recipe"], plain["decisions"], plain.get("place", {}))
     except (OSError, ValueError, KeyError, TypeError, AttributeError):
         return None

@@ -59,6 +59,8 @@ class _ChangeCommand(QUndoCommand):
         return True
 
 
+UNDO_STEPS = 500
+"""Steps of undo that are kept; each holds a whole document."""
 Derive = Callable[[Recipe, Work], TraceSet]
 """Makes the traces anew by another calibration or cutting."""
 
@@ -87,12 +89,13 @@ class Session(QObject):
         self.jobs = jobs
         self.document = Document(recipe or Recipe())
         self.undo = QUndoStack(self)
+        self.undo.setUndoLimit(UNDO_STEPS)
         self.analysis: Analysis | None = None
         self.name = ""
         self.study_path: str = ""
         self.derive: Derive | None = None
         self.made_by = self.document.recipe
-        self.growing = False
+        self.growing = self._placed = False
         self.current = -1
         self.picture: TracePicture | None = None
         self.subset: SubsetPicture | None = None
@@ -150,6 +153,7 @@ class Session(QObject):
         self.analysis = Analysis(traces, self.document.recipe, self.document.decisions)
         self.name, self.study_path = name, study_path
         self.derive, self.made_by, self.growing = derive, self.document.recipe, growing
+        self._placed = False
         self.shown, self.errors, self.subset, self.picture = {}, {}, None, None
         self.span = self.default_span()
         self.drive_span = self.default_drive_span()
@@ -324,6 +328,12 @@ class Session(QObject):
         self.span = span
         self.span_changed.emit(span)
 
+    def look_from(self, span: Span, drive_span: tuple[float, float]) -> None:
+        """Show parts of both axes that the first results shall not change."""
+        self._placed = True
+        self.set_span(span)
+        self.set_drive_span(*drive_span)
+
     def set_drive_span(self, low: float, high: float) -> None:
         """Show another part of the displacement axis."""
         if np.isfinite(low) and np.isfinite(high) and 1e-9 < high - low < 1e9 and (low, high) != self.drive_span:
@@ -388,7 +398,7 @@ class Session(QObject):
 
     def take_result(self, name: str, shown: Shown) -> None:
         """Show a result that has arrived."""
-        first = name not in self.shown
+        first = name not in self.shown and not self._placed
         self.shown[name] = shown
         self.errors.pop(name, None)
         if name in ("counts", "histogram") and first:

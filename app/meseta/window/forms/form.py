@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from typing import Any
 
-from PySide6.QtCore import Qt
 from PySide6.QtWidgets import (
     QGridLayout,
     QHBoxLayout,
@@ -46,11 +45,20 @@ class _Row:
         self.reset = QToolButton()
         self.reset.setText("↺")
         self.reset.setAutoRaise(True)
+        self.reset.setFixedWidth(20)
         self.reset.setAccessibleName(f"Reset {info.title}")
         self.reset.clicked.connect(self._reset)
         tip = _tip(info)
         for widget in (self.title, self.editor.widget, self.unit):
             widget.setToolTip(tip)
+
+    def heading(self) -> QHBoxLayout:
+        """Return title and reset side by side: a reset that appears takes room from its own title only."""
+        heading = QHBoxLayout()
+        heading.setSpacing(2)
+        heading.addWidget(self.title, 1)
+        heading.addWidget(self.reset)
+        return heading
 
     def _propose(self, value: Any) -> None:
         try:
@@ -85,9 +93,6 @@ class _Row:
         self.complain("")
         changed = value != self.info.default
         self.title.setText(f"• {self.info.title}" if changed else self.info.title)
-        font = self.title.font()
-        font.setBold(changed)
-        self.title.setFont(font)
         self.reset.setVisible(changed)
         default = "not set" if self.info.default in (None, [], {}) else self.info.default
         self.reset.setToolTip(f"Reset to the default: {default} {typeset.unit_text(self.info.unit)}".rstrip())
@@ -118,19 +123,16 @@ class SectionForm(QWidget):
 
     @staticmethod
     def _place(grid: QGridLayout, line: int, row: _Row) -> int:
-        top = Qt.AlignmentFlag.AlignVCenter
         if row.info.kind not in ("number", "integer", "truth"):
-            grid.addWidget(row.title, line, 0, 1, 3)
-            grid.addWidget(row.reset, line, 3)
-            grid.addWidget(row.editor.widget, line + 1, 0, 1, 4)
-            grid.addWidget(row.wrong, line + 2, 0, 1, 4)
+            grid.addLayout(row.heading(), line, 0, 1, 3)
+            grid.addWidget(row.editor.widget, line + 1, 0, 1, 3)
+            grid.addWidget(row.wrong, line + 2, 0, 1, 3)
             return line + 3
-        grid.addWidget(row.title, line, 0, top)
+        grid.addLayout(row.heading(), line, 0)
         row.editor.widget.setFixedWidth(76)
         grid.addWidget(row.editor.widget, line, 1)
         grid.addWidget(row.unit, line, 2)
-        grid.addWidget(row.reset, line, 3)
-        grid.addWidget(row.wrong, line + 1, 0, 1, 4)
+        grid.addWidget(row.wrong, line + 1, 0, 1, 3)
         return line + 2
 
     def _buttons(self, help_page: str) -> QHBoxLayout:
