@@ -19,7 +19,7 @@ from meseta.window.session import Session
 from meseta.window.visibility import Lazy
 
 pyqtgraph.setConfigOption("mouseRateLimit", -1)  # no move of a test's mouse is left out, however fast it comes
-WAIT_MS = 120_000
+WAIT_MS = 300_000
 """Upper bound of a wait on a condition: only a hang reaches it."""
 
 
