@@ -214,6 +214,15 @@ def test_a_full_disk_is_said_and_leaves_nothing(tmp_path, monkeypatch):
     assert "TMPDIR" in error.remedy
 
 
+def test_a_damaged_heap_of_rows_is_refused_before_the_library_walks_it(tmp_path):
+    content = bytearray(ORIGINALS["rows.h5"])
+    heap = content.index(b"GCOL")
+    content[heap + 24 : heap + 32] = bytes(8)  # the first object has no size: the next is the same again
+    with intake.open_recording(written(tmp_path, "heap.h5", bytes(content))) as recording:
+        assert any("/conductance_G0" in doubt and "damaged" in doubt for doubt in recording.doubts)
+    assert intake.read(written(tmp_path, "whole.h5", ORIGINALS["rows.h5"])).lengths.tolist() == [20, 21, 22, 23]
+
+
 class Trap:
     def __reduce__(self):
         return (os.mkdir, ("should-never-exist",))
@@ -279,7 +288,7 @@ def _originals() -> dict[str, bytes]:
         rows = file.create_dataset("conductance_G0", (4,), h5py.vlen_dtype("f4"))
         for row in range(4):
             rows[row] = np.linspace(2, 1, 20 + row)
-        file.create_dataset("packed", data=np.stack([values] * 4), chunks=(2, 64), **hdf5plugin.LZ4())
+        file.create_dataset("remarks", data=np.arange(256.0).reshape(4, 64), chunks=(2, 64), **hdf5plugin.LZ4())
     found["rows.h5"] = stream.getvalue()
     stream = io.BytesIO()
     with zipfile.ZipFile(stream, "w", zipfile.ZIP_DEFLATED) as archive:

@@ -7,7 +7,9 @@ file is ever opened.  Link loops are met by remembering the address of every obj
 from __future__ import annotations
 
 import contextlib
+import struct
 import threading
+import zlib
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -36,6 +38,8 @@ __all__ = [
 
 BOMB_RATIO: Final = 500
 BOMB_BYTE: Final = 64 << 20
+REFERENCE: Final = np.dtype([("length", "<u4"), ("address", "<u8"), ("index", "<u4")])
+REFERENCE_BYTE: Final = REFERENCE.itemsize
 CACHED_BYTE: Final = 64 << 20
 
 
@@ -178,7 +182,7 @@ def _add_dataset(tree: Tree, name: str, dataset: Any, file_byte: int) -> None:
     elif dtype.kind in "biuf" or dtype.names:
         tree.nodes.append(Node(name, dataset, tuple(int(n) for n in shape), dtype, _attributes(dataset)))
     elif (inner := h5py.check_vlen_dtype(dtype)) is not None and np.dtype(inner).kind in "iuf" and len(shape) == 1:
-        _add_ragged(tree, name, dataset, np.dtype(inner))
+        _add_ragged(tree, name, dataset, np.dtype(inner), file_byte)
     elif h5py.check_string_dtype(dtype) is not None and count <= 1_000_000:
         text = np.asarray(dataset.asstr(errors="replace")[()]).astype(np.str_)
         if count == 1:
@@ -189,14 +193,87 @@ def _add_dataset(tree: Tree, name: str, dataset: Any, file_byte: int) -> None:
         tree.refused.append(f"{name} holds objects, which are not read")
 
 
-def _add_ragged(tree: Tree, name: str, dataset: Any, dtype: np.dtype[Any]) -> None:
+def _add_ragged(tree: Tree, name: str, dataset: Any, dtype: np.dtype[Any], file_byte: int) -> None:
+    """Add rows of different length, whose claims are checked before the library makes room for them."""
     try:
-        rows = Ragged.of(dataset, dtype)
-    except (OSError, RuntimeError, ValueError, TypeError, MemoryError):
-        tree.refused.append(f"{name} is damaged and was not read")
-        return
-    if rows.shape[0]:
-        tree.nodes.append(Node(name, rows, rows.shape, dtype, _attributes(dataset)))
+        references = _references(dataset, file_byte)
+        places = None if references is None else _row_places(dataset, references, dtype.itemsize, file_byte)
+    except (OSError, RuntimeError, ValueError, zlib.error, struct.error):
+        references = places = None
+    if references is None or places is None:
+        tree.refused.append(
+            f"{name} has rows of different length that are damaged, or packed in a way that is not known"
+        )
+    elif (total := references["length"].sum(dtype=np.int64)) > 0:
+        offsets = np.concatenate([[0], np.cumsum(references["length"], dtype=np.int64)]).astype(np.int64)
+        rows = Ragged(_place_of(dataset), dataset.file.filename, offsets, places, dtype)
+        tree.nodes.append(Node(name, rows, (int(total),), dtype.newbyteorder("="), _attributes(dataset)))
+
+
+def _row_places(
+    dataset: Any, references: npt.NDArray[Any], item_byte: int, file_byte: int
+) -> npt.NDArray[np.int64] | None:
+    """Return the byte at which each row begins; None where a heap is not whole.
+
+    The heaps are walked here, since the library may walk a damaged one for ever (HDF5 File Format Specification, global
+    heap).
+    """
+    places = np.zeros(len(references), np.int64)
+    with Path(dataset.file.filename).open("rb") as file:
+        for address in np.unique(references["address"][references["length"] > 0]).tolist():
+            file.seek(address)
+            mark, size = struct.unpack("<4s4xQ", file.read(16))
+            if mark != b"GCOL" or not 16 <= size <= file_byte:
+                return None
+            found = _heap_objects(file.read(size - 16), address + 16)
+            for row in np.flatnonzero((references["address"] == address) & (references["length"] > 0)).tolist():
+                place, held = found.get(int(references["index"][row]), (0, -1))
+                if held < int(references["length"][row]) * item_byte:
+                    return None
+                places[row] = place
+    return places
+
+
+def _heap_objects(body: bytes, begin: int) -> dict[int, tuple[int, int]]:
+    """Return index -> (first byte, bytes) of the objects of a heap."""
+    found, at = {}, 0
+    while at + 16 <= len(body):
+        index, size = struct.unpack_from("<H6xQ", body, at)
+        if index == 0 or size > len(body) - at - 16:
+            break
+        found[index] = (begin + at + 16, size)
+        at += 16 + -(-size // 8) * 8
+    return found
+
+
+def _references(dataset: Any, file_byte: int) -> npt.NDArray[Any] | None:
+    """Return where each row lies, as its reference states it; None where that cannot be looked at.
+
+    A reference is a length of 4 bytes, an address of 8, an index of 4 (HDF5 File Format Specification, variable-length
+    data in a global heap).
+    """
+    count, plist = len(dataset), dataset.id.get_create_plist()
+    if count * REFERENCE_BYTE > file_byte * BOMB_RATIO or dataset.file.userblock_size:
+        return None
+    if dataset.chunks is None:
+        place = dataset.id.get_offset()
+        if place is None or count * REFERENCE_BYTE > file_byte:
+            return None
+        with Path(dataset.file.filename).open("rb") as file:
+            file.seek(place)
+            raw = file.read(count * REFERENCE_BYTE)
+    elif all(plist.get_filter(n)[0] == h5py.h5z.FILTER_DEFLATE for n in range(plist.get_nfilters())):
+        size = dataset.chunks[0]
+        parts = []
+        for first in range(0, count, size):
+            part = dataset.id.read_direct_chunk((first,))[1]
+            if plist.get_nfilters():
+                part = zlib.decompressobj().decompress(part, size * REFERENCE_BYTE)
+            parts.append(part)
+        raw = b"".join(parts)[: count * REFERENCE_BYTE]
+    else:
+        return None
+    return None if len(raw) < count * REFERENCE_BYTE else np.frombuffer(raw, REFERENCE)
 
 
 def _size_fault(dataset: Any, shape: tuple[int, ...], dtype: np.dtype[Any], file_byte: int) -> str:
@@ -338,36 +415,36 @@ class Layer:
 class Ragged:
     """A dataset whose elements are rows of numbers of different length, end to end."""
 
-    dataset: Any
+    path: str
+    filename: str
     offsets: npt.NDArray[np.int64]
-    dtype: np.dtype[Any]
+    places: npt.NDArray[np.int64]
+    stored: np.dtype[Any]
 
-    @classmethod
-    def of(cls, dataset: Any, dtype: np.dtype[Any]) -> Ragged:
-        """Return the rows of a dataset; their lengths are asked for by reading them once."""
-        step = 64
-        lengths = [len(row) for at in range(0, len(dataset), step) for row in dataset[at : at + step]]
-        return cls(dataset, np.concatenate([[0], np.cumsum(lengths)]).astype(np.int64), dtype)
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """Type of the numbers."""
+        return self.stored.newbyteorder("=")
 
     @property
     def shape(self) -> tuple[int]:
         """Number of numbers in all rows."""
         return (int(self.offsets[-1]),)
 
-    @property
-    def path(self) -> str:
-        """Where the dataset lies."""
-        return _place_of(self.dataset)
-
     def __getitem__(self, key: slice) -> npt.NDArray[Any]:
         """Return numbers ``start`` to ``stop``."""
         start, stop, _ = key.indices(self.shape[0])
-        if stop <= start:
-            return np.empty(0, self.dtype)
-        first = int(np.searchsorted(self.offsets, start, side="right")) - 1
-        last = int(np.searchsorted(self.offsets, stop, side="left"))
-        rows = np.concatenate(list(self.dataset[first:last]))
-        return rows[start - self.offsets[first] : stop - self.offsets[first]]
+        found = np.empty(max(stop - start, 0), self.dtype)
+        row, at = int(np.searchsorted(self.offsets, start, side="right")) - 1, start
+        with Path(self.filename).open("rb") as file:
+            while at < stop:
+                end = min(stop, int(self.offsets[row + 1]))
+                begin = int(self.places[row]) + (at - int(self.offsets[row])) * self.stored.itemsize
+                file.seek(begin)
+                part = np.frombuffer(file.read((end - at) * self.stored.itemsize), self.stored)
+                found[at - start : end - start] = part
+                at, row = end, row + 1
+        return found
 
 
 @dataclass(frozen=True)

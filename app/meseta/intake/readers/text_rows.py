@@ -19,7 +19,8 @@ __all__ = ["Columns", "Rows", "numbers"]
 
 MANY_THREADS_BYTE: Final = 8 << 20
 _NULLS: Final = ["", "nan", "NaN", "NAN", "NA", "N/A", "n/a", "null", "-", "--", "#N/A", "1.#QNAN", "-nan"]
-_NUMBER: Final = r"(?:[-+]?\d+(?:[.,]\d+)?(?:[eE][-+]?\d+)?)"
+_NUMBER: Final = r"[-+.,]*\d[-+.,\d]*"
+"""A run of digits and signs, so that two of them never touch: a line is matched in one go, whatever stands in it."""
 Columns = list[npt.NDArray[np.float64]]
 
 
