@@ -30,6 +30,7 @@ _SUB_QUANTUM_G0 = 0.4
 _SUB_QUANTUM_FWHM = 0.1
 _ROUNDS = 4
 _LEAST_PART = 0.02
+_CONTACT_G0 = 0.75
 _LEAST_REACH = 0.7
 _FEW = 100
 
@@ -102,8 +103,8 @@ class Chooser:
     def _found(self) -> list[Candidate]:
         """Return the places that look like peaks, those that hold the most samples of their own first.
 
-        Above one quantum those that hold a fair part come in the order of conductance: contacts are thinned step by
-        step, and where the openings begin every trace leaves samples.
+        From about one quantum on those that hold a fair part come in the order of conductance: contacts are thinned
+        step by step, and where the openings begin every trace leaves samples.
         """
         u, settings = self.histogram.grid.u_edges, self.settings
         logarithmic = self.histogram.grid.axis == "logarithmic"
@@ -122,7 +123,7 @@ class Chooser:
             self.histogram.traces,
         )
         large = [place for place in found if place.share >= _LEAST_SHARE]
-        metal = [place for place in large if not self._below_quantum(place.position_u)]
+        metal = [place for place in large if self._g0(place.position_u) >= _CONTACT_G0]
         least = _LEAST_PART * max((place.own * place.share for place in metal), default=0.0)
         first = sorted((p for p in metal if p.own * p.share >= least), key=lambda place: place.position_u)
         return [*first, *sorted((p for p in large if p not in first), key=lambda place: -place.own * place.share)]

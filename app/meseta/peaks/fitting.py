@@ -18,7 +18,7 @@ Floats = npt.NDArray[np.float64]
 
 _TOLERANCE = 1e-12
 _STEPS = 4000
-_REFIT_TOLERANCE = 1e-7
+_REFIT_TOLERANCE = 1e-8
 
 
 @dataclass(frozen=True)
