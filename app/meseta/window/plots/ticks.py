@@ -6,25 +6,30 @@ from typing import Any
 
 import numpy as np
 import pyqtgraph as pg
+from PySide6.QtCore import Qt
+from PySide6.QtGui import QFontMetricsF
 
 from meseta import typeset
 from meseta.window.theme import Theme
 
-__all__ = ["ConductanceAxis", "LogCountAxis", "PlainAxis"]
+__all__ = ["ConductanceAxis", "LogCountAxis", "PlainAxis", "fitting"]
 
 
 class _Axis(pg.AxisItem):
     """An axis without frame or grid, in the colours of the theme."""
 
+    _text = ""
+    labelText: str
+
     def __init__(self, orientation: str, text: str = "") -> None:
         super().__init__(orientation, maxTickLength=-4)
-        self.enableAutoSIPrefix(False)
         self._text, self._named = text, True
+        self.enableAutoSIPrefix(False)
         self.setStyle(autoExpandTextSpace=False, autoReduceTextSpace=False, hideOverlappingLabels=True)
 
     def say(self, text: str) -> None:
         """Write what the axis shows, with its unit."""
-        if text != self._text or self.labelText != text:
+        if text != self._text or not self.labelText:
             self._text = text
             self._write_label()
 
@@ -37,6 +42,16 @@ class _Axis(pg.AxisItem):
         self.setLabel(self._text, **style)
         self.showLabel(self._named and bool(self._text))
         self.resizeEvent()  # pyqtgraph leaves a changed label where the old one was centred
+
+    def resizeEvent(self, event: Any = None) -> None:
+        """Shorten what a narrow horizontal axis shows: a unit alone, strokes for "per", or as much as there is room."""
+        width = self.size().width()
+        if self.label is not None and self.orientation == "bottom" and self._text and width > 0:
+            shown = fitting(self._text, QFontMetricsF(self.label.font()), width - 8)
+            if shown != self.labelText:
+                self.labelText = shown
+                self.label.setHtml(self.labelString())
+        super().resizeEvent(event)
 
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""
@@ -130,6 +145,15 @@ class PlainAxis(_Axis):
         if self._whole:
             return [typeset.integer(round(value)) for value in values]
         return _plain_texts(values, spacing)
+
+
+def fitting(text: str, metrics: QFontMetricsF, width: float) -> str:
+    """Return the longest form of an axis title that fits a width in pixels."""
+    unit = text.partition("(")[2].rstrip(")")
+    for form in (text, text.replace(" per ", "/"), unit):
+        if form and metrics.horizontalAdvance(form) <= width:
+            return form
+    return metrics.elidedText(text.replace(" per ", "/"), Qt.TextElideMode.ElideRight, width)
 
 
 def _clean(value: float) -> float:
