@@ -14,7 +14,8 @@ import pytest
 from test_intake_layouts import WRITERS, assert_same
 
 from meseta import intake
-from meseta.intake import open_recording, traces_from
+from meseta.errors import InputError
+from meseta.intake import open_recording, room, traces_from
 from meseta.intake.readers import hdf5_tree, numpy_files, spool, tdms, text, text_stream
 from meseta.recipe import Recipe
 from meseta.work import Work
@@ -140,3 +141,31 @@ def test_gathering_and_checking_a_long_record_takes_no_memory_for_it(tmp_path):
     done = subprocess.run(arguments, capture_output=True, text=True, check=False, env={**os.environ})
     assert done.returncode == 0, done.stderr
     assert int(done.stdout.split()[-1]) < 40_000
+
+
+def _write_group(path: Path, samples: int) -> Path:
+    with h5py.File(path, "w") as file:
+        made = file.create_dataset("trace_0/conductance", data=np.geomspace(5.0, 1e-5, samples).astype(np.float32))
+        made.attrs["unit"] = "G0"
+        file.create_dataset("trace_0/displacement", data=np.linspace(0.0, 2.0, samples)).attrs["unit"] = "nm"
+    return path
+
+
+def test_what_is_larger_than_memory_is_refused_with_the_way_round_it(tmp_path, monkeypatch):
+    path = _write_group(tmp_path / "one.h5", 1000)
+    monkeypatch.setattr(room, "machine_byte", lambda: 4000)
+    with pytest.raises(InputError, match="GB of memory") as refused:
+        intake.read(path)
+    assert "gather" in refused.value.remedy
+    with open_recording(path, Recipe()) as recording:
+        assert traces_from([recording], stream=True).samples == 1000
+    monkeypatch.setattr(room, "machine_byte", lambda: None)
+    assert intake.read(path).samples == 1000
+
+
+def test_files_that_are_together_larger_than_memory_are_refused(tmp_path, monkeypatch):
+    paths = [_write_group(tmp_path / f"{name}.h5", 1000) for name in "abc"]
+    monkeypatch.setattr(room, "machine_byte", lambda: 9000 * 2.5 / room.MOST_SHARE)
+    with pytest.raises(InputError, match="of 3 files"):
+        intake.read(paths)
+    assert intake.read(paths[:2]).samples == 2000

@@ -18,6 +18,7 @@ from meseta.intake.cutting import PULL, PUSH, Cut, cut
 from meseta.intake.drive import DriveAxis, drive_of, sample_interval
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.roles import settle_roles, unmatched
+from meseta.intake.room import check_room
 from meseta.intake.rows import BLOCK_SAMPLES, RawSpans, SharedAxis, StreamedRow
 from meseta.intake.units import unit_factor
 from meseta.recipe import Recipe
@@ -82,8 +83,20 @@ class Part:
 
     # -- all in memory ----------------------------------------------------------------------------------------------
 
+    @property
+    def memory_byte(self) -> int:
+        """What the samples take once loaded: conductance, displacement and what else was recorded in float32, flags."""
+        return self.samples * (4 * (2 + len(self.extras)) + 1)
+
     def load(self, work: Work) -> Part:
-        """Read and calibrate all samples into memory; returns itself."""
+        """Read and calibrate all samples into memory; returns itself.
+
+        Raises
+        ------
+        InputError
+            Where they would take more memory than the machine has to spare.
+        """
+        check_room(self.memory_byte, self.recording.source.name)
         total = self.samples
         self.conductance = np.empty(total, np.float32)
         self.carried = {channel.name: np.empty(total, np.float32) for channel in self.extras}

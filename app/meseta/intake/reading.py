@@ -17,6 +17,7 @@ from meseta.intake.joining import joined
 from meseta.intake.opening import OpenContext, open_recording
 from meseta.intake.readers.unpack import sha256_of
 from meseta.intake.recording import Recording
+from meseta.intake.room import check_room
 from meseta.recipe import Recipe
 from meseta.traces import TraceSet
 from meseta.work import Work
@@ -74,9 +75,12 @@ def read(
         except InputError as error:
             return error
 
+    taken = 0
     for found in work.each(take, files, "reading files", unit="files") if not one_file else map(take, files):
         if isinstance(found, Part):
             parts.append(found)
+            taken += found.memory_byte
+            check_room(taken, f"{len(parts)} of {len(files)} files")
             if so_far is not None and not one_file:
                 so_far(len(parts), lambda: joined([part for part in parts if part.traces], recipe, {}))
         elif strict or one_file:
