@@ -25,6 +25,15 @@ def test_links_lead_to_pages_and_pages_have_a_title(name):
     assert {link.partition(".md")[0] for link in links} <= set(help_pages())
 
 
+def test_no_two_pages_have_one_title_and_the_list_is_in_order(make):
+    window = make()
+    window.show_help("window")
+    titles = [window.help.list.item(row).text() for row in range(window.help.list.count())]
+    assert len(set(titles)) == len(titles) == len(help_pages())
+    assert titles == sorted(titles, key=str.casefold)
+    window.help.close()
+
+
 def test_a_page_is_shown_and_its_link_followed(make):
     window = make()
     window.show_help("window")
@@ -33,4 +42,5 @@ def test_a_page_is_shown_and_its_link_followed(make):
     assert "becomes a condition" in window.help.page.toPlainText()
     window.run_action("keys")
     assert "Reject this trace" in window.help.page.toPlainText()
+    assert window.help.list.currentRow() == -1, "the sheet of keys is none of the pages"
     window.help.close()

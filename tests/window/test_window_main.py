@@ -351,6 +351,16 @@ def test_the_tables_jump_to_the_trace(window):
     assert window.session.current == window.session.result("plateaus").trace[row]
 
 
+def test_no_number_of_a_table_loses_its_power_of_ten(window):
+    window.docks["plateaus"].raise_()
+    panel(window, "plateaus").refresh()
+    view, model = panel(window, "plateaus").table.view, panel(window, "plateaus").table.model
+    place = [column.name for column in model.columns].index("level_g0")
+    texts = [model.index(row, place).data() for row in range(model.rowCount())]
+    assert any("×" in text for text in texts[1:])
+    assert view.columnWidth(place) >= max(view.fontMetrics().horizontalAdvance(text) for text in texts)
+
+
 def test_copied_rows_read_back_as_the_numbers_of_the_result(window):
     panel(window, "plateaus").refresh()
     panel(window, "plateaus").table.copy()

@@ -83,7 +83,8 @@ def keys_page(actions: Sequence[QAction]) -> str:
         if where != menu:
             menu = where
             rows.append(f"<tr><td colspan=2><br><b>{menu}</b></td></tr>")
-        rows.append(f"<tr><td>{action.text().replace('&', '')}</td><td>&nbsp;&nbsp;{keys}</td></tr>")
+        name = action.text().replace("&", "").partition(": ")[0]  # undo and redo name what they would undo as well
+        rows.append(f"<tr><td>{name}</td><td>&nbsp;&nbsp;{keys}</td></tr>")
     mouse = (
         ("drag on a plot", "draw a window: it becomes a condition"),
         ("drag on the record strip", "choose a stretch of the record"),

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
-from PySide6.QtCore import QUrl
+from PySide6.QtCore import Qt, QUrl
 from PySide6.QtGui import QDesktopServices, QKeySequence, QShortcut
 from PySide6.QtWidgets import (
     QDialog,
@@ -23,9 +23,10 @@ __all__ = ["HelpBrowser", "help_pages"]
 
 
 def help_pages() -> dict[str, Path]:
-    """Return every page by its name."""
+    """Return every page by its name, in the order of their titles."""
     folder = resource("help")
-    return {path.stem: path for path in sorted(folder.glob("*.md"))} if folder.is_dir() else {}
+    paths = sorted(folder.glob("*.md"), key=lambda path: _title(path).casefold()) if folder.is_dir() else []
+    return {path.stem: path for path in paths}
 
 
 def _title(path: Path) -> str:
@@ -43,7 +44,7 @@ class HelpBrowser(QDialog):
     def __init__(self, parent: QWidget) -> None:
         super().__init__(parent)
         self.setWindowTitle("Meseta help")
-        self.resize(820, 620)
+        self.resize(880, 640)
         self.pages = help_pages()
         self.list, self.page = QListWidget(), QTextBrowser()
         self.list.setAccessibleName("Pages of the help")
@@ -53,11 +54,12 @@ class HelpBrowser(QDialog):
         for name, path in self.pages.items():
             self.list.addItem(_title(path))
             self.list.item(self.list.count() - 1).setToolTip(name)
+        self.list.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
         self.list.currentRowChanged.connect(self._chosen)
         split = QSplitter()
         split.addWidget(self.list)
         split.addWidget(self.page)
-        split.setSizes([220, 600])
+        split.setSizes([250, 620])
         close = QPushButton("Close")
         close.clicked.connect(self.close)
         row = QHBoxLayout()
@@ -82,6 +84,7 @@ class HelpBrowser(QDialog):
 
     def show_html(self, html: str) -> None:
         """Show text made by the window itself, the sheet of keys say."""
+        self.list.setCurrentRow(-1)  # it is none of the pages
         self.page.setHtml(html)
         self.show()
         self.raise_()

@@ -14,6 +14,7 @@ from PySide6.QtGui import QColor, QFont, QFontDatabase, QGuiApplication, QPalett
 from PySide6.QtWidgets import QApplication
 
 from meseta.colours import DARK, LIGHT, Palette, ramp, rgb_of_hex
+from meseta.resources import resource
 
 __all__ = ["Appearance", "Theme", "ThemeKeeper", "fixed_digits"]
 
@@ -83,7 +84,9 @@ class Theme:
 
     def style_sheet(self) -> str:
         """Return the few rules that the palette cannot express: calm surface, hairlines, no frames."""
-        return _SHEET.format(**{name: getattr(self.palette, name) for name in Palette.__annotations__})
+        colours = {name: getattr(self.palette, name) for name in Palette.__annotations__}
+        # A drop-down box that a sheet styles loses the arrow of the style: without one it looks like a line to type in.
+        return _SHEET.format(**colours, chevron=resource("icons", "chevron.svg").as_posix())
 
 
 def _table(rgb: npt.NDArray[Any]) -> npt.NDArray[np.uint8]:
@@ -177,6 +180,8 @@ QLineEdit:focus, QComboBox:focus, QAbstractSpinBox:focus, QPlainTextEdit:focus, 
 QTextBrowser:focus {{ border-color: {selected}; }}
 QLineEdit[wrong="true"] {{ border: 1px solid {fit}; }}
 QComboBox::drop-down {{ border: 0; width: 16px; }}
+QComboBox::down-arrow {{ image: url("{chevron}"); width: 10px; height: 10px; }}
+QDialogButtonBox {{ dialogbuttonbox-buttons-have-icons: 0; }}
 QPushButton {{ background: {panel}; color: {ink}; border: 1px solid {hairline}; border-radius: 3px;
   padding: 4px 12px; }}
 QPushButton:hover {{ border-color: {quiet}; }}

@@ -5,10 +5,21 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from typing import Any
 
+import numpy as np
 import numpy.typing as npt
 from PySide6.QtCore import QModelIndex, QPoint, Qt, QTimer
 from PySide6.QtGui import QGuiApplication, QKeySequence, QShortcut
-from PySide6.QtWidgets import QAbstractItemView, QHBoxLayout, QLabel, QLineEdit, QMenu, QTableView, QVBoxLayout, QWidget
+from PySide6.QtWidgets import (
+    QAbstractItemView,
+    QHBoxLayout,
+    QHeaderView,
+    QLabel,
+    QLineEdit,
+    QMenu,
+    QTableView,
+    QVBoxLayout,
+    QWidget,
+)
 
 from meseta import typeset
 from meseta.errors import CallError
@@ -20,6 +31,8 @@ from meseta.window.theme import fixed_digits
 __all__ = ["TablePanel"]
 
 COPIED_AT_MOST = 1_000_000
+TYPICAL_ROWS = 40
+"""Rows looked at for the width of a column."""
 
 
 class TablePanel(QWidget):
@@ -37,6 +50,8 @@ class TablePanel(QWidget):
         What stands there while there is nothing.
     filtered : bool
         Whether it has a filter line.
+    elastic : str
+        Column of long texts that takes the width the others leave, broken into lines.
     """
 
     def __init__(
@@ -48,6 +63,7 @@ class TablePanel(QWidget):
         jump: Callable[[int], None] | None = None,
         empty: str = "",
         filtered: bool = True,
+        elastic: str = "",
     ) -> None:
         super().__init__()
         self.frame, self.name, self._jump, self._empty = frame, name, jump, empty
@@ -57,6 +73,8 @@ class TablePanel(QWidget):
         self.count = QLabel("")
         self.words = QLabel(empty)
         self._prepare(filtered)
+        if elastic:
+            self._stretch(elastic)
         self.menu_entries: list[tuple[str, Callable[[], None]]] = []
         self._later = QTimer(self)
         self._later.setSingleShot(True)
@@ -107,6 +125,14 @@ class TablePanel(QWidget):
         self.filter.setVisible(filtered)
         self._say()
 
+    def _stretch(self, name: str) -> None:
+        header = self.view.horizontalHeader()
+        header.setStretchLastSection(False)
+        place = [column.name for column in self.model.columns].index(name)
+        header.setSectionResizeMode(place, QHeaderView.ResizeMode.Stretch)
+        self.view.setWordWrap(True)
+        self.view.verticalHeader().setSectionResizeMode(QHeaderView.ResizeMode.ResizeToContents)
+
     # -- content -----------------------------------------------------------------------------------------------------
 
     def show_columns(self, data: Mapping[str, npt.NDArray[Any]]) -> None:
@@ -118,10 +144,9 @@ class TablePanel(QWidget):
     def _fit_columns(self) -> None:
         metrics = self.view.fontMetrics()
         for place, column in enumerate(self.model.columns):
-            shown = [
-                column.title,
-                *(str(self.model.index(row, place).data() or "") for row in range(min(self.model.rowCount(), 12))),
-            ]
+            values = self.model.data_columns.get(column.name, ())
+            # Whatever the order and the filter, no number may lose its end: "5.34 …" hides the power of ten.
+            shown = [column.title, *(str(column.show(values[row], row) or "") for row in _typical(np.asarray(values)))]
             width = max(metrics.horizontalAdvance(text) for text in shown) + 22
             self.view.setColumnWidth(place, min(max(width, 44), 220))
 
@@ -190,6 +215,17 @@ class TablePanel(QWidget):
         menu.addAction("Export as CSV …", self.export)
         menu.popup(self.view.viewport().mapToGlobal(place))
         menu.aboutToHide.connect(lambda: QTimer.singleShot(0, menu.deleteLater))
+
+
+def _typical(values: npt.NDArray[Any]) -> list[int]:
+    """Return rows that stand for all in width: some over the whole, the extremes, and the number nearest to zero."""
+    rows = set(np.linspace(0, len(values) - 1, min(len(values), TYPICAL_ROWS)).astype(int).tolist())
+    if values.dtype.kind in "iuf":
+        known = np.flatnonzero(np.isfinite(values) & (values != 0))
+        if len(known):
+            numbers = values[known]
+            rows |= {int(known[place]) for place in (numbers.argmin(), numbers.argmax(), np.abs(numbers).argmin())}
+    return sorted(rows)
 
 
 def _cell(value: Any) -> str:

@@ -145,11 +145,12 @@ class RulesTable(_Panel):
     def __init__(self, frame: Frame) -> None:
         columns = (
             Column("rule", "rule", plain),
-            Column("dropped_alone", "drops alone", plain, "traces that this rule alone would drop"),
-            Column("dropped_in_sequence", "drops in turn", plain, "traces that this rule drops after those before it"),
+            Column("dropped_alone", "alone", plain, "traces that this rule alone would drop"),
+            Column("dropped_in_sequence", "in turn", plain, "traces that this rule drops after those before it"),
             Column("left", "left", plain, "traces left after this rule"),
         )
-        table = TablePanel(frame, "rules", columns, filtered=False, empty="What each rule took will stand here.")
+        empty = "What each rule took will stand here."
+        table = TablePanel(frame, "rules", columns, filtered=False, empty=empty, elastic="rule")
         super().__init__(frame, table)
         frame.session.result_changed.connect(lambda name: self.lazy.ask() if name == "selection" else None)
 
