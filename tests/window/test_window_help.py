@@ -43,4 +43,5 @@ def test_a_page_is_shown_and_its_link_followed(make):
     window.run_action("keys")
     assert "Reject this trace" in window.help.page.toPlainText()
     assert window.help.list.currentRow() == -1, "the sheet of keys is none of the pages"
+    assert window.help.focusWidget() is window.help.page, "a list that gets the focus would choose its first page"
     window.help.close()

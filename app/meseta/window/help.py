@@ -84,10 +84,11 @@ class HelpBrowser(QDialog):
 
     def show_html(self, html: str) -> None:
         """Show text made by the window itself, the sheet of keys say."""
-        self.list.setCurrentRow(-1)  # it is none of the pages
-        self.page.setHtml(html)
+        self.page.setFocus()  # a list that gets the focus chooses its first page
         self.show()
         self.raise_()
+        self.list.setCurrentRow(-1)  # it is none of the pages
+        self.page.setHtml(html)
 
     def _chosen(self, row: int) -> None:
         if 0 <= row < len(self.pages):

@@ -131,6 +131,7 @@ class TablePanel(QWidget):
         place = [column.name for column in self.model.columns].index(name)
         header.setSectionResizeMode(place, QHeaderView.ResizeMode.Stretch)
         self.view.setWordWrap(True)
+        self.view.setShowGrid(True)
         self.view.verticalHeader().setSectionResizeMode(QHeaderView.ResizeMode.ResizeToContents)
 
     # -- content -----------------------------------------------------------------------------------------------------
