@@ -338,7 +338,7 @@ def test_statement_of_worth() -> None:
     counts = matrix_of(np.random.default_rng(13).poisson(5, (2000, 12)), GRID)
     drawn = resample(counts, counts.used, trace_table(2000), RECIPE.histogram, RECIPE.resampling, WORK)
     assert drawn.statement() == (
-        "2,000 traces are as much as 2,000 independent ones (no memory along the record was found); "
-        "half the error needs 6,000 more traces like these"
+        "2\u202f000 traces are as much as 2\u202f000 independent ones (no memory along the record was found); "
+        "half the error needs 6\u202f000 more traces like these"
     )
     assert replace(drawn, rows=drawn.rows[:0]).statement() == "no trace is kept"

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from meseta import typeset
 from meseta.histograms.distribution import conductance_histogram
 from meseta.histograms.pairing import Partners
 from meseta.histograms.resampling import restricted
@@ -200,7 +201,7 @@ def _pair_sentence(traces: int, shares: list[float], correlation: float, chance:
         return "no trace is kept"
     if not np.isfinite(correlation):
         return "one of the two ranges does not vary over the traces"
-    seen = f"{100 * shares[2]:.3g} % of {traces:,} traces are rich in both"
+    seen = f"{100 * shares[2]:.3g} % of {typeset.integer(traces)} traces are rich in both"
     expected = f"{100 * shares[0] * shares[1]:.3g} % would be if the two were unrelated"
     limit = "beyond" if abs(correlation) > chance else "within"
     return f"{seen}; {expected}; correlation {correlation:+.3f}, {limit} ±{chance:.2g} of a single pair by chance"

@@ -9,6 +9,7 @@ from typing import Any, Final
 import numpy as np
 import numpy.typing as npt
 
+from meseta import typeset
 from meseta.histograms.plottable import PlottableAxis, PlottableHistogram
 from meseta.histograms.rows import stacked
 from meseta.tables import Table
@@ -210,15 +211,18 @@ class Resampling:
             return "no trace is kept"
         as_many = "as much as" if worth == traces else "worth"
         return (
-            f"{traces:,} traces are {as_many} {worth:,} independent ones ({self.reason}); "
+            f"{typeset.integer(traces)} traces are {as_many} {typeset.integer(worth)} independent ones "
+            f"({self.reason}); "
             f"half the error needs {self.to_halve_error()}"
         )
 
     def to_halve_error(self) -> str:
         """Say how much more would have to be measured for half the statistical error."""
         if self.specimens:
-            return f"{3 * self.specimens:,} more specimens; more traces of these {self.specimens} would not"
-        return f"{3 * len(self.rows):,} more traces like these"
+            return (
+                f"{typeset.integer(3 * self.specimens)} more specimens; more traces of these {self.specimens} would not"
+            )
+        return f"{typeset.integer(3 * len(self.rows))} more traces like these"
 
     def interval(
         self, estimate: npt.ArrayLike, replicates: npt.ArrayLike, level: float = 0.95

@@ -86,7 +86,9 @@ class Theme:
         """Return the few rules that the palette cannot express: calm surface, hairlines, no frames."""
         colours = {name: getattr(self.palette, name) for name in Palette.__annotations__}
         # A drop-down box that a sheet styles loses the arrow of the style: without one it looks like a line to type in.
-        return _SHEET.format(**colours, chevron=resource("icons", "chevron.svg").as_posix())
+        chevron = resource("icons", "chevron.svg").as_posix()
+        tick = resource("icons", "tick-dark.svg" if self.dark else "tick-light.svg").as_posix()
+        return _SHEET.format(**colours, chevron=chevron, tick=tick)
 
 
 def _table(rgb: npt.NDArray[Any]) -> npt.NDArray[np.uint8]:
@@ -182,6 +184,12 @@ QLineEdit[wrong="true"] {{ border: 1px solid {fit}; }}
 QComboBox::drop-down {{ border: 0; width: 16px; }}
 QComboBox::down-arrow {{ image: url("{chevron}"); width: 10px; height: 10px; }}
 QDialogButtonBox {{ dialogbuttonbox-buttons-have-icons: 0; }}
+QCheckBox::indicator {{ background: {panel}; border: 1px solid {quiet}; border-radius: 2px;
+  width: 12px; height: 12px; }}
+QCheckBox::indicator:hover, QCheckBox:focus::indicator {{ border-color: {selected}; }}
+QCheckBox::indicator:checked {{ background: {selected}; border-color: {selected}; image: url("{tick}"); }}
+QCheckBox::indicator:disabled {{ border-color: {hairline}; }}
+QCheckBox::indicator:checked:disabled {{ background: {quiet}; border-color: {quiet}; }}
 QPushButton {{ background: {panel}; color: {ink}; border: 1px solid {hairline}; border-radius: 3px;
   padding: 4px 12px; }}
 QPushButton:hover {{ border-color: {quiet}; }}

@@ -33,6 +33,8 @@ __all__ = ["TablePanel"]
 COPIED_AT_MOST = 1_000_000
 TYPICAL_ROWS = 40
 """Rows looked at for the width of a column."""
+EXTREMES_AMONG = 5_000
+"""Rows among which the extremes are looked for."""
 
 
 class TablePanel(QWidget):
@@ -222,7 +224,8 @@ def _typical(values: npt.NDArray[Any]) -> list[int]:
     """Return rows that stand for all in width: some over the whole, the extremes, and the number nearest to zero."""
     rows = set(np.linspace(0, len(values) - 1, min(len(values), TYPICAL_ROWS)).astype(int).tolist())
     if values.dtype.kind in "iuf":
-        known = np.flatnonzero(np.isfinite(values) & (values != 0))
+        known = np.arange(0, len(values), max(len(values) // EXTREMES_AMONG, 1))
+        known = known[np.isfinite(values[known]) & (values[known] != 0)]
         if len(known):
             numbers = values[known]
             rows |= {int(known[place]) for place in (numbers.argmin(), numbers.argmax(), np.abs(numbers).argmin())}
