@@ -583,3 +583,18 @@ def test_arrow_keys_walk_over_the_analysed_direction_only(make, settle, mixture)
     assert window.session.current == 2
     window.session.step(-1)
     assert window.session.current == 0
+
+
+def test_a_group_and_the_conditions_it_was_made_of_state_one_share(make, settle, mixture):
+    import dataclasses
+
+    directions = np.where(np.arange(mixture.traces) % 2, "closing", "opening")
+    both = dataclasses.replace(mixture, table={**mixture.table, "direction": directions})
+    window = make()
+    window.session.open_traces(both, "both ways")
+    window.session.change_conditions("draw a window", ConditionSet((Condition("plateau", 1e-4, 1e-3),)))
+    settle(window)
+    window.commands.make_group("molecule")
+    settle(window)
+    share = panel(window, "groups").table.model.index(0, 2).data()
+    assert share.rstrip("%").strip() != "0.0" and f"({share})" in panel(window, "conditions").picked.text()

@@ -171,6 +171,7 @@ QTabWidget::pane {{ border: 0; }}
 QScrollArea {{ border: 0; background: {ground}; }}
 QTableView {{ background: {panel}; color: {ink}; border: 1px solid {hairline}; gridline-color: {hairline};
   selection-background-color: {selected}; selection-color: {panel}; alternate-background-color: {panel}; }}
+QTableView::item {{ padding: 0 4px; }}
 QHeaderView {{ background: {panel}; }}
 QHeaderView::section {{ background: {panel}; color: {quiet}; border: 0;
   border-bottom: 1px solid {hairline}; padding: 4px 8px; }}

@@ -28,7 +28,12 @@ class GroupsPanel(QWidget):
         columns = (
             Column("group", "group", lambda value, _: f"{symbol_of(frame.session, str(value))} {value}"),
             Column("traces", "traces", plain),
-            Column("share", "share", lambda value, _: typeset.percent(float(value), 1.0)),
+            Column(
+                "share",
+                "share",
+                lambda value, _: typeset.percent(float(value), 1.0),
+                "of the traces of the analysed direction",
+            ),
         )
         self.table = TablePanel(
             frame,
@@ -54,7 +59,7 @@ class GroupsPanel(QWidget):
         return QSize(300, 140)
 
     def _document_changed(self, change: Change) -> None:
-        if change.decisions:
+        if change.decisions or change.before.recipe.histogram.direction != change.after.recipe.histogram.direction:
             self.refresh()
 
     def refresh(self) -> None:
@@ -64,9 +69,15 @@ class GroupsPanel(QWidget):
         if not groups or session.traces is None:
             self.table.show_columns({})
             return
-        sizes = np.array([len(session.rows_of(set(group.members))) for group in groups.values()], np.int64)
+        analysed = session.traces.table["direction"] == session.document.recipe.histogram.direction
+        rows = [list(session.rows_of(set(group.members)).values()) for group in groups.values()]
+        inside = np.array([int(np.count_nonzero(analysed[one])) for one in rows], np.int64)
         self.table.show_columns(
-            {"group": np.array(list(groups)), "traces": sizes, "share": sizes / max(session.traces.traces, 1)}
+            {
+                "group": np.array(list(groups)),
+                "traces": np.array([len(one) for one in rows], np.int64),
+                "share": inside / max(int(np.count_nonzero(analysed)), 1),
+            }
         )
 
     def _names(self) -> list[str]:
