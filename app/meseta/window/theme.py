@@ -39,6 +39,13 @@ class Theme:
         style = Qt.PenStyle.DashLine if dashed else Qt.PenStyle.DotLine if dotted else Qt.PenStyle.SolidLine
         return pg.mkPen(self.colour(meaning, alpha), width=1, style=style)
 
+    def curve_pen(self, meaning: str, *, dashed: bool = False, dotted: bool = False) -> QPen:
+        """Return a pen for curves of a few hundred points: as thick to the eye on a fine screen as on a coarse one."""
+        pen = self.pen(meaning, dashed=dashed, dotted=dotted)
+        screen = QGuiApplication.primaryScreen()
+        pen.setWidth(max(1, round(screen.devicePixelRatio())) if screen is not None else 1)
+        return pen
+
     def wide_pen(self, meaning: str, width: float = 2.0, *, dashed: bool = False) -> QPen:
         """Return a wider pen, for the few short strokes that must stand out."""
         return pg.mkPen(

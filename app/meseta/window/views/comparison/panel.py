@@ -224,11 +224,13 @@ class ComparisonPanel(SpinePanel):
         """Return the pen of a part: its own colour and its own dash."""
         theme = self.frame.theme
         if place == 0:
-            return theme.pen("selected")
+            return theme.curve_pen("selected")
         if place == 1:
-            return theme.pen("ink", dashed=True)
+            return theme.curve_pen("ink", dashed=True)
         style = GROUPS[(place - 2) % len(GROUPS)]
-        pen: QPen = pg.mkPen(style.dark if theme.dark else style.light, width=1, style=DASHES[place % len(DASHES)])
+        pen: QPen = theme.curve_pen("ink")
+        pen.setColor(pg.mkColor(style.dark if theme.dark else style.light))
+        pen.setStyle(DASHES[place % len(DASHES)])
         return pen
 
     # -- drawing -----------------------------------------------------------------------------------------------------

@@ -38,9 +38,9 @@ class FitLayer:
 
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""
-        self.model.setPen(theme.wide_pen("fit", 1.0, dashed=True))
+        self.model.setPen(theme.curve_pen("fit", dashed=True))
         self.background.setPen(theme.pen("quiet", dotted=True))
-        self.components.setPen(theme.pen("fit", dotted=True))
+        self.components.setPen(theme.curve_pen("fit", dotted=True))
         self.bounds.wear(theme)
         for label in self.labels:
             self._wear_label(label)

@@ -110,9 +110,9 @@ class HistogramPanel(SpinePanel):
         theme = self.frame.theme
         under = self.session.subset is not None
         meaning = "every" if under else "selected"
-        self.whole.setPen(theme.pen(meaning))
-        self.weak.setPen(theme.pen(meaning, dotted=True))
-        self.part.setPen(theme.pen("selected"))
+        self.whole.setPen(theme.curve_pen(meaning))
+        self.weak.setPen(theme.curve_pen(meaning, dotted=True))
+        self.part.setPen(theme.curve_pen("selected"))
         self.band.setPen(pg.mkPen(None))
         self.band.setBrush(pg.mkBrush(theme.colour(meaning, 60)))
 
