@@ -6,7 +6,6 @@ from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
 
 from meseta.errors import InputError
 from meseta.peaks.lines import Line, fit_line
@@ -125,6 +124,8 @@ def decay(points: DecayPoints) -> Decay:
     Errors of ln G are sigma_G/G.  Errors in both coordinates: York et al., Am. J. Phys. 72, 367 (2004).  If the points
     do not lie on one line within their errors the absolute error is too small; so both are given.
     """
+    from scipy import stats
+
     _check(points)
     sigma, sigma_x, notes = _errors(points)
     line = fit_line(points.length, np.log(points.conductance_g0), sigma, sigma_x)
@@ -169,6 +170,8 @@ def _stretch(line: Line) -> float:
 
 def _quantile(line: Line) -> float:
     """Return the 97.5 % quantile: Student's where the error comes from the scatter, the normal one else."""
+    from scipy import stats
+
     if line.absolute and _stretch(line) == 1.0:
         return float(stats.norm.ppf(0.975))
     return float(stats.t.ppf(0.975, line.freedom)) if line.freedom > 0 else float("nan")

@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
 from meseta.errors import CallError
 
@@ -99,6 +98,8 @@ def formation_probability(
 
 def _share(found: int, traces: int, independent_share: float) -> tuple[float, float, float]:
     """Return a share and its Jeffreys interval, for as many traces as are independent."""
+    from scipy import stats
+
     share, effective = found / traces, max(traces * independent_share, 1.0)
     beta = stats.beta(share * effective + 0.5, (1.0 - share) * effective + 0.5)
     low = 0.0 if found == 0 else float(beta.ppf(0.025))

@@ -10,7 +10,6 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 from scipy.ndimage import uniform_filter1d
-from scipy.signal import savgol_filter
 
 from meseta.segmentation.finder_kernels import COLUMNS, Rules
 from meseta.segmentation.results import NoiseModel
@@ -39,6 +38,8 @@ def derivative_rows(
     smoothing_samples : int
         Samples of the least-squares window of the slope.
     """
+    from scipy.signal import savgol_filter  # half a second that the window need not wait for
+
     window = max(3, smoothing_samples | 1)
     rows: list[list[float]] = []
     for trace, g in enumerate(pieces):

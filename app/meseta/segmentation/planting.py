@@ -14,7 +14,6 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 from scipy.ndimage import uniform_filter1d
-from scipy.signal import lfilter
 
 from meseta.segmentation.noise import phase_bounds, runs_backward
 from meseta.segmentation.results import NoiseModel
@@ -85,6 +84,8 @@ def _place(g: Floats, level: float, sigma: float) -> tuple[int, int]:
 
 def _plateau(level: float, samples: int, slope: float, noise: NoiseModel, rng: np.random.Generator) -> Floats:
     """Return a plateau and 64 samples after it: relative noise of the recording, edges as slow as its amplifier."""
+    from scipy.signal import lfilter
+
     shape = np.zeros(samples + 64)
     x = np.arange(samples) - 0.5 * (samples - 1)
     floor = noise.floor_sigma_g0
@@ -99,6 +100,8 @@ def _plateau(level: float, samples: int, slope: float, noise: NoiseModel, rng: n
 
 def _slow_noise(samples: int, rng: np.random.Generator, kept: float = 0.9) -> Floats:
     """Return correlated noise of unit variance (first-order autoregressive)."""
+    from scipy.signal import lfilter
+
     fresh = rng.standard_normal(samples) * np.sqrt(1 - kept**2)
     fresh[0] /= np.sqrt(1 - kept**2)
     return np.asarray(lfilter([1.0], [1.0, -kept], fresh), float)
