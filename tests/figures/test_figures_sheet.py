@@ -160,6 +160,23 @@ def test_noise_figure_shows_both_noises(analysis):
     assert "Noise, 1 σ (G₀)" in words(figure)
 
 
+@pytest.mark.parametrize(
+    ("unit", "values", "label", "drawn"),
+    [
+        ("G0 V", [2e-5, 3e-5], "Offset (nA)", [1.5496183, 2.3244275]),  # times G0 = 7.748091729e-5 S (CODATA 2022)
+        ("G0", [-2e-6, 1e-6], "Offset (10⁻⁶ G₀)", [-2.0, 1.0]),
+        ("G0", [0.0, 0.0], "Offset (G₀)", [0.0, 0.0]),
+    ],
+)
+def test_offset_figure_shows_what_was_removed_against_the_record(unit, values, label, drawn):
+    offset = {"removed": True, "traces": 200, "at_trace": [0, 199], "offset": values, "unit": unit}
+    figure = figures.offset_figure(offset, SETTINGS)
+    (line,) = figure.axes[0].get_lines()
+    assert np.allclose(line.get_ydata(), drawn)
+    assert line.get_xdata().tolist() == [0, 199]
+    assert label in words(figure)
+
+
 def correlation_of(values, threshold=0.2):
     grid = Grid(10.0 ** np.linspace(-4, 0, len(values) + 1), "logarithmic")
     return CorrelationHistogram(grid=grid, correlation=np.asarray(values, float), traces=500, threshold=threshold)

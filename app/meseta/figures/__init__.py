@@ -3,7 +3,7 @@
 The only room that knows matplotlib, and never its pyplot.
 """
 
-from meseta.figures.checks import correlation_figure, noise_figure, record_figure
+from meseta.figures.checks import correlation_figure, noise_figure, offset_figure, record_figure
 from meseta.figures.methods import methods_statement
 from meseta.figures.page import save_figure, save_pages, svg_text
 from meseta.figures.physics import analyses_figure, decay_figure
@@ -19,6 +19,7 @@ __all__ = [
     "decay_figure",
     "methods_statement",
     "noise_figure",
+    "offset_figure",
     "record_figure",
     "report",
     "result_figure",

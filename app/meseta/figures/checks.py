@@ -1,6 +1,9 @@
-"""Figures by which a result is judged: noise model, record (temporal histogram), 2D correlation histogram."""
+"""Figures by which a result is judged: noise model, record (temporal histogram), 2D correlation histogram, offset."""
 
 from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -15,10 +18,11 @@ from meseta.figures.page import new_figure, page_style
 from meseta.figures.scale import ConductanceScale, plain_ticks
 from meseta.figures.words import say
 from meseta.histograms import CorrelationHistogram, TemporalHistogram
+from meseta.quantities import G0_SIEMENS
 from meseta.recipe.figure import FigureSettings
 from meseta.segmentation import NoiseModel
 
-__all__ = ["correlation_figure", "noise_figure", "record_figure"]
+__all__ = ["correlation_figure", "noise_figure", "offset_figure", "record_figure"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -46,6 +50,38 @@ def noise_figure(noise: NoiseModel, settings: FigureSettings) -> Figure:
             text = "floor, 1 σ"
             axes.annotate(text, (high, np.log10(noise.floor_sigma_g0)), (-2, 2), "data", "offset points", ha="right")
         axes.legend(loc="lower right", bbox_to_anchor=(1, 1.01), ncols=2, borderaxespad=0)
+        figure.draw_without_rendering()
+    return figure
+
+
+def offset_figure(offset: Mapping[str, Any], settings: FigureSettings) -> Figure:
+    """Draw the running offset that was removed against the record.
+
+    Parameters
+    ----------
+    offset : mapping
+        ``notes["floor_offset"]`` of a TraceSet: ``at_trace``, ``offset`` in ``unit`` ("G0 V", a current, or "G0").
+    """
+    is_current = offset["unit"] == "G0 V"
+    values = np.asarray(offset["offset"], np.float64) * (G0_SIEMENS if is_current else 1.0)
+    known = np.abs(values[np.isfinite(values)])
+    power = 3 * int(np.floor(np.log10(known.max()) / 3)) if known.size and known.max() > 0 else 0
+    prefixes = {-6: "µA", -9: "nA", -12: "pA", -15: "fA"}
+    plain = f"{typeset.power_of_ten(power) + ' ' if power else ''}{'A' if is_current else typeset.G0}"
+    unit = prefixes.get(power, plain) if is_current else plain
+    with page_style(settings):
+        figure, axes = _single(settings, settings.width_mm, 0.16)
+        axes.set_xlabel("Trace")
+        axes.set_ylabel(f"Offset ({unit})")
+        end = max(int(offset["traces"]), 1)
+        plain_ticks(axes.xaxis, 0, end, most=9)
+        axes.set_xlim(0, end)
+        shown = values / 10.0**power
+        axes.plot(offset["at_trace"], shown, color=colours.LIGHT.selected)
+        low, high = min(float(np.nanmin(shown)), 0.0), max(float(np.nanmax(shown)), 0.0)
+        room = 0.1 * (high - low) or 1.0
+        plain_ticks(axes.yaxis, low - room, high + room, most=5)
+        axes.set_ylim(low - room, high + room)
         figure.draw_without_rendering()
     return figure
 

@@ -10,7 +10,7 @@ from jinja2 import Environment, FileSystemLoader, StrictUndefined
 from meseta import typeset
 from meseta.analysis import Analysis
 from meseta.figures import rows
-from meseta.figures.checks import correlation_figure, noise_figure, record_figure
+from meseta.figures.checks import correlation_figure, noise_figure, offset_figure, record_figure
 from meseta.figures.methods import METHOD_SOURCES, methods_paragraphs
 from meseta.figures.page import face_style, svg_text
 from meseta.figures.result import result_figure
@@ -79,6 +79,9 @@ def _figures(analysis: Analysis, title: str, work: Work) -> dict[str, str]:
         "correlation": correlation_figure(analysis.result("correlation_histogram", work), settings),
         "noise": noise_figure(analysis.noise(work), settings),
     }
+    offset = analysis.traces.notes.get("floor_offset") or {}
+    if offset.get("removed"):
+        made["offset"] = offset_figure(offset, settings)
     return {name: svg_text(figure, name) for name, figure in made.items()}
 
 
@@ -109,7 +112,9 @@ def _notes(notes: Mapping[str, Any]) -> list[tuple[str, list[str]]]:
     entries = []
     for name, value in notes.items():
         if name not in ("warnings", "bad_files") and value not in (None, "", [], {}):
-            entries.append((name.replace("_", " "), _lines(value)))
+            drawn = ("at_trace", "offset") if name == "floor_offset" else ()
+            shown = {key: one for key, one in value.items() if key not in drawn} if drawn else value
+            entries.append((name.replace("_", " "), _lines(shown)))
     return entries
 
 
