@@ -49,6 +49,20 @@ def test_linear_axis_is_stated_in_g0(metal):
     assert [text.get_text() for text in plane.get_yticklabels()] == ["0", "1", "2", "3", "4", "5"]
 
 
+def test_a_smoothed_curve_says_so(metal):
+    plain = panels(figures.result_figure(*metal, SETTINGS))[1]
+    smooth = panels(figures.result_figure(*metal, FigureSettings(smoothing_bins=3.0)))[1]
+    assert smooth.get_xlabel().endswith("smoothed over 3 bins")
+    assert "smoothed" not in plain.get_xlabel()
+
+    def roughness(side):
+        curve = max(side.get_lines(), key=lambda line: len(line.get_xdata()))
+        values = np.asarray(curve.get_xdata(), float)
+        return np.nansum(np.abs(np.diff(values)))
+
+    assert roughness(smooth) < 0.8 * roughness(plain)
+
+
 def test_decades_are_typeset(molecule):
     plane, _, _ = panels(figures.result_figure(*molecule, SETTINGS))
     labels = [text.get_text() for text in plane.get_yticklabels()]

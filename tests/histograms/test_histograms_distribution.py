@@ -39,6 +39,7 @@ def test_default_density_is_length_per_trace_per_decade() -> None:
         ("counts", "counts / decade", 400.0),
         ("counts_per_trace", "counts / trace / decade", 100.0),
         ("probability", "1 / decade", 1.0),
+        ("traces_alike", "1 / trace / decade", 1.0),
     ],
 )
 def test_other_normalisations(normalisation: str, unit: str, whole: float) -> None:
@@ -65,6 +66,21 @@ def test_each_nm_counts_equally_whatever_the_speed() -> None:
     histogram = conductance_histogram(counted(mixed, recipe), np.ones(2, bool), recipe.histogram, None)
     length = histogram.density * histogram.grid.widths * 2
     assert length[length > 0] == pytest.approx([0.1, 0.1], rel=1e-6)
+
+
+def test_traces_weigh_alike_however_long_they_are() -> None:
+    values = [np.r_[np.full(900, 0.5), np.full(100, 0.05)], np.full(10, 0.05), np.full(20, 1e9)]
+    traces = type(recording(np.ones((1, 2), np.float32))).from_arrays(values)
+    recipe = Recipe().with_values("histogram", normalisation="traces_alike")
+    counts, kept = counted(traces, recipe), np.ones(3, bool)
+    drawn = resample(counts, kept, traces.table, recipe.histogram, recipe.resampling, Work())
+    histogram = conductance_histogram(counts, kept, recipe.histogram, drawn)
+    share = histogram.density * histogram.grid.widths * 3
+    # the first trace gives 0.9 and 0.1, the second 1, the third has no sample on the axis
+    assert share[share > 0] == pytest.approx([1.1, 0.9], rel=1e-12)
+    assert histogram.counts.sum() == 1010
+    assert (histogram.density_low <= histogram.density).all()
+    assert (histogram.density <= histogram.density_high + 1e-12).all()
 
 
 def test_a_drive_without_nm_falls_back_to_counts() -> None:

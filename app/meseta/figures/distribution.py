@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Final
 
 import numpy as np
@@ -52,9 +53,10 @@ def draw_distribution(
     scale.decorate(axes.yaxis, labelled)
     if labelled:
         axes.set_ylabel(scale.label)
-    label = axes.set_xlabel(_quantity(histogram.density_unit))
+    smoothed = f", smoothed over {settings.smoothing_bins:g} bins" if settings.smoothing_bins else ""
+    label = axes.set_xlabel(_quantity(histogram.density_unit) + smoothed)
     if label.get_window_extent().width > 0.98 * axes.get_window_extent().width:
-        label.set_text(per(histogram.density_unit))
+        label.set_text(per(histogram.density_unit) + smoothed)
     if not np.any(histogram.counts):
         plain_ticks(axes.xaxis, 0, 1, labelled=False)
         say(axes, _nothing(histogram))
@@ -62,7 +64,7 @@ def draw_distribution(
     if settings.guides:
         height = axes.get_window_extent().height
         scale.guides(axes, True, 4 * axes.figure.dpi / 72 / height * (scale.high - scale.low))
-    _curve(axes, histogram)
+    _curve(axes, _smoothed(histogram, settings.smoothing_bins))
     _fit(axes, fit, scale, settings.components)
     logarithmic = settings.count_axis == "logarithmic"
     lowest, highest = _ends(histogram, fit, logarithmic)
@@ -83,6 +85,19 @@ def _quantity(unit: str) -> str:
     if unit.startswith("nm"):
         return f"Length ({per(unit)})"
     return per(unit)[:1].upper() + per(unit)[1:]
+
+
+def _smoothed(histogram: ConductanceHistogram, bins: float) -> ConductanceHistogram:
+    """Return the histogram as drawn with a running Gaussian mean; for the eye only."""
+    if not bins:
+        return histogram
+    from scipy.ndimage import gaussian_filter1d
+
+    density, low, high = (
+        gaussian_filter1d(values, bins, mode="nearest")
+        for values in (histogram.density, histogram.density_low, histogram.density_high)
+    )
+    return replace(histogram, density=density, density_low=low, density_high=high)
 
 
 def _nothing(histogram: ConductanceHistogram) -> str:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from typing import Any
 
 import numpy as np
@@ -42,7 +43,8 @@ def conductance_histogram(
     Notes
     -----
     H_k = n_k / (R w_k) with R the traces that take part and w_k the bin's width in decades or G0; weighted by length
-    every sample counts its displacement, so that neither sampling rate nor speed enters.
+    every sample counts its displacement, so that neither sampling rate nor speed enters.  Where all traces are to weigh
+    alike, a sample counts its share of the trace's samples on the axis: a long trace says no more than a short one.
     """
     rows = np.flatnonzero(kept & counts.used)
     fine, reached = summed(counts, rows)
@@ -81,11 +83,28 @@ def summed(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> tuple[npt.NDArra
 
 
 def _weight(counts: CountMatrix, rows: npt.NDArray[np.int64], normalisation: str) -> Floats | None:
-    """Return the length of one sample of each row in nm; None where samples are counted."""
-    if normalisation != "nm_per_trace" or len(rows) == 0:
+    """Return what a sample of each row counts: its length in nm, or its share of the row's samples on the axis.
+
+    None where samples are counted.
+    """
+    if len(rows) == 0:
+        return None
+    if normalisation == "traces_alike":
+        samples = np.concatenate([part.sum(1) for part in _merged(counts, rows)])
+        return np.divide(1.0, samples, out=np.zeros(len(rows)), where=samples > 0)
+    if normalisation != "nm_per_trace":
         return None
     length = counts.nm_a_sample[rows]
     return length if np.isfinite(length).all() else None
+
+
+def _merged(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> Iterator[Floats]:
+    """Yield the counts of the chosen rows in the bins of the histogram, block by block; blocks share their memory."""
+    part = np.empty((min(_ROWS_A_BLOCK, len(rows)), counts.shown.bins))
+    for first in range(0, len(rows), _ROWS_A_BLOCK):
+        chosen = rows[first : first + _ROWS_A_BLOCK]
+        kernels.merge_rows(counts.counts, chosen, counts.merge, part[: len(chosen)])
+        yield part[: len(chosen)]
 
 
 def _flat_scale(weight: Floats | None) -> float:
@@ -121,15 +140,13 @@ def weighted_counts(
     length : (traces,) float64, optional
         Further weight of every row, the same in all replicates.
     """
-    total = np.zeros((len(draws), counts.shown.bins))
-    part = np.empty((min(_ROWS_A_BLOCK, len(rows)), counts.shown.bins))
-    for first in range(0, len(rows), _ROWS_A_BLOCK):
-        chosen = rows[first : first + _ROWS_A_BLOCK]
-        kernels.merge_rows(counts.counts, chosen, counts.merge, part[: len(chosen)])
-        drawn = draws[:, first : first + _ROWS_A_BLOCK].astype(np.float64)
+    total, first = np.zeros((len(draws), counts.shown.bins)), 0
+    for part in _merged(counts, rows):
+        drawn = draws[:, first : first + len(part)].astype(np.float64)
         if length is not None:
-            drawn *= length[first : first + _ROWS_A_BLOCK]
-        total += drawn @ part[: len(chosen)]
+            drawn *= length[first : first + len(part)]
+        total += drawn @ part
+        first += len(part)
     return total
 
 
@@ -139,6 +156,8 @@ def _norm(normalisation: str, weight: Floats | None, traces: int, total: float, 
         return 1.0, f"counts / {per}"
     if normalisation == "probability":
         return (1 / total if total > 0 else np.nan), f"1 / {per}"
+    if normalisation == "traces_alike":
+        return 1 / max(traces, 1), f"1 / trace / {per}"
     return 1 / max(traces, 1), f"{'counts' if weight is None else 'nm'} / trace / {per}"
 
 

@@ -38,6 +38,15 @@ class FigureSettings(Section):
         "Count axis",
         "Of the 1D histogram. On a linear axis a feature far above the fitted peaks is cut and its height written.",
     )
+    smoothing_bins: float = setting(
+        0.0,
+        "Smoothing",
+        "Of the drawn 1D histogram and its band only (standard deviation of a Gaussian): tables and fits never see it, "
+        "and the axis says so. 0 draws what was counted.",
+        unit="bins",
+        ge=0,
+        le=20,
+    )
     components: bool = setting(
         True, "Single peaks", "Draw each fitted peak and the background on its own, besides the whole fit."
     )

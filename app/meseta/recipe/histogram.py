@@ -81,11 +81,12 @@ class HistogramSettings(Section):
         unit="s",
         ge=0,
     )
-    normalisation: Literal["nm_per_trace", "counts_per_trace", "counts", "probability"] = setting(
+    normalisation: Literal["nm_per_trace", "counts_per_trace", "counts", "probability", "traces_alike"] = setting(
         "nm_per_trace",
         "Normalisation",
         "Density of the histogram: length in nm (counts where the displacement is "
-        "unknown) per trace, counts per trace, counts or share, each per decade or per G0.",
+        "unknown) per trace, counts per trace, counts or share, each per decade or per G0. 'traces_alike': every trace "
+        "weighs the same, however long it is.",
     )
     weak_traces: int = setting(20, "Weak below", "Bins reached by fewer traces are shown as weak.", unit="traces", ge=0)
 
