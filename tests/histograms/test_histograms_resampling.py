@@ -91,7 +91,7 @@ def test_blocks_do_not_cross_few_specimens_and_say_what_is_not_in_the_interval()
 def test_independent_traces_are_worth_themselves() -> None:
     found = drawn(poisson(2000))
     assert found.effective_traces == 2000
-    assert found.to_halve_error() == "6,000 more traces like these"
+    assert found.to_halve_error() == "6\u202f000 more traces like these"
 
 
 @pytest.mark.parametrize("keep", [0.5, 0.8, 0.9])
