@@ -233,3 +233,17 @@ def test_a_reader_of_another_package_is_found_and_a_broken_one_harms_nothing(tmp
             intake.read(tmp_path / "b.csv", Recipe.build({"intake": {"reader": "lost"}}))
     finally:
         registry.readers.cache_clear()
+
+
+@pytest.mark.parametrize("heading", ["log G [G0]", "log G (2e2/h)", "logG/G0"])
+def test_a_logarithm_headed_with_the_unit_of_its_argument_is_a_logarithm(heading, tmp_path):
+    path = tmp_path / "trace.csv"
+    conductance = np.geomspace(5.0, 1e-5, 200)
+    rows = "".join(f"{0.01 * n:.2f};{np.log10(g):.7f}\n" for n, g in enumerate(conductance))
+    path.write_text(f"displacement [nm];{heading}\n{rows}", encoding="utf-8")
+    np.testing.assert_allclose(intake.read(path).conductance, conductance, rtol=2e-6)
+
+
+def test_the_logarithm_of_a_conductance_in_siemens_is_doubted():
+    (doubt,) = guess_role("log G [nS]").doubts
+    assert "named like log_conductance" in doubt

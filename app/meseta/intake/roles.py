@@ -10,7 +10,7 @@ from functools import lru_cache
 from typing import Final
 
 from meseta.intake.recording import RawChannel
-from meseta.intake.units import is_unit, parse_unit
+from meseta.intake.units import is_unit, parse_unit, unit_factor
 from meseta.recipe.intake import ROLES, ChannelRole
 
 __all__ = ["DRIVE_ROLES", "Guess", "guess_role", "settle_roles", "split_unit", "stem_of", "unmatched"]
@@ -217,6 +217,8 @@ def _fitted(role: str, unit: str, dimension: str, by_unit: str, ground: str) -> 
     wanted = _DIMENSION.get(role)
     if wanted is None or dimension == wanted or (role == "conductance" and dimension == "1"):
         return Guess(role, unit, ground, 0.95)
+    if role == "log_conductance" and dimension == "S" and abs(unit_factor(unit, "G0") - 1.0) < 1e-9:
+        return Guess(role, "dec", ground, 0.8, (f"called a logarithm and in {unit}: taken as log10(G/G0)",))
     if role == "piezo" and dimension == "m":
         return Guess("displacement", unit, ground, 0.9)
     if role == "current" and dimension == "V":
