@@ -29,6 +29,7 @@ from meseta.recipe.histogram import (
     TemporalSettings,
 )
 from meseta.recipe.intake import IntakeSettings
+from meseta.recipe.kept_layouts import KeptChannel, KeptLayout, layout_table
 from meseta.recipe.noise import NoiseSettings
 from meseta.recipe.peaks import PeakSettings
 from meseta.recipe.plateaus import PlateauSettings
@@ -213,6 +214,10 @@ def _write(table: Any, info: FieldInfo, value: Any, comments: bool) -> None:
         table.add(tomlkit.nl())
         for line in textwrap.wrap(_sentence(info), 96, break_long_words=False):
             table.add(tomlkit.comment(line))
+    if info.example and not value:  # the example must be free to be uncommented: no empty table stands in its way
+        for line in info.example.splitlines() if comments else ():
+            table.add(tomlkit.comment(line))
+        return
     if value is None:
         table.add(tomlkit.comment(f"{info.name} is not set: {info.unset or 'not used'}"))
         return
@@ -225,6 +230,11 @@ def _plain(value: Any) -> Any:
         for name, part in value.model_dump(exclude_none=True).items():
             inline[name] = part
         return inline
+    if isinstance(value, dict) and any(isinstance(part, KeptLayout) for part in value.values()):
+        tables = tomlkit.table(is_super_table=True)
+        for name, part in value.items():
+            tables[name] = layout_table(part)
+        return tables
     if isinstance(value, dict):
         inline = tomlkit.inline_table()
         for name, part in value.items():
@@ -255,7 +265,9 @@ def _in_words(error: ValidationError, where: str) -> RecipeError:
             return RecipeError(f"there is no section '{name}'", where, nearest(name, sections))
         section = sections.get(place[0])
         known = list(section.annotation.model_fields) if section and section.annotation else []
-        return RecipeError(f"there is no setting '{name}'", where, nearest(place[1], known))
+        if place[:2] == ["intake", "layouts"] and len(place) > 3:
+            known = list((KeptChannel if place[3] == "channels" else KeptLayout).model_fields)
+        return RecipeError(f"there is no setting '{name}'", where, nearest(place[-1], known))
     if fault["type"] == "value_error":
         return RecipeError(f"[{name}] {fault['ctx']['error']}", where, "change one of them")
     given = fault.get("input")

@@ -20,6 +20,7 @@ def setting(
     unit: str = "",
     unset: str = "",
     factory: Any = None,
+    example: str = "",
     **limits: Any,
 ) -> Any:
     """Declare a setting.
@@ -38,10 +39,12 @@ def setting(
         What happens where the value is None ("taken from the recording").
     factory : callable, optional
         Makes the default of a mutable field.
+    example : str
+        Lines of TOML that a commented recipe shows, for what no sentence can say.
     **limits
         ``ge``, ``gt``, ``le``, ``lt``: the allowed range.
     """
-    extra: dict[str, JsonValue] = {"unit": unit, "unset": unset}
+    extra: dict[str, JsonValue] = {"unit": unit, "unset": unset, "example": example}
     if factory is not None:
         return Field(default_factory=factory, title=title, description=help, json_schema_extra=extra, **limits)
     return Field(default, title=title, description=help, json_schema_extra=extra, **limits)
@@ -76,6 +79,7 @@ class FieldInfo:
     high: float | None
     low_open: bool
     high_open: bool
+    example: str = ""
 
     def range_text(self) -> str:
         """Return the allowed values in words, without the unit."""
@@ -138,6 +142,7 @@ def _describe(name: str, field: PydanticField) -> FieldInfo:
         high=limits.get("le", limits.get("lt")),
         low_open="gt" in limits,
         high_open="lt" in limits,
+        example=str(extra.get("example", "")),
     )
 
 
