@@ -12,14 +12,7 @@ import numpy.typing as npt
 from natsort import natsorted
 
 from meseta.intake.metadata import plain_value
-from meseta.intake.readers.hdf5_tree import (
-    ColumnSamples,
-    Layer,
-    Node,
-    Ragged,
-    RowSamples,
-    VectorSamples,
-)
+from meseta.intake.readers.hdf5_tree import Layer, Node, Ragged, VectorSamples, columns_of, rows_of
 from meseta.intake.readers.orientation import orientation
 from meseta.intake.roles import DRIVE_ROLES, SIGNAL_ROLES, guess_role, stem_of
 from meseta.traces import Samples
@@ -328,9 +321,9 @@ def _matrix(matrices: Sequence[Leaf], vectors: Sequence[Leaf], layout: str) -> S
     channels: list[tuple[str, Samples, np.dtype[Any], Mapping[str, Any], bool, str]] = []
     for leaf in matrices:
         if leaf.shape == main.shape:
-            kind = RowSamples if rows else ColumnSamples
+            samples = rows_of(leaf.node.dataset) if rows else columns_of(leaf.node.dataset)
             context = leaf.parent.rpartition("/")[2]
-            channels.append((leaf.name, kind(leaf.node.dataset), leaf.dtype, leaf.attributes, False, context))
+            channels.append((leaf.name, samples, leaf.dtype, leaf.attributes, False, context))
         else:
             doubts.append(f"'{leaf.name}' has another shape than '{main.name}' and was left out")
     table = {}

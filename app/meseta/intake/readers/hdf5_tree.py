@@ -32,7 +32,9 @@ __all__ = [
     "RowSamples",
     "Tree",
     "VectorSamples",
+    "columns_of",
     "open_file",
+    "rows_of",
     "walk",
 ]
 
@@ -337,6 +339,10 @@ class RowSamples:
         """Return samples ``start`` to ``stop``."""
         n = self.dataset.shape[1]
         first, last = start // n, -(-stop // n)
+        if last - first == 1:  # of a row that may be longer than memory, only what is wanted
+            return _read(self.dataset, lambda: self.dataset[first, start - first * n : stop - first * n])
+        if last - first == 2:
+            return np.concatenate([self.read(start, (first + 1) * n), self.read((first + 1) * n, stop)])
         block = _read(self.dataset, lambda: self.dataset[first:last])
         return block.reshape(-1)[start - first * n : stop - first * n]
 
@@ -350,6 +356,16 @@ class RowSamples:
         rows = slice(start // n, (start + len(target)) // n)
         _read(self.dataset, lambda: self.dataset.read_direct(target.reshape(-1, n), rows) or target)
         return True
+
+
+def rows_of(dataset: Any) -> RowSamples | ColumnSamples:
+    """Return the rows of a 2D dataset end to end; those of an array that lies in Fortran order are columns there."""
+    return ColumnSamples(dataset.transposed) if getattr(dataset, "turned", False) else RowSamples(dataset)
+
+
+def columns_of(dataset: Any) -> RowSamples | ColumnSamples:
+    """Return the columns of a 2D dataset end to end; those of an array that lies in Fortran order are rows there."""
+    return RowSamples(dataset.transposed) if getattr(dataset, "turned", False) else ColumnSamples(dataset)
 
 
 @dataclass
@@ -401,6 +417,16 @@ class Layer:
     def dtype(self) -> np.dtype[Any]:
         """Type of its numbers."""
         return np.dtype(self.dataset.dtype)
+
+    @property
+    def turned(self) -> bool:
+        """Whether it is the transpose of what lies in the file."""
+        return bool(getattr(self.dataset, "turned", False))
+
+    @property
+    def transposed(self) -> Layer:
+        """The same numbers with the axes in reverse."""
+        return Layer(self.dataset.transposed, len(self.dataset.shape) - 1 - self.axis, self.place)
 
     def __getitem__(self, key: Any) -> npt.NDArray[Any]:
         """Return a part of the layer."""

@@ -1,7 +1,8 @@
-"""MAT files of version 5 (and 6, 7), read without leaving Python: numbers, texts, structures, cells.
+"""MAT files of versions 4 and 5 (also 6 and 7), read without leaving Python: numbers, texts, structures, cells.
 
-The format is documented by its maker ("MAT-File Format", level 5).  Sizes are checked against the bytes that are there,
-so a damaged file is an error and nothing worse.  Version 7.3 is HDF5 and read as such.
+Both formats are documented by their maker ("MAT-File Format").  Sizes are checked against the bytes that are there, so
+a damaged file is an error and nothing worse.  The numbers of large files stay in them, or are put aside where they are
+packed.  Version 7.3 is HDF5 and read as such.
 """
 
 from __future__ import annotations
@@ -12,150 +13,128 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any, Final
 
-import numpy as np
-
 from meseta.errors import InputError
 from meseta.intake.readers.contents import Contents
+from meseta.intake.readers.file_array import FileArray, InFile, InMemory
 from meseta.intake.readers.hdf5 import understood
 from meseta.intake.readers.hdf5_tree import Node, Tree
-from meseta.intake.readers.unpack import BOMB_BYTE, BOMB_RATIO
+from meseta.intake.readers.mat_four import fits_version_4, variables_4
+from meseta.intake.readers.mat_parts import DEEPEST, ByteWindow, Element, Refused, elements, matrix
+from meseta.intake.readers.spool import Spool
+from meseta.intake.readers.unpack import BOMB_BYTE, BOMB_RATIO, inflated
 from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["MatReader"]
 
-_TYPES: Final = {
-    1: "i1", 2: "u1", 3: "i2", 4: "u2", 5: "i4", 6: "u4", 7: "f4", 9: "f8", 12: "i8", 13: "u8", 16: "u1", 17: "u2",
-    18: "u4",
-}  # fmt: skip
-_CLASSES: Final = {
-    6: "f8", 7: "f4", 8: "i1", 9: "u1", 10: "i2", 11: "u2", 12: "i4", 13: "u4", 14: "i8", 15: "u8",
-}  # fmt: skip
 MATRIX, COMPRESSED = 14, 15
-CELL, STRUCT, OBJECT, CHAR, SPARSE = 1, 2, 3, 4, 5
-DEEPEST: Final = 8
+HEADER_BYTE: Final = 128
+LARGE_BYTE: Final = 64 << 20
+"""Numbers of files with more stay in them, or are put aside."""
+SMALL_BYTE: Final = 4096
+"""So few are brought into memory all the same."""
+_FAULTS: Final = (
+    struct.error, ValueError, zlib.error, IndexError, KeyError, OverflowError, RecursionError, MemoryError,
+)  # fmt: skip
+Variables = Iterator[tuple[str, Any]]
 
 
 class MatReader:
-    """Reads MAT files of version 5."""
+    """Reads MAT files of versions 4 and 5."""
 
     name = "MAT"
 
     def sniff(self, head: bytes, path: Path) -> bool:
-        """Return whether the header says version 5 and a byte order."""
-        return len(head) >= 128 and head[126:128] in (b"IM", b"MI") and head[124:126] in (b"\x00\x01", b"\x01\x00")
+        """Return whether the header says version 5 and a byte order, or the first variable is one of version 4."""
+        return _is_version_5(head) or fits_version_4(head, path.stat().st_size)
 
     def open(self, path: Path, settings: IntakeSettings) -> Contents:
         """Return the variables of the file."""
-        data = path.read_bytes()
-        order = "<" if data[126:128] == b"IM" else ">"
         tree = Tree(attributes={"": {}})
+        size = path.stat().st_size
+        with path.open("rb") as file:
+            head = file.read(HEADER_BYTE)
         try:
-            for name, value in _variables(data[128:], order):
-                _add(tree, f"/{name}", value, 0)
-        except (struct.error, ValueError, zlib.error, IndexError, KeyError, OverflowError) as error:
+            found = _variables(path, size, head) if _is_version_5(head) else variables_4(path, size)
+            large = size > LARGE_BYTE
+            for name, value in found:
+                _add(tree, f"/{name}", value, large)
+        except _FAULTS as error:
             raise InputError(f"is damaged ({str(error)[:60]})", str(path), "save it again") from error
         return understood(tree, path, settings)
 
 
-def _add(tree: Tree, name: str, value: Any, depth: int) -> None:
-    if isinstance(value, dict):
+def _is_version_5(head: bytes) -> bool:
+    return len(head) >= HEADER_BYTE and head[126:128] in (b"IM", b"MI") and head[124:126] in (b"\x00\x01", b"\x01\x00")
+
+
+def _variables(path: Path, size: int, head: bytes) -> Variables:
+    """Yield name and value of the variables of a file of version 5; packed ones are unpacked one after the other."""
+    order = "<" if head[126:128] == b"IM" else ">"
+    window = ByteWindow(InFile(path), size)
+    top = list(elements(window, HEADER_BYTE, size, order))
+    unpacked = {one.place: _unpacked_byte(path, one, order) for one in top if one.kind == COMPRESSED}
+    spool = Spool(path) if sum(unpacked.values()) > LARGE_BYTE else None
+    for one in top:
+        if one.kind == MATRIX and one.size:
+            found = matrix(window, one, order, path)
+        elif one.kind == COMPRESSED and unpacked[one.place] > 8:
+            found = _packed_matrix(path, one, unpacked[one.place], order, spool)
+        else:
+            continue
+        if found is not None:
+            yield found
+
+
+def _unpacked_byte(path: Path, one: Element, order: str) -> int:
+    """Return the bytes of a packed variable, as its own first bytes state them.
+
+    Raises
+    ------
+    ValueError
+        Where they are beyond what so few bytes may hold.
+    """
+    kind, size = struct.unpack(order + "II", b"".join(inflated(path, one.place, one.size, 8)))
+    if kind != MATRIX:
+        raise ValueError("something else than a variable is packed")
+    if size + 8 > max(BOMB_BYTE, BOMB_RATIO * one.size):
+        raise ValueError("a variable unpacks beyond reason")
+    return int(size) + 8
+
+
+def _packed_matrix(path: Path, one: Element, size: int, order: str, spool: Spool | None) -> tuple[str, Any] | None:
+    blocks = inflated(path, one.place, one.size, size)
+    if spool is None:
+        data = b"".join(blocks)
+        window, begin, end = ByteWindow(InMemory(data), len(data)), 0, len(data)
+    else:
+        begin = spool.append(blocks)
+        end = spool.end
+        window = ByteWindow(spool, end)
+    if end - begin != size:
+        raise ValueError("a packed variable is shorter than it says")
+    return matrix(window, Element(MATRIX, begin + 8, size - 8), order, path)
+
+
+# -- what was found, as a tree ----------------------------------------------------------------------------------------
+
+
+def _add(tree: Tree, name: str, value: Any, large: bool, depth: int = 0) -> None:
+    if isinstance(value, Refused):
+        tree.refused.append(f"{name} {value.reason}")
+    elif isinstance(value, dict | list):
         tree.attributes.setdefault(name, {})
-        for key, one in value.items():
+        inside = value.items() if isinstance(value, dict) else ((f"{n:06d}", one) for n, one in enumerate(value, 1))
+        for key, one in inside:
             if depth < DEEPEST:
-                _add(tree, f"{name}/{key}", one, depth + 1)
-    elif isinstance(value, list):
-        tree.attributes.setdefault(name, {})
-        for place, one in enumerate(value):
-            if depth < DEEPEST:
-                _add(tree, f"{name}/{place + 1:06d}", one, depth + 1)
+                _add(tree, f"{name}/{key}", one, large, depth + 1)
     elif isinstance(value, str):
         tree.values[name] = value
     elif value.size == 1:
-        tree.values[name] = value.reshape(-1)[0]
+        tree.values[name] = value[()].reshape(-1)[0]
     elif value.size:
-        tree.nodes.append(Node(name, value, value.shape, value.dtype, {}))
+        _add_array(tree, name, value, large)
 
 
-def _elements(data: bytes, order: str) -> Iterator[tuple[int, bytes]]:
-    """Yield (type, bytes) of the elements that stand end to end in ``data``."""
-    at = 0
-    while at + 8 <= len(data):
-        kind, size = struct.unpack_from(order + "II", data, at)
-        if kind >> 16:  # a small element: type and size share the first word
-            kind, size = kind & 0xFFFF, kind >> 16
-            if size > 4:
-                raise ValueError("a small element is too large")
-            yield kind, data[at + 4 : at + 4 + size]
-            at += 8
-            continue
-        if size > len(data) - at - 8:
-            raise ValueError("an element is longer than the file")
-        yield kind, data[at + 8 : at + 8 + size]
-        at += 8 + size
-        if kind != COMPRESSED:
-            at += -at % 8
-
-
-def _variables(data: bytes, order: str) -> Iterator[tuple[str, Any]]:
-    for kind, body in _elements(data, order):
-        if kind == COMPRESSED:
-            limit = max(BOMB_BYTE, BOMB_RATIO * len(body))
-            unpacker = zlib.decompressobj()
-            body = unpacker.decompress(body, limit)
-            if unpacker.unconsumed_tail:
-                raise ValueError("a variable unpacks beyond reason")
-            yield from _variables(body, order)
-        elif kind == MATRIX and body:
-            found = _matrix(body, order, 0)
-            if found is not None:
-                yield found
-
-
-def _matrix(body: bytes, order: str, depth: int) -> tuple[str, Any] | None:
-    """Return (name, value) of a matrix element; None for kinds that hold no plain values."""
-    if depth > DEEPEST:
-        return None
-    parts = list(_elements(body, order))
-    flags = struct.unpack_from(order + "I", parts[0][1])[0]
-    kind, is_complex = flags & 0xFF, bool(flags & 0x0800)
-    shape = tuple(np.frombuffer(parts[1][1], order + "i4").tolist())
-    if any(n < 0 for n in shape):
-        raise ValueError("a negative size")
-    name = parts[2][1].decode("latin-1").rstrip("\x00")
-    count = int(np.prod(shape, dtype=object))
-    if kind in _CLASSES and not is_complex:
-        values = _numbers(parts[3], order).astype(order + _CLASSES[kind], copy=False)
-        if len(values) != count:
-            raise ValueError("a matrix is shorter than its size says")
-        return name, values.astype(values.dtype.newbyteorder("="), copy=False).reshape(shape, order="F")
-    if kind == CHAR:
-        codes = _numbers(parts[3], order)
-        return name, "".join(chr(int(code)) for code in codes[: min(count, 10_000)])
-    if kind == CELL:
-        cells = [_matrix(part, order, depth + 1) for tag, part in parts[3:] if tag == MATRIX and part]
-        return name, [cell[1] for cell in cells if cell is not None]
-    if kind == STRUCT:
-        return name, _structure(parts, order, count, depth)
-    return None
-
-
-def _numbers(part: tuple[int, bytes], order: str) -> Any:
-    kind, data = part
-    dtype = np.dtype(order + _TYPES[kind])
-    return np.frombuffer(data[: len(data) - len(data) % dtype.itemsize], dtype)
-
-
-def _structure(parts: list[tuple[int, bytes]], order: str, count: int, depth: int) -> Any:
-    """Return a structure as fields, or a list of them for an array of structures."""
-    width = struct.unpack_from(order + "i", parts[3][1])[0]
-    if not 0 < width <= 256:
-        raise ValueError("field names of no length")
-    names = [
-        parts[4][1][at : at + width].split(b"\x00")[0].decode("latin-1") for at in range(0, len(parts[4][1]), width)
-    ]
-    values = [_matrix(part, order, depth + 1) if part else None for tag, part in parts[5:] if tag == MATRIX]
-    rows = [
-        {name: value[1] for name, value in zip(names, values[at : at + len(names)], strict=False) if value is not None}
-        for at in range(0, min(count, len(values) // max(len(names), 1)) * len(names), max(len(names), 1))
-    ]
-    return rows[0] if len(rows) == 1 else rows
+def _add_array(tree: Tree, name: str, array: FileArray, large: bool) -> None:
+    stays = (large or isinstance(array.numbers, Spool)) and array.size * array.stored.itemsize > SMALL_BYTE
+    tree.nodes.append(Node(name, array if stays else array[()], array.shape, array.dtype, {}))

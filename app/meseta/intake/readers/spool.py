@@ -11,7 +11,7 @@ import os
 import tempfile
 import threading
 import weakref
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Final
@@ -38,9 +38,27 @@ class Spool:
 
     def __init__(self, where: Path) -> None:
         self._where, self._folder = where, _folder()
-        self._file = tempfile.TemporaryFile(dir=self._folder, prefix="meseta-", buffering=0)  # noqa: SIM115
+        try:
+            self._file = tempfile.TemporaryFile(dir=self._folder, prefix="meseta-", buffering=0)  # noqa: SIM115
+        except OSError as error:
+            raise self._fault(error) from error
         self._lock = threading.Lock()
+        self.end = 0
+        """Place behind the last byte so far."""
         self.close = weakref.finalize(self, self._file.close)
+
+    def append(self, blocks: Iterable[bytes]) -> int:
+        """Put bytes behind those that are there; return the place at which they begin.
+
+        Raises
+        ------
+        InputError
+            Where the disk is full.
+        """
+        begin = self.end
+        for block in blocks:
+            self.write(self.end, np.frombuffer(block, np.uint8))
+        return begin
 
     def write(self, place: int, values: npt.NDArray[Any]) -> None:
         """Write numbers from byte ``place`` on.
@@ -54,15 +72,19 @@ class Spool:
             with self._lock:
                 self._file.seek(place)
                 data = memoryview(np.ascontiguousarray(values).view(np.uint8).reshape(-1).data)
+                self.end = max(self.end, place + len(data))
                 while data:
                     data = data[self._file.write(data) :]
         except OSError as error:
-            what = "is full" if error.errno in (errno.ENOSPC, errno.EDQUOT) else f"fails ({error.strerror})"
-            raise InputError(
-                f"needs room for temporary numbers, and the disk of {self._folder} {what}",
-                str(self._where),
-                "make room, or name another folder in the environment variable TMPDIR",
-            ) from error
+            raise self._fault(error) from error
+
+    def _fault(self, error: OSError) -> InputError:
+        what = "is full" if error.errno in (errno.ENOSPC, errno.EDQUOT) else f"fails ({error.strerror})"
+        return InputError(
+            f"needs room for temporary numbers, and the disk of {self._folder} {what}",
+            str(self._where),
+            "make room, or name another folder in the environment variable TMPDIR",
+        )
 
     def read(self, place: int, count: int, dtype: np.dtype[Any]) -> npt.NDArray[Any]:
         """Return ``count`` numbers from byte ``place`` on."""

@@ -19,6 +19,7 @@ from meseta.errors import InputError
 
 __all__ = [
     "PACKED",
+    "inflated",
     "members_of",
     "peek_bytes",
     "read_bytes",
@@ -197,3 +198,26 @@ def unpacked_blocks(path: Path, block_byte: int) -> Iterator[bytes]:
         if not kind:
             raise
         raise InputError(f"is damaged {kind} ({error})", str(path), "pack the file again") from error
+
+
+def inflated(path: Path, place: int, size: int, most_byte: int) -> Iterator[bytes]:
+    """Yield the first ``most_byte`` bytes of what is packed in ``size`` bytes of a file (zlib), block by block.
+
+    Raises
+    ------
+    zlib.error
+        Where they are damaged.
+    """
+    unpacker = zlib.decompressobj()
+    with path.open("rb") as file:
+        file.seek(place)
+        while most_byte and not unpacker.eof:
+            packed = unpacker.unconsumed_tail
+            if not packed:
+                packed = file.read(min(size, 1 << 20))
+                size -= len(packed)
+            block = unpacker.decompress(packed, min(most_byte, 1 << 22))
+            if not (packed or block):
+                return
+            most_byte -= len(block)
+            yield block
