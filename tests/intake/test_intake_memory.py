@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import struct
 import subprocess
 import sys
 from pathlib import Path
@@ -16,7 +17,7 @@ from test_intake_layouts import WRITERS, assert_same
 from meseta import intake
 from meseta.errors import InputError
 from meseta.intake import open_recording, room, traces_from
-from meseta.intake.readers import file_array, hdf5_tree, numpy_files, spool, tdms, text, text_stream
+from meseta.intake.readers import file_array, hdf5_tree, numpy_files, spool, tdms_places, text, text_stream
 from meseta.recipe import Recipe
 from meseta.work import Work
 
@@ -81,9 +82,58 @@ def test_tdms_chunks_of_any_size_and_order_are_found_in_their_places(tmp_path, m
         for channel in file["g"].channels():
             whole = channel[:]
             for start, stop in ((0, len(whole)), (95, 210), (len(whole) - 3, len(whole))):
-                places = tdms._places_of(file, channel)
-                np.testing.assert_array_equal(places.read(shorter, start, stop), whole[start:stop])
+                places = tdms_places.places_of(file, channel, shorter)
+                np.testing.assert_array_equal(places.read(start, stop), whole[start:stop])
         file.close()
+
+
+@pytest.mark.parametrize("chunk", [4, 500])
+@pytest.mark.parametrize(("order", "interleaved"), [("<", False), ("<", True), (">", True)])
+@pytest.mark.parametrize("cut", [0, 8, 700])
+def test_tdms_numbers_that_take_turns_or_are_scaled_are_found(tmp_path, monkeypatch, chunk, order, interleaved, cut):
+    """Against the library's own: two channels of 16 and 64 bits, chunk by chunk, the first one scaled."""
+    path, rng = tmp_path / "a.tdms", np.random.default_rng(3)
+    path.write_bytes(_tdms(rng, chunk, order, interleaved)[: -cut or None])
+    monkeypatch.setattr(tdms_places, "BLOCK_BYTE", 600)
+    monkeypatch.setattr(tdms_places, "LONG_CHUNK_BYTE", 1000)
+    file = nptdms.TdmsFile.open(str(path))
+    for channel in file["g"].channels():
+        whole, places = channel[:], tdms_places.places_of(file, channel, path)
+        assert len(whole) >= 1500
+        for start, stop in ((0, len(whole)), (3, 5), (95, 1210), (len(whole) - 3, len(whole))):
+            np.testing.assert_array_equal(places.read(start, stop), whole[start:stop])
+    file.close()
+
+
+def _tdms(rng, chunk: int, order: str, interleaved: bool) -> bytes:
+    """Return one segment of 2000 numbers a channel, put together by the format's public description."""
+
+    def text(word: str) -> bytes:
+        return struct.pack(order + "I", len(word)) + word.encode()
+
+    scale = "NI_Scale[0]_"
+    scaling = [
+        ("NI_Number_Of_Scales", 3, "I", 1),
+        (f"{scale}Linear_Slope", 10, "d", 0.5),
+        (f"{scale}Linear_Y_Intercept", 10, "d", -1.0),
+        (f"{scale}Linear_Input_Source", 3, "I", 0xFFFFFFFF),
+        (f"{scale}Scale_Type", 0x20, "", "Linear"),
+    ]
+    about = struct.pack(order + "I", 2)
+    for name, kind, properties in (("a", 2, scaling), ("b", 10, [])):
+        about += text(f"/'g'/'{name}'") + struct.pack(order + "IIIQ", 20, kind, 1, chunk)
+        about += struct.pack(order + "I", len(properties))
+        for key, code, form, value in properties:
+            packed = text(value) if code == 0x20 else struct.pack(order + form, value)
+            about += text(key) + struct.pack(order + "I", {3: 7}.get(code, code)) + packed
+    kinds = np.dtype([("a", order + "i2"), ("b", order + "f8")])
+    rows = np.empty(2000, kinds)
+    rows["a"], rows["b"] = rng.integers(-9999, 9999, 2000), rng.normal(size=2000)
+    parts = np.split(rows, 2000 // chunk)
+    body = rows.tobytes() if interleaved else b"".join(p["a"].tobytes() + p["b"].tobytes() for p in parts)
+    contents = 2 | 4 | 8 | (32 if interleaved else 0) | (64 if order == ">" else 0)
+    lead = b"TDSm" + struct.pack("<I", contents) + struct.pack(order + "IQQ", 4713, len(about) + len(body), len(about))
+    return lead + about + body
 
 
 def _record(path: Path, samples: int) -> None:
