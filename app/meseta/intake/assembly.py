@@ -12,10 +12,12 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import InputError
+from meseta.intake.alike import Memory
 from meseta.intake.calibrate import Calibration
 from meseta.intake.constants import calibration_of, plain_constants
 from meseta.intake.cutting import PULL, PUSH, Cut, cut
 from meseta.intake.drive import DriveAxis, drive_of, sample_interval
+from meseta.intake.kept_layouts import fit_of
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.roles import settle_roles, unmatched
 from meseta.intake.room import check_room
@@ -332,14 +334,15 @@ class Part:
 
 
 def prepared(recording: Recording, recipe: Recipe) -> Recording:
-    """Return the recording with what the recipe says of its channels.
+    """Return the recording with what the recipe says of its channels: by the kept layout it fits, then one by one.
 
     Raises
     ------
     InputError
-        Where the recipe names a channel that the recording does not have: the layout is another one.
+        Where it fits no kept layout, or the recipe names a channel that the recording does not have.
     """
-    channels = settle_roles(recording.channels, recipe.intake.channels)
+    fit = fit_of(recording, recipe.intake)
+    channels = settle_roles(recording.channels if fit is None else fit.channels, recipe.intake.channels)
     strangers = unmatched(recording.channels, recipe.intake.channels)
     if strangers:
         there = ", ".join(f"'{channel.name}'" for channel in recording.channels[:8])
@@ -352,19 +355,29 @@ def prepared(recording: Recording, recipe: Recipe) -> Recording:
 
 
 @np.errstate(all="ignore")  # the numbers of a damaged recording may be anything
-def plan_of(recording: Recording, recipe: Recipe) -> Part:
+def plan_of(recording: Recording, recipe: Recipe, memory: Memory | None = None) -> Part:
     """Return the traces of one recording, not yet loaded.
+
+    Parameters
+    ----------
+    recording : Recording
+    recipe : Recipe
+    memory : Memory, optional
+        Of the batch that the recording belongs to; always used with the same recipe.
 
     Raises
     ------
     InputError
         Where its channels do not give conductance.
     """
-    recording = prepared(recording, recipe)
-    calibration = calibration_of(recording, recipe.calibration)
+    memory, settings = memory or Memory(), recipe.calibration
+    channels = memory.ask("channels", recording, lambda one: prepared(one, recipe).channels)
+    recording = recording.with_channels(channels)
+    calibration = memory.ask("calibration", recording, lambda one: calibration_of(one, settings))
     pieces = cut(recording, recipe.cutting, calibration)
-    axis = drive_of(recording, recipe.calibration, pieces.pull_sign)
-    interval, origin = sample_interval(recording, recipe.calibration)
+    sign = pieces.pull_sign
+    axis = memory.ask(("drive", sign), recording, lambda one: drive_of(one, settings, sign))
+    interval, origin = memory.ask("interval", recording, lambda one: sample_interval(one, settings))
     start, stop = np.array(pieces.start, np.int64), np.array(pieces.stop, np.int64)
     offsets = np.concatenate([[0], np.cumsum(stop - start)]).astype(np.int64)
     used = {channel.name for channel in (calibration.channel, axis.channel, calibration.second) if channel is not None}

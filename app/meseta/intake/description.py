@@ -14,9 +14,11 @@ from meseta.intake.assembly import Part, plan_of, prepared
 from meseta.intake.checkup import Finding, check_up
 from meseta.intake.context import batch_context
 from meseta.intake.files import find_files
+from meseta.intake.kept_layouts import fit_of, kept_layout
 from meseta.intake.opening import open_recording
 from meseta.intake.recording import RawChannel, Recording
 from meseta.recipe import Recipe
+from meseta.recipe.kept_layouts import KeptLayout
 from meseta.work import Work
 
 __all__ = ["ChannelDescription", "Description", "describe", "describe_recording"]
@@ -71,6 +73,10 @@ class Description:
         Of the calibration check-up.
     problem : str
         What must be given before the file can be read; empty where nothing is missing.
+    kept_layout : str
+        Name of the kept layout that it fits; empty where it was recognised.
+    form : KeptLayout
+        What it would be kept as, with these answers.
     """
 
     file: str
@@ -91,17 +97,20 @@ class Description:
     findings: tuple[Finding, ...] = ()
     problem: str = ""
     proposed_zero_g0: float | None = None
+    kept_layout: str = ""
+    form: KeptLayout = field(default_factory=KeptLayout, repr=False)
 
     def as_dict(self) -> dict[str, Any]:
         """Return everything as plain values for JSON."""
-        plain: dict[str, Any] = _finite(asdict(self))
+        plain: dict[str, Any] = _finite(asdict(self) | {"form": self.form.model_dump(mode="json")})
         return plain
 
     def lines(self) -> list[str]:
         """Return the description for people."""
         shown = [
             f"{self.file}",
-            f"  reader {self.reader}: {self.layout}",
+            f"  reader {self.reader}: {self.layout}"
+            + (f", kept layout '{self.kept_layout}'" if self.kept_layout else ""),
             f"  {self.size_byte} bytes, {self.samples} samples",
         ]
         shown += [channel.line() for channel in self.channels]
@@ -168,17 +177,18 @@ def describe(
 @np.errstate(all="ignore")  # the numbers of a damaged recording may be anything
 def describe_recording(recording: Recording, recipe: Recipe, work: Work | None = None) -> Description:
     """Describe one open recording: what it is taken for and what its numbers say of the calibration."""
-    recording = prepared(recording, recipe)
+    settled, fit = prepared(recording, recipe), fit_of(recording, recipe.intake)
     source = recording.source
-    channels = tuple(_channel(one) for one in recording.channels)
+    channels = tuple(_channel(one) for one in settled.channels)
     base = Description(
         source.name, source.reader, source.layout, source.size_byte, source.sha256, channels, dict(recording.metadata),
-        samples=recording.samples,
+        samples=recording.samples, kept_layout="" if fit is None else fit.name,
+        form=kept_layout(recording, recipe.intake),
     )  # fmt: skip
     try:
         part = plan_of(recording, recipe)
     except InputError as error:
-        doubts = [*recording.doubts, *(f"'{c.name}': {doubt}" for c in recording.channels for doubt in c.doubts)]
+        doubts = [*recording.doubts, *(f"'{c.name}': {doubt}" for c in settled.channels for doubt in c.doubts)]
         return _with(base, problem=f"{error.what} -> {error.remedy}", doubts=tuple(doubts))
     return _read(base, part, recipe, (work or Work()).quiet())
 

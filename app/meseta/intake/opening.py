@@ -4,15 +4,18 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
+from functools import partial
 from pathlib import Path
 from typing import Final
 
 from meseta.errors import InputError, MesetaError
+from meseta.intake.opening_layouts import opened_for_layouts
 from meseta.intake.readers.contents import Contents
 from meseta.intake.readers.unpack import peek_bytes, sha256_of
 from meseta.intake.recording import Recording
 from meseta.intake.registry import find_reader
 from meseta.recipe import Recipe
+from meseta.recipe.intake import IntakeSettings
 from meseta.traces import Source
 
 __all__ = ["OpenContext", "open_recording", "sha256_of"]
@@ -63,16 +66,35 @@ def open_recording(
     InputError
         Where the file is missing, not readable, damaged, or of no known layout.
     """
-    path, recipe = Path(path), recipe or Recipe()
+    path, settings = Path(path), (recipe or Recipe()).intake
+    found = context or OpenContext()
+    layouts = settings.layouts_in_use()
+    if not layouts:
+        return _opened(path, settings, name, found, checksum=checksum)
+    return opened_for_layouts(
+        layouts, settings, lambda one: _opened(path, one, name, found, checksum=checksum), partial(_recognised, path)
+    )
+
+
+def _recognised(path: Path) -> bool:
+    """Return whether a file says itself of what format it is."""
+    try:
+        find_reader(peek_bytes(path, HEAD_BYTE)[0], path, None)
+    except (MesetaError, OSError, EOFError):
+        return False
+    return True
+
+
+def _opened(path: Path, settings: IntakeSettings, name: str, context: OpenContext, *, checksum: bool) -> Recording:
     try:
         size = path.stat().st_size
         if size == 0:
             raise InputError("is empty", str(path), "check how it was written")
         head, packed = peek_bytes(path, HEAD_BYTE)
-        reader = find_reader(head, path, recipe.intake.reader)
+        reader = find_reader(head, path, settings.reader)
         if packed and reader.name not in ("text", "NumPy"):
             raise InputError(f"is a packed {reader.name} file", str(path), "unpack it first")
-        contents = reader.open(path, recipe.intake)
+        contents = reader.open(path, settings)
         digest = contents.sha256 or (sha256_of(path) if checksum else "")
     except MesetaError:
         raise
@@ -87,7 +109,7 @@ def open_recording(
     from meseta.intake.context import beside
 
     recording = _recording(contents, Source(digest, name or path.name, size, reader.name, contents.layout))
-    found, doubts = beside(path, recording.source.name, recipe.intake, context or OpenContext())
+    found, doubts = beside(path, recording.source.name, settings, context)
     if not found and not doubts:
         return recording
     return replace(recording, metadata={**contents.metadata, **found}, doubts=(*contents.doubts, *doubts))
@@ -104,4 +126,5 @@ def _recording(contents: Contents, source: Source) -> Recording:
         table=contents.table,
         doubts=contents.doubts,
         close=contents.close,
+        like=contents.like,
     )

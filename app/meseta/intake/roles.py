@@ -13,7 +13,17 @@ from meseta.intake.recording import RawChannel
 from meseta.intake.units import is_unit, parse_unit, unit_factor
 from meseta.recipe.intake import ROLES, ChannelRole
 
-__all__ = ["DRIVE_ROLES", "Guess", "guess_role", "settle_roles", "split_unit", "stem_of", "unmatched"]
+__all__ = [
+    "DRIVE_ROLES",
+    "MEASURED",
+    "Guess",
+    "guess_role",
+    "settle_roles",
+    "split_unit",
+    "stem_of",
+    "told_role",
+    "unmatched",
+]
 
 SIGNAL_ROLES: Final = ("conductance", "log_conductance", "current", "amplifier", "amplifier_high_gain", "resistance")
 DRIVE_ROLES: Final = ("displacement", "piezo", "time")
@@ -21,6 +31,8 @@ _DIMENSION: Final = {
     "conductance": "S", "log_conductance": "dec", "current": "A", "voltage": "V", "amplifier": "V",
     "amplifier_high_gain": "V", "resistance": "ohm", "displacement": "m", "piezo": "V", "time": "s", "bias": "V",
 }  # fmt: skip
+MEASURED: Final = frozenset(_DIMENSION)
+"""Roles whose numbers have a unit."""
 _REMARKS: Final = frozenset(
     {"raw", "smoothed", "filtered", "measured", "calculated", "abs", "mean", "corrected", "t", "x"}
 )
@@ -247,13 +259,13 @@ def unmatched(channels: Sequence[RawChannel], named: Mapping[str, ChannelRole]) 
     for name, role in named.items():
         if role.role == "ignore" or any(sign in name for sign in "*?"):
             continue
-        if not any(_find_told(channel.name, {name: role}) for channel in channels):
+        if not any(told_role(channel.name, {name: role}) for channel in channels):
             missing.append(name)
     return missing
 
 
 def _as_told(channel: RawChannel, named: Mapping[str, ChannelRole]) -> RawChannel:
-    told = _find_told(channel.name, named)
+    told = told_role(channel.name, named)
     if told is None:
         return channel
     unit = told.unit or channel.unit
@@ -267,7 +279,8 @@ def _as_told(channel: RawChannel, named: Mapping[str, ChannelRole]) -> RawChanne
     )
 
 
-def _find_told(name: str, named: Mapping[str, ChannelRole]) -> ChannelRole | None:
+def told_role(name: str, named: Mapping[str, ChannelRole]) -> ChannelRole | None:
+    """Return what ``intake.channels`` of the recipe says of the channel of a name; None where it says nothing."""
     if not named:
         return None
     last = name.rsplit("/", 1)[-1]
@@ -282,12 +295,17 @@ def _find_told(name: str, named: Mapping[str, ChannelRole]) -> ChannelRole | Non
     return None
 
 
+def _is_stated(channel: RawChannel) -> bool:
+    """Return whether the user said what a channel is, in the recipe or in a kept layout."""
+    return channel.ground == "recipe" or channel.ground.startswith("layout ")
+
+
 def _settled_voltage(channels: list[RawChannel]) -> tuple[RawChannel, ...]:
     """Settle what plain volts are: the bias beside a current, amplifier volts where nothing else was measured."""
     roles = {channel.role for channel in channels}
     settled = []
     for channel in channels:
-        if channel.role == "voltage" and channel.ground != "recipe":
+        if channel.role == "voltage" and not _is_stated(channel):
             if "current" in roles and "bias" not in roles:
                 channel = replace(
                     channel, role="bias", doubts=(*channel.doubts, "volts beside a current: taken as the bias")
