@@ -9,6 +9,7 @@ from intake_files import G0_SIEMENS, recipe, record, volts
 from meseta import intake
 from meseta.intake.calibration_kernels import pickup_sums, subtract_pickup
 from meseta.intake.mains import find_pickup
+from meseta.traces import Quality
 
 GAIN, BIAS, RATE = 1e6, 0.1, 1e4
 
@@ -112,11 +113,11 @@ def test_a_logarithmic_amplifier_is_left_alone_and_it_is_said(tmp_path):
 
 def test_kernels_equal_numpy():
     rng = np.random.default_rng(6)
-    values, angle = rng.normal(size=500), 2 * np.pi * np.arange(500) * 0.0123
+    values, angle = 3.0 + rng.normal(size=500), 2 * np.pi * (41 + np.arange(500)) * 0.0123
     runs = np.array([[3, 90], [120, 121], [200, 460]], np.int64)
     columns = np.stack([f(k * angle) for k in (1, 2, 3) for f in (np.cos, np.sin)], axis=1)
     matrix, vector, total = np.zeros((3, 6, 6)), np.zeros((3, 6)), np.zeros(3)
-    pickup_sums(values, angle, runs, 3, matrix, vector, total)
+    pickup_sums(values, 41, 0.0123, runs, 3, matrix, vector, total)
     for place, (begin, end) in enumerate(runs):
         row = columns[begin:end] - columns[begin:end].mean(axis=0)
         less = values[begin:end] - values[begin:end].mean()
@@ -133,3 +134,23 @@ def test_kernels_equal_numpy():
     expected = changed - np.sum(sizes * series, axis=1)
     subtract_pickup(changed, 7, 0.0123, at, parts)
     np.testing.assert_allclose(changed, expected, atol=1e-10)
+
+
+def test_saturation_hides_no_floor_and_is_flagged_as_the_amplifier_gave_it(tmp_path):
+    """A record whose densest readings are at full scale: the pickup is that of the floor, the flags those of the volts.
+
+    Flags are compared with the recorded volts, the floor with the record before the pickup was added (worked here).
+    """
+    rng = np.random.default_rng(7)
+    clear = np.tile(np.concatenate([np.full(1500, 20.0), np.full(100, 5.0), np.zeros(900)]), 40)
+    clear = clear + 1e-3 * rng.normal(size=len(clear))
+    planted = mains(len(clear), 50.0, [0.15])
+    given = np.clip(clear + planted, -10, 10)
+    given[1510] = 9.95  # above 99 % of full scale only with the pickup
+    path = record(tmp_path, amplifier=volts(given))
+    stated = {"gain_volt_per_ampere": GAIN, "bias_volt": BIAS, "sampling_hertz": RATE, "full_scale_volt": 10.0}
+    cleaned = intake.read(path, recipe(**stated, remove_mains=True))
+    flagged = cleaned.quality.read(0, len(given)) & Quality.SATURATED > 0
+    np.testing.assert_array_equal(flagged, np.abs(given) >= 9.9)
+    left = (cleaned.conductance * GAIN * BIAS * G0_SIEMENS - clear)[clear < 1.0]
+    assert np.mean(left**2) < 0.01 * np.mean(planted**2)

@@ -150,7 +150,7 @@ def test_gain_ratio_and_offset_are_fitted_and_used_only_when_asked(tmp_path, noi
     note = intake.read(path, as_stated).notes["calibration"]
     ratio, error = note["overlap_ratio"]["value"], note["overlap_ratio_error"]["value"]
     assert ratio == pytest.approx(1.07, abs=4 * error)
-    assert error < 0.02
+    assert error < 0.025
     assert note["overlap_offset_ampere"]["value"] == pytest.approx(1.07 * 5e-10, abs=100e-10 * noise / 2e-3)
     assert note["overlap_ratio"]["from"] == "fitted in the overlap, not used"
     floor = slice(500, 600)
@@ -170,6 +170,29 @@ def test_errors_of_the_ratio_are_honest(tmp_path):
         note = intake.read(path, recipe(**STATED)).notes["calibration"]
         inside += abs(note["overlap_ratio"]["value"] - 1) < 2 * note["overlap_ratio_error"]["value"]
     assert inside >= 24  # 28.6 expected; fewer than 24 has a probability below 0.001
+
+
+def test_errors_of_the_ratio_hold_for_slow_noise_in_a_short_record(tmp_path):
+    """Noise that wanders on a short record: the ratio is off by one standard error on average, not by several.
+
+    The root mean square of (fitted - true) / error over 30 recordings is 1 by definition of the standard error
+    (JCGM 100:2008, 2.3.1); 1.6 leaves room for 30 draws and the jackknife's own scatter.
+    """
+    pulls = []
+    for seed in range(30):
+        rng = np.random.default_rng(seed)
+        ampere = contacts(rng, 20)
+        wander = np.zeros(len(ampere))
+        for index in range(1, len(wander)):
+            wander[index] = 0.97 * wander[index - 1] + rng.normal()
+        low = ampere * LOW + 1e-4 * wander
+        high = np.clip(ampere * 1.03 * HIGH, -10, 10)
+        path = record(
+            tmp_path, amplifier=volts(low), amplifier_high_gain=(high, {"unit": "V", "role": "amplifier_high_gain"})
+        )
+        note = intake.read(path, recipe(**STATED)).notes["calibration"]
+        pulls.append((note["overlap_ratio"]["value"] - 1.03) / note["overlap_ratio_error"]["value"])
+    assert np.sqrt(np.mean(np.square(pulls))) < 1.6
 
 
 def test_an_amplifier_that_records_its_range(tmp_path):

@@ -31,7 +31,10 @@ def current_of(calibration: Calibration, spread: Spread) -> tuple[Floats, Bits |
     A logarithmic amplifier that shows sizes only gives sizes: its sign is that of the bias.
     """
     volts = _volts(calibration, calibration.channel, spread.recording, spread.start, spread.stop)
-    bits = _flags(calibration, volts, spread)
+    given = volts
+    if calibration.channel.name in calibration.pickup:
+        given = _given(calibration.channel, spread.recording, spread.start, spread.stop)
+    bits = _flags(calibration, given, spread)
     shifted = volts - spread.of(calibration.constant("offset_volt"))
     if calibration.curve is not None:
         ampere, beyond = calibration.curve.current(np.ascontiguousarray(shifted))
@@ -56,6 +59,11 @@ def power_of_ten(exponents: Floats) -> Floats:
 
 def _volts(calibration: Calibration, channel: RawChannel, recording: Recording, start: int, stop: int) -> Floats:
     return calibration.recorded(recording, channel, start, stop) * unit_factor(channel.unit or "V", "V")
+
+
+def _given(channel: RawChannel, recording: Recording, start: int, stop: int) -> Floats:
+    """Return the volts that the amplifier gave, pickup and all: its ends and its speed are in terms of these."""
+    return recording.values(channel, start, stop) * unit_factor(channel.unit or "V", "V")
 
 
 def _logarithmic(calibration: Calibration, shifted: Floats, spread: Spread) -> Floats:
@@ -89,8 +97,8 @@ def _slewing(calibration: Calibration, volts: Floats, spread: Spread) -> Bits:
     recording = spread.recording
     before, after = int(spread.start > 0), int(spread.stop < recording.samples)
     wide = Spread(recording, spread.start - before, spread.stop + after)
-    ends = [_volts(calibration, calibration.channel, recording, wide.start, spread.start), volts]
-    ends.append(_volts(calibration, calibration.channel, recording, spread.stop, wide.stop))
+    ends = [_given(calibration.channel, recording, wide.start, spread.start), volts]
+    ends.append(_given(calibration.channel, recording, spread.stop, wide.stop))
     bits = np.zeros(wide.stop - wide.start, np.uint8)
     flag_slewing(
         np.concatenate(ends), wide.piece_begins(), SLEWING_SHARE * calibration.slew_volt, Quality.SLEWING, bits
@@ -108,12 +116,14 @@ def _stitched(
     seen: list[tuple[int, Floats]] = []
 
     def share(start: int, stop: int) -> Floats:
-        seen.append((start, _volts(calibration, second, spread.recording, start, stop)))
+        seen.append((start, _given(second, spread.recording, start, stop)))
         return np.abs(seen[-1][1]) / full
 
     use, seams = calibration.switching.choose(share, spread)
     begin, wide = seen[-1]  # the range itself, and what it needed before and behind
     volts = wide[spread.start - begin : spread.stop - begin]
+    if second.name in calibration.pickup:
+        volts = _volts(calibration, second, spread.recording, spread.start, spread.stop)
     high = (volts - spread.of(calibration.constant("high_gain_offset_volt"))) / spread.of(
         calibration.constant("high_gain_volt_per_ampere")
     )

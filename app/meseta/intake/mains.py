@@ -14,6 +14,7 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 
+from meseta.intake.mains_floor import NOMINAL_HERTZ, floor_band, probes_of, runs_within, windows_of
 from meseta.intake.recording import Recording
 
 __all__ = ["Pickup", "find_pickup"]
@@ -21,27 +22,18 @@ __all__ = ["Pickup", "find_pickup"]
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
 Read = Callable[[int, int], Floats]
-
-NOMINAL_HERTZ: Final = (50.0, 60.0)
 SEARCH_HERTZ: Final = 0.6
 """How far from the nominal value the frequency is looked for; mains stray less, clocks of converters may not."""
 SEARCH_STEP_HERTZ: Final = 0.1
 HARMONICS: Final = 3
-WINDOW_SECOND: Final = 1.0
-FEWEST_PERIODS: Final = 2.0
-PROBE_WINDOWS: Final = 48
 THINNED_HERTZ: Final = 2000.0
 """Probes are averaged down to about this rate to find the frequency."""
-FLOOR_SHARE: Final = 0.2
-FLOOR_WIDTHS: Final = 12.0
-"""A band of 12 times the shortest stretch of values that holds a fifth of the samples takes in 6 sigma of noise, and a
-sine from end to end: a fifth of its time it spends within a tenth of its span."""
-SHORTEST_RUN_PERIODS: Final = 0.5
 LIVELY: Final = 2.0
 ROUNDS: Final = 4
 """A stretch of which the fit leaves more than twice the usual mean square holds a decay or a step and takes no part."""
 SIGNIFICANT_SIGMAS: Final = 5.0
-MOST_FLOOR_PROBES: Final = 400_000
+MAD_TO_SIGMA: Final = 1.482602218505602
+LEAST_STEPS: Final = 4
 
 
 @dataclass(frozen=True)
@@ -57,7 +49,8 @@ class Pickup:
     noise : float
         Standard deviation of what the fit leaves at the floor.
     amplitude_error : float
-        Standard error of one window's amplitude from that noise, taken as white.
+        Standard error of one window's amplitude: from that noise, taken as white, or from how much the fundamental
+        differs between neighbouring windows, whichever is larger.
     unit : str
     cycles_a_sample : float
     at : (anchors,) int64
@@ -122,58 +115,16 @@ def find_pickup(
     if not np.isfinite(interval_second) or interval_second <= 0 or 1 / interval_second < 5 * max(NOMINAL_HERTZ):
         return None
     harmonics = min(HARMONICS, int(0.4 / interval_second / max(NOMINAL_HERTZ)))
-    windows = _windows(recording.offsets, interval_second)
+    windows = windows_of(recording.offsets, interval_second)
     if len(windows) == 0:
         return None
     if most_windows is not None:
         windows = windows[np.unique(np.linspace(0, len(windows) - 1, most_windows).astype(int))]
-    band = _floor_band(read, windows)
+    band = floor_band(read, windows)
     frequency = _frequency(read, windows, band, interval_second, harmonics)
     if frequency is None:
         return None
     return _followed(recording, read, windows, band, (frequency, interval_second, harmonics), unit)
-
-
-def _windows(offsets: Integers, interval: float) -> Integers:
-    """Return (windows, 2) ranges of about a second that cross no end of a piece; pieces of few periods have none."""
-    wanted, fewest = round(WINDOW_SECOND / interval), FEWEST_PERIODS / min(NOMINAL_HERTZ) / interval
-    lengths = np.diff(offsets)
-    counts = np.where(lengths >= fewest, np.maximum(lengths // wanted, 1), 0)
-    begins = np.repeat(offsets[:-1], counts)
-    number = np.arange(counts.sum()) - np.repeat(np.cumsum(counts) - counts, counts)
-    whole, parts = np.repeat(lengths, counts), np.repeat(counts, counts)
-    found: Integers = np.stack([begins + whole * number // parts, begins + whole * (number + 1) // parts], axis=1)
-    return found
-
-
-def _floor_band(read: Read, windows: Integers) -> tuple[float, float]:
-    """Return the values between which a reading counts as floor: round the densest fifth of all samples."""
-    chosen = windows[np.unique(np.linspace(0, len(windows) - 1, PROBE_WINDOWS).astype(int))]
-    thin = max(1, int(np.sum(chosen[:, 1] - chosen[:, 0])) // MOST_FLOOR_PROBES)
-    values = np.concatenate([read(int(a), int(b))[::thin] for a, b in chosen])
-    values = np.sort(values[np.isfinite(values)])
-    held = int(FLOOR_SHARE * len(values))
-    if held < 1:
-        return np.nan, np.nan
-    widths = values[held:] - values[: len(values) - held]
-    place = int(np.argmin(widths))
-    centre = float(np.median(values[place : place + held + 1]))
-    step = np.diff(np.unique(values))
-    reach = FLOOR_WIDTHS * max(float(widths[place]), float(step.min()) if len(step) else 0.0)
-    return centre - reach, centre + reach
-
-
-def _runs(values: Floats, band: tuple[float, float], period: float) -> Integers:
-    """Return (n, 2) ranges within the band, at most ``period`` samples long and not shorter than half of that."""
-    inside = np.concatenate([[False], (values >= band[0]) & (values <= band[1]), [False]])
-    edges = np.flatnonzero(np.diff(inside)).reshape(-1, 2)
-    edges = edges[edges[:, 1] - edges[:, 0] >= max(SHORTEST_RUN_PERIODS * period, 2)]
-    lengths = edges[:, 1] - edges[:, 0]
-    counts = np.maximum(np.ceil(lengths / period), 1).astype(np.int64)
-    number = np.arange(counts.sum()) - np.repeat(np.cumsum(counts) - counts, counts)
-    begin, whole, parts = np.repeat(edges[:, 0], counts), np.repeat(lengths, counts), np.repeat(counts, counts)
-    found = np.stack([begin + whole * number // parts, begin + whole * (number + 1) // parts], axis=1)
-    return np.ascontiguousarray(found, np.int64)
 
 
 @dataclass(frozen=True)
@@ -200,9 +151,8 @@ def _fit(
 
     count, size = len(runs), 2 * harmonics
     lengths = runs[:, 1] - runs[:, 0]
-    turns = (first + np.arange(len(values))) * cycles_a_sample
     matrix, vector, total = np.zeros((count, size, size)), np.zeros((count, size)), np.zeros(count)
-    pickup_sums(values, np.asarray(2 * np.pi * (turns % 1.0)), runs, harmonics, matrix, vector, total)
+    pickup_sums(values, first, cycles_a_sample, runs, harmonics, matrix, vector, total)
     chosen = np.ones(count, np.bool_) if kept is None else kept
     for _ in range(ROUNDS if kept is None else 1):
         whole, right = matrix[chosen].sum(axis=0), vector[chosen].sum(axis=0)
@@ -227,14 +177,14 @@ def _frequency(
 ) -> float | None:
     """Return the frequency whose Fourier series explains most of the floor, refined by a parabola."""
     by = max(1, int(1.0 / interval / THINNED_HERTZ))
-    chosen = windows[np.unique(np.linspace(0, len(windows) - 1, PROBE_WINDOWS).astype(int))]
+    chosen = probes_of(windows)
     period = 1.0 / min(NOMINAL_HERTZ) / interval / by
     probes = []
     for begin, end in chosen.tolist():
         values = read(begin, end)
         inside = (values >= band[0]) & (values <= band[1])
         thin = _thinned(np.where(inside, values, np.nan), by)
-        runs = _runs(thin, band, period)
+        runs = runs_within(thin, band, period)
         if len(runs):
             probes.append((np.nan_to_num(thin), runs, np.ones(len(runs), np.bool_)))
 
@@ -272,7 +222,7 @@ def _followed(
     middles, fits = [], []
     for begin, end in windows.tolist():
         values = read(begin, end)
-        runs = _runs(values, band, period)
+        runs = runs_within(values, band, period)
         fit = _fit(np.nan_to_num(values), begin, runs, frequency * interval, harmonics) if len(runs) else None
         if fit is not None:
             middles.append((begin + end) // 2)
@@ -283,7 +233,8 @@ def _followed(
     sizes = np.hypot(parts[:, 0::2], parts[:, 1::2])
     used = sum(fit.samples for fit in fits)
     noise = np.sqrt(sum(fit.left for fit in fits) / used)
-    error = float(noise * np.sqrt(2.0 / np.median([fit.samples for fit in fits])))
+    white = float(noise * np.sqrt(2.0 / np.median([fit.samples for fit in fits])))
+    error = max(white, _scatter(sizes[:, 0]))
     at, anchored = _anchored(recording.offsets, np.array(middles, np.int64), parts)
     return Pickup(
         frequency,
@@ -296,6 +247,15 @@ def _followed(
         anchored,
         used / recording.samples,
     )
+
+
+def _scatter(sizes: Floats) -> float:
+    """Return how far the amplitude of a window lies from that of the next, as a standard deviation of one of them.
+
+    Decays and steps that are left in the floor move it by more than white noise.
+    """
+    steps = np.abs(np.diff(sizes))
+    return MAD_TO_SIGMA * float(np.median(steps)) / np.sqrt(2.0) if len(steps) >= LEAST_STEPS else 0.0
 
 
 def _anchored(offsets: Integers, middles: Integers, parts: Floats) -> tuple[Integers, Floats]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
 from typing import Final
 
 import numpy as np
@@ -42,14 +43,19 @@ def overlap_of(recording: Recording, calibration: Calibration) -> Overlap | None
         return None
     gain, offset, high_gain, high_offset = (float(value) for value in constants)
     groups = []
-    for at in np.unique(np.linspace(0, max(recording.samples - PROBE_SAMPLES, 0), PROBES).astype(np.int64)).tolist():
-        stop = min(at + PROBE_SAMPLES, recording.samples)
+    for at, stop in _stretches(recording.samples):
         low = recording.values(calibration.channel, at, stop) * unit_factor(calibration.channel.unit or "V", "V")
         high = recording.values(second, at, stop) * unit_factor(second.unit or "V", "V")
         share = np.abs(high) / float(full_scale)
         use = (share > BAND[0]) & (share < BAND[1]) & np.isfinite(low)
         groups.append((((low[use] - offset) / gain), (high[use] - high_offset) / high_gain))
     return _fitted([group for group in groups if len(group[0])])
+
+
+def _stretches(samples: int) -> list[tuple[int, int]]:
+    """Return stretches spread over the record that never overlap: the jackknife takes each for new."""
+    edges = np.linspace(0, samples, PROBES + 1).astype(np.int64).tolist()
+    return [(at, min(stop, at + PROBE_SAMPLES)) for at, stop in pairwise(edges) if stop > at]
 
 
 def _fitted(groups: list[tuple[Floats, Floats]]) -> Overlap | None:
