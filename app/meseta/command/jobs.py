@@ -20,6 +20,7 @@ from meseta.command.frame import (
     tell,
     working,
 )
+from meseta.command.keeping import peek_and_keep
 from meseta.command.physics import physics_lines, spread_lines
 from meseta.command.printed import check_lines, result_lines, study_answer, study_lines
 from meseta.errors import CallError, Cancelled, InputError, MesetaError
@@ -60,11 +61,15 @@ def window(
 
 @click.command()
 @click.argument("files", nargs=-1, required=True, type=click.Path())
+@click.option("--keep-layout", "keep_name", metavar="NAME", help="Keep what was recognised as a layout of that name.")
+@click.option("--recipe-out", type=click.Path(path_type=Path), help="Recipe file to keep it in, new or there already.")
 @recipe_options
 @strict_option
 @json_option
 def peek(
     files: tuple[str, ...],
+    keep_name: str | None,
+    recipe_out: Path | None,
     recipe_path: str | None,
     preset: str | None,
     settings: tuple[str, ...],
@@ -75,6 +80,9 @@ def peek(
     from meseta import intake, study
 
     recipe = recipe_from(recipe_path, preset, settings)
+    if keep_name is not None or recipe_out is not None:
+        peek_and_keep(files, recipe, keep_name, recipe_out, strict, as_json)
+        return
     studies = [path for path in files if study.is_study(path)]
     others = [path for path in files if path not in studies]
     with working() as work:

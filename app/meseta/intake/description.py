@@ -73,6 +73,8 @@ class Description:
         Of the calibration check-up.
     problem : str
         What must be given before the file can be read; empty where nothing is missing.
+    pieces : int
+        Parts that the recording itself comes in: datasets, rows, columns, blocks.
     kept_layout : str
         Name of the kept layout that it fits; empty where it was recognised.
     form : KeptLayout
@@ -97,6 +99,7 @@ class Description:
     findings: tuple[Finding, ...] = ()
     problem: str = ""
     proposed_zero_g0: float | None = None
+    pieces: int = 1
     kept_layout: str = ""
     form: KeptLayout = field(default_factory=KeptLayout, repr=False)
 
@@ -182,7 +185,7 @@ def describe_recording(recording: Recording, recipe: Recipe, work: Work | None =
     channels = tuple(_channel(one) for one in settled.channels)
     base = Description(
         source.name, source.reader, source.layout, source.size_byte, source.sha256, channels, dict(recording.metadata),
-        samples=recording.samples, kept_layout="" if fit is None else fit.name,
+        samples=recording.samples, pieces=recording.pieces, kept_layout="" if fit is None else fit.name,
         form=kept_layout(recording, recipe.intake),
     )  # fmt: skip
     try:

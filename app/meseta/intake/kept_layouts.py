@@ -12,11 +12,23 @@ from meseta.errors import InputError
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.roles import MEASURED, settle_roles, split_unit, stem_of, told_role
 from meseta.intake.units import is_unit, parse_unit
+from meseta.recipe import Recipe
 from meseta.recipe.intake import ChannelRole, IntakeSettings
-from meseta.recipe.kept_layouts import KeptChannel, KeptLayout
+from meseta.recipe.kept_layouts import NO_LAYOUT, KeptChannel, KeptLayout
 from meseta.recipe.roles import Role
 
-__all__ = ["Fit", "LayoutError", "answers_of", "arrangement_of", "differences", "fit_of", "kept_layout", "nearest_fit"]
+__all__ = [
+    "Fit",
+    "LayoutError",
+    "answered_by",
+    "arrangement_of",
+    "as_seen",
+    "differences",
+    "fit_of",
+    "kept_layout",
+    "nearest_fit",
+    "recognised_anew",
+]
 
 SHOWN: Final = 6
 """Names that a sentence lists at most."""
@@ -33,11 +45,15 @@ class LayoutError(InputError):
         Name of the layout that comes nearest.
     differences : tuple of str
         How the file differs from it, one sentence each.
+    seen : KeptLayout
+        The file as it was recognised.
     """
 
-    def __init__(self, what: str, where: str, remedy: str, layout: str, differences: Sequence[str]) -> None:
+    def __init__(
+        self, what: str, where: str, remedy: str, layout: str, differences: Sequence[str], seen: KeptLayout
+    ) -> None:
         super().__init__(what, where, remedy)
-        self.layout, self.differences = layout, tuple(differences)
+        self.layout, self.differences, self.seen = layout, tuple(differences), seen
 
 
 @dataclass(frozen=True)
@@ -93,6 +109,15 @@ def _as_recorded(channel: RawChannel) -> KeptChannel:
         file_offset=channel.offset,
         numbers="whole" if channel.dtype.kind in "biu" else "real",
         shared=channel.shared,
+    )
+
+
+def as_seen(recording: Recording) -> KeptLayout:
+    """Return a recording as it was opened, in the form of a layout: what was recognised is the answer."""
+    channels = {name: _as_recorded(channel) for name, channel in _named(recording.channels).items()}
+    source = recording.source
+    return KeptLayout.model_construct(
+        reader=source.reader, arrangement=arrangement_of(source.layout), channels=channels
     )
 
 
@@ -157,41 +182,38 @@ def _by_form(names: Iterable[str], form: object) -> dict[str, list[str]]:
     return found
 
 
-def differences(kept: KeptLayout, recording: Recording, told: Mapping[str, ChannelRole] | None = None) -> list[str]:
-    """Return how a recording differs from a kept layout, one sentence each; nothing where it fits.
+def differences(
+    kept: KeptLayout, seen: KeptLayout, pieces: int, told: Mapping[str, ChannelRole] | None = None
+) -> list[str]:
+    """Return how a file differs from a kept layout, one sentence each; nothing where it fits.
 
     Parameters
     ----------
     kept : KeptLayout
-    recording : Recording
-        As it was opened.
+    seen : KeptLayout
+        The file: :func:`as_seen`, or what it would be kept as.
+    pieces : int
+        Of the recording.  In a single one nothing shows how several would stand.
     told : mapping, optional
         ``intake.channels`` of the recipe: what it names is stated anew, so that it cannot differ.
     """
-    said = []
-    source = recording.source
-    if kept.reader and kept.reader != source.reader:
-        said.append(f"it is read as {source.reader}, not as {kept.reader}")
-    arrangement = arrangement_of(source.layout)
-    if kept.arrangement and kept.arrangement != arrangement and not _same_for_one(kept.arrangement, recording):
-        said.append(f"traces stand as '{arrangement}', not as '{kept.arrangement}'")
-    seen = _named(recording.channels)
-    pairs = _paired(kept.channels, seen)
+    said, told = [], told or {}
+    if kept.reader and kept.reader != seen.reader:
+        said.append(f"it is read as {seen.reader}, not as {kept.reader}")
+    one = pieces == 1 and "2D" not in seen.arrangement and "2D" not in kept.arrangement
+    if kept.arrangement and kept.arrangement != seen.arrangement and not one:
+        said.append(f"traces stand as '{seen.arrangement}', not as '{kept.arrangement}'")
+    pairs = _paired(kept.channels, seen.channels)
     missing = [name for name in kept.channels if name not in pairs.values()]
-    new = [name for name in seen if name not in pairs and told_role(name, told or {}) is None]
+    new = [name for name in seen.channels if name not in pairs and told_role(name, told) is None]
     if missing:
         said.append(f"it has no {_listed(missing)}")
     if new:
         said.append(f"it has {_listed(new)} besides")
     for name, of in pairs.items():
-        if told_role(name, told or {}) is None:
-            said += _unlike(name, _as_recorded(seen[name]), kept.channels[of], recording.pieces > 1)
+        if told_role(name, told) is None:
+            said += _unlike(name, seen.channels[name], kept.channels[of], pieces > 1)
     return said
-
-
-def _same_for_one(arrangement: str, recording: Recording) -> bool:
-    """Return whether a recording is one trace, or one record, in which nothing shows how several would stand."""
-    return recording.pieces == 1 and "2D" not in recording.source.layout and "2D" not in arrangement
 
 
 def _listed(names: Sequence[str]) -> str:
@@ -249,8 +271,10 @@ def nearest_fit(
     recording: Recording, layouts: Mapping[str, KeptLayout], told: Mapping[str, ChannelRole] | None = None
 ) -> list[Fit]:
     """Return the layouts that fit a recording, in their order; where none does, the one that comes nearest."""
+    seen = as_seen(recording)
     compared = [
-        Fit(name, tuple(differences(layout, recording, told)), recording.channels) for name, layout in layouts.items()
+        Fit(name, tuple(differences(layout, seen, recording.pieces, told)), recording.channels)
+        for name, layout in layouts.items()
     ]
     fitting = [replace(one, channels=_answered(recording, one.name, layouts[one.name])) for one in compared
                if not one.differences]  # fmt: skip
@@ -280,6 +304,7 @@ def fit_of(recording: Recording, settings: IntakeSettings) -> Fit | None:
             "meseta peek FILE --keep-layout NAME --recipe-out RECIPE",
             best.name,
             best.differences,
+            as_seen(recording),
         )
     unlike = [one.name for one in found[1:] if _meaning(one) != _meaning(best)]
     if unlike:
@@ -289,6 +314,7 @@ def fit_of(recording: Recording, settings: IntakeSettings) -> Fit | None:
             "choose one with intake.use_layout",
             best.name,
             (),
+            as_seen(recording),
         )
     return best
 
@@ -321,16 +347,35 @@ def _with_answer(channel: RawChannel, name: str, answer: KeptChannel) -> RawChan
     )
 
 
-def answers_of(layout: KeptLayout, recording: Recording) -> dict[str, ChannelRole]:
-    """Return what a layout says of those channels of a recording that are as they were, for ``intake.channels``.
+def answered_by(layout: KeptLayout, told: Mapping[str, ChannelRole]) -> list[str]:
+    """Return the entries of ``intake.channels`` that a layout holds: those that name a channel of it."""
+    return [key for key, role in told.items() if any(told_role(name, {key: role}) for name in layout.channels)]
 
-    What differs is left to be recognised: where a layout is to be corrected, nobody need repeat the rest.
-    """
-    seen = _named(recording.channels)
+
+def _answers_of(kept: KeptLayout, seen: KeptLayout) -> dict[str, ChannelRole]:
+    """Return what a layout says of those channels of a file that are as they were, for ``intake.channels``."""
     found = {}
-    for name, of in _paired(layout.channels, seen).items():
-        kept = layout.channels[of]
-        if not _unlike(name, _as_recorded(seen[name]), kept, several=False):
-            scale, offset = (1.0 if kept.scale is None else kept.scale), (0.0 if kept.offset is None else kept.offset)
-            found[name] = ChannelRole(role=kept.role, unit=kept.unit, scale=scale, offset=offset)
+    for name, of in _paired(kept.channels, seen.channels).items():
+        one = kept.channels[of]
+        if not _unlike(name, seen.channels[name], one, several=False):
+            scale, offset = (1.0 if one.scale is None else one.scale), (0.0 if one.offset is None else one.offset)
+            found[name] = ChannelRole(role=one.role, unit=one.unit, scale=scale, offset=offset)
     return found
+
+
+def recognised_anew(recipe: Recipe, seen: KeptLayout, name: str = "") -> Recipe:
+    """Return a recipe with which a file that fits no layout is recognised anew, to be kept then.
+
+    Parameters
+    ----------
+    recipe : Recipe
+    seen : KeptLayout
+        The file, as :class:`LayoutError` has it.
+    name : str
+        Of the layout to be corrected: what it says of channels that are as they were is taken over, so that nobody
+        need repeat it; the rest is left to be recognised.
+    """
+    kept = recipe.intake.layouts.get(name)
+    channels = ({} if kept is None else _answers_of(kept, seen)) | recipe.intake.channels
+    plain = {key: one.model_dump() for key, one in channels.items()}
+    return recipe.with_values("intake", use_layout=NO_LAYOUT, channels=plain)
