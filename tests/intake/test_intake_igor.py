@@ -17,26 +17,66 @@ from meseta import intake
 from meseta.errors import MesetaError
 from meseta.recipe import Recipe
 
-NUMBER_TYPE = {"f4": 2, "f8": 4}
+NUMBER_TYPE = {"f4": 2, "f8": 4, "i1": 8, "i2": 16, "i4": 32, "u1": 72, "u2": 80, "u4": 96}
 NM = np.linspace(0, 1, 64)
 
 
-def wave(values: np.ndarray, *, unit: str = "", step: float = 1.0, axis: str = "", note: str = "") -> bytes:
+def wave(
+    values: np.ndarray,
+    *,
+    unit: str = "",
+    step: float = 1.0,
+    axis: str = "",
+    note: str = "",
+    order: str = "<",
+    name: str = "G",
+) -> bytes:
     """Return a version 5 wave; its header's 16-bit words sum to zero."""
-    body, text = values.astype(values.dtype.newbyteorder("<")).tobytes(), note.encode()
-    head = struct.pack("<hhiiii4i4iiii", 5, 0, 320 + len(body), 0, len(text), 0, *[0] * 8, 0, 0, 0)
-    fields = struct.pack(
-        "<IIIihh6sh32siI", 0, 0, 0, len(values), NUMBER_TYPE[values.dtype.str[1:]], 0, b"", 1, b"G", 0, 0
-    )
-    fields += struct.pack("<4i4d4d", len(values), 0, 0, 0, step, 1, 1, 1, 0, 0, 0, 0)
-    fields += struct.pack("<4s16shhdd", unit.encode(), axis.encode(), 0, 0, 0, 0)
-    fields += struct.pack("<I4I4II16i", 0, *[0] * 8, 0, *[0] * 16)
-    fields += struct.pack("<hhhBBIihhII", 0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 0)
+    body, text = values.astype(values.dtype.newbyteorder(order)).tobytes("F"), note.encode()
+    sizes = (*values.shape, 0, 0, 0)[:4]
+    head = struct.pack(order + "hhiiii4i4iiii", 5, 0, 320 + len(body), 0, len(text), 0, *[0] * 8, 0, 0, 0)
+    kind = NUMBER_TYPE[values.dtype.str[1:]]
+    fields = struct.pack(order + "IIIihh6sh32siI", 0, 0, 0, values.size, kind, 0, b"", 1, name.encode(), 0, 0)
+    fields += struct.pack(order + "4i4d4d", *sizes, step, 1, 1, 1, 0, 0, 0, 0)
+    fields += struct.pack(order + "4s16shhdd", unit.encode(), axis.encode(), 0, 0, 0, 0)
+    fields += struct.pack(order + "I4I4II16i", 0, *[0] * 8, 0, *[0] * 16)
+    fields += struct.pack(order + "hhhBBIihhII", 0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 0)
     header = bytearray(head + fields)
     assert len(header) == 384
-    total = int(np.frombuffer(bytes(header), "<i2").astype(np.int64).sum())
-    struct.pack_into("<h", header, 2, ((-total + 0x8000) & 0xFFFF) - 0x8000)
+    put_right(header, 2, order)
     return bytes(header) + body + text
+
+
+def old_wave(
+    version: int,
+    values: np.ndarray,
+    order: str = "<",
+    *,
+    unit: str = "",
+    step: float = 1.0,
+    axis: str = "",
+    note: str = "",
+    name: str = "G",
+) -> bytes:
+    """Return a wave of version 2 or 3: 16 or 20 bytes of header, 110 of wave header, samples, 16 bytes, note."""
+    body, text = values.astype(values.dtype.newbyteorder(order)).tobytes(), note.encode()
+    sizes = (0, 0) if version == 3 else (0,)  # of formula and picture
+    head = struct.pack(f"{order}hii{len(sizes)}ih", version, 110 + len(body) + 16, len(text), *sizes, 0)
+    kind = NUMBER_TYPE[values.dtype.str[1:]]
+    fields = struct.pack(order + "hI20shhI4s4sih", kind, 0, name.encode(), 0, 0, 0, unit.encode(), axis.encode(),
+                         len(values), 0)  # fmt: skip
+    fields += struct.pack(order + "ddhhhdd2cIiI2cII", step, 0, 0, 0, 0, 0, 0, b"\0", b"\0", 0, 0, 0, b"\0", b"\0", 0, 0)
+    header = bytearray(head + fields)
+    assert len(header) == {2: 126, 3: 130}[version]
+    put_right(header, len(head) - 2, order)
+    return bytes(header) + body + bytes(16) + text
+
+
+def put_right(header: bytearray, place: int, order: str) -> None:
+    """Set the checksum at a place so that the header's 16-bit words sum to zero."""
+    header[place : place + 2] = b"\0\0"
+    total = int(np.frombuffer(bytes(header), order + "i2").astype(np.int64).sum())
+    struct.pack_into(order + "h", header, place, ((-total + 0x8000) & 0xFFFF) - 0x8000)
 
 
 @pytest.mark.parametrize("kind", [np.float32, np.float64])

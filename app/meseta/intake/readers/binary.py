@@ -11,6 +11,7 @@ import numpy.typing as npt
 
 from meseta.errors import InputError
 from meseta.intake.readers.contents import Contents, make_channel, whole
+from meseta.intake.readers.file_array import InFile
 from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["BinaryReader"]
@@ -34,9 +35,7 @@ class _Interleaved:
         """Return samples ``start`` to ``stop``."""
         row = self.dtype.itemsize * self.channels
         count = (stop - start) * self.channels
-        block = np.fromfile(self.path, self.dtype, count, offset=self.header_byte + start * row)
-        if len(block) != count:
-            raise InputError("became shorter while it was read", str(self.path), "wait until it is written whole")
+        block = InFile(self.path).read(self.header_byte + start * row, count, self.dtype)
         return block.reshape(-1, self.channels)[:, self.place].astype(self.dtype.newbyteorder("="))
 
 
