@@ -110,3 +110,170 @@ def test_enter_reads_the_files_once_they_can_be_read(make, settle, folder):
     QTest.keyClick(page.accept_button, Qt.Key.Key_Return)
     settle(window)
     assert window.session.traces.traces == 3
+
+
+# -- kept layouts -----------------------------------------------------------------------------------------------------
+
+
+def press(button):
+    QTest.mouseClick(button, Qt.MouseButton.LeftButton)
+
+
+def offered(page):
+    """What may be chosen to read the files by."""
+    return [page.kept.choice.itemText(place) for place in range(page.kept.choice.count())]
+
+
+def choose(page, words):
+    page.kept.choice.setCurrentIndex(page.kept.choice.findText(words))
+    page.kept.choice.activated.emit(page.kept.choice.currentIndex())
+
+
+@pytest.fixture
+def kept(check, settle):
+    """The three files, read with their layout kept as "rig 2" and a bias given."""
+    window, page = check
+    page.draft.session.change_setting("calibration", "bias_volt", 0.1, "Bias")
+    settle(window)
+    page.kept.name.setText("rig 2")
+    press(page.kept.keep)
+    settle(window)
+    return window, page
+
+
+def in_microampere(folder):
+    """A further night in which somebody changed the unit."""
+    place = folder.parent / "next"
+    place.mkdir()
+    lines = (folder / "pull_0.csv").read_text().replace("current (nA)", "current (µA)")
+    (place / "pull_7.csv").write_text(lines, encoding="utf-8")
+    return place
+
+
+def test_the_answer_is_kept_under_a_name_and_the_files_are_read_by_it(kept, settle):
+    window, page = kept
+    settings = page.draft.session.document.recipe.intake
+    assert list(settings.layouts) == ["rig 2"] and settings.use_layout is None
+    assert {one.role for one in settings.layouts["rig 2"].channels.values()} == {"displacement", "current"}
+    assert page.picture.described[0].kept_layout == "rig 2"
+    assert "'rig 2'" in page.kept.said.text()
+    press(page.accept_button)
+    settle(window)
+    assert window.session.traces.traces == 3
+    assert "rig 2" in window.session.document.recipe.intake.layouts
+
+
+def test_a_correction_is_part_of_what_is_kept(check, settle):
+    window, page = check
+    combo = page.channels.roles["displacement (nm)"]
+    combo.setCurrentIndex(combo.findText("other"))
+    combo.activated.emit(combo.currentIndex())
+    settle(window)
+    page.kept.name.setText("no drive")
+    QTest.keyClick(page.kept.name, Qt.Key.Key_Return)
+    settle(window)
+    settings = page.draft.session.document.recipe.intake
+    assert settings.layouts["no drive"].channels["displacement (nm)"].role == "other"
+    assert settings.channels == {}  # one place holds the answer
+
+
+def test_a_name_that_is_none_is_refused_in_words(check):
+    _, page = check
+    for text in ("", "none"):
+        page.kept.name.setText(text)
+        press(page.kept.keep)
+        assert page.kept.wrong.isVisible() and page.kept.wrong.text()
+    assert page.draft.session.document.recipe.intake.layouts == {}
+
+
+def test_files_that_do_not_fit_any_more_are_not_read_and_the_difference_is_said(kept, settle, folder):
+    window, page = kept
+    press(page.accept_button)
+    settle(window)
+    window.session.undo.setClean()
+    window.commands.check_paths([str(in_microampere(folder))])
+    settle(window)
+    assert not page.accept_button.isEnabled()
+    assert "do not fit" in page.title.text()
+    said = [page.kept.differences.itemAt(place).widget().text() for place in range(page.kept.differences.count())]
+    assert len(said) == 1
+    assert "is in µA" in said[0] and "nA was stated" in said[0]
+    assert page.kept.correct.isVisible() and page.kept.another.isVisible()
+
+
+def test_a_misfit_is_corrected_and_kept_under_the_same_name(kept, settle, folder):
+    window, page = kept
+    press(page.accept_button)
+    settle(window)
+    window.session.undo.setClean()
+    window.commands.check_paths([str(in_microampere(folder))])
+    settle(window)
+    press(page.kept.correct)
+    settle(window)
+    assert page.kept.name.text() == "rig 2"
+    assert page.accept_button.isEnabled()
+    press(page.kept.keep)
+    settle(window)
+    settings = page.draft.session.document.recipe.intake
+    assert list(settings.layouts) == ["rig 2"]
+    assert settings.layouts["rig 2"].channels["current (µA)"].unit == "µA"
+    assert settings.use_layout is None and settings.channels == {}
+
+
+def test_a_misfit_is_kept_as_another_layout_beside_the_first(kept, settle, folder):
+    window, page = kept
+    press(page.accept_button)
+    settle(window)
+    window.session.undo.setClean()
+    window.commands.check_paths([str(in_microampere(folder))])
+    settle(window)
+    press(page.kept.another)
+    settle(window)
+    assert page.kept.name.text() == ""
+    page.kept.name.setText("new rig")
+    press(page.kept.keep)
+    settle(window)
+    assert list(page.draft.session.document.recipe.intake.layouts) == ["rig 2", "new rig"]
+    assert page.picture.described[0].kept_layout == "new rig"
+    page.draft.session.undo.undo()
+    assert list(page.draft.session.document.recipe.intake.layouts) == ["rig 2"]
+
+
+def test_a_layout_kept_for_one_study_is_proposed_for_the_next_and_never_taken_of_itself(kept, settle, make, folder):
+    window, page = kept
+    press(page.accept_button)
+    settle(window)
+    later = make()
+    later.commands.check_paths([str(folder)])
+    settle(later)
+    other = later.commands._check
+    assert other.draft.session.document.recipe.intake.layouts == {}
+    assert other.picture.described[0].kept_layout == ""
+    assert "layout 'rig 2', kept before" in offered(other)
+    assert other.kept.use.isVisible()
+    press(other.kept.use)
+    settle(later)
+    assert other.picture.described[0].kept_layout == "rig 2"
+    choose(other, "what is recognised")
+    settle(later)
+    assert other.draft.session.document.recipe.intake.use_layout == "none"
+    assert other.picture.described[0].kept_layout == ""
+    choose(other, "whichever kept layout fits")
+    settle(later)
+    assert other.picture.described[0].kept_layout == "rig 2"
+
+
+def test_what_another_version_remembered_stops_nothing(qapp, tmp_path):
+    from PySide6.QtCore import QSettings
+
+    from meseta.recipe.kept_layouts import KeptLayout
+    from meseta.window.filecheck.remembered import RememberedLayouts
+
+    settings = QSettings(str(tmp_path / "a.ini"), QSettings.Format.IniFormat)
+    settings.setValue("layouts", '{"a": {"reader": "text", "colour": 3}, "none": {}, "b": {"reader": "text"}, "c": 1}')
+    remembered = RememberedLayouts(settings)
+    assert list(remembered.entries()) == ["b"]
+    remembered.add({"d": KeptLayout(reader="HDF5")})
+    assert list(remembered.entries()) == ["b", "d"]
+    settings.setValue("layouts", "[1")
+    assert remembered.entries() == {}

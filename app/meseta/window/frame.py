@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from typing import Any, Protocol
 
 import numpy.typing as npt
+from PySide6.QtCore import QSettings
 
 from meseta.window.session import Session
 from meseta.window.theme import Theme, ThemeKeeper
@@ -18,6 +19,7 @@ class Frame(Protocol):
 
     session: Session
     themes: ThemeKeeper
+    settings: QSettings
 
     @property
     def theme(self) -> Theme:

@@ -22,6 +22,7 @@ class DraftFrame:
         self._frame = frame
         self.session = Session(frame.session.jobs, recipe, frame.session)
         self.themes: ThemeKeeper = frame.themes
+        self.settings = frame.settings
 
     @property
     def theme(self) -> Theme:

@@ -19,7 +19,9 @@ from meseta.recipe.intake import IntakeSettings
 from meseta.window.envelope import heights
 from meseta.window.filecheck.channels import ChannelTable
 from meseta.window.filecheck.draft import DraftFrame
+from meseta.window.filecheck.kept import KeptLayouts
 from meseta.window.filecheck.preview import CheckPicture, check_picture
+from meseta.window.filecheck.remembered import RememberedLayouts
 from meseta.window.forms import SectionForm
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
@@ -50,10 +52,12 @@ class FileCheck(QWidget):
         self.title, self.summary = QLabel(""), QLabel("")
         self.doubts = QVBoxLayout()
         self.channels = ChannelTable(self.draft.session)
+        self.remembered = RememberedLayouts(frame.settings)
+        self.kept = KeptLayouts(self.draft.session, self.remembered)
         self.forms = {
             "calibration": SectionForm(self.draft, "calibration", CalibrationSettings, "calibration"),
             "cutting": SectionForm(self.draft, "cutting", CuttingSettings, "cutting"),
-            "intake": SectionForm(self.draft, "intake", IntakeSettings, "intake"),
+            "intake": SectionForm(self.draft, "intake", IntakeSettings, "intake", leave_out=("use_layout",)),
         }
         self.accept_button, self.leave_button = QPushButton("Read these files"), QPushButton("Leave")
         self.raw, self.calibrated, self.conductance = _plot(PlainAxis("left")), *_calibrated_plot()
@@ -85,10 +89,10 @@ class FileCheck(QWidget):
             column.addWidget(widget)
         column.addLayout(self.doubts)
         column.addWidget(self.channels)
+        column.addWidget(_heading("Kept layout"))
+        column.addWidget(self.kept)
         for name, words in (("calibration", "Calibration"), ("cutting", "Cutting into traces"), ("intake", "Files")):
-            heading = QLabel(words)
-            heading.setProperty("tone", "title")
-            column.addWidget(heading)
+            column.addWidget(_heading(words))
             column.addWidget(self.forms[name])
         column.addStretch(1)
         area = QScrollArea()
@@ -111,9 +115,7 @@ class FileCheck(QWidget):
         column.setContentsMargins(8, 12, 16, 8)
         column.setSpacing(4)
         for words, plot in (("As recorded", self.raw), ("Calibrated, first traces", self.calibrated)):
-            heading = QLabel(words)
-            heading.setProperty("tone", "title")
-            column.addWidget(heading)
+            column.addWidget(_heading(words))
             plot.setAccessibleName(words)
             column.addWidget(plot, 1)
         return side
@@ -154,16 +156,17 @@ class FileCheck(QWidget):
         self.title.setText("Looking at the files …")
         self.summary.setText("")
         self._say_doubts([])
+        self.kept.begin()
         self.accept_button.setEnabled(False)
         self._look_again()
 
     def _look_again(self) -> None:
         if not self.paths:
             return
-        paths, recipe = list(self.paths), self.draft.session.document.recipe
+        paths, recipe, remembered = list(self.paths), self.draft.session.document.recipe, self.remembered.entries()
 
         def task(work: Any, _: Callable[[Any], None]) -> CheckPicture:
-            return check_picture(paths, recipe, work)
+            return check_picture(paths, recipe, work, remembered)
 
         self.frame.session.jobs.submit(CHECK, "checking files", task, self._show, self._failed)
 
@@ -174,13 +177,18 @@ class FileCheck(QWidget):
 
     def _show(self, picture: CheckPicture) -> None:
         first_look, self.picture = self.picture is None, picture
-        if not picture.described:
+        self.channels.setVisible(bool(picture.described) or picture.misfit is None)
+        if picture.misfit is not None:
+            self.title.setText("These files do not fit the kept layout")
+            self.summary.setText("Correct it, keep them as another, read them by another layout, or leave.")
+        elif not picture.described:
             known = bool(self.channels.roles)
             self.title.setText("These files cannot be read like this" if known else "These files are not recognised")
             self.summary.setText("Correct what is wrong below, choose a reader or a layout, or leave.")
         else:
             self._say_recognised(picture)
         self._say_doubts(picture.sentences())
+        self.kept.show_picture(picture)
         self.accept_button.setEnabled(picture.readable)
         self._draw(picture)
         if first_look:
@@ -236,7 +244,15 @@ class FileCheck(QWidget):
         """Read the files with the draft."""
         if self.picture is not None and self.picture.readable:
             paths, self.paths = self.paths, []
-            self.accepted.emit(paths, self.draft.session.document.recipe)
+            recipe = self.draft.session.document.recipe
+            self.remembered.add(recipe.intake.layouts_in_use())
+            self.accepted.emit(paths, recipe)
+
+
+def _heading(words: str) -> QLabel:
+    label = QLabel(words)
+    label.setProperty("tone", "title")
+    return label
 
 
 def _plot(left: pg.AxisItem) -> pg.PlotWidget:

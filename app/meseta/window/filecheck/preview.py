@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -11,12 +11,14 @@ import numpy.typing as npt
 from meseta import intake
 from meseta.errors import InputError, MesetaError
 from meseta.intake import Description
+from meseta.intake.kept_layouts import LayoutError, as_seen, differences
 from meseta.recipe import Recipe
+from meseta.recipe.kept_layouts import KeptLayout
 from meseta.traces import TraceSet
 from meseta.window.envelope import Curve, reduced
 from meseta.work import Work
 
-__all__ = ["CheckPicture", "RawCurve", "check_picture"]
+__all__ = ["CheckPicture", "Misfit", "RawCurve", "check_picture"]
 
 PREVIEW_SAMPLES = 40_000
 PREVIEW_POINTS = 2_000
@@ -33,6 +35,17 @@ class RawCurve:
     role: str
     unit: str
     curve: Curve
+
+
+@dataclass(frozen=True)
+class Misfit:
+    """How the files differ from the kept layout that comes nearest; ``seen`` is the first as it was recognised."""
+
+    file: str
+    layout: str
+    said: str
+    differences: tuple[str, ...]
+    seen: KeptLayout
 
 
 @dataclass(frozen=True)
@@ -53,6 +66,10 @@ class CheckPicture:
     calibrated : Curve
         The first traces of the first file, G in G0 against the drive from each trace's start.
     drive_unit : str
+    fitting : tuple of str
+        Names of the remembered layouts that the first file fits, where it is read by none.
+    misfit : Misfit, optional
+        Where none of them fits a kept layout.
     """
 
     paths: tuple[str, ...]
@@ -63,6 +80,8 @@ class CheckPicture:
     calibrated: Curve | None
     drive_unit: str
     fault: str = ""
+    fitting: tuple[str, ...] = ()
+    misfit: Misfit | None = None
 
     @property
     def readable(self) -> bool:
@@ -76,12 +95,22 @@ class CheckPicture:
             said += [one.problem] if one.problem else []
             said += list(one.doubts)
             said += [f"{finding.check}: {finding.text}" for finding in one.findings if not finding.fine]
-        said += list(self.bad)
+        said += [] if self.misfit is not None else list(self.bad)
         return list(dict.fromkeys(said))
 
 
-def check_picture(paths: Sequence[str], recipe: Recipe, work: Work) -> CheckPicture:
+def check_picture(
+    paths: Sequence[str], recipe: Recipe, work: Work, remembered: Mapping[str, KeptLayout] | None = None
+) -> CheckPicture:
     """Look at files as they would be read with a recipe.
+
+    Parameters
+    ----------
+    paths : sequence of str
+    recipe : Recipe
+    work : Work
+    remembered : mapping of str to KeptLayout, optional
+        Layouts that may be proposed.
 
     Raises
     ------
@@ -94,17 +123,18 @@ def check_picture(paths: Sequence[str], recipe: Recipe, work: Work) -> CheckPict
             "no files were found", str(paths[0]) if paths else "", "choose files or a folder that holds some"
         )
     described: list[Description] = []
-    bad: list[str] = []
+    bad: list[InputError] = []
     fault = ""
     for file in files[:DESCRIBED_FILES]:
         work.check()
         try:
             good, errors = intake.describe([str(file.path)], recipe, work.quiet())
             described += good
-            bad += [str(error) for error in errors]
+            bad += errors
         except InputError as error:
-            bad.append(str(error))
-    raw = _raw_curves(str(files[0].path), files[0].name, recipe)
+            bad.append(error)
+    proposed = {} if described and described[0].kept_layout else remembered or {}
+    raw, fitting = _raw_curves(str(files[0].path), files[0].name, recipe, proposed)
     calibrated, unit = None, ""
     if any(one.traces for one in described):
         try:
@@ -112,13 +142,33 @@ def check_picture(paths: Sequence[str], recipe: Recipe, work: Work) -> CheckPict
             calibrated, unit = _calibrated(traces), traces.drive.unit
         except MesetaError as error:
             fault = str(error)
-    return CheckPicture(tuple(paths), len(files), tuple(described), tuple(bad), raw, calibrated, unit, fault)
+    misfit = None if described else _misfit(bad)
+    words = tuple(str(error) for error in bad)
+    return CheckPicture(
+        tuple(paths), len(files), tuple(described), words, raw, calibrated, unit, fault, fitting, misfit
+    )
 
 
-def _raw_curves(path: str, name: str, recipe: Recipe) -> tuple[RawCurve, ...]:
-    curves = []
+def _misfit(bad: Sequence[InputError]) -> Misfit | None:
+    for error in bad:
+        if isinstance(error, LayoutError):
+            return Misfit(error.where, error.layout, str(error.what), error.differences, error.seen)
+    return None
+
+
+def _raw_curves(
+    path: str, name: str, recipe: Recipe, remembered: Mapping[str, KeptLayout]
+) -> tuple[tuple[RawCurve, ...], tuple[str, ...]]:
+    """Return the beginning of each channel, and the names of the layouts that the recording fits."""
+    curves, fitting = [], []
     try:
         with intake.open_recording(path, recipe, name) as recording:
+            seen = as_seen(recording)
+            fitting = [
+                one
+                for one, layout in reversed(list(remembered.items()))
+                if not differences(layout, seen, recording.pieces)
+            ]
             stop = min(recording.samples, PREVIEW_SAMPLES)
             places = np.arange(stop, dtype=np.float64)
             for channel in recording.channels:
@@ -128,8 +178,8 @@ def _raw_curves(path: str, name: str, recipe: Recipe) -> tuple[RawCurve, ...]:
                         RawCurve(channel.name, channel.role, channel.unit, reduced(places, values, PREVIEW_POINTS))
                     )
     except InputError:
-        return ()  # the description says what is wrong; there is nothing to draw
-    return tuple(curves)
+        return (), ()  # the description says what is wrong; there is nothing to draw
+    return tuple(curves), tuple(fitting)
 
 
 def _calibrated(traces: TraceSet) -> Curve:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Collection
 from typing import Any
 
 from PySide6.QtWidgets import (
@@ -99,12 +100,15 @@ class _Row:
 
 
 class SectionForm(QWidget):
-    """All settings of one section."""
+    """All settings of one section but those left out, and but tables of tables, which have places of their own."""
 
-    def __init__(self, frame: Frame, section: str, settings: type[Section], help_page: str) -> None:
+    def __init__(
+        self, frame: Frame, section: str, settings: type[Section], help_page: str, leave_out: Collection[str] = ()
+    ) -> None:
         super().__init__()
         self.frame, self.section = frame, section
-        self.rows = [_Row(self, info) for info in settings.fields()]
+        shown = [info for info in settings.fields() if info.kind != "tables" and info.name not in leave_out]
+        self.rows = [_Row(self, info) for info in shown]
         grid = QGridLayout()
         grid.setContentsMargins(0, 0, 0, 0)
         grid.setHorizontalSpacing(4)
@@ -149,7 +153,8 @@ class SectionForm(QWidget):
     def _reset_all(self) -> None:
         session = self.frame.session
         recipe = session.document.recipe
-        values = type(getattr(recipe, self.section))().model_dump()
+        defaults = type(getattr(recipe, self.section))().model_dump()
+        values = {row.info.name: defaults[row.info.name] for row in self.rows}
         session.change_recipe(f"reset {self.section.replace('_', ' ')}", recipe.with_values(self.section, **values))
 
     def _document_changed(self, change: Change) -> None:
