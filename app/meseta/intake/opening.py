@@ -18,7 +18,7 @@ from meseta.recipe import Recipe
 from meseta.recipe.intake import IntakeSettings
 from meseta.traces import Source
 
-__all__ = ["OpenContext", "open_recording", "sha256_of"]
+__all__ = ["OpenContext", "open_recording", "recording_of", "sha256_of"]
 
 HEAD_BYTE: Final = 1 << 16
 
@@ -106,9 +106,34 @@ def _opened(path: Path, settings: IntakeSettings, name: str, context: OpenContex
         raise InputError(f"cannot be read ({error})", str(path), "check the file and the disk") from error
     except MemoryError as error:
         raise InputError("is too large for the memory", str(path), "cut it into smaller files") from error
+    return recording_of(contents, digest, (path, name, size), reader.name, settings, context)
+
+
+def recording_of(
+    contents: Contents,
+    sha256: str,
+    file: tuple[Path, str, int],
+    reader: str,
+    settings: IntakeSettings,
+    context: OpenContext,
+) -> Recording:
+    """Return the recording of a file's contents, with what stands beside the file.
+
+    Parameters
+    ----------
+    contents : Contents
+    sha256 : str
+    file : (Path, str, int)
+        Its path, name relative to the folder that was given, and size in bytes.
+    reader : str
+        Name of the reader.
+    settings : IntakeSettings
+    context : OpenContext
+    """
     from meseta.intake.context import beside
 
-    recording = _recording(contents, Source(digest, name or path.name, size, reader.name, contents.layout))
+    path, name, size = file
+    recording = _recording(contents, Source(sha256, name or path.name, size, reader, contents.layout))
     found, doubts = beside(path, recording.source.name, settings, context)
     if not found and not doubts:
         return recording

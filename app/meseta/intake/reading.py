@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from meseta.errors import InputError, MesetaError
+from meseta.intake.alike import Memory
 from meseta.intake.assembly import Part, plan_of
 from meseta.intake.context import batch_context
 from meseta.intake.files import FoundFile, find_files
@@ -18,6 +19,7 @@ from meseta.intake.opening import OpenContext, open_recording
 from meseta.intake.readers.unpack import sha256_of
 from meseta.intake.recording import Recording
 from meseta.intake.room import check_room
+from meseta.intake.several import batches_of, open_several
 from meseta.recipe import Recipe
 from meseta.traces import TraceSet
 from meseta.work import Work
@@ -64,26 +66,15 @@ def read(
     context = batch_context(recipe.intake, [file.path for file in files])
     parts: list[Part] = []
     bad: list[MesetaError] = []
-    one_file = len(files) == 1
-
-    def take(file: FoundFile) -> Part | MesetaError:
-        try:
-            if one_file:
-                return _one(file, recipe, context, work)
-            with open_recording(file.path, recipe, file.name, context) as recording:
-                return _loaded(recording, recipe, _alone(work)).let_go()
-        except InputError as error:
-            return error
-
-    taken = 0
-    for found in work.each(take, files, "reading files", unit="files") if not one_file else map(take, files):
+    one_file, size = len(files) == 1, 0
+    for found in iter([_one(files[0], recipe, context, work)]) if one_file else _each(files, recipe, context, work):
         if isinstance(found, Part):
             parts.append(found)
-            taken += found.memory_byte
-            check_room(taken, f"{len(parts)} of {len(files)} files")
+            size += found.memory_byte
+            check_room(size, f"{len(parts)} of {len(files)} files")
             if so_far is not None and not one_file:
                 so_far(len(parts), lambda: joined([part for part in parts if part.traces], recipe, {}))
-        elif strict or one_file:
+        elif strict:
             raise found
         else:
             bad.append(found)
@@ -113,7 +104,8 @@ def traces_from(
         Where a recording's channels do not give conductance, or no trace is found.
     """
     recipe, work = recipe or Recipe(), work or Work()
-    parts = [_loaded(recording, recipe, work, stream) for recording in recordings]
+    memory = Memory()
+    parts = [_loaded(recording, recipe, work, stream, memory) for recording in recordings]
     parts = [part for part in parts if part.traces]
     if not parts:
         raise InputError("no traces were found", "recordings", "check the cutting settings")
@@ -132,8 +124,35 @@ def _alone(work: Work) -> Work:
     return Work(threads=1, block_samples=work.block_samples, cancel=work.cancel)
 
 
-def _loaded(recording: Recording, recipe: Recipe, work: Work, stream: bool = False) -> Part:
-    part = plan_of(recording, recipe)
+def _each(files: Sequence[FoundFile], recipe: Recipe, context: OpenContext, work: Work) -> Iterator[Part | InputError]:
+    """Yield the traces of each of several files, or what is wrong with it, in order."""
+    memory, alone = Memory(), _alone(work)
+
+    def take(batch: Sequence[FoundFile]) -> list[Part | InputError]:
+        taken: list[Part | InputError] = []
+        for opened in open_several(batch, recipe, context):
+            alone.check()
+            taken.append(opened if isinstance(opened, InputError) else _taken(opened, recipe, alone, memory))
+        return taken
+
+    batches = batches_of(files)
+    sizes = [len(batch) for batch in batches]
+    for taken in work.each(take, batches, "reading files", sizes=sizes, unit="files"):
+        yield from taken
+
+
+def _taken(recording: Recording, recipe: Recipe, work: Work, memory: Memory) -> Part | InputError:
+    try:
+        with recording:
+            return _loaded(recording, recipe, work, memory=memory).let_go()
+    except InputError as error:
+        return error
+
+
+def _loaded(
+    recording: Recording, recipe: Recipe, work: Work, stream: bool = False, memory: Memory | None = None
+) -> Part:
+    part = plan_of(recording, recipe, memory)
     if not part.traces:
         raise InputError("holds no traces", recording.source.name, "check the cutting settings")
     part = part.stream(work) if stream else part.load(work)

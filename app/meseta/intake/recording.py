@@ -9,7 +9,7 @@ makes one from its own ``/raw``; :func:`meseta.intake.traces_from` turns recordi
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from types import TracebackType
 from typing import Any, Self
 
@@ -75,9 +75,13 @@ class RawChannel:
 
     def without_samples(self) -> RawChannel:
         """Return the channel without its samples; one of thousands of files, so without the cost of checking it."""
-        emptied = object.__new__(RawChannel)
-        emptied.__dict__.update(self.__dict__, samples=_NO_SAMPLES)
-        return emptied
+        return self.with_samples(_NO_SAMPLES)
+
+    def with_samples(self, samples: Samples) -> RawChannel:
+        """Return the channel of another file that is written alike; without the cost of checking it, too."""
+        other = object.__new__(RawChannel)
+        other.__dict__.update(self.__dict__, samples=samples)
+        return other
 
     def values(self, start: int, stop: int) -> npt.NDArray[np.float64]:
         """(stop - start,) float64, numbers in ``unit``: stored * scale + offset."""
@@ -115,6 +119,8 @@ class Recording:
         Doubts about the recording as a whole.
     close : callable
         Lets go of the file.
+    like : object, optional
+        The same object in recordings that differ in nothing but source, samples, metadata and doubts.
     """
 
     source: Source
@@ -126,6 +132,7 @@ class Recording:
     table: Mapping[str, npt.NDArray[Any]] = field(default_factory=dict)
     doubts: tuple[str, ...] = ()
     close: Callable[[], None] = field(default=_nothing, repr=False, compare=False)
+    like: object | None = field(default=None, repr=False, compare=False)
 
     def __enter__(self) -> Self:
         return self
@@ -175,7 +182,9 @@ class Recording:
 
     def with_channels(self, channels: tuple[RawChannel, ...]) -> Recording:
         """Return the recording with its channels understood in another way."""
-        return replace(self, channels=channels)
+        other = object.__new__(Recording)
+        other.__dict__.update(self.__dict__, channels=channels)
+        return other
 
     def _begin_of(self, start: int, stop: int) -> npt.NDArray[np.int64]:
         """Return, for each flat sample, the flat sample at which its piece begins."""

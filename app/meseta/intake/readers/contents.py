@@ -47,6 +47,8 @@ class Contents:
     close: Callable[[], None] = _nothing
     sha256: str = ""
     """Checksum of the file, where the reader had all its bytes in hand; else the file is read once more for it."""
+    like: object | None = None
+    """The same object in files that differ in nothing but their samples; None where that is not known."""
 
 
 class Reader(Protocol):

@@ -2,44 +2,63 @@
 
 from __future__ import annotations
 
-import re
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
+from contextlib import suppress
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any, Final
+from typing import Final
 
 import numpy as np
-import numpy.typing as npt
 
 from meseta.errors import InputError
-from meseta.intake.metadata import Plain, canonical
-from meseta.intake.readers.contents import Contents, columns_of, make_channel, whole
+from meseta.intake.readers.contents import Contents, columns_of, whole
 from meseta.intake.readers.spool import SpooledColumn
-from meseta.intake.readers.text_form import KnownForm, TextForm, decode_head, entries_of, find_form, known_form
-from meseta.intake.readers.text_rows import Columns, numbers
+from meseta.intake.readers.text_form import KnownForm, TextForm, decode_head, find_form, known_form
+from meseta.intake.readers.text_layout import Table, laid_out
+from meseta.intake.readers.text_rows import Columns, Rows, numbers, numbers_of_each
 from meseta.intake.readers.text_stream import put_aside
 from meseta.intake.readers.unpack import members_of, read_bytes, unpacked_blocks, unpacked_members
-from meseta.intake.recording import RawChannel
-from meseta.intake.roles import guess_role, stem_of
 from meseta.intake.rows import end_to_end
 from meseta.recipe.intake import IntakeSettings
-from meseta.traces import ArraySamples, Samples
+from meseta.traces import ArraySamples
 
 __all__ = ["TextReader"]
 
 HEAD_BYTE: Final = 1 << 16
-NUMBERS: Final = np.dtype(np.float64)
 LARGE_BYTE: Final = 64 << 20
 """Larger texts are parsed block by block, and their numbers put aside in a temporary file."""
+KEPT_FORMS: Final = 4
+"""Forms that are remembered: the files of one night are written in one or two ways."""
+
+
+@dataclass(frozen=True)
+class _Known:
+    """The form of a file, and what follows from it alone for every other file that is written alike."""
+
+    form: KnownForm
+    layout: str
+    """``intake.layout``, the only setting that it depends on."""
+    emptied: Contents | None
+    """The content of a file of this form whose rows are one trace, without its samples; None where they were not."""
+
+    def fits(self, data: bytes, settings: IntakeSettings) -> bool:
+        """Return whether another file begins in this form."""
+        return self.layout == settings.layout and self.form.fits(data)
+
+    def contents(self, rows: Rows, path: Path, settings: IntakeSettings) -> Contents:
+        """Return the content of another file of this form."""
+        if self.emptied is None or not _is_one_trace(rows):
+            return _laid_rows(rows, self.form.form, [], settings, path)
+        return _refilled(self.emptied, rows)
 
 
 class TextReader:
-    """Reads text tables; the form of the last one is tried first, as files of one night are written alike."""
+    """Reads text tables; the forms of the last ones are tried first, as files of one night are written alike."""
 
     name = "text"
 
     def __init__(self) -> None:
-        self._last: KnownForm | None = None
+        self._known: tuple[_Known, ...] = ()
 
     def sniff(self, head: bytes, path: Path) -> bool:
         """Return whether the first bytes are text; whether it holds rows of numbers shows when it is opened."""
@@ -53,16 +72,80 @@ class TextReader:
         data, sha256 = found
         if not data and (members := members_of(path)):
             return _from_members(path, members, settings)
-        last = self._last
-        if last is not None and last.fits(data):
+        known = next((one for one in self._known if one.fits(data, settings)), None)
+        if known is not None:
             try:
-                return replace(_contents(data, "utf-8", last.form, path, settings), sha256=sha256)
-            except InputError:
-                self._last = None  # looked at anew: the fault is then named for what the file itself says
+                rows = _rows(data, "utf-8", known.form.form, path)
+                return replace(known.contents(rows, path, settings), sha256=sha256)
+            except InputError:  # looked at anew: the fault is then named for what the file itself says
+                self._known = tuple(one for one in self._known if one is not known)
         encoding, data, form = _recognised(data, path)
-        contents = _contents(data, encoding, form, path, settings)
-        self._last = known_form(data, form) if encoding == "utf-8" else None
+        rows = _rows(data, encoding, form, path)
+        contents = _laid_rows(rows, form, _doubts(data, encoding, form), settings, path)
+        remembered = known_form(data, form) if encoding == "utf-8" else None
+        if remembered is not None:
+            newest = _Known(remembered, settings.layout, _emptied(contents, rows, form))
+            kept = [one for one in self._known if (one.form.before, one.layout) != (remembered.before, newest.layout)]
+            self._known = (newest, *kept[: KEPT_FORMS - 1])
         return replace(contents, sha256=sha256)
+
+    def open_alike(self, texts: Sequence[tuple[Path, bytes]], settings: IntakeSettings) -> dict[int, Contents | None]:
+        """Return the contents of files that are written like one that was opened before, all parsed in one go.
+
+        Parameters
+        ----------
+        texts : sequence of (path, bytes)
+            Small files that are not packed.
+        settings : IntakeSettings
+
+        Returns
+        -------
+        mapping of int to Contents or None
+            By place; None where a file begins like a known one and goes on in another way, so that it must be opened on
+            its own.  Files that begin in a new way are left out.
+        """
+        by_form: dict[int, list[int]] = {}
+        knowns, found = self._known, dict[int, Contents | None]()
+        for place, (_, data) in enumerate(texts):
+            number = next((number for number, one in enumerate(knowns) if one.fits(data, settings)), None)
+            if number is not None:
+                by_form.setdefault(number, []).append(place)
+        for number, places in by_form.items():
+            known = knowns[number]
+            rows = numbers_of_each([texts[place][1][len(known.form.before) :] for place in places], known.form.form)
+            for at, place in enumerate(places):
+                found[place] = None
+                if rows is not None:
+                    with suppress(InputError):
+                        found[place] = known.contents(rows[at], texts[place][0], settings)
+        return found
+
+
+def _is_one_trace(rows: Rows) -> bool:
+    return len(rows.lengths) == 1 and not any(rows.said)
+
+
+def _emptied(contents: Contents, rows: Rows, form: TextForm) -> Contents | None:
+    """Return content without its samples; None where it is not one trace whose columns are its channels."""
+    if not _is_one_trace(rows) or contents.table or len(contents.channels) != form.columns:
+        return None
+    channels = tuple(channel.without_samples() for channel in contents.channels)
+    return replace(contents, channels=channels, like=object()) if len(contents.offsets) == 2 else None
+
+
+def _refilled(emptied: Contents, rows: Rows) -> Contents:
+    channels = tuple(
+        channel.with_samples(ArraySamples(column))
+        for channel, column in zip(emptied.channels, rows.columns, strict=True)
+    )
+    return Contents(
+        emptied.layout,
+        channels,
+        *whole(rows.lengths[0]),
+        metadata=emptied.metadata,
+        doubts=emptied.doubts,
+        like=emptied.like,
+    )
 
 
 def _recognised(data: bytes, path: Path) -> tuple[str, bytes, TextForm]:
@@ -82,15 +165,19 @@ def _recognised(data: bytes, path: Path) -> tuple[str, bytes, TextForm]:
     return encoding, data, form
 
 
-def _contents(data: bytes, encoding: str, form: TextForm, path: Path, settings: IntakeSettings) -> Contents:
-    """Return the content of a text table of known form."""
-    body = _body(data, form, encoding)
-    rows = numbers(body, form, path, form.skip_lines)
+def _rows(data: bytes, encoding: str, form: TextForm, path: Path) -> Rows:
+    """Return the rows of a text table of known form."""
+    rows = numbers(_body(data, form, encoding), form, path, form.skip_lines)
     if not rows.lengths:
         raise InputError("holds no rows of numbers", str(path), "give a table with numbers in rows")
+    return rows
+
+
+def _laid_rows(rows: Rows, form: TextForm, doubts: list[str], settings: IntakeSettings, path: Path) -> Contents:
+    """Return the content that rows of numbers in memory make."""
     columns = [ArraySamples(column) for column in rows.columns]
-    table = _Table(columns, rows.lengths, rows.said, lambda: _lengths(rows.columns))
-    return _laid_out(table, form, _doubts(data, encoding, form), settings, path)
+    table = Table(columns, rows.lengths, rows.said, lambda: _lengths(rows.columns))
+    return laid_out(table, form, doubts, settings, path)
 
 
 def _large_contents(path: Path, settings: IntakeSettings) -> Contents:
@@ -99,8 +186,8 @@ def _large_contents(path: Path, settings: IntakeSettings) -> Contents:
     encoding, _, form = _recognised(head, path)
     columns, stretches = put_aside(path, form, encoding)
     samples = [SpooledColumn(columns, place, columns.rows) for place in range(form.columns)]
-    table = _Table(samples, stretches.lengths, stretches.said, lambda: columns.last_number)
-    return _laid_out(table, form, _doubts(head, encoding, form), settings, path)
+    table = Table(samples, stretches.lengths, stretches.said, lambda: columns.last_number)
+    return laid_out(table, form, _doubts(head, encoding, form), settings, path)
 
 
 def _from_members(path: Path, members: Sequence[str], settings: IntakeSettings) -> Contents:
@@ -109,7 +196,7 @@ def _from_members(path: Path, members: Sequence[str], settings: IntakeSettings) 
     doubts: list[str] = []
     for name, data in unpacked_members(path, members):
         try:
-            found = _contents(*_unsniffed(data, path), path, settings)
+            found = _member(data, path, settings)
         except InputError as error:
             doubts.append(f"'{name}' in it {error.what}")
             continue
@@ -140,9 +227,9 @@ def _from_members(path: Path, members: Sequence[str], settings: IntakeSettings) 
     )
 
 
-def _unsniffed(data: bytes, path: Path) -> tuple[bytes, str, TextForm]:
+def _member(data: bytes, path: Path, settings: IntakeSettings) -> Contents:
     encoding, data, form = _recognised(data, path)
-    return data, encoding, form
+    return _laid_rows(_rows(data, encoding, form, path), form, _doubts(data, encoding, form), settings, path)
 
 
 def _kinds(contents: Contents) -> list[tuple[str, str, str]]:
@@ -170,141 +257,6 @@ def _body(data: bytes, form: TextForm, encoding: str) -> bytes:
     for _ in range(form.skip_lines):
         at = data.index(b"\n", at) + 1
     return data[at:]
-
-
-# -- how traces stand in the columns ----------------------------------------------------------------------------------
-
-
-@dataclass(frozen=True)
-class _Table:
-    """Columns of numbers, rows and lines before each stretch, and how far down each column is filled."""
-
-    columns: Sequence[Samples]
-    lengths: list[int]
-    said: Sequence[tuple[str, ...]]
-    filled: Callable[[], Sequence[int]]
-
-
-def _laid_out(table: _Table, form: TextForm, doubts: list[str], settings: IntakeSettings, path: Path) -> Contents:
-    metadata, more = canonical(form.entries, str(path))
-    doubts = [*doubts, *more]
-    names = list(form.names) if form.names else [f"column {n + 1}" for n in range(form.columns)]
-    wide = _wide_sets(names, settings) if len(table.lengths) == 1 else None
-    words = {"\t": "tab", " ": "blank", ",": "comma", ";": "semicolon"}[form.delimiter]
-    if wide:
-        return _wide(names, form.units, table, wide, metadata, doubts, words)
-    channels = [
-        make_channel(name, column, NUMBERS, unit=unit, unit_ground="unit row")
-        for name, unit, column in zip(names, form.units, table.columns, strict=True)
-    ]
-    channels = [_from_metadata(channel, metadata) if len(channels) <= 2 else channel for channel in channels]
-    offsets, starts, dataset = whole(len(table.columns[0]))
-    layout = f"{words}-separated, {len(names)} column{'s' if len(names) > 1 else ''}"
-    if len(table.lengths) > 1:
-        offsets = np.concatenate([[0], np.cumsum(table.lengths)]).astype(np.int64)
-        starts, dataset = offsets[:-1].copy(), np.full(len(table.lengths), "", np.str_)
-        layout += f", {len(table.lengths)} blocks"
-    rows = _said_of_each(table, form, path)
-    return Contents(layout, tuple(channels), offsets, starts, dataset, metadata, rows, tuple(doubts))
-
-
-def _said_of_each(table: _Table, form: TextForm, path: Path) -> dict[str, npt.NDArray[Any]]:
-    """Return what lines before each stretch say where they do not all say the same ("bias_mV: 100", "bias_mV: 200")."""
-    if not any(table.said):
-        return {}
-    whole_file = canonical(form.entries, str(path))[0]
-    entries = [canonical(entries_of(lines, form.heading, form.delimiter), str(path))[0] for lines in table.said]
-    columns = columns_of([whole_file | own for own in entries])
-    return {name: column for name, column in columns.items() if len(np.unique(column)) > 1}
-
-
-def _wide_sets(names: Sequence[str], settings: IntakeSettings) -> dict[str, list[int]] | None:
-    """Return stem -> columns where traces stand side by side; None where columns are channels of one trace."""
-    if settings.layout in ("one_trace_a_file", "long"):
-        return None
-    if settings.layout in ("wide", "columns") and all(name.startswith("column ") for name in names):
-        return {names[0]: [0], "column": list(range(1, len(names)))} if len(names) > 1 else None
-    sets: dict[str, list[int]] = {}
-    for place, name in enumerate(names):
-        sets.setdefault(stem_of(name), []).append(place)
-    largest = max(len(places) for places in sets.values())
-    if largest < 2 or (largest == 2 and len(sets) > 2) or any(name.startswith("column ") for name in names):
-        return None
-    exact = {guess_role(names[place]).role for places in sets.values() if len(places) == largest for place in places}
-    if len(exact) > 1 and settings.layout != "wide" and largest == 2:
-        return None
-    if any(len(places) not in (1, largest) for places in sets.values()):
-        return None
-    return sets
-
-
-def _wide(
-    names: Sequence[str],
-    units: Sequence[str],
-    table: _Table,
-    sets: dict[str, list[int]],
-    metadata: dict[str, Plain],
-    doubts: Sequence[str],
-    words: str,
-) -> Contents:
-    pieces = max(len(places) for places in sets.values())
-    main = next(places for places in sets.values() if len(places) == pieces)
-    filled = table.filled()
-    kept = [filled[place] for place in main]
-    offsets = np.concatenate([[0], np.cumsum(kept)]).astype(np.int64)
-    channels = []
-    for stem, places in sets.items():
-        heading, shared = names[places[0]], len(places) != pieces
-        samples: Samples = table.columns[places[0]]
-        if not shared:
-            samples = end_to_end([_Top(table.columns[place], n) for place, n in zip(places, kept, strict=True)])
-        name = heading if shared else stem
-        channel = make_channel(name, samples, NUMBERS, unit=units[places[0]], unit_ground="unit row", shared=shared)
-        if not shared and channel.role in ("other", "trace_number"):
-            channel = _from_metadata(_renamed(heading, stem, samples, units[places[0]]), metadata)
-        channels.append(channel)
-    numbered = [re.search(r"(\d+)\D*$", names[place]) for place in main]
-    dataset = np.array([names[place] for place in main], np.str_)
-    rows: list[dict[str, Plain]] = [{"column_number": int(found[1])} if found else {} for found in numbered]
-    layout = f"{words}-separated, {pieces} traces side by side"
-    starts = np.zeros(pieces, np.int64)
-    return Contents(layout, tuple(channels), offsets, starts, dataset, metadata, columns_of(rows), tuple(doubts))
-
-
-@dataclass(frozen=True)
-class _Top:
-    """The first samples of a column."""
-
-    column: Samples
-    rows: int
-
-    def __len__(self) -> int:
-        return self.rows
-
-    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
-        return self.column.read(start, min(stop, self.rows))
-
-
-def _renamed(heading: str, stem: str, samples: Samples, unit: str) -> RawChannel:
-    """Return a channel of numbered columns; "trace_3 (nA)" is not a trace number but a current."""
-    channel = make_channel(heading, samples, NUMBERS, unit=unit, unit_ground="unit row")
-    role = "other" if channel.role in ("trace_number", "phase", "range_code") else channel.role
-    return RawChannel(stem, channel.samples, role, channel.unit, ground=channel.ground, confidence=channel.confidence)
-
-
-def _from_metadata(channel: RawChannel, metadata: dict[str, Plain]) -> RawChannel:
-    """Return a channel that says nothing itself with what lines before the numbers say ("unit: nA")."""
-    if channel.role != "other":
-        return channel
-    lowered = {str(key).lower(): value for key, value in metadata.items()}
-    said = next((str(lowered[key]) for key in ("quantity", "signal", "values", "channel") if key in lowered), "")
-    unit = next((str(lowered[key]) for key in ("unit", "units", "value_unit") if key in lowered), "")
-    guess = guess_role(said or unit, unit) if said or unit else None
-    if guess is None or guess.role == "other":
-        return channel
-    return RawChannel(
-        channel.name, channel.samples, guess.role, guess.unit, shared=channel.shared, ground="header", confidence=0.8
-    )
 
 
 def _lengths(columns: Columns) -> list[int]:

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import contextlib
 import re
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
+from itertools import pairwise
 from pathlib import Path
 from typing import Any, Final
 
@@ -15,10 +17,10 @@ import numpy.typing as npt
 from meseta.errors import InputError
 from meseta.intake.readers.text_form import TextForm
 
-__all__ = ["Columns", "Rows", "numbers"]
+__all__ = ["Columns", "Rows", "numbers", "numbers_of_each"]
 
 MANY_THREADS_BYTE: Final = 8 << 20
-_NULLS: Final = ["", "nan", "NaN", "NAN", "NA", "N/A", "n/a", "null", "-", "--", "#N/A", "1.#QNAN", "-nan"]
+_NULLS: Final = ("", "nan", "NaN", "NAN", "NA", "N/A", "n/a", "null", "-", "--", "#N/A", "1.#QNAN", "-nan")
 _NUMBER: Final = r"[-+.,]*\d[-+.,\d]*"
 """A run of digits and signs, so that two of them never touch: a line is matched in one go, whatever stands in it."""
 Columns = list[npt.NDArray[np.float64]]
@@ -91,6 +93,39 @@ def numbers(body: bytes, form: TextForm, path: Path, lines_before: int, by_lines
         return Rows([np.empty(0) for _ in range(form.columns)], [], True, True, by_lines, left=cut.left)
     by_lines = by_lines or cut.begins or len(lengths) > 1
     return Rows(parts, lengths, cut.begins, closes, by_lines, said, cut.left)
+
+
+def numbers_of_each(texts: Sequence[bytes], form: TextForm) -> list[Rows] | None:
+    """Return the rows of several texts of one form, parsed in one go; each is what :func:`numbers` gives of it alone.
+
+    Parameters
+    ----------
+    texts : sequence of bytes
+        Without the lines before the numbers.
+    form : TextForm
+
+    Returns
+    -------
+    list of Rows, or None
+        None where one of them is not a plain row of numbers a line: they must then be looked at one by one.
+    """
+    bodies = [text.rstrip() for text in texts]
+    if not all(bodies) or len({_width(body, form) for body in bodies}) > 1:
+        return None
+    whole = b"\n".join(bodies)
+    if b"\r" in whole and whole.count(b"\r") != whole.count(b"\r\n"):  # one on its own would part a line in two
+        return None
+    try:
+        columns = _parsed(whole, form, Path(), 0)
+    except InputError:
+        return None
+    ends = np.cumsum([_lines(body) for body in bodies]).tolist()
+    if len(columns[0]) != ends[-1]:  # no line gives two rows, so that none gave none
+        return None
+    each = [[column[start:stop] for column in columns] for start, stop in pairwise([0, *ends])]
+    if not np.isnan(columns[0]).any():
+        return [Rows(own, [len(own[0])]) for own in each]
+    return [_split_at_nan_rows(own, False) for own in each]
 
 
 def _parts(cut: _Cut, body: bytes, form: TextForm, path: Path, lines_before: int) -> tuple[Columns, list[int]]:
@@ -202,33 +237,56 @@ def _split_at_nan_rows(columns: Columns, closes: bool) -> Rows:
     return Rows([column[~missing] for column in columns], lengths, opens, closes)
 
 
+def _width(block: bytes, form: TextForm) -> int:
+    """Return the number of cells in a line, the empty one behind a last delimiter among them."""
+    if form.columns == 1:
+        return 1
+    delimiter = form.delimiter
+    line = _first_line(block).rstrip(b"\r")
+    if delimiter == " ":
+        line = _single_blanks(line)
+    return max(line.count(delimiter.encode()) + 1, form.columns)
+
+
+def _first_line(block: bytes) -> bytes:
+    end = block.find(b"\n")
+    return block if end < 0 else block[:end]
+
+
+@lru_cache(maxsize=64)
+def _conversion(width: int, decimal: str, nulls: tuple[str, ...]) -> Any:
+    """Return the parser's options for so many columns of float64."""
+    import pyarrow as pa
+    from pyarrow import csv
+
+    kinds = {str(place): pa.float64() for place in range(width)}
+    return csv.ConvertOptions(column_types=kinds, null_values=list(nulls), decimal_point=decimal)
+
+
 def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int) -> Columns:
     import pyarrow as pa
     from pyarrow import csv
 
-    delimiter = form.delimiter
-    if delimiter == " ":
-        block, delimiter = re.sub(rb"(?m)^ +| +(?=\r?$)", b"", re.sub(rb"[ \t]+", b" ", block)), " "
-    first = block.split(b"\n", 1)[0].rstrip(b"\r")
-    width = max(first.count(delimiter.encode()) + 1, form.columns) if form.columns > 1 else form.columns
-    names = [str(place) for place in range(width)]
+    if form.delimiter == " ":
+        block = _single_blanks(block)
+    width = _width(block, form)
     reading = csv.ReadOptions(
-        column_names=names,
+        column_names=[str(place) for place in range(width)],
         use_threads=len(block) > MANY_THREADS_BYTE,
         block_size=max(1 << 20, min(len(block), 1 << 26)),
     )
-    kinds = dict.fromkeys(names, pa.float64())
+    parsing = csv.ParseOptions(delimiter=form.delimiter)
 
-    def table(nulls: list[str]) -> Any:
-        convert = csv.ConvertOptions(column_types=kinds, null_values=nulls, decimal_point=form.decimal)
-        return csv.read_csv(pa.BufferReader(block), reading, csv.ParseOptions(delimiter=delimiter), convert)
+    def table(nulls: tuple[str, ...]) -> Any:
+        return csv.read_csv(pa.BufferReader(block), reading, parsing, _conversion(width, form.decimal, nulls))
 
     try:
         try:
-            found = table([])  # to look every cell up among the words for nothing costs a third of the time
+            found = table(())  # to look every cell up among the words for nothing costs a third of the time
         except pa.ArrowInvalid:
             found = table(_NULLS)
     except pa.ArrowInvalid as error:
+        first = _first_line(block)
         if re.search(rb"\d[dD][-+]?\d", first) or re.search(r"'[-+.\d]+[dD][-+]?\d+'", str(error)):
             eased = re.sub(rb"(?<=[\d.])[dD](?=[-+]?\d)", b"E", block)
             if eased != block:
@@ -237,6 +295,14 @@ def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int) -> Colu
             return [np.empty(0) for _ in range(form.columns)]
         raise _in_words(error, path, lines_before) from error
     return [_array(found.column(place)) for place in range(form.columns)]
+
+
+def _single_blanks(block: bytes) -> bytes:
+    """Return a text with one blank between words, and none at the ends of lines."""
+    from meseta.intake.text_kernels import single_blanks
+
+    target = np.empty(len(block), np.uint8)
+    return target[: single_blanks(np.frombuffer(block, np.uint8), target)].tobytes()
 
 
 def _array(column: Any) -> npt.NDArray[np.float64]:
