@@ -307,3 +307,12 @@ class _FullFile:
 
     def close(self):
         """Close nothing."""
+
+
+def test_numbered_arrays_of_nothing_known_do_not_stand_in_for_what_is_known(tmp_path):
+    cells = np.empty(2, object)
+    cells[:] = [np.arange(64.0), np.arange(9.0)]
+    path = tmp_path / "a.mat"
+    scipy.io.savemat(path, {"conductance_G0": ROWS, "remarks": cells})
+    traces = intake.read(path, Recipe.build({"intake": {"layout": "rows"}}))
+    assert traces.traces == len(ROWS)

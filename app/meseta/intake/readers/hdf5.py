@@ -24,6 +24,7 @@ from meseta.intake.readers.hdf5_layout import (
 )
 from meseta.intake.readers.hdf5_tree import Tree, open_file, walk
 from meseta.intake.recording import RawChannel
+from meseta.intake.roles import SIGNAL_ROLES
 from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["Hdf5Reader", "understood"]
@@ -95,10 +96,22 @@ def understood(tree: Tree, path: Path, settings: IntakeSettings) -> Contents:
 
 
 def _best_sheet(by_parent: Mapping[str, Sequence[Leaf]], layout: str) -> tuple[Sheet | None, list[str]]:
-    """Return the sheet that explains most samples, and the groups it is made of."""
+    """Return the sheet that explains most samples, and the groups it is made of.
+
+    Numbered datasets are traces, unless nothing says what they are and datasets of other groups do say so.
+    """
     numbered = {parent: found for parent, leaves in by_parent.items() if (found := numbered_sheet(parent, leaves))}
-    if numbered:
-        return _numbered(numbered, by_parent)
+    if not numbered:
+        return _not_numbered(by_parent, layout)
+    traces = _numbered(numbered, by_parent)
+    if traces[0] is None or _has_signal(traces[0]):
+        return traces
+    others = {parent: leaves for parent, leaves in by_parent.items() if parent not in numbered}
+    other = _not_numbered(others, layout)
+    return other if other[0] is not None and _has_signal(other[0]) else traces
+
+
+def _not_numbered(by_parent: Mapping[str, Sequence[Leaf]], layout: str) -> tuple[Sheet | None, list[str]]:
     everywhere = [leaf for leaves in by_parent.values() for leaf in leaves if leaf.is_vector]
     sheets = {
         parent: found for parent, leaves in by_parent.items() if (found := sheet_of(parent, leaves, layout, everywhere))
@@ -129,8 +142,17 @@ def _weight(sheets: Sequence[Sheet]) -> tuple[int, int]:
 
 
 def _says_something(channel: tuple[Any, ...]) -> bool:
+    return _role_of(channel) != "other"
+
+
+def _has_signal(sheet: Sheet) -> bool:
+    """Return whether a channel is known to be conductance, current, or the like."""
+    return any(_role_of(channel) in SIGNAL_ROLES for channel in sheet.channels)
+
+
+def _role_of(channel: tuple[Any, ...]) -> str:
     name, samples, dtype, attributes, _, context = channel
-    return make_channel(name, samples, dtype, attributes, context=context).role != "other"
+    return make_channel(name, samples, dtype, attributes, context=context).role
 
 
 def _numbered(numbered: Mapping[str, Sheet], by_parent: Mapping[str, Sequence[Leaf]]) -> tuple[Sheet | None, list[str]]:

@@ -83,8 +83,9 @@ class TdmsReader:
     def open(self, path: Path, settings: IntakeSettings) -> Contents:
         """Return the channels of the file, groups as groups."""
         from nptdms import TdmsFile
+        from nptdms.log import log_manager
 
-        logging.getLogger("nptdms").setLevel(logging.ERROR)  # what it warns of is said as a doubt
+        log_manager.set_level(logging.CRITICAL)  # what it warns of is said as a doubt
         with ExitStack() as stack:
             opened = stack.enter_context(path.open("rb"))
             try:
