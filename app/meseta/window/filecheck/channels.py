@@ -26,6 +26,7 @@ class ChannelTable(QWidget):
         self._grid.setContentsMargins(0, 0, 0, 0)
         self._grid.setHorizontalSpacing(8)
         self._grid.setVerticalSpacing(4)
+        self._grid.setColumnStretch(0, 3)
         self._grid.setColumnStretch(3, 1)
         self._shown: tuple[Any, ...] = ()
         self.roles: dict[str, QComboBox] = {}
@@ -49,6 +50,8 @@ class ChannelTable(QWidget):
         role, unit = QComboBox(), QLineEdit(channel.unit)
         role.addItems([word.replace("_", " ") for word in ROLES])
         role.setCurrentIndex(ROLES.index(channel.role) if channel.role in ROLES else ROLES.index("other"))
+        role.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
+        role.setMinimumContentsLength(9)
         role.setAccessibleName(f"What {channel.name} is")
         unit.setAccessibleName(f"Unit of {channel.name}")
         unit.setMaximumWidth(72)
@@ -57,11 +60,12 @@ class ChannelTable(QWidget):
         self.roles[channel.name], self.units[channel.name] = role, unit
         sure = f", {channel.confidence:.0%} sure" if channel.confidence else ""
         why = Elided(f"{channel.ground}{sure}" if channel.ground else "not recognised")
-        why.setMinimumWidth(60)
-        name = QLabel(channel.name)
+        why.setMinimumWidth(44)
+        name = Elided(channel.name, tone="")
+        name.setMinimumWidth(112)
         for column, widget in enumerate((name, role, unit, why)):
             self._grid.addWidget(
-                widget, line, column, Qt.AlignmentFlag.AlignVCenter if column < 3 else Qt.AlignmentFlag(0)
+                widget, line, column, Qt.AlignmentFlag.AlignVCenter if column in (1, 2) else Qt.AlignmentFlag(0)
             )
 
     def _change(self, channel: Any) -> None:
