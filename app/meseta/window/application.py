@@ -23,9 +23,13 @@ from meseta.window.theme import ThemeKeeper
 
 __all__ = ["make_application", "make_window", "open_window"]
 
-PREPARE = Channel("prepare", quick=True)
+PREPARE = Channel("prepare", quick=True, lasting=True)
 SWITCH_SECOND = 0.0005
 """How long a worker's Python code keeps the interpreter once the window's thread asks for it: painting asks often."""
+
+
+AFTER_PAINT_MS = 50
+"""The engine is loaded once the window stands: both need the interpreter, and the window goes first."""
 
 
 def make_application() -> QApplication:
@@ -88,7 +92,7 @@ def open_window(paths: list[str], recipe: Recipe | None = None) -> int:
     window = make_window(application, recipe=recipe)
     sys.excepthook = _shown_in(window, sys.excepthook)
     window.show()
-    prepare(window)
+    QTimer.singleShot(AFTER_PAINT_MS, window, lambda: prepare(window))
     window.commands.offer_recovery()
     if paths:
         QTimer.singleShot(0, window, lambda: window.commands.check_paths(paths, recipe))
@@ -99,12 +103,12 @@ def prepare(window: MainWindow) -> None:
     """Load what the first request would otherwise wait for, off the window's thread."""
 
     def task(work: Any, _: Callable[[Any], None]) -> int:
-        from meseta import kernels, study
+        from meseta import analysis, kernels, study
 
         def report(done: int, total: int) -> None:
             work.tell("getting ready (the first start takes a minute)", done, total, "parts")
 
-        assert study is not None
+        assert analysis is not None and study is not None
         return kernels.compile_all(report)
 
     # What is loaded by now stays: the collector need not look at a million lasting objects, which would stop every

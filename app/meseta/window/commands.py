@@ -10,7 +10,7 @@ import numpy as np
 from PySide6.QtWidgets import QInputDialog, QMessageBox
 
 from meseta import __version__, typeset
-from meseta.selection import Event
+from meseta.selection.decisions import Event
 from meseta.window.file_commands import FileCommands
 from meseta.window.finder import ActionFinder, keys_page
 from meseta.window.groups import with_new_group

@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 from meseta.recipe import Recipe
-from meseta.selection import Decisions
+from meseta.selection.decisions import Decisions
 from meseta.window.conditions import ConditionSet
 
 __all__ = ["FROM_RAW", "Change", "Document", "Hover", "Span"]

@@ -15,15 +15,15 @@ from meseta import typeset
 from meseta.errors import InputError, MesetaError
 from meseta.recipe import Recipe
 from meseta.resources import sample
-from meseta.selection import Decisions
+from meseta.selection.decisions import Decisions
 from meseta.window.conditions import ConditionSet
-from meseta.window.filecheck import FileCheck
 from meseta.window.jobs import Channel
 from meseta.window.opening import Opened, export_results, open_paths, read_unfinished, write_columns
 from meseta.window.places import Place, Places
 from meseta.window.session import Document
 
 if TYPE_CHECKING:
+    from meseta.window.filecheck import FileCheck
     from meseta.window.main_window import MainWindow
 
 __all__ = ["FileCommands"]
@@ -94,6 +94,8 @@ class FileCommands(QObject):
 
     def _file_check(self) -> FileCheck:
         if self._check is None:
+            from meseta.window.filecheck import FileCheck
+
             self._check = FileCheck(self._window)
             self._check.accepted.connect(self._read)
             self._check.left.connect(self._leave_check)

@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 import numpy.typing as npt
 
 from meseta.colours import GROUPS
-from meseta.selection import Decisions
 from meseta.window.session import Session
+
+if TYPE_CHECKING:
+    from meseta.selection import Decisions
 
 __all__ = ["symbol_of", "with_new_group"]
 

@@ -8,6 +8,8 @@ number.  A newer request on the same channel cancels the older one and the older
 from __future__ import annotations
 
 import itertools
+import os
+import sys
 import threading
 from collections.abc import Callable
 from concurrent.futures import Future, ThreadPoolExecutor
@@ -32,6 +34,10 @@ BLOCK_SAMPLES = 500_000
 """Smaller blocks than elsewhere: each call that keeps the interpreter is short, so the window's thread waits less."""
 
 
+STEP_BACK = 5
+"""How much less urgent long work is than painting, as the system counts it: a third of a contested core."""
+
+
 @dataclass(frozen=True)
 class Channel:
     """A kind of work of which only the newest request counts.
@@ -46,12 +52,15 @@ class Channel:
         Whether progress stands in the status line.
     files : bool
         Reading and writing files has a thread of its own: results are worked out while reading goes on.
+    lasting : bool
+        Belongs to no recording: it goes on when all work on a recording is stopped.
     """
 
     name: str
     quick: bool = False
     shown: bool = True
     files: bool = False
+    lasting: bool = False
 
     @property
     def lane(self) -> str:
@@ -83,6 +92,12 @@ class Response:
     final: bool = True
 
 
+def _step_back() -> None:
+    """Let the window's thread go first where both want a core; threads that this one starts step back with it."""
+    if sys.platform == "linux":  # elsewhere a priority belongs to a whole process
+        os.setpriority(os.PRIO_PROCESS, threading.get_native_id(), STEP_BACK)
+
+
 def _ignored(_: Any) -> None:
     """Take a part that nobody asked for."""
 
@@ -101,7 +116,7 @@ class JobRunner(QObject):
     def __init__(self, parent: QObject | None = None) -> None:
         super().__init__(parent)
         self._pools = {
-            lane: ThreadPoolExecutor(threads, thread_name_prefix=f"meseta-{lane}")
+            lane: ThreadPoolExecutor(threads, f"meseta-{lane}", None if lane == "quick" else _step_back)
             for lane, threads in (("quick", 2), ("files", 1), ("long", 1))
         }
         self._numbers = itertools.count(1)
@@ -144,14 +159,21 @@ class JobRunner(QObject):
         return request.number
 
     def cancel(self, channel: Channel | None = None, *, spare_files: bool = False) -> None:
-        """Ask the work of a channel (or all work, or all but that on files) to stop; its responses are dropped."""
+        """Ask the work of a channel (or all work, or all but that on files) to stop; its responses are dropped.
+
+        Work that belongs to no recording is stopped by its own channel only.
+        """
         for request, future in list(self._running.values()):
-            spared = spare_files and request.channel.files
-            if (channel is None and not spared) or (channel is not None and request.channel.name == channel.name):
-                request.cancel.set()
-                self._newest.pop(request.channel.name, None)
-                if future.cancel():
-                    self._forget(request)
+            one = request.channel
+            spared = one.lasting or (spare_files and one.files)
+            if one.name == channel.name if channel is not None else not spared:
+                self._stop(request, future)
+
+    def _stop(self, request: Request, future: Future[None]) -> None:
+        request.cancel.set()
+        self._newest.pop(request.channel.name, None)
+        if future.cancel():
+            self._forget(request)
 
     @property
     def busy(self) -> bool:
@@ -166,7 +188,8 @@ class JobRunner(QObject):
         """Cancel everything, wait for the threads, and take no more requests."""
         self._closed = True
         self._clock.stop()
-        self.cancel()
+        for request, future in list(self._running.values()):
+            self._stop(request, future)
         for pool in self._pools.values():
             pool.shutdown(wait=True, cancel_futures=True)
         self._running.clear()

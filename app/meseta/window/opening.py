@@ -7,17 +7,19 @@ import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
-from meseta.analysis import Analysis
 from meseta.errors import InputError, MesetaError, OutputError
 from meseta.recipe import Recipe
-from meseta.selection import Decisions
+from meseta.selection.decisions import Decisions
 from meseta.traces import TraceSet
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.analysis import Analysis
 
 __all__ = [
     "Opened",

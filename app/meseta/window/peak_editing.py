@@ -15,10 +15,10 @@ from PySide6.QtCore import QObject, Signal
 
 from meseta import typeset
 from meseta.errors import CallError, MesetaError
-from meseta.peaks import PeakFit, editable_peaks, edited_peaks
 from meseta.recipe.peaks import PeakSettings, PeakStart
 
 if TYPE_CHECKING:
+    from meseta.peaks import PeakFit
     from meseta.window.session import Session
 
 __all__ = ["TIES", "PeakEditor", "said_of"]
@@ -93,6 +93,8 @@ class PeakEditor(QObject):
         fit = self.fit
         if fit is None:
             return sorted(self.settings.peaks, key=lambda start: start.position_g0)
+        from meseta.peaks import editable_peaks
+
         return editable_peaks(self.settings, fit.table)
 
     def row_of(self, place: int) -> int:
@@ -292,6 +294,8 @@ class PeakEditor(QObject):
 
     def _set(self, text: str, starts: Sequence[PeakStart], same: str = "", **ties: Any) -> None:
         """Write peaks and ties as one step; where they do not go together the window says why, and nothing changes."""
+        from meseta.peaks import edited_peaks
+
         session = self._session
         try:
             settings = edited_peaks(self.settings, starts, **ties)

@@ -7,17 +7,19 @@ counts, plateaus and alignments are the engine's; this module only reduces them 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
-from meseta import histograms
-from meseta.analysis import Analysis, phases_of
-from meseta.histograms import ConductanceHistogram, CountMatrix, DisplacementHistogram
-from meseta.intake import Alignment
-from meseta.segmentation import PlateauTable
 from meseta.window.envelope import Curve, gapped, reduced
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.analysis import Analysis
+    from meseta.histograms import ConductanceHistogram, CountMatrix, DisplacementHistogram
+    from meseta.intake import Alignment
+    from meseta.segmentation import PlateauTable
 
 __all__ = [
     "OverlayPicture",
@@ -99,6 +101,8 @@ def trace_picture(analysis: Analysis, trace: int, work: Work) -> TracePicture:
     aligned = bool(np.isfinite(zero))
     origin = zero if aligned else (float(drive[0]) if len(drive) else 0.0)
     found = _plateaus_of(analysis, trace, work)
+    from meseta.segmentation import PlateauTable
+
     plateaus = PlateauTable.empty() if found is None else found
     x = drive - origin
     last = np.clip(plateaus.stop - 1, 0, max(len(x) - 1, 0))
@@ -145,12 +149,17 @@ def overlay_picture(analysis: Analysis, rows: npt.NDArray[np.int64], work: Work)
 
 def histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], work: Work) -> ConductanceHistogram:
     """Return the conductance histogram of some traces, without a band: the engine's own masked sum."""
+    from meseta import histograms
+
     counts: CountMatrix = analysis.result("counts", work)
     return histograms.conductance_histogram(counts, mask, analysis.recipe.histogram, None)
 
 
 def displacement_histogram_of(analysis: Analysis, mask: npt.NDArray[np.bool_], work: Work) -> DisplacementHistogram:
     """Return the 2D histogram of some traces, exact: the engine counts the smaller of them and the others."""
+    from meseta import histograms
+    from meseta.analysis import phases_of
+
     names = ("noise", "alignment", "displacement_edges", "displacement_zero")
     noise, alignment, edges, zero = (analysis.result(name, work) for name in names)
     recipe, source = analysis.recipe, analysis.traces.only("conductance")

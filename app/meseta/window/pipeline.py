@@ -10,7 +10,6 @@ import numpy as np
 import numpy.typing as npt
 from PySide6.QtCore import QObject
 
-from meseta.analysis import STEPS, Analysis
 from meseta.errors import Cancelled, MesetaError
 from meseta.traces import TraceSet
 from meseta.window.jobs import Channel, JobRunner
@@ -26,6 +25,7 @@ from meseta.window.subset import mask_of
 from meseta.work import Work
 
 if TYPE_CHECKING:
+    from meseta.analysis import Analysis
     from meseta.window.session import Session
 
 __all__ = ["DERIVE", "OVERLAY", "PICTURE", "RESULTS", "SUBSET", "SUBSET_2D", "Pipeline", "Shown"]
@@ -128,6 +128,8 @@ def run_steps(
 
 def _all_needs(name: str) -> set[str]:
     """Return every step that a step takes, directly or not."""
+    from meseta.analysis import STEPS
+
     needs = set(STEPS[name].needs) & set(STEPS)
     return needs.union(*(_all_needs(needed) for needed in needs)) if needs else needs
 

@@ -9,17 +9,15 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import replace
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 from PySide6.QtCore import QObject, Signal
 from PySide6.QtGui import QUndoCommand, QUndoStack
 
-from meseta.analysis import Analysis
 from meseta.errors import MesetaError
 from meseta.recipe import Recipe
-from meseta.selection import Decisions
 from meseta.traces import TraceIdentity, TraceSet
 from meseta.window.conditions import ConditionSet
 from meseta.window.document import FROM_RAW, Change, Document, Hover, Span
@@ -27,6 +25,10 @@ from meseta.window.jobs import JobRunner
 from meseta.window.pictures import SubsetPicture, TracePicture
 from meseta.window.pipeline import Pipeline, Shown
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.analysis import Analysis
+    from meseta.selection import Decisions
 
 __all__ = ["Change", "Document", "Hover", "Session", "Shown", "Span"]
 
@@ -150,6 +152,8 @@ class Session(QObject):
         self.jobs.cancel(spare_files=growing)
         self.undo.clear()
         self.document = document or Document(self.document.recipe)
+        from meseta.analysis import Analysis
+
         self.analysis = Analysis(traces, self.document.recipe, self.document.decisions)
         self.name, self.study_path = name, study_path
         self.derive, self.made_by, self.growing = derive, self.document.recipe, growing

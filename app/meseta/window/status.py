@@ -7,7 +7,7 @@ import math
 from PySide6.QtCore import Qt
 from PySide6.QtWidgets import QHBoxLayout, QLabel, QProgressBar, QStatusBar, QToolButton, QWidget
 
-from meseta import quantities, typeset
+from meseta import typeset
 from meseta.errors import MesetaError
 from meseta.window.session import Hover, Session
 from meseta.work import Progress
@@ -18,6 +18,8 @@ __all__ = ["StatusLine", "readout"]
 def readout(hover: Hover, axis: str) -> str:
     """Return what stands under the pointer: G0, siemens, ohm, displacement."""
     value_g0 = 10.0**hover.u if axis == "logarithmic" else hover.u
+    from meseta import quantities
+
     siemens = value_g0 * quantities.G0_SIEMENS
     ohm = 1.0 / siemens if siemens else math.inf
     parts = [typeset.conductance(value_g0), typeset.prefixed(siemens, "S"), typeset.prefixed(ohm, "ohm")]

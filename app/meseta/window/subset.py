@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 import numpy.typing as npt
 
-from meseta.analysis import Analysis
-from meseta.selection import Decisions, parse_rules
-from meseta.selection.evaluation import Evaluator
-from meseta.selection.facts import Facts
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.analysis import Analysis
 
 __all__ = ["mask_of"]
 
@@ -22,6 +23,10 @@ def mask_of(analysis: Analysis, rule: str, work: Work) -> npt.NDArray[np.bool_]:
     RecipeError
         Where the rule is not understood.
     """
+    from meseta.selection import Decisions, parse_rules
+    from meseta.selection.evaluation import Evaluator
+    from meseta.selection.facts import Facts
+
     facts = Facts(
         analysis.traces,
         analysis.result("measures", work),

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -15,10 +15,8 @@ from PySide6.QtGui import QAction, QActionGroup, QPen, QPolygonF, QResizeEvent
 from PySide6.QtWidgets import QFileDialog, QGraphicsPolygonItem, QMenu, QToolButton
 
 from meseta import typeset
-from meseta.analysis import Analysis
 from meseta.colours import GROUPS
 from meseta.errors import MesetaError
-from meseta.histograms import ConductanceHistogram
 from meseta.window.conditions import WINDOWS
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
@@ -29,6 +27,10 @@ from meseta.window.plots.ticks import LogCountAxis
 from meseta.window.theme import Theme
 from meseta.window.views.comparison.request import MOST_PARTS, SOURCES, Compared, Question, answer, read_beside
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.analysis import Analysis
+    from meseta.histograms import ConductanceHistogram
 
 __all__ = ["ComparisonPanel"]
 

@@ -5,14 +5,17 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-from meseta.analysis import Analysis, compare_parts, compare_recordings, yield_in_window
 from meseta.errors import CallError
-from meseta.histograms import Comparison, Difference, Yield, parts_by
 from meseta.recipe import Recipe
 from meseta.window.opening import open_paths
 from meseta.window.subset import mask_of
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.analysis import Analysis
+    from meseta.histograms import Comparison, Difference, Yield
 
 __all__ = ["MOST_PARTS", "SOURCES", "Compared", "Question", "answer", "read_beside"]
 
@@ -65,6 +68,7 @@ def read_beside(paths: Sequence[str], recipe: Recipe, work: Work) -> tuple[str, 
 
     A study has its own traces, and its own decisions by hand; nothing is written to it.
     """
+    from meseta.analysis import Analysis
     from meseta.study import Study, is_study
 
     if len(paths) == 1 and Path(paths[0]).is_file() and is_study(paths[0]):
@@ -95,6 +99,8 @@ def answer(analysis: Analysis, others: Mapping[str, Analysis], name: str, questi
     CallError
         Where there is nothing to compare, in words.
     """
+    from meseta.analysis import compare_parts, compare_recordings, yield_in_window
+
     if question.source == "recording":
         comparison = compare_recordings({name: analysis, **others}, work)
     elif question.source == "conditions":
@@ -115,6 +121,8 @@ def answer(analysis: Analysis, others: Mapping[str, Analysis], name: str, questi
 
 def _check_parts(analysis: Analysis, source: str, work: Work) -> None:
     """Say in words where there are no two parts of this kind."""
+    from meseta.histograms import parts_by
+
     selection, counts = analysis.selection(work), analysis.result("counts", work)
     if source == "selection":
         several = bool((counts.used & ~selection.kept).any() and (counts.used & selection.kept).any())
@@ -136,6 +144,8 @@ _REMEDIES = {
 
 
 def _by_conditions(analysis: Analysis, rule: str, work: Work) -> Comparison:
+    from meseta.analysis import compare_parts
+
     kept = analysis.selection(work).kept
     picked = mask_of(analysis, rule, work)
     parts = {"selected": kept & picked, "others": kept & ~picked}

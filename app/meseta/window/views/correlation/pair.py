@@ -10,11 +10,11 @@ import pyqtgraph as pg
 from PySide6.QtGui import QGuiApplication, QPen
 
 from meseta import typeset
-from meseta.histograms import ConductanceHistogram, CorrelationHistogram, PairHistograms
 from meseta.window.plots.ticks import ConductanceAxis, LogCountAxis
 from meseta.window.theme import Theme
 
 if TYPE_CHECKING:
+    from meseta.histograms import ConductanceHistogram, CorrelationHistogram, PairHistograms
     from meseta.window.views.correlation.panel import CorrelationPanel
 
 __all__ = ["PairPlot"]

@@ -7,7 +7,7 @@ both axes, asks for the histograms of the traces that are rich there; they stand
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -16,8 +16,7 @@ from PySide6.QtCore import QEvent, QObject, QRectF, Qt
 from PySide6.QtGui import QHideEvent, QKeyEvent, QShowEvent
 from PySide6.QtWidgets import QLabel, QToolButton
 
-from meseta import colours, histograms, typeset
-from meseta.histograms import CorrelationHistogram, PairHistograms
+from meseta import colours, typeset
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
@@ -29,6 +28,9 @@ from meseta.window.theme import Theme
 from meseta.window.views.correlation.outline import outline
 from meseta.window.views.correlation.pair import PairPlot
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.histograms import CorrelationHistogram, PairHistograms
 
 __all__ = ["CorrelationPanel"]
 
@@ -259,6 +261,8 @@ class CorrelationPanel(PlotPanel):
             return None
 
         def task(work: Work, _: Callable[[Any], None]) -> PairHistograms:
+            from meseta import histograms
+
             counts, kept = analysis.result("counts", work), analysis.result("selection", work).kept
             partners = analysis.result("partners", work) if crossed else None
             return histograms.pair_histograms(

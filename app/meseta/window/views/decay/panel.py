@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -24,7 +24,6 @@ from PySide6.QtWidgets import (
 
 from meseta import typeset
 from meseta.errors import InputError, MesetaError
-from meseta.peaks import Decay, DecayPoints, decay, read_points
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
@@ -35,6 +34,9 @@ from meseta.window.session import Hover
 from meseta.window.theme import Theme, fixed_digits
 from meseta.window.views.decay.points import COLUMNS, Cells, cells_of, pasted, points_of
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.peaks import Decay, DecayPoints
 
 __all__ = ["DecayPanel"]
 
@@ -205,6 +207,8 @@ class DecayPanel(PlotPanel):
         unit = self.unit.text()
 
         def task(_: Work, __: Callable[[Any], None]) -> DecayPoints:
+            from meseta.peaks import read_points
+
             return read_points(path, unit)
 
         self.session.jobs.submit(
@@ -250,6 +254,8 @@ class DecayPanel(PlotPanel):
             return None
 
         def task(_: Work, __: Callable[[Any], None]) -> _Drawn:
+            from meseta.peaks import decay
+
             fit = decay(points)
             low, high = min(0.0, float(points.length.min())), float(points.length.max())
             length = np.linspace(low, high + 0.06 * (high - low), 200)

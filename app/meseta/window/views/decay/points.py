@@ -4,11 +4,14 @@ from __future__ import annotations
 
 import csv
 from collections.abc import Sequence
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from meseta.errors import InputError
-from meseta.peaks import DecayPoints
+
+if TYPE_CHECKING:
+    from meseta.peaks import DecayPoints
 
 __all__ = ["COLUMNS", "Cells", "cells_of", "pasted", "points_of"]
 
@@ -28,6 +31,8 @@ def points_of(cells: Cells, unit: str) -> DecayPoints | None:
     rows = [(number, row) for number, row in enumerate(cells, 1) if any(cell.strip() for cell in row[:4])]
     if not rows:
         return None
+    from meseta.peaks import DecayPoints
+
     numbers = np.array([[_number(row[at], number, at) for at in range(4)] for number, row in rows], float)
     return DecayPoints(
         length=numbers[:, 0],

@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pyqtgraph as pg
 from PySide6.QtCore import QRectF
 
 from meseta import typeset
-from meseta.histograms import DisplacementHistogram
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.plots.drawing import WindowTool
@@ -21,6 +20,9 @@ from meseta.window.session import Change
 from meseta.window.theme import Theme
 from meseta.window.views.displacement.picture import DisplacementImage, DisplacementPicture, displacement_picture
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.histograms import DisplacementHistogram
 
 __all__ = ["DisplacementPanel"]
 

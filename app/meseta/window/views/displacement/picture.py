@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import DisplacementHistogram
 from meseta.window.pictures import scaled_image, usual_top
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.histograms import DisplacementHistogram
 
 __all__ = ["DisplacementImage", "DisplacementPicture", "displacement_picture"]
 

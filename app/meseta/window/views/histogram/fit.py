@@ -8,12 +8,12 @@ import numpy as np
 import pyqtgraph as pg
 
 from meseta import typeset
-from meseta.peaks import PeakFit
 from meseta.window.peak_editing import PeakEditor
 from meseta.window.theme import Theme
 from meseta.window.views.histogram.bounds import BoundHandles
 
 if TYPE_CHECKING:
+    from meseta.peaks import PeakFit
     from meseta.window.views.histogram.panel import HistogramPanel
 
 __all__ = ["FitLayer"]

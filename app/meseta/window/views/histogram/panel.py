@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -13,7 +13,6 @@ from PySide6.QtGui import QAction, QActionGroup, QKeyEvent, QPolygonF
 from PySide6.QtWidgets import QGraphicsPolygonItem, QMenu, QToolButton
 
 from meseta import typeset
-from meseta.histograms import ConductanceHistogram
 from meseta.window.conditions import WINDOWS
 from meseta.window.frame import Frame
 from meseta.window.pictures import SubsetPicture
@@ -23,6 +22,9 @@ from meseta.window.plots.ticks import LogCountAxis
 from meseta.window.session import Change, Hover
 from meseta.window.theme import Theme
 from meseta.window.views.histogram.fit import FitLayer
+
+if TYPE_CHECKING:
+    from meseta.histograms import ConductanceHistogram
 
 __all__ = ["HistogramPanel"]
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import replace
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -13,8 +13,7 @@ from PySide6.QtCore import Qt
 from PySide6.QtGui import QAction, QActionGroup
 from PySide6.QtWidgets import QHBoxLayout, QLabel, QMenu, QPushButton, QToolButton, QVBoxLayout
 
-from meseta import histograms, typeset
-from meseta.histograms import LengthHistogram, Spacing
+from meseta import typeset
 from meseta.window.conditions import WINDOWS
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
@@ -23,6 +22,9 @@ from meseta.window.plots.panel import BOTTOM_PIXELS, PlotData, PlotPanel
 from meseta.window.plots.ticks import PlainAxis
 from meseta.window.theme import Theme
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.histograms import LengthHistogram, Spacing
 
 __all__ = ["LengthsPanel"]
 
@@ -239,6 +241,8 @@ class LengthsPanel(PlotPanel):
             return None
 
         def task(_: Work, __: Callable[[Any], None]) -> Spacing:
+            from meseta import histograms
+
             return histograms.spacing_of(found)
 
         return (analysis.key(STEP), self.kind), task

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -12,8 +12,6 @@ from PySide6.QtGui import QResizeEvent
 from PySide6.QtWidgets import QGraphicsRectItem
 
 from meseta import typeset
-from meseta.analysis import defensible_analyses
-from meseta.peaks import DefensibleAnalyses, PeakAnalyses
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
@@ -23,6 +21,9 @@ from meseta.window.plots.ticks import PlainAxis
 from meseta.window.session import Hover
 from meseta.window.theme import Theme
 from meseta.work import Work
+
+if TYPE_CHECKING:
+    from meseta.peaks import DefensibleAnalyses, PeakAnalyses
 
 __all__ = ["AnalysesPanel"]
 
@@ -127,6 +128,8 @@ class AnalysesPanel(PlotPanel):
             return None
 
         def task(work: Work, _: Callable[[Any], None]) -> DefensibleAnalyses:
+            from meseta.analysis import defensible_analyses
+
             return defensible_analyses(analysis, work)
 
         return analysis.key("peaks"), task

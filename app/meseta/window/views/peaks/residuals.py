@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -12,11 +12,13 @@ from PySide6.QtGui import QPolygonF
 from PySide6.QtWidgets import QGraphicsPolygonItem
 
 from meseta import typeset
-from meseta.peaks import PeakFit
 from meseta.window.frame import Frame
 from meseta.window.plots.panel import PlotData, SpinePanel
 from meseta.window.plots.ticks import PlainAxis
 from meseta.window.theme import Theme
+
+if TYPE_CHECKING:
+    from meseta.peaks import PeakFit
 
 __all__ = ["ResidualsPanel"]
 

@@ -2,15 +2,19 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 from PySide6.QtWidgets import QLabel, QVBoxLayout, QWidget
 
 from meseta import typeset
-from meseta.peaks import PeakFit
 from meseta.window.frame import Frame
 from meseta.window.tables.model import Column, plain
 from meseta.window.tables.view import TablePanel
 from meseta.window.visibility import Lazy
+
+if TYPE_CHECKING:
+    from meseta.peaks import PeakFit
 
 __all__ = ["SystematicPanel"]
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -10,13 +10,15 @@ from PySide6.QtCore import QItemSelectionModel, Qt
 from PySide6.QtWidgets import QCheckBox, QComboBox, QGridLayout, QHBoxLayout, QLabel, QToolButton, QVBoxLayout, QWidget
 
 from meseta import typeset
-from meseta.peaks import PeakTable
 from meseta.window.elided import Elided
 from meseta.window.frame import Frame
 from meseta.window.peak_editing import TIES, PeakEditor, said_of
 from meseta.window.tables.model import Column, plain
 from meseta.window.tables.view import TablePanel
 from meseta.window.visibility import Lazy
+
+if TYPE_CHECKING:
+    from meseta.peaks import PeakTable
 
 __all__ = ["PeaksPanel"]
 

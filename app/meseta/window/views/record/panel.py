@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -11,12 +11,14 @@ from PySide6.QtCore import QRectF, Qt
 from PySide6.QtWidgets import QLabel
 
 from meseta import colours, typeset
-from meseta.histograms import ShiftedCorrelation
 from meseta.window.frame import Frame
 from meseta.window.plots.panel import BOTTOM_PIXELS, PlotData, PlotPanel
 from meseta.window.plots.ticks import ConductanceAxis, PlainAxis
 from meseta.window.session import Hover
 from meseta.window.theme import Theme
+
+if TYPE_CHECKING:
+    from meseta.histograms import ShiftedCorrelation
 
 __all__ = ["RecordPanel"]
 

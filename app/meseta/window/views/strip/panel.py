@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import replace
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -13,7 +13,6 @@ from PySide6.QtCore import QRectF
 from PySide6.QtWidgets import QGraphicsRectItem
 
 from meseta import typeset
-from meseta.histograms import CountMatrix
 from meseta.window.conditions import Condition
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
@@ -23,6 +22,9 @@ from meseta.window.plots.panel import PlotData, PlotPanel
 from meseta.window.plots.ticks import ConductanceAxis, PlainAxis
 from meseta.window.session import Change, Hover
 from meseta.window.theme import Theme
+
+if TYPE_CHECKING:
+    from meseta.histograms import CountMatrix
 
 __all__ = ["StripPanel"]
 

@@ -2,18 +2,20 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 from PySide6.QtWidgets import QLabel, QVBoxLayout, QWidget
 
 from meseta import typeset
-from meseta.selection import Selection, SelectionTable
 from meseta.window.frame import Frame
 from meseta.window.tables.model import Column, plain
 from meseta.window.tables.view import TablePanel
 from meseta.window.visibility import Lazy
+
+if TYPE_CHECKING:
+    from meseta.selection import Selection, SelectionTable
 
 __all__ = ["PlateausTable", "RulesTable", "TracesTable"]
 
