@@ -316,11 +316,11 @@ def main() -> int:
 
 
 def _treat_as_large() -> None:
-    from meseta.intake.readers import hdf5_tree, igor, mat, numpy_files, text
+    from meseta.intake.readers import hdf5_samples, igor, mat, numpy_files, text
 
     for module in (mat, igor, numpy_files, text):
         module.LARGE_BYTE = 100  # type: ignore[attr-defined]
-    mat.SMALL_BYTE, hdf5_tree.CACHED_BYTE = 8, 100  # type: ignore[misc]
+    mat.SMALL_BYTE, hdf5_samples.CACHED_BYTE = 8, 100  # type: ignore[misc]
 
 
 if __name__ == "__main__":

@@ -17,7 +17,7 @@ from test_intake_layouts import WRITERS, assert_same
 from meseta import intake
 from meseta.errors import InputError
 from meseta.intake import open_recording, room, traces_from
-from meseta.intake.readers import file_array, hdf5_tree, numpy_files, spool, tdms_places, text, text_stream
+from meseta.intake.readers import file_array, hdf5_samples, numpy_files, spool, tdms_places, text, text_stream
 from meseta.recipe import Recipe
 from meseta.work import Work
 
@@ -58,7 +58,7 @@ def test_large_arrays_stay_in_their_file(order, tmp_path, monkeypatch):
     monkeypatch.setattr(numpy_files, "LARGE_BYTE", 100)
     monkeypatch.setattr(file_array, "BLOCK_BYTE", 5000)
     monkeypatch.setattr(file_array, "LONG_ROW_BYTE", 900)
-    monkeypatch.setattr(hdf5_tree, "CACHED_BYTE", 100)
+    monkeypatch.setattr(hdf5_samples, "CACHED_BYTE", 100)
     monkeypatch.setattr(spool, "TURN_BYTE", 7000)
     for name in ("conductance_G0.npy", "stored.npz"):
         for layout, expected in (("rows", rows), ("columns", rows.T)):

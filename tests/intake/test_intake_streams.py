@@ -24,7 +24,7 @@ from test_intake_igor import old_wave, wave
 
 from meseta import intake
 from meseta.errors import InputError
-from meseta.intake.readers import file_array, hdf5_tree, igor, mat, numpy_files, spool
+from meseta.intake.readers import file_array, hdf5_samples, igor, mat, numpy_files, spool
 from meseta.recipe import Recipe
 
 ROWS = np.random.default_rng(1).normal(size=(40, 300))
@@ -39,7 +39,7 @@ def everything_is_large(monkeypatch):
     monkeypatch.setattr(numpy_files, "BLOCK_BYTE", 777)
     monkeypatch.setattr(file_array, "BLOCK_BYTE", 5000)
     monkeypatch.setattr(file_array, "LONG_ROW_BYTE", 900)
-    monkeypatch.setattr(hdf5_tree, "CACHED_BYTE", 100)
+    monkeypatch.setattr(hdf5_samples, "CACHED_BYTE", 100)
     monkeypatch.setattr(spool, "TURN_BYTE", 7000)
 
 
@@ -218,12 +218,12 @@ import resource, sys
 import numpy as np
 from meseta import intake
 from meseta.intake import traces_from
-from meseta.intake.readers import hdf5_tree, igor, mat, numpy_files, spool
+from meseta.intake.readers import hdf5_samples, igor, mat, numpy_files, spool
 import hdf5plugin, numba, scipy.stats, zipfile, lzma, nptdms
 
 for module in (mat, igor, numpy_files):
     module.LARGE_BYTE = 1 << 20
-hdf5_tree.CACHED_BYTE, spool.TURN_BYTE = 1 << 20, 8 << 20
+hdf5_samples.CACHED_BYTE, spool.TURN_BYTE = 1 << 20, 8 << 20
 
 def walk(path, samples):
     with intake.open_recording(path) as recording:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from contextlib import ExitStack
 from dataclasses import replace
 from pathlib import Path
 from typing import Any, Final
@@ -48,17 +49,18 @@ class Hdf5Reader:
 
     def open(self, path: Path, settings: IntakeSettings) -> Contents:
         """Return the content of the file; samples are read from it block by block."""
-        file = open_file(path)
         try:
-            return replace(understood(walk(file, path), path, settings), close=file.close)
+            with ExitStack() as stack:
+                file = open_file(path)
+                stack.callback(file.close)
+                tree = walk(file, path)
+                stack.callback(tree.close)
+                contents = understood(tree, path, settings)
+                return replace(contents, close=stack.pop_all().close)
         except (OSError, RuntimeError) as error:
-            file.close()
             raise InputError(
                 f"is damaged ({str(error)[:80]})", str(path), "copy the file again from its origin"
             ) from error
-        except BaseException:
-            file.close()
-            raise
 
 
 def understood(tree: Tree, path: Path, settings: IntakeSettings) -> Contents:
@@ -112,7 +114,7 @@ def _best_sheet(by_parent: Mapping[str, Sequence[Leaf]], layout: str) -> tuple[S
 
 
 def _not_numbered(by_parent: Mapping[str, Sequence[Leaf]], layout: str) -> tuple[Sheet | None, list[str]]:
-    everywhere = [leaf for leaves in by_parent.values() for leaf in leaves if leaf.is_vector]
+    everywhere = [leaf for leaves in by_parent.values() for leaf in leaves if leaf.may_cut and leaf.is_vector]
     sheets = {
         parent: found for parent, leaves in by_parent.items() if (found := sheet_of(parent, leaves, layout, everywhere))
     }

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import math
 import re
 from collections.abc import Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 from typing import Any, Final
 
 import numpy as np
@@ -12,7 +14,9 @@ import numpy.typing as npt
 from natsort import natsorted
 
 from meseta.intake.metadata import plain_value
-from meseta.intake.readers.hdf5_tree import Layer, Node, Ragged, VectorSamples, columns_of, rows_of
+from meseta.intake.readers.hdf5_ragged import Ragged
+from meseta.intake.readers.hdf5_samples import Layer, PartSamples, VectorSamples, columns_of, rows_of
+from meseta.intake.readers.hdf5_tree import Node
 from meseta.intake.readers.orientation import orientation
 from meseta.intake.roles import DRIVE_ROLES, SIGNAL_ROLES, guess_role, stem_of
 from meseta.traces import Samples
@@ -24,6 +28,7 @@ _CUTS: Final = {
     "first_sample index_start record_start",
     "lengths": "lengths length trace_lengths counts n_samples samples sizes size npts",
 }
+_CUT_NAMES: Final = frozenset(" ".join(_CUTS.values()).split())
 _COLUMN_NAMES: Final = ("columns", "channels", "names", "channel_names", "column_names", "fields", "labels")
 _UNITS: Final = ("units", "unit")
 MOST_COLUMNS: Final = 64
@@ -61,15 +66,20 @@ class Leaf:
     node: Node
     samples: Samples
 
-    @property
+    @cached_property
     def is_vector(self) -> bool:
         """Return whether it has one dimension (or others of size 1)."""
         return sum(n > 1 for n in self.shape) <= 1
 
-    @property
+    @cached_property
     def length(self) -> int:
         """Number of samples."""
-        return int(np.prod(self.shape))
+        return math.prod(self.shape)
+
+    @property
+    def may_cut(self) -> bool:
+        """Whether it is named like a list of where traces begin, or how long they are."""
+        return self.name.lower() in _CUT_NAMES
 
 
 @dataclass(frozen=True)
@@ -229,7 +239,6 @@ class _Converted:
 def _parts(leaves: Sequence[Leaf], offsets: npt.NDArray[np.int64]) -> tuple[Samples, Mapping[str, Any]]:
     """Return samples of several datasets end to end, and the attributes that hold for all of them."""
     from meseta.intake.readers.contents import conversion, conversion_names
-    from meseta.intake.readers.hdf5_tree import PartSamples
 
     if len(leaves) == 1:
         return leaves[0].samples, leaves[0].attributes
@@ -268,7 +277,7 @@ def sheet_of(parent: str, leaves: Sequence[Leaf], layout: str, elsewhere: Sequen
     layout : str
         ``intake.layout`` of the recipe.
     elsewhere : sequence of Leaf
-        Datasets of other groups that may say where traces begin.
+        Datasets of any group that are named like what says where traces begin.
     """
     matrices = [leaf for leaf in leaves if len(leaf.shape) == 2 and not leaf.is_vector]
     vectors = [leaf for leaf in leaves if leaf.is_vector and leaf.length > 1]
@@ -418,7 +427,7 @@ def _ragged(vectors: Sequence[Leaf], cut: Leaf, offsets: npt.NDArray[np.int64]) 
             )
         elif leaf.length == pieces:
             table[leaf.name] = np.asarray(leaf.samples.read(0, pieces))
-        elif leaf.name.lower() not in " ".join(_CUTS.values()).split():
+        elif not leaf.may_cut:
             doubts.append(f"'{leaf.name}' goes with neither traces nor samples and was left out")
     names = [f"{channels[0][0]}"] * pieces if channels else [""] * pieces
     layout = f"flat, cut by '{cut.name}'"
@@ -442,8 +451,6 @@ def _record(parent: str, vectors: Sequence[Leaf]) -> Sheet:
 
 def joined_sheets(sheets: Sequence[Sheet], layout: str) -> Sheet:
     """Return the pieces of several groups with the same channels, one group after the other."""
-    from meseta.intake.readers.hdf5_tree import PartSamples
-
     totals = np.concatenate([[0], np.cumsum([sheet.offsets[-1] for sheet in sheets])]).astype(np.int64)
     offsets = np.concatenate([[0], *(sheet.offsets[1:] + base for sheet, base in zip(sheets, totals, strict=False))])
     by_name = [{channel[0]: channel for channel in sheet.channels} for sheet in sheets]

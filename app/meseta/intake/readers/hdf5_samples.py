@@ -1,0 +1,353 @@
+"""The samples of an HDF5 file (or of arrays like its datasets), laid end to end in the order of traces."""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import threading
+from dataclasses import dataclass, field
+from functools import cached_property
+from pathlib import Path
+from typing import Any, Final
+
+import h5py
+import numpy as np
+import numpy.typing as npt
+
+from meseta.errors import InputError
+from meseta.intake.readers.spool import turned
+from meseta.traces import ArraySamples
+
+__all__ = [
+    "ColumnSamples",
+    "Layer",
+    "PartSamples",
+    "RawBytes",
+    "RowSamples",
+    "StoredArray",
+    "VectorSamples",
+    "columns_of",
+    "place_of",
+    "rows_of",
+]
+
+CACHED_BYTE: Final = 64 << 20
+
+
+class _Descriptor:
+    """An open file, closed when the last one that reads it lets go."""
+
+    def __init__(self, path: Path) -> None:
+        self.number = os.open(path, os.O_RDONLY)
+
+    def __del__(self) -> None:
+        with contextlib.suppress(AttributeError, OSError):
+            os.close(self.number)
+
+
+class RawBytes:
+    """A file's bytes, read from their places by any number of threads at once; the library lets only one in."""
+
+    def __init__(self, path: Path) -> None:
+        self._open = _Descriptor(path) if hasattr(os, "preadv") else None
+
+    def __bool__(self) -> bool:
+        """Return whether the system allows it."""
+        return self._open is not None
+
+    def fill(self, array: npt.NDArray[Any], place: int) -> bool:
+        """Fill an array with the bytes from a place on; return False where they cannot be had."""
+        file, left = self._open, array.data.cast("B")
+        while file is not None and left:
+            count = os.preadv(file.number, [left], place)
+            if count <= 0:
+                return False
+            left, place = left[count:], place + count
+        return file is not None
+
+    def close(self) -> None:
+        """Let go of the file."""
+        self._open = None
+
+
+@dataclass(frozen=True, eq=False)
+class StoredArray:
+    """A dataset; where its numbers stand in the file as they are, one after the other, they are read from there.
+
+    Attributes
+    ----------
+    identity : h5py.h5d.DatasetID
+    path : str
+        File and name, for errors.
+    shape : tuple of int
+    dtype : numpy dtype
+    place : int
+        Byte of the file at which the numbers begin; -1 where they are packed, in chunks, or of a type of their own.
+    raw : RawBytes, optional
+    """
+
+    identity: Any
+    path: str
+    shape: tuple[int, ...]
+    dtype: np.dtype[Any]
+    place: int = -1
+    raw: RawBytes | None = None
+
+    @cached_property
+    def dataset(self) -> Any:
+        """The library's dataset."""
+        return h5py.Dataset(self.identity)
+
+    def __getitem__(self, key: Any) -> npt.NDArray[Any]:
+        """Return a part of the array."""
+        found: npt.NDArray[Any] = self.dataset[key]
+        return found
+
+    def fields(self, name: str) -> Any:
+        """Return one column of a compound array."""
+        return self.dataset.fields(name)
+
+    def run(self, start: int, stop: int) -> npt.NDArray[Any] | None:
+        """Return numbers ``start`` to ``stop`` in the order of the file; None where they have no place there."""
+        if self.place < 0:
+            return None
+        found = np.empty(max(stop - start, 0), self.dtype)
+        self._fill(found, start)
+        return found
+
+    def fill(self, start: int, target: npt.NDArray[np.float32]) -> bool:
+        """Fill an array with the numbers from ``start`` on; return False where they are others, or have no place."""
+        if self.place < 0 or self.dtype != target.dtype or not target.flags.c_contiguous:
+            return False
+        self._fill(target, start)
+        return True
+
+    def _fill(self, target: npt.NDArray[Any], start: int) -> None:
+        assert self.raw is not None
+        try:
+            is_whole = self.raw.fill(target, self.place + start * self.dtype.itemsize)
+        except OSError as error:
+            raise _broken(self.path) from error
+        if not is_whole:
+            raise _broken(self.path)
+
+
+@dataclass(frozen=True)
+class VectorSamples:
+    """A dataset read flat: one dimension, or two of which one is 1; ``field`` picks a column of a compound type."""
+
+    dataset: Any
+    field: str = ""
+
+    def __len__(self) -> int:
+        return int(np.prod(self.dataset.shape))
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        run = _run(self.dataset, start, stop) if not self.field else None
+        if run is not None:
+            return run
+        source = _field(self.dataset, self.field) if self.field else self.dataset
+        shape = self.dataset.shape
+        if len(shape) == 1:
+            return _read(self.dataset, lambda: source[start:stop])
+        if shape[0] == 1:
+            return _read(self.dataset, lambda: source[0, start:stop])
+        return _read(self.dataset, lambda: source[start:stop, 0])
+
+    def read_into(self, start: int, target: npt.NDArray[np.float32]) -> bool:
+        """Fill a float32 array from sample ``start`` on; return False where the samples are of another kind."""
+        if self.field or len(target) == 0:
+            return False
+        if isinstance(self.dataset, StoredArray) and self.dataset.fill(start, target):
+            return True
+        if not _fits(self.dataset, target) or len(self.dataset.shape) != 1:
+            return False
+        data = self.dataset.dataset
+        _read(self.dataset, lambda: data.read_direct(target, slice(start, start + len(target))) or target)
+        return True
+
+
+@dataclass(frozen=True)
+class RowSamples:
+    """A 2D dataset whose rows stand end to end; ``at`` picks one place of a third, last axis."""
+
+    dataset: Any
+
+    def __len__(self) -> int:
+        return int(np.prod(self.dataset.shape))
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        run = _run(self.dataset, start, stop)
+        if run is not None:
+            return run
+        n = self.dataset.shape[1]
+        first, last = start // n, -(-stop // n)
+        if last - first == 1:  # of a row that may be longer than memory, only what is wanted
+            return _read(self.dataset, lambda: self.dataset[first, start - first * n : stop - first * n])
+        if last - first == 2:
+            return np.concatenate([self.read(start, (first + 1) * n), self.read((first + 1) * n, stop)])
+        block = _read(self.dataset, lambda: self.dataset[first:last])
+        return block.reshape(-1)[start - first * n : stop - first * n]
+
+    def read_into(self, start: int, target: npt.NDArray[np.float32]) -> bool:
+        """Fill a float32 array with whole rows from sample ``start`` on; return False where they are of other kind."""
+        if len(target) == 0 or not isinstance(self.dataset, StoredArray):
+            return False
+        if self.dataset.fill(start, target):
+            return True
+        if not _fits(self.dataset, target) or len(self.dataset.shape) != 2:
+            return False
+        n = self.dataset.shape[1]
+        if start % n or len(target) % n:
+            return False
+        rows = slice(start // n, (start + len(target)) // n)
+        data = self.dataset.dataset
+        _read(self.dataset, lambda: data.read_direct(target.reshape(-1, n), rows) or target)
+        return True
+
+
+def rows_of(dataset: Any) -> RowSamples | ColumnSamples:
+    """Return the rows of a 2D dataset end to end; those of an array that lies in Fortran order are columns there."""
+    return ColumnSamples(dataset.transposed) if getattr(dataset, "turned", False) else RowSamples(dataset)
+
+
+def columns_of(dataset: Any) -> RowSamples | ColumnSamples:
+    """Return the columns of a 2D dataset end to end; those of an array that lies in Fortran order are rows there."""
+    return RowSamples(dataset.transposed) if getattr(dataset, "turned", False) else ColumnSamples(dataset)
+
+
+@dataclass
+class ColumnSamples:
+    """A 2D dataset whose columns stand end to end; it is turned once, a large one into a temporary file."""
+
+    dataset: Any
+    _turned: Any = None
+    _lock: Any = field(default_factory=threading.Lock, repr=False, compare=False)
+
+    def __len__(self) -> int:
+        return int(np.prod(self.dataset.shape))
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        if stop <= start:
+            return np.empty(0, self.dataset.dtype)
+        with self._lock:
+            if self._turned is None:
+                self._turned = self._turn()
+        return self._turned.read(start, stop)
+
+    def _turn(self) -> Any:
+        data = self.dataset
+        if len(self) * data.dtype.itemsize <= CACHED_BYTE:
+            return ArraySamples(np.ascontiguousarray(_read(data, lambda: data[()]).T).reshape(-1))
+        return turned(lambda a, b: _read(data, lambda: data[a:b]), data.shape, data.dtype, Path(place_of(data)))
+
+
+@dataclass(frozen=True)
+class Layer:
+    """One place of one axis of a dataset, as a dataset of one dimension less."""
+
+    dataset: Any
+    axis: int
+    place: int
+
+    @property
+    def path(self) -> str:
+        """Where the dataset lies."""
+        return place_of(self.dataset)
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Its shape without the axis."""
+        return tuple(int(n) for place, n in enumerate(self.dataset.shape) if place != self.axis)
+
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """Type of its numbers."""
+        return np.dtype(self.dataset.dtype)
+
+    @property
+    def turned(self) -> bool:
+        """Whether it is the transpose of what lies in the file."""
+        return bool(getattr(self.dataset, "turned", False))
+
+    @property
+    def transposed(self) -> Layer:
+        """The same numbers with the axes in reverse."""
+        return Layer(self.dataset.transposed, len(self.dataset.shape) - 1 - self.axis, self.place)
+
+    def __getitem__(self, key: Any) -> npt.NDArray[Any]:
+        """Return a part of the layer."""
+        keys = list(key) if isinstance(key, tuple) else [key]
+        keys += [slice(None)] * (len(self.shape) - len(keys))
+        keys.insert(self.axis, self.place)
+        found: npt.NDArray[Any] = self.dataset[tuple(keys)]
+        return found
+
+
+@dataclass(frozen=True)
+class PartSamples:
+    """Several samples, end to end."""
+
+    parts: tuple[Any, ...]
+    offsets: npt.NDArray[np.int64]
+
+    def __len__(self) -> int:
+        return int(self.offsets[-1])
+
+    def read(self, start: int, stop: int) -> npt.NDArray[Any]:
+        """Return samples ``start`` to ``stop``."""
+        first = int(np.searchsorted(self.offsets, start, side="right")) - 1
+        found = []
+        for part in range(max(first, 0), len(self.parts)):
+            begin, end = int(self.offsets[part]), int(self.offsets[part + 1])
+            if begin >= stop:
+                break
+            found.append(self.parts[part].read(max(start - begin, 0), min(stop, end) - begin))
+        return np.concatenate(found) if found else self.parts[0].read(0, 0)
+
+    def read_into(self, start: int, target: npt.NDArray[np.float32]) -> bool:
+        """Fill a float32 array from sample ``start`` on; return False where the samples of a part are of other kind."""
+        part, at = max(int(np.searchsorted(self.offsets, start, side="right")) - 1, 0), 0
+        while at < len(target):
+            begin, end = int(self.offsets[part]), int(self.offsets[part + 1])
+            stop = min(at + end - (start + at), len(target))
+            if stop > at:
+                into = getattr(self.parts[part], "read_into", None)
+                if into is None or not into(start + at - begin, target[at:stop]):
+                    return False
+            at, part = stop, part + 1
+        return len(target) > 0
+
+
+def _run(dataset: Any, start: int, stop: int) -> npt.NDArray[Any] | None:
+    return dataset.run(start, stop) if isinstance(dataset, StoredArray) else None
+
+
+def _fits(dataset: Any, target: npt.NDArray[np.float32]) -> bool:
+    """Return whether a dataset's samples can be read into an array as they are."""
+    return isinstance(dataset, StoredArray) and dataset.dtype == target.dtype and len(target) > 0
+
+
+def _field(dataset: Any, name: str) -> Any:
+    """Return one field of a compound dataset (of HDF5, or an array in memory)."""
+    return dataset[name] if isinstance(dataset, np.ndarray) else dataset.fields(name)
+
+
+def place_of(dataset: Any) -> str:
+    """Return the file that an array lies in, and its name there."""
+    return str(getattr(dataset, "path", "file"))
+
+
+def _read(dataset: Any, action: Any) -> npt.NDArray[Any]:
+    try:
+        values: npt.NDArray[Any] = action()
+        return values
+    except (OSError, RuntimeError, ValueError) as error:
+        raise _broken(place_of(dataset)) from error
+
+
+def _broken(where: str) -> InputError:
+    return InputError("cannot be read: the file is damaged or truncated", where, "copy the file again")
