@@ -165,13 +165,17 @@ def _bare(name: str) -> str:
 
 
 def _paired(kept: Iterable[str], seen: Iterable[str]) -> dict[str, str]:
-    """Return seen -> kept name: the same, else the only ones that agree but for number, unit and case."""
-    wanted, there = dict.fromkeys(kept), dict.fromkeys(seen)
+    """Return seen -> kept name: the same, else the only ones of all that agree but for number, unit and case.
+
+    Of inputs that are told apart by numbers ("AI0", "AI1") none is taken for another.
+    """
+    wanted, there = tuple(dict.fromkeys(kept)), tuple(dict.fromkeys(seen))
     pairs = {name: name for name in there if name in wanted}
     for form in (str.lower, _bare):
-        left = _by_form((name for name in wanted if name not in pairs.values()), form)
-        right = _by_form((name for name in there if name not in pairs), form)
-        pairs |= {names[0]: left[key][0] for key, names in right.items() if len(names) == len(left.get(key, ())) == 1}
+        left, right = _by_form(wanted, form), _by_form(there, form)
+        for key, names in right.items():
+            if len(names) == len(left.get(key, ())) == 1:
+                pairs.setdefault(names[0], left[key][0])
     return pairs
 
 
