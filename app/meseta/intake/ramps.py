@@ -188,6 +188,8 @@ def _flank(values: Floats, extreme: float, noise: float) -> _Flank | None:
     with np.errstate(invalid="ignore"):  # a wild sample may be infinite
         away = np.abs(values - extreme)
     full = float(np.nanmax(away))
+    if full == 0.0:  # it never leaves the extreme
+        return None
     finite = values[np.isfinite(values)]
     steps = np.abs(np.diff(finite))
     moves = np.flatnonzero(steps > 0)
