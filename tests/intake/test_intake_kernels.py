@@ -107,3 +107,27 @@ def test_rows_that_end_higher_than_they_begin(scale):
         ]
     np.testing.assert_array_equal(found, expected)
     assert 2 < found.sum() < 75
+
+
+@pytest.mark.parametrize("kind", ["int16", "uint16", "int32", "float32", "float64"])
+@pytest.mark.parametrize(
+    "steps",
+    [(1.0, 0.0, 1.0, 0.0, 1.0, 1.0), (0.01, -3.0, 1e-9, 0.0, 1.0, 7.7e-6), (1e-3, 0.2, 1.0, 0.013, 1e7, 7.7e-6)],
+)
+def test_scaling_in_one_go_gives_the_bits_of_the_steps_of_numpy(kind, steps):
+    from meseta.intake.kernels import scale_into
+
+    rng = np.random.default_rng(3)
+    stored = rng.normal(0, 9000, 5000).astype(kind)
+    if kind.startswith("float"):
+        stored[[3, 50, 700, 900]] = np.nan, np.inf, -0.0, 1e30
+    scale, offset, factor, shift, first, second = steps
+    values = stored.astype(np.float64)
+    values = values if scale == 1.0 else values * scale
+    values = values if offset == 0.0 else values + offset
+    with np.errstate(over="ignore"):
+        expected = ((values * factor - shift) / first / second).astype(np.float32)
+    found = np.empty(5000, np.float32)
+    scale_into(stored, *steps, found)
+    np.testing.assert_array_equal(found, expected)
+    np.testing.assert_array_equal(np.signbit(found), np.signbit(expected))

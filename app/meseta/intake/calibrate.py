@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 from typing import Final
 
 import numpy as np
@@ -122,7 +123,7 @@ class Calibration:
 
     def apply(self, recording: Recording, start: int, stop: int) -> Calibrated:
         """Return the conductance over flat samples ``start`` to ``stop``."""
-        if self._is_plain():
+        if self._is_plain:
             stored = recording.stored(self.channel, start, stop)
             return Calibrated(np.asarray(stored, np.float32), None)
         spread = Spread(recording, start, stop)
@@ -134,16 +135,49 @@ class Calibration:
             return Calibrated(measured.astype(np.float32), quality)
 
     def apply_into(self, recording: Recording, start: int, target: npt.NDArray[np.float32]) -> bool:
-        """Fill ``target`` with recorded conductance from flat sample ``start`` on, where no number changes.
+        """Fill ``target`` with conductance from flat sample ``start`` on, in one go, where no sample is flagged.
 
         Returns
         -------
         bool
-            False where the samples need calibrating (or their reader has no way to fill an array): nothing was done.
+            False where the calibration takes more than numbers that hold for all samples: nothing was done.
         """
-        read_into = getattr(self.channel.samples, "read_into", None)
-        return bool(read_into and self._is_plain() and not self.channel.shared and read_into(start, target))
+        if self._is_plain and not self.channel.shared:
+            read_into = getattr(self.channel.samples, "read_into", None)
+            if read_into and read_into(start, target):
+                return True
+        steps = self._steps
+        if steps is None:
+            return False
+        from meseta.intake.kernels import SCALED_TYPES, scale_into
 
+        stored = recording.stored(self.channel, start, start + len(target))
+        if self._is_plain:
+            np.copyto(target, stored, casting="unsafe")
+            return True
+        if stored.dtype.name not in SCALED_TYPES or not stored.dtype.isnative:
+            return False
+        scale_into(stored, self.channel.scale, self.channel.offset, *steps, target)
+        return True
+
+    @cached_property
+    def _steps(self) -> tuple[float, float, float, float] | None:
+        """Factor, shift and two divisors that turn a channel in its unit into G0; None where it takes more."""
+        if self.has_quality or self.pickup or self.bias_channel is not None or np.any(self.in_series_ohm):
+            return None
+        if self.kind == "conductance":
+            return conductance_factor(self.channel.unit), 0.0, 1.0, 1.0
+        voltage = self.bias_at_junction_volt
+        if self.kind not in ("current", "linear") or not isinstance(voltage, float | int) or voltage == 0:
+            return None
+        if self.kind == "current":
+            return unit_factor(self.channel.unit, "A"), 0.0, 1.0, voltage * G0_SIEMENS
+        shift, gain = self.constant("offset_volt"), self.constant("gain_volt_per_ampere")
+        if not isinstance(shift, float | int) or not isinstance(gain, float | int):
+            return None
+        return unit_factor(self.channel.unit or "V", "V"), shift, gain, voltage * G0_SIEMENS
+
+    @cached_property
     def _is_plain(self) -> bool:
         channel = self.channel
         return (

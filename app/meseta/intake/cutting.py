@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Final
 
 import numpy as np
@@ -10,7 +11,7 @@ from meseta.errors import InputError
 from meseta.intake.calibrate import Calibration
 from meseta.intake.cut_by_ramps import cut_by_ramps
 from meseta.intake.cut_by_threshold import cut_by_threshold
-from meseta.intake.cuts import HOLD, PULL, PUSH, SWEEP, Cut, apart, stated_direction
+from meseta.intake.cuts import HOLD, PULL, PUSH, SWEEP, Cut, apart, between_traces, stated_direction
 from meseta.intake.marks import steps_of, trigger_edges, trigger_level
 from meseta.intake.ramps import find_ramps
 from meseta.intake.recording import RawChannel, Recording
@@ -39,10 +40,14 @@ def cut(recording: Recording, settings: CuttingSettings, calibration: Calibratio
     drive = recording.channel("piezo", "displacement")
     drive = None if drive is None or drive.shared else drive
     mark = _mark(recording, settings, drive)
+    between = between_traces(recording)
+    for piece in np.flatnonzero(between).tolist():
+        span = int(recording.offsets[piece]), int(recording.offsets[piece + 1])
+        result.apart.append(apart(*span, "the index of the file gives it to no trace"))
     if settings.method != "threshold" and drive is None and mark is None:
-        return _uncut(recording)
+        return replace(_uncut(recording), apart=result.apart)
     level = trigger_level(recording, mark, settings) if mark is not None and mark.role == "trigger" else (0.0, 0.0)
-    for piece in range(recording.pieces):
+    for piece in np.flatnonzero(~between).tolist():
         first, last = int(recording.offsets[piece]), int(recording.offsets[piece + 1])
         for start, stop in _parts(recording, settings, mark, level, result, (first, last)):
             _cut_part(recording, settings, calibration, drive, result, (piece, start, stop))
@@ -73,8 +78,11 @@ def _mark(recording: Recording, settings: CuttingSettings, drive: RawChannel | N
 def _uncut(recording: Recording) -> Cut:
     """Return every piece that holds samples as one trace."""
     start, stop = recording.offsets[:-1], recording.offsets[1:]
-    filled = np.flatnonzero(stop > start)
-    directions = [stated_direction(recording, piece) for piece in filled.tolist()]
+    filled = np.flatnonzero((stop > start) & ~between_traces(recording))
+    if "direction" in recording.table:
+        directions = [stated_direction(recording, piece) for piece in filled.tolist()]
+    else:
+        directions = [stated_direction(recording, 0)] * len(filled)
     return Cut(start[filled].tolist(), stop[filled].tolist(), filled.tolist(), directions, [-1] * len(filled))
 
 

@@ -3,14 +3,25 @@
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
-__all__ = ["drive_piece", "drive_steps", "find_crossings", "find_turns", "power_of_ten", "rising_rows"]
+__all__ = [
+    "drive_piece",
+    "drive_steps",
+    "find_crossings",
+    "find_turns",
+    "power_of_ten",
+    "rising_rows",
+    "scale_into",
+]
 
+SCALED_TYPES = ("int16", "uint16", "int32", "float32", "float64")
+"""Types of stored numbers that :func:`scale_into` is compiled for."""
 ALIGNED, NEVER_REACHES, ENDS_ABOVE, NO_SAMPLES = 0, 1, 2, 3
 
 
@@ -240,16 +251,47 @@ def drive_piece(
 
 
 @kernel
+def scale_into(
+    stored: npt.NDArray[Any],
+    scale: float,
+    offset: float,
+    factor: float,
+    shift: float,
+    first_divisor: float,
+    second_divisor: float,
+    target: npt.NDArray[np.float32],
+) -> None:
+    """Fill ``target`` with (((stored scale + offset) factor) - shift) / first_divisor / second_divisor.
+
+    Each step in float64 and in this order, so that the bits are those of the same steps one after the other on arrays.
+    """
+    for index in range(len(stored)):
+        value = np.float64(stored[index])
+        if scale != 1.0:
+            value *= scale
+        if offset != 0.0:
+            value += offset
+        value = value * factor - shift
+        if first_divisor != 1.0:
+            value /= first_divisor
+        if second_divisor != 1.0:
+            value /= second_divisor
+        target[index] = np.float32(value)
+
+
+@kernel
 def _median_size(values: npt.NDArray[np.float32], scratch: npt.NDArray[np.float32]) -> float:
     """Return the lower median of the sizes of the finite values; NaN where there are none."""
     count = 0
     for value in values:
         if math.isfinite(value):
-            scratch[count] = abs(value)
+            size, place = abs(value), count
+            while place > 0 and scratch[place - 1] > size:
+                scratch[place] = scratch[place - 1]
+                place -= 1
+            scratch[place] = size
             count += 1
-    if count == 0:
-        return np.nan
-    return float(np.sort(scratch[:count])[(count - 1) // 2])
+    return float(scratch[(count - 1) // 2]) if count else np.nan
 
 
 @kernel
@@ -286,5 +328,10 @@ def _compile() -> None:
         drive_piece(drive, 0, 0.0, 1.0, 1e-7, np.empty(5, np.float32))
         values = values.copy()
         values.flags.writeable = False
+    for kind in SCALED_TYPES:
+        stored = np.zeros(2, kind)
+        for _ in ("writable", "read-only"):
+            scale_into(stored, 1.0, 0.0, 1.0, 0.0, 1.0, 1.0, np.empty(2, np.float32))
+            stored.flags.writeable = False
     find_turns(np.array([0.0, 1.0, 0.0]), 0, 0.5, np.zeros(6))
     power_of_ten(np.array([0.0, -1.0]))
