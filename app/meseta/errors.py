@@ -19,7 +19,13 @@ __all__ = [
     "StudyError",
     "WorkError",
     "nearest",
+    "printable",
 ]
+
+
+def printable(text: object) -> str:
+    r"""Return a text that any file and terminal takes: bytes of a file name that are no UTF-8 stand as ``\udcff``."""
+    return str(text).encode("utf-8", "backslashreplace").decode()
 
 
 class MesetaError(Exception):
@@ -39,7 +45,7 @@ class MesetaError(Exception):
 
     def __init__(self, what: str, where: str = "", remedy: str = "") -> None:
         super().__init__(what, where, remedy)
-        self.what, self.where, self.remedy = (" ".join(str(part).split()) for part in (what, where, remedy))
+        self.what, self.where, self.remedy = (" ".join(printable(part).split()) for part in (what, where, remedy))
 
     def __str__(self) -> str:
         text = f"{self.where}: {self.what}" if self.where else self.what

@@ -11,7 +11,7 @@ from typing import Final
 
 from natsort import natsorted, ns
 
-from meseta.errors import InputError
+from meseta.errors import InputError, printable
 
 __all__ = ["FoundFile", "expand", "find_files"]
 
@@ -38,7 +38,11 @@ class FoundFile:
 def _matches(given: PathLike) -> list[Path]:
     """Return what one path or pattern means; a path that exists is never read as a pattern."""
     path = Path(given)
-    if path.exists() or not glob.has_magic(str(given)):
+    try:
+        exists = path.exists()
+    except OSError as error:  # a folder on the way may not be looked into, a name is too long
+        raise InputError(f"cannot be reached ({error.strerror})", str(path), "check the path and its rights") from error
+    if exists or not glob.has_magic(str(given)):
         return [path]
     return [Path(found) for found in natsorted(glob.glob(str(given), recursive=True), alg=ns.PATH)]  # noqa: PTH207
 
@@ -110,11 +114,11 @@ def _real(path: Path, folders: dict[Path, str]) -> str:
 
 def _one(match: Path, from_pattern: bool, found: list[FoundFile], passed: list[str]) -> None:
     if from_pattern and _is_aside(match):
-        passed.append(match.name)
+        passed.append(printable(match.name))
     elif match.exists() and not match.is_file():
         raise InputError("is no regular file", str(match), "give files or a folder")
     else:
-        found.append(FoundFile(match, match.name))
+        found.append(FoundFile(match, printable(match.name)))
 
 
 def _in_folder(folder: Path, found: list[FoundFile], passed: list[str]) -> None:
@@ -126,9 +130,9 @@ def _in_folder(folder: Path, found: list[FoundFile], passed: list[str]) -> None:
         if path.name.startswith("."):
             continue
         if _is_aside(path):
-            passed.append(path.name)
+            passed.append(printable(path.name))
         else:
-            found.append(FoundFile(path, path.name))
+            found.append(FoundFile(path, printable(path.name)))
 
 
 def _is_aside(path: Path) -> bool:

@@ -8,7 +8,7 @@ from functools import partial
 from pathlib import Path
 from typing import Final
 
-from meseta.errors import InputError, MesetaError
+from meseta.errors import InputError, MesetaError, printable
 from meseta.intake.opening_layouts import opened_for_layouts
 from meseta.intake.readers.contents import Contents
 from meseta.intake.readers.unpack import peek_bytes, sha256_of
@@ -133,7 +133,7 @@ def recording_of(
     from meseta.intake.context import beside
 
     path, name, size = file
-    recording = _recording(contents, Source(sha256, name or path.name, size, reader, contents.layout))
+    recording = _recording(contents, Source(sha256, name or printable(path.name), size, reader, contents.layout))
     found, doubts = beside(path, recording.source.name, settings, context)
     if not found and not doubts:
         return recording

@@ -26,7 +26,7 @@ from meseta.intake.readers.file_array import FileArray, InFile, InMemory, Number
 from meseta.intake.readers.hdf5 import understood
 from meseta.intake.readers.hdf5_tree import Node, Tree
 from meseta.intake.readers.spool import Spool
-from meseta.intake.readers.unpack import BOMB_BYTE, BOMB_RATIO, packing, unpacked_blocks
+from meseta.intake.readers.unpack import BOMB_BYTE, BOMB_RATIO, files_in, packing, unpacked_blocks
 from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["NumpyReader"]
@@ -83,7 +83,7 @@ def _add_all(tree: Tree, path: Path) -> None:
 def _add_members(tree: Tree, path: Path) -> None:
     """Add the arrays of a zip: as they lie there where they are large and not packed, else put aside or in memory."""
     with zipfile.ZipFile(path) as archive:
-        members = [info for info in archive.infolist() if not info.is_dir()]
+        members = files_in(archive)
         total = sum(info.file_size for info in members)
         for info in members:
             if info.file_size > BOMB_BYTE and info.file_size > BOMB_RATIO * max(info.compress_size, 1):

@@ -19,6 +19,7 @@ from meseta.errors import InputError
 
 __all__ = [
     "PACKED",
+    "files_in",
     "inflated",
     "members_of",
     "peek_bytes",
@@ -57,18 +58,18 @@ def _opened(path: Path, kind: str) -> IO[bytes] | Any:
         return lzma.open(path, "rb")
     if kind == "bzip2":
         return bz2.open(path, "rb")
-    archive = zipfile.ZipFile(path)
-    members = _plain_members(archive)
-    if len(members) != 1:
-        raise InputError(f"holds {len(members)} files", str(path), "unpack it and give the folder")
-    if members[0].flag_bits & 1:
-        raise InputError("is locked with a password", str(path), "unpack it first")
-    return archive.open(members[0])
+    with zipfile.ZipFile(path) as archive:  # the stream of a member holds the file open
+        members = _plain_members(archive)
+        if len(members) != 1:
+            raise InputError(f"holds {len(members)} files", str(path), "unpack it and give the folder")
+        if members[0].flag_bits & 1:
+            raise InputError("is locked with a password", str(path), "unpack it first")
+        return archive.open(members[0])
 
 
 def _plain_members(archive: zipfile.ZipFile) -> list[zipfile.ZipInfo]:
     """Return the files of a zip, without what systems put beside them, in natural order."""
-    found = [info for info in archive.infolist() if not info.is_dir() and not info.filename.startswith("__MACOSX")]
+    found = [info for info in files_in(archive) if not info.filename.startswith("__MACOSX")]
     return natsorted(
         [info for info in found if not info.filename.rpartition("/")[2].startswith(".")],
         key=lambda info: info.filename,
@@ -118,11 +119,16 @@ def unpacked_members(path: Path, names: Sequence[str]) -> Iterator[tuple[str, by
 
 def _first_member(path: Path) -> Any:
     """Return the first file of a zip, which tells what kind of files it holds."""
-    archive = zipfile.ZipFile(path)
-    members = [info for info in archive.infolist() if not info.is_dir()]
-    if not members or members[0].flag_bits & 1:
-        raise InputError("is an empty or locked zip", str(path), "unpack it first")
-    return archive.open(members[0])
+    with zipfile.ZipFile(path) as archive:
+        members = files_in(archive)
+        if not members or members[0].flag_bits & 1:
+            raise InputError("is an empty or locked zip", str(path), "unpack it first")
+        return archive.open(members[0])
+
+
+def files_in(archive: zipfile.ZipFile) -> list[zipfile.ZipInfo]:
+    """Return the members of a zip that are no folders; a damaged one may have no name."""
+    return [info for info in archive.infolist() if info.filename and not info.filename.endswith("/")]
 
 
 def peek_bytes(path: Path, count: int) -> tuple[bytes, bool]:
