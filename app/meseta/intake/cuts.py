@@ -5,10 +5,13 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 from typing import Any, Final
 
-from meseta.intake.recording import Recording
+import numpy as np
+import numpy.typing as npt
+
+from meseta.intake.recording import BETWEEN_TRACES, Recording
 from meseta.traces import PHASE_KINDS
 
-__all__ = ["HOLD", "PULL", "PUSH", "SWEEP", "Cut", "apart", "stated_direction"]
+__all__ = ["HOLD", "PULL", "PUSH", "SWEEP", "Cut", "apart", "between_traces", "stated_direction"]
 
 PULL, HOLD, PUSH, SWEEP = (PHASE_KINDS.index(kind) for kind in ("pull", "hold", "push", "sweep"))
 DIRECTIONS: Final = ("opening", "closing")
@@ -57,6 +60,12 @@ class Cut:
 def apart(start: int, stop: int, why: str) -> dict[str, Any]:
     """Return what there is to say of a range that is no trace."""
     return {"start": start, "stop": stop, "why": why}
+
+
+def between_traces(recording: Recording) -> npt.NDArray[np.bool_]:
+    """(pieces,) bool, whether the file says of a piece that it belongs to no trace."""
+    column = recording.table.get(BETWEEN_TRACES)
+    return np.zeros(recording.pieces, np.bool_) if column is None else np.asarray(column, np.bool_)
 
 
 def stated_direction(recording: Recording, piece: int) -> str:

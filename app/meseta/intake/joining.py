@@ -12,6 +12,7 @@ import numpy.typing as npt
 from meseta.errors import InputError
 from meseta.intake.assembly import Part
 from meseta.intake.metadata import CONSTANTS
+from meseta.intake.recording import BETWEEN_TRACES
 from meseta.intake.rows import end_to_end
 from meseta.recipe import Recipe
 from meseta.traces import Channel, Drive, PhaseTable, Source, TraceSet, trace_table
@@ -164,7 +165,7 @@ def _columns(part: Part, recipe: Recipe) -> dict[str, npt.NDArray[Any]]:
         if name not in CONSTANTS and name not in found and not (isinstance(value, str) and len(value) > LONGEST_TEXT):
             found[_column_name(name)] = np.full(part.traces, value)
     for name, column in recording.table.items():
-        if name not in ("bias_volt", "direction", "time_second") and len(column) == recording.pieces:
+        if name not in ("bias_volt", "direction", "time_second", BETWEEN_TRACES) and len(column) == recording.pieces:
             found[_column_name(name)] = column[pieces]
     for name in ("specimen", "session"):
         given = getattr(recipe.intake, name)

@@ -78,8 +78,8 @@ def _settings_for(layout: KeptLayout, settings: IntakeSettings, recognised: Call
     changes: dict[str, object] = {}
     if layout.layout != "auto":
         changes["layout"] = layout.layout
-    numbered = {name: ChannelRole(role="other") for name in layout.channels if re.fullmatch(r"column \d{1,3}", name)}
-    if numbered:  # of a 2D array without names: its columns are channels
+    numbered = {name: ChannelRole(role="other") for name in layout.channels if name[-1:].isdigit()}
+    if numbered:  # inputs and columns that are told apart by numbers are channels, not traces
         changes["channels"] = numbered | settings.channels
     if layout.binary_type is not None and not recognised():
         changes["reader"] = layout.reader or "binary"

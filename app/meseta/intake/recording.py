@@ -18,7 +18,10 @@ import numpy.typing as npt
 
 from meseta.traces import ArraySamples, Samples, Source
 
-__all__ = ["RawChannel", "Recording"]
+__all__ = ["BETWEEN_TRACES", "RawChannel", "Recording"]
+
+BETWEEN_TRACES = "between_traces"
+"""Column of a recording's table, bool: the file says of a piece that it belongs to no trace."""
 
 Plain = str | int | float | bool
 

@@ -71,7 +71,7 @@ def _said_of_each(table: Table, form: TextForm, path: Path) -> dict[str, npt.NDA
 
 def _wide_sets(names: Sequence[str], settings: IntakeSettings) -> dict[str, list[int]] | None:
     """Return stem -> columns where traces stand side by side; None where columns are channels of one trace."""
-    if settings.layout in ("one_trace_a_file", "long"):
+    if settings.layout in ("one_trace_a_file", "long") or _are_told_apart(names, settings):
         return None
     if settings.layout in ("wide", "columns") and all(name.startswith("column ") for name in names):
         return {names[0]: [0], "column": list(range(1, len(names)))} if len(names) > 1 else None
@@ -87,6 +87,12 @@ def _wide_sets(names: Sequence[str], settings: IntakeSettings) -> dict[str, list
     if any(len(places) not in (1, largest) for places in sets.values()):
         return None
     return sets
+
+
+def _are_told_apart(names: Sequence[str], settings: IntakeSettings) -> bool:
+    """Return whether the recipe says of several numbered columns ("AI0", "AI1") each what it is."""
+    told = [stem_of(name) for name in names if name in settings.channels and name[-1:].isdigit()]
+    return settings.layout == "auto" and len(told) > len(set(told))
 
 
 def _wide(
