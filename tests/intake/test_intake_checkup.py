@@ -64,14 +64,25 @@ def test_right_gain_is_left_alone_and_a_wrong_sign_is_named(tmp_path):
     assert not findings(path, gain_volt_per_ampere=-1e4, bias_volt=0.1)["sign"].fine
 
 
-@pytest.mark.parametrize(("step", "fine"), [(1e-6, True), (2e-3, False)])
-def test_converter_step_against_the_noise_of_the_floor(tmp_path, step, fine):
-    """Values are rounded to the step; a step above the scatter of the smallest third of them is named."""
+@pytest.mark.parametrize(
+    ("step", "fine", "said"),
+    [
+        (1e-6, True, "against a noise of"),
+        (6e-4, True, "against a noise of"),
+        (1.5e-3, True, "the floor lies within one converter step"),
+        (5e-3, True, "the floor lies within one converter step"),
+        (0.1, False, "too coarse to tell contacts apart"),
+    ],
+)
+def test_converter_step_against_the_noise_of_the_floor(tmp_path, step, fine, said):
+    """Values are rounded to the step; one far above the scatter of 0.5 mG0 hides it, 0.1 G0 is a mistake."""
     rng = np.random.default_rng(3)
     values = contacts()
     values[:, 300:] = rng.normal(0, 5e-4, (TRACES, 300))
     found = findings(record(tmp_path, conductance=(np.round(values / step) * step, {"unit": "G0"})))["converter step"]
     assert found.fine == fine
+    assert said in found.text
+    assert "noise of 0 G0" not in found.text
 
 
 @pytest.mark.parametrize(("share_of_bound", "fine"), [(30.0, True), (1 / 30, False)])

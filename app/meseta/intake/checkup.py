@@ -13,7 +13,9 @@ from typing import Final
 from meseta.intake import contact_checks as contacts
 from meseta.intake import instrument_checks as instrument
 from meseta.intake.assembly import Part
+from meseta.intake.atom_check import single_atom
 from meseta.intake.findings import Finding, look_at
+from meseta.intake.tunnelling_check import tunnelling_slope
 from meseta.recipe.alignment import AlignmentSettings
 
 __all__ = ["Finding", "check_up"]
@@ -35,16 +37,16 @@ def check_up(part: Part, alignment: AlignmentSettings) -> tuple[tuple[Finding, .
         return (), None
     zero, finding = contacts.zero_level(look, alignment.zero_at_g0)
     found = [
-        instrument.sign(look.values),
+        contacts.sign(look),
         contacts.direction(look),
         instrument.full_scale(part),
-        instrument.converter_step(part),
+        instrument.converter_step(look),
         instrument.floor_noise(look),
         instrument.mains(look),
         *instrument.response(look),
         instrument.gain_ratio(part),
-        contacts.single_atom(look),
-        contacts.tunnelling_slope(look),
+        single_atom(look),
+        tunnelling_slope(look),
         contacts.both_ways(part),
         finding,
     ]

@@ -74,9 +74,9 @@ def _amplified(found: _Finder, recording: Recording, channel: RawChannel) -> Cal
     made = found.made(kind, channel, (*wanted, "bias_volt"), second)
     if second is None:
         return made
-    made = replace(
-        made, overlap=overlap_of(recording, made), is_scaled_by_overlap=found.settings.gain_ratio_from_overlap
-    )
+    overlap = overlap_of(recording, made)
+    is_scaled = found.settings.gain_ratio_from_overlap and (overlap is None or overlap.ratio > 0)
+    made = replace(made, overlap=overlap, is_scaled_by_overlap=is_scaled)
     return replace(made, doubts=(*made.doubts, *overlap_doubts(made)))
 
 

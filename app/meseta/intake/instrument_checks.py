@@ -1,8 +1,7 @@
-"""Checks of the instrument: sign, full scale, converter step, floor against thermal noise, gains, mains, response."""
+"""Checks of the instrument: full scale, converter step, floor against thermal noise, gains, mains, response."""
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from functools import partial
 from typing import Final
 
@@ -10,66 +9,84 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.intake.assembly import Part
-from meseta.intake.findings import Finding, Look, floor_of
+from meseta.intake.findings import STEPPED_SHARE, Finding, Look, step_near
 from meseta.intake.mains import Pickup, find_pickup
 from meseta.intake.response import rise_times, slew_limit
 from meseta.intake.units import unit_factor
 from meseta.quantities import BOLTZMANN_JOULE_PER_KELVIN, G0_SIEMENS, johnson_current_rms
 from meseta.traces import Quality
 
-__all__ = ["converter_step", "floor_noise", "full_scale", "gain_ratio", "mains", "response", "sign"]
+__all__ = ["converter_step", "floor_noise", "full_scale", "gain_ratio", "mains", "response"]
 
 Floats = npt.NDArray[np.float64]
 ROOM_KELVIN: Final = 300.0
 PILE_UP: Final = 0.002
 FACTORS: Final = (2.0, 10.0, 100.0)
 PICKUP_WINDOWS: Final = 48
+SLOWEST_SHOWN: Final = 5.0
+"""Where the steepest falls take that many times longer than elsewhere the contact is slow, not the amplifier."""
+RATIO_ROOM: Final = 0.05
 LEAST_LEVELS: Final = 10
-NEAR_ZERO_LEVELS: Final = 41
-STEPPED_SHARE: Final = 0.2
-"""Readings come in steps where fewer different values than this share of the samples occur."""
-
-
-def sign(values: Sequence[Floats]) -> Finding | None:
-    """Find a recording that is upside down: closed contacts must not read negative."""
-    firsts = [one[: max(len(one) // 20, 3)] for one in values]
-    begins = np.array([np.nanmedian(one) for one in firsts if np.isfinite(one).any()])
-    if len(begins) == 0:
-        return None
-    negative = float(np.mean(begins < 0))
-    if negative > 0.5:
-        return Finding("sign", False, f"{negative:.0%} of the openings begin negative: gain or bias has the wrong sign")
-    return Finding("sign", True, "openings begin positive")
+COARSEST_G0: Final = 0.03
 
 
 def gain_ratio(part: Part) -> Finding | None:
     """Compare the two amplifiers of a two-gain recording where both are in range."""
-    overlap = part.calibration.overlap
+    second, overlap = part.calibration.second, part.calibration.overlap
+    if second is None:
+        return None
+    first_gain, second_gain = (
+        float(np.median(np.abs(part.calibration.constant(name))))
+        for name in ("gain_volt_per_ampere", "high_gain_volt_per_ampere")
+    )
+    if second_gain < first_gain:
+        text = f"the second amplifier, of {second_gain:.3g} V/A, is said to have less gain than the first, of "
+        return Finding("gain ratio", False, f"{text}{first_gain:.3g} V/A: are the gains, or the channels, swapped?")
     if overlap is None:
         return None
     text = f"the second amplifier reads {overlap.ratio:.4g} +- {overlap.ratio_error:.2g} times the first in the overlap"
+    if overlap.ratio < 0:
+        return Finding("gain ratio", False, f"{text}: one of the two gains has the wrong sign")
     if part.calibration.is_scaled_by_overlap:
         return Finding("gain ratio", True, f"{text}, and is scaled by it")
-    return Finding("gain ratio", overlap.fits, text if overlap.fits else f"{text}: the two gains do not fit each other")
+    if overlap.fits:
+        return Finding("gain ratio", True, text)
+    text += ": the two gains do not fit each other"
+    for factor in FACTORS:
+        for made, side in ((overlap.ratio / factor, "small"), (overlap.ratio * factor, "large")):
+            if abs(made - 1.0) < RATIO_ROOM:
+                other = "large" if side == "small" else "small"
+                text += f"; the second is stated a factor {factor:g} too {side}, or the first too {other}"
+                return Finding("gain ratio", False, text)
+    return Finding("gain ratio", False, text)
 
 
-def converter_step(part: Part) -> Finding | None:
-    """Compare the converter's step with the noise at the floor."""
-    if part.calibration.kind not in ("linear", "conductance", "current"):
+def converter_step(look: Look) -> Finding | None:
+    """Compare the converter's step with the noise at the floor.
+
+    A floor within one step is the converter's limit and no mistake; a step that swallows single atoms is one.
+    """
+    part, floor = look.part, look.floor
+    if part.calibration.kind not in ("linear", "conductance", "current") or part.calibration.second is not None:
         return None
-    values = part.conductance[: min(len(part.conductance), 500_000)].astype(np.float64)
-    values = values[np.isfinite(values)]
-    levels = np.unique(values)
-    if len(levels) < LEAST_LEVELS:
+    values = look.pooled[np.isfinite(look.pooled)]
+    if len(np.unique(values)) < LEAST_LEVELS:
         return None
-    near_zero = np.sort(levels[np.argsort(np.abs(levels))[:NEAR_ZERO_LEVELS]])
-    small = values[np.abs(values) <= np.quantile(np.abs(values), 0.3)]
-    step, noise = float(np.median(np.diff(near_zero))), floor_of(values)[1]
-    noise = noise if np.isfinite(noise) else float(np.std(small))
-    is_stepped = len(np.unique(small)) < STEPPED_SHARE * len(small)
-    if is_stepped and step > noise:
-        return Finding("converter step", False, f"one step is {step:.2g} G0, coarser than the noise of {noise:.2g} G0")
-    return Finding("converter step", True, f"one step of at most {step:.2g} G0 against a noise of {noise:.2g} G0")
+    step = step_near(values, floor.level_g0 if floor.is_seen else 0.0)
+    lowest = values[np.abs(values) <= np.quantile(np.abs(values), 0.3)]
+    if len(np.unique(lowest)) >= STEPPED_SHARE * len(lowest):
+        noise = f" against a noise of {floor.sigma_g0:.2g} G0" if floor.is_seen else ""
+        return Finding("converter step", True, f"one step of at most {step:.2g} G0{noise}")
+    text = f"one step is {step:.2g} G0"
+    if not floor.is_seen:
+        text += ", and no floor is seen to compare it with"
+    elif floor.sigma_g0 < step:
+        text += ": the floor lies within one converter step, readings say nothing finer than that"
+    else:
+        text += f" against a noise of {floor.sigma_g0:.2g} G0"
+    if step > COARSEST_G0:
+        return Finding("converter step", False, f"{text}: too coarse to tell contacts apart, is more gain possible?")
+    return Finding("converter step", True, text)
 
 
 def full_scale(part: Part) -> Finding | None:
@@ -82,6 +99,8 @@ def full_scale(part: Part) -> Finding | None:
     if len(volts) == 0:
         return None
     top = float(volts.max())
+    if top == 0.0:
+        return Finding("full scale", False, "every reading is 0 V: was the amplifier recorded?")
     piled = float(np.mean(volts >= top * (1 - 1e-6)))
     near = float(np.mean((volts < top * (1 - 1e-6)) & (volts >= 0.98 * top)))
     stated = part.calibration.constants.get("full_scale_volt")
@@ -117,9 +136,9 @@ def floor_noise(look: Look) -> Finding | None:
     part = look.part
     if not np.isfinite(part.interval_second) or part.interval_second <= 0:
         return None
-    centre, sigma = floor_of(look.pooled)
+    centre, sigma = look.floor.level_g0, look.floor.sigma_g0
     bias = _bias(part)
-    if not bias or not sigma > 0.0:
+    if not bias or not sigma > 0.0 or look.floor.is_within_a_step:
         return None
     bandwidth = 0.5 / part.interval_second
     level = max(abs(centre), sigma)
@@ -184,11 +203,12 @@ def _pickup_text(found: Pickup) -> str:
 def response(look: Look) -> list[Finding]:
     """Report rise times against current, and a slew limit that falls are seen to run at."""
     part, found = look.part, []
-    centre, sigma = floor_of(look.pooled)
-    lowest = max(5 * sigma + 2 * abs(centre), 1e-8) if np.isfinite(sigma) else 1e-4
+    floor = look.floor
+    lowest = max(floor.reach(5.0, 5.0) + abs(floor.level_g0), 1e-8) if floor.is_seen else 1e-4
     times = rise_times(look.values, lowest_g0=lowest) if lowest < 0.1 else None
     if times is not None and len(times.level_g0):
-        ends = sorted({0, len(times.level_g0) - 1})
+        shown = np.flatnonzero(times.rise_samples <= SLOWEST_SHOWN * max(float(times.rise_samples.min()), 1.0))
+        ends = sorted({int(shown[0]), int(shown[-1])})
         said = [f"{times.rise_samples[at]:.2g} samples near {times.level_g0[at]:.1g} G0" for at in ends]
         found.append(Finding("rise time", True, f"the steepest falls take at most {' and '.join(said)}"))
     calibration = part.calibration

@@ -128,7 +128,9 @@ def slew_limit(volts: Sequence[Floats]) -> float | None:
     for one in usable:
         steps = np.abs(np.diff(one))
         steepest = float(np.sort(steps)[-2])  # a single glitch may be faster
-        if steepest >= LEAST_STEP_SHARE * span and _longest_run(steps >= (1 - SAME_RATE) * steepest) >= LEAST_RUN:
+        if steepest < LEAST_STEP_SHARE * span or steepest == 0.0:
+            continue
+        if _longest_run(steps >= (1 - SAME_RATE) * steepest) >= LEAST_RUN:
             limited.append(steepest)
     if len(limited) < max(LIMITED_SHARE * len(usable), 3):
         return None

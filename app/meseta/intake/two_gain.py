@@ -77,7 +77,7 @@ def _fitted(groups: list[tuple[Floats, Floats]]) -> Overlap | None:
             break
         low, high, group = low[keep], high[keep], group[keep]
     slope, level = _line(high, low)
-    if slope <= 0:
+    if slope == 0:
         return None
     error = sigma / float(np.sqrt(np.sum((high - high.mean()) ** 2)))
     there = np.unique(group)
@@ -114,7 +114,9 @@ def overlap_doubts(calibration: Calibration) -> tuple[str, ...]:
         f"in the overlap the second amplifier reads {found.ratio:.4g} +- {found.ratio_error:.2g} times the first, "
         f"offset {found.offset_ampere:.3g} A ({found.samples} samples)"
     )
-    if calibration.is_scaled_by_overlap:
+    if found.ratio < 0:
+        text += ": one of the two gains has the wrong sign"
+    elif calibration.is_scaled_by_overlap:
         text += ": it is scaled by this"
     elif not found.fits:
         text += ": the two gains do not fit each other (calibration.gain_ratio_from_overlap)"

@@ -1,0 +1,149 @@
+"""Check of the conductance scale: where contacts pile up against the conductance of single atoms."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any, Final
+
+import numpy as np
+import numpy.typing as npt
+
+from meseta.intake.assembly import Part
+from meseta.intake.findings import Finding, Look
+from meseta.quantities import G0_SIEMENS
+
+__all__ = ["peak_positions", "single_atom"]
+
+Floats = npt.NDArray[np.float64]
+LEAST_SAMPLES: Final = 200
+PEAK_SEARCH: Final = (-2.6, 5.0)
+BIN_DECADES: Final = 0.02
+LEAST_STRENGTH: Final = 5.0
+APART_BINS: Final = 7
+NEAR_DECADES: Final = 0.03
+FLOOR_SIGMAS: Final = 8.0
+FACTORS: Final = {0.01: "100", 0.1: "10", 0.5: "2", 2.0: "2", 10.0: "10", 100.0: "100"}
+ROOM_DECADES: Final = 0.045
+"""A factor is named where the peak, divided by it, lies within a tenth of what is expected."""
+MONOVALENT_G0: Final = (0.83, 1.2)
+"""Nearly 1 G0 for Na, Cu, Au, Ag (Krans et al., PRB 48, 14721; Gai et al., PRB 53, 1042), with room."""
+ANY_METAL_G0: Final = (0.7, 2.6)
+"""Where single-atom peaks of metals lie, with room: 1 to 2.5 G0 for Pt (Nielsen et al., PRB 67, 245411)."""
+OF_METAL_G0: Final = {
+    **dict.fromkeys(("au", "gold", "ag", "silver", "cu", "copper", "na", "sodium", "k", "potassium"), MONOVALENT_G0),
+    **dict.fromkeys(("pt", "platinum"), (1.2, 2.1)),
+    **dict.fromkeys(("pd", "palladium", "ni", "nickel"), (1.2, 2.1)),
+    **dict.fromkeys(("al", "aluminium", "aluminum"), (0.65, 1.35)),
+}
+"""Pt 1.5 and 1.8 G0 (Nielsen et al.); Ni, Pd, Pt of the order of 1.6 (Bakker et al., PRB 65, 235416); Al about 1, less
+well defined than Cu (Krans et al.); each with room."""
+ODD_G0: Final = (0.2, 4.0)
+"""Between these a peak that belongs to no single atom is odd; further away it is a molecule, or a thick contact."""
+FACTORS_END_G0: Final = 300.0
+"""Thicker contacts than this are not drawn out to single atoms in one trace."""
+BEGIN_SAMPLES: Final = 20
+STILL: Final = 1e-3
+
+
+def peak_positions(pooled: Floats, below_g0: float = np.inf, above_g0: float = 0.0) -> list[tuple[float, float]]:
+    """Return (G0, how many standard deviations it stands out) of where contacts pile up, the strongest first.
+
+    Looked for as rises above a smooth histogram in log G, in which each decade step counts alike; what lies at or above
+    ``below_g0`` is the closed contact that traces begin with, what lies at or below ``above_g0`` may be floor.
+    """
+    logs = np.log10(pooled[(pooled > max(above_g0, 0.0)) & (pooled < below_g0)])
+    edges = np.arange(PEAK_SEARCH[0], PEAK_SEARCH[1] + BIN_DECADES, BIN_DECADES)
+    counts = np.histogram(logs, edges)[0].astype(np.float64)
+    if counts.sum() < LEAST_SAMPLES:
+        return []
+    narrow = np.convolve(counts, np.ones(3) / 3, "same")
+    wide = np.convolve(counts, np.ones(31) / 31, "same")
+    excess = (narrow - wide) / np.sqrt(wide + 1.0)
+    found: list[tuple[float, float]] = []
+    while True:
+        place = int(np.argmax(excess))
+        if excess[place] < LEAST_STRENGTH:
+            return found
+        if narrow[place] >= 1.6 * wide[place]:
+            middle = 0.5 * float(edges[place] + edges[place + 1])
+            near = logs[np.abs(logs - middle) < NEAR_DECADES]
+            found.append((float(10 ** np.median(near)) if len(near) else 10**middle, float(excess[place])))
+        excess[max(place - APART_BINS, 0) : place + APART_BINS + 1] = 0.0
+
+
+def single_atom(look: Look) -> Finding | None:
+    """Compare the strongest metallic peak with the conductance of single atoms.
+
+    Of the metal where the recording names its electrodes, else of monovalent ones; as metals differ, only factors of 2,
+    10 and 100 are named then, as questions.
+    """
+    peaks = peak_positions(look.pooled, _closed(look), look.floor.reach(FLOOR_SIGMAS, FLOOR_SIGMAS))
+    if not peaks:
+        return None
+    position, strength = peaks[0]
+    metal, low, high = _expected(look.part.recording.metadata)
+    text = f"contacts pile up at {position:.3g} G0"
+    if metal and low <= position <= high:
+        return Finding("single-atom peak", True, f"{text}, as single atoms of {metal} do")
+    for factor, word in FACTORS.items():
+        if _is_off(position, factor, (low, high) if metal else (1.0, 1.0)):
+            near = [at for at, height in peaks if low <= at <= high and height > 0.3 * strength]
+            if near and word != "2":  # a molecule or a cluster beside single atoms where they should be
+                return Finding("single-atom peak", True, f"contacts pile up at {near[0]:.3g} G0")
+            side = "high" if factor > 1 else "low"
+            text += f", a factor {word} too {side} for single atoms: is gain, bias or a divider off by {word}?"
+            return Finding("single-atom peak", False, text + _decade_question(look.part, position))
+    if not metal and low <= position <= high:
+        return Finding("single-atom peak", True, text)
+    if not metal and ANY_METAL_G0[0] <= position <= ANY_METAL_G0[1]:
+        return Finding("single-atom peak", True, f"{text}; for a monovalent metal 1 is expected")
+    if ODD_G0[0] <= position <= ODD_G0[1] or position > FACTORS_END_G0:
+        expected = f"for {metal} {low:g} to {high:g}" if metal else "for a monovalent metal 1"
+        text += f"; {expected} is expected" + ("" if metal else ", for no metal this")
+        return Finding("single-atom peak", False, text + _decade_question(look.part, position))
+    return None
+
+
+def _is_off(position: float, factor: float, expected: tuple[float, float]) -> bool:
+    """Return whether a position divided by a factor is one that is expected."""
+    room = 10**ROOM_DECADES
+    return expected[0] / room <= position / factor <= expected[1] * room
+
+
+def _expected(metadata: Mapping[str, Any]) -> tuple[str, float, float]:
+    """Return (metal, lowest, highest) of single atoms; no name where the recording does not say, or it is not known."""
+    named = str(metadata.get("electrode", metadata.get("metal", ""))).strip()
+    if named.lower() in OF_METAL_G0:
+        return named, *OF_METAL_G0[named.lower()]
+    return "", *MONOVALENT_G0
+
+
+def _closed(look: Look) -> float:
+    """Return the conductance from which on a reading is the closed contact; infinite where that is saturated."""
+    begins = [one[:BEGIN_SAMPLES] for one in look.values]
+    middles = np.array([np.median(one) if np.isfinite(one).all() and len(one) else np.inf for one in begins])
+    closed = float(np.median(middles)) if len(middles) else np.inf
+    if not (np.isfinite(closed) and closed > 0):
+        return float("inf")
+    spans = [np.ptp(one) for one, middle in zip(begins, middles, strict=True) if np.isfinite(middle)]
+    return (1 - STILL if float(np.median(spans)) < STILL * closed else 0.8) * closed
+
+
+def _decade_question(part: Part, position: float) -> str:
+    """Return which volts per decade would bring the peak of a logarithmic amplifier to 1 G0."""
+    if part.calibration.kind != "logarithmic":
+        return ""
+    scale, reference, bias = (
+        float(np.median(value))
+        for value in (
+            part.calibration.constant("volt_per_decade"),
+            part.calibration.constant("reference_ampere"),
+            part.calibration.bias_at_junction_volt,
+        )
+    )
+    one_atom = abs(bias) * G0_SIEMENS / reference
+    if not bias or one_atom <= 0 or abs(np.log10(one_atom)) < 0.5:
+        return ""
+    volts = scale * np.log10(position * one_atom)
+    made = volts / np.log10(one_atom)
+    return f" Or calibration.volt_per_decade, {made:.3g} V would do it instead of {scale:.3g} V"
