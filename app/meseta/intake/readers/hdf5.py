@@ -14,15 +14,10 @@ from natsort import natsorted
 from meseta.errors import InputError
 from meseta.intake.metadata import Plain, canonical, canonical_entry, plain_value
 from meseta.intake.readers.contents import Contents, channel_constants, columns_of, make_channel
-from meseta.intake.readers.hdf5_layout import (
-    Leaf,
-    Sheet,
-    joined_leaves,
-    joined_sheets,
-    leaves_of,
-    numbered_sheet,
-    sheet_of,
-)
+from meseta.intake.readers.hdf5_layout import sheet_of
+from meseta.intake.readers.hdf5_leaves import Leaf, leaves_of
+from meseta.intake.readers.hdf5_numbered import numbered_sheet
+from meseta.intake.readers.hdf5_sheets import Sheet, joined_leaves, joined_sheets
 from meseta.intake.readers.hdf5_tree import Tree, open_file, walk
 from meseta.intake.recording import RawChannel
 from meseta.intake.roles import SIGNAL_ROLES
@@ -79,7 +74,7 @@ def understood(tree: Tree, path: Path, settings: IntakeSettings) -> Contents:
     if sheet is None or not sheet.channels:
         reason = f" ({tree.refused[0]})" if tree.refused else ""
         raise InputError(f"holds no samples that can be read{reason}", str(path), "see `meseta peek` on another file")
-    doubts = [*tree.refused, *sheet.doubts, *_left_out(by_parent, parents)]
+    doubts = [*tree.refused, *sheet.doubts, *_left_out(by_parent, parents, sheet.layout)]
     channels, constants, channel_doubts = _channels(sheet, path)
     metadata, more = _metadata(tree, parents, path)
     rows = _piece_rows(tree, parents, sheet, path)
@@ -175,9 +170,13 @@ def _numbered(numbered: Mapping[str, Sheet], by_parent: Mapping[str, Sequence[Le
     return joined_sheets([numbered[p] for p in alike], "one dataset a trace, several groups"), alike
 
 
-def _left_out(by_parent: Mapping[str, Sequence[Leaf]], parents: Sequence[str]) -> list[str]:
+def _left_out(by_parent: Mapping[str, Sequence[Leaf]], parents: Sequence[str], layout: str) -> list[str]:
+    """Return what no channel is made of, but for what the layout names as what traces are cut by."""
     names = [
-        f"{leaf.parent}/{leaf.name}" for parent, leaves in by_parent.items() if parent not in parents for leaf in leaves
+        f"{leaf.parent}/{leaf.name}"
+        for parent, leaves in by_parent.items()
+        for leaf in leaves
+        if parent not in parents and f"'{leaf.name}'" not in layout
     ]
     if not names:
         return []
