@@ -217,7 +217,8 @@ def run_analysis(
         work.tell("writing the result", 1, 4, "parts")
         study.write_study(partial / "study.h5", analysis, work.quiet(), files, "study made by a run")
         work.tell("writing the result", 2, 4, "parts")
-        figure = figures.result_figure(histogram, displacement, fit, analysis.recipe.figure, title)
+        frame = analysis.recipe.displacement_histogram
+        figure = figures.result_figure(histogram, displacement, fit, analysis.recipe.figure, title, frame)
         for suffix in ("pdf", "svg", "png"):
             figures.save_figure(figure, partial / f"figure.{suffix}")
         work.tell("writing the result", 3, 4, "parts")

@@ -7,7 +7,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from figure_fakes import make_displacement, make_fit, make_histogram, make_table
+from figure_fakes import make_displacement, make_fit, make_grid, make_histogram, make_table
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -15,6 +15,7 @@ from meseta import figures, typeset
 from meseta.figures.labels import spread
 from meseta.histograms import Grid
 from meseta.recipe.figure import FigureSettings
+from meseta.recipe.histogram import DisplacementHistogramSettings
 
 SETTINGS = FigureSettings()
 
@@ -224,3 +225,46 @@ def test_title_is_drawn_and_no_text_leaves_the_page(molecule):
             assert box.x1 <= page.x1 + 2, text
             assert box.y0 >= page.y0 - 2, text
             assert box.y1 <= page.y1 + 2, text
+
+
+def crossing(one, other):
+    """Return whether two broken lines cross (sides of points, as in any textbook of geometry)."""
+
+    def side(a, b, c):
+        return (b[0] - a[0]) * (c[1] - a[1]) - (b[1] - a[1]) * (c[0] - a[0])
+
+    return any(
+        side(a, b, c) * side(a, b, d) < 0 and side(c, d, a) * side(c, d, b) < 0
+        for a, b in itertools.pairwise(one)
+        for c, d in itertools.pairwise(other)
+    )
+
+
+def test_hairlines_of_crowded_labels_do_not_cross():
+    rng = np.random.default_rng(5)
+    grid = make_grid("logarithmic", -6.5, 0.5, 0.02)
+    positions = np.geomspace(2e-4, 8e-4, 7)
+    places, sigmas = np.log10(positions), np.full(7, 0.03)
+    areas = np.array([0.01, 0.2, 0.015, 0.15, 0.02, 0.1, 0.01])  # low and high ones in turn: straight lines would cross
+    u = (grid.u_edges[1:] + grid.u_edges[:-1]) / 2
+    density = sum(a * np.exp(-0.5 * ((u - p) / s) ** 2) for a, p, s in zip(areas, places, sigmas, strict=True)) * 10
+    histogram = make_histogram(grid, density, 900, "nm / trace / decade", rng)
+    fit = make_fit(histogram, positions, sigmas, areas, -4.2, -2.8, lambda at: np.full(len(at), 0.01))
+    plane = make_displacement(grid, -0.5, 1.5, 60, lambda z, v: 2 * np.exp(-((v + 3.5) ** 2)) + 0 * z, rng)
+    side = panels(figures.result_figure(histogram, plane, fit, SETTINGS))[1]
+    lines = [line for line in side.lines if (line.get_gid() or "").startswith("peak-leader")]
+    assert len(lines) >= 3
+    paths = [line.get_transform().transform(np.column_stack(line.get_data())) for line in lines]
+    assert not any(crossing(one, other) for one, other in itertools.combinations(paths, 2))
+
+
+def test_another_event_of_alignment_is_said(molecule):
+    frame = DisplacementHistogramSettings(aligned_at="plateau_end", event_low_g0=1e-5, event_high_g0=1e-2)
+    shown = " ".join(words(figures.result_figure(*molecule, SETTINGS, "", frame))).replace("\n", " ")
+    assert "aligned at the end of the last plateau between 1.0 × 10⁻⁵ and" in typeset_spaces(shown)
+    plain = words(figures.result_figure(*molecule, SETTINGS, "", DisplacementHistogramSettings()))
+    assert not any("last plateau" in text for text in plain)
+
+
+def typeset_spaces(text):
+    return text.replace("\u202f", " ").replace("\u2009", " ").replace("\u00a0", " ")

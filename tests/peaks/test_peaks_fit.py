@@ -301,3 +301,12 @@ def test_the_result_does_not_change_from_run_to_run():
     )
     for name, column in once.columns().items():
         np.testing.assert_array_equal(column, again[name])
+
+
+def test_a_peak_asked_for_where_there_are_too_few_bins_is_told():
+    """Of two peaks asked for, the one at the end of the axis has no bins around it: a note says so."""
+    counts = drawn(normal(0.96, 0.08, 3e4) + 30)
+    asked = [{"position_g0": 0.96, "width": 0.08}, {"position_g0": float(EDGES[-1]) * 1.5, "width": 0.01}]
+    found = fit(counts, peaks=asked)
+    assert len(found.table) == 1
+    assert any("asked for near" in note and "not fitted" in note for note in found.notes)

@@ -43,8 +43,12 @@ def draw_displacement(
     histogram: DisplacementHistogram,
     scale: ConductanceScale,
     settings: FigureSettings,
+    counted_from: str = "",
 ) -> None:
-    """Draw the 2D histogram on ``axes`` and its colour bar, with unit and normalisation, on ``bar``."""
+    """Draw the 2D histogram on ``axes`` and its colour bar, with unit and normalisation, on ``bar``.
+
+    ``counted_from`` says what the displacement is counted from where that is not the zero of displacement.
+    """
     edges = histogram.drive_edges
     scale.decorate(axes.yaxis)
     axes.set_ylabel(scale.label)
@@ -72,6 +76,8 @@ def draw_displacement(
     if edges[0] < 0 < edges[-1]:
         axes.axvline(0, color=colours.LIGHT.hairline, linewidth=0.4, zorder=0.6)
     count = f"{typeset.integer(histogram.traces)} aligned traces"
+    if counted_from:
+        count = f"{typeset.integer(histogram.traces)} traces, aligned at\n{counted_from}"
     axes.text(0.985, 0.98, count, transform=axes.transAxes, ha="right", va="top", color=colours.LIGHT.quiet)
     _bar(Colorbar(bar, image, orientation="horizontal"), norm, histogram.density_unit, settings.colour_scale)
 

@@ -16,6 +16,8 @@ from meseta.peaks import PeakTable
 __all__ = ["PeakLabels", "peak_text", "spread"]
 
 _GAP_POINT: Final = 2.0
+_SLANT: Final = 0.03
+"""Least share of the width in which a hairline slants: in less there is no room for one."""
 
 
 def peak_text(table: PeakTable, row: int) -> str:
@@ -137,12 +139,31 @@ class PeakLabels:
         return float(ends[0]), float(ends[1])
 
     def leaders(self, axes: Axes, heights: Sequence[float]) -> None:
-        """Draw a hairline from each peak (at the given heights of the histogram) to its label."""
-        for number, (text, place, height) in enumerate(zip(self.texts, self.peak_u, heights, strict=True)):
-            edge = axes.transData.inverted().transform(axes.transAxes.transform((self.left_edge(number), 0)))[0]
-            if edge > height:
-                line = [height, edge], [place, text.get_position()[1]]
-                axes.plot(*line, color=text.get_color(), linewidth=0.4, zorder=4, scalex=False, scaley=False)
+        """Draw a hairline from each peak (at the given heights of the histogram) to its label; no two cross.
+
+        Each runs level to where the tallest peak that has one ends, slants to where the first label begins, and runs
+        level again: peaks and labels stand in the same order, so the slanted parts cannot cross.
+        """
+        to_share = (axes.transData + axes.transAxes.inverted()).transform
+        starts = [float(to_share((height, place))[0]) for place, height in zip(self.peak_u, heights, strict=True)]
+        edges = [self.left_edge(number) for number in range(len(self.texts))]
+        end = min((edge for edge, start in zip(edges, starts, strict=True) if edge > start), default=0.0)
+        led = [number for number in range(len(self.texts)) if starts[number] < end - _SLANT]
+        bend = max((starts[number] for number in led), default=0.0)
+        for number in led:
+            text, place = self.texts[number], self.peak_u[number]
+            there = float(text.get_position()[1])
+            axes.plot(
+                [starts[number], bend, end, edges[number]],
+                [place, place, there, there],
+                color=text.get_color(),
+                linewidth=0.4,
+                zorder=4,
+                gid=f"peak-leader-{number}",
+                transform=axes.get_yaxis_transform(),
+                scalex=False,
+                scaley=False,
+            )
 
 
 def _short(text: str, most: int = 34) -> str:

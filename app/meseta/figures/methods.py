@@ -234,10 +234,18 @@ def _histograms(stated: Stated, analysis: Analysis, work: Work) -> list[str]:
         f"({histogram.density_unit}). Bins reached by fewer than {stated('histogram.weak_traces')} are marked weak.",
         f"The 2D conductance-displacement histogram has {stated('displacement_histogram.bins')} columns from "
         f"{stated('displacement_histogram.low_nm')} to {stated('displacement_histogram.high_nm')} and "
-        f"{stated('displacement_histogram.bins_per_decade')} bins a decade.",
+        f"{stated('displacement_histogram.bins_per_decade')} bins a decade{_event(stated)}.",
         f"The 2D correlation histogram has {stated('correlation.bins_per_decade')} bins a decade; its significance "
         f"comes from {stated('correlation.permutations')} permutations of the traces (largest chance value).",
     ]
+
+
+def _event(stated: Stated) -> str:
+    """Return what the 2D histogram is aligned at where that is not the zero of displacement."""
+    if stated.value("displacement_histogram.aligned_at") == "zero":
+        return ""
+    stated.names |= {f"displacement_histogram.event_{end}_g0" for end in ("low", "high")}
+    return f"; its traces are aligned at {stated.recipe.displacement_histogram.event}, those without one left out"
 
 
 def _region(stated: Stated) -> str:

@@ -74,6 +74,7 @@ def _figures(analysis: Analysis, title: str, work: Work) -> dict[str, str]:
             analysis.result("peaks", work),
             settings,
             title,
+            analysis.recipe.displacement_histogram,
         ),
         "record": record_figure(_record(analysis, work), settings),
         "correlation": correlation_figure(analysis.result("correlation_histogram", work), settings),

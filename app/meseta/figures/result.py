@@ -16,6 +16,7 @@ from meseta.figures.scale import ConductanceScale
 from meseta.histograms import ConductanceHistogram, DisplacementHistogram
 from meseta.peaks import PeakFit
 from meseta.recipe.figure import FigureSettings
+from meseta.recipe.histogram import DisplacementHistogramSettings
 
 __all__ = ["result_figure"]
 
@@ -70,6 +71,7 @@ def result_figure(
     peak_fit: PeakFit,
     settings: FigureSettings,
     title: str = "",
+    frame: DisplacementHistogramSettings | None = None,
 ) -> Figure:
     """Draw the result of an analysis for print.
 
@@ -84,6 +86,9 @@ def result_figure(
     settings : FigureSettings
     title : str
         Name of the recording; empty for none.
+    frame : DisplacementHistogramSettings, optional
+        What the 2D histogram was made by: where its traces are aligned at another event than the zero of displacement
+        the figure says so.
 
     Returns
     -------
@@ -101,7 +106,14 @@ def result_figure(
         )
         figure = new_figure(settings, layout.height)
         plane, side, bar = (_axes(figure, box, width, layout.height) for box in (layout.plane, layout.side, layout.bar))
-        draw_displacement(plane, bar, displacement_histogram, scale if same else other, settings)
+        draw_displacement(
+            plane,
+            bar,
+            displacement_histogram,
+            scale if same else other,
+            settings,
+            frame.event if frame is not None else "",
+        )
         draw_distribution(side, histogram, peak_fit, scale, settings, labelled=narrow or not same)
         _key(side, 1 + _LINE * point / layout.side[3])
         for letter, (left, bottom, _, high) in zip("ab", (layout.plane, layout.side), strict=True):

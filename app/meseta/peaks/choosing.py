@@ -83,7 +83,14 @@ class Chooser:
                 return [], "no peak found", ()
         good = [window for window in windows if self._fittable(window)]
         reason = "" if good else f"no fit: fewer than {_FEWEST_BINS} bins with counts in the range of the fit"
-        return good, reason, beyond
+        lone = tuple(
+            f"the peak asked for near {self._stated(start.position_u)} is not fitted: fewer than {_FEWEST_BINS} bins "
+            "with counts lie around it"
+            for window in windows
+            if self.settings.peaks and window not in good
+            for start in window.starts
+        )
+        return good, reason, (*beyond, *lone)
 
     def without(self, windows: Sequence[Window], left_out: Start) -> list[Window]:
         """Return windows when one peak is left out: its next wider view takes its place, where there is one.

@@ -8,6 +8,7 @@ from typing import Literal, Self
 
 from pydantic import model_validator
 
+from meseta import typeset
 from meseta.recipe.fields import Section, setting
 
 __all__ = [
@@ -155,6 +156,15 @@ class DisplacementHistogramSettings(Section):
     event_high_g0: float = setting(0.1, "Plateaus to", "With plateaus: highest conductance.", unit="G0", gt=0)
     bins_per_decade: int = setting(50, "Bins per decade", "Of the logarithmic conductance axis.", ge=1, le=400)
     bin_width_g0: float = setting(0.02, "Bin width", "Of the linear conductance axis.", unit="G0", gt=0, le=10)
+
+    @property
+    def event(self) -> str:
+        """What displacement is counted from, in words; empty where that is the zero of displacement."""
+        if self.aligned_at == "zero":
+            return ""
+        end = "start" if self.aligned_at == "plateau_start" else "end"
+        window = typeset.interval(self.event_low_g0, self.event_high_g0, "G0", 2).replace(" to ", " and ")
+        return f"the {end} of the last plateau between {window}"
 
 
 class CorrelationSettings(Section):
