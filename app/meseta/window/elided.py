@@ -10,12 +10,21 @@ __all__ = ["Elided"]
 
 
 class Elided(QLabel):
-    """A label that asks for height only and cuts its text to the width it is given."""
+    """A label that cuts its text to the width it is given, or says it in a shorter form that fits.
 
-    def __init__(self, text: str = "", tone: str = "quiet") -> None:
+    Parameters
+    ----------
+    text, tone : str
+    shorter : tuple of str
+        Shorter forms of the text, longest first; there is always room for the last.
+    """
+
+    def __init__(self, text: str = "", tone: str = "quiet", shorter: tuple[str, ...] = ()) -> None:
         super().__init__("")
         self.setProperty("tone", tone)
-        self.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
+        self._shorter = shorter
+        wide = QSizePolicy.Policy.Preferred if shorter else QSizePolicy.Policy.Ignored
+        self.setSizePolicy(wide, QSizePolicy.Policy.Fixed)
         self.say(text)
 
     def say(self, text: str, tone: str = "") -> None:
@@ -33,13 +42,21 @@ class Elided(QLabel):
         """Paint as much as fits."""
         painter = QPainter(self)
         painter.setPen(self.palette().color(self.foregroundRole()))
-        text = self.fontMetrics().elidedText(self.text(), Qt.TextElideMode.ElideRight, self.width())
-        painter.drawText(self.rect(), Qt.AlignmentFlag.AlignVCenter | Qt.AlignmentFlag.AlignLeft, text)
+        painter.drawText(self.rect(), Qt.AlignmentFlag.AlignVCenter | Qt.AlignmentFlag.AlignLeft, self.painted())
         painter.end()
 
+    def painted(self) -> str:
+        """Return the text as it is painted: whole, in a shorter form, or cut."""
+        metrics = self.fontMetrics()
+        for form in (self.text(), *self._shorter):
+            if metrics.horizontalAdvance(form) <= self.width():
+                return form
+        return metrics.elidedText((self.text(), *self._shorter)[-1], Qt.TextElideMode.ElideRight, self.width())
+
     def minimumSizeHint(self) -> QSize:
-        """Ask for height only."""
-        return QSize(16, self.fontMetrics().height())
+        """Ask for the height, and for the width of the shortest form where there are such."""
+        least = self.fontMetrics().horizontalAdvance(self._shorter[-1]) + 2 if self._shorter else 16
+        return QSize(least, self.fontMetrics().height())
 
     def sizeHint(self) -> QSize:
         """Ask for the width of the text."""

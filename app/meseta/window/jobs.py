@@ -34,8 +34,8 @@ BLOCK_SAMPLES = 500_000
 """Smaller blocks than elsewhere: each call that keeps the interpreter is short, so the window's thread waits less."""
 
 
-STEP_BACK = 5
-"""How much less urgent long work is than painting, as the system counts it: a third of a contested core."""
+STEP_BACK = 3
+"""How much less urgent long work is than painting, as the system counts it: half as much of a contested core."""
 
 
 @dataclass(frozen=True)
@@ -179,6 +179,11 @@ class JobRunner(QObject):
     def busy(self) -> bool:
         """Whether anything runs or waits."""
         return bool(self._running)
+
+    @property
+    def stoppable(self) -> bool:
+        """Whether anything runs that the user can stop."""
+        return any(not request.channel.lasting for request, _ in self._running.values())
 
     def runs(self, channel: Channel) -> bool:
         """Return whether the newest request of a channel is still under way."""

@@ -18,6 +18,7 @@ from meseta.window.actions import ACTIONS, MENUS, ActionSpec
 from meseta.window.centre import Centre
 from meseta.window.collector import Collector
 from meseta.window.commands import Commands
+from meseta.window.dock_title import DockTitle, name_docks
 from meseta.window.help import HelpBrowser
 from meseta.window.jobs import JobRunner
 from meseta.window.keeper import Keeper
@@ -60,6 +61,10 @@ class MainWindow(QMainWindow):
         self.status = StatusLine(self.session)
         self.help: HelpBrowser | None = None
         self._first_state = QByteArray()
+        self._naming = QTimer(self)
+        self._naming.setSingleShot(True)
+        self._naming.setInterval(0)
+        self._naming.timeout.connect(lambda: name_docks(self, list(self.docks.values())))
         self._build()
         self._connect()
         self._remember()
@@ -109,8 +114,9 @@ class MainWindow(QMainWindow):
             dock.setObjectName(view.name)
             dock.setWidget(widget)
             dock.setAccessibleName(view.title)
-            if isinstance(widget, PlotPanel):
-                dock.setTitleBarWidget(widget.header)
+            dock.setTitleBarWidget(widget.header if isinstance(widget, PlotPanel) else DockTitle(view.title))
+            for moved in (dock.visibilityChanged, dock.topLevelChanged, dock.dockLocationChanged):
+                moved.connect(self._naming.start)
             self.addDockWidget(_AREAS[view.area], dock)
             dock.setVisible(view.shown)
             self.docks[view.name] = dock

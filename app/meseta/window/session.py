@@ -354,7 +354,8 @@ class Session(QObject):
                 return Span(float(edges[0]) - margin, float(edges[-1]) + margin)
         settings = self.document.recipe.histogram
         if self.axis == "linear":
-            return Span(settings.low_g0 or 0.0, min(settings.high_g0, 5.0))
+            low, high = settings.low_g0 or 0.0, min(settings.high_g0, 5.0)
+            return Span(low - 0.02 * (high - low), high + 0.02 * (high - low))
         low = settings.low_g0 if settings.low_g0 and settings.low_g0 > 0 else 3e-7
         return Span(float(np.log10(low)), float(np.log10(settings.high_g0)) + 0.1)
 

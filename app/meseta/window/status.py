@@ -70,6 +70,7 @@ class StatusLine(QStatusBar):
         self.work.setVisible(progress is not None)
         if progress is None:
             return
+        self.stop.setVisible(self._session.jobs.stoppable)
         words = progress.label
         if progress.total:
             words += f", {typeset.integer(progress.done)} of {typeset.integer(progress.total)} {progress.unit}"

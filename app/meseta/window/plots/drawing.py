@@ -7,7 +7,9 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 import pyqtgraph as pg
-from PySide6.QtWidgets import QGraphicsRectItem
+from PySide6.QtCore import Qt
+from PySide6.QtGui import QBrush, QPainter
+from PySide6.QtWidgets import QGraphicsRectItem, QStyleOptionGraphicsItem, QWidget
 
 from meseta.window.conditions import BOXES, WINDOWS, Condition
 from meseta.window.plots.gestures import Drag
@@ -16,9 +18,33 @@ from meseta.window.theme import Theme
 if TYPE_CHECKING:
     from meseta.window.plots.panel import SpinePanel
 
-__all__ = ["WindowTool"]
+__all__ = ["Band", "WindowTool"]
 
 SMALLEST_PIXELS = 5
+
+
+class Band(QGraphicsRectItem):
+    """A window on a plot: filled where traces inside are meant, hatched with a dashed edge where those outside are."""
+
+    inverted = False
+
+    def wear(self, theme: Theme, *, inverted: bool) -> None:
+        """Take the colours of a theme, and the look of what the window means."""
+        self.inverted = inverted
+        self.setPen(theme.pen("selected", dashed=inverted))
+        hatch = QBrush(theme.colour("selected", 110), Qt.BrushStyle.BDiagPattern)
+        self.setBrush(hatch if inverted else pg.mkBrush(theme.colour("selected", 26)))
+
+    def paint(self, painter: QPainter, option: QStyleOptionGraphicsItem, widget: QWidget | None = None) -> None:
+        """Paint the window; the hatch is in pixels whatever the axes show."""
+        brush = self.brush()
+        if self.inverted:
+            back, known = painter.worldTransform().inverted()
+            if known:
+                brush.setTransform(back)
+        painter.setPen(self.pen())
+        painter.setBrush(brush)
+        painter.drawRect(self.rect())
 
 
 class WindowTool:
@@ -26,7 +52,8 @@ class WindowTool:
 
     def __init__(self, panel: SpinePanel, *, across: bool) -> None:
         self._panel, self._across = panel, across
-        self._bands: list[QGraphicsRectItem] = []
+        self._bands: list[Band] = []
+        self._shown: tuple[Condition, ...] = ()
         self._drawing: int | None = None
         panel.box.drawn.connect(self._drawn)
         session = panel.session
@@ -37,9 +64,8 @@ class WindowTool:
 
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""
-        for band in self._bands:
-            band.setPen(theme.pen("selected"))
-            band.setBrush(pg.mkBrush(theme.colour("selected", 26)))
+        for band, condition in zip(self._bands, self._shown, strict=False):
+            band.wear(theme, inverted=condition.inverted)
 
     # -- drawing -----------------------------------------------------------------------------------------------------
 
@@ -80,11 +106,12 @@ class WindowTool:
     def show_conditions(self) -> None:
         """Draw a band for every condition that is switched on and has a conductance window."""
         session = self._panel.session
-        shown = [one for one in session.document.conditions.active if one.kind in WINDOWS]
+        shown = tuple(one for one in session.document.conditions.active if one.kind in WINDOWS)
         if session.analysis is None:
-            shown = []
+            shown = ()
+        self._shown = shown
         while len(self._bands) < len(shown):
-            band = QGraphicsRectItem()
+            band = Band()
             band.setZValue(-5)
             self._panel.box.addItem(band, ignoreBounds=True)
             self._bands.append(band)
@@ -94,7 +121,7 @@ class WindowTool:
                 self._place(band, shown[place])
         self.wear(self._panel.frame.theme)
 
-    def _place(self, band: QGraphicsRectItem, condition: Condition) -> None:
+    def _place(self, band: Band, condition: Condition) -> None:
         low, high = (self._u(value) for value in (condition.low_g0, condition.high_g0))
         left, right = self._panel.box.viewRange()[0]
         margin = 10 * (right - left)

@@ -21,13 +21,15 @@ from meseta.window.plots.ticks import ConductanceAxis
 from meseta.window.session import Hover, Span
 from meseta.window.theme import Theme
 
-__all__ = ["PlotData", "PlotPanel", "SpinePanel"]
+__all__ = ["HEADING_MARGINS", "PlotData", "PlotPanel", "SpinePanel"]
 
 GUIDES_LOGARITHMIC = (1, 2, 3)
 GUIDES_LINEAR = tuple(range(1, 11))
 BOTTOM_PIXELS = 38
 TOP_PIXELS = 4
 HEADER_PIXELS = 28
+HEADING_MARGINS = 28
+"""Pixels of a heading that are no words: margins and the space between."""
 
 
 @dataclass(frozen=True)
@@ -42,6 +44,8 @@ class PlotPanel(QWidget):
     """Heading, plot and empty state.  Subclasses fill the plot and say what its data are."""
 
     title = ""
+    shorter: tuple[str, ...] = ()
+    """Shorter forms of the heading for narrow panels, longest first."""
     help_page = ""
     object_name = "plot"
 
@@ -57,7 +61,7 @@ class PlotPanel(QWidget):
         self.plot = pg.PlotWidget(viewBox=self.box, axisItems={"left": left, "bottom": bottom}, background=None)
         self._prepare_plot()
         self.header = QWidget()
-        self.heading = Elided(self.title, "title")
+        self.heading = Elided(self.title, "title", self.shorter)
         self.note = Elided("")
         self.note.hide()
         self.state = QLabel("")
@@ -65,7 +69,7 @@ class PlotPanel(QWidget):
         self.corner = QHBoxLayout()
         self.empty = QLabel("", self.plot)
         self._lay_out()
-        self._picture: Any = None
+        self._titled = True
         frame.themes.changed.connect(self.wear)
 
     def _prepare_plot(self) -> None:
@@ -143,7 +147,7 @@ class PlotPanel(QWidget):
         """Write a quiet line beside the heading; all of it is its tool tip where it does not fit."""
         self.note.say(text)
         self.note.setVisible(bool(text))
-        wide = QSizePolicy.Policy.Preferred if text else QSizePolicy.Policy.Ignored
+        wide = QSizePolicy.Policy.Preferred if text or self.shorter else QSizePolicy.Policy.Ignored
         self.heading.setSizePolicy(wide, QSizePolicy.Policy.Fixed)
         top = self.header.layout()
         if isinstance(top, QHBoxLayout):
@@ -152,6 +156,12 @@ class PlotPanel(QWidget):
     def say_heading(self, text: str) -> None:
         """Write the heading."""
         self.heading.say(text)
+        self.title_said(self._titled)
+
+    def title_said(self, said: bool) -> None:
+        """Leave the heading out where a tab says the same; one that says more than the title stays."""
+        self._titled = said
+        self.heading.setVisible(said or self.heading.text() != self.title)
 
     def resizeEvent(self, event: QResizeEvent) -> None:
         """Keep the words in the middle."""

@@ -25,6 +25,7 @@ class ScaleBar(QWidget):
         self._table: npt.NDArray[np.uint8] | None = None
         self._top = ""
         self._theme: Theme | None = None
+        self._room = 10_000
         self.setSizePolicy(QSizePolicy.Policy.Fixed, QSizePolicy.Policy.Fixed)
         self.hide()
 
@@ -40,8 +41,18 @@ class ScaleBar(QWidget):
         self._division = {"square_root": "√", "logarithmic": "log", "linear": ""}.get(division, "")
         self.updateGeometry()
         self.setFixedSize(self.sizeHint())
-        self.show()
+        self.give_room(self._room)
         self.update()
+
+    def give_room(self, width: int) -> None:
+        """Show the scale where it has something to show and fits a width in pixels."""
+        self._room = width
+        self.setVisible(self._image is not None and self.sizeHint().width() <= width)
+
+    def clear(self) -> None:
+        """Show no scale."""
+        self._image = None
+        self.hide()
 
     def sizeHint(self) -> QSize:
         """Return the size of bar and numbers."""

@@ -138,7 +138,8 @@ class PlainAxis(_Axis):
 
     def tickValues(self, minVal: float, maxVal: float, size: float) -> list[tuple[float, list[float]]]:
         """Return the places of ticks."""
-        return _plain_ticks(minVal, maxVal, size, 64.0, whole=self._whole)
+        apart = 64.0 if self.orientation in ("bottom", "top") else 28.0
+        return _plain_ticks(minVal, maxVal, size, apart, whole=self._whole)
 
     def tickStrings(self, values: list[float], scale: float, spacing: float) -> list[str]:
         """Return the text of ticks."""

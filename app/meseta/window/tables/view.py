@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
-from PySide6.QtCore import QModelIndex, QPoint, Qt, QTimer
+from PySide6.QtCore import QEvent, QModelIndex, QObject, QPoint, Qt, QTimer
 from PySide6.QtGui import QGuiApplication, QKeySequence, QShortcut
 from PySide6.QtWidgets import (
     QAbstractItemView,
@@ -31,6 +31,8 @@ from meseta.window.theme import fixed_digits
 __all__ = ["TablePanel"]
 
 COPIED_AT_MOST = 1_000_000
+CELL_MARGINS = 18
+"""Pixels of a column that are no text."""
 TYPICAL_ROWS = 40
 """Rows looked at for the width of a column."""
 EXTREMES_AMONG = 5_000
@@ -74,7 +76,12 @@ class TablePanel(QWidget):
         self.filter = QLineEdit()
         self.count = QLabel("")
         self.words = QLabel(empty)
+        self._widths: list[int] = []
+        self._by_hand = self._sharing = False
+        self._elastic = bool(elastic)
         self._prepare(filtered)
+        self.view.viewport().installEventFilter(self)
+        self.view.horizontalHeader().sectionResized.connect(self._resized)
         if elastic:
             self._stretch(elastic)
         self.menu_entries: list[tuple[str, Callable[[], None]]] = []
@@ -145,13 +152,42 @@ class TablePanel(QWidget):
         self._fit_columns()
 
     def _fit_columns(self) -> None:
-        metrics = self.view.fontMetrics()
+        if self._by_hand:
+            return
+        metrics, widths = self.view.fontMetrics(), []
         for place, column in enumerate(self.model.columns):
             values = self.model.data_columns.get(column.name, ())
             # Whatever the order and the filter, no number may lose its end: "5.34 …" hides the power of ten.
             shown = [column.title, *(str(column.show(values[row], row) or "") for row in _typical(np.asarray(values)))]
-            width = max(metrics.horizontalAdvance(text) for text in shown) + 22
-            self.view.setColumnWidth(place, min(max(width, 44), 220))
+            width = max(metrics.horizontalAdvance(text) for text in shown) + CELL_MARGINS
+            widths.append(0 if self.view.isColumnHidden(place) else min(max(width, 44), 220))
+        self._widths = widths
+        self._share_width()
+
+    def _share_width(self) -> None:
+        """Give the width to whole columns: what does not fit begins beyond the edge, to be scrolled to, never cut."""
+        if self._by_hand or not self._widths:
+            return
+        reach = np.cumsum(self._widths)
+        whole = max(int(np.searchsorted(reach, self.view.viewport().width(), side="right")), 1)
+        spare, shown = self.view.viewport().width() - int(reach[whole - 1]), np.count_nonzero(self._widths[:whole])
+        self._sharing = True
+        for place, width in enumerate(self._widths):
+            more = spare // max(shown, 1) if place < whole < len(self._widths) and width else 0
+            self.view.setColumnWidth(place, width + max(more, 0))
+        self._sharing = False
+
+    def _resized(self, place: int, *_: int) -> None:
+        """Remember that the user chose the widths: they stay."""
+        pulled = bool(QGuiApplication.mouseButtons() & Qt.MouseButton.LeftButton)
+        if pulled and not self._sharing and place < len(self.model.columns) - 1:
+            self._by_hand = True
+
+    def eventFilter(self, watched: QObject, event: QEvent) -> bool:
+        """Share the width anew when there is more or less of it."""
+        if event.type() == QEvent.Type.Resize and not self._elastic:
+            self._share_width()
+        return False
 
     def _apply_filter(self) -> None:
         try:

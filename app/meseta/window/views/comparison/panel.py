@@ -22,7 +22,7 @@ from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
 from meseta.window.plots.drawing import WindowTool
-from meseta.window.plots.panel import PlotData, SpinePanel
+from meseta.window.plots.panel import HEADING_MARGINS, PlotData, SpinePanel
 from meseta.window.plots.ticks import LogCountAxis
 from meseta.window.theme import Theme
 from meseta.window.views.comparison.request import MOST_PARTS, SOURCES, Compared, Question, answer, read_beside
@@ -50,6 +50,8 @@ DASHES = (
     Qt.PenStyle.DashDotDotLine,
 )
 DECADES = 4.0
+BUTTON_MARGINS = 28
+"""Pixels of a button that are no words."""
 
 
 @dataclass(frozen=True)
@@ -64,6 +66,7 @@ class ComparisonPanel(SpinePanel):
     """Several histograms on one axis."""
 
     title = "Comparison"
+    shorter = ("Comparison",)
     help_page = "comparison"
     object_name = "comparison"
 
@@ -79,9 +82,8 @@ class ComparisonPanel(SpinePanel):
         for item in (self.legend, self.said):
             item.setZValue(35)
             self.box.addItem(item, ignoreBounds=True)
-        self.what, self.how = self._what_button(), self._how_button()
-        self.corner.addWidget(self.what)
-        self.corner.addWidget(self.how)
+        self.choice = self._choice_button()
+        self.corner.addWidget(self.choice)
         self.tool = WindowTool(self, across=False)
         self.job = OnDemand(self, frame.session, COMPARE, "comparing", self._wanted, self._draw)
         session = self.session
@@ -92,7 +94,7 @@ class ComparisonPanel(SpinePanel):
 
     # -- choosing ----------------------------------------------------------------------------------------------------
 
-    def _what_button(self) -> QToolButton:
+    def _choice_button(self) -> QToolButton:
         menu = QMenu(self)
         self.sources: dict[str, QAction] = {}
         group = QActionGroup(self)
@@ -103,32 +105,34 @@ class ComparisonPanel(SpinePanel):
             action.triggered.connect(lambda _=False, one=source: self.compare(one))
             group.addAction(action)
             self.sources[source] = action
-        menu.addSeparator()
         menu.addAction("Open another recording beside this one …", self.ask_recording)
-        self.fit_action = menu.addAction("Fit the scale of the second above the drawn window")
-        self.fit_action.setCheckable(True)
-        self.fit_action.toggled.connect(self._fit_toggled)
-        return self._button("what", menu, "What is compared")
-
-    def _how_button(self) -> QToolButton:
-        menu, group = QMenu(self), QActionGroup(self)
+        menu.addSeparator()
+        looks = QActionGroup(self)
         for look, words in LOOKS.items():
             action = menu.addAction(words)
             action.setCheckable(True)
             action.setChecked(look == self.look)
             action.triggered.connect(lambda _=False, one=look: self.show_as(one))
-            group.addAction(action)
-        return self._button(LOOKS[self.look], menu, "How the histograms are laid out")
-
-    def _button(self, text: str, menu: QMenu, name: str) -> QToolButton:
+            looks.addAction(action)
+        menu.addSeparator()
+        self.fit_action = menu.addAction("Fit the scale of the second above the drawn window")
+        self.fit_action.setCheckable(True)
+        self.fit_action.toggled.connect(self._fit_toggled)
         button = QToolButton()
         button.setMenu(menu)
         button.setPopupMode(QToolButton.ToolButtonPopupMode.InstantPopup)
         button.setAutoRaise(True)
-        button.setText(text)
-        button.setToolTip(name)
-        button.setAccessibleName(name)
+        button.setAccessibleName("What is compared, and how it is laid out")
         return button
+
+    def _name_choice(self) -> None:
+        """Write on the button what is compared and how, or only what where the panel is narrow."""
+        what = SOURCES[self.source].split(" ")[0]
+        both = f"{what}, {LOOKS[self.look]}"
+        heading = self.heading.sizeHint().width() + HEADING_MARGINS + BUTTON_MARGINS
+        fits = self.fontMetrics().horizontalAdvance(both) + heading <= self.width()
+        self.choice.setText(both if fits else what)
+        self.choice.setToolTip(f"What is compared and how: {SOURCES[self.source]}, {LOOKS[self.look]}")
 
     def compare(self, source: str) -> None:
         """Compare something else."""
@@ -144,7 +148,6 @@ class ComparisonPanel(SpinePanel):
     def show_as(self, look: str) -> None:
         """Lay the histograms out in another way."""
         self.look = look
-        self.how.setText(LOOKS[look])
         self._draw()
 
     def _fit_toggled(self, on: bool) -> None:
@@ -397,12 +400,12 @@ class ComparisonPanel(SpinePanel):
     def resizeEvent(self, event: QResizeEvent) -> None:
         """Keep the words inside."""
         super().resizeEvent(event)
+        self._name_choice()
         self._place_words()
 
     def _say(self, found: Compared | None) -> None:
         session, state = self.session, self.job.state
-        self.what.setText(SOURCES[self.source].split(" ")[0])
-        self.what.setToolTip(f"What is compared: {SOURCES[self.source]}")
+        self._name_choice()
         self.fit_action.setEnabled(self._window() is not None)
         if session.traces is None:
             self.say_empty("Two parts of a recording, or two recordings, will stand here on one axis.")

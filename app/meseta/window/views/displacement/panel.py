@@ -8,12 +8,13 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import pyqtgraph as pg
 from PySide6.QtCore import QRectF
+from PySide6.QtGui import QResizeEvent
 
 from meseta import typeset
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.plots.drawing import WindowTool
-from meseta.window.plots.panel import DrivePanel, PlotData
+from meseta.window.plots.panel import HEADING_MARGINS, DrivePanel, PlotData
 from meseta.window.plots.scale import ScaleBar
 from meseta.window.plots.ticks import PlainAxis
 from meseta.window.session import Change
@@ -33,6 +34,7 @@ class DisplacementPanel(DrivePanel):
     """The 2D histogram."""
 
     title = "2D histogram"
+    shorter = ("2D",)
     help_page = "displacement_histogram"
     object_name = "histogram2d"
     guides_above = True
@@ -64,6 +66,11 @@ class DisplacementPanel(DrivePanel):
         super().wear(theme)
         self.tool.wear(theme)
         self._draw()
+
+    def resizeEvent(self, event: QResizeEvent) -> None:
+        """Leave the scale out where there is room for the heading only."""
+        super().resizeEvent(event)
+        self.scale.give_room(self.width() - self.heading.minimumSizeHint().width() - HEADING_MARGINS)
 
     def _traces_changed(self) -> None:
         self._whole = self.session.result("displacement_histogram")
@@ -118,7 +125,7 @@ class DisplacementPanel(DrivePanel):
         self.image.setVisible(fits)
         if not fits or picture is None:
             self.over.hide()
-            self.scale.hide()
+            self.scale.clear()
             return
         theme, settings = self.frame.theme, self.session.document.recipe.figure
         lookup = (theme.lookup(settings.colour_map) if picture.part is None else theme.grey_lookup).copy()

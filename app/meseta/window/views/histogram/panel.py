@@ -39,6 +39,7 @@ class HistogramPanel(SpinePanel):
     """The 1D histogram."""
 
     title = "Conductance histogram"
+    shorter = ("1D histogram", "1D")
     help_page = "histogram"
     object_name = "histogram"
 

@@ -71,7 +71,7 @@ class ResidualsPanel(SpinePanel):
         self.band.setPen(pg.mkPen(None))
         self.band.setBrush(pg.mkBrush(theme.colour("every", 70)))
         self.zero.setPen(theme.wide_pen("fit", 1.0, dashed=True))
-        self.line.setPen(theme.pen("ink"))
+        self.line.setPen(theme.curve_pen("ink"))
 
     @property
     def fit(self) -> PeakFit | None:

@@ -10,13 +10,13 @@ import numpy as np
 import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QRectF
-from PySide6.QtWidgets import QGraphicsRectItem
 
 from meseta import typeset
 from meseta.window.conditions import Condition
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.pictures import StripPicture, strip_picture
+from meseta.window.plots.drawing import Band
 from meseta.window.plots.gestures import Drag
 from meseta.window.plots.panel import PlotData, PlotPanel
 from meseta.window.plots.ticks import ConductanceAxis, PlainAxis
@@ -53,7 +53,7 @@ class StripPanel(PlotPanel):
         self.position.addMarker("v", position=1.0, size=8.0)
         self.position.setZValue(30)
         self.box.addItem(self.position, ignoreBounds=True)
-        self.ranges: list[QGraphicsRectItem] = []
+        self.ranges: list[Band] = []
         self.events: list[pg.InfiniteLine] = []
         self._picture: StripPicture | None = None
         self._level = -1
@@ -217,7 +217,7 @@ class StripPanel(PlotPanel):
     def _draw_ranges(self) -> None:
         shown = [one for one in self.session.document.conditions.active if one.kind == "range"]
         while len(self.ranges) < len(shown):
-            item = QGraphicsRectItem()
+            item = Band()
             item.setZValue(10)
             self.box.addItem(item, ignoreBounds=True)
             self.ranges.append(item)
@@ -226,8 +226,7 @@ class StripPanel(PlotPanel):
             item.setVisible(place < len(shown))
             if place < len(shown):
                 item.setRect(QRectF(shown[place].first, -1e4, shown[place].last - shown[place].first + 1, 2e4))
-                item.setPen(theme.pen("selected"))
-                item.setBrush(pg.mkBrush(theme.colour("selected", 40)))
+                item.wear(theme, inverted=shown[place].inverted)
 
     # -- gestures ----------------------------------------------------------------------------------------------------
 

@@ -57,7 +57,7 @@ class TracePanel(DrivePanel):
     def wear(self, theme: Theme) -> None:
         """Take the colours of a theme."""
         super().wear(theme)
-        self.curve.setPen(theme.pen("ink"))
+        self.curve.setPen(theme.curve_pen("ink"))
         self.overlay.wear(theme)
         self.levels.setPen(theme.wide_pen("selected", 3.0))
         self.caps.setPen(theme.wide_pen("selected", 2.0))
