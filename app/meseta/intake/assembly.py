@@ -323,8 +323,11 @@ class Part:
 
     def notes(self) -> dict[str, Any]:
         """Return what there is to say of this recording, in plain values."""
+        channels = self.recording.channels
+        of_channels = {doubt for channel in channels for doubt in channel.doubts}  # said once, with the channel's name
         said = [*self.recording.doubts, *self.calibration.doubts, *self.axis.doubts, *self.cut.notes]
-        said += [f"'{c.name}': {doubt}" for c in self.recording.channels for doubt in c.doubts]
+        said = [doubt for doubt in said if doubt not in of_channels]
+        said += [f"'{channel.name}': {doubt}" for channel in channels for doubt in channel.doubts]
         return {
             "calibration": plain_constants(self.calibration),
             "conductance_from": self.calibration.kind,
