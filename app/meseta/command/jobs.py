@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sys
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -210,17 +211,32 @@ def gather(
     strict: bool,
     as_json: bool,
 ) -> None:
-    """Add recordings to a study without analysing them."""
+    """Add recordings to a study without analysing them.
+
+    A folder stands for all files in it and in its subfolders. A file is read once: what the study has is passed over,
+    and a file that has changed since is named and left out. With --follow a file is taken once it is whole.
+    """
     from meseta import study
 
     if not files:
         raise CallError("no files were given", "gather", "name files or a folder")
     recipe = recipe_from(recipe_path, preset, settings) if recipe_path or preset or settings else None
     with working() as work:
-        answer, bad = study.gather(files, study_path, recipe, work, follow)
-    list_bad(bad, strict)
+        answer, bad = study.gather(files, study_path, recipe, work, follow, say=_say if follow else None)
+        stopped = follow and work.cancel.is_set()
+    if not follow:
+        list_bad(bad, strict)
     lines = [f"{answer['recordings_added']} recordings added to {study_path}, {answer['traces']} traces in all"]
     tell(as_json, answer | {"bad_files": bad_plain(bad)}, lines)
+    if stopped:
+        raise click.exceptions.Exit(130)
+
+
+def _say(error: MesetaError) -> None:
+    """Tell of a bad file as soon as it is met."""
+    from tqdm import tqdm
+
+    tqdm.write(f"meseta: {error}", file=sys.stderr)
 
 
 @click.command()

@@ -2,26 +2,31 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Collection, Iterator, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import Final
 
 import h5py
 
 from meseta.errors import InputError, MesetaError
 from meseta.intake import Recording, open_recording
+from meseta.intake.context import batch_context
 from meseta.intake.files import FoundFile
+from meseta.intake.opening import OpenContext
 from meseta.intake.reading import traces_from
 from meseta.recipe import Recipe
+from meseta.study.files import is_study
 from meseta.study.growing import TraceWriter
 from meseta.study.raw import write_recordings
 from meseta.study.recordings import BATCH_SAMPLES
+from meseta.study.seen import Look, Seen, look_at
 from meseta.study.state import Edit
 from meseta.traces import Source
 from meseta.work import Work
 
-__all__ = ["Added", "take_in"]
+__all__ = ["Added", "Present", "take_in", "without_changing"]
 
 _OPEN_FILES: Final = 200
 
@@ -38,15 +43,23 @@ class Added:
         Traces that were added.
     known : list of str
         Names of recordings that the study had already.
-    bad : list of MesetaError
-        Files that could not be read.
+    failed : dict of Path to MesetaError
+        Files that could not be taken in.
+    files : list of Path
+        Files whose recordings the study now has.
     """
 
     sources: list[Source] = field(default_factory=list)
     kept: list[str] = field(default_factory=list)
     traces: int = 0
     known: list[str] = field(default_factory=list)
-    bad: list[MesetaError] = field(default_factory=list)
+    failed: dict[Path, MesetaError] = field(default_factory=dict)
+    files: list[Path] = field(default_factory=list)
+
+    @property
+    def bad(self) -> list[MesetaError]:
+        """Files that could not be taken in."""
+        return list(self.failed.values())
 
     def add(self, other: Added) -> None:
         """Count what came of further files as well."""
@@ -54,7 +67,9 @@ class Added:
         self.kept += other.kept
         self.traces += other.traces
         self.known += other.known
-        self.bad += other.bad
+        self.files += other.files
+        taken = set(other.files)
+        self.failed = {path: error for path, error in (self.failed | other.failed).items() if path not in taken}
 
     def text(self) -> str:
         """Return one line for the history."""
@@ -67,16 +82,69 @@ class Added:
         return [(("source", source.sha256), True, None) for source in self.sources]
 
 
+@dataclass(frozen=True)
+class Present:
+    """What the study has already.
+
+    Attributes
+    ----------
+    sources : sequence of Source
+    removed : collection of str
+        Checksums of those that the user has removed.
+    seen : Seen
+        Files that were read before; grows.
+    """
+
+    sources: Sequence[Source] = ()
+    removed: Collection[str] = ()
+    seen: Seen = field(default_factory=Seen)
+
+
+class _FilesChangedError(Exception):
+    """Files have changed while they were read; what was written of them must be forgotten."""
+
+    def __init__(self, files: Sequence[FoundFile]) -> None:
+        super().__init__()
+        self.paths = [file.path for file in files]
+
+
+def without_changing(files: Sequence[FoundFile], attempt: Callable[[Sequence[FoundFile]], Added]) -> Added:
+    """Return what came of files, anew without those that change while they are read; these are listed as bad."""
+    left, restless = list(files), dict[Path, MesetaError]()
+    while True:
+        try:
+            added = attempt(left)
+        except _FilesChangedError as changed:
+            restless |= {path: _restless(path) for path in changed.paths}
+            left = [file for file in left if file.path not in restless]
+        else:
+            added.failed = restless | added.failed
+            return added
+
+
+def _restless(path: Path) -> InputError:
+    return InputError("changes while it is read", str(path), "gather again once it is whole")
+
+
+@dataclass(frozen=True)
+class _Opened:
+    file: FoundFile
+    look: Look
+    recording: Recording
+
+
 def take_in(
     root: h5py.File,
     writer: TraceWriter,
     files: Sequence[FoundFile],
     recipe: Recipe,
-    known: set[str],
-    present: Sequence[Source],
+    present: Present,
     work: Work,
 ) -> Added:
     """Read files batch by batch, and write their traces and, where they are small enough, the recordings.
+
+    A file that looks as it did when it was read is not read again.  One that has another content since is told, and
+    not taken in: that would silently count the same contact twice.
 
     Parameters
     ----------
@@ -84,10 +152,8 @@ def take_in(
         The study, and its traces.
     files : sequence of FoundFile
     recipe : Recipe
-    known : set of str
-        Checksums of the recordings that the study has; grows.
-    present : sequence of Source
-        The recordings that the study has.
+    present : Present
+        What the study has.
     work : Work
 
     Returns
@@ -95,62 +161,108 @@ def take_in(
     Added
     """
     added = Added()
-    size = sum(file.path.stat().st_size for file in files)
+    known = {one.sha256 for one in present.sources}
+    new = [file for file in files if not _is_known(file, present.seen, known, added)]
+    size = sum(one.size_byte for one in present.sources)
+    size += sum(look.size_byte for file in new if (look := look_at(file.path)) is not None)
     copy = size <= recipe.study.copy_below_megabyte * 1e6
-    for batch in _opened(files, recipe, known, added, work):
+    for batch in _opened(new, recipe, present, known, added, work):
         good = _write_traces(batch, writer, recipe, added, work)
-        added.sources += [one.source for one in good]
+        added.sources += [one.recording.source for one in good]
         added.kept += ["copied" if copy else "linked"] * len(good)
         if copy and good:
-            write_recordings(root, good, (*present, *added.sources), work)
+            write_recordings(root, [one.recording for one in good], (*present.sources, *added.sources), work)
+        changed = [one.file for one in good if look_at(one.file.path) not in (None, one.look)]
+        if changed:
+            raise _FilesChangedError(changed)
+        for one in good:
+            added.files.append(one.file.path)
+            present.seen.remember(one.file.path, one.look, one.recording.source.sha256)
     return added
 
 
+def _is_known(file: FoundFile, seen: Seen, known: Collection[str], added: Added) -> bool:
+    """Return whether a file is one that was read before and has not changed since; counts it."""
+    look = look_at(file.path)
+    if look is None or seen.checksum(file.path, look) not in known:
+        return False
+    added.known.append(file.name)
+    added.files.append(file.path)
+    return True
+
+
 def _opened(
-    files: Sequence[FoundFile], recipe: Recipe, known: set[str], added: Added, work: Work
-) -> Iterator[list[Recording]]:
+    files: Sequence[FoundFile], recipe: Recipe, present: Present, known: set[str], added: Added, work: Work
+) -> Iterator[list[_Opened]]:
     """Yield batches of open recordings that the study does not have; each is closed when the next is asked for."""
-
-    def opened(file: FoundFile) -> Recording | MesetaError:
-        try:
-            return open_recording(file.path, recipe, file.name)
-        except InputError as error:
-            return error
-
+    context = batch_context(recipe.intake, [file.path for file in files])
     with ExitStack() as stack:
-        batch: list[Recording] = []
-        for found in work.each(opened, files, "reading files", unit="files"):
+        batch: list[_Opened] = []
+        looked = work.each(lambda one: _open(one, recipe, context), files, "reading files", unit="files")
+        for file, found in zip(files, looked, strict=True):
             if isinstance(found, MesetaError):
-                added.bad.append(found)
+                added.failed[file.path] = found
                 continue
-            if found.source.sha256 in known:
-                added.known.append(found.source.name)
-                found.close()
+            source = found.recording.source
+            if source.sha256 in known:
+                added.known.append(source.name)
+                added.files.append(file.path)
+                present.seen.remember(file.path, found.look, source.sha256)
+                found.recording.close()
                 continue
-            known.add(found.source.sha256)
+            earlier = present.seen.checksum(file.path)
+            if earlier in known and earlier not in present.removed:
+                added.failed[file.path] = _replaced(file)
+                found.recording.close()
+                continue
+            known.add(source.sha256)
             if batch and (
-                sum(one.samples for one in batch) + found.samples > BATCH_SAMPLES or len(batch) >= _OPEN_FILES
+                sum(one.recording.samples for one in batch) + found.recording.samples > BATCH_SAMPLES
+                or len(batch) >= _OPEN_FILES
             ):
                 yield batch
                 stack.pop_all().close()
                 batch = []
-            batch.append(stack.enter_context(found))
+            batch.append(found)
+            stack.enter_context(found.recording)
         if batch:
             yield batch
 
 
+def _open(file: FoundFile, recipe: Recipe, context: OpenContext) -> _Opened | MesetaError:
+    look = look_at(file.path)
+    try:
+        if look is not None and is_study(file.path):
+            raise InputError("is a Meseta study, no recording", str(file.path), "gather the recordings it was made of")
+        recording = open_recording(file.path, recipe, file.name, context)
+    except InputError as error:
+        return error
+    if look is None or look_at(file.path) not in (None, look):
+        recording.close()
+        return _restless(file.path)
+    return _Opened(file, look, recording)
+
+
+def _replaced(file: FoundFile) -> InputError:
+    return InputError(
+        "has another content than when it was taken in; the study keeps what it held then",
+        str(file.path),
+        "remove its recording from the study and gather again, or give the new content a name of its own",
+    )
+
+
 def _write_traces(
-    batch: Sequence[Recording], writer: TraceWriter, recipe: Recipe, added: Added, work: Work
-) -> list[Recording]:
+    batch: Sequence[_Opened], writer: TraceWriter, recipe: Recipe, added: Added, work: Work
+) -> list[_Opened]:
     """Write the traces of a batch; return the recordings that gave any."""
     quiet = work.quiet()
     try:
-        large = sum(one.samples for one in batch) > BATCH_SAMPLES
-        traces, good = traces_from(batch, recipe, quiet, stream=large), list(batch)
+        large = sum(one.recording.samples for one in batch) > BATCH_SAMPLES
+        traces, good = traces_from([one.recording for one in batch], recipe, quiet, stream=large), list(batch)
         writer.append(traces)
     except InputError as error:
         if len(batch) == 1:
-            added.bad.append(error)
+            added.failed[batch[0].file.path] = error
             return []
         return [one for single in batch for one in _write_traces([single], writer, recipe, added, work)]
     added.traces += traces.traces

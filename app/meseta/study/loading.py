@@ -34,7 +34,20 @@ __all__ = ["Content", "Fill", "load", "write_content", "write_whole_traces"]
 
 Part = TypeVar("Part")
 _KNOWN = frozenset(
-    {"decisions", "events", "groups", "history", "raw", "recipe", "removed", "results", "sources", "traces", "versions"}
+    {
+        "decisions",
+        "events",
+        "groups",
+        "history",
+        "raw",
+        "recipe",
+        "removed",
+        "results",
+        "seen",
+        "sources",
+        "traces",
+        "versions",
+    }
 )
 
 

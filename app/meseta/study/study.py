@@ -21,7 +21,7 @@ from meseta.study.chunks import BlockFile
 from meseta.study.content import write_sources
 from meseta.study.damage import find_losses, without_lost
 from meseta.study.files import changing, clear_unfinished, is_study, looking, rewritten_of, swap, upgrade
-from meseta.study.gathering import Added, take_in
+from meseta.study.gathering import Added, Present, take_in, without_changing
 from meseta.study.growing import TraceWriter
 from meseta.study.loading import Content, load, write_content, write_whole_traces
 from meseta.study.lock import Lock
@@ -30,6 +30,7 @@ from meseta.study.outcomes import Outcome, read_outcomes
 from meseta.study.parts import FROM_RAW, versions, write_decisions, write_history, write_recipe, write_versions
 from meseta.study.raw import read_recordings, write_recordings
 from meseta.study.recordings import derived_key, opened_recordings, write_derived
+from meseta.study.seen import Look, Seen, read_seen, seen_of
 from meseta.study.state import State
 from meseta.study.strict import reading
 from meseta.traces import Source, TraceSet
@@ -55,6 +56,7 @@ class Study(Notebook):
     ) -> None:
         super().__init__()
         self.path, self._folders = path, list(folders)
+        self._seen: Seen | None = None
         self.why_read_only = "opened for reading" if read_only else ""
         self._lock = None if read_only else self._locked(take_over)
         self.backup: Path | None = None
@@ -156,6 +158,7 @@ class Study(Notebook):
     def _load(self) -> None:
         self._blocks = BlockFile(self.path)
         self._content: Content = load(self.path, self._blocks)
+        self._checksums = {one.sha256 for one in self._content.sources}
         content, self.damage = self._content, self._content.damage
         self._saved, self._saved_entries = content.state, len(content.history.entries)
         self._derived: dict[str, TraceSet] = {} if content.traces is None else {content.recipe_key: content.traces}
@@ -310,6 +313,7 @@ class Study(Notebook):
             with looking(self.path) as old:
 
                 def fill(root: h5py.File) -> tuple[TraceSet, Sequence[str]]:
+                    seen_of(old).copy(fresh=True).write(root)
                     copied = read_recordings(old, content.sources)
                     if copied:
                         write_recordings(root, copied, content.sources, work)
@@ -335,6 +339,13 @@ class Study(Notebook):
         self._are_saved()
         self._load()
 
+    def knows(self, path: Path, look: Look) -> bool:
+        """Return whether a file is one that was read, and still looks as it did then."""
+        with self._guard:
+            if self._seen is None:
+                self._seen = read_seen(self.path)
+            return self._seen.checksum(path, look) in self._checksums
+
     def add(self, files: Sequence[FoundFile], work: Work | None = None) -> Added:
         """Take in recordings that the study does not have yet, as one entry of the history, saved at once.
 
@@ -351,27 +362,38 @@ class Study(Notebook):
         with self._guard:
             self._need_writable()
             work = work or Work()
-            present, content, added = self.traces(work), self._content, Added()
-            history = self._history
-            with contextlib.suppress(_NothingNewError), changing(self.path) as root:
-                writer = TraceWriter(root, work, 0, present)
-                known = {source.sha256 for source in content.sources}
-                added = take_in(root, writer, files, self.recipe, known, content.sources, work)
-                if not added.sources:
-                    raise _NothingNewError
-                sources = (*content.sources, *added.sources)
-                writer.finish(derived_key(sources, self.recipe), self.recipe.key(FROM_RAW))
-                write_sources(root, sources, (*content.kept, *added.kept))
-                history = history.with_entry(history.change("import", added.text(), added.edits()))
-                write_history(root, history)
-                write_recipe(root, self._state.recipe)
-                write_decisions(root, self._state.decisions)
-                write_versions(root)
+            added = without_changing(files, lambda left: self._add(left, work))
             if added.sources:
-                self._history = history
-                self._are_saved()
                 self._load()
                 if self.recipe.calibration.offset_from_floor:  # it looks at all recordings together
                     self._derived.clear()
                     self.rewrite(work)
             return added
+
+    def _add(self, files: Sequence[FoundFile], work: Work) -> Added:
+        traces, content, added = self.traces(work), self._content, Added()
+        history = self._history
+        seen = (self._seen or read_seen(self.path)).copy()
+        with contextlib.suppress(_NothingNewError), changing(self.path) as root:
+            writer = TraceWriter(root, work, 0, traces)
+            present = Present(content.sources, self.decisions.removed_sources, seen)
+            added = take_in(root, writer, files, self.recipe, present, work)
+            if not added.sources:
+                raise _NothingNewError
+            sources = (*content.sources, *added.sources)
+            writer.finish(derived_key(sources, self.recipe), self.recipe.key(FROM_RAW))
+            write_sources(root, sources, (*content.kept, *added.kept))
+            seen.write(root)
+            history = history.with_entry(history.change("import", added.text(), added.edits()))
+            write_history(root, history)
+            write_recipe(root, self._state.recipe)
+            write_decisions(root, self._state.decisions)
+            write_versions(root)
+        if added.sources:
+            self._history = history
+            self._are_saved()
+        elif seen.unwritten:
+            with changing(self.path) as root:
+                seen.write(root)
+        self._seen = seen
+        return added
