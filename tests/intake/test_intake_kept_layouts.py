@@ -15,6 +15,7 @@ from meseta.recipe import Recipe
 from meseta.recipe.kept_layouts import KeptChannel, KeptLayout
 from meseta.recipe.layout_files import keep_in_file, with_layout
 from meseta.recipe.roles import ROLES
+from meseta.work import Work
 
 SAMPLES = 200
 FALL = np.concatenate([np.full(80, 2.0), np.full(60, 1.0), np.full(60, 1e-5)])
@@ -313,6 +314,26 @@ def test_a_study_keeps_its_layouts_and_new_files_must_fit_them(tmp_path):
         assert opened.recipe.intake.layouts == recipe.intake.layouts
         again = opened.analysis(opened.recipe.with_settings(["calibration.series_resistance_ohm=100"])).traces
         assert again.traces == 2  # made anew of what the study keeps, which fits as the files did
+
+
+def test_following_takes_what_fits_and_tells_of_what_does_not(tmp_path, monkeypatch):
+    monkeypatch.setattr("meseta.study.following._FOLLOW_SECONDS", 0.02)
+    folder = tmp_path / "night"
+    folder.mkdir()
+    recipe = kept(pair(folder / "a.csv"))
+    study.gather([folder], tmp_path / "night.h5", recipe)
+    pair(folder / "b.csv", "z (nm),G (S)", 7.748e-5)
+    pair(folder / "c.csv", factor=1.1)
+    work, told = Work(), []
+
+    def enough(*said):
+        told.append(said)
+        if len(told) == 2:
+            work.cancel.set()
+
+    answer, bad = study.gather([folder], tmp_path / "night.h5", work=work, follow=True, say=enough, grown=enough)
+    assert (answer["recordings_added"], answer["recordings"]) == (1, 2)
+    assert [one.where for one in bad] == ["b.csv"] and "does not fit layout 'rig'" in bad[0].what
 
 
 def test_a_layout_changed_in_a_study_that_its_recordings_do_not_fit_is_said(tmp_path):
