@@ -220,3 +220,24 @@ def test_a_bent_piezo_by_a_polynomial(tmp_path, unit):
     assert not any("turns" in text for text in traces.notes["assumptions"])
     bent = intake.read(path, recipe(nm_polynomial=[2.0, -0.5])).notes["assumptions"]
     assert any("turns within the range of the piezo" in text for text in bent)
+
+
+@pytest.mark.parametrize(("told", "doubted"), [(0.1, False), (1.0, True), (None, False)])
+def test_a_bias_that_contradicts_the_recorded_one_is_said(tmp_path, told, doubted):
+    """A recipe's bias wins over a recorded one, but not in silence: a divider may lie between them."""
+    current = np.full(50, 1.0)
+    path = record(tmp_path, current=(current, {"unit": "nA"}), bias=(np.full(50, 100.0), {"unit": "mV"}))
+    traces = intake.read(path, recipe(**({} if told is None else {"bias_volt": told})))
+    np.testing.assert_allclose(traces.conductance, 1e-9 / ((told or 0.1) * G0_SIEMENS), rtol=1e-6)
+    said = [text for text in traces.notes["assumptions"] if "shows a bias of 0.1 V, the recipe 1 V" in text]
+    assert bool(said) == doubted
+
+
+@pytest.mark.parametrize(("told", "doubted"), [(1e4, False), (1e5, True), (None, False)])
+def test_a_rate_that_contradicts_the_recorded_time_is_said(tmp_path, told, doubted):
+    values, time = np.linspace(1, 0.1, 500), np.arange(500) * 1e-4
+    path = record(tmp_path, conductance=(values, {"unit": "G0"}), time=(time, {"unit": "s"}))
+    stated = {"nm_per_second": 10.0} | ({} if told is None else {"sampling_hertz": told})
+    traces = intake.read(path, recipe(**stated))
+    assert traces.drive.step[0] == pytest.approx(10.0 / (told or 1e4), rel=1e-6)
+    assert any("a factor 10 apart" in text for text in traces.notes["assumptions"]) == doubted

@@ -386,3 +386,17 @@ def test_ramps_within_triggered_cycles(tmp_path):
     assert (~opening).sum() == len(pulls)
     assert np.abs(traces.table["record_start"][opening] - pulls[:, 0]).max() <= 2
     assert (traces.table["partner"][opening] >= 0).all()
+
+
+@pytest.mark.parametrize(("edge", "begins_high"), [("rising", True), ("rising", False), ("falling", False)])
+def test_a_record_that_begins_with_its_trigger_keeps_its_first_trace(tmp_path, edge, begins_high):
+    """An acquisition that the trigger starts shows no edge at its first sample; what stands before is no such trace."""
+    rng = np.random.default_rng(26)
+    conductance = np.tile(10.0 ** -np.linspace(-0.5, 5, 800), 6)
+    places = np.arange(0 if begins_high or edge == "falling" else 400, len(conductance), 800)
+    trigger = pulses(len(conductance), places, 40, rng)
+    trigger = 5.0 - trigger if edge == "falling" else trigger
+    traces = marked(tmp_path, conductance, {"method": "trigger", "trigger_edge": edge}, trigger=trigger)
+    first = 0 if begins_high or edge == "falling" else 400
+    assert traces.table["record_start"].tolist()[0] == first
+    assert any("before the first trigger" in one["why"] for one in traces.notes["incomplete"]) == (first > 0)

@@ -14,7 +14,8 @@ import numpy.typing as npt
 from meseta.errors import InputError
 from meseta.intake.alike import Memory
 from meseta.intake.calibrate import Calibration
-from meseta.intake.constants import calibration_of, plain_constants
+from meseta.intake.constants import calibration_of
+from meseta.intake.constants_said import plain_constants
 from meseta.intake.cutting import PULL, PUSH, Cut, cut
 from meseta.intake.drive import DriveAxis, drive_of, sample_interval
 from meseta.intake.kept_layouts import fit_of

@@ -9,12 +9,12 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import replace
 from functools import partial
-from typing import Any, Final
 
 import numpy as np
 
 from meseta.errors import InputError
 from meseta.intake.calibrate import AMPLIFIER_KINDS, Calibration
+from meseta.intake.constants_said import DIRECT, doubts_of, missing, no_signal
 from meseta.intake.curve import curve_of
 from meseta.intake.drive import sample_interval
 from meseta.intake.mains import find_pickup
@@ -26,10 +26,7 @@ from meseta.intake.uncertainty import ERROR_SETTINGS
 from meseta.intake.units import parse_unit
 from meseta.recipe.calibration import CalibrationSettings
 
-__all__ = ["calibration_of", "plain_constants"]
-
-DIRECT: Final = ("conductance", "log_conductance", "resistance")
-"""Recorded quantities that somebody calibrated already; only the recipe may correct them."""
+__all__ = ["calibration_of"]
 
 
 def calibration_of(recording: Recording, settings: CalibrationSettings) -> Calibration:
@@ -59,7 +56,7 @@ def calibration_of(recording: Recording, settings: CalibrationSettings) -> Calib
     channel = recording.channel("resistance")
     if channel is not None:
         return found.made("resistance", channel, ())
-    raise _no_signal(recording)
+    raise no_signal(recording)
 
 
 def _amplified(found: _Finder, recording: Recording, channel: RawChannel) -> Calibration:
@@ -78,18 +75,6 @@ def _amplified(found: _Finder, recording: Recording, channel: RawChannel) -> Cal
     is_scaled = found.settings.gain_ratio_from_overlap and (overlap is None or overlap.ratio > 0)
     made = replace(made, overlap=overlap, is_scaled_by_overlap=is_scaled)
     return replace(made, doubts=(*made.doubts, *overlap_doubts(made)))
-
-
-def _no_signal(recording: Recording) -> InputError:
-    names = [channel.name for channel in recording.channels]
-    in_volts = [one.name for one in recording.channels if one.role in ("other", "voltage") and one.unit.endswith("V")]
-    likely, role, unit = (in_volts[-1], "amplifier", "V") if in_volts else (names[-1], "conductance", "G0")
-    shown = ", ".join(f"'{name}'" for name in names[:6]) + (" ..." if len(names) > 6 else "")
-    return InputError(
-        f"no channel is known to be conductance, current or amplifier volts among {shown}",
-        recording.source.name,
-        f'say what it is: --set intake.channels."{likely}"=\'{{role = "{role}", unit = "{unit}"}}\'',
-    )
 
 
 class _Finder:
@@ -165,24 +150,24 @@ class _Finder:
             if one is not None and one.unit:
                 parse_unit(one.unit, f"{self._recording.source.name}, '{one.name}'")
         bias_channel = None if self.settings.bias_volt is not None else self._recording.channel("bias")
-        constants, missing = {}, []
+        constants, lacking = {}, []
         for name in needs:
             if name == "bias_volt" and bias_channel is not None:
                 continue
             value = self.gain() if name == "gain_volt_per_ampere" else self.find(name)
             if value is None or not np.all(np.asarray(value[0]) != 0):
-                missing.append(name)
+                lacking.append(name)
             else:
                 constants[name] = value
-        if missing:
-            raise self._missing(kind, channel, missing)
+        if lacking:
+            raise missing(self._recording, kind, channel, lacking)
         made = Calibration(
             kind,
             channel,
             second,
             bias_channel if "bias_volt" in needs else None,
             constants | self._optional(kind) | self._errors(),
-            self._doubts(kind, channel),
+            doubts_of(self._recording, self.settings, kind, channel),
         )
         return self._with_amplifier(made) if kind in AMPLIFIER_KINDS else self._cleaned(made)
 
@@ -258,62 +243,3 @@ class _Finder:
                 found[channel.name] = pickup
                 doubts.append(f"mains pickup is removed from '{channel.name}': {pickup.text()}")
         return replace(made, pickup=found, doubts=(*made.doubts, *doubts))
-
-    def _doubts(self, kind: str, channel: RawChannel) -> tuple[str, ...]:
-        doubts, settings = list(channel.doubts), self.settings
-        if kind == "conductance" and not channel.unit:
-            doubts.append(f"the unit of '{channel.name}' is not stated: taken as G0")
-        for name, words in (("series_resistance_ohm", "series"), ("source_resistance_ohm", "source")):
-            stated = self._recording.metadata.get(name)
-            if kind in DIRECT and stated and getattr(settings, name) is None:
-                doubts.append(
-                    f"the file states a {words} resistance of {stated} ohm; it is not removed from a recorded "
-                    f"{channel.role} unless calibration.{name} says so"
-                )
-        resistor = self._recording.metadata.get("reference_resistance_ohm")
-        if resistor and settings.reference_resistance_ohm is None:
-            doubts.append(
-                f"the file states a reference resistor of {resistor} ohm; it is not used unless "
-                "calibration.reference_resistance_ohm says so"
-            )
-        without = [name for name in ("bias_divided_by", "reference_resistance_ohm") if getattr(settings, name)]
-        if kind in DIRECT and without:
-            doubts.append(f"calibration.{without[0]} has no effect on a recorded {channel.role}")
-        return tuple(doubts)
-
-    def _missing(self, kind: str, channel: RawChannel, names: Sequence[str]) -> InputError:
-        words = {
-            "bias_volt": "the bias",
-            "gain_volt_per_ampere": "the gain",
-            "volt_per_decade": "the volts per decade",
-            "reference_ampere": "the reference current",
-            "high_gain_volt_per_ampere": "the gain of the second amplifier",
-        }
-        what = "a current was recorded" if kind == "current" else "amplifier volts were recorded"
-        lacking = " and ".join(words.get(name, name) for name in names)
-        settings = " and ".join(f"calibration.{name}" for name in names)
-        return InputError(
-            f"{what} ('{channel.name}'), but neither recipe nor file states {lacking}",
-            self._recording.source.name,
-            f"give {settings}, for example --set calibration.{names[0]}=...",
-        )
-
-
-def plain_constants(calibration: Calibration) -> dict[str, Any]:
-    """Return the constants as plain values with their origin, for notes and the file check."""
-    found: dict[str, Any] = {}
-    for name, (value, origin) in calibration.constants.items():
-        array = np.asarray(value)
-        plain = float(array) if array.ndim == 0 else [float(array.min()), float(array.max())]
-        found[name] = {"value": plain, "from": origin}
-    if calibration.curve is not None:
-        volt = calibration.curve.volt
-        found["amplifier_curve"] = {
-            "value": f"{len(volt)} points from {volt[0]:g} to {volt[-1]:g} V",
-            "from": "recipe",
-        }
-    if calibration.overlap is not None:
-        origin = "fitted in the overlap" + (", used" if calibration.is_scaled_by_overlap else ", not used")
-        for name in ("ratio", "ratio_error", "offset_ampere"):
-            found[f"overlap_{name}"] = {"value": getattr(calibration.overlap, name), "from": origin}
-    return found

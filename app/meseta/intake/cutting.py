@@ -125,13 +125,30 @@ def _triggered(
         if note not in result.notes:
             result.notes.append(note)
         return [span]
-    if edges[0] > first:
+    usual = float(np.median(np.diff(edges))) if len(edges) > 1 else 0.0
+    if edges[0] > first and _begins_with_trigger(recording, mark, level, settings, (first, edges[0]), usual):
+        edges.insert(0, first)
+    elif edges[0] > first:
         result.apart.append(apart(first, edges[0], "before the first trigger"))
     parts = list(zip(edges, [*edges[1:], last], strict=True))
-    usual = float(np.median(np.diff(edges))) if len(edges) > 1 else 0.0
     if last - edges[-1] < CUT_OFF * usual:
         result.apart.append(apart(*parts.pop(), "the record ends within the trace"))
     return parts
+
+
+def _begins_with_trigger(
+    recording: Recording,
+    mark: RawChannel,
+    level: tuple[float, float],
+    settings: CuttingSettings,
+    span: tuple[int, int],
+    usual: float,
+) -> bool:
+    """Return whether a record began at an edge, whose other side it does not show: a whole trace before the next."""
+    if not 0.0 < CUT_OFF * usual <= span[1] - span[0]:
+        return False
+    is_high = bool(recording.values(mark, span[0], span[0] + 1)[0] >= level[0])
+    return settings.trigger_edge == "both" or is_high == (settings.trigger_edge == "rising")
 
 
 def _cut_part(

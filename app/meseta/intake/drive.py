@@ -11,9 +11,10 @@ from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.units import unit_factor
 from meseta.recipe.calibration import CalibrationSettings
 
-__all__ = ["DriveAxis", "drive_of", "sample_interval"]
+__all__ = ["DriveAxis", "drive_of", "interval_doubts", "sample_interval"]
 
 LOOKED_SAMPLES = 2_000_000
+SAME_RATE = 0.01
 PLAUSIBLE_NM = (0.02, 200.0)
 """Span of one trace that a displacement without a unit must have to be taken as nm (common practice, no source)."""
 
@@ -71,16 +72,35 @@ def sample_interval(recording: Recording, settings: CalibrationSettings) -> tupl
     rate = _stated(recording, settings, "sampling_hertz")
     if rate is not None and rate[1] == "recipe":
         return 1.0 / rate[0], "recipe"
-    time = recording.channel("time")
-    if time is not None and recording.samples > 1 and time.unit:
-        last = min(int(recording.offsets[1]), 2000)
-        steps = np.diff(recording.values(time, 0, last)) * unit_factor(time.unit, "s")
-        steps = steps[np.isfinite(steps) & (steps > 0)]
-        if len(steps):
-            return float(np.median(steps)), f"time channel '{time.name}'"
+    shown = _interval_by_time(recording)
+    if shown is not None:
+        return shown
     if rate is not None:
         return 1.0 / rate[0], rate[1]
     return float("nan"), "not known"
+
+
+def _interval_by_time(recording: Recording) -> tuple[float, str] | None:
+    """Return (seconds from sample to sample, whence) as a channel of the time shows it."""
+    time = recording.channel("time")
+    if time is None or recording.samples < 2 or not time.unit:
+        return None
+    last = min(int(recording.offsets[1]), 2000)
+    steps = np.diff(recording.values(time, 0, last)) * unit_factor(time.unit, "s")
+    steps = steps[np.isfinite(steps) & (steps > 0)]
+    return (float(np.median(steps)), f"time channel '{time.name}'") if len(steps) else None
+
+
+def interval_doubts(recording: Recording, settings: CalibrationSettings) -> tuple[str, ...]:
+    """Return in words where a stated sampling rate and the recorded time contradict each other."""
+    rate, shown = _stated(recording, settings, "sampling_hertz"), _interval_by_time(recording)
+    if rate is None or shown is None or abs(rate[0] * shown[0] - 1.0) <= SAME_RATE:
+        return ()
+    used = "the stated rate" if rate[1] == "recipe" else "the recorded time"
+    return (
+        f"the {shown[1]} shows {1 / shown[0]:.4g} samples a second, {rate[0]:.4g} are stated ({rate[1]}), a factor "
+        f"{max(rate[0] * shown[0], 1 / (rate[0] * shown[0])):.3g} apart: {used} is used (calibration.sampling_hertz)",
+    )
 
 
 def drive_of(recording: Recording, settings: CalibrationSettings, pull_sign: float) -> DriveAxis:
