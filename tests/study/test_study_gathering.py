@@ -167,28 +167,6 @@ def test_another_unit_of_the_drive_is_refused_and_the_study_stays_as_it_was(tmp_
         assert len(study.sources) == 1 and study.check() == []
 
 
-def test_following_takes_files_once_they_have_stopped_growing(tmp_path, night, monkeypatch):
-    """The folder changes between two looks; a file that grew since the last look is left for the next one."""
-    work = Work(threads=1)
-    looks = []
-    growing = night / "part3.h5"
-
-    def wait(_):
-        looks.append(len(looks))
-        if len(looks) == 1:
-            growing.write_bytes(b"\x89HDF half of a file")
-        if len(looks) == 2:
-            write_recording(growing, seed=7, traces=2)
-        if len(looks) == 5:
-            work.cancel.set()
-        return work.cancel.is_set()
-
-    monkeypatch.setattr(work.cancel, "wait", wait)
-    answer, bad = gather([night], tmp_path / "s.h5", work=work, follow=True)
-    assert answer["recordings_added"] == 4 and answer["traces"] == 14 and bad == []
-    assert looks == [0, 1, 2, 3, 4]
-
-
 def test_the_study_in_the_folder_of_its_recordings_is_not_gathered(night):
     gather([night], night / "study.h5")
     answer, bad = gather([night], night / "study.h5")

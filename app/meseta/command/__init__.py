@@ -25,7 +25,7 @@ def main(arguments: Sequence[str] | None = None) -> None:
 def _outcome(arguments: list[str]) -> int:
     as_json = "--json" in arguments
     try:
-        cli.main(arguments, prog_name="meseta", standalone_mode=False)
+        code = cli.main(arguments, prog_name="meseta", standalone_mode=False)
     except MesetaError as error:
         return _complain(error, as_json)
     except click.UsageError as error:
@@ -53,7 +53,7 @@ def _outcome(arguments: list[str]) -> int:
             "run again with MESETA_DETAILS=1 set and report what it prints",
         )
         return _complain(fault, as_json)
-    return 0
+    return code if isinstance(code, int) else 0
 
 
 def _complain(error: MesetaError, as_json: bool) -> int:

@@ -200,7 +200,10 @@ class Arrivals:
 
     def _why_doubted(self, file: FoundFile, rest: _Rest, table: frozenset[str] | None) -> str:
         why, looks = why_unfinished(file.path)
-        if looks is None or rest.quiet < looks:
+        if looks is None:
+            rest.quiet = 0  # a pause of a program that holds the file says nothing of what comes once it is closed
+            return why
+        if rest.quiet < looks:
             return why
         if rest.quiet < DOUBTFUL_LOOKS:
             alone = _stem(str(file.path)) not in self._beside and str(file.path) not in self._beside
