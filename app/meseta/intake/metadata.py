@@ -190,8 +190,9 @@ def _with_units(pairs: list[tuple[str, Any]]) -> list[tuple[str, Any]]:
     for name, raw in pairs:
         value, unit = plain_value(raw), units.get(_key(str(name)))
         constant, unit_in_name = _constant_of(str(name)) if unit else ("", "")
-        if constant and not unit_in_name and isinstance(value, int | float) and not isinstance(value, bool):
-            joined.append((name, f"{float(value)!r} {unit}"))
+        number, stated = _number_and_unit(value) if constant and isinstance(value, str | int | float) else (None, "")
+        if number is not None and not stated and not unit_in_name:
+            joined.append((name, f"{number!r} {unit}"))
         else:
             joined.append((name, raw))
     return joined
