@@ -24,6 +24,7 @@ KERNEL_MODULES = (
     "meseta.intake.calibration_kernels",
     "meseta.intake.text_kernels",
     "meseta.segmentation.noise_kernels",
+    "meseta.segmentation.partition_kernels",
     "meseta.segmentation.kernels",
     "meseta.segmentation.stretch_kernels",
     "meseta.segmentation.joining_kernels",

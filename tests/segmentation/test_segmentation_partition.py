@@ -45,14 +45,15 @@ def test_worked_example_objective():
     st.integers(1, 60),
     st.integers(1, 6),
     st.sampled_from([0.0, 0.1, 1.0, 5.0, 20.0]),
-    st.sampled_from(["steps", "ramp", "rounded"]),
+    st.sampled_from(["steps", "ramp", "rounded", "outliers"]),
     st.booleans(),
 )
 def test_cost_equals_the_dynamic_programme(seed, n, minimum, penalty, shape, weighted):
     rng = np.random.default_rng(seed)
     minimum = min(minimum, n)
     y = np.cumsum(rng.standard_normal(n) * (rng.random(n) < 0.1) * 5) + rng.standard_normal(n)
-    y = {"steps": y, "ramp": 0.3 * np.arange(n) + 0.1 * y, "rounded": np.round(y)}[shape]
+    shapes = {"steps": y, "ramp": 0.3 * np.arange(n) + 0.1 * y, "rounded": np.round(y)}
+    y = shapes.get(shape, rng.standard_cauchy(n))
     weights = rng.integers(0, 3, n).astype(float) if weighted else np.ones(n)
     ends = optimal_partition(y, penalty, weights, minimum)
     lengths = np.diff(np.concatenate([[0], ends]))
@@ -60,6 +61,24 @@ def test_cost_equals_the_dynamic_programme(seed, n, minimum, penalty, shape, wei
     assert ends[-1] == n
     assert lengths.min() >= minimum
     assert partition_cost(y, ends, penalty, weights) == pytest.approx(best, rel=1e-9, abs=1e-9)
+
+
+@pytest.mark.parametrize("minimum", [2, 5])
+def test_newcomers_that_enter_late_stay_exact_among_outliers(minimum):
+    rng = np.random.default_rng(5)
+    for _ in range(40):
+        y = rng.standard_cauchy(90)
+        ends = optimal_partition(y, 0.0, minimum_length=minimum)
+        best = dynamic_programme(y - y.mean(), 0.0, np.ones(len(y)), minimum)
+        assert partition_cost(y, ends, 0.0) == pytest.approx(best, rel=1e-9)
+
+
+def test_more_candidates_than_the_first_room_holds():
+    """A smooth ramp keeps more than 85 candidates alive: the room grows, and nothing is lost."""
+    y = np.linspace(-230, 230, 700)
+    ends = optimal_partition(y, 1e6)
+    best = dynamic_programme(y, 1e6, np.ones(len(y)), 1)
+    assert partition_cost(y, ends, 1e6) == pytest.approx(best, rel=1e-9)
 
 
 @pytest.mark.parametrize("minimum", [1, 3])

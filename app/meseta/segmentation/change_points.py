@@ -6,7 +6,7 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import CallError
-from meseta.segmentation.kernels import partition
+from meseta.segmentation.partition_kernels import partition
 
 __all__ = ["optimal_partition", "partition_cost"]
 
@@ -50,12 +50,14 @@ def optimal_partition(
     _check(y, w, penalty, minimum_length)
     if len(y) == 0:
         return np.empty(0, np.int64)
-    missing = ~np.isfinite(y)
-    if missing.any():
+    finite = np.isfinite(y)
+    if finite.all():
+        y -= np.mean(y)
+    else:
         w = np.ones(len(y)) if len(w) == 0 else w
-        w[missing] = 0.0
-    y -= np.mean(y[~missing]) if not missing.all() else 0.0
-    y[missing] = 0.0
+        w[~finite] = 0.0
+        y -= np.mean(y[finite]) if finite.any() else 0.0
+        y[~finite] = 0.0
     ends: npt.NDArray[np.int64] = partition(y, w, float(penalty), min(minimum_length, len(y)))[0]
     return ends
 

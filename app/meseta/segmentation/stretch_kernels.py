@@ -9,7 +9,8 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
-from meseta.segmentation.kernels import partition, partition_lines
+from meseta.segmentation.kernels import partition_lines
+from meseta.segmentation.partition_kernels import partition
 
 __all__ = ["Scale", "decades_between", "restored", "share_at", "stabilise", "stretches"]
 
