@@ -287,7 +287,8 @@ def test_two_layouts_that_fit_and_say_different_things_are_an_error_until_one_is
         intake.read(str(path), both)
     chosen = intake.read(str(path), both.with_settings(['intake.use_layout="no drive"']))
     assert chosen.drive.unit != "nm"
-    same = with_layout(one, "again", layout)
+    spelled = {"G (G0)": layout.channels["G (G0)"].model_copy(update={"unit": "2e2/h"})}
+    same = with_layout(one, "again", layout.model_copy(update={"channels": layout.channels | spelled}))
     assert intake.read(str(path), same).traces == 1
 
 

@@ -310,7 +310,7 @@ def fit_of(recording: Recording, settings: IntakeSettings) -> Fit | None:
             best.differences,
             as_seen(recording),
         )
-    unlike = [one.name for one in found[1:] if _meaning(one) != _meaning(best)]
+    unlike = [one.name for one in found[1:] if not _means_the_same(one, best)]
     if unlike:
         raise LayoutError(
             f"fits layouts {_listed([best.name, *unlike])}, which read it in different ways",
@@ -323,8 +323,12 @@ def fit_of(recording: Recording, settings: IntakeSettings) -> Fit | None:
     return best
 
 
-def _meaning(fit: Fit) -> list[tuple[str, str, float, float]]:
-    return [(one.role, one.unit, one.scale, one.offset) for one in fit.channels]
+def _means_the_same(one: Fit, other: Fit) -> bool:
+    """Return whether two layouts that a recording fits read it alike."""
+    return all(
+        (a.role, a.scale, a.offset) == (b.role, b.scale, b.offset) and _same_unit(a.unit, b.unit)
+        for a, b in zip(one.channels, other.channels, strict=True)
+    )
 
 
 def _answered(recording: Recording, name: str, layout: KeptLayout) -> tuple[RawChannel, ...]:
