@@ -1,5 +1,6 @@
 """Following folders: what waits, what is taken once, what is told; killed at any moment and started again."""
 
+import errno
 import os
 import signal
 import subprocess
@@ -12,6 +13,7 @@ import pytest
 from meseta.errors import StudyError
 from meseta.recipe import Recipe
 from meseta.study import Study, following, gather, gathering
+from meseta.study.pages import PagedFile
 from meseta.work import Work
 
 HEAD = "displacement (nm),conductance (G0)\n"
@@ -259,6 +261,38 @@ def test_only_one_process_can_follow_into_a_study(tmp_path, night):
     follow(night, tmp_path / "s.h5", second, lambda: (night / "a.csv").write_text(text(1)), *[None] * 5, second)
     assert len(refused) == 2 and "being made by" in refused[0] and "held by" in refused[1]
     assert names(tmp_path / "s.h5") == ["a.csv"]
+
+
+def test_a_full_disk_ends_it_with_a_clear_message_and_the_study_is_whole(tmp_path, night, monkeypatch):
+    (night / "a.csv").write_text(text(1))
+    gather([night], tmp_path / "s.h5")
+    (night / "b.csv").write_text(text(2))
+
+    def full(self):
+        raise OSError(errno.ENOSPC, "No space left on device")
+
+    monkeypatch.setattr(PagedFile, "commit", full)
+    with pytest.raises(StudyError, match="No space left on device"):
+        follow(night, tmp_path / "s.h5")
+    monkeypatch.undo()
+    assert names(tmp_path / "s.h5") == ["a.csv"]
+    follow(night, tmp_path / "s.h5")
+    assert names(tmp_path / "s.h5") == ["a.csv", "b.csv"]
+
+
+def test_room_that_commits_leave_behind_is_given_back(tmp_path, night, monkeypatch):
+    (night / "0.csv").write_text(text(0))
+    steps = []
+    for number in range(1, 9):
+        steps += [lambda number=number: (night / f"{number}.csv").write_text(text(number)), None, None, None]
+    follow(night, tmp_path / "loose.h5", *steps)
+    for path in night.iterdir():
+        if path.name != "0.csv":
+            path.unlink()
+    monkeypatch.setattr(following, "_LOOSE_BYTE", -(1 << 40))
+    follow(night, tmp_path / "tight.h5", *steps)
+    assert by_source(tmp_path / "tight.h5") == by_source(tmp_path / "loose.h5")
+    assert (tmp_path / "tight.h5").stat().st_size < 0.8 * (tmp_path / "loose.h5").stat().st_size
 
 
 FOLLOWER = """

@@ -113,6 +113,8 @@ class Arrivals:
     """
 
     _rests: dict[Path, _Rest] = field(default_factory=dict)
+    _looks: dict[str, Look] = field(default_factory=dict)
+    _settled: bool = False
     _listed: frozenset[str] = frozenset()
     _files: list[FoundFile] = field(default_factory=list)
     _beside: dict[str, tuple[Look, ...]] = field(default_factory=dict)
@@ -146,11 +148,15 @@ class Arrivals:
             Where what was named is not there.
         """
         looks = _listing(named)
+        self.known, self.late = [], []
+        if looks and looks == self._looks and not self.waiting and self._settled:
+            return []
+        self._looks, self._settled = looks, False
         if frozenset(looks) != self._listed or not looks or not all(Path(one).is_dir() for one in named):
             self._files, self._listed = files_meant(named, study), frozenset(looks)
         self._beside = _sidecars_of(looks)
         self._folders = {os.path.dirname(stem) for stem in self._beside}  # noqa: PTH120  no path object a file
-        self.waiting, self.known, self.late = [], [], []
+        self.waiting = []
         for path in self._rests.keys() - {file.path for file in self._files}:
             del self._rests[path]
         ready = []
@@ -164,6 +170,7 @@ class Arrivals:
                 self.waiting.append(Waiting(file, why))
             elif not self._rests[file.path].done:
                 ready.append(file)
+        self._settled = not ready and all(Path(one).is_dir() for one in named)
         return ready
 
     def done(self, files: Iterable[FoundFile]) -> None:

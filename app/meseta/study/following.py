@@ -5,6 +5,7 @@ Recordings stand in a study in the order in which they were taken in; those of o
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Callable, Iterable, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, field
@@ -35,6 +36,8 @@ from meseta.work import Progress, Work
 __all__ = ["create_study", "folders_of", "gather"]
 
 _FOLLOW_SECONDS: Final = 2.0
+_LOOSE_BYTE: Final = 64_000_000
+"""So much beyond twice its size a study may grow before room that earlier commits left behind is given back."""
 Say = Callable[[MesetaError], None]
 
 
@@ -189,6 +192,7 @@ class _Following:
     total: Added = field(default_factory=Added)
     arrivals: Arrivals = field(default_factory=Arrivals)
     trouble: str = ""
+    tight_byte: int = 0
 
 
 def _follow(one: _Following) -> tuple[dict[str, Any], list[MesetaError]]:
@@ -215,6 +219,7 @@ def _follow(one: _Following) -> tuple[dict[str, Any], list[MesetaError]]:
 def _open(one: _Following, stack: ExitStack) -> None:
     one.study = stack.enter_context(Study.open(one.path, folders=folders_of(one.named)))
     _put_in_force(one.study, one.recipe)
+    one.tight_byte = one.path.stat().st_size
 
 
 def _look(one: _Following, stack: ExitStack, making: ExitStack) -> None:
@@ -241,7 +246,17 @@ def _look(one: _Following, stack: ExitStack, making: ExitStack) -> None:
         one.say(_late(file))
     if added.sources and one.study is not None:
         one.grown(one.study, added)
+        _tighten(one, one.study)
     one.work.report(Progress(_status(one.arrivals.waiting), len(one.total.sources), 0, "recordings"))
+
+
+def _tighten(one: _Following, study: Study) -> None:
+    """Write a study anew that has grown to twice its size; each commit leaves its former tables behind in the file."""
+    if one.path.stat().st_size <= 2 * one.tight_byte + _LOOSE_BYTE:
+        return
+    with contextlib.suppress(StudyError):  # no room for a second file: it stays as it is
+        study.rewrite(one.work)
+    one.tight_byte = one.path.stat().st_size
 
 
 def _nothing(_: Path, __: Look) -> bool:
