@@ -18,7 +18,7 @@ from meseta.intake.readers.contents import Contents
 from meseta.intake.readers.hdf5 import understood
 from meseta.intake.readers.hdf5_tree import Node, Tree
 from meseta.intake.readers.spool import Spool
-from meseta.intake.readers.tdms_places import Places, places_of
+from meseta.intake.readers.tdms_places import Places, has_cut_chunks, places_of
 from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["TdmsReader"]
@@ -91,7 +91,7 @@ class TdmsReader:
             try:
                 file = TdmsFile.open(opened)
                 found = understood(_tree(file, path), path, settings)
-                cut_off = bool(file.file_status.incomplete_final_segment)
+                cut_off = bool(file.file_status.incomplete_final_segment) or has_cut_chunks(file)
             except _FAULTS as error:
                 raise InputError(f"is damaged ({str(error)[:60]})", str(path), "copy the file again") from error
             doubts = ("its last part is not whole: it was cut off while it was written",) if cut_off else ()

@@ -17,7 +17,7 @@ import numpy.typing as npt
 
 from meseta.intake.readers.file_array import InFile
 
-__all__ = ["Places", "places_of"]
+__all__ = ["Places", "has_cut_chunks", "places_of"]
 
 _RAW_DATA, _INTERLEAVED, _BIG_ENDIAN, _DAQMX = 1 << 3, 1 << 5, 1 << 6, 1 << 7
 """Bits of a segment's table of contents."""
@@ -133,6 +133,14 @@ def places_of(file: Any, channel: Any, path: Path) -> Places | None:
     if scale is None and stretches[0].dtype.newbyteorder("=") != np.dtype(channel.dtype):
         return None
     return Places(InFile(path), tuple(stretches), offsets, scale)
+
+
+def has_cut_chunks(file: Any) -> bool:
+    """Return whether a segment holds less than the chunks that it speaks of; False where that is not known."""
+    try:
+        return any(segment.final_chunk_lengths_override is not None for segment in file._reader._segments)
+    except (AttributeError, TypeError):
+        return False
 
 
 def _scale_of(channel: Any, dtype: np.dtype[Any]) -> Callable[[Values], Values] | None:
