@@ -313,8 +313,8 @@ def _what_is_wrong(files: Sequence[FoundFile], attempt: Callable[[Sequence[Found
 def _status(waiting: Sequence[Waiting]) -> str:
     if not waiting:
         return "following"
-    more = f" and {len(waiting) - 1} more" if len(waiting) > 1 else ""
-    return f"following: {waiting[0].file.name}{more} waits ({waiting[0].why})"
+    more = f", and {len(waiting) - 1} more" if len(waiting) > 1 else ""
+    return f"following: {waiting[0].file.name} waits ({waiting[0].why}){more}"
 
 
 def _expected_samples(files: Sequence[FoundFile]) -> int:
