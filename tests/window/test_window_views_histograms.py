@@ -7,7 +7,7 @@ import pytest
 from driving import click, place_of, press
 from PySide6.QtCore import Qt
 from PySide6.QtGui import QGuiApplication
-from PySide6.QtWidgets import QFileDialog
+from PySide6.QtWidgets import QApplication, QFileDialog
 
 from meseta import histograms
 from meseta.analysis import Analysis, compare_parts, compare_recordings, yield_in_window
@@ -274,3 +274,35 @@ def test_closing_while_views_work_is_safe(make, settle):
     settle(window)
     assert window.widgets["correlation"].data() is None or window.session.traces is None
     assert place_of(window.widgets["correlation"], 0.0, 0.0) is not None
+
+
+def typed(panel, rows):
+    panel.fill(rows)
+    QApplication.processEvents()
+
+
+def test_points_of_the_series_are_kept_in_the_study_and_can_be_undone(window, settle, make, place, qtbot):
+    panel = show(window, settle, "decay")
+    rows = (("0.9", "1e-3", "", "1e-4", "a"), ("1.4", "7e-5", "", "", "b"), ("1.9", "6e-6", "", "", "c"))
+    typed(panel, rows)
+    assert window.session.document.decisions.length_series.rows == rows
+    typed(panel, rows[:2])
+    window.run_action("undo")
+    assert panel.series().rows == rows
+    window.commands.save_to(str(place / "series.h5"))
+    settle(window)
+    other = make()
+    other.commands.open_paths([str(place / "series.h5")])
+    qtbot.waitUntil(lambda: other.session.traces is not None, timeout=300_000)
+    settle(other)
+    assert other.widgets["decay"].series().rows == rows
+
+
+def test_points_written_before_a_recording_is_open_belong_to_it(make, settle, mixture, qtbot):
+    window = make()
+    panel = show(window, settle, "decay")
+    typed(panel, (("0.9", "1e-3", "", "", "a"),))
+    window.session.open_traces(mixture, "mixture")
+    qtbot.waitUntil(lambda: bool(window.session.document.decisions.length_series.rows), timeout=300_000)
+    assert window.session.document.decisions.length_series.rows[0][4] == "a"
+    settle(window)

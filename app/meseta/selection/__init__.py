@@ -13,6 +13,7 @@ _PUBLIC = {
     "Decisions": "decisions",
     "Event": "decisions",
     "Group": "decisions",
+    "LengthSeries": "decisions",
     "RemovedRange": "decisions",
     "Rule": "conditions",
     "Selection": "results",
@@ -33,6 +34,7 @@ __all__ = [
     "Decisions",
     "Event",
     "Group",
+    "LengthSeries",
     "RemovedRange",
     "Rule",
     "Selection",
@@ -50,7 +52,7 @@ __all__ = [
 
 if TYPE_CHECKING:
     from meseta.selection.conditions import Rule
-    from meseta.selection.decisions import Decisions, Event, Group, RemovedRange, Verdict
+    from meseta.selection.decisions import Decisions, Event, Group, LengthSeries, RemovedRange, Verdict
     from meseta.selection.grammar import parse_rule
     from meseta.selection.plugins import installed_measures, with_measures
     from meseta.selection.results import Selection, SelectionTable

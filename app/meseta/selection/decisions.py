@@ -8,7 +8,7 @@ from collections.abc import Iterable, Mapping
 from dataclasses import asdict, dataclass, field, replace
 from typing import Any
 
-__all__ = ["Decisions", "Event", "Group", "RemovedRange", "Verdict"]
+__all__ = ["Decisions", "Event", "Group", "LengthSeries", "RemovedRange", "Verdict"]
 
 
 @dataclass(frozen=True)
@@ -61,6 +61,22 @@ class RemovedRange:
 
 
 @dataclass(frozen=True)
+class LengthSeries:
+    """The points of a decay constant as the user wrote them, from this recording and others.
+
+    Attributes
+    ----------
+    unit : str
+        What a length counts ("nm", "carbon" ...).
+    rows : tuple of tuple of str
+        Length, conductance in G0, error of either, label: as text, so that what was written stays as it was written.
+    """
+
+    unit: str = "nm"
+    rows: tuple[tuple[str, ...], ...] = ()
+
+
+@dataclass(frozen=True)
 class Decisions:
     """All that was decided by hand, by the identity of traces (text form).  Frozen: each change makes a new one."""
 
@@ -69,13 +85,15 @@ class Decisions:
     events: tuple[Event, ...] = ()
     removed_sources: frozenset[str] = frozenset()
     removed_ranges: tuple[RemovedRange, ...] = ()
+    length_series: LengthSeries = LengthSeries()
 
     def __bool__(self) -> bool:
         """Return whether anything was decided."""
-        return bool(self.verdicts or self.groups or self.events or self.removed_sources or self.removed_ranges)
+        removed = self.removed_sources or self.removed_ranges
+        return bool(self.verdicts or self.groups or self.events or removed or self.length_series.rows)
 
     def key(self) -> str:
-        """Return a hash of the content that can change a result (colours and symbols cannot)."""
+        """Return a hash of the content that can change a result (colours, symbols and length series cannot)."""
         plain = {
             "verdicts": {name: asdict(verdict) for name, verdict in sorted(self.verdicts.items())},
             "groups": {name: sorted(group.members) for name, group in sorted(self.groups.items())},
@@ -145,6 +163,7 @@ class Decisions:
             "events": [asdict(event) for event in self.events],
             "removed_sources": sorted(self.removed_sources),
             "removed_ranges": [asdict(part) for part in self.removed_ranges],
+            "length_series": {"unit": self.length_series.unit, "rows": [list(row) for row in self.length_series.rows]},
         }
 
     @classmethod
@@ -159,4 +178,9 @@ class Decisions:
             events=tuple(Event(**event) for event in plain.get("events", ())),
             removed_sources=frozenset(plain.get("removed_sources", ())),
             removed_ranges=tuple(RemovedRange(**part) for part in plain.get("removed_ranges", ())),
+            length_series=_series(plain.get("length_series", {})),
         )
+
+
+def _series(plain: Mapping[str, Any]) -> LengthSeries:
+    return LengthSeries(plain.get("unit", "nm"), tuple(tuple(map(str, row)) for row in plain.get("rows", ())))

@@ -13,7 +13,7 @@ import numpy as np
 
 from meseta import __version__
 from meseta.recipe import Recipe
-from meseta.selection import Decisions, Event, Group, RemovedRange, Verdict
+from meseta.selection import Decisions, Event, Group, LengthSeries, RemovedRange, Verdict
 from meseta.study.columns import write_array, write_columns, write_text
 from meseta.study.history import Entry, History
 from meseta.study.strict import group, read_array, read_text
@@ -78,7 +78,7 @@ def read_versions(root: h5py.Group) -> dict[str, str]:
 
 
 def write_decisions(root: h5py.Group, decisions: Decisions) -> None:
-    """Write ``/decisions``, ``/groups``, ``/events`` and ``/removed``."""
+    """Write ``/decisions``, ``/groups``, ``/events``, ``/removed`` and ``/length_series``."""
     home = _renewed(root, "decisions")
     verdicts = decisions.verdicts
     write_columns(
@@ -110,6 +110,12 @@ def write_decisions(root: h5py.Group, decisions: Decisions) -> None:
             "range_reason": _texts(part.reason for part in ranges),
         },
     )
+    series = decisions.length_series
+    columns = {name: _texts(row[place] for row in series.rows) for place, name in enumerate(_SERIES)}
+    write_columns(_renewed(root, "length_series"), {**columns, "unit": _texts([series.unit])})
+
+
+_SERIES = ("length", "conductance_g0", "length_error", "conductance_error_g0", "label")
 
 
 def _write_groups(home: h5py.Group, groups: Mapping[str, Group]) -> None:
@@ -138,7 +144,17 @@ def read_decisions(root: h5py.Group) -> Decisions:
         events=tuple(Event(*row) for row in zip(*events, strict=True)),
         removed_sources=frozenset(read_array(removed, "source_sha256").tolist()),
         removed_ranges=tuple(RemovedRange(*row) for row in zip(*ranges, strict=True)),
+        length_series=_read_series(root),
     )
+
+
+def _read_series(root: h5py.Group) -> LengthSeries:
+    """Return the points of the length series; none in a study written before there were any."""
+    if "length_series" not in root:
+        return LengthSeries()
+    home = group(root, "length_series")
+    columns = (map(str, read_array(home, name).tolist()) for name in _SERIES)
+    return LengthSeries(str(read_array(home, "unit")[0]), tuple(zip(*columns, strict=True)))
 
 
 def _read_groups(home: h5py.Group) -> dict[str, Group]:

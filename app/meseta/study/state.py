@@ -12,7 +12,7 @@ from dataclasses import asdict, dataclass, field
 from typing import Any
 
 from meseta.recipe import Recipe
-from meseta.selection import Decisions, Event, Group, RemovedRange, Verdict
+from meseta.selection import Decisions, Event, Group, LengthSeries, RemovedRange, Verdict
 
 __all__ = ["Edit", "State", "applied", "difference", "words"]
 
@@ -95,6 +95,7 @@ _DECISION_WORDS: Mapping[str, Callable[[Path, Any, Any], str]] = {
     "event": lambda path, _, new: f"event {'removed' if new is None else 'marked'}: {path[2]}",
     "source": lambda _, __, new: "recording brought back" if new is None else "recording removed",
     "range": lambda _, __, new: "range brought back" if new is None else "range removed",
+    "series": lambda _, __, new: "length series emptied" if new is None else "length series changed",
 }
 
 
@@ -139,6 +140,10 @@ def _ranges_flat(ranges: tuple[RemovedRange, ...]) -> Flat:
     return {("range", json.dumps(asdict(part), sort_keys=True)): True for part in ranges}
 
 
+def _series_flat(series: LengthSeries) -> Flat:
+    return {("series",): {"unit": series.unit, "rows": [list(row) for row in series.rows]}} if series.rows else {}
+
+
 _PARTS: Mapping[str, Callable[[Any], Flat]] = {
     "recipe": _recipe_flat,
     "verdicts": _verdicts_flat,
@@ -146,6 +151,7 @@ _PARTS: Mapping[str, Callable[[Any], Flat]] = {
     "events": _events_flat,
     "removed_sources": _sources_flat,
     "removed_ranges": _ranges_flat,
+    "length_series": _series_flat,
 }
 _PART_OF: Mapping[str, str] = {
     "recipe": "recipe",
@@ -155,6 +161,7 @@ _PART_OF: Mapping[str, str] = {
     "event": "events",
     "source": "removed_sources",
     "range": "removed_ranges",
+    "series": "length_series",
 }
 
 
@@ -182,8 +189,14 @@ def _assembled(state: State, flat: Mapping[str, Flat]) -> State:
             removed_ranges=tuple(RemovedRange(**json.loads(path[1])) for path in sorted(flat["removed_ranges"]))
             if "removed_ranges" in flat
             else decisions.removed_ranges,
+            length_series=_series_of(flat["length_series"]) if "length_series" in flat else decisions.length_series,
         ),
     )
+
+
+def _series_of(flat: Flat) -> LengthSeries:
+    plain = flat.get(("series",))
+    return LengthSeries() if plain is None else LengthSeries(plain["unit"], tuple(map(tuple, plain["rows"])))
 
 
 def _event_order(event: Event) -> tuple[str, str, str]:

@@ -24,6 +24,7 @@ from PySide6.QtWidgets import (
 
 from meseta import typeset
 from meseta.errors import InputError, MesetaError
+from meseta.selection.decisions import LengthSeries
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
@@ -32,6 +33,7 @@ from meseta.window.plots.panel import PlotData, PlotPanel
 from meseta.window.plots.ticks import ConductanceAxis, PlainAxis
 from meseta.window.session import Hover
 from meseta.window.theme import Theme, fixed_digits
+from meseta.window.views.decay.keeping import SeriesKeeper
 from meseta.window.views.decay.points import COLUMNS, Cells, cells_of, pasted, points_of
 from meseta.work import Work
 
@@ -82,6 +84,7 @@ class DecayPanel(PlotPanel):
         self._points: DecayPoints | None = None
         self._error: MesetaError | None = None
         self._filling = False
+        self.keeper = SeriesKeeper(frame.session, self.series, self.show_series)
         self._prepare()
         self._lay_below()
         self._soon = QTimer(self)
@@ -193,8 +196,19 @@ class DecayPanel(PlotPanel):
         if any(cell.strip() for cell in last):
             self.fill(self.cells())
             return
+        self.keeper.keep()
         self.job.ask()
         self._draw()
+
+    def series(self) -> LengthSeries:
+        """Return what stands in the table, without its empty rows."""
+        rows = tuple(row for row in self.cells() if any(cell.strip() for cell in row))
+        return LengthSeries(self.unit.text().strip() or "nm", rows)
+
+    def show_series(self, series: LengthSeries) -> None:
+        """Write a series into the table."""
+        self.unit.setText(series.unit)
+        self.fill(series.rows)
 
     def ask_file(self) -> None:
         """Ask for a CSV file of points."""
