@@ -10,7 +10,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from meseta.intake.kernels import drive_piece, drive_steps, find_turns, power_of_ten, rising_rows
+from meseta.intake.kernels import drive_piece, drive_steps, find_turns, power_of_ten, rising_rows, scale_into, turn_into
 
 
 def turns_of(values, threshold, block=None):
@@ -115,8 +115,6 @@ def test_rows_that_end_higher_than_they_begin(scale):
     [(1.0, 0.0, 1.0, 0.0, 1.0, 1.0), (0.01, -3.0, 1e-9, 0.0, 1.0, 7.7e-6), (1e-3, 0.2, 1.0, 0.013, 1e7, 7.7e-6)],
 )
 def test_scaling_in_one_go_gives_the_bits_of_the_steps_of_numpy(kind, steps):
-    from meseta.intake.kernels import scale_into
-
     rng = np.random.default_rng(3)
     stored = rng.normal(0, 9000, 5000).astype(kind)
     if kind.startswith("float"):
@@ -131,3 +129,12 @@ def test_scaling_in_one_go_gives_the_bits_of_the_steps_of_numpy(kind, steps):
     scale_into(stored, *steps, found)
     np.testing.assert_array_equal(found, expected)
     np.testing.assert_array_equal(np.signbit(found), np.signbit(expected))
+
+
+@pytest.mark.parametrize("shape", [(1, 1), (3, 70), (70, 3), (32, 32), (33, 95)])
+@pytest.mark.parametrize("kind", ["int16", "float32", "float64"])
+def test_columns_end_to_end_are_those_of_numpy(kind, shape):
+    array = np.random.default_rng(1).normal(0, 1000, shape).astype(kind)
+    found = np.empty(shape[::-1], kind)
+    turn_into(array, found)
+    np.testing.assert_array_equal(found, array.T)

@@ -318,23 +318,24 @@ class Part:
         channels = tuple(channel.without_samples() for channel in self.recording.channels)
         self.recording = self.recording.with_channels(channels)
         self.calibration, axis = self.calibration.without_samples(), self.axis
-        self.axis = axis if axis.channel is None else replace(axis, channel=axis.channel.without_samples())
+        self.axis = axis if axis.channel is None else axis.with_channel(axis.channel.without_samples())
         self.extras = tuple(channel.without_samples() for channel in self.extras)
         return self
 
     def notes(self) -> dict[str, Any]:
         """Return what there is to say of this recording, in plain values."""
-        channels = self.recording.channels
-        of_channels = {doubt for channel in channels for doubt in channel.doubts}  # said once, with the channel's name
-        said = [*self.recording.doubts, *self.calibration.doubts, *self.axis.doubts, *self.cut.notes]
-        said = [doubt for doubt in said if doubt not in of_channels]
-        said += [f"'{channel.name}': {doubt}" for channel in channels for doubt in channel.doubts]
         return {
             "calibration": plain_constants(self.calibration),
             "conductance_from": self.calibration.kind,
             "drive": self.axis.said,
-            "doubts": list(dict.fromkeys(said)),
+            "doubts": self.doubts(),
         }
+
+    def doubts(self) -> list[str]:
+        """Return what was assumed and what is odd, each once."""
+        said = [*self.recording.doubts, *self.calibration.doubts, *self.axis.doubts, *self.cut.notes]
+        said += [f"'{c.name}': {doubt}" for c in self.recording.channels for doubt in c.doubts]
+        return list(dict.fromkeys(said))
 
 
 def prepared(recording: Recording, recipe: Recipe) -> Recording:

@@ -7,7 +7,7 @@ How its constants are found is said in :mod:`meseta.intake.constants`, what ampl
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Final
 
@@ -22,7 +22,6 @@ from meseta.intake.spread import Spread, Value
 from meseta.intake.switching import Overlap, Switching
 from meseta.intake.units import parse_unit, unit_factor
 from meseta.quantities import G0_SIEMENS
-from meseta.traces import ArraySamples
 
 __all__ = ["AMPLIFIER_KINDS", "IN_SERIES", "Calibrated", "Calibration", "without_series"]
 
@@ -107,11 +106,12 @@ class Calibration:
 
     def without_samples(self) -> Calibration:
         """Return the calibration with its channels emptied, for when all samples are loaded."""
-        nothing = ArraySamples(np.empty(0))
         names = ("channel", "second", "bias_channel", "range_channel")
-        there = {name: getattr(self, name) for name in names}
-        emptied = {name: replace(one, samples=nothing) for name, one in there.items() if one is not None}
-        return replace(self, pickup={}, **emptied)
+        channels = {name: one for name in names if (one := getattr(self, name)) is not None}
+        emptied = object.__new__(Calibration)
+        emptied.__dict__.update(self.__dict__, pickup={})
+        emptied.__dict__.update({name: one.without_samples() for name, one in channels.items()})
+        return emptied
 
     def recorded(self, recording: Recording, channel: RawChannel, start: int, stop: int) -> Floats:
         """(stop - start,) float64, a channel in its unit, less the mains pickup where that is removed."""
@@ -199,7 +199,7 @@ class Calibration:
             if self.kind == "conductance":
                 return values * conductance_factor(channel.unit), None
             if self.kind == "log_conductance":
-                return power_of_ten(values), None
+                return power_of_ten(values) * parse_unit(channel.unit or "dec").factor, None
             if self.kind == "resistance":
                 ohm = values * unit_factor(channel.unit, "ohm")
                 with np.errstate(divide="ignore", invalid="ignore"):

@@ -45,6 +45,12 @@ class DriveAxis:
     doubts: tuple[str, ...] = ()
     polynomial: tuple[float, ...] = ()
 
+    def with_channel(self, channel: RawChannel) -> DriveAxis:
+        """Return the same axis of another channel."""
+        other = object.__new__(DriveAxis)
+        other.__dict__.update(self.__dict__, channel=channel)
+        return other
+
     def values(self, recording: Recording, start: int, stop: int) -> npt.NDArray[np.float64]:
         """(stop - start,) float64, drive in ``unit`` over flat samples; only where there is a channel."""
         assert self.channel is not None
@@ -147,7 +153,8 @@ def _piezo(recording: Recording, settings: CalibrationSettings, channel: RawChan
     constant = _stated(recording, settings, "nm_per_volt")
     if constant is not None:
         said = f"displacement from '{channel.name}' at {constant[0]:g} nm/V ({constant[1]})"
-        return DriveAxis(channel, sign * volts * constant[0], "nm", said)
+        doubts = () if channel.unit else (f"the unit of '{channel.name}' is not stated: taken as V",)
+        return DriveAxis(channel, sign * volts * constant[0], "nm", said, doubts)
     doubt = "nm per volt is not stated: the drive stays in volts (calibration.nm_per_volt)"
     return DriveAxis(channel, sign * volts, "V", f"piezo volts from '{channel.name}'", (doubt,))
 

@@ -208,7 +208,7 @@ def _notes(parts: Sequence[Part]) -> dict[str, Any]:
     doubts: dict[str, list[str]] = {}
     incomplete = []
     for part in parts:
-        for doubt in part.notes()["doubts"]:
+        for doubt in part.doubts():
             doubts.setdefault(doubt, []).append(part.recording.source.name)
         incomplete += [{"source": part.recording.source.name, **one} for one in part.cut.apart]
     said = [

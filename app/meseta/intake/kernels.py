@@ -18,10 +18,12 @@ __all__ = [
     "power_of_ten",
     "rising_rows",
     "scale_into",
+    "turn_into",
 ]
 
 SCALED_TYPES = ("int16", "uint16", "int32", "float32", "float64")
 """Types of stored numbers that :func:`scale_into` is compiled for."""
+SQUARE = 32
 ALIGNED, NEVER_REACHES, ENDS_ABOVE, NO_SAMPLES = 0, 1, 2, 3
 
 
@@ -280,6 +282,18 @@ def scale_into(
 
 
 @kernel
+def turn_into(array: npt.NDArray[Any], target: npt.NDArray[Any]) -> None:
+    """Fill ``target`` (columns, rows) with an array (rows, columns), square by square so that both stay at hand."""
+    rows, columns = array.shape
+    for first_row in range(0, rows, SQUARE):
+        last_row = min(first_row + SQUARE, rows)
+        for first_column in range(0, columns, SQUARE):
+            for column in range(first_column, min(first_column + SQUARE, columns)):
+                for row in range(first_row, last_row):
+                    target[column, row] = array[row, column]
+
+
+@kernel
 def _median_size(values: npt.NDArray[np.float32], scratch: npt.NDArray[np.float32]) -> float:
     """Return the lower median of the sizes of the finite values; NaN where there are none."""
     count = 0
@@ -332,6 +346,7 @@ def _compile() -> None:
         stored = np.zeros(2, kind)
         for _ in ("writable", "read-only"):
             scale_into(stored, 1.0, 0.0, 1.0, 0.0, 1.0, 1.0, np.empty(2, np.float32))
+            turn_into(stored.reshape(1, 2), np.empty((2, 1), kind))
             stored.flags.writeable = False
     find_turns(np.array([0.0, 1.0, 0.0]), 0, 0.5, np.zeros(6))
     power_of_ten(np.array([0.0, -1.0]))

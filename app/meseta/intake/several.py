@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import suppress
 from dataclasses import dataclass
@@ -92,16 +93,26 @@ def _at_hand(files: Sequence[FoundFile], settings: IntakeSettings) -> dict[int, 
     found = {}
     for place, file in enumerate(files):
         try:
-            with file.path.open("rb", buffering=0) as stream:
-                head = stream.read(HEAD_BYTE)
-                if not head or unpack.packing(head):
-                    continue
-                reader = find_reader(head, file.path, settings.reader)
-                if hasattr(reader, "open_alike"):
-                    found[place] = _AtHand(file, head + stream.readall(), cast("ReaderOfSeveral", reader))
+            data = _small_file(file.path)
+            if not data or unpack.packing(data[:8]):
+                continue
+            reader = find_reader(data[:HEAD_BYTE], file.path, settings.reader)
         except (MesetaError, OSError, MemoryError):
             continue  # opened on its own, it says what is wrong
+        if hasattr(reader, "open_alike"):
+            found[place] = _AtHand(file, data, cast("ReaderOfSeveral", reader))
     return found
+
+
+def _small_file(path: Path) -> bytes:
+    """Return the bytes of a file in as few calls as there can be; nothing where it is not small, or not read whole."""
+    descriptor = os.open(path, os.O_RDONLY | getattr(os, "O_BINARY", 0))
+    try:
+        size = os.fstat(descriptor).st_size
+        data = os.read(descriptor, size + 1) if size <= BATCH_BYTE else b""
+    finally:
+        os.close(descriptor)
+    return data if len(data) == size else b""
 
 
 def _opened_alike(

@@ -11,7 +11,7 @@ import struct
 import zlib
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Final
+from typing import Any, BinaryIO, Final
 
 import h5py
 import numpy as np
@@ -49,15 +49,16 @@ class Ragged:
         start, stop, _ = key.indices(self.shape[0])
         found = np.empty(max(stop - start, 0), self.dtype)
         row, at = int(np.searchsorted(self.offsets, start, side="right")) - 1, start
-        with Path(self.filename).open("rb") as file:
+        found = found.view(self.stored) if self.stored.isnative else np.empty(len(found), self.stored)
+        with Path(self.filename).open("rb", buffering=0) as file:
             while at < stop:
                 end = min(stop, int(self.offsets[row + 1]))
-                begin = int(self.places[row]) + (at - int(self.offsets[row])) * self.stored.itemsize
-                file.seek(begin)
-                part = np.frombuffer(file.read((end - at) * self.stored.itemsize), self.stored)
-                found[at - start : end - start] = part
+                file.seek(int(self.places[row]) + (at - int(self.offsets[row])) * self.stored.itemsize)
+                part = found[at - start : end - start]
+                if file.readinto(part.view(np.uint8)) != part.nbytes:  # type: ignore[arg-type]
+                    raise OSError("became shorter")
                 at, row = end, row + 1
-        return found
+        return found.astype(self.dtype, copy=False)
 
 
 def ragged_rows(dataset: Any, path: str, dtype: np.dtype[Any], file_byte: int) -> Ragged | None:
@@ -97,14 +98,19 @@ def _row_places(
     heap).
     """
     places = np.zeros(len(references), np.int64)
+    filled = np.flatnonzero(references["length"] > 0)
+    filled = filled[np.argsort(references["address"][filled], kind="stable")]
+    addresses = references["address"][filled]
+    edges = np.flatnonzero(np.diff(addresses)) + 1
     with Path(dataset.file.filename).open("rb") as file:
-        for address in np.unique(references["address"][references["length"] > 0]).tolist():
+        for rows in np.split(filled, edges) if len(filled) else []:
+            address = int(references["address"][rows[0]])
             file.seek(address)
             mark, size = struct.unpack("<4s4xQ", file.read(16))
             if mark != b"GCOL" or not 16 <= size <= file_byte:
                 return None
-            found = _heap_objects(file.read(size - 16), address + 16)
-            for row in np.flatnonzero((references["address"] == address) & (references["length"] > 0)).tolist():
+            found = _heap_objects(file, address + 16, min(address + size, file_byte))
+            for row in rows.tolist():
                 place, held = found.get(int(references["index"][row]), (0, -1))
                 if held < int(references["length"][row]) * item_byte:
                     return None
@@ -112,14 +118,15 @@ def _row_places(
     return places
 
 
-def _heap_objects(body: bytes, begin: int) -> dict[int, tuple[int, int]]:
-    """Return index -> (first byte, bytes) of the objects of a heap."""
-    found, at = {}, 0
-    while at + 16 <= len(body):
-        index, size = struct.unpack_from("<H6xQ", body, at)
-        if index == 0 or size > len(body) - at - 16:
+def _heap_objects(file: BinaryIO, begin: int, end: int) -> dict[int, tuple[int, int]]:
+    """Return index -> (first byte, bytes) of the objects of a heap that lie between two bytes of the file."""
+    found, at = {}, begin
+    while at + 16 <= end:
+        file.seek(at)
+        index, size = struct.unpack("<H6xQ", file.read(16))
+        if index == 0 or size > end - at - 16:
             break
-        found[index] = (begin + at + 16, size)
+        found[index] = (at + 16, size)
         at += 16 + -(-size // 8) * 8
     return found
 

@@ -241,8 +241,19 @@ class ColumnSamples:
     def _turn(self) -> Any:
         data = self.dataset
         if len(self) * data.dtype.itemsize <= CACHED_BYTE:
-            return ArraySamples(np.ascontiguousarray(_read(data, lambda: data[()]).T).reshape(-1))
+            return ArraySamples(_columns(_read(data, lambda: data[()])))
         return turned(lambda a, b: _read(data, lambda: data[a:b]), data.shape, data.dtype, Path(place_of(data)))
+
+
+def _columns(array: npt.NDArray[Any]) -> npt.NDArray[Any]:
+    """Return the columns of an array end to end."""
+    from meseta.intake.kernels import SCALED_TYPES, turn_into
+
+    if array.dtype.name not in SCALED_TYPES or not array.dtype.isnative or not array.flags.c_contiguous:
+        return np.ascontiguousarray(array.T).reshape(-1)
+    turned_array = np.empty(array.shape[::-1], array.dtype)
+    turn_into(array, turned_array)
+    return turned_array.reshape(-1)
 
 
 @dataclass(frozen=True)
