@@ -263,6 +263,20 @@ def test_a_layout_kept_for_one_study_is_proposed_for_the_next_and_never_taken_of
     assert other.picture.described[0].kept_layout == "rig 2"
 
 
+def test_a_layout_is_forgotten(kept, settle, make, folder):
+    window, page = kept
+    assert not page.kept.forget.isEnabled()
+    choose(page, "layout 'rig 2'")
+    settle(window)
+    page.remembered.add(page.draft.session.document.recipe.intake.layouts)
+    press(page.kept.forget)
+    settle(window)
+    assert page.draft.session.document.recipe.intake.layouts == {}
+    assert offered(page) == ["what is recognised"]
+    page.draft.session.undo.undo()
+    assert list(page.draft.session.document.recipe.intake.layouts) == ["rig 2"]
+
+
 def test_what_another_version_remembered_stops_nothing(qapp, tmp_path):
     from PySide6.QtCore import QSettings
 

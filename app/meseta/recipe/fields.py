@@ -59,7 +59,7 @@ class FieldInfo:
     name : str
         Name within its section.
     kind : str
-        "number", "integer", "truth", "choice", "text", "list", "table", or "tables" of tables.
+        "number", "integer", "truth", "choice", "text", "list", "table".
     choices : tuple of str
         Allowed words of a choice.
     low, high : float or None
@@ -153,11 +153,4 @@ def _kind(annotation: Any) -> tuple[str, tuple[str, ...]]:
     if annotation in names:
         return names[annotation], ()
     origin = get_origin(annotation)
-    if origin is dict and any(get_origin(field.annotation) is dict for field in _fields_of(get_args(annotation)[1])):
-        return "tables", ()
     return ("list" if origin in (list, tuple) else "table"), ()
-
-
-def _fields_of(annotation: Any) -> list[PydanticField]:
-    is_model = isinstance(annotation, type) and issubclass(annotation, BaseModel)
-    return list(annotation.model_fields.values()) if is_model else []

@@ -17,7 +17,10 @@ from meseta.window.filecheck.remembered import RememberedLayouts
 from meseta.window.layouts import emptied
 from meseta.window.session import Session
 
-__all__ = ["KeptLayouts"]
+__all__ = ["KEPT_SETTINGS", "KeptLayouts"]
+
+KEPT_SETTINGS = ("use_layout", "layouts")
+"""Settings of ``[intake]`` that are changed here and nowhere else in the file check."""
 
 ANY, ANEW, ITS, BEFORE = "any", "anew", "its", "before"
 """Kinds of choices: whichever fits, recognised anew, one of the recipe, one that was kept before."""
@@ -33,11 +36,12 @@ class KeptLayouts(QWidget):
         self.choice, self.name = QComboBox(), QLineEdit()
         self.said, self.wrong = QLabel(""), QLabel("")
         self.differences = QVBoxLayout()
-        self.keep = QPushButton("Keep")
+        self.keep, self.forget = QPushButton("Keep"), QPushButton("Forget")
         self.correct, self.another, self.use = QPushButton(""), QPushButton("Keep as another layout"), QPushButton("")
         self._lay_out()
         self.choice.activated.connect(self._choose)
         self.keep.clicked.connect(self._keep)
+        self.forget.clicked.connect(self._forget)
         self.name.returnPressed.connect(self._keep)
         self.name.textEdited.connect(lambda _: self._complain(""))
         self.correct.clicked.connect(lambda: self._begin_anew(self._misfit_layout()))
@@ -53,6 +57,7 @@ class KeptLayouts(QWidget):
             widget.setAccessibleName(name)
         self.choice.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
         self.choice.setMinimumContentsLength(12)
+        self.forget.setToolTip("Take the layout that is chosen out of this recipe, and propose it no more")
         self.keep.setToolTip("Keep what each channel is under this name: the next files must be like these")
         for label, tone in ((self.said, "quiet"), (self.wrong, "fit")):
             label.setWordWrap(True)
@@ -66,6 +71,7 @@ class KeptLayouts(QWidget):
             title.setBuddy(editor)
             grid.addWidget(title, line, 0)
             grid.addWidget(editor, line, 1)
+        grid.addWidget(self.forget, 0, 2)
         grid.addWidget(self.keep, 1, 2)
         grid.setColumnStretch(1, 1)
         buttons = QHBoxLayout()
@@ -149,6 +155,7 @@ class KeptLayouts(QWidget):
         anew = used == NO_LAYOUT or not kept
         current = (ANEW, "") if anew else (ANY, "") if used is None else (ITS, used)
         self.choice.setCurrentIndex([data for _, data in entries].index(current))
+        self.forget.setEnabled(current[0] == ITS)
 
     def _complain(self, text: str) -> None:
         self.wrong.setText(text)
@@ -185,6 +192,15 @@ class KeptLayouts(QWidget):
         self.name.setText(name)
         self.name.setFocus()
         self._session.change_recipe(f"correct layout {name}" if name else "recognise anew", recipe)
+
+    def _forget(self) -> None:
+        kind, name = self.choice.currentData()
+        if kind != ITS:
+            return
+        self._remembered.forget(name)
+        layouts = {other: one.model_dump() for other, one in self._recipe.intake.layouts.items() if other != name}
+        recipe = self._recipe.with_values("intake", layouts=layouts, use_layout=None)
+        self._session.change_recipe(f"forget layout {name}", recipe)
 
     def _keep(self) -> None:
         name = " ".join(self.name.text().split())

@@ -19,7 +19,7 @@ from meseta.recipe.intake import IntakeSettings
 from meseta.window.envelope import heights
 from meseta.window.filecheck.channels import ChannelTable
 from meseta.window.filecheck.draft import DraftFrame
-from meseta.window.filecheck.kept import KeptLayouts
+from meseta.window.filecheck.kept import KEPT_SETTINGS, KeptLayouts
 from meseta.window.filecheck.preview import CheckPicture, check_picture
 from meseta.window.filecheck.remembered import RememberedLayouts
 from meseta.window.forms import SectionForm
@@ -57,7 +57,7 @@ class FileCheck(QWidget):
         self.forms = {
             "calibration": SectionForm(self.draft, "calibration", CalibrationSettings, "calibration"),
             "cutting": SectionForm(self.draft, "cutting", CuttingSettings, "cutting"),
-            "intake": SectionForm(self.draft, "intake", IntakeSettings, "intake", leave_out=("use_layout",)),
+            "intake": SectionForm(self.draft, "intake", IntakeSettings, "intake", leave_out=KEPT_SETTINGS),
         }
         self.accept_button, self.leave_button = QPushButton("Read these files"), QPushButton("Leave")
         self.raw, self.calibrated, self.conductance = _plot(PlainAxis("left")), *_calibrated_plot()

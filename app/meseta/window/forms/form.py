@@ -100,15 +100,14 @@ class _Row:
 
 
 class SectionForm(QWidget):
-    """All settings of one section but those left out, and but tables of tables, which have places of their own."""
+    """All settings of one section, but those left out, which have a place of their own."""
 
     def __init__(
         self, frame: Frame, section: str, settings: type[Section], help_page: str, leave_out: Collection[str] = ()
     ) -> None:
         super().__init__()
         self.frame, self.section = frame, section
-        shown = [info for info in settings.fields() if info.kind != "tables" and info.name not in leave_out]
-        self.rows = [_Row(self, info) for info in shown]
+        self.rows = [_Row(self, info) for info in settings.fields() if info.name not in leave_out]
         grid = QGridLayout()
         grid.setContentsMargins(0, 0, 0, 0)
         grid.setHorizontalSpacing(4)
