@@ -204,7 +204,9 @@ def _flank(values: Floats, extreme: float, noise: float) -> _Flank | None:
     far = near + int(far_candidates[0]) if len(far_candidates) else len(values) - 1
     early = np.flatnonzero(away[near:] >= min(0.1 * full + tolerance, full))
     speed = (0.1 * full + tolerance) / max(near + int(early[0]) if len(early) else far, 1)
-    enough = max(LEAST_FLANK, (LINE_SIGMAS * noise / speed) ** 2, 6 * wait)
+    if not speed > 0.0:  # less than a number can hold
+        return None
+    enough = max(LEAST_FLANK, min(LINE_SIGMAS * noise / speed, float(len(values))) ** 2, 6 * wait)
     far = min(far, near + int(enough))
     index = np.arange(near, max(far, near + 2) + 1)
     index = index[index < len(values)]

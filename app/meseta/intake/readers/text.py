@@ -25,6 +25,9 @@ from meseta.traces import ArraySamples
 __all__ = ["TextReader"]
 
 HEAD_BYTE: Final = 1 << 16
+LONG_HEAD_BYTE: Final = 4 << 20
+FEW_LINES: Final = 8
+MOST_COLUMNS: Final = 50_000
 LARGE_BYTE: Final = 64 << 20
 """Larger texts are parsed block by block, and their numbers put aside in a temporary file."""
 KEPT_FORMS: Final = 4
@@ -155,14 +158,31 @@ def _recognised(data: bytes, path: Path) -> tuple[str, bytes, TextForm]:
         raise InputError("holds NUL bytes and is no text table", str(path), "export it again as text")
     if b"\r" in data[:HEAD_BYTE] and b"\n" not in data[:HEAD_BYTE]:
         data = data.replace(b"\r", b"\n")
-    head = _text(data[:HEAD_BYTE], encoding)
-    form = find_form(head)
+    form = find_form(_text(_head(data, path), encoding))
     if form is None:
         what = "is empty" if not data.strip() else "holds no rows of numbers"
         if data.strip() and path.suffix.lower() in (".h5", ".hdf5", ".hdf", ".he5"):
             what = "is named like HDF5 but is a text and not an HDF5 file"
         raise InputError(what, str(path), "give a table with numbers in rows")
+    if form.columns > MOST_COLUMNS:
+        what = f"has {form.columns} cells in a row, more than traces side by side can be"
+        raise InputError(what, str(path), "give a table with samples in rows, or the traces one after the other")
     return encoding, data, form
+
+
+def _head(data: bytes, path: Path) -> bytes:
+    """Return the first lines, as many as tell the form: of a table with long rows more bytes."""
+    if len(data) <= HEAD_BYTE or data.count(b"\n", 0, HEAD_BYTE) >= FEW_LINES:
+        return data[:HEAD_BYTE]
+    end = 0
+    for _ in range(FEW_LINES):
+        found = data.find(b"\n", end, LONG_HEAD_BYTE) + 1
+        if found == 0:
+            break
+        end = found
+    if end == 0 and len(data) >= LONG_HEAD_BYTE:
+        raise InputError("holds a line beyond reason", str(path), "give a table with numbers in rows")
+    return data[: max(end, HEAD_BYTE)] if end else data
 
 
 def _rows(data: bytes, encoding: str, form: TextForm, path: Path) -> Rows:
@@ -182,7 +202,7 @@ def _laid_rows(rows: Rows, form: TextForm, doubts: list[str], settings: IntakeSe
 
 def _large_contents(path: Path, settings: IntakeSettings) -> Contents:
     """Return the content of a large text, its numbers put aside."""
-    head = next(unpacked_blocks(path, HEAD_BYTE))
+    head = next(unpacked_blocks(path, LONG_HEAD_BYTE))
     encoding, _, form = _recognised(head, path)
     columns, stretches = put_aside(path, form, encoding)
     samples = [SpooledColumn(columns, place, columns.rows) for place in range(form.columns)]
