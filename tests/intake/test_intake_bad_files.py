@@ -93,7 +93,7 @@ def test_good_files_of_a_batch_are_taken_in_and_bad_ones_listed(tmp_path):
     bad = traces.notes["bad_files"]
     assert [Path(one["where"].split(",")[0]).name for one in bad] == ["t 3.csv", "t 4.csv"]
     assert all(set(one) == {"what", "where", "remedy"} for one in bad)
-    assert traces.notes["passed_over"] == ["README.md"]
+    assert traces.notes["passed_over"] == [".hidden.csv (hidden)", "README.md"]
     with pytest.raises(InputError):
         intake.read(tmp_path, strict=True)
 

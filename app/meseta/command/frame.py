@@ -26,6 +26,7 @@ __all__ = [
     "open_analysis",
     "recipe_from",
     "recipe_options",
+    "say_passed_over",
     "strict_option",
     "tell",
     "working",
@@ -34,6 +35,7 @@ __all__ = [
 Command = TypeVar("Command", bound=Callable[..., Any])
 RecipeChoice = tuple[str | None, str | None, Sequence[str]]
 """Recipe file, preset, and settings, as given on the command line."""
+SHOWN_PASSED = 5
 
 
 @contextmanager
@@ -151,6 +153,7 @@ def _opened(files: Sequence[str], choice: RecipeChoice, strict: bool, work: Work
     traces = study.read(list(files), recipe, work)
     bad: list[MesetaError] = [InputError(**one) for one in traces.notes.get("bad_files", ())]
     list_bad(bad, strict)
+    say_passed_over(traces.notes.get("passed_over", ()))
     return Analysis(traces, recipe), bad
 
 
@@ -164,6 +167,13 @@ def list_bad(bad: Sequence[MesetaError], strict: bool) -> None:
             "",
             "mend or leave out, or run without --strict",
         )
+
+
+def say_passed_over(passed: Sequence[str]) -> None:
+    """Say on stderr what folders hold beside recordings."""
+    if passed:
+        more = f", and {len(passed) - SHOWN_PASSED} more" if len(passed) > SHOWN_PASSED else ""
+        click.echo(f"meseta: passed over: {', '.join(passed[:SHOWN_PASSED])}{more}", err=True)
 
 
 def bad_plain(bad: Sequence[MesetaError]) -> list[dict[str, str]]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import sys
 from collections.abc import Sequence
 from pathlib import Path
@@ -17,6 +18,7 @@ from meseta.command.frame import (
     open_analysis,
     recipe_from,
     recipe_options,
+    say_passed_over,
     strict_option,
     tell,
     working,
@@ -90,6 +92,7 @@ def peek(
         checks, bad = intake.describe(others, recipe, work) if others else ([], [])
         answers = [study_answer(path, work) for path in studies] + [check.as_dict() for check in checks]
     list_bad(bad, strict)
+    say_passed_over(intake.find_files(others)[1] if others else [])
     lines = [line for answer in answers[: len(studies)] for line in study_lines(answer)]
     lines += check_lines([check.lines() for check in checks])
     tell(as_json, {"files": answers, "bad_files": bad_plain(bad)}, lines)
@@ -216,7 +219,7 @@ def gather(
     A folder stands for all files in it and in its subfolders. A file is read once: what the study has is passed over,
     and a file that has changed since is named and left out. With --follow a file is taken once it is whole.
     """
-    from meseta import study
+    from meseta import intake, study
 
     if not files:
         raise CallError("no files were given", "gather", "name files or a folder")
@@ -226,6 +229,8 @@ def gather(
         stopped = follow and work.cancel.is_set()
     if not follow:
         list_bad(bad, strict)
+        with contextlib.suppress(InputError):  # nothing but what was gathered before and has gone since
+            say_passed_over(intake.find_files(files)[1])
     lines = [f"{answer['recordings_added']} recordings added to {study_path}, {answer['traces']} traces in all"]
     tell(as_json, answer | {"bad_files": bad_plain(bad)}, lines)
     if stopped:

@@ -1,11 +1,16 @@
-"""Which files are meant by what the user gave: files, folders, globs; in natural order."""
+"""Which files are meant by what the user gave: files, folders, globs; in natural order.
+
+A folder stands for the files in it and in its subfolders.  Passed over, and said so, are hidden files and folders, what
+is clearly no recording, studies with what lies beside them, folders of earlier results, and links to folders.
+"""
 
 from __future__ import annotations
 
 import glob
 import os
-from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from collections.abc import Iterable, Iterator, Sequence
+from dataclasses import dataclass, field
+from functools import lru_cache
 from pathlib import Path
 from typing import Final
 
@@ -13,7 +18,14 @@ from natsort import natsorted, ns
 
 from meseta.errors import InputError, printable
 
-__all__ = ["FoundFile", "expand", "find_files"]
+__all__ = ["STUDY_MARK", "FoundFile", "expand", "find_files"]
+
+STUDY_MARK: Final = b"meseta study"
+"""Stands in the first bytes of every study file."""
+_HEAD_BYTE: Final = 4096
+_STUDY_ENDINGS: Final = (".h5", ".hdf5", ".hdf")
+_RESULT: Final = frozenset({"summary.json", "recipe.toml"})
+"""Files that tell a folder which an analysis filled."""
 
 _ASIDE: Final = frozenset(
     {"readme", "license", "licence", "notes", "changelog", "copying", "authors", "thumbs", "desktop"}
@@ -54,13 +66,15 @@ def _listed(paths: PathLike | Iterable[PathLike]) -> list[PathLike]:
 def expand(paths: PathLike | Iterable[PathLike]) -> list[Path]:
     """Return the recordings that are meant where each is a recording of its own: files and folders.
 
-    A pattern stands for its matches; one folder given alone stands for the files and folders in it.
+    A pattern stands for its matches; one folder given alone stands for the files and folders in it that are not passed
+    over.
     """
     listed = _listed(paths)
     found = [match for given in listed for match in _matches(given)]
     if len(found) == 1 and found[0].is_dir():
-        entries = [entry for entry in found[0].iterdir() if entry.is_dir() or not _is_aside(entry)]
-        found = natsorted([entry for entry in entries if not entry.name.startswith(".")], alg=ns.PATH)
+        inside = _inside(found[0])
+        folders = [folder for folder in inside.folders if not _is_result(folder)]
+        found = natsorted([*inside.files, *folders], alg=ns.PATH)
     if not found:
         raise InputError("no file matches", ", ".join(str(path) for path in listed), "check the path or pattern")
     return found
@@ -69,13 +83,20 @@ def expand(paths: PathLike | Iterable[PathLike]) -> list[Path]:
 def find_files(paths: PathLike | Iterable[PathLike]) -> tuple[list[FoundFile], list[str]]:
     """Return the files that are meant, in natural order, and what was passed over in folders.
 
-    Files named one by one are always taken; in folders, hidden files and what is clearly no recording (texts about it,
-    pictures, recipes, tables of metadata named like them) are passed over and said so.
+    Files named one by one are always taken; in folders and their subfolders what is clearly no recording (texts about
+    it, pictures, recipes, tables of metadata named like them), hidden files, studies and earlier results are passed
+    over.
+
+    Returns
+    -------
+    (list of FoundFile, list of str)
+        Names are relative to the folder given: a folder's own files first, then those of its subfolders, one subfolder
+        after the other.  What was passed over stands by name, with why where the name does not tell.
 
     Raises
     ------
     InputError
-        Where a path does not exist, a pattern matches nothing, or a folder holds no files.
+        Where a path does not exist, a pattern matches nothing, or a folder holds no recordings.
     """
     listed = _listed(paths)
     if not listed:
@@ -122,17 +143,85 @@ def _one(match: Path, from_pattern: bool, found: list[FoundFile], passed: list[s
 
 
 def _in_folder(folder: Path, found: list[FoundFile], passed: list[str]) -> None:
+    """Walk through a folder and its subfolders."""
+    if _is_result(folder):
+        raise InputError("is an earlier result, no recordings", str(folder), "give its study.h5, or the recordings")
+    for inside in _walked(folder):
+        before = inside.folder.relative_to(folder).as_posix()
+        home = "" if before == "." else f"{before}/"
+        passed += [printable(home + name) for name in inside.passed]
+        found += [FoundFile(path, printable(home + path.name)) for path in inside.files]
+
+
+@dataclass(frozen=True)
+class _Inside:
+    """What lies directly in a folder, each in natural order."""
+
+    folder: Path
+    files: list[Path] = field(default_factory=list)
+    folders: list[Path] = field(default_factory=list)
+    passed: list[str] = field(default_factory=list)
+
+
+def _walked(folder: Path) -> Iterator[_Inside]:
+    """Yield a folder and its subfolders, without those that are passed over."""
+    inside = _inside(folder)
+    results = [below for below in inside.folders if _is_result(below)]
+    inside.passed.extend(f"{below.name} (an earlier result)" for below in results)
+    yield inside
+    for below in inside.folders:
+        if below not in results:
+            try:
+                yield from _walked(below)
+            except InputError as error:  # the others are taken in all the same
+                yield _Inside(folder, passed=[f"{below.name} ({error.what})"])
+
+
+def _inside(folder: Path) -> _Inside:
     try:
-        entries = [Path(entry.path) for entry in os.scandir(folder) if entry.is_file(follow_symlinks=True)]
+        with os.scandir(folder) as entries:
+            listed = natsorted(entries, key=lambda entry: entry.name, alg=ns.PATH)
     except OSError as error:
         raise InputError(f"cannot be listed ({error.strerror})", str(folder), "check its permissions") from error
-    for path in natsorted(entries, key=lambda entry: entry.name, alg=ns.PATH):
-        if path.name.startswith("."):
-            continue
-        if _is_aside(path):
-            passed.append(printable(path.name))
+    inside = _Inside(folder)
+    studies = tuple(one.name for one in listed if one.name.lower().endswith(_STUDY_ENDINGS) and _is_study(one))
+    for entry in listed:
+        path = Path(entry.path)
+        if entry.name.startswith("."):
+            inside.passed.append(f"{entry.name} (hidden)")
+        elif entry.is_dir(follow_symlinks=False):
+            inside.folders.append(path)
+        elif entry.is_dir():
+            inside.passed.append(f"{entry.name} (a link to a folder)")
+        elif not entry.is_file() or _is_aside(path):
+            inside.passed.append(entry.name)
+        elif studies and entry.name.startswith(studies):
+            inside.passed.append(f"{entry.name} ({'a study' if entry.name in studies else 'belongs to a study'})")
         else:
-            found.append(FoundFile(path, printable(path.name)))
+            inside.files.append(path)
+    return inside
+
+
+def _is_result(folder: Path) -> bool:
+    return all((folder / name).exists() for name in _RESULT)
+
+
+def _is_study(entry: os.DirEntry[str]) -> bool:
+    try:
+        there = entry.stat()
+    except OSError:
+        return False
+    return entry.is_file() and _is_study_file(entry.path, there.st_size, there.st_mtime_ns)
+
+
+@lru_cache(maxsize=65_536)
+def _is_study_file(path: str, _size_byte: int, _modified_ns: int) -> bool:
+    """Return whether a file begins like a study; asked again only once it has changed."""
+    try:
+        with Path(path).open("rb") as file:
+            return STUDY_MARK in file.read(_HEAD_BYTE)
+    except OSError:
+        return False
 
 
 def _is_aside(path: Path) -> bool:

@@ -12,8 +12,6 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Final
 
-from natsort import natsorted, ns
-
 from meseta.errors import InputError
 from meseta.intake import find_files
 from meseta.intake.files import FoundFile
@@ -22,7 +20,6 @@ from meseta.study.unfinished import DOUBTFUL_LOOKS, REST_LOOKS, why_unfinished
 
 __all__ = ["Arrivals", "Waiting", "files_meant", "folders_of"]
 
-_RESULT: Final = {"summary.json", "recipe.toml"}
 _SIDECARS: Final = (".json", ".toml", ".ini", ".cfg", ".yaml", ".yml")
 
 
@@ -33,22 +30,16 @@ def folders_of(named: Sequence[str | Path]) -> list[Path]:
 
 
 def files_meant(named: Iterable[str | Path], study: Path) -> list[FoundFile]:
-    """Return the files that are meant, those in subfolders too, without the study itself and what lies beside it.
+    """Return the files that are meant, without the study itself and what lies beside it.
 
-    Folders of earlier results are passed over, and no link to a folder is followed.  A folder without recordings yet
-    gives nothing.
+    A folder without recordings yet gives nothing.
 
     Raises
     ------
     InputError
         Where what was named is not there, or cannot be listed.
     """
-    found: dict[Path, FoundFile] = {}
-    for given in named:
-        for folder, inside in _within(Path(given)):
-            for file in _found(folder if inside is not None else given):
-                name = file.name if not inside else f"{inside}/{file.name}"
-                found.setdefault(file.path, FoundFile(file.path, name))
+    found = {file.path: file for given in named for file in _found(given)}
     home = study.resolve()
     folders = {folder: folder.resolve() for folder in {path.parent for path in found}}
     return [
@@ -56,21 +47,6 @@ def files_meant(named: Iterable[str | Path], study: Path) -> list[FoundFile]:
         for path, file in found.items()
         if folders[path.parent] != home.parent or not path.name.startswith((home.name, f".{home.name}"))
     ]
-
-
-def _within(given: Path) -> list[tuple[Path, str | None]]:
-    """Return a folder and its subfolders, each with its name relative to the folder; else what was given, and None."""
-    if not given.is_dir():
-        return [(given, None)]
-    found: list[tuple[Path, str | None]] = []
-    for folder, inner, names in os.walk(given):
-        inner[:] = natsorted((one for one in inner if not one.startswith(".")), alg=ns.PATH)
-        if set(names) >= _RESULT:
-            inner.clear()
-            continue
-        inside = Path(folder).relative_to(given).as_posix()
-        found.append((Path(folder), "" if inside == "." else inside))
-    return found
 
 
 def _found(given: str | Path) -> list[FoundFile]:

@@ -16,6 +16,7 @@ import h5py
 
 from meseta import __version__
 from meseta.errors import OutputError, StudyError
+from meseta.intake.files import STUDY_MARK
 from meseta.study.columns import write_attribute
 from meseta.study.migration import migrate
 from meseta.study.pages import PagedFile, log_of, room_remedy, sync_folder, whole_log
@@ -34,7 +35,7 @@ __all__ = [
     "upgrade",
 ]
 
-FORMAT: Final = "meseta study"
+FORMAT: Final = STUDY_MARK.decode()
 SCHEMA: Final = 2
 _LIBRARY: Final = ("v110", "v110")  # metadata with checksums, readable by HDF5 1.10 and later
 _SIGNATURE: Final = b"\x89HDF\r\n\x1a\n"
