@@ -8,7 +8,7 @@ from typing import Any, Final
 import numpy as np
 
 from meseta.errors import InputError
-from meseta.intake.calibrate import Calibration
+from meseta.intake.calibrate import AMPLIFIER_KINDS, Calibration
 from meseta.intake.drive import interval_doubts
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.units import unit_factor
@@ -27,6 +27,12 @@ def doubts_of(recording: Recording, settings: CalibrationSettings, kind: str, ch
     doubts = list(channel.doubts)
     if kind == "conductance" and not channel.unit:
         doubts.append(f"the unit of '{channel.name}' is not stated: taken as G0")
+    if kind == "log_conductance" and not channel.unit:
+        doubts.append(f"the unit of '{channel.name}' is not stated: taken as log10 of G/G0")
+    second = recording.channel("amplifier_high_gain") if kind == "linear" and channel.role == "amplifier" else None
+    bias = recording.channel("bias") if kind not in DIRECT and settings.bias_volt is None else None
+    in_volts = (channel if kind in AMPLIFIER_KINDS else None, second, bias)
+    doubts += [f"the unit of '{one.name}' is not stated: taken as V" for one in in_volts if one and not one.unit]
     for name, words in (("series_resistance_ohm", "series"), ("source_resistance_ohm", "source")):
         stated = recording.metadata.get(name)
         if kind in DIRECT and stated and getattr(settings, name) is None:

@@ -60,6 +60,16 @@ CONSTANTS: Final = {
 
 LARGEST_BIAS_VOLT: Final = 5.0
 """A bias without a unit that is larger than this was not meant in volts (common practice, no source)."""
+SMALLEST_GAIN: Final = 1000.0
+"""A gain without a unit that is smaller than this was not meant in V/A: currents of contacts are microamperes at most
+(common practice, no source)."""
+_BY_DIMENSION: Final = {
+    # unit of the value: (constant, words of which the name must have one)
+    "m/V": ("nm_per_volt", "piezo pzt displacement actuator scanner drive"),
+    "V/A": ("gain_volt_per_ampere", "gain sensitivity amplifier preamp preamplifier transimpedance converter"),
+    "A/V": ("gain_volt_per_ampere", "gain sensitivity amplifier preamp preamplifier transimpedance converter"),
+    "m/s": ("nm_per_second", "speed velocity stretching pulling stretch pull piezo"),
+}
 
 _WORDS: Final = {
     "amplifier": "amplifier amplifier_type amplifier_kind amplifier_law",
@@ -121,6 +131,13 @@ def _constant_of(name: str) -> tuple[str, str]:
     return "", ""
 
 
+def _constant_by_value(name: str, value: Plain) -> str:
+    """Return the constant that the unit of a value and a word of its name say together ("Piezo: 2.5 nm/V"); or ""."""
+    unit = _number_and_unit(value)[1] if isinstance(value, str) else ""
+    constant, words = _BY_DIMENSION.get(parse_unit(unit).dimension, ("", "")) if unit else ("", "")
+    return constant if set(words.split()) & set(_key(name).split("_")) else ""
+
+
 def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plain, str]:
     """Return (canonical name, value in its unit, doubt) of one entry; what is unknown keeps name and value.
 
@@ -130,6 +147,7 @@ def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plai
         Where a constant has a value or unit that cannot be understood.
     """
     constant, unit = _constant_of(name)
+    constant = constant or _constant_by_value(name, value)
     if not constant:
         return name, value, ""
     if constant not in CONSTANTS:
@@ -143,13 +161,18 @@ def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plai
     wanted = CONSTANTS[constant][0]
     if constant == "gain_volt_per_ampere" and unit and parse_unit(unit, where).dimension in ("A/V", "ohm"):
         factor = parse_unit(unit, where).factor
-        return constant, (1.0 / (number * factor) if "A/V" in parse_unit(unit).dimension else number * factor), ""
+        gain = 1.0 / (number * factor) if "A/V" in parse_unit(unit).dimension else number * factor
+        return constant, _exact(gain), ""
     if unit:
         return constant, _exact(number * unit_factor(unit, wanted, f"{where} {name}".strip())), ""
     if _key(name) == constant or not math.isfinite(number):
         return constant, float(number), ""
     if constant in ("bias_volt", "bias_offset_volt") and abs(number) > LARGEST_BIAS_VOLT:
         return name, value, f"'{name}' is {number:g} without a unit: not used, as it cannot be volts"
+    if constant in ("gain_volt_per_ampere", "high_gain_volt_per_ampere") and abs(number) < SMALLEST_GAIN:
+        text = f"'{name}' is {number:g} without a unit: not used, as it cannot be V/A"
+        meant = f", for example 1e{number:g} if it is the power of ten" if number in range(2, 16) else ""
+        return name, value, f"{text}; give calibration.{constant}{meant}"
     return constant, float(number), f"the unit of '{name}' is not stated: {number:g} is taken as {wanted}"
 
 
@@ -172,7 +195,8 @@ def _number_and_unit(value: Plain) -> tuple[float | None, str]:
         return None, ""
     if isinstance(value, int | float):
         return float(value), ""
-    match = re.fullmatch(r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(\S.*)?", value.replace(",", "."))
+    text = re.sub(r"^\s*10\s*(?:\^|\*\*)\s*([-+]?\d{1,2})\b", r"1e\1", value.replace(",", "."))
+    match = re.fullmatch(r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(\S.*)?", text)
     if match is None or (match[2] and not is_unit(match[2].strip())):
         return None, ""
     return float(match[1]), (match[2] or "").strip()

@@ -38,6 +38,10 @@ _REMARKS: Final = frozenset(
 )
 _NUMBER_BEHIND: Final = re.compile(r"(?<=[\])}>])[\s_#.:-]*\d+$")
 """A number behind a unit in brackets: "Current (nA) 4"."""
+_REMARK_BEHIND: Final = re.compile(rf"(?<=[\])}}>])\s+(?:{'|'.join(sorted(_REMARKS - {'t', 'x'}))})$", re.IGNORECASE)
+"""A remark behind a unit in brackets: "Current (nA) raw"."""
+_ANY_OUTPUT: Final = re.compile(r"[vu]_?out", re.IGNORECASE)
+"""Volts that come out of something."""
 _LOGARITHM: Final = re.compile(r"(.*?)[\s_]*\b((?:log10|log|lg)\s*\(.+\))", re.IGNORECASE)
 _NUMBERS: Final = ("trace_number", "phase", "range_code")
 _ROLE_OF_DIMENSION: Final = {
@@ -52,12 +56,12 @@ _NAMES: Final = {
     "tunneling_current tunnelling_current isd ids",
     "amplifier": "amplifier amp amplifier_volts amp_volts amplifier_output amp_out amplifier_voltage amp_voltage "
     "preamp preamplifier preamp_out output iv_out iv_converter log_amp logamp log_amplifier amplifier_1 amp1 "
-    "low_gain amplifier_low_gain amp_low",
+    "low_gain amplifier_low_gain amp_low vout v_out uout u_out",
     "amplifier_high_gain": "amplifier_high_gain amp_high amp_high_gain high_gain amplifier_2 amp2 amplifier_high",
     "resistance": "widerstand resistencia resistenza resistance r resistances",
     "displacement": "weg abstand auslenkung dehnung deplacement desplazamiento spostamento displacement distance z "
     "extension stretch elongation position gap dz displacements distances electrode_separation separation "
-    "x_displacement",
+    "x_displacement dist",
     "piezo": "piezo piezo_volts piezo_voltage piezo_v pzt z_piezo piezo_z drive ramp piezo_drive piezo_monitor "
     "vpiezo v_piezo u_piezo",
     "time": "zeit temps tiempo tempo time t times timestamp_s elapsed",
@@ -65,7 +69,7 @@ _NAMES: Final = {
     "voltage": "spannung tension voltaje voltage v u volt volts",
     "range_code": "range range_code gain_code gain_range range_index",
     "trace_number": "trace trace_number trace_no trace_id tracenumber traceid trace_index curve curve_number "
-    "curve_id cycle cycle_number trace_nr",
+    "curve_id cycle cycle_number trace_nr run_id run_number run_no run_nr sweep_number sweep_no pull_number pull_no",
     "trigger": "trigger trig ttl trigger_in trigger_out trigger_signal",
     "phase": "phase segment_kind motion",
 }  # fmt: skip
@@ -129,7 +133,7 @@ def split_unit(name: str, role_unit: str = "") -> tuple[str, str]:
     (str, str)
         Name and unit; the unit is empty where none stands there.
     """
-    text = _NUMBER_BEHIND.sub("", name.strip())
+    text = _REMARK_BEHIND.sub("", _NUMBER_BEHIND.sub("", name.strip()))
     if _whole_unit(text):
         return "", text
     logarithm = _LOGARITHM.fullmatch(text)
@@ -215,6 +219,8 @@ def guess_role(name: str, unit: str = "", role: str = "", unit_ground: str = "at
         return Guess("other" if dimension == "V" and stem else by_unit, stated, ground, 0.7)
     if found in _NUMBERS and by_unit != "other":
         return Guess(by_unit, stated, ground, 0.8)
+    if found == "amplifier" and dimension == "V" and not role and _ANY_OUTPUT.fullmatch(stem):
+        return Guess(found, stated, ground, 0.7, (f"volts called '{stem}': taken as amplifier volts",))
     return _fitted(found, stated, dimension, by_unit, "attribute" if role else ground)
 
 
@@ -231,6 +237,8 @@ def _fitted(role: str, unit: str, dimension: str, by_unit: str, ground: str) -> 
         return Guess(role, unit, ground, 0.95)
     if role == "log_conductance" and dimension == "S" and abs(unit_factor(unit, "G0") - 1.0) < 1e-9:
         return Guess(role, "dec", ground, 0.8, (f"called a logarithm and in {unit}: taken as log10(G/G0)",))
+    if role == "displacement" and unit.strip() == "A":
+        return Guess(role, "angstrom", ground, 0.7, (f"called a displacement and in {unit}: taken as angstrom",))
     if role == "piezo" and dimension == "m":
         return Guess("displacement", unit, ground, 0.9)
     if role == "current" and dimension == "V":

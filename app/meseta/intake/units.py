@@ -23,7 +23,7 @@ class Unit:
     """A unit: what it measures, in base units (V, A, S, ohm, s, m, Hz, N, K ...), and its size in them.
 
     ``dimension`` is a base unit or a quotient of two, such as "A" or "V/A"; "1" is a bare number, "dec" a logarithm to
-    base 10.
+    base 10, whose ``factor`` is the conductance that it is taken of, in G0 ("log10(G/S)" is one of siemens).
     """
 
     text: str
@@ -51,6 +51,7 @@ _BASES: Final = {
     "min": ("s", 60.0, False),
     "h": ("s", 3600.0, False),
     "G0": ("S", G0_SIEMENS, True),
+    "e2/h": ("S", G0_SIEMENS / 2, False),
     "dec": ("dec", 1.0, False),
     "%": ("1", 1e-2, False),
     "1": ("1", 1.0, False),
@@ -62,13 +63,19 @@ _WORDS: Final = {
     "A.": "angstrom", "Angstrom": "angstrom", "angstroms": "angstrom", "Angstroms": "angstrom", "ang": "angstrom",
     "g0": "G0", "G_0": "G0", "G₀": "G0", "2e2/h": "G0", "2e^2/h": "G0", "2e²/h": "G0", "(2e2/h)": "G0",
     "(2e^2/h)": "G0", "(2e²/h)": "G0", "2e**2/h": "G0", "G/G0": "G0", "G/G_0": "G0", "g/g0": "G0",
+    "e^2/h": "e2/h", "e²/h": "e2/h", "e**2/h": "e2/h",
     "decade": "dec", "decades": "dec", "dex": "dec", "log10(G/G0)": "dec", "log(G/G0)": "dec", "log10 G/G0": "dec",
     "log10(G0)": "dec", "log10 G0": "dec", "lg(G/G0)": "dec", "logG0": "dec", "micron": "um", "minutes": "min",
     "hours": "h", "hour": "h", "sps": "Hz", "S/s": "Hz", "Sa/s": "Hz", "samples/s": "Hz", "kelvin": "K", "Kelvin": "K",
     "newton": "N", "percent": "%", "nanometer": "nm", "nanometre": "nm", "nanometers": "nm", "nanometres": "nm",
     "nanoampere": "nA", "nanoamp": "nA", "microampere": "uA", "picoampere": "pA", "millivolt": "mV", "millivolts": "mV",
     "milliseconds": "ms", "microseconds": "us", "microsiemens": "uS", "nanosiemens": "nS",
+    # as they are written in Cyrillic letters (GOST 8.417)
+    "В": "V", "мВ": "mV", "мкВ": "uV", "А": "A", "мА": "mA", "мкА": "uA", "нА": "nA", "пА": "pA", "См": "S",
+    "мСм": "mS", "мкСм": "uS", "нСм": "nS", "Ом": "ohm", "кОм": "kohm", "МОм": "Mohm", "ГОм": "Gohm", "с": "s",
+    "мс": "ms", "мкс": "us", "Гц": "Hz", "кГц": "kHz", "м": "m", "мкм": "um", "нм": "nm", "пм": "pm",
 }  # fmt: skip
+_LOGARITHM: Final = re.compile(r"(?:log10|log|lg)\s*\(\s*(?:[Gg]\s*/\s*)?\(?(\S+?)\)?\s*\)", re.IGNORECASE)
 _SAME_SIGNS: Final = str.maketrans({"µ": "u", "μ": "u", "Å": "Å", "Ω": "Ω", "−": "-", "–": "-"})
 
 
@@ -110,10 +117,19 @@ def _quotient(text: str) -> Unit | None:
     return Unit(text, f"{above.dimension}/{below.dimension}", above.factor / below.factor)
 
 
+def _logarithm(text: str) -> Unit | None:
+    """Return the unit of a logarithm of conductance ("log10(G/S)", "lg(G/nS)"); None where it is none."""
+    match = _LOGARITHM.fullmatch(text)
+    taken_of = _simple(match[1]) if match else None
+    if taken_of is None or taken_of.dimension != "S":
+        return None
+    return Unit(text, "dec", float(f"{taken_of.factor / G0_SIEMENS:.15g}"))
+
+
 @lru_cache(maxsize=4096)
 def _parsed(text: str) -> Unit | None:
     plain = _plain(text)
-    return _simple(plain) or _quotient(plain)
+    return _simple(plain) or _logarithm(plain) or _quotient(plain)
 
 
 def is_unit(text: str) -> bool:
