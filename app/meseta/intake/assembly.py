@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property, partial
-from itertools import pairwise
+from itertools import pairwise, repeat
 from typing import Any, Final
 
 import numpy as np
@@ -280,10 +280,14 @@ class Part:
             rising = self._rises(np.array(unknown, np.int64))
             for row, closing in zip(unknown, rising.tolist(), strict=True):
                 self.cut.direction[row] = "closing" if closing else "opening"
+        lengths = np.diff(self.offsets).tolist()
+        if not self.cut.phases:
+            kinds = [PUSH if direction == "closing" else PULL for direction in self.cut.direction]
+            self.cut.phases = list(zip(range(self.traces), repeat(0), lengths, kinds, strict=False))
+            return
         has_phase = {phase[0] for phase in self.cut.phases}
         if len(has_phase) == self.traces:
             return
-        lengths = np.diff(self.offsets).tolist()
         self.cut.phases += [
             (row, 0, length, PUSH if direction == "closing" else PULL)
             for row, (length, direction) in enumerate(zip(lengths, self.cut.direction, strict=True))

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Mapping, Sequence
+from itertools import chain
 from typing import Any, Final
 
 import numpy as np
@@ -112,7 +113,7 @@ def _stepped(part: Part) -> npt.NDArray[np.float32]:
 
 def _phases(parts: Sequence[Part], rows: npt.NDArray[np.int64]) -> PhaseTable:
     tables = [
-        np.array(part.cut.phases, np.int64).reshape(-1, 4) + np.array([base, 0, 0, 0])
+        np.fromiter(chain.from_iterable(part.cut.phases), np.int64).reshape(-1, 4) + np.array([base, 0, 0, 0])
         for part, base in zip(parts, rows, strict=False)
     ]
     table = np.concatenate(tables)
