@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 
 from meseta import intake
-from meseta.intake.floor import running_offset
+from meseta.intake.running_floor import running_offset
 from meseta.recipe import Recipe
 
 G0_SIEMENS = 7.748091729863649e-05  # CODATA 2022, 2e²/h
@@ -24,6 +24,22 @@ def test_running_offset_follows_drift_and_passes_over_plateaus(scale):
     assert not reaches[plateaus].any()
     assert reaches[~plateaus].mean() > 0.95
     np.testing.assert_allclose(offset[50:350], drift[50:350] * scale, atol=1.5e-7 * scale)
+
+
+@pytest.mark.parametrize("side", [1.0, -1.0])
+def test_a_floor_that_drifts_by_more_than_plateaus_conduct_is_followed(side):
+    """Half of the traces end 90 sigma above (or, with negative bias, below) a floor that drifts by 250 sigma and more.
+
+    Taken for one level for all, the drift would hide the plateaus in the floor: their ends would become the offset.
+    """
+    rng = np.random.default_rng(5)
+    drift = 0.5 * np.arange(600.0) + 30 * np.sin(np.arange(600) / 200)
+    plateaus = rng.random(600) < 0.45
+    tails = drift + rng.normal(size=600) + side * np.where(plateaus, 90 * 10 ** rng.normal(0, 0.15, 600), 0.0)
+    offset, reaches = running_offset(tails, np.full(600, 1.0))
+    assert (reaches & plateaus).sum() <= 6
+    assert reaches[~plateaus].mean() > 0.95
+    assert np.sqrt(np.mean((offset - drift)[20:-20] ** 2)) < 2.0
 
 
 def test_too_few_traces_at_the_floor_change_nothing():

@@ -14,57 +14,17 @@ import numpy.typing as npt
 
 from meseta.intake.assembly import Part
 from meseta.intake.rows import BLOCK_SAMPLES, StreamedRow
+from meseta.intake.running_floor import LEAST_TRACES, offset_error, running_offset
 from meseta.intake.spread import Value
 from meseta.quantities import G0_SIEMENS
 
-__all__ = ["offset_error", "remove_floor_offset", "running_offset"]
+__all__ = ["remove_floor_offset"]
 
 Floats = npt.NDArray[np.float64]
 TAIL_SHARE: Final = 0.1
 LEAST_TAIL: Final = 10
-LEAST_TRACES: Final = 5
-WINDOW_TRACES: Final = 101
-AGREEMENT_SIGMAS: Final = 4.0
 MAD_TO_SIGMA: Final = 1.482602218505602
 SHOWN: Final = 200
-
-
-def running_offset(tails: Floats, noise: Floats) -> tuple[Floats, npt.NDArray[np.bool_]]:
-    """Return the offset at every trace, and which traces were shown to reach the floor.
-
-    Parameters
-    ----------
-    tails : (traces,) float64
-        Median of the last stretch of each trace; NaN where it has none.
-    noise : (traces,) float64
-        Standard error of that median.
-
-    Returns
-    -------
-    offset : (traces,) float64
-        Running median over :data:`WINDOW_TRACES` of the traces that reach the floor, carried between them; NaN
-        everywhere where fewer than :data:`LEAST_TRACES` do.
-    reaches : (traces,) bool
-    """
-    finite = np.isfinite(tails)
-    nowhere = np.full(len(tails), np.nan), np.zeros(len(tails), bool)
-    if finite.sum() < LEAST_TRACES:
-        return nowhere
-    # The floor is where most tails agree: the shortest stretch that holds a third of them.
-    ordered = np.sort(tails[finite])
-    held = max(len(ordered) // 3, LEAST_TRACES - 1)
-    widths = ordered[held:] - ordered[: len(ordered) - held]
-    place = int(np.argmin(widths))
-    inside = ordered[place : place + held + 1]
-    centre = float(np.median(inside))
-    spread = max(MAD_TO_SIGMA * float(np.median(np.abs(inside - centre))), float(np.nanmedian(noise)))
-    reaches = finite & (np.abs(tails - centre) <= AGREEMENT_SIGMAS * max(spread, float(widths[place])))
-    rows = np.flatnonzero(reaches)
-    if len(rows) < LEAST_TRACES:
-        return nowhere
-    half = WINDOW_TRACES // 2
-    running = np.array([np.median(tails[rows[max(0, n - half) : n + half + 1]]) for n in range(len(rows))])
-    return np.interp(np.arange(len(tails)), rows, running), reaches
 
 
 def remove_floor_offset(parts: Sequence[Part]) -> dict[str, Any]:
@@ -93,19 +53,6 @@ def remove_floor_offset(parts: Sequence[Part]) -> dict[str, Any]:
         "offset_error": offset_error(tails * bias, reaches),
         "offset_ampere_median": float(np.median(offset) * G0_SIEMENS) if unit == "G0 V" else None,
     }
-
-
-def offset_error(tails: Floats, reaches: npt.NDArray[np.bool_]) -> float | None:
-    """Return the standard error of the running median: sqrt(pi / 2n) sigma for n tails that scatter by sigma.
-
-    The scatter is taken from neighbouring tails, which share the drift; None where there are too few.
-    """
-    held = min(int(reaches.sum()), WINDOW_TRACES)
-    steps = np.abs(np.diff(tails[reaches]))
-    if held < LEAST_TRACES or len(steps) == 0:
-        return None
-    sigma = MAD_TO_SIGMA * float(np.median(steps)) / np.sqrt(2.0)
-    return float(np.sqrt(np.pi / 2.0 / held) * sigma)
 
 
 def _tails(part: Part) -> tuple[Floats, Floats, Floats]:
