@@ -348,13 +348,13 @@ def test_a_channel_that_claims_more_than_was_written_is_read_as_far_as_it_goes(t
 
 
 def _bombs() -> dict[str, Callable[[], bytes]]:
-    zeros = np.zeros(20_000_000)
+    zeros = np.zeros(9_000_000)
     head = _mat(GOOD)[:128]
-    plain = struct.pack("<IIIIII", 14, 160_000_056, 6, 8, 6, 0) + struct.pack("<IIii", 5, 8, 1, 20_000_000)
-    plain += struct.pack("<IIQ", 1, 1, ord("g")) + struct.pack("<II", 9, 160_000_000)
+    plain = struct.pack("<IIIIII", 14, 72_000_056, 6, 8, 6, 0) + struct.pack("<IIii", 5, 8, 1, 9_000_000)
+    plain += struct.pack("<IIQ", 1, 1, ord("g")) + struct.pack("<II", 9, 72_000_000)
 
     def variable() -> bytes:
-        packed = zlib.compress(plain + bytes(160_000_000))
+        packed = zlib.compress(plain + bytes(72_000_000))
         return head + struct.pack("<II", 15, len(packed)) + packed
 
     return {
@@ -362,8 +362,8 @@ def _bombs() -> dict[str, Callable[[], bytes]]:
         "conductance_G0.npy.gz": lambda: gzip.compress(_npy(zeros)),
         "conductance_G0.npy.xz": lambda: lzma.compress(_npy(zeros), preset=0),
         "a.mat": variable,
-        "a.csv.gz": lambda: gzip.compress(b"conductance_G0\n" + b"1\n" * 80_000_000),
-        "a.zip": lambda: _stored("t.csv", b"conductance_G0\n" + b"1\n" * 80_000_000),
+        "a.csv.gz": lambda: gzip.compress(b"conductance_G0\n" + b"1\n" * 36_000_000),
+        "a.zip": lambda: _stored("t.csv", b"conductance_G0\n" + b"1\n" * 36_000_000),
     }
 
 
