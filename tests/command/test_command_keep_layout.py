@@ -58,7 +58,8 @@ def test_what_was_said_once_holds_for_the_next_files(folder):
 
 
 def test_a_file_that_fits_none_any_more_is_one_clear_line_and_kept_as_another_beside_it(folder):
-    meseta("peek", "a.csv", *KEEP, *TOLD, cwd=folder)
+    first = meseta("peek", "a.csv", *KEEP, *TOLD, cwd=folder)
+    assert first.returncode == 0, first.stderr
     alone = meseta("peek", "c.csv", "--recipe", "lab.toml", cwd=folder)
     assert alone.returncode == 2
     assert len(alone.stderr.strip().splitlines()) == 1 and "'rig 2'" in alone.stderr
@@ -70,7 +71,8 @@ def test_a_file_that_fits_none_any_more_is_one_clear_line_and_kept_as_another_be
 
 
 def test_a_layout_is_renewed_without_saying_again_what_did_not_change(folder):
-    meseta("peek", "a.csv", *KEEP, *TOLD, cwd=folder)
+    first = meseta("peek", "a.csv", *KEEP, *TOLD, cwd=folder)
+    assert first.returncode == 0, first.stderr
     again = meseta("peek", "c.csv", "--recipe", "lab.toml", *KEEP, cwd=folder)
     assert again.returncode == 0, again.stderr
     assert "replaced" in again.stdout

@@ -80,7 +80,7 @@ def _checked(
 
 def _only_layout(checks: Sequence[Description]) -> KeptLayout:
     """Return the layout of all files; an error names the first that has another."""
-    from meseta.intake.kept_layouts import differences
+    from meseta.intake.layout_differences import differences
 
     first = max(checks, key=lambda check: check.pieces > 1)
     for check in checks:

@@ -11,7 +11,8 @@ import numpy.typing as npt
 from meseta import intake
 from meseta.errors import InputError, MesetaError
 from meseta.intake import Description
-from meseta.intake.kept_layouts import LayoutError, as_seen, differences
+from meseta.intake.kept_layouts import LayoutError, as_seen
+from meseta.intake.layout_differences import differences
 from meseta.recipe import Recipe
 from meseta.recipe.kept_layouts import KeptLayout
 from meseta.traces import TraceSet
