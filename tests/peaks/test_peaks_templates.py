@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from peaks_synthetic import Population, count_matrix, histogram_of
@@ -11,6 +13,7 @@ from meseta.analysis import Analysis
 from meseta.errors import CallError
 from meseta.histograms import CountMatrix, resample
 from meseta.peaks import fit_histogram
+from meseta.peaks.templates import background_template
 from meseta.simulate import SimulationSettings, simulate
 from meseta.traces import trace_table
 from meseta.work import Work
@@ -67,6 +70,34 @@ def test_a_small_blank_makes_the_area_less_certain():
         [fitted(seed, 12) for seed in range(3)], [fitted(seed, 1200) for seed in range(3)]
     ))  # fmt: skip
     assert few > 1.15 * many
+
+
+def test_a_blank_of_a_dozen_traces_is_smoothed_and_the_area_stays_right():
+    """The true area is 0.5 x 60 samples a trace (the generator's); raw, such a blank takes 8 samples too few off."""
+    tables = [fitted(seed, 12) for seed in range(40, 50)]
+    areas = np.array([table.area_per_trace[0] for table in tables])
+    assert abs(areas.mean() - 30.0) < 2.5
+    assert sum(table.area_low[0] <= 30.0 <= table.area_high[0] for table in tables) >= 8
+
+
+def test_a_blank_of_many_traces_is_taken_as_it_is():
+    matrix, blank = with_blank(1, 400)
+    asked = Recipe().with_values("peaks", background="template").peaks
+    shape = background_template(histogram_of(matrix), asked, matrix, None, blank=blank).counts
+    assert np.array_equal(shape, matrix.counts[blank].sum(axis=0))
+
+
+def test_a_narrow_line_of_a_small_blank_is_not_smeared():
+    """Two halves that share a sharp line foretell it: the width is taken from the traces, not from their number."""
+    rng = np.random.default_rng(4)
+    matrix, blank = with_blank(2, 40)
+    expected = np.full(matrix.counts.shape[1], 0.2)
+    expected[50] = 100.0
+    counts = rng.poisson(expected, matrix.counts.shape)
+    asked = Recipe().with_values("peaks", background="template").peaks
+    lined = replace(matrix, counts=counts.astype(matrix.counts.dtype))
+    shape = background_template(histogram_of(lined), asked, lined, None, blank=blank).counts
+    assert shape[50] > 0.9 * counts[blank][:, 50].sum()
 
 
 def test_a_template_without_traces_or_with_other_bins_is_refused():
