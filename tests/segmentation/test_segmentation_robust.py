@@ -43,6 +43,40 @@ def test_gaps_within_a_plateau_are_marked():
     assert len(others) == 20 and not np.any(others.missing_samples)
 
 
+@pytest.mark.parametrize(("gap", "parts"), [((230, 254), 1), ((230, 300), 2)])
+def test_a_plateau_ends_at_a_gap_in_which_another_might_lie(gap, parts):
+    """Up to 0.05 nm (25 samples) are bridged in a metal: who misses far more cannot say that nothing happened."""
+    rng = np.random.default_rng(8)
+    rows = [noisy(ideal(2e-4), rng) for _ in range(10)]
+    for row in rows:
+        row[slice(*gap)] = np.nan
+    table = Analysis(TraceSet.from_arrays(rows, step_nm=STEP_NM)).plateaus()
+    one = table.take(np.isclose(table.level_g0, 0.98, rtol=0.02))
+    assert len(one) == 10 * parts
+    first = one.take(np.flatnonzero(one.start == 200))
+    if parts == 1:
+        assert set(one.stop) == {350} and set(one.censored) == {""}
+        return
+    last = one.take(np.flatnonzero(one.start == 300))
+    assert set(first.stop) == {230} and set(last.stop) == {350}
+    assert set(one.censored) == {"gap"} and not np.any(one.missing_samples)
+    assert np.all(np.isnan(first.jump_after_decades)) and np.all(np.isnan(last.jump_before_decades))
+    assert np.all(first.jump_before_decades < 0) and np.all(np.isfinite(last.jump_after_decades))
+
+
+def test_a_gap_before_the_first_plateau_or_after_the_last_cuts_nothing_else():
+    rng = np.random.default_rng(9)
+    rows = [noisy(ideal(2e-4), rng)[:700] for _ in range(10)]
+    whole = Analysis(TraceSet.from_arrays([row.copy() for row in rows], step_nm=STEP_NM)).plateaus()
+    for row in rows:
+        row[:40] = np.nan
+        row[640:] = np.nan
+    table = Analysis(TraceSet.from_arrays(rows, step_nm=STEP_NM)).plateaus()
+    assert len(table) == len(whole)
+    assert set(table.start[table.level_g0 > 2.5]) == {40}
+    assert set(table.censored[table.level_g0 > 0.5]) == {""}
+
+
 def test_a_plateau_neither_begins_nor_ends_in_a_gap():
     rng = np.random.default_rng(2)
     rows = [noisy(ideal(), rng) for _ in range(10)]

@@ -362,7 +362,7 @@ STEPS: Mapping[str, Step] = {
         Step("noise", "learning the noise", 2, (), ("noise", _PHASE), _noise, _noise_block),
         Step("alignment", "finding the rupture", 1, (), ("alignment", _PHASE), _alignment, _alignment_block),
         Step(
-            "plateaus", "finding plateaus", 4, ("noise", "alignment"), ("plateaus", _PHASE), _plateaus, _plateaus_block
+            "plateaus", "finding plateaus", 5, ("noise", "alignment"), ("plateaus", _PHASE), _plateaus, _plateaus_block
         ),
         Step(
             "measures",
@@ -485,7 +485,7 @@ STEPS: Mapping[str, Step] = {
         Step(
             "peaks",
             "fitting peaks",
-            3,
+            4,
             ("histogram", "resampling", "counts", "plateaus", "measures", "selection", "noise", "other_counts"),
             (
                 "peaks",

@@ -168,6 +168,7 @@ def expectation_lines(found: Expectation) -> list[str]:
     rows.append(["found above", *(_limit(float(limit)) for limit in found.limit_g0)])
     widths = [max(len(row[column]) for row in rows) for column in range(len(rows[0]))]
     lines += ["  ".join(cell.rjust(width) for cell, width in zip(row, widths, strict=True)) for row in rows]
+    lines.append("planted plateaus are straight and keep still; of molecules that drift or switch, fewer are found")
     if found.blank:
         lines.append(
             f"false plateaus a trace: {found.false_a_trace:.3g}; 95 % {found.false_low:.3g} to {found.false_high:.3g}"

@@ -36,7 +36,7 @@ LOWEST_SIGMA: Final = 3.0
 """Floor sigmas above the floor from which on plateaus are looked for where the recipe states nothing."""
 SLOWEST_TUNNELLING: Final = 2.0
 """Decades per nm: a gentler slope is that of plateaus, not of tunnelling (a barrier of 0.2 eV)."""
-CENSORED: Final = np.array(["", "ramp", "floor", "saturation"])
+CENSORED: Final = np.array(["", "ramp", "floor", "saturation", "gap"])
 
 
 def find_plateaus(
@@ -145,6 +145,12 @@ def _rules(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, steps: Flo
         shortest_molecule=molecule if in_nm else 0.0,
         trim=int(np.ceil(noise.rise_samples)),
     )
+
+
+def shortest_molecule(settings: PlateauSettings, noise: NoiseModel, in_nm: bool, step: float) -> float:
+    """Return the length in drive units from which on a molecular plateau is taken, at ``step`` drive a sample."""
+    rules = _rules(settings, noise, in_nm, np.array([step]))
+    return max(rules.shortest_molecule, rules.shortest_samples * step)
 
 
 def _clipped_from(noise: NoiseModel) -> float:

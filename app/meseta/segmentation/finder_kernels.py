@@ -11,9 +11,11 @@ from meseta.kernels import kernel, warm_up
 from meseta.segmentation.joining_kernels import (
     FLAT,
     FLOOR,
+    HIDDEN,
     SATURATED,
     Rules,
     classify,
+    cut_at_gaps,
     drop_along,
     group_end,
     line_at,
@@ -174,17 +176,21 @@ def _describe(
     row[4], row[5] = _log_slope(g, begin + lead, end - lead, weights)
     row[6] = whole[0] * share_at(whole[2], scale)
     row[7], row[8] = np.nan, np.nan
-    if first > 0:
+    if first > 0 and kinds[first - 1] != HIDDEN:
         row[7] = decades_between(line_at(moments[first - 1], begin), line_at(moments[first], begin), scale)
-    if last + 1 < len(ends):
+    if last + 1 < len(ends) and kinds[last + 1] != HIDDEN:
         row[8] = decades_between(line_at(moments[last], end), line_at(moments[last + 1], end), scale)
     row[9] = 0.0
     if ends[last] >= len(g):
         row[9] = 1.0
     elif last + 1 < len(ends) and kinds[last + 1] == FLOOR and ending < 1.5 * rules.low:
         row[9] = 2.0
+    elif last + 1 < len(ends) and kinds[last + 1] == HIDDEN:
+        row[9] = 1.0 if ends[last + 1] >= len(g) else 4.0
     if (first > 0 and kinds[first - 1] == SATURATED) or (begin > 0 and g[begin - 1] == np.inf):
         row[9] = 3.0
+    elif first > 1 and kinds[first - 1] == HIDDEN and row[9] == 0.0:
+        row[9] = 4.0
     row[12], row[13] = missing, longest
     proof = (margin / error) ** 2 if error > 0.0 else np.inf
     row[11] = 1.0 if not math.isfinite(proof) else proof / (proof + rules.line_cost * evidence)
@@ -205,7 +211,8 @@ def find(
 ) -> Floats:
     """Find the plateaus of a block of traces.
 
-    Missing samples (NaN, or with a fault: 0 where there is none, ``CLIPPED`` where saturated) have no weight.
+    Missing samples (NaN, or with a fault: 0 where there is none, ``CLIPPED`` where saturated) have no weight; a gap
+    longer than five times the shortest plateau parts what lies before it from what lies after.
 
     Returns
     -------
@@ -226,6 +233,7 @@ def find(
             g = g[::-1].copy()
         y, weights, ends, moments, evidence = stretches(g, scale, rules.change_cost, rules.line_cost)
         step = abs(steps[t])
+        ends, moments = cut_at_gaps(g, y, weights, ends, moments, step, scale, rules)
         begins = np.zeros(len(ends), np.int64)
         begins[1:] = ends[:-1]
         kinds = classify(begins, ends, moments, step, scale, rules)

@@ -9,16 +9,19 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
+from meseta.segmentation.kernels import fill_moments
 from meseta.segmentation.stretch_kernels import Scale, decades_between, restored, share_at
 
 __all__ = [
     "DECAY",
     "FLAT",
     "FLOOR",
+    "HIDDEN",
     "JUMP",
     "SATURATED",
     "Rules",
     "classify",
+    "cut_at_gaps",
     "drop_along",
     "group_end",
     "line_at",
@@ -28,8 +31,10 @@ __all__ = [
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
 
-JUMP, FLOOR, SATURATED, DECAY, FLAT = 0, 1, 2, 3, 4
+JUMP, FLOOR, SATURATED, DECAY, FLAT, HIDDEN = 0, 1, 2, 3, 4, 5
 SWITCH_OVER_STAY = 2.0
+BRIDGED = 5.0
+"""Shortest plateaus, end to end, that a gap may be long and still be bridged (0.05 and 0.1 nm as they come)."""
 RETURN_SHARE = 0.35
 """A switching plateau comes back to within this share of the excursion."""
 
@@ -97,13 +102,56 @@ def drop_along(moments: Floats, begin: int, end: int, scale: Scale) -> tuple[flo
 
 
 @kernel
+def _long_gaps(g: Floats, y: Floats, step: float, scale: Scale, rules: Rules) -> Integers:
+    """Return begin and end of the runs of missing samples that are too long to be bridged."""
+    bounds = np.empty(len(y) + 1, np.int64)
+    count, begin = 0, 0
+    for i in range(len(y) + 1):
+        if i < len(y) and not math.isfinite(g[i]):
+            continue
+        metal = begin > 0 and restored(y[begin - 1], scale) >= rules.metal_from
+        shortest = rules.shortest_metal if metal else rules.shortest_molecule
+        if i - begin > BRIDGED * rules.shortest_samples and (i - begin) * step > BRIDGED * shortest:
+            bounds[count], bounds[count + 1] = begin, i
+            count += 2
+        begin = i + 1
+    return bounds[:count]
+
+
+@kernel
+def cut_at_gaps(
+    g: Floats, y: Floats, weights: Floats, ends: Integers, moments: Floats, step: float, scale: Scale, rules: Rules
+) -> tuple[Integers, Floats]:
+    """Return the stretches with every long gap as a stretch of its own, which weighs nothing.
+
+    What is in the gap nobody knows: a plateau before it and one after it are not taken for one.
+    """
+    gaps = _long_gaps(g, y, step, scale, rules)
+    if len(gaps) == 0:
+        return ends, moments
+    bounds = np.unique(np.concatenate((ends, gaps)))
+    inside = np.zeros(len(bounds), np.bool_)
+    for k in range(0, len(gaps), 2):
+        inside |= (bounds > gaps[k]) & (bounds < gaps[k + 1])
+    bounds = bounds[~inside & (bounds > 0)]
+    cut = np.zeros((len(bounds), 6))
+    begin = 0
+    for j in range(len(bounds)):
+        fill_moments(y, weights, begin, bounds[j], cut[j])
+        begin = bounds[j]
+    return bounds, cut
+
+
+@kernel
 def classify(begins: Integers, ends: Integers, moments: Floats, step: float, scale: Scale, rules: Rules) -> Integers:
-    """Return what each straight stretch is: jump, floor, saturation, decay or flat."""
+    """Return what each straight stretch is: jump, floor, saturation, decay, flat or hidden."""
     kinds = np.zeros(len(ends), np.int64)
     for j in range(len(ends)):
         level = restored(moments[j, 2], scale)
         length = ends[j] - begins[j]
-        if level < rules.low:
+        if moments[j, 0] <= 0.0:
+            kinds[j] = HIDDEN
+        elif level < rules.low:
             kinds[j] = FLOOR
         elif level > rules.saturation:
             kinds[j] = SATURATED
@@ -120,7 +168,7 @@ def _next_flat(j: int, kinds: Integers, begins: Integers, ends: Integers, gap: i
     """Return the next flat stretch, over at most ``gap`` samples of others, or -1."""
     k = j + 1
     while k < len(kinds) and kinds[k] != FLAT:
-        if kinds[k] == FLOOR or kinds[k] == SATURATED or ends[k] - ends[j] > gap:
+        if kinds[k] == FLOOR or kinds[k] == SATURATED or kinds[k] == HIDDEN or ends[k] - ends[j] > gap:
             return -1
         k += 1
     return k if k < len(kinds) else -1
@@ -200,6 +248,7 @@ def _warm_up() -> None:
     rules = Rules(3.0, 4.0, 0.03, 1e9, 1e9, 0.3, 1.0, 0.05, 0.2, 0.4, 0.1, 0.3, 5, 0.05, 0.1, 1)
     begins, ends = np.array([0, 8], np.int64), np.array([8, 16], np.int64)
     moments = np.array([[8.0, 3.5, 5.0, 42.0, 0.0, 8.0], [8.0, 11.5, 5.0, 42.0, 0.0, 8.0]])
+    cut_at_gaps(np.full(16, np.nan), np.zeros(16), np.zeros(16), ends, moments, 1.0, scale, rules)
     kinds = classify(begins, ends, moments, 1.0, scale, rules)
     group_end(0, kinds, begins, ends, moments, scale, rules)
     runs_in(0, 1, begins, ends, moments, 1.0, scale, rules)

@@ -91,11 +91,12 @@ class PlateauTable(Table):
     its standard error (NaN where the long-run variance is not finite),
     ``slope_decades_per_nm`` a least-squares slope of log10 G,
     ``noise_decades`` the robust spread of log10 G about that slope, ``kind`` one of :data:`PLATEAU_KINDS`,
-    ``censored`` "" or what cut the plateau ("ramp", "floor", "saturation"), ``number`` counts plateaus in the trace
-    from the last one (1 = last), ``score`` lies in 0..1, ``jump_before_decades``/``jump_after_decades`` are NaN at the
-    end of a trace, ``telegraph`` is true for a plateau that switches between close levels.  ``missing_samples`` counts
-    samples within the plateau that are missing or not trusted (they have no weight), ``longest_gap_samples`` the
-    longest run of them; a plateau neither begins nor ends with one.
+    ``censored`` "" or what cut the plateau ("ramp", "floor", "saturation", "gap"), ``number`` counts plateaus in
+    the trace from the last one (1 = last), ``score`` lies in 0..1,
+    ``jump_before_decades``/``jump_after_decades`` are NaN at the end of a trace and at a gap, ``telegraph`` is true for
+    a plateau that switches between close levels.  ``missing_samples`` counts samples within the plateau that are
+    missing or not trusted (they have no weight), ``longest_gap_samples`` the longest run of them; a plateau neither
+    begins nor ends with one, and none is longer than five times the shortest plateau.
     """
 
     trace: Integers
