@@ -15,9 +15,11 @@ from meseta.intake.readers.contents import Contents, columns_of, whole
 from meseta.intake.readers.spool import SpooledColumn
 from meseta.intake.readers.text_form import KnownForm, TextForm, decode_head, find_form, known_form
 from meseta.intake.readers.text_layout import Table, laid_out
+from meseta.intake.readers.text_odd import BadCellError, OddColumns
 from meseta.intake.readers.text_rows import Columns, Rows, numbers, numbers_of_each
 from meseta.intake.readers.text_stream import put_aside
 from meseta.intake.readers.unpack import members_of, read_bytes, unpacked_blocks, unpacked_members
+from meseta.intake.roles import guess_role, told_role
 from meseta.intake.rows import end_to_end
 from meseta.recipe.intake import IntakeSettings
 from meseta.traces import ArraySamples
@@ -83,9 +85,8 @@ class TextReader:
             except InputError:  # looked at anew: the fault is then named for what the file itself says
                 self._known = tuple(one for one in self._known if one is not known)
         encoding, data, form = _recognised(data, path)
-        rows = _rows(data, encoding, form, path)
-        contents = _laid_rows(rows, form, _doubts(data, encoding, form), settings, path)
-        remembered = known_form(data, form) if encoding == "utf-8" else None
+        contents, rows, odd = _read(data, encoding, form, settings, path)
+        remembered = known_form(data, form) if encoding == "utf-8" and not odd.kinds and not odd.marked else None
         if remembered is not None:
             newest = _Known(remembered, settings.layout, _emptied(contents, rows, form))
             kept = [one for one in self._known if (one.form.before, one.layout) != (remembered.before, newest.layout)]
@@ -185,18 +186,57 @@ def _head(data: bytes, path: Path) -> bytes:
     return data[: max(end, HEAD_BYTE)] if end else data
 
 
-def _rows(data: bytes, encoding: str, form: TextForm, path: Path) -> Rows:
+def _read(
+    data: bytes, encoding: str, form: TextForm, settings: IntakeSettings, path: Path
+) -> tuple[Contents, Rows, OddColumns]:
+    """Return the content of a text table; a column that nobody needs may hold words here and there."""
+    while True:
+        odd = OddColumns(form.kinds, form.decimal)
+        try:
+            rows = _rows(data, encoding, form, path, odd)
+        except BadCellError as error:
+            form = _with_words(form, error, settings)
+            continue
+        return _laid_rows(rows, form, _doubts(data, encoding, form), settings, path, odd), rows, odd
+
+
+def _with_words(form: TextForm, error: BadCellError, settings: IntakeSettings) -> TextForm:
+    """Return the form with words in the column of a bad cell, where the column is nothing that is measured.
+
+    Raises
+    ------
+    BadCellError
+        Where it is: the cell must be corrected.
+    """
+    place, kinds = error.column, list(form.kinds or ("number",) * form.columns)
+    name = form.names[place] if place < len(form.names) else ""
+    told = told_role(name, settings.channels) if name else None
+    is_needed = guess_role(name, form.units[place]).role != "other" if told is None else told.role != "ignore"
+    if not name or is_needed or kinds[place] == "words" or kinds.count("words") == len(kinds) - 1:
+        raise error
+    kinds[place] = "words"
+    return replace(form, kinds=tuple(kinds))
+
+
+def _rows(data: bytes, encoding: str, form: TextForm, path: Path, odd: OddColumns | None = None) -> Rows:
     """Return the rows of a text table of known form."""
-    rows = numbers(_body(data, form, encoding), form, path, form.skip_lines)
+    rows = numbers(_body(data, form, encoding), form, path, form.skip_lines, odd=odd)
     if not rows.lengths:
         raise InputError("holds no rows of numbers", str(path), "give a table with numbers in rows")
     return rows
 
 
-def _laid_rows(rows: Rows, form: TextForm, doubts: list[str], settings: IntakeSettings, path: Path) -> Contents:
+def _laid_rows(
+    rows: Rows,
+    form: TextForm,
+    doubts: list[str],
+    settings: IntakeSettings,
+    path: Path,
+    odd: OddColumns | None = None,
+) -> Contents:
     """Return the content that rows of numbers in memory make."""
     columns = [ArraySamples(column) for column in rows.columns]
-    table = Table(columns, rows.lengths, rows.said, lambda: _lengths(rows.columns))
+    table = Table(columns, rows.lengths, rows.said, lambda: _lengths(rows.columns), odd)
     return laid_out(table, form, doubts, settings, path)
 
 
@@ -204,9 +244,15 @@ def _large_contents(path: Path, settings: IntakeSettings) -> Contents:
     """Return the content of a large text, its numbers put aside."""
     head = next(unpacked_blocks(path, LONG_HEAD_BYTE))
     encoding, _, form = _recognised(head, path)
-    columns, stretches = put_aside(path, form, encoding)
+    while True:
+        odd = OddColumns(form.kinds, form.decimal)
+        try:
+            columns, stretches = put_aside(path, form, encoding, odd)
+            break
+        except BadCellError as error:
+            form = _with_words(form, error, settings)
     samples = [SpooledColumn(columns, place, columns.rows) for place in range(form.columns)]
-    table = Table(samples, stretches.lengths, stretches.said, lambda: columns.last_number)
+    table = Table(samples, stretches.lengths, stretches.said, lambda: columns.last_number, odd)
     return laid_out(table, form, _doubts(head, encoding, form), settings, path)
 
 
@@ -249,7 +295,7 @@ def _from_members(path: Path, members: Sequence[str], settings: IntakeSettings) 
 
 def _member(data: bytes, path: Path, settings: IntakeSettings) -> Contents:
     encoding, data, form = _recognised(data, path)
-    return _laid_rows(_rows(data, encoding, form, path), form, _doubts(data, encoding, form), settings, path)
+    return _read(data, encoding, form, settings, path)[0]
 
 
 def _kinds(contents: Contents) -> list[tuple[str, str, str]]:

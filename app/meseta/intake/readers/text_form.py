@@ -5,21 +5,23 @@ from __future__ import annotations
 import csv
 import re
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
+from meseta.intake.readers.text_cells import NUMBER, OddRows, odd_rows
 from meseta.intake.roles import guess_role
 from meseta.intake.units import is_unit
 
 __all__ = ["KnownForm", "TextForm", "decode_head", "entries_of", "find_form", "known_form"]
 
 _COMMENT: Final = re.compile(r"^\s*(#|%|//|!|\"#|;(?=\s*[A-Za-z]))+\s?")
-_NUMBER: Final = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([eEdD][-+]?\d+)?$|[-+]?(nan|inf|infinity)$|n/?a$|$", re.IGNORECASE)
 _ENTRY: Final = re.compile(r"^([^:=\t]{1,60}?)\s*(?::|=|\t)\s*(\S.*)$")
 HEAD_LINES: Final = 400
 ENOUGH_LINES: Final = 12
 """So many lines of equally many numbers are the table."""
 PROBE_CHARACTERS: Final = 8192
+ODD_RATHER: Final = 3
+"""A table with words in it is taken where it has so many times the rows of what else looks like one."""
 
 
 @dataclass(frozen=True)
@@ -60,6 +62,10 @@ class TextForm:
     doubts: tuple[str, ...] = ()
     before: tuple[str, ...] = ()
     """Lines before the numbers, as they stand there; before each further trace they may come again."""
+    kinds: tuple[str, ...] = ()
+    """What each column holds where not all are plain numbers; see :class:`meseta.intake.readers.text_cells.OddRows`."""
+    labels: tuple[str, ...] = ()
+    """Of each column, the name of the trace that it belongs to, where a second line of headings says it."""
 
     @property
     def numeric_heading(self) -> bool:
@@ -86,7 +92,7 @@ class KnownForm:
 
 def known_form(data: bytes, form: TextForm) -> KnownForm | None:
     """Return the form to try on the next file; None where there is no heading, or a doubt, to know it again by."""
-    if not form.names or form.doubts or form.numeric_heading:
+    if not form.names or form.doubts or form.kinds or form.numeric_heading:
         return None
     at = 0
     for _ in range(form.skip_lines):
@@ -143,7 +149,7 @@ def _is_numeric(line: str, delimiter: str, decimal: str) -> int:
         if any("." in cell for cell in cells):
             return 0
         cells = [cell.replace(",", ".") for cell in cells]
-    return len(cells) if all(_NUMBER.match(cell) for cell in cells) else 0
+    return len(cells) if all(NUMBER.match(cell) for cell in cells) else 0
 
 
 def find_form(text: str) -> TextForm | None:
@@ -154,9 +160,15 @@ def find_form(text: str) -> TextForm | None:
         start, count, cells = _numeric_run(lines, delimiter, decimal)
         if not count:
             continue
-        score = (count, cells, decimal == ".", delimiter in "\t;,")
+        score = (count, cells, decimal == ".", delimiter in "\t;,|")
         if best is None or score > best[0]:
             best = (score, delimiter, decimal, start, cells)
+    if best is None or best[0][0] < ENOUGH_LINES:
+        odd = _odd_form(lines if len(lines) < 2 * ENOUGH_LINES else lines[:-1], text[:PROBE_CHARACTERS])
+        if odd is not None and (best is None or odd[2].count > ODD_RATHER * best[0][0]):
+            delimiter, decimal, rows = odd
+            form = _with_headings(lines, delimiter, decimal, rows.start, len(rows.kinds), [])
+            return replace(form, kinds=rows.kinds)
     if best is None:
         return None
     _, delimiter, decimal, start, cells = best
@@ -167,14 +179,32 @@ def find_form(text: str) -> TextForm | None:
     return _with_headings(lines, delimiter, decimal, start, cells, doubts)
 
 
+def _odd_form(lines: Sequence[str], probe: str) -> tuple[str, str, OddRows] | None:
+    """Return (delimiter, decimal sign, rows) of a table in which not all columns are plain numbers."""
+    best: tuple[tuple[int, int, int], str, str, OddRows] | None = None
+    for delimiter, decimal in _candidates(probe):
+        rows = [
+            (number, _cells(line, delimiter))
+            for number, line in enumerate(lines)
+            if line.strip() and not _COMMENT.match(line)
+        ]
+        found = odd_rows(rows, decimal)
+        if found is None:
+            continue
+        score = (found.count, -found.kinds.count("words"), len(found.kinds))
+        if best is None or score > best[0]:
+            best = (score, delimiter, decimal, found)
+    return best[1:] if best else None
+
+
 def _candidates(text: str) -> list[tuple[str, str]]:
     """Return the pairs of delimiter and decimal sign that a text can be written with."""
-    found = [(sign, ".") for sign in "\t;," if sign in text]
+    found = [(sign, ".") for sign in "\t;,|" if sign in text]
     blanks = " " in text or not found
     if blanks:
         found.append((" ", "."))
     if "," in text:
-        found += [(sign, ",") for sign in "\t;" if sign in text] + ([(" ", ",")] if blanks else [])
+        found += [(sign, ",") for sign in "\t;|" if sign in text] + ([(" ", ",")] if blanks else [])
     return found
 
 
@@ -228,7 +258,7 @@ def _with_headings(
         if match and not _is_heading(row, line[match.end() :]):
             continue
         if not _is_known(row) and _better_heading(before, line, delimiter, cells):
-            if not match and any(_NUMBER.match(cell) for cell in row if cell):
+            if not match and any(NUMBER.match(cell) for cell in row if cell):
                 start = max(place for place in range(start) if lines[place] == line)  # a row with a bad cell
             continue
         names, heading = row, line

@@ -4,16 +4,19 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from contextlib import suppress
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
 import numpy.typing as npt
 
+from meseta.errors import InputError
 from meseta.intake.metadata import Plain, canonical
 from meseta.intake.readers.contents import Contents, columns_of, make_channel, whole
 from meseta.intake.readers.text_form import TextForm, entries_of
+from meseta.intake.readers.text_odd import OddColumns
 from meseta.intake.recording import RawChannel
 from meseta.intake.roles import guess_role, stem_of
 from meseta.intake.rows import end_to_end
@@ -23,6 +26,9 @@ from meseta.traces import Samples
 __all__ = ["Table", "laid_out"]
 
 NUMBERS: Final = np.dtype(np.float64)
+LOOKED_SAMPLES: Final = 100_000
+GOES_ON: Final = 0.9
+"""Time stamps are an axis where so many of them are later than the one before."""
 
 
 @dataclass(frozen=True)
@@ -33,15 +39,22 @@ class Table:
     lengths: list[int]
     said: Sequence[tuple[str, ...]]
     filled: Callable[[], Sequence[int]]
+    odd: OddColumns | None = None
+    """What was met in columns that are no plain numbers."""
 
 
 def laid_out(table: Table, form: TextForm, doubts: list[str], settings: IntakeSettings, path: Path) -> Contents:
     """Return the content that columns of numbers make, with the headings and entries of their form."""
+    names = list(form.names) if form.names else [f"column {n + 1}" for n in range(form.columns)]
+    stamps: set[str] = set()
+    if table.odd is not None and (table.odd.kinds or table.odd.marked):
+        form, table, names, more = _settled(form, table, table.odd, names)
+        doubts = [*doubts, *more]
+        stamps = {name for name, kind in zip(names, form.kinds, strict=False) if kind == "stamp"}
     metadata, more = canonical(form.entries, str(path))
     doubts = [*doubts, *more]
-    names = list(form.names) if form.names else [f"column {n + 1}" for n in range(form.columns)]
     wide = _wide_sets(names, settings) if len(table.lengths) == 1 else None
-    words = {"\t": "tab", " ": "blank", ",": "comma", ";": "semicolon"}[form.delimiter]
+    words = {"\t": "tab", " ": "blank", ",": "comma", ";": "semicolon", "|": "bar"}[form.delimiter]
     if wide:
         return _wide(names, form.units, table, wide, metadata, doubts, words)
     channels = [
@@ -49,6 +62,7 @@ def laid_out(table: Table, form: TextForm, doubts: list[str], settings: IntakeSe
         for name, unit, column in zip(names, form.units, table.columns, strict=True)
     ]
     channels = [_from_metadata(channel, metadata) if len(channels) <= 2 else channel for channel in channels]
+    channels = _with_stamps(channels, stamps)
     offsets, starts, dataset = whole(len(table.columns[0]))
     layout = f"{words}-separated, {len(names)} column{'s' if len(names) > 1 else ''}"
     if len(table.lengths) > 1:
@@ -57,6 +71,55 @@ def laid_out(table: Table, form: TextForm, doubts: list[str], settings: IntakeSe
         layout += f", {len(table.lengths)} blocks"
     rows = _said_of_each(table, form, path)
     return Contents(layout, tuple(channels), offsets, starts, dataset, metadata, rows, tuple(doubts))
+
+
+def _settled(
+    form: TextForm, table: Table, odd: OddColumns, names: list[str]
+) -> tuple[TextForm, Table, list[str], list[str]]:
+    """Return form, table and headings without the columns that cannot be carried, and doubts about odd columns.
+
+    A word that stands in every row is an entry of the file.
+    """
+    names = [name or f"column {place + 1}" if place in odd.places else name for place, name in enumerate(names)]
+    doubts = [*odd.mark_doubts(), *(odd.said_of(place, names[place]) for place in odd.places)]
+    entries = []
+    for place in odd.places:
+        word = odd.constant(place)
+        with suppress(InputError):  # a word that is no value of such a constant
+            canonical([(names[place], word or "")])
+            entries += [(names[place], word)] if word else []
+    kept = [place for place in range(len(names)) if place not in odd.places or not odd.is_left_out(place)]
+    kinds = form.kinds or ("number",) * len(names)
+    form = replace(
+        form,
+        units=tuple(form.units[place] for place in kept),
+        kinds=tuple(kinds[place] for place in kept),
+        labels=tuple(form.labels[place] for place in kept) if form.labels else (),
+        columns=len(kept),
+        entries=(*entries, *form.entries),
+    )
+    filled = table.filled
+    table = replace(
+        table,
+        columns=[table.columns[place] for place in kept],
+        filled=lambda: [filled()[place] for place in kept],
+    )
+    return form, table, [names[place] for place in kept], doubts
+
+
+def _with_stamps(channels: list[RawChannel], stamps: set[str]) -> list[RawChannel]:
+    """Return channels of which time stamps are the time, where nothing else is and they go on from row to row."""
+    has_time = any(channel.role == "time" for channel in channels if channel.name not in stamps)
+    made = []
+    for channel in channels:
+        if channel.name in stamps:
+            steps = np.diff(channel.samples.read(0, min(len(channel.samples), LOOKED_SAMPLES)))
+            goes_on = len(steps) > 0 and float(np.mean(steps > 0)) > GOES_ON
+            role = "time" if goes_on and not has_time else "other"
+            has_time = has_time or role == "time"
+            channel = replace(channel, role=role, unit="s", ground="time stamps", confidence=0.9, doubts=())
+        made.append(channel)
+    return made
 
 
 def _said_of_each(table: Table, form: TextForm, path: Path) -> dict[str, npt.NDArray[Any]]:

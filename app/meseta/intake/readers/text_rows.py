@@ -15,12 +15,17 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import InputError
+from meseta.intake.readers.text_cells import MARKS
 from meseta.intake.readers.text_form import TextForm
+from meseta.intake.readers.text_odd import OddColumns, bad_cell
 
 __all__ = ["Columns", "Rows", "numbers", "numbers_of_each"]
 
 MANY_THREADS_BYTE: Final = 8 << 20
+LEAST_MARKED: Final = 2
+"""In a single column of numbers a word in the place of a reading would part traces, as a row of NaN does."""
 _NULLS: Final = ("", "nan", "NaN", "NAN", "NA", "N/A", "n/a", "null", "-", "--", "#N/A", "1.#QNAN", "-nan")
+_MARKED: Final = re.compile("|".join(rf"'{re.escape(mark)}'" for mark in MARKS))
 _NUMBER: Final = r"[-+.,]*\d[-+.,\d]*"
 """A run of digits and signs, so that two of them never touch: a line is matched in one go, whatever stands in it."""
 Columns = list[npt.NDArray[np.float64]]
@@ -52,7 +57,14 @@ class Rows:
     """Such lines behind the last row."""
 
 
-def numbers(body: bytes, form: TextForm, path: Path, lines_before: int, by_lines: bool = False) -> Rows:
+def numbers(
+    body: bytes,
+    form: TextForm,
+    path: Path,
+    lines_before: int,
+    by_lines: bool = False,
+    odd: OddColumns | None = None,
+) -> Rows:
     """Return the rows of a text.
 
     All rows are parsed in one go first: it succeeds, with one row a line, where no separator stands between them.
@@ -68,11 +80,21 @@ def numbers(body: bytes, form: TextForm, path: Path, lines_before: int, by_lines
         Lines of the file before ``body``.
     by_lines : bool
         Whether separating lines were met before, so that rows of NaN are samples.
+    odd : OddColumns, optional
+        What was met before in columns that are no plain numbers; without it, a word is an error.
     """
+    rows = _numbers(body, form, (path, lines_before), by_lines, odd)
+    if odd is not None:
+        odd.count_marks(body, form.delimiter)
+    return rows
+
+
+def _numbers(body: bytes, form: TextForm, where: tuple[Path, int], by_lines: bool, odd: OddColumns | None) -> Rows:
+    path, lines_before = where
     tail = body[len(body.rstrip()) :]
     body = body.rstrip()
     try:
-        columns = None if form.numeric_heading else _parsed(body, form, path, lines_before)
+        columns = None if form.numeric_heading else _parsed(body, form, path, lines_before, odd)
     except InputError:
         if not _has_separators(body, form):
             raise
@@ -85,8 +107,8 @@ def numbers(body: bytes, form: TextForm, path: Path, lines_before: int, by_lines
     cut = _cut(body, form)
     closes = closes or cut.ends
     if len(cut.blocks) == 1 and not by_lines and not cut.begins and not cut.left:
-        return _split_at_nan_rows(_parsed(cut.blocks[0], form, path, lines_before), closes)
-    parts, lengths = _parts(cut, body, form, path, lines_before)
+        return _split_at_nan_rows(_parsed(cut.blocks[0], form, path, lines_before, odd), closes)
+    parts, lengths = _parts(cut, body, form, (path, lines_before), odd)
     said = tuple(lines for lines, length in zip(cut.said, lengths, strict=True) if length)
     lengths = [length for length in lengths if length]
     if not lengths:
@@ -128,15 +150,18 @@ def numbers_of_each(texts: Sequence[bytes], form: TextForm) -> list[Rows] | None
     return [_split_at_nan_rows(own, False) for own in each]
 
 
-def _parts(cut: _Cut, body: bytes, form: TextForm, path: Path, lines_before: int) -> tuple[Columns, list[int]]:
+def _parts(
+    cut: _Cut, body: bytes, form: TextForm, where: tuple[Path, int], odd: OddColumns | None
+) -> tuple[Columns, list[int]]:
     """Return the columns of all blocks end to end, and the rows of each; parsed in one go where nothing is wrong."""
+    path, lines_before = where
     lengths = [block.strip().count(b"\n") + 1 for block in cut.blocks]
     with contextlib.suppress(InputError):
-        columns = _parsed(b"\n".join(block.strip() for block in cut.blocks), form, path, lines_before)
+        columns = _parsed(b"\n".join(block.strip() for block in cut.blocks), form, path, lines_before, odd)
         if len(columns[0]) == sum(lengths):
             return columns, lengths
     places = zip(cut.blocks, cut.places, strict=True)
-    parts = [_parsed(block, form, path, lines_before + body.count(b"\n", 0, at)) for block, at in places]
+    parts = [_parsed(block, form, path, lines_before + body.count(b"\n", 0, at), odd) for block, at in places]
     joined = [np.concatenate([part[place] for part in parts]) for place in range(form.columns)] if parts else []
     return joined, [len(part[0]) for part in parts]
 
@@ -245,6 +270,8 @@ def _width(block: bytes, form: TextForm) -> int:
     line = _first_line(block).rstrip(b"\r")
     if delimiter == " ":
         line = _single_blanks(line)
+    elif b'"' in line:  # a delimiter within quotes is none
+        line = re.sub(rb'"[^"]*"', b"", line)
     return max(line.count(delimiter.encode()) + 1, form.columns)
 
 
@@ -254,16 +281,16 @@ def _first_line(block: bytes) -> bytes:
 
 
 @lru_cache(maxsize=64)
-def _conversion(width: int, decimal: str, nulls: tuple[str, ...]) -> Any:
-    """Return the parser's options for so many columns of float64."""
+def _conversion(width: int, decimal: str, nulls: tuple[str, ...], odd: tuple[int, ...] = ()) -> Any:
+    """Return the parser's options for so many columns of float64, and some of words."""
     import pyarrow as pa
     from pyarrow import csv
 
-    kinds = {str(place): pa.float64() for place in range(width)}
+    kinds = {str(place): pa.string() if place in odd else pa.float64() for place in range(width)}
     return csv.ConvertOptions(column_types=kinds, null_values=list(nulls), decimal_point=decimal)
 
 
-def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int) -> Columns:
+def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int, odd: OddColumns | None = None) -> Columns:
     import pyarrow as pa
     from pyarrow import csv
 
@@ -277,24 +304,38 @@ def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int) -> Colu
     )
     parsing = csv.ParseOptions(delimiter=form.delimiter)
 
+    places = odd.places if odd is not None else ()
+
     def table(nulls: tuple[str, ...]) -> Any:
-        return csv.read_csv(pa.BufferReader(block), reading, parsing, _conversion(width, form.decimal, nulls))
+        return csv.read_csv(pa.BufferReader(block), reading, parsing, _conversion(width, form.decimal, nulls, places))
 
     try:
         try:
             found = table(())  # to look every cell up among the words for nothing costs a third of the time
         except pa.ArrowInvalid:
-            found = table(_NULLS)
+            try:
+                found = table(_NULLS)
+            except pa.ArrowInvalid as error:
+                if odd is None or form.columns - len(places) < LEAST_MARKED or not _MARKED.search(str(error)):
+                    raise
+                found = table((*_NULLS, *MARKS))
+                odd.are_marks_met = True
     except pa.ArrowInvalid as error:
         first = _first_line(block)
         if re.search(rb"\d[dD][-+]?\d", first) or re.search(r"'[-+.\d]+[dD][-+]?\d+'", str(error)):
             eased = re.sub(rb"(?<=[\d.])[dD](?=[-+]?\d)", b"E", block)
             if eased != block:
-                return _parsed(eased, form, path, lines_before)
+                return _parsed(eased, form, path, lines_before, odd)
         if str(error).startswith("Empty CSV"):
             return [np.empty(0) for _ in range(form.columns)]
         raise _in_words(error, path, lines_before) from error
-    return [_array(found.column(place)) for place in range(form.columns)]
+    if odd is None or not places:
+        return [_array(found.column(place)) for place in range(form.columns)]
+    where = (str(path), lines_before)
+    return [
+        odd.numbers(place, found.column(place), where) if place in places else _array(found.column(place))
+        for place in range(form.columns)
+    ]
 
 
 def _single_blanks(block: bytes) -> bytes:
@@ -319,9 +360,10 @@ def _in_words(error: Exception, path: Path, lines_before: int) -> InputError:
     where = f"{path}, line {int(row[1]) + lines_before}" if row else str(path)
     column = re.search(r"column #(\d+)", text)
     bad = re.search(r"invalid value '(.*?)'", text, re.DOTALL)
+    if bad and column:
+        return bad_cell(bad[1], "a number", int(column[1]), where)
     if bad:
-        place = f" in column {int(column[1]) + 1}" if column else ""
-        return InputError(f"'{bad[1][:40]}' is not a number{place}", where, "correct the cell or leave the line out")
+        return InputError(f"'{bad[1][:40]}' is not a number", where, "correct the cell or leave the line out")
     counts = re.search(r"Expected (\d+) columns, got (\d+)", text)
     if counts:
         return InputError(f"has {counts[2]} cells where {counts[1]} are expected", where, "correct the line")

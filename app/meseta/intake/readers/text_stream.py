@@ -11,6 +11,7 @@ from typing import Final
 from meseta.errors import InputError
 from meseta.intake.readers.spool import SpooledColumns
 from meseta.intake.readers.text_form import TextForm
+from meseta.intake.readers.text_odd import OddColumns
 from meseta.intake.readers.text_rows import Rows, numbers
 from meseta.intake.readers.unpack import unpacked_blocks
 
@@ -44,7 +45,9 @@ class Stretches:
         self.said += said[first:]
 
 
-def put_aside(path: Path, form: TextForm, encoding: str) -> tuple[SpooledColumns, Stretches]:
+def put_aside(
+    path: Path, form: TextForm, encoding: str, odd: OddColumns | None = None
+) -> tuple[SpooledColumns, Stretches]:
     """Return the columns of a text table, put aside, and its stretches of rows.
 
     Raises
@@ -55,7 +58,7 @@ def put_aside(path: Path, form: TextForm, encoding: str) -> tuple[SpooledColumns
     columns, stretches = SpooledColumns(path, form.columns), Stretches()
     lines_before, begins, by_lines = form.skip_lines, True, False
     for text in _whole_lines(path, encoding, form.skip_lines):
-        rows = numbers(text, form, path, lines_before, by_lines)
+        rows = numbers(text, form, path, lines_before, by_lines, odd)
         lines_before += text.count(b"\n")
         stretches.add(rows, begins or rows.opens)
         begins, by_lines = rows.closes, rows.by_lines
