@@ -22,6 +22,7 @@ KERNEL_MODULES = (
     "meseta.simulate.kernels",
     "meseta.intake.kernels",
     "meseta.intake.calibration_kernels",
+    "meseta.intake.stored_kernels",
     "meseta.intake.text_kernels",
     "meseta.segmentation.noise_kernels",
     "meseta.segmentation.partition_kernels",

@@ -149,7 +149,7 @@ class Calibration:
         steps = self._steps
         if steps is None:
             return False
-        from meseta.intake.kernels import SCALED_TYPES, scale_into
+        from meseta.intake.stored_kernels import SCALED_TYPES, scale_into
 
         stored = recording.stored(self.channel, start, start + len(target))
         if self._is_plain:

@@ -20,7 +20,7 @@ import numpy.typing as npt
 
 from meseta.errors import InputError
 from meseta.intake.readers.hdf5_ragged import ragged_rows
-from meseta.intake.readers.hdf5_samples import RawBytes, StoredArray
+from meseta.intake.readers.hdf5_stored import RawBytes, StoredArray
 
 __all__ = ["Node", "Tree", "open_file", "walk"]
 
