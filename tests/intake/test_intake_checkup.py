@@ -262,3 +262,99 @@ def test_mistakes_in_a_simulated_recording_are_named(right, setting, factor, che
     found = {one.check: one for one in described[0].findings}[check]
     assert not found.fine
     assert said in found.text
+
+
+@pytest.mark.parametrize(
+    ("stated", "check", "said"),
+    [
+        ({}, "", ""),
+        ({"volt_per_decade": 1.6}, "single-atom peak", "V would do it instead of 1.6 V"),
+        ({"volt_per_decade": -0.8}, "direction", "opposite polarity"),
+        ({"log_polarity": "both"}, "sign", "show sizes only"),
+        ({"reference_ampere": 1e-8}, "single-atom peak", "factor 10 too high"),
+    ],
+)
+def test_mistakes_with_a_logarithmic_amplifier_are_named(tmp_path, stated, check, said):
+    """U = s lg(I / I_ref), worked here: 0.8 V a decade, 1 nA."""
+    values = np.maximum(contacts(), 1e-9) * G0_SIEMENS * 0.1
+    values[:, -100:] = 3e-14  # below the reference current, so that volts go negative
+    path = record(tmp_path, amplifier=(0.8 * np.log10(values / 1e-9), {"unit": "V"}))
+    with h5py.File(path, "a") as file:
+        file.attrs["direction"] = "opening"
+    right = {"volt_per_decade": 0.8, "reference_ampere": 1e-9, "bias_volt": 0.1}
+    found = findings(path, **(right | stated))
+    if not check:
+        assert all(found[name].fine for name in ("single-atom peak", "direction", "sign"))
+    else:
+        assert not found[check].fine
+        assert said in found[check].text
+    if stated.get("volt_per_decade") == 1.6:
+        assert float(found[check].text.split("volt_per_decade, ")[1].split()[0]) == pytest.approx(0.8, rel=0.03)
+
+
+@pytest.mark.parametrize(
+    ("stated", "said"),
+    [
+        ({"gain_volt_per_ampere": 1e8, "high_gain_volt_per_ampere": 1e5}, "swapped"),
+        ({"high_gain_volt_per_ampere": -1e8}, "wrong sign"),
+        ({"high_gain_volt_per_ampere": 1e9}, "a factor 10 too large"),
+        ({"gain_volt_per_ampere": 1e7}, "a factor 100 too small, or the first too large"),
+    ],
+)
+def test_mistakes_with_one_of_two_gains_are_named(tmp_path, stated, said):
+    ampere = contacts() * G0_SIEMENS * 0.1
+    low = ampere * 1e5 + np.random.default_rng(4).normal(0, 2e-6, ampere.shape)
+    path = record(
+        tmp_path,
+        amplifier=(low, {"unit": "V"}),
+        amplifier_high_gain=(np.clip(ampere * 1e8, -10, 10), {"unit": "V", "role": "amplifier_high_gain"}),
+    )
+    right = {"gain_volt_per_ampere": 1e5, "high_gain_volt_per_ampere": 1e8, "bias_volt": 0.1, "full_scale_volt": 10.0}
+    found = findings(path, **(right | stated))["gain ratio"]
+    assert not found.fine
+    assert said in found.text
+
+
+@pytest.mark.parametrize(("position", "factor", "fine"), [(1.5, 1.0, True), (1.5, 2.0, False), (1.5, 10.0, False)])
+def test_single_atoms_of_a_stated_metal_are_expected_where_they_are_known(tmp_path, position, factor, fine):
+    """Pt at low bias: 1.5 G0 (Nielsen et al., PRB 67, 245411); off by 2 it would pass for a monovalent metal."""
+    values = contacts()
+    values[:, 150:300] *= position
+    path = record(tmp_path, conductance=(values / factor, {"unit": "G0"}))
+    with h5py.File(path, "a") as file:
+        file.attrs["electrode"] = "Pt"
+    found = findings(path)["single-atom peak"]
+    assert found.fine == fine
+    assert fine or f"a factor {factor:g} too low" in found.text
+
+
+@pytest.mark.parametrize("gain", [1.0, 0.1])
+def test_single_atoms_are_seen_below_a_saturated_amplifier(tmp_path, gain):
+    """Full scale stands at 1.2 G0: openings begin saturated, which neither hides single atoms nor makes them odd."""
+    unit = 10.0 / (1.2 * G0_SIEMENS * 0.1)
+    path = record(tmp_path, amplifier=(np.clip(contacts() * 10.0 / 1.2, -10, 10), {"unit": "V"}))
+    found = findings(path, gain_volt_per_ampere=unit * gain, bias_volt=0.1, full_scale_volt=10.0)
+    assert found["single-atom peak"].fine == (gain == 1.0)
+    assert ("factor 10 too high" in found["single-atom peak"].text) == (gain != 1.0)
+    assert found["direction"].fine
+
+
+@pytest.mark.parametrize(("medium", "fine"), [("vacuum", False), ("mesitylene", True), ("", True)])
+def test_half_the_slope_of_vacuum_is_named_in_vacuum_only(tmp_path, medium, fine):
+    """10 decades per nm are 2 kappa / ln 10 of 5 eV (textbook); 5 are those of 1.3 eV, which solvents do reach."""
+    nm = np.arange(SAMPLES) * 0.002
+    values = np.where(nm < 0.3, 1.0, 0.003 * 10.0 ** (-10.0 * (nm - 0.3))) * np.ones((TRACES, 1))
+    path = record(tmp_path, conductance=(values, {"unit": "G0"}), displacement=(2.0 * nm, {"unit": "nm"}))
+    with h5py.File(path, "a") as file:
+        file.attrs["solvent"] = medium
+    found = findings(path)["tunnelling slope"]
+    assert found.fine == fine
+    assert fine or "in vacuum: displacement is about 2 times too large" in found.text
+
+
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize("values", [np.nan, np.inf, 0.0, 0.3, -1.0])
+def test_odd_recordings_are_checked_without_warnings(tmp_path, values):
+    path = record(tmp_path, amplifier=(np.full((20, 100), values), {"unit": "V"}))
+    found = findings(path, gain_volt_per_ampere=1e6, bias_volt=0.1, sampling_hertz=1e4, full_scale_volt=10.0)
+    assert not found["zero of displacement"].fine

@@ -39,6 +39,7 @@ OF_METAL_G0: Final = {
 well defined than Cu (Krans et al.); each with room."""
 ODD_G0: Final = (0.2, 4.0)
 """Between these a peak that belongs to no single atom is odd; further away it is a molecule, or a thick contact."""
+DECADE_ROOM: Final = 0.03
 FACTORS_END_G0: Final = 300.0
 """Thicker contacts than this are not drawn out to single atoms in one trace."""
 BEGIN_SAMPLES: Final = 20
@@ -97,7 +98,9 @@ def single_atom(look: Look) -> Finding | None:
         return Finding("single-atom peak", True, text)
     if not metal and ANY_METAL_G0[0] <= position <= ANY_METAL_G0[1]:
         return Finding("single-atom peak", True, f"{text}; for a monovalent metal 1 is expected")
-    if ODD_G0[0] <= position <= ODD_G0[1] or position > FACTORS_END_G0:
+    near = [at for at, height in peaks if low <= at <= high and height > 0.3 * strength]
+    is_scale = not near and _is_decade_factor(_right_decade(look.part, position))
+    if ODD_G0[0] <= position <= ODD_G0[1] or position > FACTORS_END_G0 or is_scale:
         expected = f"for {metal} {low:g} to {high:g}" if metal else "for a monovalent metal 1"
         text += f"; {expected} is expected" + ("" if metal else ", for no metal this")
         return Finding("single-atom peak", False, text + _decade_question(look.part, position))
@@ -130,20 +133,27 @@ def _closed(look: Look) -> float:
 
 
 def _decade_question(part: Part, position: float) -> str:
-    """Return which volts per decade would bring the peak of a logarithmic amplifier to 1 G0."""
+    """Return in words which volts per decade would bring the peak of a logarithmic amplifier to 1 G0."""
+    made, stated = _right_decade(part, position)
+    if not made:
+        return ""
+    return f" Or calibration.volt_per_decade, {made:.3g} V would do it instead of {stated:.3g} V"
+
+
+def _is_decade_factor(decade: tuple[float, float]) -> bool:
+    """Return whether the volts per decade that would be right differ from the stated ones by a factor of 2 or 10."""
+    made, stated = decade
+    return made != 0.0 and any(abs(made / stated / factor - 1.0) < DECADE_ROOM for factor in (0.1, 0.5, 2.0, 10.0))
+
+
+def _right_decade(part: Part, position: float) -> tuple[float, float]:
+    """Return (volts per decade that bring a position to 1 G0, the stated ones); zeros where there are none."""
     if part.calibration.kind != "logarithmic":
-        return ""
-    scale, reference, bias = (
-        float(np.median(value))
-        for value in (
-            part.calibration.constant("volt_per_decade"),
-            part.calibration.constant("reference_ampere"),
-            part.calibration.bias_at_junction_volt,
-        )
-    )
+        return 0.0, 0.0
+    names = ("volt_per_decade", "reference_ampere")
+    stated, reference = (float(np.median(part.calibration.constant(name))) for name in names)
+    bias = float(np.median(part.calibration.bias_at_junction_volt))
     one_atom = abs(bias) * G0_SIEMENS / reference
-    if not bias or one_atom <= 0 or abs(np.log10(one_atom)) < 0.5:
-        return ""
-    volts = scale * np.log10(position * one_atom)
-    made = volts / np.log10(one_atom)
-    return f" Or calibration.volt_per_decade, {made:.3g} V would do it instead of {scale:.3g} V"
+    if one_atom <= 0 or abs(np.log10(one_atom)) < 0.5:
+        return 0.0, 0.0
+    return stated * float(np.log10(position * one_atom) / np.log10(one_atom)), stated

@@ -20,7 +20,7 @@ from meseta.traces import Channel, Drive, PhaseTable, Source, TraceSet, trace_ta
 
 __all__ = ["INTAKE_VERSION", "joined", "key_of"]
 
-INTAKE_VERSION: Final = 2
+INTAKE_VERSION: Final = 3
 """Raised when intake gives other numbers for the same files."""
 _OWN_COLUMNS: Final = frozenset({
     "trace", "traces", "source", "dataset", "record_start", "samples", "direction", "partner", "kept", "reason",
