@@ -19,6 +19,7 @@ FILES = [
     "plateaus.csv",
     "histogram.csv",
     "peaks.csv",
+    "lengths.csv",
     "histogram2d.npz",
     "correlation2d.npz",
     "recipe.toml",

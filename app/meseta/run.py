@@ -20,7 +20,7 @@ from meseta.errors import MesetaError, OutputError
 from meseta.tables import write_csv
 from meseta.work import Work
 
-__all__ = ["RESULT_FILES", "RunResult", "check_output", "run_analysis", "trace_columns"]
+__all__ = ["RESULT_FILES", "RunResult", "check_output", "length_columns", "run_analysis", "trace_columns"]
 
 RESULT_FILES = (
     "summary.json",
@@ -28,6 +28,7 @@ RESULT_FILES = (
     "plateaus.csv",
     "histogram.csv",
     "peaks.csv",
+    "lengths.csv",
     "histogram2d.npz",
     "correlation2d.npz",
     "recipe.toml",
@@ -171,6 +172,29 @@ def trace_columns(analysis: Analysis, work: Work | None = None) -> dict[str, npt
     return columns
 
 
+def length_columns(analysis: Analysis, work: Work | None = None) -> dict[str, npt.NDArray[Any]]:
+    """Return the columns of ``lengths.csv``: one row a bin of the histograms of lengths, then of tunnelling slopes."""
+    found = [*analysis.result("length_histograms", work), analysis.result("slope_histogram", work)]
+    bins = [len(one.counts) for one in found]
+
+    def repeated(values: list[Any]) -> npt.NDArray[Any]:
+        return np.repeat(np.array(values), bins)
+
+    return {
+        "histogram": repeated([one.kind for one in found]),
+        "low": np.concatenate([one.edges[:-1] for one in found]),
+        "high": np.concatenate([one.edges[1:] for one in found]),
+        "unit": repeated([one.unit for one in found]),
+        "counts": np.concatenate([one.counts for one in found]),
+        "censored_counts": np.concatenate([one.censored_counts for one in found]),
+        "density": np.concatenate([one.density for one in found]),
+        "density_unit": repeated([one.density_unit for one in found]),
+        "traces": repeated([one.traces for one in found]),
+        "none": repeated([one.none for one in found]),
+        "over": repeated([one.over for one in found]),
+    }
+
+
 def run_analysis(
     analysis: Analysis,
     folder: Path,
@@ -205,6 +229,7 @@ def run_analysis(
         write_csv(partial / "plateaus.csv", analysis.plateaus(work).columns())
         write_csv(partial / "histogram.csv", histogram.table().columns())
         write_csv(partial / "peaks.csv", fit.table.columns())
+        write_csv(partial / "lengths.csv", length_columns(analysis, work))
         np.savez_compressed(partial / "histogram2d.npz", **displacement_arrays(displacement))
         np.savez_compressed(
             partial / "correlation2d.npz",

@@ -4,10 +4,13 @@ from __future__ import annotations
 
 import json
 
+import numpy as np
 import pytest
 
+from meseta.analysis import Analysis
 from meseta.errors import OutputError
-from meseta.run import check_output, whole_folder
+from meseta.run import check_output, length_columns, whole_folder
+from meseta.simulate import SimulationSettings, simulate
 
 
 def earlier_result(folder, note="old"):
@@ -79,3 +82,27 @@ def test_a_place_in_which_no_folder_can_be_made_is_refused_before_any_work(tmp_p
         check_output(tmp_path / "out")
     assert caught.value.exit_code == 2 and caught.value.remedy
     assert list(tmp_path.iterdir()) == []
+
+
+def test_lengths_are_written_bin_by_bin():
+    """Every plateau, crossing and slope of a kept trace is in the table once; numpy bins the same lengths alike."""
+    analysis = Analysis(simulate("molecule", 60, 4, SimulationSettings(samples=1500)).traces)
+    columns = length_columns(analysis)
+    kinds = list(dict.fromkeys(columns["histogram"].tolist()))
+    assert [kind.split(" ")[0] for kind in kinds] == ["plateaus", "level", "to", "tunnelling"]
+    kept, settings = analysis.selection().kept, analysis.recipe.lengths
+    table = analysis.plateaus().take(kept[analysis.plateaus().trace])
+    table = table.take((table.level_g0 >= settings.low_g0) & (table.level_g0 < settings.high_g0))
+    mine = columns["histogram"] == kinds[0]
+    edges = np.append(columns["low"][mine], columns["high"][mine][-1])
+    whole = table.length_drive[table.censored == ""]
+    assert whole.size > 5
+    inside = whole[whole < edges[-1]]
+    assert np.array_equal(columns["counts"][mine], np.histogram(inside, edges)[0])
+    total = columns["counts"][mine].sum() + columns["censored_counts"][mine].sum() + columns["over"][mine][0]
+    assert total == len(table)
+    for kind in kinds[1:]:
+        rows = columns["histogram"] == kind
+        seen = columns["counts"][rows].sum() + columns["censored_counts"][rows].sum() + columns["over"][rows][0]
+        assert seen + columns["none"][rows][0] == columns["traces"][rows][0] == kept.sum()
+    assert columns["unit"][-1] == "decades / nm"

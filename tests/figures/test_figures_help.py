@@ -11,7 +11,7 @@ from meseta.histograms import HistogramTable
 from meseta.peaks import PeakTable
 from meseta.recipe import Recipe
 from meseta.resources import resource
-from meseta.run import RESULT_FILES, displacement_arrays, trace_columns
+from meseta.run import RESULT_FILES, displacement_arrays, length_columns, trace_columns
 from meseta.segmentation import PlateauTable
 
 PAGES = sorted(resource("help").glob("*.md"))
@@ -54,6 +54,10 @@ def test_every_column_of_traces_is_described(analysis):
     own = {"labels", "simulated"}
     columns = {name for name in trace_columns(analysis) if name not in analysis.traces.table or name in STANDARD}
     assert columns - own <= quoted(section(page("results"), "traces.csv"))
+
+
+def test_every_column_of_lengths_is_described(analysis):
+    assert set(length_columns(analysis)) <= quoted(section(page("results"), "lengths.csv"))
 
 
 STANDARD = {
