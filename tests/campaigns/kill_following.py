@@ -82,7 +82,7 @@ def follower(folder: Path, study: Path, seed: int) -> int:
     try:
         if seed % 2:
             suicidal(random.Random(seed))
-        following._FOLLOW_SECONDS = 0.05
+        following.FOLLOW_SECONDS = 0.05
         gather([folder], study, work=Work(threads=1), follow=True)
     except BaseException as error:  # the parent sees the exit code
         print(f"follower {seed}: {type(error).__name__}: {error}", flush=True)

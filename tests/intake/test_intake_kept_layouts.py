@@ -318,7 +318,7 @@ def test_a_study_keeps_its_layouts_and_new_files_must_fit_them(tmp_path):
 
 
 def test_following_takes_what_fits_and_tells_of_what_does_not(tmp_path, monkeypatch):
-    monkeypatch.setattr("meseta.study.following._FOLLOW_SECONDS", 0.02)
+    monkeypatch.setattr("meseta.study.following.FOLLOW_SECONDS", 0.02)
     folder = tmp_path / "night"
     folder.mkdir()
     recipe = kept(pair(folder / "a.csv"))

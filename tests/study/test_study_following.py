@@ -295,6 +295,34 @@ def test_room_that_commits_leave_behind_is_given_back(tmp_path, night, monkeypat
     assert (tmp_path / "tight.h5").stat().st_size < 0.8 * (tmp_path / "loose.h5").stat().st_size
 
 
+def test_many_files_are_taken_in_portions_that_grow_with_the_study(tmp_path, night, monkeypatch):
+    monkeypatch.setattr(following, "_PORTION_FILES", 2)
+    for number in range(9):
+        (night / f"{number}.csv").write_text(text(number))
+    held, work = [], Work(threads=1)
+
+    def grown(study, added):
+        held.append(len(study.sources))
+        if len(study.sources) == 9:
+            work.cancel.set()
+
+    work.cancel.wait = lambda _: False
+    gather([night], tmp_path / "s.h5", work=work, follow=True, grown=grown)
+    assert held == [2, 4, 8, 9]
+    assert names(tmp_path / "s.h5") == [f"{number}.csv" for number in range(9)]
+
+
+def test_a_look_that_takes_nothing_only_says_what_is_whole(tmp_path, night):
+    (night / "a.csv").write_text(text(1))
+    one = following.Following([night], tmp_path / "s.h5")
+    for _ in range(5):
+        looked = one.look(Work(threads=1), take=False)
+    assert [file.name for file in looked.ready] == ["a.csv"] and looked.words == "1 more to take in"
+    assert one.study is None and not (tmp_path / "s.h5").exists()
+    assert one.look(Work(threads=1)).added.traces == 1 and one.study.recipe == Recipe()
+    one.study.close()
+
+
 FOLLOWER = """
 import os, random, signal, sys
 from pathlib import Path
@@ -310,7 +338,7 @@ def fatal(function):
 if int(sys.argv[3]):
     os.fsync, os.ftruncate = fatal(os.fsync), fatal(os.ftruncate)
     Path.unlink, Path.replace = fatal(Path.unlink), fatal(Path.replace)
-following._FOLLOW_SECONDS = 0.01
+following.FOLLOW_SECONDS = 0.01
 from meseta.work import Work
 work = Work(threads=1)
 def grown(study, added):
@@ -342,14 +370,14 @@ def test_killed_while_it_commits_and_started_again_it_has_every_file_once(tmp_pa
 def test_an_interruption_ends_it_with_130_and_keeps_what_was_taken(tmp_path, night):
     (night / "a.csv").write_text(text(1))
     code = (
-        "import sys; from meseta.study import following; following._FOLLOW_SECONDS = 0.01\n"
+        "import sys; from meseta.study import following; following.FOLLOW_SECONDS = 0.01\n"
         "from meseta.command import main; sys.exit(main())"
     )
     command = [sys.executable, "-c", code, "gather", str(night), "--into", str(tmp_path / "s.h5"), "--follow", "--json"]
     process = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
     while not (tmp_path / "s.h5").exists():
         assert process.poll() is None, process.stderr.read()
-        following.Work().cancel.wait(0.05)
+        Work().cancel.wait(0.05)
     process.send_signal(signal.SIGINT)
     printed, complained = process.communicate()
     assert process.returncode == 130, complained

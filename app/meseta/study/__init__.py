@@ -1,7 +1,8 @@
 """The study file: recordings, traces, recipe, decisions and history in one HDF5 file that survives anything."""
 
+from meseta.study.adding import gather
 from meseta.study.files import is_study
-from meseta.study.following import create_study, gather
+from meseta.study.making import create_study
 from meseta.study.reading import read, write_study
 from meseta.study.study import Study
 

@@ -1,4 +1,4 @@
-"""Gathering recordings into a study, once or as they are written.
+"""Following folders: one look at a time, what is whole is taken into the study.
 
 Recordings stand in a study in the order in which they were taken in; those of one look in natural order.
 """
@@ -6,156 +6,241 @@ Recordings stand in a study in the order in which they were taken in; those of o
 from __future__ import annotations
 
 import contextlib
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Sequence
 from contextlib import ExitStack
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Final
+from typing import Final
 
-import h5py
-
-from meseta.errors import CallError, Cancelled, InputError, MesetaError, StudyError
+from meseta.errors import InputError, MesetaError, StudyError
 from meseta.intake.context import batch_context
 from meseta.intake.files import FoundFile
 from meseta.recipe import Recipe
 from meseta.study.arriving import Arrivals, Waiting, files_meant, folders_of
-from meseta.study.files import clear_unfinished, is_study
-from meseta.study.gathering import Added, Present, take_in, without_changing
-from meseta.study.growing import TraceWriter
-from meseta.study.history import History
-from meseta.study.loading import write_content
-from meseta.study.lock import Lock
-from meseta.study.parts import FROM_RAW
-from meseta.study.recordings import derived_key
+from meseta.study.gathering import Added
+from meseta.study.making import hold_name, make_study
 from meseta.study.seen import Look, look_at
-from meseta.study.state import State
 from meseta.study.study import Study
-from meseta.traces import TraceSet
-from meseta.work import Progress, Work
+from meseta.work import Work
 
-__all__ = ["create_study", "folders_of", "gather"]
+__all__ = ["FOLLOW_SECONDS", "Following", "Looked", "put_in_force"]
 
-_FOLLOW_SECONDS: Final = 2.0
+FOLLOW_SECONDS = 2.0
+"""From one look to the next."""
 _LOOSE_BYTE: Final = 64_000_000
 """So much beyond twice its size a study may grow before room that earlier commits left behind is given back."""
-Say = Callable[[MesetaError], None]
+_PORTION_FILES: Final = 200
+_PORTION_BYTE: Final = 64_000_000
+"""So much is taken in at once at least; beyond that as much as the study holds, so that writing grows in proportion."""
 
 
-def create_study(
-    path: str | Path, files: Iterable[str | Path], recipe: Recipe | None = None, work: Work | None = None
-) -> Added:
-    """Make a new study of recordings; refuses to replace a file.
+@dataclass(frozen=True)
+class Looked:
+    """What one look found and took in.
 
-    Raises
-    ------
-    CallError
-        Where the file exists.
-    InputError
-        Where no file can be read; nothing is left behind.
-    StudyError
-        Where another process is making it.
+    Attributes
+    ----------
+    added : Added
+        What was taken in.
+    bad : tuple of MesetaError
+        What is told for the first time: files that cannot be read, have another content than before, or got metadata
+        too late; a folder that is away.
+    ready : tuple of FoundFile
+        Files that are whole and not taken in: there are many of them, or they were not to be taken.
+    waiting : tuple of Waiting
+        Files that are not whole yet, and why.
+    trouble : str
+        Why nothing could be looked at; empty where it could.
     """
-    path = Path(path)
-    with ExitStack() as stack:
-        _begin(path, stack)
-        found = files_meant(files, path)
-        if not found:
-            raise InputError("holds no recordings", ", ".join(map(str, files)), "give files or another folder")
-        return _created(path, found, recipe or Recipe(), work or Work())
+
+    added: Added
+    bad: tuple[MesetaError, ...] = ()
+    ready: tuple[FoundFile, ...] = ()
+    waiting: tuple[Waiting, ...] = ()
+    trouble: str = ""
+
+    @property
+    def words(self) -> str:
+        """What is waited for, in one line; empty where nothing is."""
+        if self.trouble:
+            return f"waiting ({self.trouble})"
+        if self.ready:
+            return f"{len(self.ready)} more to take in"
+        if not self.waiting:
+            return ""
+        more = f", and {len(self.waiting) - 1} more" if len(self.waiting) > 1 else ""
+        return f"{self.waiting[0].file.name} waits ({self.waiting[0].why}){more}"
 
 
-def _begin(path: Path, stack: ExitStack) -> None:
-    """Make sure that nobody else makes a study of that name meanwhile."""
-    if path.exists():
-        raise CallError("exists already", str(path), "gather into it, or choose another name")
-    try:
-        lock = Lock(path)
-    except OSError:
-        return  # making the file will say why it cannot be made there
-    if lock.holder is not None:
-        raise StudyError(f"is being made by {lock.holder}", str(path), "wait for it, or choose another name")
-    stack.callback(lock.release)
-    clear_unfinished(path)
-
-
-def _created(path: Path, found: Sequence[FoundFile], recipe: Recipe, work: Work) -> Added:
-    def attempt(files: Sequence[FoundFile]) -> Added:
-        added, present = Added(), Present()
-
-        def fill(root: h5py.File) -> tuple[TraceSet, Sequence[str]]:
-            nonlocal added
-            writer = TraceWriter(root, work, _expected_samples(files))
-            added = take_in(root, writer, files, recipe, present, work)
-            if not added.sources:
-                raise added.bad[0] if added.bad else InputError("holds no recordings", str(path), "give other files")
-            present.seen.write(root)
-            return writer.finish(derived_key(added.sources, recipe), recipe.key(FROM_RAW)), added.kept
-
-        write_content(path, State(recipe), lambda: History.begun(f"study made: {added.text()}"), fill)
-        return added
-
-    return without_changing(found, attempt)
-
-
-def gather(
-    files: Iterable[str | Path],
-    study_path: str | Path,
-    recipe: Recipe | None = None,
-    work: Work | None = None,
-    follow: bool = False,
-    say: Say | None = None,
-    grown: Callable[[Study, Added], None] | None = None,
-) -> tuple[dict[str, Any], list[MesetaError]]:
-    """Add recordings to a study, which is made if it does not exist.
-
-    A file is read once: what looks as it did when it was read is passed over, and so is another file of the same
-    content.  A file that has changed since is listed as bad, and the study keeps what it held.
+class Following:
+    """Takes files that are written in folders into a study, a look at a time; not to be used by two threads at once.
 
     Parameters
     ----------
-    files : iterable of str or Path
-        Folders stand for the files in them and in their subfolders.
-    study_path : str or Path
+    named : sequence of str or Path
+        Folders to follow.
+    path : Path
+        The study; it is made of the first files that are whole if it is not there.
     recipe : Recipe, optional
         Put in force first, where given.
-    work : Work, optional
-    follow : bool
-        Keep taking in new files until the work is cancelled.  A file is taken once it is whole: it has stopped
-        growing, no program has it open for writing, and what is to stand beside it is there (or was waited for).
-    say : callable, optional
-        Told of each bad file at once, and once until it changes.
-    grown : callable, optional
-        Told, while following, of the study and of what was added to it.
+    study : Study, optional
+        That study, where it is open already.
 
-    Returns
-    -------
-    dict
-        ``study``, ``recordings_added``, ``traces_added``, ``already_there``, ``recordings``, ``traces``.
-    list of MesetaError
-        Files that could not be taken in.
+    Attributes
+    ----------
+    study : Study or None
+        None until it is made.  Whoever follows closes it.
+    total : Added
+        All that was taken in so far.
+
+    Raises
+    ------
+    InputError
+        Where what is to be followed is not there.
+    StudyError
+        Where another process holds the study.
     """
-    named, path, work = list(files), Path(study_path), work or Work()
-    if path.exists() and not is_study(path):
-        raise StudyError("is not a Meseta study", str(path), "choose another name for --into")
-    if follow:
-        return _follow(_Following(named, path, recipe, work, say or _nobody, grown or _nobody))
-    total = Added()
-    made = not path.exists()
-    if made:
-        total.add(create_study(path, named, recipe, work))
-    with Study.open(path, folders=folders_of(named)) as study:
-        if not made:
-            _put_in_force(study, recipe)
-            total.add(study.add(files_meant(named, path), work))
-        study.save()
-        return _answer(path, study, total), total.bad
+
+    def __init__(
+        self, named: Sequence[str | Path], path: Path, recipe: Recipe | None = None, study: Study | None = None
+    ) -> None:
+        self.named, self.path, self.recipe, self.study = list(named), path, recipe, study
+        self.total = Added()
+        self._arrivals, self._trouble, self._tight_byte = Arrivals(), "", 0
+        self._making = ExitStack()
+        if study is None and not path.exists():
+            files_meant(self.named, path)  # what is named must be there at the beginning
+            hold_name(path, self._making)
+        else:
+            self._begin_in(study)
+
+    def _begin_in(self, study: Study | None) -> None:
+        opened = study or Study.open(self.path)
+        try:
+            put_in_force(opened, self.recipe)
+        except MesetaError:
+            if study is None:
+                opened.close()
+            raise
+        for folder in folders_of(self.named):
+            opened.point_to(folder)
+        self.study, self._tight_byte = opened, self.path.stat().st_size
+
+    def close(self) -> None:
+        """Give free the name of a study that was not made."""
+        self._making.close()
+
+    # -- looking --------------------------------------------------------------------------------------------------
+
+    def look(self, work: Work, *, take: bool = True) -> Looked:
+        """Look once, and take in what is whole; of many files a first portion.
+
+        Parameters
+        ----------
+        work : Work
+        take : bool
+            False: only say what could be taken in.
+
+        Raises
+        ------
+        StudyError
+            Where the study cannot be written; it is as it was.
+        """
+        try:
+            ready = self._arrivals.look(self.named, self.path, self._table(), self._knows)
+            now = self._portion(ready) if take else []
+            added = self._taken(now, work) if now else Added()
+        except InputError as error:  # the folder is away, or a table of metadata is half written
+            new = (error,) if str(error) != self._trouble else ()
+            self._trouble = str(error)
+            return Looked(Added(), new, trouble=error.what)
+        self._trouble = ""
+        bad = self._count(now, added)
+        if added.sources:
+            self._tighten(work)
+        return Looked(added, bad, tuple(ready[len(now) :]), tuple(self._arrivals.waiting))
+
+    def _knows(self, path: Path, look: Look) -> bool:
+        return self.study is not None and self.study.knows(path, look)
+
+    def _table(self) -> frozenset[str] | None:
+        recipe = self.study.recipe if self.study is not None else self.recipe or Recipe()
+        if recipe.intake.metadata_table is None:
+            return None
+        return frozenset(batch_context(recipe.intake).table)
+
+    def _portion(self, ready: Sequence[FoundFile]) -> list[FoundFile]:
+        """Return the first of many files: whoever watches sees them come, and a change never waits for all of them."""
+        held = () if self.study is None else self.study.sources
+        most, room = max(_PORTION_FILES, len(held)), max(_PORTION_BYTE, sum(one.size_byte for one in held))
+        portion: list[FoundFile] = []
+        for file in ready[:most]:
+            look = look_at(file.path)
+            room -= 0 if look is None else look.size_byte
+            if portion and room < 0:
+                break
+            portion.append(file)
+        return portion
+
+    def _count(self, tried: Sequence[FoundFile], added: Added) -> tuple[MesetaError, ...]:
+        """Count what came of a look; return what is to be told."""
+        came = {*added.files, *added.failed}
+        self._arrivals.done([file for file in tried if file.path in came])
+        self.total.known += self._arrivals.known
+        told = {path: str(wrong) for path, wrong in self.total.failed.items()}
+        new = [wrong for path, wrong in added.failed.items() if told.get(path) != str(wrong)]
+        self.total.add(added)
+        return (*new, *map(_late, self._arrivals.late))
+
+    # -- taking in ------------------------------------------------------------------------------------------------
+
+    def _taken(self, files: Sequence[FoundFile], work: Work) -> Added:
+        if self.study is not None:
+            return self.study.add(files, work)
+        try:
+            added = self._made(files, work)
+        except InputError:
+            added = self._what_is_wrong(files, work)
+        if added.sources:
+            self._making.close()
+            self.recipe = None
+            self._begin_in(None)
+        return added
+
+    def _made(self, files: Sequence[FoundFile], work: Work) -> Added:
+        return make_study(self.path, files, self.recipe or Recipe(), work)
+
+    def _what_is_wrong(self, files: Sequence[FoundFile], work: Work) -> Added:
+        """Return what is wrong with each of files of which none could be read; ends with one that meanwhile can."""
+        wrong = Added()
+        for file in files:
+            try:
+                good = self._made([file], work)
+            except InputError as error:
+                wrong.failed[file.path] = error
+            else:
+                good.failed |= wrong.failed
+                return good
+        return wrong
+
+    def _tighten(self, work: Work) -> None:
+        """Write a study anew that has grown to twice its size; each commit leaves its former tables behind."""
+        assert self.study is not None
+        if self.path.stat().st_size <= 2 * self._tight_byte + _LOOSE_BYTE:
+            return
+        with contextlib.suppress(StudyError):  # no room for a second file: it stays as it is
+            self.study.rewrite(work)
+        self._tight_byte = self.path.stat().st_size
 
 
-def _nobody(*_: Any) -> None:
-    """Tell nobody."""
+def put_in_force(study: Study, recipe: Recipe | None) -> None:
+    """Give a study a recipe before anything is added to it.
 
-
-def _put_in_force(study: Study, recipe: Recipe | None) -> None:
+    Raises
+    ------
+    StudyError
+        Where it cannot be added to.
+    """
     if study.read_only:
         raise StudyError(
             f"cannot be added to: {study.why_read_only}", str(study.path), "end that first, or gather into another one"
@@ -164,159 +249,9 @@ def _put_in_force(study: Study, recipe: Recipe | None) -> None:
         study.change(recipe=recipe)
 
 
-def _answer(path: Path, study: Study | None, total: Added) -> dict[str, Any]:
-    return {
-        "study": str(path),
-        "recordings_added": len(total.sources),
-        "traces_added": total.traces,
-        "already_there": len(set(total.known)),
-        "recordings": 0 if study is None else len(study.sources),
-        "traces": 0 if study is None else study.traces(Work()).traces,
-    }
-
-
-# -- following --------------------------------------------------------------------------------------------------------
-
-
-@dataclass
-class _Following:
-    """What is followed, and how far it has come."""
-
-    named: Sequence[str | Path]
-    path: Path
-    recipe: Recipe | None
-    work: Work
-    say: Say
-    grown: Callable[[Study, Added], None]
-    study: Study | None = None
-    total: Added = field(default_factory=Added)
-    arrivals: Arrivals = field(default_factory=Arrivals)
-    trouble: str = ""
-    tight_byte: int = 0
-
-
-def _follow(one: _Following) -> tuple[dict[str, Any], list[MesetaError]]:
-    """Look every few seconds until cancelled; what was taken in stays, whatever ends it."""
-    with ExitStack() as stack:
-        making = stack.enter_context(ExitStack())
-        if one.path.exists():
-            _open(one, stack)
-        else:
-            files_meant(one.named, one.path)  # what is named must be there at the beginning
-            _begin(one.path, making)
-        while True:
-            try:
-                _look(one, stack, making)
-            except Cancelled:
-                break
-            if one.work.cancel.wait(_FOLLOW_SECONDS):
-                break
-        if one.study is not None:
-            one.study.save()
-        return _answer(one.path, one.study, one.total), one.total.bad
-
-
-def _open(one: _Following, stack: ExitStack) -> None:
-    one.study = stack.enter_context(Study.open(one.path, folders=folders_of(one.named)))
-    _put_in_force(one.study, one.recipe)
-    one.tight_byte = one.path.stat().st_size
-
-
-def _look(one: _Following, stack: ExitStack, making: ExitStack) -> None:
-    """Look once, and take in what is whole."""
-    try:
-        ready = one.arrivals.look(one.named, one.path, _table(one), _nothing if one.study is None else one.study.knows)
-        added = _taken(one, ready, stack, making) if ready else Added()
-    except InputError as error:  # the folder is away, or a table of metadata is half written
-        if str(error) != one.trouble:
-            one.trouble = str(error)
-            one.say(error)
-        one.work.report(Progress(f"following: waiting ({error.what})", len(one.total.sources), 0, "recordings"))
-        return
-    one.trouble = ""
-    tried = {*added.files, *added.failed}
-    one.arrivals.done([file for file in ready if file.path in tried])
-    one.total.known += one.arrivals.known
-    told = {path: str(wrong) for path, wrong in one.total.failed.items()}
-    for path, wrong in added.failed.items():
-        if told.get(path) != str(wrong):
-            one.say(wrong)
-    one.total.add(added)
-    for file in one.arrivals.late:
-        one.say(_late(file))
-    if added.sources and one.study is not None:
-        one.grown(one.study, added)
-        _tighten(one, one.study)
-    one.work.report(Progress(_status(one.arrivals.waiting), len(one.total.sources), 0, "recordings"))
-
-
-def _tighten(one: _Following, study: Study) -> None:
-    """Write a study anew that has grown to twice its size; each commit leaves its former tables behind in the file."""
-    if one.path.stat().st_size <= 2 * one.tight_byte + _LOOSE_BYTE:
-        return
-    with contextlib.suppress(StudyError):  # no room for a second file: it stays as it is
-        study.rewrite(one.work)
-    one.tight_byte = one.path.stat().st_size
-
-
-def _nothing(_: Path, __: Look) -> bool:
-    return False
-
-
 def _late(file: FoundFile) -> InputError:
     return InputError(
         "its file of metadata came or changed after it was taken in; the study keeps what was known then",
         str(file.path),
         "gather into a new study to have it read",
     )
-
-
-def _table(one: _Following) -> frozenset[str] | None:
-    recipe = one.study.recipe if one.study is not None else one.recipe or Recipe()
-    if recipe.intake.metadata_table is None:
-        return None
-    return frozenset(batch_context(recipe.intake).table)
-
-
-def _taken(one: _Following, ready: Sequence[FoundFile], stack: ExitStack, making: ExitStack) -> Added:
-    if one.study is not None:
-        return one.study.add(ready, one.work)
-
-    def attempt(files: Sequence[FoundFile]) -> Added:
-        return _created(one.path, files, one.recipe or Recipe(), one.work)
-
-    try:
-        added = attempt(ready)
-    except InputError:
-        added = _what_is_wrong(ready, attempt)
-    if added.sources:
-        making.close()
-        one.recipe = None
-        _open(one, stack)
-    return added
-
-
-def _what_is_wrong(files: Sequence[FoundFile], attempt: Callable[[Sequence[FoundFile]], Added]) -> Added:
-    """Return what is wrong with each of files of which none could be read; ends with one that meanwhile can."""
-    wrong = Added()
-    for file in files:
-        try:
-            good = attempt([file])
-        except InputError as error:
-            wrong.failed[file.path] = error
-        else:
-            good.failed |= wrong.failed
-            return good
-    return wrong
-
-
-def _status(waiting: Sequence[Waiting]) -> str:
-    if not waiting:
-        return "following"
-    more = f", and {len(waiting) - 1} more" if len(waiting) > 1 else ""
-    return f"following: {waiting[0].file.name} waits ({waiting[0].why}){more}"
-
-
-def _expected_samples(files: Sequence[FoundFile]) -> int:
-    """Return a guess of the samples in files, for the size of chunks and the progress bar."""
-    return sum(look.size_byte for file in files if (look := look_at(file.path)) is not None) // 4

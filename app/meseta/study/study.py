@@ -119,7 +119,8 @@ class Study(Notebook):
         InputError
             Where no recording can be read.
         """
-        from meseta.study.following import create_study, folders_of
+        from meseta.study.arriving import folders_of
+        from meseta.study.making import create_study
 
         named = [files] if isinstance(files, str | Path) else list(files)
         create_study(path, named, recipe, work)

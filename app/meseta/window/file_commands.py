@@ -193,7 +193,7 @@ class FileCommands(QObject):
 
         def task(work: Any, _: Callable[[Any], None]) -> Any:
             from meseta.study import Study, write_study
-            from meseta.study.following import folders_of
+            from meseta.study.arriving import folders_of
 
             write_study(path, analysis, work, files=files)
             return Study.open(path, folders=folders_of(files))
