@@ -11,7 +11,6 @@ printed with the form and the number of the mutant, and makes the exit code 1.
 from __future__ import annotations
 
 import argparse
-import contextlib
 import gzip
 import io
 import os
@@ -260,7 +259,7 @@ def _stop(_: int, __: object) -> None:
 def tried(path: Path, form: str, number: int) -> str:
     """Return what came of a mutant: "read", "refused", or a fault in words."""
     recipe = BINARY if form == "binary" else Recipe()
-    signal.alarm(MOST_SECONDS)
+    signal.setitimer(signal.ITIMER_PROF, MOST_SECONDS)  # of work, however busy the machine
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("error")
@@ -272,7 +271,7 @@ def tried(path: Path, form: str, number: int) -> str:
     except BaseException:
         return traceback.format_exc()
     finally:
-        signal.alarm(0)
+        signal.setitimer(signal.ITIMER_PROF, 0)
 
 
 def main() -> int:
@@ -287,7 +286,7 @@ def main() -> int:
     if told.large:
         _treat_as_large()
     resource.setrlimit(resource.RLIMIT_AS, (MOST_BYTE, MOST_BYTE))
-    signal.signal(signal.SIGALRM, _stop)
+    signal.signal(signal.SIGPROF, _stop)
     faults, terminal = 0, _Terminal()
     for form in told.forms or FORMS:
         name, content, finish = FORMS[form]
@@ -324,6 +323,4 @@ def _treat_as_large() -> None:
 
 
 if __name__ == "__main__":
-    with contextlib.suppress(AttributeError):
-        os.nice(5)
     sys.exit(main())
