@@ -86,7 +86,7 @@ class TextReader:
                 self._known = tuple(one for one in self._known if one is not known)
         encoding, data, form = _recognised(data, path)
         contents, rows, odd = _read(data, encoding, form, settings, path)
-        remembered = known_form(data, form) if encoding == "utf-8" and not odd.kinds and not odd.marked else None
+        remembered = known_form(data, form) if encoding == "utf-8" and not odd.is_any else None
         if remembered is not None:
             newest = _Known(remembered, settings.layout, _emptied(contents, rows, form))
             kept = [one for one in self._known if (one.form.before, one.layout) != (remembered.before, newest.layout)]

@@ -20,6 +20,7 @@ HEAD_LINES: Final = 400
 ENOUGH_LINES: Final = 12
 """So many lines of equally many numbers are the table."""
 PROBE_CHARACTERS: Final = 8192
+_COUNTS: Final = (["0", "1"], ["1", "2"])
 ODD_RATHER: Final = 3
 """A table with words in it is taken where it has so many times the rows of what else looks like one."""
 
@@ -241,9 +242,12 @@ def _with_headings(
     names: list[str] = []
     units: list[str] = []
     heading, comment = "", ""
+    below: list[str] = []
     for line in reversed(before):
         match = _COMMENT.match(line)
         row = _heading_cells(line[match.end() :] if match else line, delimiter, cells)
+        if line is before[-1] and len(row) != cells:
+            row = _fitted_row(row, cells, lines[start : start + 2], delimiter, doubts)
         if match:
             comment = comment or match[1].strip('"')
         if len(row) != cells or names:
@@ -260,6 +264,7 @@ def _with_headings(
         if not _is_known(row) and _better_heading(before, line, delimiter, cells):
             if not match and any(NUMBER.match(cell) for cell in row if cell):
                 start = max(place for place in range(start) if lines[place] == line)  # a row with a bad cell
+            below = below or row
             continue
         names, heading = row, line
         break
@@ -269,9 +274,67 @@ def _with_headings(
         names, heading, start = [f"trace_{n}" for n in range(len(first_numbers))], lines[start], start + 1
     if not names and units:
         names, units = units, []
+    numbered = _numbered(names, first_numbers)
+    start += int(bool(numbered))
+    above = _row_above(before, heading, delimiter, cells)
+    if _labels(names, above) and _says_more(above, names):
+        names, below = above, names
+    labels = numbered or _labels(names, below) or _labels(names, above)
     entries = entries_of(before, heading, delimiter)
     shape = (tuple(names), tuple(units) or ("",) * cells, cells)
-    return TextForm(delimiter, decimal, start, *shape, entries, heading, comment, tuple(doubts), tuple(before))
+    form = TextForm(delimiter, decimal, start, *shape, entries, heading, comment, tuple(doubts), tuple(before))
+    return replace(form, labels=labels)
+
+
+def _fitted_row(row: list[str], cells: int, first: Sequence[str], delimiter: str, doubts: list[str]) -> list[str]:
+    """Return the headings right above numbers where there is one too many, or none over the numbers of the rows."""
+    if len(row) > cells and _is_known(row[:cells]) and not any(guess_role(one).role != "other" for one in row[cells:]):
+        spare = ", ".join(f"'{one}'" for one in row[cells:])
+        doubts.append(f"no numbers stand under the heading{'s' if len(row) > cells + 1 else ''} {spare}")
+        return row[:cells]
+    if len(row) == cells - 1 and _is_known(row) and [_cells(line, delimiter)[0] for line in first] in _COUNTS:
+        return ["row", *row]
+    return row
+
+
+def _row_above(before: Sequence[str], heading: str, delimiter: str, cells: int) -> list[str]:
+    """Return the cells of the line above the headings; an empty one says what the one before it says."""
+    place = before.index(heading) if heading in before else 0
+    if place == 0:
+        return []
+    line = before[place - 1]
+    match = _COMMENT.match(line)
+    row = _heading_cells(line[match.end() :] if match else line, delimiter, cells)
+    row += [""] * (cells - len(row)) if len(row) == cells - 1 else []
+    filled = row[:1]
+    for one in row[1:]:
+        filled.append(one or filled[-1])
+    return filled
+
+
+def _says_more(row: Sequence[str], other: Sequence[str]) -> bool:
+    """Return whether a line of headings states more units than another."""
+    stated = [sum(guess_role(cell).unit != "" for cell in cells) for cells in (row, other)]
+    return stated[0] > stated[1]
+
+
+def _labels(names: Sequence[str], row: Sequence[str]) -> tuple[str, ...]:
+    """Return the traces that a second line of headings says the columns belong to; empty where it says none."""
+    often = {names.count(name) for name in names}
+    if len(row) != len(names) or max(often, default=1) < 2 or not often <= {1, max(often)}:
+        return ()
+    pairs = [(name, label) for name, label in zip(names, row, strict=True) if names.count(name) > 1]
+    same = len(set(pairs)) == len(pairs) and len({label for _, label in pairs}) == max(often)
+    return tuple(row) if same else ()
+
+
+def _numbered(names: Sequence[str], first: Sequence[str]) -> tuple[str, ...]:
+    """Return the first row where it numbers the columns under the same heading; empty where it does not."""
+    for begin in (0, 1):
+        wanted = [str(names[:place].count(name) + begin) for place, name in enumerate(names)]
+        if list(first) == wanted and _labels(names, first):
+            return tuple(first)
+    return ()
 
 
 def _is_known(row: Sequence[str]) -> bool:

@@ -21,7 +21,7 @@ from meseta.intake.recording import RawChannel
 from meseta.intake.roles import guess_role, stem_of
 from meseta.intake.rows import end_to_end
 from meseta.recipe.intake import IntakeSettings
-from meseta.traces import Samples
+from meseta.traces import ArraySamples, Samples
 
 __all__ = ["Table", "laid_out"]
 
@@ -47,16 +47,20 @@ def laid_out(table: Table, form: TextForm, doubts: list[str], settings: IntakeSe
     """Return the content that columns of numbers make, with the headings and entries of their form."""
     names = list(form.names) if form.names else [f"column {n + 1}" for n in range(form.columns)]
     stamps: set[str] = set()
-    if table.odd is not None and (table.odd.kinds or table.odd.marked):
+    if table.odd is not None and table.odd.is_any:
         form, table, names, more = _settled(form, table, table.odd, names)
         doubts = [*doubts, *more]
         stamps = {name for name, kind in zip(names, form.kinds, strict=False) if kind == "stamp"}
     metadata, more = canonical(form.entries, str(path))
     doubts = [*doubts, *more]
+    if settings.layout == "rows" and len(table.lengths) == 1 and len(table.columns) > 1:
+        names, form, table = _turned(names, form, table)
     wide = _wide_sets(names, settings) if len(table.lengths) == 1 else None
     words = {"\t": "tab", " ": "blank", ",": "comma", ";": "semicolon", "|": "bar"}[form.delimiter]
     if wide:
-        return _wide(names, form.units, table, wide, metadata, doubts, words)
+        if not form.labels and len(set(names)) < len(names):
+            doubts.append(f"the same headings come {max(map(len, wide.values()))} times: taken as traces side by side")
+        return _wide(names, form, table, wide, metadata, doubts, words)
     channels = [
         make_channel(name, column, NUMBERS, unit=unit, unit_ground="unit row")
         for name, unit, column in zip(names, form.units, table.columns, strict=True)
@@ -81,7 +85,7 @@ def _settled(
     A word that stands in every row is an entry of the file.
     """
     names = [name or f"column {place + 1}" if place in odd.places else name for place, name in enumerate(names)]
-    doubts = [*odd.mark_doubts(), *(odd.said_of(place, names[place]) for place in odd.places)]
+    doubts = [*odd.doubts(), *(odd.said_of(place, names[place]) for place in odd.places)]
     entries = []
     for place in odd.places:
         word = odd.constant(place)
@@ -136,13 +140,19 @@ def _wide_sets(names: Sequence[str], settings: IntakeSettings) -> dict[str, list
     """Return stem -> columns where traces stand side by side; None where columns are channels of one trace."""
     if settings.layout in ("one_trace_a_file", "long") or _are_told_apart(names, settings):
         return None
+    if settings.layout == "rows" and len(set(names)) == 1:
+        return {names[0]: list(range(len(names)))}
     if settings.layout in ("wide", "columns") and all(name.startswith("column ") for name in names):
         return {names[0]: [0], "column": list(range(1, len(names)))} if len(names) > 1 else None
     sets: dict[str, list[int]] = {}
     for place, name in enumerate(names):
         sets.setdefault(stem_of(name), []).append(place)
     largest = max(len(places) for places in sets.values())
-    if largest < 2 or (largest == 2 and len(sets) > 2) or any(name.startswith("column ") for name in names):
+    if largest < 2 or any(name.startswith("column ") for name in names):
+        return None
+    if all(len({names[place] for place in places}) == 1 for places in sets.values()):  # the very same headings
+        return sets if all(len(places) in (1, largest) for places in sets.values()) else None
+    if largest == 2 and len(sets) > 2:
         return None
     exact = {guess_role(names[place]).role for places in sets.values() if len(places) == largest for place in places}
     if len(exact) > 1 and settings.layout != "wide" and largest == 2:
@@ -158,15 +168,27 @@ def _are_told_apart(names: Sequence[str], settings: IntakeSettings) -> bool:
     return settings.layout == "auto" and len(told) > len(set(told))
 
 
+def _turned(names: list[str], form: TextForm, table: Table) -> tuple[list[str], TextForm, Table]:
+    """Return headings, form and columns of a table whose rows are traces; a word at the head of a row names it."""
+    columns = [column.read(0, len(column)) for column in table.columns]
+    heads = [place for place, kind in enumerate(form.kinds) if kind == "words"]
+    words = table.odd.words(heads[0], columns[heads[0]]) if heads and table.odd else []
+    rows = list(np.column_stack([column for place, column in enumerate(columns) if place not in heads]))
+    filled = [int(np.flatnonzero(np.isfinite(row))[-1]) + 1 if np.isfinite(row).any() else 0 for row in rows]
+    turned = Table([ArraySamples(row) for row in rows], [len(rows[0])], (), lambda: filled)
+    return words or [names[0]] * len(rows), replace(form, units=("",) * len(rows), labels=(), kinds=()), turned
+
+
 def _wide(
     names: Sequence[str],
-    units: Sequence[str],
+    form: TextForm,
     table: Table,
     sets: dict[str, list[int]],
     metadata: dict[str, Plain],
     doubts: Sequence[str],
     words: str,
 ) -> Contents:
+    units = form.units
     pieces = max(len(places) for places in sets.values())
     main = next(places for places in sets.values() if len(places) == pieces)
     filled = table.filled()
@@ -183,8 +205,9 @@ def _wide(
         if not shared and channel.role in ("other", "trace_number"):
             channel = _from_metadata(_renamed(heading, stem, samples, units[places[0]]), metadata)
         channels.append(channel)
-    numbered = [re.search(r"(\d+)\D*$", names[place]) for place in main]
-    dataset = np.array([names[place] for place in main], np.str_)
+    own = form.labels or names
+    numbered = [re.search(r"(\d+)\D*$", own[place]) for place in main]
+    dataset = np.array([own[place] for place in main], np.str_)
     rows: list[dict[str, Plain]] = [{"column_number": int(found[1])} if found else {} for found in numbered]
     layout = f"{words}-separated, {pieces} traces side by side"
     starts = np.zeros(pieces, np.int64)

@@ -51,12 +51,15 @@ class OddColumns:
         Word in the place of a reading -> how often.
     are_marks_met : bool
         Whether such words were met in the rows that are parsed at present, and are not counted yet.
+    beyond : dict
+        What stands here and there behind the last column.
     """
 
     kinds: tuple[str, ...]
     decimal: str
     marked: dict[str, int] = field(default_factory=dict)
     are_marks_met: bool = False
+    beyond: dict[str, None] = field(default_factory=dict)
     _codes: dict[int, dict[str, int]] = field(default_factory=dict)
     _rows: int = 0
     _first: dict[int, tuple[int, str]] = field(default_factory=dict)
@@ -161,6 +164,11 @@ class OddColumns:
         seconds[there] = (shown - first) / 1e9
         return seconds
 
+    def words(self, place: int, codes: Floats) -> list[str]:
+        """Return the words of the rows of a column."""
+        known = list(self._codes.get(place, {}))
+        return [known[int(code)] for code in codes.tolist()]
+
     def constant(self, place: int) -> str | None:
         """Return the only word of a column of words; None where there are several."""
         words = list(self._codes.get(place, {})) if self.kinds and self.kinds[place] == "words" else []
@@ -201,9 +209,16 @@ class OddColumns:
             word = found.decode()
             self.marked[word] = self.marked.get(word, 0) + 1
 
-    def mark_doubts(self) -> list[str]:
-        """Return in words how many cells hold a word in the place of a reading."""
-        return [
+    @property
+    def is_any(self) -> bool:
+        """Whether there is anything to say."""
+        return bool(self.kinds or self.marked or self.beyond)
+
+    def doubts(self) -> list[str]:
+        """Return in words how many cells hold a word in the place of a reading, and what is left out at the ends."""
+        left = ", ".join(f"'{word}'" for word in list(self.beyond)[:SHOWN_WORDS])
+        beyond = [f"a few cells stand behind the last column ({left}): left out"] if left else []
+        return beyond + [
             f"{count} cell{'s' if count > 1 else ''} '{word}' in the place of a number: taken as missing"
             for word, count in self.marked.items()
         ]

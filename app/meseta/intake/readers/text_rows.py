@@ -305,9 +305,12 @@ def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int, odd: Od
     parsing = csv.ParseOptions(delimiter=form.delimiter)
 
     places = odd.places if odd is not None else ()
+    spare = tuple(range(form.columns, width))  # what stands behind a delimiter at the ends of lines
 
     def table(nulls: tuple[str, ...]) -> Any:
-        return csv.read_csv(pa.BufferReader(block), reading, parsing, _conversion(width, form.decimal, nulls, places))
+        return csv.read_csv(
+            pa.BufferReader(block), reading, parsing, _conversion(width, form.decimal, nulls, places + spare)
+        )
 
     try:
         try:
@@ -329,6 +332,12 @@ def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int, odd: Od
         if str(error).startswith("Empty CSV"):
             return [np.empty(0) for _ in range(form.columns)]
         raise _in_words(error, path, lines_before) from error
+    for place in spare:
+        words = [word for word in found.column(place).unique().to_pylist() if word and word.strip()]
+        if words and odd is None:
+            raise bad_cell(words[0], "empty", place, str(path))
+        if words and odd is not None:
+            odd.beyond.setdefault(words[0][:20])
     if odd is None or not places:
         return [_array(found.column(place)) for place in range(form.columns)]
     where = (str(path), lines_before)
