@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from PySide6.QtCore import QSize, Qt
 from PySide6.QtGui import QPainter, QPaintEvent
-from PySide6.QtWidgets import QDockWidget, QMainWindow, QSizePolicy, QWidget
+from PySide6.QtWidgets import QDockWidget, QMainWindow, QSizePolicy, QTabBar, QWidget
 
 from meseta.window.plots.panel import PlotPanel
 
@@ -59,7 +59,10 @@ class DockTitle(QWidget):
 
 
 def name_docks(window: QMainWindow, docks: list[QDockWidget]) -> None:
-    """Write the title of every dock that no tab names."""
+    """Write the title of every dock that no tab names; many tabs are scrolled to, never cut to a letter."""
+    for bar in window.findChildren(QTabBar, options=Qt.FindChildOption.FindDirectChildrenOnly):
+        bar.setElideMode(Qt.TextElideMode.ElideNone)
+        bar.setUsesScrollButtons(True)
     for dock in docks:
         others = [other for other in window.tabifiedDockWidgets(dock) if not other.isHidden()]
         alone = dock.isFloating() or not others

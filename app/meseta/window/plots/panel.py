@@ -10,14 +10,14 @@ import numpy as np
 import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QPointF, QRectF, Qt, QTimer
-from PySide6.QtGui import QContextMenuEvent, QGuiApplication, QResizeEvent
+from PySide6.QtGui import QContextMenuEvent, QGuiApplication, QResizeEvent, QShowEvent
 from PySide6.QtWidgets import QFileDialog, QHBoxLayout, QLabel, QMenu, QSizePolicy, QVBoxLayout, QWidget
 
 from meseta import typeset
 from meseta.window.elided import Elided
 from meseta.window.frame import Frame
 from meseta.window.plots.gestures import GestureBox
-from meseta.window.plots.ticks import ConductanceAxis
+from meseta.window.plots.ticks import Axis, ConductanceAxis
 from meseta.window.session import Hover, Span
 from meseta.window.theme import Theme
 
@@ -64,8 +64,8 @@ class PlotPanel(QWidget):
         self.heading = Elided(self.title, "title", self.shorter)
         self.note = Elided("")
         self.note.hide()
-        self.state = QLabel("")
-        self.state.setProperty("tone", "doubtful")
+        self.state = Elided("", "doubtful", shorter=("…",))
+        self.state.hide()
         self.corner = QHBoxLayout()
         self.empty = QLabel("", self.plot)
         self._lay_out()
@@ -140,8 +140,8 @@ class PlotPanel(QWidget):
 
     def say_state(self, text: str) -> None:
         """Show a word of doubt beside the heading ("out of date")."""
-        if text != self.state.text():
-            self.state.setText(text)
+        self.state.say(text)
+        self.state.setVisible(bool(text))
 
     def say_note(self, text: str) -> None:
         """Write a quiet line beside the heading; all of it is its tool tip where it does not fit."""
@@ -162,6 +162,16 @@ class PlotPanel(QWidget):
         """Leave the heading out where a tab says the same; one that says more than the title stays."""
         self._titled = said
         self.heading.setVisible(said or self.heading.text() != self.title)
+
+    def showEvent(self, event: QShowEvent) -> None:
+        """Give the axes of plots below the first one their room: what was laid out unseen has none for them."""
+        super().showEvent(event)
+        QTimer.singleShot(0, self, self._refit_axes)
+
+    def _refit_axes(self) -> None:
+        for item in self.plot.scene().items():
+            if isinstance(item, Axis):
+                item.refit()
 
     def resizeEvent(self, event: QResizeEvent) -> None:
         """Keep the words in the middle."""

@@ -12,10 +12,10 @@ from PySide6.QtGui import QFontMetricsF
 from meseta import typeset
 from meseta.window.theme import Theme
 
-__all__ = ["ConductanceAxis", "LogCountAxis", "PlainAxis", "fitting"]
+__all__ = ["Axis", "ConductanceAxis", "LogCountAxis", "PlainAxis", "fitting"]
 
 
-class _Axis(pg.AxisItem):
+class Axis(pg.AxisItem):
     """An axis without frame or grid, in the colours of the theme."""
 
     _text = ""
@@ -37,6 +37,10 @@ class _Axis(pg.AxisItem):
         """Show or hide what the axis shows."""
         self._named = shown
         self._write_label()
+
+    def refit(self) -> None:
+        """Ask for the room that ticks and title need, as far as they are shown."""
+        self.showLabel(self._named and bool(self._text))
 
     def _write_label(self, **style: str) -> None:
         self.setLabel(self._text, **style)
@@ -66,7 +70,7 @@ class _Axis(pg.AxisItem):
         event.ignore()
 
 
-class ConductanceAxis(_Axis):
+class ConductanceAxis(Axis):
     """The vertical axis of all plots: log10 G with a label a decade, or G."""
 
     def __init__(self, orientation: str = "left", *, labelled: bool = True) -> None:
@@ -107,7 +111,7 @@ class ConductanceAxis(_Axis):
         ]
 
 
-class LogCountAxis(_Axis):
+class LogCountAxis(Axis):
     """A horizontal axis of log10 of a density, with a label a decade."""
 
     def __init__(self, orientation: str = "bottom", text: str = "") -> None:
@@ -129,7 +133,7 @@ class LogCountAxis(_Axis):
         return _plain_texts(values, spacing)
 
 
-class PlainAxis(_Axis):
+class PlainAxis(Axis):
     """A linear axis; ``whole`` sets thousands apart and shows no fractions."""
 
     def __init__(self, orientation: str = "bottom", text: str = "", *, whole: bool = False) -> None:
@@ -150,7 +154,7 @@ class PlainAxis(_Axis):
 
 def fitting(text: str, metrics: QFontMetricsF, width: float) -> str:
     """Return the longest form of an axis title that fits a width in pixels."""
-    unit = text.partition("(")[2].rstrip(")")
+    unit = text.partition("(")[2].rstrip(")") if text.count("(") == 1 else ""
     for form in (text, text.replace(" per ", "/"), unit):
         if form and metrics.horizontalAdvance(form) <= width:
             return form

@@ -154,7 +154,8 @@ class TablePanel(QWidget):
     def _fit_columns(self) -> None:
         if self._by_hand:
             return
-        metrics, widths = self.view.fontMetrics(), []
+        metrics = self.view.fontMetrics()
+        widths: list[int] = []
         for place, column in enumerate(self.model.columns):
             values = self.model.data_columns.get(column.name, ())
             # Whatever the order and the filter, no number may lose its end: "5.34 …" hides the power of ten.
@@ -170,7 +171,8 @@ class TablePanel(QWidget):
             return
         reach = np.cumsum(self._widths)
         whole = max(int(np.searchsorted(reach, self.view.viewport().width(), side="right")), 1)
-        spare, shown = self.view.viewport().width() - int(reach[whole - 1]), np.count_nonzero(self._widths[:whole])
+        spare = self.view.viewport().width() - int(reach[whole - 1])
+        shown = sum(width > 0 for width in self._widths[:whole])
         self._sharing = True
         for place, width in enumerate(self._widths):
             more = spare // max(shown, 1) if place < whole < len(self._widths) and width else 0

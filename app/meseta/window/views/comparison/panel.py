@@ -12,7 +12,7 @@ import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QPointF, Qt
 from PySide6.QtGui import QAction, QActionGroup, QPen, QPolygonF, QResizeEvent
-from PySide6.QtWidgets import QFileDialog, QGraphicsPolygonItem, QMenu, QToolButton
+from PySide6.QtWidgets import QFileDialog, QGraphicsPolygonItem, QMenu, QSizePolicy, QToolButton
 
 from meseta import typeset
 from meseta.colours import GROUPS
@@ -122,6 +122,7 @@ class ComparisonPanel(SpinePanel):
         button.setMenu(menu)
         button.setPopupMode(QToolButton.ToolButtonPopupMode.InstantPopup)
         button.setAutoRaise(True)
+        button.setSizePolicy(QSizePolicy.Policy.Preferred, QSizePolicy.Policy.Fixed)
         button.setAccessibleName("What is compared, and how it is laid out")
         return button
 
@@ -129,9 +130,11 @@ class ComparisonPanel(SpinePanel):
         """Write on the button what is compared and how, or only what where the panel is narrow."""
         what = SOURCES[self.source].split(" ")[0]
         both = f"{what}, {LOOKS[self.look]}"
-        heading = self.heading.sizeHint().width() + HEADING_MARGINS + BUTTON_MARGINS
-        fits = self.fontMetrics().horizontalAdvance(both) + heading <= self.width()
-        self.choice.setText(both if fits else what)
+        width = self.fontMetrics().horizontalAdvance
+        taken = self.heading.sizeHint().width() + HEADING_MARGINS + BUTTON_MARGINS
+        taken += width(self.state.text()) + 8 if self.state.text() else 0
+        self.choice.setText(both if width(both) + taken <= self.width() else what)
+        self.choice.setMinimumWidth(width(what) + BUTTON_MARGINS // 2)
         self.choice.setToolTip(f"What is compared and how: {SOURCES[self.source]}, {LOOKS[self.look]}")
 
     def compare(self, source: str) -> None:
@@ -405,7 +408,6 @@ class ComparisonPanel(SpinePanel):
 
     def _say(self, found: Compared | None) -> None:
         session, state = self.session, self.job.state
-        self._name_choice()
         self.fit_action.setEnabled(self._window() is not None)
         if session.traces is None:
             self.say_empty("Two parts of a recording, or two recordings, will stand here on one axis.")
@@ -421,7 +423,9 @@ class ComparisonPanel(SpinePanel):
             self.say_empty("Comparing …" if state == "working" else "Waiting for the histogram.")
         else:
             self.say_empty("")
-        self.say_state("out of date" if found is not None and state in ("out of date", "working") else "")
+        old = found is not None and not self.empty.text() and state in ("out of date", "working")
+        self.say_state("out of date" if old else "")
+        self._name_choice()
 
     def data(self) -> PlotData | None:
         """Return every histogram with its band, and the difference, one row a bin."""

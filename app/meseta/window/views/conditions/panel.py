@@ -113,14 +113,13 @@ class ConditionsPanel(QWidget):
     def _lay_out(self) -> None:
         inside = QWidget()
         column = QVBoxLayout(inside)
-        column.setContentsMargins(8, 4, 8, 8)
+        column.setContentsMargins(8, 4, 8, 4)
         column.setSpacing(8)
         for widget in (self.empty, self.joined):
             column.addWidget(widget)
         column.addLayout(self.lines)
         column.addWidget(self.picked)
         column.addWidget(self.wrong)
-        column.addLayout(self._buttons())
         column.addStretch(1)
         area = QScrollArea()
         area.setWidget(inside)
@@ -129,7 +128,11 @@ class ConditionsPanel(QWidget):
         area.setFocusPolicy(Qt.FocusPolicy.NoFocus)
         outer = QVBoxLayout(self)
         outer.setContentsMargins(0, 0, 0, 0)
+        outer.setSpacing(0)
         outer.addWidget(area)
+        buttons = self._buttons()  # stay in sight however many conditions there are
+        buttons.setContentsMargins(8, 4, 8, 8)
+        outer.addLayout(buttons)
 
     def _buttons(self) -> QHBoxLayout:
         self.add = QPushButton("Add …")

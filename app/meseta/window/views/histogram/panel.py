@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QEvent, QObject, QPointF, Qt
-from PySide6.QtGui import QAction, QActionGroup, QKeyEvent, QPolygonF
+from PySide6.QtGui import QAction, QActionGroup, QKeyEvent, QPolygonF, QResizeEvent
 from PySide6.QtWidgets import QGraphicsPolygonItem, QMenu, QToolButton
 
 from meseta import typeset
@@ -246,6 +246,11 @@ class HistogramPanel(SpinePanel):
             self.box.setXRange(high - DECADES_SHOWN, high + 0.15, padding=0)
         else:
             self.box.setXRange(-0.02 * top, 1.12 * top, padding=0)
+        self.fit.place_labels()
+
+    def resizeEvent(self, event: QResizeEvent) -> None:
+        """Keep the labels of peaks inside."""
+        super().resizeEvent(event)
         self.fit.place_labels()
 
     def _say_beyond(self, top: float) -> None:
