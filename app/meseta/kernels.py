@@ -32,6 +32,7 @@ KERNEL_MODULES = (
     "meseta.segmentation.finder_kernels",
     "meseta.segmentation.measure_kernels",
     "meseta.histograms.kernels",
+    "meseta.histograms.resampling_kernels",
     "meseta.peaks.line_kernels",
     "meseta.peaks.kernels",
     "meseta.selection.kernels",

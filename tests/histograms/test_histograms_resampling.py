@@ -8,7 +8,7 @@ from coverage_experiments import SCENARIOS, experiment, measure
 from scipy import stats
 from small_recordings import matrix_of
 
-from meseta.histograms import Grid, Resampling, resample
+from meseta.histograms import Grid, Resampling, resample, resampling
 from meseta.histograms.grids import logarithmic_edges
 from meseta.histograms.memory import block_length, memory_of
 from meseta.histograms.resampling import block_traces_for, replicate_counts, t_factor
@@ -58,6 +58,25 @@ def test_large_counts_stay_exact() -> None:
     assert np.array_equal(
         replicate_counts(matrix, np.arange(500), weights, WORK), weights.astype(np.int64) @ counts.astype(np.int64)
     )
+
+
+@pytest.mark.parametrize("block", [1, 40], ids=["trace by trace", "blocks"])
+@pytest.mark.parametrize("bins", [60, 3])
+def test_replicate_counts_are_the_matrix_product_whatever_was_drawn(block, bins, monkeypatch):
+    """Weights that seldom change along the traces take another way, bins in parts; numpy's product of integers judges.
+
+    The chosen rows are out of order, and the weights lie in memory as a choice of columns leaves them.
+    """
+    monkeypatch.setattr(resampling, "_RUNNING_CELLS", 700 * bins // 3 + 1)
+    random = np.random.default_rng(6)
+    counts = random.integers(0, 60_000, (900, bins))
+    matrix = matrix_of(counts, Grid(logarithmic_edges(-bins, 0, 10), "logarithmic"))
+    rows = np.concatenate([np.arange(300, 700), np.arange(300)])
+    weights = np.repeat(random.integers(0, 9, (50, 900 // block + 1)), block, axis=1)[:, :900].astype(np.uint16)
+    chosen = weights[:, np.arange(900) < 700]
+    expected = chosen.astype(np.int64) @ counts[rows]
+    assert np.array_equal(replicate_counts(matrix, rows, chosen, WORK), expected)
+    assert np.array_equal(replicate_counts(matrix, rows[:0], chosen[:, :0], WORK), np.zeros((50, bins)))
 
 
 def test_blocks_are_balanced_in_time_and_hit_every_trace_alike() -> None:

@@ -18,7 +18,6 @@ __all__ = [
     "count_flagged_rows",
     "count_rows",
     "count_stepped_grid",
-    "draw_blocks",
     "find_window",
     "first_at_or_past",
     "fold_rows",
@@ -441,25 +440,6 @@ def count_explicit_grid(
                 tally[at & 1, place_of(shifted, drive_edges), place] += 1
 
 
-@kernel
-def draw_blocks(
-    starts: npt.NDArray[np.int64],
-    lengths: npt.NDArray[np.int64],
-    rows: npt.NDArray[np.int64],
-    weights: npt.NDArray[np.uint16],
-) -> None:
-    """Count how often each of ``rows`` lies in the blocks of a replicate; blocks run on from the end to the begin."""
-    traces = len(rows)
-    for replicate in range(len(starts)):
-        for block in range(len(lengths)):
-            at = starts[replicate, block]
-            for _ in range(lengths[block]):
-                weights[replicate, rows[at]] += 1
-                at += 1
-                if at == traces:
-                    at = 0
-
-
 @warm_up
 def _warm_up() -> None:
     values = np.array([0.1, 1.0, 2.0, 0.5, 0.2], np.float32)
@@ -470,7 +450,6 @@ def _warm_up() -> None:
         counts = np.zeros((1, 1), kind)
         count_rows(values, begin, end, table, thresholds, 1, column, counts, special)
         count_flagged_rows(values, np.zeros(5, np.uint8), begin, end, table, thresholds, column, counts, special, 0, 1)
-    draw_blocks(np.zeros((1, 1), np.int64), end, np.arange(5), np.zeros((1, 5), np.uint16))
     square = np.ones((2, 2), np.float32)
     for wide in (np.ones((2, 2)), np.ones((2, 2), np.int64), np.ones((2, 2), np.uint16)):
         narrow_rows(wide, square, np.zeros(2), np.zeros(2))

@@ -27,7 +27,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
+from meseta.histograms import kernels, resampling_kernels
 from meseta.histograms.memory import Memory, memory_of, record_features
 from meseta.histograms.results import CountMatrix, Resampling
 from meseta.recipe.histogram import HistogramSettings
@@ -46,6 +46,10 @@ _USUAL_BLOCKS = 8
 _CANDIDATES = 8
 _MOST_DRAWS = 20_000_000
 _EXACT_FLOAT32 = 1 << 24
+_FEW_CHANGES = 8
+"""Traces a change of weight from which on sums over the changes are the faster way."""
+_MOST_CHANGES = 1 << 22
+_RUNNING_CELLS = 1 << 20
 _HELD_FIXED = "calibration, alignment, region, bins, selection and plateaus"
 
 
@@ -261,7 +265,7 @@ def _draw_blocks(weights: Weights, rows: Integers, block: int, balanced: bool, r
         starts = _in_balance(starts, lengths, traces)
     else:
         starts = starts[:, 0]
-    kernels.draw_blocks(np.ascontiguousarray(starts), lengths, rows, weights)
+    resampling_kernels.draw_blocks(np.ascontiguousarray(starts), lengths, rows, weights)
 
 
 def _in_balance(starts: Integers, lengths: Integers, traces: int) -> Integers:
@@ -282,6 +286,28 @@ def _in_balance(starts: Integers, lengths: Integers, traces: int) -> Integers:
 
 def replicate_counts(counts: CountMatrix, rows: Integers, weights: Weights, work: Work) -> npt.NDArray[np.float64]:
     """Return the histogram counts of every replicate, exact.
+
+    Where whole blocks or specimens were drawn the weights seldom change along the traces: then the counts are sums,
+    over the changes, of the change times the sum of all traces up to there (summation by parts), which takes a small
+    part of a matrix product.
+    """
+    room = min(weights.size // _FEW_CHANGES, _MOST_CHANGES)
+    places, jumps = np.empty(room, np.int64), np.empty(room, np.int64)
+    begins = resampling_kernels.weight_jumps(np.ascontiguousarray(weights), places, jumps)
+    if begins[-1] < 0:
+        return _product(counts, rows, weights, work)
+    total = np.zeros((len(weights), counts.shown.bins))
+    step = max(1, min(counts.shown.bins, _RUNNING_CELLS // max(len(rows), 1)))
+    for first in range(0, counts.shown.bins, step):
+        work.check()
+        running = np.empty((len(rows), min(step, counts.shown.bins - first)))
+        resampling_kernels.running_rows(counts.counts, rows, counts.merge, first, running)
+        resampling_kernels.add_jumps(begins, places, jumps, running, first, total)
+    return total
+
+
+def _product(counts: CountMatrix, rows: Integers, weights: Weights, work: Work) -> npt.NDArray[np.float64]:
+    """Return the counts of replicates whose weights change from trace to trace.
 
     Works through the traces in blocks.  A block whose sums stay below 2**24 is multiplied in float32, where they are
     exact; any other in float64.
