@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 import pyqtgraph as pg
 from PySide6.QtCore import QPointF, QRectF, Qt, QTimer
-from PySide6.QtGui import QContextMenuEvent, QGuiApplication, QResizeEvent, QShowEvent
+from PySide6.QtGui import QContextMenuEvent, QGuiApplication, QResizeEvent
 from PySide6.QtWidgets import QFileDialog, QHBoxLayout, QLabel, QMenu, QSizePolicy, QVBoxLayout, QWidget
 
 from meseta import typeset
@@ -21,7 +21,7 @@ from meseta.window.plots.ticks import Axis, ConductanceAxis
 from meseta.window.session import Hover, Span
 from meseta.window.theme import Theme
 
-__all__ = ["HEADING_MARGINS", "PlotData", "PlotPanel", "SpinePanel"]
+__all__ = ["HEADING_MARGINS", "PlotData", "PlotPanel", "SpinePanel", "show_below"]
 
 GUIDES_LOGARITHMIC = (1, 2, 3)
 GUIDES_LINEAR = tuple(range(1, 11))
@@ -162,16 +162,6 @@ class PlotPanel(QWidget):
         """Leave the heading out where a tab says the same; one that says more than the title stays."""
         self._titled = said
         self.heading.setVisible(said or self.heading.text() != self.title)
-
-    def showEvent(self, event: QShowEvent) -> None:
-        """Give the axes of plots below the first one their room: what was laid out unseen has none for them."""
-        super().showEvent(event)
-        QTimer.singleShot(0, self, self._refit_axes)
-
-    def _refit_axes(self) -> None:
-        for item in self.plot.scene().items():
-            if isinstance(item, Axis):
-                item.refit()
 
     def resizeEvent(self, event: QResizeEvent) -> None:
         """Keep the words in the middle."""
@@ -366,6 +356,17 @@ class DrivePanel(SpinePanel):
     def hover_at(self, x: float, y: float) -> Hover | None:
         """Return conductance and displacement under the pointer."""
         return Hover(y, x, self.session.drive_unit)
+
+
+def show_below(item: pg.PlotItem, shown: bool) -> None:
+    """Show or hide a plot below the first one; axes hidden with it lost their room, and ask for it again."""
+    if shown == item.isVisible():
+        return
+    item.setVisible(shown)
+    for name in ("left", "bottom") if shown else ():
+        axis = item.getAxis(name)
+        if isinstance(axis, Axis):
+            axis.refit()
 
 
 def rectangle(x0: float, x1: float, y0: float, y1: float) -> QRectF:

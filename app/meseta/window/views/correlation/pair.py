@@ -10,6 +10,7 @@ import pyqtgraph as pg
 from PySide6.QtGui import QGuiApplication, QPen
 
 from meseta import typeset
+from meseta.window.plots.panel import show_below
 from meseta.window.plots.ticks import ConductanceAxis, LogCountAxis
 from meseta.window.theme import Theme
 
@@ -75,7 +76,7 @@ class PairPlot:
     def show(self, found: PairHistograms | None, shown: CorrelationHistogram | None) -> None:
         """Show the histograms of a pair, or none."""
         self.found = found
-        self.item.setVisible(found is not None)
+        show_below(self.item, found is not None)
         self.item.setFixedHeight(HEIGHT if found is not None else 0)
         if found is None or shown is None:
             return

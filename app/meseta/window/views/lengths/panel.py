@@ -18,7 +18,7 @@ from meseta.window.conditions import WINDOWS
 from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
-from meseta.window.plots.panel import BOTTOM_PIXELS, PlotData, PlotPanel
+from meseta.window.plots.panel import BOTTOM_PIXELS, PlotData, PlotPanel, show_below
 from meseta.window.plots.ticks import PlainAxis
 from meseta.window.theme import Theme
 from meseta.work import Work
@@ -188,8 +188,9 @@ class LengthsPanel(PlotPanel):
     def _draw(self) -> None:
         found = self.found
         drawn = found is not None and bool(found.counts.sum() + found.censored_counts.sum())
-        for item in (self.whole, self.cut, self.item):
+        for item in (self.whole, self.cut):
             item.setVisible(drawn)
+        show_below(self.item, drawn)
         if found is not None and drawn:
             edges = np.repeat(found.edges, 2)
             both = found.counts + found.censored_counts

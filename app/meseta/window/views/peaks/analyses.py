@@ -16,7 +16,7 @@ from meseta.window.frame import Frame
 from meseta.window.jobs import Channel
 from meseta.window.on_demand import OnDemand, Wanted
 from meseta.window.peak_editing import PeakEditor
-from meseta.window.plots.panel import PlotData, PlotPanel
+from meseta.window.plots.panel import PlotData, PlotPanel, show_below
 from meseta.window.plots.ticks import PlainAxis
 from meseta.window.session import Hover
 from meseta.window.theme import Theme
@@ -154,8 +154,9 @@ class AnalysesPanel(PlotPanel):
             self._shown = found.of_peak(peak)
         self._order = self._ordered()
         drawn = self._shown is not None and len(self._order) > 0
-        for item in (self.band, self.errors, self.points, self.chosen, self.chosen_line, self.said, self.grid):
+        for item in (self.band, self.errors, self.points, self.chosen, self.chosen_line, self.said):
             item.setVisible(drawn)
+        show_below(self.grid, drawn)
         if drawn and found is not None:
             self._draw_positions(found, peak)
             self._draw_choices()
@@ -229,7 +230,7 @@ class AnalysesPanel(PlotPanel):
         """Give the grid of choices its height, or leave it out where the positions would have no room."""
         room = self.plot.height() - FEWEST_PIXELS
         fits = room >= 0.7 * PIXELS_A_LINE * self._lines > 0
-        self.grid.setVisible(fits)
+        show_below(self.grid, fits)
         self.grid.setFixedHeight(min(PIXELS_A_LINE * self._lines, room) if fits else 0)
 
     def resizeEvent(self, event: QResizeEvent) -> None:

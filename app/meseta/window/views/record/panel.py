@@ -12,7 +12,7 @@ from PySide6.QtWidgets import QLabel
 
 from meseta import colours, typeset
 from meseta.window.frame import Frame
-from meseta.window.plots.panel import BOTTOM_PIXELS, PlotData, PlotPanel
+from meseta.window.plots.panel import BOTTOM_PIXELS, PlotData, PlotPanel, show_below
 from meseta.window.plots.ticks import ConductanceAxis, PlainAxis
 from meseta.window.session import Hover
 from meseta.window.theme import Theme
@@ -103,7 +103,7 @@ class RecordPanel(PlotPanel):
     def _draw(self) -> None:
         found = self.found
         self.image.setVisible(found is not None)
-        self.item.setVisible(found is not None)
+        show_below(self.item, found is not None)
         if found is not None:
             self._paint(found)
             self._draw_mean(found)
