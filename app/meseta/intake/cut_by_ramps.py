@@ -16,6 +16,10 @@ from meseta.recipe.cutting import CuttingSettings
 __all__ = ["cut_by_ramps"]
 
 SHORTEST_RAMP: Final = 10
+JUMP_SHARE: Final = 0.8
+"""A drive jumps where one step from sample to sample makes this share of the swing."""
+AT_A_JUMP: Final = 2
+"""A ramp begins with the jump before it where it is found so few samples from it."""
 EDGE_SAMPLES: Final = 3
 EDGE_FRACTION: Final = 0.8
 """A ramp at the edge of the record that is shorter than this share of the usual one was cut off by it."""
@@ -44,6 +48,7 @@ def cut_by_ramps(
         Counted from the first sample.
     """
     piece, first, last = part
+    ramps = _cut_at_jumps(drive, first, last - first, ramps)
     result.pull_sign, note = _pull_sign(recording, settings, calibration, ramps, first)
     if note and note not in result.notes:
         result.notes.append(note)
@@ -68,6 +73,30 @@ def cut_by_ramps(
         if not opening and previous >= 0:
             result.partner[row], result.partner[previous] = previous, row
         previous = row if opening else -1
+
+
+def _cut_at_jumps(drive: RawChannel, first: int, samples: int, ramps: Ramps) -> Ramps:
+    """Return the ramps without those that a drive jumps back within one step: no sample lies on the way.
+
+    The ramp before ends with the last sample before the step, the next begins with the first behind it.
+    """
+    begin, end, kept = ramps.begin.copy(), ramps.end.copy(), np.ones(len(ramps.begin), np.bool_)
+    for ramp in np.flatnonzero(ramps.end - ramps.begin < SHORTEST_RAMP).tolist():
+        if ramp == 0 or ramp == len(begin) - 1:
+            continue
+        low = max(int(begin[ramp]) - SHORTEST_RAMP, int(begin[ramp - 1]))
+        high = min(int(end[ramp]) + SHORTEST_RAMP, int(end[ramp + 1]), samples)
+        steps = np.diff(drive.values(first + low, first + high)) * np.sign(ramps.swing[ramp])
+        steps = np.where(np.isfinite(steps), steps, 0.0)
+        if not steps.max(initial=0.0) >= JUMP_SHARE * abs(float(ramps.swing[ramp])):
+            continue
+        behind = low + int(np.argmax(steps)) + 1
+        holds_above, holds_below = begin[ramp] - end[ramp - 1], begin[ramp + 1] - behind
+        end[ramp - 1] = end[ramp - 1] if holds_above > 0 else behind
+        begin[ramp] = end[ramp] = behind
+        if abs(int(holds_below)) <= AT_A_JUMP:
+            begin[ramp + 1], kept[ramp] = behind, False
+    return Ramps(begin[kept], end[kept], ramps.swing[kept], ramps.noise)
 
 
 def _incomplete(ramps: Ramps, ramp: int, usual: float, smallest: float, samples: int) -> str:

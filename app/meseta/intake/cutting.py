@@ -12,7 +12,7 @@ from meseta.intake.calibrate import Calibration
 from meseta.intake.cut_by_ramps import cut_by_ramps
 from meseta.intake.cut_by_threshold import cut_by_threshold
 from meseta.intake.cuts import HOLD, PULL, PUSH, SWEEP, Cut, apart, between_traces, stated_direction
-from meseta.intake.marks import steps_of, trigger_edges, trigger_level
+from meseta.intake.marks import counting_channel, steps_of, trigger_edges, trigger_level
 from meseta.intake.ramps import find_ramps
 from meseta.intake.recording import RawChannel, Recording
 from meseta.recipe.cutting import CuttingSettings
@@ -72,7 +72,7 @@ def _mark(recording: Recording, settings: CuttingSettings, drive: RawChannel | N
         channel = recording.channel(role)
         if channel is not None and not channel.shared and (drive is None or role == "trace_number"):
             return channel
-    return None
+    return counting_channel(recording) if drive is None else None
 
 
 def _uncut(recording: Recording) -> Cut:
@@ -100,6 +100,13 @@ def _parts(
         return [span]
     if mark.role == "trace_number":
         return steps_of(mark, first, last, lambda step: step != 0)
+    if mark.role == "other":
+        parts = steps_of(mark, first, last, lambda step: step < 0)
+        if len(parts) > 1:
+            result.notes.append(
+                f"'{mark.name}' counts the rows and starts anew: taken as {len(parts)} traces"
+            )
+        return parts
     if mark.role == "time":
         parts = steps_of(mark, first, last, lambda step: step < 0)
         trigger = recording.channel("trigger") if settings.method == "auto" and len(parts) == 1 else None

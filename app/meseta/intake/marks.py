@@ -11,9 +11,14 @@ import numpy.typing as npt
 from meseta.intake.recording import RawChannel, Recording
 from meseta.recipe.cutting import CuttingSettings
 
-__all__ = ["steps_of", "trigger_edges", "trigger_level"]
+__all__ = ["counting_channel", "steps_of", "trigger_edges", "trigger_level"]
 
 BLOCK: Final = 4_000_000
+COUNTING: Final = frozenset(
+    {"", "#", "i", "n", "no", "nr", "index", "row", "sample", "samples", "step", "point", "points", "sample_number"}
+    | {"sample number", "sample_no", "sample no", "point_number", "data point", "datapoint", "unnamed: 0"}
+)
+"""Names of a column that counts rows (common practice, no source)."""
 GUARD: Final = 0.1
 """A trigger has changed once it is this share of its swing beyond the level; noise on the level is no edge."""
 
@@ -27,6 +32,18 @@ def steps_of(
         stored = np.asarray(channel.samples.read(start, min(start + BLOCK + 1, last)), np.float64)
         edges += (np.flatnonzero(is_edge(np.diff(stored))) + start + 1).tolist()
     return list(zip(edges, [*edges[1:], last], strict=True))
+
+
+def counting_channel(recording: Recording) -> RawChannel | None:
+    """Return the channel that counts the samples of each trace, by name and by its numbers; None where none does."""
+    for channel in recording.channels:
+        if channel.role != "other" or channel.shared or channel.name.strip().lower() not in COUNTING:
+            continue
+        values = channel.values(0, min(recording.samples, BLOCK))
+        steps = np.diff(values)
+        if len(steps) and bool(np.all((steps == 1) | ((steps < 0) & (values[1:] == values[0])))) and (steps < 0).any():
+            return channel
+    return None
 
 
 def trigger_level(recording: Recording, channel: RawChannel, settings: CuttingSettings) -> tuple[float, float]:
