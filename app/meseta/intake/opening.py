@@ -91,7 +91,7 @@ def _opened(path: Path, settings: IntakeSettings, name: str, context: OpenContex
         if size == 0:
             raise InputError("is empty", str(path), "check how it was written")
         head, packed = peek_bytes(path, HEAD_BYTE)
-        reader = find_reader(head, path, settings.reader)
+        reader = find_reader(head, path, settings.reader, settings.binary_type is not None)
         if packed and reader.name not in ("text", "NumPy"):
             raise InputError(f"is a packed {reader.name} file", str(path), "unpack it first")
         contents = reader.open(path, settings)

@@ -30,6 +30,16 @@ _READERS: Final = (
 )
 
 
+_FOREIGN: Final = {
+    b"CDF\x01": "a netCDF 3 file",
+    b"CDF\x02": "a netCDF 3 file",
+    b"CDF\x05": "a netCDF 3 file",
+    b"PAR1": "a Parquet file",
+    b"ARROW1": "an Arrow file",
+    b"SQLite format 3": "a database",
+    bytes.fromhex("d0cf11e0a1b11ae1"): "an office document of the old kind",
+}
+"""First bytes of formats that are not read (their published descriptions)."""
 _LAST: Final = 2
 """So many of the own readers take what no other does: they are asked after those of other packages."""
 
@@ -69,8 +79,18 @@ def _loaded(point: EntryPoint) -> Reader:
     return made
 
 
-def find_reader(head: bytes, path: Path, wanted: str | None) -> Reader:
+def find_reader(head: bytes, path: Path, wanted: str | None, is_described: bool = False) -> Reader:
     """Return the reader for a file: the wanted one, else the first that recognises the content.
+
+    Parameters
+    ----------
+    head : bytes
+        The first bytes.
+    path : Path
+    wanted : str, optional
+        Name of a reader.
+    is_described : bool
+        Whether the recipe says how numbers without a header stand in a file that no reader recognises.
 
     Raises
     ------
@@ -85,16 +105,39 @@ def find_reader(head: bytes, path: Path, wanted: str | None) -> Reader:
             f"there is no reader '{wanted}'", "intake.reader", nearest(wanted, [reader.name for reader in readers()])
         )
     for reader in readers():
-        if reader.sniff(head, path):
+        if reader.sniff(head, path) and not (is_described and reader.name == "text" and _is_binary(head)):
             return reader
-    raise InputError(
-        _not_recognised(head, path),
-        str(path),
-        "see the help page Files for what is read, or set intake.reader",
-    )
+    if is_described:
+        return next(reader for reader in readers() if reader.name == "binary")
+    raise InputError(_not_recognised(head, path), str(path), _remedy(head))
+
+
+def _is_binary(head: bytes) -> bool:
+    """Return whether bytes with zeros among them have no mark that makes them a text."""
+    return b"\x00" in head and not head.startswith((b"\xff\xfe", b"\xfe\xff"))
+
+
+def _foreign(head: bytes) -> str:
+    """Return what a file of a well-known format is that is not read; empty where it is of none."""
+    return next((words for mark, words in _FOREIGN.items() if head.startswith(mark)), "")
+
+
+def _remedy(head: bytes) -> str:
+    if head.startswith(b"CDF"):
+        return "save it as netCDF 4, which is HDF5, or as text"
+    if _foreign(head):
+        return "save the table as text (CSV), NPZ or HDF5"
+    if _is_binary(head):
+        return (
+            "for numbers without a header give intake.binary_type (for example int16), intake.binary_channels and, if "
+            "they apply, binary_order and binary_header_byte; the help page Files says what else is read"
+        )
+    return "see the help page Files for what is read, or set intake.reader"
 
 
 def _not_recognised(head: bytes, path: Path) -> str:
+    if _foreign(head):
+        return f"is {_foreign(head)}, which is not read"
     if path.suffix.lower() in (".h5", ".hdf5", ".hdf", ".he5"):
         return "is named like HDF5 but is not an HDF5 file, nor any other known format"
     if 0 < head.count(0) < 0.01 * len(head) and sum(byte > 127 for byte in head[:4096]) < 0.1 * len(head[:4096]):

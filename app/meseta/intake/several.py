@@ -96,7 +96,7 @@ def _at_hand(files: Sequence[FoundFile], settings: IntakeSettings) -> dict[int, 
             data = _small_file(file.path)
             if not data or unpack.packing(data[:8]):
                 continue
-            reader = find_reader(data[:HEAD_BYTE], file.path, settings.reader)
+            reader = find_reader(data[:HEAD_BYTE], file.path, settings.reader, settings.binary_type is not None)
         except (MesetaError, OSError, MemoryError):
             continue  # opened on its own, it says what is wrong
         if hasattr(reader, "open_alike"):
