@@ -12,7 +12,7 @@ from meseta.intake.alignment import Alignment
 from meseta.recipe.plateaus import PlateauSettings
 from meseta.segmentation import finder_kernels as kernels
 from meseta.segmentation.detectors import derivative_rows, level_rows
-from meseta.segmentation.noise import phase_bounds, runs_backward, trusted_samples
+from meseta.segmentation.ranges import phase_bounds, runs_backward, trusted_samples
 from meseta.segmentation.results import NoiseModel, PlateauTable
 from meseta.segmentation.scale import scale_of
 from meseta.traces import Quality, TraceSet

@@ -11,7 +11,8 @@ from meseta.intake.alignment import Alignment
 from meseta.quantities import barrier_from_decay
 from meseta.recipe.histogram import LengthSettings
 from meseta.segmentation.measure_kernels import measure
-from meseta.segmentation.noise import CLEAR_OF_CONTACT_G0, Floats, Integers, phase_bounds, runs_backward
+from meseta.segmentation.noise import CLEAR_OF_CONTACT_G0, Floats, Integers
+from meseta.segmentation.ranges import phase_bounds, runs_backward
 from meseta.segmentation.results import NoiseModel, TraceMeasures
 from meseta.traces import Quality, TraceSet
 

@@ -16,10 +16,11 @@ import numpy.typing as npt
 
 from meseta.recipe.noise import NoiseSettings
 from meseta.segmentation import noise_kernels as kernels
+from meseta.segmentation.ranges import phase_bounds, runs_backward, trusted_samples
 from meseta.segmentation.results import NoiseModel
-from meseta.traces import PHASE_KINDS, Quality, TraceSet
+from meseta.traces import TraceSet
 
-__all__ = ["NoiseStatistics", "noise_block", "noise_model", "phase_bounds", "runs_backward", "trusted_samples"]
+__all__ = ["NoiseStatistics", "noise_block", "noise_model"]
 
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.int64]
@@ -66,25 +67,6 @@ class NoiseStatistics:
     slope_level: Integers
     slope: Floats
     slope_samples: Integers
-
-
-def phase_bounds(traces: TraceSet, phases: Sequence[str]) -> tuple[Integers, Integers]:
-    """Return the sample range of each trace's phase, counted in the whole block."""
-    start, stop = traces.phase_range(phases)
-    return traces.offsets[:-1] + start, traces.offsets[:-1] + stop
-
-
-def runs_backward(phases: Sequence[str]) -> bool:
-    """Return whether the contact closes in these phases, so that traces are read from their end."""
-    return all(phase in ("push", "approach") for phase in phases) and set(phases) <= set(PHASE_KINDS)
-
-
-def trusted_samples(traces: TraceSet) -> npt.NDArray[np.bool_]:
-    """Return which samples of the block are trusted; an empty array where all are."""
-    if traces.quality is None:
-        return np.empty(0, np.bool_)
-    bad = Quality.SLEWING | Quality.SEAM | Quality.UNTRUSTED | Quality.SATURATED
-    return (traces.quality.read(0, traces.samples) & bad) == 0
 
 
 def noise_block(traces: TraceSet, settings: NoiseSettings, phases: Sequence[str]) -> NoiseStatistics:

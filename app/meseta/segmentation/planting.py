@@ -15,7 +15,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.ndimage import uniform_filter1d
 
-from meseta.segmentation.noise import phase_bounds, runs_backward
+from meseta.segmentation.ranges import phase_bounds, runs_backward
 from meseta.segmentation.results import NoiseModel
 from meseta.traces import Channel, TraceSet
 
