@@ -416,7 +416,8 @@ class ComparisonPanel(SpinePanel):
             self._arrange(0)
             self._write(None)
         elif self.job.error is not None:
-            self.say_empty(f"{self.job.error.what}. {self.job.error.remedy}")
+            parts = (self.job.error.what, self.job.error.remedy)
+            self.say_empty(" ".join(f"{part[:1].upper()}{part[1:]}." for part in parts if part))
             self._arrange(0)
             self._write(None)
         elif found is None:

@@ -76,9 +76,14 @@ class DisplacementPanel(DrivePanel):
         self._whole = self.session.result("displacement_histogram")
         self._part = None
         self._ask()
-        unit = self.session.drive_unit
-        self.bottom.say("displacement (nm)" if unit == "nm" else f"drive ({unit})")
+        self._name_axis()
         self._say()
+
+    def _name_axis(self) -> None:
+        """Say on the axis what displacement is counted from where that is not its zero."""
+        unit, frame = self.session.drive_unit, self.session.document.recipe.displacement_histogram
+        since = {"plateau_start": " from plateau start", "plateau_end": " from plateau end"}.get(frame.aligned_at, "")
+        self.bottom.say(f"{'displacement' if unit == 'nm' else 'drive'}{since} ({unit})")
 
     def _result_changed(self, name: str) -> None:
         if name == "displacement_histogram":
@@ -96,6 +101,7 @@ class DisplacementPanel(DrivePanel):
         if before.figure != after.figure or before.histogram.axis != after.histogram.axis:
             self._draw()
         if change.recipe:
+            self._name_axis()
             self._say()
 
     # -- drawing -----------------------------------------------------------------------------------------------------
