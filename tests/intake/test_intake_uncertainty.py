@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import h5py
 import numpy as np
 import pytest
 from intake_files import G0_SIEMENS, recipe, record, volts
@@ -23,7 +24,10 @@ def test_stated_errors_become_one_result_that_moves_a_position(tmp_path):
         "offset_error_ampere": 1e-9,
         "displacement_relative_error": 0.05,
     }
-    found = intake.calibration_errors(intake.read(path, recipe(**STATED, **errors)))
+    made = recipe(**STATED, **errors)
+    traces = intake.read(path, made)
+    assert not set(errors) & set(traces.notes["calibration"])
+    found = intake.calibration_errors(traces, made.calibration)
     assert (found.gain_relative, found.bias_relative, found.displacement_relative) == (0.01, 0.005, 0.05)
     assert found.offset_g0 == pytest.approx(1.290640e-4, rel=1e-6)
     assert found.unknown == ()
@@ -35,11 +39,24 @@ def test_stated_errors_become_one_result_that_moves_a_position(tmp_path):
 
 def test_what_is_not_known_is_said_and_moves_nothing(tmp_path):
     path = record(tmp_path, amplifier=volts(np.ones(20)))
-    found = intake.calibration_errors(intake.read(path, recipe(**STATED, bias_relative_error=0.01)))
+    made = recipe(**STATED, bias_relative_error=0.01)
+    found = intake.calibration_errors(intake.read(path, made), made.calibration)
     assert found.unknown == ("gain_relative", "offset_g0", "series_resistance_ohm", "displacement_relative")
     assert found.of_positions() == {
         "gain_relative": 0.0, "bias_relative": 0.01, "offset_g0": 0.0, "series_resistance_ohm": 0.0
     }  # fmt: skip
+
+
+def test_errors_that_a_recording_states_hold_where_the_recipe_says_nothing(tmp_path):
+    """1 nA behind a divider by 10 of 1 V is the 1.290640e-4 G0 of 1 nA at 100 mV."""
+    path = record(tmp_path, amplifier=volts(np.ones(20)))
+    with h5py.File(path, "a") as file:
+        file.attrs.update(gain_relative_error=0.02, bias_relative_error=0.03, offset_error_ampere=1e-9)
+    made = recipe(gain_volt_per_ampere=1e6, bias_volt=1.0, bias_divided_by=10.0, bias_relative_error=0.005)
+    found = intake.calibration_errors(intake.read(path, made), made.calibration)
+    assert (found.gain_relative, found.bias_relative) == (0.02, 0.005)
+    assert found.offset_g0 == pytest.approx(1.290640e-4, rel=1e-6)
+    assert found.grounds == {"gain_relative": "recording", "bias_relative": "recipe", "offset_g0": "recording"}
 
 
 @pytest.mark.parametrize("used", [False, True])
@@ -56,7 +73,7 @@ def test_two_gains_that_disagree_are_an_error_of_the_gain(tmp_path, used):
     )  # fmt: skip
     traces = intake.read(path, made)
     error = traces.notes["calibration"]["overlap_ratio_error"]["value"]
-    found = intake.calibration_errors(traces)
+    found = intake.calibration_errors(traces, made.calibration)
     expected = error / 1.06 if used else np.hypot(0.06 / np.sqrt(12), error)
     assert found.gain_relative == pytest.approx(expected, rel=0.05)
     assert found.grounds["gain_relative"] == "overlap of the two gains"
@@ -84,7 +101,7 @@ def test_the_error_of_the_offset_is_a_conductance(tmp_path):
     rows = np.tile(np.concatenate([np.full(100, 0.5), np.zeros(300)]), (60, 1)) + 1e-3 * rng.normal(size=(60, 400))
     path = record(tmp_path, amplifier=volts(rows))
     made = recipe(**STATED, offset_from_floor=True).with_values("intake", layout="rows")
-    found = intake.calibration_errors(intake.read(path, made))
+    found = intake.calibration_errors(intake.read(path, made), made.calibration)
     # tails of 40 samples of 1 mV at 1e6 V/A: medians scatter by 1.25/sqrt(40) nA, their median by 1.25/sqrt(60) of that
     expected = 1e-9 * (np.pi / 2) / np.sqrt(40 * 60) / (0.1 * G0_SIEMENS)
     assert found.offset_g0 == pytest.approx(expected, rel=0.35)

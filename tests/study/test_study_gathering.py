@@ -2,6 +2,7 @@
 
 import threading
 
+import h5py
 import numpy as np
 import pytest
 from study_samples import assert_same_traces, write_recording
@@ -87,6 +88,36 @@ def test_a_corrected_gain_keeps_every_decision(tmp_path, night, recipe):
     _same_but_notes(before, study.traces())
     study.save()
     study.close()
+
+
+@pytest.mark.parametrize("recipe", [Recipe(), LINKED], ids=["copied", "linked"])
+def test_a_changed_error_of_a_constant_moves_the_interval_and_no_trace(tmp_path, night, recipe):
+    """3 % of gain is 3 % of every position; the recordings are away, so that nothing can have been made anew."""
+    recipe = recipe.with_values("peaks", peaks=[{"position_g0": 1.0, "width": 0.3}], axis="logarithmic")
+    recipe = recipe.with_settings(["resampling.replicates=40", "histogram.region=phase"])
+    study = Study.create(tmp_path / "s.h5", night, recipe)
+    night.rename(tmp_path / "elsewhere")
+    before, fit = study.traces(), study.analysis().result("peaks")
+    study.change(recipe=recipe.with_settings(["calibration.gain_relative_error=0.03"]))
+    after, doubted = study.traces(), study.analysis().result("peaks")
+    assert (after.key, after.notes) == (before.key, before.notes) and after is before
+    assert len(fit.table.position_g0) > 0 and np.all(fit.table.position_calibration_g0 == 0)
+    np.testing.assert_allclose(doubted.table.position_calibration_g0, 0.03 * doubted.table.position_g0)
+    assert np.all(doubted.table.position_systematic_g0 > fit.table.position_systematic_g0)
+    study.save()
+    study.close()
+    with Study.open(tmp_path / "s.h5") as again:
+        assert again.traces().key == before.key
+
+
+def test_a_study_in_which_errors_still_counted_opens_without_its_recordings(tmp_path, night):
+    recipe = LINKED.with_settings(["calibration.gain_relative_error=0.03"])
+    Study.create(tmp_path / "s.h5", night, recipe).close()
+    with h5py.File(tmp_path / "s.h5", "a") as file:
+        file["traces"].attrs["recipe_key"] = recipe.key(("intake", "calibration", "cutting"), with_errors=True)
+    night.rename(tmp_path / "elsewhere")
+    with Study.open(tmp_path / "s.h5") as study:
+        assert len(study.traces()) == 12
 
 
 def test_decisions_without_a_trace_are_listed_never_moved(tmp_path, night):

@@ -18,7 +18,6 @@ from meseta.histograms import CountMatrix
 from meseta.histograms.resampling import replicate_counts
 from meseta.intake import Alignment
 from meseta.peaks import CalibrationErrors, OtherCounts
-from meseta.quantities import G0_SIEMENS
 from meseta.traces import TraceSet
 from meseta.work import Work
 
@@ -194,19 +193,5 @@ def _other_sensitivities(
 
 
 def calibration_errors(calibration: Any, traces: TraceSet) -> CalibrationErrors:
-    """Return the standard errors of the calibration: as stated, else as the recording shows them, else 0.
-
-    An error of the offset that is stated in ampere needs a known bias.
-    """
-    shown = intake.calibration_errors(traces)
-    bias = np.abs(np.asarray(traces.table.get("bias_volt", []), float))
-    bias = bias[np.isfinite(bias) & (bias > 0)]
-    volt = float(np.median(bias)) if len(bias) else abs(calibration.bias_volt or 0.0)
-    ampere = calibration.offset_error_ampere or 0.0
-    of_positions = shown.of_positions()
-    return CalibrationErrors(
-        calibration.gain_relative_error or of_positions["gain_relative"],
-        calibration.bias_relative_error or of_positions["bias_relative"],
-        ampere / (volt * G0_SIEMENS) if ampere and volt else of_positions["offset_g0"],
-        calibration.series_resistance_error_ohm or of_positions["series_resistance_ohm"],
-    )
+    """Return the standard errors of the calibration: as stated, else as the recording shows them, else 0."""
+    return CalibrationErrors(**intake.calibration_errors(traces, calibration).of_positions())

@@ -16,6 +16,7 @@ from meseta.analysis.choices import calibration_errors, other_counts
 from meseta.histograms import CountMatrix, DisplacementHistogram
 from meseta.intake import Alignment
 from meseta.recipe import Recipe, Section
+from meseta.recipe.calibration import CalibrationSettings
 from meseta.recipe.selection import SelectionSettings
 from meseta.segmentation import NoiseModel, PlateauTable, TraceMeasures
 from meseta.selection import Decisions, Selection
@@ -491,10 +492,7 @@ STEPS: Mapping[str, Step] = {
                 "peaks",
                 _PHASE,
                 "calibration.bias_volt",
-                "calibration.gain_relative_error",
-                "calibration.bias_relative_error",
-                "calibration.offset_error_ampere",
-                "calibration.series_resistance_error_ohm",
+                *(f"calibration.{name}" for name in CalibrationSettings.errors),
             ),
             _peaks,
         ),

@@ -208,7 +208,7 @@ def subtract_pickup(values: Floats, first: int, cycles_a_sample: float, at: Inte
     multiple of :data:`ANEW`, so that a result does not depend on where a block begins.
     """
     harmonics, last = parts.shape[1] // 2, len(at) - 1
-    place = max(np.searchsorted(at, first, side="right") - 1, 0)
+    place = max(int(np.searchsorted(at, first, side="right")) - 1, 0)
     row = np.empty(2 * harmonics)
     step = 2.0 * math.pi * cycles_a_sample
     turn_cosine, turn_sine = math.cos(step), math.sin(step)

@@ -22,7 +22,6 @@ from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.spread import Value
 from meseta.intake.switching import Switching
 from meseta.intake.two_gain import overlap_doubts, overlap_of
-from meseta.intake.uncertainty import ERROR_SETTINGS
 from meseta.intake.units import parse_unit
 from meseta.recipe.calibration import CalibrationSettings
 
@@ -87,6 +86,9 @@ class _Finder:
         given = getattr(self.settings, name, None)
         if given is not None and not (name == "bias_offset_volt" and given == 0.0):
             return float(given), "recipe"
+        return self._recorded(name)
+
+    def _recorded(self, name: str) -> tuple[Value, str] | None:
         column = self._recording.table.get(name)
         if column is not None and column.dtype.kind in "fiu" and np.isfinite(column).all():
             values = np.asarray(column, np.float64)
@@ -185,8 +187,8 @@ class _Finder:
         return {name: value for name, value in found.items() if name not in from_recipe or value[1] == "recipe"}
 
     def _errors(self) -> dict[str, tuple[Value, str]]:
-        """Return the stated errors, which change no number but go with the constants."""
-        return {name: value for name in ERROR_SETTINGS if (value := self.find(name)) is not None}
+        """Return the errors that the recording states; those of the recipe change no trace and are not part of it."""
+        return {name: value for name in self.settings.errors if (value := self._recorded(name)) is not None}
 
     def _with_amplifier(self, made: Calibration) -> Calibration:
         """Return the calibration with what the recipe says of curve, polarity, switches, slew limit and mains."""

@@ -8,23 +8,15 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields
-from typing import Any, Final
+from typing import Any
 
 import numpy as np
 
 from meseta.quantities import G0_SIEMENS
+from meseta.recipe.calibration import CalibrationSettings
 from meseta.traces import TraceSet
 
-__all__ = ["ERROR_SETTINGS", "CalibrationErrors", "calibration_errors"]
-
-ERROR_SETTINGS: Final = (
-    "gain_relative_error",
-    "bias_relative_error",
-    "offset_error_ampere",
-    "series_resistance_error_ohm",
-    "displacement_relative_error",
-)
-"""Settings of the recipe that state an error."""
+__all__ = ["CalibrationErrors", "calibration_errors"]
 
 
 @dataclass(frozen=True)
@@ -64,16 +56,22 @@ class CalibrationErrors:
         return {name: float(np.nan_to_num(getattr(self, name))) for name in names}
 
 
-def calibration_errors(traces: TraceSet) -> CalibrationErrors:
-    """Return how well the calibration of these traces is known: as the recipe states, else as the recording shows.
+def calibration_errors(traces: TraceSet, settings: CalibrationSettings) -> CalibrationErrors:
+    """Return how well the calibration of these traces is known: as the recipe states, else as the recording does.
 
     The recording shows an error of the gain where two amplifiers overlap, and one of the offset where it is estimated
     from the floor.  The gain's is that of the fitted ratio where it is used.  Where it is not, either gain may be the
     right one, or any between: the standard deviation of that is their difference over the root of 12 (JCGM 100:2008,
     4.3.7).
+
+    Parameters
+    ----------
+    traces : TraceSet
+        Their notes hold what the recordings state and show.
+    settings : CalibrationSettings
+        Errors that are set here win; an error of the offset in ampere needs a known bias.
     """
-    notes = traces.notes
-    constants = notes.get("calibration", {})
+    constants = traces.notes.get("calibration", {})
     found: dict[str, tuple[float, str]] = {}
     for name, setting in (
         ("gain_relative", "gain_relative_error"),
@@ -81,13 +79,26 @@ def calibration_errors(traces: TraceSet) -> CalibrationErrors:
         ("series_resistance_ohm", "series_resistance_error_ohm"),
         ("displacement_relative", "displacement_relative_error"),
     ):
-        if setting in constants:
-            found[name] = (float(constants[setting]["value"]), str(constants[setting]["from"]))
+        stated = _stated(setting, settings, constants)
+        if stated is not None:
+            found[name] = stated
     _add_overlap(found, constants)
-    _add_offset(found, constants, notes.get("floor_offset", {}), _bias(traces))
+    offset = _stated("offset_error_ampere", settings, constants)
+    _add_offset(found, offset, traces.notes.get("floor_offset", {}), _bias(traces, settings, constants))
     return CalibrationErrors(
         **{name: value for name, (value, _) in found.items()}, grounds={name: why for name, (_, why) in found.items()}
     )
+
+
+def _stated(name: str, settings: CalibrationSettings, constants: Mapping[str, Any]) -> tuple[float, str] | None:
+    """Return (error, where it was taken from): of the recipe, else of the recording, the largest of its pieces."""
+    given = getattr(settings, name)
+    if given is not None:
+        return float(given), "recipe"
+    noted = constants.get(name)
+    if noted is None or noted["from"] == "recipe":  # older studies noted what their recipe said then
+        return None
+    return float(np.max(noted["value"])), str(noted["from"])
 
 
 def _add_overlap(found: dict[str, tuple[float, str]], constants: Mapping[str, Any]) -> None:
@@ -105,23 +116,33 @@ def _add_overlap(found: dict[str, tuple[float, str]], constants: Mapping[str, An
 
 
 def _add_offset(
-    found: dict[str, tuple[float, str]], constants: Mapping[str, Any], floor: Mapping[str, Any], bias_volt: float
+    found: dict[str, tuple[float, str]],
+    stated: tuple[float, str] | None,
+    floor: Mapping[str, Any],
+    bias_volt: float,
 ) -> None:
     """Add the error of the offset: as stated in ampere, else of the estimate from the floor."""
-    if "offset_error_ampere" in constants:
+    if stated is not None:
         if bias_volt:
-            ampere = float(constants["offset_error_ampere"]["value"])
-            found["offset_g0"] = (ampere / (abs(bias_volt) * G0_SIEMENS), "recipe")
+            found["offset_g0"] = (stated[0] / (bias_volt * G0_SIEMENS), stated[1])
     elif floor.get("removed") and floor.get("offset_error") is not None:
         error = float(floor["offset_error"])
         if floor.get("unit") == "G0":
             found["offset_g0"] = (error, "offset from the floor")
         elif bias_volt:
-            found["offset_g0"] = (error / abs(bias_volt), "offset from the floor")
+            found["offset_g0"] = (error / bias_volt, "offset from the floor")
 
 
-def _bias(traces: TraceSet) -> float:
-    """Return the median bias of the traces; 0 where none is known."""
-    bias = np.abs(np.asarray(traces.table["bias_volt"], np.float64)) if "bias_volt" in traces.table else np.empty(0)
-    bias = bias[np.isfinite(bias)]
-    return float(np.median(bias)) if len(bias) else 0.0
+def _bias(traces: TraceSet, settings: CalibrationSettings, constants: Mapping[str, Any]) -> float:
+    """Return the median size of the bias at the junction, behind a divider; 0 where none is known."""
+    stated = np.asarray(traces.table.get("bias_volt", []), np.float64)
+    stated = stated[np.isfinite(stated)]
+    if len(stated) == 0:
+        stated = np.array([settings.bias_volt or 0.0])
+
+    def constant(name: str, unknown: float) -> float:
+        return float(np.mean(constants[name]["value"])) if name in constants else unknown
+
+    there = np.abs(stated / constant("bias_divided_by", 1.0) - constant("bias_offset_volt", 0.0))
+    there = there[there > 0]
+    return float(np.median(there)) if len(there) else 0.0

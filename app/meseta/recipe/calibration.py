@@ -19,6 +19,13 @@ class CalibrationSettings(Section):
     """Volts to conductance in G0 and to displacement in nm.  A setting given here wins over the recording's own."""
 
     ordered = (("crossover_back_share", "crossover_share"),)
+    errors = (
+        "gain_relative_error",
+        "bias_relative_error",
+        "offset_error_ampere",
+        "series_resistance_error_ohm",
+        "displacement_relative_error",
+    )
 
     bias_volt: float | None = setting(
         None, "Bias", "Bias over the junction and what is in series with it.", unit="V", unset=_RECORDING

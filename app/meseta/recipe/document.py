@@ -165,17 +165,19 @@ class Recipe(BaseModel):
         for name in type(self).model_fields:
             yield name, getattr(self, name)
 
-    def key(self, names: Iterable[str]) -> str:
+    def key(self, names: Iterable[str], *, with_errors: bool = False) -> str:
         """Return a hash of the named settings (``section`` or ``section.field``).
 
         Only what differs from the defaults counts, so that a setting added by a later version leaves the keys of
-        earlier studies alone.
+        earlier studies alone.  Of a whole section, settings that only say how well others are known do not count,
+        unless ``with_errors``.
         """
         chosen = {}
         for name in names:
             section, _, field = name.partition(".")
             part = getattr(self, section)
-            changed = part.model_dump(mode="json", exclude_defaults=True)
+            beside = () if field or with_errors else part.errors
+            changed = part.model_dump(mode="json", exclude_defaults=True, exclude=set(beside))
             if not field:
                 chosen[name] = changed
             elif field in changed:

@@ -99,6 +99,8 @@ class Section(BaseModel):
 
     ordered: ClassVar[tuple[tuple[str, str], ...]] = ()
     """Pairs of settings of which the first, where both are set, must be less than the second."""
+    errors: ClassVar[tuple[str, ...]] = ()
+    """Settings that say how well others are known: they change nothing that is made by this section."""
 
     @model_validator(mode="after")
     def _ends_in_order(self) -> Self:

@@ -16,6 +16,7 @@ from meseta.study.files import looking, making
 from meseta.study.growing import TraceWriter
 from meseta.study.history import History
 from meseta.study.parts import (
+    FROM_RAW,
     read_decisions,
     read_history,
     read_recipe,
@@ -115,6 +116,8 @@ def load(path: Path, blocks: BlockFile) -> Content:
         unknown = tuple(
             name for name in part("the table of contents", lambda: names(root), list[str]()) if name not in _KNOWN
         )
+    if recipe_key == recipe.key(FROM_RAW, with_errors=True):
+        recipe_key = recipe.key(FROM_RAW)  # written when stated errors still counted among what makes traces
     return Content(
         *(identity, State(recipe, decisions), history, versions, sources, kept, traces, recipe_key),
         *(tuple(damage), unknown),
