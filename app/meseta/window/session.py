@@ -214,8 +214,8 @@ class Session(QObject):
         """Sections of the recipe by which the open traces are not yet made."""
         if self.derive is None or self.analysis is None:
             return ()
-        now = self.document.recipe
-        return tuple(name for name in FROM_RAW if getattr(now, name) != getattr(self.made_by, name))
+        now, then = self.document.recipe, self.made_by
+        return tuple(name for name in FROM_RAW if now.key((name,)) != then.key((name,)))
 
     @property
     def drive_unit(self) -> str:
