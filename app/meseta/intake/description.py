@@ -12,7 +12,7 @@ import numpy as np
 from meseta.errors import InputError
 from meseta.intake.assembly import Part, plan_of, prepared
 from meseta.intake.checkup import Finding, check_up
-from meseta.intake.context import batch_context
+from meseta.intake.context import batch_context, recordings_among
 from meseta.intake.files import find_files
 from meseta.intake.kept_layouts import fit_of, kept_layout
 from meseta.intake.opening import open_recording
@@ -161,7 +161,7 @@ def describe(
         Where no file can be understood at all.
     """
     recipe, work = recipe or Recipe(), work or Work()
-    files, _ = find_files(paths)
+    files = recordings_among(find_files(paths)[0], recipe.intake)
     context = batch_context(recipe.intake, [file.path for file in files])
     described: list[Description] = []
     bad: list[InputError] = []

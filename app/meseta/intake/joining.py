@@ -163,11 +163,19 @@ def _columns(part: Part, recipe: Recipe) -> dict[str, npt.NDArray[Any]]:
         "bias_volt": _bias(part, pieces),
     }
     for name, value in recording.metadata.items():
-        if name not in CONSTANTS and name not in found and not (isinstance(value, str) and len(value) > LONGEST_TEXT):
+        if (
+            name not in found
+            and name != "sampling_hertz"
+            and not (isinstance(value, str) and len(value) > LONGEST_TEXT)
+        ):
             found[_column_name(name)] = np.full(part.traces, value)
     for name, column in recording.table.items():
         if name not in ("bias_volt", "direction", "time_second", BETWEEN_TRACES) and len(column) == recording.pieces:
             found[_column_name(name)] = column[pieces]
+    for name in found.keys() & CONSTANTS.keys() - {"bias_volt", "sample_interval_second"}:
+        used = _used(part, recipe, name)
+        if used is not None:
+            found[name] = np.broadcast_to(np.asarray(used, np.float64), (recording.pieces,))[pieces]
     for name in ("specimen", "session"):
         given = getattr(recipe.intake, name)
         if given is not None:
@@ -175,6 +183,12 @@ def _columns(part: Part, recipe: Recipe) -> dict[str, npt.NDArray[Any]]:
         elif name in found:
             found[name] = found[name].astype(np.str_)
     return found
+
+
+def _used(part: Part, recipe: Recipe, name: str) -> Any:
+    """Return the constant that was used, where it may be another than the recording states; None where it was not."""
+    known = part.calibration.constants.get(name)
+    return getattr(recipe.calibration, name, None) if known is None else known[0]
 
 
 def _column_name(name: str) -> str:

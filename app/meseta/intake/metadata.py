@@ -17,7 +17,7 @@ from meseta.errors import InputError
 from meseta.intake.roles import split_unit
 from meseta.intake.units import is_unit, parse_unit, unit_factor
 
-__all__ = ["CONSTANTS", "canonical", "canonical_entry", "plain_value"]
+__all__ = ["CONSTANTS", "as_written", "canonical", "canonical_entry", "is_number_of", "plain_value"]
 
 Plain = str | int | float | bool
 
@@ -78,9 +78,16 @@ _WORDS: Final = {
     "specimen": "specimen device chip tip junction_id device_id",
     "session": "session measuring_session run_id",
 }
+_TEXTS: Final = frozenset(
+    {"molecule", "solvent", "electrode", "electrodes", "sample", "substrate", "operator", "date", "comment", "batch"}
+)
+"""Further entries that stay as they are written, also where they look like numbers."""
 _CANONICAL: Final = {alias: name for name, (_, aliases) in CONSTANTS.items() for alias in (name, *aliases.split())} | {
     alias: name for name, aliases in _WORDS.items() for alias in aliases.split()
 }
+_NUMBER: Final = r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?"
+_THOUSANDS: Final = r"[-+]?[1-9]\d{0,2},\d{3}(?![\d.,eE])"
+"""A number whose comma may be a decimal one or stand between thousands: 10,000."""
 _DIRECTIONS: Final = {
     "opening": "opening", "open": "opening", "pull": "opening", "break": "opening", "breaking": "opening",
     "retract": "opening", "stretching": "opening", "closing": "closing", "close": "closing", "push": "closing",
@@ -102,6 +109,37 @@ def plain_value(value: Any) -> Plain | None:
     if isinstance(item, np.generic):
         item = item.item()
     return item if isinstance(item, str | int | float | bool) else None
+
+
+def as_written(name: str, text: str, *, comma: bool = False) -> Plain:
+    """Return what stands as text in a name, a sidecar or a table: a number where it is one, else the text itself.
+
+    Specimens, sessions, molecules and the like stay as they are written ("1.10" is not "1.1"), as do numbers with zeros
+    before them.
+
+    Parameters
+    ----------
+    name : str
+        What the entry is called.
+    text : str
+    comma : bool
+        Whether a single comma in a number is a decimal one.
+    """
+    word = _key(name)
+    if word in _TEXTS or _CANONICAL.get(word) in _WORDS:
+        return text
+    plain = re.sub(r"(?<=\d)p(?=\d)", ".", text)
+    plain = plain.replace(",", ".") if comma and plain.count(",") == 1 else plain
+    if not re.fullmatch(r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?", plain, re.ASCII) or re.match(r"[-+]?0\d", plain):
+        return text
+    if re.fullmatch(r"[-+]?\d{1,18}", plain):
+        return int(plain)
+    return float(plain) if math.isfinite(float(plain)) else text
+
+
+def is_number_of(name: str) -> bool:
+    """Return whether an entry of this name is a number that calibration knows."""
+    return _constant_of(name)[0] in CONSTANTS
 
 
 def _key(name: str) -> str:
@@ -156,7 +194,7 @@ def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plai
     if number is None:
         if constant in ("gain_volt_per_ampere", "offset_volt", "nm_per_second"):
             return name, value, ""
-        raise InputError(f"'{value}' is not a number with a known unit", f"{where} {name}".strip(), "correct the file")
+        raise _no_number(value, f"{where}, '{name}'" if where else name)
     unit = stated or unit
     wanted = CONSTANTS[constant][0]
     if constant == "gain_volt_per_ampere" and unit and parse_unit(unit, where).dimension in ("A/V", "ohm"):
@@ -174,6 +212,22 @@ def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plai
         meant = f", for example 1e{number:g} if it is the power of ten" if number in range(2, 16) else ""
         return name, value, f"{text}; give calibration.{constant}{meant}"
     return constant, float(number), f"the unit of '{name}' is not stated: {number:g} is taken as {wanted}"
+
+
+def _no_number(value: Plain, where: str) -> InputError:
+    """Return the error for a constant whose value cannot be understood."""
+    text = str(value)
+    match = re.fullmatch(rf"\s*{_NUMBER}\s*(\S.*?)\s*", text)
+    if re.fullmatch(rf"\s*{_THOUSANDS}.*", text):
+        plain = text.replace(",", "")
+        remedy = f"write {plain.strip()}, or a point where a decimal comma is meant"
+        return InputError(f"'{text}' may have a decimal comma or one between thousands", where, remedy)
+    if match and not is_unit(match[1]):
+        try:
+            parse_unit(match[1], where)
+        except InputError as error:
+            return error
+    return InputError(f"'{text}' is not a number with a known unit", where, "correct it where it is written")
 
 
 def _exact(number: float) -> float:
@@ -195,8 +249,10 @@ def _number_and_unit(value: Plain) -> tuple[float | None, str]:
         return None, ""
     if isinstance(value, int | float):
         return float(value), ""
+    if re.fullmatch(rf"\s*{_THOUSANDS}(?!\d).*", value):
+        return None, ""
     text = re.sub(r"^\s*10\s*(?:\^|\*\*)\s*([-+]?\d{1,2})\b", r"1e\1", value.replace(",", "."))
-    match = re.fullmatch(r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(\S.*)?", text)
+    match = re.fullmatch(rf"\s*({_NUMBER})\s*(\S.*)?", text)
     if match is None or (match[2] and not is_unit(match[2].strip())):
         return None, ""
     return float(match[1]), (match[2] or "").strip()
@@ -237,6 +293,8 @@ def canonical(
         if value is None or value == "":
             continue
         key, converted, doubt = canonical_entry(str(name), value, where)
+        if key in CONSTANTS and found.get(key, converted) != converted:
+            doubts.append(f"{key} is stated as {found[key]:g} and as {converted:g}: the latter is used")
         found[key] = converted
         if doubt:
             doubts.append(doubt)

@@ -33,10 +33,13 @@ class OpenContext:
         The metadata table by file name.
     sidecars : mapping, optional
         Names of all files that may be sidecars, by folder; a folder that is not in it is looked into file by file.
+    same_names : frozenset of str, optional
+        Names that files of several folders have.
     """
 
     table: Mapping[str, Mapping[str, str | int | float | bool]] = field(default_factory=dict)
     sidecars: Mapping[Path, frozenset[str]] = field(default_factory=dict)
+    same_names: frozenset[str] = frozenset()
 
 
 def open_recording(
@@ -134,10 +137,16 @@ def recording_of(
 
     path, name, size = file
     recording = _recording(contents, Source(sha256, name or printable(path.name), size, reader, contents.layout))
-    found, doubts = beside(path, recording.source.name, settings, context)
-    if not found and not doubts:
+    found, doubts = beside(path, recording.source.name, settings, context, contents.metadata)
+    if not doubts and found == contents.metadata:
         return recording
-    return replace(recording, metadata={**contents.metadata, **found}, doubts=(*contents.doubts, *doubts))
+    stated = [key for key in contents.table if key in found and found[key] != contents.metadata.get(key)]
+    if stated:  # what is said of the whole file later wins over its traces, too
+        recording = replace(
+            recording, table={key: one for key, one in contents.table.items() if key not in stated}, like=None
+        )
+        doubts += [f"{key} is stated for each trace, and for the file beside it: the latter is used" for key in stated]
+    return replace(recording, metadata=found, doubts=(*contents.doubts, *doubts))
 
 
 def _recording(contents: Contents, source: Source) -> Recording:

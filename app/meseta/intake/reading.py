@@ -11,7 +11,7 @@ from typing import Any
 from meseta.errors import InputError, MesetaError
 from meseta.intake.alike import Memory
 from meseta.intake.assembly import Part, plan_of
-from meseta.intake.context import batch_context
+from meseta.intake.context import batch_context, recordings_among, rows_without_file
 from meseta.intake.files import FoundFile, find_files
 from meseta.intake.floor import remove_floor_offset
 from meseta.intake.joining import joined
@@ -62,7 +62,8 @@ def read(
         Where nothing can be read.
     """
     recipe, work = recipe or Recipe(), work or Work()
-    files, passed = find_files(paths)
+    found_files, passed = find_files(paths)
+    files = recordings_among(found_files, recipe.intake)
     context = batch_context(recipe.intake, [file.path for file in files])
     parts: list[Part] = []
     bad: list[MesetaError] = []
@@ -81,7 +82,9 @@ def read(
     parts = [part for part in parts if part.traces]
     if not parts:
         raise _nothing(bad, files)
-    return _joined(parts, recipe, {"bad_files": [_plain(error) for error in bad], "passed_over": passed})
+    traces = _joined(parts, recipe, {"bad_files": [_plain(error) for error in bad], "passed_over": passed})
+    traces.notes["assumptions"].extend(rows_without_file(files, context))
+    return traces
 
 
 def traces_from(

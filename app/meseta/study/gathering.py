@@ -12,7 +12,7 @@ import h5py
 
 from meseta.errors import InputError, MesetaError
 from meseta.intake import Recording, open_recording
-from meseta.intake.context import batch_context
+from meseta.intake.context import batch_context, recordings_among
 from meseta.intake.files import FoundFile
 from meseta.intake.opening import OpenContext
 from meseta.intake.reading import traces_from
@@ -195,6 +195,9 @@ def _opened(
     files: Sequence[FoundFile], recipe: Recipe, present: Present, known: set[str], added: Added, work: Work
 ) -> Iterator[list[_Opened]]:
     """Yield batches of open recordings that the study does not have; each is closed when the next is asked for."""
+    recordings = recordings_among(files, recipe.intake)
+    added.files += [file.path for file in files if file not in recordings]
+    files = recordings
     context = batch_context(recipe.intake, [file.path for file in files])
     with ExitStack() as stack:
         batch: list[_Opened] = []

@@ -12,6 +12,7 @@ from meseta import intake
 from meseta.analysis import Analysis
 from meseta.errors import CallError, InputError
 from meseta.intake import Recording, find_files, open_recording
+from meseta.intake.context import batch_context, recordings_among
 from meseta.recipe import Recipe
 from meseta.selection import with_measures
 from meseta.study.files import is_study, looking
@@ -130,9 +131,11 @@ def _small(named: Sequence[str | Path], sources: Sequence[Source], recipe: Recip
         return []
     wanted = {source.sha256: source for source in sources}
     found: dict[str, Recording] = {}
-    for file in find_files(named)[0]:
+    files = recordings_among(find_files(named)[0], recipe.intake)
+    context = batch_context(recipe.intake, [file.path for file in files])
+    for file in files:
         try:
-            recording = stack.enter_context(open_recording(file.path, recipe, file.name))
+            recording = stack.enter_context(open_recording(file.path, recipe, file.name, context))
         except InputError:
             continue  # the file was listed as bad when the traces were read
         if recording.source.sha256 in wanted:
