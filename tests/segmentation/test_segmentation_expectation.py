@@ -43,6 +43,17 @@ def test_bright_long_plateaus_are_found_and_dark_short_ones_are_not():
     assert result.efficiency_at(3e-4, 200 * STEP_NM) > 0.95
 
 
+def test_the_lengths_planted_by_default_are_lengths_that_are_sought():
+    usual = expectation(each=25)
+    assert usual.length[0] >= 20 * STEP_NM * 0.999 and usual.length[-1] == pytest.approx(500 * STEP_NM)
+    assert usual.efficiency[-1, 0] > 0.8
+    analysis = Analysis(recording(30))
+    patient = analysis.recipe.with_values("plateaus", minimum_length_nm=0.3).plateaus
+    asked = expect(analysis.traces, patient, analysis.noise(), analysis.result("alignment"), PULL, each=25, blank=True)
+    assert asked.length[0] > 0.3
+    assert asked.efficiency[-1, 0] > 0.8
+
+
 def test_the_prediction_holds_on_traces_made_elsewhere():
     predicted = expectation(conductance_g0=[2e-4], length=[200 * STEP_NM]).efficiency[0, 0]
     table = Analysis(recording(30, seed=77, molecule=2e-4)).plateaus()
