@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 
 from meseta.errors import InputError, nearest
-from meseta.intake.readers.text_form import decode_head
+from meseta.intake.readers.text_encoding import decode_head
 from meseta.intake.readers.unpack import read_bytes
 from meseta.peaks.decay import DecayPoints
 

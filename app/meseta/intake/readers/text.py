@@ -13,10 +13,12 @@ import numpy as np
 from meseta.errors import InputError
 from meseta.intake.readers.contents import Contents, columns_of, whole
 from meseta.intake.readers.spool import SpooledColumn
-from meseta.intake.readers.text_form import KnownForm, TextForm, decode_head, find_form, known_form
+from meseta.intake.readers.text_encoding import ENCODINGS, decode_head
+from meseta.intake.readers.text_form import KnownForm, TextForm, known_form
 from meseta.intake.readers.text_layout import Table, laid_out
 from meseta.intake.readers.text_odd import BadCellError, OddColumns
 from meseta.intake.readers.text_rows import Columns, Rows, numbers, numbers_of_each
+from meseta.intake.readers.text_search import find_form, obstacle_of
 from meseta.intake.readers.text_stream import put_aside
 from meseta.intake.readers.unpack import members_of, read_bytes, unpacked_blocks, unpacked_members
 from meseta.intake.roles import guess_role, told_role
@@ -164,11 +166,24 @@ def _recognised(data: bytes, path: Path) -> tuple[str, bytes, TextForm]:
         what = "is empty" if not data.strip() else "holds no rows of numbers"
         if data.strip() and path.suffix.lower() in (".h5", ".hdf5", ".hdf", ".he5"):
             what = "is named like HDF5 but is a text and not an HDF5 file"
-        raise InputError(what, str(path), "give a table with numbers in rows")
+        raise _no_rows(what, _text(_head(data, path), encoding), path)
     if form.columns > MOST_COLUMNS:
         what = f"has {form.columns} cells in a row, more than traces side by side can be"
         raise InputError(what, str(path), "give a table with samples in rows, or the traces one after the other")
     return encoding, data, form
+
+
+def _no_rows(what: str, head: str, path: Path) -> InputError:
+    """Return the error of a text without rows of numbers, with the first cell that is in the way."""
+    found = obstacle_of(head)
+    if found is None:
+        return InputError(what, str(path), "give a table with numbers in rows")
+    line, column, word = found
+    return InputError(
+        f"{what} that can be told: '{word[:40]}' in column {column} is no number",
+        f"{path}, line {line}",
+        "give rows with a number in each column, or the same columns of words in every row",
+    )
 
 
 def _head(data: bytes, path: Path) -> bytes:
@@ -303,8 +318,9 @@ def _kinds(contents: Contents) -> list[tuple[str, str, str]]:
 
 
 def _doubts(data: bytes, encoding: str, form: TextForm) -> list[str]:
-    odd = encoding == "latin-1" and any(byte > 127 for byte in data[:HEAD_BYTE])
-    return [*form.doubts, *(["not UTF-8: read as Latin-1"] if odd else [])]
+    name = ENCODINGS.get(encoding)
+    odd = name is not None and any(byte > 127 for byte in data[:HEAD_BYTE])
+    return [*form.doubts, *([f"not UTF-8: read as {name}"] if odd else [])]
 
 
 def _text(data: bytes, encoding: str) -> str:
@@ -315,7 +331,7 @@ def _text(data: bytes, encoding: str) -> str:
 
 def _body(data: bytes, form: TextForm, encoding: str) -> bytes:
     """Return the rows of numbers, in UTF-8, without the lines before them."""
-    if encoding.startswith("utf-16"):
+    if encoding.startswith("utf-16") or encoding in ENCODINGS:
         data = _text(data, encoding).encode()
     elif encoding == "utf-8-sig":
         data = data[3:]

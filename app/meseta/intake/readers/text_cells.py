@@ -8,7 +8,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
-__all__ = ["GROUPED", "MARKS", "NUMBER", "NUMBERS", "STAMP", "OddRows", "cell_kind", "odd_rows"]
+__all__ = ["GROUPED", "MARKS", "NUMBER", "NUMBERS", "STAMP", "OddRows", "cell_kind", "obstacle", "odd_rows"]
 
 MARKS: Final = (
     *("None", "none", "NONE", "Overload", "OVERLOAD", "overload", "OVLD", "+OVLD", "-OVLD", "Ovld", "OVRLD"),
@@ -100,6 +100,18 @@ def odd_rows(rows: Sequence[tuple[int, list[str]]], decimal: str) -> OddRows | N
         if kind == "grouped" and not any(_CLEARLY_GROUPED[decimal].match(row[2][place]) for row in found):
             return None  # "1,234" may be one and a bit
     return OddRows(body[first][0], len(found), kinds)
+
+
+def obstacle(rows: Sequence[tuple[int, list[str]]], decimal: str) -> tuple[int, int, str] | None:
+    """Return (line, column, cell) of the first cell with a word in a row that has numbers too; None without one."""
+    for line, cells in rows:
+        kinds = [cell_kind(cell, decimal) for cell in cells]
+        if any(kind == "number" and cell for kind, cell in zip(kinds, cells, strict=True)):
+            return next(
+                ((line, place, cells[place]) for place, kind in enumerate(kinds) if kind != "number"),
+                None,
+            )
+    return None
 
 
 def _column_kind(kinds: Sequence[str], is_numeric: bool) -> str:

@@ -15,7 +15,8 @@ import numpy.typing as npt
 from meseta.errors import InputError
 from meseta.intake.metadata import Plain, canonical
 from meseta.intake.readers.contents import Contents, columns_of, make_channel, whole
-from meseta.intake.readers.text_form import TextForm, entries_of
+from meseta.intake.readers.text_form import TextForm
+from meseta.intake.readers.text_headings import entries_of
 from meseta.intake.readers.text_odd import OddColumns
 from meseta.intake.recording import RawChannel
 from meseta.intake.roles import guess_role, stem_of

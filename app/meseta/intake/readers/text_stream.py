@@ -88,8 +88,8 @@ def _whole_lines(path: Path, encoding: str, skip_lines: int) -> Iterator[bytes]:
 
 
 def _in_utf8(path: Path, encoding: str) -> Iterator[bytes]:
-    """Yield the blocks of a text with line feeds at the ends of lines; only UTF-16 needs decoding for numbers."""
-    decoder = codecs.getincrementaldecoder(encoding)("replace") if encoding.startswith("utf-16") else None
+    """Yield the blocks of a text with line feeds at the ends of lines."""
+    decoder = None if encoding.startswith("utf-8") else codecs.getincrementaldecoder(encoding)("replace")
     is_first, lone_returns = True, False
     for raw in unpacked_blocks(path, BLOCK_BYTE):
         block = decoder.decode(raw).encode() if decoder else raw
