@@ -7,7 +7,7 @@ from typing import Literal
 
 __all__ = ["ACTIONS", "MENUS", "ActionSpec"]
 
-When = Literal["always", "open", "conditions", "subset", "peak", "dirty"]
+When = Literal["always", "open", "conditions", "subset", "peak", "following"]
 
 MENUS = ("File", "Edit", "Trace", "Conditions", "Peaks", "Look", "Help")
 
@@ -28,7 +28,7 @@ class ActionSpec:
         Shortcuts, the first one is shown.
     when : str
         "always", "open" (traces are open), "conditions" (some are switched on), "subset" (they pick traces),
-        "peak" (one is chosen).
+        "peak" (one is chosen), "following" (a folder is followed).
     bar : str
         Word on the tool bar; empty where it has none.
     help : str
@@ -57,6 +57,32 @@ ACTIONS: tuple[ActionSpec, ...] = (
         (),
         "always",
         help="Small simulated recordings to try everything on.",
+    ),
+    ActionSpec(
+        "follow",
+        "Follow a folder …",
+        "File",
+        ("Ctrl+Shift+F",),
+        "always",
+        help="Take in recordings as an experiment writes them; the views grow.",
+        line_before=True,
+    ),
+    ActionSpec(
+        "go_on_following",
+        "Go on following the last folder",
+        "File",
+        (),
+        "always",
+        help="Open the study that was followed into last, and take in what has come since.",
+    ),
+    ActionSpec("stop_following", "Stop following", "File", ("Ctrl+Shift+X",), "following"),
+    ActionSpec(
+        "left_out",
+        "Files left out …",
+        "File",
+        (),
+        "always",
+        help="List the files that could not be read, each with what is wrong and what to do.",
     ),
     ActionSpec(
         "save",

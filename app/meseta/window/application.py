@@ -94,6 +94,7 @@ def open_window(paths: list[str], recipe: Recipe | None = None) -> int:
     window.show()
     QTimer.singleShot(AFTER_PAINT_MS, window, lambda: prepare(window))
     window.commands.offer_recovery()
+    window.commands.offer_following()
     if paths:
         QTimer.singleShot(0, window, lambda: window.commands.check_paths(paths, recipe))
     return int(application.exec())

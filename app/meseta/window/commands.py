@@ -11,8 +11,8 @@ from PySide6.QtWidgets import QInputDialog, QMessageBox
 
 from meseta import __version__, typeset
 from meseta.selection.decisions import Event
-from meseta.window.file_commands import FileCommands
 from meseta.window.finder import ActionFinder, keys_page
+from meseta.window.following.commands import FollowCommands
 from meseta.window.groups import with_new_group
 from meseta.window.peak_editing import PeakEditor
 from meseta.window.session import Span
@@ -24,7 +24,7 @@ if TYPE_CHECKING:
 __all__ = ["Commands"]
 
 
-class Commands(FileCommands):
+class Commands(FollowCommands):
     """The actions of the window."""
 
     def __init__(self, window: MainWindow, recovery: Path) -> None:

@@ -46,6 +46,8 @@ class FileCommands(QObject):
         super().__init__(window)
         self._window, self._session, self._recovery = window, window.session, recovery
         self._check: FileCheck | None = None
+        self._on_accepted: Callable[[list[str], Recipe], None] = self._read
+        self._on_left: Callable[[], None] = self._leave_check
         self._places = Places(window.settings)
         window.jobs.idle.connect(self._reading_stopped)
 
@@ -87,6 +89,7 @@ class FileCommands(QObject):
             if study:
                 self._read(paths, chosen)
             else:
+                self._on_accepted, self._on_left = self._read, self._leave_check
                 self._file_check().check(paths, chosen)
                 self._window.centre.show_check(self._file_check())
 
@@ -97,8 +100,8 @@ class FileCommands(QObject):
             from meseta.window.filecheck import FileCheck
 
             self._check = FileCheck(self._window)
-            self._check.accepted.connect(self._read)
-            self._check.left.connect(self._leave_check)
+            self._check.accepted.connect(lambda paths, recipe: self._on_accepted(paths, recipe))
+            self._check.left.connect(lambda: self._on_left())
         return self._check
 
     def _leave_check(self) -> None:
@@ -112,12 +115,17 @@ class FileCommands(QObject):
         if paths and self.may_leave():
             self._read(paths, recipe or self._session.document.recipe)
 
-    def _read(self, paths: list[str], chosen: Recipe) -> None:
+    def _read(self, paths: list[str], chosen: Recipe, then: Callable[[], None] | None = None) -> None:
+        def done(opened: Opened) -> None:
+            self._opened(opened)
+            if then is not None:
+                then()
+
         def task(work: Any, part: Callable[[Any], None]) -> Opened:
             return open_paths(paths, chosen, work, part)
 
         self._window.say(f"opening {Path(paths[0]).name} …")
-        self._window.jobs.submit(OPEN, "reading files", task, self._opened, self._not_opened, self._opened_in_part)
+        self._window.jobs.submit(OPEN, "reading files", task, done, self._not_opened, self._opened_in_part)
 
     def _opened_in_part(self, opened: Opened) -> None:
         """Show what is read so far; what comes while the last of it is still counted is passed over."""
@@ -139,6 +147,8 @@ class FileCommands(QObject):
 
     def _show_opened(self, opened: Opened, place: Place | None = None) -> None:
         self.remember_place()
+        if not self._window.follower.follows_into(opened.study):
+            self._window.follower.stop()
         self._window.status.complain(None)
         place = place or self._places.recall(opened.paths)
         conditions = ConditionSet() if place is None else place.conditions
@@ -185,8 +195,9 @@ class FileCommands(QObject):
         if path:
             self.save_to(path if Path(path).suffix else f"{path}.h5")
 
-    def save_to(self, path: str) -> None:
-        """Write a study and go on in it."""
+    def save_to(self, path: str, then: Callable[[], None] | None = None) -> None:
+        """Write a study and go on in it; a folder that is followed is followed into that one from then on."""
+        still = self._window.follower.still
         analysis, files = self._session.analysis, self._window.keeper.paths
         if analysis is None:
             return
@@ -195,10 +206,16 @@ class FileCommands(QObject):
             from meseta.study import Study, write_study
             from meseta.study.arriving import folders_of
 
-            write_study(path, analysis, work, files=files)
+            with still:
+                write_study(path, analysis, work, files=files)
             return Study.open(path, folders=folders_of(files))
 
-        self._window.jobs.submit(SAVE, "saving the study", task, lambda study: self._saved_as(study, path))
+        def done(study: Any) -> None:
+            self._saved_as(study, path)
+            if then is not None:
+                then()
+
+        self._window.jobs.submit(SAVE, "saving the study", task, done)
 
     def _saved_as(self, study: Any, path: str) -> None:
         self._session.study_path, self._session.name = path, Path(path).stem
@@ -206,6 +223,9 @@ class FileCommands(QObject):
         self._window.keeper.open(study, (path,))
         self._window.keeper.forget_recovery()
         self._window.recent.add([path])
+        followed = self._window.follower.followed
+        if followed is not None:
+            self._window.follower.start(followed.folder, path, study)
         self._saved(path)
 
     def _saved(self, path: str) -> None:
@@ -221,12 +241,14 @@ class FileCommands(QObject):
 
     def export_to(self, folder: str) -> None:
         """Write the whole result into a folder."""
+        still = self._window.follower.still
         analysis, title, files = self._session.analysis, self._session.name, self._window.keeper.paths
         if analysis is None:
             return
 
         def task(work: Any, _: Callable[[Any], None]) -> str:
-            return export_results(analysis, folder, title, files, work)
+            with still:
+                return export_results(analysis, folder, title, files, work)
 
         self._window.jobs.submit(EXPORT, "exporting", task, lambda path: self._window.say(f"results written to {path}"))
 
@@ -257,11 +279,15 @@ class FileCommands(QObject):
     def do_close(self) -> None:
         """Close the recording."""
         if self.may_leave():
-            self.remember_place()
-            self._window.jobs.cancel()
-            self._session.close_traces()
-            self._window.keeper.open(None, ())
-            self._window.keeper.forget_recovery()
+            self._leave_open()
+
+    def _leave_open(self) -> None:
+        self.remember_place()
+        self._window.follower.stop()
+        self._window.jobs.cancel()
+        self._session.close_traces()
+        self._window.keeper.open(None, ())
+        self._window.keeper.forget_recovery()
 
     def do_quit(self) -> None:
         """Close the window."""

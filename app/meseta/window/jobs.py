@@ -52,6 +52,8 @@ class Channel:
         Whether progress stands in the status line.
     files : bool
         Reading and writing files has a thread of its own: results are worked out while reading goes on.
+    alone : bool
+        Has a thread of its own and keeps no other work waiting.
     lasting : bool
         Belongs to no recording: it goes on when all work on a recording is stopped.
     """
@@ -60,12 +62,13 @@ class Channel:
     quick: bool = False
     shown: bool = True
     files: bool = False
+    alone: bool = False
     lasting: bool = False
 
     @property
     def lane(self) -> str:
         """Name of the threads that do this work."""
-        return "quick" if self.quick else "files" if self.files else "long"
+        return self.name if self.alone else "quick" if self.quick else "files" if self.files else "long"
 
 
 @dataclass(frozen=True)
@@ -103,7 +106,10 @@ def _ignored(_: Any) -> None:
 
 
 class JobRunner(QObject):
-    """Runs requests on a few threads (two quick, one for files, one long); brings responses to the window's thread."""
+    """Runs requests on a few threads (two quick, one for files, one long, one for each channel that has its own).
+
+    Responses come back to the window's thread.
+    """
 
     progressed = Signal(object)
     """A :class:`~meseta.work.Progress` of the longest-running shown request, or None when nothing runs."""
@@ -115,10 +121,7 @@ class JobRunner(QObject):
 
     def __init__(self, parent: QObject | None = None) -> None:
         super().__init__(parent)
-        self._pools = {
-            lane: ThreadPoolExecutor(threads, f"meseta-{lane}", None if lane == "quick" else _step_back)
-            for lane, threads in (("quick", 2), ("files", 1), ("long", 1))
-        }
+        self._pools: dict[str, ThreadPoolExecutor] = {}
         self._numbers = itertools.count(1)
         self._running: dict[int, tuple[Request, Future[None]]] = {}
         self._newest: dict[str, int] = {}
@@ -153,10 +156,16 @@ class JobRunner(QObject):
         self.cancel(channel)
         request = Request(next(self._numbers), channel, label, task, done, failed or self.failed.emit, part)
         self._newest[channel.name] = request.number
-        self._running[request.number] = (request, self._pools[channel.lane].submit(self._run, request))
+        self._running[request.number] = (request, self._pool(channel.lane).submit(self._run, request))
         if not self._clock.isActive():
             self._clock.start()
         return request.number
+
+    def _pool(self, lane: str) -> ThreadPoolExecutor:
+        if lane not in self._pools:
+            quick = lane == "quick"
+            self._pools[lane] = ThreadPoolExecutor(2 if quick else 1, f"meseta-{lane}", None if quick else _step_back)
+        return self._pools[lane]
 
     def cancel(self, channel: Channel | None = None, *, spare_files: bool = False) -> None:
         """Ask the work of a channel (or all work, or all but that on files) to stop; its responses are dropped.

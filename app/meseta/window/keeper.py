@@ -40,7 +40,10 @@ class Keeper(QObject):
 
     @property
     def study(self) -> Any:
-        """The open study; to be touched on the keeper's thread only.  None where nothing was saved yet."""
+        """The open study, never to be touched on the window's thread: a call waits for those of other threads.
+
+        None where nothing was saved yet.
+        """
         return self._study
 
     @property

@@ -19,6 +19,7 @@ from meseta.window.centre import Centre
 from meseta.window.collector import Collector
 from meseta.window.commands import Commands
 from meseta.window.dock_title import DockTitle, name_docks
+from meseta.window.following import Follower, FollowLine
 from meseta.window.help import HelpBrowser
 from meseta.window.jobs import JobRunner
 from meseta.window.keeper import Keeper
@@ -53,12 +54,13 @@ class MainWindow(QMainWindow):
         self.session = Session(self.jobs, recipe, self)
         self.keeper = Keeper(self.session, recovery)
         self.recent = RecentFiles(settings)
+        self.follower = Follower(self.session, settings)
         self.commands = Commands(self, recovery)
         self.actions_by_key: dict[str, QAction] = {}
         self.docks: dict[str, QDockWidget] = {}
         self.widgets: dict[str, QWidget] = {}
         self.centre = Centre()
-        self.status = StatusLine(self.session)
+        self.status, self.follow_line = StatusLine(self.session), FollowLine(self.follower)
         self.help: HelpBrowser | None = None
         self._first_state = QByteArray()
         self._naming = QTimer(self)
@@ -77,6 +79,7 @@ class MainWindow(QMainWindow):
         self.setDockNestingEnabled(True)
         self.setCentralWidget(self.centre)
         self.setStatusBar(self.status)
+        self.status.insertWidget(0, self.follow_line, 1)
         self.setCorner(Qt.Corner.BottomLeftCorner, Qt.DockWidgetArea.LeftDockWidgetArea)
         self.setCorner(Qt.Corner.BottomRightCorner, Qt.DockWidgetArea.RightDockWidgetArea)
         self.setTabPosition(Qt.DockWidgetArea.AllDockWidgetAreas, _tabs_on_top())
@@ -230,6 +233,8 @@ class MainWindow(QMainWindow):
         session.result_changed.connect(lambda name: self.status.complain(None) if name == "peaks" else None)
         self.jobs.failed.connect(self.status.complain)
         self.keeper.failed.connect(self.status.complain)
+        self.follower.changed.connect(self._refresh_actions)
+        self.follow_line.list_asked.connect(lambda: self.run_action("left_out"))
         self.centre.first.chosen.connect(self.run_action)
         self._refresh_actions()
 
@@ -345,6 +350,7 @@ class MainWindow(QMainWindow):
             "conditions": open_ and bool(session.document.conditions.conditions),
             "subset": open_ and session.subset is not None,
             "peak": open_ and PeakEditor.of(session).chosen >= 0,
+            "following": self.follower.active,
         }
         for spec in ACTIONS:
             self.actions_by_key[spec.key].setEnabled(usable.get(spec.when, True))
@@ -388,6 +394,7 @@ class MainWindow(QMainWindow):
     def shut_down(self, *, forget: bool) -> None:
         """Stop all work and wait for it."""
         self.jobs.close()
+        self.follower.close()
         self.keeper.close(forget=forget)
         self.collector.close()
 

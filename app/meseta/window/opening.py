@@ -20,12 +20,14 @@ from meseta.work import Work
 
 if TYPE_CHECKING:
     from meseta.analysis import Analysis
+    from meseta.study import Study
 
 __all__ = [
     "Opened",
     "Unfinished",
     "export_results",
     "open_paths",
+    "opened_study",
     "read_unfinished",
     "write_columns",
     "write_unfinished",
@@ -120,11 +122,17 @@ def _open_study(path: str, work: Work) -> Opened:
 
     opened = Study.open(path)
     try:
-        traces = _measured(opened.traces(work), opened.recipe, work)
-        return Opened(traces, opened.recipe, opened.decisions, Path(path).stem, (path,), opened)
+        return opened_study(opened, work)
     except MesetaError:
         opened.close()
         raise
+
+
+def opened_study(study: Study, work: Work) -> Opened:
+    """Return what a study holds now."""
+    recipe, path = study.recipe, str(study.path)
+    traces = _measured(study.traces(work, recipe), recipe, work)
+    return Opened(traces, recipe, study.decisions, study.path.stem, (path,), study)
 
 
 def _name_of(paths: Sequence[str]) -> str:
