@@ -292,6 +292,29 @@ def test_mistakes_with_a_logarithmic_amplifier_are_named(tmp_path, stated, check
         assert float(found[check].text.split("volt_per_decade, ")[1].split()[0]) == pytest.approx(0.8, rel=0.03)
 
 
+@pytest.mark.parametrize(("volt_per_decade", "flipped", "named"), [(0.8, 1, False), (-0.8, 1, True), (0.8, -1, False)])
+def test_opposite_polarity_is_named_where_nothing_tells_the_direction(tmp_path, volt_per_decade, flipped, named):
+    """Without a drive all traces seem to close; traces that do close (the last case) are none of its business."""
+    values = np.maximum(contacts(), 1e-7)[:, ::flipped] * G0_SIEMENS * 0.1
+    path = record(tmp_path, amplifier=(0.8 * np.log10(values / 1e-9), {"unit": "V"}))
+    found = findings(path, volt_per_decade=volt_per_decade, reference_ampere=1e-9, bias_volt=0.1)
+    assert ("opposite polarity" in found["direction"].text if "direction" in found else False) == named
+    assert named or all(one.fine for name, one in found.items() if name in ("direction", "single-atom peak"))
+
+
+def test_contacts_of_two_three_and_four_atoms_as_often_as_of_one_are_no_factor_of_two(tmp_path):
+    """Plateaus of equal length at 1, 2, 3 and 4 G0, the higher ones sharper: the strongest is not the single atom."""
+    for seed in range(20):
+        rng = np.random.default_rng(seed)
+        levels, spread = np.repeat([8.0, 4.0, 3.0, 2.0, 1.0], 60), np.repeat([0.2, 0.02, 0.02, 0.02, 0.03], 60)
+        rows = [np.concatenate([levels * rng.normal(1, spread), 10.0 ** -rng.uniform(2, 5, 300)]) for _ in range(20)]
+        path = record(tmp_path, amplifier=(np.array(rows) * G0_SIEMENS * 0.1 * 1e4, {"unit": "V"}))
+        found = findings(path, gain_volt_per_ampere=1e4, bias_volt=0.1)["single-atom peak"]
+        assert found.fine, found.text
+        high = findings(path, gain_volt_per_ampere=5e3, bias_volt=0.1)["single-atom peak"]
+        assert not high.fine, high.text
+
+
 @pytest.mark.parametrize(
     ("stated", "said"),
     [

@@ -9,10 +9,11 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.intake.assembly import Part
-from meseta.intake.findings import Finding, Look
+from meseta.intake.cuts import PUSH
+from meseta.intake.findings import Finding, Look, look_at
 from meseta.quantities import G0_SIEMENS
 
-__all__ = ["peak_positions", "single_atom"]
+__all__ = ["peak_positions", "single_atom", "upside_down"]
 
 Floats = npt.NDArray[np.float64]
 LEAST_SAMPLES: Final = 200
@@ -39,6 +40,9 @@ OF_METAL_G0: Final = {
 well defined than Cu (Krans et al.); each with room."""
 ODD_G0: Final = (0.2, 4.0)
 """Between these a peak that belongs to no single atom is odd; further away it is a molecule, or a thick contact."""
+BESIDE_SHARE: Final = 0.3
+"""Of the strongest peak: what stands out as much beside it is a peak of its own."""
+LEAST_CLOSINGS: Final = 5
 DECADE_ROOM: Final = 0.03
 FACTORS_END_G0: Final = 300.0
 """Thicker contacts than this are not drawn out to single atoms in one trace."""
@@ -86,10 +90,12 @@ def single_atom(look: Look) -> Finding | None:
     text = f"contacts pile up at {position:.3g} G0"
     if metal and low <= position <= high:
         return Finding("single-atom peak", True, f"{text}, as single atoms of {metal} do")
+    near = [at for at, height in peaks if low <= at <= high and height > BESIDE_SHARE * strength]
+    if near and position > high:  # two atoms or more, as often as one: nothing lies below those of a wrong scale
+        return Finding("single-atom peak", True, f"contacts pile up at {near[0]:.3g} G0, and at {position:.3g} G0")
     for factor, word in FACTORS.items():
         if _is_off(position, factor, (low, high) if metal else (1.0, 1.0)):
-            near = [at for at, height in peaks if low <= at <= high and height > 0.3 * strength]
-            if near and word != "2":  # a molecule or a cluster beside single atoms where they should be
+            if near and word != "2":  # a molecule beside single atoms where they should be
                 return Finding("single-atom peak", True, f"contacts pile up at {near[0]:.3g} G0")
             side = "high" if factor > 1 else "low"
             text += f", a factor {word} too {side} for single atoms: is gain, bias or a divider off by {word}?"
@@ -98,13 +104,45 @@ def single_atom(look: Look) -> Finding | None:
         return Finding("single-atom peak", True, text)
     if not metal and ANY_METAL_G0[0] <= position <= ANY_METAL_G0[1]:
         return Finding("single-atom peak", True, f"{text}; for a monovalent metal 1 is expected")
-    near = [at for at, height in peaks if low <= at <= high and height > 0.3 * strength]
     is_scale = not near and _is_decade_factor(_right_decade(look.part, position))
     if ODD_G0[0] <= position <= ODD_G0[1] or position > FACTORS_END_G0 or is_scale:
         expected = f"for {metal} {low:g} to {high:g}" if metal else "for a monovalent metal 1"
         text += f"; {expected} is expected" + ("" if metal else ", for no metal this")
         return Finding("single-atom peak", False, text + _decade_question(look.part, position))
     return None
+
+
+def upside_down(part: Part) -> Finding | None:
+    """Find a logarithmic amplifier of the opposite polarity where nothing but the conductance tells directions.
+
+    Every trace then seems to close; single atoms show once the volts are taken the other way round, I_ref^2/I, and not
+    as they are.
+    """
+    if part.calibration.kind != "logarithmic" or "opening" in part.cut.direction or part.traces < LEAST_CLOSINGS:
+        return None
+    pooled = look_at(part, "closing", PUSH).pooled
+    reference, volt = float(np.median(part.calibration.constant("reference_ampere"))), _bias(part)
+    if not reference or not volt or _shows_atoms(pooled):
+        return None
+    with np.errstate(divide="ignore"):
+        turned = (reference / (volt * G0_SIEMENS)) ** 2 / pooled
+    if not _shows_atoms(turned[np.isfinite(turned)]):
+        return None
+    text = f"all {part.traces} traces close, and none shows single atoms; with the volts the other way round they do"
+    return Finding(
+        "direction",
+        False,
+        f"{text}: has the logarithmic amplifier the opposite polarity (sign of calibration.volt_per_decade)?",
+    )
+
+
+def _shows_atoms(pooled: Floats) -> bool:
+    return any(ANY_METAL_G0[0] <= at <= ANY_METAL_G0[1] for at, _ in peak_positions(pooled))
+
+
+def _bias(part: Part) -> float:
+    """Return the size of the bias at the junction; 0 where it is recorded and not stated."""
+    return abs(float(np.median(part.calibration.bias_at_junction_volt)))
 
 
 def _is_off(position: float, factor: float, expected: tuple[float, float]) -> bool:
@@ -152,8 +190,7 @@ def _right_decade(part: Part, position: float) -> tuple[float, float]:
         return 0.0, 0.0
     names = ("volt_per_decade", "reference_ampere")
     stated, reference = (float(np.median(part.calibration.constant(name))) for name in names)
-    bias = float(np.median(part.calibration.bias_at_junction_volt))
-    one_atom = abs(bias) * G0_SIEMENS / reference
+    one_atom = _bias(part) * G0_SIEMENS / reference
     if one_atom <= 0 or abs(np.log10(one_atom)) < 0.5:
         return 0.0, 0.0
     return stated * float(np.log10(position * one_atom) / np.log10(one_atom)), stated

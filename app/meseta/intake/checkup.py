@@ -13,7 +13,7 @@ from typing import Final
 from meseta.intake import contact_checks as contacts
 from meseta.intake import instrument_checks as instrument
 from meseta.intake.assembly import Part
-from meseta.intake.atom_check import single_atom
+from meseta.intake.atom_check import single_atom, upside_down
 from meseta.intake.findings import Finding, look_at
 from meseta.intake.tunnelling_check import tunnelling_slope
 from meseta.recipe.alignment import AlignmentSettings
@@ -34,7 +34,8 @@ def check_up(part: Part, alignment: AlignmentSettings) -> tuple[tuple[Finding, .
     """
     look = look_at(part)
     if sum(len(one) for one in look.values) < LEAST_SAMPLES:
-        return (), None
+        turned = upside_down(part)
+        return ((turned,) if turned is not None else ()), None
     zero, finding = contacts.zero_level(look, alignment.zero_at_g0)
     found = [
         contacts.sign(look),

@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.intake.assembly import Part
+from meseta.intake.cuts import PULL
 from meseta.traces import Quality
 
 __all__ = ["STEPPED_SHARE", "Finding", "Floor", "Look", "floor_of", "look_at", "step_near"]
@@ -141,13 +142,13 @@ def _share(values: Floats) -> int:
     return max(len(values) // 20, 3)
 
 
-def look_at(part: Part) -> Look:
-    """Return the openings to look at: at most 200, spread over the recording."""
-    rows = np.flatnonzero(np.array(part.cut.direction) == "opening")
+def look_at(part: Part, direction: str = "opening", kind: int = PULL) -> Look:
+    """Return the openings to look at, or other phases: at most 200, spread over the recording."""
+    rows = np.flatnonzero(np.array(part.cut.direction) == direction)
     usual = float(np.median(np.diff(part.offsets))) if part.traces else 1.0
     most = int(np.clip(MOST_SAMPLES / max(usual, 1.0), 20, 200))
     chosen = rows[np.linspace(0, len(rows) - 1, min(len(rows), most)).astype(int)] if len(rows) else rows
-    spans = [(start, min(stop, start + MOST_SAMPLES)) for start, stop in _pulls(part, chosen)]
+    spans = [(start, min(stop, start + MOST_SAMPLES)) for start, stop in _phases(part, chosen, kind)]
     spans = [(start, stop) for start, stop in spans if stop > start]
     return Look(part, tuple(spans), tuple(_trusted(part, start, stop) for start, stop in spans))
 
@@ -160,8 +161,8 @@ def _trusted(part: Part, start: int, stop: int) -> Floats:
     return values
 
 
-def _pulls(part: Part, rows: npt.NDArray[np.int64]) -> list[tuple[int, int]]:
-    ranges = {phase[0]: (phase[1], phase[2]) for phase in reversed(part.cut.phases) if phase[3] == 1}
+def _phases(part: Part, rows: npt.NDArray[np.int64], kind: int) -> list[tuple[int, int]]:
+    ranges = {phase[0]: (phase[1], phase[2]) for phase in reversed(part.cut.phases) if phase[3] == kind}
     return [
         (int(part.offsets[row]) + ranges[row][0], int(part.offsets[row]) + ranges[row][1])
         for row in rows.tolist()
