@@ -206,6 +206,8 @@ class Session(QObject):
 
     def _row_now(self, here: TraceIdentity | None) -> int:
         assert self.traces is not None
+        if here is not None and self.current < self.traces.traces and self.traces.identity(self.current) == here:
+            return self.current  # as after traces were added behind the others
         row = -1 if here is None else self.traces.row_of(here)
         return row if row >= 0 else min(max(self.current, 0), self.traces.traces - 1)
 
