@@ -105,7 +105,8 @@ def find_reader(head: bytes, path: Path, wanted: str | None, is_described: bool 
             f"there is no reader '{wanted}'", "intake.reader", nearest(wanted, [reader.name for reader in readers()])
         )
     for reader in readers():
-        if reader.sniff(head, path) and not (is_described and reader.name == "text" and _is_binary(head)):
+        is_no_text = _foreign(head) or (is_described and _is_binary(head))
+        if reader.sniff(head, path) and not (reader.name == "text" and is_no_text):
             return reader
     if is_described:
         return next(reader for reader in readers() if reader.name == "binary")

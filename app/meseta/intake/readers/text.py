@@ -13,6 +13,7 @@ import numpy as np
 from meseta.errors import InputError
 from meseta.intake.readers.contents import Contents, columns_of, whole
 from meseta.intake.readers.spool import SpooledColumn
+from meseta.intake.readers.text_cells import CLEARLY_GROUPED
 from meseta.intake.readers.text_encoding import ENCODINGS, decode_head
 from meseta.intake.readers.text_form import KnownForm, TextForm, known_form
 from meseta.intake.readers.text_layout import Table, laid_out
@@ -218,6 +219,8 @@ def _read(
 def _with_words(form: TextForm, error: BadCellError, settings: IntakeSettings) -> TextForm:
     """Return the form with words in the column of a bad cell, where the column is nothing that is measured.
 
+    A number whose thousands are clearly set apart is no bad cell.
+
     Raises
     ------
     BadCellError
@@ -226,6 +229,9 @@ def _with_words(form: TextForm, error: BadCellError, settings: IntakeSettings) -
     place, kinds = error.column, list(form.kinds or ("number",) * form.columns)
     name = form.names[place] if place < len(form.names) else ""
     told = told_role(name, settings.channels) if name else None
+    if kinds[place] == "number" and CLEARLY_GROUPED[form.decimal].match(error.word):
+        kinds[place] = "grouped"
+        return replace(form, kinds=tuple(kinds))
     is_needed = guess_role(name, form.units[place]).role != "other" if told is None else told.role != "ignore"
     if not name or is_needed or kinds[place] == "words" or kinds.count("words") == len(kinds) - 1:
         raise error

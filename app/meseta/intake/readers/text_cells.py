@@ -8,7 +8,18 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
-__all__ = ["GROUPED", "MARKS", "NUMBER", "NUMBERS", "STAMP", "OddRows", "cell_kind", "obstacle", "odd_rows"]
+__all__ = [
+    "CLEARLY_GROUPED",
+    "GROUPED",
+    "MARKS",
+    "NUMBER",
+    "NUMBERS",
+    "STAMP",
+    "OddRows",
+    "cell_kind",
+    "obstacle",
+    "odd_rows",
+]
 
 MARKS: Final = (
     *("None", "none", "NONE", "Overload", "OVERLOAD", "overload", "OVLD", "+OVLD", "-OVLD", "Ovld", "OVRLD"),
@@ -28,7 +39,7 @@ GROUPED: Final = {
     ",": re.compile(r"[-+]?\d{1,3}(?:\.\d{3})+(?:,\d*)?$"),
 }
 """Numbers whose thousands are set apart, by the decimal sign."""
-_CLEARLY_GROUPED: Final = {
+CLEARLY_GROUPED: Final = {
     ".": re.compile(r"[-+]?\d{1,3}(?:,\d{3}(?:,\d{3})+|(?:,\d{3})+\.\d*)$"),
     ",": re.compile(r"[-+]?\d{1,3}(?:\.\d{3}(?:\.\d{3})+|(?:\.\d{3})+,\d*)$"),
 }
@@ -97,7 +108,7 @@ def odd_rows(rows: Sequence[tuple[int, list[str]]], decimal: str) -> OddRows | N
     found = [row for row, fits in zip(body, good, strict=True) if fits]
     kinds = tuple(_column_kind([row[1][place] for row in found], place in numeric) for place in range(width))
     for place, kind in enumerate(kinds):
-        if kind == "grouped" and not any(_CLEARLY_GROUPED[decimal].match(row[2][place]) for row in found):
+        if kind == "grouped" and not any(CLEARLY_GROUPED[decimal].match(row[2][place]) for row in found):
             return None  # "1,234" may be one and a bit
     return OddRows(body[first][0], len(found), kinds)
 

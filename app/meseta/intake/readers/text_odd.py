@@ -23,9 +23,10 @@ Floats = npt.NDArray[np.float64]
 
 
 class BadCellError(InputError):
-    """A cell that is not what its column holds; ``column`` counts from 0."""
+    """A cell that is not what its column holds; ``column`` counts from 0, ``word`` is what stands in it."""
 
     column = -1
+    word = ""
 
 
 def bad_cell(word: str, kind: str, column: int, where: str) -> BadCellError:
@@ -33,7 +34,7 @@ def bad_cell(word: str, kind: str, column: int, where: str) -> BadCellError:
     error = BadCellError(
         f"'{word[:40]}' is not {kind} in column {column + 1}", where, "correct the cell or leave the line out"
     )
-    error.column = column
+    error.column, error.word = column, word
     return error
 
 

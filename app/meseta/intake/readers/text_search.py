@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import Final
 
-from meseta.intake.readers.text_cells import OddRows, obstacle, odd_rows
+from meseta.intake.readers.text_cells import NUMBERS, OddRows, cell_kind, obstacle, odd_rows
 from meseta.intake.readers.text_form import COMMENT, TextForm, cells_of, is_numeric
 from meseta.intake.readers.text_headings import with_headings
 
@@ -32,9 +32,9 @@ def find_form(text: str) -> TextForm | None:
         score = (count, cells, decimal == ".", delimiter in "\t;,|")
         if best is None or score > best[0]:
             best = (score, delimiter, decimal, start, cells)
-    if best is None or best[0][0] < ENOUGH_LINES:
+    if best is None or best[0][0] < ENOUGH_LINES or _follows_a_row(lines, *best[1:]):
         odd = _odd_form(lines if len(lines) < 2 * ENOUGH_LINES else lines[:-1], text[:PROBE_CHARACTERS])
-        if odd is not None and (best is None or odd[2].count > ODD_RATHER * best[0][0]):
+        if odd is not None and (best is None or _is_rather(odd[2], best[0][0], best[3])):
             delimiter, decimal, rows = odd
             form = with_headings(lines, delimiter, decimal, rows.start, len(rows.kinds), [])
             return replace(form, kinds=rows.kinds)
@@ -50,6 +50,17 @@ def find_form(text: str) -> TextForm | None:
     return with_headings(lines, delimiter, decimal, start, cells, doubts)
 
 
+def _follows_a_row(lines: Sequence[str], delimiter: str, decimal: str, start: int, cells: int) -> bool:
+    """Return whether the line above plain numbers has as many cells, and a number among them."""
+    above = cells_of(lines[start - 1], delimiter) if start else []
+    return len(above) == cells > 1 and any(cell and cell_kind(cell, decimal) in NUMBERS for cell in above)
+
+
+def _is_rather(odd: OddRows, plain_rows: int, start: int) -> bool:
+    """Return whether odd rows are the table, and the plain ones found only a part of it."""
+    return odd.count > ODD_RATHER * plain_rows or (odd.start < start and "words" not in odd.kinds)
+
+
 def _may_be_thousands(lines: Sequence[str], delimiter: str) -> bool:
     """Return whether each comma has one to three digits before it, no nought alone, and three behind it."""
     cells = [cell for line in lines for cell in cells_of(line, delimiter) if "," in cell]
@@ -63,7 +74,7 @@ def _odd_form(lines: Sequence[str], probe: str) -> tuple[str, str, OddRows] | No
         found = odd_rows(_rows_of_cells(lines, delimiter), decimal)
         if found is None:
             continue
-        score = (found.count, -found.kinds.count("words"), len(found.kinds))
+        score = (found.count, sum(kind in NUMBERS for kind in found.kinds), -found.kinds.count("words"))
         if best is None or score > best[0]:
             best = (score, delimiter, decimal, found)
     return best[1:] if best else None
