@@ -13,6 +13,7 @@ from matplotlib.colors import ListedColormap, Normalize
 from matplotlib.figure import Figure
 
 from meseta import colours, typeset
+from meseta.figures.cells import draw_cells
 from meseta.figures.displacement import colour_map, colour_norm
 from meseta.figures.page import new_figure, page_style
 from meseta.figures.scale import ConductanceScale, plain_ticks
@@ -101,12 +102,12 @@ def record_figure(record: TemporalHistogram, settings: FigureSettings) -> Figure
             say(axes, "no sample lies in this range" if np.any(record.traces) else "no trace takes part")
             return figure
         density, edges = record.counts_per_trace, record.grid.u_edges
-        axes.imshow(
+        draw_cells(
+            axes,
             np.ma.masked_where(record.counts == 0, density).T,
-            extent=(0, end, edges[0], edges[-1]),
-            cmap=colour_map(settings.colour_map),
-            norm=colour_norm(density[record.counts > 0], settings.colour_scale),
-            zorder=0.5,
+            (0, end, edges[0], edges[-1]),
+            colour_map(settings.colour_map),
+            colour_norm(density[record.counts > 0], settings.colour_scale),
         )
         axes.set_xlim(0, end)
         axes.set_ylim(scale.low, scale.high)
@@ -155,16 +156,16 @@ def _draw_correlation(
     end = max(end, 1.2 * correlation.threshold if np.isfinite(correlation.threshold) else 0.0, 1e-6)
     map_ = ListedColormap(colours.diverging(), name="meseta-diverging").with_extremes(bad=colours.LIGHT.ground)
     edges = correlation.grid.u_edges
-    image = axes.imshow(
+    cells = draw_cells(
+        axes,
         np.ma.masked_invalid(correlation.correlation),
-        extent=(edges[0], edges[-1], edges[0], edges[-1]),
-        cmap=map_,
-        norm=Normalize(-end, end, clip=True),
-        zorder=0.5,
+        (edges[0], edges[-1], edges[0], edges[-1]),
+        map_,
+        Normalize(-end, end, clip=True),
     )
     axes.set_xlim(scale.low, scale.high)
     axes.set_ylim(scale.low, scale.high)
-    drawn = Colorbar(bar, image)
+    drawn = Colorbar(bar, cells)
     drawn.outline.set_linewidth(0.3)
     drawn.set_label(f"Correlation over {typeset.integer(correlation.traces)} traces")
     plain_ticks(bar.yaxis, -end, end, most=5)

@@ -10,6 +10,7 @@ from matplotlib.colors import Colormap, ListedColormap, LogNorm, Normalize, Powe
 from matplotlib.ticker import FixedFormatter, FixedLocator, NullLocator
 
 from meseta import colours, typeset
+from meseta.figures.cells import draw_cells
 from meseta.figures.scale import ConductanceScale, plain_ticks
 from meseta.figures.words import per, say
 from meseta.histograms import DisplacementHistogram
@@ -62,12 +63,12 @@ def draw_displacement(
         say(axes, _nothing(histogram))
         return
     norm = colour_norm(filled, settings.colour_scale)
-    image = axes.imshow(
+    drawn = draw_cells(
+        axes,
         np.ma.masked_where(histogram.counts == 0, histogram.density).T,
-        extent=(edges[0], edges[-1], histogram.grid.u_edges[0], histogram.grid.u_edges[-1]),
-        cmap=colour_map(settings.colour_map),
-        norm=norm,
-        zorder=0.5,
+        (edges[0], edges[-1], histogram.grid.u_edges[0], histogram.grid.u_edges[-1]),
+        colour_map(settings.colour_map),
+        norm,
     )
     axes.set_xlim(edges[0], edges[-1])
     axes.set_ylim(scale.low, scale.high)
@@ -79,7 +80,7 @@ def draw_displacement(
     if counted_from:
         count = f"{typeset.integer(histogram.traces)} traces, aligned at\n{counted_from}"
     axes.text(0.985, 0.98, count, transform=axes.transAxes, ha="right", va="top", color=colours.LIGHT.quiet)
-    _bar(Colorbar(bar, image, orientation="horizontal"), norm, histogram.density_unit, settings.colour_scale)
+    _bar(Colorbar(bar, drawn, orientation="horizontal"), norm, histogram.density_unit, settings.colour_scale)
 
 
 def _nothing(histogram: DisplacementHistogram) -> str:
