@@ -235,7 +235,8 @@ def _run(dataset: Any, start: int, stop: int) -> npt.NDArray[Any] | None:
 
 def _fits(dataset: Any, target: npt.NDArray[np.float32]) -> bool:
     """Return whether a dataset's samples can be read into an array as they are."""
-    return isinstance(dataset, StoredArray) and dataset.dtype == target.dtype and len(target) > 0
+    is_plain = isinstance(dataset, StoredArray) and not dataset.chunk_rows
+    return is_plain and dataset.dtype == target.dtype and len(target) > 0
 
 
 def _field(dataset: Any, name: str) -> Any:

@@ -14,8 +14,9 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import InputError
+from meseta.intake.readers.hdf5_chunks import UnpackedRows
 
-__all__ = ["RawBytes", "StoredArray", "broken"]
+__all__ = ["Column", "RawBytes", "StoredArray", "broken"]
 
 
 class _Descriptor:
@@ -68,6 +69,10 @@ class StoredArray:
     place : int
         Byte of the file at which the numbers begin; -1 where they are packed, in chunks, or of a type of their own.
     raw : RawBytes, optional
+    chunk_rows : int
+        Rows that are unpacked together where the library would unpack them again for every part; else 0.
+    unpacked : UnpackedRows, optional
+        Where such rows are kept.
     """
 
     identity: Any
@@ -76,6 +81,8 @@ class StoredArray:
     dtype: np.dtype[Any]
     place: int = -1
     raw: RawBytes | None = None
+    chunk_rows: int = 0
+    unpacked: UnpackedRows | None = None
 
     @cached_property
     def dataset(self) -> Any:
@@ -84,12 +91,18 @@ class StoredArray:
 
     def __getitem__(self, key: Any) -> npt.NDArray[Any]:
         """Return a part of the array."""
-        found: npt.NDArray[Any] = self.dataset[key]
-        return found
+        rows, *rest = key if isinstance(key, tuple) and key else (key,)
+        if self.unpacked is None or not self.chunk_rows or not isinstance(rows, slice | int):
+            found: npt.NDArray[Any] = self.dataset[key]
+            return found
+        start, stop, _ = (rows if isinstance(rows, slice) else slice(rows, rows + 1)).indices(self.shape[0])
+        block = self.unpacked.read(self.path, self.dataset, self.chunk_rows, start, stop)
+        picked: npt.NDArray[Any] = block[(slice(None) if isinstance(rows, slice) else 0, *rest)]
+        return picked
 
     def fields(self, name: str) -> Any:
         """Return one column of a compound array."""
-        return self.dataset.fields(name)
+        return Column(self, name) if self.chunk_rows else self.dataset.fields(name)
 
     def run(self, start: int, stop: int) -> npt.NDArray[Any] | None:
         """Return numbers ``start`` to ``stop`` in the order of the file; None where they have no place there."""
@@ -114,6 +127,37 @@ class StoredArray:
             raise broken(self.path) from error
         if not is_whole:
             raise broken(self.path)
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column of a compound array, whose elements may be rows of numbers themselves."""
+
+    table: Any
+    name: str
+
+    @property
+    def path(self) -> str:
+        """File and name, for errors."""
+        return f"{getattr(self.table, 'path', 'file')}, {self.name}"
+
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """Type of its numbers."""
+        return np.dtype(self.table.dtype[self.name].base)
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Rows, and the shape of an element."""
+        return (*self.table.shape, *self.table.dtype[self.name].shape)
+
+    def __getitem__(self, key: Any) -> npt.NDArray[Any]:
+        """Return a part of the column."""
+        rows, *rest = key if isinstance(key, tuple) and key else (key,)
+        found: npt.NDArray[Any] = self.table[rows][self.name]
+        if rest:
+            found = found[(slice(None), *rest) if isinstance(rows, slice) else tuple(rest)]
+        return found
 
 
 def broken(where: str) -> InputError:

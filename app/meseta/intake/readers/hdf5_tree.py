@@ -19,6 +19,7 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import InputError
+from meseta.intake.readers.hdf5_chunks import LARGEST_CHUNK_BYTE, UnpackedRows, chunk_byte, rows_of_large_chunks
 from meseta.intake.readers.hdf5_ragged import ragged_rows
 from meseta.intake.readers.hdf5_stored import RawBytes, StoredArray
 
@@ -110,6 +111,7 @@ class _Walk:
         self._seen: set[int] = set()
         is_plain = bool(tree.raw) and file.userblock_size == 0
         self._plain_types = _PLAIN_TYPES if is_plain else ()
+        self._unpacked = UnpackedRows()
 
     def all_groups(self, file: Any) -> None:
         stack = [("", file, int(h5py.h5o.get_info(file.id).addr))]
@@ -171,6 +173,7 @@ class _Walk:
             is_null = space.get_simple_extent_type() == h5py.h5s.NULL
             shape = () if is_null else tuple(int(n) for n in space.get_simple_extent_dims())
             stored = int(identity.get_storage_size())
+            chunk = chunk_byte(plist, dtype.itemsize)
         except (OSError, TypeError, ValueError, RuntimeError):
             tree.refused.append(f"{name} has a type that cannot be read")
             return
@@ -180,12 +183,15 @@ class _Walk:
         if is_null or 0 in shape:
             return
         fault = _size_fault(layout, shape, dtype, stored, self._file_byte)
+        if chunk > LARGEST_CHUNK_BYTE:
+            fault = f"is packed in chunks of {chunk >> 20} MB, more than are unpacked at once, and was not read"
         if fault:
             tree.refused.append(f"{name} {fault}")
             return
         path = f"{self._where}, {name}"
         if dtype.kind in "biuf" or dtype.names:
-            dataset = StoredArray(identity, path, shape, dtype)
+            together = rows_of_large_chunks(identity, plist, shape, dtype.itemsize) if chunk else 0
+            dataset = StoredArray(identity, path, shape, dtype, chunk_rows=together, unpacked=self._unpacked)
             if dtype.kind in "biuf" and all(n == 1 for n in shape):
                 value = dataset.dataset[()]
                 tree.values[name] = value.reshape(-1)[0] if shape else value
