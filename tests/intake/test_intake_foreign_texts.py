@@ -11,6 +11,7 @@ import pytest
 
 from meseta import intake, read
 from meseta.errors import InputError
+from meseta.intake.readers import text, text_stream
 from meseta.quantities import G0_SIEMENS
 from meseta.recipe import Recipe
 
@@ -353,3 +354,30 @@ def test_formats_that_are_not_read_are_named(tmp_path, mark, name):
     (tmp_path / "a.nc").write_bytes(mark + bytes(500))
     with pytest.raises(InputError, match=f"is a {name} file"):
         read(tmp_path / "a.nc")
+
+
+def test_large_texts_with_odd_columns_are_read_like_small_ones(tmp_path, monkeypatch):
+    parts, number, displacement, conductance = stacked((400, 430, 460))
+    first = datetime(2031, 12, 31, 23, 59, 59, 950_000)
+    clock = [f"{first + n * timedelta(microseconds=100):%H:%M:%S.%f}" for n in range(len(number))]
+    words = [f"{value!r}" for value in conductance.tolist()]
+    words[700] = "OVLD"
+    columns = [("trace", np.array(["a", "b", "c"])[number]), ("clock", clock), ("displacement_nm", displacement)]
+    columns += [("conductance_g0", words), ("length (pm)", [f"{value * 1e6:,.1f}" for value in displacement])]
+    write(tmp_path / "a.csv", columns)
+    # a blank line parts no trace here, but makes the rows be parsed in parts
+    lines = (tmp_path / "a.csv").read_text().splitlines(keepends=True)
+    (tmp_path / "a.csv").write_text("".join([*lines[:401], "\n", *lines[401:]]))
+    parts[1][1][300] = np.nan
+    whole = assert_read(tmp_path / "a.csv", parts)
+    doubts = said(tmp_path / "a.csv")
+    with intake.open_recording(tmp_path / "a.csv") as recording:
+        seconds = recording.channel("time").values(0, recording.samples)
+    np.testing.assert_allclose(seconds, np.arange(len(number)) * 1e-4, atol=1e-9)
+    monkeypatch.setattr(text, "LARGE_BYTE", 0)
+    monkeypatch.setattr(text_stream, "BLOCK_BYTE", 5000)
+    streamed = read(tmp_path / "a.csv")
+    assert said(tmp_path / "a.csv") == doubts
+    np.testing.assert_array_equal(streamed.conductance, whole.conductance)
+    with intake.open_recording(tmp_path / "a.csv") as recording:
+        np.testing.assert_array_equal(recording.channel("time").values(0, recording.samples), seconds)

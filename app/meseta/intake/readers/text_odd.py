@@ -65,6 +65,15 @@ class OddColumns:
     _rows: int = 0
     _first: dict[int, tuple[int, str]] = field(default_factory=dict)
     _last: dict[int, int] = field(default_factory=dict)
+    _before: dict[int, int] = field(default_factory=dict)
+
+    def set_out(self) -> None:
+        """Remember what the next rows follow, before they are parsed."""
+        self._before = dict(self._last)
+
+    def go_back(self) -> None:
+        """Forget the rows that were parsed last: they are parsed again."""
+        self._last = dict(self._before)
 
     @property
     def places(self) -> tuple[int, ...]:
@@ -107,9 +116,11 @@ class OddColumns:
     def _coded(self, place: int, words: Any) -> Floats:
         """Return a number for each word, counted from 0 in the order in which they come."""
         known = self._codes.setdefault(place, {})
+        self._rows = max(self._rows, len(words))
+        if len(known) > MOST_WORDS:  # it is left out
+            return np.full(len(words), np.nan)
         coded = words.dictionary_encode()
         codes = np.array([known.setdefault(str(word), len(known)) for word in coded.dictionary.to_pylist()], np.float64)
-        self._rows = max(self._rows, len(words))
         return codes[coded.indices.to_numpy(zero_copy_only=False)] if len(codes) else np.empty(0)
 
     def _grouped(self, place: int, words: Any, missing: npt.NDArray[np.bool_], where: Sequence[str | int]) -> Floats:

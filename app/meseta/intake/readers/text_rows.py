@@ -83,9 +83,11 @@ def numbers(
     odd : OddColumns, optional
         What was met before in columns that are no plain numbers; without it, a word is an error.
     """
+    if odd is None:
+        return _numbers(body, form, (path, lines_before), by_lines, None)
+    odd.set_out()
     rows = _numbers(body, form, (path, lines_before), by_lines, odd)
-    if odd is not None:
-        odd.count_marks(body, form.delimiter)
+    odd.count_marks(body, form.delimiter)
     return rows
 
 
@@ -104,6 +106,8 @@ def _numbers(body: bytes, form: TextForm, where: tuple[Path, int], by_lines: boo
         return (
             Rows(columns, [len(columns[0])], False, closes, True) if by_lines else _split_at_nan_rows(columns, closes)
         )
+    if odd is not None:
+        odd.go_back()
     cut = _cut(body, form)
     closes = closes or cut.ends
     if len(cut.blocks) == 1 and not by_lines and not cut.begins and not cut.left:
@@ -160,6 +164,8 @@ def _parts(
         columns = _parsed(b"\n".join(block.strip() for block in cut.blocks), form, path, lines_before, odd)
         if len(columns[0]) == sum(lengths):
             return columns, lengths
+    if odd is not None:
+        odd.go_back()
     places = zip(cut.blocks, cut.places, strict=True)
     parts = [_parsed(block, form, path, lines_before + body.count(b"\n", 0, at), odd) for block, at in places]
     joined = [np.concatenate([part[place] for part in parts]) for place in range(form.columns)] if parts else []
