@@ -111,7 +111,7 @@ def recipe_options(command: Command) -> Command:
 def recipe_from(
     recipe_path: str | None, preset: str | None, settings: Sequence[str], base: Recipe | None = None
 ) -> Recipe:
-    """Return the recipe that the options make."""
+    """Return the recipe that the options make; a preset leaves alone how the recordings of a study are read."""
     from meseta.recipe import Recipe
 
     if recipe_path and preset:
@@ -120,6 +120,10 @@ def recipe_from(
         recipe = Recipe.load(recipe_path)
     elif preset:
         recipe = Recipe.preset(preset)
+        if base is not None:
+            recipe = recipe.model_copy(
+                update={name: getattr(base, name) for name in ("intake", "calibration", "cutting")}
+            )
     else:
         recipe = base or Recipe()
     return recipe.with_settings(settings)

@@ -40,6 +40,10 @@ def _files(analysis: Analysis, bad_files: Sequence[MesetaError]) -> Iterator[str
     if bad_files:
         yield f"{len(bad_files)} of the files given could not be read; the result is without them."
     yield from _texts(analysis.traces.notes.get("warnings", ()))
+    assumed = _texts(analysis.traces.notes.get("assumptions", ()))
+    if assumed:
+        more = f" (and {len(assumed) - 1} more, in the report)" if len(assumed) > 1 else ""
+        yield f"Assumed of the recordings: {assumed[0]}{more}."
 
 
 def _texts(value: Any) -> list[str]:

@@ -131,5 +131,7 @@ def _inline(value: Any) -> str:
     if isinstance(value, Mapping):
         return ", ".join(f"{str(name).replace('_', ' ')} {_inline(entry)}" for name, entry in value.items())
     if isinstance(value, list | tuple):
+        if len(value) == 2 and all(isinstance(entry, float) for entry in value):  # lowest and highest
+            return " to ".join(_inline(entry) for entry in value)
         return ", ".join(_inline(entry) for entry in value)
     return typeset.number(value, 6) if isinstance(value, float) else str(value)

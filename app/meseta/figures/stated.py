@@ -25,7 +25,7 @@ def value_text(value: Any, info: FieldInfo) -> str:
         return "; ".join(f"{name}: {_plain(entry)}" for name, entry in value.items()) or "none"
     if isinstance(value, list | tuple):
         return "; ".join(_plain(entry) for entry in value) or "none"
-    return str(value).replace("_", " ")
+    return str(value).replace("_", " ") if value in info.choices else str(value)
 
 
 def _with_unit(text: str, unit: str) -> str:

@@ -11,6 +11,7 @@ from meseta.errors import InputError
 from meseta.intake.calibrate import AMPLIFIER_KINDS, Calibration
 from meseta.intake.drive import interval_doubts
 from meseta.intake.recording import RawChannel, Recording
+from meseta.intake.roles import DRIVE_ROLES, guess_role
 from meseta.intake.units import unit_factor
 from meseta.recipe.calibration import CalibrationSettings
 
@@ -49,7 +50,31 @@ def doubts_of(recording: Recording, settings: CalibrationSettings, kind: str, ch
     without = [name for name in ("bias_divided_by", "reference_resistance_ohm") if getattr(settings, name)]
     if kind in DIRECT and without:
         doubts.append(f"calibration.{without[0]} has no effect on a recorded {channel.role}")
+    doubts += _overruled(recording, settings, kind)
     return (*doubts, *_bias_doubts(recording, settings, kind), *interval_doubts(recording, settings))
+
+
+def _overruled(recording: Recording, settings: CalibrationSettings, kind: str) -> list[str]:
+    """Return in words which constants of the recipe contradict those that the recording states."""
+    names = {
+        "linear": ("bias_volt", "gain_volt_per_ampere", "high_gain_volt_per_ampere"),
+        "logarithmic": ("bias_volt", "volt_per_decade", "reference_ampere"),
+        "current": ("bias_volt",),
+        "curve": ("bias_volt",),
+    }.get(kind, ())
+    drive = ("nm_per_volt",) if recording.channel("piezo") is not None else ()
+    said = []
+    for name in (*names, *drive):
+        given, column = getattr(settings, name, None), recording.table.get(name)
+        stated: Any = recording.metadata.get(name) if column is None else column
+        values = np.asarray(stated if stated is not None else np.nan)
+        values = values[np.isfinite(values)] if values.dtype.kind in "fiu" else np.empty(0)
+        if given and len(values) and np.max(np.abs(values - given)) > SAME_BIAS * abs(given):
+            shown = f"{values.min():.6g}" + (f" to {values.max():.6g}" if values.min() < values.max() else "")
+            said.append(
+                f"{name} is stated as {shown}, the recipe says {given:.6g} (calibration.{name}): the latter is used"
+            )
+    return said
 
 
 def _bias_doubts(recording: Recording, settings: CalibrationSettings, kind: str) -> tuple[str, ...]:
@@ -93,13 +118,23 @@ def missing(recording: Recording, kind: str, channel: RawChannel, names: Sequenc
 def no_signal(recording: Recording) -> InputError:
     """Return the error for a recording of which no channel gives conductance."""
     names = [channel.name for channel in recording.channels]
-    in_volts = [one.name for one in recording.channels if one.role in ("other", "voltage") and one.unit.endswith("V")]
-    likely, role, unit = (in_volts[-1], "amplifier", "V") if in_volts else (names[-1], "conductance", "G0")
+    open_ones = [one for one in recording.channels if one.role in ("other", "voltage") and not _may_drive(one)]
+    in_volts = [one.name for one in open_ones if one.unit.endswith("V")]
+    last = open_ones[-1].name if open_ones else names[-1]
+    likely, role, unit = (in_volts[-1], "amplifier", "V") if in_volts else (last, "conductance", "G0")
     shown = ", ".join(f"'{name}'" for name in names[:6]) + (" ..." if len(names) > 6 else "")
     return InputError(
         f"no channel is known to be conductance, current or amplifier volts among {shown}",
         recording.source.name,
         f'say what it is: --set intake.channels."{likely}"=\'{{role = "{role}", unit = "{unit}"}}\'',
+    )
+
+
+def _may_drive(channel: RawChannel) -> bool:
+    """Return whether an attribute speaks of the drive."""
+    words = [str(value) for value in channel.attributes.values() if isinstance(value, str)]
+    return any(
+        guess_role(word).role in DRIVE_ROLES for text in words for word in (text, *text.split()) if len(word) > 1
     )
 
 

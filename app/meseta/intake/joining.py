@@ -12,6 +12,7 @@ import numpy.typing as npt
 
 from meseta.errors import InputError
 from meseta.intake.assembly import Part
+from meseta.intake.constants_said import plain_constants
 from meseta.intake.metadata import CONSTANTS
 from meseta.intake.recording import BETWEEN_TRACES
 from meseta.intake.rows import end_to_end
@@ -230,16 +231,29 @@ def _notes(parts: Sequence[Part]) -> dict[str, Any]:
         f"{names[0]}: {text}" if len(names) == 1 else f"{text} ({len(names)} files, first {names[0]})"
         for text, names in doubts.items()
     ]
-    first = parts[0].notes()
     ceiling = sum(part.nan_samples() for part in parts if _may_lack_numbers(part))
     return {
         "assumptions": said,
         "incomplete": incomplete,
-        "calibration": first["calibration"],
-        "conductance_from": first["conductance_from"],
-        "drive": first["drive"],
+        "calibration": _constants_of_all(parts),
+        "conductance_from": " and ".join(dict.fromkeys(part.calibration.kind for part in parts)),
+        "drive": "; ".join(dict.fromkeys(part.axis.said for part in parts)),
         "samples_without_conductance": ceiling,
     }
+
+
+def _constants_of_all(parts: Sequence[Part]) -> dict[str, Any]:
+    """Return the constants with their origin, for all recordings: lowest and highest where they differ."""
+    each = [plain_constants(one) for one in {id(part.calibration): part.calibration for part in parts}.values()]
+    found: dict[str, Any] = {}
+    for name in dict.fromkeys(name for one in each for name in one):
+        stated = [one[name] for one in each if name in one]
+        said = [one["value"] for one in stated]
+        numbers = [float(end) for value in said if not isinstance(value, str) for end in np.atleast_1d(value)]
+        value = [min(numbers), max(numbers)] if numbers and min(numbers) < max(numbers) else said[0]
+        origin = " and ".join(dict.fromkeys(str(one["from"]) for one in stated))
+        found[name] = {"value": value, "from": origin if len(stated) == len(each) else f"{origin}, not in all files"}
+    return found
 
 
 def _may_lack_numbers(part: Part) -> bool:
