@@ -14,7 +14,7 @@ from PySide6.QtWidgets import QApplication, QFileDialog, QMessageBox
 
 from meseta.analysis import Analysis
 from meseta.resources import sample
-from meseta.study import Study, gather
+from meseta.study import Study, gather, gathering
 from meseta.window.following import follower as module
 from meseta.window.following.follower import FOLLOW
 from meseta.window.following.line import sentence
@@ -185,6 +185,49 @@ def test_settings_undo_decisions_and_saving_work_meanwhile(following, night, tmp
         assert np.array_equal(study.traces().conductance, session.traces.conductance, equal_nan=True)
 
 
+def test_settings_that_give_no_traces_hold_it_up_until_they_are_corrected(following, night, until, up_to_date):
+    window, session = following, following.session
+    channels = {"no such column": {"role": "current", "unit": "nA"}}
+    session.change_recipe("channels", session.document.recipe.with_values("intake", channels=channels))
+    put(night, 4, 6)
+    until(lambda: "waiting (" in window.follow_line.words.text())
+    assert window.follower.active and traces(window) == 4
+    session.undo.undo()
+    up_to_date(window, 6)
+    assert window.follower.followed.bad == ()
+
+
+def test_files_that_a_setting_kept_out_are_tried_again_when_it_changes(following, night, until, up_to_date):
+    window, session = following, following.session
+    session.change_recipe("another reader", session.document.recipe.with_values("intake", reader="hdf5"))
+    put(night, 4, 6)
+    until(lambda: len(window.follower.followed.bad) == 2)
+    session.undo.undo()
+    up_to_date(window, 6)
+    until(lambda: window.follower.followed.bad == ())
+
+
+def test_closing_while_files_are_taken_in_leaves_a_whole_study(following, night, tmp_path, until, monkeypatch):
+    entered, go_on = threading.Event(), threading.Event()
+    true = gathering.write_recordings
+
+    def slow(*given):
+        entered.set()
+        go_on.wait()
+        given[-1].check()
+        true(*given)
+
+    monkeypatch.setattr(gathering, "write_recordings", slow)
+    put(night, 4, 8)
+    until(entered.is_set)
+    following.session.undo.setClean()
+    threading.Timer(0.2, go_on.set).start()
+    following.close()
+    names, _, _, damage = held(tmp_path / "night.h5")
+    assert names == [path.name for path in NIGHT[:4]] and damage == []
+    assert not (tmp_path / "night.h5.lock").exists()
+
+
 def test_work_is_stopped_without_ending_following(following, night, up_to_date):
     window = following
     window.run_action("stop")
@@ -202,7 +245,7 @@ def test_stop_ends_it_and_the_files_wait(following, night, tmp_path, until, qtbo
     put(night, 4, 6)
     looks = []
     window.jobs.submit(FOLLOW, "after", lambda *_: looks.append(1), lambda _: None)
-    until(lambda: looks and not window.jobs.busy)
+    until(lambda: bool(looks) and not window.jobs.busy)
     assert traces(window) == 4 and held(tmp_path / "night.h5")[0] == [path.name for path in NIGHT[:4]]
     window.follower.start(str(night), str(tmp_path / "night.h5"), window.keeper.study)
     until(lambda: traces(window) == 6)
@@ -305,6 +348,45 @@ def test_a_window_that_was_closed_offers_to_go_on(following, make, night, tmp_pa
     again.follower.stop()
     assert not again.follower.remembered().active
     QApplication.processEvents()
+
+
+WINDOW = """
+import sys
+from pathlib import Path
+from PySide6.QtCore import QSettings, QTimer
+from meseta.window.application import make_application, make_window
+from meseta.window.following import follower
+follower.LOOK_SECOND = follower.GROW_SECOND = 0.02
+place, night = Path(sys.argv[1]), sys.argv[2]
+application = make_application()
+window = make_window(application, QSettings(str(place / "window.ini"), QSettings.Format.IniFormat), place / "u.json")
+window.show()
+window.commands.follow(night, str(place / "night.h5"))
+session = window.session
+session.traces_changed.connect(lambda: print(session.traces.traces, flush=True))
+application.exec()
+"""
+
+
+def test_a_window_that_was_killed_goes_on_where_it_stopped(make, night, tmp_path, place, up_to_date, until):
+    put(night, 0, 2)
+    gather([night], tmp_path / "night.h5")
+    put(night, 2, 5)
+    killed = subprocess.Popen([sys.executable, "-c", WINDOW, str(place), str(night)], stdout=subprocess.PIPE, text=True)
+    while (line := killed.stdout.readline()) not in ("5\n", ""):
+        pass
+    killed.kill()
+    killed.communicate()
+    assert line == "5\n"
+    put(night, 5, 8)
+    again = make()
+    again.commands.offer_following()
+    again.run_action("go_on_following")
+    up_to_date(again, 8)
+    assert again.follower.followed.last.recordings == 3
+    again.follower.stop()
+    until(lambda: not again.jobs.busy)
+    assert held(tmp_path / "night.h5")[0] == [path.name for path in NIGHT[:8]]
 
 
 def test_nothing_is_offered_after_following_was_stopped(following, make, place):

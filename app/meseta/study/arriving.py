@@ -155,6 +155,12 @@ class Arrivals:
             if file.path in self._rests:
                 self._rests[file.path].done = True
 
+    def again(self, paths: Iterable[Path]) -> None:
+        """Look at files again that could not be taken in, though they have not changed."""
+        for path in paths:
+            if path in self._rests:
+                self._rests[path].done, self._settled = False, False
+
     def _why_waits(
         self, file: FoundFile, now: Look, table: frozenset[str] | None, knows: Callable[[Path, Look], bool]
     ) -> str:

@@ -183,12 +183,18 @@ class SampleRow:
         if written is not None:
             self._part[: self.length - whole] = written.read(whole, self.length)
 
-    def append(self, samples: Samples, wrote: Callable[[int], None] = lambda _: None) -> None:
-        """Add samples; ``wrote`` is called with the number of samples written, chunk by chunk."""
-        done = 0
-        while done < len(samples):
+    def append(
+        self,
+        samples: Samples,
+        wrote: Callable[[int], None] = lambda _: None,
+        start: int = 0,
+        stop: int | None = None,
+    ) -> None:
+        """Add samples ``start`` to ``stop`` (all); ``wrote`` is told the number of samples written, chunk by chunk."""
+        done, end = start, len(samples) if stop is None else stop
+        while done < end:
             filled = self.length % self._chunk
-            count = min(self._chunk - filled, len(samples) - done)
+            count = min(self._chunk - filled, end - done)
             self._part[filled : filled + count] = samples.read(done, done + count)
             self.length += count
             done += count

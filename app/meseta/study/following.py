@@ -19,6 +19,7 @@ from meseta.recipe import Recipe
 from meseta.study.arriving import Arrivals, Waiting, files_meant, folders_of
 from meseta.study.gathering import Added
 from meseta.study.making import hold_name, make_study
+from meseta.study.parts import FROM_RAW
 from meseta.study.seen import Look, look_at
 from meseta.study.study import Study
 from meseta.work import Work
@@ -49,21 +50,21 @@ class Looked:
         Files that are whole and not taken in: there are many of them, or they were not to be taken.
     waiting : tuple of Waiting
         Files that are not whole yet, and why.
-    trouble : str
-        Why nothing could be looked at; empty where it could.
+    trouble : InputError, optional
+        Why nothing could be looked at or taken in.
     """
 
     added: Added
     bad: tuple[MesetaError, ...] = ()
     ready: tuple[FoundFile, ...] = ()
     waiting: tuple[Waiting, ...] = ()
-    trouble: str = ""
+    trouble: InputError | None = None
 
     @property
     def words(self) -> str:
         """What is waited for, in one line; empty where nothing is."""
-        if self.trouble:
-            return f"waiting ({self.trouble})"
+        if self.trouble is not None:
+            return f"waiting ({self.trouble.what})"
         if self.ready:
             return f"{len(self.ready)} more to take in"
         if not self.waiting:
@@ -106,7 +107,7 @@ class Following:
     ) -> None:
         self.named, self.path, self.recipe, self.study = list(named), path, recipe, study
         self.total = Added()
-        self._arrivals, self._trouble, self._tight_byte = Arrivals(), "", 0
+        self._arrivals, self._trouble, self._tight_byte, self._read_by = Arrivals(), "", 0, ""
         self._making = ExitStack()
         if study is None and not path.exists():
             files_meant(self.named, path)  # what is named must be there at the beginning
@@ -146,6 +147,7 @@ class Following:
         StudyError
             Where the study cannot be written; it is as it was.
         """
+        self._try_again()
         try:
             ready = self._arrivals.look(self.named, self.path, self._table(), self._knows)
             now = self._portion(ready) if take else []
@@ -153,18 +155,29 @@ class Following:
         except InputError as error:  # the folder is away, or a table of metadata is half written
             new = (error,) if str(error) != self._trouble else ()
             self._trouble = str(error)
-            return Looked(Added(), new, trouble=error.what)
+            return Looked(Added(), new, trouble=error)
         self._trouble = ""
         bad = self._count(now, added)
         if added.sources:
             self._tighten(work)
         return Looked(added, bad, tuple(ready[len(now) :]), tuple(self._arrivals.waiting))
 
+    def _try_again(self) -> None:
+        """Try bad files again once what decides how files are read has changed."""
+        read_by = self._recipe.key(FROM_RAW)
+        if read_by != self._read_by:
+            self._read_by = read_by
+            self._arrivals.again(self.total.failed)
+
+    @property
+    def _recipe(self) -> Recipe:
+        return self.study.recipe if self.study is not None else self.recipe or Recipe()
+
     def _knows(self, path: Path, look: Look) -> bool:
         return self.study is not None and self.study.knows(path, look)
 
     def _table(self) -> frozenset[str] | None:
-        recipe = self.study.recipe if self.study is not None else self.recipe or Recipe()
+        recipe = self._recipe
         if recipe.intake.metadata_table is None:
             return None
         return frozenset(batch_context(recipe.intake).table)

@@ -12,6 +12,7 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import InputError, StudyError
+from meseta.intake.rows import BLOCK_SAMPLES
 from meseta.study.chunks import ChunkSamples, SampleRow
 from meseta.study.columns import json_text, write_array, write_attribute, write_columns, write_text
 from meseta.study.content import PHASES
@@ -109,8 +110,11 @@ class TraceWriter:
             self._row("drive_relative", np.float32, traces.drive.unit, steps)
         if traces.quality is not None:
             self._row("quality", np.uint8, "", _Constant(0, begin))
-        for path, row in self._rows.items():
-            row.append(_samples_for(path, traces), self._wrote)
+        samples = {path: _samples_for(path, traces) for path in self._rows}
+        for start in range(0, traces.samples, BLOCK_SAMPLES):  # side by side: rows share what is read of a recording
+            stop = min(start + BLOCK_SAMPLES, traces.samples)
+            for path, row in self._rows.items():
+                row.append(samples[path], self._wrote, start, stop)
         self._ends = _without_samples(traces) if before is None else _joined(before, traces)
 
     def _row(self, path: str, dtype: npt.DTypeLike, unit: str, earlier: Samples) -> None:

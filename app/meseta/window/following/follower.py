@@ -170,11 +170,12 @@ class Follower(QObject):
         from meseta.window.filecheck.remembered import RememberedLayouts
 
         following, agreed = self._held[0], self._agreed
+        behind = self.followed is not None and self.followed.last.behind
         remembered = {} if agreed else RememberedLayouts(self._settings).entries()
 
         def task(work: Any, _: Callable[[Any], None]) -> Outlook:
             with self.still:
-                return outlook(following, agreed, remembered, work)
+                return outlook(following, agreed, remembered, work, behind=behind)
 
         self._session.jobs.submit(FOLLOW, "following", task, self._looked, self._failed)
 
@@ -182,10 +183,11 @@ class Follower(QObject):
         followed = self.followed
         if followed is None:
             return
-        self.followed = replace(followed, last=seen, late=(*followed.late, *seen.late))
+        self.followed = replace(followed, last=replace(seen, opened=None), late=(*followed.late, *seen.late))
         if seen.opened is not None:
             self._take(seen.opened)
-        self.changed.emit()
+        if self.followed != followed:
+            self.changed.emit()
         if seen.unsure:
             self.unsure.emit(seen.unsure)
         else:
@@ -229,6 +231,7 @@ class Follower(QObject):
         folder, study = (str(Path(one).absolute()) for one in (self.followed.folder, self.followed.study))
         plain = {"folder": folder, "study": study, "active": active}
         self._settings.setValue(_STORED, json.dumps(plain))
+        self._settings.sync()  # a machine that goes down while nobody is there has it too
 
     def remembered(self) -> Remembered | None:
         """Return what was followed last."""

@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from meseta.errors import MesetaError
+from meseta.errors import InputError, MesetaError
 from meseta.recipe import Recipe
 from meseta.recipe.kept_layouts import KeptLayout
 from meseta.window.opening import Opened, opened_study
@@ -34,15 +34,17 @@ class Outlook:
     words : str
         What is waited for; empty where nothing is.
     waiting : tuple of str
-        The first files that wait, each with why.
+        The first files that wait, each with why; what is wrong where no look is possible.
     bad : tuple of MesetaError
         All files that could not be taken in.
     late : tuple of MesetaError
-        What else is told for the first time: metadata that came too late, a folder that is away.
+        What else is told of files for the first time: metadata that came too late.
     unsure : str
         File whose layout must be looked at by the user before a study is made; empty where there is none.
     more : bool
         Whether whole files are left for the next look.
+    behind : bool
+        Whether something was taken in that cannot be shown: by the settings as they are, no traces can be made.
     """
 
     opened: Opened | None = None
@@ -54,6 +56,7 @@ class Outlook:
     late: tuple[MesetaError, ...] = ()
     unsure: str = ""
     more: bool = False
+    behind: bool = False
 
 
 def begun(folder: str, path: str, recipe: Recipe | None, study: object) -> Following:
@@ -72,7 +75,9 @@ def ended(following: Following, *, close_study: bool) -> None:
         following.study.close()
 
 
-def outlook(following: Following, agreed: bool, remembered: Mapping[str, KeptLayout], work: Work) -> Outlook:
+def outlook(
+    following: Following, agreed: bool, remembered: Mapping[str, KeptLayout], work: Work, *, behind: bool = False
+) -> Outlook:
     """Look once.
 
     Parameters
@@ -83,6 +88,8 @@ def outlook(following: Following, agreed: bool, remembered: Mapping[str, KeptLay
     remembered : mapping of str to KeptLayout
         Layouts that the file check may propose.
     work : Work
+    behind : bool
+        Whether something of earlier looks is still to be shown.
     """
     agreed = agreed or following.study is not None
     looked = following.look(work, take=agreed)
@@ -91,19 +98,30 @@ def outlook(following: Following, agreed: bool, remembered: Mapping[str, KeptLay
         if _doubtful(first, following.recipe or Recipe(), remembered, work):
             return Outlook(words=f"how {first.name} is read must be settled first", unsure=str(first))
         looked = following.look(work)
-    total, added = following.total, looked.added
-    opened = opened_study(following.study, work) if added.sources and following.study is not None else None
-    failed = {str(error) for error in total.bad}
-    return Outlook(
-        opened,
-        len(total.sources),
-        total.traces,
-        looked.words,
-        tuple(f"{one.file.name}: {one.why}" for one in looked.waiting[:SHOWN_WAITING]),
-        tuple(total.bad),
-        tuple(error for error in looked.bad if str(error) not in failed),
+    if looked.trouble is not None:
+        return replace(_standing(following), words=looked.words, waiting=(str(looked.trouble),), behind=behind)
+    added = looked.added
+    opened, words = None, looked.words
+    if following.study is not None and (behind or added.sources):
+        try:
+            opened = opened_study(following.study, work)
+        except InputError as error:
+            words = f"waiting ({error.what})"
+    failed = {str(error) for error in following.total.bad}
+    return replace(
+        _standing(following),
+        opened=opened,
+        words=words,
+        waiting=tuple(f"{one.file.name}: {one.why}" for one in looked.waiting[:SHOWN_WAITING]),
+        late=tuple(error for error in looked.bad if str(error) not in failed),
         more=bool(looked.ready),
+        behind=opened is None and (behind or bool(added.sources)),
     )
+
+
+def _standing(following: Following) -> Outlook:
+    total = following.total
+    return Outlook(recordings=len(total.sources), traces=total.traces, bad=tuple(total.bad))
 
 
 def _doubtful(path: Path, recipe: Recipe, remembered: Mapping[str, KeptLayout], work: Work) -> bool:
