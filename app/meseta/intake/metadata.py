@@ -87,6 +87,7 @@ _CANONICAL: Final = {alias: name for name, (_, aliases) in CONSTANTS.items() for
 }
 _NUMBER: Final = r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?"
 _THOUSANDS: Final = r"[-+]?[1-9]\d{0,2},\d{3}(?![\d.,eE])"
+_GROUPED: Final = r"[-+]?[1-9]\d{0,2}(?:,\d{3}){2,}(?![\d,])"
 """A number whose comma may be a decimal one or stand between thousands: 10,000."""
 _DIRECTIONS: Final = {
     "opening": "opening", "open": "opening", "pull": "opening", "break": "opening", "breaking": "opening",
@@ -152,6 +153,9 @@ def _constant_of(name: str) -> tuple[str, str]:
     if _key(name) in _CANONICAL:
         return _CANONICAL[_key(name)], ""
     stem, unit = split_unit(name)
+    warm = re.fullmatch(r"\s*(temperature)[\s_\[(]+(?:°\s*C|℃|deg\s*C|C|celsius)[\])]?\s*", name, re.IGNORECASE)
+    if warm:
+        return "temperature_kelvin", ""
     if stem and _key(stem) in _CANONICAL:
         return _CANONICAL[_key(stem)], unit
     words = [word for word in re.split(r"[_\s]+", name.strip()) if word]
@@ -187,14 +191,20 @@ def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plai
     constant, unit = _constant_of(name)
     constant = constant or _constant_by_value(name, value)
     if not constant:
+        _refuse_unknown_unit(name, value, where)
         return name, value, ""
     if constant not in CONSTANTS:
         return constant, _word(constant, value), ""
+    at = f"{where}, '{name}'" if where else name
     number, stated = _number_and_unit(value)
+    if constant == "temperature_kelvin" and (celsius := _celsius(name, value)) is not None:
+        return constant, celsius, ""
     if number is None:
-        if constant in ("gain_volt_per_ampere", "offset_volt", "nm_per_second"):
-            return name, value, ""
-        raise _no_number(value, f"{where}, '{name}'" if where else name)
+        fault = _no_number(value, at)
+        if constant in _MAY_BE_WORDS:
+            begins = re.match(r"\s*[-+.]?\d", str(value))
+            return name, value, f"'{name}' is '{value}': not used, as {fault.what}; {fault.remedy}" if begins else ""
+        raise fault
     unit = stated or unit
     wanted = CONSTANTS[constant][0]
     if constant == "gain_volt_per_ampere" and unit and parse_unit(unit, where).dimension in ("A/V", "ohm"):
@@ -202,7 +212,7 @@ def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plai
         gain = 1.0 / (number * factor) if "A/V" in parse_unit(unit).dimension else number * factor
         return constant, _exact(gain), ""
     if unit:
-        return constant, _exact(number * unit_factor(unit, wanted, f"{where} {name}".strip())), ""
+        return constant, _exact(number * unit_factor(unit, wanted, at)), ""
     if _key(name) == constant or not math.isfinite(number):
         return constant, float(number), ""
     if constant in ("bias_volt", "bias_offset_volt") and abs(number) > LARGEST_BIAS_VOLT:
@@ -214,11 +224,31 @@ def canonical_entry(name: str, value: Plain, where: str = "") -> tuple[str, Plai
     return constant, float(number), f"the unit of '{name}' is not stated: {number:g} is taken as {wanted}"
 
 
+_MAY_BE_WORDS: Final = ("gain_volt_per_ampere", "offset_volt", "nm_per_second", "temperature_kelvin")
+"""Constants in whose place people also write words ("gain: high", "temperature: room")."""
+
+
+def _refuse_unknown_unit(name: str, value: Plain, where: str) -> None:
+    """Raise where a name is a constant but for its unit in brackets, which is not known: "bias (mVV)"."""
+    match = re.fullmatch(r"\s*(.+?)\s*[\[(]\s*([^\[\]()]+?)\s*[\])]\s*", name)
+    if match is None or _CANONICAL.get(_key(match[1])) not in CONSTANTS or _number_and_unit(value)[0] is None:
+        return
+    parse_unit(match[2], f"{where}, '{name}'" if where else name)
+
+
+def _celsius(name: str, value: Plain) -> float | None:
+    """Return a temperature in kelvin that is stated in degrees Celsius; None where it is not."""
+    degree = r"(?:°\s*C|℃|deg\s*C|C|[Cc]elsius)"
+    match = re.fullmatch(rf"\s*({_NUMBER})\s*({degree})?\s*", str(value).replace(",", "."))
+    in_name = re.search(rf"[\s_\[(]{degree}[\])]?\s*$", name)
+    return _exact(float(match[1]) + 273.15) if match and (match[2] or in_name) else None
+
+
 def _no_number(value: Plain, where: str) -> InputError:
     """Return the error for a constant whose value cannot be understood."""
     text = str(value)
     match = re.fullmatch(rf"\s*{_NUMBER}\s*(\S.*?)\s*", text)
-    if re.fullmatch(rf"\s*{_THOUSANDS}.*", text):
+    if re.match(rf"\s*{_THOUSANDS}", text):
         plain = text.replace(",", "")
         remedy = f"write {plain.strip()}, or a point where a decimal comma is meant"
         return InputError(f"'{text}' may have a decimal comma or one between thousands", where, remedy)
@@ -249,8 +279,9 @@ def _number_and_unit(value: Plain) -> tuple[float | None, str]:
         return None, ""
     if isinstance(value, int | float):
         return float(value), ""
-    if re.fullmatch(rf"\s*{_THOUSANDS}(?!\d).*", value):
+    if re.match(rf"\s*{_THOUSANDS}", value):
         return None, ""
+    value = value.replace(",", "") if re.match(rf"\s*{_GROUPED}", value) else value
     text = re.sub(r"^\s*10\s*(?:\^|\*\*)\s*([-+]?\d{1,2})\b", r"1e\1", value.replace(",", "."))
     match = re.fullmatch(rf"\s*({_NUMBER})\s*(\S.*)?", text)
     if match is None or (match[2] and not is_unit(match[2].strip())):

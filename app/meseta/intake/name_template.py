@@ -31,12 +31,18 @@ def from_name(name: str, template: str) -> tuple[dict[str, Plain], list[str]]:
         Where the name does not fit the template, or the template is not one.
     """
     for counted in (True, False):  # a counter may hold letters where it fits in no other way
-        for part in dict.fromkeys((name, Path(name).name, Path(name).stem)):
+        for part in dict.fromkeys((name, str(Path(name).with_suffix("")), Path(name).name, Path(name).stem)):
             first, last = (re.fullmatch(one, part) for one in _patterns(template, counted))
             if first is not None and last is not None:
                 doubt = _two_ways(template, first.groupdict(), last.groupdict())
-                return {word: as_written(word, text) for word, text in first.groupdict().items()}, doubt
+                return {word: _value(word, text) for word, text in first.groupdict().items()}, doubt
     raise InputError(f"the name does not fit the template {template}", name, "change intake.name_template")
+
+
+def _value(word: str, text: str) -> Plain:
+    if word.lower() in _COUNTERS and re.fullmatch(r"\d{1,18}", text):
+        return int(text)
+    return as_written(word, re.sub(r"(?<=\d)p(?=\d)", ".", text) if is_number_of(word) else text)
 
 
 def _two_ways(template: str, first: dict[str, str], last: dict[str, str]) -> list[str]:

@@ -112,12 +112,18 @@ def _flat(entries: Mapping[str, Any]) -> Entries:
 
 def _simple_yaml(text: str) -> Entries:
     """Yield the "key: value" lines of a YAML file; lists, tags, anchors and texts over several lines have no value."""
+    inside = -1
     for line in text.splitlines():
+        depth = len(line) - len(line.lstrip())
+        if inside >= 0 and (not line.strip() or depth > inside):
+            continue  # a text over several lines
+        inside = depth if re.search(r":\s*(?:[&!]\S+\s+)*[|>][-+\d]*\s*(?:#.*)?$", line) else -1
         match = re.match(r"""^\s*(?:"([^"]+)"|'([^']+)'|([^\W\d][^:#"'{}\[\]]*?))\s*:(?:\s+(.*?))?\s*$""", line)
         if match is None:
             continue
         name = match[1] or match[2] or match[3]
         value = re.sub(r"(?:^|\s+)#.*$", "", match[4] or "").strip()
+        value = re.sub(r"^(?:(?:&[\w-]+|!!(?:str|int|float))\s+)+(?=\S)", "", value)
         quoted = re.fullmatch(r"""(["'])(.*?)\1(?:\s+#.*)?""", match[4] or "")
         if quoted:
             yield name, quoted[2]
@@ -133,6 +139,7 @@ def _plain(entries: Entries) -> tuple[dict[str, Plain], list[str]]:
     passed, twice = [], []
     for name, value in entries:
         one = as_written(name, value) if isinstance(value, str) else value
+        one = str(one) if isinstance(one, int) and abs(one) >= 1 << 63 else one
         if one is None:
             passed.append(name)
         elif one == "":
