@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 from small_recordings import counted, log_uniform, matrix_of, noise_model, recording
 
-from meseta.histograms import Grid, correlation_histogram, kernels, shifted_correlation
+from meseta.histograms import Grid, correlation_histogram, correlation_kernels, shifted_correlation
 from meseta.histograms.correlation import correlation_notes, correlation_of, largest_by_chance, products
 from meseta.histograms.grids import logarithmic_edges
 from meseta.recipe import Recipe
@@ -99,14 +99,16 @@ def test_independent_bins_scatter_by_one_over_root_traces() -> None:
 def test_permutation_keeps_each_block_of_each_column() -> None:
     values = np.random.default_rng(3).random((95, 4)).astype(np.float32)
     permuted = np.empty_like(values)
-    kernels.permute_within(values, 20, np.arange(4).astype(np.uint64), permuted)
+    correlation_kernels.permute_within(values, 20, np.arange(4).astype(np.uint64), permuted)
     for first in range(0, 95, 20):
         assert np.array_equal(np.sort(permuted[first : first + 20], 0), np.sort(values[first : first + 20], 0))
     assert not np.array_equal(permuted, values)
     place = np.zeros((20, 20))
     ramp = np.tile(np.arange(20, dtype=np.float32)[:, None], (1, 2000))
     shuffled = np.empty_like(ramp)
-    kernels.permute_within(ramp, 20, np.random.default_rng(1).integers(0, 1 << 62, 2000).astype(np.uint64), shuffled)
+    correlation_kernels.permute_within(
+        ramp, 20, np.random.default_rng(1).integers(0, 1 << 62, 2000).astype(np.uint64), shuffled
+    )
     np.add.at(place, (np.repeat(np.arange(20), 2000), shuffled.astype(int).ravel()), 1)
     # every value is as likely at every place: chi-square of 400 cells with 361 degrees of freedom
     assert ((place - 100) ** 2 / 100).sum() < 361 + 4 * np.sqrt(2 * 361)
@@ -190,4 +192,4 @@ def test_largest_product_equals_the_plain_one(rows: int) -> None:
     values = np.random.default_rng(rows).normal(size=(rows, 7)).astype(np.float32)
     plain = np.abs(values.T @ values)
     np.fill_diagonal(plain, 0)
-    assert kernels.largest_product(values) == pytest.approx(plain.max(), rel=1e-5)
+    assert correlation_kernels.largest_product(values) == pytest.approx(plain.max(), rel=1e-5)

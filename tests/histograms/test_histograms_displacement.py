@@ -17,8 +17,8 @@ from meseta.histograms import (
     Grid,
     displacement_counts,
     displacement_edges,
+    displacement_kernels,
     displacement_of_selection,
-    kernels,
 )
 from meseta.recipe import Recipe
 from meseta.traces import TraceSet
@@ -80,7 +80,7 @@ def test_steps_that_fall_on_edges(start: float, step: float, zero: float, column
     values = np.full(samples, 0.5, np.float32)
     one = np.zeros(1, np.int64)
     tally = np.zeros((2, columns, 2), np.uint32)
-    kernels.count_stepped_grid(
+    displacement_kernels.count_stepped_grid(
         values, one, one, np.array([samples]), one, np.array([start]), np.array([step]), np.array([zero]), edges,
         np.zeros(1 << 17, np.uint16), np.array([np.nan, np.nan], np.float32), 1, tally,
     )  # fmt: skip

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
+from meseta.histograms import correlation_kernels, counting_kernels
 from meseta.histograms.grids import histogram_grid
 from meseta.histograms.memory import without_line
 from meseta.histograms.results import CorrelationHistogram, CountMatrix, Grid
@@ -56,7 +56,7 @@ def correlation_of(counts: npt.NDArray[np.number]) -> Floats:
     values = np.ascontiguousarray(counts)
     total = np.zeros(values.shape[1])
     result = np.empty((values.shape[1], values.shape[1]))
-    kernels.correlate_products(products(values, total), total, len(values), result)
+    correlation_kernels.correlate_products(products(values, total), total, len(values), result)
     return result
 
 
@@ -74,7 +74,7 @@ def products(values: npt.NDArray[np.number], total: Floats | None = None) -> Flo
     for first in range(0, len(values), _CHUNK):
         chunk = np.ascontiguousarray(values[first : first + _CHUNK])
         part, squares = narrow[: len(chunk)], np.zeros(bins)
-        kernels.narrow_rows(chunk, part, total, squares)
+        correlation_kernels.narrow_rows(chunk, part, total, squares)
         loud = squares >= _EXACT_FLOAT32
         if not loud.any():
             result += part.T @ part
@@ -113,7 +113,7 @@ def correlation_counts(
     first, last, merge = histogram_grid(counts.grid, low, high, settings.bins_per_decade, settings.bin_width_g0)
     grid = counts.grid.part(first, last, merge)
     values = np.empty((len(rows), grid.bins))
-    kernels.merge_rows(counts.counts[:, first:last], rows, merge, values)
+    counting_kernels.merge_rows(counts.counts[:, first:last], rows, merge, values)
     return grid, values
 
 
@@ -211,7 +211,7 @@ def largest_by_chance(values: Floats, block: int, permutations: int, seed: int, 
     def one(columns: npt.NDArray[np.uint64]) -> float:
         # a product of our own: threads of a matrix library inside threads of ours wait for each other
         permuted = np.empty_like(scaled)
-        kernels.permute_within(scaled, block, columns, permuted)
-        return kernels.largest_product(permuted)
+        correlation_kernels.permute_within(scaled, block, columns, permuted)
+        return correlation_kernels.largest_product(permuted)
 
     return np.array(list(work.each(one, list(seeds), "permuting", unit="permutations")))

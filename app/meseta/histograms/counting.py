@@ -7,7 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
+from meseta.histograms import counting_kernels
 from meseta.histograms.grids import axis_range, histogram_grid, stored_grid
 from meseta.histograms.lookup import Lookup, lookup_of
 from meseta.histograms.region import nm_a_sample, region_of
@@ -80,18 +80,12 @@ def count_ranges(
     longest = int((end - begin).max(initial=0))
     counts = np.zeros((traces.traces, grid.bins), np.uint16 if longest <= _SMALL else np.uint32)
     excluded = np.zeros((traces.traces, len(EXCLUDED)), np.int64)
-    values = np.ascontiguousarray(traces.conductance)
-    table, thresholds, column = lookup.table, lookup.thresholds, lookup.column
-    if traces.quality is None:
-        kernels.count_rows(
-            values, begin, end, table, thresholds, lookup.most_compares, column, counts, excluded
-        )  # fmt: skip
-    else:
-        quality = np.ascontiguousarray(traces.quality.read(0, traces.samples), np.uint8)
-        kernels.count_flagged_rows(
-            values, quality, begin, end, table, thresholds, column, counts, excluded,
-            EXCLUDED.index("saturated"), EXCLUDED.index("untrusted"),
-        )  # fmt: skip
+    quality = np.empty(0, np.uint8) if traces.quality is None else traces.quality.read(0, traces.samples)
+    counting_kernels.count_rows(
+        np.ascontiguousarray(traces.conductance), np.ascontiguousarray(quality, np.uint8), begin, end,
+        lookup.table, lookup.thresholds, lookup.most_compares, lookup.column, counts, excluded,
+        EXCLUDED.index("saturated"), EXCLUDED.index("untrusted"),
+    )  # fmt: skip
     return counts, excluded
 
 

@@ -7,7 +7,7 @@ from collections.abc import Callable, Sequence
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
+from meseta.histograms import displacement_kernels
 from meseta.histograms.counting import saturation_level
 from meseta.histograms.grids import anchored_grid, axis_range
 from meseta.histograms.lookup import Lookup, lookup_of
@@ -89,14 +89,14 @@ def _count(
     start, step = np.ascontiguousarray(drive.start), np.ascontiguousarray(drive.step)
     tally = np.zeros((2, len(edges) - 1, len(lookup.column)), np.uint32)
     if drive.relative is None and traces.quality is None and (step[rows] != 0).all():
-        kernels.count_stepped_grid(
+        displacement_kernels.count_stepped_grid(
             values, rows, region.begin, region.end, origin, start, step, zero, edges,
             lookup.table, lookup.thresholds, lookup.most_compares, tally,
         )  # fmt: skip
     else:
         quality = np.empty(0, np.uint8) if traces.quality is None else traces.quality.read(0, traces.samples)
         relative = np.empty(0, np.float32) if drive.relative is None else drive.relative.read(0, traces.samples)
-        kernels.count_explicit_grid(
+        displacement_kernels.count_explicit_grid(
             values, np.ascontiguousarray(quality), rows, region.begin, region.end, origin, start, step,
             np.ascontiguousarray(relative), zero, edges, lookup.table, lookup.thresholds, tally,
         )  # fmt: skip

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
+from meseta.histograms import counting_kernels
 from meseta.histograms.results import EXCLUDED, ConductanceHistogram, CountMatrix, Resampling
 from meseta.recipe.histogram import HistogramSettings
 
@@ -78,7 +78,7 @@ def summed(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> tuple[npt.NDArra
     """Return the sums of the chosen rows in fine bins, and how many of them reach each bin of the histogram."""
     fine = np.zeros(counts.grid.bins, np.int64)
     reached = np.zeros(counts.shown.bins, np.int64)
-    kernels.sum_rows(counts.counts, rows, counts.merge, fine, reached)
+    counting_kernels.sum_rows(counts.counts, rows, counts.merge, fine, reached)
     return fine, reached
 
 
@@ -103,7 +103,7 @@ def _merged(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> Iterator[Floats
     part = np.empty((min(_ROWS_A_BLOCK, len(rows)), counts.shown.bins))
     for first in range(0, len(rows), _ROWS_A_BLOCK):
         chosen = rows[first : first + _ROWS_A_BLOCK]
-        kernels.merge_rows(counts.counts, chosen, counts.merge, part[: len(chosen)])
+        counting_kernels.merge_rows(counts.counts, chosen, counts.merge, part[: len(chosen)])
         yield part[: len(chosen)]
 
 

@@ -94,4 +94,5 @@ def _table(cuts: npt.NDArray[np.float32], regular: int) -> tuple[npt.NDArray[np.
     table[:half] = fallen[0] + np.cumsum(steps[:half], dtype=np.int32) - within[:half]
     table[_INFINITE << 8 : half] = regular
     table[half + (_INFINITE << 8) :] = regular + 2
+    within[half] += np.count_nonzero(cuts == 0)  # the cell of minus zero, which is not below a cut at zero
     return table, max(1, int(within.max()))

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
+from meseta.histograms import counting_kernels
 from meseta.histograms.results import CountMatrix
 
 __all__ = ["Memory", "autocovariance", "block_length", "long_run", "memory_of", "record_features"]
@@ -63,7 +63,7 @@ def record_features(counts: CountMatrix, rows: npt.NDArray[np.int64]) -> Floats:
     values = np.empty((len(rows), -(-counts.grid.bins // width)))
     if len(rows) == 0:
         return np.empty((0, 0))
-    kernels.merge_rows(counts.counts, rows, width, values)
+    counting_kernels.merge_rows(counts.counts, rows, width, values)
     np.sqrt(values, out=values)
     values -= values.mean(0)
     spread, axes = np.linalg.eigh(values.T @ values)

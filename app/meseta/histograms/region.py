@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
+from meseta.histograms import region_kernels
 from meseta.intake.alignment import Alignment
 from meseta.recipe.histogram import HistogramSettings
 from meseta.segmentation.results import NoiseModel
@@ -98,7 +98,7 @@ def _window(
     drive = traces.drive
     begin, end = np.empty(traces.traces, np.int64), np.empty(traces.traces, np.int64)
     relative = np.empty(0, np.float32) if drive.relative is None else drive.relative.read(0, traces.samples)
-    kernels.find_window(
+    region_kernels.find_window(
         np.ascontiguousarray(traces.offsets[:-1]),
         phase_begin,
         phase_end,
@@ -124,7 +124,7 @@ def _settled(traces: TraceSet, begin: Integers, end: Integers, noise: NoiseModel
     stay = np.where(known, np.rint(tail_second / np.where(known, interval, 1.0)), _UNTIMED_TAIL).astype(np.int64)
     settled = np.empty(traces.traces, np.int64)
     below = np.full(traces.traces, level, np.float32)
-    kernels.settle_region(traces.conductance, begin, end, below, stay, settled)
+    region_kernels.settle_region(traces.conductance, begin, end, below, stay, settled)
     return settled
 
 

@@ -27,7 +27,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels, resampling_kernels
+from meseta.histograms import counting_kernels, resampling_kernels
 from meseta.histograms.memory import Memory, memory_of, record_features
 from meseta.histograms.results import CountMatrix, Resampling
 from meseta.recipe.histogram import HistogramSettings
@@ -318,7 +318,7 @@ def _product(counts: CountMatrix, rows: Integers, weights: Weights, work: Work) 
         work.check()
         chosen = rows[first : first + step]
         part = np.empty((len(chosen), counts.shown.bins), np.float32)
-        kernels.merge_rows(counts.counts, chosen, counts.merge, part)
+        counting_kernels.merge_rows(counts.counts, chosen, counts.merge, part)
         drawn = weights[:, first : first + step]
         most = float(part.max(initial=0)) * int(drawn.sum(1, dtype=np.int64).max(initial=0))
         kind = np.float32 if most < _EXACT_FLOAT32 else np.float64

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
+from meseta.histograms.counting_kernels import merged_bin
 from meseta.kernels import kernel, warm_up
 
 __all__ = ["add_jumps", "draw_blocks", "running_rows", "weight_jumps"]
@@ -69,11 +70,8 @@ def running_rows(
     for place in range(len(rows)):
         line = counts[rows[place]]
         for coarse in range(running.shape[1]):
-            begin = (first + coarse) * merge
-            total = np.int64(0)
-            for at in range(begin, min(begin + merge, len(line))):
-                total += line[at]
-            running[place, coarse] = total + (running[place - 1, coarse] if place > 0 else 0.0)
+            before = running[place - 1, coarse] if place > 0 else 0.0
+            running[place, coarse] = before + merged_bin(line, first + coarse, merge)
 
 
 @kernel

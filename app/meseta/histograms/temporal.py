@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from meseta.histograms import kernels
+from meseta.histograms import counting_kernels
 from meseta.histograms.memory import autocovariance, memory_of, record_features, without_line
 from meseta.histograms.results import CountMatrix, Grid
 from meseta.recipe.histogram import TemporalSettings
@@ -76,7 +76,7 @@ def temporal_histogram(
     reached = np.zeros(counts.shown.bins, np.int64)
     for column, start in enumerate(first):
         rows = start + np.flatnonzero(used[start : start + step])
-        kernels.sum_rows(counts.counts, rows, counts.merge, total[column], reached)
+        counting_kernels.sum_rows(counts.counts, rows, counts.merge, total[column], reached)
     traces = np.add.reduceat(used.astype(np.int64), first) if len(first) else np.zeros(0, np.int64)
     return TemporalHistogram(counts.shown, first, step, traces, counts.shown_counts(total))
 
@@ -224,7 +224,7 @@ def drift_of(counts: CountMatrix, kept: npt.NDArray[np.bool_], above_g0: float =
 
 def _block_counts(counts: CountMatrix, rows: Integers) -> Floats:
     total, reached = np.zeros(counts.grid.bins, np.int64), np.zeros(counts.shown.bins, np.int64)
-    kernels.sum_rows(counts.counts, rows, counts.merge, total, reached)
+    counting_kernels.sum_rows(counts.counts, rows, counts.merge, total, reached)
     result: Floats = counts.shown_counts(total).astype(np.float64)
     return result
 
