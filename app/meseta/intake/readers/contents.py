@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any, Protocol
 
@@ -12,7 +13,7 @@ import numpy.typing as npt
 
 from meseta.intake.metadata import Plain, canonical, plain_value
 from meseta.intake.recording import RawChannel
-from meseta.intake.roles import guess_role
+from meseta.intake.roles import DRIVE_ROLES, SIGNAL_ROLES, Guess, guess_role
 from meseta.recipe.intake import IntakeSettings
 from meseta.traces import Samples
 
@@ -80,6 +81,9 @@ def whole(samples: int, name: str = "") -> tuple[npt.NDArray[np.int64], npt.NDAr
     return np.array([0, samples], np.int64), np.zeros(1, np.int64), np.array([name], np.str_)
 
 
+_SAID_IN = ("name", "channel_name", "label", "title", "standard_name", "description")
+"""Attributes that say in words what a channel is."""
+_FREE_TEXTS = ("title", "description")
 _CONVERSION = (
     ("scale", "scale_factor", "slope", "volt_per_count", "volts_per_count", "lsb", "lsb_volt", "counts_to_volt"),
     ("offset", "add_offset", "intercept", "offset_value"),
@@ -142,6 +146,8 @@ def make_channel(
         if guess.role == "other" and other:
             second = guess_role(other, stated or unit, "", ground)
             guess = second if second.role != "other" else guess
+    if guess.role == "other" and (said := _told_in_words(lowered, stated or unit, ground)) is not None:
+        guess = said
     scale, offset = conversion(attributes, dtype.kind in "iu")
     doubts = list(guess.doubts)
     if (
@@ -155,10 +161,26 @@ def make_channel(
     return RawChannel(name, samples, *said, doubts=tuple(doubts), attributes=plain)
 
 
+def _told_in_words(lowered: Mapping[str, Any], unit: str, ground: str) -> Guess | None:
+    """Return the role that the words of an attribute speak of; None where they speak of none, or of several."""
+    for key in _SAID_IN:
+        words = re.findall(r"[^\W\d_]{2,}", str(lowered.get(key) or ""))
+        found = {(guess := guess_role(word, unit, "", ground)).role: guess for word in words}
+        found = {
+            role: guess for role, guess in found.items() if role in SIGNAL_ROLES + DRIVE_ROLES + ("voltage", "bias")
+        }
+        if len(found) > 1:  # "voltage at the piezo"
+            found.pop("voltage", None)
+        if len(found) == 1 and (guess := next(iter(found.values()))).role != "voltage":
+            said = f"its {key} says '{str(lowered[key])[:60]}': taken as {guess.role}"
+            return replace(guess, doubts=(said,)) if key in _FREE_TEXTS else guess
+    return None
+
+
 def channel_constants(attributes: Mapping[str, Any], where: str) -> tuple[dict[str, Plain], list[str]]:
     """Return the calibration constants among a channel's attributes, and doubts about them."""
     skipped = conversion_names() if any(str(name).lower() in _CONVERSION[0] for name in attributes) else frozenset()
-    words = ("unit", "units", "role", "quantity", "long_name", "name", "description")
+    words = ("unit", "units", "role", "quantity", "long_name", *_SAID_IN)
     kept = {key: value for key, value in attributes.items() if str(key).lower() not in (*words, *skipped)}
     return canonical(kept, where)
 

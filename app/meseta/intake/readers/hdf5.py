@@ -14,6 +14,7 @@ from natsort import natsorted
 from meseta.errors import InputError
 from meseta.intake.metadata import Plain, canonical, canonical_entry, plain_value
 from meseta.intake.readers.contents import Contents, channel_constants, columns_of, make_channel
+from meseta.intake.readers.hdf5_frames import without_frames
 from meseta.intake.readers.hdf5_layout import sheet_of
 from meseta.intake.readers.hdf5_leaves import Leaf, leaves_of
 from meseta.intake.readers.hdf5_numbered import numbered_sheet
@@ -50,7 +51,7 @@ class Hdf5Reader:
                 stack.callback(file.close)
                 tree = walk(file, path)
                 stack.callback(tree.close)
-                contents = understood(tree, path, settings)
+                contents = understood(without_frames(tree), path, settings)
                 return replace(contents, close=stack.pop_all().close)
         except (OSError, RuntimeError) as error:
             raise InputError(

@@ -21,7 +21,8 @@ __all__ = ["CUTS", "INDEXES", "STOPS", "Leaf", "leaves_of"]
 CUTS: Final = {
     "offsets": "offsets offset trace_offsets starts start trace_starts trace_start boundaries bounds begin begins "
     "first_sample index_start record_start",
-    "lengths": "lengths length trace_lengths counts n_samples samples sizes size npts",
+    "lengths": "lengths length trace_lengths trace_length counts n_samples samples sizes size npts trace_sizes "
+    "trace_size trace_samples samples_per_trace points_per_trace n_points num_samples row_lengths row_sizes",
 }
 STOPS: Final = (
     "stops stop ends end trace_stops trace_stop trace_ends trace_end index_stop index_end record_stop last_sample "

@@ -43,16 +43,18 @@ class Node:
     shape: tuple[int, ...]
     dtype: np.dtype[Any]
     attributes: Mapping[str, Any]
+    name: str = ""
+    """Its own name, where that may have a slash in it."""
 
     @property
     def parent(self) -> str:
         """Path of the group that it lies in."""
-        return self.path.rpartition("/")[0]
+        return self.path.removesuffix(f"/{self.name}") if self.name else self.path.rpartition("/")[0]
 
     @property
     def leaf(self) -> str:
         """Its own name."""
-        return self.path.rpartition("/")[2]
+        return self.name or self.path.rpartition("/")[2]
 
 
 @dataclass
