@@ -17,7 +17,17 @@ from test_intake_layouts import WRITERS, assert_same
 from meseta import intake
 from meseta.errors import InputError
 from meseta.intake import open_recording, room, traces_from
-from meseta.intake.readers import file_array, hdf5_samples, numpy_files, spool, tdms_places, text, text_stream
+from meseta.intake.readers import (
+    file_array,
+    hdf5_samples,
+    numpy_files,
+    shared_blocks,
+    spool,
+    tdms_places,
+    text,
+    text_stream,
+)
+from meseta.intake.readers.shared_blocks import SharedBlocks
 from meseta.recipe import Recipe
 from meseta.work import Work
 
@@ -82,9 +92,52 @@ def test_tdms_chunks_of_any_size_and_order_are_found_in_their_places(tmp_path, m
         for channel in file["g"].channels():
             whole = channel[:]
             for start, stop in ((0, len(whole)), (95, 210), (len(whole) - 3, len(whole))):
-                places = tdms_places.places_of(file, channel, shorter)
+                places = tdms_places.places_of(file, channel, SharedBlocks(shorter))
                 np.testing.assert_array_equal(places.read(start, stop), whole[start:stop])
         file.close()
+
+
+def test_channels_that_take_turns_share_the_blocks_that_are_read(tmp_path, monkeypatch):
+    """Any part of any channel from several threads is that of NumPy's own; side by side the file is read once."""
+    rows = np.random.default_rng(4).integers(-30000, 30000, (50_000, 3)).astype(">i2")
+    path = tmp_path / "a.dat"
+    path.write_bytes(b"head!" + rows.tobytes())
+    monkeypatch.setattr(shared_blocks, "BLOCK_BYTE", 10_007)
+    monkeypatch.setattr(shared_blocks, "SMALL_BYTE", 100)
+    taken = []
+    monkeypatch.setattr(shared_blocks, "InFile", lambda path: _Counted(file_array.InFile(path), taken))
+    chosen = {"reader": "binary", "binary_type": "int16", "binary_order": "big", "binary_header_byte": 5}
+    chosen |= {"binary_channels": ["a", "b", "c"]}
+    with open_recording(path, Recipe.build({"intake": chosen})) as recording:
+        for start in range(0, 50_000, 10_000):
+            for column, channel in enumerate(recording.channels):
+                np.testing.assert_array_equal(
+                    channel.samples.read(start, start + 10_000), rows[start : start + 10_000, column]
+                )
+        assert sum(taken) == path.stat().st_size
+        spans = [(low, low + size) for low in range(0, 49_000, 977) for size in (0, 1, 15, 900)]
+
+        def same(span: tuple[int, int]) -> bool:
+            low, high = span
+            read = [channel.samples.read(low, high) for channel in recording.channels]
+            return np.array_equal(np.stack(read, axis=1), rows[low:high])
+
+        assert all(Work(threads=4).each(same, spans, "comparing"))
+    with open_recording(path, Recipe.build({"intake": chosen})) as recording:
+        path.write_bytes(path.read_bytes()[:-60_000])
+        with pytest.raises(InputError, match="became shorter"):
+            recording.channels[0].samples.read(45_000, 50_000)
+
+
+class _Counted:
+    """Numbers in a file that note how many bytes are taken."""
+
+    def __init__(self, numbers, taken):
+        self.numbers, self.taken = numbers, taken
+
+    def read(self, place, count, dtype):
+        self.taken.append(count * dtype.itemsize)
+        return self.numbers.read(place, count, dtype)
 
 
 @pytest.mark.parametrize("chunk", [4, 500])
@@ -98,7 +151,7 @@ def test_tdms_numbers_that_take_turns_or_are_scaled_are_found(tmp_path, monkeypa
     monkeypatch.setattr(tdms_places, "LONG_CHUNK_BYTE", 1000)
     file = nptdms.TdmsFile.open(str(path))
     for channel in file["g"].channels():
-        whole, places = channel[:], tdms_places.places_of(file, channel, path)
+        whole, places = channel[:], tdms_places.places_of(file, channel, SharedBlocks(path))
         assert len(whole) >= 1500
         for start, stop in ((0, len(whole)), (3, 5), (95, 1210), (len(whole) - 3, len(whole))):
             np.testing.assert_array_equal(places.read(start, stop), whole[start:stop])

@@ -11,7 +11,8 @@ import numpy.typing as npt
 
 from meseta.errors import InputError
 from meseta.intake.readers.contents import Contents, make_channel, whole
-from meseta.intake.readers.file_array import InFile
+from meseta.intake.readers.file_array import InFile, Numbers
+from meseta.intake.readers.shared_blocks import SharedBlocks
 from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["BinaryReader"]
@@ -21,7 +22,7 @@ __all__ = ["BinaryReader"]
 class _Interleaved:
     """One channel of numbers that take turns in a file."""
 
-    path: Path
+    numbers: Numbers
     dtype: np.dtype[Any]
     header_byte: int
     channels: int
@@ -35,7 +36,7 @@ class _Interleaved:
         """Return samples ``start`` to ``stop``."""
         row = self.dtype.itemsize * self.channels
         count = (stop - start) * self.channels
-        block = InFile(self.path).read(self.header_byte + start * row, count, self.dtype)
+        block = self.numbers.read(self.header_byte + start * row, count, self.dtype)
         return block.reshape(-1, self.channels)[:, self.place].astype(self.dtype.newbyteorder("="))
 
 
@@ -59,9 +60,10 @@ class BinaryReader:
         if samples <= 0:
             raise InputError("is shorter than its header", str(path), "check intake.binary_header_byte")
         doubts = (f"{rest} bytes at the end do not make a whole row",) if rest else ()
+        numbers: Numbers = InFile(path) if len(names) == 1 else SharedBlocks(path)
         channels = tuple(
             make_channel(
-                name, _Interleaved(path, dtype, settings.binary_header_byte, len(names), place, samples), dtype
+                name, _Interleaved(numbers, dtype, settings.binary_header_byte, len(names), place, samples), dtype
             )
             for place, name in enumerate(names)
         )

@@ -25,6 +25,7 @@ from meseta.intake.readers.contents import Contents
 from meseta.intake.readers.file_array import FileArray, InFile, InMemory, Numbers
 from meseta.intake.readers.hdf5 import understood
 from meseta.intake.readers.hdf5_tree import Node, Tree
+from meseta.intake.readers.shared_blocks import SharedBlocks
 from meseta.intake.readers.spool import Spool
 from meseta.intake.readers.unpack import BOMB_BYTE, BOMB_RATIO, files_in, packing, unpacked_blocks
 from meseta.recipe.intake import IntakeSettings
@@ -73,7 +74,9 @@ def _add_all(tree: Tree, path: Path) -> None:
             file.seek(0)
             header = _header(file)
             _fits(header, path.stat().st_size - file.tell())
-            _add(tree, path.stem, header, InFile(path), file.tell(), path, kept=path.stat().st_size <= LARGE_BYTE)
+            _add(
+                tree, path.stem, header, _there(header, path), file.tell(), path, kept=path.stat().st_size <= LARGE_BYTE
+            )
             return
     stream = _Blocks(unpacked_blocks(path, BLOCK_BYTE))
     header = _header(stream)
@@ -103,7 +106,7 @@ def _add_members(tree: Tree, path: Path) -> None:
                     tree.refused.append(f"{name} holds objects, which are never read")
                 elif not kept and info.compress_type == zipfile.ZIP_STORED:
                     begin = _begin_of(path, info.header_offset) + header.begin_byte
-                    _add(tree, name, header, InFile(path), begin, path, kept=False)
+                    _add(tree, name, header, _there(header, path), begin, path, kept=False)
                 else:
                     spool = spool or (None if kept else Spool(path))
                     _add(tree, name, header, *_aside(header, stream, path, kept, spool))
@@ -183,6 +186,12 @@ class _Blocks:
         data = b"".join(parts)
         self._rest = data[count:]
         return data[:count]
+
+
+def _there(header: _Header, path: Path) -> Numbers:
+    """Return the bytes of a file, in blocks that the columns of an array share where they take turns."""
+    takes_turns = header.dtype.names is not None or (len(header.shape) > 1 and not header.turned)
+    return SharedBlocks(path) if takes_turns else InFile(path)
 
 
 def _parts(stream: IO[bytes] | _Blocks, size_byte: int) -> Iterator[bytes]:

@@ -17,6 +17,7 @@ from meseta.errors import InputError
 from meseta.intake.readers.contents import Contents
 from meseta.intake.readers.hdf5 import understood
 from meseta.intake.readers.hdf5_tree import Node, Tree
+from meseta.intake.readers.shared_blocks import SharedBlocks
 from meseta.intake.readers.spool import Spool
 from meseta.intake.readers.tdms_places import Places, has_cut_chunks, places_of
 from meseta.recipe.intake import IntakeSettings
@@ -100,13 +101,13 @@ class TdmsReader:
 
 def _tree(file: Any, path: Path) -> Tree:
     tree, lock = Tree(attributes={"": dict(file.properties)}), threading.Lock()
-    size = path.stat().st_size
+    size, numbers = path.stat().st_size, SharedBlocks(path)
     for group in file.groups():
         home = f"/{group.name.replace('/', '_')}"
         tree.attributes[home] = dict(group.properties)
         for channel in group.channels():
             name = f"{home}/{channel.name.replace('/', '_')}"
-            count, places = len(channel), places_of(file, channel, path)
+            count, places = len(channel), places_of(file, channel, numbers)
             claimed = count * max(np.dtype(channel.dtype).itemsize if channel.dtype is not None else 1, 1)
             if claimed > 64 * size or (places is not None and places.end_byte > size):
                 tree.refused.append(f"{name} claims more samples than the file holds")

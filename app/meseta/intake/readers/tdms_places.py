@@ -9,13 +9,12 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
 import numpy.typing as npt
 
-from meseta.intake.readers.file_array import InFile
+from meseta.intake.readers.file_array import Numbers
 
 __all__ = ["Places", "has_cut_chunks", "places_of"]
 
@@ -46,7 +45,7 @@ class _Stretch:
         chunk, place = divmod(self.count - 1, self.run)
         return self.begin_byte + chunk * self.chunk_byte + place * self.step_byte + self.dtype.itemsize
 
-    def read(self, file: InFile, start: int, stop: int) -> Iterator[Values]:
+    def read(self, file: Numbers, start: int, stop: int) -> Iterator[Values]:
         """Yield numbers ``start`` to ``stop`` in parts."""
         if self.chunk_byte <= LONG_CHUNK_BYTE and self.run * self.step_byte != self.chunk_byte:
             yield from self._of_short_chunks(file, start, stop)
@@ -60,7 +59,7 @@ class _Stretch:
             yield _stepped(file, begin, end - start, self.step_byte, self.dtype)
             start = end
 
-    def _of_short_chunks(self, file: InFile, start: int, stop: int) -> Iterator[Values]:
+    def _of_short_chunks(self, file: Numbers, start: int, stop: int) -> Iterator[Values]:
         """Yield numbers out of blocks of whole chunks."""
         most = max(BLOCK_BYTE // self.chunk_byte, 1) * self.run
         while start < stop:
@@ -76,7 +75,7 @@ class _Stretch:
             start = end
 
 
-def _stepped(file: InFile, begin: int, count: int, step_byte: int, dtype: np.dtype[Any]) -> Values:
+def _stepped(file: Numbers, begin: int, count: int, step_byte: int, dtype: np.dtype[Any]) -> Values:
     """Return numbers that stand ``step_byte`` from one to the next."""
     if step_byte == dtype.itemsize:
         return file.read(begin, count, dtype)
@@ -88,7 +87,7 @@ def _stepped(file: InFile, begin: int, count: int, step_byte: int, dtype: np.dty
 class Places:
     """Where all numbers of a channel stand, and what is done to them."""
 
-    file: InFile
+    file: Numbers
     stretches: tuple[_Stretch, ...]
     offsets: npt.NDArray[np.int64]
     scale: Callable[[Values], Values] | None = None
@@ -116,7 +115,7 @@ class Places:
         return parts[0] if len(parts) == 1 else np.concatenate(parts)
 
 
-def places_of(file: Any, channel: Any, path: Path) -> Places | None:
+def places_of(file: Any, channel: Any, numbers: Numbers) -> Places | None:
     """Return where a channel's numbers stand; None where that is not known.
 
     The library's own list of segments and its scaling are looked at; they are no public ones, so anything unexpected in
@@ -132,7 +131,7 @@ def places_of(file: Any, channel: Any, path: Path) -> Places | None:
         return None
     if scale is None and stretches[0].dtype.newbyteorder("=") != np.dtype(channel.dtype):
         return None
-    return Places(InFile(path), tuple(stretches), offsets, scale)
+    return Places(numbers, tuple(stretches), offsets, scale)
 
 
 def has_cut_chunks(file: Any) -> bool:
