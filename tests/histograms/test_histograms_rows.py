@@ -5,6 +5,7 @@ from __future__ import annotations
 import errno
 import tempfile
 import warnings
+import weakref
 
 import numpy as np
 import pytest
@@ -13,7 +14,7 @@ from small_recordings import matrix_of
 from meseta.analysis import STEPS, Analysis
 from meseta.analysis.kept import array_owners
 from meseta.errors import OutputError
-from meseta.histograms import Grid, rows
+from meseta.histograms import CountMatrix, Grid, rows
 from meseta.histograms.distribution import conductance_histogram, weighted_counts
 from meseta.histograms.grids import logarithmic_edges
 from meseta.recipe import Recipe
@@ -35,6 +36,22 @@ def test_rows_are_the_same_in_memory_and_in_a_file(most_bytes: int, kinds: tuple
     assert np.array_equal(found, np.concatenate(blocks))
     assert found.dtype == (np.uint32 if np.uint32 in kinds else np.uint16)
     assert bool(list(array_owners(found))) == (most_bytes == 10**9)
+
+
+def test_blocks_are_let_go_of_once_they_are_put_together(monkeypatch) -> None:
+    monkeypatch.setattr(rows.stacked, "__defaults__", (100,))
+    grid = Grid(logarithmic_edges(-8, 4, 4), "logarithmic")
+
+    def blocks():
+        for _ in range(5):
+            counts = np.zeros((7, grid.bins), np.uint16)
+            held.append(weakref.ref(counts))
+            yield matrix_of(counts, grid)
+
+    held: list[weakref.ref[np.ndarray]] = []
+    found = CountMatrix.joined(blocks())
+    assert len(found.counts) == 35
+    assert [one() for one in held if one() is not None] == []
 
 
 def test_a_full_disk_is_one_clear_error(monkeypatch) -> None:

@@ -114,7 +114,7 @@ class CountMatrix:
 
         def rows() -> Iterator[npt.NDArray[np.unsignedinteger]]:
             for part in parts:
-                rest.append(replace(part, counts=part.counts[:0]))
+                rest.append(replace(part, counts=part.counts[:0].copy()))  # a view would hold all of them
                 yield part.counts
 
         counts = stacked(rows())
