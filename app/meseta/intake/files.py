@@ -203,7 +203,7 @@ def _inside(folder: Path) -> _Inside:
 
 
 def _is_result(folder: Path) -> bool:
-    return all((folder / name).exists() for name in _RESULT)
+    return all(os.path.exists(folder / name) for name in _RESULT)  # noqa: PTH110  False where it may not be looked into
 
 
 def _is_study(entry: os.DirEntry[str]) -> bool:
