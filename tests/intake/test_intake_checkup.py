@@ -201,6 +201,21 @@ def test_mains_pickup_is_reported_against_the_noise(tmp_path, amplitude, fine):
         assert float(words[3]) == pytest.approx(amplitude, abs=2e-4)
 
 
+@pytest.mark.parametrize("hertz", [50.0, 60.0])
+@pytest.mark.parametrize(("stated", "side"), [(5e3, ""), (1e4, "high"), (2.5e3, "low")])
+def test_mains_at_twice_or_half_their_frequency_are_a_wrong_sampling_rate(tmp_path, hertz, stated, side):
+    """Sampled at 5 kHz; mains have 50 or 60 Hz (IEC 60038), so that a line at 25 or 120 Hz tells of the rate."""
+    rng = np.random.default_rng(8)
+    volts = contacts() * G0_SIEMENS * 0.1 * 1e5
+    volts[:, 300:] = 1e-3 * rng.normal(size=(TRACES, 300))
+    time = np.arange(volts.size).reshape(volts.shape) / 5e3
+    path = record(tmp_path, amplifier=(volts + 4e-3 * np.sin(2 * np.pi * hertz * time), {"unit": "V"}))
+    found = findings(path, gain_volt_per_ampere=1e5, bias_volt=0.1, sampling_hertz=stated)["mains pickup"]
+    assert not found.fine
+    assert ("sampling rate" in found.text) == bool(side)
+    assert not side or f"a factor 2 too {side}" in found.text
+
+
 @pytest.mark.parametrize(("told", "fine"), [("rising", True), ("falling", False)])
 def test_pulling_told_the_wrong_way_round_is_named(tmp_path, told, fine):
     drive = np.tile(np.concatenate([np.linspace(0, 5, 900), np.linspace(5, 0, 300)]), 8)

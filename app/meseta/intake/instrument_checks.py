@@ -11,6 +11,7 @@ import numpy.typing as npt
 from meseta.intake.assembly import Part
 from meseta.intake.findings import STEPPED_SHARE, Finding, Look, step_near
 from meseta.intake.mains import Pickup, find_pickup
+from meseta.intake.rate_check import LEAST_OF_NOISE, mains_elsewhere
 from meseta.intake.response import rise_times, slew_limit
 from meseta.intake.units import unit_factor
 from meseta.quantities import BOLTZMANN_JOULE_PER_KELVIN, G0_SIEMENS, johnson_current_rms
@@ -184,6 +185,10 @@ def mains(look: Look) -> Finding | None:
     unit = channel.unit or ("V" if calibration.kind == "linear" else "G0")
     read = partial(part.recording.values, channel)
     found = find_pickup(part.recording, read, unit, part.interval_second, PICKUP_WINDOWS)
+    if found is None or not found.is_significant or found.amplitude[0] < LEAST_OF_NOISE * found.noise:
+        elsewhere = mains_elsewhere(part.recording, read, unit, part.interval_second)
+        if elsewhere is not None:
+            return elsewhere
     if found is None:
         return None
     if not found.is_significant:
@@ -209,8 +214,11 @@ def response(look: Look) -> list[Finding]:
     if times is not None and len(times.level_g0):
         shown = np.flatnonzero(times.rise_samples <= SLOWEST_SHOWN * max(float(times.rise_samples.min()), 1.0))
         ends = sorted({int(shown[0]), int(shown[-1])})
-        said = [f"{times.rise_samples[at]:.2g} samples near {times.level_g0[at]:.1g} G0" for at in ends]
-        found.append(Finding("rise time", True, f"the steepest falls take at most {' and '.join(said)}"))
+        said = [
+            f"{times.rise_samples[at]:.2g} +- {times.error_samples[at]:.1g} samples from {times.level_g0[at]:.1g} G0"
+            for at in ends
+        ]
+        found.append(Finding("rise time", True, f"the steepest falls take {' and '.join(said)} (90 to 10 %)"))
     calibration = part.calibration
     if calibration.kind == "linear" and calibration.second is None and calibration.range_channel is None:
         factor = unit_factor(calibration.channel.unit or "V", "V")

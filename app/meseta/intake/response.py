@@ -1,14 +1,15 @@
 """How fast an amplifier follows: rise time against current, and the limit of its slew rate, from the steepest falls.
 
-A contact breaks faster than any amplifier of this trade follows, so what the steepest falls show is the amplifier.  A
-first-order lag of time constant tau falls by a constant part of itself a sample, in every decade alike; an amplifier at
-its slew limit falls by a constant amount.
+A contact breaks faster than any amplifier of this trade follows, so what the steepest falls show is the amplifier: from
+90 to 10 % of a fall whatever the order of its filter, while the tail of a fall tells the time constant of a first-order
+lag alone.  An amplifier at its slew limit falls by a constant amount a sample.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Final
 
 import numpy as np
@@ -18,8 +19,16 @@ __all__ = ["RiseTimes", "half_decades", "passages", "rise_times", "slew_limit"]
 
 Floats = npt.NDArray[np.float64]
 HALF_DECADE: Final = float(np.sqrt(10.0))
-RISE_OF_HALF_DECADE: Final = float(np.log(9.0) / np.log(HALF_DECADE))
-"""A lag falls from 90 to 10 % in tau ln 9 and by half a decade in tau ln(10)/2."""
+HIGHEST_G0: Final = 10**1.25
+"""Half decades from here have a single atom's 1 G0 in the middle of one."""
+DEEP: Final = 0.1
+"""A fall to less than this share of the plateau before it is one break, not a step from contact to contact."""
+PLATEAU_SAMPLES: Final = 8
+STEADY: Final = 0.1
+SPREAD_SHARE: Final = 0.5
+GRID_SAMPLES: Final = 0.8
+"""Between two samples a straight line falls from 90 to 10 % in so much, however fast the amplifier."""
+PLATEAU_SHARE: Final = 0.01
 LEAST_FALLS: Final = 10
 FASTEST_SHARE: Final = 0.1
 LEAST_RUN: Final = 3
@@ -30,43 +39,49 @@ LIMITED_SHARE: Final = 0.3
 
 @dataclass(frozen=True)
 class RiseTimes:
-    """10 to 90 % rise time of the amplifier at several conductances, as the fastest tenth of all falls shows it.
+    """90 to 10 % fall time of the amplifier at several conductances, as the fastest tenth of all falls shows it.
 
     Attributes
     ----------
     level_g0 : (levels,) float64
-        Middle of the half decade that was fallen through, descending.
+        Middle of the half decade of the plateaus that the falls begin from, descending.
     rise_samples : (levels,) float64
-        At most this: a contact may only be slower than the amplifier.
+        Straight between samples, so that it is never below :data:`GRID_SAMPLES`; a contact may be slower than the
+        amplifier.
+    error_samples : (levels,) float64
+        From the spread of the faster half of the falls, the grid of samples, and 1 % for the plateau's noise.
     falls : (levels,) int64
-        Traces that fell through.
+        Traces that fall from there.
     """
 
     level_g0: Floats
     rise_samples: Floats
+    error_samples: Floats
     falls: npt.NDArray[np.int64]
 
 
-def rise_times(values: Sequence[Floats], highest_g0: float = 1.0, lowest_g0: float = 1e-7) -> RiseTimes:
-    """Return the rise time at every half decade that enough openings fall through.
+def rise_times(values: Sequence[Floats], highest_g0: float = HIGHEST_G0, lowest_g0: float = 1e-7) -> RiseTimes:
+    """Return the fall time from plateaus in every half decade that enough openings break from.
 
-    Each opening counts with its last passage: from the last sample at or above the upper bound to the first at or
-    below the lower one, both interpolated in log G.
+    Each opening counts with its last fall out of the half decade, where that leads below a tenth of a plateau.
 
     Parameters
     ----------
     values : sequence of (samples,) float64
         Conductance of openings, above their floor where they hold one.
     highest_g0, lowest_g0 : float
-        Range of the bounds; bounds within a few times the noise of the floor must be left out by the caller.
+        Range of the plateaus; those within some times the noise of the floor must be left out by the caller.
     """
     bounds = half_decades(highest_g0, lowest_g0)
     durations = np.array([_durations(one, bounds) for one in values if len(one) > 1]).reshape(-1, len(bounds) - 1)
     found = [column[np.isfinite(column)] for column in durations.T]
     chosen = [place for place, column in enumerate(found) if len(column) >= LEAST_FALLS]
+    rise = np.array([float(np.quantile(found[place], FASTEST_SHARE)) for place in chosen])
+    spread = np.array([float(np.quantile(found[place], SPREAD_SHARE)) for place in chosen]) - rise
     return RiseTimes(
         np.array([bounds[place] / np.sqrt(HALF_DECADE) for place in chosen]),
-        np.array([RISE_OF_HALF_DECADE * float(np.quantile(found[place], FASTEST_SHARE)) for place in chosen]),
+        rise,
+        np.sqrt(spread**2 + (PLATEAU_SHARE * rise) ** 2 + (GRID_SAMPLES * np.minimum(1.0, GRID_SAMPLES / rise)) ** 2),
         np.array([len(found[place]) for place in chosen], np.int64),
     )
 
@@ -84,10 +99,34 @@ def passages(values: Floats, bounds: Floats) -> Floats:
 
 
 def _durations(values: Floats, bounds: Floats) -> Floats:
-    """Return the samples from each bound to the next lower one; NaN where a bound is not passed."""
-    durations: Floats = np.diff(passages(values, bounds))
-    durations[durations < 0] = np.nan
-    return durations
+    """Return the samples that the last fall out of each half decade takes; NaN where there is no deep one."""
+    return np.array([_fall(values, high, low) for high, low in pairwise(bounds.tolist())])
+
+
+def _fall(values: Floats, high: float, low: float) -> float:
+    """Return the samples from 90 to 10 % of the last fall from a plateau between two bounds; NaN without one."""
+    above = np.flatnonzero(values >= 0.5 * np.sqrt(high * low))
+    if len(above) == 0 or above[-1] + 2 >= len(values):
+        return np.nan
+    begin = end = int(above[-1])
+    while begin > 0 and values[begin - 1] > values[begin]:
+        begin -= 1
+    before = values[max(begin - PLATEAU_SAMPLES + 1, 0) : begin + 1]
+    plateau = float(np.median(before))
+    if not low <= plateau < high or len(before) < PLATEAU_SAMPLES or np.ptp(before) > STEADY * plateau:
+        return np.nan
+    while end + 1 < len(values) and values[end + 1] < values[end]:
+        end += 1
+    if not values[end] < DEEP * plateau:
+        return np.nan
+    part = values[begin - 1 : end + 1]
+    return _falls_below(part, 0.1 * plateau) - _falls_below(part, 0.9 * plateau)
+
+
+def _falls_below(values: Floats, bound: float) -> float:
+    """Return where falling values pass a bound, straight between samples."""
+    last = int(np.flatnonzero(values >= bound)[-1])
+    return last + float((values[last] - bound) / (values[last] - values[last + 1]))
 
 
 def _last_passage(values: Floats, bound: float) -> float:
