@@ -123,7 +123,7 @@ class SpooledColumns:
         for place, column in enumerate(block):
             finite = ~np.isnan(column)
             if finite.any():
-                self.last_number[place] = self.rows + int(np.flatnonzero(finite)[-1]) + 1
+                self.last_number[place] = self.rows + count - int(np.argmax(finite[::-1]))
             self._spool.write(8 * (self.rows * self.columns + place * count), column)
         self._ends.append(self.rows + count)
 

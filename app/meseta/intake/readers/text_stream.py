@@ -17,7 +17,7 @@ from meseta.intake.readers.unpack import unpacked_blocks
 
 __all__ = ["Stretches", "put_aside"]
 
-BLOCK_BYTE: Final = 16 << 20
+BLOCK_BYTE: Final = 4 << 20
 LONGEST_LINE_BYTE: Final = 64 << 20
 
 

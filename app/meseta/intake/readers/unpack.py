@@ -67,6 +67,12 @@ def _opened(path: Path, kind: str) -> IO[bytes] | Any:
         return archive.open(members[0])
 
 
+def _declared_byte(path: Path) -> int:
+    """Return how much the files of a zip unpack to, as it says itself."""
+    with zipfile.ZipFile(path) as archive:
+        return sum(info.file_size for info in _plain_members(archive))
+
+
 def _plain_members(archive: zipfile.ZipFile) -> list[zipfile.ZipInfo]:
     """Return the files of a zip, without what systems put beside them, in natural order."""
     found = [info for info in files_in(archive) if not info.filename.startswith("__MACOSX")]
@@ -191,14 +197,15 @@ def unpacked_blocks(path: Path, block_byte: int) -> Iterator[bytes]:
         kind = packing(file.read(8))
     limit = max(BOMB_BYTE, BOMB_RATIO * path.stat().st_size)
     count = 0
+    bomb = InputError(f"unpacks to more than {limit >> 20} MB", str(path), "unpack it yourself if it is meant to")
     try:
         with _opened(path, kind) if kind else path.open("rb") as stream:
+            if kind == "zip" and _declared_byte(path) > limit:  # nothing needs to be unpacked
+                raise bomb
             while block := stream.read(block_byte):
                 count += len(block)
                 if kind and count > limit:
-                    raise InputError(
-                        f"unpacks to more than {limit >> 20} MB", str(path), "unpack it yourself if it is meant to"
-                    )
+                    raise bomb
                 yield block
     except (OSError, EOFError, lzma.LZMAError, zlib.error, zipfile.BadZipFile, NotImplementedError) as error:
         if not kind:
