@@ -43,6 +43,8 @@ ODD_G0: Final = (0.2, 4.0)
 BESIDE_SHARE: Final = 0.3
 """Of the strongest peak: what stands out as much beside it is a peak of its own."""
 LEAST_CLOSINGS: Final = 5
+LEAST_OPENINGS: Final = 10
+"""In fewer openings two or three atoms may by chance be drawn out more often than one."""
 DECADE_ROOM: Final = 0.03
 FACTORS_END_G0: Final = 300.0
 """Thicker contacts than this are not drawn out to single atoms in one trace."""
@@ -93,7 +95,10 @@ def single_atom(look: Look) -> Finding | None:
     near = [at for at, height in peaks if low <= at <= high and height > BESIDE_SHARE * strength]
     if near and position > high:  # two atoms or more, as often as one: nothing lies below those of a wrong scale
         return Finding("single-atom peak", True, f"contacts pile up at {near[0]:.3g} G0, and at {position:.3g} G0")
+    few = look.part.cut.direction.count("opening") < LEAST_OPENINGS
     for factor, word in FACTORS.items():
+        if few and word == "2":
+            continue
         if _is_off(position, factor, (low, high) if metal else (1.0, 1.0)):
             if near and word != "2":  # a molecule beside single atoms where they should be
                 return Finding("single-atom peak", True, f"contacts pile up at {near[0]:.3g} G0")
@@ -105,10 +110,13 @@ def single_atom(look: Look) -> Finding | None:
     if not metal and ANY_METAL_G0[0] <= position <= ANY_METAL_G0[1]:
         return Finding("single-atom peak", True, f"{text}; for a monovalent metal 1 is expected")
     is_scale = not near and _is_decade_factor(_right_decade(look.part, position))
+    if few and ODD_G0[0] <= position <= FACTORS_END_G0:
+        return Finding("single-atom peak", True, f"{text}; there are too few openings to judge it by")
     if ODD_G0[0] <= position <= ODD_G0[1] or position > FACTORS_END_G0 or is_scale:
         expected = f"for {metal} {low:g} to {high:g}" if metal else "for a monovalent metal 1"
-        text += f"; {expected} is expected" + ("" if metal else ", for no metal this")
-        return Finding("single-atom peak", False, text + _decade_question(look.part, position))
+        text += f"; {expected} is expected" + ("" if metal else ", and no metal is known for this")
+        question = _decade_question(look.part, position)
+        return Finding("single-atom peak", False, text + (f".{question}" if question else ""))
     return None
 
 

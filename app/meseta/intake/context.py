@@ -83,15 +83,18 @@ def beside(
     doubts += more
     take("the file of metadata beside it", entries)
     if settings.name_template is not None:
-        entries, more = from_name(name, settings.name_template)
+        folders = settings.name_template.count("/")  # a file that was given alone lies in them all the same
+        full = "/".join(path.absolute().parts[-folders - 1 :]) if folders > name.count("/") else name
+        entries, more = from_name(full, settings.name_template)
         doubts += more
         take("its name", entries)
     if context.table:
-        row = next((key for key in (str(path), name, path.name, path.stem) if key in context.table), None)
+        tails = ["/".join(path.absolute().parts[-depth:]) for depth in (4, 3, 2)]
+        row = next((key for key in (str(path), name, *tails, path.name, path.stem) if key in context.table), None)
         if row is None:
             doubts.append(f"not in the table {settings.metadata_table}")
         else:
-            if path.name in context.same_names and row in (path.name, path.stem) and row != name:
+            if path.name in context.same_names and row in (path.name, path.stem) and name != path.name:
                 doubts.append("its row in the table fits files of several folders: write the folder before the name")
             take("the table of metadata", context.table[row])
     return made, doubts

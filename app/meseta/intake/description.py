@@ -108,6 +108,10 @@ class Description:
         plain: dict[str, Any] = _finite(asdict(self) | {"form": self.form.model_dump(mode="json")})
         return plain
 
+    def said_of_itself(self) -> str:
+        """Return the first entries of metadata in words; empty where there are none."""
+        return ", ".join([f"{name} = {value}" for name, value in self.metadata.items()][:SHOWN_ENTRIES])
+
     def lines(self) -> list[str]:
         """Return the description for people."""
         shown = [
@@ -117,9 +121,8 @@ class Description:
             f"  {self.size_byte} bytes, {self.samples} samples",
         ]
         shown += [channel.line() for channel in self.channels]
-        entries = [f"{name} = {value}" for name, value in self.metadata.items()][:SHOWN_ENTRIES]
-        if entries:
-            shown.append("  says of itself: " + ", ".join(entries))
+        if self.metadata:
+            shown.append(f"  says of itself: {self.said_of_itself()}")
         if self.problem:
             return [*shown, f"  cannot be read yet: {self.problem}", *(f"  ? {doubt}" for doubt in self.doubts)]
         shown.append(f"  conductance from {self.conductance_from}; {self.drive}")

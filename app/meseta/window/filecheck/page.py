@@ -202,7 +202,8 @@ class FileCheck(QWidget):
         traces = f"{typeset.integer(first.openings)} opening and {closings} closing traces"
         found = f"{first.reader}: {first.layout}. {typeset.integer(first.samples)} samples, {traces}."
         source = f" Conductance from {first.conductance_from}; {first.drive}." if first.conductance_from else ""
-        self.summary.setText(found + source)
+        beside = first.said_of_itself()
+        self.summary.setText(found + source + (f" Known of it: {beside}." if beside else ""))
         self.channels.show_channels(first)
 
     def _say_doubts(self, sentences: list[str]) -> None:

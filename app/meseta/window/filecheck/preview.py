@@ -11,6 +11,7 @@ import numpy.typing as npt
 from meseta import intake
 from meseta.errors import InputError, MesetaError
 from meseta.intake import Description
+from meseta.intake.context import recordings_among
 from meseta.intake.kept_layouts import LayoutError, as_seen
 from meseta.intake.layout_differences import differences
 from meseta.recipe import Recipe
@@ -118,7 +119,7 @@ def check_picture(
     InputError
         Where there are no files.
     """
-    files, _ = intake.find_files(list(paths))
+    files = recordings_among(intake.find_files(list(paths))[0], recipe.intake)
     if not files:
         raise InputError(
             "no files were found", str(paths[0]) if paths else "", "choose files or a folder that holds some"

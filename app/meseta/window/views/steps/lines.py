@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
+import numpy.typing as npt
 
 from meseta import typeset
 from meseta.window.session import Session
@@ -80,11 +81,19 @@ def _calibration(session: Session) -> str:
         return ""
     bias = np.asarray(traces.table["bias_volt"], float)
     known = bias[np.isfinite(bias)]
-    parts = [typeset.prefixed(float(np.median(known)), "V")] if len(known) else []
+    parts = [_bias(known)] if len(known) else []
     if settings.series_resistance_ohm:
         parts.append(f"{typeset.prefixed(settings.series_resistance_ohm, 'ohm')} in series")
     parts.append("displacement in nm" if traces.drive.is_displacement else f"drive in {traces.drive.unit}")
     return ", ".join(parts)
+
+
+def _bias(volt: npt.NDArray[np.float64]) -> str:
+    """Return the bias of all traces: one value, or the lowest and the highest where files state several."""
+    lowest, highest = float(volt.min()), float(volt.max())
+    if highest - lowest <= 0.02 * max(abs(lowest), abs(highest)):
+        return typeset.prefixed(float(np.median(volt)), "V")
+    return f"{typeset.prefixed(lowest, 'V')} to {typeset.prefixed(highest, 'V')}"
 
 
 def _cutting(session: Session) -> str:
