@@ -33,10 +33,11 @@ def plain_crossing(values: np.ndarray, level: float, first: bool, stay: int) -> 
     if not hits:
         return -1, math.nan
     found = hits[0] if first else hits[-1]
-    here, after = float(values[found]), float(values[found + 1])
+    further = next(index for index in range(found + 1, len(values)) if not math.isnan(values[index]))
+    here, after = float(values[found]), float(values[further])
     if not after > 0:
         return found, 0.0
-    return found, (math.log(here) - math.log(level)) / (math.log(here) - math.log(after))
+    return found, (further - found) * (math.log(here) - math.log(level)) / (math.log(here) - math.log(after))
 
 
 def test_worked_example_interpolates_in_log_g():
@@ -48,8 +49,36 @@ def test_worked_example_interpolates_in_log_g():
 
 
 def test_no_interpolation_into_a_reading_that_is_not_positive():
-    traces = TraceSet.from_arrays([[2, 1, -1e-6, 1e-4, 1e-4], [2, 1, np.nan, 1e-4, 1e-4, 1e-4]], step_nm=0.1)
+    traces = TraceSet.from_arrays([[2, 1, -1e-6, 1e-4, 1e-4], [2, 1, 0, 1e-4, 1e-4]], step_nm=0.1)
     assert align(traces, DEFAULT, ("pull",)).zero_drive == pytest.approx([0.1, 0.1], abs=1e-12)
+
+
+@pytest.mark.parametrize("missing", [1, 2, 7])
+@pytest.mark.parametrize("decades", [0.05, 0.4, 2.0])
+def test_an_exponential_decay_has_its_zero_exactly_however_few_samples_it_has(missing, decades):
+    """G = 0.5 G0 10^(-a (z - z0)): log G is straight, also across readings that are missing where it crosses."""
+    rng = np.random.default_rng(3)
+    place = np.arange(60.0)
+    rows, zeros = [], 20 + rng.random(30)
+    for zero in zeros:
+        row = 0.5 * 10.0 ** np.minimum(-decades * (place - zero), 30)
+        begin = int(zero) + 1 - rng.integers(0, missing + 1)
+        row[begin : begin + missing] = np.nan
+        rows.append(row)
+    for backwards in (False, True):
+        turned = [row[::-1] for row in rows] if backwards else rows
+        drive = place[::-1] if backwards else place
+        direction = "closing" if backwards else "opening"
+        traces = TraceSet.from_arrays(turned, displacement_nm=[drive] * 30, direction=direction)
+        found = align(traces, DEFAULT, ("push",) if backwards else ("pull",))
+        np.testing.assert_allclose(found.zero_drive, zeros, atol=2e-4)
+
+
+@pytest.mark.parametrize("missing", [1, 4])
+def test_a_break_between_readings_that_are_missing_lies_half_way_for_the_jump(missing):
+    row = np.concatenate([np.full(20, 1.0), np.full(missing, np.nan), np.full(20, 1e-3)])
+    found = align(TraceSet.from_arrays([row], step_nm=1.0), AlignmentSettings(crossing="jump"), ("pull",))
+    assert found.zero_drive[0] == 19 + 0.5 * (missing + 1)
 
 
 def test_every_status_has_its_trace():
@@ -159,7 +188,8 @@ def test_jump_kernel_equals_the_definition(values, stay, scale):
     sample = plain_jump(row, level, stay)
     assert found.zero_sample[0] == sample
     if sample >= 0:
-        assert found.zero_drive[0] == sample + 0.5
+        further = next(index for index in range(sample + 1, len(row)) if not math.isnan(row[index]))
+        assert found.zero_drive[0] == 0.5 * (sample + further)
 
 
 def test_a_plateau_at_the_level_does_not_move_the_jump():

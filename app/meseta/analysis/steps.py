@@ -361,7 +361,7 @@ STEPS: Mapping[str, Step] = {
     step.name: step
     for step in (
         Step("noise", "learning the noise", 2, (), ("noise", _PHASE), _noise, _noise_block),
-        Step("alignment", "finding the rupture", 1, (), ("alignment", _PHASE), _alignment, _alignment_block),
+        Step("alignment", "finding the rupture", 2, (), ("alignment", _PHASE), _alignment, _alignment_block),
         Step(
             "plateaus", "finding plateaus", 5, ("noise", "alignment"), ("plateaus", _PHASE), _plateaus, _plateaus_block
         ),

@@ -67,9 +67,9 @@ def align(traces: TraceSet, settings: AlignmentSettings, phases: Sequence[str]) 
     """Find the zero of displacement of every trace.
 
     The zero lies at the last (or first) sample t at or above the level after which ``stay_samples`` finite samples
-    lie below, moved on towards the next sample in log G: ``z = z(t) + dz (ln g(t) - ln g_a) / (ln g(t) -
-    ln g(t+1))``; not moved where g(t+1) is not above zero or not finite (common practice, no source).  Push phases are
-    walked backwards in time, so that opening and closing have the same definition.
+    lie below, moved on towards the next finite sample in log G: ``z = z(t) + dz (ln g(t) - ln g_a) / (ln g(t) -
+    ln g(t+1))``; not moved where g(t+1) is not above zero (common practice, no source).  Push phases are walked
+    backwards in time, so that opening and closing have the same definition.
 
     By the jump, the zero lies half way between the two samples where ln G, averaged over ``stay_samples`` on each side,
     falls most, among the falls from above to below half the level that stay below the level: a change point, which a
@@ -95,28 +95,33 @@ def align(traces: TraceSet, settings: AlignmentSettings, phases: Sequence[str]) 
 
     start, stop = traces.phase_range(phases)
     count, backwards = traces.traces, tuple(phases) == ("push",)
-    sample, fraction, status = np.empty(count, np.int64), np.empty(count), np.empty(count, np.uint8)
+    sample, following = np.empty(count, np.int64), np.empty(count, np.int64)
+    fraction, status = np.empty(count), np.empty(count, np.uint8)
     values, level = np.ascontiguousarray(traces.conductance, np.float32), settings.zero_at_g0
     spans = (values, np.ascontiguousarray(traces.offsets), start, stop, backwards, level)
     if settings.crossing == "jump":
-        find_jumps(*spans, DEEPEST_SHARE * level, settings.stay_samples, sample, fraction, status)
+        find_jumps(*spans, DEEPEST_SHARE * level, settings.stay_samples, sample, following, fraction, status)
     else:
-        find_crossings(*spans, settings.crossing == "first", settings.stay_samples, sample, fraction, status)
-    zero = _drive_at(traces, sample, fraction, -1 if backwards else 1)
+        is_first = settings.crossing == "first"
+        find_crossings(*spans, is_first, settings.stay_samples, sample, following, fraction, status)
+    zero = _drive_at(traces, sample, following, fraction)
     return Alignment(zero, sample, status, level)
 
 
 def _drive_at(
-    traces: TraceSet, sample: npt.NDArray[np.int64], fraction: npt.NDArray[np.float64], step: int
+    traces: TraceSet,
+    sample: npt.NDArray[np.int64],
+    following: npt.NDArray[np.int64],
+    fraction: npt.NDArray[np.float64],
 ) -> npt.NDArray[np.float64]:
-    """Return the drive of each trace ``fraction`` of the way from ``sample`` to its neighbour; NaN without one."""
+    """Return the drive of each trace ``fraction`` of the way from one sample to another; NaN where there are none."""
     drive, found = traces.drive, sample >= 0
     zero = np.full(traces.traces, np.nan)
     if drive.relative is None:
-        zero[found] = (drive.start + drive.step * (sample + step * fraction))[found]
+        zero[found] = (drive.start + drive.step * (sample + (following - sample) * fraction))[found]
         return zero
     relative = drive.relative.read(int(traces.offsets[0]), int(traces.offsets[-1]))
-    place = traces.offsets[:-1][found] + sample[found]
-    here, after = relative[place].astype(np.float64), relative[place + step].astype(np.float64)
+    begins = traces.offsets[:-1][found]
+    here, after = (relative[begins + place[found]].astype(np.float64) for place in (sample, following))
     zero[found] = drive.start[found] + here + (after - here) * fraction[found]
     return zero

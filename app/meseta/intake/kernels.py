@@ -69,13 +69,14 @@ def find_crossings(
     first: bool,
     stay: int,
     sample: npt.NDArray[np.int64],
+    following: npt.NDArray[np.int64],
     fraction: npt.NDArray[np.float64],
     status: npt.NDArray[np.uint8],
 ) -> None:
     """Find in every trace the sample before the fall through ``level`` and the way to the next, in log G.
 
-    ``backwards`` walks each trace from its end (closing traces).  ``fraction`` is the share of the step to the next
-    sample in walking direction at which log G crosses the level; 0 where the next value is not above zero.
+    ``backwards`` walks each trace from its end (closing traces).  ``following`` is the next finite sample in walking
+    direction, ``fraction`` the share of the way there at which log G crosses the level; 0 where it is not above zero.
     """
     for trace in range(len(start)):
         base = offsets[trace]
@@ -84,10 +85,14 @@ def find_crossings(
             begin, end, step = end - 1, begin - 1, -1
         found, state = _crossing(values, begin, end, step, level, first, stay)
         status[trace] = state
-        sample[trace] = found - base if state == ALIGNED else -1
+        sample[trace] = following[trace] = found - base if state == ALIGNED else -1
         fraction[trace] = 0.0
         if state == ALIGNED:
-            here, after = np.float64(values[found]), np.float64(values[found + step])
+            there = found + step
+            while math.isnan(values[there]):  # _stays_below has seen a finite one
+                there += step
+            following[trace] = there - base
+            here, after = np.float64(values[found]), np.float64(values[there])
             if after > 0.0:
                 fraction[trace] = (math.log(here) - math.log(level)) / (math.log(here) - math.log(after))
 
@@ -103,6 +108,7 @@ def find_jumps(
     deepest: float,
     stay: int,
     sample: npt.NDArray[np.int64],
+    following: npt.NDArray[np.int64],
     fraction: npt.NDArray[np.float64],
     status: npt.NDArray[np.uint8],
 ) -> None:
@@ -110,7 +116,7 @@ def find_jumps(
 
     Falls count whose mean lies at or above half the level before and below it after, all samples there below the
     level; values below ``deepest`` count as it.  NaN samples are passed over.  The last of equal falls wins; the zero
-    lies half way to the next sample.
+    lies half way to the next finite sample.
     """
     middle = math.log(0.5 * level) * stay
     for trace in range(len(start)):
@@ -137,9 +143,10 @@ def find_jumps(
                 largest = max(largest, np.float64(values[place[at + 1 + near]]))
             if before >= middle and after < middle and largest < level and before - after >= best:
                 best, found = before - after, at
-        sample[trace], fraction[trace] = -1, 0.0
+        sample[trace], following[trace], fraction[trace] = -1, -1, 0.0
         if found >= 0:
             status[trace], sample[trace], fraction[trace] = ALIGNED, place[found] - base, 0.5
+            following[trace] = place[found + 1] - base
         else:
             status[trace] = NO_SAMPLES if length == 0 else (ENDS_ABOVE if highest >= level else NEVER_REACHES)
 
@@ -285,9 +292,10 @@ def _compile() -> None:
     values = np.array([2.0, 1.0, 0.1, 0.1, 0.1], np.float32)
     bounds = np.array([0, 5], np.int64)
     sample, fraction, status = np.empty(1, np.int64), np.empty(1), np.empty(1, np.uint8)
+    following = np.empty(1, np.int64)
     for _ in ("writable", "read-only"):
-        find_crossings(values, bounds, bounds[:1], bounds[1:], False, 0.5, False, 3, sample, fraction, status)
-        find_jumps(values, bounds, bounds[:1], bounds[1:], False, 0.5, 1e-4, 3, sample, fraction, status)
+        find_crossings(values, bounds, bounds[:1], bounds[1:], False, 0.5, False, 3, sample, following, fraction, status)
+        find_jumps(values, bounds, bounds[:1], bounds[1:], False, 0.5, 1e-4, 3, sample, following, fraction, status)
         rising_rows(values, bounds, bounds[:1], 2, 10.0, np.empty(1, np.bool_))
         drive = values.astype(np.float64)
         drive.flags.writeable = values.flags.writeable
