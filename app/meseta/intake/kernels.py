@@ -294,7 +294,9 @@ def _compile() -> None:
     sample, fraction, status = np.empty(1, np.int64), np.empty(1), np.empty(1, np.uint8)
     following = np.empty(1, np.int64)
     for _ in ("writable", "read-only"):
-        find_crossings(values, bounds, bounds[:1], bounds[1:], False, 0.5, False, 3, sample, following, fraction, status)
+        find_crossings(
+            values, bounds, bounds[:1], bounds[1:], False, 0.5, False, 3, sample, following, fraction, status
+        )
         find_jumps(values, bounds, bounds[:1], bounds[1:], False, 0.5, 1e-4, 3, sample, following, fraction, status)
         rising_rows(values, bounds, bounds[:1], 2, 10.0, np.empty(1, np.bool_))
         drive = values.astype(np.float64)
