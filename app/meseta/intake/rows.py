@@ -10,11 +10,23 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.traces import ArraySamples, Samples
+from meseta.work import blocks_of
 
-__all__ = ["BLOCK_SAMPLES", "JoinedSamples", "RawSpans", "SharedAxis", "StreamedRow", "end_to_end"]
+__all__ = [
+    "BLOCK_SAMPLES",
+    "LARGEST_BLOCK",
+    "JoinedSamples",
+    "RawSpans",
+    "SharedAxis",
+    "StreamedRow",
+    "end_to_end",
+    "flat_blocks",
+]
 
 BLOCK_SAMPLES: Final = 1_000_000
 """Samples that are worked out at once: a few tens of megabytes with all that is needed on the way."""
+LARGEST_BLOCK: Final = 2_000_000
+"""Samples that are read at once at most; a longer trace comes in several blocks."""
 Row = npt.NDArray[Any]
 
 
@@ -160,3 +172,15 @@ def end_to_end(rows: Sequence[Row | Samples]) -> Samples:
     parts = tuple(ArraySamples(row) if isinstance(row, np.ndarray) else row for row in rows)
     offsets = np.concatenate([[0], np.cumsum([len(part) for part in parts])]).astype(np.int64)
     return parts[0] if len(parts) == 1 else JoinedSamples(parts, offsets)
+
+
+def flat_blocks(offsets: npt.NDArray[np.int64], block_samples: int) -> list[tuple[int, int]]:
+    """Cut flat samples into blocks of whole traces; only a trace beyond the largest block is cut itself."""
+    blocks: list[tuple[int, int]] = []
+    for first, last in blocks_of(offsets, block_samples):
+        low, high = int(offsets[first]), int(offsets[last])
+        if high - low > LARGEST_BLOCK:
+            blocks += [(at, min(at + LARGEST_BLOCK, high)) for at in range(low, high, LARGEST_BLOCK)]
+        elif high > low:
+            blocks.append((low, high))
+    return blocks
