@@ -20,7 +20,15 @@ from meseta.errors import MesetaError, OutputError
 from meseta.tables import write_csv
 from meseta.work import Work
 
-__all__ = ["RESULT_FILES", "RunResult", "check_output", "length_columns", "run_analysis", "trace_columns"]
+__all__ = [
+    "RESULT_FILES",
+    "RunResult",
+    "check_output",
+    "length_columns",
+    "nearest_folder",
+    "run_analysis",
+    "trace_columns",
+]
 
 RESULT_FILES = (
     "summary.json",
@@ -58,7 +66,7 @@ def check_output(folder: Path) -> None:
     """
     if folder.exists() and not folder.is_dir():
         raise OutputError("is a file, not a folder", str(folder), "choose another --out")
-    parent = _nearest_folder(folder)
+    parent = nearest_folder(folder)
     try:
         # permissions do not tell everything (read-only or virtual file systems): the place itself decides
         Path(tempfile.mkdtemp(prefix=".meseta-", dir=parent)).rmdir()
@@ -80,7 +88,7 @@ def check_output(folder: Path) -> None:
         raise OutputError("is neither empty nor an earlier result of Meseta", str(folder), "choose an empty folder")
 
 
-def _nearest_folder(folder: Path) -> Path:
+def nearest_folder(folder: Path) -> Path:
     """Return the closest existing folder above ``folder``, in which the result is prepared."""
     parent = folder.absolute().parent
     while not parent.exists():
@@ -235,6 +243,8 @@ def run_analysis(
             partial / "correlation2d.npz",
             edges_g0=correlation.grid.edges_g0,
             correlation=correlation.correlation,
+            correlation_low=correlation.correlation_low,
+            correlation_high=correlation.correlation_high,
             traces=correlation.traces,
             threshold=correlation.threshold,
         )

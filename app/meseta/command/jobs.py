@@ -15,7 +15,6 @@ from meseta.command.frame import (
     bad_plain,
     json_option,
     list_bad,
-    open_analysis,
     recipe_from,
     recipe_options,
     say_passed_over,
@@ -24,6 +23,7 @@ from meseta.command.frame import (
     working,
 )
 from meseta.command.keeping import peek_and_keep
+from meseta.command.large import opened_for_run
 from meseta.command.physics import physics_lines, spread_lines
 from meseta.command.printed import check_lines, result_lines, study_answer, study_lines
 from meseta.errors import CallError, Cancelled, InputError, MesetaError
@@ -153,13 +153,13 @@ def run_one(
     """Do the whole job on one recording or study; errors after work began have exit code 1."""
     from meseta.run import run_analysis
 
-    analysis, bad = open_analysis(files, choice, strict, work)
-    sources = analysis.traces.sources
-    title = Path(sources[0].name).stem if len(sources) == 1 else f"{len(sources)} recordings"
-    try:
-        return run_analysis(analysis, folder, work, bad, title, files, all_analyses)
-    except MesetaError as error:
-        raise _later(error) from error
+    with opened_for_run(files, folder, choice, strict, work) as (analysis, bad, named):
+        sources = analysis.traces.sources
+        title = Path(sources[0].name).stem if len(sources) == 1 else f"{len(sources)} recordings"
+        try:
+            return run_analysis(analysis, folder, work, bad, title, named, all_analyses)
+        except MesetaError as error:
+            raise _later(error) from error
 
 
 def _later(error: MesetaError) -> MesetaError:

@@ -18,7 +18,7 @@ from meseta.intake.joining import joined
 from meseta.intake.opening import OpenContext, open_recording
 from meseta.intake.readers.unpack import sha256_of
 from meseta.intake.recording import Recording
-from meseta.intake.room import check_room
+from meseta.intake.room import TooLargeError, check_room
 from meseta.intake.several import batches_of, open_several
 from meseta.recipe import Recipe
 from meseta.traces import TraceSet
@@ -75,7 +75,7 @@ def read(
             check_room(size, f"{len(parts)} of {len(files)} files")
             if so_far is not None and not one_file:
                 so_far(len(parts), lambda: joined([part for part in parts if part.traces], recipe, {}))
-        elif strict:
+        elif strict or isinstance(found, TooLargeError):  # the largest of many is not left out in silence
             raise found
         else:
             bad.append(found)

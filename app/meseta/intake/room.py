@@ -8,10 +8,14 @@ from typing import Final
 from meseta import typeset
 from meseta.errors import InputError
 
-__all__ = ["check_room", "machine_byte"]
+__all__ = ["TooLargeError", "check_room", "machine_byte"]
 
 MOST_SHARE: Final = 0.6
 """Share of the machine's memory that traces may take: the analysis, the system and other programs need the rest."""
+
+
+class TooLargeError(InputError):
+    """Traces would take more memory than the machine has to spare."""
 
 
 def machine_byte() -> int | None:
@@ -27,12 +31,12 @@ def check_room(needed_byte: int, where: str) -> None:
 
     Raises
     ------
-    InputError
+    TooLargeError
         With the way round it: a study is worked through block by block, whatever its size.
     """
     there = machine_byte()
     if there is not None and needed_byte > MOST_SHARE * there:
-        raise InputError(
+        raise TooLargeError(
             f"the traces would take {typeset.number(needed_byte / 1e9, 3)} GB of this machine's "
             f"{typeset.number(there / 1e9, 3)} GB of memory",
             where,
