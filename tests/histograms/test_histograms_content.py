@@ -119,3 +119,15 @@ def test_files_that_cannot_be_are_refused_and_nothing_is_left(analysis: Analysis
     with pytest.raises(CallError, match="no plain arrays"):
         save_result(analysis.noise(WORK), tmp_path / "result.csv")
     assert list(tmp_path.iterdir()) == []
+
+
+def test_band_of_the_correlation_goes_with_it() -> None:
+    random = np.random.default_rng(2)
+    values = 10 ** (np.linspace(1, -7, 200) + 0.2 * random.standard_normal((240, 200)))
+    recipe = Recipe().with_settings(["correlation.permutations=2", "correlation.bins_per_decade=5"])
+    result = Analysis(TraceSet.from_arrays(values, step_nm=0.005), recipe).result("correlation_histogram", WORK)
+    found, rows = content_of(result).quantities, columns_of(result)
+    low, middle, high = (found[name].values for name in ("correlation_low", "correlation", "correlation_high"))
+    told = np.isfinite(low)
+    assert told.any() and (low[told] <= middle[told]).all() and (middle[told] <= high[told]).all()
+    assert np.array_equal(rows["correlation_low"], low.ravel(), equal_nan=True)

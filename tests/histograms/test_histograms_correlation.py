@@ -10,7 +10,13 @@ from hypothesis.extra import numpy as hnp
 from small_recordings import counted, log_uniform, matrix_of, noise_model, recording
 
 from meseta.histograms import Grid, correlation_histogram, correlation_kernels, shifted_correlation
-from meseta.histograms.correlation import correlation_notes, correlation_of, largest_by_chance, products
+from meseta.histograms.correlation import (
+    correlation_band,
+    correlation_notes,
+    correlation_of,
+    largest_by_chance,
+    products,
+)
 from meseta.histograms.grids import logarithmic_edges
 from meseta.recipe import Recipe
 from meseta.work import Work
@@ -193,3 +199,49 @@ def test_largest_product_equals_the_plain_one(rows: int) -> None:
     plain = np.abs(values.T @ values)
     np.fill_diagonal(plain, 0)
     assert correlation_kernels.largest_product(values) == pytest.approx(plain.max(), rel=1e-5)
+
+
+def test_band_of_independent_traces_is_that_of_fisher() -> None:
+    """1.96 / sqrt(n - 3) in z = atanh(C): R. A. Fisher, Metron 1, 3 (1921), for normal values."""
+    random = np.random.default_rng(5)
+    shared = random.normal(size=(3000, 1))
+    counts = np.rint(1000 * (random.normal(size=(3000, 30)) + shared)).astype(np.int64)
+    found = correlation_of(counts)
+    low, high = correlation_band(counts, found, Work())
+    pairs = np.triu_indices(30, 1)
+    half = (np.arctanh(high[pairs]) - np.arctanh(low[pairs])) / 2
+    assert np.median(half) == pytest.approx(1.96 / np.sqrt(2997), rel=0.15)
+    assert 0.92 < ((low < 0.5) & (high > 0.5))[pairs].mean() <= 1.0  # half of the variance is shared
+    assert (low[pairs] < found[pairs]).all() and (high[pairs] > found[pairs]).all()
+    assert np.array_equal(np.diag(low), np.ones(30)) and np.array_equal(np.diag(high), np.ones(30))
+
+
+def test_band_covers_where_traces_remember_those_before() -> None:
+    """Independent columns with memory over ten traces: Fisher's interval is half as wide as it should be."""
+    random = np.random.default_rng(6)
+    steps, state = random.normal(size=(4000, 40)), np.zeros(40)
+    values = np.empty((4000, 40))
+    for row, step in enumerate(steps):
+        state = 0.8 * state + step
+        values[row] = state
+    counts = np.rint(1000 * values).astype(np.int64)
+    found = correlation_of(counts)
+    low, high = correlation_band(counts, found, Work())
+    pairs = np.triu_indices(40, 1)
+    covered = ((low <= 0) & (high >= 0))[pairs].mean()
+    naive = (np.abs(np.arctanh(found[pairs])) <= 1.96 / np.sqrt(3997)).mean()
+    assert 0.91 < covered < 0.985
+    assert naive < 0.8
+
+
+def test_band_is_told_only_where_there_is_one() -> None:
+    counts = np.random.default_rng(7).integers(0, 50, (400, 4))
+    counts[:, 2] = 7
+    counts[:, 3] = 0
+    counts[5, 3] = 9
+    low, high = correlation_band(counts, correlation_of(counts), Work())
+    assert np.isfinite(low[:2, :2]).all() and np.isfinite(high[:2, :2]).all()
+    for edge in (low, high):
+        assert np.isnan(edge[2]).all() and np.isnan(edge[:3, 3]).all()
+    few = counts[:150]
+    assert np.isnan(correlation_band(few, correlation_of(few), Work())[0]).all()

@@ -425,7 +425,7 @@ STEPS: Mapping[str, Step] = {
         Step(
             "correlation_histogram",
             "correlating",
-            1,
+            2,
             ("counts", "selection", "noise"),
             ("correlation", "resampling.seed"),
             _correlation,

@@ -132,13 +132,15 @@ def _displacement(result: DisplacementHistogram) -> Content:
 
 @content_of.register
 def _correlation(result: CorrelationHistogram) -> Content:
-    second = result.weak_second if len(result.weak_second) else result.weak
+    second, pair = result.weak_second if len(result.weak_second) else result.weak, ("conductance", "conductance")
+    band = {"correlation_low": result.correlation_low, "correlation_high": result.correlation_high}
     return Content(
         "2D correlation histogram",
         {
             "conductance_edges": _edges(result.grid),
-            "correlation": Quantity(result.correlation, "", ("conductance", "conductance")),
-            "significant": Quantity(result.significant, "", ("conductance", "conductance")),
+            "correlation": Quantity(result.correlation, "", pair),
+            **{name: Quantity(values, "", pair) for name, values in band.items() if values.size},
+            "significant": Quantity(result.significant, "", pair),
             "weak": Quantity(result.weak, "", ("conductance",)),
             "weak_second": Quantity(second, "", ("conductance",)),
         },

@@ -2,12 +2,21 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import numpy.typing as npt
 
 from meseta.kernels import kernel, warm_up
 
-__all__ = ["correlate_products", "largest_product", "narrow_rows", "permute_within"]
+__all__ = [
+    "add_deviations",
+    "band_about",
+    "correlate_products",
+    "largest_product",
+    "narrow_rows",
+    "permute_within",
+]
 
 
 @kernel
@@ -45,6 +54,44 @@ def correlate_products(
             value = covariance / (scale[one] * scale[other])
             result[one, other] = -1.0 if value < -1.0 else (1.0 if value > 1.0 else value)
         result[one, one] = 1.0 if scale[one] > 0.0 else np.nan
+
+
+@kernel
+def add_deviations(
+    without: npt.NDArray[np.float64],
+    whole: npt.NDArray[np.float64],
+    total: npt.NDArray[np.float64],
+    squares: npt.NDArray[np.float64],
+) -> None:
+    """Add how far each correlation without a part lies from the whole one, as Fisher's z, and the square of it."""
+    for one in range(len(whole)):
+        for other in range(len(whole)):
+            deviation = math.atanh(without[one, other]) - math.atanh(whole[one, other])
+            total[one, other] += deviation
+            squares[one, other] += deviation * deviation
+
+
+@kernel
+def band_about(
+    whole: npt.NDArray[np.float64],
+    total: npt.NDArray[np.float64],
+    squares: npt.NDArray[np.float64],
+    parts: int,
+    reach: float,
+    low: npt.NDArray[np.float64],
+    high: npt.NDArray[np.float64],
+) -> None:
+    """Write the band ``reach`` jackknife errors about each correlation; perfect correlations have one of no width."""
+    for one in range(len(whole)):
+        for other in range(len(whole)):
+            value = whole[one, other]
+            if abs(value) == 1.0:
+                low[one, other] = high[one, other] = value
+                continue
+            variance = (parts - 1) / parts * (squares[one, other] - total[one, other] ** 2 / parts)
+            half = reach * math.sqrt(0.0 if variance < 0.0 else variance)  # NaN stays NaN
+            low[one, other] = math.tanh(math.atanh(value) - half)
+            high[one, other] = math.tanh(math.atanh(value) + half)
 
 
 @kernel
@@ -99,5 +146,8 @@ def _warm_up() -> None:
     for wide in (np.ones((2, 2)), np.ones((2, 2), np.int64), np.ones((2, 2), np.uint16)):
         narrow_rows(wide, square, np.zeros(2), np.zeros(2))
     correlate_products(np.ones((2, 2)), np.ones(2), 2, np.ones((2, 2)))
+    wide = np.zeros((2, 2))
+    add_deviations(wide, wide, wide.copy(), wide.copy())
+    band_about(wide, wide, wide, 2, 1.0, wide.copy(), wide.copy())
     permute_within(square, 2, np.ones(2, np.uint64), square.copy())
     largest_product(square)

@@ -96,7 +96,7 @@ def sum_rows(
 
 
 @kernel
-def merged_bin(line: npt.NDArray[np.unsignedinteger], coarse: int, merge: int) -> int:
+def merged_bin(line: npt.NDArray[np.unsignedinteger], coarse: int, merge: int) -> np.int64:
     """Return the sum of the ``merge`` fine bins of one bin, fewer where the row ends."""
     total = np.int64(0)
     for at in range(coarse * merge, min(coarse * merge + merge, len(line))):

@@ -18,7 +18,9 @@ __all__ = ["interval_near", "interval_of"]
 
 
 @kernel
-def interval_of(value: float, bits: int, table: npt.NDArray[np.uint16], thresholds: npt.NDArray[np.float32]) -> int:
+def interval_of(
+    value: np.float32, bits: np.uint32, table: npt.NDArray[np.uint16], thresholds: npt.NDArray[np.float32]
+) -> np.int64:
     """Return the interval of a float32 sample, whose bits are given as uint32, among any thresholds."""
     place = np.int64(table[bits >> 15])
     while value >= thresholds[place]:
@@ -27,7 +29,9 @@ def interval_of(value: float, bits: int, table: npt.NDArray[np.uint16], threshol
 
 
 @kernel
-def interval_near(value: float, bits: int, table: npt.NDArray[np.uint16], thresholds: npt.NDArray[np.float32]) -> int:
+def interval_near(
+    value: np.float32, bits: np.uint32, table: npt.NDArray[np.uint16], thresholds: npt.NDArray[np.float32]
+) -> np.int64:
     """Return the same without a branch, where no cell of the table holds more than one threshold."""
     place = np.int64(table[bits >> 15])
     return place + (value >= thresholds[place])

@@ -463,6 +463,8 @@ class CorrelationHistogram:
         Weak bins of the second axis where it differs from the first; else empty.
     note : str
         What a reader should know; empty where there is nothing.
+    correlation_low, correlation_high : (bins, bins) float64
+        Pointwise 95 % band; NaN where it cannot be told, empty where it was not worked out.
     """
 
     grid: Grid
@@ -476,6 +478,8 @@ class CorrelationHistogram:
     second_axis: str = ""
     weak_second: npt.NDArray[np.bool_] = field(default_factory=lambda: np.zeros(0, bool))
     note: str = ""
+    correlation_low: Floats = field(default_factory=lambda: np.empty((0, 0)))
+    correlation_high: Floats = field(default_factory=lambda: np.empty((0, 0)))
 
     @property
     def crossed(self) -> bool:
