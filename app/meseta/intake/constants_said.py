@@ -25,7 +25,7 @@ LOOKED_SAMPLES: Final = 100_000
 
 def doubts_of(recording: Recording, settings: CalibrationSettings, kind: str, channel: RawChannel) -> tuple[str, ...]:
     """Return what is taken for granted, or stated and not used, where this channel becomes conductance."""
-    doubts = list(channel.doubts)
+    doubts: list[str] = []
     if kind == "conductance" and not channel.unit:
         doubts.append(f"the unit of '{channel.name}' is not stated: taken as G0")
     if kind == "log_conductance" and not channel.unit:
