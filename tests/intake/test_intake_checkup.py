@@ -113,6 +113,24 @@ def test_displacement_off_by_a_factor_shows_in_the_tunnelling_slope(tmp_path, fa
     assert said in found.text
 
 
+@pytest.mark.parametrize(("plateau", "fine"), [(1.0, True), (0.5, False), (0.45, False)])
+def test_a_plateau_at_the_zero_is_named_and_a_level_below_it_proposed(tmp_path, plateau, fine):
+    """Plateaus of 150 samples with 10 % of noise: the last crossing of 0.5 G0 lies anywhere within those near it."""
+    rng = np.random.default_rng(2)
+    rows = []
+    for _ in range(TRACES):
+        begin = int(rng.integers(80, 150))
+        steps = [np.full(begin, 3.0), np.full(150, plateau), 1e-3 * 10.0 ** -np.linspace(0, 3, SAMPLES - 150 - begin)]
+        rows.append(np.concatenate(steps) * rng.normal(1, 0.1, SAMPLES))
+    nm = np.arange(SAMPLES) * 0.002
+    path = record(tmp_path, conductance=(np.array(rows), {"unit": "G0"}), displacement=(nm, {"unit": "nm"}))
+    described, _ = intake.describe(path, Recipe())
+    found = {one.check: one for one in described[0].findings}["zero of displacement"]
+    assert found.fine == fine
+    assert ("back and forth" in found.text) != fine
+    assert described[0].proposed_zero_g0 == (None if fine else 0.3)
+
+
 @pytest.mark.parametrize(("top", "proposed"), [(5.0, None), (0.3, 0.2)])
 def test_a_zero_that_openings_do_not_cross_is_named_and_another_proposed(tmp_path, top, proposed):
     rng = np.random.default_rng(2)

@@ -16,6 +16,10 @@ __all__ = ["both_ways", "direction", "sign", "zero_level"]
 
 Floats = npt.NDArray[np.float64]
 NEAR_LEVEL: Final = 0.02
+STAYS: Final = 3
+"""Samples that must lie below for a crossing to count, as in the default of alignment.stay_samples."""
+MOST_WAVERING: Final = 0.3
+"""Of the openings; contacts that close again after they broke are fewer (common practice, no source)."""
 LEAST_OPENINGS: Final = 5
 CHANCE_SIGMAS: Final = 3.0
 LEAST_CONTACT_G0: Final = 0.01
@@ -99,10 +103,18 @@ def _top(part: Part, row: int) -> float:
     return float(np.nanquantile(values, 0.98)) if np.isfinite(values).any() else float("nan")
 
 
+def _crosses_back(values: Floats, level: float) -> bool:
+    """Return whether an opening falls below a level, stays there for some samples, and comes back above it."""
+    values = values[np.isfinite(values)]
+    above = np.flatnonzero(values >= level)
+    return bool(len(above) > 1 and np.diff(above).max() > STAYS)
+
+
 def zero_level(look: Look, level: float) -> tuple[float | None, Finding]:
     """Return the level of zero that this recording proposes, and whether the stated one fits.
 
-    A level fits where nearly all openings cross it and few samples linger near it.
+    A level fits where nearly all openings cross it, few samples linger near it, and few openings cross it back and
+    forth, as those with a plateau at it do.
     """
     values, pooled = look.values, look.pooled
     seen = [one for one in values if np.isfinite(one).any()]
@@ -115,16 +127,27 @@ def zero_level(look: Look, level: float) -> tuple[float | None, Finding]:
             return 0.0
         return float(np.mean(np.abs(np.log10(np.maximum(pooled[pooled > 0], 1e-300) / at)) < NEAR_LEVEL))
 
-    crossed, near = crossing(level), lingering(level)
+    def wavering(at: float) -> float:
+        return float(np.mean([_crosses_back(one, at) for one in seen])) if seen else 0.0
+
+    crossed, near, back = crossing(level), lingering(level), wavering(level)
     above = float(np.mean(pooled[pooled > 0] >= 0.01)) if (pooled > 0).any() else 0.0
     crowded = near > 0.25 * max(above, 1e-12)
     text = f"{crossed:.0%} of the openings cross {level:g} G0, {near:.2%} of the samples lie near it"
     if crossed < 0.8 and look.part.share_of(Quality.SATURATED) > 0 and _highest(values) < level:
         text += f", the amplifier is saturated above {_highest(values):.2g} G0"
-    if crossed >= 0.8 and not crowded:
+    if back > MOST_WAVERING:
+        text += (
+            f", {back:.0%} cross it back and forth: the last crossing lies within a plateau (alignment.crossing = jump)"
+        )
+    if crossed >= 0.8 and not crowded and back <= MOST_WAVERING:
         return None, Finding("zero of displacement", True, text)
     candidates = [0.5, 0.3, 0.2, 0.1, 0.05, 0.02, 0.01, 5e-3, 2e-3, 1e-3, 5e-4, 1e-4]
-    fitting = [one for one in candidates if crossing(one) >= 0.8 and lingering(one) <= 0.25 * max(above, 1e-12)]
+    fitting = [
+        one
+        for one in candidates
+        if crossing(one) >= 0.8 and lingering(one) <= 0.25 * max(above, 1e-12) and wavering(one) <= MOST_WAVERING
+    ]
     if not fitting:
         return None, Finding("zero of displacement", False, f"{text}; no level fits better")
     return fitting[0], Finding(
