@@ -12,7 +12,8 @@ import pytest
 
 from meseta.errors import StudyError
 from meseta.recipe import Recipe
-from meseta.study import Study, following, gather, gathering
+from meseta.study import Study, following, gather, gathering, write_study
+from meseta.study.arriving import files_meant
 from meseta.study.pages import PagedFile
 from meseta.work import Work
 
@@ -321,6 +322,35 @@ def test_a_look_that_takes_nothing_only_says_what_is_whole(tmp_path, night):
     assert one.study is None and not (tmp_path / "s.h5").exists()
     assert one.look(Work(threads=1)).added.traces == 1 and one.study.recipe == Recipe()
     one.study.close()
+
+
+def test_an_analysis_of_a_study_that_has_grown_since_is_saved_with_its_own_recordings(tmp_path, night):
+    (night / "a.csv").write_text(text(1))
+    gather([night], tmp_path / "s.h5")
+    with Study.open(tmp_path / "s.h5") as study:
+        earlier = study.analysis()
+        (night / "b.csv").write_text(text(2))
+        study.add(files_meant([night], study.path))
+        write_study(tmp_path / "earlier.h5", earlier, files=study.path)
+    assert names(tmp_path / "earlier.h5") == ["a.csv"]
+    with Study.open(tmp_path / "earlier.h5") as study:
+        assert study.sources == {study.traces().sources[0]: "copied"}
+        assert study.traces(recipe=Recipe().with_settings(["calibration.series_resistance_ohm=100"])).traces == 1
+
+
+def test_files_are_added_after_traces_were_looked_at_by_a_recipe_that_came_in_force_then(tmp_path, night):
+    """As a window does it that makes traces by new settings before the study hears of these."""
+    (night / "a.csv").write_text(text(1))
+    gather([night], tmp_path / "s.h5")
+    (night / "b.csv").write_text(text(2))
+    recipe = Recipe().with_settings(["calibration.series_resistance_ohm=100"])
+    with Study.open(tmp_path / "s.h5") as study:
+        study.traces(recipe=recipe)
+        study.change(recipe=recipe)
+        study.add(files_meant([night], study.path))
+        assert study.traces().traces == 2
+    gather([night], tmp_path / "once.h5", recipe)
+    assert by_source(tmp_path / "s.h5") == by_source(tmp_path / "once.h5")
 
 
 FOLLOWER = """

@@ -5,17 +5,19 @@ from __future__ import annotations
 from collections.abc import Callable, Collection, Iterator, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, field
+from itertools import chain
 from pathlib import Path
 from typing import Final
 
 import h5py
 
 from meseta.errors import InputError, MesetaError
-from meseta.intake import Recording, open_recording
+from meseta.intake import Recording
 from meseta.intake.context import batch_context, recordings_among
 from meseta.intake.files import FoundFile
 from meseta.intake.opening import OpenContext
 from meseta.intake.reading import traces_from
+from meseta.intake.several import batches_of, open_several
 from meseta.recipe import Recipe
 from meseta.study.files import is_study
 from meseta.study.growing import TraceWriter
@@ -201,8 +203,10 @@ def _opened(
     context = batch_context(recipe.intake, [file.path for file in files])
     with ExitStack() as stack:
         batch: list[_Opened] = []
-        looked = work.each(lambda one: _open(one, recipe, context), files, "reading files", unit="files")
-        for file, found in zip(files, looked, strict=True):
+        batches = batches_of(files)
+        sizes = [len(one) for one in batches]
+        looked = work.each(lambda one: _open(one, recipe, context), batches, "reading files", sizes=sizes, unit="files")
+        for file, found in zip(files, chain.from_iterable(looked), strict=True):
             if isinstance(found, MesetaError):
                 added.failed[file.path] = found
                 continue
@@ -232,18 +236,37 @@ def _opened(
             yield batch
 
 
-def _open(file: FoundFile, recipe: Recipe, context: OpenContext) -> _Opened | MesetaError:
-    look = look_at(file.path)
+def _open(files: Sequence[FoundFile], recipe: Recipe, context: OpenContext) -> list[_Opened | MesetaError]:
+    """Open a batch of files; return what is wrong with those that are no whole recordings."""
+    looks = [look_at(file.path) for file in files]
+    studies = [
+        _fault_of_study(file.path) if look is not None else None for file, look in zip(files, looks, strict=True)
+    ]
+    plain = [file for file, fault in zip(files, studies, strict=True) if fault is None]
+    opened = open_several(plain, recipe, context)
+    return [
+        _looked_at(file, look, next(opened)) if fault is None else fault
+        for file, look, fault in zip(files, looks, studies, strict=True)
+    ]
+
+
+def _fault_of_study(path: Path) -> InputError | None:
     try:
-        if look is not None and is_study(file.path):
-            raise InputError("is a Meseta study, no recording", str(file.path), "gather the recordings it was made of")
-        recording = open_recording(file.path, recipe, file.name, context)
+        if is_study(path):
+            return InputError("is a Meseta study, no recording", str(path), "gather the recordings it was made of")
     except InputError as error:
         return error
+    return None
+
+
+def _looked_at(file: FoundFile, look: Look | None, opened: Recording | InputError) -> _Opened | MesetaError:
+    """Return an opened file, unless it changed since it was looked at."""
+    if isinstance(opened, InputError):
+        return opened
     if look is None or look_at(file.path) not in (None, look):
-        recording.close()
+        opened.close()
         return _restless(file.path)
-    return _Opened(file, look, recording)
+    return _Opened(file, look, opened)
 
 
 def _replaced(file: FoundFile) -> InputError:

@@ -15,6 +15,7 @@ from meseta.intake import Recording, find_files, open_recording
 from meseta.intake.context import batch_context, recordings_among
 from meseta.recipe import Recipe
 from meseta.selection import with_measures
+from meseta.study.content import read_sources
 from meseta.study.files import is_study, looking
 from meseta.study.history import History
 from meseta.study.loading import write_content, write_whole_traces
@@ -95,7 +96,9 @@ def write_study(
         with ExitStack() as stack:
             if origin is not None:
                 old = stack.enter_context(looking(origin))
-                recordings = read_recordings(old, traces.sources)
+                ours = {source.sha256 for source in traces.sources}  # it may have grown since the analysis was begun
+                held = read_recordings(old, read_sources(old)[0])
+                recordings = [one for one in held if one.source.sha256 in ours]
             else:
                 recordings = _small(named, traces.sources, analysis.recipe, stack)
             if recordings:

@@ -372,6 +372,8 @@ class Study(Notebook):
             return added
 
     def _add(self, files: Sequence[FoundFile], work: Work) -> Added:
+        if self._content.recipe_key != self.recipe.key(FROM_RAW):
+            self.rewrite(work)  # those in the file, to which others are added, were made by other settings
         traces, content, added = self.traces(work), self._content, Added()
         history = self._history
         seen = (self._seen or read_seen(self.path)).copy()
