@@ -9,7 +9,7 @@ makes one from its own ``/raw``; :func:`meseta.intake.traces_from` turns recordi
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from types import TracebackType
 from typing import Any, Self
 
@@ -188,6 +188,17 @@ class Recording:
         other = object.__new__(Recording)
         other.__dict__.update(self.__dict__, channels=channels)
         return other
+
+    def beginning(self, samples: int) -> Recording:
+        """Return the recording as if it ended after so many samples, where it is longer; readable as long as this."""
+        if self.samples <= samples:
+            return self
+        pieces = max(int(np.searchsorted(self.offsets, samples, side="left")), 1)
+        offsets = np.minimum(self.offsets[: pieces + 1], samples)
+        table = {name: column[:pieces] for name, column in self.table.items()}
+        return replace(
+            self, offsets=offsets, record_start=self.record_start[:pieces], dataset=self.dataset[:pieces], table=table
+        )
 
     def _begin_of(self, start: int, stop: int) -> npt.NDArray[np.int64]:
         """Return, for each flat sample, the flat sample at which its piece begins."""

@@ -4,14 +4,15 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 import numpy.typing as npt
 
-from meseta import intake
+from meseta import intake, typeset
 from meseta.errors import InputError, MesetaError
 from meseta.intake import Description
-from meseta.intake.context import recordings_among
+from meseta.intake.context import batch_context, recordings_among
 from meseta.intake.kept_layouts import LayoutError, as_seen
 from meseta.intake.layout_differences import differences
 from meseta.recipe import Recipe
@@ -25,6 +26,8 @@ __all__ = ["CheckPicture", "Misfit", "RawCurve", "check_picture"]
 PREVIEW_SAMPLES = 40_000
 PREVIEW_POINTS = 2_000
 PREVIEW_TRACES = 12
+CUT_SAMPLES = 4_000_000
+"""The calibrated preview is cut from no more than the beginning of a recording."""
 DESCRIBED_FILES = 3
 QUIET_ROLES = ("ignore", "other", "trace_number")
 
@@ -72,6 +75,8 @@ class CheckPicture:
         Names of the remembered layouts that the first file fits, where it is read by none.
     misfit : Misfit, optional
         Where none of them fits a kept layout.
+    stretch_samples : int
+        Samples at the beginning of the first file that the calibrated traces were cut from; 0 where from all of it.
     """
 
     paths: tuple[str, ...]
@@ -84,6 +89,7 @@ class CheckPicture:
     fault: str = ""
     fitting: tuple[str, ...] = ()
     misfit: Misfit | None = None
+    stretch_samples: int = 0
 
     @property
     def readable(self) -> bool:
@@ -93,6 +99,9 @@ class CheckPicture:
     def sentences(self) -> list[str]:
         """Return one sentence for each doubt, for everything odd, and for every file that cannot be read."""
         said: list[str] = [self.fault] if self.fault else []
+        if self.stretch_samples:
+            samples = typeset.integer(self.stretch_samples)
+            said.append(f"the traces drawn are the first of the first {samples} samples; counts are of the whole file")
         for one in self.described:
             said += [one.problem] if one.problem else []
             said += list(one.doubts)
@@ -137,17 +146,16 @@ def check_picture(
             bad.append(error)
     proposed = {} if described and described[0].kept_layout else remembered or {}
     raw, fitting = _raw_curves(str(files[0].path), files[0].name, recipe, proposed)
-    calibrated, unit = None, ""
+    calibrated, unit, stretch = None, "", 0
     if any(one.traces for one in described):
         try:
-            traces = intake.read([str(files[0].path)], recipe, work.quiet())
-            calibrated, unit = _calibrated(traces), traces.drive.unit
+            calibrated, unit, stretch = _calibrated(str(files[0].path), recipe, work.quiet())
         except MesetaError as error:
             fault = str(error)
     misfit = None if described else _misfit(bad)
     words = tuple(str(error) for error in bad)
     return CheckPicture(
-        tuple(paths), len(files), tuple(described), words, raw, calibrated, unit, fault, fitting, misfit
+        tuple(paths), len(files), tuple(described), words, raw, calibrated, unit, fault, fitting, misfit, stretch
     )
 
 
@@ -164,7 +172,7 @@ def _raw_curves(
     """Return the beginning of each channel, and the names of the layouts that the recording fits."""
     curves, fitting = [], []
     try:
-        with intake.open_recording(path, recipe, name) as recording:
+        with intake.open_recording(path, recipe, name, checksum=False) as recording:
             seen = as_seen(recording)
             fitting = [
                 one
@@ -184,7 +192,16 @@ def _raw_curves(
     return tuple(curves), tuple(fitting)
 
 
-def _calibrated(traces: TraceSet) -> Curve:
+def _calibrated(path: str, recipe: Recipe, work: Work) -> tuple[Curve, str, int]:
+    """Return the first traces, the unit of their drive, and within how many samples they were found (0: in all)."""
+    context = batch_context(recipe.intake, [Path(path)])
+    with intake.open_recording(path, recipe, context=context, checksum=False) as recording:
+        begun = recording.beginning(CUT_SAMPLES)
+        traces = intake.traces_from([begun], recipe, work, stream=True)
+        return _drawn(traces), traces.drive.unit, begun.samples if begun is not recording else 0
+
+
+def _drawn(traces: TraceSet) -> Curve:
     from meseta.window.envelope import gapped
 
     curves = []
