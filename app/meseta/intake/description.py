@@ -196,7 +196,8 @@ def describe_recording(recording: Recording, recipe: Recipe, work: Work | None =
     except InputError as error:
         doubts = [*recording.doubts, *(f"'{c.name}': {doubt}" for c in settled.channels for doubt in c.doubts)]
         return _with(base, problem=f"{error.what} -> {error.remedy}", doubts=tuple(doubts))
-    return _read(base, part, recipe, (work or Work()).quiet())
+    work = work or Work()
+    return _read(base, part, recipe, work if part.samples > LOADED_SAMPLES else work.quiet())
 
 
 def _with(base: Description, **changes: Any) -> Description:

@@ -381,5 +381,6 @@ def _in_words(error: Exception, path: Path, lines_before: int) -> InputError:
         return InputError(f"'{bad[1][:40]}' is not a number", where, "correct the cell or leave the line out")
     counts = re.search(r"Expected (\d+) columns, got (\d+)", text)
     if counts:
-        return InputError(f"has {counts[2]} cells where {counts[1]} are expected", where, "correct the line")
+        said = f"has {counts[2]} cell{'' if counts[2] == '1' else 's'} where {counts[1]} "
+        return InputError(f"{said}{'is' if counts[1] == '1' else 'are'} expected", where, "correct the line")
     return InputError("is no table of numbers", where, "see the line named here")
