@@ -250,7 +250,7 @@ def run_analysis(
         )
         analysis.recipe.save(partial / "recipe.toml")
         work.tell("writing the result", 1, 4, "parts")
-        study.write_study(partial / "study.h5", analysis, work.quiet(), files, "study made by a run")
+        study.write_study(partial / "study.h5", analysis, work, files, "study made by a run")
         work.tell("writing the result", 2, 4, "parts")
         frame = analysis.recipe.displacement_histogram
         figure = figures.result_figure(histogram, displacement, fit, analysis.recipe.figure, title, frame)
