@@ -114,6 +114,12 @@ def test_nothing_in_a_sidecar_is_passed_over_in_silence(tmp_path, ending, conten
         assert traces.table["bias_volt"].tolist() == [0.1]
 
 
+def test_a_sidecar_is_not_said_to_be_passed_over(tmp_path):
+    (tmp_path / "other.json").write_text("{}")
+    traces = _read(tmp_path, {".json": '{"molecule": "M"}'}, template=TEMPLATE)
+    assert traces.notes["passed_over"] == ["other.json"]
+
+
 def test_yaml_quotes_remarks_and_anchors(tmp_path):
     text = 'bias: &b 100 mV  # small\n"molecule": "M: 1 # x"  # pure\nspecimen: 1.10\nempty: ~\n'
     table = _read(tmp_path, {".yaml": text}).table
@@ -195,3 +201,11 @@ def test_temperature_speed_and_gain_are_columns_with_the_values_used(tmp_path):
 )
 def test_numbers_as_people_write_them(entries, key, value):
     assert canonical(entries)[0][key] == value
+
+
+def test_folders_of_a_template_are_found_for_a_file_that_is_given_alone(tmp_path):
+    (tmp_path / "tip 3").mkdir()
+    (tmp_path / "tip 3" / "100mV_1.csv").write_text(TABLE)
+    recipe = Recipe.build({"intake": {"name_template": "{specimen}/{bias_mV}mV_{n}.csv"}})
+    for given in (tmp_path, tmp_path / "tip 3" / "100mV_1.csv"):
+        assert intake.read(given, recipe).table["specimen"].tolist() == ["tip 3"]

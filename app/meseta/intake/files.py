@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import glob
 import os
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence, Set
 from dataclasses import dataclass, field
 from functools import lru_cache
 from pathlib import Path
@@ -18,8 +18,10 @@ from natsort import natsorted, ns
 
 from meseta.errors import InputError, printable
 
-__all__ = ["STUDY_MARK", "FoundFile", "expand", "find_files"]
+__all__ = ["SIDECAR_ENDINGS", "STUDY_MARK", "FoundFile", "expand", "find_files"]
 
+SIDECAR_ENDINGS: Final = (".json", ".toml", ".ini", ".cfg", ".yaml", ".yml")
+"""Of files of metadata that lie beside recordings."""
 STUDY_MARK: Final = b"meseta study"
 """Stands in the first bytes of every study file."""
 _HEAD_BYTE: Final = 4096
@@ -120,7 +122,14 @@ def find_files(paths: PathLike | Iterable[PathLike]) -> tuple[list[FoundFile], l
         raise InputError(
             "holds no recordings", ", ".join(str(given) for given in listed), "give files or another folder"
         )
-    return unique, passed
+    of_recordings = {name for file in unique for name in (file.name, file.name.rpartition(".")[0])}
+    return unique, [name for name in passed if not _is_sidecar(name, of_recordings)]
+
+
+def _is_sidecar(name: str, of_recordings: Set[str]) -> bool:
+    """Return whether a file is the metadata of a recording beside it, which is read with it."""
+    stem, _, ending = name.rpartition(".")
+    return f".{ending}" in SIDECAR_ENDINGS and stem in of_recordings
 
 
 def _real(path: Path, folders: dict[Path, str]) -> str:

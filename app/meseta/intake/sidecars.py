@@ -16,12 +16,12 @@ from pathlib import Path
 from typing import Any, Final
 
 from meseta.errors import InputError
+from meseta.intake.files import SIDECAR_ENDINGS
 from meseta.intake.metadata import Plain, as_written
 
 __all__ = ["sidecar", "sidecars_in"]
 
 LARGEST_BYTE: Final = 1 << 20
-_ENDINGS: Final = (".json", ".toml", ".ini", ".cfg", ".yaml", ".yml")
 _NAMED: Final = 5
 """Entries that a doubt names one by one."""
 Entries = Iterator[tuple[str, Any]]
@@ -32,7 +32,7 @@ def sidecars_in(folders: Iterable[Path]) -> dict[Path, frozenset[str]]:
     found = {}
     for folder in folders:
         with contextlib.suppress(OSError):  # one that cannot be listed is looked into file by file
-            found[folder] = frozenset(one.name for one in os.scandir(folder) if one.name.endswith(_ENDINGS))
+            found[folder] = frozenset(one.name for one in os.scandir(folder) if one.name.endswith(SIDECAR_ENDINGS))
     return found
 
 
@@ -52,7 +52,9 @@ def sidecar(path: Path, known: frozenset[str] | None = None) -> tuple[dict[str, 
     """
     if known is not None and not known:
         return {}, []
-    beside = dict.fromkeys(one for end in _ENDINGS for one in (path.with_suffix(end), path.with_name(path.name + end)))
+    beside = dict.fromkeys(
+        one for end in SIDECAR_ENDINGS for one in (path.with_suffix(end), path.with_name(path.name + end))
+    )
     there = [
         one for one in beside if one != path and (known is None or one.name in known) and one.is_file()
     ]  # fmt: skip
