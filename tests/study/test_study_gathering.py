@@ -91,6 +91,28 @@ def test_a_corrected_gain_keeps_every_decision(tmp_path, night, recipe):
 
 
 @pytest.mark.parametrize("recipe", [Recipe(), LINKED], ids=["copied", "linked"])
+def test_the_offset_from_the_floor_is_that_of_all_recordings_however_they_are_batched(tmp_path, monkeypatch, recipe):
+    """Six recordings whose offset drifts, in one batch or in six, with a bad file among them: the same to the bit."""
+    rng, folder = np.random.default_rng(1), tmp_path / "drifting"
+    folder.mkdir()
+    for number in range(6):
+        drift = 0.02 + 0.01 * (number + np.linspace(0, 1, 20))[:, None]
+        rows = np.concatenate([np.full((20, 100), 0.5), np.zeros((20, 300))], 1) + drift
+        with h5py.File(folder / f"part{number}.h5", "w") as file:
+            file["amplifier"] = rows + 1e-3 * rng.normal(size=rows.shape)
+            file["amplifier"].attrs["unit"] = "V"
+            file.attrs.update(bias_volt=0.1, gain_volt_per_ampere=1e6, nm_per_sample=0.01)
+    (folder / "part2b.h5").write_bytes(b"no recording")
+    recipe = recipe.with_settings(["calibration.offset_from_floor=true", "intake.layout=rows"])
+    whole = intake.read(folder, recipe)
+    monkeypatch.setattr("meseta.study.gathering.BATCH_SAMPLES", 8000)
+    with Study.create(tmp_path / "s.h5", folder, recipe) as study:
+        np.testing.assert_array_equal(study.traces().conductance, whole.conductance)
+        assert study.traces().notes["floor_offset"] == whole.notes["floor_offset"]
+        assert study.traces().notes["floor_offset"]["traces"] == 120
+
+
+@pytest.mark.parametrize("recipe", [Recipe(), LINKED], ids=["copied", "linked"])
 def test_a_changed_error_of_a_constant_moves_the_interval_and_no_trace(tmp_path, night, recipe):
     """3 % of gain is 3 % of every position; the recordings are away, so that nothing can have been made anew."""
     recipe = recipe.with_values("peaks", peaks=[{"position_g0": 1.0, "width": 0.3}], axis="logarithmic")

@@ -6,7 +6,8 @@ plateau that ends a trace is never taken for an offset.  A per-trace offset is n
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any, Final
 
 import numpy as np
@@ -18,7 +19,7 @@ from meseta.intake.running_floor import LEAST_TRACES, offset_error, running_offs
 from meseta.intake.spread import Value
 from meseta.quantities import G0_SIEMENS
 
-__all__ = ["remove_floor_offset"]
+__all__ = ["PooledFloor", "pooled_floor", "remove_floor_offset", "tails_of"]
 
 Floats = npt.NDArray[np.float64]
 TAIL_SHARE: Final = 0.1
@@ -27,36 +28,71 @@ MAD_TO_SIGMA: Final = 1.482602218505602
 SHOWN: Final = 200
 
 
+Tails = tuple[Floats, Floats, Floats]
+
+
+@dataclass(frozen=True)
+class PooledFloor:
+    """The offset that several recordings show together.
+
+    Attributes
+    ----------
+    offset_g0 : mapping
+        Name of a recording -> (traces,) offset of each of its traces; empty where none is removed.
+    notes : dict
+        What was found, for notes.
+    """
+
+    offset_g0: Mapping[str, Floats]
+    notes: dict[str, Any]
+
+    def remove(self, parts: Mapping[str, Part]) -> dict[str, Any]:
+        """Subtract the offset from parts by their names, before the series resistance; return the notes."""
+        for name, part in parts.items():
+            if name in self.offset_g0:
+                _subtract(part, self.offset_g0[name])
+        return self.notes
+
+
 def remove_floor_offset(parts: Sequence[Part]) -> dict[str, Any]:
     """Subtract the running offset from loaded parts, before the series resistance; return what was done, for notes."""
-    usable = [part for part in parts if part.calibration.kind in ("linear", "current", "conductance")]
-    tails, noise, bias = (np.concatenate(column) for column in zip(*map(_tails, usable), strict=True)) if usable else (
-        np.empty(0), np.empty(0), np.empty(0)
-    )  # fmt: skip
-    offset, reaches = running_offset(tails * bias, noise * np.abs(bias))
+    named = {str(place): part for place, part in enumerate(parts)}
+    return pooled_floor({name: tails_of(part) for name, part in named.items()}).remove(named)
+
+
+def pooled_floor(tails: Mapping[str, Tails | None]) -> PooledFloor:
+    """Return the offset that recordings show together, in their order, of what :func:`tails_of` gives of each."""
+    usable = {name: one for name, one in tails.items() if one is not None}
+    empty = np.empty(0)
+    ends, noise, bias = (np.concatenate(column) for column in zip(*usable.values(), (empty, empty, empty), strict=True))
+    offset, reaches = running_offset(ends * bias, noise * np.abs(bias))
     if not np.isfinite(offset).any():
-        return {"removed": False, "why": f"fewer than {LEAST_TRACES} traces are shown to reach the floor"}
-    first = 0
-    for part in usable:
-        rows = slice(first, first + part.traces)
-        _subtract(part, offset[rows] / bias[rows])
-        first += part.traces
+        why = f"fewer than {LEAST_TRACES} traces are shown to reach the floor"
+        return PooledFloor({}, {"removed": False, "why": why})
+    stops = np.cumsum([len(one[0]) for one in usable.values()])
+    of_each = dict(zip(usable, np.split(offset / bias, stops[:-1]), strict=True))
     shown = np.unique(np.linspace(0, len(offset) - 1, min(len(offset), SHOWN)).astype(int))
     unit = "G0" if np.all(bias == 1.0) else "G0 V"
-    return {
+    notes = {
         "removed": True,
         "traces_at_floor": int(reaches.sum()),
         "traces": len(offset),
         "at_trace": shown.tolist(),
         "offset": [float(value) for value in offset[shown]],
         "unit": unit,
-        "offset_error": offset_error(tails * bias, reaches),
+        "offset_error": offset_error(ends * bias, reaches),
         "offset_ampere_median": float(np.median(offset) * G0_SIEMENS) if unit == "G0 V" else None,
     }
+    return PooledFloor(of_each, notes)
 
 
-def _tails(part: Part) -> tuple[Floats, Floats, Floats]:
-    """Return (median, its standard error, bias) of the last stretch of each opening, as measured."""
+def tails_of(part: Part) -> Tails | None:
+    """Return (median, its standard error, bias) of the last stretch of each opening, as measured.
+
+    None where the amplifier has no offset that adds to the current.
+    """
+    if part.calibration.kind not in ("linear", "current", "conductance"):
+        return None
     median, error = np.full(part.traces, np.nan), np.full(part.traces, np.nan)
     series = _of_traces(part, part.calibration.in_series_ohm) * G0_SIEMENS
     stops = {row: stop for row, _, stop, kind in part.cut.phases if kind == 1}

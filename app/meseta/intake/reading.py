@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
@@ -13,7 +14,7 @@ from meseta.intake.alike import Memory
 from meseta.intake.assembly import Part, plan_of
 from meseta.intake.context import batch_context, recordings_among, rows_without_file
 from meseta.intake.files import FoundFile, find_files
-from meseta.intake.floor import remove_floor_offset
+from meseta.intake.floor import PooledFloor, pooled_floor, remove_floor_offset, tails_of
 from meseta.intake.joining import joined
 from meseta.intake.opening import OpenContext, open_recording
 from meseta.intake.readers.unpack import sha256_of
@@ -24,7 +25,7 @@ from meseta.recipe import Recipe
 from meseta.traces import TraceSet
 from meseta.work import Work
 
-__all__ = ["read", "traces_from"]
+__all__ = ["floor_of", "read", "traces_from"]
 
 
 def read(
@@ -87,8 +88,22 @@ def read(
     return traces
 
 
+def floor_of(recordings: Iterable[Recording], recipe: Recipe, work: Work) -> PooledFloor:
+    """Return the offset from the floor that recordings show together; only their ends are read, one after the other."""
+    tails = {}
+    for recording in recordings:
+        with contextlib.suppress(InputError):  # what it says is said when its traces are made
+            tails[recording.source.sha256] = tails_of(_loaded(recording, recipe, work, stream=True))
+    return pooled_floor(tails)
+
+
 def traces_from(
-    recordings: Sequence[Recording], recipe: Recipe | None = None, work: Work | None = None, *, stream: bool = False
+    recordings: Sequence[Recording],
+    recipe: Recipe | None = None,
+    work: Work | None = None,
+    *,
+    stream: bool = False,
+    floor: PooledFloor | None = None,
 ) -> TraceSet:
     """Return the traces of recordings that are open: calibrated, cut, and put end to end.
 
@@ -100,6 +115,8 @@ def traces_from(
     stream : bool
         Leave the samples in the recordings, which must then stay open: each channel is worked out block by block as it
         is read, so that memory stays small however large the recording.
+    floor : PooledFloor, optional
+        Offset from the floor that these show together with others; else what they show themselves is removed.
 
     Raises
     ------
@@ -112,12 +129,14 @@ def traces_from(
     parts = [part for part in parts if part.traces]
     if not parts:
         raise InputError("no traces were found", "recordings", "check the cutting settings")
-    return _joined(parts, recipe, {"bad_files": [], "passed_over": []})
+    return _joined(parts, recipe, {"bad_files": [], "passed_over": []}, floor)
 
 
-def _joined(parts: Sequence[Part], recipe: Recipe, notes: dict[str, Any]) -> TraceSet:
+def _joined(parts: Sequence[Part], recipe: Recipe, notes: dict[str, Any], floor: PooledFloor | None = None) -> TraceSet:
     """Return loaded parts end to end, with the offset removed that all of them together show."""
-    if recipe.calibration.offset_from_floor:
+    if floor is not None:
+        notes = {**notes, "floor_offset": floor.remove({part.recording.source.sha256: part for part in parts})}
+    elif recipe.calibration.offset_from_floor:
         notes = {**notes, "floor_offset": remove_floor_offset(parts)}
     return joined(parts, recipe, notes)
 

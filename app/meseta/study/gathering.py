@@ -15,8 +15,9 @@ from meseta.errors import InputError, MesetaError
 from meseta.intake import Recording
 from meseta.intake.context import batch_context, recordings_among
 from meseta.intake.files import FoundFile
+from meseta.intake.floor import PooledFloor
 from meseta.intake.opening import OpenContext
-from meseta.intake.reading import traces_from
+from meseta.intake.reading import floor_of, traces_from
 from meseta.intake.several import batches_of, open_several
 from meseta.recipe import Recipe
 from meseta.study.files import is_study
@@ -168,8 +169,11 @@ def take_in(
     size = sum(one.size_byte for one in present.sources)
     size += sum(look.size_byte for file in new if (look := look_at(file.path)) is not None)
     copy = size <= recipe.study.copy_below_megabyte * 1e6
+    floor = None
+    if recipe.calibration.offset_from_floor and len(new) > 1 and not present.sources:
+        floor = floor_of(_each_once(new, recipe), recipe, work.quiet())
     for batch in _opened(new, recipe, present, known, added, work):
-        good = _write_traces(batch, writer, recipe, added, work)
+        good = _write_traces(batch, writer, recipe, added, work, floor)
         added.sources += [one.recording.source for one in good]
         added.kept += ["copied" if copy else "linked"] * len(good)
         if copy and good:
@@ -181,6 +185,18 @@ def take_in(
             added.files.append(one.file.path)
             present.seen.remember(one.file.path, one.look, one.recording.source.sha256)
     return added
+
+
+def _each_once(files: Sequence[FoundFile], recipe: Recipe) -> Iterator[Recording]:
+    """Yield the recordings of files, each open until the next is asked for; files that cannot be read are left out."""
+    recordings = recordings_among(files, recipe.intake)
+    context, seen = batch_context(recipe.intake, [file.path for file in recordings]), set[str]()
+    for opened in chain.from_iterable(_open(batch, recipe, context) for batch in batches_of(recordings)):
+        if not isinstance(opened, MesetaError):
+            with opened.recording as recording:
+                if recording.source.sha256 not in seen:
+                    yield recording
+                seen.add(recording.source.sha256)
 
 
 def _is_known(file: FoundFile, seen: Seen, known: Collection[str], added: Added) -> bool:
@@ -278,18 +294,26 @@ def _replaced(file: FoundFile) -> InputError:
 
 
 def _write_traces(
-    batch: Sequence[_Opened], writer: TraceWriter, recipe: Recipe, added: Added, work: Work
+    batch: Sequence[_Opened],
+    writer: TraceWriter,
+    recipe: Recipe,
+    added: Added,
+    work: Work,
+    floor: PooledFloor | None,
 ) -> list[_Opened]:
     """Write the traces of a batch; return the recordings that gave any."""
     quiet = work.quiet()
     try:
         large = sum(one.recording.samples for one in batch) > BATCH_SAMPLES
-        traces, good = traces_from([one.recording for one in batch], recipe, quiet, stream=large), list(batch)
+        traces, good = (
+            traces_from([one.recording for one in batch], recipe, quiet, stream=large, floor=floor),
+            list(batch),
+        )
         writer.append(traces)
     except InputError as error:
         if len(batch) == 1:
             added.failed[batch[0].file.path] = error
             return []
-        return [one for single in batch for one in _write_traces([single], writer, recipe, added, work)]
+        return [one for single in batch for one in _write_traces([single], writer, recipe, added, work, floor)]
     added.traces += traces.traces
     return good
