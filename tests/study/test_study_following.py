@@ -185,8 +185,13 @@ def test_known_files_are_never_read_again(tmp_path, night, monkeypatch):
         (night / f"{number}.csv").write_text(text(number))
     follow(night, tmp_path / "s.h5")
     opened = []
-    true = gathering.open_recording
-    monkeypatch.setattr(gathering, "open_recording", lambda path, *more: opened.append(path.name) or true(path, *more))
+    true = gathering.open_several
+
+    def opening(files, *more):
+        opened.extend(one.path.name for one in files)
+        return true(files, *more)
+
+    monkeypatch.setattr(gathering, "open_several", opening)
     answer, _ = gather([night], tmp_path / "s.h5")
     assert opened == [] and answer["already_there"] == 5
     with Study.open(tmp_path / "s.h5") as study:
