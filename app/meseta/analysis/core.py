@@ -46,7 +46,11 @@ class Analysis:
         return Analysis(self.traces, self.recipe, decisions, self._store)
 
     def with_traces(self, traces: TraceSet) -> Analysis:
-        """Return the analysis over other traces (a corrected calibration, more files)."""
+        """Return the analysis over other traces (a corrected calibration, more files).
+
+        Nothing of single blocks is carried over: plateaus and measures rest on the noise of all traces, and to count a
+        block's samples costs less than to make sure that they are the same.
+        """
         return Analysis(traces, self.recipe, self.decisions, self._store)
 
     def key(self, name: str) -> str:
