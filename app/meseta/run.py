@@ -258,6 +258,9 @@ def run_analysis(
             figures.save_figure(figure, partial / f"figure.{suffix}")
         work.tell("writing the result", 3, 4, "parts")
         summary = figures.summary(analysis, bad_files)
+        check = study.check_calibration(partial / "study.h5", analysis.recipe, files, work)
+        summary["calibration_check"] = check.as_dict()
+        summary["warnings"] = [*summary["warnings"], *check.doubts()]
         if all_analyses and np.isfinite(fit.table.position_g0).any():
             summary["all_analyses"] = _write_analyses(partial, analysis, work)
         (partial / "report.html").write_text(figures.report(analysis, summary, title), encoding="utf-8")

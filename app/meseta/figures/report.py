@@ -105,6 +105,8 @@ def _tables(analysis: Analysis, summary: Mapping[str, Any], work: Work) -> dict[
         "noise": rows.noise_rows(analysis.noise(work), analysis.traces.drive.unit),
         "settings": rows.setting_rows(analysis.recipe),
         "notes": _notes(summary["notes"]),
+        "check_up": rows.check_up_parts(summary.get("calibration_check")),
+        "check_up_notes": rows.check_up_notes(summary.get("calibration_check")),
     }
 
 

@@ -130,6 +130,32 @@ def rule_rows(traces: Mapping[str, Any]) -> Rows:
     ]
 
 
+def check_up_parts(check: Mapping[str, Any] | None) -> list[dict[str, Any]]:
+    """Return what the check-up found of each group of recordings, from ``summary["calibration_check"]``."""
+    return [] if check is None else [_check_up_part(one) for one in check["checked"] if one["findings"]]
+
+
+def _check_up_part(checked: Mapping[str, Any]) -> dict[str, Any]:
+    others = checked["recordings"] - 1
+    more = f" and {typeset.integer(others)} like it" if others else ""
+    traces = f"{typeset.integer(checked['traces'])} {'trace' if checked['traces'] == 1 else 'traces'}"
+    return {"heading": f"{checked['first']}{more}, {traces}", "rows": checked["findings"]}
+
+
+def check_up_notes(check: Mapping[str, Any] | None) -> list[str]:
+    """Return of what the check-up saw nothing, or not all."""
+    if check is None:
+        return []
+    looked = sum(one["recordings"] for one in check["checked"])
+    said = [f"{typeset.integer(looked)} of {typeset.integer(check['recordings'])} recordings were looked at."]
+    if check["missing"]:
+        said.append(f"{typeset.integer(check['missing'])} that were to be are neither in the study nor at hand.")
+    if check["shortened"]:
+        samples = typeset.integer(check["samples_at_most"])
+        said.append(f"Of {typeset.integer(check['shortened'])} only the first {samples} samples were looked at.")
+    return said
+
+
 def exclusion_rows(histogram: Mapping[str, Any]) -> Rows:
     """Return the samples that are in no bin, by reason, from ``summary["histogram"]``."""
     total = histogram["samples"] + sum(histogram["excluded"].values())

@@ -103,9 +103,7 @@ def _parts(
     if mark.role == "other":
         parts = steps_of(mark, first, last, lambda step: step < 0)
         if len(parts) > 1:
-            result.notes.append(
-                f"'{mark.name}' counts the rows and starts anew: taken as {len(parts)} traces"
-            )
+            result.notes.append(f"'{mark.name}' counts the rows and starts anew: taken as {len(parts)} traces")
         return parts
     if mark.role == "time":
         parts = steps_of(mark, first, last, lambda step: step < 0)

@@ -146,8 +146,8 @@ def make_channel(
         if guess.role == "other" and other:
             second = guess_role(other, stated or unit, "", ground)
             guess = second if second.role != "other" else guess
-    if guess.role == "other" and (said := _told_in_words(lowered, stated or unit, ground)) is not None:
-        guess = said
+    if guess.role == "other" and (told := _told_in_words(lowered, stated or unit, ground)) is not None:
+        guess = told
     scale, offset = conversion(attributes, dtype.kind in "iu")
     doubts = list(guess.doubts)
     if (
