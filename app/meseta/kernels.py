@@ -21,9 +21,9 @@ __all__ = ["KERNEL_MODULES", "compile_all", "kernel", "warm_up"]
 KERNEL_MODULES = (
     "meseta.simulate.kernels",
     "meseta.intake.kernels",
-    "meseta.intake.calibration_kernels",
-    "meseta.intake.stored_kernels",
-    "meseta.intake.text_kernels",
+    "meseta.intake.calibration.kernels",
+    "meseta.intake.calibration.stored_kernels",
+    "meseta.intake.readers.text_kernels",
     "meseta.segmentation.noise_kernels",
     "meseta.segmentation.partition_kernels",
     "meseta.segmentation.kernels",

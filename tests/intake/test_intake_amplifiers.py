@@ -10,8 +10,8 @@ from scipy.interpolate import PchipInterpolator
 
 from meseta import intake
 from meseta.errors import RecipeError
-from meseta.intake.calibration_kernels import follow_curve
-from meseta.intake.curve import curve_of
+from meseta.intake.calibration.curve import curve_of
+from meseta.intake.calibration.kernels import follow_curve
 from meseta.recipe import Recipe
 from meseta.traces import Quality
 

@@ -14,9 +14,9 @@ from hypothesis import strategies as st
 from meseta import intake
 from meseta.errors import InputError
 from meseta.intake import registry
+from meseta.intake.readers.text_kernels import single_blanks
 from meseta.intake.readers.text_rows import numbers, numbers_of_each
 from meseta.intake.readers.text_search import find_form
-from meseta.intake.text_kernels import single_blanks
 from meseta.recipe import Recipe
 
 FILES = 40

@@ -10,8 +10,8 @@ import pytest
 
 from meseta import intake
 from meseta.intake.assembly import plan_of
-from meseta.intake.checkup import Finding
-from meseta.intake.two_gain import overlap_of
+from meseta.intake.calibration.two_gain import overlap_of
+from meseta.intake.checks.check_up import Finding
 from meseta.recipe import Recipe
 
 G0_SIEMENS = 7.748091729863649e-05  # CODATA 2022, 2e²/h

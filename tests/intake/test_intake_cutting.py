@@ -184,7 +184,7 @@ RESTLESS = {
 @pytest.mark.parametrize("noise", [0.0, 5e-4])
 @pytest.mark.parametrize("sign", [1, -1])
 def test_restless_ramps_are_cut_within_two_samples(shape, noise, sign):
-    from meseta.intake.ramps import find_ramps
+    from meseta.intake.cutting.ramps import find_ramps
 
     rng = np.random.default_rng(17)
     drive, pulls, pushes, _ = restless_drive(rng, **RESTLESS[shape])
@@ -199,7 +199,7 @@ def test_restless_ramps_are_cut_within_two_samples(shape, noise, sign):
 
 
 def test_a_staircase_from_a_slow_converter_is_cut_within_its_steps():
-    from meseta.intake.ramps import find_ramps
+    from meseta.intake.cutting.ramps import find_ramps
 
     drive, pulls, *_ = restless_drive(np.random.default_rng(18), hold=(60, 90))
     stairs = np.repeat(drive[::5], 5)[: len(drive)]
@@ -240,7 +240,7 @@ def test_one_range_kept_apart_is_said_in_the_singular(tmp_path):
 
 
 def test_a_sawtooth_is_cut_at_its_flybacks():
-    from meseta.intake.ramps import find_ramps
+    from meseta.intake.cutting.ramps import find_ramps
 
     drive = (np.arange(20000) % 2000) / 2000.0
     ramps = find_ramps(lambda a, b: drive[a:b], len(drive), 0.3)
@@ -252,7 +252,7 @@ def test_a_sawtooth_is_cut_at_its_flybacks():
 
 @pytest.mark.parametrize("wild", [500.0, -1e9, np.inf, np.nan])
 def test_a_wild_sample_of_the_drive_costs_at_most_its_own_ramp(wild):
-    from meseta.intake.ramps import find_ramps
+    from meseta.intake.cutting.ramps import find_ramps
 
     drive = np.abs((np.arange(40000) / 2000) % 2 - 1) * 5
     drive[7777] = wild
@@ -266,7 +266,7 @@ def test_a_wild_sample_of_the_drive_costs_at_most_its_own_ramp(wild):
 @settings(deadline=None, max_examples=60)
 @given(st.lists(st.tuples(st.integers(1, 80), st.floats(-3, 3)), min_size=2, max_size=30), st.booleans())
 def test_ramps_never_overlap(steps, is_noisy):
-    from meseta.intake.ramps import find_ramps
+    from meseta.intake.cutting.ramps import find_ramps
 
     places = np.cumsum([0] + [count for count, _ in steps])
     drive = np.interp(np.arange(places[-1] + 1), places, [0.0] + [height for _, height in steps])
@@ -333,7 +333,7 @@ def test_falling_and_both_edges_and_a_last_trace_cut_off(tmp_path):
 
 
 def test_edges_do_not_depend_on_blocks(monkeypatch, tmp_path):
-    from meseta.intake import marks
+    from meseta.intake.cutting import marks
 
     rng = np.random.default_rng(22)
     places = 50 + np.cumsum(rng.integers(60, 90, 40))

@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 
 from meseta import intake
-from meseta.intake.running_floor import running_offset
+from meseta.intake.calibration.running_floor import running_offset
 from meseta.recipe import Recipe
 
 G0_SIEMENS = 7.748091729863649e-05  # CODATA 2022, 2e²/h

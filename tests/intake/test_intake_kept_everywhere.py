@@ -11,8 +11,8 @@ from test_intake_more_layouts import CASES
 
 from meseta import intake
 from meseta.intake.assembly import prepared
-from meseta.intake.kept_layouts import kept_layout, nearest_fit
-from meseta.intake.units import unit_factor
+from meseta.intake.meaning.kept_layouts import kept_layout, nearest_fit
+from meseta.intake.meaning.units import unit_factor
 from meseta.recipe import Recipe
 from meseta.recipe.layout_files import with_layout
 

@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 
 from meseta import intake, study
 from meseta.errors import InputError, RecipeError
-from meseta.intake.kept_layouts import LayoutError, arrangement_of
+from meseta.intake.meaning.kept_layouts import LayoutError, arrangement_of
 from meseta.recipe import Recipe
 from meseta.recipe.kept_layouts import KeptChannel, KeptLayout
 from meseta.recipe.layout_files import keep_in_file, with_layout

@@ -10,8 +10,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from meseta.intake.calibration.stored_kernels import scale_into, turn_into
 from meseta.intake.kernels import drive_piece, drive_steps, find_turns, power_of_ten, rising_rows
-from meseta.intake.stored_kernels import scale_into, turn_into
 
 
 def turns_of(values, threshold, block=None):

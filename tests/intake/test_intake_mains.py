@@ -7,8 +7,8 @@ import pytest
 from intake_files import G0_SIEMENS, recipe, record, volts
 
 from meseta import intake
-from meseta.intake.calibration_kernels import pickup_sums, subtract_pickup
-from meseta.intake.mains import find_pickup
+from meseta.intake.calibration.kernels import pickup_sums, subtract_pickup
+from meseta.intake.calibration.mains import find_pickup
 from meseta.traces import Quality
 
 GAIN, BIAS, RATE = 1e6, 0.1, 1e4

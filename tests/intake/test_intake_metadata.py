@@ -6,8 +6,8 @@ import pytest
 
 from meseta import intake
 from meseta.errors import InputError
-from meseta.intake.metadata import canonical
-from meseta.intake.name_template import from_name
+from meseta.intake.meaning.metadata import canonical
+from meseta.intake.meaning.name_template import from_name
 from meseta.recipe import Recipe
 
 ROWS = "".join(f"{0.01 * n:.2f},{100 - n}\n" for n in range(50))

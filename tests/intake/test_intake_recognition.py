@@ -11,11 +11,11 @@ import pytest
 from meseta import intake
 from meseta.errors import InputError
 from meseta.intake import registry
-from meseta.intake.metadata import canonical, canonical_entry
-from meseta.intake.name_template import from_name
+from meseta.intake.meaning.metadata import canonical, canonical_entry
+from meseta.intake.meaning.name_template import from_name
+from meseta.intake.meaning.roles import guess_role, stem_of
+from meseta.intake.meaning.units import parse_unit, unit_factor
 from meseta.intake.readers.contents import Contents, make_channel, whole
-from meseta.intake.roles import guess_role, stem_of
-from meseta.intake.units import parse_unit, unit_factor
 from meseta.recipe import Recipe
 from meseta.traces import ArraySamples
 

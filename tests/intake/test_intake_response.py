@@ -8,7 +8,7 @@ from intake_files import G0_SIEMENS, recipe, record, volts
 from scipy.signal import bessel, butter, lfilter, sosfilt
 
 from meseta import intake
-from meseta.intake.response import rise_times, slew_limit
+from meseta.intake.checks.response import rise_times, slew_limit
 from meseta.traces import Quality
 
 

@@ -13,7 +13,7 @@ from intake_files import G0_SIEMENS, recipe, record, volts
 from meseta import intake
 from meseta.errors import InputError
 from meseta.intake.assembly import plan_of
-from meseta.intake.calibration_kernels import choose_gain, flag_slewing, flag_switches
+from meseta.intake.calibration.kernels import choose_gain, flag_slewing, flag_switches
 from meseta.traces import Quality
 from meseta.work import Work
 

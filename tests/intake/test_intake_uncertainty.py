@@ -8,7 +8,7 @@ import pytest
 from intake_files import G0_SIEMENS, recipe, record, volts
 
 from meseta import intake
-from meseta.intake.running_floor import offset_error, running_offset
+from meseta.intake.calibration.running_floor import offset_error, running_offset
 from meseta.peaks import calibration_shifts
 
 STATED = {"gain_volt_per_ampere": 1e6, "bias_volt": 0.1}

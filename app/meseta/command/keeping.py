@@ -32,7 +32,7 @@ def peek_and_keep(
         Where the files are of more than one layout.
     """
     from meseta import study
-    from meseta.intake.kept_layouts import answered_by
+    from meseta.intake.meaning.kept_layouts import answered_by
     from meseta.recipe.kept_layouts import check_layout_name
     from meseta.recipe.layout_files import keep_in_file
 
@@ -64,7 +64,7 @@ def _checked(
 ) -> tuple[list[Description], list[InputError], Recipe]:
     """Return the checks, the bad files and the recipe used; what fits no kept layout is recognised anew."""
     from meseta import intake
-    from meseta.intake.kept_layouts import LayoutError, recognised_anew
+    from meseta.intake.meaning.kept_layouts import LayoutError, recognised_anew
 
     bad: list[InputError] = []
     try:
@@ -80,7 +80,7 @@ def _checked(
 
 def _only_layout(checks: Sequence[Description]) -> KeptLayout:
     """Return the layout of all files; an error names the first that has another."""
-    from meseta.intake.layout_differences import differences
+    from meseta.intake.meaning.layout_differences import differences
 
     first = max(checks, key=lambda check: check.pieces > 1)
     for check in checks:

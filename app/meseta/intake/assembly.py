@@ -10,13 +10,13 @@ import numpy as np
 
 from meseta.errors import InputError
 from meseta.intake.alike import Memory
-from meseta.intake.constants import calibration_of
-from meseta.intake.cutting import cut
-from meseta.intake.drive import drive_of, sample_interval
-from meseta.intake.kept_layouts import fit_of
+from meseta.intake.calibration.constants import calibration_of
+from meseta.intake.calibration.drive import drive_of, sample_interval
+from meseta.intake.cutting.cut import cut
+from meseta.intake.meaning.kept_layouts import fit_of
+from meseta.intake.meaning.roles import settle_roles, unmatched
 from meseta.intake.part import Part
 from meseta.intake.recording import RawChannel, Recording
-from meseta.intake.roles import settle_roles, unmatched
 from meseta.recipe import Recipe
 
 __all__ = ["Part", "plan_of", "prepared"]

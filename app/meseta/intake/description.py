@@ -11,10 +11,10 @@ import numpy as np
 
 from meseta.errors import InputError
 from meseta.intake.assembly import Part, plan_of, prepared
-from meseta.intake.checkup import Finding, check_up
-from meseta.intake.context import batch_context, recordings_among
+from meseta.intake.checks.check_up import Finding, check_up
 from meseta.intake.files import find_files
-from meseta.intake.kept_layouts import fit_of, kept_layout
+from meseta.intake.meaning.context import batch_context, recordings_among
+from meseta.intake.meaning.kept_layouts import fit_of, kept_layout
 from meseta.intake.opening import open_recording
 from meseta.intake.recording import RawChannel, Recording
 from meseta.recipe import Recipe

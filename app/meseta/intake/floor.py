@@ -14,9 +14,9 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.intake.assembly import Part
+from meseta.intake.calibration.running_floor import LEAST_TRACES, offset_error, running_offset
+from meseta.intake.calibration.spread import Value
 from meseta.intake.rows import BLOCK_SAMPLES, StreamedRow
-from meseta.intake.running_floor import LEAST_TRACES, offset_error, running_offset
-from meseta.intake.spread import Value
 from meseta.quantities import G0_SIEMENS
 
 __all__ = ["PooledFloor", "pooled_floor", "remove_floor_offset", "tails_of"]

@@ -12,8 +12,8 @@ import numpy.typing as npt
 
 from meseta.errors import InputError
 from meseta.intake.assembly import Part
-from meseta.intake.constants_said import plain_constants
-from meseta.intake.metadata import CONSTANTS
+from meseta.intake.calibration.constants_said import plain_constants
+from meseta.intake.meaning.metadata import CONSTANTS
 from meseta.intake.recording import BETWEEN_TRACES
 from meseta.intake.rows import end_to_end
 from meseta.recipe import Recipe

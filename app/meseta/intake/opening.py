@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Final
 
 from meseta.errors import InputError, MesetaError, printable
-from meseta.intake.opening_layouts import opened_for_layouts
+from meseta.intake.meaning.opening_layouts import opened_for_layouts
 from meseta.intake.readers.contents import Contents
 from meseta.intake.readers.unpack import peek_bytes, sha256_of
 from meseta.intake.recording import Recording
@@ -133,7 +133,7 @@ def recording_of(
     settings : IntakeSettings
     context : OpenContext
     """
-    from meseta.intake.context import beside
+    from meseta.intake.meaning.context import beside
 
     path, name, size = file
     recording = _recording(contents, Source(sha256, name or printable(path.name), size, reader, contents.layout))

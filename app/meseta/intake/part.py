@@ -11,16 +11,16 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from meseta.intake.calibrate import Calibration
-from meseta.intake.constants_said import plain_constants
-from meseta.intake.cutting import Cut
-from meseta.intake.drive import DriveAxis
+from meseta.intake.calibration.calibrate import Calibration
+from meseta.intake.calibration.constants_said import plain_constants
+from meseta.intake.calibration.drive import DriveAxis
+from meseta.intake.cutting.cut import Cut
+from meseta.intake.meaning.units import unit_factor
 from meseta.intake.part_directions import settle_directions
 from meseta.intake.part_drive import begin_drive, drive_block, relative_of
 from meseta.intake.recording import RawChannel, Recording
 from meseta.intake.room import check_room
 from meseta.intake.rows import BLOCK_SAMPLES, LARGEST_BLOCK, RawSpans, SharedAxis, StreamedRow, flat_blocks
-from meseta.intake.units import unit_factor
 from meseta.work import Work
 
 __all__ = ["Part"]

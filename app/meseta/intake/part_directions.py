@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Final
 import numpy as np
 import numpy.typing as npt
 
-from meseta.intake.cutting import PULL, PUSH
+from meseta.intake.cutting.cut import PULL, PUSH
 from meseta.intake.rows import BLOCK_SAMPLES
 from meseta.work import blocks_of
 

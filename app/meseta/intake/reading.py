@@ -12,10 +12,10 @@ from typing import Any
 from meseta.errors import InputError, MesetaError
 from meseta.intake.alike import Memory
 from meseta.intake.assembly import Part, plan_of
-from meseta.intake.context import batch_context, recordings_among, rows_without_file
 from meseta.intake.files import FoundFile, find_files
 from meseta.intake.floor import PooledFloor, pooled_floor, remove_floor_offset, tails_of
 from meseta.intake.joining import joined
+from meseta.intake.meaning.context import batch_context, recordings_among, rows_without_file
 from meseta.intake.opening import OpenContext, open_recording
 from meseta.intake.readers.unpack import sha256_of
 from meseta.intake.recording import Recording

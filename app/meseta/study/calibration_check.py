@@ -10,8 +10,8 @@ from typing import Any, Final
 
 from meseta.errors import MesetaError
 from meseta.intake import Recording, find_files, open_recording
-from meseta.intake.context import batch_context
-from meseta.intake.together import CheckedTogether, check_together, spread_over
+from meseta.intake.checks.together import CheckedTogether, check_together, spread_over
+from meseta.intake.meaning.context import batch_context
 from meseta.recipe import Recipe
 from meseta.study.content import read_sources
 from meseta.study.files import is_study, looking

@@ -13,8 +13,8 @@ from pathlib import Path
 from typing import Final
 
 from meseta.errors import InputError, MesetaError, StudyError
-from meseta.intake.context import batch_context
 from meseta.intake.files import FoundFile
+from meseta.intake.meaning.context import batch_context
 from meseta.recipe import Recipe
 from meseta.study.arriving import Arrivals, Waiting, files_meant, folders_of
 from meseta.study.gathering import Added

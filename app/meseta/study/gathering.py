@@ -13,9 +13,9 @@ import h5py
 
 from meseta.errors import InputError, MesetaError
 from meseta.intake import Recording
-from meseta.intake.context import batch_context, recordings_among
 from meseta.intake.files import FoundFile
 from meseta.intake.floor import PooledFloor
+from meseta.intake.meaning.context import batch_context, recordings_among
 from meseta.intake.opening import OpenContext
 from meseta.intake.reading import floor_of, traces_from
 from meseta.intake.several import batches_of, open_several

@@ -12,7 +12,7 @@ from meseta import intake
 from meseta.analysis import Analysis
 from meseta.errors import CallError, InputError
 from meseta.intake import Recording, find_files, open_recording
-from meseta.intake.context import batch_context, recordings_among
+from meseta.intake.meaning.context import batch_context, recordings_among
 from meseta.recipe import Recipe
 from meseta.selection import with_measures
 from meseta.study.content import read_sources

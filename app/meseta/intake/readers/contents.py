@@ -11,9 +11,9 @@ from typing import Any, Protocol
 import numpy as np
 import numpy.typing as npt
 
-from meseta.intake.metadata import Plain, canonical, plain_value
+from meseta.intake.meaning.metadata import Plain, canonical, plain_value
+from meseta.intake.meaning.roles import DRIVE_ROLES, SIGNAL_ROLES, Guess, guess_role
 from meseta.intake.recording import RawChannel
-from meseta.intake.roles import DRIVE_ROLES, SIGNAL_ROLES, Guess, guess_role
 from meseta.recipe.intake import IntakeSettings
 from meseta.traces import Samples
 

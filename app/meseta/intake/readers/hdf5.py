@@ -12,7 +12,8 @@ import numpy as np
 from natsort import natsorted
 
 from meseta.errors import InputError
-from meseta.intake.metadata import Plain, canonical, canonical_entry, plain_value
+from meseta.intake.meaning.metadata import Plain, canonical, canonical_entry, plain_value
+from meseta.intake.meaning.roles import SIGNAL_ROLES
 from meseta.intake.readers.contents import Contents, channel_constants, columns_of, make_channel
 from meseta.intake.readers.hdf5_frames import without_frames
 from meseta.intake.readers.hdf5_layout import sheet_of
@@ -21,7 +22,6 @@ from meseta.intake.readers.hdf5_numbered import numbered_sheet
 from meseta.intake.readers.hdf5_sheets import Sheet, joined_leaves, joined_sheets
 from meseta.intake.readers.hdf5_tree import Tree, open_file, walk
 from meseta.intake.recording import RawChannel
-from meseta.intake.roles import SIGNAL_ROLES
 from meseta.recipe.intake import IntakeSettings
 
 __all__ = ["Hdf5Reader", "understood"]

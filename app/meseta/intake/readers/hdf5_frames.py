@@ -15,7 +15,7 @@ from typing import Any, Final
 
 import numpy as np
 
-from meseta.intake.metadata import plain_value
+from meseta.intake.meaning.metadata import plain_value
 from meseta.intake.readers.hdf5_samples import Layer
 from meseta.intake.readers.hdf5_stored import Column
 from meseta.intake.readers.hdf5_tree import Node, Tree

@@ -8,7 +8,8 @@ from typing import Any, Final
 import numpy as np
 import numpy.typing as npt
 
-from meseta.intake.metadata import plain_value
+from meseta.intake.meaning.metadata import plain_value
+from meseta.intake.meaning.roles import DRIVE_ROLES, guess_role
 from meseta.intake.readers.hdf5_leaves import CUTS, INDEXES, STOPS, Leaf
 from meseta.intake.readers.hdf5_ragged import Ragged
 from meseta.intake.readers.hdf5_samples import columns_of, rows_of
@@ -16,7 +17,6 @@ from meseta.intake.readers.hdf5_sheets import Sheet
 from meseta.intake.readers.hdf5_spans import Spans, spans_of
 from meseta.intake.readers.orientation import orientation
 from meseta.intake.recording import BETWEEN_TRACES
-from meseta.intake.roles import DRIVE_ROLES, guess_role
 from meseta.traces import Samples
 
 __all__ = ["sheet_of"]

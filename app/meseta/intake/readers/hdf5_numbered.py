@@ -7,9 +7,9 @@ from typing import Final
 
 from natsort import natsorted
 
+from meseta.intake.meaning.roles import SIGNAL_ROLES, guess_role, stem_of
 from meseta.intake.readers.hdf5_leaves import Leaf
 from meseta.intake.readers.hdf5_sheets import Sheet, joined_leaves
-from meseta.intake.roles import SIGNAL_ROLES, guess_role, stem_of
 
 __all__ = ["numbered_sheet"]
 

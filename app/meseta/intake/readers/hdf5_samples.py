@@ -143,7 +143,7 @@ class ColumnSamples:
 
 def _columns(array: npt.NDArray[Any]) -> npt.NDArray[Any]:
     """Return the columns of an array end to end."""
-    from meseta.intake.stored_kernels import SCALED_TYPES, turn_into
+    from meseta.intake.calibration.stored_kernels import SCALED_TYPES, turn_into
 
     if array.dtype.name not in SCALED_TYPES or not array.dtype.isnative or not array.flags.c_contiguous:
         return np.ascontiguousarray(array.T).reshape(-1)

@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from meseta.intake.metadata import plain_value
+from meseta.intake.meaning.metadata import plain_value
 from meseta.intake.readers.contents import columns_of, conversion, conversion_names
 from meseta.intake.readers.hdf5_leaves import Leaf
 from meseta.intake.readers.hdf5_samples import PartSamples

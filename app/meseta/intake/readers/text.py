@@ -11,6 +11,7 @@ from typing import Final
 import numpy as np
 
 from meseta.errors import InputError
+from meseta.intake.meaning.roles import guess_role, told_role
 from meseta.intake.readers.contents import Contents, columns_of, whole
 from meseta.intake.readers.spool import SpooledColumn
 from meseta.intake.readers.text_cells import CLEARLY_GROUPED
@@ -22,7 +23,6 @@ from meseta.intake.readers.text_rows import Columns, Rows, numbers, numbers_of_e
 from meseta.intake.readers.text_search import find_form, obstacle_of
 from meseta.intake.readers.text_stream import put_aside
 from meseta.intake.readers.unpack import members_of, read_bytes, unpacked_blocks, unpacked_members
-from meseta.intake.roles import guess_role, told_role
 from meseta.intake.rows import end_to_end
 from meseta.recipe.intake import IntakeSettings
 from meseta.traces import ArraySamples

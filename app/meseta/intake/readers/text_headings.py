@@ -7,10 +7,10 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import Final
 
+from meseta.intake.meaning.roles import guess_role
+from meseta.intake.meaning.units import is_unit
 from meseta.intake.readers.text_cells import NUMBER
 from meseta.intake.readers.text_form import COMMENT, TextForm, cells_of
-from meseta.intake.roles import guess_role
-from meseta.intake.units import is_unit
 
 __all__ = ["entries_of", "with_headings"]
 

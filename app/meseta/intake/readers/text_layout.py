@@ -13,13 +13,13 @@ import numpy as np
 import numpy.typing as npt
 
 from meseta.errors import InputError
-from meseta.intake.metadata import Plain, canonical
+from meseta.intake.meaning.metadata import Plain, canonical
+from meseta.intake.meaning.roles import guess_role, stem_of
 from meseta.intake.readers.contents import Contents, columns_of, make_channel, whole
 from meseta.intake.readers.text_form import TextForm
 from meseta.intake.readers.text_headings import entries_of
 from meseta.intake.readers.text_odd import OddColumns
 from meseta.intake.recording import RawChannel
-from meseta.intake.roles import guess_role, stem_of
 from meseta.intake.rows import end_to_end
 from meseta.recipe.intake import IntakeSettings
 from meseta.traces import ArraySamples, Samples

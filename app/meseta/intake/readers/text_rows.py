@@ -355,7 +355,7 @@ def _parsed(block: bytes, form: TextForm, path: Path, lines_before: int, odd: Od
 
 def _single_blanks(block: bytes) -> bytes:
     """Return a text with one blank between words, and none at the ends of lines."""
-    from meseta.intake.text_kernels import single_blanks
+    from meseta.intake.readers.text_kernels import single_blanks
 
     target = np.empty(len(block), np.uint8)
     return target[: single_blanks(np.frombuffer(block, np.uint8), target)].tobytes()

@@ -8,8 +8,8 @@ from PySide6.QtCore import Qt
 from PySide6.QtWidgets import QComboBox, QGridLayout, QHBoxLayout, QLabel, QLineEdit, QPushButton, QVBoxLayout, QWidget
 
 from meseta.errors import RecipeError
-from meseta.intake.kept_layouts import answered_by, recognised_anew
-from meseta.intake.layout_differences import differences
+from meseta.intake.meaning.kept_layouts import answered_by, recognised_anew
+from meseta.intake.meaning.layout_differences import differences
 from meseta.recipe import Recipe
 from meseta.recipe.kept_layouts import NO_LAYOUT, KeptLayout
 from meseta.recipe.layout_files import with_layout

@@ -12,9 +12,9 @@ import numpy.typing as npt
 from meseta import intake, typeset
 from meseta.errors import InputError, MesetaError
 from meseta.intake import Description
-from meseta.intake.context import batch_context, recordings_among
-from meseta.intake.kept_layouts import LayoutError, as_seen
-from meseta.intake.layout_differences import differences
+from meseta.intake.meaning.context import batch_context, recordings_among
+from meseta.intake.meaning.kept_layouts import LayoutError, as_seen
+from meseta.intake.meaning.layout_differences import differences
 from meseta.recipe import Recipe
 from meseta.recipe.kept_layouts import KeptLayout
 from meseta.traces import TraceSet

@@ -1,0 +1,1 @@
+"""Recorded numbers -> conductance and displacement: amplifiers, constants, mains pickup, offset, drive."""

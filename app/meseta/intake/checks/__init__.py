@@ -1,0 +1,1 @@
+"""The calibration check-up: what a recording says of its own calibration."""

@@ -1,0 +1,1 @@
+"""Records -> traces: by the drive, by thresholds, by marks."""

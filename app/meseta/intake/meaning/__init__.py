@@ -1,0 +1,1 @@
+"""What a file means: roles and units of channels, metadata, layouts that are kept under a name."""
