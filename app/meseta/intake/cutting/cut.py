@@ -9,6 +9,7 @@ import numpy as np
 
 from meseta.errors import InputError
 from meseta.intake.calibration.calibrate import Calibration
+from meseta.intake.cutting.ahead import read_ahead
 from meseta.intake.cutting.by_ramps import cut_by_ramps
 from meseta.intake.cutting.by_threshold import cut_by_threshold
 from meseta.intake.cutting.cuts import HOLD, PULL, PUSH, SWEEP, Cut, apart, between_traces, stated_direction
@@ -38,7 +39,7 @@ def cut(recording: Recording, settings: CuttingSettings, calibration: Calibratio
     """
     result = Cut()
     drive = recording.channel("piezo", "displacement")
-    drive = None if drive is None or drive.shared else drive
+    drive = None if drive is None or drive.shared else read_ahead(drive)
     mark = _mark(recording, settings, drive)
     between = between_traces(recording)
     for piece in np.flatnonzero(between).tolist():
