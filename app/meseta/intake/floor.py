@@ -80,7 +80,7 @@ def pooled_floor(tails: Mapping[str, Tails | None]) -> PooledFloor:
         "at_trace": shown.tolist(),
         "offset": [float(value) for value in offset[shown]],
         "unit": unit,
-        "offset_error": offset_error(ends * bias, reaches),
+        "offset_error": offset_error(ends * bias, reaches, offset),
         "offset_ampere_median": float(np.median(offset) * G0_SIEMENS) if unit == "G0 V" else None,
     }
     return PooledFloor(of_each, notes)

@@ -25,6 +25,8 @@ SMOOTHED: Final = 31
 HELD_SHARE: Final = 1 / 3
 ROUNDS: Final = 3
 AGREEMENT_SIGMAS: Final = 4.0
+CLEARLY_SHARED: Final = 3.0
+"""Standard deviations that the covariance of neighbours must stand out of what chance gives."""
 MAD_TO_SIGMA: Final = 1.482602218505602
 
 
@@ -61,12 +63,13 @@ def running_offset(tails: Floats, noise: Floats) -> tuple[Floats, Mask]:
     return np.interp(np.arange(len(tails)), rows, running), reaches
 
 
-def offset_error(tails: Floats, reaches: Mask) -> float | None:
-    """Return the standard error of the running offset: half the scatter between every other trace and the rest.
+def offset_error(tails: Floats, reaches: Mask, offset: Floats) -> float | None:
+    """Return the standard error of the running offset over all traces.
 
     Two halves of the traces give two offsets with nothing in common but the drift; their mean is known twice as well as
     their difference scatters (JCGM 100:2008, 5.1.2).  It holds the scatter of plain floor, sqrt(pi / 2n) sigma for the
-    median of n traces, and what drift adds.  None where there are too few.
+    median of n traces, what drift adds, and what the floor moves without the median following.  A single jump of the
+    floor misleads the few traces beside it by more.  None where there are too few traces.
     """
     values = tails[reaches]
     if len(values) < 2 * LEAST_TRACES:
@@ -74,7 +77,29 @@ def offset_error(tails: Floats, reaches: Mask) -> float | None:
     window = _window_for(values) // 2
     place = np.arange(len(values))
     halves = [np.interp(place, place[begin::2], _followed(values[begin::2], window)) for begin in (0, 1)]
-    return 0.5 * float(np.sqrt(np.mean((halves[0] - halves[1]) ** 2)))
+    followed = 0.25 * float(np.mean((halves[0] - halves[1]) ** 2))
+    return float(np.sqrt(followed + _unfollowed(tails, reaches, offset)))
+
+
+def _unfollowed(tails: Floats, reaches: Mask, offset: Floats) -> float:
+    """Return the mean square of what the floor moves and the running offset does not follow; 0 where it follows.
+
+    What neighbours share in their distance from the offset is no scatter of single traces: it is the covariance of one
+    with the next (the autocovariance at lag 1, as of white noise about a slow signal).  Traces count that reach the
+    floor, and those clearly off on the side where no plateau can lie, fewer than on the other: they are floor beside a
+    jump, and stand for as many that cannot be told from plateaus.
+    """
+    known = np.isfinite(tails)
+    away, floor = (tails - offset)[known], reaches[known]
+    off_side = min(away[~floor] > 0, away[~floor] < 0, key=np.count_nonzero)
+    weight = floor.astype(np.float64)
+    weight[~floor] = 2.0 * off_side
+    scatter = MAD_TO_SIGMA * float(np.median(np.abs(np.diff(tails[reaches])))) / np.sqrt(2.0)
+    pairs = np.minimum(weight[1:], weight[:-1]) > 0
+    heavy = np.maximum(weight[1:], weight[:-1])[pairs]
+    shared = float(np.average((away[1:] * away[:-1])[pairs], weights=heavy)) if pairs.any() else 0.0
+    by_chance = CLEARLY_SHARED * scatter**2 / np.sqrt(max(int(pairs.sum()), 1))
+    return shared if shared > by_chance else 0.0
 
 
 def _trend(values: Floats) -> tuple[Floats, float]:
