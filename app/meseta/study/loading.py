@@ -40,6 +40,7 @@ _KNOWN = frozenset(
         "events",
         "groups",
         "history",
+        "length_series",
         "raw",
         "recipe",
         "removed",
