@@ -316,3 +316,27 @@ def test_numbered_arrays_of_nothing_known_do_not_stand_in_for_what_is_known(tmp_
     scipy.io.savemat(path, {"conductance_G0": ROWS, "remarks": cells})
     traces = intake.read(path, Recipe.build({"intake": {"layout": "rows"}}))
     assert traces.traces == len(ROWS)
+
+
+def test_tables_of_a_zip_beyond_the_limit_are_put_aside_and_read_the_same(tmp_path, monkeypatch):
+    """What is held in memory is the first of them; each trace is the one that was written."""
+    rng = np.random.default_rng(8)
+    written = [10.0 ** -rng.uniform(0, 5, 300) for _ in range(6)]
+    with zipfile.ZipFile(tmp_path / "night.zip", "w") as archive:
+        for number, values in enumerate(written):
+            rows = "".join(f"{0.01 * place:.2f},{value!r}\n" for place, value in enumerate(values.tolist()))
+            archive.writestr(f"trace {number}.csv", f"displacement (nm),conductance (G0)\n{rows}")
+    held = traces_of(tmp_path / "night.zip")
+    monkeypatch.setattr("meseta.intake.readers.text.LARGE_BYTE", 3 * 300 * 8)
+    with intake.open_recording(tmp_path / "night.zip") as recording:
+        kept = recording.channel("conductance").samples
+        assert sum(isinstance(part, spool.SpooledRow) for part in kept.parts) == 5
+    aside = traces_of(tmp_path / "night.zip")
+    np.testing.assert_array_equal(aside, held)
+    np.testing.assert_allclose(aside, np.concatenate(written), rtol=1e-6)
+
+
+def traces_of(path):
+    traces = intake.read(path)
+    assert traces.traces == 6
+    return traces.conductance

@@ -21,7 +21,7 @@ import numpy.typing as npt
 
 from meseta.errors import InputError
 
-__all__ = ["Spool", "SpooledColumn", "SpooledColumns", "turned"]
+__all__ = ["Spool", "SpooledColumn", "SpooledColumns", "SpooledRow", "kept_in", "turned"]
 
 TURN_BYTE: Final = 64 << 20
 
@@ -158,22 +158,33 @@ class SpooledColumn:
 
 
 @dataclass(frozen=True)
-class _SpooledRow:
+class SpooledRow:
+    """Numbers of one type that were put aside end to end (see :class:`meseta.traces.Samples`)."""
+
     spool: Spool
     length: int
     dtype: np.dtype[Any]
+    begin_byte: int = 0
 
     def __len__(self) -> int:
         return self.length
 
     def read(self, start: int, stop: int) -> npt.NDArray[Any]:
         """Return numbers ``start`` to ``stop``."""
-        return self.spool.read(start * self.dtype.itemsize, max(stop - start, 0), self.dtype)
+        place = self.begin_byte + start * self.dtype.itemsize
+        return self.spool.read(place, max(stop - start, 0), self.dtype)
+
+
+def kept_in(values: npt.NDArray[Any], spool: Spool) -> SpooledRow:
+    """Put numbers behind those that are in a spool; return them as samples."""
+    begin = spool.end
+    spool.write(begin, values)
+    return SpooledRow(spool, len(values), values.dtype, begin)
 
 
 def turned(
     read_rows: Callable[[int, int], npt.NDArray[Any]], shape: tuple[int, int], dtype: np.dtype[Any], where: Path
-) -> _SpooledRow:
+) -> SpooledRow:
     """Return the columns of a 2D array end to end, turned in one walk over its rows.
 
     Parameters
@@ -192,4 +203,4 @@ def turned(
         block = np.ascontiguousarray(read_rows(first, min(first + step, rows)).T, dtype)
         for column in range(columns):
             spool.write((column * rows + first) * size, block[column])
-    return _SpooledRow(spool, rows * columns, dtype)
+    return SpooledRow(spool, rows * columns, dtype)

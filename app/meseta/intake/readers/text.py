@@ -13,7 +13,7 @@ import numpy as np
 from meseta.errors import InputError
 from meseta.intake.meaning.roles import guess_role, told_role
 from meseta.intake.readers.contents import Contents, columns_of, whole
-from meseta.intake.readers.spool import SpooledColumn
+from meseta.intake.readers.spool import Spool, SpooledColumn, kept_in
 from meseta.intake.readers.text_cells import CLEARLY_GROUPED
 from meseta.intake.readers.text_encoding import ENCODINGS, decode_head
 from meseta.intake.readers.text_form import KnownForm, TextForm, known_form
@@ -281,6 +281,8 @@ def _from_members(path: Path, members: Sequence[str], settings: IntakeSettings) 
     """Return the tables in a zip one after the other; what cannot be read, or has other channels, is a doubt."""
     good: list[tuple[str, Contents]] = []
     doubts: list[str] = []
+    spool: Spool | None = None
+    held_byte = 0
     for name, data in unpacked_members(path, members):
         try:
             found = _member(data, path, settings)
@@ -289,8 +291,12 @@ def _from_members(path: Path, members: Sequence[str], settings: IntakeSettings) 
             continue
         if good and _kinds(found) != _kinds(good[0][1]):
             doubts.append(f"'{name}' in it has other channels than '{good[0][0]}' and was left out")
-        else:
-            good.append((name, found))
+            continue
+        held_byte += sum(len(channel.samples) * channel.dtype.itemsize for channel in found.channels)
+        if held_byte > LARGE_BYTE:
+            spool = spool or Spool(path)
+            found = _put_aside(found, spool)
+        good.append((name, found))
     if not good:
         raise InputError(f"holds no table that can be read ({'; '.join(doubts[:3])})", str(path), "unpack it and look")
     first = good[0][1]
@@ -312,6 +318,13 @@ def _from_members(path: Path, members: Sequence[str], settings: IntakeSettings) 
         table=columns,
         doubts=tuple(dict.fromkeys([*doubts, *(doubt for _, one in good for doubt in one.doubts)])),
     )
+
+
+def _put_aside(contents: Contents, spool: Spool) -> Contents:
+    """Return a table with its samples in a temporary file."""
+    kept = (kept_in(channel.samples.read(0, len(channel.samples)), spool) for channel in contents.channels)
+    channels = (replace(channel, samples=samples) for channel, samples in zip(contents.channels, kept, strict=True))
+    return replace(contents, channels=tuple(channels))
 
 
 def _member(data: bytes, path: Path, settings: IntakeSettings) -> Contents:
